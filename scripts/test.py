@@ -1,0 +1,54 @@
+"""Run every check of the project: lint, strict types, tests. Needs only a bare Python 3.11 or newer.
+
+    python3 scripts/test.py                    everything but the tests marked `soak`
+    python3 scripts/test.py --quick            the tests alone
+    python3 scripts/test.py --soak             everything, the minutes-long tests included
+    python3 scripts/test.py tests/test_x.py -k name     what is not an option of ours goes to pytest
+
+All checks run even where an earlier one fails; the exit status is 0 only if all passed.
+"""
+
+import os
+import subprocess
+import sys
+
+sys.path.insert(0, os.path.dirname(os.path.abspath(__file__)))
+import environment
+
+OPTIONS = ("--quick", "--soak")
+
+
+def commands(python: str, arguments: "list[str]") -> "list[tuple[str, list[str]]]":
+    """The checks to run, as (title, command) in order, for the script's `arguments`; pytest comes last."""
+    passed_on = [argument for argument in arguments if argument not in OPTIONS]
+    marks = ["-m", "soak or not soak"] if "--soak" in arguments else []
+    tests = ("pytest: the tests", [python, "-m", "pytest", *marks, *passed_on])
+    if "--quick" in arguments:
+        return [tests]
+    return [
+        ("ruff: lint", [python, "-m", "ruff", "check", "."]),
+        ("mypy: strict types", [python, "-m", "mypy", "--strict"]),
+        tests,
+    ]
+
+
+def main(arguments: "list[str]") -> int:
+    """Run the checks and return the exit status."""
+    if any(argument in ("-h", "--help") for argument in arguments):
+        print(__doc__)
+        return 0
+    python = environment.ready_or_exit()
+    verdicts = []
+    for title, command in commands(python, arguments):
+        print(f"\n=== {title} ===", flush=True)
+        done = subprocess.run(command, cwd=environment.ROOT, env=environment.clean_variables(), check=False)
+        verdicts.append((title.split(":")[0], done.returncode == 0))
+    print(", ".join(f"{name} {'passed' if passed else 'FAILED'}" for name, passed in verdicts), flush=True)
+    return 0 if all(passed for _, passed in verdicts) else 1
+
+
+if __name__ == "__main__":
+    try:
+        sys.exit(main(sys.argv[1:]))
+    except KeyboardInterrupt:
+        sys.exit(130)
