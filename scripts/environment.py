@@ -174,9 +174,7 @@ def on_debian() -> bool:
 
 def missing_venv_message(package: str, *, debian: bool) -> str:
     """What to tell a user whose Python cannot make environments."""
-    problem = (
-        f"this Python ({sys.executable}) cannot make a private environment: it has no 'ensurepip' module. "
-    )
+    problem = f"this Python ({sys.executable}) cannot make a private environment: it has no 'ensurepip' module. "
     if debian:
         return problem + f"Install it with: sudo apt-get install {package}   and start this script again."
     return problem + "Install your system's package for Python's venv module, or a Python from python.org."
@@ -199,18 +197,14 @@ def install_venv_package() -> None:
         raise NotReady(missing_venv_message(package, debian=True))
 
 
-def run_or_explain(
-    command: "list[str]", failure: str, *, environment: "dict[str, str] | None" = None
-) -> None:
+def run_or_explain(command: "list[str]", failure: str, *, environment: "dict[str, str] | None" = None) -> None:
     """Run `command` quietly; on failure raise `NotReady` with `failure` and the end of its output."""
     done = subprocess.run(
         command, env=environment, stdout=subprocess.PIPE, stderr=subprocess.STDOUT, cwd=ROOT, check=False
     )
     if done.returncode != 0:
         lines = done.stdout.decode("utf-8", "replace").splitlines()[-OUTPUT_TAIL_LINES:]
-        raise NotReady(
-            "\n".join([f"{failure}; it ran: {' '.join(command)}", *("    " + line for line in lines)])
-        )
+        raise NotReady("\n".join([f"{failure}; it ran: {' '.join(command)}", *("    " + line for line in lines)]))
 
 
 def make_environment(env_dir: str) -> None:
@@ -219,9 +213,7 @@ def make_environment(env_dir: str) -> None:
         install_venv_package()
     if os.path.islink(env_dir) or os.path.isfile(env_dir):
         os.unlink(env_dir)
-    run_or_explain(
-        [base_python(), "-I", "-m", "venv", "--clear", env_dir], "the environment could not be made"
-    )
+    run_or_explain([base_python(), "-I", "-m", "venv", "--clear", env_dir], "the environment could not be made")
 
 
 def install(env_dir: str, *, lock_file: str) -> None:
@@ -241,9 +233,7 @@ def install(env_dir: str, *, lock_file: str) -> None:
         [*pip, "--require-hashes", "--no-deps", "--requirement", lock_file],
         f"the packages were not installed ({hint})",
     )
-    run_or_explain(
-        [*pip, "--no-deps", "--no-build-isolation", "--editable", ROOT], "the project was not installed"
-    )
+    run_or_explain([*pip, "--no-deps", "--no-build-isolation", "--editable", ROOT], "the project was not installed")
 
 
 def wait_for_turn(lock_path: str) -> "IO[str] | None":
@@ -265,9 +255,7 @@ def wait_for_turn(lock_path: str) -> "IO[str] | None":
         except OSError:
             if time.monotonic() > deadline_s:
                 file.close()
-                raise NotReady(
-                    f"another run has been preparing the environment for too long ({lock_path})"
-                ) from None
+                raise NotReady(f"another run has been preparing the environment for too long ({lock_path})") from None
             if not told:
                 say("Waiting for another run that is preparing the environment ...")
                 told = True
@@ -292,9 +280,7 @@ def ready() -> str:
     try:
         todo = plan(wanted=wanted, found=read_stamp(ENV_DIR), probed=probe(ENV_DIR))
         if todo == "rebuild":
-            say(
-                "Making the private environment .env (downloads about 100 MB the first time, a minute or two) ..."
-            )
+            say("Making the private environment .env (downloads about 100 MB the first time, a minute or two) ...")
             make_environment(ENV_DIR)
         elif todo == "update":
             say("Bringing the private environment .env up to date with .requirements.lock ...")
