@@ -13,20 +13,8 @@ PROGRAM = ROOT / "runtime" / "ramprig"
 CODEC = ROOT / "protocol" / "ramprig_link"
 
 ROOMS_FROM_THE_TOP = [
-    "cli",
-    "shell",
-    "report",
-    "measure",
-    "endure",
-    "sequence",
-    "record",
-    "session",
-    "mock",
-    "port",
-    "bench",
-    "yamlfile",
-    "quantity",
-    "errors",
+    *("cli", "shell", "report", "measure", "endure", "sequence", "record", "session"),
+    *("mock", "port", "bench", "yamlfile", "quantity", "errors"),
 ]
 
 CODEC_MAY_USE = {
@@ -126,13 +114,12 @@ def forbidden_in_codec(source: str, module: str, *, is_package: bool) -> list[st
         for name, line in imports_of(tree, module, is_package=is_package)
         if name.split(".")[0] not in CODEC_MAY_USE | {"ramprig_link"}
     ]
-    for node in ast.walk(tree):
-        if (
-            isinstance(node, ast.Call)
-            and isinstance(node.func, ast.Name)
-            and node.func.id in ("open", "print", "input")
-        ):
-            found.append(f"{module}:{node.lineno}: calls {node.func.id}()")
+    called = {"open", "print", "input"}
+    found += [
+        f"{module}:{node.lineno}: calls {node.func.id}()"
+        for node in ast.walk(tree)
+        if isinstance(node, ast.Call) and isinstance(node.func, ast.Name) and node.func.id in called
+    ]
     return found
 
 
