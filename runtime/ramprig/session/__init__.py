@@ -1,0 +1,1 @@
+"""One device: typed operations, lease, limits, stop, clock fit and sample blocks."""
