@@ -33,6 +33,7 @@
 #define RR_RICE_RESET           32            /* values: the running mean is halved after this many values */
 #define RR_RICE_SUM_CAP         65535UL       /* 1: a value counts at most this much in the running mean */
 #define RR_RICE_K_MAX           15            /* bits: largest Rice parameter */
+#define RR_RICE_K_START         2             /* bits: Rice parameter at the start of a logging */
 #define RR_THERMAL_TICKS        64            /* ticks: step of the thermal model */
 #define RR_SPEED_TICKS          32            /* ticks: window of the overspeed trip */
 #define RR_TOKEN_MAX            24            /* characters: longest token (a name or an identity) */
@@ -310,7 +311,7 @@ enum rr_tighter {
 
 /* X(NAME, RR_PER_..., first bit of the mask, step, width, order of the difference) */
 #define RR_CHANNEL_LIST(X) \
-    X(DUTY,           AXIS,   0,  3, 15, 1) \
+    X(DUTY,           AXIS,   0,  3, 15, 2) \
     X(COUNTS,         AXIS,   1,  3, 32, 2) \
     X(CURRENT_MA,     AXIS,   2,  3, 18, 1) \
     X(PULSE_US,       SERVO,  12, 1, 14, 1) \

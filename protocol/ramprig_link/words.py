@@ -176,6 +176,7 @@ RICE_QUOTIENT_MAX: Final = 16  # bits: a quotient this long or longer is replace
 RICE_RESET: Final = 32  # values: the running mean is halved after this many values
 RICE_SUM_CAP: Final = 65535  # 1: a value counts at most this much in the running mean
 RICE_K_MAX: Final = 15  # bits: largest Rice parameter
+RICE_K_START: Final = 2  # bits: Rice parameter at the start of a logging
 THERMAL_TICKS: Final = 64  # ticks: step of the thermal model
 SPEED_TICKS: Final = 32  # ticks: window of the overspeed trip
 TOKEN_MAX: Final = 24  # characters: longest token (a name or an identity)
@@ -412,7 +413,7 @@ LIMITS: Final[Mapping[str, Limit]] = MappingProxyType({
 })
 
 CHANNELS: Final[Mapping[str, Channel]] = MappingProxyType({
-    "duty": Channel("duty", Per.AXIS, 0, 3, 15, 1, "1/10000", "duty at the bridge"),
+    "duty": Channel("duty", Per.AXIS, 0, 3, 15, 2, "1/10000", "duty at the bridge"),
     "counts": Channel("counts", Per.AXIS, 1, 3, 32, 2, "counts", "quadrature counts x4, wrapping"),
     "current_ma": Channel("current_ma", Per.AXIS, 2, 3, 18, 1, "mA", "motor current less offset_ma"),
     "pulse_us": Channel("pulse_us", Per.SERVO, 12, 1, 14, 1, "us", "pulse width commanded at the pin, 0 = none"),
