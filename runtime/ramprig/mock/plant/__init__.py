@@ -17,7 +17,7 @@ then the circuit is open until the back EMF exceeds bus and drop together.
 Over a tick the equations are linear, so each tick is one multiplication by a matrix exponential made beforehand
 (`flow`): exact however stiff the winding is. Where a tick is not linear from end to end (the shaft stops, breaks
 away, or the current runs out), the instant is found by halving, to a 4096th of a tick (`axis`). The bus voltage is
-constant over a tick and is solved for together with the currents it drives, so a weak supply cannot oscillate.
+constant over a tick and is solved for together with the currents it drives, so it settles however weak the supply.
 """
 
 from .axis import Axis

@@ -34,17 +34,15 @@ class Servo:
         if value == self._pulse_us:
             return
         self._pulse_us = value
+        self.busy = True
         if value is None:
-            self.busy = False
             self._goal_deg = self.angle_deg
-            self.current_a = 0.0
             return
         parameters = self.parameters
         goal_deg = (value - parameters.neutral_us) / parameters.us_per_deg
         # The dead band is about the angle it holds; once it moves, it goes all the way.
         if abs(goal_deg - self._goal_deg) * abs(parameters.us_per_deg) >= parameters.dead_band_us:
             self._goal_deg = goal_deg
-        self.busy = True
 
     def step(self) -> None:
         """Advance one tick; does nothing once `busy` is False."""
@@ -55,7 +53,7 @@ class Servo:
         move_deg = self._degrees_per_tick
         if abs(away_deg) <= move_deg:
             angle_deg = self._goal_deg
-            self.current_a = parameters.idle_ma / 1000.0
+            self.current_a = 0.0 if self._pulse_us is None else parameters.idle_ma / 1000.0
             self.busy = False
         else:
             angle_deg = self.angle_deg + (move_deg if away_deg > 0.0 else -move_deg)

@@ -8,7 +8,7 @@ from .parameters import SupplyParameters
 
 
 class Supply:
-    """The bus voltage, one implicit step a tick: charge is conserved and no load makes it oscillate.
+    """The bus voltage, one implicit step a tick: charge is conserved, and it settles whatever the load.
 
     `volts` and `resistance_ohm` may be set while running (a dip, a weak supply). `bus_v` is the bus now, `current_a`
     what the supply itself gave during the last tick. `shut_down` is set by over-voltage and stays until `restore`.
