@@ -40,7 +40,7 @@ def read_i32(text: str) -> int:
 def read_field(field: Field, text: str) -> Value:
     """The value of one field: numbers and tags (HEX2) as int, all else as spelt.
 
-    FieldError where it is not of its kind. Whether an axis exists, or a number lies in a word's own range, is not judged.
+    FieldError where it is not of its kind. Whether an axis exists, or a number lies in the word's range, is not judged.
     """
     match field.kind:
         case Kind.I32:

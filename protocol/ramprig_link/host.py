@@ -169,8 +169,8 @@ class HostLink:
     def due(self, now_s: float) -> bytes | None:
         """The repeat to send now, if one is due.
 
-        LinkSilent past the last repeat's wait; the request is then no longer outstanding, and whether it was carried out
-        is not known. Call it after `receive`: an answer may have come while the host slept.
+        LinkSilent past the last repeat's wait; the request is then no longer outstanding, and whether it was carried
+        out is not known. Call it after `receive`: an answer may have come while the host slept.
         """
         waiting = self._outstanding
         if waiting is None or now_s < waiting.due_s:
