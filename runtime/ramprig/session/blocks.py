@@ -9,6 +9,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
+
 from ramprig_link.samples import ChannelRef, SampleBlock, channels_of
 
 Ticks = NDArray[np.int64]
