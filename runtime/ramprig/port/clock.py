@@ -1,0 +1,62 @@
+"""The clock a port is read by: real on a serial line, virtual where nothing sleeps."""
+
+from __future__ import annotations
+
+import time
+from typing import Protocol
+
+NS_PER_S = 1_000_000_000
+
+
+class Clock(Protocol):
+    """What everything that waits measures time with."""
+
+    def now(self) -> float:
+        """Seconds since an arbitrary start; never runs backwards."""
+        ...
+
+    def wall(self) -> float:
+        """Seconds since 1970-01-01 00:00 UTC (Unix time); may be set by the system at any moment."""
+        ...
+
+
+class SystemClock:
+    """The computer's own clocks."""
+
+    __slots__ = ()
+
+    def now(self) -> float:
+        """`time.monotonic()`, in seconds."""
+        return time.monotonic()
+
+    def wall(self) -> float:
+        """`time.time()`, in seconds."""
+        return time.time()
+
+
+class VirtualClock:
+    """A clock that stands still until it is advanced; both of its readings move together.
+
+    Time is kept as whole nanoseconds, so that a million small steps add up exactly.
+    """
+
+    __slots__ = ("_now_ns", "_wall_start_s")
+
+    def __init__(self, *, start_s: float = 0.0, wall_s: float = 0.0) -> None:
+        """`wall_s` is the Unix time at the start."""
+        self._now_ns = round(start_s * NS_PER_S)
+        self._wall_start_s = wall_s - start_s
+
+    def now(self) -> float:
+        """Seconds, beginning at `start_s`."""
+        return self._now_ns / NS_PER_S
+
+    def wall(self) -> float:
+        """Unix seconds: the start's, plus what has been advanced."""
+        return self._wall_start_s + self.now()
+
+    def advance(self, duration_s: float) -> None:
+        """Move on by `duration_s`, rounded to whole nanoseconds; raises ValueError where it is negative."""
+        if not duration_s >= 0:
+            raise ValueError(f"a clock cannot be advanced by {duration_s} s")
+        self._now_ns += round(duration_s * NS_PER_S)

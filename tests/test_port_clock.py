@@ -1,0 +1,38 @@
+"""The clocks ports are read by."""
+
+from __future__ import annotations
+
+import time
+
+import pytest
+
+from ramprig.port.clock import Clock, SystemClock, VirtualClock
+
+
+def test_a_virtual_clock_stands_still_until_advanced() -> None:
+    clock = VirtualClock(start_s=5.0, wall_s=1_700_000_000.0)
+    assert (clock.now(), clock.wall()) == (5.0, 1_700_000_000.0)
+    clock.advance(2.5)
+    assert (clock.now(), clock.wall()) == (7.5, 1_700_000_002.5)
+
+
+def test_a_million_small_steps_add_up_exactly() -> None:
+    clock = VirtualClock()
+    for _ in range(1_000_000):
+        clock.advance(0.001)
+    assert clock.now() == 1000.0
+
+
+@pytest.mark.parametrize("duration_s", [-0.001, float("nan")])
+def test_time_never_runs_backwards(duration_s: float) -> None:
+    clock = VirtualClock(start_s=1.0)
+    with pytest.raises(ValueError, match="cannot be advanced"):
+        clock.advance(duration_s)
+    assert clock.now() == 1.0
+
+
+def test_the_system_clock_is_the_computers() -> None:
+    clock: Clock = SystemClock()
+    before, wall_before = time.monotonic(), time.time()
+    assert before <= clock.now() <= time.monotonic()
+    assert wall_before <= clock.wall() <= time.time()
