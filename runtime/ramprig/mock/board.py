@@ -5,14 +5,18 @@ from __future__ import annotations
 import re
 from dataclasses import dataclass
 
-from ramprig_link.words import AXES_MAX, CHANNELS, DUTY_FULL, QUEUE_MIN, SERVOS_MAX, TOKEN_MAX, TRAIL_MIN, Cap, Per
-
 from ramprig.errors import FileError
+from ramprig_link.words import AXES_MAX, CHANNELS, DUTY_FULL, QUEUE_MIN, SERVOS_MAX, TOKEN_MAX, TRAIL_MIN, Cap, Per
 
 CAPS_ALL = Cap.ENCODER | Cap.CURRENT | Cap.SUPPLY | Cap.TEMPERATURE | Cap.KEEPS_LIMITS | Cap.BREAK
 
 _TOKEN = re.compile(rf"[A-Za-z0-9._-]{{1,{TOKEN_MAX}}}", re.ASCII)
-_WITHOUT = {"counts": Cap.ENCODER, "current_ma": Cap.CURRENT, "supply_mv": Cap.SUPPLY, "temperature_dc": Cap.TEMPERATURE}
+_WITHOUT = {
+    "counts": Cap.ENCODER,
+    "current_ma": Cap.CURRENT,
+    "supply_mv": Cap.SUPPLY,
+    "temperature_dc": Cap.TEMPERATURE,
+}
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -8,7 +8,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 
-from ramprig_link.words import THERMAL_TICKS, Trip
+from ramprig_link.words import THERMAL_TICKS, Cap, Trip
 
 from .limits import LimitStore
 
@@ -226,7 +226,7 @@ class AxisWatch:
 class SupplyWatch:
     """The guard of the supply voltage."""
 
-    __slots__ = ("_found", "_low_ticks", "_high_ticks", "_ticks", "over_mv", "quiet", "supply_mv", "under_mv")
+    __slots__ = ("_found", "_high_ticks", "_low_ticks", "_ticks", "over_mv", "quiet", "supply_mv", "under_mv")
 
     def __init__(self, limits: LimitStore, *, found: list[Finding]) -> None:
         self._found = found
@@ -238,8 +238,9 @@ class SupplyWatch:
 
     def refresh(self, limits: LimitStore) -> None:
         """Take over the limits."""
-        self.under_mv = limits["under_mv", 0]
-        self.over_mv = limits["over_mv", 0]
+        measured = Cap.SUPPLY in limits.board.caps
+        self.under_mv = limits["under_mv", 0] if measured else 0
+        self.over_mv = limits["over_mv", 0] if measured else _UNREACHED
         self._ticks = limits["supply_ticks", 0]
 
     def read(self, supply_mv: int) -> None:

@@ -5,9 +5,11 @@ from __future__ import annotations
 from collections.abc import Sequence
 from typing import Protocol
 
+from ramprig_link.words import Cap
+
 
 class Inputs(Protocol):
-    """The measurements of one board, as they are when asked. Asked once a tick, in the order counts, current, supply."""
+    """The measurements of one board when asked: once a tick, in the order counts, current, supply."""
 
     def read_counts(self, axis: int) -> int:
         """Quadrature counts (x4) since the board's start, 32 bits signed, wrapping."""
@@ -77,3 +79,37 @@ class ScriptedInputs:
     def read_illegal_edges(self) -> int:
         """Illegal edges as set."""
         return self.illegal_edges
+
+
+class PartlyFitted:
+    """The inputs of a board that lacks some sensors: what it cannot measure reads 0."""
+
+    def __init__(self, inputs: Inputs, caps: Cap) -> None:
+        self._inputs = inputs
+        self._caps = caps
+
+    def read_counts(self, axis: int) -> int:
+        """Counts, or 0 without an encoder."""
+        return self._inputs.read_counts(axis) if self._caps & Cap.ENCODER else 0
+
+    def read_current_ma(self, axis: int) -> int:
+        """Current, or 0 without a sensor."""
+        return self._inputs.read_current_ma(axis) if self._caps & Cap.CURRENT else 0
+
+    def read_supply_mv(self) -> int:
+        """Supply, or 0 without a divider."""
+        return self._inputs.read_supply_mv() if self._caps & Cap.SUPPLY else 0
+
+    def read_temperature_dc(self) -> int:
+        """Temperature, or 0 without a sensor."""
+        return self._inputs.read_temperature_dc() if self._caps & Cap.TEMPERATURE else 0
+
+    def read_illegal_edges(self) -> int:
+        """Illegal edges, or 0 without an encoder."""
+        return self._inputs.read_illegal_edges() if self._caps & Cap.ENCODER else 0
+
+
+def fitted(inputs: Inputs, caps: Cap) -> Inputs:
+    """The inputs as a board of these capabilities reads them."""
+    measured = Cap.ENCODER | Cap.CURRENT | Cap.SUPPLY | Cap.TEMPERATURE
+    return inputs if caps & measured == measured else PartlyFitted(inputs, caps)

@@ -7,10 +7,9 @@ import os
 from collections.abc import Iterator, Mapping
 from pathlib import Path
 
+from ramprig.errors import FileError
 from ramprig_link.check import digest
 from ramprig_link.words import LIMITS, Limit, Per, Reason, Tighter
-
-from ramprig.errors import FileError
 
 from .board import Board
 
@@ -102,7 +101,9 @@ class LimitStore:
             raw = json.loads(path.read_text("utf-8"))
             return {(name, index): int(value) for name, row in raw.items() for index, value in enumerate(row)}
         except (OSError, ValueError, AttributeError, TypeError) as error:
-            raise FileError(f"{path} holds no limits: {error}", wanted="delete it to begin with the defaults") from error
+            raise FileError(
+                f"{path} holds no limits: {error}", wanted="delete it to begin with the defaults"
+            ) from error
 
     def _save(self) -> None:
         if self._path is None:

@@ -12,7 +12,18 @@ NS_PER_US = 1000
 class ServoPulse:
     """The pulse of one servo: `pulse_ns`, 0 for none. While `steady` is True a `step` would change nothing."""
 
-    __slots__ = ("_highest_ns", "_home_ns", "_index", "_lowest_ns", "_slew_ns", "_tag", "_tell", "demand", "pulse_ns", "steady")
+    __slots__ = (
+        "_highest_ns",
+        "_home_ns",
+        "_index",
+        "_lowest_ns",
+        "_slew_ns",
+        "_tag",
+        "_tell",
+        "demand",
+        "pulse_ns",
+        "steady",
+    )
 
     def __init__(self, index: int, limits: LimitStore, *, tell: Tell) -> None:
         self._index = index

@@ -61,7 +61,9 @@ class Trail:
         """A packed block of one axis from record `first` on, as long as an answer holds; None where there is none."""
         if not self.frozen or first >= len(self._ring):
             return None
-        per_axis = sum(1 << CHANNELS[name].first_bit + axis * CHANNELS[name].step for name in ("duty", "counts", "current_ma"))
+        per_axis = sum(
+            1 << CHANNELS[name].first_bit + axis * CHANNELS[name].step for name in ("duty", "counts", "current_ma")
+        )
         mask = per_axis | 1 << CHANNELS["supply_mv"].first_bit | 1 << CHANNELS["state"].first_bit
         encoder = Encoder(mask, 1, payload_max=TRAIL_PAYLOAD_MAX)
         oldest_age = self._newest_age - len(self._ring) + 1

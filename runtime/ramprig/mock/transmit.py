@@ -88,18 +88,19 @@ class Transmitter:
         if not self._baud:
             return self.take_all()
         now = ticks * self._tick_time
+        start = now
         left: list[bytes] = []
-        while True:
-            if self._under_way is None and not self._begin(now):
+        while self._under_way is not None or self._begin(start):
+            if self._free_at > now:
                 break
-            if self._under_way is None or self._free_at > now:
-                break
-            left.append(self._under_way)
+            left.append(self._under_way or b"")
             self._under_way = None
+            start = self._free_at
         self.waiting = bool(self._under_way or self._said or self._data)
         return b"".join(left)
 
-    def _begin(self, now: int) -> bool:
+    def _begin(self, start: int) -> bool:
+        """Put the next line on the wire at the time `start`; False where none waits."""
         if self._said:
             line = self._said.popleft()
             self._said_bytes -= len(line)
@@ -108,6 +109,6 @@ class Transmitter:
             self._data_bytes -= len(line)
         else:
             return False
-        self._free_at = max(self._free_at, now) + len(line) * BITS_PER_BYTE * self._bit_time
+        self._free_at = start + len(line) * BITS_PER_BYTE * self._bit_time
         self._under_way = line
         return True
