@@ -31,7 +31,8 @@ class FileError(RamprigError):
     """The user's file must be mended: says where, what was found and what would be right.
 
     `place` is where, `text` the whole offending line without its end, `found` what stands there and `wanted` what
-    would be right. `str()` shows the place, the sentence, the line itself and a caret under the column.
+    would be right. `str()` shows the place, the sentence, the line itself (a piece of a long one) and a caret under
+    the column.
     """
 
     def __init__(self, found: str, *, wanted: str = "", place: Place | None = None, text: str | None = None) -> None:
@@ -47,8 +48,22 @@ class FileError(RamprigError):
             return sentence
         if self.text is None:
             return f"{self.place}: {sentence}"
-        caret = " " * (self.place.column - 1) + "^"
-        return f"{self.place}: {sentence}\n    {self.text}\n    {caret}"
+        excerpt, column = _excerpt(self.text, self.place.column)
+        return f"{self.place}: {sentence}\n    {excerpt}\n    {' ' * (column - 1)}^"
+
+
+EXCERPT_MAX = 160
+"""Longest piece of a user's line that a message shows, in characters."""
+
+
+def _excerpt(text: str, column: int) -> tuple[str, int]:
+    """The part of `text` around `column` that a message shows, and the column's place in it."""
+    if len(text) <= EXCERPT_MAX:
+        return text, column
+    start = max(0, column - 1 - EXCERPT_MAX // 2)
+    head = "..." if start else ""
+    tail = "..." if start + EXCERPT_MAX < len(text) else ""
+    return f"{head}{text[start : start + EXCERPT_MAX]}{tail}", column - start + len(head)
 
 
 class UsageError(RamprigError):
