@@ -251,9 +251,7 @@ class HostLink:
 
     def _is_again(self, number: int) -> bool:
         """Whether a data line of this number is the old one asked for: never where its number is the next one due."""
-        if self._again is None or number == self._next_data:
-            return False
-        if number == self._again:
+        if self._again == number != self._next_data:
             return True
         self._again_lines_left -= 1
         if self._again_lines_left <= 0:
