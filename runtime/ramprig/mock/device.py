@@ -1,0 +1,275 @@
+"""A whole device in software: controller, plant, the UART between them and the host, resets and faults.
+
+Ticks only pass by `tick` and `advance`. The same setup, seed, and bytes at the same ticks give the same bytes.
+"""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+from ramprig_link.words import Cap, Cause
+
+from .board import Board
+from .controller import Controller
+from .drive import Drive
+from .faults import FaultSwitches
+from .limits import LimitStore
+from .plant import Plant, PlantFault, set_fault
+from .setup import MockSetup
+from .transmit import BITS_PER_BYTE, Transmitter
+
+_HALF = 1 << 31
+_PLANT_FAULTS = {
+    "phases_swapped": PlantFault.PHASES_SWAPPED,
+    "leads_swapped": PlantFault.LEADS_SWAPPED,
+    "encoder_dead": PlantFault.ENCODER_DEAD,
+    "one_channel": PlantFault.ONE_CHANNEL,
+    "jammed_shaft": PlantFault.JAMMED,
+    "noisy_counts": PlantFault.NOISY_COUNTS,
+}
+
+
+class PlantInputs:
+    """What the board's pins read from the plant. The counters begin at 0 with each start of the board."""
+
+    __slots__ = ("_axes", "_encoders", "_plant", "_zero", "read_supply_mv")
+
+    def __init__(self, plant: Plant) -> None:
+        self._plant = plant
+        self._axes = plant.axes
+        self._encoders = plant.encoders
+        self._zero = [plant.read_counts(i) for i in range(len(plant.axes))]
+        self.read_supply_mv = plant.read_supply_mv
+
+    def read_counts(self, axis: int) -> int:
+        """Counts since the board's start."""
+        counts = self._encoders[axis].read(self._axes[axis].angle_rad) - self._zero[axis]
+        return counts if -_HALF <= counts < _HALF else (counts + _HALF) % (2 * _HALF) - _HALF
+
+    def read_current_ma(self, axis: int) -> int:
+        """The current sensor."""
+        return self._plant.read_current_ma(axis)
+
+    def read_temperature_dc(self) -> int:
+        """The winding of the first motor, 20 degC without one."""
+        return self._plant.read_temperature_dc(0) if self._axes else 200
+
+    def read_illegal_edges(self) -> int:
+        """None: the model's encoder is read, not sampled."""
+        return 0
+
+
+class Receiver:
+    """The receive line: bytes arrive no faster than the wire carries them; while any are under way it is `waiting`."""
+
+    __slots__ = ("_byte_time", "_bytes", "_start", "_tick_time", "waiting")
+
+    def __init__(self, *, baud: int, tick_us: int) -> None:
+        self._byte_time = BITS_PER_BYTE * 1_000_000
+        self._tick_time = tick_us * baud
+        self._bytes = bytearray()
+        self._start = 0
+        self.waiting = False
+
+    def put(self, data: bytes, ticks: int) -> None:
+        """Put bytes on the wire, `ticks` ticks after the start of time."""
+        if not self._bytes:
+            self._start = max(self._start, ticks * self._tick_time)
+        self._bytes += data
+        self.waiting = bool(self._bytes)
+
+    def purge(self) -> None:
+        """Take back what has not arrived."""
+        self._bytes.clear()
+        self.waiting = False
+
+    def take(self, ticks: int) -> bytes:
+        """What has arrived by then."""
+        if not self._tick_time:
+            data = bytes(self._bytes)
+            self._bytes.clear()
+        else:
+            count = min(len(self._bytes), (ticks * self._tick_time - self._start) // self._byte_time)
+            data = bytes(self._bytes[:count])
+            del self._bytes[:count]
+            self._start += count * self._byte_time
+        self.waiting = bool(self._bytes)
+        return data
+
+
+class MockDevice:
+    """A board with motors and servos on it. `ticks` counts from the making; the board's own tick starts at each boot.
+
+    While the board boots, `controller` is None: the outputs are off and what is received is lost.
+    """
+
+    def __init__(self, setup: MockSetup | None = None, *, seed: int = 0) -> None:
+        self.setup = setup = setup or MockSetup()
+        self.ticks = 0
+        self.plant = Plant(setup.plant, tick_us=setup.board.tick_us, seed=seed)
+        self.faults = FaultSwitches(self._act, axes=setup.board.axes)
+        self._receiver = Receiver(baud=setup.baud, tick_us=setup.board.tick_us)
+        self._stores = {setup.board.serial: LimitStore(setup.board, values=setup.limits, path=setup.limits_path)}
+        self._boots: dict[str, int] = {}
+        self._board = setup.board
+        self._boot_left = 0
+        self._cause = Cause.POWER
+        self._output = b""
+        self._moving = False
+        self._brownout_in: int | None = None
+        self.controller: Controller | None = None
+        self._boot()
+        self.faults.set_all(setup.faults)
+
+    @property
+    def board(self) -> Board:
+        """The board that answers now."""
+        return self._board
+
+    # ---- the line --------------------------------------------------------------------------------------------------
+
+    def receive(self, data: bytes) -> None:
+        """Put bytes from the host on the receive line."""
+        if not self.faults.get("deaf"):
+            self._receiver.put(data, self.ticks)
+
+    def urgent(self, data: bytes) -> None:
+        """Take back what of the host's bytes is still unsent, and put these on the line."""
+        self._receiver.purge()
+        self.receive(data)
+
+    def send_break(self) -> None:
+        """Hold the receive line in the BREAK condition."""
+        if self.controller is not None and Cap.BREAK in self._board.caps and not self.faults.get("deaf"):
+            self.controller.line_break()
+
+    def transmit(self) -> bytes:
+        """What the board has sent since the last call, up to the tick that has ended."""
+        output, self._output = self._output, b""
+        return output
+
+    # ---- time ------------------------------------------------------------------------------------------------------
+
+    def tick(self) -> None:
+        """Let one tick pass."""
+        self._output += self._run(1)[1]
+
+    def advance(self, ticks: int) -> int:
+        """Let up to `ticks` ticks pass, fewer where the board sends something; returns how many have passed."""
+        done = 0
+        while done < ticks and not self._output:
+            passed, self._output = self._run(ticks - done)
+            done += passed
+        return done
+
+    def _run(self, ticks: int) -> tuple[int, bytes]:
+        """Run until output comes, the board resets or finishes booting, or `ticks` are over; returns both."""
+        controller = self.controller
+        if controller is None:
+            return self._run_booting(ticks), b""
+        transmitter, receiver, plant = controller.transmitter, self._receiver, self.plant
+        drives = tuple(zip(controller.drives, plant.axes, strict=True))
+        servos = tuple(zip(controller.pulses, plant.servos, strict=True))
+        tick, step, supply, brownout_mv = controller.tick, plant.step, controller.supply, self.setup.brownout_mv
+        watching = bool(self.faults.get("brownout_on_start"))
+        elapsed = self.ticks
+        end = elapsed + ticks
+        output = b""
+        while elapsed < end:
+            if receiver.waiting:
+                controller.receive(receiver.take(elapsed))
+            tick()
+            for drive, axis in drives:
+                axis.duty = drive.duty
+                axis.brake = drive.brake
+            for pulse, servo in servos:
+                if not pulse.steady or not pulse.pulse_ns:
+                    servo.pulse_us = pulse.pulse_ns / 1000.0 if pulse.pulse_ns else None
+            step()
+            elapsed += 1
+            if transmitter.waiting:
+                output = transmitter.take(elapsed)
+            if supply.supply_mv < brownout_mv or (watching and self._sags(drives)):
+                self.ticks = elapsed
+                self.restart(Cause.BROWNOUT)
+                break
+            if output:
+                break
+        passed = elapsed - (end - ticks)
+        self.ticks = elapsed
+        return passed, output
+
+    def _sags(self, drives: tuple[tuple[Drive, object], ...]) -> bool:
+        """Whether a motor's start has pulled the supply of the board down by now (fault `brownout_on_start`)."""
+        moving = any(drive.duty for drive, _ in drives)
+        if moving and not self._moving:
+            self._brownout_in = round(self.faults.get("brownout_on_start"))
+        self._moving = moving
+        if self._brownout_in is None:
+            return False
+        self._brownout_in -= 1
+        return self._brownout_in < 0
+
+    def _run_booting(self, ticks: int) -> int:
+        passed = min(ticks, self._boot_left)
+        for _ in range(passed):
+            self.plant.step()
+        self.ticks += passed
+        self._boot_left -= passed
+        self._receiver.purge()
+        if self._boot_left == 0:
+            self._boot()
+        return passed
+
+    # ---- starts and ends -------------------------------------------------------------------------------------------
+
+    def restart(self, cause: Cause) -> None:
+        """Reset the board: outputs off at once, what it was sending is lost, and after `boot_ticks` it starts anew."""
+        self.controller = None
+        self._cause = cause
+        self._boot_left = self.setup.boot_ticks
+        for axis in self.plant.axes:
+            axis.duty = 0
+            axis.brake = False
+        for servo in self.plant.servos:
+            servo.pulse_us = None
+        if not self._boot_left:
+            self._boot()
+
+    def _boot(self) -> None:
+        board = self._board
+        self._moving = False
+        self._brownout_in = None
+        boot = self._boots[board.serial] = self._boots.get(board.serial, 0) + 1
+        self.controller = Controller(
+            board,
+            PlantInputs(self.plant),
+            self._stores[board.serial],
+            boot=boot,
+            cause=self._cause,
+            transmitter=Transmitter(data_bytes_max=board.transmit_bytes, baud=self.setup.baud, tick_us=board.tick_us),
+        )
+
+    def _swap(self, second: bool) -> None:
+        """Put another board, or the first one again, in the place of the one there is."""
+        first = self.setup.board
+        self._board = replace(first, serial=f"{first.serial[:17]}-second") if second else first
+        self._stores.setdefault(self._board.serial, LimitStore(self._board))
+        self.restart(Cause.POWER)
+
+    def opened(self) -> None:
+        """A host has opened the port."""
+        if self.faults.get("reset_on_open"):
+            self.restart(Cause.EXTERNAL)
+
+    def _act(self, name: str, axis: int, amount: float) -> None:
+        """Do what a fault's switching does to board and plant; the cable's faults are looked up when bytes pass."""
+        plant = self.plant
+        if name in _PLANT_FAULTS:
+            set_fault(plant, _PLANT_FAULTS[name], axis=axis, on=bool(amount))
+        elif name == "current_offset":
+            plant.sensors[axis].offset_ma = plant.parameters.axes[axis].sensor.offset_ma + amount
+        elif name == "weak_supply":
+            plant.supply.resistance_ohm = plant.parameters.supply.resistance_ohm * (amount or 1.0)
+        elif name == "second_board":
+            self._swap(bool(amount))

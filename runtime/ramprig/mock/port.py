@@ -1,0 +1,119 @@
+"""The mock as a port in the same process: in virtual time, where reading lets time pass, or paced by a real clock."""
+
+from __future__ import annotations
+
+import threading
+from typing import Literal
+
+from ramprig.errors import LinkLost
+from ramprig.port.base import ClosesItself
+from ramprig.port.clock import NS_PER_S, Clock, SystemClock, VirtualClock
+
+from .cable import Cable
+from .device import MockDevice
+
+Pace = Literal["virtual", "real"]
+
+WAIT_S = 0.001
+"""How long a paced port sleeps between two looks at its device: one tick of most boards."""
+
+
+class MockPort(ClosesItself):
+    """A `Port` whose far end is `device`.
+
+    With pace `virtual` the clock stands still but for `read`, which moves device and clock on until bytes come or its
+    time is over; nobody sleeps. With pace `real` the device catches up with the clock in each call. Either way the
+    device runs in the caller's thread; `urgent` and `close` may come from any.
+    """
+
+    def __init__(
+        self,
+        device: MockDevice,
+        *,
+        pace: Pace = "virtual",
+        seed: int = 0,
+        name: str = "mock:",
+        clock: Clock | None = None,
+    ) -> None:
+        """`clock`, where given, must be a VirtualClock for pace `virtual` and is then moved by this port alone."""
+        self.name = name
+        self.device = device
+        self._cable = Cable(device, seed=seed)
+        self._virtual: VirtualClock | None = None
+        if pace == "virtual":
+            if clock is None:
+                clock = VirtualClock(wall_s=SystemClock().wall())
+            if not isinstance(clock, VirtualClock):
+                raise ValueError("a mock in virtual time needs a VirtualClock")
+            self._virtual = clock
+        self.clock: Clock = SystemClock() if clock is None else clock
+        self._start_s = self.clock.now()
+        self._urgent: list[bytes] = []
+        self._early = b""  # what came while the device caught up for a write
+        self._closed = threading.Event()
+        self._cable.opened()
+
+    def _now_ns(self) -> int:
+        return round((self.clock.now() - self._start_s) * NS_PER_S)
+
+    def _check(self) -> None:
+        if self._closed.is_set():
+            raise LinkLost(f"{self.name} was closed while it was in use")
+        if self._cable.is_out:
+            raise LinkLost(f"{self.name}: the cable was pulled out (fault unplug)")
+        self._send_urgent()
+
+    def _send_urgent(self) -> None:
+        while self._urgent:
+            self._cable.urgent(self._urgent.pop(0))
+
+    def read(self, timeout_s: float) -> bytes:
+        """As `Port.read`, on the port's own clock."""
+        self._check()
+        until_ns = self._now_ns() + max(0, round(timeout_s * NS_PER_S))
+        if self._virtual is not None:
+            data = self._cable.run(until_ns)
+            late_ns = self._cable.now_ns - self._now_ns()
+            if late_ns > 0:
+                self._virtual.advance(late_ns / NS_PER_S)
+            return data
+        while True:
+            data = self._catch_up()
+            if data or self._now_ns() >= until_ns:
+                return data
+            self._closed.wait(min(WAIT_S, max(0.0, (until_ns - self._now_ns()) / NS_PER_S)))
+            self._check()
+
+    def _catch_up(self) -> bytes:
+        """Run the device to the clock's present time, and return all it has sent."""
+        now_ns = self._now_ns()
+        data, self._early = bytearray(self._early), b""
+        while True:
+            piece = self._cable.run(now_ns)
+            data += piece
+            if not piece:
+                return bytes(data)
+
+    def write(self, data: bytes) -> None:
+        """As `Port.write`: the bytes leave now."""
+        self._check()
+        if self._virtual is None:
+            self._early = self._catch_up()
+        self._cable.send(data)
+
+    def urgent(self, data: bytes) -> bool:
+        """As `Port.urgent`: taken up by the port's thread in its next call, before all else."""
+        if self._closed.is_set() or self._cable.is_out:
+            return False
+        self._urgent.append(data)
+        return True
+
+    def send_break(self) -> bool:
+        """As `Port.send_break`."""
+        self._check()
+        self._cable.send_break()
+        return True
+
+    def close(self) -> None:
+        """Give the port up. The device stands still from here on."""
+        self._closed.set()

@@ -1,0 +1,101 @@
+"""What `mock:` texts mean: `mock:?pace=virtual&seed=3&fault=jammed_shaft&fault=bit_errors=1e-3&bench=FILE`."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from pathlib import Path
+from urllib.parse import parse_qsl
+
+from ramprig.errors import UsageError
+from ramprig.port import open as port_open
+from ramprig.port.base import Port
+from ramprig.port.clock import VirtualClock
+
+from .device import MockDevice
+from .faults import parse_fault
+from .port import MockPort, Pace
+from .setup import MockSetup
+
+OPTIONS = {
+    "pace": "virtual (nobody sleeps) or real; real where nothing is said",
+    "seed": "a whole number; the same seed and the same doings give the same bytes",
+    "fault": "NAME, NAME=VALUE or NAME:AXIS=VALUE; may be given several times",
+    "bench": "a bench file, whose motors, servos, limits and model the mock takes",
+    "baud": "the wire's rate; 0 for a wire that takes no time",
+    "limits": "a file that keeps the board's limits beyond this process",
+}
+"""The options of a `mock:` text, for help."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class MockWish:
+    """What a `mock:` text asks for."""
+
+    pace: Pace = "real"
+    seed: int = 0
+    faults: tuple[str, ...] = ()
+    bench: Path | None = None
+    baud: int | None = None
+    limits: Path | None = None
+
+
+def parse_mock(text: str) -> MockWish:
+    """The wish that `mock:...`, or what follows its colon, spells; raises UsageError for anything else."""
+    rest = text.removeprefix("mock:").removeprefix("//")
+    if rest and not rest.startswith("?"):
+        raise UsageError(f"'{text}': after 'mock:' come options, such as 'mock:?pace=virtual&seed=3'")
+    wish = MockWish()
+    for name, value in parse_qsl(rest[1:], keep_blank_values=True):
+        match name:
+            case "pace":
+                if value not in ("virtual", "real"):
+                    raise UsageError(f"'{text}': pace is '{value}'; it may be virtual or real")
+                wish = replace(wish, pace="virtual" if value == "virtual" else "real")
+            case "seed":
+                wish = replace(wish, seed=_whole(text, name, value))
+            case "baud":
+                wish = replace(wish, baud=_whole(text, name, value))
+            case "fault":
+                parse_fault(value)
+                wish = replace(wish, faults=(*wish.faults, value))
+            case "bench":
+                wish = replace(wish, bench=Path(value))
+            case "limits":
+                wish = replace(wish, limits=Path(value))
+            case _:
+                raise UsageError(f"'{text}': there is no option '{name}'; there are {', '.join(OPTIONS)}")
+    return wish
+
+
+def _whole(text: str, name: str, value: str) -> int:
+    if not (value.isascii() and value.isdigit() and len(value) <= 18):
+        raise UsageError(f"'{text}': {name} is '{value}'; it must be a whole number")
+    return int(value)
+
+
+def setup_of(wish: MockWish) -> MockSetup:
+    """The setup a wish asks for."""
+    setup = MockSetup()
+    if wish.bench is not None:
+        raise UsageError("the option 'bench' of a mock is not ready yet")
+    if wish.baud is not None:
+        setup = replace(setup, baud=wish.baud)
+    if wish.limits is not None:
+        setup = replace(setup, limits_path=wish.limits)
+    return replace(setup, faults=(*setup.faults, *wish.faults))
+
+
+def open_mock(text: str, *, clock: VirtualClock | None = None) -> MockPort:
+    """A port to a new mock as `text` asks for."""
+    wish = parse_mock(text)
+    device = MockDevice(setup_of(wish), seed=wish.seed)
+    return MockPort(device, pace=wish.pace, seed=wish.seed, name=text, clock=clock)
+
+
+def _factory(wanted: port_open.Wanted) -> Port:
+    return open_mock(wanted.url)
+
+
+def register() -> None:
+    """Have `ramprig.port.open.open_port` open `mock:` texts."""
+    port_open.register("mock", _factory)
