@@ -168,6 +168,11 @@ class SampleStream:
             return None
         return next(iter(self._candidates()), None)
 
+    @property
+    def waiting_for(self) -> int | None:
+        """The number of the line that is asked for and has not come."""
+        return self._asked
+
     def asked(self, number: int) -> None:
         """The device has been asked for this line; next comes `take`, `refused` or `unarrived`."""
         self._asked = number

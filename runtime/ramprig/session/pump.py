@@ -1,0 +1,235 @@
+"""The one place where a session waits: reads the port, repeats what is due, beats, and hands on what was heard.
+
+Everything happens in the thread that calls. Nothing is sent from the background, so a runner that hangs sends no beats
+and the device stops the motor by its lease. Only `urgent_stop` may be called from elsewhere: it goes past the queue.
+"""
+
+from __future__ import annotations
+
+import random
+import threading
+from collections import deque
+from collections.abc import Callable
+from dataclasses import dataclass
+
+from ramprig.errors import Bug, LinkError, LinkLost, StoppedByUser, UsageError
+from ramprig.port.base import Port
+from ramprig_link.faults import FieldError, LinkFault, LinkSilent
+from ramprig_link.host import Answered, HostEvent, HostLink, RetryPolicy
+
+TURN_MAX_S = 0.05
+"""Longest single read, so that a panic from another thread is seen soon."""
+JOBS_MAX = 32
+"""Most requests that wait to be sent."""
+URGENTS_KEPT = 32
+"""So many urgent stops are remembered until they are told of."""
+TAG_COUNT = 255
+"""Tags a host may begin with."""
+
+
+@dataclass(frozen=True, slots=True)
+class Job:
+    """A request to be sent when none is outstanding; `then` is called with its answer, `ok` or `no`."""
+
+    word: str
+    args: tuple[object, ...]
+    then: Callable[[Answered], None]
+
+
+class Pump:
+    """One port and one link, driven by whoever calls `until` or `request`.
+
+    `hear` is called for everything that came, with the host time of its reception; `chores` once a turn, to do what is
+    due by time; both from inside the pump, so they must not call it again (Bug). `late` is called with the seconds
+    between two calls of the pump, or two turns, and does the judging. What `hear` is given arrived after `since_s`.
+    """
+
+    def __init__(
+        self,
+        port: Port,
+        *,
+        chance: random.Random,
+        retry: RetryPolicy | None,
+        hear: Callable[[HostEvent, float], None],
+        chores: Callable[[float], None],
+        repeated: Callable[[str, float], None],
+        late: Callable[[float], None],
+    ) -> None:
+        self.port = port
+        self.clock = port.clock
+        self.link = HostLink(chance.randrange(TAG_COUNT), retry)
+        self.beat_s: float | None = None
+        self.muted = False
+        self.panic_category: int | None = None
+        self.panic_taken = False
+        self.urgents: deque[tuple[int, bool]] = deque(maxlen=URGENTS_KEPT)
+        self.lost: LinkLost | None = None
+        self._hear = hear
+        self._chores = chores
+        self._repeated = repeated
+        self._late = late
+        self._jobs: deque[Job] = deque()
+        self._job: Job | None = None
+        self._sent_s = self.clock.now()
+        self.since_s = self._sent_s
+        self.bytes_in = 0
+        self._turned_s: float | None = None
+        self._inside = False
+        self._owner = threading.get_ident()
+
+    # ---- for everybody -------------------------------------------------------------------------------------------
+
+    def urgent_stop(self, category: int) -> bool:
+        """Send a stop past every queue, from any thread or signal handler; beats cease at once.
+
+        Returns whether the system took the bytes. Unless `panic_taken` is set, the pump raises StoppedByUser at its
+        next turn.
+        """
+        self.muted = True
+        known = self.panic_category
+        self.panic_category = category if known is None else min(known, category)
+        sent = self.port.urgent(HostLink.urgent_stop(category))
+        self.urgents.append((category, sent))
+        return sent
+
+    # ---- for the owner -------------------------------------------------------------------------------------------
+
+    def until(self, until_s: float) -> None:
+        """Work until this time of the port's clock, with one turn at least.
+
+        Raises LinkLost, and StoppedByUser after a panic until the stop is taken up.
+        """
+        while True:
+            self.turn(until_s)
+            if self.clock.now() >= until_s:
+                return
+
+    def request(self, word: str, *args: object) -> Answered:
+        """Send a request before all that wait and work until it is answered, with `ok` or `no`.
+
+        Raises UsageError for wrong arguments, LinkLost on silence, LinkError while a stop is not confirmed.
+        """
+        if self.muted:
+            self._check_panic()
+            raise LinkError(f"'{word}' is not sent: a stop was asked for and is not confirmed. Cut the power, reopen.")
+        box: list[Answered] = []
+        job = Job(word, args, box.append)
+        self._jobs.appendleft(job)
+        try:
+            while not box:
+                self.turn(self.clock.now() + TURN_MAX_S)
+        finally:
+            if job in self._jobs:
+                self._jobs.remove(job)
+        return box[0]
+
+    def post(self, word: str, *args: object, then: Callable[[Answered], None]) -> bool:
+        """Send a request when its turn comes, without waiting; False where too many wait already."""
+        if len(self._jobs) >= JOBS_MAX:
+            return False
+        self._jobs.append(Job(word, args, then))
+        return True
+
+    def hush(self) -> None:
+        """Send nothing more that could keep the outputs alive: no beat, no repeat, nothing that waits."""
+        self.muted = True
+        self._jobs.clear()
+        self._job = None
+        if self.link.outstanding is not None:
+            self.link.abandon()
+
+    def speak(self) -> None:
+        """Allow requests again, after a stop is acknowledged or at a new start."""
+        self.muted = False
+        self.panic_category = None
+
+    @property
+    def idle(self) -> bool:
+        """Whether nothing is outstanding and nothing waits to be sent."""
+        return not self._jobs and self.link.outstanding is None
+
+    def turn(self, until_s: float) -> None:
+        """One round: send what is due, read once until `until_s` at the longest, hand on what came."""
+        if self._inside:
+            raise Bug("the session was called from inside one of its own callbacks")
+        if threading.get_ident() != self._owner:
+            raise Bug("the session was called from another thread than the one that opened it")
+        if self.lost is not None:
+            raise self.lost
+        self._inside = True
+        try:
+            self._turn(until_s)
+        except LinkLost as error:
+            self.lost = error
+            raise
+        finally:
+            self._inside = False
+
+    def _turn(self, until_s: float) -> None:
+        now_s = self.clock.now()
+        if self._turned_s is not None:
+            self._late(now_s - self._turned_s)
+        self._check_panic()
+        if not self.muted:
+            self._send_new(now_s)
+        data = self.port.read(max(0.0, self._wait_until(until_s, now_s) - now_s))
+        now_s = self.clock.now()
+        self.since_s, self._turned_s = self._turned_s or now_s, now_s
+        self.bytes_in += len(data)
+        if data:
+            for event in self.link.receive(data, now_s):
+                self._take(event, now_s)
+        if not self.muted:
+            self._repeat(now_s)
+        self._chores(now_s)
+
+    def _check_panic(self) -> None:
+        if self.panic_category is not None and not self.panic_taken:
+            raise StoppedByUser(f"a stop of category {self.panic_category} was asked for")
+
+    def _wait_until(self, until_s: float, now_s: float) -> float:
+        times = [until_s, now_s + TURN_MAX_S]
+        due_s = self.link.due_at_s
+        if due_s is not None and not self.muted:
+            times.append(due_s)
+        elif self.beat_s is not None and not self.muted:
+            times.append(self._sent_s + self.beat_s)
+        return min(times)
+
+    def _send_new(self, now_s: float) -> None:
+        if self.link.outstanding is not None:
+            return
+        if self._jobs:
+            self._job = self._jobs.popleft()
+        elif self.beat_s is not None and now_s - self._sent_s >= self.beat_s:
+            self._job = Job("beat", (), lambda answered: None)
+        else:
+            return
+        try:
+            line = self.link.ask(self._job.word, *self._job.args, now_s=now_s)
+        except FieldError as error:
+            raise UsageError(f"'{self._job.word}' cannot be sent: {error}") from error
+        except LinkFault as error:
+            raise Bug(f"'{self._job.word}' cannot be sent: {error}") from error
+        if self.muted:  # a signal handler has sent a stop meanwhile
+            self.hush()
+            return
+        self._sent_s = now_s
+        self.port.write(line)
+
+    def _repeat(self, now_s: float) -> None:
+        try:
+            line = self.link.due(now_s)
+        except LinkSilent as silent:
+            raise LinkLost(f"{self.port.name}: {silent}") from silent
+        if line is not None and self._job is not None:
+            self._repeated(self._job.word, now_s)
+            self.port.write(line)
+
+    def _take(self, event: HostEvent, now_s: float) -> None:
+        job = self._job
+        if isinstance(event, Answered):
+            self._job = None
+        self._hear(event, now_s)
+        if isinstance(event, Answered) and job is not None:
+            job.then(event)
