@@ -8,7 +8,7 @@ not logged leaves its fields empty. The order is `tick, time_s`, the motors, the
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Collection, Sequence
 from dataclasses import dataclass
 from typing import TypeAlias
 
@@ -142,6 +142,14 @@ class Columns:
     def speeds(self) -> tuple[SpeedField, ...]:
         """The columns that need a speed estimator."""
         return tuple(field for field in self.fields if isinstance(field, SpeedField))
+
+    def only(self, channels: Collection[ChannelKey]) -> Columns:
+        """The columns that these channels fill, tick and time among them."""
+        return Columns(
+            tuple(
+                field for field in self.fields if isinstance(field, TickField | TimeField) or field.channel in channels
+            )
+        )
 
 
 def state_label(bits: int) -> str:

@@ -1,0 +1,142 @@
+"""Files that only grow, in whole lines: one `write` call a batch, counted, hashed, and cut back to whole lines on
+failure.
+
+Nothing is buffered in the process, so a killed process loses nothing that was appended; `sync` guards against the
+loss of power. Two more ways to the disk live here because they need the same care: a file replaced in one step, and
+the reserve.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import hashlib
+import os
+from dataclasses import dataclass
+from pathlib import Path
+
+RESERVE_BYTES = 256 * 1024
+"""Kept back on the disk while a run is on, and given up when the disk is full, so that the reason can still be
+written."""
+
+_APPEND = os.O_WRONLY | os.O_APPEND | getattr(os, "O_BINARY", 0) | getattr(os, "O_CLOEXEC", 0)
+
+
+class AppendFile:
+    """One file of lines, opened for appending only.
+
+    `lines` and `size_bytes` count what was appended whole, `synced_lines` and `synced_bytes` what is known to be on the
+    disk itself, and `sha256` is that of the contents. Not for use by two threads at once.
+    """
+
+    def __init__(self, path: Path, *, new: bool = True) -> None:
+        """Creates the file and raises FileExistsError where there is one; with `new` false it must exist (a device,
+        say)."""
+        self.path = path
+        self._handle = os.open(path, _APPEND | (os.O_CREAT | os.O_EXCL if new else 0), 0o666)
+        self._hash = hashlib.sha256()
+        self._open = True
+        self.size_bytes = self.synced_bytes = 0
+        self.lines = self.synced_lines = 0
+
+    @property
+    def dirty(self) -> bool:
+        """Whether something was appended after the last `sync`."""
+        return self.size_bytes != self.synced_bytes
+
+    @property
+    def sha256(self) -> str:
+        """Of what was appended, in hexadecimal."""
+        return self._hash.hexdigest()
+
+    def append(self, data: bytes) -> None:
+        """Write whole lines (`data` ends with LF) and leave them with the operating system.
+
+        Raises OSError where not all of it could be written. The file then ends after the last whole line that could,
+        and the counts say so; only where the disk refuses to cut the rest off does a torn line stay behind.
+        """
+        done = 0
+        view = memoryview(data)
+        try:
+            while done < len(data):
+                done += os.write(self._handle, view[done:])
+        except OSError:
+            whole = data.rfind(b"\n", 0, done) + 1
+            with contextlib.suppress(OSError):
+                os.ftruncate(self._handle, self.size_bytes + whole)
+            self._count(data[:whole])
+            raise
+        self._count(data)
+
+    def _count(self, data: bytes) -> None:
+        self._hash.update(data)
+        self.size_bytes += len(data)
+        self.lines += data.count(b"\n")
+
+    def sync(self) -> None:
+        """Have the disk itself hold what was appended; raises OSError where it cannot."""
+        if self.dirty:
+            os.fsync(self._handle)
+            self.synced_bytes, self.synced_lines = self.size_bytes, self.lines
+
+    def close(self) -> None:
+        """Close the file without syncing; a second call does nothing."""
+        if self._open:
+            self._open = False
+            os.close(self._handle)
+
+
+def sync_folder(folder: Path) -> None:
+    """Have the disk hold the names in `folder`, where the system can (POSIX)."""
+    if os.name != "posix":
+        return
+    handle = os.open(folder, os.O_RDONLY)
+    try:
+        os.fsync(handle)
+    finally:
+        os.close(handle)
+
+
+def replace_file(path: Path, data: bytes) -> None:
+    """Give `path` the contents `data` in one step: a reader, or a crash, sees the old or the new, never a part.
+
+    Raises OSError, and then the old contents stand.
+    """
+    part = path.with_name(path.name + ".part")
+    try:
+        with open(part, "wb") as file:
+            file.write(data)
+            file.flush()
+            os.fsync(file.fileno())
+        os.replace(part, path)
+    except OSError:
+        with contextlib.suppress(OSError):
+            part.unlink()
+        raise
+    sync_folder(path.parent)
+
+
+@dataclass(slots=True)
+class Reserve:
+    """Space taken on the disk beforehand, so that there is some when there is none left."""
+
+    path: Path
+    held: bool = False
+
+    def take(self, size_bytes: int = RESERVE_BYTES) -> None:
+        """Fill the reserve file; raises OSError where the disk has no room, FileExistsError where there is one."""
+        with open(self.path, "xb") as file:
+            file.write(
+                os.urandom(size_bytes)
+            )  # random, because a file system that compresses would keep zeros for nothing
+            file.flush()
+            os.fsync(file.fileno())
+        self.held = True
+
+    def free(self) -> bool:
+        """Give the space back; returns whether there was any. Never raises."""
+        if not self.held:
+            return False
+        self.held = False
+        with contextlib.suppress(OSError):
+            self.path.unlink()
+        return True

@@ -1,0 +1,287 @@
+"""Reads a run folder back, whole or as a crash left it, and checks the account of samples against the rows that are
+there.
+
+A run that was killed has a `run.json` that says `running`, perhaps a torn last row and a torn last event: all that is
+accepted, and said.
+"""
+
+from __future__ import annotations
+
+import csv
+import hashlib
+import io
+import json
+import math
+import sys
+from collections.abc import Collection, Iterator
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from ..errors import RecordError
+from .folder import EVENTS_FILE, FORMAT, RUN_FILE, SAMPLES_FILE
+
+CHUNK_BYTES = 4 * 1024 * 1024
+EXAMPLES_MAX = 5  # ticks that a statement names
+Document = dict[str, Any]  # JSON as it comes: what is in it is checked where it is used
+
+
+@dataclass(frozen=True, slots=True)
+class Samples:
+    """The rows of a samples file, in the order of the file.
+
+    `ticks` is (n,) int64; `numbers` has (n,) float64 for each column asked for that holds numbers, NaN where a field is
+    empty; `words` the texts of the others. `torn_bytes` is the length of an unfinished last row, which is left out.
+    """
+
+    names: tuple[str, ...]
+    ticks: NDArray[np.int64]
+    numbers: dict[str, NDArray[np.float64]]
+    words: dict[str, list[str]]
+    torn_bytes: int
+
+    def __len__(self) -> int:
+        return len(self.ticks)
+
+
+def _whole_lines(path: Path) -> Iterator[tuple[bytes, int]]:
+    """The file in pieces of whole lines, each with 0, and last an empty piece with the length of an unfinished line."""
+    rest = b""
+    with open(path, "rb") as file:
+        while chunk := file.read(CHUNK_BYTES):
+            data = rest + chunk
+            end = data.rfind(b"\n") + 1
+            rest = data[end:]
+            if end:
+                yield data[:end], 0
+    yield b"", len(rest)
+
+
+def read_samples(path: Path, columns: Collection[str] | None = None) -> Samples:
+    """The samples file `path`; only these columns besides the ticks, or all. Raises RecordError where it is none."""
+    table = _Table(path, columns)
+    torn_bytes = 0
+    try:
+        for data, torn_bytes in _whole_lines(path):  # noqa: B007  (the last one is what is wanted)
+            table.take(list(csv.reader(io.StringIO(data.decode("utf-8"), newline=""))))
+    except (OSError, ValueError, csv.Error) as error:
+        raise RecordError(f"{path} cannot be read as a samples file: {error}") from error
+    return Samples(
+        tuple(table.names),
+        np.concatenate([np.empty(0, np.int64), *table.ticks]),
+        {name: np.concatenate([np.empty(0), *parts]) for name, parts in table.numbers.items()},
+        table.words,
+        torn_bytes,
+    )
+
+
+class _Table:
+    """Gathers rows of text into columns, a piece of the file at a time, so that the texts need not all be kept."""
+
+    def __init__(self, path: Path, wanted: Collection[str] | None) -> None:
+        self._path = path
+        self._wanted = wanted
+        self.names: list[str] = []
+        self.ticks: list[NDArray[np.int64]] = []
+        self.numbers: dict[str, list[NDArray[np.float64]]] = {}
+        self.words: dict[str, list[str]] = {}
+
+    def take(self, rows: list[list[str]]) -> None:
+        if not self.names and rows:
+            self._header(rows.pop(0))
+        if not rows:
+            return
+        if any(len(row) != len(self.names) for row in rows):
+            raise RecordError(f"{self._path} is no samples file: a row has not as many fields as the header")
+        fields = dict(zip(self.names, zip(*rows, strict=True), strict=True))
+        self.ticks.append(np.array(fields["tick"], dtype=np.int64))
+        for name in list(self.numbers):
+            try:
+                self.numbers[name].append(np.array([float(text) if text else math.nan for text in fields[name]]))
+            except ValueError:
+                self._becomes_words(name)
+        for name, words in self.words.items():
+            words += map(sys.intern, fields[name])
+
+    def _header(self, names: list[str]) -> None:
+        if names[:1] != ["tick"]:
+            raise RecordError(f"{self._path} is no samples file: its first column is not tick")
+        self.names = names
+        self.numbers = {name: [] for name in names[1:] if self._wanted is None or name in self._wanted}
+
+    def _becomes_words(self, name: str) -> None:
+        """A column that does not hold numbers, found when its first word comes; only empty fields may have come
+        before."""
+        parts = self.numbers.pop(name)
+        if not all(np.isnan(part).all() for part in parts):
+            raise RecordError(f"{self._path} is no samples file: column {name} holds numbers and words")
+        self.words[name] = [""] * sum(map(len, parts))
+
+
+def read_events(path: Path) -> tuple[list[Document], int]:
+    """All events of a run in order, and the length in bytes of an unfinished last line, which is left out."""
+    events: list[Document] = []
+    torn_bytes = 0
+    try:
+        for data, torn_bytes in _whole_lines(path):  # noqa: B007  (the last one is what is wanted)
+            events += [json.loads(line) for line in data.splitlines()]
+    except (OSError, ValueError) as error:
+        raise RecordError(f"{path} cannot be read as an event log: {error}") from error
+    return events, torn_bytes
+
+
+def read_manifest(folder: Path) -> Document:
+    """The contents of `run.json`; raises RecordError where there is none of our format."""
+    path = folder / RUN_FILE
+    try:
+        manifest = json.loads(path.read_text("utf-8"))
+    except (OSError, ValueError) as error:
+        raise RecordError(f"{folder} is no run folder: {RUN_FILE} cannot be read ({error})") from error
+    if not isinstance(manifest, dict) or manifest.get("format") != FORMAT:
+        raise RecordError(f"{folder}: {RUN_FILE} is not of the format '{FORMAT}'")
+    return manifest
+
+
+@dataclass(frozen=True, slots=True)
+class Audit:
+    """What a run folder holds against what it says.
+
+    `missing` counts samples that should be in the file and are not, `unexpected` rows whose tick no logging made, and
+    `known_lost` those that are told as lost. `statements` says everything that is not as it should be, for the user;
+    `exact` is true where there is nothing to say.
+    """
+
+    finished: bool
+    rows: int
+    known_lost: int
+    missing: int
+    unexpected: int
+    statements: tuple[str, ...]
+
+    @property
+    def exact(self) -> bool:
+        """Whether the run ended in order, and every sample is in the file or told as lost."""
+        return not self.statements
+
+
+def audit(folder: Path) -> Audit:
+    """Check the run folder; raises RecordError only where it cannot be read as one at all."""
+    manifest = read_manifest(folder)
+    samples = read_samples(folder / SAMPLES_FILE, columns=())
+    events, torn_event_bytes = read_events(folder / EVENTS_FILE)
+    finished = manifest.get("status") == "finished"
+    statements: list[str] = []
+    if not finished:
+        statements.append(_how_it_broke_off(samples, events))
+    if samples.torn_bytes:
+        statements.append(f"the last row is torn ({samples.torn_bytes} bytes) and was left out")
+    if torn_event_bytes:
+        statements.append(f"the last event is torn ({torn_event_bytes} bytes) and was left out")
+    statements += [f"trouble with the disk: {trouble['text']}" for trouble in manifest.get("disk_troubles", [])]
+    known_lost, missing, unexpected = 0, 0, 0
+    if finished:
+        account = manifest["samples"]
+        known_lost = account["lost"]
+        found = _compare(account, samples.ticks)
+        missing, unexpected = found.missing, found.unexpected
+        statements += found.statements
+        statements += _changed_files(folder, manifest)
+    else:
+        known_lost, found_statements = _gaps_by_ticks(samples.ticks, events)
+        statements += found_statements
+    return Audit(finished, len(samples), known_lost, missing, unexpected, tuple(statements))
+
+
+def _how_it_broke_off(samples: Samples, events: list[Document]) -> str:
+    last_row = f"the last row is of tick {samples.ticks[-1]}" if len(samples) else "there is no row"
+    last_event = f"the last event is '{events[-1]['kind']}' at {events[-1]['utc']}" if events else "there is no event"
+    return f"the run did not end in order ({RUN_FILE} says it is still running): {last_row}, {last_event}"
+
+
+@dataclass(frozen=True, slots=True)
+class _Comparison:
+    missing: int
+    unexpected: int
+    statements: list[str]
+
+
+def _compare(account: Document, ticks: NDArray[np.int64]) -> _Comparison:
+    """The ticks in the file against those that the loggings made and did not lose."""
+    if not account["loggings"]:
+        if len(ticks) == account["written"]:
+            return _Comparison(0, 0, [])
+        return _Comparison(0, 0, [f"{len(ticks)} rows are there, {account['written']} were written"])
+    expected = _expected_ticks(account)
+    if np.array_equal(expected, ticks):
+        return _Comparison(0, 0, [])
+    if account["gaps_unlisted"]:
+        if len(ticks) == account["written"]:
+            return _Comparison(0, 0, [])
+        return _Comparison(0, 0, ["the rows differ from the account, and not all of its gaps are listed"])
+    statements = []
+    absent, extra = np.setdiff1d(expected, ticks), np.setdiff1d(ticks, expected)
+    if len(absent):
+        statements.append(f"{len(absent)} samples are missing that were received: ticks {_some(absent)}")
+    if len(extra):
+        statements.append(f"{len(extra)} rows are of ticks that no logging made: {_some(extra)}")
+    if not statements:
+        statements.append("the rows are not in the order in which they were made, or some are there twice")
+    return _Comparison(len(absent), len(extra), statements)
+
+
+def _expected_ticks(account: Document) -> NDArray[np.int64]:
+    parts = []
+    for logging in account["loggings"]:
+        first, period = logging["first_tick"], logging["period_ticks"]
+        made = np.arange(logging["expected"], dtype=np.int64) * period + first
+        kept = np.ones(len(made), dtype=np.bool_)
+        for gap in account["gaps"]:
+            begin, rest = divmod(gap["first_tick"] - first, period)
+            if rest == 0 and 0 <= begin < len(made) and gap["period_ticks"] == period:
+                kept[begin : begin + gap["count"]] = False
+        parts.append(made[kept])
+    return np.concatenate(parts)
+
+
+def _gaps_by_ticks(ticks: NDArray[np.int64], events: list[Document]) -> tuple[int, list[str]]:
+    """For a run without an account: what its events tell as lost, and whether the ticks in the file agree."""
+    told = {event["tick"]: event for event in events if event["kind"] == "gap_found"}
+    steps = np.diff(ticks)
+    if len(steps) == 0:
+        return sum(event["count"] for event in told.values()), []
+    changes = np.flatnonzero(steps[1:] != steps[:-1]) + 1
+    usual = int(np.median(steps))
+    untold = [
+        int(ticks[place]) + usual
+        for place in ({0} | set(changes.tolist()))
+        if steps[place] > usual and int(ticks[place]) + usual not in told
+    ]
+    statements = []
+    if untold:
+        ordered = np.array(sorted(untold), dtype=np.int64)
+        statements.append(f"rows are missing, or the period changed, at {len(ordered)} places: ticks {_some(ordered)}")
+    return sum(event["count"] for event in told.values()), statements
+
+
+def _some(ticks: NDArray[np.int64]) -> str:
+    shown = ", ".join(map(str, ticks[:EXAMPLES_MAX].tolist()))
+    return shown + (" ..." if len(ticks) > EXAMPLES_MAX else "")
+
+
+def _changed_files(folder: Path, manifest: Document) -> list[str]:
+    """Files that are gone or no longer as they were written."""
+    statements = []
+    for entry in [*manifest.get("files", []), *manifest.get("inputs", [])]:
+        path = folder / entry["file"]
+        try:
+            with open(path, "rb") as file:
+                found = hashlib.file_digest(file, "sha256").hexdigest()
+        except OSError:
+            statements.append(f"{entry['file']} is missing")
+            continue
+        if found != entry["sha256"]:
+            statements.append(f"{entry['file']} was changed after the run")
+    return statements

@@ -1,0 +1,246 @@
+"""Writes one run down as it happens: takes sample blocks and events, and ends with the account of all of them."""
+
+from __future__ import annotations
+
+import contextlib
+import threading
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+
+from ..errors import RecordError
+from ..port.clock import Clock
+from ..session.blocks import Block
+from .appendfile import AppendFile
+from .columns import Columns
+from .events import Json, RunTime, encode_line, event_object, jsonable, rfc3339
+from .folder import EVENTS_FILE, SAMPLES_FILE, TRAIL_FILE, RunFolder
+from .manifest import Anchor, RunEnd, clocks, sample_account, speed_account
+from .rows import RowPrinter
+from .space import SpacePolicy, SpaceWatch, disk_free
+from .speed import SpeedMethod
+from .writer import SYNC_EVERY_S, DiskWriter, Trouble
+
+BATCH_ROWS = 1024
+"""In virtual time so many rows are printed together; in real time every block is written as it comes."""
+
+PERIODS_MAX = 16
+"""Different sample periods whose speed resolution `run.json` lists."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RunStarted:
+    """The run folder was made and the clocks tied together."""
+
+    tick: int
+    host_s: float
+    name: str
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RunFinished:
+    """The run came to its end in order."""
+
+    tick: int | None
+    verdict: str
+    stop_reason: str
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class DiskTrouble:
+    """The disk is in trouble; whoever runs the motor has been told before this was written."""
+
+    trouble: str
+    text: str
+
+
+class Recorder:
+    """The one who writes a run down. Blocks and events come from one thread; the disk is written by another one.
+
+    `start` ties the clocks together and is where `time_s` begins. `on_trouble` is called before anything else when
+    the disk is in trouble, from any thread; it stops the motor where `trouble.kind.demands_stop`, and must not block
+    or raise. `threaded` false is for virtual time: everything is written in the caller's thread, and the same input
+    gives the same bytes.
+    """
+
+    def __init__(
+        self,
+        folder: RunFolder,
+        columns: Columns,
+        *,
+        start: Anchor,
+        tick_us: int,
+        clock: Clock,
+        on_trouble: Callable[[Trouble], None],
+        threaded: bool = True,
+        method: SpeedMethod | None = None,
+        space: SpacePolicy | None = None,
+        free: Callable[[Path], int] = disk_free,
+        sync_every_s: float = SYNC_EVERY_S,
+    ) -> None:
+        self.folder = folder
+        self.columns = columns
+        self._start = start
+        self._clock = clock
+        self._method = method or SpeedMethod()
+        self._when = RunTime(tick_us, start.tick, start.host_s, start.unix_s)
+        self._user_on_trouble = on_trouble
+        self._printer = self._new_printer(columns)
+        self._batch: list[Block] = []
+        self._batch_rows = 0
+        self._received_rows = 0
+        self._periods_ticks: list[int] = []
+        self._troubles: list[Json] = []
+        self._manifest_lock = threading.Lock()
+        self._finished = False
+        self._samples, self._events = self._begin_files()
+        self._threaded = threaded
+        self._writer = DiskWriter(
+            (self._samples, self._events),
+            on_trouble=self._on_trouble,
+            after_trouble=self._after_trouble,
+            on_sync=self._on_sync,
+            threaded=threaded,
+            now=clock.now,
+            sync_every_s=sync_every_s,
+        )
+        self._watch = SpaceWatch(folder.path, space or SpacePolicy(), tell=self._writer.tell, free=free)
+        self.on_event(RunStarted(tick=start.tick, host_s=start.host_s, name=folder.description.name))
+
+    def _new_printer(self, columns: Columns) -> RowPrinter:
+        return RowPrinter(columns, tick_us=self._when.tick_us, tick_zero=self._when.tick_zero, method=self._method)
+
+    def _begin_files(self) -> tuple[AppendFile, AppendFile]:
+        try:
+            self._write_manifest("running", None)
+            samples = self.folder.new_file(SAMPLES_FILE)
+            samples.append(self._printer.header())
+            return samples, self.folder.new_file(EVENTS_FILE)
+        except OSError as error:
+            raise RecordError(f"the run folder {self.folder.path} cannot be written: {error.strerror}") from error
+
+    # ---- while the run is on ------------------------------------------------------------------------------------
+
+    def on_block(self, block: Block) -> None:
+        """Write the samples of a block; raises RecordError where that is no longer possible, after `on_trouble`."""
+        self._received_rows += len(block)
+        period_ticks = block.layout.period_ticks
+        if period_ticks not in self._periods_ticks and len(self._periods_ticks) < PERIODS_MAX:
+            self._periods_ticks.append(period_ticks)
+        self._batch.append(block)
+        self._batch_rows += len(block)
+        if self._threaded or self._batch_rows >= BATCH_ROWS:
+            self._submit_batch()
+
+    def _submit_batch(self) -> None:
+        batch, self._batch = self._batch, []
+        self._batch_rows = 0
+        if batch:
+            self._writer.submit(lambda: self._samples.append(self._printer.rows(batch)))
+
+    def on_event(self, event: object) -> None:
+        """Write down an event (a dataclass, see `events.py`), synced to the disk soon; never raises RecordError."""
+        line = encode_line(event_object(event, when=self._when, host_s=self._clock.now()))
+        self._writer.submit(lambda: self._events.append(line), vital=True, sync=True)
+
+    def on_trail(self, blocks: Sequence[Block]) -> None:
+        """Write the fast record around a trip into `trail.csv` (a second one of the run into `trail-2.csv`)."""
+        if not blocks:
+            return
+        channels = {(channel.kind, channel.index) for channel in blocks[0].layout.channels}
+        printer = self._new_printer(self.columns.only(channels))
+
+        def write() -> None:
+            file = self.folder.new_file(TRAIL_FILE)
+            try:
+                file.append(printer.header() + printer.rows(blocks))
+                file.sync()
+            finally:
+                file.close()
+
+        self._writer.submit(write, vital=True)
+
+    def liveness_s(self) -> float:
+        """How long the disk has made no progress; while that is long, the lease must not be renewed."""
+        return self._writer.liveness_s()
+
+    def check(self) -> None:
+        """Raise RecordError where rows can no longer be written."""
+        self._writer.check()
+
+    # ---- trouble ------------------------------------------------------------------------------------------------
+
+    def _on_sync(self) -> None:
+        self._watch.look()
+
+    def _on_trouble(self, trouble: Trouble) -> None:
+        self._user_on_trouble(trouble)  # first of all: this is what stops the motor
+        self._troubles.append({"kind": trouble.kind.value, "text": trouble.text})
+        if not trouble.kind.loses_rows:
+            self.on_event(DiskTrouble(trouble=trouble.kind.value, text=trouble.text))
+
+    def _after_trouble(self, trouble: Trouble) -> None:
+        def write_reason() -> None:
+            self.folder.reserve.free()
+            event = DiskTrouble(trouble=trouble.kind.value, text=trouble.text)
+            self._events.append(encode_line(event_object(event, when=self._when, host_s=self._clock.now())))
+            self._write_manifest("running", None)
+
+        self._writer.submit(write_reason, vital=True, sync=True)
+
+    # ---- the end ------------------------------------------------------------------------------------------------
+
+    def finish(self, end: RunEnd) -> Path:
+        """Write what is waiting and the end of the run; returns the run folder. A second call does nothing.
+
+        Raises RecordError where not even `run.json` could be written; a full disk that was told of before is stated
+        in it.
+        """
+        if self._finished:
+            return self.folder.path
+        self._finished = True
+        tick = None if end.end is None else end.end.tick
+        self.on_event(RunFinished(tick=tick, verdict=end.verdict, stop_reason=end.stop_reason))
+        if self._writer.failure is None:
+            with contextlib.suppress(RecordError):  # told through on_trouble, and in the account as unwritten rows
+                self._submit_batch()
+        self._writer.close()
+        self.folder.reserve.free()
+        for file in (self._samples, self._events):
+            file.close()
+        try:
+            self._write_manifest("finished", end)
+        except OSError as error:
+            raise RecordError(f"run.json cannot be written in {self.folder.path}: {error.strerror}") from error
+        return self.folder.path
+
+    def _write_manifest(self, status: str, end: RunEnd | None) -> None:
+        contents = self.folder.head()
+        contents["status"] = status
+        contents["started"] = rfc3339(self.folder.started_unix_s)
+        contents["ended"] = rfc3339(self._clock.wall()) if end else None
+        contents["verdict"] = end.verdict if end else None
+        contents["stop_reason"] = end.stop_reason if end else None
+        contents["disk_troubles"] = list(self._troubles)
+        contents["columns"] = list(self.columns.names)
+        contents["clocks"] = clocks(
+            self._start, end.end if end else None, when=self._when, drift_ppm=end.drift_ppm if end else None
+        )
+        contents["speed"] = speed_account(
+            self.columns, self._method, tick_us=self._when.tick_us, periods_ticks=sorted(self._periods_ticks)
+        )
+        if end is not None:
+            contents |= self._end_of(end)
+        with self._manifest_lock:
+            self.folder.write_manifest(contents)
+
+    def _end_of(self, end: RunEnd) -> dict[str, Json]:
+        account = sample_account(
+            end.accounts, received_rows=self._received_rows, written_rows=max(0, self._samples.lines - 1)
+        )
+        return {
+            "samples": account,
+            "link": jsonable(end.link),
+            "results": jsonable(end.results),
+            "files": self.folder.files(),
+        }

@@ -1,0 +1,252 @@
+"""The one who writes to the disk: a thread of its own behind a bounded queue, or at once in virtual time.
+
+What fails is told at once, first to `on_trouble` (so that the motor is stopped before anything else), then by
+RecordError to whoever hands over more. `liveness_s` tells how long the disk has made no progress; the lease is
+renewed only while it is small.
+"""
+
+from __future__ import annotations
+
+import errno
+import queue
+import threading
+import time
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+from enum import StrEnum
+
+from ..errors import RecordError
+from .appendfile import AppendFile
+
+QUEUE_MAX = 512
+"""Jobs that may wait for the disk: at one data line each 20 ms some ten seconds; then the run ends with `queue
+full`."""
+
+VITAL_MAX = 64
+"""Places beyond that for events, so that the reason of a failure can still be handed over."""
+
+SYNC_EVERY_S = 1.0
+"""A run that loses its power loses the rows since the last sync, at most this old."""
+
+SYNC_REST_S = 0.1
+"""Least time between two syncs that jobs ask for; a flood of events must not keep the disk busy."""
+
+CLOSE_WAIT_S = 10.0
+"""How long the end of a run waits for the disk."""
+
+FULL_ERRNOS = frozenset({errno.ENOSPC, errno.EFBIG, getattr(errno, "EDQUOT", errno.ENOSPC)})
+
+
+class TroubleKind(StrEnum):
+    """What is the matter with the disk."""
+
+    SPACE_WARNING = "space_warning"
+    SPACE_LOW = "space_low"
+    DISK_FULL = "disk_full"
+    DISK_ERROR = "disk_error"
+    QUEUE_FULL = "queue_full"
+    FAULT = "fault"
+
+    @property
+    def demands_stop(self) -> bool:
+        """Whether the motor must be stopped for it; `space_low` leaves time to stop in order."""
+        return self is not TroubleKind.SPACE_WARNING
+
+    @property
+    def loses_rows(self) -> bool:
+        """Whether no more rows are written from here on."""
+        return self not in (TroubleKind.SPACE_WARNING, TroubleKind.SPACE_LOW)
+
+
+@dataclass(frozen=True, slots=True)
+class Trouble:
+    """One trouble with the disk, in words for the user."""
+
+    kind: TroubleKind
+    text: str
+
+
+def trouble_of(error: OSError) -> Trouble:
+    """The trouble that an error of the operating system means."""
+    where = f" ({error.filename})" if error.filename else ""
+    if error.errno in FULL_ERRNOS:
+        return Trouble(TroubleKind.DISK_FULL, f"the disk is full: {error.strerror}{where}")
+    return Trouble(TroubleKind.DISK_ERROR, f"the disk cannot be written: {error.strerror or error}{where}")
+
+
+@dataclass(frozen=True, slots=True)
+class _Job:
+    work: Callable[[], None]
+    vital: bool
+    sync: bool
+
+
+class DiskWriter:
+    """Carries out jobs that write to `files`, one after another, in the order in which they were handed over.
+
+    `threaded`: in a thread of its own, synced every `sync_every_s` and with each job that asks for it; else at once
+    in the caller's thread and synced at the end only (virtual time, where nothing is lost that cannot be made again).
+    `on_trouble` is called at most once for each kind of trouble, from whichever thread meets it, and must not raise.
+    `after_trouble` is called next, for a trouble that loses rows: from then on only vital jobs are carried out, and
+    they are let fail. `on_sync` is called after each timed sync (free space is looked at there); it may call `tell`.
+    """
+
+    def __init__(
+        self,
+        files: Sequence[AppendFile],
+        *,
+        on_trouble: Callable[[Trouble], None],
+        after_trouble: Callable[[Trouble], None],
+        on_sync: Callable[[], None],
+        threaded: bool,
+        now: Callable[[], float] = time.monotonic,
+        sync_every_s: float = SYNC_EVERY_S,
+        queue_max: int = QUEUE_MAX,
+    ) -> None:
+        self._files = list(files)
+        self._on_trouble = on_trouble
+        self._after_trouble = after_trouble
+        self._on_sync = on_sync
+        self._now = now
+        self._sync_every_s = sync_every_s
+        self._last_sync_s = self._last_progress_s = now()
+        self._told: set[TroubleKind] = set()
+        self._telling = threading.Lock()
+        self.failure: Trouble | None = None
+        self.refused_jobs = 0
+        self._queue_max = queue_max
+        self._queue: queue.Queue[_Job | None] = queue.Queue(queue_max + VITAL_MAX)
+        self._open = True
+        self._thread: threading.Thread | None = None
+        if threaded:
+            self._thread = threading.Thread(target=self._run, name="ramprig-disk", daemon=True)
+            self._thread.start()
+
+    def submit(self, work: Callable[[], None], *, vital: bool = False, sync: bool = False) -> None:
+        """Hand over a job; `vital` ones are tried even after a failure, and never raise.
+
+        Raises RecordError where rows can no longer be written: `on_trouble` has been called by then.
+        """
+        job = _Job(work, vital, sync)
+        if not vital:
+            self.check()
+        if self._thread is None:
+            self._carry_out(job)
+            self._look_at_space()
+            if not vital:
+                self.check()
+            return
+        if self._queue.unfinished_tasks == 0:
+            self._last_progress_s = self._now()  # the writer has been idle: its time runs from here
+        try:
+            if not vital and self._queue.qsize() >= self._queue_max:
+                raise queue.Full
+            self._queue.put_nowait(job)
+        except queue.Full:
+            self.refused_jobs += 1
+            self.tell(Trouble(TroubleKind.QUEUE_FULL, f"the disk is too slow: {self._queue_max} writes are waiting"))
+            if not vital:
+                self.check()
+
+    def check(self) -> None:
+        """Raise RecordError where rows can no longer be written."""
+        if self.failure is not None:
+            raise RecordError(self.failure.text)
+
+    def liveness_s(self) -> float:
+        """How long the writer has had work without finishing a piece of it; 0 while it has none."""
+        if self._thread is None or self._queue.unfinished_tasks == 0:
+            return 0.0
+        return max(0.0, self._now() - self._last_progress_s)
+
+    def tell(self, trouble: Trouble) -> None:
+        """Pass a trouble on, the first of its kind only; one that loses rows ends the writing of rows."""
+        with self._telling:
+            if trouble.kind in self._told:
+                return
+            self._told.add(trouble.kind)
+            if trouble.kind.loses_rows and self.failure is None:
+                self.failure = trouble
+                ends_rows = True
+            else:
+                ends_rows = False
+        self._on_trouble(trouble)
+        if ends_rows:
+            self._after_trouble(trouble)
+
+    def close(self, wait_s: float = CLOSE_WAIT_S) -> None:
+        """Carry out what is waiting and sync; a disk that does not come to an end in `wait_s` is a trouble. Never
+        raises."""
+        if not self._open:
+            return
+        self._open = False
+        if self._thread is None:
+            self._sync()
+            return
+        try:
+            self._queue.put(None, timeout=wait_s)
+            self._thread.join(wait_s)
+        except queue.Full:
+            pass
+        if self._thread.is_alive():
+            self.tell(Trouble(TroubleKind.DISK_ERROR, f"the disk did not finish within {wait_s:g} s"))
+
+    def _run(self) -> None:
+        while True:
+            job = self._next_job()
+            if job is not None:
+                self._carry_out(job)
+                self._last_progress_s = self._now()
+                self._queue.task_done()
+            elif not self._open and self._queue.empty():
+                self._sync()
+                return
+            if self._now() - self._last_sync_s >= self._sync_every_s:
+                self._sync()
+                self._on_sync()
+
+    def _next_job(self) -> _Job | None:
+        """The next job, or None when it is time to look whether to sync or to end."""
+        try:
+            job = self._queue.get(timeout=self._sync_every_s)
+        except queue.Empty:
+            return None
+        if job is None:
+            self._queue.task_done()
+        return job
+
+    def _look_at_space(self) -> None:
+        if self._now() - self._last_sync_s >= self._sync_every_s:
+            self._last_sync_s = self._now()
+            self._on_sync()
+
+    def _carry_out(self, job: _Job) -> None:
+        if self.failure is not None and not job.vital:
+            self.refused_jobs += 1
+            return
+        try:
+            job.work()
+            if job.sync and self._thread is not None and self._now() - self._last_sync_s >= SYNC_REST_S:
+                self._sync_files()
+        except OSError as error:
+            self.tell(trouble_of(error))
+        except (
+            Exception
+        ) as error:  # a fault of ours must stop the motor as a full disk does, not end the thread in silence
+            self.tell(Trouble(TroubleKind.FAULT, f"writing the log failed: {type(error).__name__}: {error}"))
+
+    def _sync_files(self) -> None:
+        for file in self._files:
+            file.sync()
+        self._last_sync_s = self._now()
+
+    def _sync(self) -> None:
+        try:
+            self._sync_files()
+        except OSError as error:
+            self._last_sync_s = self._now()
+            self.tell(trouble_of(error))
+
+    def add_file(self, file: AppendFile) -> None:
+        """Sync this file too from now on; to be called from a job."""
+        self._files.append(file)
