@@ -1,0 +1,1 @@
+"""Sequence files: read into typed steps, compiled to a plan before anything moves, run, and judged."""
