@@ -3,11 +3,14 @@
 from __future__ import annotations
 
 import socket
+import threading
 import time
 from collections.abc import Iterator
 from contextlib import ExitStack
 
 import pytest
+import serial
+from serial.rfc2217 import PortManager
 
 from ramprig.errors import LinkLost, PortUnavailable, UsageError
 from ramprig.port.base import Port
@@ -64,3 +67,51 @@ def test_nobody_listening_is_told() -> None:
 def test_a_malformed_address_is_told_with_the_right_form(url: str) -> None:
     with pytest.raises(UsageError, match="://HOST:PORT"):
         open_port(url)
+
+
+class Rfc2217Server:
+    """A serial server on the loopback that echoes what the port at its end is sent: pyserial's own server side."""
+
+    def __init__(self) -> None:
+        self.listener = socket.create_server(("127.0.0.1", 0))
+        self.url = f"rfc2217://127.0.0.1:{self.listener.getsockname()[1]}"
+        self.baud = 0
+        self.thread = threading.Thread(target=self.serve)
+        self.thread.start()
+
+    def serve(self) -> None:
+        device = serial.serial_for_url("loop://", timeout=0)
+        connection, _ = self.listener.accept()
+        manager = PortManager(device, Sender(connection))  # type: ignore[arg-type] # the stubs ask for the client's class
+        with connection, self.listener, device:
+            while data := connection.recv(4096):
+                device.write(b"".join(manager.filter(data)))
+                self.baud = device.baudrate
+                echo = device.read(device.in_waiting)
+                if echo:
+                    connection.sendall(b"".join(manager.escape(echo)))
+
+
+class Sender:
+    """What the server side writes its answers to."""
+
+    def __init__(self, connection: socket.socket) -> None:
+        self.write = connection.sendall
+
+
+@pytest.mark.filterwarnings("ignore:set(Daemon|Name):DeprecationWarning")  # pyserial 3.5 calls both
+def test_a_remote_serial_port_is_set_up_and_echoes_every_byte() -> None:
+    server = Rfc2217Server()
+    every_byte = bytes(range(256))
+    with open_port(server.url, baud=57600) as port:
+        port.write(every_byte)
+        got = b""
+        while len(got) < 256:
+            got += port.read(5.0)
+        assert got == every_byte
+        assert port.read(0.0) == b""
+        assert port.urgent(b"\nstop\n") is True
+        assert port.read(5.0)[:1] == b"\n"
+    server.thread.join(10.0)
+    assert not server.thread.is_alive()
+    assert server.baud == 57600

@@ -67,10 +67,14 @@ class PolledWire:
         self,
         serial: SerialLike,
         *,
+        purges: bool = True,
         now: Callable[[], float] = time.monotonic,
         sleep: Callable[[float], None] = time.sleep,
     ) -> None:
-        """`serial` is open, with its read timeout at `POLL_SLICE_S`."""
+        """`serial` is open, with its read timeout at `POLL_SLICE_S`. `purges` is False where dropping unsent
+        bytes takes a round trip of its own, as with `rfc2217://`: `urgent` then sends without it.
+        """
+        self._purges = purges
         self._serial = serial
         self._now = now
         self._sleep = sleep
@@ -104,7 +108,8 @@ class PolledWire:
 
         def attempt() -> None:
             try:
-                self._serial.reset_output_buffer()
+                if self._purges:
+                    self._serial.reset_output_buffer()
                 if self._serial.write(data) in (None, len(data)):
                     accepted.set()
             except Exception:  # whatever the port raises means the same here: not accepted

@@ -211,7 +211,8 @@ def open_socket(url: str, *, clock: Clock | None = None) -> WirePort:
 def open_rfc2217(url: str, *, baud: int = 115200, dtr: Dtr = "leave", clock: Clock | None = None) -> WirePort:
     """Open `rfc2217://host:port`: a serial port on another machine, set up over TCP, unencrypted.
 
-    A write has no bound of its own there but the network's; `urgent` keeps its bound. Raises as
+    A write has no bound of its own there but the network's; `urgent` keeps its bound, and takes nothing back that is
+    already under way. Raises as
     `open_socket`.
     """
     _host_and_port(url)
@@ -226,4 +227,4 @@ def open_rfc2217(url: str, *, baud: int = 115200, dtr: Dtr = "leave", clock: Clo
         port.open()
     except causes.FOREIGN as error:
         raise causes.unreachable(url, error) from error
-    return WirePort(PolledWire(port), name=url, clock=clock)
+    return WirePort(PolledWire(port, purges=False), name=url, clock=clock)
