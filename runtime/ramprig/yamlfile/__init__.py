@@ -10,6 +10,7 @@ from .compose import DEPTH_MAX, NODES_MAX, compose, load, load_text, shorten
 from .reader import Names, Reader, suggestion
 from .shapes import (
     BandShape,
+    Built,
     CountShape,
     Fields,
     FlagShape,
@@ -19,6 +20,7 @@ from .shapes import (
     QuantityShape,
     RatioShape,
     Record,
+    ScalarOr,
     Schema,
     Shape,
     TableShape,
@@ -33,6 +35,7 @@ __all__ = [
     "FILE_MAX_BYTES",
     "NODES_MAX",
     "BandShape",
+    "Built",
     "CountShape",
     "Entry",
     "Fields",
@@ -50,6 +53,7 @@ __all__ = [
     "Reader",
     "Record",
     "Scalar",
+    "ScalarOr",
     "Schema",
     "Shape",
     "Source",

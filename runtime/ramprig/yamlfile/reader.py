@@ -161,6 +161,11 @@ class Reader:
             raise self.fail(f"found '{shorten(text)}'{self._for()}", wanted)
         return text
 
+    @property
+    def is_scalar(self) -> bool:
+        """Whether the node is a single text."""
+        return isinstance(self.node, tree.Scalar)
+
     def is_word(self, word: str) -> bool:
         """Whether the node is exactly this word, unquoted."""
         return isinstance(self.node, tree.Scalar) and self.node.plain and self.node.text == word

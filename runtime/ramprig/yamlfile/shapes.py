@@ -18,6 +18,7 @@ from .reader import TEXT_MAX, WORDY_NAME, Reader
 from .source import Mark
 
 T = TypeVar("T")
+U = TypeVar("U")
 T_co = TypeVar("T_co", covariant=True)
 Schema = dict[str, object]
 
@@ -206,6 +207,34 @@ class OrWord(Shape[T_co | None]):
 
     def schema(self, *, names: bool = False) -> Schema:  # noqa: D102
         return {"anyOf": [{"enum": [self.word, *_also_truths((self.word,))]}, self.shape.schema(names=names)]}
+
+
+@dataclass(frozen=True, slots=True)
+class ScalarOr(Shape[T_co]):
+    """One shape for a single text, another for a list or mapping."""
+
+    scalar: Shape[T_co]
+    other: Shape[T_co]
+
+    def read(self, reader: Reader) -> T_co:  # noqa: D102
+        return (self.scalar if reader.is_scalar else self.other).read(reader)
+
+    def schema(self, *, names: bool = False) -> Schema:  # noqa: D102
+        return {"anyOf": [self.scalar.schema(names=names), self.other.schema(names=names)]}
+
+
+@dataclass(frozen=True, slots=True)
+class Built(Shape[T_co], Generic[U, T_co]):
+    """A shape whose value is built further, with the mark at hand; `build` may raise `mark.error(...)`."""
+
+    shape: Shape[U]
+    build: Callable[[U, Mark], T_co]
+
+    def read(self, reader: Reader) -> T_co:  # noqa: D102
+        return self.build(self.shape.read(reader), reader.mark)
+
+    def schema(self, *, names: bool = False) -> Schema:  # noqa: D102
+        return self.shape.schema(names=names)
 
 
 @dataclass(frozen=True, slots=True, eq=False)
