@@ -17,19 +17,19 @@ FILE = Path(__file__).resolve().parent.parent / "protocol" / "vectors" / "sample
 
 class Refused(TypedDict):
     name: str
-    clauses: list[str]
+    clause: list[str]
     payload: str
 
 
 class PlainRefused(TypedDict):
     name: str
-    clauses: list[str]
+    clause: list[str]
     body: str
 
 
 class Taken(TypedDict):
     name: str
-    clauses: list[str]
+    clause: list[str]
     payload: str
     first_tick: int
     period: int
@@ -39,7 +39,7 @@ class Taken(TypedDict):
 
 class Logging(TypedDict):
     name: str
-    clauses: list[str]
+    clause: list[str]
     mask: int
     period: int
     first_tick: int
@@ -49,7 +49,7 @@ class Logging(TypedDict):
 
 class Plain(TypedDict):
     name: str
-    clauses: list[str]
+    clause: list[str]
     body: str
     first_tick: int
     period: int
@@ -125,5 +125,5 @@ def test_the_bitwise_reading_of_the_spec_agrees_with_the_vectors() -> None:
 
 def test_every_vector_names_its_clauses() -> None:
     kinds = (VECTORS["loggings"], VECTORS["payloads"], VECTORS["refused"], VECTORS["plain"], VECTORS["plain_refused"])
-    unnamed = [vector["name"] for kind in kinds for vector in kind if not vector["clauses"]]
+    unnamed = [vector["name"] for kind in kinds for vector in kind if not vector["clause"]]
     assert unnamed == []

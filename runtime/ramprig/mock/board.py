@@ -66,6 +66,6 @@ class Board:
         return sum(
             1 << (channel.first_bit + index * channel.step)
             for channel in CHANNELS.values()
-            if _WITHOUT.get(channel.name, self.caps) & self.caps
+            if _WITHOUT.get(channel.name, Cap(0)) in self.caps
             for index in range(fitted[channel.per])
         )
