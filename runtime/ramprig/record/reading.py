@@ -66,7 +66,7 @@ def read_samples(path: Path, columns: Collection[str] | None = None) -> Samples:
     torn_bytes = 0
     try:
         for data, torn_bytes in _whole_lines(path):  # noqa: B007  (the last one is what is wanted)
-            table.take(list(csv.reader(io.StringIO(data.decode("utf-8"), newline=""))))
+            table.take(list(csv.reader(io.StringIO(data.decode("utf-8"), newline=""), strict=True)))
     except (OSError, ValueError, csv.Error) as error:
         raise RecordError(f"{path} cannot be read as a samples file: {error}") from error
     return Samples(
