@@ -193,8 +193,9 @@ _SPEED = Key("speed", QuantityShape(SPEED, least="0 rpm"), "trips above this spe
 def _limits(fields: Fields) -> _Limits:
     direct = (("ceiling_duty", _DUTY), ("slew_up_duty", _SLEW), ("slew_down_duty", _FALL), ("dwell_ticks", _DWELL))
     settings = _settings(fields, (*direct, ("wrong_counts", _WRONG_WAY)))
-    settings |= fields[_CURRENT] | (fields.get(_STANDSTILL) or {}) | (fields.get(_STALL) or {})
-    if fields.said(_STALL) and fields.get(_STALL) is None:
+    standstill, stalled = fields.get(_STANDSTILL), fields.get(_STALL)
+    settings |= fields[_CURRENT] | (standstill or {}) | (stalled or {})
+    if fields.said(_STALL) and stalled is None:
         settings["stall_duty"] = setting("stall_duty", Quantity(DUTY, Fraction(0), "off"), fields.at(_STALL))
     stall, ceiling = settings.get("stall_duty"), settings["ceiling_duty"]
     if stall is not None and stall.value > ceiling.value:
