@@ -1,0 +1,102 @@
+/* The chain of one axis in a tick; see chain.h. */
+#include "chain.h"
+
+static int8_t sign_of(int16_t duty)
+{
+    return (int8_t)((duty > 0) - (duty < 0));
+}
+
+static int16_t size_of(int16_t duty)
+{
+    return duty < 0 ? (int16_t)-duty : duty;
+}
+
+static int16_t held_within(int16_t duty, int16_t ceiling)
+{
+    if (duty > ceiling) {
+        return ceiling;
+    }
+    return duty < -ceiling ? (int16_t)-ceiling : duty;
+}
+
+static uint16_t one_more(uint16_t ticks)
+{
+    return ticks == UINT16_MAX ? ticks : (uint16_t)(ticks + 1u);
+}
+
+/* CHAIN-2: from d towards t, growing by at most `up`, falling by at most `down`, and never past zero in one tick. */
+static int16_t slewed(int16_t duty, int16_t target, int16_t up, int16_t down)
+{
+    int16_t wanted = sign_of(target) == -sign_of(duty) ? 0 : target;
+    int16_t size = size_of(duty);
+    int16_t wanted_size = size_of(wanted);
+    int8_t sign = duty != 0 ? sign_of(duty) : sign_of(wanted);
+    if (wanted_size < size) {
+        size = size - wanted_size > down ? (int16_t)(size - down) : wanted_size;
+    } else if (wanted_size - size > up) {
+        size = (int16_t)(size + up);
+    } else {
+        size = wanted_size;
+    }
+    return (int16_t)(sign * size);
+}
+
+/* S3: may the bridge leave zero for this sign? */
+static bool may_leave_zero(const struct rr_chain *chain, const struct rr_chain_limits *limits, int8_t sign)
+{
+    if (sign == chain->last_sign) {
+        return true;
+    }
+    return chain->zero_for >= limits->dwell_ticks &&
+           (limits->sense == 0 || chain->still_for >= limits->still_ticks);
+}
+
+void rr_chain_watch(struct rr_chain *chain, const struct rr_chain_limits *limits, int32_t counts)
+{
+    int32_t away = (int32_t)((uint32_t)counts - (uint32_t)chain->mark);
+    if (away > limits->still_counts || away < -(int32_t)limits->still_counts) {
+        chain->mark = counts;
+        chain->still_for = 0;
+    } else {
+        chain->still_for = one_more(chain->still_for);
+    }
+}
+
+static void set_duty(struct rr_chain *chain, int16_t duty)
+{
+    chain->duty = duty;
+    if (duty == 0) {
+        chain->zero_for = one_more(chain->zero_for);
+    } else {
+        chain->zero_for = 0;
+        chain->last_sign = sign_of(duty);
+    }
+}
+
+int16_t rr_chain_step(struct rr_chain *chain, const struct rr_chain_limits *limits, int16_t demand,
+                      struct rr_chain_news *news)
+{
+    int16_t target = held_within(demand, limits->ceiling_duty);
+    int16_t duty = slewed(held_within(chain->duty, limits->ceiling_duty), target, limits->slew_up_duty,
+                          limits->slew_down_duty);
+    news->at_ceiling = target != demand;
+    news->locked = chain->duty == 0 && duty != 0 && !may_leave_zero(chain, limits, sign_of(duty));
+    news->let_go = 0;
+    if (news->locked) {
+        duty = 0;
+        chain->held_for = one_more(chain->held_for);
+    } else if (chain->held_for != 0) {
+        news->let_go = duty != 0 ? chain->held_for : 0;
+        chain->held_for = 0;
+    }
+    news->at_slew = duty != target && !news->locked;
+    news->settled = duty == target;
+    set_duty(chain, duty);
+    return duty;
+}
+
+void rr_chain_off(struct rr_chain *chain)
+{
+    chain->held_for = 0;
+    set_duty(chain, 0);
+}

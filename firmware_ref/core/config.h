@@ -1,0 +1,48 @@
+/* Sizes of one build of the core. A port sets what differs before this header's defaults, with -D or by its own header. */
+#ifndef RAMPRIG_CONFIG_H
+#define RAMPRIG_CONFIG_H
+
+#include "words.h"
+
+#ifdef RR_CONFIG_HEADER
+#include RR_CONFIG_HEADER
+#endif
+
+#ifndef RR_AXES
+#define RR_AXES 1 /* motors fitted */
+#endif
+#ifndef RR_SERVOS
+#define RR_SERVOS 1 /* servos fitted */
+#endif
+#ifndef RR_MAX_DUTY
+#define RR_MAX_DUTY RR_DUTY_FULL /* the board's own greatest duty */
+#endif
+#ifndef RR_QUEUE
+#define RR_QUEUE 16 /* depth of the order queue */
+#endif
+#ifndef RR_TRAIL
+#define RR_TRAIL 256 /* records in the trail, a multiple of 4 */
+#endif
+#ifndef RR_KEEP
+#define RR_KEEP 8 /* data lines kept for `again`; 0 = none */
+#endif
+#ifndef RR_TICK_US
+#define RR_TICK_US 1000 /* length of a tick */
+#endif
+#ifndef RR_CAPS
+#define RR_CAPS (RR_CAP_ENCODER | RR_CAP_CURRENT | RR_CAP_SUPPLY | RR_CAP_KEEPS_LIMITS | RR_CAP_BREAK)
+#endif
+
+/* The number of limit values of this build, in the order of the digest. */
+#define RR_DEVICE_LIMITS 5
+#define RR_AXIS_LIMITS   17
+#define RR_SERVO_LIMITS  4
+#define RR_LIMITS        (RR_DEVICE_LIMITS + RR_AXIS_LIMITS * RR_AXES + RR_SERVO_LIMITS * RR_SERVOS)
+
+_Static_assert(RR_AXES >= 1 && RR_AXES <= RR_AXES_MAX, "SPEC: one to RR_AXES_MAX axes");
+_Static_assert(RR_SERVOS >= 0 && RR_SERVOS <= RR_SERVOS_MAX, "SPEC: at most RR_SERVOS_MAX servos");
+_Static_assert(RR_QUEUE >= RR_QUEUE_MIN && RR_QUEUE <= 255, "SPEC WHO-1; the queue is counted in a byte");
+_Static_assert(RR_TRAIL >= RR_TRAIL_MIN && RR_TRAIL % 4 == 0, "SPEC WHO-1, TRAIL-1");
+_Static_assert(RR_MAX_DUTY >= 0 && RR_MAX_DUTY <= RR_DUTY_FULL, "duty in 1/10000");
+
+#endif

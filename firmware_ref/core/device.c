@@ -1,0 +1,353 @@
+/* One tick of the device, in the order of SPEC RUN-2; see device.h. */
+#include "device.h"
+
+#include "store.h"
+
+#include <string.h>
+
+static bool is_live(const struct rr_device *device)
+{
+    return device->state == RR_STATE_ARMED || device->state == RR_STATE_STOPPING;
+}
+
+/* (a) The requests that have arrived, while there is room for a whole answer. */
+static void take_requests(struct rr_device *device)
+{
+    while (device->port->room(device->self) >= RR_DEVICE_LINE_MAX) {
+        int byte = device->port->read(device->self);
+        if (byte < 0) {
+            return;
+        }
+        switch (rr_line_take(&device->line, (uint8_t)byte)) {
+        case RR_LINE_REQUEST:
+            device->lines++;
+            rr_answer_request(device);
+            break;
+        case RR_LINE_BARE_STOP:
+            device->lines++;
+            if (is_live(device)) {
+                rr_stop_begin(device, 0, RR_SOURCE_BARE);
+            } else {
+                rr_notice_off(device);
+            }
+            break;
+        case RR_LINE_BARE_WHO:
+            device->lines++;
+            rr_answer_bare_who(device);
+            break;
+        default:
+            break;
+        }
+    }
+}
+
+/* BAD-4: at most one notice in GARBLED_REST_TICKS; what came inside the rest is told when it is over. */
+static void tell_garbled(struct rr_device *device)
+{
+    if (device->line.garbled == device->garbled_told ||
+        (device->garbled_ever && device->tick - device->garbled_at < RR_GARBLED_REST_TICKS)) {
+        return;
+    }
+    device->garbled_told = device->line.garbled;
+    device->garbled_at = device->tick;
+    device->garbled_ever = true;
+    struct rr_out out;
+    rr_notice_begin(device, &out, RR_NOTICE_GARBLED);
+    rr_out_u32(&out, device->line.garbled);
+    (void)rr_out_end(&out);
+}
+
+/* (b) */
+static void read_inputs(struct rr_device *device)
+{
+    device->port->inputs(device->self, &device->inputs);
+    for (uint8_t i = 0; i < RR_AXES; i++) {
+        device->inputs.current_ma[i] -= rr_limits_get(&device->limits, RR_LIMIT_OFFSET_MA, i);
+        rr_chain_watch(&device->axis[i].chain, &device->axis[i].chain_limits, device->inputs.counts[i]);
+    }
+}
+
+static uint16_t counted(uint16_t ticks, bool beyond)
+{
+    if (!beyond) {
+        return 0;
+    }
+    return ticks == UINT16_MAX ? ticks : (uint16_t)(ticks + 1u);
+}
+
+/* TRIP-4 */
+static void judge_supply(struct rr_device *device, struct rr_finding *finding)
+{
+    if ((RR_CAPS & RR_CAP_SUPPLY) == 0) {
+        return;
+    }
+    int32_t supply = device->inputs.supply_mv;
+    int32_t over = rr_limits_get(&device->limits, RR_LIMIT_OVER_MV, 0);
+    int32_t under = rr_limits_get(&device->limits, RR_LIMIT_UNDER_MV, 0);
+    uint16_t needed = (uint16_t)rr_limits_get(&device->limits, RR_LIMIT_SUPPLY_TICKS, 0);
+    device->over_for = counted(device->over_for, supply > over);
+    device->under_for = counted(device->under_for, supply < under);
+    if (device->over_for >= needed) {
+        rr_finding_note(finding, RR_TRIP_OVERVOLTAGE, supply, over);
+    }
+    if (device->under_for >= needed) {
+        rr_finding_note(finding, RR_TRIP_UNDERVOLTAGE, supply, under);
+    }
+}
+
+/* LEASE-2 */
+static void judge_lease(const struct rr_device *device, struct rr_finding *finding)
+{
+    uint32_t silent = device->tick - device->renewed;
+    if (device->state == RR_STATE_ARMED && silent >= device->lease_ticks) {
+        rr_finding_note(finding, RR_TRIP_LINK_LOST, (int32_t)((uint64_t)silent * RR_TICK_US / 1000u),
+                        (int32_t)device->lease_ms);
+    }
+}
+
+/* (c) The guard: all findings of this tick, of which the lowest number latches (TRIP-1). */
+static void guard(struct rr_device *device)
+{
+    struct rr_finding finding = device->late;
+    device->late.trip = RR_TRIP_NONE;
+    if (device->port->took_break(device->self)) {
+        rr_finding_note(&finding, RR_TRIP_LINE_BREAK, 0, 0);
+        finding.index = 0;
+    }
+    for (uint8_t i = 0; i < RR_AXES; i++) {
+        struct rr_axis *axis = &device->axis[i];
+        struct rr_finding of_axis = {RR_TRIP_NONE, i, 0, 0};
+        rr_guard_step(&axis->guard, &axis->guard_limits, device->tick, axis->chain.duty, device->inputs.counts[i],
+                      device->inputs.current_ma[i], &of_axis);
+        if (of_axis.trip != RR_TRIP_NONE && (finding.trip == RR_TRIP_NONE || of_axis.trip < finding.trip)) {
+            finding = of_axis;
+        }
+    }
+    struct rr_finding of_board = {RR_TRIP_NONE, 0, 0, 0};
+    judge_supply(device, &of_board);
+    judge_lease(device, &of_board);
+    if (of_board.trip != RR_TRIP_NONE && (finding.trip == RR_TRIP_NONE || of_board.trip < finding.trip)) {
+        finding = of_board;
+    }
+    if (finding.trip != RR_TRIP_NONE) {
+        rr_stop_trip(device, &finding);
+    }
+}
+
+static void notice_done(struct rr_device *device, uint8_t tag)
+{
+    struct rr_out out;
+    rr_notice_begin(device, &out, RR_NOTICE_DONE);
+    rr_out_char(&out, ' ');
+    rr_out_hex2(&out, tag);
+    (void)rr_out_end(&out);
+}
+
+static void begin_swing(struct rr_device *device, const struct rr_order *order)
+{
+#if RR_SERVOS > 0
+    struct rr_servo *servo = &device->servo[order->index];
+    if (order->value == 0) {
+        servo->pulse_ns = 0;
+        rr_glide_end(&servo->swing, 0);
+        notice_done(device, order->tag);
+        return;
+    }
+    if (servo->pulse_ns == 0) {
+        rr_glide_end(&servo->swing, rr_servo_first_ns(&servo->limits));
+    }
+    rr_glide_begin(&servo->swing, order);
+#else
+    (void)device;
+    (void)order;
+#endif
+}
+
+/* (d) Glides move on, then the orders of this tick begin at their k = 0. */
+static void move_demands(struct rr_device *device)
+{
+    for (uint8_t i = 0; i < RR_AXES; i++) {
+        rr_glide_step(&device->axis[i].demand);
+    }
+#if RR_SERVOS > 0
+    for (uint8_t i = 0; i < RR_SERVOS; i++) {
+        rr_glide_step(&device->servo[i].swing);
+    }
+#endif
+    struct rr_order order;
+    while (rr_orders_take_due(&device->orders, device->tick, &order)) {
+        switch (order.kind) {
+        case RR_ORDER_RAMP:
+            rr_glide_begin(&device->axis[order.index].demand, &order);
+            break;
+        case RR_ORDER_SWING:
+            begin_swing(device, &order);
+            break;
+        default:
+            device->axis[order.index].brake = order.value == RR_REST_BRAKE;
+            notice_done(device, order.tag);
+            break;
+        }
+    }
+}
+
+static void notice_dwell(struct rr_device *device, uint8_t axis, uint16_t held_ticks)
+{
+    struct rr_out out;
+    rr_notice_begin(device, &out, RR_NOTICE_DWELL);
+    rr_out_u32(&out, axis);
+    rr_out_u32(&out, held_ticks);
+    (void)rr_out_end(&out);
+}
+
+/* (e) for one axis: chain and bridge. */
+static void drive_axis(struct rr_device *device, uint8_t index)
+{
+    struct rr_axis *axis = &device->axis[index];
+    struct rr_chain_news news;
+    int16_t duty = rr_chain_step(&axis->chain, &axis->chain_limits, (int16_t)axis->demand.value, &news);
+    device->port->bridge(device->self, index, duty, axis->brake);
+    device->at_ceiling = device->at_ceiling || news.at_ceiling;
+    device->at_slew = device->at_slew || news.at_slew;
+    device->locked = device->locked || news.locked;
+    if (news.let_go != 0) {
+        notice_dwell(device, index, news.let_go);
+    }
+    if (axis->demand.pending && axis->demand.left == 0 && news.settled) {
+        axis->demand.pending = false;
+        notice_done(device, axis->demand.tag);
+    }
+}
+
+#if RR_SERVOS > 0
+/* (e) for one servo. */
+static void drive_servo(struct rr_device *device, uint8_t index)
+{
+    struct rr_servo *servo = &device->servo[index];
+    bool first = servo->pulse_ns == 0 && servo->swing.value != 0;
+    if (first) {
+        servo->pulse_ns = rr_servo_first_ns(&servo->limits);
+    } else if (servo->pulse_ns != 0) {
+        servo->pulse_ns = rr_servo_step_ns(&servo->limits, servo->pulse_ns, servo->swing.value);
+    }
+    device->port->pulse(device->self, index, (uint32_t)servo->pulse_ns);
+    device->at_slew = device->at_slew || servo->pulse_ns != servo->swing.value;
+    if (servo->swing.pending && servo->swing.left == 0 && servo->pulse_ns == servo->swing.value) {
+        servo->swing.pending = false;
+        notice_done(device, servo->swing.tag);
+    }
+}
+#endif
+
+/* (e) */
+static void drive(struct rr_device *device)
+{
+    device->at_ceiling = false;
+    device->at_slew = false;
+    device->locked = false;
+    if (!is_live(device)) {
+        for (uint8_t i = 0; i < RR_AXES; i++) {
+            rr_chain_off(&device->axis[i].chain);
+        }
+        return;
+    }
+    bool turning = false;
+    bool late = device->state == RR_STATE_STOPPING &&
+                device->tick - device->stop_begun >= (uint32_t)rr_limits_get(&device->limits, RR_LIMIT_STOP_TICKS, 0);
+    for (uint8_t i = 0; i < RR_AXES; i++) {
+        drive_axis(device, i);
+        turning = turning || device->axis[i].chain.duty != 0;
+    }
+#if RR_SERVOS > 0
+    for (uint8_t i = 0; i < RR_SERVOS; i++) {
+        drive_servo(device, i);
+    }
+#endif
+    if (device->state == RR_STATE_STOPPING && (late || !turning)) {
+        rr_stop_off(device);
+    }
+}
+
+/* (g) */
+static void record(struct rr_device *device)
+{
+    if (rr_trail_wants(&device->trail, is_live(device))) {
+        struct rr_record *record = rr_trail_add(&device->trail, device->tick);
+        for (uint8_t i = 0; i < RR_AXES; i++) {
+            record->duty[i] = device->axis[i].chain.duty;
+            record->counts[i] = device->inputs.counts[i];
+            record->current_ma[i] = device->inputs.current_ma[i];
+        }
+        record->supply_mv = device->inputs.supply_mv;
+        record->bits = rr_sampling_state_bits(device);
+    }
+    rr_sampling_tick(device);
+}
+
+void rr_device_tick(struct rr_device *device)
+{
+    device->tick++;
+    take_requests(device);
+    tell_garbled(device);
+    read_inputs(device);
+    guard(device);
+    move_demands(device);
+    drive(device);
+    record(device);
+}
+
+void rr_device_take_limits(struct rr_device *device)
+{
+    for (uint8_t i = 0; i < RR_AXES; i++) {
+        rr_limits_chain(&device->limits, i, &device->axis[i].chain_limits);
+        rr_limits_guard(&device->limits, i, &device->axis[i].guard_limits);
+    }
+#if RR_SERVOS > 0
+    for (uint8_t i = 0; i < RR_SERVOS; i++) {
+        rr_limits_servo(&device->limits, i, &device->servo[i].limits);
+    }
+#endif
+}
+
+static void load_limits(struct rr_device *device)
+{
+    rr_limits_defaults(&device->limits);
+    for (uint8_t place = 0; place < RR_LIMITS; place++) {
+        (void)rr_store_read(device->port, device->self, (uint8_t)(1u + place), &device->limits.value[place]);
+    }
+    rr_device_take_limits(device);
+}
+
+static uint32_t next_boot(struct rr_device *device)
+{
+    int32_t boot = 0;
+    (void)rr_store_read(device->port, device->self, RR_SLOT_BOOT, &boot);
+    uint32_t next = (uint32_t)boot + 1u;
+    (void)rr_store_write(device->port, device->self, RR_SLOT_BOOT, (int32_t)next);
+    return next;
+}
+
+void rr_device_start(struct rr_device *device, const struct rr_port *port, void *self, uint8_t cause, int32_t fault)
+{
+    memset(device, 0, sizeof *device);
+    device->port = port;
+    device->self = self;
+    port->off(self);
+    device->boot = next_boot(device);
+    load_limits(device);
+    if (fault != 0) {
+        device->last_trip = (struct rr_finding){RR_TRIP_SELF_TEST, 0, fault, 0};
+    } else if (cause == RR_CAUSE_BROWNOUT || cause == RR_CAUSE_WATCHDOG) {
+        device->last_trip = (struct rr_finding){RR_TRIP_RESTARTED, 0, cause, 0};
+    }
+    device->latched = device->last_trip.trip;
+    device->state = device->latched != RR_TRIP_NONE ? RR_STATE_TRIPPED : RR_STATE_OFF;
+#define CAUSE(NAME, word, number) {word},
+    static const char causes[][9] = {RR_CAUSE_LIST(CAUSE)};
+#undef CAUSE
+    struct rr_out out;
+    rr_notice_begin(device, &out, RR_NOTICE_BOOT);
+    rr_out_u32(&out, device->boot);
+    rr_out_word(&out, causes[cause]);
+    (void)rr_out_end(&out);
+}

@@ -1,0 +1,152 @@
+/* The guard of one axis; see guard.h. */
+#include "guard.h"
+
+void rr_finding_note(struct rr_finding *finding, uint8_t trip, int32_t value, int32_t bound)
+{
+    if (finding->trip == RR_TRIP_NONE || trip < finding->trip) {
+        finding->trip = trip;
+        finding->value = value;
+        finding->bound = bound;
+    }
+}
+
+static int32_t difference(int32_t a, int32_t b)
+{
+    return (int32_t)((uint32_t)a - (uint32_t)b);
+}
+
+static uint32_t size_of(int32_t value)
+{
+    return value < 0 ? 0ul - (uint32_t)value : (uint32_t)value;
+}
+
+/* The whole root, by trying bits from the top: no division, sixteen steps. */
+static uint16_t root_of(uint64_t square)
+{
+    uint16_t root = 0;
+    for (uint16_t bit = 0x8000u; bit != 0; bit >>= 1) {
+        uint32_t tried = (uint32_t)root | bit;
+        if ((uint64_t)tried * tried <= square) {
+            root = (uint16_t)tried;
+        }
+    }
+    return root;
+}
+
+uint32_t rr_guard_gain(uint32_t thermal_s)
+{
+    return (uint32_t)(((uint64_t)RR_THERMAL_TICKS * RR_TICK_US << 24) / ((uint64_t)thermal_s * 1000000ul));
+}
+
+/* TRIP-3 */
+static void judge_current(struct rr_guard *guard, const struct rr_guard_limits *limits, int32_t current_ma,
+                          struct rr_finding *finding)
+{
+    if (size_of(current_ma) <= (uint32_t)limits->trip_ma) {
+        guard->over_for = 0;
+        return;
+    }
+    if (guard->over_for < limits->trip_ticks) {
+        guard->over_for++;
+    }
+    if (guard->over_for >= limits->trip_ticks) {
+        rr_finding_note(finding, RR_TRIP_OVERCURRENT, current_ma, limits->trip_ma);
+    }
+}
+
+/* TRIP-5 and TRIP-6: what the counts do while the duty pushes. */
+static void judge_motion(struct rr_guard *guard, const struct rr_guard_limits *limits, int16_t duty, int32_t counts,
+                         struct rr_finding *finding)
+{
+    bool pushing = limits->stall_duty > 0 && size_of(duty) >= (uint32_t)limits->stall_duty;
+    int8_t sign = (int8_t)((duty > 0) - (duty < 0));
+    if (!pushing) {
+        guard->pushing = false;
+        guard->stall_for = 0;
+        return;
+    }
+    if (!guard->pushing) {
+        guard->stall_mark = counts;
+    }
+    if (!guard->pushing || sign != guard->push_sign) {
+        guard->furthest = counts;
+    }
+    guard->pushing = true;
+    guard->push_sign = sign;
+    if (limits->sense == 0) {
+        return;
+    }
+    if (size_of(difference(counts, guard->stall_mark)) >= (uint32_t)limits->stall_counts) {
+        guard->stall_mark = counts;
+        guard->stall_for = 0;
+    } else if (guard->stall_for < UINT16_MAX) {
+        guard->stall_for++;
+    }
+    int32_t along = difference(counts, guard->furthest);
+    if (sign * limits->sense < 0) {
+        along = (int32_t)(0ul - (uint32_t)along);
+    }
+    if (along > 0) {
+        guard->furthest = counts;
+    } else if (size_of(along) >= (uint32_t)limits->wrong_counts) {
+        rr_finding_note(finding, RR_TRIP_WRONG_WAY, (int32_t)(0ul - (uint32_t)along), limits->wrong_counts);
+    }
+    if (guard->stall_for >= limits->stall_ticks) {
+        rr_finding_note(finding, RR_TRIP_STALL, duty, limits->stall_ticks);
+    }
+}
+
+/* TRIP-7 */
+static void judge_speed(struct rr_guard *guard, const struct rr_guard_limits *limits, uint32_t tick, int32_t counts,
+                        struct rr_finding *finding)
+{
+    if (tick % RR_SPEED_TICKS != 0) {
+        return;
+    }
+    uint32_t moved = size_of(difference(counts, guard->window_mark));
+    guard->window_mark = counts;
+    if (limits->speed_counts > 0 && moved > (uint32_t)limits->speed_counts) {
+        rr_finding_note(finding, RR_TRIP_OVERSPEED, (int32_t)moved, limits->speed_counts);
+    }
+}
+
+/* TRIP-8 */
+static void judge_heat(struct rr_guard *guard, const struct rr_guard_limits *limits, uint32_t tick, int32_t current_ma,
+                       struct rr_finding *finding)
+{
+    uint32_t size = size_of(current_ma);
+    uint32_t u = size > 65535ul ? 65535ul : size;
+    guard->square_sum += (uint32_t)(u * u);
+    if (tick % RR_THERMAL_TICKS != 0) {
+        return;
+    }
+    int64_t mean = (int64_t)(guard->square_sum / RR_THERMAL_TICKS);
+    guard->square_sum = 0;
+    guard->heat = (uint64_t)((int64_t)guard->heat + (mean - (int64_t)(guard->heat >> 24)) * (int64_t)limits->gain);
+    uint64_t level = guard->heat >> 24;
+    if (limits->rated_ma > 0 && level >= (uint32_t)limits->rated_ma * (uint32_t)limits->rated_ma) {
+        rr_finding_note(finding, RR_TRIP_OVERLOAD, root_of(level), limits->rated_ma);
+    }
+}
+
+void rr_guard_step(struct rr_guard *guard, const struct rr_guard_limits *limits, uint32_t tick, int16_t duty,
+                   int32_t counts, int32_t current_ma, struct rr_finding *finding)
+{
+    judge_current(guard, limits, current_ma, finding);
+    judge_motion(guard, limits, duty, counts, finding);
+    judge_speed(guard, limits, tick, counts, finding);
+    judge_heat(guard, limits, tick, current_ma, finding);
+}
+
+bool rr_guard_persists(const struct rr_guard *guard, const struct rr_guard_limits *limits, uint8_t trip,
+                       int32_t current_ma)
+{
+    if (trip == RR_TRIP_OVERCURRENT) {
+        return size_of(current_ma) > (uint32_t)limits->trip_ma;
+    }
+    if (trip == RR_TRIP_OVERLOAD) {
+        uint32_t full = (uint32_t)limits->rated_ma * (uint32_t)limits->rated_ma;
+        return (guard->heat >> 24) > full - (full >> 3);
+    }
+    return false;
+}

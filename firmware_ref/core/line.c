@@ -1,0 +1,101 @@
+/* Bytes from the host to whole lines; see line.h. */
+#include "line.h"
+
+#include "check.h"
+
+#include <string.h>
+
+#define CHECK_LENGTH 5u /* a space and four hex digits */
+
+static int8_t hex_value(char c)
+{
+    if (c >= '0' && c <= '9') {
+        return (int8_t)(c - '0');
+    }
+    return c >= 'a' && c <= 'f' ? (int8_t)(c - 'a' + 10) : (int8_t)-1;
+}
+
+static bool all_printable(const char *text, uint8_t length)
+{
+    for (uint8_t i = 0; i < length; i++) {
+        if (text[i] < 0x20 || text[i] > 0x7E) {
+            return false;
+        }
+    }
+    return true;
+}
+
+/* Is the text a body, a space, and the body's check? */
+static bool check_is_right(const char *text, uint8_t body)
+{
+    if (text[body] != ' ') {
+        return false;
+    }
+    uint16_t crc = RR_CRC16_START;
+    for (uint8_t i = 0; i < body; i++) {
+        crc = rr_crc16(crc, (uint8_t)text[i]);
+    }
+    for (uint8_t i = 0; i < 4; i++) {
+        if (hex_value(text[body + 1u + i]) != (int8_t)((crc >> (12 - 4 * i)) & 0xF)) {
+            return false;
+        }
+    }
+    return true;
+}
+
+/* A whole line, its LF and a CR before it gone: what is it? */
+static enum rr_line_kind judged(struct rr_line *line, uint8_t length)
+{
+    char *text = line->text;
+    if (!all_printable(text, length)) {
+        return RR_LINE_GARBLED;
+    }
+    text[length] = '\0';
+    if (strcmp(text, "stop") == 0) {
+        return RR_LINE_BARE_STOP;
+    }
+    if (strcmp(text, "who") == 0) {
+        return RR_LINE_BARE_WHO;
+    }
+    if (length < 2u + CHECK_LENGTH) {
+        return RR_LINE_GARBLED;
+    }
+    uint8_t body = (uint8_t)(length - CHECK_LENGTH);
+    int8_t high = hex_value(text[0]);
+    int8_t low = hex_value(text[1]);
+    if (!check_is_right(text, body) || high < 0 || low < 0 || (body > 2 && text[2] != ' ')) {
+        return RR_LINE_GARBLED;
+    }
+    text[body] = '\0';
+    line->body = body;
+    line->tag = (uint8_t)(high << 4 | low);
+    return RR_LINE_REQUEST;
+}
+
+enum rr_line_kind rr_line_take(struct rr_line *line, uint8_t byte)
+{
+    if (byte != '\n') {
+        if (line->length < RR_HOST_LINE_MAX) {
+            line->text[line->length++] = (char)byte;
+        }
+        return RR_LINE_NONE;
+    }
+    uint8_t length = line->length;
+    line->length = 0;
+    if (length >= RR_HOST_LINE_MAX) { /* with the LF it has more bytes than a line may have */
+        line->overlong++;
+        line->garbled++;
+        return RR_LINE_GARBLED;
+    }
+    if (length > 0 && line->text[length - 1] == '\r') {
+        length--;
+    }
+    if (length == 0) {
+        return RR_LINE_NONE;
+    }
+    enum rr_line_kind kind = judged(line, length);
+    if (kind == RR_LINE_GARBLED) {
+        line->garbled++;
+    }
+    return kind;
+}

@@ -1,0 +1,91 @@
+/* Stops and trips: how the outputs go off and what latches (SPEC STOP-1 to STOP-6, TRIP-1, TRIP-2). */
+#include "device.h"
+
+#define CATEGORY(NAME, word, number, category) category,
+static const uint8_t categories[RR_TRIP_COUNT] = {RR_TRIP_LIST(CATEGORY)};
+#undef CATEGORY
+
+static void end_orders(struct rr_device *device)
+{
+    device->orders.count = 0;
+    for (uint8_t i = 0; i < RR_AXES; i++) {
+        rr_glide_end(&device->axis[i].demand, 0);
+    }
+#if RR_SERVOS > 0
+    for (uint8_t i = 0; i < RR_SERVOS; i++) {
+        rr_glide_end(&device->servo[i].swing, device->servo[i].pulse_ns);
+    }
+#endif
+}
+
+void rr_stop_off(struct rr_device *device)
+{
+    device->port->off(device->self);
+    end_orders(device);
+    for (uint8_t i = 0; i < RR_AXES; i++) {
+        device->axis[i].chain.duty = 0;
+        device->axis[i].chain.held_for = 0;
+        device->axis[i].brake = false;
+    }
+#if RR_SERVOS > 0
+    for (uint8_t i = 0; i < RR_SERVOS; i++) {
+        device->servo[i].pulse_ns = 0;
+    }
+#endif
+    device->state = device->latched != RR_TRIP_NONE ? RR_STATE_TRIPPED : RR_STATE_OFF;
+    rr_notice_off(device);
+}
+
+static void notice_stop(struct rr_device *device, uint8_t category, uint8_t source)
+{
+#define SOURCE(NAME, word, number) {word},
+    static const char sources[][7] = {RR_SOURCE_LIST(SOURCE)};
+#undef SOURCE
+    struct rr_out out;
+    rr_notice_begin(device, &out, RR_NOTICE_STOP);
+    rr_out_u32(&out, category);
+    rr_out_word(&out, sources[source]);
+    (void)rr_out_end(&out);
+}
+
+void rr_stop_begin(struct rr_device *device, uint8_t category, uint8_t source)
+{
+    notice_stop(device, category, source);
+    if (category == 0) {
+        rr_stop_off(device);
+        return;
+    }
+    end_orders(device);
+    device->state = RR_STATE_STOPPING;
+    device->stop_begun = device->tick;
+}
+
+static void notice_trip(struct rr_device *device, const struct rr_finding *finding)
+{
+    struct rr_out out;
+    rr_notice_begin(device, &out, RR_NOTICE_TRIP);
+    rr_out_word(&out, rr_trip_word(finding->trip));
+    rr_out_u32(&out, finding->index);
+    rr_out_i32(&out, finding->value);
+    rr_out_i32(&out, finding->bound);
+    (void)rr_out_end(&out);
+}
+
+void rr_stop_trip(struct rr_device *device, const struct rr_finding *finding)
+{
+    bool live = device->state == RR_STATE_ARMED || device->state == RR_STATE_STOPPING;
+    uint8_t category = categories[finding->trip];
+    if (!live || (device->state == RR_STATE_STOPPING && category != 0)) {
+        return;
+    }
+    device->latched = finding->trip;
+    device->last_trip = *finding;
+    device->last_trip_tick = device->tick;
+    rr_trail_trip(&device->trail);
+    notice_trip(device, finding);
+    if (category == 0) {
+        rr_stop_off(device);
+    } else {
+        rr_stop_begin(device, 1, RR_SOURCE_TRIP);
+    }
+}

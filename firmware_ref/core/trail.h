@@ -1,0 +1,44 @@
+/* The fast record from around the last trip: a ring of one record a tick (SPEC TRAIL-1, TRAIL-2). */
+#ifndef RAMPRIG_TRAIL_H
+#define RAMPRIG_TRAIL_H
+
+#include "config.h"
+
+#include <stdbool.h>
+#include <stdint.h>
+
+struct rr_record {
+    int32_t counts[RR_AXES];
+    int32_t current_ma[RR_AXES];
+    int32_t supply_mv;
+    int16_t duty[RR_AXES];
+    uint16_t bits; /* state bits */
+};
+
+enum rr_trail_phase { RR_TRAIL_RUNNING, RR_TRAIL_ENDING, RR_TRAIL_FROZEN };
+
+struct rr_trail {
+    struct rr_record record[RR_TRAIL];
+    uint16_t next;      /* where the next record goes */
+    uint16_t held;      /* records in the ring */
+    uint16_t to_go;     /* records still to take before it freezes */
+    uint32_t last_tick; /* of the newest record */
+    uint8_t phase;
+};
+
+/* Forgets all and runs: at `arm`. */
+void rr_trail_begin(struct rr_trail *trail);
+
+/* A trip has latched: a quarter of the ring more, then it freezes. */
+void rr_trail_trip(struct rr_trail *trail);
+
+/* True where a record of this tick is wanted. */
+bool rr_trail_wants(const struct rr_trail *trail, bool live);
+
+/* The place for this tick's record, to be filled in by the caller. */
+struct rr_record *rr_trail_add(struct rr_trail *trail, uint32_t tick);
+
+/* Record `index` of a frozen trail, 0 = oldest; its tick by `tick`. */
+const struct rr_record *rr_trail_get(const struct rr_trail *trail, uint16_t index, uint32_t *tick);
+
+#endif
