@@ -8,6 +8,7 @@ from typing import TypedDict
 
 import pytest
 
+from ramprig_link.words import NOTICES, WORDS, Cause, Reason, Source, State, Trip
 from scripted_device import TICKS, Device, InputsScript, ScriptedDevice, matches
 
 FILE = Path(__file__).resolve().parent.parent / "protocol" / "vectors" / "exchanges.json"
@@ -99,3 +100,21 @@ def test_vectors_are_well_formed() -> None:
         for step in vector["steps"]:
             assert step.get("event", "break") == "break", vector["name"]
             assert len(set(step) - {"tick"}) == 1, vector["name"]
+
+
+def told(first_field: str, at: int) -> set[str]:
+    """The fields at a place of all expected lines of a kind."""
+    lines = (line for vector in VECTORS["vectors"] for step in vector["steps"] for line in step.get("expect", []))
+    split = [line.split(" ") for line in lines]
+    return {fields[at] for fields in split if fields[0].startswith("N") == (first_field == "N") and len(fields) > at}
+
+
+def test_vectors_show_every_word_reason_notice_trip_and_state() -> None:
+    sent = [step["send"] for vector in VECTORS["vectors"] for step in vector["steps"] if "send" in step]
+    assert set(WORDS) <= {word for line in sent for word in line.split(" ")[1:2]}
+    assert {str(reason) for reason in Reason} <= told("answer", 3)
+    assert told("N", 1) == set(NOTICES)
+    assert {trip.word for trip in Trip} - {"none"} <= told("N", 3)
+    assert set(State.all_words()) <= told("N", 3) | told("answer", 3)
+    assert set(Source.all_words()) <= told("N", 4)
+    assert set(Cause.all_words()) == told("N", 4) & set(Cause.all_words())
