@@ -75,9 +75,7 @@ def test_a_killed_run_leaves_every_row_that_it_had_written(tmp_path: Path, kill_
     samples = read_samples(folder / "samples.csv")
     assert len(samples) >= max(written, synced, kill_after_rows)
     assert samples.ticks.tolist() == list(range(5000, 5000 + 2 * len(samples), 2))
-    assert (
-        samples.torn_bytes == 0
-    )  # one `write` call a batch: the system takes it whole or not at all, for files this small
+    assert samples.torn_bytes < 200  # at most one row: the system may break a write off between two pages
     found = audit(folder)
     assert not found.finished
     assert "did not end in order" in found.statements[0]

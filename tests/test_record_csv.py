@@ -10,6 +10,7 @@ from decimal import Decimal
 
 import numpy as np
 import pytest
+from dev import bench_csv
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
@@ -256,3 +257,14 @@ def test_columns_that_cannot_be_are_refused(
 def test_temperature_is_a_column_where_the_bench_has_it() -> None:
     columns = columns_of([], [], tick_us=TICK_US, temperature=True)
     assert columns.names == ("tick", "time_s", "supply_v", "temperature_degc", "state")
+
+
+def test_the_bench_against_the_csv_module_compares_the_same_rows() -> None:
+    blocks = bench_csv.bench_blocks(500)
+    rows = [tuple(map(bench_csv.number, row)) for row in read_back(bench_csv.bench_printer().rows(blocks))]
+    by_csv_module = io.StringIO(newline="")
+    csv.writer(by_csv_module).writerows(rows)
+    again = [tuple(map(bench_csv.number, row)) for row in read_back(by_csv_module.getvalue().encode("utf-8"))]
+    assert again == rows
+    assert len(rows) == 500
+    assert bench_csv.csv_ratio(rows=500, repeats=1) > 0

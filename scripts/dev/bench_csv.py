@@ -72,12 +72,13 @@ def bench_blocks(rows: int) -> list[Block]:
     ]
 
 
-def _printer() -> RowPrinter:
+def bench_printer() -> RowPrinter:
+    """What prints our rows."""
     return RowPrinter(bench_columns(), tick_us=TICK_US, tick_zero=60_000)
 
 
 def _ours(blocks: Sequence[Block], batch: int) -> None:
-    printer = _printer()
+    printer = bench_printer()
     with tempfile.TemporaryFile() as file:
         for start in range(0, len(blocks), batch):
             file.write(printer.rows(blocks[start : start + batch]))
@@ -88,15 +89,14 @@ def _csv_module(rows: Sequence[Sequence[object]]) -> None:
         csv.writer(file).writerows(rows)
 
 
-def _number(text: str) -> object:
-    try:
-        return int(text)
-    except ValueError:
-        pass
-    try:
-        return float(text)
-    except ValueError:
-        return text
+def number(text: str) -> object:
+    """The field as the Python object that the csv module would be given."""
+    for kind in (int, float):
+        try:
+            return kind(text)
+        except ValueError:
+            continue
+    return text
 
 
 def _fastest_s(work: Callable[[], None], repeats: int) -> float:
@@ -111,8 +111,8 @@ def _fastest_s(work: Callable[[], None], repeats: int) -> float:
 def csv_rates(*, rows: int = 50_000, repeats: int = 5) -> CsvRates:
     """Measure all three in this process, each as the fastest of `repeats`."""
     blocks = bench_blocks(rows)
-    texts = csv.reader(io.StringIO(_printer().rows(blocks).decode("utf-8"), newline=""))
-    ready = [tuple(map(_number, row)) for row in texts]
+    texts = csv.reader(io.StringIO(bench_printer().rows(blocks).decode("utf-8"), newline=""))
+    ready = [tuple(map(number, row)) for row in texts]
     batch = max(1, BATCH_ROWS // BLOCK_SAMPLES)
     return CsvRates(
         csv_module=rows / _fastest_s(lambda: _csv_module(ready), repeats),

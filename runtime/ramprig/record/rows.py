@@ -67,6 +67,7 @@ class RowPrinter:
         self._label = {
             field.name: lru_cache(LABELS_MAX)(field.label) for field in columns.fields if isinstance(field, LabelField)
         }
+        digits.prepare()
         self._begin_anew()
 
     def _begin_anew(self) -> None:
