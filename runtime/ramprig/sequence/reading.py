@@ -36,7 +36,7 @@ from .steps import Include, Step
 
 INCLUDES_DEEP = 8
 """Deepest chain of files that include one another."""
-INCLUDES_MAX = 500
+INCLUDES_MAX = 64
 """Most files read for one sequence, each inclusion counted."""
 
 LOG_PERIOD = Key(

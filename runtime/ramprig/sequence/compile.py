@@ -1,0 +1,275 @@
+"""Steps and a bench become a plan, or an error that points to the step that cannot be carried out.
+
+The compiler walks the steps once with a picture of how things stand (`Scene`); a repeated step is walked at most twice,
+since from its second pass on it begins as it ends.
+"""
+
+from __future__ import annotations
+
+from collections import deque
+from fractions import Fraction
+
+from ramprig.bench import Bench
+from ramprig.quantity import format_duration, format_duty
+
+from . import checking
+from .motion import Mover
+from .plan import Await, Branches, Judge, Loop, Moment, Part, Plan, Run, Series, Totals
+from .reading import Sequence
+from .rig import Rig
+from .scene import MotorScene, Scene, ServoScene
+from .steps import (
+    Ease,
+    Expect,
+    Hold,
+    Include,
+    Measure,
+    Move,
+    Note,
+    Ramp,
+    Release,
+    Repeat,
+    Reverse,
+    Step,
+    Sweep,
+    Together,
+    Wait,
+    What,
+)
+
+WAIT_REACTION_S = Fraction(1, 2)
+"""After a wait has come true the plan goes on within this time: samples come in blocks, orders need their lead."""
+BURST_ORDERS = 12
+"""So many orders in a row must not come faster than the link carries them."""
+PERIOD_TICKS_MAX = 65_535
+WINDOW_MARGIN_S = 1
+"""The run keeps samples for the longest window and this much longer."""
+SETTLING_KEPT_S = 120
+"""How long after a ramp a settling time can still be judged."""
+
+
+def compile_plan(sequence: Sequence, bench: Bench, *, tick_us: int = 1000) -> Plan:
+    """The plan of a sequence on a bench whose board has this tick. Raises `FileError` at the step that cannot be."""
+    rig = Rig.of(bench, tick_us=tick_us)
+    compiler = _Compiler(rig)
+    scene = Scene(
+        motors={name: MotorScene() for name in rig.axes}, servos={name: ServoScene() for name in rig.channels}
+    )
+    body = compiler.series(sequence.steps, scene, sequence.name)
+    closing, remarks = compiler.closing(sequence, scene)
+    root = Series(
+        mark=sequence.mark, text=sequence.name, totals=body.totals.then(closing.totals), parts=(body, closing)
+    )
+    unused = [f"the value '{name}' is used by no step" for name in sequence.unused]
+    return Plan(
+        name=sequence.name,
+        about=sequence.about,
+        tick_us=tick_us,
+        root=root,
+        period_ticks=_period(rig, sequence),
+        mask=rig.mask,
+        longest_window=compiler.window + int(rig.ticks(Fraction(WINDOW_MARGIN_S))),
+        remarks=(*remarks, *unused),
+    )
+
+
+def _period(rig: Rig, sequence: Sequence) -> int:
+    """The log's period in ticks, the bench's where the sequence says none."""
+    if sequence.log_period_s is None or sequence.log_mark is None:
+        return max(1, min(PERIOD_TICKS_MAX, round(rig.ticks(Fraction(rig.bench.log.period_s)))))
+    ticks = rig.ticks(sequence.log_period_s)
+    if ticks.denominator != 1:
+        found = f"a period of {format_duration(sequence.log_period_s)} is no whole number of ticks"
+        raise sequence.log_mark.error(found, f"a multiple of {format_duration(rig.tick_s)} is wanted")
+    return int(ticks)
+
+
+class _Compiler:
+    """Compiles the steps of one sequence; `window` grows to the longest look back, in ticks."""
+
+    def __init__(self, rig: Rig) -> None:
+        self.rig = rig
+        self.move = Mover(rig)
+        self.window = 0
+        self.reaction = int(rig.ticks(WAIT_REACTION_S))
+        self._repeats: dict[tuple[int, tuple[object, ...]], tuple[Part, Scene]] = {}
+
+    def series(self, steps: tuple[Step, ...], scene: Scene, text: str) -> Series:
+        """The steps one after the other."""
+        parts: list[Part] = []
+        totals = Totals()
+        recent: deque[int] = deque(maxlen=BURST_ORDERS)
+        for step in steps:
+            part = self.part(step, scene)
+            if isinstance(part, Run) and part.motions:
+                if len(recent) == BURST_ORDERS:
+                    checking.check_rate(self.rig, step, "in", BURST_ORDERS, scene.elapsed - recent[0])
+                recent.append(scene.elapsed)
+            parts.append(part)
+            totals = totals.then(part.totals)
+            scene.elapsed += part.totals.least
+        mark = steps[0].mark
+        return Series(mark=mark, text=text, totals=totals, parts=tuple(parts))
+
+    def part(self, step: Step, scene: Scene) -> Part:
+        """One step; leaves the scene as it is at the step's end, `elapsed` excepted."""
+        match step:
+            case Ramp():
+                return self.move.ramp(step, scene)
+            case Reverse():
+                return self.move.reverse(step, scene)
+            case Ease():
+                return self.move.ease(step, scene)
+            case Move():
+                return self.move.servo(step, scene)
+            case Release():
+                return self.move.release(step, scene)
+            case Sweep():
+                return self.move.sweep(step, scene)
+            case Hold(length_s=length_s):
+                ticks = checking.whole_ticks(self.rig, step, "", length_s)
+                return Run(
+                    mark=step.mark, text=f"hold {format_duration(length_s)}", totals=Totals(ticks, ticks), length=ticks
+                )
+            case Together():
+                return self._together(step, scene)
+            case Repeat():
+                return self._repeat(step, scene)
+            case Include(file=file, steps=steps):
+                begin = scene.elapsed
+                part = self.series(steps, scene, f"include {file}")
+                scene.elapsed = begin
+                return part
+            case _:
+                return self._observe(step, scene)
+
+    def _observe(self, step: Step, scene: Scene) -> Part:
+        """Steps that move nothing."""
+        match step:
+            case Wait(measure=measure, within_s=within_s):
+                self._measure(measure, scene)
+                checking.check_reachable(self.rig, scene, measure)
+                limit = checking.whole_ticks(self.rig, step, "within", within_s)
+                text = f"wait until {measure}, {format_duration(within_s)} at most"
+                totals = Totals(0, limit + self.reaction, waits=1)
+                return Await(mark=step.mark, text=text, totals=totals, measure=measure, limit=limit)
+            case Expect(measure=measure, stop_on_failure=stop):
+                self._measure(measure, scene)
+                totals = Totals(judgements=1)
+                return Judge(
+                    mark=step.mark, text=f"expect {measure}", totals=totals, measure=measure, stop_on_failure=stop
+                )
+            case Note(name=name):
+                scene.marks |= {name}
+                return Moment(mark=step.mark, text=f"mark {name}", totals=Totals(), name=name)
+            case _:
+                raise TypeError(f"a {type(step).__name__} is no step that can be compiled")
+
+    def _measure(self, measure: Measure, scene: Scene) -> None:
+        checking.check_measure(self.rig, scene, measure)
+        back_s = Fraction(SETTLING_KEPT_S) if measure.what is What.SETTLING else measure.over_s
+        self.window = max(self.window, int(self.rig.ticks(back_s)))
+
+    def _together(self, step: Together, scene: Scene) -> Part:
+        moved = checking.check_branches(step)
+        everything = frozenset().union(*moved)
+        begin = scene.elapsed
+        ends: list[tuple[Scene, frozenset[str]]] = []
+        parts: list[Part] = []
+        totals = Totals()
+        for number, (branch, names) in enumerate(zip(step.branches, moved, strict=True), start=1):
+            inner = scene.copy()
+            inner.elsewhere |= everything - names
+            part = self.series(branch, inner, f"branch {number}")
+            totals = part.totals if number == 1 else totals.beside(part.totals)
+            parts.append(part)
+            ends.append((inner, names))
+        checking.check_rate(self.rig, step, "", totals.orders, totals.least)
+        scene.take_branches(ends, begin)
+        scene.elapsed = begin
+        return Branches(mark=step.mark, text=f"together, {len(parts)} branches", totals=totals, parts=tuple(parts))
+
+    def _repeat(self, step: Repeat, scene: Scene) -> Part:
+        begin = scene.elapsed
+        first = self._pass(step, scene)
+        scene.elapsed = begin + first.totals.least
+        later = self._pass(step, scene)
+        if step.until is not None:
+            self._measure(step.until, scene)
+        scene.elapsed = begin
+        for part in (first, later):
+            if part.totals.least == 0 and part.totals.waits == 0:
+                raise step.mark.error(
+                    "the steps of this repeat take no time", "add a hold, or a motion that takes some"
+                )
+            checking.check_rate(self.rig, step, "", part.totals.orders, part.totals.least)
+        return self._loop(step, first, later)
+
+    def _pass(self, step: Repeat, scene: Scene) -> Part:
+        """One pass; the same step in the same scene is the same part, so that nested repeats stay cheap."""
+        key = (id(step), scene.key())
+        if key not in self._repeats:
+            inner = scene.copy()
+            self._repeats[key] = (self.series(step.steps, inner, "pass"), inner)
+        part, after = self._repeats[key]
+        scene.motors, scene.servos = dict(after.motors), dict(after.servos)
+        scene.marks |= after.marks
+        scene.ramped |= after.ramped
+        return part
+
+    def _loop(self, step: Repeat, first: Part, later: Part) -> Loop:
+        times, for_ticks = step.times, None
+        if step.for_s is not None:
+            for_ticks = checking.whole_ticks(self.rig, step, "for", step.for_s)
+            if first.totals.waits == 0 and later.totals.waits == 0:
+                over = max(0, for_ticks - first.totals.least)
+                times, for_ticks = 1 - (-over // later.totals.least), None
+        if for_ticks is not None:
+            return self._for_a_time(step, first, later, for_ticks)
+        assert times is not None  # a repeat says how often, or for how long
+        totals = first.totals.then(later.totals.times(times - 1))
+        if step.until is None:
+            text = f"repeat x {times}" if step.for_s is None else f"repeat for {format_duration(step.for_s)}, x {times}"
+            return Loop(mark=step.mark, text=text, totals=totals, first=first, later=later, times=times)
+        text = f"repeat until {step.until}, x {times} at most"
+        most = totals.most + times * self.reaction
+        totals = Totals(
+            first.totals.least,
+            most,
+            totals.orders,
+            totals.waits + times,
+            totals.judgements,
+            totals.reversals,
+            totals.starts,
+            totals.peak_duty,
+        )
+        return Loop(mark=step.mark, text=text, totals=totals, first=first, later=later, times=times, until=step.until)
+
+    def _for_a_time(self, step: Repeat, first: Part, later: Part, for_ticks: int) -> Loop:
+        """A loop whose passes take as long as their waits do: counted as if they took the least time."""
+        shortest = max(1, later.totals.least)
+        passes = 1 - (-max(0, for_ticks - first.totals.least) // shortest)
+        whole = first.totals.then(later.totals.times(passes - 1))
+        totals = Totals(
+            max(first.totals.least, for_ticks),
+            for_ticks + max(first.totals.most, later.totals.most),
+            whole.orders,
+            whole.waits,
+            whole.judgements,
+            whole.reversals,
+            whole.starts,
+            whole.peak_duty,
+        )
+        text = f"repeat for {self.rig.show(for_ticks)}"
+        return Loop(
+            mark=step.mark, text=text, totals=totals, first=first, later=later, times=passes, for_ticks=for_ticks
+        )
+
+    def closing(self, sequence: Sequence, scene: Scene) -> tuple[Run, list[str]]:
+        """The last part: every motor that is not at zero is brought there as fast as its slew limit allows."""
+        part = self.move.to_zero(sequence.mark, scene)
+        if not part.motions:
+            return part, []
+        driven = [f"{name} at {format_duty(motor.duty)}" for name, motor in scene.motors.items() if motor.duty]
+        remark = f"the steps end with {', '.join(driven)}: brought to zero in {self.rig.show(part.length)} at the end"
+        return part, [remark]
