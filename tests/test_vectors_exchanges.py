@@ -8,6 +8,7 @@ from typing import TypedDict
 
 import pytest
 
+from core_device import COMPILER, CoreDevice
 from ramprig_link.words import NOTICES, WORDS, Cause, Reason, Source, State, Trip
 from scripted_device import TICKS, Device, InputsScript, ScriptedDevice, matches
 
@@ -49,9 +50,9 @@ def device_of(vector: Vector) -> Device:
     return device
 
 
-def differences(vector: Vector) -> list[str]:
-    """What the device did otherwise than the vector says, tick by tick."""
-    device = ScriptedDevice(
+def differences(vector: Vector, kind: type[ScriptedDevice] | type[CoreDevice] = ScriptedDevice) -> list[str]:
+    """What a kind of device did otherwise than the vector says, tick by tick."""
+    device = kind(
         device_of(vector), VECTORS["limits"] | vector.get("limits", {}), vector.get("inputs", {})
     )
     steps = list(vector["steps"])
@@ -80,6 +81,12 @@ def differences(vector: Vector) -> list[str]:
 @pytest.mark.parametrize("vector", VECTORS["vectors"], ids=lambda vector: vector["name"])
 def test_the_controller_answers_as_the_exchange_says(vector: Vector) -> None:
     assert differences(vector) == []
+
+
+@pytest.mark.skipif(COMPILER is None, reason="no C compiler: install gcc (Debian: apt-get install gcc)")
+@pytest.mark.parametrize("vector", VECTORS["vectors"], ids=lambda vector: vector["name"])
+def test_the_firmware_core_answers_as_the_exchange_says(vector: Vector) -> None:
+    assert differences(vector, CoreDevice) == []
 
 
 def test_a_wrong_line_is_noticed() -> None:

@@ -13,9 +13,6 @@ struct name {
 static const struct name reason_names[] = {RR_REASON_LIST(NAME)};
 #undef NAME
 
-/* Fields that follow `ok`, written by the word that was carried out. */
-typedef void write_fields(struct rr_device *device, struct rr_out *out, const struct rr_arguments *given);
-
 static uint8_t index_refusal(uint8_t word, const struct rr_arguments *given)
 {
     switch (word) {
@@ -35,19 +32,20 @@ static uint8_t index_refusal(uint8_t word, const struct rr_arguments *given)
 static bool ramp_is_out(const struct rr_device *device, const struct rr_arguments *given)
 {
     int32_t duty = (int32_t)given->value[1];
-    int32_t ceiling = device->axis[given->value[0]].chain_limits.ceiling_duty;
+    int32_t ceiling = rr_limits_get(&device->limits, RR_LIMIT_CEILING_DUTY, (uint8_t)given->value[0]);
     return duty > ceiling || duty < -ceiling || given->value[2] > RR_HORIZON_TICKS;
 }
 
 static bool swing_is_out(const struct rr_device *device, const struct rr_arguments *given)
 {
 #if RR_SERVOS > 0
-    const struct rr_servo_limits *limits = &device->servo[given->value[0]].limits;
+    uint8_t servo = (uint8_t)given->value[0];
     if (given->value[1] == 0) {
         return given->value[2] != 0;
     }
-    return given->value[1] > (uint32_t)limits->greatest_ns / 1000u ||
-           given->value[1] * 1000u < (uint32_t)limits->least_ns || given->value[2] > RR_HORIZON_TICKS;
+    return given->value[1] > (uint32_t)rr_limits_get(&device->limits, RR_LIMIT_PULSE_MAX_US, servo) ||
+           given->value[1] < (uint32_t)rr_limits_get(&device->limits, RR_LIMIT_PULSE_MIN_US, servo) ||
+           given->value[2] > RR_HORIZON_TICKS;
 #else
     (void)device;
     (void)given;
@@ -145,7 +143,7 @@ static uint8_t do_order(struct rr_device *device, uint8_t kind, int32_t value, u
 {
     int32_t ahead = (int32_t)(start - device->tick);
     if (ahead <= 0) {
-        rr_finding_note(&device->late, RR_TRIP_LATE_ORDER, (int32_t)(0ul - (uint32_t)ahead), 0);
+        rr_finding_note(&device->late, RR_TRIP_LATE_ORDER, ahead == INT32_MIN ? INT32_MAX : -ahead, 0);
         return RR_REASON_LATE;
     }
     if (ahead > (int32_t)RR_HORIZON_TICKS) {
@@ -198,7 +196,7 @@ static uint8_t do_limit(struct rr_device *device, const struct rr_arguments *giv
     }
     device->limits.value[place] = (int32_t)given->value[2];
     (void)rr_store_write(device->port, device->self, (uint8_t)(1u + place), (int32_t)given->value[2]);
-    rr_device_take_limits(device);
+    device->limits_changed = true;
     return WORD_OK;
 }
 
@@ -305,7 +303,7 @@ static void write_answer(struct rr_device *device, struct rr_out *out, uint8_t w
         rr_out_i32(out, device->limits.value[rr_limits_place((uint8_t)given->value[0], given->value[1])]);
         break;
     case RR_WORD_LOG:
-        rr_out_u32(out, device->logging.period == 0 ? device->tick : device->logging.next_tick);
+        rr_out_u32(out, device->logging.period == 0 ? 0 : device->logging.next_tick);
         rr_out_u32(out, told);
         break;
     case RR_WORD_COUNTERS:
@@ -408,11 +406,11 @@ static void answer(struct rr_device *device, const char *text, char *copy)
 static void answer_urgent(struct rr_device *device, const char *text)
 {
     const char *rest;
+    device->renewed = device->tick;
     if (rr_fields_word(text, &rest) != RR_WORD_STOP) {
         refuse(device, NULL, RR_REASON_TAG);
         return;
     }
-    device->renewed = device->tick;
     answer(device, text, NULL);
 }
 
@@ -439,12 +437,4 @@ void rr_answer_request(struct rr_device *device)
     memory->tag = device->line.tag;
     strcpy(memory->body, text);
     answer(device, text, memory->answer);
-}
-
-void rr_answer_bare_who(struct rr_device *device)
-{
-    struct rr_out out;
-    rr_notice_begin(device, &out, RR_NOTICE_WHO);
-    rr_notice_identity(device, &out);
-    (void)rr_out_end(&out);
 }

@@ -24,10 +24,15 @@ static uint16_t one_more(uint16_t ticks)
     return ticks == UINT16_MAX ? ticks : (uint16_t)(ticks + 1u);
 }
 
-/* CHAIN-2: from d towards t, growing by at most `up`, falling by at most `down`, and never past zero in one tick. */
-static int16_t slewed(int16_t duty, int16_t target, int16_t up, int16_t down)
+/* CHAIN-2: where t has the other sign, zero comes first. */
+static int16_t next_target(int16_t duty, int16_t target)
 {
-    int16_t wanted = sign_of(target) == -sign_of(duty) ? 0 : target;
+    return sign_of(target) == -sign_of(duty) ? 0 : target;
+}
+
+/* CHAIN-2: from d towards a target of the same sign, growing by at most `up`, falling by at most `down`. */
+static int16_t slewed(int16_t duty, int16_t wanted, int16_t up, int16_t down)
+{
     int16_t size = size_of(duty);
     int16_t wanted_size = size_of(wanted);
     int8_t sign = duty != 0 ? sign_of(duty) : sign_of(wanted);
@@ -77,9 +82,11 @@ int16_t rr_chain_step(struct rr_chain *chain, const struct rr_chain_limits *limi
                       struct rr_chain_news *news)
 {
     int16_t target = held_within(demand, limits->ceiling_duty);
-    int16_t duty = slewed(held_within(chain->duty, limits->ceiling_duty), target, limits->slew_up_duty,
-                          limits->slew_down_duty);
+    int16_t cut = held_within(chain->duty, limits->ceiling_duty);
+    int16_t wanted = next_target(cut, target);
+    int16_t duty = slewed(cut, wanted, limits->slew_up_duty, limits->slew_down_duty);
     news->at_ceiling = target != demand;
+    news->at_slew = duty != wanted;
     news->locked = chain->duty == 0 && duty != 0 && !may_leave_zero(chain, limits, sign_of(duty));
     news->let_go = 0;
     if (news->locked) {
@@ -89,8 +96,7 @@ int16_t rr_chain_step(struct rr_chain *chain, const struct rr_chain_limits *limi
         news->let_go = duty != 0 ? chain->held_for : 0;
         chain->held_for = 0;
     }
-    news->at_slew = duty != target && !news->locked;
-    news->settled = duty == target;
+    news->settled = duty == demand;
     set_duty(chain, duty);
     return duty;
 }

@@ -34,7 +34,7 @@ struct rr_chain_news {
     bool at_slew;    /* the slew limit held the duty back */
     bool locked;     /* the dwell lock held it at zero */
     uint16_t let_go; /* ticks the lock had held, in the tick in which it let go; else 0 */
-    bool settled;    /* the duty equals the demand, the ceiling allowing */
+    bool settled;    /* the duty equals the demand */
 };
 
 /* Judges standstill by the counts of this tick; call once a tick in every state. */

@@ -26,11 +26,18 @@
 #ifndef RR_KEEP
 #define RR_KEEP 8 /* data lines kept for `again`; 0 = none */
 #endif
+#ifndef RR_NOTICES
+#define RR_NOTICES (6 + 3 * RR_AXES + 2 * RR_SERVOS) /* notices held until the end of a tick */
+#endif
 #ifndef RR_TICK_US
 #define RR_TICK_US 1000 /* length of a tick */
 #endif
 #ifndef RR_CAPS
 #define RR_CAPS (RR_CAP_ENCODER | RR_CAP_CURRENT | RR_CAP_SUPPLY | RR_CAP_KEEPS_LIMITS | RR_CAP_BREAK)
+#endif
+
+#ifndef RR_START_TICK
+#define RR_START_TICK 0 /* number of the first tick; another one only to test the wrap */
 #endif
 
 /* The number of limit values of this build, in the order of the digest. */

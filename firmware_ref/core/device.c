@@ -28,12 +28,12 @@ static void take_requests(struct rr_device *device)
             if (is_live(device)) {
                 rr_stop_begin(device, 0, RR_SOURCE_BARE);
             } else {
-                rr_notice_off(device);
+                rr_notice_push(device, RR_NOTICE_OFF, device->state, 0, 0);
             }
             break;
         case RR_LINE_BARE_WHO:
             device->lines++;
-            rr_answer_bare_who(device);
+            rr_notice_push(device, RR_NOTICE_WHO, 0, 0, 0);
             break;
         default:
             break;
@@ -51,10 +51,7 @@ static void tell_garbled(struct rr_device *device)
     device->garbled_told = device->line.garbled;
     device->garbled_at = device->tick;
     device->garbled_ever = true;
-    struct rr_out out;
-    rr_notice_begin(device, &out, RR_NOTICE_GARBLED);
-    rr_out_u32(&out, device->line.garbled);
-    (void)rr_out_end(&out);
+    rr_notice_push(device, RR_NOTICE_GARBLED, 0, (int32_t)device->line.garbled, 0);
 }
 
 /* (b) */
@@ -62,7 +59,7 @@ static void read_inputs(struct rr_device *device)
 {
     device->port->inputs(device->self, &device->inputs);
     for (uint8_t i = 0; i < RR_AXES; i++) {
-        device->inputs.current_ma[i] -= rr_limits_get(&device->limits, RR_LIMIT_OFFSET_MA, i);
+        device->inputs.current_ma[i] -= device->axis[i].guard_limits.offset_ma;
         rr_chain_watch(&device->axis[i].chain, &device->axis[i].chain_limits, device->inputs.counts[i]);
     }
 }
@@ -78,20 +75,18 @@ static uint16_t counted(uint16_t ticks, bool beyond)
 /* TRIP-4 */
 static void judge_supply(struct rr_device *device, struct rr_finding *finding)
 {
+    const struct rr_board_limits *limits = &device->board_limits;
     if ((RR_CAPS & RR_CAP_SUPPLY) == 0) {
         return;
     }
     int32_t supply = device->inputs.supply_mv;
-    int32_t over = rr_limits_get(&device->limits, RR_LIMIT_OVER_MV, 0);
-    int32_t under = rr_limits_get(&device->limits, RR_LIMIT_UNDER_MV, 0);
-    uint16_t needed = (uint16_t)rr_limits_get(&device->limits, RR_LIMIT_SUPPLY_TICKS, 0);
-    device->over_for = counted(device->over_for, supply > over);
-    device->under_for = counted(device->under_for, supply < under);
-    if (device->over_for >= needed) {
-        rr_finding_note(finding, RR_TRIP_OVERVOLTAGE, supply, over);
+    device->over_for = counted(device->over_for, supply > limits->over_mv);
+    device->under_for = counted(device->under_for, supply < limits->under_mv);
+    if (device->over_for >= limits->supply_ticks) {
+        rr_finding_note(finding, RR_TRIP_OVERVOLTAGE, supply, limits->over_mv);
     }
-    if (device->under_for >= needed) {
-        rr_finding_note(finding, RR_TRIP_UNDERVOLTAGE, supply, under);
+    if (device->under_for >= limits->supply_ticks) {
+        rr_finding_note(finding, RR_TRIP_UNDERVOLTAGE, supply, limits->under_mv);
     }
 }
 
@@ -134,27 +129,13 @@ static void guard(struct rr_device *device)
     }
 }
 
-static void notice_done(struct rr_device *device, uint8_t tag)
-{
-    struct rr_out out;
-    rr_notice_begin(device, &out, RR_NOTICE_DONE);
-    rr_out_char(&out, ' ');
-    rr_out_hex2(&out, tag);
-    (void)rr_out_end(&out);
-}
-
 static void begin_swing(struct rr_device *device, const struct rr_order *order)
 {
 #if RR_SERVOS > 0
     struct rr_servo *servo = &device->servo[order->index];
-    if (order->value == 0) {
-        servo->pulse_ns = 0;
-        rr_glide_end(&servo->swing, 0);
-        notice_done(device, order->tag);
-        return;
-    }
-    if (servo->pulse_ns == 0) {
-        rr_glide_end(&servo->swing, rr_servo_first_ns(&servo->limits));
+    if (servo->swing.value == 0) { /* no pulse: from home, or on from where pulses were taken away in this tick */
+        int32_t from = servo->pulse_ns != 0 ? servo->pulse_ns : rr_servo_first_ns(&servo->limits);
+        rr_glide_end(&servo->swing, from);
     }
     rr_glide_begin(&servo->swing, order);
 #else
@@ -185,19 +166,10 @@ static void move_demands(struct rr_device *device)
             break;
         default:
             device->axis[order.index].brake = order.value == RR_REST_BRAKE;
-            notice_done(device, order.tag);
+            rr_notice_push(device, RR_NOTICE_DONE, order.tag, 0, 0);
             break;
         }
     }
-}
-
-static void notice_dwell(struct rr_device *device, uint8_t axis, uint16_t held_ticks)
-{
-    struct rr_out out;
-    rr_notice_begin(device, &out, RR_NOTICE_DWELL);
-    rr_out_u32(&out, axis);
-    rr_out_u32(&out, held_ticks);
-    (void)rr_out_end(&out);
 }
 
 /* (e) for one axis: chain and bridge. */
@@ -211,11 +183,11 @@ static void drive_axis(struct rr_device *device, uint8_t index)
     device->at_slew = device->at_slew || news.at_slew;
     device->locked = device->locked || news.locked;
     if (news.let_go != 0) {
-        notice_dwell(device, index, news.let_go);
+        rr_notice_push(device, RR_NOTICE_DWELL, index, news.let_go, 0);
     }
     if (axis->demand.pending && axis->demand.left == 0 && news.settled) {
         axis->demand.pending = false;
-        notice_done(device, axis->demand.tag);
+        rr_notice_push(device, RR_NOTICE_DONE, axis->demand.tag, 0, 0);
     }
 }
 
@@ -224,17 +196,19 @@ static void drive_axis(struct rr_device *device, uint8_t index)
 static void drive_servo(struct rr_device *device, uint8_t index)
 {
     struct rr_servo *servo = &device->servo[index];
-    bool first = servo->pulse_ns == 0 && servo->swing.value != 0;
-    if (first) {
+    int32_t goal = servo->swing.value;
+    if (goal == 0) {
+        servo->pulse_ns = 0;
+    } else if (servo->pulse_ns == 0) {
         servo->pulse_ns = rr_servo_first_ns(&servo->limits);
-    } else if (servo->pulse_ns != 0) {
-        servo->pulse_ns = rr_servo_step_ns(&servo->limits, servo->pulse_ns, servo->swing.value);
+    } else {
+        servo->pulse_ns = rr_servo_step_ns(&servo->limits, servo->pulse_ns, goal);
     }
     device->port->pulse(device->self, index, (uint32_t)servo->pulse_ns);
-    device->at_slew = device->at_slew || servo->pulse_ns != servo->swing.value;
-    if (servo->swing.pending && servo->swing.left == 0 && servo->pulse_ns == servo->swing.value) {
+    device->at_slew = device->at_slew || (goal != 0 && servo->pulse_ns != rr_servo_held_ns(&servo->limits, goal));
+    if (servo->swing.pending && servo->swing.left == 0 && servo->pulse_ns == goal) {
         servo->swing.pending = false;
-        notice_done(device, servo->swing.tag);
+        rr_notice_push(device, RR_NOTICE_DONE, servo->swing.tag, 0, 0);
     }
 }
 #endif
@@ -253,7 +227,7 @@ static void drive(struct rr_device *device)
     }
     bool turning = false;
     bool late = device->state == RR_STATE_STOPPING &&
-                device->tick - device->stop_begun >= (uint32_t)rr_limits_get(&device->limits, RR_LIMIT_STOP_TICKS, 0);
+                device->tick - device->stop_begun >= device->board_limits.stop_ticks;
     for (uint8_t i = 0; i < RR_AXES; i++) {
         drive_axis(device, i);
         turning = turning || device->axis[i].chain.duty != 0;
@@ -284,20 +258,11 @@ static void record(struct rr_device *device)
     rr_sampling_tick(device);
 }
 
-void rr_device_tick(struct rr_device *device)
+/* What is judged by, from the limits as they now stand. */
+static void take_limits(struct rr_device *device)
 {
-    device->tick++;
-    take_requests(device);
-    tell_garbled(device);
-    read_inputs(device);
-    guard(device);
-    move_demands(device);
-    drive(device);
-    record(device);
-}
-
-void rr_device_take_limits(struct rr_device *device)
-{
+    device->limits_changed = false;
+    rr_limits_board(&device->limits, &device->board_limits);
     for (uint8_t i = 0; i < RR_AXES; i++) {
         rr_limits_chain(&device->limits, i, &device->axis[i].chain_limits);
         rr_limits_guard(&device->limits, i, &device->axis[i].guard_limits);
@@ -309,13 +274,29 @@ void rr_device_take_limits(struct rr_device *device)
 #endif
 }
 
+void rr_device_tick(struct rr_device *device)
+{
+    take_requests(device);
+    tell_garbled(device);
+    read_inputs(device);
+    guard(device);
+    move_demands(device);
+    drive(device);
+    rr_notice_send(device);
+    record(device);
+    if (device->limits_changed) {
+        take_limits(device);
+    }
+    device->tick++;
+}
+
 static void load_limits(struct rr_device *device)
 {
     rr_limits_defaults(&device->limits);
     for (uint8_t place = 0; place < RR_LIMITS; place++) {
         (void)rr_store_read(device->port, device->self, (uint8_t)(1u + place), &device->limits.value[place]);
     }
-    rr_device_take_limits(device);
+    take_limits(device);
 }
 
 static uint32_t next_boot(struct rr_device *device)
@@ -330,6 +311,7 @@ static uint32_t next_boot(struct rr_device *device)
 void rr_device_start(struct rr_device *device, const struct rr_port *port, void *self, uint8_t cause, int32_t fault)
 {
     memset(device, 0, sizeof *device);
+    device->tick = RR_START_TICK;
     device->port = port;
     device->self = self;
     port->off(self);
@@ -342,12 +324,10 @@ void rr_device_start(struct rr_device *device, const struct rr_port *port, void 
     }
     device->latched = device->last_trip.trip;
     device->state = device->latched != RR_TRIP_NONE ? RR_STATE_TRIPPED : RR_STATE_OFF;
-#define CAUSE(NAME, word, number) {word},
-    static const char causes[][9] = {RR_CAUSE_LIST(CAUSE)};
-#undef CAUSE
-    struct rr_out out;
-    rr_notice_begin(device, &out, RR_NOTICE_BOOT);
-    rr_out_u32(&out, device->boot);
-    rr_out_word(&out, causes[cause]);
-    (void)rr_out_end(&out);
+    rr_notice_push(device, RR_NOTICE_BOOT, cause, 0, 0);
+    if (device->latched != RR_TRIP_NONE) {
+        rr_notice_push(device, RR_NOTICE_TRIP, 0, device->last_trip.value, 0);
+        rr_notice_push(device, RR_NOTICE_OFF, device->state, 0, 0);
+    }
+    rr_notice_send(device);
 }

@@ -58,6 +58,20 @@ struct rr_logging {
 #endif
 };
 
+/* What happened in this tick, told at its end in (f) (SPEC RUN-2, NOTE-1). */
+struct rr_happened {
+    int32_t value;
+    int32_t bound;
+    uint8_t kind; /* enum rr_notice */
+    uint8_t index;
+};
+
+struct rr_notices {
+    struct rr_happened happened[RR_NOTICES];
+    uint8_t count;
+    uint8_t number; /* of the next notice */
+};
+
 struct rr_device {
     const struct rr_port *port;
     void *self;
@@ -75,6 +89,8 @@ struct rr_device {
     uint32_t stop_begun;
     uint16_t over_for; /* ticks in a row beyond the supply's limits */
     uint16_t under_for;
+    struct rr_board_limits board_limits;
+    bool limits_changed; /* in this tick: in force from the next */
     bool at_ceiling;
     bool at_slew;
     bool locked;
@@ -89,7 +105,7 @@ struct rr_device {
     struct rr_memory memory;
     struct rr_logging logging;
     struct rr_trail trail;
-    uint8_t notice_number;
+    struct rr_notices notices;
     uint32_t lines;
     uint32_t repeats;
     uint32_t garbled_told;
@@ -108,14 +124,13 @@ void rr_device_tick(struct rr_device *device);
 
 /* answer.c: carries out a request or a bare line. */
 void rr_answer_request(struct rr_device *device);
-void rr_answer_bare_who(struct rr_device *device);
 /* stop.c: stops, trips, and what follows from them. */
 void rr_stop_begin(struct rr_device *device, uint8_t category, uint8_t source);
 void rr_stop_off(struct rr_device *device);
 void rr_stop_trip(struct rr_device *device, const struct rr_finding *finding);
 /* notice.c: notices. */
-void rr_notice_begin(struct rr_device *device, struct rr_out *out, uint8_t notice);
-void rr_notice_off(struct rr_device *device);
+void rr_notice_push(struct rr_device *device, uint8_t kind, uint8_t index, int32_t value, int32_t bound);
+void rr_notice_send(struct rr_device *device);
 void rr_notice_identity(const struct rr_device *device, struct rr_out *out);
 const char *rr_state_word(uint8_t state);
 const char *rr_trip_word(uint8_t trip);
@@ -127,7 +142,5 @@ void rr_sampling_tick(struct rr_device *device);
 bool rr_sampling_again(const struct rr_device *device, uint8_t number);
 void rr_sampling_send_again(struct rr_device *device, uint8_t number);
 uint8_t rr_sampling_trail(struct rr_device *device, uint8_t axis, uint32_t first, char *payload);
-/* device.c */
-void rr_device_take_limits(struct rr_device *device);
 
 #endif

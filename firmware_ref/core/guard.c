@@ -78,7 +78,7 @@ static void judge_motion(struct rr_guard *guard, const struct rr_guard_limits *l
     }
     if (size_of(difference(counts, guard->stall_mark)) >= (uint32_t)limits->stall_counts) {
         guard->stall_mark = counts;
-        guard->stall_for = 0;
+        guard->stall_for = 1; /* the tick in which it begins again is the first */
     } else if (guard->stall_for < UINT16_MAX) {
         guard->stall_for++;
     }

@@ -11,6 +11,7 @@
 #include <stdint.h>
 
 struct rr_guard_limits {
+    int16_t offset_ma; /* taken off every reading before it is judged */
     int32_t trip_ma;
     uint16_t trip_ticks;
     uint16_t rated_ma;

@@ -130,6 +130,14 @@ uint32_t rr_limits_digest(const struct rr_limits *limits)
     return ~crc;
 }
 
+void rr_limits_board(const struct rr_limits *limits, struct rr_board_limits *board)
+{
+    board->under_mv = rr_limits_get(limits, RR_LIMIT_UNDER_MV, 0);
+    board->over_mv = rr_limits_get(limits, RR_LIMIT_OVER_MV, 0);
+    board->supply_ticks = (uint16_t)rr_limits_get(limits, RR_LIMIT_SUPPLY_TICKS, 0);
+    board->stop_ticks = (uint16_t)rr_limits_get(limits, RR_LIMIT_STOP_TICKS, 0);
+}
+
 void rr_limits_chain(const struct rr_limits *limits, uint8_t axis, struct rr_chain_limits *chain)
 {
     chain->ceiling_duty = (int16_t)rr_limits_get(limits, RR_LIMIT_CEILING_DUTY, axis);
@@ -143,6 +151,7 @@ void rr_limits_chain(const struct rr_limits *limits, uint8_t axis, struct rr_cha
 
 void rr_limits_guard(const struct rr_limits *limits, uint8_t axis, struct rr_guard_limits *guard)
 {
+    guard->offset_ma = (int16_t)rr_limits_get(limits, RR_LIMIT_OFFSET_MA, axis);
     guard->trip_ma = rr_limits_get(limits, RR_LIMIT_TRIP_MA, axis);
     guard->trip_ticks = (uint16_t)rr_limits_get(limits, RR_LIMIT_TRIP_TICKS, axis);
     guard->rated_ma = (uint16_t)rr_limits_get(limits, RR_LIMIT_RATED_MA, axis);

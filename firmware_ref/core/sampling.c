@@ -20,9 +20,14 @@ uint16_t rr_sampling_state_bits(const struct rr_device *device)
 
 bool rr_sampling_mask_fits(uint32_t mask)
 {
-    uint32_t fitted = (uint32_t)7 << SUPPLY_BIT;
-    fitted |= ((uint32_t)1 << (3 * RR_AXES)) - 1u;
-    fitted |= (((uint32_t)1 << RR_SERVOS) - 1u) << SERVO_BIT;
+    uint32_t fitted = (((uint32_t)1 << RR_SERVOS) - 1u) << SERVO_BIT | (uint32_t)1 << STATE_BIT;
+    fitted |= (RR_CAPS & RR_CAP_SUPPLY) != 0 ? (uint32_t)1 << SUPPLY_BIT : 0u;
+    fitted |= (RR_CAPS & RR_CAP_TEMPERATURE) != 0 ? (uint32_t)1 << TEMPERATURE_BIT : 0u;
+    for (uint8_t i = 0; i < RR_AXES; i++) {
+        fitted |= (uint32_t)1 << (3 * i);
+        fitted |= (RR_CAPS & RR_CAP_ENCODER) != 0 ? (uint32_t)2 << (3 * i) : 0u;
+        fitted |= (RR_CAPS & RR_CAP_CURRENT) != 0 ? (uint32_t)4 << (3 * i) : 0u;
+    }
     return (mask & ~fitted) == 0;
 }
 

@@ -1,7 +1,7 @@
 /* One servo's pulse in a tick; see servo.h. */
 #include "servo.h"
 
-static int32_t held_inside(const struct rr_servo_limits *limits, int32_t pulse_ns)
+int32_t rr_servo_held_ns(const struct rr_servo_limits *limits, int32_t pulse_ns)
 {
     if (pulse_ns < limits->least_ns) {
         return limits->least_ns;
@@ -11,13 +11,13 @@ static int32_t held_inside(const struct rr_servo_limits *limits, int32_t pulse_n
 
 int32_t rr_servo_first_ns(const struct rr_servo_limits *limits)
 {
-    return held_inside(limits, limits->home_ns);
+    return rr_servo_held_ns(limits, limits->home_ns);
 }
 
 int32_t rr_servo_step_ns(const struct rr_servo_limits *limits, int32_t pulse_ns, int32_t goal_ns)
 {
-    int32_t goal = held_inside(limits, goal_ns);
-    int32_t pulse = held_inside(limits, pulse_ns); /* a limit tightened past the pulse cuts at once, like the ceiling */
+    int32_t goal = rr_servo_held_ns(limits, goal_ns);
+    int32_t pulse = rr_servo_held_ns(limits, pulse_ns); /* a limit tightened past the pulse cuts at once, like the ceiling */
     if (goal - pulse > limits->slew_ns) {
         return pulse + limits->slew_ns;
     }

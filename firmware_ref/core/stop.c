@@ -33,24 +33,12 @@ void rr_stop_off(struct rr_device *device)
     }
 #endif
     device->state = device->latched != RR_TRIP_NONE ? RR_STATE_TRIPPED : RR_STATE_OFF;
-    rr_notice_off(device);
-}
-
-static void notice_stop(struct rr_device *device, uint8_t category, uint8_t source)
-{
-#define SOURCE(NAME, word, number) {word},
-    static const char sources[][7] = {RR_SOURCE_LIST(SOURCE)};
-#undef SOURCE
-    struct rr_out out;
-    rr_notice_begin(device, &out, RR_NOTICE_STOP);
-    rr_out_u32(&out, category);
-    rr_out_word(&out, sources[source]);
-    (void)rr_out_end(&out);
+    rr_notice_push(device, RR_NOTICE_OFF, device->state, 0, 0);
 }
 
 void rr_stop_begin(struct rr_device *device, uint8_t category, uint8_t source)
 {
-    notice_stop(device, category, source);
+    rr_notice_push(device, RR_NOTICE_STOP, source, category, 0);
     if (category == 0) {
         rr_stop_off(device);
         return;
@@ -58,17 +46,6 @@ void rr_stop_begin(struct rr_device *device, uint8_t category, uint8_t source)
     end_orders(device);
     device->state = RR_STATE_STOPPING;
     device->stop_begun = device->tick;
-}
-
-static void notice_trip(struct rr_device *device, const struct rr_finding *finding)
-{
-    struct rr_out out;
-    rr_notice_begin(device, &out, RR_NOTICE_TRIP);
-    rr_out_word(&out, rr_trip_word(finding->trip));
-    rr_out_u32(&out, finding->index);
-    rr_out_i32(&out, finding->value);
-    rr_out_i32(&out, finding->bound);
-    (void)rr_out_end(&out);
 }
 
 void rr_stop_trip(struct rr_device *device, const struct rr_finding *finding)
@@ -82,7 +59,7 @@ void rr_stop_trip(struct rr_device *device, const struct rr_finding *finding)
     device->last_trip = *finding;
     device->last_trip_tick = device->tick;
     rr_trail_trip(&device->trail);
-    notice_trip(device, finding);
+    rr_notice_push(device, RR_NOTICE_TRIP, finding->index, finding->value, finding->bound);
     if (category == 0) {
         rr_stop_off(device);
     } else {

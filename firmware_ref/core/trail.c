@@ -10,7 +10,7 @@ void rr_trail_begin(struct rr_trail *trail)
 
 void rr_trail_trip(struct rr_trail *trail)
 {
-    if (trail->phase == RR_TRAIL_RUNNING) {
+    if (trail->phase != RR_TRAIL_FROZEN) {
         trail->phase = RR_TRAIL_ENDING;
         trail->to_go = RR_TRAIL / 4;
     }
