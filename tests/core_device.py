@@ -45,8 +45,8 @@ def library(options: tuple[str, ...]) -> ctypes.CDLL:
     assert COMPILER is not None
     out = Path(_BUILDS.name) / f"core-{len(list(Path(_BUILDS.name).iterdir()))}.so"
     sources = [*sorted((FIRMWARE / "core").glob("*.c")), FIRMWARE / "ports" / "scripted" / "scripted.c"]
-    command: list[str | Path] = [COMPILER, "-std=c11", "-O1", "-shared", "-fPIC", *WARNINGS, *options, "-o", out, *sources]
-    subprocess.run(command, check=True)
+    flags = ["-std=c11", "-O1", "-shared", "-fPIC", *WARNINGS, *options]
+    subprocess.run([COMPILER, *flags, "-o", out, *sources], check=True)
     loaded = ctypes.CDLL(str(out))
     loaded.scripted_new.restype = ctypes.c_void_p
     loaded.scripted_new.argtypes = [ctypes.c_char_p] * 3
