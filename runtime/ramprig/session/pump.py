@@ -19,6 +19,8 @@ from ramprig_link.host import Answered, HostEvent, HostLink, RetryPolicy
 
 TURN_MAX_S = 0.05
 """Longest single read, so that a panic from another thread is seen soon."""
+TIME_GRAIN_S = 1e-6
+"""No wait is shorter, so that one that is due in a rounding error's time does not spin on a clock of nanoseconds."""
 JOBS_MAX = 32
 """Most requests that wait to be sent."""
 URGENTS_KEPT = 32
@@ -172,7 +174,8 @@ class Pump:
         self._check_panic()
         if not self.muted:
             self._send_new(now_s)
-        data = self.port.read(max(0.0, self._wait_until(until_s, now_s) - now_s))
+        wait_s = self._wait_until(until_s, now_s) - now_s
+        data = self.port.read(max(wait_s, TIME_GRAIN_S) if wait_s > 0.0 else 0.0)
         now_s = self.clock.now()
         self.since_s, self._turned_s = self._turned_s or now_s, now_s
         self.bytes_in += len(data)
@@ -201,7 +204,7 @@ class Pump:
             return
         if self._jobs:
             self._job = self._jobs.popleft()
-        elif self.beat_s is not None and now_s - self._sent_s >= self.beat_s:
+        elif self.beat_s is not None and now_s >= self._sent_s + self.beat_s:  # the same sum as in `_wait_until`
             self._job = Job("beat", (), lambda answered: None)
         else:
             return

@@ -335,7 +335,6 @@ class Session:
     def trail(self, axis: int) -> Block | None:
         """The fast record around the last trip, period 1: duty, counts, current, supply, state; None where none is kept.
 
-
         Raises LinkError where a part of it cannot be read.
         """
         core = self._core
