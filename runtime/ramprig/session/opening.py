@@ -7,8 +7,9 @@ identity and the limits against the bench file; the trip that may be latched. No
 
 from __future__ import annotations
 
-from collections.abc import Mapping
-from dataclasses import dataclass, field
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 from ramprig.errors import LinkError, LinkLost, Refused, WrongDevice
 from ramprig.session.core import IDLE_BEAT_S, Core
@@ -18,6 +19,9 @@ from ramprig.session.readings import Identity, Reading, read_answer
 from ramprig.session.sampling import Sampling
 from ramprig_link.faults import LinkSilent
 from ramprig_link.words import VERSION, Reason, Trip
+
+if TYPE_CHECKING:
+    from ramprig.bench import Bench
 
 QUIET_S = 0.12
 """The line is quiet when nothing came for so long."""
@@ -37,18 +41,35 @@ STILL_COUNTS = 2
 """Counts may differ by this much at rest."""
 
 
+def _nothing(identity: Identity) -> Mapping[LimitKey, int]:
+    return {}
+
+
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Wanted:
-    """What the bench file says of the device: None and empty ask for nothing.
+    """What is expected of the device: None and 0 ask for nothing.
 
-    `axes` and `servos` are how many it must have at least; `limits` are written where they differ.
+    `axes` and `servos` are how many it must have at least. `limits` gives, for the board that answered, the values that
+    are to be in force; those that differ are written.
     """
 
     board: str | None = None
     serial: str | None = None
     axes: int = 0
     servos: int = 0
-    limits: Mapping[LimitKey, int] = field(default_factory=dict)
+    limits: Callable[[Identity], Mapping[LimitKey, int]] = _nothing
+
+    @classmethod
+    def of(cls, bench: Bench) -> Wanted:
+        """What a bench file says: its board, and every limit of the board that answers."""
+
+        def limits(identity: Identity) -> Mapping[LimitKey, int]:
+            return bench.limits(
+                tick_us=identity.tick_us, axes=identity.axes, servos=identity.servos, max_duty=identity.max_duty
+            )
+
+        board = bench.board
+        return cls(board=board.name, serial=board.serial, axes=bench.axes, servos=bench.channels, limits=limits)
 
 
 def open_device(core: Core, wanted: Wanted) -> None:
@@ -68,7 +89,7 @@ def open_device(core: Core, wanted: Wanted) -> None:
     _compare(identity, wanted)
     _at_rest(core, reading)
     core.limits = _read_limits(core, identity)
-    write_limits(core, wanted.limits)
+    write_limits(core, wanted.limits(identity))
     core.valid = True
     core.pump.beat_s = IDLE_BEAT_S
     core.tell(

@@ -12,12 +12,13 @@ import statistics
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from types import TracebackType
-from typing import Self
+from typing import TYPE_CHECKING, Self
 
 import numpy as np
 
 from ramprig.errors import LinkError, LinkLost, Refused, StoppedByUser
 from ramprig.port.base import Port
+from ramprig.port.clock import Clock
 from ramprig.session.blocks import Block, Layout, block_from
 from ramprig.session.clockfit import ClockFit
 from ramprig.session.core import Core, Latest, need_valid
@@ -32,6 +33,9 @@ from ramprig_link.faults import SampleFault
 from ramprig_link.host import RetryPolicy
 from ramprig_link.samples import decode
 from ramprig_link.words import Form, Rest, State
+
+if TYPE_CHECKING:
+    from ramprig.bench import Bench
 
 TAIL_WAIT_S = 2.0
 """After a logging has ended, lost lines at its end are asked for during so long."""
@@ -69,7 +73,7 @@ class Session:
         cls,
         port: Port,
         *,
-        wanted: Wanted | None = None,
+        wanted: Wanted | Bench | None = None,
         seed: int | None = None,
         retry: RetryPolicy | None = None,
         on_block: Callable[[Block], None] | None = None,
@@ -77,13 +81,15 @@ class Session:
     ) -> Session:
         """A session whose device is known, whose outputs are verified off and whose limits are the ones wanted.
 
+        `wanted` may be a bench file as loaded; FileError where the board cannot keep what it says.
         `seed` makes the first tag, None draws it. The callbacks are called from inside the pump and must not call the
         session; what they raise leaves the pump. Raises LinkLost, WrongDevice, LinkError, Refused as `open_device`
         does; the port is then closed.
         """
         core = Core(port, chance=random.Random(seed), retry=retry, on_block=on_block, on_event=on_event)
         session = cls(core)
-        session._wanted = wanted or Wanted()
+        if wanted is not None:
+            session._wanted = wanted if isinstance(wanted, Wanted) else Wanted.of(wanted)
         try:
             open_device(core, session._wanted)
         except BaseException:
@@ -183,6 +189,15 @@ class Session:
         return not self._core.sampling.settled
 
     # ---- time ----------------------------------------------------------------------------------------------------
+
+    @property
+    def clock(self) -> Clock:
+        """The port's clock, on which all host times of this session are."""
+        return self._core.clock
+
+    def clock_now(self) -> float:
+        """The port's clock, in s."""
+        return self._core.clock.now()
 
     @property
     def clock_fit(self) -> ClockFit | None:
@@ -333,8 +348,9 @@ class Session:
         return first_tick
 
     def trail(self, axis: int) -> Block | None:
-        """The fast record around the last trip, period 1: duty, counts, current, supply, state; None where none is kept.
+        """The fast record around the last trip, period 1, or None where there is none.
 
+        Its channels are the axis's duty, counts and current, the supply and the state.
         Raises LinkError where a part of it cannot be read.
         """
         core = self._core
