@@ -1,0 +1,124 @@
+"""The command `ramprig`: finds the command's module, runs it, and turns every ending into a sentence and an exit code.
+
+Only the module of the command that was given is loaded, so that `ramprig --help` starts at once.
+"""
+
+from __future__ import annotations
+
+import argparse
+import importlib
+import os
+import sys
+from collections.abc import Sequence
+from typing import Protocol, cast
+
+from ramprig import __version__
+from ramprig.cli.say import tell
+from ramprig.errors import Bug, RamprigError
+
+COMMANDS = {
+    "check": "print what a sequence or bench file means, before anything moves",
+    "rehearse": "run a sequence on the mock in virtual time",
+    "run": "run a sequence on the bench",
+    "shell": "drive the bench by hand",
+    "mock": "serve a board in software on a pseudo-terminal or a TCP port",
+    "ports": "list the serial ports, and how to name each in a bench file",
+    "read": "tell how a run ended, and check its account of every sample",
+    "schema": "print the JSON Schema of bench or sequence files, for editors",
+}
+"""Every command is a module of this room by the same name."""
+
+EXIT_CODES = """exit codes:
+  0   passed
+  1   an expectation failed
+  2   the command line or a file must be mended
+  3   the device tripped or refused
+  4   the link was lost, or another device answered
+  5   stopped by the user
+  70  a bug in ramprig
+"""
+EXIT_USER = 5
+EXIT_BUG = 70
+"""EX_SOFTWARE of BSD's sysexits.h."""
+
+
+class Command(Protocol):
+    """What the module of a command has."""
+
+    def declare(self, parser: argparse.ArgumentParser) -> None:
+        """Add the command's arguments."""
+        ...
+
+    def carry_out(self, args: argparse.Namespace) -> int:
+        """Do it; returns the exit code."""
+        ...
+
+
+def command_named(name: str) -> Command:
+    """The module of a command, loaded now."""
+    return cast("Command", importlib.import_module(f"ramprig.cli.{name}"))
+
+
+def parser_for(wanted: str | None) -> argparse.ArgumentParser:
+    """The parser; only the command `wanted` has its arguments declared."""
+    parser = argparse.ArgumentParser(
+        prog="ramprig",
+        description="Serial console and scripting runtime for motor benches. `ramprig COMMAND --help` tells more.",
+        epilog=EXIT_CODES,
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+    )
+    parser.add_argument("--version", action="version", version=f"ramprig {__version__}")
+    commands = parser.add_subparsers(dest="command", metavar="COMMAND", required=True)
+    for name, summary in COMMANDS.items():
+        command = commands.add_parser(name, help=summary, description=f"{summary[0].upper()}{summary[1:]}.")
+        command.formatter_class = argparse.RawDescriptionHelpFormatter
+        if name == wanted:
+            command_named(name).declare(command)
+    return parser
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Carry out a command line and return its exit code; only argparse's own `SystemExit` leaves it."""
+    words = list(sys.argv[1:] if arguments is None else arguments)
+    wanted = next((word for word in words if not word.startswith("-")), None)
+    args = parser_for(wanted).parse_args(words)
+    try:
+        code = command_named(args.command).carry_out(args)
+        sys.stdout.flush()
+    except Bug as error:
+        return _bug(error)
+    except RamprigError as error:
+        tell(str(error))
+        return error.exit_code
+    except KeyboardInterrupt:
+        tell("Stopped by the user.")
+        return EXIT_USER
+    except BrokenPipeError:
+        return _nobody_reads()
+    except Exception as error:  # whatever else comes is ours to explain, not the user's to read
+        return _bug(error)
+    return code
+
+
+def _nobody_reads() -> int:
+    """Standard output was closed, as by `| head`: nothing more is said there, not even at the interpreter's end."""
+    os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+    return 0
+
+
+def _bug(error: Exception) -> int:
+    """Tell of a bug in short, and write the whole of it to a file."""
+    import tempfile
+    import traceback
+
+    text = "".join(traceback.format_exception(error))
+    first = f"This is a bug in ramprig: {type(error).__name__}: {error}"
+    try:
+        number, path = tempfile.mkstemp(prefix="ramprig-bug-", suffix=".txt", text=True)
+        with open(number, "w", encoding="utf-8") as file:
+            file.write(f"ramprig {__version__}, Python {sys.version}\n{text}")
+    except OSError:
+        tell(f"{first}\n{text}")
+        return EXIT_BUG
+    tell(f"{first}\nThe traceback is in {path}; please report it with that file. Look at the bench before going on.")
+    return EXIT_BUG

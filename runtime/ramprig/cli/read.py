@@ -1,0 +1,74 @@
+"""`ramprig read RUN`: how a run ended and why, and whether every sample is where its account says."""
+
+from __future__ import annotations
+
+import argparse
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from ramprig.cli.say import say
+
+if TYPE_CHECKING:
+    from ramprig.record.reading import Audit
+
+GAPS_SHOWN = 10
+UNSOUND_CODE = 2
+
+
+def declare(parser: argparse.ArgumentParser) -> None:
+    """The run folder."""
+    parser.add_argument("run", type=Path, help="the run's folder")
+    parser.epilog = "Exits with 0 where the account holds, with 2 where it does not or the run never ended in order."
+
+
+def carry_out(args: argparse.Namespace) -> int:
+    """Print what the folder says and what it holds."""
+    from ramprig.record.reading import audit, read_manifest
+
+    manifest = read_manifest(args.run)
+    found = audit(args.run)
+    for line in summary(manifest, found):
+        say(line)
+    return 0 if found.exact else UNSOUND_CODE
+
+
+def summary(manifest: dict[str, Any], found: Audit) -> list[str]:  # Any: JSON as it comes, of a checked format
+    """The run in a few lines, and the statements of the audit."""
+    device = manifest.get("device") or {}
+    board = " ".join(str(device[key]) for key in ("board", "serial") if key in device)
+    facts = [
+        ("run", manifest.get("run")),
+        ("name", manifest.get("name")),
+        ("started", manifest.get("started")),
+        ("ended", manifest.get("ended") or "not in order"),
+        ("port", manifest.get("port") or "not said"),
+        ("board", board or "not said"),
+        ("verdict", manifest.get("verdict") or "none"),
+        ("reason", manifest.get("stop_reason") or "none was written"),
+        ("samples", samples_line(manifest, found)),
+    ]
+    lines = [f"{name:<9}{value}" for name, value in facts]
+    lines += [f"{'':9}{line}" for line in gap_lines(manifest.get("samples") or {})]
+    verdicts = found.statements or ("every sample is in the file or told as lost, and no file was changed",)
+    return lines + [f"{'checked' if i == 0 else '':<9}{text}" for i, text in enumerate(verdicts)]
+
+
+def samples_line(manifest: dict[str, Any], found: Audit) -> str:  # Any: as in summary
+    """The account in one line; of a run that broke off, what can be counted."""
+    account = manifest.get("samples")
+    if not account:
+        return f"{found.rows} rows in the file, {found.known_lost} told as lost"
+    parts = [f"{account[key]} {key}" for key in ("expected", "received", "lost", "written")]
+    parts += [f"{account[key]} {key}" for key in ("recovered", "unwritten") if account.get(key)]
+    return ", ".join(parts) + f"; {found.rows} rows in the file"
+
+
+def gap_lines(account: dict[str, Any]) -> list[str]:  # Any: as in summary
+    """The gaps by tick, so many as fit a screen."""
+    gaps = account.get("gaps", [])
+    lines = [
+        f"lost: {gap['count']} from tick {gap['first_tick']}, every {gap['period_ticks']} ({gap['reason']})"
+        for gap in gaps[:GAPS_SHOWN]
+    ]
+    more = len(gaps) - len(lines) + int(account.get("gaps_unlisted", 0))
+    return [*lines, f"and {more} gaps more"] if more else lines
