@@ -5,6 +5,7 @@ Ticks only pass by `tick` and `advance`. The same setup, seed, and bytes at the 
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import replace
 
 from ramprig_link.words import Cap, Cause
@@ -12,7 +13,7 @@ from ramprig_link.words import Cap, Cause
 from .board import Board
 from .controller import Controller
 from .drive import Drive
-from .faults import FaultSwitches
+from .faults import FaultSwitches, parse_fault
 from .limits import LimitStore
 from .plant import Plant, PlantFault, set_fault
 from .setup import MockSetup
@@ -27,6 +28,20 @@ _PLANT_FAULTS = {
     "jammed_shaft": PlantFault.JAMMED,
     "noisy_counts": PlantFault.NOISY_COUNTS,
 }
+
+
+Trace = Callable[[int, Controller | None], None]
+
+
+def _schedule(setup: MockSetup) -> list[tuple[int, str, int, float]]:
+    """The switchings of the timed faults, earliest first: tick, name, axis, strength."""
+    switchings = []
+    for timed in setup.timed_faults:
+        name, axis, amount = parse_fault(timed.text)
+        for time_s, value in ((timed.from_s, amount), (timed.until_s, 0.0)):
+            if time_s is not None:
+                switchings.append((round(time_s * 1e6 / setup.board.tick_us), name, axis, value))
+    return sorted(switchings)
 
 
 class PlantInputs:
@@ -100,7 +115,8 @@ class Receiver:
 class MockDevice:
     """A board with motors and servos on it. `ticks` counts from the making; the board's own tick starts at each boot.
 
-    While the board boots, `controller` is None: the outputs are off and what is received is lost.
+    While the board boots, `controller` is None: the outputs are off and what is received is lost. `trace`, where set,
+    is called at each tick's end with `ticks` and the controller, and while it boots with None at least once.
     """
 
     def __init__(self, setup: MockSetup | None = None, *, seed: int = 0) -> None:
@@ -117,9 +133,11 @@ class MockDevice:
         self._output = b""
         self._moving = False
         self._brownout_in: int | None = None
+        self.trace: Trace | None = None
         self.controller: Controller | None = None
         self._boot()
         self.faults.set_all(setup.faults)
+        self._timed = _schedule(setup)
 
     @property
     def board(self) -> Board:
@@ -162,8 +180,17 @@ class MockDevice:
             done += passed
         return done
 
+    def _switch_timed(self, ticks: int) -> int:
+        """Switch the timed faults that are due; returns the ticks, at most `ticks`, until the next one is."""
+        while self._timed and self._timed[0][0] <= self.ticks:
+            _, name, axis, amount = self._timed.pop(0)
+            self.faults.set(name, amount, axis=axis)
+        return min(ticks, self._timed[0][0] - self.ticks) if self._timed else ticks
+
     def _run(self, ticks: int) -> tuple[int, bytes]:
-        """Run until output comes, the board resets or finishes booting, or `ticks` are over; returns both."""
+        """Run until output comes, the board or a fault changes, or `ticks` are over; returns ticks and output."""
+        if self._timed:
+            ticks = self._switch_timed(ticks)
         controller = self.controller
         if controller is None:
             return self._run_booting(ticks), b""
@@ -173,6 +200,7 @@ class MockDevice:
         tick, step, supply, brownout_mv = controller.tick, plant.step, controller.supply, self.setup.brownout_mv
         watching = bool(self.faults.get("brownout_on_start"))
         elapsed = self.ticks
+        trace = self.trace
         end = elapsed + ticks
         output = b""
         while elapsed < end:
@@ -187,6 +215,8 @@ class MockDevice:
                     servo.pulse_us = pulse.pulse_ns / 1000.0 if pulse.pulse_ns else None
             step()
             elapsed += 1
+            if trace is not None:
+                trace(elapsed, controller)
             if transmitter.waiting:
                 output = transmitter.take(elapsed)
             if supply.supply_mv < brownout_mv or (watching and self._sags(drives)):
@@ -214,6 +244,8 @@ class MockDevice:
         passed = min(ticks, self._boot_left)
         for _ in range(passed):
             self.plant.step()
+        if self.trace is not None:
+            self.trace(self.ticks + passed, None)
         self.ticks += passed
         self._boot_left -= passed
         self._receiver.purge()

@@ -22,7 +22,7 @@ from .plant import (
     ServoParameters,
     SupplyParameters,
 )
-from .setup import MockSetup
+from .setup import MockSetup, TimedFault
 
 SERIAL = "MOCK-0001"
 """What a mock calls itself where the bench takes any serial."""
@@ -39,7 +39,12 @@ def setup_of_bench(bench: Bench, *, faults: tuple[str, ...] = ()) -> MockSetup:
     Raises `FileError` at what the mock cannot be made from.
     """
     swapped = tuple(f"phases_swapped:{motor.axis}" for motor in bench.motors if motor.sense < 0)
-    lasting = tuple(_fault_text(bench, fault) for fault in bench.mock.faults)
+    lasting = tuple(_fault_text(bench, fault) for fault in bench.mock.faults if not _is_timed(fault))
+    timed = tuple(
+        TimedFault(text=_fault_text(bench, fault), from_s=fault.from_s, until_s=fault.until_s)
+        for fault in bench.mock.faults
+        if _is_timed(fault)
+    )
     return MockSetup(
         board=Board(
             board=bench.board.name,
@@ -50,6 +55,7 @@ def setup_of_bench(bench: Bench, *, faults: tuple[str, ...] = ()) -> MockSetup:
         plant=plant_of_bench(bench),
         baud=bench.port.baud,
         faults=(*swapped, *lasting, *faults),
+        timed_faults=timed,
     )
 
 
@@ -66,12 +72,12 @@ def plant_of_bench(bench: Bench) -> PlantParameters:
     )
 
 
+def _is_timed(fault: MockFault) -> bool:
+    return bool(fault.from_s) or fault.until_s is not None
+
+
 def _fault_text(bench: Bench, fault: MockFault) -> str:
     """The fault as the mock spells it: with `_`, and the axis of its motor."""
-    if fault.from_s or fault.until_s is not None:
-        raise fault.mark.error(
-            f"the fault '{fault.name}' has times", "the mock has faults from its start to its end only"
-        )
     spelt = fault.name.replace("-", "_")
     try:
         known(spelt)

@@ -14,12 +14,22 @@ from .plant import VENT_BENCH, PlantParameters
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class TimedFault:
+    """A fault that comes and goes by the mock's own time; `until_s` None: it stays. `text` as `faults.parse_fault`."""
+
+    text: str
+    from_s: float
+    until_s: float | None = None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class MockSetup:
     """A mock's parameters; raises `FileError` where board and plant do not fit together.
 
     `baud` 0 is a wire that takes no time. `boot_ticks` is how long the board hears nothing after a reset. Below
     `brownout_mv` on the supply the board resets; 0 never. `limits` are presets over the protocol's defaults;
-    `limits_path` is a file that keeps them beyond this process. `faults` are on from the start.
+    `limits_path` is a file that keeps them beyond this process. `faults` are on from the start, `timed_faults`
+    for a time.
     """
 
     board: Board = field(default_factory=Board)
@@ -30,6 +40,7 @@ class MockSetup:
     boot_ticks: int = 300
     brownout_mv: int = 4500
     faults: tuple[str, ...] = ()
+    timed_faults: tuple[TimedFault, ...] = ()
 
     def __post_init__(self) -> None:
         fitted = (self.board.axes, self.board.servos)

@@ -32,7 +32,7 @@ class MockWish:
     """What a `mock:` text asks for."""
 
     pace: Pace = "real"
-    seed: int = 0
+    seed: int | None = None
     faults: tuple[str, ...] = ()
     bench: Path | None = None
     baud: int | None = None
@@ -73,27 +73,35 @@ def _whole(text: str, name: str, value: str) -> int:
     return int(value)
 
 
-def setup_of(wish: MockWish) -> MockSetup:
-    """The setup a wish asks for."""
-    setup = MockSetup()
+def make_device(wish: MockWish) -> tuple[MockDevice, int]:
+    """The device a wish asks for, and the seed it has been given. Raises UsageError and FileError."""
+    setup, seed = MockSetup(), 0
     if wish.bench is not None:
-        raise UsageError("the option 'bench' of a mock is not ready yet")
+        from ramprig.bench import load_bench
+
+        from .from_bench import setup_of_bench
+
+        bench = load_bench(wish.bench)
+        setup, seed = setup_of_bench(bench), bench.mock.seed
+    seed = seed if wish.seed is None else wish.seed
     if wish.baud is not None:
         setup = replace(setup, baud=wish.baud)
     if wish.limits is not None:
         setup = replace(setup, limits_path=wish.limits)
-    return replace(setup, faults=(*setup.faults, *wish.faults))
+    setup = replace(setup, faults=(*setup.faults, *wish.faults))
+    return MockDevice(setup, seed=seed), seed
 
 
 def open_mock(text: str, *, clock: VirtualClock | None = None) -> MockPort:
     """A port to a new mock as `text` asks for."""
     wish = parse_mock(text)
-    device = MockDevice(setup_of(wish), seed=wish.seed)
-    return MockPort(device, pace=wish.pace, seed=wish.seed, name=text, clock=clock)
+    device, seed = make_device(wish)
+    return MockPort(device, pace=wish.pace, seed=seed, name=text, clock=clock)
 
 
 def _factory(wanted: port_open.Wanted) -> Port:
-    return open_mock(wanted.url)
+    clock = wanted.clock
+    return open_mock(wanted.url, clock=clock if isinstance(clock, VirtualClock) else None)
 
 
 def register() -> None:

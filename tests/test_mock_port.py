@@ -1,0 +1,209 @@
+"""The mock as a port: virtual time moves by reading only, real time by the clock, and the cable's faults."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import pytest
+
+from ramprig.errors import LinkLost, UsageError
+from ramprig.mock import MockDevice, MockPort, MockSetup, open_mock
+from ramprig.mock.cable import Cable
+from ramprig.mock.url import parse_mock
+from ramprig.port.clock import VirtualClock
+from ramprig.port.open import open_port
+from ramprig_link.check import seal
+
+INSTANT = MockSetup(baud=0)
+
+
+def virtual(*faults: str, baud: int = 115200, seed: int = 0) -> MockPort:
+    device = MockDevice(MockSetup(baud=baud, faults=faults), seed=seed)
+    return MockPort(device, seed=seed, clock=VirtualClock(start_s=50.0))
+
+
+def read_all(port: MockPort, seconds: float) -> bytes:
+    end = port.clock.now() + seconds
+    data = b""
+    while (left := end - port.clock.now()) > 1e-9:
+        data += port.read(left)
+    return data
+
+
+def test_reading_moves_the_clock_to_the_first_bytes_or_to_the_end_of_the_wait() -> None:
+    port = virtual()
+    assert port.read(1.0).startswith(b"N00 boot")
+    assert port.clock.now() == pytest.approx(50.004)
+    assert port.read(0.5) == b""
+    assert port.clock.now() == pytest.approx(50.504)
+    assert port.read(0.0) == b""
+    assert port.clock.now() == pytest.approx(50.504)
+
+
+def test_many_short_waits_let_as_much_time_pass_as_one_long_one() -> None:
+    port = virtual()
+    port.read(0.1)
+    start = port.clock.now()
+    for _ in range(1000):
+        assert port.read(0.0003) == b""
+    assert port.clock.now() - start == pytest.approx(0.3)
+    assert port.device.ticks == 304
+
+
+def test_a_request_is_answered_after_its_way_there_and_back() -> None:
+    port = virtual()
+    port.read(0.1)
+    start = port.clock.now()
+    port.write(seal(b"01 beat"))
+    assert port.read(1.0).startswith(b"01 ok ")
+    assert 0.003 <= port.clock.now() - start <= 0.006
+
+
+def test_urgent_overtakes_what_is_still_on_the_wire() -> None:
+    port = virtual(baud=9600)
+    port.read(0.1)
+    port.write(seal(b"01 state") * 20)
+    assert port.urgent(b"\n" + seal(b"ff stop 0"))
+    assert port.read(1.0).startswith(b"ff ok ")
+    assert port.clock.now() < 50.2
+
+
+def test_a_break_reaches_the_board() -> None:
+    port = virtual(baud=0)
+    port.read(0.1)
+    assert port.device.controller is not None
+    port.write(seal(f"01 arm 500 {port.device.controller.limits.digest()}".encode("ascii")))
+    port.read(0.1)
+    assert port.send_break()
+    assert b"trip" in read_all(port, 0.01)
+
+
+def test_a_pulled_cable_is_a_lost_link_and_the_board_runs_on() -> None:
+    port = virtual()
+    port.read(0.1)
+    port.device.faults.set("unplug")
+    for use in (lambda: port.read(1.0), lambda: port.write(b"x"), port.send_break):
+        with pytest.raises(LinkLost, match="pulled out"):
+            use()
+    assert port.urgent(b"x") is False
+    cable = Cable(port.device)
+    cable.run(2_000_000_000)
+    assert port.device.ticks > 1900
+
+
+def test_a_closed_port_says_so() -> None:
+    with virtual() as port:
+        port.read(0.1)
+    assert port.urgent(b"x") is False
+    with pytest.raises(LinkLost, match="closed"):
+        port.read(0.1)
+
+
+def test_the_delivery_grid_holds_back_to_its_multiples() -> None:
+    port = virtual("delivery_grid")
+    port.write(seal(b"01 log 7 1 plain"))
+    times = [round((port.clock.now() - 50.0) * 1000, 3) for _ in range(20) if port.read(0.5)]
+    assert len(times) > 10
+    assert [time % 16 for time in times] == [0.0] * len(times)
+
+
+@pytest.mark.parametrize("fault", ["bit_errors=0.05", "dropped_bytes=0.05"])
+def test_the_wire_spoils_both_ways_and_the_same_with_the_same_seed(fault: str) -> None:
+    def talk(seed: int) -> bytes:
+        port = virtual(fault, seed=seed)
+        data = b""
+        for n in range(60):
+            port.write(seal(f"{n:02x} beat".encode("ascii")))
+            data += read_all(port, 0.02)
+        return data
+
+    clean = sum(line.startswith(b"%02x ok " % n) for n, line in enumerate(talk(1).split(b"\n")))
+    assert clean < 55
+    assert b"garbled" in talk(1)
+    assert talk(1) == talk(1) != talk(2)
+
+
+def test_garbage_comes_first_after_opening() -> None:
+    port = virtual("garbage_after_open=100")
+    first = port.read(1.0)
+    assert len(first) == 100
+    assert port.read(1.0).startswith(b"N00 boot")
+
+
+def test_opening_resets_a_board_whose_dtr_does() -> None:
+    port = virtual("reset_on_open")
+    assert port.read(5.0).startswith(b"N00 boot 0 2 external")
+    assert port.clock.now() == pytest.approx(50.304, abs=0.002)
+
+
+def test_a_drifting_clock_gives_fewer_ticks() -> None:
+    port = virtual("clock_drift=1000", baud=0)
+    read_all(port, 100.0)
+    assert port.device.ticks == pytest.approx(100_000 * (1 - 0.001), abs=2)
+
+
+class HandClock:
+    """A real clock for a test: it moves a little whenever it is looked at."""
+
+    def __init__(self) -> None:
+        self.time_s = 10.0
+
+    def now(self) -> float:
+        self.time_s += 0.0004
+        return self.time_s
+
+    def wall(self) -> float:
+        return self.time_s
+
+
+def test_in_real_time_the_device_catches_up_with_the_clock() -> None:
+    clock = HandClock()
+    port = MockPort(MockDevice(INSTANT), pace="real", clock=clock)
+    assert port.read(0.1).startswith(b"N00 boot")
+    clock.time_s += 2.0
+    port.write(seal(b"01 beat"))
+    assert 2000 <= port.device.ticks <= 2020
+    assert port.read(0.1).startswith(b"01 ok 20")
+
+
+def test_virtual_pace_needs_a_virtual_clock() -> None:
+    with pytest.raises(ValueError, match="VirtualClock"):
+        MockPort(MockDevice(INSTANT), pace="virtual", clock=HandClock())
+
+
+# ---- the text ------------------------------------------------------------------------------------------------------
+
+
+def test_a_text_opens_a_mock() -> None:
+    with open_port("mock:?pace=virtual&seed=3&fault=jammed_shaft&fault=bit_errors=1e-3") as port:
+        assert isinstance(port, MockPort)
+        assert port.device.faults.on() == {("jammed_shaft", 0): 1.0, ("bit_errors", 0): 0.001}
+        assert port.name.startswith("mock:?pace=virtual")
+    assert parse_mock("mock:").pace == "real"
+    assert parse_mock("mock:?baud=0&bench=a.yaml").bench == Path("a.yaml")
+
+
+@pytest.mark.parametrize(
+    ("text", "part"),
+    [
+        ("mock:x", "after 'mock:' come options"),
+        ("mock:?pace=slow", "virtual or real"),
+        ("mock:?seed=-1", "whole number"),
+        ("mock:?fault=nothing", "there is no fault"),
+        ("mock:?colour=red", "there is no option 'colour'"),
+    ],
+)
+def test_a_text_that_means_nothing_is_refused(text: str, part: str) -> None:
+    with pytest.raises(UsageError, match=part):
+        open_mock(text)
+
+
+def test_limits_live_on_in_their_file(tmp_path: Path) -> None:
+    # SPEC LIMIT-4
+    text = f"mock:?pace=virtual&baud=0&limits={tmp_path / 'limits.json'}"
+    with open_mock(text) as port:
+        port.write(seal(b"01 limit trip_ma 0 1717"))
+        assert b"01 ok" in read_all(port, 0.01)
+    with open_mock(text) as port:
+        port.write(seal(b"01 limit trip_ma 0"))
+        assert b"1717" in read_all(port, 0.01)
