@@ -229,6 +229,22 @@ def test_a_break_trips_where_outputs_can_act(state: str) -> None:
     assert bench.duty == 0
 
 
+def test_nothing_moves_in_state_tripped_so_clear_need_not_ask() -> None:
+    # SPEC CLEAR-2, ORDER-8
+    bench = Bench()
+    bench.run(30)
+    bench.arm()
+    bench.ramp(3000)
+    bench.ramp(2000, ahead=30)
+    bench.controller.line_break()
+    bench.run(1)
+    assert bench.state == "tripped"
+    assert not bench.controller.drives[0].moving
+    assert len(bench.controller.orders) == 0
+    assert bench.refusal(f"ramp 0 100 0 {bench.tick + 50}") == "state"
+    assert bench.ok("clear") == ()
+
+
 # ---- limits --------------------------------------------------------------------------------------------------------
 
 
