@@ -10,6 +10,7 @@ from collections import deque
 from fractions import Fraction
 
 from ramprig.bench import Bench
+from ramprig.errors import FileError
 from ramprig.quantity import format_duration, format_duty
 
 from . import checking
@@ -193,7 +194,12 @@ class _Compiler:
         begin = scene.elapsed
         first = self._pass(step, scene)
         scene.elapsed = begin + first.totals.least
-        later = self._pass(step, scene)
+        try:
+            later = self._pass(step, scene)
+        except FileError as error:
+            # the step stands well in the first pass: say when it does not
+            found = f"{error.found}, from the second pass of the repeat in line {step.mark.line} on"
+            raise FileError(found, wanted=error.wanted, place=error.place, text=error.text) from error
         if step.until is not None:
             self._measure(step.until, scene)
         scene.elapsed = begin

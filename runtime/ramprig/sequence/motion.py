@@ -84,7 +84,7 @@ class Mover:
         parts.append(self._ramped(step.mark, text, axis, at_zero, step.duty, up))
         scene.motors[axis.name] = _driven(before, step.duty)
         scene.ramped |= {axis.name}
-        totals = Totals(reversals=1)
+        totals = Totals(reversals=1 if before.last_sign * step.duty < 0 else 0)
         for part in parts:
             totals = totals.then(part.totals)
         whole = f"reverse {axis.name} to {format_duty(step.duty)}"

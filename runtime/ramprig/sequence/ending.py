@@ -1,0 +1,263 @@
+"""Runs a plan and brings it to an end: whatever happens, the outputs are off and the reason is known afterwards."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+from typing import Protocol
+
+from ramprig.errors import LinkError, LinkLost, Place, RecordError, Refused, StoppedByUser, WrongDevice
+from ramprig.port.clock import Clock
+from ramprig.session.blocks import Block
+from ramprig.session.events import Tripped
+from ramprig.session.session import Session
+from ramprig_link.words import State
+
+from .executive import Ended, Executive, Progress
+from .listeners import Listeners
+from .outcome import Outcome, Verdict
+from .plan import Plan
+from .rig import Rig
+from .tripsay import explain_trip
+
+TAIL_S = 0.3
+"""Logging goes on for so long after the outputs are off, so that the log shows the end."""
+TRIP_SEEN_S = 0.5
+"""After a refusal a trip that caused it becomes known within this time."""
+OFF_SEEN_S = 6.0
+"""After a trip the outputs are off within this time: the longest stop that a device may take, and some."""
+TRAIL_WAIT_S = 1.0
+"""The trail is frozen within this time of a trip."""
+POLL_S = 0.05
+
+
+class Keeper(Protocol):
+    """Who writes a run down, as far as the end of a run needs it."""
+
+    def on_event(self, event: object) -> None:
+        """Take an event."""
+        ...
+
+    def on_trail(self, blocks: Sequence[Block]) -> None:
+        """Take the fast record around a trip."""
+        ...
+
+
+@dataclass(frozen=True, slots=True)
+class _End:
+    verdict: Verdict
+    sentence: str
+    place: Place | None
+
+
+def run_plan(
+    session: Session,
+    plan: Plan,
+    rig: Rig,
+    *,
+    clock: Clock,
+    listeners: Listeners,
+    keeper: Keeper | None = None,
+    progress: Callable[[Progress], None] | None = None,
+) -> Outcome:
+    """Log, arm, carry the plan out, and end with the outputs off; tells how it ended.
+
+    `clock` is the port's, `listeners` are those of the session. Raises nothing for what device, link, disk or user do:
+    that is the outcome. Any other exception stops the motors first.
+    """
+    run = _Run(session, plan, rig, clock, keeper, listeners, progress)
+    try:
+        return run.whole()
+    finally:
+        run.leave()
+
+
+class _Run:
+    """One run from arming to its outcome."""
+
+    def __init__(
+        self,
+        session: Session,
+        plan: Plan,
+        rig: Rig,
+        clock: Clock,
+        keeper: Keeper | None,
+        listeners: Listeners,
+        progress: Callable[[Progress], None] | None,
+    ) -> None:
+        self.session = session
+        self.plan = plan
+        self.rig = rig
+        self.clock = clock
+        self.keeper = keeper
+        self.listeners = listeners
+        tell = _nothing if keeper is None else keeper.on_event
+        self.executive = Executive(session, clock, plan, rig, tell, progress)
+        self.confirmed = True
+        listeners.add(on_block=self.executive.on_block, on_event=self.executive.on_event)
+
+    def leave(self) -> None:
+        """Listen no longer."""
+        self.listeners.remove(on_block=self.executive.on_block, on_event=self.executive.on_event)
+
+    def whole(self) -> Outcome:
+        """The run and its end."""
+        try:
+            end = self._carry_out()
+        except BaseException:
+            self.session.stop(1)
+            raise
+        end = self._bring_down(end)
+        return self._outcome(end)
+
+    # ---- while it lasts ------------------------------------------------------------------------------------------
+
+    def _carry_out(self) -> _End:
+        """The plan from begin to end, and every known way to end before."""
+        executive, session = self.executive, self.session
+        try:
+            self._begin()
+            executive.run()
+            session.disarm()
+            return self._judged()
+        except Ended as ended:
+            return _End(ended.verdict, ended.sentence, ended.place)
+        except StoppedByUser:
+            return _End(Verdict.STOPPED, "stopped by the user", executive.place)
+        except Refused as refused:
+            return self._refused(refused)
+        except RecordError as error:
+            return _End(Verdict.NOT_RECORDED, f"the log could not be written: {error}", executive.place)
+        except LinkError as error:
+            return _End(Verdict.LINK_LOST, str(error), executive.place)
+
+    def _begin(self) -> None:
+        session, plan = self.session, self.plan
+        if session.identity.tick_us != plan.tick_us:
+            found = f"the board's tick is {session.identity.tick_us} us"
+            raise WrongDevice(f"{found}, and the plan was made for {plan.tick_us} us")
+        if session.trip is not None:
+            # A latch that stands from before is somebody else's finding: it is shown, not cleared away.
+            trip = explain_trip(session.trip, self.rig)
+            raise Ended(Verdict.TRIPPED, f"the device is still tripped from before ({trip}): clear it first", None)
+        session.log(plan.period_ticks, plan.mask)
+        session.arm(self.rig.bench.link.lease_ms)
+
+    def _judged(self) -> _End:
+        tally = self.executive.tally
+        if not tally.failed:
+            text = "all steps carried out"
+            if tally.held:
+                text += f", {_count(tally.held, 'expectation')} held"
+            return _End(Verdict.PASSED, text, None)
+        first = tally.failures[0]
+        place = self.executive.first_failure_place
+        more = f" (and {tally.failed - 1} more)" if tally.failed > 1 else ""
+        return _End(Verdict.FAILED, f"{first.sentence}{more}", place)
+
+    def _refused(self, refused: Refused) -> _End:
+        """A refusal is often the first sign of a trip, whose notice is on its way."""
+        executive = self.executive
+        bound_s = self.clock.now() + TRIP_SEEN_S
+        try:
+            while executive.trip is None and self.clock.now() < bound_s:
+                self.session.pump(self.clock.now() + POLL_S)
+        except StoppedByUser:
+            return _End(Verdict.STOPPED, "stopped by the user", executive.place)
+        except LinkError as error:
+            return _End(Verdict.LINK_LOST, str(error), executive.place)
+        if executive.trip is not None:
+            return _End(Verdict.TRIPPED, "", executive.place)
+        return _End(Verdict.REFUSED, str(refused), executive.place)
+
+    # ---- the end -------------------------------------------------------------------------------------------------
+
+    def _bring_down(self, end: _End) -> _End:
+        """Outputs off and confirmed, the trip explained and its trail kept, the log ended."""
+        try:
+            if self.executive.trip is not None and end.verdict is Verdict.TRIPPED:
+                sentence = self._take_trip(self.executive.trip)
+                end = _End(end.verdict, sentence, end.place)
+            if not self._known_off():
+                report = self.session.stop(1)
+                self.confirmed = report.confirmed
+                if not report.confirmed:
+                    end = _End(end.verdict, f"{end.sentence}; stop {report.verdict}", end.place)
+            self._end_log()
+        except StoppedByUser:
+            self.confirmed = self.session.stop(1).confirmed
+        except (LinkError, Refused) as error:
+            self.confirmed = False
+            if end.verdict is not Verdict.LINK_LOST:
+                end = _End(end.verdict, f"{end.sentence}; afterwards: {error}", end.place)
+        except RecordError as error:
+            end = _End(Verdict.NOT_RECORDED, f"{end.sentence}; the log could not be written: {error}", end.place)
+        return end
+
+    def _known_off(self) -> bool:
+        """Whether the device says, asked now, that its outputs are off."""
+        if not self.session.valid:
+            return False
+        try:
+            return self.session.state().outputs_off
+        except LinkLost:
+            return False
+
+    def _take_trip(self, trip: Tripped) -> str:
+        """Wait until the outputs are off, ask why, keep the trail; the sentence."""
+        session = self.session
+        sentence = explain_trip(trip, self.rig)
+        if not session.valid:
+            return sentence
+        bound_s = self.clock.now() + OFF_SEEN_S
+        while session.state().state is not State.TRIPPED and self.clock.now() < bound_s:
+            session.pump(self.clock.now() + POLL_S)
+        record = session.why()
+        if record is not None and record.tick != trip.tick and self.executive.trip is not None:
+            sentence = f"{sentence}; then {explain_trip(self.executive.trip, self.rig)}"
+        if self.keeper is not None:
+            axes = sorted(self.rig.axes.values(), key=lambda axis: (axis.index != trip.index, axis.index))
+            for axis in axes:
+                block = self._trail(axis.index)
+                if block is not None:
+                    self.keeper.on_trail([block])
+        seconds = (0 if trip.tick is None else max(0, trip.tick - self.executive.start)) * self.plan.tick_us / 1e6
+        return f"{sentence}, {seconds:.2f} s into the run" if self.executive.start else sentence
+
+    def _trail(self, axis: int) -> Block | None:
+        bound_s = self.clock.now() + TRAIL_WAIT_S
+        while True:
+            block = self.session.trail(axis)
+            if block is not None or self.clock.now() >= bound_s:
+                return block
+            self.session.pump(self.clock.now() + POLL_S)
+
+    def _end_log(self) -> None:
+        if self.session.valid and self.session.logging and self.confirmed:
+            self.session.pump(self.clock.now() + TAIL_S)
+            self.session.stop_log()
+
+    def _outcome(self, end: _End) -> Outcome:
+        executive = self.executive
+        tally = executive.tally
+        elapsed_s = max(0, executive.now - executive.start) * self.plan.tick_us / 1e6 if executive.start else 0.0
+        return Outcome(
+            verdict=end.verdict,
+            sentence=end.sentence,
+            place=end.place,
+            held=tally.held,
+            failed=tally.failed,
+            failures=tuple(tally.failures),
+            passes=executive.passes,
+            elapsed_s=elapsed_s,
+            stop_confirmed=self.confirmed,
+            overdue=executive.overdue,
+        )
+
+
+def _nothing(event: object) -> None:
+    """Nobody writes this run down."""
+
+
+def _count(number: int, what: str) -> str:
+    return f"{number} {what}" if number == 1 else f"{number} {what}s"

@@ -1,0 +1,222 @@
+"""A sequence on a port from begin to end: opens the device, makes the plan and the run folder, runs, writes the end."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator, Mapping
+from contextlib import AbstractContextManager, contextmanager, nullcontext
+from dataclasses import dataclass
+from pathlib import Path
+
+from ramprig.bench import Bench
+from ramprig.port.base import Port
+from ramprig.port.clock import Clock
+from ramprig.record.columns import Columns, MotorColumns, ServoColumns, columns_of
+from ramprig.record.events import Json, jsonable
+from ramprig.record.folder import InputFile, RunDescription, RunFolder
+from ramprig.record.manifest import Anchor, RunEnd
+from ramprig.record.recorder import Recorder
+from ramprig.record.writer import Trouble
+from ramprig.session.limits import LimitKey
+from ramprig.session.opening import Wanted
+from ramprig.session.readings import Identity
+from ramprig.session.session import Session
+
+from .compile import compile_plan
+from .ending import run_plan
+from .executive import Progress
+from .listeners import Listeners
+from .outcome import Outcome, Verdict
+from .plan import Plan
+from .reading import Sequence
+from .rig import Rig
+
+COUNTS_PER_REV_WITHOUT_ENCODER = 1.0
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RunResult:
+    """What is left of a run: its outcome and its folder, None where none was wanted."""
+
+    outcome: Outcome
+    folder: Path | None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RunWish:
+    """What to run and how to write it down.
+
+    `runs` is the folder for run folders, None for none. `settings` are the values of the command line, for the record.
+    `virtual` is for a port in virtual time: the log is written in the caller's thread, and the same input gives the
+    same bytes.
+    """
+
+    sequence: Sequence
+    bench: Bench
+    runs: Path | None = None
+    title: str = ""
+    settings: Mapping[str, object] | None = None
+    seed: int | None = None
+    virtual: bool = False
+    short_id: str | None = None
+
+
+def wanted_of(bench: Bench) -> Wanted:
+    """What a bench asks of the device that answers."""
+
+    def limits(identity: Identity) -> dict[LimitKey, int]:
+        return bench.limits(
+            tick_us=identity.tick_us, axes=identity.axes, servos=identity.servos, max_duty=identity.max_duty
+        )
+
+    return Wanted(
+        board=bench.board.name, serial=bench.board.serial, axes=bench.axes, servos=bench.channels, limits=limits
+    )
+
+
+def bench_columns(bench: Bench, *, tick_us: int) -> Columns:
+    """The columns of a bench's samples file."""
+    motors = [
+        MotorColumns(
+            motor.name,
+            motor.axis,
+            float(motor.counts_per_turn) or COUNTS_PER_REV_WITHOUT_ENCODER,
+            count_sign=-1 if motor.sense < 0 else 1,
+        )
+        for motor in bench.motors
+    ]
+    servos = [
+        ServoColumns(servo.name, servo.channel, float(servo.neutral_us), float(servo.us_per_deg))
+        for servo in bench.servos
+    ]
+    return columns_of(motors, servos, tick_us=tick_us)
+
+
+def run_sequence(
+    wish: RunWish,
+    port: Port,
+    *,
+    progress: Callable[[Progress], None] | None = None,
+    guard: Callable[[Session], AbstractContextManager[object]] | None = None,
+) -> RunResult:
+    """Run a sequence on a port, which is closed at the end; tells how it ended.
+
+    `guard` is entered while the device is open, such as `StopOnSignals`. Raises what opening the device raises
+    (LinkError and its kin), `FileError` where the plan does not fit the board, RecordError where the run folder cannot
+    be made; in each case nothing has moved.
+    """
+    listeners = Listeners()
+    compile_plan(wish.sequence, wish.bench)  # what cannot be carried out is refused before a device is touched
+    session = Session.open(
+        port,
+        wanted=wanted_of(wish.bench),
+        seed=wish.seed,
+        on_block=listeners.on_block,
+        on_event=listeners.on_event,
+    )
+    with session, guard(session) if guard is not None else nullcontext():
+        return run_on_session(
+            wish, session, clock=port.clock, port_name=port.name, listeners=listeners, progress=progress
+        )
+
+
+def run_on_session(
+    wish: RunWish,
+    session: Session,
+    *,
+    clock: Clock,
+    port_name: str,
+    listeners: Listeners,
+    progress: Callable[[Progress], None] | None = None,
+) -> RunResult:
+    """Run a sequence on a session that is open with this bench's limits and disarmed, such as a shell's; it stays open.
+
+    Raises as above.
+    """
+    identity = session.identity
+    rig = Rig.of(wish.bench, tick_us=identity.tick_us)
+    plan = compile_plan(wish.sequence, wish.bench, tick_us=identity.tick_us)
+    if wish.runs is None:
+        outcome = run_plan(session, plan, rig, clock=clock, listeners=listeners, progress=progress)
+        return RunResult(outcome=outcome, folder=None)
+    with _recording(wish, session, wish.runs, clock, port_name, listeners) as recorder:
+        outcome = run_plan(session, plan, rig, clock=clock, listeners=listeners, keeper=recorder, progress=progress)
+        folder = recorder.finish(_end_of(session, plan, outcome, clock))
+    return RunResult(outcome=outcome, folder=folder)
+
+
+@contextmanager
+def _recording(
+    wish: RunWish, session: Session, runs: Path, clock: Clock, port_name: str, listeners: Listeners
+) -> Iterator[Recorder]:
+    """A recorder that listens to the session; a run that breaks off is written down as far as it came."""
+    recorder = _recorder(wish, session, runs, clock, port_name)
+    listeners.add(on_block=recorder.on_block, on_event=recorder.on_event)
+    try:
+        yield recorder
+    except BaseException as error:
+        recorder.finish(RunEnd(verdict="broken off", stop_reason=f"{type(error).__name__}: {error}"))
+        raise
+    finally:
+        listeners.remove(on_block=recorder.on_block, on_event=recorder.on_event)
+
+
+def _recorder(wish: RunWish, session: Session, runs: Path, clock: Clock, port_name: str) -> Recorder:
+    sequence, bench = wish.sequence, wish.bench
+    roles = ["sequence", *["include"] * (len(sequence.files) - 1)]
+    inputs = [InputFile("bench", bench.file, bench.file_bytes)]
+    inputs += [InputFile(role, file.file, file.data) for role, file in zip(roles, sequence.files, strict=True)]
+    identity = jsonable(session.identity)
+    assert isinstance(identity, dict)  # a dataclass is written as an object
+    settings: dict[str, object] = {"values": dict(sequence.values), **(wish.settings or {})}
+    description = RunDescription(
+        name=wish.title or sequence.name, port=port_name, identity=identity, settings=settings, inputs=inputs
+    )
+    folder = RunFolder.create(runs, description, started_unix_s=clock.wall(), short_id=wish.short_id)
+
+    def on_trouble(trouble: Trouble) -> None:
+        if trouble.kind.demands_stop:
+            session.panic(1)
+
+    return Recorder(
+        folder,
+        bench_columns(bench, tick_us=session.identity.tick_us),
+        start=_anchor(session, clock),
+        tick_us=session.identity.tick_us,
+        clock=clock,
+        on_trouble=on_trouble,
+        threaded=not wish.virtual,
+    )
+
+
+def _anchor(session: Session, clock: Clock) -> Anchor:
+    return Anchor(tick=session.tick_now(), host_s=clock.now(), unix_s=clock.wall())
+
+
+def _end_of(session: Session, plan: Plan, outcome: Outcome, clock: Clock) -> RunEnd:
+    """The end of the run for `run.json`."""
+    known = session.valid and outcome.verdict is not Verdict.LINK_LOST
+    fit = session.clock_fit if known else None
+    account = session.accounting
+    health = jsonable(session.health)
+    results: dict[str, Json] = {
+        "exit_code": outcome.exit_code,
+        "place": None if outcome.place is None else str(outcome.place),
+        "expectations_held": outcome.held,
+        "expectations_failed": outcome.failed,
+        "failures": [jsonable(failure) for failure in outcome.failures],
+        "passes": outcome.passes,
+        "elapsed_s": round(outcome.elapsed_s, 3),
+        "stop_confirmed": outcome.stop_confirmed,
+        "orders_overdue": outcome.overdue,
+        "planned_s": round(plan.totals.least * plan.tick_us / 1e6, 3),
+        "remarks": list(plan.remarks),
+    }
+    return RunEnd(
+        verdict=outcome.verdict.word,
+        stop_reason=outcome.sentence,
+        end=_anchor(session, clock) if known else None,
+        drift_ppm=None if fit is None else fit.drift_ppm,
+        accounts=() if account is None else (account,),
+        link=health if isinstance(health, dict) else {},
+        results=results,
+    )
