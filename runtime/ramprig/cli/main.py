@@ -84,7 +84,6 @@ def main(arguments: Sequence[str] | None = None) -> int:
     args = parser_for(wanted).parse_args(words)
     try:
         code = command_named(args.command).carry_out(args)
-        sys.stdout.flush()
     except Bug as error:
         return _bug(error)
     except RamprigError as error:
@@ -94,16 +93,19 @@ def main(arguments: Sequence[str] | None = None) -> int:
         tell("Stopped by the user.")
         return EXIT_USER
     except BrokenPipeError:
-        return _nobody_reads()
+        code = 0  # as by `| head`: who has read enough has no complaint
     except Exception as error:  # whatever else comes is ours to explain, not the user's to read
         return _bug(error)
+    _flush()
     return code
 
 
-def _nobody_reads() -> int:
-    """Standard output was closed, as by `| head`: nothing more is said there, not even at the interpreter's end."""
-    os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-    return 0
+def _flush() -> None:
+    """Write out what is left, so that an output that is gone cannot change the exit code at the interpreter's end."""
+    try:
+        sys.stdout.flush()
+    except OSError:
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
 
 
 def _bug(error: Exception) -> int:

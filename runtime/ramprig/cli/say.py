@@ -18,3 +18,9 @@ def tell(text: str) -> None:
     """A line beside the result; never raises for a terminal that is gone."""
     with contextlib.suppress(OSError, ValueError):
         print(text, file=sys.stderr, flush=True)
+
+
+def say_surely(text: str) -> None:
+    """A line of the result of a run, which is over and stays what it is though nobody reads it; never raises."""
+    with contextlib.suppress(OSError, ValueError):
+        print(text, flush=True)

@@ -1,0 +1,75 @@
+"""`ramprig run FILE`: a sequence on the bench, for real."""
+
+from __future__ import annotations
+
+import argparse
+import sys
+from typing import TYPE_CHECKING
+
+from ramprig.cli.running import Way, add_run_arguments, carry_out_run, mock_url, on_terminal
+from ramprig.cli.say import tell
+from ramprig.errors import StoppedByUser
+
+if TYPE_CHECKING:
+    from ramprig.cli.files import Pair
+
+EPILOG = """On a terminal it shows what will move and asks before it arms; --yes does not ask. SIGINT (Ctrl-C),
+SIGTERM and SIGHUP stop the motors in order, a second one within a second cuts them off."""
+
+
+def declare(parser: argparse.ArgumentParser) -> None:
+    """The sequence and the port."""
+    add_run_arguments(parser)
+    parser.add_argument("--port", metavar="URL", help="the port, instead of the bench's (see `ramprig ports`)")
+    parser.add_argument("--yes", action="store_true", help="do not ask before anything moves")
+    parser.epilog = EPILOG
+
+
+def carry_out(args: argparse.Namespace) -> int:
+    """Run; returns the exit code of its verdict."""
+    from ramprig.cli.files import read_pair, values_of
+
+    pair = read_pair(args.file, bench=args.bench, values=values_of(args.settings))
+    url = pair.bench.port.url if args.port is None else args.port
+    is_mock = url.startswith("mock:")
+    if is_mock:
+        url = mock_url(url, pair.bench_path)
+    elif not args.yes and on_terminal():
+        ask(pair, url)
+    return carry_out_run(pair, Way(url=url, virtual=False, runs=args.runs, title=args.title))
+
+
+def ask(pair: Pair, url: str) -> None:
+    """Show the cautions and what will move, and wait for the word `yes`. Raises StoppedByUser for any other."""
+    from ramprig.cautions import cautions_lines
+
+    for line in [*cautions_lines(), "", *what_moves(pair, url)]:
+        tell(line)
+    tell("Type yes and ENTER to arm and run; anything else leaves everything off.")
+    if sys.stdin.readline().strip().lower() != "yes":
+        raise StoppedByUser("Not run: it was not confirmed. Nothing has moved.")
+
+
+def what_moves(pair: Pair, url: str) -> list[str]:
+    """What the run is, on which port and board, what moves and how far, and who answers for the bench."""
+    from ramprig.quantity import format_duration, format_duty
+    from ramprig.sequence.compile import compile_plan
+
+    plan = compile_plan(pair.sequence, pair.bench)
+    bench, totals = pair.bench, plan.totals
+    tick_s = plan.tick_us / 1e6
+    lines = [
+        f"{plan.name}, on {bench.name}: port {url}, board {bench.board.name} {bench.board.serial or '(any serial)'}",
+        f"  takes {format_duration(round(totals.least * tick_s))} to {format_duration(round(totals.most * tick_s))}, "
+        f"{totals.reversals} reversals",
+    ]
+    lines += [f"  {name} moves, up to {format_duty(duty)} duty" for name, duty in totals.peak_duty.items()]
+    lines += [f"  {servo.name} may move, {servo.low_deg:g} deg to {servo.high_deg:g} deg" for servo in bench.servos]
+    lines += [f"  {name}: {text}" for name, text in safety_facts(pair) if text]
+    return lines
+
+
+def safety_facts(pair: Pair) -> list[tuple[str, str]]:
+    """Who answers, where, and what cuts the power, as the bench file says."""
+    safety = pair.bench.safety
+    return [("contact", safety.contact), ("place", safety.place), ("power cut", safety.power_cut)]

@@ -1,0 +1,135 @@
+"""The one way to run a sequence from the command line, on a bench or, for a rehearsal, on the mock in virtual time."""
+
+from __future__ import annotations
+
+import argparse
+import sys
+from collections.abc import Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING
+from urllib.parse import urlencode
+
+from ramprig.cli.progress import Progress
+from ramprig.cli.say import say_surely, tell
+
+if TYPE_CHECKING:
+    from ramprig.bench import Bench
+    from ramprig.cli.files import Pair
+    from ramprig.port.base import Port
+    from ramprig.sequence.executive import Progress as HowFar
+    from ramprig.sequence.outcome import Outcome
+
+FAILURES_SHOWN = 20
+"""Failed expectations printed at the end; all are in the run folder."""
+RUNS = Path("runs")
+
+NOT_PROVED = (
+    "A rehearsal shows that the sequence does what you mean, against a model with the bench file's figures. It does "
+    "not prove wiring, directions, friction, heat, the supply, the link, or that the limits suit the motor."
+)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Way:
+    """Where and how to run: on `url` of the bench's or the user's choice; `runs` None writes nothing down."""
+
+    url: str
+    virtual: bool
+    runs: Path | None
+    title: str = ""
+    seed: int | None = None
+
+
+def add_run_arguments(parser: argparse.ArgumentParser) -> None:
+    """What runs and rehearsals have in common."""
+    from ramprig.cli.check import add_reading_arguments
+
+    parser.add_argument("file", type=Path, metavar="FILE", help="the sequence")
+    add_reading_arguments(parser)
+    parser.add_argument("--runs", type=Path, default=RUNS, metavar="DIR", help="where run folders go (default: runs)")
+    parser.add_argument("--title", default="", metavar="TEXT", help="name of the run, instead of the sequence's")
+
+
+def mock_url(
+    url: str, bench_path: Path, *, virtual: bool = False, seed: int | None = None, faults: Sequence[str] = ()
+) -> str:
+    """The mock that `url` asks for, made from the bench file where it does not say which."""
+    options: list[tuple[str, str]] = []
+    if virtual:
+        options.append(("pace", "virtual"))
+    if "bench=" not in url:
+        options.append(("bench", str(bench_path)))
+    if seed is not None:
+        options.append(("seed", str(seed)))
+    options += [("fault", fault) for fault in faults]
+    joint = "&" if "?" in url else "?"
+    return url + joint + urlencode(options) if options else url
+
+
+def open_port_for(way: Way, bench: Bench) -> Port:
+    """The port of a run. Raises UsageError, PortNotFound, PortUnavailable."""
+    from ramprig.mock.url import register
+    from ramprig.port.open import open_port
+
+    register()
+    return open_port(way.url, baud=bench.port.baud, dtr=bench.port.dtr)
+
+
+def carry_out_run(pair: Pair, way: Way) -> int:
+    """Run, with progress and a sentence at the end; returns the exit code. Raises what `run_sequence` raises."""
+    from ramprig.sequence.running import RunWish, run_sequence
+    from ramprig.session.signals import StopOnSignals
+
+    wish = RunWish(
+        sequence=pair.sequence,
+        bench=pair.bench,
+        runs=way.runs,
+        title=way.title,
+        settings={"port": way.url, "rehearsal": way.virtual},
+        seed=way.seed,
+        virtual=way.virtual,
+    )
+    progress = Progress()
+    try:
+        result = run_sequence(
+            wish,
+            open_port_for(way, pair.bench),
+            progress=lambda far: progress.show(lambda: how_far(far)),
+            guard=StopOnSignals,
+        )
+    finally:
+        progress.close()
+    tell_end(result.outcome, result.folder, rehearsal=way.virtual)
+    return result.outcome.exit_code
+
+
+def how_far(far: HowFar) -> str:
+    """Progress in one line."""
+    from ramprig.quantity import format_duration
+
+    text = f"{far.fraction:4.0%}  {format_duration(round(far.left_s))} left  {far.doing}"
+    if far.passes:
+        text += f"  pass {far.passes}"
+    if far.failed:
+        text += f"  {far.failed} failed"
+    return text
+
+
+def tell_end(outcome: Outcome, folder: Path | None, *, rehearsal: bool) -> None:
+    """What failed, where the files are, and last of all how it ended and why."""
+    for failure in outcome.failures[:FAILURES_SHOWN]:
+        say_surely(f"not as expected: {failure.sentence} [{failure.place}]")
+    more = outcome.failed - min(len(outcome.failures), FAILURES_SHOWN)
+    if more > 0:
+        say_surely(f"and {more} more, in the run folder")
+    if rehearsal:
+        tell(NOT_PROVED)
+    if folder is not None:
+        say_surely(f"run folder: {folder}")
+    say_surely(str(outcome))
+
+
+def on_terminal() -> bool:
+    """Whether somebody can be asked."""
+    return sys.stdin is not None and sys.stdin.isatty() and sys.stderr.isatty()
