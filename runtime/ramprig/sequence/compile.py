@@ -7,6 +7,7 @@ since from its second pass on it begins as it ends.
 from __future__ import annotations
 
 from collections import deque
+from dataclasses import replace
 from fractions import Fraction
 
 from ramprig.bench import Bench
@@ -140,7 +141,7 @@ class _Compiler:
                 begin = scene.elapsed
                 part = self.series(steps, scene, f"include {file}")
                 scene.elapsed = begin
-                return part
+                return replace(part, mark=step.mark, heading=True)
             case _:
                 return self._observe(step, scene)
 
@@ -158,7 +159,11 @@ class _Compiler:
                 self._measure(measure, scene)
                 totals = Totals(judgements=1)
                 return Judge(
-                    mark=step.mark, text=f"expect {measure}", totals=totals, measure=measure, stop_on_failure=stop
+                    mark=step.mark,
+                    text=f"expect {measure}{', else stop' if stop else ''}",
+                    totals=totals,
+                    measure=measure,
+                    stop_on_failure=stop,
                 )
             case Note(name=name):
                 scene.marks |= {name}

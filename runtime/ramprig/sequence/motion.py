@@ -142,6 +142,7 @@ class Mover:
         scene.ramped |= {axis.name}
         totals = Totals(ticks, ticks, orders=len(motions), peak_duty={axis.name: abs(before.duty)})
         text = f"{axis.name} to zero in {self.rig.show(ticks)}, then {step.rest}"
+        text = text if before.duty else f"{axis.name} at zero, {step.rest}"
         return Run(mark=step.mark, text=text, totals=totals, motions=tuple(motions), length=ticks, ramped=axis.name)
 
     def to_zero(self, mark: Mark, scene: Scene) -> Run:

@@ -185,9 +185,10 @@ class Moment(Part):
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Series(Part):
-    """Parts one after the other."""
+    """Parts one after the other; `heading` where the report shows its text, as for an included file."""
 
     parts: tuple[Part, ...]
+    heading: bool = False
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -10,7 +10,6 @@ from pathlib import Path
 from ramprig.bench import Bench
 from ramprig.port.base import Port
 from ramprig.port.clock import Clock
-from ramprig.record.columns import Columns, MotorColumns, ServoColumns, columns_of
 from ramprig.record.events import Json, jsonable
 from ramprig.record.folder import InputFile, RunDescription, RunFolder
 from ramprig.record.manifest import Anchor, RunEnd
@@ -21,6 +20,7 @@ from ramprig.session.opening import Wanted
 from ramprig.session.readings import Identity
 from ramprig.session.session import Session
 
+from .columns import bench_columns
 from .compile import compile_plan
 from .ending import run_plan
 from .executive import Progress
@@ -29,8 +29,6 @@ from .outcome import Outcome, Verdict
 from .plan import Plan
 from .reading import Sequence
 from .rig import Rig
-
-COUNTS_PER_REV_WITHOUT_ENCODER = 1.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -71,24 +69,6 @@ def wanted_of(bench: Bench) -> Wanted:
     return Wanted(
         board=bench.board.name, serial=bench.board.serial, axes=bench.axes, servos=bench.channels, limits=limits
     )
-
-
-def bench_columns(bench: Bench, *, tick_us: int) -> Columns:
-    """The columns of a bench's samples file."""
-    motors = [
-        MotorColumns(
-            motor.name,
-            motor.axis,
-            float(motor.counts_per_turn) or COUNTS_PER_REV_WITHOUT_ENCODER,
-            count_sign=-1 if motor.sense < 0 else 1,
-        )
-        for motor in bench.motors
-    ]
-    servos = [
-        ServoColumns(servo.name, servo.channel, float(servo.neutral_us), float(servo.us_per_deg))
-        for servo in bench.servos
-    ]
-    return columns_of(motors, servos, tick_us=tick_us)
 
 
 def run_sequence(

@@ -13,7 +13,7 @@ from enum import StrEnum
 from fractions import Fraction
 
 from ramprig.errors import FileError
-from ramprig.quantity import ANGLE, COUNTS, CURRENT, DURATION, SPEED, Band, Kind
+from ramprig.quantity import ANGLE, COUNTS, CURRENT, DURATION, SPEED, Band, Kind, format_duration
 from ramprig.yamlfile import Mark
 
 
@@ -176,7 +176,11 @@ class Measure:
     def __str__(self) -> str:
         to = f" to {self.settle}" if self.settle is not None else ""
         since = f" since {self.since}" if self.since else ""
-        return f"{self.what.noun} of {self.motor}{to}{since} is {self.band}"
+        over = ""
+        if self.what in (What.SPEED, What.CURRENT):
+            each = "" if self.by is By.MEAN else ", every sample"
+            over = f" over {format_duration(self.over_s)}{each}"
+        return f"{self.what.noun} of {self.motor}{to}{since} is {self.band}{over}"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
