@@ -157,10 +157,11 @@ class _Compiler:
                 return Await(mark=step.mark, text=text, totals=totals, measure=measure, limit=limit)
             case Expect(measure=measure, stop_on_failure=stop):
                 self._measure(measure, scene)
+                text = f"expect {measure}, else stop" if stop else f"expect {measure}"
                 totals = Totals(judgements=1)
                 return Judge(
                     mark=step.mark,
-                    text=f"expect {measure}{', else stop' if stop else ''}",
+                    text=text,
                     totals=totals,
                     measure=measure,
                     stop_on_failure=stop,

@@ -108,6 +108,7 @@ class Executive:
     _number: count[int] = field(default_factory=count)
     _dispatch: Dispatch = field(init=False)
     _waited: int = 0
+    _end: int = 0
 
     def __post_init__(self) -> None:
         self._dispatch = Dispatch(self.session, tick_s=self._tick_s, tell=self.tell)
@@ -144,7 +145,7 @@ class Executive:
         self._wait_for_samples()
         self.start = self.session.start_in()
         self._begin(walk(self.plan.root, self.start), None)
-        while self._strands or self._agenda:
+        while self._strands or self._agenda or self.now < self._end:
             self.now = self.session.tick_now()
             self._check()
             self._advance()
@@ -152,8 +153,7 @@ class Executive:
             self._dispatch.note_overdue(self.now)
             if self.progress is not None:
                 self.progress(self.where())
-            if self._strands or self._agenda:
-                self._pump_for(self._idle_s())
+            self._pump_for(self._idle_s())
         self._finish_orders()
 
     def _wait_for_samples(self) -> None:
@@ -213,6 +213,8 @@ class Executive:
         """How long nothing is due."""
         ahead = round(AHEAD_S / self._tick_s)
         wait_s = IDLE_S
+        if not self._strands:
+            wait_s = min(wait_s, (self._end - self.now) * self._tick_s)
         if self._agenda:
             wait_s = min(wait_s, max(POLL_S, (self._agenda[0][0] - self.now) * self._tick_s))
         for strand in self._strands:
@@ -245,6 +247,7 @@ class Executive:
     def _over(self, join: _Join | None, tick: int) -> None:
         """A branch is over; the last one of a fork lets its strand go on."""
         if join is None:
+            self._end = tick
             return
         join.left -= 1
         join.latest = max(join.latest, tick)

@@ -102,7 +102,10 @@ def _log(plan: Plan, bench: Bench) -> str:
 
 
 def timeline_lines(plan: Plan) -> list[str]:
-    """One line for each part that does something; a repeat shows its first pass. `+` marks times after a wait, `~` lines of an included file."""
+    """One line for each part that does something; a repeat shows its first pass.
+
+    `+` marks times after a wait, `~` lines of an included file.
+    """
     file = plan.root.mark.source.file
     lines = [f"{'at':>12}  {'for':>10}  {'line':>6}  what"]
     left_out = 0
