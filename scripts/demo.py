@@ -14,9 +14,10 @@ import environment
 
 
 def story() -> int:
-    """Tell the demonstration and return the exit status. It is not there yet, and says so."""
-    print("The demonstration is not there yet: the 'ramprig' command it shows is still being built.")
-    return 1
+    """Tell the demonstration and return the exit status."""
+    import demo_story  # needs the private environment
+
+    return demo_story.story()
 
 
 def go_inside(arguments: "list[str]") -> int:

@@ -52,24 +52,14 @@ def ask(pair: Pair, url: str) -> None:
 
 def what_moves(pair: Pair, url: str) -> list[str]:
     """What the run is, on which port and board, what moves and how far, and who answers for the bench."""
-    from ramprig.quantity import format_duration, format_duty
     from ramprig.sequence.compile import compile_plan
+    from ramprig.sequence.report import summary_lines
 
-    plan = compile_plan(pair.sequence, pair.bench)
-    bench, totals = pair.bench, plan.totals
-    tick_s = plan.tick_us / 1e6
-    lines = [
-        f"{plan.name}, on {bench.name}: port {url}, board {bench.board.name} {bench.board.serial or '(any serial)'}",
-        f"  takes {format_duration(round(totals.least * tick_s))} to {format_duration(round(totals.most * tick_s))}, "
-        f"{totals.reversals} reversals",
+    bench, safety = pair.bench, pair.bench.safety
+    facts = [
+        ("port", f"{url}, board {bench.board.name} {bench.board.serial or '(any serial)'}"),
+        *((servo.name, f"may move, {servo.low_deg:g} deg to {servo.high_deg:g} deg") for servo in bench.servos),
+        *(("contact", safety.contact), ("place", safety.place), ("power cut", safety.power_cut)),
     ]
-    lines += [f"  {name} moves, up to {format_duty(duty)} duty" for name, duty in totals.peak_duty.items()]
-    lines += [f"  {servo.name} may move, {servo.low_deg:g} deg to {servo.high_deg:g} deg" for servo in bench.servos]
-    lines += [f"  {name}: {text}" for name, text in safety_facts(pair) if text]
-    return lines
-
-
-def safety_facts(pair: Pair) -> list[tuple[str, str]]:
-    """Who answers, where, and what cuts the power, as the bench file says."""
-    safety = pair.bench.safety
-    return [("contact", safety.contact), ("place", safety.place), ("power cut", safety.power_cut)]
+    plan = compile_plan(pair.sequence, bench)
+    return [*summary_lines(plan, bench), *(f"{name:<10}{text}" for name, text in facts if text)]
