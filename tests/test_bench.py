@@ -64,13 +64,13 @@ def vent() -> Bench:
 def test_the_ready_bench_gives_every_limit_in_protocol_units(vent: Bench) -> None:
     assert vent.limits() == {
         ("lease_ms", 0): 500,
-        ("stop_ticks", 0): 500,
+        ("stop_ticks", 0): 1000,
         ("under_mv", 0): 9000,
         ("over_mv", 0): 16000,
         ("supply_ticks", 0): 5,
         ("ceiling_duty", 0): 8000,  # 80 %
         ("slew_up_duty", 0): 10,  # 100 %/s is 0.1 % a millisecond
-        ("slew_down_duty", 0): 20,
+        ("slew_down_duty", 0): 10,  # 100 %/s
         ("dwell_ticks", 0): 300,
         ("still_counts", 0): 2,
         ("still_ticks", 0): 50,
@@ -307,7 +307,7 @@ def test_the_echo_tells_what_the_file_means(vent: Bench) -> None:
         "vent: duty up to 80 %, trips above 2.5 A for 5 ms, 900 mA for ever",
         "vent: speed_counts: '75 rpm' is held as 74.87 rpm",
         "latch: 1100 us to 1900 us = -40 deg to 40 deg, home 1500 us = 0 deg (angles are commanded, not measured)",
-        "link: the board stops by itself after 500 ms of silence, and is off 500 ms later at most",
+        "link: the board stops by itself after 500 ms of silence, and is off 1 s later at most",
     ]
 
 

@@ -224,7 +224,7 @@ def _safety(fields: Fields) -> Safety:
 
 SAFETY = Record((_CONTACT, _PLACE, _FUSE, _POWER_CUT, _GUARD), _safety)
 
-_FAULT_NAME = TextShape(r"[a-z][a-z0-9-]{0,39}", "the name of a fault of the mock, such as jammed")
+_FAULT_NAME = TextShape(r"[a-z][a-z0-9_-]{0,39}", "the name of a fault of the mock, such as jammed_shaft")
 _FAULT = Key("fault", _FAULT_NAME, "name of the fault", required=True)
 _MOTOR = Key("motor", TextShape(), "the motor it is in")
 _FROM = Key("from", QuantityShape(DURATION), "when it begins")

@@ -183,6 +183,11 @@ class _Run:
                 self.confirmed = report.confirmed
                 if not report.confirmed:
                     end = _End(end.verdict, f"{end.sentence}; stop {report.verdict}", end.place)
+                if self.executive.trip is not None and end.verdict is not Verdict.TRIPPED:
+                    sentence = self._take_trip(self.executive.trip)
+                    end = _End(
+                        end.verdict, f"{end.sentence}; while stopping, the device tripped: {sentence}", end.place
+                    )
             self._end_log()
         except StoppedByUser:
             self.confirmed = self.session.stop(1).confirmed
