@@ -146,9 +146,13 @@ class Core:
 
     def read_state(self) -> Reading:
         """Ask for `state`."""
-        answered = self.request("state")
+        return self.take_state(self.request("state"))
+
+    def take_state(self, answered: host.Answered) -> Reading:
+        """The reading in an `ok` answer to `state`, which is then the newest that is known."""
         reading = self._reading(answered)
-        self._take_reading(reading, answered.received_s)
+        self.latest = replace(self.latest, reading=reading, reading_s=answered.received_s)
+        self._set_state(reading.state)
         return reading
 
     def read_why(self, learned: Learned = Learned.ASKED) -> TripRecord | None:
@@ -168,10 +172,6 @@ class Core:
         identity = self.identity
         tick = self.ticks.near(answered.answer.tick)
         return Reading.read(answered.answer.fields, tick=tick, axes=identity.axes, servos=identity.servos)
-
-    def _take_reading(self, reading: Reading, at_s: float) -> None:
-        self.latest = replace(self.latest, reading=reading, reading_s=at_s)
-        self._set_state(reading.state)
 
     def _set_state(self, state: State) -> None:
         self.state = state
@@ -392,7 +392,7 @@ class Core:
 
     def _took_state(self, answered: host.Answered) -> None:
         if answered.answer.ok:
-            self._take_reading(self._reading(answered), answered.received_s)
+            self.take_state(answered)
 
     def _took_why(self, answered: host.Answered) -> None:
         self._checking_state = False

@@ -44,30 +44,23 @@ class Sampling:
         for block, number in held:
             self.line(block, number)
 
-    def ended_with(self, made: int, *, next_first_tick: int | None) -> None:
-        """The device ended the present logging having made `made` samples; the next begins at `next_first_tick`.
-
-        Lines held back that are of the old logging are taken into it, the others wait for `begin`.
-        """
-        held, self._holding = self._holding or [], []
-        for block, number in held:
-            if next_first_tick is None or int(block.ticks[0]) < next_first_tick:
-                self._take(block, number)
-            else:
-                self._holding.append((block, number))
+    def ended_with(self, made: int) -> None:
+        """The device ended the present logging, having made `made` samples, and has sent all of them before."""
+        self.resume()
         if self.stream is not None:
             self._out(self.stream.end(made))
             self._close_if_done()
-        if next_first_tick is None:
-            self._holding = None
 
     def begin(self, first_tick: int, layout: Layout) -> None:
-        """A new logging has begun; what is left of the old one is given up."""
+        """A new logging has begun; what is left of an old one is given up."""
         self.abandon(GapReason.LOGGING_ENDED)
-        self.stream = SampleStream(
-            first_tick=first_tick, layout=layout, keep=self.keep, number_before=self._number
-        )
-        self.resume()
+        held, self._holding = self._holding or [], None
+        early = [number for block, number in held if int(block.ticks[0]) < first_tick]
+        self.unasked += len(early)
+        self._number = early[-1] if early else self._number
+        self.stream = SampleStream(first_tick=first_tick, layout=layout, keep=self.keep, number_before=self._number)
+        for block, number in held[len(early) :]:
+            self._take(block, number)
 
     def abandon(self, reason: GapReason) -> None:
         """Nothing more will come of the present logging: every hole is a gap."""

@@ -16,7 +16,7 @@ from typing import TYPE_CHECKING, Self
 
 import numpy as np
 
-from ramprig.errors import LinkError, LinkLost, Refused, StoppedByUser
+from ramprig.errors import LinkError, LinkLost, RamprigError, Refused, UsageError
 from ramprig.port.base import Port
 from ramprig.port.clock import Clock
 from ramprig.session.blocks import Block, Layout, block_from
@@ -317,35 +317,42 @@ class Session:
     def log(self, period_ticks: int, mask: int, form: Form = Form.PACKED) -> int:
         """Begin sampling the channels of `mask` every `period_ticks` (1 to 65535); the unwrapped tick of the first.
 
-        A logging under way is ended. Raises Refused; the old logging then goes on.
+        A logging under way is ended first, as by `stop_log`: the device forgets its lines when a new one begins. Raises
+        Refused, UsageError for a mask without a channel.
         """
-        layout = Layout.of(mask, period_ticks)
-        first_tick = self._log(period_ticks, mask, form)
+        if self.logging:
+            self.stop_log()
+        try:
+            layout = Layout.of(mask, period_ticks)
+        except SampleFault as fault:
+            raise UsageError(f"cannot log: {fault}") from fault
+        first, _ = self._log(period_ticks, mask, form)
+        first_tick = self._core.ticks.near(first)
         self._core.sampling.begin(first_tick, layout)
         return first_tick
 
     def stop_log(self) -> Accounting | None:
         """End sampling, get what was lost at the end as far as the device keeps it, and account for every sample."""
         core = self._core
-        self._log(0, 0, Form.PACKED)
+        _, made = self._log(0, 0, Form.PACKED)
+        core.sampling.ended_with(made)
         bound_s = core.clock.now() + TAIL_WAIT_S
         while self.logging and core.clock.now() < bound_s:
             core.pump.turn(bound_s)
         core.sampling.abandon(GapReason.NOT_ARRIVED)
         return self.accounting
 
-    def _log(self, period_ticks: int, mask: int, form: Form) -> int:
+    def _log(self, period_ticks: int, mask: int, form: Form) -> tuple[int, int]:
+        """First tick and samples made, as the device says; lines that come meanwhile are held back."""
         sampling = self._core.sampling
         sampling.hold()
         try:
             answered = self._core.request("log", period_ticks, mask, form)
-        except (Refused, LinkError, StoppedByUser):
+        except RamprigError:
             sampling.resume()
             raise
         first, made = read_answer("log", answered.answer.fields)
-        first_tick = self._core.ticks.near(int(first))
-        sampling.ended_with(int(made), next_first_tick=first_tick if period_ticks else None)
-        return first_tick
+        return int(first), int(made)
 
     def trail(self, axis: int) -> Block | None:
         """The fast record around the last trip, period 1, or None where there is none.

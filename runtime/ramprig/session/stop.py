@@ -12,12 +12,15 @@ from ramprig.errors import LinkError, LinkLost, Refused
 from ramprig.session.core import Core, StopMarks
 from ramprig.session.events import StopJudged
 from ramprig.session.readings import Reading
+from ramprig_link.host import Answered
 from ramprig_link.words import Cap, State
 
 ACKNOWLEDGE_S = 1.0
 """A stop that is not acknowledged for so long is not confirmed."""
 REPEAT_S = 0.1
 """A stop that is not acknowledged is sent again this often."""
+STATE_S = 1.0
+"""A state that is asked for and not told for so long is not known; a lost request is repeated twice in that time."""
 POLL_S = 0.05
 """How often the state is asked for until all is off."""
 OFF_MARGIN_S = 0.3
@@ -126,7 +129,9 @@ class StopRun:
         off_bound_s = core.clock.now() + self._stop_time_s()
         still_bound_s = off_bound_s + self._run_down_s
         while True:
-            reading = core.read_state()
+            reading = self._ask_state()
+            if reading is None:
+                return
             now_s = core.clock.now()
             if reading.outputs_off:
                 if core.marks.off_s is None:
@@ -142,6 +147,20 @@ class StopRun:
             if now_s >= still_bound_s:
                 return
             core.work(now_s + POLL_S)
+
+    def _ask_state(self) -> Reading | None:
+        """The state, or None where no answer comes in STATE_S: a verdict must not wait for every repeat."""
+        core = self._core
+        box: list[Answered] = []
+        core.pump.post("state", then=box.append)
+        bound_s = core.clock.now() + STATE_S
+        while not box and core.clock.now() < bound_s:
+            core.pump.turn(bound_s)
+        if not box:
+            core.pump.hush()
+            self._failure = "the device does not answer"
+            return None
+        return core.take_state(box[0])
 
     def _escalate(self) -> None:
         core = self._core

@@ -1,0 +1,224 @@
+"""Stopping: confirmed by the device and by measurement, or said not to be; and every way a run can end."""
+
+from __future__ import annotations
+
+import threading
+
+import numpy as np
+import pytest
+
+from ramprig.errors import Bug, LinkError, LinkLost, StoppedByUser
+from ramprig.port.faulty import FaultyPort
+from ramprig.session import NOT_CONFIRMED
+from ramprig.session.events import LateHost, StopAsked, StopJudged, Tripped
+from ramprig_link.words import State, Trip
+from session_rig import LIMITS, MASK, Rig
+
+
+def running(rig: Rig, duty: int = 3000) -> Rig:
+    rig.session.log(2, MASK)
+    rig.session.arm(500)
+    rig.drive(duty)
+    rig.pump(1.5)
+    assert rig.bridge_duty() == duty
+    return rig
+
+
+@pytest.mark.parametrize("category", [0, 1])
+def test_a_stop_is_confirmed_by_the_device_and_by_current_and_speed(category: int) -> None:
+    rig = running(Rig())
+    report = rig.session.stop(category)
+    assert report.confirmed
+    assert report.verdict == "confirmed"
+    assert rig.bridge_duty() == 0
+    times = (report.acknowledged_s, report.off_s, report.quiet_s, report.still_s)
+    assert all(time is not None and 0.0 <= time < 5.0 for time in times)
+    assert report.acknowledged_s is not None
+    assert report.acknowledged_s < 0.05
+    assert report.off_s is not None
+    assert report.off_s < (0.05 if category == 0 else 0.2)
+    assert [event.confirmed for event in rig.of(StopJudged)] == [True]
+    assert not rig.session.armed
+
+
+def test_category_1_falls_by_slope_and_category_0_cuts() -> None:
+    between = {}
+    for category in (0, 1):
+        rig = running(Rig())
+        stopped_at = rig.session.tick_now()
+        rig.session.stop(category)
+        rig.session.stop_log()
+        duties = np.concatenate([block.column("duty")[block.ticks >= stopped_at] for block in rig.blocks])
+        between[category] = int(np.count_nonzero((duties > 0) & (duties < 3000)))
+    assert between[0] == 0
+    assert between[1] == pytest.approx(3000 / LIMITS["slew_down_duty", 0] / 2, abs=2)  # a sample every 2 ticks
+
+
+def test_a_deaf_device_gives_not_confirmed_and_its_lease_ends_the_run() -> None:
+    rig = running(Rig())
+    rig.device.faults.set("deaf")
+    begin = rig.now
+    report = rig.session.stop(1)
+    assert not report.confirmed
+    assert report.verdict.startswith(NOT_CONFIRMED)
+    assert "the device does not answer" in report.verdict
+    assert rig.now - begin < 2.0
+    assert rig.bridge_duty() == 0  # by its own link_lost trip
+    assert report.sendings >= 5
+
+
+def test_after_a_stop_that_is_not_confirmed_nothing_renews_the_lease(monkeypatch: pytest.MonkeyPatch) -> None:
+    rig = running(Rig())
+    rig.device.faults.set("deaf")
+    rig.session.stop(1)
+    rig.device.faults.set("deaf", False)
+    sent: list[bytes] = []
+    monkeypatch.setattr(rig.mock, "write", sent.append)
+    rig.pump(2.0)
+    with pytest.raises(LinkError, match="not confirmed"):
+        rig.session.ask("beat")
+    assert sent == []
+    monkeypatch.undo()
+    rig.session.reopen()
+    assert rig.session.valid
+    rig.pump(1.0)
+    assert rig.session.state().trip is Trip.LINK_LOST
+
+
+def test_unplugged_gives_not_confirmed_and_link_lost() -> None:
+    rig = running(Rig())
+    rig.device.faults.set("unplug")
+    with pytest.raises(LinkLost):
+        rig.pump(0.5)
+    report = rig.session.stop(1)
+    assert not report.confirmed
+    assert any("cable" in reason for reason in report.missing)
+    account = rig.session.accounting
+    assert account is not None
+    assert account.expected == account.received + account.lost
+
+
+def test_a_shaft_that_never_comes_to_rest_is_not_confirmed() -> None:
+    rig = running(Rig())
+    axis = rig.device.plant.axes[0]
+    axis.load_nm = -3 * axis.static_nm * axis.parameters.motor.gear_ratio  # a vent that drags the motor on
+    report = rig.session.stop(0, run_down_s=1.0)
+    assert not report.confirmed
+    assert report.off_s is not None
+    assert report.missing == ("the shaft has not come to rest",)
+
+
+def test_a_current_that_does_not_fall_is_not_confirmed() -> None:
+    rig = running(Rig())
+    rig.device.faults.set("current_offset", 700.0)
+    report = rig.session.stop(0, run_down_s=1.0)
+    assert report.missing == ("the motor current has not fallen",)
+
+
+def test_a_lost_stop_is_sent_again() -> None:
+    rig = running(Rig(wrap=lambda port: FaultyPort(port, seed=4)))
+    port = rig.port
+    assert isinstance(port, FaultyPort)
+    port.set_rates(drop=0.08)
+    report = rig.session.stop(1)
+    port.set_rates()
+    assert report.sendings >= 1
+    assert rig.bridge_duty() == 0
+
+
+def test_a_panic_stops_from_another_thread_and_the_owner_learns_of_it() -> None:
+    rig = running(Rig())
+    thread = threading.Thread(target=rig.session.panic, args=(0,))
+    thread.start()
+    thread.join()
+    with pytest.raises(StoppedByUser):
+        rig.pump(1.0)
+    report = rig.session.stop(0)
+    assert report.confirmed
+    assert rig.of(StopAsked)[0].category == 0
+    rig.pump(0.1)
+    assert rig.session.state().state is State.OFF
+
+
+def test_no_beat_goes_out_after_a_panic() -> None:
+    rig = running(Rig())
+    rig.device.faults.set("deaf")
+    rig.session.panic(1)
+    rig.silence(0.01)  # the stop itself is lost on the way
+    rig.device.faults.set("deaf", False)
+    for _ in range(100):
+        with pytest.raises(StoppedByUser):
+            rig.pump(0.02)
+        rig.silence(0.02)
+    assert rig.bridge_duty() == 0
+    assert rig.session.stop(0).confirmed
+    record = rig.session.why()
+    assert record is not None
+    assert record.trip is Trip.LINK_LOST
+
+
+def test_a_hung_runner_is_stopped_by_the_lease_and_said_to_have_been_late() -> None:
+    rig = running(Rig())
+    rig.silence(2.0)
+    assert rig.bridge_duty() == 0
+    rig.pump(0.2)
+    assert [event.trip for event in rig.of(Tripped)] == ["link_lost"]
+    assert rig.of(LateHost)[0].late_s == pytest.approx(2.0, abs=0.01)
+    assert rig.session.health.worst_late_s == pytest.approx(2.0, abs=0.01)
+    assert not rig.session.armed
+
+
+def test_pumping_keeps_the_lease() -> None:
+    rig = running(Rig())
+    rig.pump(5.0)
+    assert rig.session.armed
+    assert rig.of(Tripped) == []
+    assert rig.bridge_duty() == 3000
+
+
+def test_leaving_with_an_exception_stops_first_and_closes_the_port() -> None:
+    rig = running(Rig())
+    with pytest.raises(RuntimeError, match="mine"), rig.session:
+        raise RuntimeError("mine")
+    assert rig.session.last_stop is not None
+    assert rig.session.last_stop.confirmed
+    assert rig.bridge_duty() == 0
+    with pytest.raises(LinkLost):
+        rig.mock.read(0.0)
+
+
+def test_leaving_in_order_leaves_the_outputs_off() -> None:
+    rig = running(Rig())
+    with rig.session:
+        pass
+    assert rig.bridge_duty() == 0
+    assert rig.session.last_stop is not None
+    assert rig.session.last_stop.confirmed
+
+
+def test_a_callback_that_calls_the_session_is_a_bug() -> None:
+    rig = Rig()
+    rig.session._core.on_event = lambda event: rig.session.pump(rig.now + 1.0)
+    rig.session.panic(0)
+    with pytest.raises(Bug, match="callbacks"):
+        rig.session.stop(0)
+
+
+def test_another_thread_may_not_pump() -> None:
+    rig = Rig()
+    caught: list[BaseException] = []
+
+    def pump() -> None:
+        try:
+            rig.pump(0.1)
+        except Bug as bug:
+            caught.append(bug)
+
+    thread = threading.Thread(target=pump)
+    thread.start()
+    thread.join()
+    assert len(caught) == 1
+
+
+def test_a_stop_in_no_state_to_stop_is_confirmed_too() -> None:
+    assert Rig().session.stop(1).confirmed
