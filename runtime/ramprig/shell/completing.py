@@ -20,7 +20,8 @@ class Choice:
 
 def choices(line: str, bench: Bench) -> list[Choice]:
     """What the word at the end of `line` may become, each once, in the order of the table."""
-    before, word = _split(line)
+    word = begun_word(line)
+    before = line[: len(line) - len(word)]
     if not tokens_of(before):
         found = [Choice(name, entry.about) for name, entry in WORDS.items()]
     else:
@@ -38,12 +39,9 @@ def wants_file(line: str) -> str | None:
     return None
 
 
-def _split(line: str) -> tuple[str, str]:
-    """What stands before the word at the end of the line, and that word."""
-    tokens = tokens_of(line)
-    if not tokens or line[-1].isspace():
-        return line, ""
-    return line[: tokens[-1].start], tokens[-1].text
+def begun_word(line: str) -> str:
+    """The word at the end of the line as far as it is typed, empty after a blank."""
+    return "" if not line or line[-1].isspace() else tokens_of(line)[-1].text
 
 
 def _next(form: Form, before: str, bench: Bench) -> list[Choice]:

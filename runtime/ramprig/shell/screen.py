@@ -8,12 +8,12 @@ from __future__ import annotations
 
 import asyncio
 import contextlib
-import shutil
 import time
 from collections.abc import Callable, Iterable
+from functools import partial
 from pathlib import Path
 
-from prompt_toolkit.application import Application, get_app
+from prompt_toolkit.application import Application, get_app, run_in_terminal
 from prompt_toolkit.auto_suggest import AutoSuggestFromHistory
 from prompt_toolkit.buffer import Buffer
 from prompt_toolkit.completion import CompleteEvent, Completer, Completion, PathCompleter
@@ -30,7 +30,6 @@ from prompt_toolkit.layout.dimension import Dimension
 from prompt_toolkit.layout.menus import CompletionsMenu
 from prompt_toolkit.layout.processors import BeforeInput
 from prompt_toolkit.output import Output
-from prompt_toolkit.patch_stdout import StdoutProxy
 from prompt_toolkit.styles import Style
 
 from ramprig.bench import Bench
@@ -38,7 +37,7 @@ from ramprig.errors import UsageError
 from ramprig.quantity import format_duty
 
 from . import commands as c
-from .completing import choices, wants_file
+from .completing import begun_word, choices, wants_file
 from .hold import Hold
 from .outbox import Outbox
 from .statusline import LINES_MAX, prompt_of, status_lines
@@ -73,9 +72,8 @@ class Words(Completer):
         if file is not None:
             yield from self._paths.get_completions(Document(file), complete_event)
             return
-        begun = "" if not line or line[-1].isspace() else line.split()[-1]
         for choice in choices(line, self._bench):
-            yield Completion(choice.text, start_position=-len(begun), display_meta=choice.about)
+            yield Completion(choice.text, start_position=-len(begun_word(line)), display_meta=choice.about)
 
 
 class Screen:
@@ -185,8 +183,11 @@ class Screen:
 
         @keys.add("tab", filter=~jogging)
         def _complete(event: KeyPressEvent) -> None:
+            found = choices(self.buffer.document.text_before_cursor, self._bench)
             if self.buffer.complete_state:
                 self.buffer.complete_next()
+            elif len(found) == 1:  # at once, so that whoever types on fast finds it done
+                self.buffer.insert_text(found[0].text[len(begun_word(self.buffer.document.text_before_cursor)) :] + " ")
             else:
                 self.buffer.start_completion(insert_common_part=True)
 
@@ -281,25 +282,30 @@ class Screen:
 
     async def run(self) -> None:
         """Until the user leaves, the terminal is gone, `over` says so, or the worker has ended."""
-        with StdoutProxy(raw=True) as above:
-            tasks = [asyncio.ensure_future(self._print(above)), asyncio.ensure_future(self._watch())]
-            try:
-                with contextlib.suppress(EOFError):
-                    await self.app.run_async(set_exception_handler=False, handle_sigint=False)
-            finally:
-                for task in tasks:
-                    task.cancel()
-                await asyncio.gather(*tasks, return_exceptions=True)
+        tasks = [asyncio.ensure_future(self._print()), asyncio.ensure_future(self._watch())]
+        try:
+            with contextlib.suppress(EOFError):
+                await self.app.run_async(set_exception_handler=False, handle_sigint=False)
+        finally:
+            for task in tasks:
+                task.cancel()
+            await asyncio.gather(*tasks, return_exceptions=True)
 
-    async def _print(self, above: StdoutProxy) -> None:
+    async def _print(self) -> None:
+        """Put what was said above the input line, a bounded piece at a time."""
         waiting: list[str] = []
         while True:
             waiting += self._outbox.take()
-            if waiting:
-                above.write("\n".join(waiting[:PRINT_MAX]) + "\n")
-                above.flush()
+            if waiting and self.app.is_running and not self.app.is_done:
+                text = "".join(f"{line}\n" for line in waiting[:PRINT_MAX])
                 del waiting[:PRINT_MAX]
+                await run_in_terminal(partial(self._write, text))
             await asyncio.sleep(PRINT_EVERY_S)
+
+    def _write(self, text: str) -> None:
+        self.app.output.enable_autowrap()
+        self.app.output.write(text)  # which takes the force out of escape sequences
+        self.app.output.flush()
 
     async def _watch(self) -> None:
         while True:
@@ -313,8 +319,3 @@ class Screen:
                 if keys.dropped_bytes > self._dropped_bytes:
                     self._outbox.say(f"{keys.dropped_bytes - self._dropped_bytes} bytes of a paste were dropped")
                     self._dropped_bytes = keys.dropped_bytes
-
-
-def terminal_width() -> int:
-    """Columns of the terminal, 80 where it does not tell."""
-    return shutil.get_terminal_size().columns

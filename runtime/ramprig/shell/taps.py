@@ -151,6 +151,8 @@ class TappedInput(Input):
             yield
         finally:
             self._ready = before
+            if before is not None and self._keys:  # they came meanwhile
+                self._loop.call_soon(before)
 
     def attach(self, input_ready_callback: Callable[[], None]) -> AbstractContextManager[None]:
         """Call back when keys have come."""

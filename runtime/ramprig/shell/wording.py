@@ -9,7 +9,7 @@ from ramprig.quantity import format_current, format_duration, format_duty, forma
 from ramprig.sequence.rig import Rig
 from ramprig.sequence.tripsay import explain_trip
 from ramprig.session import events as e
-from ramprig_link.words import Per
+from ramprig_link.words import LIMITS, Per
 
 TROUBLES_EVERY_S = 2.0
 """Troubles of the link are told together, at most this often."""
@@ -53,12 +53,20 @@ class Teller:
             case e.GapFound(count=count, reason=reason):
                 return f"{count} samples are lost: {reason}"
             case e.LimitWritten():
-                return f"limit {event.item} {event.index} on the board: {event.before} -> {event.after}"
+                return self._limit(event)
             case e.LinkTrouble(trouble=trouble):
                 self._counts[str(trouble)] += 1
             case e.NoticesMissed(count=count):
                 self._counts["notice missed"] += count
         return None
+
+    def _limit(self, event: e.LimitWritten) -> str:
+        limit = LIMITS[event.item]
+        tick_s = self.rig.tick_us / 1e6
+        before, after = (limit_shown(value, limit.unit, tick_s) for value in (event.before, event.after))
+        return (
+            f"written to the board: {limit_owner(self._bench, limit.per, event.index)} {event.item} {before} -> {after}"
+        )
 
     def troubles(self, now_s: float) -> str | None:
         """The troubles of the link since they were last told, at most every TROUBLES_EVERY_S."""
