@@ -80,16 +80,19 @@ class Eye:
 
     def _over_window(self, measure: Measure, tick: int) -> Finding:
         begin = tick - round(float(measure.over_s) / self.tick_s)
-        values = self._speeds(begin, tick) if measure.what is What.SPEED else self._currents(begin, tick)
+        kind = "counts" if measure.what is What.SPEED else "current_ma"
+        ticks, _ = self.ring.between(kind, self.axis.index, begin, tick)
         expected = (tick - begin) // self.ring.period_ticks
-        if len(values) < max(1.0, SAMPLES_SHARE * expected):
-            return _nothing(f"only {len(values)} of {expected} samples of its window have come")
+        if len(ticks) < max(1.0, SAMPLES_SHARE * expected):
+            return _nothing(f"only {len(ticks)} of {expected} samples of its window have come")
+        if measure.what is What.CURRENT:
+            currents = self._currents(begin, tick)
+            return _every(measure, currents) if measure.by is By.EVERY_SAMPLE else _single(measure, currents.mean())
         if measure.by is By.EVERY_SAMPLE:
-            return _every(measure, values)
-        if measure.what is What.SPEED:
-            mean = self._mean_speed(begin, tick)
-            return _nothing("its window has less than two samples") if mean is None else _single(measure, mean)
-        return _single(measure, float(np.mean(values)))
+            speeds = self._speeds(begin, tick)
+            return _every(measure, speeds) if len(speeds) else _nothing("the speed is not known yet")
+        mean = self._mean_speed(begin, tick)
+        return _nothing("its window has less than two samples") if mean is None else _single(measure, mean)
 
     def _currents(self, begin: int, tick: int) -> Floats:
         _, values = self.ring.between("current_ma", self.axis.index, begin, tick)
@@ -193,7 +196,7 @@ def _inside(band: Band, values: Floats) -> NDArray[np.bool_]:
 
 
 def _single(measure: Measure, value: float) -> Finding:
-    return Finding(measure.band.holds(value), value, show(value, measure.what.kind))
+    return Finding(measure.band.holds(value), float(value), show(float(value), measure.what.kind))
 
 
 def _every(measure: Measure, values: Floats) -> Finding:
