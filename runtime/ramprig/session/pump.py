@@ -85,9 +85,10 @@ class Pump:
         """Send a stop past every queue, from any thread or signal handler; beats cease at once.
 
         Returns whether the system took the bytes. Unless `panic_taken` is set, the pump raises StoppedByUser at its
-        next turn.
+        next turn; if it is, a stop is being confirmed, and what confirms it must go on.
         """
-        self.muted = True
+        if not self.panic_taken:
+            self.muted = True
         known = self.panic_category
         self.panic_category = category if known is None else min(known, category)
         sent = self.port.urgent(HostLink.urgent_stop(category))
