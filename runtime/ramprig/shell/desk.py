@@ -280,6 +280,7 @@ class Desk:
 
     def _stop(self, category: int) -> StopReport:
         session = self._need()
+        self.snapshot = replace(self.snapshot, state="stopping", motors=(), servos=(), doing="confirming the stop")
         report = session.stop(category)
         self._asked_category = 1
         self._unconfirmed = not report.confirmed

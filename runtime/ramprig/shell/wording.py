@@ -26,6 +26,8 @@ class Teller:
         self.rig = Rig.of(bench)
         self._counts: Counter[str] = Counter()
         self._told_s: float | None = None
+        self._off_told = False
+        self._stop_told: tuple[int, float] | None = None
 
     def tell(self, event: e.Event) -> str | None:
         """The sentence for an event, None where there is nothing to say now."""
@@ -34,10 +36,12 @@ class Teller:
                 how = " (found when the device was opened)" if event.learned is e.Learned.AT_OPEN else ""
                 return f"TRIPPED: {explain_trip(event, self.rig)}{how}"
             case e.Stopped(state=state):
-                return f"all outputs are off (state {state})"
-            case e.StopAsked(category=category, sent=sent):
-                unsent = "" if sent else "; THE PORT DID NOT TAKE IT"
-                return f"stop, category {category}{unsent}"
+                told, self._off_told = self._off_told, True
+                return None if told else f"all outputs are off (state {state})"
+            case e.StopAsked():
+                return self._stop_asked(event)
+            case e.Armed():
+                self._off_told = False
             case e.Restarted():
                 cause = f" ({event.cause})" if event.cause else ""
                 return f"the device has restarted{cause}; it is disarmed. 'reopen' opens it anew."
@@ -59,6 +63,15 @@ class Teller:
             case e.NoticesMissed(count=count):
                 self._counts["notice missed"] += count
         return None
+
+    def _stop_asked(self, event: e.StopAsked) -> str | None:
+        """A stop is sent until it is acknowledged: each category is told once, and again only later."""
+        last, self._stop_told = self._stop_told, (event.category, event.host_s)
+        if not event.sent:
+            return f"stop, category {event.category}: THE PORT DID NOT TAKE IT"
+        if last is not None and last[0] <= event.category and event.host_s - last[1] < TROUBLES_EVERY_S:
+            return None
+        return f"stop, category {event.category}"
 
     def _limit(self, event: e.LimitWritten) -> str:
         limit = LIMITS[event.item]

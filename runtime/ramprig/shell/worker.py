@@ -13,7 +13,7 @@ from collections.abc import Callable
 from dataclasses import dataclass, field
 from functools import partial
 
-from ramprig.errors import Bug, RamprigError
+from ramprig.errors import Bug, LinkLost, RamprigError, StoppedByUser
 
 from . import commands as c
 from .desk import Desk, RunEnded
@@ -145,7 +145,7 @@ class Worker:
     def _do(self, job: Job, work: Callable[[], None]) -> None:
         try:
             work()
-        except RunEnded as error:  # the run has said it all
+        except (RunEnded, StoppedByUser, LinkLost) as error:  # all has been said
             job.error = error
         except RamprigError as error:
             job.error = error
