@@ -6,10 +6,12 @@ A `Cable` drives its device: `run` lets time pass. Who calls it decides whether 
 from __future__ import annotations
 
 import random
+from typing import Protocol
 
 from ramprig.port.faulty import Corruptor, Rates
 
-from .device import MockDevice
+from .board import Board
+from .faults import FaultSwitches
 
 HELD_MAX_BYTES = 65536
 """Most bytes held back by the delivery grid, or by a host that does not read; older ones are lost."""
@@ -18,13 +20,52 @@ NS_PER_MS = 1_000_000
 NS_PER_US = 1000
 
 
+class Device(Protocol):
+    """What hangs on a cable: a `MockDevice`, or another device with its face."""
+
+    faults: FaultSwitches
+
+    @property
+    def board(self) -> Board:
+        """The board that answers now."""
+        ...
+
+    def receive(self, data: bytes) -> None:
+        """Put bytes from the host on the receive line."""
+        ...
+
+    def urgent(self, data: bytes) -> None:
+        """Take back what of the host's bytes is still unsent, and put these on the line."""
+        ...
+
+    def send_break(self) -> None:
+        """Hold the receive line in the BREAK condition."""
+        ...
+
+    def opened(self) -> None:
+        """A host has opened the port."""
+        ...
+
+    def tick(self) -> None:
+        """Let one tick pass."""
+        ...
+
+    def advance(self, ticks: int) -> int:
+        """Let up to `ticks` ticks pass, fewer where the board sends something; returns how many have passed."""
+        ...
+
+    def transmit(self) -> bytes:
+        """What the board has sent since the last call."""
+        ...
+
+
 class Cable:
     """One cable with its device. `now_ns` is the time run to; it begins at 0 and never runs backwards.
 
     `is_out` is True while the fault `unplug` is on: what is sent then is lost either way, and the device runs on.
     """
 
-    def __init__(self, device: MockDevice, *, seed: int = 0) -> None:
+    def __init__(self, device: Device, *, seed: int = 0) -> None:
         self.device = device
         self.now_ns = 0
         self._device_ns = 0

@@ -33,7 +33,7 @@ _PLANT_FAULTS = {
 Trace = Callable[[int, Controller | None], None]
 
 
-def _schedule(setup: MockSetup) -> list[tuple[int, str, int, float]]:
+def schedule(setup: MockSetup) -> list[tuple[int, str, int, float]]:
     """The switchings of the timed faults, earliest first: tick, name, axis, strength."""
     switchings = []
     for timed in setup.timed_faults:
@@ -137,7 +137,7 @@ class MockDevice:
         self.controller: Controller | None = None
         self._boot()
         self.faults.set_all(setup.faults)
-        self._timed = _schedule(setup)
+        self._timed = schedule(setup)
 
     @property
     def board(self) -> Board:
@@ -211,8 +211,9 @@ class MockDevice:
                 axis.duty = drive.duty
                 axis.brake = drive.brake
             for pulse, servo in servos:
-                if not pulse.steady or not pulse.pulse_ns:
-                    servo.pulse_us = pulse.pulse_ns / 1000.0 if pulse.pulse_ns else None
+                pulse_us = pulse.pulse_ns / 1000.0 if pulse.pulse_ns else None
+                if pulse_us != servo.pulse_us:
+                    servo.pulse_us = pulse_us
             step()
             elapsed += 1
             if trace is not None:

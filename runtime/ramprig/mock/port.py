@@ -3,22 +3,24 @@
 from __future__ import annotations
 
 import threading
-from typing import Literal
+from typing import Generic, Literal, TypeVar
 
 from ramprig.errors import LinkLost
 from ramprig.port.base import ClosesItself
 from ramprig.port.clock import NS_PER_S, Clock, SystemClock, VirtualClock
 
-from .cable import Cable
+from .cable import Cable, Device
 from .device import MockDevice
 
 Pace = Literal["virtual", "real"]
+
+D = TypeVar("D", bound=Device)
 
 WAIT_S = 0.001
 """How long a paced port sleeps between two looks at its device: one tick of most boards."""
 
 
-class MockPort(ClosesItself):
+class DevicePort(ClosesItself, Generic[D]):
     """A `Port` whose far end is `device`.
 
     With pace `virtual` the clock stands still but for `read`, which moves device and clock on until bytes come or its
@@ -28,7 +30,7 @@ class MockPort(ClosesItself):
 
     def __init__(
         self,
-        device: MockDevice,
+        device: D,
         *,
         pace: Pace = "virtual",
         seed: int = 0,
@@ -117,3 +119,7 @@ class MockPort(ClosesItself):
     def close(self) -> None:
         """Give the port up. The device stands still from here on."""
         self._closed.set()
+
+
+class MockPort(DevicePort[MockDevice]):
+    """A `Port` to a mock in this process."""

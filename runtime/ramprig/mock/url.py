@@ -73,8 +73,8 @@ def _whole(text: str, name: str, value: str) -> int:
     return int(value)
 
 
-def make_device(wish: MockWish) -> tuple[MockDevice, int]:
-    """The device a wish asks for, and the seed it has been given. Raises UsageError and FileError."""
+def make_setup(wish: MockWish) -> tuple[MockSetup, int]:
+    """What the device a wish asks for is made from, and its seed. Raises UsageError and FileError."""
     setup, seed = MockSetup(), 0
     if wish.bench is not None:
         from ramprig.bench import load_bench
@@ -89,6 +89,12 @@ def make_device(wish: MockWish) -> tuple[MockDevice, int]:
     if wish.limits is not None:
         setup = replace(setup, limits_path=wish.limits)
     setup = replace(setup, faults=(*setup.faults, *wish.faults))
+    return setup, seed
+
+
+def make_device(wish: MockWish) -> tuple[MockDevice, int]:
+    """The device a wish asks for, and the seed it has been given. Raises UsageError and FileError."""
+    setup, seed = make_setup(wish)
     return MockDevice(setup, seed=seed), seed
 
 
@@ -104,6 +110,14 @@ def _factory(wanted: port_open.Wanted) -> Port:
     return open_mock(wanted.url, clock=clock if isinstance(clock, VirtualClock) else None)
 
 
+def _core_factory(wanted: port_open.Wanted) -> Port:
+    from .core.url import open_core  # only where it is asked for: it looks for a compiler
+
+    clock = wanted.clock
+    return open_core(wanted.url, clock=clock if isinstance(clock, VirtualClock) else None)
+
+
 def register() -> None:
-    """Have `ramprig.port.open.open_port` open `mock:` texts."""
+    """Have `ramprig.port.open.open_port` open `mock:` and `core:` texts."""
     port_open.register("mock", _factory)
+    port_open.register("core", _core_factory)
