@@ -39,7 +39,7 @@ LOOK_S = 0.2
 """How often the device's state is asked for, for the status line."""
 LOOK_ROUND_TRIPS = 10
 """On a slow link it is asked for once in so many round trips, so that the link is left for other things."""
-TRAIL_TRIES = 5
+TRAIL_TRIES = 10
 """So often the trail is asked for after a trip; the board goes on recording for a while."""
 
 
@@ -98,6 +98,7 @@ class Desk:
         self._unconfirmed = False
         self._lost = False
         self._cautioned = False
+        self._closing = False
         self._trail_tries = 0
         self._looked_s = 0.0
 
@@ -151,10 +152,21 @@ class Desk:
             return True
         if not self._lost and (self._state in ("armed", "stopping") or self._unconfirmed):
             self._stop(1)
+        if self._log.open and not self._lost:
+            self._wait_for_trail()
         if self._log.open:
             self._end_log("the shell was left")
+        self._closing = True
         session.close()
         return not (self._lost or self._unconfirmed)
+
+    def _wait_for_trail(self) -> None:
+        """The board records on for a moment after a trip; the log is to have that too."""
+        try:
+            while self._trail_tries:
+                self._breathe(LOOK_S)
+        except RamprigError as error:
+            self._say(f"the trail could not be read: {error}")
 
     # ---- between commands ----------------------------------------------------------------------------------------
 
@@ -224,9 +236,11 @@ class Desk:
 
     def _save_trail(self, session: Session) -> None:
         """After a trip, once the board has it whole, put its fast record into the open log."""
-        if self._trail_tries == 0 or session.trip is None or self._state != "tripped":
+        if self._trail_tries == 0:
             return
         self._trail_tries -= 1
+        if session.trip is None or self._state != "tripped":
+            return
         block = session.trail(min(session.trip.index, session.identity.axes - 1))
         if block is not None:
             self._trail_tries = 0
@@ -249,7 +263,7 @@ class Desk:
             case e.Restarted():
                 self._forget_motion()
         line = self._teller.tell(event)
-        if line is not None:
+        if line is not None and not self._closing:
             self._say(line)
 
     def _forget_motion(self) -> None:

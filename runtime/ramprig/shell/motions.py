@@ -180,11 +180,11 @@ class Motions:
         pulse_us = self._pulse(servo, channel, angle_deg)
         start = self._session.start_in(LEAD_S)
         before = self._pulses.get(servo.name, REST).at(start)
-        if before == 0:
-            self._say(f"{servo.name}: its first pulse sends it to its home, {servo.home_deg:g} deg, at its own speed")
         least = channel.least_ticks(before or channel.home_us, pulse_us)
         ticks = self._time(in_s, least, f"the slew limit of {servo.name}")
         self._session.swing(channel.index, pulse_us, ticks, start)
+        if before == 0:
+            self._say(f"{servo.name}: its first pulse sends it to its home, {servo.home_deg:g} deg, at its own speed")
         self._pulses[servo.name] = Slope(start, ticks, before or channel.home_us, pulse_us)
         self._say(
             f"{servo.name}: to {servo.degrees_of(pulse_us):g} deg ({format_pulse(pulse_us)}) in {self._rig.show(ticks)}"
