@@ -68,7 +68,7 @@ def _end(run: RunProcess, mock: MockProcess, ending: str) -> float:
 
 
 def check_log(run: RunProcess, ended_s: float, ending: str, seed: str) -> None:
-    """The run folder reads to the last second before the end, and says how it ended where somebody was left to say it."""
+    """The run folder reads to the last second before the end, and says how it ended where somebody was left."""
     manifest = read_manifest(run.folder)
     found = audit(run.folder)
     ticks = read_samples(run.folder / "samples.csv", columns=()).ticks

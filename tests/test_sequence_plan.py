@@ -141,7 +141,7 @@ def test_the_report_of_a_plan(tmp_path: Path) -> None:
         "t",
         "bench     test bench (bench.yaml)",
         "takes     3 min 22.7 s and what 2 waits take; 3 min 30.4 s at the longest",
-        "motor     vent: 2 starts, peak duty 40 %, 1 reversals in all; 2 A if the shaft is held (trips above 2.5 A)",
+        "motor     vent: 2 starts, peak duty 40 %, 1 reversal in all; 2 A if the shaft is held (trips above 2.5 A)",
         "orders    5, expectations 200",
         f"log       every 10 ms, about 20271 rows, {least}; 21041 rows, {most} at the longest",
         "remark    the steps end with vent at -40 %: brought to zero in 200 ms at the end",

@@ -19,6 +19,7 @@ if TYPE_CHECKING:
     from ramprig.port.base import Port
     from ramprig.sequence.executive import Progress as HowFar
     from ramprig.sequence.outcome import Outcome
+    from ramprig.session import Session
 
 FAILURES_SHOWN = 20
 """Failed expectations printed at the end; all are in the run folder."""
@@ -64,7 +65,7 @@ def mock_url(
         options.append(("seed", str(seed)))
     options += [("fault", fault) for fault in faults]
     joint = "&" if "?" in url else "?"
-    return url + joint + urlencode(options) if options else url
+    return url + joint + urlencode(options, safe="/:") if options else url
 
 
 def open_port_for(way: Way, bench: Bench) -> Port:
@@ -90,13 +91,20 @@ def carry_out_run(pair: Pair, way: Way) -> int:
         seed=way.seed,
         virtual=way.virtual,
     )
+    watch: list[StopOnSignals] = []
+
+    def guard(session: Session) -> StopOnSignals:
+        watch.append(StopOnSignals(session))
+        return watch[-1]
+
     progress = Progress()
     try:
         result = run_sequence(
             wish,
             open_port_for(way, pair.bench),
             progress=lambda far: progress.show(lambda: how_far(far)),
-            guard=StopOnSignals,
+            guard=guard,
+            asked_by=lambda: ", ".join(name for signals in watch for name in signals.received),
         )
     finally:
         progress.close()

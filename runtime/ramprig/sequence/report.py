@@ -73,15 +73,19 @@ def _motors(plan: Plan, bench: Bench) -> Iterator[str]:
 def _motor(motor: Motor, totals: Totals, bench: Bench) -> str:
     peak = totals.peak_duty[motor.name]
     starts = totals.starts.get(motor.name, 0)
-    text = f"{motor.name}: {starts} starts, peak duty {format_duty(peak)}"
+    text = f"{motor.name}: {_count(starts, 'start')}, peak duty {format_duty(peak)}"
     if totals.reversals:
-        text += f", {totals.reversals} reversals in all"
+        text += f", {_count(totals.reversals, 'reversal')} in all"
     if motor.model is not None:
         ohms = motor.model.resistance_ohm + motor.model.bridge_ohm
         held_a = bench.supply.voltage_v * peak / 10_000 / ohms
         trip_a = motor.limits(1000)["trip_ma"] / 1000
         text += f"; {format_current(held_a)} if the shaft is held (trips above {format_current(trip_a)})"
     return text
+
+
+def _count(number: int, what: str) -> str:
+    return f"{number} {what}" if number == 1 else f"{number} {what}s"
 
 
 def _log(plan: Plan, bench: Bench) -> str:

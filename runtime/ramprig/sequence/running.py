@@ -4,17 +4,19 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Mapping
 from contextlib import AbstractContextManager, contextmanager, nullcontext
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 from ramprig.bench import Bench
+from ramprig.errors import RecordError
 from ramprig.port.base import Port
 from ramprig.port.clock import Clock
 from ramprig.record.events import Json, jsonable
 from ramprig.record.folder import InputFile, RunDescription, RunFolder
 from ramprig.record.manifest import Anchor, RunEnd
 from ramprig.record.recorder import Recorder
-from ramprig.record.writer import Trouble
+from ramprig.record.writer import Trouble, TroubleKind
+from ramprig.session.blocks import Block
 from ramprig.session.limits import LimitKey
 from ramprig.session.opening import Wanted
 from ramprig.session.readings import Identity
@@ -29,6 +31,9 @@ from .outcome import Outcome, Verdict
 from .plan import Plan
 from .reading import Sequence
 from .rig import Rig
+
+DISK_STALL_S = 3.0
+"""The motors are stopped when the disk has made no progress for so long."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -77,10 +82,12 @@ def run_sequence(
     *,
     progress: Callable[[Progress], None] | None = None,
     guard: Callable[[Session], AbstractContextManager[object]] | None = None,
+    asked_by: Callable[[], str] | None = None,
 ) -> RunResult:
     """Run a sequence on a port, which is closed at the end; tells how it ended.
 
-    `guard` is entered while the device is open, such as `StopOnSignals`. Raises what opening the device raises
+    `guard` is entered while the device is open, such as `StopOnSignals`; `asked_by` tells who asked for a stop, where
+    one was asked for. Raises what opening the device raises
     (LinkError and its kin), `FileError` where the plan does not fit the board, RecordError where the run folder cannot
     be made; in each case nothing has moved.
     """
@@ -95,7 +102,13 @@ def run_sequence(
     )
     with session, guard(session) if guard is not None else nullcontext():
         return run_on_session(
-            wish, session, clock=port.clock, port_name=port.name, listeners=listeners, progress=progress
+            wish,
+            session,
+            clock=port.clock,
+            port_name=port.name,
+            listeners=listeners,
+            progress=progress,
+            asked_by=asked_by,
         )
 
 
@@ -107,6 +120,7 @@ def run_on_session(
     port_name: str,
     listeners: Listeners,
     progress: Callable[[Progress], None] | None = None,
+    asked_by: Callable[[], str] | None = None,
 ) -> RunResult:
     """Run a sequence on a session that is open with this bench's limits and disarmed, such as a shell's; it stays open.
 
@@ -117,30 +131,92 @@ def run_on_session(
     plan = compile_plan(wish.sequence, wish.bench, tick_us=identity.tick_us)
     if wish.runs is None:
         outcome = run_plan(session, plan, rig, clock=clock, listeners=listeners, progress=progress)
-        return RunResult(outcome=outcome, folder=None)
-    with _recording(wish, session, wish.runs, clock, port_name, listeners) as recorder:
+        return RunResult(outcome=_explained(outcome, [], asked_by), folder=None)
+    troubles: list[Trouble] = []
+    with _recording(wish, session, wish.runs, clock, port_name, listeners, troubles) as recorder:
         outcome = run_plan(session, plan, rig, clock=clock, listeners=listeners, keeper=recorder, progress=progress)
+        outcome = _explained(outcome, troubles, asked_by)
         folder = recorder.finish(_end_of(session, plan, outcome, clock))
     return RunResult(outcome=outcome, folder=folder)
 
 
+def _explained(outcome: Outcome, troubles: list[Trouble], asked_by: Callable[[], str] | None) -> Outcome:
+    """The outcome with who or what asked for a stop: a disk in trouble asks for one too."""
+    if outcome.verdict is not Verdict.STOPPED:
+        return outcome
+    if troubles:
+        return replace(outcome, verdict=Verdict.NOT_RECORDED, sentence=f"stopped because {troubles[0].text}")
+    name = asked_by() if asked_by is not None else ""
+    return replace(outcome, sentence=f"{outcome.sentence} ({name})") if name else outcome
+
+
+class _Keeping:
+    """Hands blocks to the recorder until that fails, and is told of once: what comes during the stop is let go.
+
+    A disk that makes no progress must not keep the motors driven: after DISK_STALL_S they are stopped, and as nothing
+    is pumped after the error, no lease is renewed either.
+    """
+
+    def __init__(self, recorder: Recorder, on_trouble: Callable[[Trouble], None]) -> None:
+        self._recorder = recorder
+        self._on_trouble = on_trouble
+        self._failed = False
+
+    def on_block(self, block: Block) -> None:
+        """Hand it on. Raises RecordError, once, with the motors told to stop."""
+        if self._failed:
+            return
+        try:
+            if self._recorder.liveness_s() > DISK_STALL_S:
+                stalled = Trouble(TroubleKind.DISK_ERROR, f"the disk has made no progress for {DISK_STALL_S:g} s")
+                self._on_trouble(stalled)
+                raise RecordError(stalled.text)
+            self._recorder.on_block(block)
+        except RecordError:
+            self._failed = True
+            raise
+
+
 @contextmanager
 def _recording(
-    wish: RunWish, session: Session, runs: Path, clock: Clock, port_name: str, listeners: Listeners
+    wish: RunWish,
+    session: Session,
+    runs: Path,
+    clock: Clock,
+    port_name: str,
+    listeners: Listeners,
+    troubles: list[Trouble],
 ) -> Iterator[Recorder]:
-    """A recorder that listens to the session; a run that breaks off is written down as far as it came."""
-    recorder = _recorder(wish, session, runs, clock, port_name)
-    listeners.add(on_block=recorder.on_block, on_event=recorder.on_event)
+    """A recorder that listens to the session; a run that breaks off is written down as far as it came.
+
+    A trouble that demands a stop is put into `troubles` after the stop was sent.
+    """
+
+    def on_trouble(trouble: Trouble) -> None:
+        if trouble.kind.demands_stop:
+            session.panic(1)
+            troubles.append(trouble)
+
+    recorder = _recorder(wish, session, runs, clock, port_name, on_trouble)
+    keeping = _Keeping(recorder, on_trouble)
+    listeners.add(on_block=keeping.on_block, on_event=recorder.on_event)
     try:
         yield recorder
     except BaseException as error:
         recorder.finish(RunEnd(verdict="broken off", stop_reason=f"{type(error).__name__}: {error}"))
         raise
     finally:
-        listeners.remove(on_block=recorder.on_block, on_event=recorder.on_event)
+        listeners.remove(on_block=keeping.on_block, on_event=recorder.on_event)
 
 
-def _recorder(wish: RunWish, session: Session, runs: Path, clock: Clock, port_name: str) -> Recorder:
+def _recorder(
+    wish: RunWish,
+    session: Session,
+    runs: Path,
+    clock: Clock,
+    port_name: str,
+    on_trouble: Callable[[Trouble], None],
+) -> Recorder:
     sequence, bench = wish.sequence, wish.bench
     roles = ["sequence", *["include"] * (len(sequence.files) - 1)]
     inputs = [InputFile("bench", bench.file, bench.file_bytes)]
@@ -152,10 +228,6 @@ def _recorder(wish: RunWish, session: Session, runs: Path, clock: Clock, port_na
         name=wish.title or sequence.name, port=port_name, identity=identity, settings=settings, inputs=inputs
     )
     folder = RunFolder.create(runs, description, started_unix_s=clock.wall(), short_id=wish.short_id)
-
-    def on_trouble(trouble: Trouble) -> None:
-        if trouble.kind.demands_stop:
-            session.panic(1)
 
     return Recorder(
         folder,

@@ -1,0 +1,244 @@
+"""check, rehearse, run and shell from the command line: what they print, and the exit code of every kind of ending."""
+
+from __future__ import annotations
+
+import io
+import json
+import re
+import signal
+import sys
+from pathlib import Path
+
+import pytest
+
+from ramprig.cli import main, running
+from ramprig.cli.running import mock_url
+from ramprig.mock.url import parse_mock
+from ramprig.record.reading import audit, read_manifest
+from ramprig.record.recorder import Recorder
+
+SCRIPTS = Path(__file__).resolve().parent.parent / "scripts"
+BENCH = SCRIPTS / "vent_bench.yaml"
+
+SHORT = """sequence: short
+bench: {bench}
+values: {{drive: 40 %}}
+steps:
+  - ramp: {{motor: vent, to: drive, in: 500 ms}}
+  - hold: 1 s
+  - expect: {{speed of: vent, is: {wanted}, over: 300 ms}}
+  - coast: {{motor: vent, in: 500 ms}}
+"""
+HOLDS = "at least 15 rpm"
+DOES_NOT_HOLD = "at least 55 rpm"
+
+
+@pytest.fixture
+def here(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
+    """A folder to work in, with the example bench beside the sequences."""
+    monkeypatch.chdir(tmp_path)
+    (tmp_path / "bench.yaml").write_text(BENCH.read_text("utf-8"), "utf-8")
+    write("short.yaml")
+    return tmp_path
+
+
+def write(name: str, wanted: str = HOLDS) -> None:
+    Path(name).write_text(SHORT.format(bench="bench.yaml", wanted=wanted), "utf-8")
+
+
+def only_run(root: Path = Path("runs")) -> Path:
+    (folder,) = root.iterdir()
+    return folder
+
+
+# ---- exit codes ----------------------------------------------------------------------------------------------------
+
+
+def test_0_a_rehearsal_that_passes(here: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    assert main(["rehearse", "short.yaml"]) == 0
+    said = capsys.readouterr()
+    folder = only_run()
+    assert said.out == f"run folder: {folder}\npassed: all steps carried out, 1 expectation held\n"
+    assert said.err == running.NOT_PROVED + "\n"
+    assert "short-rehearsal" in folder.name
+    manifest = read_manifest(folder)
+    assert (manifest["verdict"], manifest["settings"]["rehearsal"]) == ("passed", True)
+    assert audit(folder).exact
+    assert {entry["file"] for entry in manifest["inputs"]} == {"bench.yaml", "short.yaml"}
+
+
+def test_1_an_expectation_that_fails(here: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    write("fails.yaml", DOES_NOT_HOLD)
+    assert main(["rehearse", "fails.yaml", "--no-record"]) == 1
+    first, last = capsys.readouterr().out.splitlines()
+    claim = r"speed of vent is at least 55 rpm over 300 ms: found 2\d(\.\d+)? rpm"
+    assert re.fullmatch(rf"not as expected: {claim} \[fails.yaml:7:13\]", first)
+    assert re.fullmatch(rf"failed: {claim} \[fails.yaml:7:13\]", last)
+    assert not Path("runs").exists()
+
+
+@pytest.mark.parametrize(
+    ("words", "said"),
+    [
+        (["rehearse", "absent.yaml"], "absent.yaml"),
+        (["rehearse", "short.yaml", "--set", "speed=3"], "no value has this name"),
+        (["rehearse", "short.yaml", "--set", "drive=95 %"], "short.yaml:5"),
+        (["rehearse", "short.yaml", "--bench", "absent.yaml"], "absent.yaml"),
+        (["rehearse", "short.yaml", "--fault", "jamed_shaft"], "did you mean 'jammed_shaft'?"),
+        (["run", "short.yaml", "--port", "nothing:1"], "no port is called 'nothing:'"),
+        (["run", "short.yaml", "--port", "/dev/ttyNONE9"], "no port /dev/ttyNONE9"),
+        (["shell", "--bench", "absent.yaml"], "absent.yaml"),
+    ],
+)
+def test_2_a_file_or_word_that_must_be_mended(
+    here: Path, capsys: pytest.CaptureFixture[str], words: list[str], said: str
+) -> None:
+    assert main(words) == 2
+    assert said in capsys.readouterr().err
+    assert not Path("runs").exists()
+
+
+def test_2_a_sequence_without_a_bench(here: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    text = Path("short.yaml").read_text("utf-8").replace("bench: bench.yaml\n", "")
+    Path("alone.yaml").write_text(text, "utf-8")
+    assert main(["check", "alone.yaml"]) == 2
+    assert "alone.yaml names no bench" in capsys.readouterr().err
+    assert main(["check", "alone.yaml", "--bench", "bench.yaml"]) == 0
+
+
+def test_2_a_bench_that_is_named_and_not_there_is_told_where_it_is_named(
+    here: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    Path("bench.yaml").unlink()
+    assert main(["check", "short.yaml"]) == 2
+    assert "short.yaml:2:8" in capsys.readouterr().err
+
+
+def test_2_a_disk_that_makes_no_progress_stops_the_motor(
+    here: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr(Recorder, "liveness_s", lambda recorder: 10.0)
+    assert main(["rehearse", "short.yaml"]) == 2
+    assert "not recorded: " in capsys.readouterr().out
+    manifest = read_manifest(only_run())
+    assert (manifest["verdict"], manifest["results"]["stop_confirmed"]) == ("not recorded", True)
+    assert "no progress for 3 s" in manifest["stop_reason"]
+
+
+def test_3_a_trip(here: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    assert main(["rehearse", "short.yaml", "--fault", "jammed_shaft"]) == 3
+    last = capsys.readouterr().out.splitlines()[-1]
+    assert last.startswith("tripped: stall on vent: ")
+    assert last.endswith("[short.yaml:5:11]")
+    assert (only_run() / "trail.csv").exists()
+
+
+def test_4_a_link_that_is_lost(here: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    assert main(["rehearse", "short.yaml", "--fault", "deaf"]) == 4
+    assert "no device answers" in capsys.readouterr().err
+
+
+def test_4_another_board(here: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    text = Path("bench.yaml").read_text("utf-8")
+    Path("bench.yaml").write_text(text.replace("serial: any", "serial: BOARD-7"), "utf-8")
+    assert main(["run", "short.yaml", "--port", f"mock:?pace=virtual&bench={BENCH}"]) == 4
+    assert "serial 'MOCK-0001', wanted 'BOARD-7'" in capsys.readouterr().err
+
+
+@pytest.mark.skipif(sys.platform == "win32", reason="a process cannot signal itself there")
+@pytest.mark.parametrize("name", ["SIGTERM", "SIGHUP", "SIGINT"])
+def test_5_a_signal_stops_in_order_and_is_named(
+    here: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch, name: str
+) -> None:
+    def once(far: object) -> str:
+        monkeypatch.setattr(running, "how_far", lambda far: "")
+        signal.raise_signal(getattr(signal, name))
+        return ""
+
+    monkeypatch.setattr(running, "how_far", once)
+    monkeypatch.setattr("ramprig.cli.progress.LINE_EVERY_S", 0.0)
+    assert main(["rehearse", "short.yaml"]) == 5
+    assert f"stopped: stopped by the user ({name})" in capsys.readouterr().out
+    manifest = read_manifest(only_run())
+    assert (manifest["verdict"], manifest["results"]["stop_confirmed"]) == ("stopped", True)
+    assert audit(only_run()).exact
+
+
+# ---- asking before anything moves ----------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(("typed", "code"), [("no\n", 5), ("", 5), ("yes\n", 2), (" YES \n", 2)])
+def test_run_shows_what_will_move_and_asks_on_a_terminal(
+    here: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch, typed: str, code: int
+) -> None:
+    """With `yes` it goes on to the port, which is not there; without it never gets so far."""
+    monkeypatch.setattr("ramprig.cli.run.on_terminal", lambda: True)
+    monkeypatch.setattr(sys, "stdin", io.StringIO(typed))
+    assert main(["run", "short.yaml", "--port", "/dev/ttyNONE9"]) == code
+    said = capsys.readouterr().err
+    assert "Keep a hard-wired power cut" in said
+    assert "port      /dev/ttyNONE9, board ramprig-mock (any serial)" in said
+    assert "latch     may move, -40 deg to 40 deg" in said
+    assert "peak duty 40 %" in said
+    assert ("Nothing has moved" in said) == (code == 5)
+
+
+@pytest.mark.parametrize("words", [["--yes", "--port", "/dev/ttyNONE9"], ["--port", "mock:?pace=virtual"]])
+def test_run_does_not_ask_where_told_or_where_nothing_real_moves(
+    here: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch, words: list[str]
+) -> None:
+    monkeypatch.setattr("ramprig.cli.run.on_terminal", lambda: True)
+    monkeypatch.setattr(sys, "stdin", None)
+    assert main(["run", "short.yaml", *words]) == (2 if "--yes" in words else 0)
+    assert "Type yes" not in capsys.readouterr().err
+
+
+# ---- what is printed -----------------------------------------------------------------------------------------------
+
+
+def test_check_prints_the_plan(here: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    assert main(["check", "short.yaml", "--set", "drive=50 %"]) == 0
+    assert capsys.readouterr().out.splitlines() == [
+        "short",
+        "bench     greenhouse vent drive (bench.yaml)",
+        "takes     2 s",
+        "motor     vent: 1 start, peak duty 50 %; 2.4 A if the shaft is held (trips above 2.5 A)",
+        "orders    2, expectations 1",
+        "log       every 10 ms, about 201 rows, 14.6 kB",
+        "",
+        "          at         for    line  what",
+        "    0.000 s       500 ms       5  vent to 50 % in 500 ms",
+        "    0.500 s          1 s       6  hold 1 s",
+        "    1.500 s                    7  expect speed of vent is at least 15 rpm over 300 ms",
+        "    1.500 s       500 ms       8  vent to zero in 500 ms, then coast",
+    ]
+
+
+def test_the_same_seed_gives_the_same_samples(here: Path) -> None:
+    for runs in ("one", "two"):
+        assert main(["rehearse", "short.yaml", "--seed", "5", "--runs", runs]) == 0
+    one, two = (only_run(Path(runs)) / "samples.csv" for runs in ("one", "two"))
+    assert one.read_bytes() == two.read_bytes()
+
+
+def test_a_title_names_the_run(here: Path) -> None:
+    assert main(["run", "short.yaml", "--port", "mock:?pace=virtual", "--title", "Vent 7, worn"]) == 0
+    assert "vent-7-worn" in only_run().name
+    assert json.loads((only_run() / "run.json").read_text("utf-8"))["name"] == "Vent 7, worn"
+
+
+@pytest.mark.parametrize(
+    ("url", "bench"),
+    [("mock:", "here/bench.yaml"), ("mock:?seed=3", "here/bench.yaml"), ("mock:?bench=other.yaml", "other.yaml")],
+)
+def test_a_mock_is_made_from_the_bench_file_unless_its_name_says_which(url: str, bench: str) -> None:
+    wish = parse_mock(mock_url(url, Path("here/bench.yaml"), virtual=True, faults=["bit_errors=1e-3"]))
+    assert (wish.bench, wish.pace, wish.faults) == (Path(bench), "virtual", ("bit_errors=1e-3",))
+
+
+def test_the_shell_takes_lines_from_a_pipe(
+    here: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr(sys, "stdin", io.StringIO("state\nleave\n"))
+    assert main(["shell", "--port", "mock:?pace=virtual"]) == 0
+    assert "left: all outputs are off" in capsys.readouterr().out
