@@ -1,5 +1,6 @@
 /* The requests: each word's checks in the order of SPEC BAD-5, what it does, and its answer (SPEC section 8). */
 #include "device.h"
+#include "seeded.h"
 #include "store.h"
 
 #include <string.h>
@@ -21,7 +22,7 @@ static uint8_t index_refusal(uint8_t word, const struct rr_arguments *given)
     case RR_WORD_TRAIL:
         return given->value[0] >= RR_AXES ? RR_REASON_INDEX : WORD_OK;
     case RR_WORD_SWING:
-        return given->value[0] >= RR_SERVOS ? RR_REASON_INDEX : WORD_OK;
+        return rr_limits_place(RR_LIMIT_PULSE_MIN_US, given->value[0]) == RR_LIMITS ? RR_REASON_INDEX : WORD_OK;
     case RR_WORD_LIMIT:
         return rr_limits_place((uint8_t)given->value[0], given->value[1]) == RR_LIMITS ? RR_REASON_INDEX : WORD_OK;
     default:
@@ -95,12 +96,12 @@ static uint8_t range_refusal(const struct rr_device *device, uint8_t word, const
 
 static uint8_t do_arm(struct rr_device *device, const struct rr_arguments *given)
 {
-    if (given->value[1] != rr_limits_digest(&device->limits)) {
+    if (RR_SEEDED(ARM_ON_ANY_DIGEST, false, given->value[1] != rr_limits_digest(&device->limits))) {
         return RR_REASON_DIGEST;
     }
     device->lease_ms = given->value[0];
     device->lease_ticks = (given->value[0] * 1000u + RR_TICK_US - 1u) / RR_TICK_US;
-    device->state = RR_STATE_ARMED;
+    rr_latch_arm(&device->latch);
     for (uint8_t i = 0; i < RR_AXES; i++) {
         rr_glide_end(&device->axis[i].demand, 0);
         device->axis[i].brake = false;
@@ -127,7 +128,7 @@ static bool at_zero(const struct rr_device *device)
 
 static uint8_t do_disarm(struct rr_device *device)
 {
-    if (device->state == RR_STATE_OFF) {
+    if (device->latch.state == RR_STATE_OFF) {
         return WORD_OK;
     }
     if (!at_zero(device)) {
@@ -142,7 +143,7 @@ static uint8_t do_order(struct rr_device *device, uint8_t kind, int32_t value, u
                         uint8_t index)
 {
     int32_t ahead = (int32_t)(start - device->tick);
-    if (ahead <= 0) {
+    if (RR_SEEDED(LATE_ORDER_CARRIED_OUT, false, ahead <= 0)) {
         rr_finding_note(&device->late, RR_TRIP_LATE_ORDER, ahead == INT32_MIN ? INT32_MAX : -ahead, 0);
         return RR_REASON_LATE;
     }
@@ -152,39 +153,39 @@ static uint8_t do_order(struct rr_device *device, uint8_t kind, int32_t value, u
     if (device->orders.count == RR_QUEUE) {
         return RR_REASON_FULL;
     }
-    struct rr_order order = {start, ticks, value, kind, index, device->line.tag};
+    uint32_t carried_out = RR_SEEDED(LATE_ORDER_CARRIED_OUT, ahead < 0 ? device->tick : start, start);
+    struct rr_order order = {carried_out, ticks, value, kind, index, device->line.tag};
     rr_orders_add(&device->orders, &order, device->tick);
     return WORD_OK;
 }
 
 static void do_stop(struct rr_device *device, uint8_t category)
 {
-    bool live = device->state == RR_STATE_ARMED || device->state == RR_STATE_STOPPING;
-    if (live && !(device->state == RR_STATE_STOPPING && category == 1)) {
+    if (rr_latch_is_live(&device->latch) && !(device->latch.state == RR_STATE_STOPPING && category == 1)) {
         rr_stop_begin(device, category, RR_SOURCE_HOST);
     }
 }
 
 static uint8_t do_clear(struct rr_device *device)
 {
-    uint8_t trip = device->latched;
+    uint8_t trip = device->latch.trip;
     int32_t supply = device->inputs.supply_mv;
     bool persists = trip == RR_TRIP_SELF_TEST ||
                     (trip == RR_TRIP_OVERVOLTAGE && supply > rr_limits_get(&device->limits, RR_LIMIT_OVER_MV, 0)) ||
                     (trip == RR_TRIP_UNDERVOLTAGE && supply < rr_limits_get(&device->limits, RR_LIMIT_UNDER_MV, 0));
     const struct rr_axis *axis = &device->axis[device->last_trip.index];
-    if (persists || rr_guard_persists(&axis->guard, &axis->guard_limits, trip,
-                                      device->inputs.current_ma[device->last_trip.index])) {
+    persists = persists || rr_guard_persists(&axis->guard, &axis->guard_limits, trip,
+                                             device->inputs.current_ma[device->last_trip.index]);
+    if (RR_SEEDED(CLEAR_DESPITE_CAUSE, false, persists)) {
         return RR_REASON_CAUSE;
     }
-    device->latched = RR_TRIP_NONE;
-    device->state = RR_STATE_OFF;
+    rr_latch_clear(&device->latch);
     return WORD_OK;
 }
 
 static uint8_t do_limit(struct rr_device *device, const struct rr_arguments *given)
 {
-    bool live = device->state == RR_STATE_ARMED || device->state == RR_STATE_STOPPING;
+    bool live = RR_SEEDED(LOOSER_WHILE_ARMED, false, rr_latch_is_live(&device->latch));
     if (given->count < 3) {
         return WORD_OK;
     }
@@ -234,8 +235,8 @@ static uint8_t carry_out(struct rr_device *device, uint8_t word, const struct rr
 
 static void write_state(struct rr_device *device, struct rr_out *out)
 {
-    rr_out_word(out, rr_state_word(device->state));
-    rr_out_word(out, rr_trip_word(device->latched));
+    rr_out_word(out, rr_state_word(device->latch.state));
+    rr_out_word(out, rr_trip_word(device->latch.trip));
     rr_out_u32(out, device->orders.count);
     rr_out_i32(out, device->inputs.supply_mv);
     rr_out_i32(out, device->inputs.temperature_dc);
@@ -283,7 +284,7 @@ static void write_answer(struct rr_device *device, struct rr_out *out, uint8_t w
         break;
     case RR_WORD_BEAT:
     case RR_WORD_STOP:
-        rr_out_word(out, rr_state_word(device->state));
+        rr_out_word(out, rr_state_word(device->latch.state));
         break;
     case RR_WORD_STATE:
         write_state(device, out);
@@ -329,7 +330,7 @@ static uint8_t understood(struct rr_device *device, const char *text, uint8_t *w
     if (reason == WORD_OK) {
         reason = range_refusal(device, *word, given);
     }
-    if (reason == WORD_OK && (rr_fields_states(*word) >> device->state & 1u) == 0) {
+    if (reason == WORD_OK && (rr_fields_states(*word) >> device->latch.state & 1u) == 0) {
         reason = RR_REASON_STATE;
     }
     return reason;
@@ -423,9 +424,12 @@ void rr_answer_request(struct rr_device *device)
         answer_urgent(device, text);
         return;
     }
-    if (memory->answer_length != 0 && memory->tag == device->line.tag) {
+    if (RR_SEEDED(MEMORY_FORGETS, false, memory->answer_length != 0 && memory->tag == device->line.tag)) {
         if (strcmp(memory->body, text) == 0) {
             device->repeats++;
+            if (RR_SEEDED(REPEAT_RENEWS, true, false)) {
+                device->renewed = device->tick;
+            }
             device->port->write(device->self, memory->answer, memory->answer_length);
         } else {
             device->renewed = device->tick;

@@ -1,6 +1,8 @@
 /* The chain of one axis in a tick; see chain.h. */
 #include "chain.h"
 
+#include "seeded.h"
+
 static int8_t sign_of(int16_t duty)
 {
     return (int8_t)((duty > 0) - (duty < 0));
@@ -16,7 +18,7 @@ static int16_t held_within(int16_t duty, int16_t ceiling)
     if (duty > ceiling) {
         return ceiling;
     }
-    return duty < -ceiling ? (int16_t)-ceiling : duty;
+    return RR_SEEDED(CEILING_ONE_SIDED, false, duty < -ceiling) ? (int16_t)-ceiling : duty;
 }
 
 static uint16_t one_more(uint16_t ticks)
@@ -39,7 +41,7 @@ static int16_t slewed(int16_t duty, int16_t wanted, int16_t up, int16_t down)
     if (wanted_size < size) {
         size = size - wanted_size > down ? (int16_t)(size - down) : wanted_size;
     } else if (wanted_size - size > up) {
-        size = (int16_t)(size + up);
+        size = (int16_t)(size + RR_SEEDED(SLEW_DOUBLED, 2 * up, up));
     } else {
         size = wanted_size;
     }
@@ -49,11 +51,11 @@ static int16_t slewed(int16_t duty, int16_t wanted, int16_t up, int16_t down)
 /* S3: may the bridge leave zero for this sign? */
 static bool may_leave_zero(const struct rr_chain *chain, const struct rr_chain_limits *limits, int8_t sign)
 {
-    if (sign == chain->last_sign) {
+    if (sign == chain->last_sign || RR_SEEDED(START_UNGUARDED, chain->last_sign == 0, false)) {
         return true;
     }
     return chain->zero_for >= limits->dwell_ticks &&
-           (limits->sense == 0 || chain->still_for >= limits->still_ticks);
+           RR_SEEDED(STANDSTILL_IGNORED, true, limits->sense == 0 || chain->still_for >= limits->still_ticks);
 }
 
 void rr_chain_watch(struct rr_chain *chain, const struct rr_chain_limits *limits, int32_t counts)
@@ -69,13 +71,12 @@ void rr_chain_watch(struct rr_chain *chain, const struct rr_chain_limits *limits
 
 static void set_duty(struct rr_chain *chain, int16_t duty)
 {
-    chain->duty = duty;
-    if (duty == 0) {
-        chain->zero_for = one_more(chain->zero_for);
-    } else {
-        chain->zero_for = 0;
+    bool resting = RR_SEEDED(DWELL_FROM_COMMAND, size_of(duty) < size_of(chain->duty), false) || duty == 0;
+    chain->zero_for = resting ? one_more(chain->zero_for) : 0;
+    if (duty != 0) {
         chain->last_sign = sign_of(duty);
     }
+    chain->duty = duty;
 }
 
 int16_t rr_chain_step(struct rr_chain *chain, const struct rr_chain_limits *limits, int16_t demand,

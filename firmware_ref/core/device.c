@@ -1,13 +1,14 @@
 /* One tick of the device, in the order of SPEC RUN-2; see device.h. */
 #include "device.h"
 
+#include "seeded.h"
 #include "store.h"
 
 #include <string.h>
 
 static bool is_live(const struct rr_device *device)
 {
-    return device->state == RR_STATE_ARMED || device->state == RR_STATE_STOPPING;
+    return rr_latch_is_live(&device->latch);
 }
 
 /* (a) The requests that have arrived, while there is room for a whole answer. */
@@ -28,7 +29,7 @@ static void take_requests(struct rr_device *device)
             if (is_live(device)) {
                 rr_stop_begin(device, 0, RR_SOURCE_BARE);
             } else {
-                rr_notice_push(device, RR_NOTICE_OFF, device->state, 0, 0);
+                rr_notice_push(device, RR_NOTICE_OFF, device->latch.state, 0, 0);
             }
             break;
         case RR_LINE_BARE_WHO:
@@ -94,7 +95,7 @@ static void judge_supply(struct rr_device *device, struct rr_finding *finding)
 static void judge_lease(const struct rr_device *device, struct rr_finding *finding)
 {
     uint32_t silent = device->tick - device->renewed;
-    if (device->state == RR_STATE_ARMED && silent >= device->lease_ticks) {
+    if (RR_SEEDED(LEASE_FORGOTTEN, false, device->latch.state == RR_STATE_ARMED) && silent >= device->lease_ticks) {
         rr_finding_note(finding, RR_TRIP_LINK_LOST, (int32_t)((uint64_t)silent * RR_TICK_US / 1000u),
                         (int32_t)device->lease_ms);
     }
@@ -226,8 +227,6 @@ static void drive(struct rr_device *device)
         return;
     }
     bool turning = false;
-    bool late = device->state == RR_STATE_STOPPING &&
-                device->tick - device->stop_begun >= device->board_limits.stop_ticks;
     for (uint8_t i = 0; i < RR_AXES; i++) {
         drive_axis(device, i);
         turning = turning || device->axis[i].chain.duty != 0;
@@ -237,7 +236,7 @@ static void drive(struct rr_device *device)
         drive_servo(device, i);
     }
 #endif
-    if (device->state == RR_STATE_STOPPING && (late || !turning)) {
+    if (rr_latch_stop_is_over(&device->latch, device->tick, device->board_limits.stop_ticks, turning)) {
         rr_stop_off(device);
     }
 }
@@ -322,12 +321,13 @@ void rr_device_start(struct rr_device *device, const struct rr_port *port, void 
     } else if (cause == RR_CAUSE_BROWNOUT || cause == RR_CAUSE_WATCHDOG) {
         device->last_trip = (struct rr_finding){RR_TRIP_RESTARTED, 0, cause, 0};
     }
-    device->latched = device->last_trip.trip;
-    device->state = device->latched != RR_TRIP_NONE ? RR_STATE_TRIPPED : RR_STATE_OFF;
+    device->latch.trip = device->last_trip.trip;
+    device->latch.state = device->latch.trip != RR_TRIP_NONE ? RR_STATE_TRIPPED : RR_STATE_OFF;
+    device->last_trip_tick = device->latch.trip != RR_TRIP_NONE ? device->tick : 0;
     rr_notice_push(device, RR_NOTICE_BOOT, cause, 0, 0);
-    if (device->latched != RR_TRIP_NONE) {
+    if (device->latch.trip != RR_TRIP_NONE) {
         rr_notice_push(device, RR_NOTICE_TRIP, 0, device->last_trip.value, 0);
-        rr_notice_push(device, RR_NOTICE_OFF, device->state, 0, 0);
+        rr_notice_push(device, RR_NOTICE_OFF, device->latch.state, 0, 0);
     }
     rr_notice_send(device);
 }

@@ -7,6 +7,7 @@
 
 #include "block.h"
 #include "fields.h"
+#include "latch.h"
 #include "limits.h"
 #include "line.h"
 #include "orders.h"
@@ -77,8 +78,7 @@ struct rr_device {
     void *self;
     uint32_t tick;
     uint32_t boot;
-    uint8_t state;
-    uint8_t latched; /* trip */
+    struct rr_latch latch;
     struct rr_finding found;
     struct rr_finding late; /* an order of this tick came late */
     struct rr_finding last_trip;
@@ -86,7 +86,6 @@ struct rr_device {
     uint32_t renewed; /* tick of the last lease renewal */
     uint32_t lease_ms;
     uint32_t lease_ticks;
-    uint32_t stop_begun;
     uint16_t over_for; /* ticks in a row beyond the supply's limits */
     uint16_t under_for;
     struct rr_board_limits board_limits;

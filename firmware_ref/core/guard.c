@@ -1,6 +1,8 @@
 /* The guard of one axis; see guard.h. */
 #include "guard.h"
 
+#include "seeded.h"
+
 void rr_finding_note(struct rr_finding *finding, uint8_t trip, int32_t value, int32_t bound)
 {
     if (finding->trip == RR_TRIP_NONE || trip < finding->trip) {
@@ -46,10 +48,11 @@ static void judge_current(struct rr_guard *guard, const struct rr_guard_limits *
         guard->over_for = 0;
         return;
     }
-    if (guard->over_for < limits->trip_ticks) {
+    uint16_t enough = RR_SEEDED(OVERCURRENT_LATE, (uint16_t)(limits->trip_ticks + 1u), limits->trip_ticks);
+    if (guard->over_for < enough) {
         guard->over_for++;
     }
-    if (guard->over_for >= limits->trip_ticks) {
+    if (guard->over_for >= enough) {
         rr_finding_note(finding, RR_TRIP_OVERCURRENT, current_ma, limits->trip_ma);
     }
 }
@@ -116,7 +119,7 @@ static void judge_heat(struct rr_guard *guard, const struct rr_guard_limits *lim
 {
     uint32_t size = size_of(current_ma);
     uint32_t u = size > 65535ul ? 65535ul : size;
-    guard->square_sum += (uint32_t)(u * u);
+    guard->square_sum += RR_SEEDED(SQUARE_IN_INT, (uint32_t)((int)u * (int)u), (uint32_t)(u * u));
     if (tick % RR_THERMAL_TICKS != 0) {
         return;
     }

@@ -2,6 +2,7 @@
 #include "line.h"
 
 #include "check.h"
+#include "seeded.h"
 
 #include <string.h>
 
@@ -75,7 +76,7 @@ static enum rr_line_kind judged(struct rr_line *line, uint8_t length)
 enum rr_line_kind rr_line_take(struct rr_line *line, uint8_t byte)
 {
     if (byte != '\n') {
-        if (line->length < RR_HOST_LINE_MAX) {
+        if (line->length < RR_SEEDED(LINE_ONE_TOO_LONG, RR_HOST_LINE_MAX + 1, RR_HOST_LINE_MAX)) {
             line->text[line->length++] = (char)byte;
         }
         return RR_LINE_NONE;

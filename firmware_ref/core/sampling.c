@@ -9,13 +9,13 @@
 uint16_t rr_sampling_state_bits(const struct rr_device *device)
 {
     bool braking = false;
-    bool live = device->state == RR_STATE_ARMED || device->state == RR_STATE_STOPPING;
+    bool live = rr_latch_is_live(&device->latch);
     for (uint8_t i = 0; i < RR_AXES; i++) {
         braking = braking || (live && device->axis[i].brake && device->axis[i].chain.duty == 0);
     }
-    return (uint16_t)(device->state << RR_BITS_STATE_LOW | device->locked << RR_BITS_DWELL_LOCK_LOW |
+    return (uint16_t)(device->latch.state << RR_BITS_STATE_LOW | device->locked << RR_BITS_DWELL_LOCK_LOW |
                       device->at_ceiling << RR_BITS_AT_CEILING_LOW | device->at_slew << RR_BITS_AT_SLEW_LOW |
-                      braking << RR_BITS_BRAKING_LOW | device->latched << RR_BITS_TRIP_LOW);
+                      braking << RR_BITS_BRAKING_LOW | device->latch.trip << RR_BITS_TRIP_LOW);
 }
 
 bool rr_sampling_mask_fits(uint32_t mask)
@@ -139,7 +139,9 @@ uint32_t rr_sampling_change(struct rr_device *device, uint16_t period, uint32_t 
     logging->form = form;
     logging->next_tick = device->tick + 1u;
 #if RR_KEEP > 0
-    logging->kept_count = 0;
+    if (period != 0) { /* after `log 0` the lines stay kept: a host asks for those lost at the end */
+        logging->kept_count = 0;
+    }
 #endif
     rr_block_prepare(&logging->block, mask, period, logging->payload, RR_PAYLOAD_MAX);
     return made;

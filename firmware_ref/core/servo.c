@@ -1,6 +1,8 @@
 /* One servo's pulse in a tick; see servo.h. */
 #include "servo.h"
 
+#include "seeded.h"
+
 int32_t rr_servo_held_ns(const struct rr_servo_limits *limits, int32_t pulse_ns)
 {
     if (pulse_ns < limits->least_ns) {
@@ -16,7 +18,7 @@ int32_t rr_servo_first_ns(const struct rr_servo_limits *limits)
 
 int32_t rr_servo_step_ns(const struct rr_servo_limits *limits, int32_t pulse_ns, int32_t goal_ns)
 {
-    int32_t goal = rr_servo_held_ns(limits, goal_ns);
+    int32_t goal = RR_SEEDED(SERVO_PAST_ITS_END, goal_ns, rr_servo_held_ns(limits, goal_ns));
     int32_t pulse = rr_servo_held_ns(limits, pulse_ns); /* a limit tightened past the pulse cuts at once, like the ceiling */
     if (goal - pulse > limits->slew_ns) {
         return pulse + limits->slew_ns;

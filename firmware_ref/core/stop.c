@@ -1,10 +1,6 @@
 /* Stops and trips: how the outputs go off and what latches (SPEC STOP-1 to STOP-6, TRIP-1, TRIP-2). */
 #include "device.h"
 
-#define CATEGORY(NAME, word, number, category) category,
-static const uint8_t categories[RR_TRIP_COUNT] = {RR_TRIP_LIST(CATEGORY)};
-#undef CATEGORY
-
 static void end_orders(struct rr_device *device)
 {
     device->orders.count = 0;
@@ -32,8 +28,8 @@ void rr_stop_off(struct rr_device *device)
         device->servo[i].pulse_ns = 0;
     }
 #endif
-    device->state = device->latched != RR_TRIP_NONE ? RR_STATE_TRIPPED : RR_STATE_OFF;
-    rr_notice_push(device, RR_NOTICE_OFF, device->state, 0, 0);
+    rr_latch_off(&device->latch);
+    rr_notice_push(device, RR_NOTICE_OFF, device->latch.state, 0, 0);
 }
 
 void rr_stop_begin(struct rr_device *device, uint8_t category, uint8_t source)
@@ -44,23 +40,19 @@ void rr_stop_begin(struct rr_device *device, uint8_t category, uint8_t source)
         return;
     }
     end_orders(device);
-    device->state = RR_STATE_STOPPING;
-    device->stop_begun = device->tick;
+    rr_latch_stop(&device->latch, device->tick);
 }
 
 void rr_stop_trip(struct rr_device *device, const struct rr_finding *finding)
 {
-    bool live = device->state == RR_STATE_ARMED || device->state == RR_STATE_STOPPING;
-    uint8_t category = categories[finding->trip];
-    if (!live || (device->state == RR_STATE_STOPPING && category != 0)) {
+    if (!rr_latch_trip(&device->latch, finding->trip, device->tick)) {
         return;
     }
-    device->latched = finding->trip;
     device->last_trip = *finding;
     device->last_trip_tick = device->tick;
     rr_trail_trip(&device->trail);
     rr_notice_push(device, RR_NOTICE_TRIP, finding->index, finding->value, finding->bound);
-    if (category == 0) {
+    if (rr_latch_category(finding->trip) == 0) {
         rr_stop_off(device);
     } else {
         rr_stop_begin(device, 1, RR_SOURCE_TRIP);
