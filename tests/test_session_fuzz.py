@@ -29,8 +29,13 @@ class LyingPort(ClosesItself):
         self.port = port
         self.random = random.Random(seed)
         self.rate = rate
+        self.last_tag = "00"
+        self.early = b""
 
     def read(self, timeout_s: float) -> bytes:
+        if self.early:
+            data, self.early = self.early, b""
+            return data
         data = self.port.read(timeout_s)
         if data.endswith(b"\n") and self.random.random() < self.rate:
             data += self.lie()
@@ -44,7 +49,7 @@ class LyingPort(ClosesItself):
         fields = " ".join(
             str(chance.choice([chance.randrange(-(2**31), 2**32), *WORDS])) for _ in range(chance.randrange(14))
         )
-        tag = f"{chance.randrange(256):02x}"
+        tag = chance.choice([f"{chance.randrange(256):02x}", self.last_tag])
         body = chance.choice(
             [
                 f"{tag} ok {tick} {fields}",
@@ -60,6 +65,9 @@ class LyingPort(ClosesItself):
         return seal(body.encode("ascii"))
 
     def write(self, data: bytes) -> None:
+        self.last_tag = data[:2].decode("ascii")
+        if self.random.random() < self.rate:
+            self.early = self.lie()
         self.port.write(data)
 
     def urgent(self, data: bytes) -> bool:

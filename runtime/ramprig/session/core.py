@@ -1,4 +1,7 @@
-"""The state of a session and what each line from the device does to it."""
+"""The state of a session and what each line from the device does to it.
+
+Longer than most files here: every line of the device may change every part of this state, so all of it is in one place.
+"""
 
 from __future__ import annotations
 
