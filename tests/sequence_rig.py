@@ -13,6 +13,7 @@ from ramprig.bench import Bench, bench_of_text
 from ramprig.mock.device import MockDevice
 from ramprig.mock.from_bench import setup_of_bench
 from ramprig.mock.port import MockPort
+from ramprig.mock.setup import MockSetup
 from ramprig.sequence.compile import compile_plan
 from ramprig.sequence.ending import run_plan
 from ramprig.sequence.executive import Progress
@@ -142,10 +143,14 @@ def rehearse(
     seed: int = 1,
     meddle: Callable[[Progress, MockDevice, Session, MockPort], None] | None = None,
     settings: Mapping[str, str] | None = None,
+    change: Callable[[MockSetup], MockSetup] = lambda setup: setup,
 ) -> Rehearsal:
-    """Run the steps on a new mock in virtual time; `meddle` is called each time the executive comes round."""
+    """Run the steps on a new mock in virtual time.
+
+    `meddle` is called each time the executive comes round; `change` makes the mock's setup another one.
+    """
     bench = small_bench()
-    device = MockDevice(setup_of_bench(bench, faults=faults), seed=seed)
+    device = MockDevice(change(setup_of_bench(bench, faults=faults)), seed=seed)
     port = MockPort(device, pace="virtual", seed=seed)
     listeners = Listeners()
     sequence = sequence_of(folder, steps, head=head, **(settings or {}))
