@@ -183,6 +183,20 @@ def test_a_text_opens_a_mock() -> None:
     assert parse_mock("mock:?baud=0&bench=a.yaml").bench == Path("a.yaml")
 
 
+def test_a_text_with_a_bench_takes_its_motors_and_faults(tmp_path: Path) -> None:
+    bench = Path(__file__).resolve().parent.parent / "scripts" / "vent_bench.yaml"
+    with open_mock(f"mock:?pace=virtual&bench={bench}&fault=deaf") as port:
+        assert [axis.name for axis in port.device.setup.plant.axes] == ["vent"]
+        assert port.device.faults.get("deaf")
+    timed = tmp_path / "timed.yaml"
+    fault = "faults:\n    - {fault: encoder_dead, motor: vent, from: 2 s, until: 3 s}"
+    timed.write_text(bench.read_text("utf-8").replace("faults: []", fault), "utf-8")
+    with open_mock(f"mock:?pace=virtual&bench={timed}") as port:
+        assert [(fault.text, fault.from_s, fault.until_s) for fault in port.device.setup.timed_faults] == [
+            ("encoder_dead:0", 2.0, 3.0)
+        ]
+
+
 @pytest.mark.parametrize(
     ("text", "part"),
     [

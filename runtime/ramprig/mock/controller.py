@@ -60,6 +60,9 @@ class Controller:
         """`self_test` other than 0 is the number of the test that failed; `start_tick` is for tests of the wrap."""
         self.board = board
         self.inputs = fitted(inputs, board.caps)
+        self._read_counts = self.inputs.read_counts  # bound once: asked for in every tick
+        self._read_current_ma = self.inputs.read_current_ma
+        self._read_supply_mv = self.inputs.read_supply_mv
         self.limits = limits if limits is not None else LimitStore(board)
         self.boot = boot
         self.link = DeviceLink()
@@ -91,6 +94,7 @@ class Controller:
         self._bits = 0
         self._received = bytearray()
         self._garbled_told = 0
+        self._asked = 0  # notices of (a), which come before `garbled`
         self._break = False
         self.limits_set = False
         self.encore: bytes | None = None
@@ -108,6 +112,7 @@ class Controller:
             self.tell("trip", *_fields(self.latched))
             self._enter(State.TRIPPED)
             self.tell("off", self.state)
+        self._send_notices(self.age + 1)  # before any answer of the first tick (RUN-1)
 
     # ---- the outside -----------------------------------------------------------------------------------------------
 
@@ -134,11 +139,11 @@ class Controller:
         self.age = age = self.age + 1
         if self._received:  # (a)
             self._take_requests(age)
-        inputs = self.inputs  # (b), (c)
+        read_counts, read_current_ma = self._read_counts, self._read_current_ma  # (b), (c)
         for index, watch, drive in self._axes:
-            watch.read(inputs.read_counts(index), inputs.read_current_ma(index), age, drive.duty)
+            watch.read(read_counts(index), read_current_ma(index), age, drive.duty)
         supply = self.supply
-        supply_mv = inputs.read_supply_mv()
+        supply_mv = self._read_supply_mv()
         if supply.quiet and supply.under_mv <= supply_mv <= supply.over_mv:
             supply.supply_mv = supply_mv
         else:
@@ -204,6 +209,7 @@ class Controller:
             if self.encore is not None:
                 self.transmitter.say(self.encore)
                 self.encore = None
+        self._asked = len(self._notices)
 
     def _bare(self, word: str) -> None:
         if word == "who":
@@ -360,19 +366,28 @@ class Controller:
 
     def _send_notices(self, age: int) -> None:
         tick = age & TICK_MASK
+        for at in range(len(self._notices) + 1):
+            if at == self._asked:
+                self._tell_garbled(tick)
+            if at < len(self._notices):
+                word, *fields = self._notices[at]
+                self.transmitter.say(self.link.notice(str(word), tick, *fields))
+        self._notices.clear()
+        self._asked = 0
+
+    def _tell_garbled(self, tick: int) -> None:
         news = self.link.garbled_news(tick)
         if news is not None:
             self.transmitter.say(news)
             self._garbled_told = self.link.counts.garbled
-        for word, *fields in self._notices:
-            self.transmitter.say(self.link.notice(str(word), tick, *fields))
-        self._notices.clear()
 
     def _record(self, age: int) -> None:
-        record = [self.supply.supply_mv, self._state_bits | self._bits]
+        if self.trail.frozen:
+            return
+        record: tuple[int, ...] = (self.supply.supply_mv, self._state_bits | self._bits)
         for _, watch, drive in self._axes:
             record += (drive.duty, watch.counts, watch.current_ma)
-        self.trail.add(tuple(record), age)
+        self.trail.add(record, age)
 
     def _take_over_limits(self) -> None:
         self.limits_set = False

@@ -47,11 +47,12 @@ def schedule(setup: MockSetup) -> list[tuple[int, str, int, float]]:
 class PlantInputs:
     """What the board's pins read from the plant. The counters begin at 0 with each start of the board."""
 
-    __slots__ = ("_axes", "_encoders", "_plant", "_zero", "read_supply_mv")
+    __slots__ = ("_axes", "_encoders", "_plant", "_sensors", "_zero", "read_supply_mv")
 
     def __init__(self, plant: Plant) -> None:
         self._plant = plant
         self._axes = plant.axes
+        self._sensors = plant.sensors
         self._encoders = plant.encoders
         self._zero = [plant.read_counts(i) for i in range(len(plant.axes))]
         self.read_supply_mv = plant.read_supply_mv
@@ -63,7 +64,7 @@ class PlantInputs:
 
     def read_current_ma(self, axis: int) -> int:
         """The current sensor."""
-        return self._plant.read_current_ma(axis)
+        return self._sensors[axis].read(self._axes[axis].bridge_current_a)
 
     def read_temperature_dc(self) -> int:
         """The winding of the first motor, 20 degC without one."""

@@ -21,6 +21,11 @@ CURRENT_MAX_MA = 65535
 _UNREACHED = 1 << 40
 
 
+def apart(a: int, b: int) -> int:
+    """The difference of two counts, by SPEC section 2."""
+    return max((a - b + 0x80000000 & 0xFFFFFFFF) - 0x80000000, -0x7FFFFFFF)
+
+
 @dataclass(frozen=True, slots=True, order=True)
 class Finding:
     """A trip that would latch: sorted by its rank, then by the axis. `value` and `bound` as in the notice `trip`."""
@@ -78,7 +83,7 @@ class Heat:
 class AxisWatch:
     """The guard of one axis. `counts` and `current_ma` are the last readings; `still_age` is when the shaft last moved.
 
-    `position` is the counts without their wrap. Ages are device ticks that do not wrap.
+    Ages are device ticks that do not wrap.
     """
 
     __slots__ = (
@@ -107,7 +112,6 @@ class AxisWatch:
         "counts",
         "current_ma",
         "heat",
-        "position",
         "still_age",
     )
 
@@ -116,7 +120,6 @@ class AxisWatch:
         self._index = index
         self._found = found
         self.counts = 0
-        self.position = 0
         self.current_ma = 0
         self.still_age = age - 1
         self._still_mark = 0
@@ -127,7 +130,7 @@ class AxisWatch:
         self._stall_age = 0
         self._stall_mark = 0
         self._wrong_mark = 0
-        self._speed_mark: int | None = None
+        self._speed_mark = 0
         self.heat = Heat(tick_us=limits.board.tick_us)
         self.refresh(limits)
 
@@ -168,7 +171,7 @@ class AxisWatch:
         if duty >= self._stall_duty or -duty >= self._stall_duty:
             if not self._driven:
                 self._driven = True
-                self._stall_mark = self._wrong_mark = self.position
+                self._stall_mark = self._wrong_mark = counts
                 self._stall_age = age
             elif moved:
                 self._follow(age, duty)
@@ -178,34 +181,31 @@ class AxisWatch:
             self._driven = False
 
     def _move(self, counts: int, age: int) -> None:
-        """Follow the counts through their wrap, and mark when they leave the band of standstill."""
-        self._seen = counts
-        delta = (counts - self.counts + 0x80000000 & 0xFFFFFFFF) - 0x80000000
-        self.counts = counts
-        self.position += delta
-        if abs(self.position - self._still_mark) > self._still_counts:
-            self._still_mark = self.position
+        """Take over counts that differ, and mark when they leave the band of standstill."""
+        self._seen = self.counts = counts
+        if abs(apart(counts, self._still_mark)) > self._still_counts:
+            self._still_mark = counts
             self.still_age = age
 
     def _follow(self, age: int, duty: int) -> None:
         """Judge a movement of a driven shaft: is it enough, and is it the right way?"""
-        position = self.position
-        if abs(position - self._stall_mark) >= self._stall_counts:
-            self._stall_mark = position
+        counts = self.counts
+        if abs(apart(counts, self._stall_mark)) >= self._stall_counts:
+            self._stall_mark = counts
             self._stall_age = age
-        ahead = (position - self._wrong_mark) * (self._sense if duty > 0 else -self._sense)
+        ahead = apart(counts, self._wrong_mark) * (self._sense if duty > 0 else -self._sense)
         if ahead > 0:
-            self._wrong_mark = position
+            self._wrong_mark = counts
         elif ahead <= -self._wrong_counts:
             self._found.append(Finding(Trip.WRONG_WAY, self._index, -ahead, self._wrong_counts))
 
     def window(self, age: int) -> None:
         """At every tick divisible by SPEED_TICKS: overspeed, and at every second one the heat."""
-        if self._speed_mark is not None and self._speed_counts:
-            passed = abs(self.position - self._speed_mark)
+        if self._speed_counts:
+            passed = abs(apart(self.counts, self._speed_mark))
             if passed > self._speed_counts:
                 self._found.append(Finding(Trip.OVERSPEED, self._index, passed, self._speed_counts))
-        self._speed_mark = self.position
+        self._speed_mark = self.counts
         if age % THERMAL_TICKS == 0:
             heat = self.heat
             heat.add(self._squares_ma2)

@@ -80,14 +80,20 @@ class ServoPulse:
             self.pulse_ns = 0
             target = 0
         else:
-            target = self._inside(demand)
-            pulse_ns = self._inside(self.pulse_ns) if self.pulse_ns else 0
+            lowest_ns, highest_ns = self._lowest_ns, self._highest_ns
+            target = lowest_ns if demand < lowest_ns else highest_ns if demand > highest_ns else demand
+            pulse_ns = self.pulse_ns
             if not pulse_ns:
                 pulse_ns = self._home_ns
-            elif target > pulse_ns:
-                pulse_ns = min(target, pulse_ns + self._slew_ns)
             else:
-                pulse_ns = max(target, pulse_ns - self._slew_ns)
+                if not lowest_ns <= pulse_ns <= highest_ns:
+                    pulse_ns = self._inside(pulse_ns)
+                if target > pulse_ns:
+                    pulse_ns += self._slew_ns
+                    pulse_ns = target if pulse_ns > target else pulse_ns
+                elif target < pulse_ns:
+                    pulse_ns -= self._slew_ns
+                    pulse_ns = target if pulse_ns < target else pulse_ns
             self.pulse_ns = pulse_ns
         if self.pulse_ns != target:
             return AT_SLEW
