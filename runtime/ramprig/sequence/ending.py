@@ -140,6 +140,7 @@ class _Run:
             # A latch that stands from before is somebody else's finding: it is shown, not cleared away.
             trip = explain_trip(session.trip, self.rig)
             raise Ended(Verdict.TRIPPED, f"the device is still tripped from before ({trip}): clear it first", None)
+        self.executive.trip = None  # whatever was told of before has been cleared
         session.log(plan.period_ticks, plan.mask)
         session.arm(self.rig.bench.link.lease_ms)
 
@@ -175,7 +176,7 @@ class _Run:
     def _bring_down(self, end: _End) -> _End:
         """Outputs off and confirmed, the trip explained and its trail kept, the log ended."""
         try:
-            if self.executive.trip is not None and end.verdict is Verdict.TRIPPED:
+            if self.executive.trip is not None and not end.sentence:
                 sentence = self._take_trip(self.executive.trip)
                 end = _End(end.verdict, sentence, end.place)
             if not self._known_off():

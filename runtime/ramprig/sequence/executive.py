@@ -146,9 +146,10 @@ class Executive:
         self.start = self.session.start_in()
         self._begin(walk(self.plan.root, self.start), None)
         while self._strands or self._agenda or self.now < self._end:
-            self.now = self.session.tick_now()
             self._check()
+            self.now = self.session.tick_now()
             self._advance()
+            self._label()
             self._attend()
             self._dispatch.note_overdue(self.now)
             if self.progress is not None:
@@ -183,10 +184,10 @@ class Executive:
     def _check(self) -> None:
         """End where the device is no longer with us."""
         if self.restarted is not None:
-            cause = self.restarted.cause or "cause not told"
+            cause = self.restarted.cause or "it did not tell why"
             raise Ended(Verdict.TRIPPED, f"the device restarted ({cause})", self.place)
         if self.trip is not None:
-            raise Ended(Verdict.TRIPPED, "the device tripped", self.place)
+            raise Ended(Verdict.TRIPPED, "", self.place)  # whoever brings the run down asks the device why
 
     @property
     def place(self) -> Place | None:
@@ -309,6 +310,12 @@ class Executive:
         """Whether all samples up to the tick have come, or will not come any more."""
         return self._ring.covers(tick) or self.now > tick + round(SAMPLES_LATE_S / self._tick_s)
 
+    def _label(self) -> None:
+        """The step that is under way is the one that began last, whether its samples have come or not."""
+        begun = [item for item in self._agenda if item[0] <= self.now and isinstance(item[2], Begin)]
+        if begun:
+            self.part = max(begun)[2].part
+
     def _attend(self) -> None:
         """Do what is due on the agenda, in order of tick."""
         while self._agenda and self._agenda[0][0] <= self.now:
@@ -317,8 +324,7 @@ class Executive:
                 return
             heapq.heappop(self._agenda)
             match item:
-                case Begin(part=part, ends=ends, ramped=ramped):
-                    self.part = part
+                case Begin(ends=ends, ramped=ramped):
                     if ends is not None:
                         self._bearings.ramp_ends[ramped] = ends
                 case Pass(number=number, part=part):
