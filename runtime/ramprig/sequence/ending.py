@@ -13,9 +13,9 @@ from ramprig.session.events import Tripped
 from ramprig.session.session import Session
 from ramprig_link.words import State
 
-from .executive import Ended, Executive, Progress
+from .executive import Executive, Progress
 from .listeners import Listeners
-from .outcome import Outcome, Verdict
+from .outcome import Ended, Outcome, Verdict
 from .plan import Plan
 from .rig import Rig
 from .tripsay import explain_trip

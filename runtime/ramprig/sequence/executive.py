@@ -21,7 +21,7 @@ from ramprig.session.session import Session
 from .dispatch import Dispatch
 from .expect import LEAD_IN_S, Bearings, Eye, Finding
 from .happened import Marked, PassBegun, WaitEnded
-from .outcome import Judged, Tally, Verdict
+from .outcome import Ended, Judged, Tally, Verdict
 from .plan import Await, Judge, Moment, Part, Plan, Standstill
 from .rig import Axis, Rig
 from .ring import Ring
@@ -36,16 +36,6 @@ IDLE_S = 0.25
 """How often the loop comes round while nothing is due."""
 SAMPLES_LATE_S = 3.0
 """Samples that have not come so long after their tick are judged as missing."""
-
-
-class Ended(Exception):
-    """The run ends here, with this verdict and sentence, at this place."""
-
-    def __init__(self, verdict: Verdict, sentence: str, place: Place | None) -> None:
-        super().__init__(sentence)
-        self.verdict = verdict
-        self.sentence = sentence
-        self.place = place
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

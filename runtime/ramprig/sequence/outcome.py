@@ -36,6 +36,16 @@ class Verdict(Enum):
         return self.value[1]
 
 
+class Ended(Exception):
+    """The run ends here, with this verdict and sentence, at this place."""
+
+    def __init__(self, verdict: Verdict, sentence: str, place: Place | None) -> None:
+        super().__init__(sentence)
+        self.verdict = verdict
+        self.sentence = sentence
+        self.place = place
+
+
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Judged:
     """An expectation that was judged: an event of the run. `place` is where it stands."""
