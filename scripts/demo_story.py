@@ -78,9 +78,9 @@ class Mock:
             self._process.kill()
 
 
-def begin_run(port: str, runs: Path, title: str) -> subprocess.Popen[bytes]:
+def begin_run(port: str, runs: Path, title: str, passes: int) -> subprocess.Popen[bytes]:
     """Begin a run of the endurance sequence in another process; its words go straight to the user."""
-    words = ["run", SEQUENCE, "--port", port, "--runs", runs, "--title", title, "--yes"]
+    words = ["run", SEQUENCE, "--set", f"passes={passes}", "--port", port, "--runs", runs, "--title", title, "--yes"]
     show(*words)
     return subprocess.Popen(ramprig(*words))
 
@@ -119,16 +119,16 @@ def read_run(runs: Path) -> Path | None:
     return folders[-1]
 
 
-def tell(mock: Mock, root: Path) -> int:
+def tell(mock: Mock, root: Path, passes: int) -> int:
     """Both runs and what came of them; the exit status."""
     say()
-    say("2. The endurance sequence runs over that port: the vent opens and closes twice, the latch works beside it.")
+    say("2. The endurance sequence runs over that port: the vent opens and closes, the latch works beside it.")
     say("   It takes about half a minute, in real time, and every expectation must hold.")
-    passed = begin_run(mock.port, root / "passes", "demo").wait(RUN_WAIT_S)
+    passed = begin_run(mock.port, root / "passes", "demo", passes).wait(RUN_WAIT_S)
     say()
     say("3. The same sequence again, but this time the shaft jams while the motor is driven. The current rises within")
     say("   milliseconds, and the board itself trips and switches off: no order from this computer is needed for that.")
-    second = begin_run(mock.port, root / "trips", "demo with a jam")
+    second = begin_run(mock.port, root / "trips", "demo with a jam", passes)
     jam_when_driven(mock, root / "trips")
     tripped = second.wait(RUN_WAIT_S)
     say()
@@ -149,7 +149,7 @@ def tell(mock: Mock, root: Path) -> int:
     return 1
 
 
-def story() -> int:
+def story(*, passes: int = 2) -> int:
     """Tell the demonstration; returns the exit status, 0 where both runs ended as they should."""
     for line in cautions_lines():
         say(line)
@@ -158,6 +158,6 @@ def story() -> int:
     say("1. A mock board with a motor and a servo starts in another process and says which port it is on:")
     mock = Mock()
     try:
-        return tell(mock, Path(tempfile.mkdtemp(prefix="ramprig-demo-")))
+        return tell(mock, Path(tempfile.mkdtemp(prefix="ramprig-demo-")), passes)
     finally:
         mock.end()

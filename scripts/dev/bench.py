@@ -1,0 +1,61 @@
+"""Measures what the project holds itself to, as ratios in one run, each beside its aim.
+
+    python scripts/dev/bench.py          inside the private environment (`.env/bin/python scripts/dev/bench.py`)
+
+A ratio taken within one run says more than a time: the machine's speed drops out where it can. Nothing here is a test;
+a figure that misses its aim is printed as it is.
+"""
+
+from __future__ import annotations
+
+import platform
+import sys
+from collections.abc import Callable
+from pathlib import Path
+
+sys.path.insert(0, str(Path(__file__).resolve().parent.parent))
+
+from dev import bench_codec, bench_csv, bench_rehearsal, bench_roundtrip, bench_start
+
+CSV_AIM = 2.0
+
+
+def csv_lines() -> list[str]:
+    """Rows of the log against the csv module."""
+    rates = bench_csv.csv_rates()
+    return [
+        f"CSV rows:            {rates.ratio:.2f} times the csv module's rows a second (aim {CSV_AIM:g} or more); "
+        f"{rates.batched:,.0f} rows/s",
+        f"                     {rates.single_blocks / rates.csv_module:.2f} times where each data line is a write",
+    ]
+
+
+def rehearsal_lines() -> list[str]:
+    """The endurance sequence on the Python mock against real time."""
+    speed = bench_rehearsal.measure()
+    return [
+        f"rehearsal:           {speed.ratio:.0f} times real time at 100 samples a second on the Python mock "
+        f"(aim {bench_rehearsal.AIM:.0f} or more)",
+        f"                     {speed.mock_s / speed.took_s:.0%} of it is the mock's own; without that "
+        f"{speed.host_ratio:.0f} times",
+    ]
+
+
+PARTS: tuple[Callable[[], list[str]], ...] = (
+    bench_roundtrip.lines,
+    bench_codec.lines,
+    rehearsal_lines,
+    csv_lines,
+    bench_start.lines,
+)
+
+
+def main() -> None:
+    """Print all figures as they come."""
+    print(f"Python {platform.python_version()} on {platform.system()} {platform.machine()}", flush=True)
+    for part in PARTS:
+        print("\n".join(part()), flush=True)
+
+
+if __name__ == "__main__":
+    main()
