@@ -5,10 +5,12 @@ from __future__ import annotations
 import math
 
 import pytest
+from hypothesis import given
+from hypothesis import strategies as st
 
 from mock_host import Bench, Key
 from ramprig.mock import Board, Controller, LimitStore, ScriptedInputs
-from ramprig.mock.guard import Heat
+from ramprig.mock.guard import Heat, apart
 from ramprig_link.words import THERMAL_TICKS, Cause
 
 
@@ -140,15 +142,19 @@ def test_overspeed_is_judged_at_every_32nd_tick() -> None:
 
 
 def test_counts_that_wrap_are_no_jump() -> None:
-    bench = running({("speed_counts", 0): 320, ("stall_duty", 0): 3000, ("stall_ticks", 0): 500})
-    for start in (2**30, 2**31 - 2, -(2**31) + 8):
-        bench.inputs.set(counts=[start])
-        if start == 2**30:
-            bench = running({("stall_duty", 0): 3000, ("stall_ticks", 0): 500})
+    bench = running({("stall_duty", 0): 3000, ("stall_ticks", 0): 5})
+    for counts in (2**30, 2**31 - 12, 2**31 - 2, -(2**31) + 8, -(2**31) + 18):
+        bench.inputs.set(counts=[counts])
         bench.run(3)
-    assert [fields for _, fields in trips(bench) if fields[0] != "wrong_way"] == []
-    assert bench.controller.watches[0].counts == -(2**31) + 8
-    assert bench.controller.watches[0].position == 2**31 + 8
+    assert trips(bench) == []
+    bench.inputs.set(counts=[2**31 - 8])
+    bench.run(1)
+    assert trips(bench)[0][1] == ("wrong_way", "0", "26", "24")
+
+
+@given(a=st.integers(-(2**31), 2**31 - 1), way=st.integers(-(2**31) + 1, 2**31 - 1))
+def test_counts_are_apart_by_the_short_way_round(a: int, way: int) -> None:
+    assert apart((a + way + 2**31) % 2**32 - 2**31, a) == way
 
 
 # ---- heat ----------------------------------------------------------------------------------------------------------

@@ -23,7 +23,10 @@ _UNREACHED = 1 << 40
 
 def apart(a: int, b: int) -> int:
     """The difference of two counts, by SPEC section 2."""
-    return max((a - b + 0x80000000 & 0xFFFFFFFF) - 0x80000000, -0x7FFFFFFF)
+    difference = a - b
+    if -0x80000000 < difference < 0x80000000:
+        return difference
+    return max((difference + 0x80000000 & 0xFFFFFFFF) - 0x80000000, -0x7FFFFFFF)
 
 
 @dataclass(frozen=True, slots=True, order=True)
