@@ -2,6 +2,8 @@
 
 `Controller(board, inputs, limits)` is a board that has just started. Bytes given to `receive` are read in the next
 `tick`; `take_output` is what has been sent since it was last asked. Ages are ticks since the start that do not wrap.
+
+A little over 400 lines, since the tick's order and the states it moves between are one thing and read best together.
 """
 
 from __future__ import annotations
