@@ -5,10 +5,13 @@ from __future__ import annotations
 from pathlib import Path
 
 import pytest
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
 
 from ramprig.errors import FileError, UsageError
+from ramprig.sequence.compile import compile_plan
 from ramprig.sequence.reading import read_sequence
-from sequence_rig import plan_of, sequence_of
+from sequence_rig import plan_of, sequence_of, small_bench
 
 UP = "- ramp: {motor: vent, to: 60 %, in: 600 ms}\n"
 
@@ -322,3 +325,31 @@ def test_inclusions_are_bounded(tmp_path: Path) -> None:
     (tmp_path / "inner.yaml").write_text("sequence: f\nsteps:\n  - hold: 1 s\n")
     with pytest.raises(FileError, match="at most 8 deep and 64 in all"):
         plan_of(tmp_path, "- include: inner.yaml\n" * 65)
+
+
+ENDURANCE = (Path(__file__).resolve().parent.parent / "scripts" / "vent_endurance.yaml").read_text(encoding="utf-8")
+STEPS_ONLY = ENDURANCE[ENDURANCE.index("  - repeat:") :]
+PIECES = [*"{}[]%-#0", ": ", "- ", "\n", " ", "999999999", "*a", "&a ", '"', "vent", "latch", "\t"]
+
+
+@settings(max_examples=150, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
+@given(data=st.data())
+def test_whatever_a_file_says_only_our_own_errors_come_out_and_they_have_a_place(
+    data: st.DataObject, tmp_path: Path
+) -> None:
+    text = STEPS_ONLY
+    for _ in range(data.draw(st.integers(1, 3))):
+        begin = data.draw(st.integers(0, len(text) - 1))
+        end = min(len(text), begin + data.draw(st.integers(0, 12)))
+        text = text[:begin] + data.draw(st.sampled_from(PIECES)) + text[end:]
+    path = tmp_path / "s.yaml"
+    path.write_text(f"sequence: t\nvalues: {{drive: 40 %, passes: 2}}\nsteps:\n{text}", encoding="utf-8")
+    error: FileError | None = None
+    try:
+        compile_plan(read_sequence(path), small_bench())
+    except FileError as caught:
+        error = caught
+    if error is not None:
+        assert error.place is not None
+        assert error.place.line >= 1
+        assert error.found

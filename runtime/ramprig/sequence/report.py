@@ -59,8 +59,8 @@ def _duration(plan: Plan) -> str:
     if not totals.waits:
         return known
     most = format_duration(_seconds(plan, totals.most))
-    waits = "1 wait" if totals.waits == 1 else f"{totals.waits} waits"
-    return f"{known} and what {waits} take; {most} at the longest"
+    verb = "takes" if totals.waits == 1 else "take"
+    return f"{known} and what {_count(totals.waits, 'wait')} {verb}; {most} at the longest"
 
 
 def _motors(plan: Plan, bench: Bench) -> Iterator[str]:
