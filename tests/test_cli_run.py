@@ -12,10 +12,12 @@ from pathlib import Path
 import pytest
 
 from ramprig.cli import main, running
+from ramprig.cli.main import EXIT_BUG
 from ramprig.cli.running import mock_url
 from ramprig.mock.url import parse_mock
 from ramprig.record.reading import audit, read_manifest
 from ramprig.record.recorder import Recorder
+from ramprig.sequence.outcome import Outcome, Verdict
 
 SCRIPTS = Path(__file__).resolve().parent.parent / "scripts"
 BENCH = SCRIPTS / "vent_bench.yaml"
@@ -162,6 +164,37 @@ def test_5_a_signal_stops_in_order_and_is_named(
     manifest = read_manifest(only_run())
     assert (manifest["verdict"], manifest["results"]["stop_confirmed"]) == ("stopped", True)
     assert audit(only_run()).exact
+
+
+def test_a_bug_in_a_run_stops_the_motors_first_and_says_so(
+    here: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    def broken(far: object) -> str:
+        raise ZeroDivisionError("a bug of the test")
+
+    monkeypatch.setattr(running, "how_far", broken)
+    monkeypatch.setattr("ramprig.cli.progress.LINE_EVERY_S", 0.0)
+    assert main(["rehearse", "short.yaml"]) == EXIT_BUG
+    stopped, bug, where = capsys.readouterr().err.splitlines()
+    assert stopped == "The motors were stopped first: confirmed."
+    assert bug == "This is a bug in ramprig: ZeroDivisionError: a bug of the test"
+    path = Path(where.split()[4].rstrip(";"))
+    assert "a bug of the test" in path.read_text("utf-8")
+    path.unlink()
+    assert read_manifest(only_run())["verdict"] == "broken off"
+
+
+@pytest.mark.parametrize("confirmed", [True, False])
+def test_outputs_that_are_not_confirmed_off_are_told_before_the_last_sentence(
+    capsys: pytest.CaptureFixture[str], *, confirmed: bool
+) -> None:
+    outcome = Outcome(
+        verdict=Verdict.LINK_LOST, sentence="the port is gone", place=None, held=0, failed=0, failures=(), passes=0,
+        elapsed_s=1.0, stop_confirmed=confirmed, overdue=0,
+    )  # fmt: skip
+    running.tell_end(outcome, None, rehearsal=False)
+    said = capsys.readouterr().out.splitlines()
+    assert said == [*([] if confirmed else [running.NOT_OFF]), "link lost: the port is gone"]
 
 
 # ---- asking before anything moves ----------------------------------------------------------------------------------

@@ -12,6 +12,7 @@ from urllib.parse import urlencode
 
 from ramprig.cli.progress import Progress
 from ramprig.cli.say import say_surely, tell
+from ramprig.errors import RamprigError
 
 if TYPE_CHECKING:
     from ramprig.bench import Bench
@@ -28,6 +29,11 @@ RUNS = Path("runs")
 NOT_PROVED = (
     "A rehearsal shows that the sequence does what you mean, against a model with the bench file's figures. It does "
     "not prove wiring, directions, friction, heat, the supply, the link, or that the limits suit the motor."
+)
+
+NOT_OFF = (
+    "NOT CONFIRMED that the outputs are off. The board stops by itself once its lease has run out; if anything still "
+    "moves after that, cut the power."
 )
 
 
@@ -91,9 +97,11 @@ def carry_out_run(pair: Pair, way: Way) -> int:
         seed=way.seed,
         virtual=way.virtual,
     )
+    sessions: list[Session] = []
     watch: list[StopOnSignals] = []
 
     def guard(session: Session) -> StopOnSignals:
+        sessions.append(session)
         watch.append(StopOnSignals(session))
         return watch[-1]
 
@@ -106,10 +114,23 @@ def carry_out_run(pair: Pair, way: Way) -> int:
             guard=guard,
             asked_by=lambda: ", ".join(name for signals in watch for name in signals.received),
         )
+    except RamprigError:
+        raise
+    except Exception:  # a bug: what became of the motors comes first, the bug itself is told by `main`
+        for session in sessions:
+            tell_stop(session)
+        raise
     finally:
         progress.close()
     tell_end(result.outcome, result.folder, rehearsal=way.virtual)
     return result.outcome.exit_code
+
+
+def tell_stop(session: Session) -> None:
+    """What is known of the stop that a bug led to."""
+    report = session.last_stop
+    verdict = NOT_OFF if report is None else f"The motors were stopped first: {report.verdict}."
+    tell(verdict)
 
 
 def how_far(far: HowFar) -> str:
@@ -135,6 +156,8 @@ def tell_end(outcome: Outcome, folder: Path | None, *, rehearsal: bool) -> None:
         tell(NOT_PROVED)
     if folder is not None:
         say_surely(f"run folder: {folder}")
+    if not outcome.stop_confirmed:
+        say_surely(NOT_OFF)
     say_surely(str(outcome))
 
 
