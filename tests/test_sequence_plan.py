@@ -25,6 +25,9 @@ from ramprig.sequence.strands import Begin, Fork, Hang, Look, Note, Pass, Reach,
 from sequence_rig import plan_of, rehearse, small_bench
 
 NIGHT_PASSES = 100_000
+CEILING_DUTY = 8000
+SLEW_UP_DUTY, SLEW_DOWN_DUTY = 10, 20
+PULSE_US = (1100, 1900)
 
 
 def orders_of(part: Part, at: int) -> tuple[list[Order], int]:
@@ -282,8 +285,20 @@ def test_the_walk_of_a_plan_takes_its_total_and_keeps_to_the_limits(steps: str, 
 @settings(max_examples=8, deadline=None, suppress_health_check=QUIET)
 @given(steps=sequences())
 def test_a_run_without_waits_takes_what_the_plan_says_to_the_tick(steps: str, tmp_path: Path) -> None:
-    run = rehearse(tmp_path, "- mark: begin\n" + steps, head="")
+    run = rehearse(tmp_path, "- mark: begin\n" + steps, head="log: {period: 1 ms}\n")
     assert run.outcome.verdict is Verdict.PASSED, run.outcome
+    assert np.all(np.diff(run.ticks) == 1)
+    for axis in (0, 1):
+        size = np.abs(run.column("duty", axis))
+        steps_up = np.diff(size)
+        assert size.max() <= CEILING_DUTY  # S1
+        assert steps_up.max() <= SLEW_UP_DUTY  # S2
+        assert steps_up.min() >= -SLEW_DOWN_DUTY
+    pulses = run.column("pulse_us", 0)
+    pulsing = pulses[pulses > 0]
+    assert pulsing.min() >= PULSE_US[0]  # S7
+    assert pulsing.max() <= PULSE_US[1]
+    assert np.abs(np.diff(pulsing)).max() <= 1  # 600 ns a tick, shown in whole us
     marks = {event.name: event.tick for event in run.of(Marked) if isinstance(event, Marked)}
     body = run.plan.root.parts[0]
     assert marks["end"] - marks["begin"] == body.totals.least
