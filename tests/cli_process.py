@@ -118,8 +118,11 @@ class RunProcess:
         path = folder / "endless.yaml"
         path.write_text(sequence or ENDLESS.format(bench=BENCH), "utf-8")
         self._said = (folder / "said.txt").open("w+", encoding="utf-8")
-        command = [sys.executable, "-m", "ramprig", "run", str(path), "--port", port, "--runs", str(self.runs)]
-        self.process = subprocess.Popen(command, stdin=subprocess.DEVNULL, stdout=self._said, stderr=self._said)
+        self._command = [sys.executable, "-m", "ramprig", "run", str(path), "--port", port, "--runs", str(self.runs)]
+        self.process = self._begin()
+
+    def _begin(self) -> subprocess.Popen[bytes]:
+        return subprocess.Popen(self._command, stdin=subprocess.DEVNULL, stdout=self._said, stderr=self._said)
 
     def send(self, name: str) -> float:
         """Send a signal by name; returns the host time right before."""
@@ -152,3 +155,35 @@ class RunProcess:
             self.process.kill()
             self.process.wait(PATIENCE_S)
         self._said.close()
+
+
+class RunOnTerminal(RunProcess):
+    """The same on a terminal of its own, which `hang_up` closes as a closed window would."""
+
+    def _begin(self) -> subprocess.Popen[bytes]:
+        import fcntl
+        import pty
+        import termios
+
+        self._master, slave = pty.openpty()
+
+        def take_terminal() -> None:
+            fcntl.ioctl(0, termios.TIOCSCTTY, 0)
+
+        try:
+            return subprocess.Popen(
+                [*self._command, "--yes"],
+                stdin=slave,
+                stdout=slave,
+                stderr=slave,
+                start_new_session=True,
+                preexec_fn=take_terminal,
+            )
+        finally:
+            os.close(slave)
+
+    def hang_up(self) -> float:
+        """Close the terminal; returns the host time right before."""
+        now_s = time.monotonic()
+        os.close(self._master)
+        return now_s

@@ -14,7 +14,7 @@ from pathlib import Path
 
 import pytest
 
-from cli_process import BENCH, MockProcess, RunProcess, until
+from cli_process import BENCH, MockProcess, RunOnTerminal, RunProcess, until
 from ramprig.bench import load_bench
 from ramprig.record.reading import audit, read_manifest, read_samples
 
@@ -117,3 +117,15 @@ def test_a_second_run_finds_the_board_tripped_and_says_so(tmp_path: Path) -> Non
             assert run.code() == 3
             assert "still tripped from before (link lost" in run.said()
         assert not mock.driven_since(again_s)
+
+
+def test_a_terminal_that_is_closed_stops_the_run_in_order(tmp_path: Path) -> None:
+    with MockProcess(tmp_path) as mock, RunOnTerminal(tmp_path, mock.port) as run:
+        until(lambda: mock.driven_since(0.0), "motion", run=run)
+        ended_s = run.hang_up()
+        assert run.code() == 5
+        off_s = mock.off_at(ended_s)
+        assert off_s is not None
+        assert off_s - ended_s <= LEASE_S + STOP_S + MARGIN_S
+        check_log(run, ended_s, "SIGHUP", "closed terminal")
+        assert "(SIGHUP)" in read_manifest(run.folder)["stop_reason"]
