@@ -1,4 +1,4 @@
-/* The requests: each word's checks in the order of SPEC BAD-5, what it does, and its answer (SPEC section 8). */
+/* The requests: each word's checks in the order of SPEC BAD-5, and what it does (SPEC section 8). */
 #include "device.h"
 #include "seeded.h"
 #include "store.h"
@@ -6,13 +6,6 @@
 #include <string.h>
 
 #define WORD_OK RR_REASON_COUNT
-
-struct name {
-    char text[7];
-};
-#define NAME(NAME_, word) {word},
-static const struct name reason_names[] = {RR_REASON_LIST(NAME)};
-#undef NAME
 
 static uint8_t index_refusal(uint8_t word, const struct rr_arguments *given)
 {
@@ -96,10 +89,10 @@ static uint8_t range_refusal(const struct rr_device *device, uint8_t word, const
 
 static uint8_t do_arm(struct rr_device *device, const struct rr_arguments *given)
 {
-    if (RR_SEEDED(ARM_ON_ANY_DIGEST, false, given->value[1] != rr_limits_digest(&device->limits))) {
+    if (RR_SEEDED(ARM_ON_ANY_DIGEST, false, given->value[1] != device->limits.digest)) {
         return RR_REASON_DIGEST;
     }
-    device->lease_ms = given->value[0];
+    device->lease_ms = (uint16_t)given->value[0];
     device->lease_ticks = (given->value[0] * 1000u + RR_TICK_US - 1u) / RR_TICK_US;
     rr_latch_arm(&device->latch);
     for (uint8_t i = 0; i < RR_AXES; i++) {
@@ -111,7 +104,7 @@ static uint8_t do_arm(struct rr_device *device, const struct rr_arguments *given
         rr_glide_end(&device->servo[i].swing, 0);
     }
 #endif
-    device->orders.count = 0;
+    device->u.orders.count = 0;
     rr_trail_begin(&device->trail);
     return WORD_OK;
 }
@@ -139,7 +132,7 @@ static uint8_t do_disarm(struct rr_device *device)
 }
 
 /* ORDER-1, ORDER-2: late before far before full, so that a late order is never hidden. */
-static uint8_t do_order(struct rr_device *device, uint8_t kind, int32_t value, uint32_t ticks, uint32_t start,
+static uint8_t do_order(struct rr_device *device, uint8_t kind, int16_t value, uint32_t ticks, uint32_t start,
                         uint8_t index)
 {
     int32_t ahead = (int32_t)(start - device->tick);
@@ -150,12 +143,12 @@ static uint8_t do_order(struct rr_device *device, uint8_t kind, int32_t value, u
     if (ahead > (int32_t)RR_HORIZON_TICKS) {
         return RR_REASON_FAR;
     }
-    if (device->orders.count == RR_QUEUE) {
+    if (device->u.orders.count == RR_QUEUE) {
         return RR_REASON_FULL;
     }
     uint32_t carried_out = RR_SEEDED(LATE_ORDER_CARRIED_OUT, ahead < 0 ? device->tick : start, start);
-    struct rr_order order = {carried_out, ticks, value, kind, index, device->line.tag};
-    rr_orders_add(&device->orders, &order, device->tick);
+    struct rr_order order = {carried_out, ticks, value, (uint8_t)(kind << 4 | index), device->line.tag};
+    rr_orders_add(&device->u.orders, &order, device->tick);
     return WORD_OK;
 }
 
@@ -171,10 +164,10 @@ static uint8_t do_clear(struct rr_device *device)
     uint8_t trip = device->latch.trip;
     int32_t supply = device->inputs.supply_mv;
     bool persists = trip == RR_TRIP_SELF_TEST ||
-                    (trip == RR_TRIP_OVERVOLTAGE && supply > rr_limits_get(&device->limits, RR_LIMIT_OVER_MV, 0)) ||
-                    (trip == RR_TRIP_UNDERVOLTAGE && supply < rr_limits_get(&device->limits, RR_LIMIT_UNDER_MV, 0));
+                    (trip == RR_TRIP_OVERVOLTAGE && supply > device->limits.board.over_mv) ||
+                    (trip == RR_TRIP_UNDERVOLTAGE && supply < device->limits.board.under_mv);
     const struct rr_axis *axis = &device->axis[device->last_trip.index];
-    persists = persists || rr_guard_persists(&axis->guard, &axis->guard_limits, trip,
+    persists = persists || rr_guard_persists(&axis->guard, &device->limits.axis[device->last_trip.index].guard, trip,
                                              device->inputs.current_ma[device->last_trip.index]);
     if (RR_SEEDED(CLEAR_DESPITE_CAUSE, false, persists)) {
         return RR_REASON_CAUSE;
@@ -192,12 +185,13 @@ static uint8_t do_limit(struct rr_device *device, const struct rr_arguments *giv
     uint8_t reason = rr_limits_refusal(&device->limits, (uint8_t)given->value[0], given->value[1],
                                        (int32_t)given->value[2], live);
     uint8_t place = rr_limits_place((uint8_t)given->value[0], given->value[1]);
-    if (reason != WORD_OK || device->limits.value[place] == (int32_t)given->value[2]) {
+    if (reason != WORD_OK || rr_limits_at(&device->limits, place) == (int32_t)given->value[2]) {
         return reason;
     }
-    device->limits.value[place] = (int32_t)given->value[2];
-    (void)rr_store_write(device->port, device->self, (uint8_t)(1u + place), (int32_t)given->value[2]);
-    device->limits_changed = true;
+    rr_limits_set(&device->limits, place, (int32_t)given->value[2]);
+    if ((RR_CAPS & RR_CAP_KEEPS_LIMITS) != 0) {
+        device->unsaved[place >> 3] |= (uint8_t)(1u << (place & 7u));
+    }
     return WORD_OK;
 }
 
@@ -211,11 +205,11 @@ static uint8_t carry_out(struct rr_device *device, uint8_t word, const struct rr
     case RR_WORD_DISARM:
         return do_disarm(device);
     case RR_WORD_RAMP:
-        return do_order(device, RR_ORDER_RAMP, (int32_t)value[1], value[2], value[3], (uint8_t)value[0]);
+        return do_order(device, RR_ORDER_RAMP, (int16_t)value[1], value[2], value[3], (uint8_t)value[0]);
     case RR_WORD_SWING:
-        return do_order(device, RR_ORDER_SWING, (int32_t)(value[1] * 1000u), value[2], value[3], (uint8_t)value[0]);
+        return do_order(device, RR_ORDER_SWING, (int16_t)value[1], value[2], value[3], (uint8_t)value[0]);
     case RR_WORD_REST:
-        return do_order(device, RR_ORDER_REST, (int32_t)value[1], 0, value[2], (uint8_t)value[0]);
+        return do_order(device, RR_ORDER_REST, (int16_t)value[1], 0, value[2], (uint8_t)value[0]);
     case RR_WORD_STOP:
         do_stop(device, (uint8_t)value[0]);
         return WORD_OK;
@@ -228,90 +222,11 @@ static uint8_t carry_out(struct rr_device *device, uint8_t word, const struct rr
         return WORD_OK;
     case RR_WORD_AGAIN:
         return rr_sampling_again(device, (uint8_t)value[0]) ? WORD_OK : RR_REASON_GONE;
+    case RR_WORD_TRAIL:
+        *told = device->trail.held;
+        return rr_packing_begin(device, (uint8_t)value[0], value[1]) ? WORD_OK : RR_REASON_GONE;
     default:
         return WORD_OK;
-    }
-}
-
-static void write_state(struct rr_device *device, struct rr_out *out)
-{
-    rr_out_word(out, rr_state_word(device->latch.state));
-    rr_out_word(out, rr_trip_word(device->latch.trip));
-    rr_out_u32(out, device->orders.count);
-    rr_out_i32(out, device->inputs.supply_mv);
-    rr_out_i32(out, device->inputs.temperature_dc);
-    for (uint8_t i = 0; i < RR_AXES; i++) {
-        rr_out_i32(out, device->axis[i].chain.duty);
-        rr_out_i32(out, device->inputs.counts[i]);
-        rr_out_i32(out, device->inputs.current_ma[i]);
-    }
-#if RR_SERVOS > 0
-    for (uint8_t i = 0; i < RR_SERVOS; i++) {
-        rr_out_u32(out, (uint32_t)device->servo[i].pulse_ns / 1000u);
-    }
-#endif
-}
-
-static void write_counters(struct rr_device *device, struct rr_out *out)
-{
-    rr_out_u32(out, device->lines);
-    rr_out_u32(out, device->line.garbled);
-    rr_out_u32(out, device->line.overlong);
-    rr_out_u32(out, device->port->overruns(device->self));
-    rr_out_u32(out, device->repeats);
-    rr_out_u32(out, device->port->worst_us(device->self));
-    rr_out_u32(out, device->logging.made_ever);
-    rr_out_u32(out, device->logging.dropped_ever);
-    rr_out_u32(out, device->inputs.illegal_edges);
-}
-
-static void write_why(struct rr_device *device, struct rr_out *out)
-{
-    rr_out_word(out, rr_trip_word(device->last_trip.trip));
-    rr_out_u32(out, device->last_trip_tick);
-    rr_out_u32(out, device->last_trip.index);
-    rr_out_i32(out, device->last_trip.value);
-    rr_out_i32(out, device->last_trip.bound);
-}
-
-/* The fields of `ok`. */
-static void write_answer(struct rr_device *device, struct rr_out *out, uint8_t word, const struct rr_arguments *given,
-                         uint32_t told)
-{
-    switch (word) {
-    case RR_WORD_WHO:
-        rr_notice_identity(device, out);
-        break;
-    case RR_WORD_BEAT:
-    case RR_WORD_STOP:
-        rr_out_word(out, rr_state_word(device->latch.state));
-        break;
-    case RR_WORD_STATE:
-        write_state(device, out);
-        break;
-    case RR_WORD_ARM:
-        rr_out_u32(out, device->lease_ms);
-        break;
-    case RR_WORD_RAMP:
-    case RR_WORD_SWING:
-    case RR_WORD_REST:
-        rr_out_u32(out, (uint32_t)(RR_QUEUE - device->orders.count));
-        break;
-    case RR_WORD_WHY:
-        write_why(device, out);
-        break;
-    case RR_WORD_LIMIT:
-        rr_out_i32(out, device->limits.value[rr_limits_place((uint8_t)given->value[0], given->value[1])]);
-        break;
-    case RR_WORD_LOG:
-        rr_out_u32(out, device->logging.period == 0 ? 0 : device->logging.next_tick);
-        rr_out_u32(out, told);
-        break;
-    case RR_WORD_COUNTERS:
-        write_counters(device, out);
-        break;
-    default:
-        break;
     }
 }
 
@@ -336,109 +251,101 @@ static uint8_t understood(struct rr_device *device, const char *text, uint8_t *w
     return reason;
 }
 
-static void begin_answer(struct rr_device *device, struct rr_out *out, char *copy, bool ok)
+/* Carries out a request; the reason of its refusal, or WORD_OK with the number that only the word can tell. */
+static uint8_t carried_out(struct rr_device *device, const char *text, uint8_t *word, uint32_t *told)
 {
-    rr_out_begin(out, device->port, device->self, copy, RR_DEVICE_LINE_MAX);
-    rr_out_hex2(out, device->line.tag);
-    rr_out_word(out, ok ? "ok" : "no");
-    rr_out_u32(out, device->tick);
-}
-
-static void refuse(struct rr_device *device, char *copy, uint8_t reason)
-{
-    struct rr_out out;
-    begin_answer(device, &out, copy, false);
-    rr_out_word(&out, reason_names[reason].text);
-    uint8_t length = rr_out_end(&out);
-    if (copy != NULL) {
-        device->memory.answer_length = length;
-    }
-}
-
-/* `trail` makes its payload where its kept answer's end will be, and moves it into place as it is written. */
-static void answer_trail(struct rr_device *device, const struct rr_arguments *given)
-{
-    char *payload = device->memory.answer + RR_DEVICE_LINE_MAX - RR_TRAIL_PAYLOAD_MAX;
-    uint8_t length = rr_sampling_trail(device, (uint8_t)given->value[0], given->value[1], payload);
-    if (length == 0) {
-        refuse(device, device->memory.answer, RR_REASON_GONE);
-        return;
-    }
-    struct rr_out out;
-    begin_answer(device, &out, device->memory.answer, true);
-    rr_out_u32(&out, device->trail.held);
-    rr_out_char(&out, ' ');
-    for (uint8_t i = 0; i < length; i++) {
-        rr_out_char(&out, payload[i]);
-    }
-    device->memory.answer_length = rr_out_end(&out);
-}
-
-static void answer(struct rr_device *device, const char *text, char *copy)
-{
-    uint8_t word;
     struct rr_arguments given;
-    uint32_t told = 0;
-    uint8_t reason = understood(device, text, &word, &given);
-    if (reason == WORD_OK && word == RR_WORD_TRAIL) {
-        answer_trail(device, &given);
-        return;
-    }
-    if (reason == WORD_OK) {
-        reason = carry_out(device, word, &given, &told);
-    }
+    uint8_t reason = understood(device, text, word, &given);
     if (reason != WORD_OK) {
-        refuse(device, copy, reason);
-        return;
+        return reason;
     }
-    struct rr_out out;
-    begin_answer(device, &out, copy, true);
-    write_answer(device, &out, word, &given, told);
-    uint8_t length = rr_out_end(&out);
-    if (copy != NULL) {
-        device->memory.answer_length = length;
+    reason = carry_out(device, *word, &given, told);
+    if (*word == RR_WORD_LIMIT) {
+        *told = (uint32_t)rr_limits_get(&device->limits, (uint8_t)given.value[0], (uint8_t)given.value[1]);
     }
-    if (word == RR_WORD_AGAIN) {
-        rr_sampling_send_again(device, (uint8_t)given.value[0]);
-    }
+    return reason;
 }
 
-/* TAG-5: `stop` under tag ff, outside the memory. */
+/* An answer outside the exactly-once memory. */
+static void answer_aside(struct rr_device *device, uint8_t reason)
+{
+    device->aside.tick = device->tick;
+    device->aside.tag = device->line.tag;
+    device->aside.reason = reason;
+    device->aside.state = device->latch.state;
+    device->aside.waiting = true;
+}
+
+/* TAG-5: `stop` under tag ff. */
 static void answer_urgent(struct rr_device *device, const char *text)
 {
     const char *rest;
-    device->renewed = device->tick;
-    if (rr_fields_word(text, &rest) != RR_WORD_STOP) {
-        refuse(device, NULL, RR_REASON_TAG);
-        return;
+    uint8_t word;
+    uint32_t told;
+    bool is_stop = rr_fields_word(text, &rest) == RR_WORD_STOP;
+    answer_aside(device, is_stop ? carried_out(device, text, &word, &told) : (uint8_t)RR_REASON_TAG);
+}
+
+static void answer(struct rr_device *device, const char *text)
+{
+    struct rr_memory *memory = &device->memory;
+    uint32_t told = 0;
+    memory->full = true;
+    memory->reply.tag = device->line.tag;
+    strcpy(memory->body, text);
+    memory->reply.reason = carried_out(device, text, &memory->reply.word, &told);
+    memory->reply.tick = device->tick;
+    memory->reply.waiting = true;
+    if (memory->reply.reason == WORD_OK) {
+        rr_reply_note(device, memory->reply.word, told);
     }
-    answer(device, text, NULL);
+}
+
+/* TAG-3: the tag of the request that is kept? */
+static bool is_kept_tag(const struct rr_device *device)
+{
+    const struct rr_memory *memory = &device->memory;
+    return RR_SEEDED(MEMORY_FORGETS, false, memory->full && memory->reply.tag == device->line.tag);
+}
+
+/* TAG-4: the kept tag with another body? */
+static bool is_misused_tag(const struct rr_device *device)
+{
+    return is_kept_tag(device) && strcmp(device->memory.body, rr_line_body(&device->line)) != 0;
+}
+
+/* Answers wait for one another, and for the digest; an urgent `stop` waits for no answer but its own kind. */
+bool rr_answer_may(const struct rr_device *device)
+{
+    if (!RR_SPREAD && device->port->room(device->self) < RR_DEVICE_LINE_MAX) {
+        return false;
+    }
+    if (device->line.tag == RR_TAG_URGENT || is_misused_tag(device)) {
+        return !device->aside.waiting;
+    }
+    const char *rest;
+    if (device->logging.waiting && rr_fields_word(rr_line_body(&device->line), &rest) == RR_WORD_LOG) {
+        return false; /* what is held of the old logging comes first (LOG-4), and there is place for one line */
+    }
+    return !device->memory.reply.waiting && device->limits.digest_place == RR_LIMITS;
 }
 
 void rr_answer_request(struct rr_device *device)
 {
-    struct rr_memory *memory = &device->memory;
-    const char *body = device->line.text;
-    const char *text = device->line.body > 2 ? body + 3 : body + 2;
-    if (device->line.tag == RR_TAG_URGENT) {
+    const char *text = rr_line_body(&device->line);
+    bool urgent = device->line.tag == RR_TAG_URGENT;
+    bool repeated = !urgent && is_kept_tag(device) && !is_misused_tag(device);
+    if (!repeated || RR_SEEDED(REPEAT_RENEWS, true, false)) {
+        device->renewed = device->tick;
+    }
+    if (urgent) {
         answer_urgent(device, text);
-        return;
+    } else if (is_misused_tag(device)) {
+        answer_aside(device, RR_REASON_TAG);
+    } else if (repeated) {
+        device->repeats++;
+        device->memory.reply.waiting = true;
+    } else {
+        answer(device, text);
     }
-    if (RR_SEEDED(MEMORY_FORGETS, false, memory->answer_length != 0 && memory->tag == device->line.tag)) {
-        if (strcmp(memory->body, text) == 0) {
-            device->repeats++;
-            if (RR_SEEDED(REPEAT_RENEWS, true, false)) {
-                device->renewed = device->tick;
-            }
-            device->port->write(device->self, memory->answer, memory->answer_length);
-        } else {
-            device->renewed = device->tick;
-            refuse(device, NULL, RR_REASON_TAG);
-        }
-        return;
-    }
-    device->renewed = device->tick;
-    memory->tag = device->line.tag;
-    strcpy(memory->body, text);
-    answer(device, text, memory->answer);
 }

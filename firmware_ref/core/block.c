@@ -2,70 +2,95 @@
 #include "block.h"
 
 #define COUNT_BIT 68u /* where the header's number of samples begins: 32 + 16 + 20 */
-#define HEADER_BITS 76u
 
 struct shape {
-    uint8_t per;
-    uint8_t first_bit;
-    uint8_t step;
+    int32_t end; /* 2^(width - 1), or 0 for the full 32 bits */
     uint8_t width;
     uint8_t order;
 };
 
-#define SHAPE(NAME, per, first, step, width, order) {RR_PER_##per, first, step, width, order},
-static const struct shape shapes[] = {RR_CHANNEL_LIST(SHAPE)};
+#define END(width) ((int32_t)((width) < 32 ? (uint32_t)1 << ((width) - 1) : 0ul))
+#define SHAPE(NAME, per, first, step, width, order) {END(width), width, order},
+static const RR_FLASH struct shape shapes[] = {RR_CHANNEL_LIST(SHAPE)};
 #undef SHAPE
 
-static const struct shape *shape_of(uint8_t bit)
+/* `shape_of` knows the channels' order and bits; this is the table it stands for. */
+#define FIRST_BIT(NAME, per, first, step, width, order) CHANNEL_##NAME = first,
+enum first_bit { RR_CHANNEL_LIST(FIRST_BIT) };
+#undef FIRST_BIT
+_Static_assert(CHANNEL_DUTY == 0 && CHANNEL_COUNTS == 1 && CHANNEL_CURRENT_MA == 2, "three to an axis, from bit 0");
+_Static_assert(CHANNEL_PULSE_US == 12 && CHANNEL_SUPPLY_MV == 16 && CHANNEL_TEMPERATURE_DC == 17, "after the axes");
+_Static_assert(CHANNEL_STATE == 18 && sizeof shapes / sizeof shapes[0] == 7, "the last");
+
+static uint8_t shape_of(uint8_t bit)
 {
-    for (uint8_t i = 0; i < sizeof shapes / sizeof shapes[0]; i++) {
-        const struct shape *shape = &shapes[i];
-        uint8_t fitted = shape->per == RR_PER_AXIS ? RR_AXES_MAX : shape->per == RR_PER_SERVO ? RR_SERVOS_MAX : 1;
-        for (uint8_t index = 0; index < fitted; index++) {
-            if (bit == shape->first_bit + index * shape->step) {
-                return shape;
-            }
-        }
+    if (bit >= CHANNEL_SUPPLY_MV) {
+        return (uint8_t)(bit - CHANNEL_SUPPLY_MV + 4);
     }
-    return &shapes[0];
+    if (bit >= CHANNEL_PULSE_US) {
+        return 3;
+    }
+    while (bit >= 3) {
+        bit = (uint8_t)(bit - 3);
+    }
+    return bit;
 }
 
-int32_t rr_block_held(uint8_t bit, int32_t value)
+static int32_t held(uint8_t shape, int32_t value)
 {
-    uint8_t width = shape_of(bit)->width;
-    if (width == 32) {
+    int32_t end = shapes[shape].end;
+    if (end == 0) {
         return value;
     }
-    int32_t end = (int32_t)1 << (width - 1);
     if (value >= end) {
         return end - 1;
     }
     return value < -end ? -end : value;
 }
 
-/* Appends the low `count` bits of `value`, most significant first. */
-static void put_bits(struct rr_block *block, uint32_t value, uint8_t count)
+int32_t rr_block_held(uint8_t bit, int32_t value)
 {
+    return held(shape_of(bit), value);
+}
+
+/* Appends the low `count` bits of `value`, at most 16, most significant first. */
+static void put_bits(struct rr_block *block, uint16_t value, uint8_t count)
+{
+    uint8_t used = (uint8_t)(block->bits & 7u);
+    uint8_t *byte = &block->bytes[block->bits >> 3];
+    block->bits = (uint16_t)(block->bits + count);
     while (count > 0) {
-        uint8_t used = (uint8_t)(block->bits % 6u);
-        uint8_t room = (uint8_t)(6u - used);
-        uint8_t take = count < room ? count : room;
-        uint8_t part = (uint8_t)((value >> (count - take)) & ((1u << take) - 1u));
-        char *sextet = &block->payload[block->bits / 6u];
         if (used == 0) {
-            *sextet = 0;
+            *byte = 0;
         }
-        *sextet = (char)(*sextet | (char)(part << (room - take)));
-        block->bits = (uint16_t)(block->bits + take);
-        count = (uint8_t)(count - take);
+        uint8_t room = (uint8_t)(8u - used);
+        if (count < room) {
+            *byte = (uint8_t)(*byte | (uint8_t)(value << (room - count)));
+            return;
+        }
+        count = (uint8_t)(count - room);
+        *byte = (uint8_t)(*byte | (uint8_t)(value >> count));
+        value = (uint16_t)(value & (uint16_t)((1ul << count) - 1u));
+        byte++;
+        used = 0;
     }
 }
 
+static void put_wide(struct rr_block *block, uint32_t value, uint8_t count)
+{
+    if (count > 16) {
+        uint8_t high = (uint8_t)(count - 16u);
+        put_bits(block, (uint16_t)(value >> 16 & ((1ul << high) - 1u)), high);
+        count = 16;
+    }
+    put_bits(block, (uint16_t)(value & ((1ul << count) - 1u)), count);
+}
+
 /* k of DATA-7: the least with N 2^k >= A, at most RICE_K_MAX. */
-static uint8_t parameter_of(const struct rr_channel *channel)
+static uint8_t parameter_of(uint8_t count, uint32_t sum)
 {
     uint8_t k = 0;
-    while (k < RR_RICE_K_MAX && ((uint32_t)channel->count << k) < channel->sum) {
+    for (uint32_t reach = count; k < RR_RICE_K_MAX && reach < sum; reach <<= 1) {
         k++;
     }
     return k;
@@ -81,12 +106,6 @@ static uint32_t folded(int32_t residual)
     return residual < 0 ? ~((uint32_t)residual << 1) : (uint32_t)residual << 1;
 }
 
-static uint32_t residual_of(const struct rr_channel *channel, int32_t value)
-{
-    int32_t first = difference(value, channel->value);
-    return folded(shape_of(channel->bit)->order == 2 ? difference(first, channel->difference) : first);
-}
-
 static uint8_t code_length(uint32_t u, uint8_t k)
 {
     uint32_t quotient = u >> k;
@@ -98,53 +117,49 @@ static void put_code(struct rr_block *block, uint32_t u, uint8_t k)
     uint32_t quotient = u >> k;
     if (quotient >= RR_RICE_QUOTIENT_MAX) {
         put_bits(block, 0xFFFFu, RR_RICE_QUOTIENT_MAX);
-        put_bits(block, u, 32);
+        put_wide(block, u, 32);
         return;
     }
-    put_bits(block, ((uint32_t)1 << (quotient + 1u)) - 2u, (uint8_t)(quotient + 1u));
-    put_bits(block, u, k);
+    uint8_t ones = (uint8_t)quotient;
+    put_bits(block, (uint16_t)((2ul << ones) - 2u), (uint8_t)(ones + 1u));
+    put_wide(block, u, k);
 }
 
-static void learn(struct rr_channel *channel, uint32_t u)
+void rr_block_prepare(struct rr_block *block, uint32_t mask, uint16_t period, struct rr_channel *channel)
 {
-    if (channel->count == RR_RICE_RESET) {
-        channel->sum >>= 1;
-        channel->count >>= 1;
-    }
-    channel->sum += u < RR_RICE_SUM_CAP ? u : RR_RICE_SUM_CAP;
-    channel->count++;
-}
-
-void rr_block_prepare(struct rr_block *block, uint32_t mask, uint16_t period, char *payload, uint8_t capacity)
-{
-    block->payload = payload;
-    block->capacity = capacity;
+    block->channel = channel;
     block->mask = mask;
     block->period = period;
     block->samples = 0;
     block->channels = 0;
     for (uint8_t bit = 0; bit < 20; bit++) {
-        if ((mask >> bit & 1u) != 0 && block->channels < RR_CHANNELS) {
-            block->channel[block->channels].bit = bit;
-            block->channel[block->channels].start_k = RR_RICE_K_START;
+        if ((mask >> bit & 1u) != 0) {
+            channel[block->channels].shape = shape_of(bit);
+            channel[block->channels].sum = (uint32_t)1 << RR_RICE_K_START;
             block->channels++;
         }
     }
+}
+
+void rr_block_place(struct rr_block *block, uint8_t *bytes, uint8_t characters)
+{
+    block->bytes = bytes;
+    block->room = (uint16_t)(6u * characters);
 }
 
 /* Header and first sample; the k of each channel only where more samples follow (DATA-4). */
 static void put_first(struct rr_block *block, bool with_k)
 {
     block->bits = 0;
-    put_bits(block, block->first_tick, 32);
-    put_bits(block, block->period, 16);
-    put_bits(block, block->mask, 20);
+    put_wide(block, block->first_tick, 32);
+    put_wide(block, block->period, 16);
+    put_wide(block, block->mask, 20);
     put_bits(block, 0, 8);
     for (uint8_t i = 0; i < block->channels; i++) {
-        struct rr_channel *channel = &block->channel[i];
-        put_bits(block, (uint32_t)channel->value, shape_of(channel->bit)->width);
+        const struct rr_channel *channel = &block->channel[i];
+        put_wide(block, (uint32_t)channel->value, shapes[channel->shape].width);
         if (with_k) {
-            put_bits(block, channel->start_k, 4);
+            put_bits(block, parameter_of(1, channel->sum), 4); /* before its first residual A is 2^k */
         }
     }
 }
@@ -152,76 +167,86 @@ static void put_first(struct rr_block *block, bool with_k)
 static void open_block(struct rr_block *block, uint32_t tick, const int32_t *values)
 {
     block->first_tick = tick;
+    block->count = 1;
     for (uint8_t i = 0; i < block->channels; i++) {
-        struct rr_channel *channel = &block->channel[i];
-        channel->value = rr_block_held(channel->bit, values[i]);
-        channel->difference = 0;
-        channel->sum = (uint32_t)1 << channel->start_k;
-        channel->count = 1;
+        block->channel[i].value = held(block->channel[i].shape, values[i]);
+    }
+    for (uint8_t i = 0; i < RR_SECOND_ORDER; i++) {
+        block->difference[i] = 0;
     }
     put_first(block, true);
     block->samples = 1;
 }
 
-bool rr_block_add(struct rr_block *block, uint32_t tick, const int32_t *values)
+/* Puts the folded residuals in the place of the values, and returns the bits their codes take. What a channel then holds
+ * of the sample is right only if the sample is taken: one that opens the next block sets it anew. */
+static uint16_t fold(struct rr_block *block, int32_t *values)
+{
+    uint16_t needed = 0;
+    uint8_t second = 0;
+    for (uint8_t i = 0; i < block->channels; i++) {
+        struct rr_channel *channel = &block->channel[i];
+        int32_t value = held(channel->shape, values[i]);
+        int32_t residual = difference(value, channel->value);
+        channel->value = value;
+        if (shapes[channel->shape].order == 2) {
+            int32_t before = block->difference[second];
+            block->difference[second++] = residual;
+            residual = difference(residual, before);
+        }
+        uint32_t u = folded(residual);
+        values[i] = (int32_t)u;
+        needed = (uint16_t)(needed + code_length(u, parameter_of(block->count, channel->sum)));
+    }
+    return needed;
+}
+
+/* Codes the folded residuals and lets the running means learn from them (DATA-7). */
+static void put_sample(struct rr_block *block, const int32_t *values)
+{
+    bool halve = block->count == RR_RICE_RESET;
+    for (uint8_t i = 0; i < block->channels; i++) {
+        struct rr_channel *channel = &block->channel[i];
+        uint32_t u = (uint32_t)values[i];
+        put_code(block, u, parameter_of(block->count, channel->sum));
+        if (halve) {
+            channel->sum >>= 1;
+        }
+        channel->sum += u < RR_RICE_SUM_CAP ? u : RR_RICE_SUM_CAP;
+    }
+    block->count = (uint8_t)((halve ? RR_RICE_RESET / 2 : block->count) + 1u);
+    block->samples++;
+}
+
+bool rr_block_add(struct rr_block *block, uint32_t tick, int32_t *values)
 {
     if (block->samples == 0) {
         open_block(block, tick, values);
         return true;
     }
-    uint16_t needed = block->bits;
-    for (uint8_t i = 0; i < block->channels; i++) {
-        const struct rr_channel *channel = &block->channel[i];
-        int32_t value = rr_block_held(channel->bit, values[i]);
-        needed = (uint16_t)(needed + code_length(residual_of(channel, value), parameter_of(channel)));
-    }
-    if (block->samples == RR_BLOCK_SAMPLES_MAX || needed > 6u * block->capacity) {
+    if (block->samples == RR_BLOCK_SAMPLES_MAX || fold(block, values) > (uint16_t)(block->room - block->bits)) {
         return false;
     }
-    for (uint8_t i = 0; i < block->channels; i++) {
-        struct rr_channel *channel = &block->channel[i];
-        int32_t value = rr_block_held(channel->bit, values[i]);
-        uint32_t u = residual_of(channel, value);
-        put_code(block, u, parameter_of(channel));
-        learn(channel, u);
-        channel->difference = difference(value, channel->value);
-        channel->value = value;
-    }
-    block->samples++;
+    put_sample(block, values);
     return true;
-}
-
-static char character_of(uint8_t sextet)
-{
-    if (sextet < 26) {
-        return (char)('A' + sextet);
-    }
-    if (sextet < 52) {
-        return (char)('a' + sextet - 26);
-    }
-    if (sextet < 62) {
-        return (char)('0' + sextet - 52);
-    }
-    return sextet == 62 ? '+' : '/';
 }
 
 uint8_t rr_block_close(struct rr_block *block)
 {
+    for (uint8_t i = 0; i < block->channels; i++) {
+        struct rr_channel *channel = &block->channel[i];
+        uint8_t k = parameter_of(block->samples == 0 ? 1 : block->count, channel->sum);
+        channel->sum = (uint32_t)1 << k; /* as the header of the next block will say */
+    }
     if (block->samples == 1) {
         put_first(block, false);
     }
-    char *high = &block->payload[COUNT_BIT / 6u]; /* bits 66 to 71: two of the mask, four of the count */
-    high[0] = (char)(high[0] | (char)(block->samples >> 4));
-    high[1] = (char)(high[1] | (char)((block->samples & 0xF) << 2));
-    uint8_t length = (uint8_t)((block->bits + 5u) / 6u);
-    for (uint8_t i = 0; i < length; i++) {
-        block->payload[i] = character_of((uint8_t)block->payload[i]);
-    }
-    for (uint8_t i = 0; i < block->channels; i++) {
-        block->channel[i].start_k = parameter_of(&block->channel[i]);
-    }
+    block->bytes[(block->bits + 7u) >> 3] = 0; /* where the last character's unused bits may lie */
+    uint8_t *high = &block->bytes[COUNT_BIT / 8u]; /* four bits of the mask, four of the count */
+    high[0] = (uint8_t)(high[0] | block->samples >> 4);
+    high[1] = (uint8_t)(high[1] | block->samples << 4);
     block->samples = 0;
-    return length;
+    return (uint8_t)((block->bits + 5u) / 6u);
 }
 
-_Static_assert(COUNT_BIT % 6u == 2u && HEADER_BITS == COUNT_BIT + 8u, "rr_block_close patches the count by sextets");
+_Static_assert(COUNT_BIT % 8u == 4u, "rr_block_close patches the count by half bytes");

@@ -94,7 +94,8 @@ int16_t rr_chain_step(struct rr_chain *chain, const struct rr_chain_limits *limi
         duty = 0;
         chain->held_for = one_more(chain->held_for);
     } else if (chain->held_for != 0) {
-        news->let_go = duty != 0 ? chain->held_for : 0;
+        /* A demand of the other sign goes its own way: the lock is over without having let go. */
+        news->let_go = duty != 0 && sign_of(duty) != chain->last_sign ? chain->held_for : 0;
         chain->held_for = 0;
     }
     news->settled = duty == demand;

@@ -27,13 +27,49 @@
 #define RR_KEEP 8 /* data lines kept for `again`; 0 = none */
 #endif
 #ifndef RR_NOTICES
-#define RR_NOTICES (6 + 3 * RR_AXES + 2 * RR_SERVOS) /* notices held until the end of a tick */
+#define RR_NOTICES (6 + 3 * RR_AXES + 2 * RR_SERVOS) /* notices waiting to be said */
+#endif
+#ifndef RR_PAYLOAD
+#define RR_PAYLOAD RR_PAYLOAD_MAX /* longest payload of a data line, in characters */
+#endif
+#ifndef RR_TRAIL_PAYLOAD
+#define RR_TRAIL_PAYLOAD RR_TRAIL_PAYLOAD_MAX /* longest payload of a `trail` answer, in characters */
 #endif
 #ifndef RR_TICK_US
 #define RR_TICK_US 1000 /* length of a tick */
 #endif
 #ifndef RR_CAPS
 #define RR_CAPS (RR_CAP_ENCODER | RR_CAP_CURRENT | RR_CAP_SUPPLY | RR_CAP_KEEPS_LIMITS | RR_CAP_BREAK)
+#endif
+
+/* How the work that can wait is done. 0: within the tick, as a fast processor can, so that a line is made in the tick it
+ * tells of. 1: in small pieces between the ticks, by the port's calls of `rr_device_idle`; then a tick carries out at most
+ * one request, and the queue of bytes to send needs no room for a whole line. */
+#ifndef RR_SPREAD
+#define RR_SPREAD 0
+#endif
+#ifndef RR_PIECE
+#define RR_PIECE 32 /* bytes heard or said in one piece of idle work */
+#endif
+
+#ifndef RR_LIMITS_SET_MAX
+#define RR_LIMITS_SET_MAX (RR_SPREAD ? 1 : RR_LIMITS) /* limits that requests of one tick can set */
+#endif
+
+/* The longest body of a request after its tag: a line less LF, check, tag and its space. */
+#define RR_BODY_MAX (RR_HOST_LINE_MAX - 1 - 5 - 3)
+
+/* Where tables are kept: a controller that cannot read its program memory as data sets its address space. */
+#ifndef RR_FLASH
+#define RR_FLASH
+#endif
+
+/* What a record of the trail holds. A board may have narrower ones where its sensors and its encoder's speed fit them:
+ * counts need only span what a shaft can turn within the trail. */
+#ifndef RR_TRAIL_COUNTS
+#define RR_TRAIL_COUNTS uint32_t /* unsigned: the low bits of the counts */
+#define RR_TRAIL_CURRENT int32_t
+#define RR_TRAIL_SUPPLY int32_t
 #endif
 
 #ifndef RR_START_TICK
@@ -50,6 +86,8 @@ _Static_assert(RR_AXES >= 1 && RR_AXES <= RR_AXES_MAX, "SPEC: one to RR_AXES_MAX
 _Static_assert(RR_SERVOS >= 0 && RR_SERVOS <= RR_SERVOS_MAX, "SPEC: at most RR_SERVOS_MAX servos");
 _Static_assert(RR_QUEUE >= RR_QUEUE_MIN && RR_QUEUE <= 255, "SPEC WHO-1; the queue is counted in a byte");
 _Static_assert(RR_TRAIL >= RR_TRAIL_MIN && RR_TRAIL % 4 == 0, "SPEC WHO-1, TRAIL-1");
+_Static_assert(RR_SPREAD || RR_LIMITS_SET_MAX >= RR_LIMITS, "a tick may carry out any number of requests");
+_Static_assert(RR_PAYLOAD <= RR_PAYLOAD_MAX && RR_TRAIL_PAYLOAD <= RR_TRAIL_PAYLOAD_MAX, "SPEC DATA-9, TRAIL-2");
 _Static_assert(RR_MAX_DUTY >= 0 && RR_MAX_DUTY <= RR_DUTY_FULL, "duty in 1/10000");
 
 #endif

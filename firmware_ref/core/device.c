@@ -11,35 +11,46 @@ static bool is_live(const struct rr_device *device)
     return rr_latch_is_live(&device->latch);
 }
 
-/* (a) The requests that have arrived, while there is room for a whole answer. */
+uint8_t rr_device_queued(const struct rr_device *device)
+{
+    return device->latch.state == RR_STATE_ARMED ? device->u.orders.count : 0;
+}
+
+/* Carries out the line that was heard. */
+static void carry_out_line(struct rr_device *device)
+{
+    device->lines++;
+    switch (device->heard) {
+    case RR_LINE_REQUEST:
+        rr_answer_request(device);
+        break;
+    case RR_LINE_BARE_STOP:
+        if (is_live(device)) {
+            rr_stop_begin(device, 0, RR_SOURCE_BARE);
+        } else {
+            rr_notice_push(device, RR_NOTICE_OFF, device->latch.state, 0, 0);
+        }
+        break;
+    default:
+        rr_notice_push(device, RR_NOTICE_WHO, 0, 0, 0);
+        break;
+    }
+    device->heard = RR_LINE_NONE;
+}
+
+/* (a) The requests that have arrived and can be answered; one a tick where work is spread. */
 static void take_requests(struct rr_device *device)
 {
-    while (device->port->room(device->self) >= RR_DEVICE_LINE_MAX) {
-        int byte = device->port->read(device->self);
-        if (byte < 0) {
-            return;
-        }
-        switch (rr_line_take(&device->line, (uint8_t)byte)) {
-        case RR_LINE_REQUEST:
-            device->lines++;
-            rr_answer_request(device);
-            break;
-        case RR_LINE_BARE_STOP:
-            device->lines++;
-            if (is_live(device)) {
-                rr_stop_begin(device, 0, RR_SOURCE_BARE);
-            } else {
-                rr_notice_push(device, RR_NOTICE_OFF, device->latch.state, 0, 0);
-            }
-            break;
-        case RR_LINE_BARE_WHO:
-            device->lines++;
-            rr_notice_push(device, RR_NOTICE_WHO, 0, 0, 0);
-            break;
-        default:
+    device->taking = !RR_SPREAD;
+    do {
+        rr_device_settle(device);
+        if (device->heard == RR_LINE_NONE || (device->heard == RR_LINE_REQUEST && !rr_answer_may(device))) {
             break;
         }
-    }
+        carry_out_line(device);
+    } while (!RR_SPREAD);
+    rr_device_settle(device);
+    device->taking = false;
 }
 
 /* BAD-4: at most one notice in GARBLED_REST_TICKS; what came inside the rest is told when it is over. */
@@ -60,8 +71,8 @@ static void read_inputs(struct rr_device *device)
 {
     device->port->inputs(device->self, &device->inputs);
     for (uint8_t i = 0; i < RR_AXES; i++) {
-        device->inputs.current_ma[i] -= device->axis[i].guard_limits.offset_ma;
-        rr_chain_watch(&device->axis[i].chain, &device->axis[i].chain_limits, device->inputs.counts[i]);
+        device->inputs.current_ma[i] -= device->limits.axis[i].guard.offset_ma;
+        rr_chain_watch(&device->axis[i].chain, &device->limits.axis[i].chain, device->inputs.counts[i]);
     }
 }
 
@@ -76,7 +87,7 @@ static uint16_t counted(uint16_t ticks, bool beyond)
 /* TRIP-4 */
 static void judge_supply(struct rr_device *device, struct rr_finding *finding)
 {
-    const struct rr_board_limits *limits = &device->board_limits;
+    const struct rr_board_limits *limits = &device->limits.board;
     if ((RR_CAPS & RR_CAP_SUPPLY) == 0) {
         return;
     }
@@ -96,8 +107,8 @@ static void judge_lease(const struct rr_device *device, struct rr_finding *findi
 {
     uint32_t silent = device->tick - device->renewed;
     if (RR_SEEDED(LEASE_FORGOTTEN, false, device->latch.state == RR_STATE_ARMED) && silent >= device->lease_ticks) {
-        rr_finding_note(finding, RR_TRIP_LINK_LOST, (int32_t)((uint64_t)silent * RR_TICK_US / 1000u),
-                        (int32_t)device->lease_ms);
+        uint32_t silent_ms = silent / 1000u * RR_TICK_US + silent % 1000u * RR_TICK_US / 1000u;
+        rr_finding_note(finding, RR_TRIP_LINK_LOST, (int32_t)silent_ms, (int32_t)device->lease_ms);
     }
 }
 
@@ -113,7 +124,7 @@ static void guard(struct rr_device *device)
     for (uint8_t i = 0; i < RR_AXES; i++) {
         struct rr_axis *axis = &device->axis[i];
         struct rr_finding of_axis = {RR_TRIP_NONE, i, 0, 0};
-        rr_guard_step(&axis->guard, &axis->guard_limits, device->tick, axis->chain.duty, device->inputs.counts[i],
+        rr_guard_step(&axis->guard, &device->limits.axis[i].guard, device->tick, axis->chain.duty, device->inputs.counts[i],
                       device->inputs.current_ma[i], &of_axis);
         if (of_axis.trip != RR_TRIP_NONE && (finding.trip == RR_TRIP_NONE || of_axis.trip < finding.trip)) {
             finding = of_axis;
@@ -130,19 +141,37 @@ static void guard(struct rr_device *device)
     }
 }
 
-static void begin_swing(struct rr_device *device, const struct rr_order *order)
+static void begin_swing(struct rr_device *device, const struct rr_order *order, uint8_t index)
 {
 #if RR_SERVOS > 0
-    struct rr_servo *servo = &device->servo[order->index];
+    struct rr_servo *servo = &device->servo[index];
     if (servo->swing.value == 0) { /* no pulse: from home, or on from where pulses were taken away in this tick */
-        int32_t from = servo->pulse_ns != 0 ? servo->pulse_ns : rr_servo_first_ns(&servo->limits);
+        int32_t from = servo->pulse_ns != 0 ? servo->pulse_ns : rr_servo_first_ns(&device->limits.servo[index]);
         rr_glide_end(&servo->swing, from);
     }
-    rr_glide_begin(&servo->swing, order);
+    rr_glide_begin(&servo->swing, order, (int32_t)order->value * 1000);
 #else
     (void)device;
     (void)order;
+    (void)index;
 #endif
+}
+
+static void begin_order(struct rr_device *device, const struct rr_order *order)
+{
+    uint8_t index = order->kind_index & 0xFu;
+    switch (order->kind_index >> 4) {
+    case RR_ORDER_RAMP:
+        rr_glide_begin(&device->axis[index].demand, order, order->value);
+        break;
+    case RR_ORDER_SWING:
+        begin_swing(device, order, index);
+        break;
+    default:
+        device->axis[index].brake = order->value == RR_REST_BRAKE;
+        rr_notice_push(device, RR_NOTICE_DONE, order->tag, 0, 0);
+        break;
+    }
 }
 
 /* (d) Glides move on, then the orders of this tick begin at their k = 0. */
@@ -157,19 +186,8 @@ static void move_demands(struct rr_device *device)
     }
 #endif
     struct rr_order order;
-    while (rr_orders_take_due(&device->orders, device->tick, &order)) {
-        switch (order.kind) {
-        case RR_ORDER_RAMP:
-            rr_glide_begin(&device->axis[order.index].demand, &order);
-            break;
-        case RR_ORDER_SWING:
-            begin_swing(device, &order);
-            break;
-        default:
-            device->axis[order.index].brake = order.value == RR_REST_BRAKE;
-            rr_notice_push(device, RR_NOTICE_DONE, order.tag, 0, 0);
-            break;
-        }
+    while (device->latch.state == RR_STATE_ARMED && rr_orders_take_due(&device->u.orders, device->tick, &order)) {
+        begin_order(device, &order);
     }
 }
 
@@ -178,7 +196,7 @@ static void drive_axis(struct rr_device *device, uint8_t index)
 {
     struct rr_axis *axis = &device->axis[index];
     struct rr_chain_news news;
-    int16_t duty = rr_chain_step(&axis->chain, &axis->chain_limits, (int16_t)axis->demand.value, &news);
+    int16_t duty = rr_chain_step(&axis->chain, &device->limits.axis[index].chain, (int16_t)axis->demand.value, &news);
     device->port->bridge(device->self, index, duty, axis->brake);
     device->at_ceiling = device->at_ceiling || news.at_ceiling;
     device->at_slew = device->at_slew || news.at_slew;
@@ -197,16 +215,17 @@ static void drive_axis(struct rr_device *device, uint8_t index)
 static void drive_servo(struct rr_device *device, uint8_t index)
 {
     struct rr_servo *servo = &device->servo[index];
+    const struct rr_servo_limits *limits = &device->limits.servo[index];
     int32_t goal = servo->swing.value;
     if (goal == 0) {
         servo->pulse_ns = 0;
     } else if (servo->pulse_ns == 0) {
-        servo->pulse_ns = rr_servo_first_ns(&servo->limits);
+        servo->pulse_ns = rr_servo_first_ns(limits);
     } else {
-        servo->pulse_ns = rr_servo_step_ns(&servo->limits, servo->pulse_ns, goal);
+        servo->pulse_ns = rr_servo_step_ns(limits, servo->pulse_ns, goal);
     }
     device->port->pulse(device->self, index, (uint32_t)servo->pulse_ns);
-    device->at_slew = device->at_slew || (goal != 0 && servo->pulse_ns != rr_servo_held_ns(&servo->limits, goal));
+    device->at_slew = device->at_slew || (goal != 0 && servo->pulse_ns != rr_servo_held_ns(limits, goal));
     if (servo->swing.pending && servo->swing.left == 0 && servo->pulse_ns == goal) {
         servo->swing.pending = false;
         rr_notice_push(device, RR_NOTICE_DONE, servo->swing.tag, 0, 0);
@@ -236,8 +255,11 @@ static void drive(struct rr_device *device)
         drive_servo(device, i);
     }
 #endif
-    if (rr_latch_stop_is_over(&device->latch, device->tick, device->board_limits.stop_ticks, turning)) {
+    if (rr_latch_stop_is_over(&device->latch, device->tick, device->limits.board.stop_ticks, turning)) {
         rr_stop_off(device);
+        device->at_ceiling = false; /* in states off and tripped the bits are 0 */
+        device->at_slew = false;
+        device->locked = false;
     }
 }
 
@@ -248,29 +270,14 @@ static void record(struct rr_device *device)
         struct rr_record *record = rr_trail_add(&device->trail, device->tick);
         for (uint8_t i = 0; i < RR_AXES; i++) {
             record->duty[i] = device->axis[i].chain.duty;
-            record->counts[i] = device->inputs.counts[i];
-            record->current_ma[i] = device->inputs.current_ma[i];
+            record->counts[i] = (RR_TRAIL_COUNTS)device->inputs.counts[i];
+            record->current_ma[i] = (RR_TRAIL_CURRENT)device->inputs.current_ma[i];
+            device->trail.last_counts[i] = device->inputs.counts[i];
         }
-        record->supply_mv = device->inputs.supply_mv;
+        record->supply_mv = (RR_TRAIL_SUPPLY)device->inputs.supply_mv;
         record->bits = rr_sampling_state_bits(device);
     }
     rr_sampling_tick(device);
-}
-
-/* What is judged by, from the limits as they now stand. */
-static void take_limits(struct rr_device *device)
-{
-    device->limits_changed = false;
-    rr_limits_board(&device->limits, &device->board_limits);
-    for (uint8_t i = 0; i < RR_AXES; i++) {
-        rr_limits_chain(&device->limits, i, &device->axis[i].chain_limits);
-        rr_limits_guard(&device->limits, i, &device->axis[i].guard_limits);
-    }
-#if RR_SERVOS > 0
-    for (uint8_t i = 0; i < RR_SERVOS; i++) {
-        rr_limits_servo(&device->limits, i, &device->servo[i].limits);
-    }
-#endif
 }
 
 void rr_device_tick(struct rr_device *device)
@@ -281,11 +288,10 @@ void rr_device_tick(struct rr_device *device)
     guard(device);
     move_demands(device);
     drive(device);
-    rr_notice_send(device);
+    rr_device_settle(device);
     record(device);
-    if (device->limits_changed) {
-        take_limits(device);
-    }
+    rr_device_settle(device);
+    rr_limits_enforce(&device->limits);
     device->tick++;
 }
 
@@ -293,9 +299,12 @@ static void load_limits(struct rr_device *device)
 {
     rr_limits_defaults(&device->limits);
     for (uint8_t place = 0; place < RR_LIMITS; place++) {
-        (void)rr_store_read(device->port, device->self, (uint8_t)(1u + place), &device->limits.value[place]);
+        int32_t value;
+        if (rr_store_read(device->port, device->self, (uint8_t)(1u + place), &value)) {
+            rr_limits_set(&device->limits, place, value);
+            rr_limits_enforce(&device->limits);
+        }
     }
-    take_limits(device);
 }
 
 static uint32_t next_boot(struct rr_device *device)
@@ -326,8 +335,8 @@ void rr_device_start(struct rr_device *device, const struct rr_port *port, void 
     device->last_trip_tick = device->latch.trip != RR_TRIP_NONE ? device->tick : 0;
     rr_notice_push(device, RR_NOTICE_BOOT, cause, 0, 0);
     if (device->latch.trip != RR_TRIP_NONE) {
-        rr_notice_push(device, RR_NOTICE_TRIP, 0, device->last_trip.value, 0);
+        rr_notice_push(device, RR_NOTICE_TRIP, (uint8_t)(device->latch.trip << 4), device->last_trip.value, 0);
         rr_notice_push(device, RR_NOTICE_OFF, device->latch.state, 0, 0);
     }
-    rr_notice_send(device);
+    rr_device_settle(device);
 }

@@ -1,7 +1,8 @@
 /* The device: lines in, outputs and lines out, one tick at a time (SPEC RUN-1 to RUN-3).
  *
  * A port makes one `struct rr_device`, calls `rr_device_start` once with all outputs off, and then `rr_device_tick` each
- * tick from one context. Nothing here blocks, waits or allocates. */
+ * tick; between the ticks it calls `rr_device_idle` where RR_SPREAD is 1. All from one context. Nothing here blocks, waits
+ * or allocates. */
 #ifndef RAMPRIG_DEVICE_H
 #define RAMPRIG_DEVICE_H
 
@@ -11,9 +12,9 @@
 #include "limits.h"
 #include "line.h"
 #include "orders.h"
-#include "out.h"
 #include "port.h"
 #include "trail.h"
+#include "voice.h"
 
 #include <stdbool.h>
 #include <stdint.h>
@@ -22,56 +23,113 @@ struct rr_axis {
     struct rr_chain chain;
     struct rr_guard guard;
     struct rr_glide demand;
-    struct rr_chain_limits chain_limits;
-    struct rr_guard_limits guard_limits;
     bool brake;
 };
 
 struct rr_servo {
     struct rr_glide swing; /* in ns */
-    struct rr_servo_limits limits;
-    int32_t pulse_ns; /* 0 = none */
+    int32_t pulse_ns;      /* 0 = none */
+};
+
+/* The most numbers of an answer: `state`, or `counters` with nine. */
+#define RR_STATE_VALUES (5 + 3 * RR_AXES + RR_SERVOS)
+#define RR_REPLY_VALUES (RR_STATE_VALUES > 9 ? RR_STATE_VALUES : 9)
+
+/* An answer as numbers, from which it is said, and said again letter for letter (SPEC TAG-3). */
+struct rr_reply {
+    uint32_t tick;
+    uint32_t value[RR_REPLY_VALUES];
+    uint8_t tag;
+    uint8_t word;
+    uint8_t reason; /* RR_REASON_COUNT = ok */
+    bool waiting;   /* to be said */
+};
+
+/* An answer outside the exactly-once memory: to `stop` under tag ff, or a refusal with reason `tag`. */
+struct rr_aside {
+    uint32_t tick;
+    uint8_t tag;
+    uint8_t reason; /* RR_REASON_COUNT = ok */
+    uint8_t state;
+    bool waiting;
 };
 
 /* One request's exactly-once memory (SPEC TAG-3). */
 struct rr_memory {
-    char answer[RR_DEVICE_LINE_MAX];
-    char body[RR_HOST_LINE_MAX];
-    uint8_t answer_length; /* 0 = nothing kept */
-    uint8_t tag;
+    struct rr_reply reply;
+    char body[RR_BODY_MAX + 1]; /* what follows the tag */
+    bool full;
 };
+
+/* A data line from its first sample until it has been said; later what `again` sends. */
+struct rr_parcel {
+    union {
+        uint8_t bytes[RR_BLOCK_BYTES(RR_PAYLOAD)]; /* packed */
+        struct {
+            uint32_t tick;
+            uint32_t mask;
+            uint16_t period;
+            int32_t value[RR_CHANNELS];
+        } plain;
+    } u;
+    uint8_t length; /* characters of a packed payload, 0 = plain */
+    uint8_t number;
+};
+
+/* One is being filled, one said, and the last RR_KEEP are kept. */
+#define RR_PARCELS (2 + RR_KEEP)
 
 struct rr_logging {
     struct rr_block block;
-    char payload[RR_PAYLOAD_MAX];
+    struct rr_channel channel[RR_CHANNELS];
+    struct rr_parcel parcel[RR_PARCELS];
+    uint8_t filling; /* which parcel */
+    uint8_t saying;
+    bool waiting;    /* `saying` is to be said, or being said */
+    bool goes_first; /* it belongs to the logging before: ahead of the answer to `log` (LOG-4) */
+    bool again_waiting;
+    uint8_t again; /* which parcel to say again */
+    uint8_t kept_count;
+    uint8_t number; /* of the next data line */
+    uint8_t form;
+    uint16_t period;
     uint32_t mask;
     uint32_t next_tick;
     uint32_t made; /* by this logging */
-    uint16_t period;
-    uint8_t form;
-    uint8_t number; /* of the next data line */
     uint32_t made_ever;
     uint32_t dropped_ever;
-#if RR_KEEP > 0
-    char kept[RR_KEEP][RR_DEVICE_LINE_MAX];
-    uint8_t kept_length[RR_KEEP];
-    uint8_t kept_count;
-#endif
 };
 
-/* What happened in this tick, told at its end in (f) (SPEC RUN-2, NOTE-1). */
+/* A trail answer in the making. */
+#define RR_TRAIL_CHANNELS 5
+struct rr_packing {
+    struct rr_block block;
+    struct rr_channel channel[RR_TRAIL_CHANNELS];
+    uint8_t bytes[RR_BLOCK_BYTES(RR_TRAIL_PAYLOAD)];
+    uint16_t next;  /* record */
+    uint8_t axis;
+    uint8_t length; /* characters, once it is whole */
+};
+
+/* What happened, told in order (SPEC NOTE-1). */
 struct rr_happened {
     int32_t value;
     int32_t bound;
-    uint8_t kind; /* enum rr_notice */
-    uint8_t index;
+    uint16_t tick_low; /* the tick's low half: it is told long before it could be mistaken */
+    uint8_t kind;      /* enum rr_notice */
+    uint8_t index;     /* axis, servo, tag, state, cause or source; of a trip its number too, in the upper four bits */
+    uint8_t number;
 };
 
 struct rr_notices {
     struct rr_happened happened[RR_NOTICES];
+    uint8_t first;
     uint8_t count;
     uint8_t number; /* of the next notice */
 };
+
+/* Which line is being said. */
+enum rr_saying { RR_SAYING_NOTHING, RR_SAYING_REPLY, RR_SAYING_ASIDE, RR_SAYING_NOTICE, RR_SAYING_DATA, RR_SAYING_AGAIN };
 
 struct rr_device {
     const struct rr_port *port;
@@ -79,17 +137,14 @@ struct rr_device {
     uint32_t tick;
     uint32_t boot;
     struct rr_latch latch;
-    struct rr_finding found;
     struct rr_finding late; /* an order of this tick came late */
     struct rr_finding last_trip;
     uint32_t last_trip_tick;
     uint32_t renewed; /* tick of the last lease renewal */
-    uint32_t lease_ms;
+    uint16_t lease_ms;
     uint32_t lease_ticks;
     uint16_t over_for; /* ticks in a row beyond the supply's limits */
     uint16_t under_for;
-    struct rr_board_limits board_limits;
-    bool limits_changed; /* in this tick: in force from the next */
     bool at_ceiling;
     bool at_slew;
     bool locked;
@@ -99,12 +154,23 @@ struct rr_device {
 #if RR_SERVOS > 0
     struct rr_servo servo[RR_SERVOS];
 #endif
-    struct rr_orders orders;
+    /* Orders wait in state `armed` only, and a trail is read after a trip only, until the next `arm`: one memory. */
+    union {
+        struct rr_orders orders;
+        struct rr_packing packing;
+    } u;
+    bool packing_busy;
     struct rr_line line;
+    uint8_t heard; /* enum rr_line_kind: a line that waits to be carried out */
     struct rr_memory memory;
+    struct rr_aside aside;
     struct rr_logging logging;
     struct rr_trail trail;
     struct rr_notices notices;
+    struct rr_voice voice;
+    uint8_t saying; /* enum rr_saying */
+    bool taking;    /* requests are being carried out: notices wait for (f) of the tick */
+    uint8_t unsaved[(RR_LIMITS + 7) / 8]; /* bit by place: a limit's value is not in the store yet */
     uint32_t lines;
     uint32_t repeats;
     uint32_t garbled_told;
@@ -119,27 +185,43 @@ void rr_device_start(struct rr_device *device, const struct rr_port *port, void 
 /* Carries out one tick. */
 void rr_device_tick(struct rr_device *device);
 
+/* Does a small piece of what can wait: hearing, saying, keeping. False where there is nothing to do now. */
+bool rr_device_idle(struct rr_device *device);
+
 /* ---- between the files of the device, not for ports ---- */
 
-/* answer.c: carries out a request or a bare line. */
+/* device.c: orders in the queue. */
+uint8_t rr_device_queued(const struct rr_device *device);
+/* idle.c: says a piece of a line; false where there is nothing to say, or no room. All idle work, where it is not spread. */
+bool rr_device_say(struct rr_device *device);
+void rr_device_settle(struct rr_device *device);
+/* answer.c: carries out a request; may it be answered yet? */
+bool rr_answer_may(const struct rr_device *device);
 void rr_answer_request(struct rr_device *device);
+/* reply.c: answers as numbers, and the fields they are said in. Each `..._field` gives the voice its next field, and
+ * returns false where there is none. */
+void rr_reply_note(struct rr_device *device, uint8_t word, uint32_t told);
+bool rr_reply_field(struct rr_device *device, uint8_t field);
+bool rr_reply_aside_field(struct rr_device *device, uint8_t field);
 /* stop.c: stops, trips, and what follows from them. */
 void rr_stop_begin(struct rr_device *device, uint8_t category, uint8_t source);
 void rr_stop_off(struct rr_device *device);
 void rr_stop_trip(struct rr_device *device, const struct rr_finding *finding);
 /* notice.c: notices. */
 void rr_notice_push(struct rr_device *device, uint8_t kind, uint8_t index, int32_t value, int32_t bound);
-void rr_notice_send(struct rr_device *device);
-void rr_notice_identity(const struct rr_device *device, struct rr_out *out);
-const char *rr_state_word(uint8_t state);
-const char *rr_trip_word(uint8_t trip);
+bool rr_notice_field(struct rr_device *device, uint8_t field);
+bool rr_notice_identity_field(struct rr_device *device, uint8_t field);
+const RR_FLASH char *rr_state_word(uint8_t state);
+const RR_FLASH char *rr_trip_word(uint8_t trip);
 /* sampling.c: log, again, trail. */
 uint16_t rr_sampling_state_bits(const struct rr_device *device);
 bool rr_sampling_mask_fits(uint32_t mask);
 uint32_t rr_sampling_change(struct rr_device *device, uint16_t period, uint32_t mask, uint8_t form);
 void rr_sampling_tick(struct rr_device *device);
-bool rr_sampling_again(const struct rr_device *device, uint8_t number);
-void rr_sampling_send_again(struct rr_device *device, uint8_t number);
-uint8_t rr_sampling_trail(struct rr_device *device, uint8_t axis, uint32_t first, char *payload);
+bool rr_sampling_again(struct rr_device *device, uint8_t number);
+bool rr_sampling_field(struct rr_device *device, const struct rr_parcel *parcel, uint8_t field);
+/* packing.c: the payload of a `trail` answer, a record at a time. */
+bool rr_packing_begin(struct rr_device *device, uint8_t axis, uint32_t first);
+void rr_packing_step(struct rr_device *device);
 
 #endif

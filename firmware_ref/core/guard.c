@@ -12,9 +12,11 @@ void rr_finding_note(struct rr_finding *finding, uint8_t trip, int32_t value, in
     }
 }
 
+/* Of counts (SPEC section 2): can be negated. */
 static int32_t difference(int32_t a, int32_t b)
 {
-    return (int32_t)((uint32_t)a - (uint32_t)b);
+    int32_t away = (int32_t)((uint32_t)a - (uint32_t)b);
+    return away == INT32_MIN ? -INT32_MAX : away;
 }
 
 static uint32_t size_of(int32_t value)
@@ -35,9 +37,10 @@ static uint16_t root_of(uint64_t square)
     return root;
 }
 
-uint32_t rr_guard_gain(uint32_t thermal_s)
+/* floor(floor(a / b) / c) is floor(a / (b c)): the large division is done by the compiler. */
+uint32_t rr_guard_gain(uint16_t thermal_s)
 {
-    return (uint32_t)(((uint64_t)RR_THERMAL_TICKS * RR_TICK_US << 24) / ((uint64_t)thermal_s * 1000000ul));
+    return (uint32_t)((((uint64_t)RR_THERMAL_TICKS * RR_TICK_US) << 24) / 1000000ul) / thermal_s;
 }
 
 /* TRIP-3 */
@@ -148,8 +151,8 @@ bool rr_guard_persists(const struct rr_guard *guard, const struct rr_guard_limit
         return size_of(current_ma) > (uint32_t)limits->trip_ma;
     }
     if (trip == RR_TRIP_OVERLOAD) {
-        uint32_t full = (uint32_t)limits->rated_ma * (uint32_t)limits->rated_ma;
-        return (guard->heat >> 24) > full - (full >> 3);
+        uint64_t full = (uint64_t)limits->rated_ma * limits->rated_ma;
+        return full > 0 && (guard->heat >> 24) * 8u > full * 7u;
     }
     return false;
 }

@@ -15,7 +15,8 @@ struct rr_guard_limits {
     int32_t trip_ma;
     uint16_t trip_ticks;
     uint16_t rated_ma;
-    uint32_t gain; /* floor(THERMAL_TICKS tick_us 2^24 / (thermal_s 10^6)) */
+    uint16_t thermal_s;
+    uint32_t gain; /* from thermal_s: floor(THERMAL_TICKS tick_us 2^24 / (thermal_s 10^6)) */
     int16_t stall_duty;
     int16_t stall_counts;
     uint16_t stall_ticks;
@@ -53,7 +54,7 @@ bool rr_guard_persists(const struct rr_guard *guard, const struct rr_guard_limit
                        int32_t current_ma);
 
 /* The gain of the thermal model for a time constant in s. */
-uint32_t rr_guard_gain(uint32_t thermal_s);
+uint32_t rr_guard_gain(uint16_t thermal_s);
 
 /* Notes a finding if its trip has a lower number than the one held. */
 void rr_finding_note(struct rr_finding *finding, uint8_t trip, int32_t value, int32_t bound);

@@ -3,36 +3,65 @@
 
 #include "check.h"
 
+#include <stddef.h>
+
+/* How a limit is kept: as narrow as its range allows. */
+enum width { I8, I16, U16, I32, US_AS_NS };
+
 struct row {
-    uint8_t number;
-    uint8_t per;
     int32_t least;
     int32_t greatest;
     int32_t standard;
+    uint8_t number;
+    uint8_t per;
     uint8_t tighter;
+    uint8_t offset; /* in its struct */
+    uint8_t width;
 };
 
+/* Where each limit is kept. */
+#define OF_BOARD(member, width) offsetof(struct rr_board_limits, member), width
+#define OF_AXIS(member, width)  offsetof(struct rr_axis_limits, member), width
+#define OF_SERVO(member, width) offsetof(struct rr_servo_limits, member), width
+#define KEPT_LEASE_MS       OF_BOARD(lease_ms, U16)
+#define KEPT_STOP_TICKS     OF_BOARD(stop_ticks, U16)
+#define KEPT_UNDER_MV       OF_BOARD(under_mv, U16)
+#define KEPT_OVER_MV        OF_BOARD(over_mv, U16)
+#define KEPT_SUPPLY_TICKS   OF_BOARD(supply_ticks, U16)
+#define KEPT_CEILING_DUTY   OF_AXIS(chain.ceiling_duty, I16)
+#define KEPT_SLEW_UP_DUTY   OF_AXIS(chain.slew_up_duty, I16)
+#define KEPT_SLEW_DOWN_DUTY OF_AXIS(chain.slew_down_duty, I16)
+#define KEPT_DWELL_TICKS    OF_AXIS(chain.dwell_ticks, U16)
+#define KEPT_STILL_COUNTS   OF_AXIS(chain.still_counts, I16)
+#define KEPT_STILL_TICKS    OF_AXIS(chain.still_ticks, U16)
+#define KEPT_SENSE          OF_AXIS(chain.sense, I8)
+#define KEPT_TRIP_MA        OF_AXIS(guard.trip_ma, I32)
+#define KEPT_TRIP_TICKS     OF_AXIS(guard.trip_ticks, U16)
+#define KEPT_OFFSET_MA      OF_AXIS(guard.offset_ma, I16)
+#define KEPT_RATED_MA       OF_AXIS(guard.rated_ma, U16)
+#define KEPT_THERMAL_S      OF_AXIS(guard.thermal_s, U16)
+#define KEPT_STALL_DUTY     OF_AXIS(guard.stall_duty, I16)
+#define KEPT_STALL_COUNTS   OF_AXIS(guard.stall_counts, I16)
+#define KEPT_STALL_TICKS    OF_AXIS(guard.stall_ticks, U16)
+#define KEPT_WRONG_COUNTS   OF_AXIS(guard.wrong_counts, I32)
+#define KEPT_SPEED_COUNTS   OF_AXIS(guard.speed_counts, I32)
+#define KEPT_PULSE_MIN_US   OF_SERVO(least_ns, US_AS_NS)
+#define KEPT_PULSE_MAX_US   OF_SERVO(greatest_ns, US_AS_NS)
+#define KEPT_PULSE_SLEW_NS  OF_SERVO(slew_ns, I32)
+#define KEPT_PULSE_HOME_US  OF_SERVO(home_ns, US_AS_NS)
+
 #define ROW(NAME, word, number, per, least, greatest, standard, tighter) \
-    {number, RR_PER_##per, least, greatest, standard, RR_TIGHTER_##tighter},
-static const struct row rows[] = {RR_LIMIT_LIST(ROW)};
+    {least, greatest, standard, number, RR_PER_##per, RR_TIGHTER_##tighter, KEPT_##NAME},
+static const RR_FLASH struct row rows[] = {RR_LIMIT_LIST(ROW)};
 #undef ROW
 
 #define ROWS (sizeof rows / sizeof rows[0])
 _Static_assert(ROWS == RR_DEVICE_LIMITS + RR_AXIS_LIMITS + RR_SERVO_LIMITS, "config.h counts the limits");
+_Static_assert(sizeof(struct rr_axis_limits) < 256, "a row's offset is a byte");
 
 static uint8_t fitted(uint8_t per)
 {
     return per == RR_PER_AXIS ? RR_AXES : per == RR_PER_SERVO ? RR_SERVOS : 1;
-}
-
-static const struct row *row_of(uint8_t number)
-{
-    for (uint8_t i = 0; i < ROWS; i++) {
-        if (rows[i].number == number) {
-            return &rows[i];
-        }
-    }
-    return &rows[0];
 }
 
 uint8_t rr_limits_place(uint8_t number, uint32_t index)
@@ -48,9 +77,91 @@ uint8_t rr_limits_place(uint8_t number, uint32_t index)
     return RR_LIMITS;
 }
 
+/* The row of a place that exists; the index by `index`. */
+static const RR_FLASH struct row *row_at(uint8_t place, uint8_t *index)
+{
+    const RR_FLASH struct row *row = rows;
+    uint8_t many = fitted(row->per);
+    while (place >= many) {
+        place = (uint8_t)(place - many);
+        row++;
+        many = fitted(row->per);
+    }
+    *index = place;
+    return row;
+}
+
+/* Where the value of a row and index is kept. */
+static const void *kept_at(const struct rr_limits *limits, const RR_FLASH struct row *row, uint8_t index)
+{
+    const uint8_t *start = (const uint8_t *)&limits->board;
+    if (row->per == RR_PER_AXIS) {
+        start = (const uint8_t *)&limits->axis[index];
+    }
+#if RR_SERVOS > 0
+    if (row->per == RR_PER_SERVO) {
+        start = (const uint8_t *)&limits->servo[index];
+    }
+#endif
+    return start + row->offset;
+}
+
+int32_t rr_limits_at(const struct rr_limits *limits, uint8_t place)
+{
+    for (uint8_t i = 0; i < limits->set_count; i++) {
+        if (limits->set[i].place == place) {
+            return limits->set[i].value;
+        }
+    }
+    uint8_t index;
+    const RR_FLASH struct row *row = row_at(place, &index);
+    const void *kept = kept_at(limits, row, index);
+    switch (row->width) {
+    case I8:
+        return *(const int8_t *)kept;
+    case I16:
+        return *(const int16_t *)kept;
+    case U16:
+        return *(const uint16_t *)kept;
+    case US_AS_NS:
+        return *(const int32_t *)kept / 1000;
+    default:
+        return *(const int32_t *)kept;
+    }
+}
+
+static void enforce(struct rr_limits *limits, uint8_t place, int32_t value)
+{
+    uint8_t index;
+    const RR_FLASH struct row *row = row_at(place, &index);
+    void *kept = (uint8_t *)limits + ((const uint8_t *)kept_at(limits, row, index) - (const uint8_t *)limits);
+    switch (row->width) {
+    case I8:
+        *(int8_t *)kept = (int8_t)value;
+        break;
+    case I16:
+        *(int16_t *)kept = (int16_t)value;
+        break;
+    case U16:
+        *(uint16_t *)kept = (uint16_t)value;
+        break;
+    case US_AS_NS:
+        *(int32_t *)kept = value * 1000;
+        break;
+    default:
+        *(int32_t *)kept = value;
+        break;
+    }
+    if (row->number == RR_LIMIT_THERMAL_S) {
+        limits->axis[index].guard.gain = rr_guard_gain((uint16_t)value);
+    } else if (row->number == RR_LIMIT_SENSE) {
+        limits->axis[index].guard.sense = (int8_t)value;
+    }
+}
+
 int32_t rr_limits_get(const struct rr_limits *limits, uint8_t number, uint8_t index)
 {
-    return limits->value[rr_limits_place(number, index)];
+    return rr_limits_at(limits, rr_limits_place(number, index));
 }
 
 /* Where 0 means "trip off" it is looser than every other value (LIMIT-3). */
@@ -60,7 +171,7 @@ static bool zero_is_off(uint8_t number)
            number == RR_LIMIT_SPEED_COUNTS;
 }
 
-static bool is_looser(const struct row *row, int32_t now, int32_t value)
+static bool is_looser(const RR_FLASH struct row *row, int32_t now, int32_t value)
 {
     if (value == now) {
         return false;
@@ -74,7 +185,7 @@ static bool is_looser(const struct row *row, int32_t now, int32_t value)
     return row->tighter == RR_TIGHTER_HIGHER ? value < now : true;
 }
 
-static bool is_out_of_range(const struct rr_limits *limits, const struct row *row, uint8_t index, int32_t value)
+static bool is_out_of_range(const struct rr_limits *limits, const RR_FLASH struct row *row, uint8_t index, int32_t value)
 {
     if (value < row->least || value > row->greatest) {
         return true;
@@ -97,77 +208,59 @@ uint8_t rr_limits_refusal(const struct rr_limits *limits, uint8_t number, uint32
     if (place == RR_LIMITS) {
         return RR_REASON_INDEX;
     }
-    const struct row *row = row_of(number);
-    if (is_out_of_range(limits, row, (uint8_t)index, value)) {
+    uint8_t at;
+    const RR_FLASH struct row *row = row_at(place, &at);
+    if (is_out_of_range(limits, row, at, value)) {
         return RR_REASON_RANGE;
     }
-    return armed && is_looser(row, limits->value[place], value) ? RR_REASON_ARMED : RR_REASON_COUNT;
+    return armed && is_looser(row, rr_limits_at(limits, place), value) ? RR_REASON_ARMED : RR_REASON_COUNT;
 }
 
 void rr_limits_defaults(struct rr_limits *limits)
 {
-    uint8_t place = 0;
-    for (uint8_t i = 0; i < ROWS; i++) {
-        int32_t value = rows[i].standard;
-        if (rows[i].number == RR_LIMIT_CEILING_DUTY && value > RR_MAX_DUTY) {
-            value = RR_MAX_DUTY;
-        }
-        for (uint8_t index = 0; index < fitted(rows[i].per); index++) {
-            limits->value[place++] = value;
-        }
-    }
-}
-
-uint32_t rr_limits_digest(const struct rr_limits *limits)
-{
-    uint32_t crc = RR_CRC32_START;
+    limits->set_count = 0;
+    limits->digest_place = 0;
     for (uint8_t place = 0; place < RR_LIMITS; place++) {
-        uint32_t value = (uint32_t)limits->value[place];
-        for (int8_t shift = 24; shift >= 0; shift = (int8_t)(shift - 8)) {
-            crc = rr_crc32(crc, (uint8_t)(value >> shift));
-        }
+        uint8_t index;
+        const RR_FLASH struct row *row = row_at(place, &index);
+        bool ceiling = row->number == RR_LIMIT_CEILING_DUTY && row->standard > RR_MAX_DUTY;
+        enforce(limits, place, ceiling ? RR_MAX_DUTY : row->standard);
     }
-    return ~crc;
 }
 
-void rr_limits_board(const struct rr_limits *limits, struct rr_board_limits *board)
+void rr_limits_set(struct rr_limits *limits, uint8_t place, int32_t value)
 {
-    board->under_mv = rr_limits_get(limits, RR_LIMIT_UNDER_MV, 0);
-    board->over_mv = rr_limits_get(limits, RR_LIMIT_OVER_MV, 0);
-    board->supply_ticks = (uint16_t)rr_limits_get(limits, RR_LIMIT_SUPPLY_TICKS, 0);
-    board->stop_ticks = (uint16_t)rr_limits_get(limits, RR_LIMIT_STOP_TICKS, 0);
+    uint8_t at = 0;
+    while (at < limits->set_count && limits->set[at].place != place) {
+        at++;
+    }
+    limits->set[at].place = place;
+    limits->set[at].value = value;
+    if (at == limits->set_count) {
+        limits->set_count++;
+    }
+    limits->digest_place = 0;
 }
 
-void rr_limits_chain(const struct rr_limits *limits, uint8_t axis, struct rr_chain_limits *chain)
+void rr_limits_enforce(struct rr_limits *limits)
 {
-    chain->ceiling_duty = (int16_t)rr_limits_get(limits, RR_LIMIT_CEILING_DUTY, axis);
-    chain->slew_up_duty = (int16_t)rr_limits_get(limits, RR_LIMIT_SLEW_UP_DUTY, axis);
-    chain->slew_down_duty = (int16_t)rr_limits_get(limits, RR_LIMIT_SLEW_DOWN_DUTY, axis);
-    chain->dwell_ticks = (uint16_t)rr_limits_get(limits, RR_LIMIT_DWELL_TICKS, axis);
-    chain->still_counts = (int16_t)rr_limits_get(limits, RR_LIMIT_STILL_COUNTS, axis);
-    chain->still_ticks = (uint16_t)rr_limits_get(limits, RR_LIMIT_STILL_TICKS, axis);
-    chain->sense = (int8_t)rr_limits_get(limits, RR_LIMIT_SENSE, axis);
+    for (uint8_t i = 0; i < limits->set_count; i++) {
+        enforce(limits, limits->set[i].place, limits->set[i].value);
+    }
+    limits->set_count = 0;
 }
 
-void rr_limits_guard(const struct rr_limits *limits, uint8_t axis, struct rr_guard_limits *guard)
+bool rr_limits_digest_step(struct rr_limits *limits)
 {
-    guard->offset_ma = (int16_t)rr_limits_get(limits, RR_LIMIT_OFFSET_MA, axis);
-    guard->trip_ma = rr_limits_get(limits, RR_LIMIT_TRIP_MA, axis);
-    guard->trip_ticks = (uint16_t)rr_limits_get(limits, RR_LIMIT_TRIP_TICKS, axis);
-    guard->rated_ma = (uint16_t)rr_limits_get(limits, RR_LIMIT_RATED_MA, axis);
-    guard->gain = rr_guard_gain((uint32_t)rr_limits_get(limits, RR_LIMIT_THERMAL_S, axis));
-    guard->stall_duty = (int16_t)rr_limits_get(limits, RR_LIMIT_STALL_DUTY, axis);
-    guard->stall_counts = (int16_t)rr_limits_get(limits, RR_LIMIT_STALL_COUNTS, axis);
-    guard->stall_ticks = (uint16_t)rr_limits_get(limits, RR_LIMIT_STALL_TICKS, axis);
-    guard->wrong_counts = rr_limits_get(limits, RR_LIMIT_WRONG_COUNTS, axis);
-    guard->speed_counts = rr_limits_get(limits, RR_LIMIT_SPEED_COUNTS, axis);
-    guard->sense = (int8_t)rr_limits_get(limits, RR_LIMIT_SENSE, axis);
-}
-
-void rr_limits_servo(const struct rr_limits *limits, uint8_t servo, struct rr_servo_limits *pulse)
-{
-    pulse->least_ns = rr_limits_get(limits, RR_LIMIT_PULSE_MIN_US, servo) * 1000;
-    pulse->greatest_ns = rr_limits_get(limits, RR_LIMIT_PULSE_MAX_US, servo) * 1000;
-    pulse->slew_ns = rr_limits_get(limits, RR_LIMIT_PULSE_SLEW_NS, servo);
-    pulse->home_ns = rr_limits_get(limits, RR_LIMIT_PULSE_HOME_US, servo) * 1000;
+    if (limits->digest_place == RR_LIMITS) {
+        return false;
+    }
+    uint32_t crc = limits->digest_place == 0 ? RR_CRC32_START : ~limits->digest;
+    uint32_t value = (uint32_t)rr_limits_at(limits, limits->digest_place);
+    for (int8_t shift = 24; shift >= 0; shift = (int8_t)(shift - 8)) {
+        crc = rr_crc32(crc, (uint8_t)(value >> shift));
+    }
+    limits->digest = ~crc;
+    limits->digest_place++;
+    return true;
 }

@@ -1,10 +1,9 @@
-/* The limits by which the device judges: their table, rules and digest, and their store (SPEC LIMIT-1 to LIMIT-5). */
+/* The limits by which the device judges: their table, rules and digest (SPEC LIMIT-1 to LIMIT-5). */
 #ifndef RAMPRIG_LIMITS_H
 #define RAMPRIG_LIMITS_H
 
 #include "chain.h"
 #include "guard.h"
-#include "port.h"
 #include "servo.h"
 
 #include <stdbool.h>
@@ -12,35 +11,57 @@
 
 /* What the device as a whole judges by. */
 struct rr_board_limits {
-    int32_t under_mv;
-    int32_t over_mv;
-    uint16_t supply_ticks;
+    uint16_t lease_ms;
     uint16_t stop_ticks;
+    uint16_t under_mv;
+    uint16_t over_mv;
+    uint16_t supply_ticks;
 };
 
-/* All limit values, in the order of the digest: by item number, and within an item by index. */
+struct rr_axis_limits {
+    struct rr_chain_limits chain;
+    struct rr_guard_limits guard;
+};
+
+/* A limit that was set in this tick and is in force from the next (LIMIT-4). */
+struct rr_set_limit {
+    int32_t value;
+    uint8_t place;
+};
+
+/* The limits in force, and those set since. */
 struct rr_limits {
-    int32_t value[RR_LIMITS];
+    struct rr_board_limits board;
+    struct rr_axis_limits axis[RR_AXES];
+#if RR_SERVOS > 0
+    struct rr_servo_limits servo[RR_SERVOS];
+#endif
+    struct rr_set_limit set[RR_LIMITS_SET_MAX];
+    uint8_t set_count;
+    uint8_t digest_place; /* the next one to go into the digest; RR_LIMITS where it is whole */
+    uint32_t digest;
 };
 
-/* The place of a limit in `value`, or RR_LIMITS where there is no such index. */
+/* The place of a limit in the order of the digest, or RR_LIMITS where there is no such index. */
 uint8_t rr_limits_place(uint8_t number, uint32_t index);
 
 /* Why a limit must not take a value, or RR_REASON_COUNT where it may. */
 uint8_t rr_limits_refusal(const struct rr_limits *limits, uint8_t number, uint32_t index, int32_t value, bool armed);
 
-/* The defaults of the table, a ceiling held to the board's own. */
+/* The defaults of the table, a ceiling held to the board's own, all in force. */
 void rr_limits_defaults(struct rr_limits *limits);
 
-uint32_t rr_limits_digest(const struct rr_limits *limits);
-
-/* The one with this number and index, which must exist. */
+/* What a limit is, or will be from the next tick on; it must exist. */
 int32_t rr_limits_get(const struct rr_limits *limits, uint8_t number, uint8_t index);
+int32_t rr_limits_at(const struct rr_limits *limits, uint8_t place);
 
-/* What board, chain, guard and servo judge by, taken from the values. */
-void rr_limits_board(const struct rr_limits *limits, struct rr_board_limits *board);
-void rr_limits_chain(const struct rr_limits *limits, uint8_t axis, struct rr_chain_limits *chain);
-void rr_limits_guard(const struct rr_limits *limits, uint8_t axis, struct rr_guard_limits *guard);
-void rr_limits_servo(const struct rr_limits *limits, uint8_t servo, struct rr_servo_limits *pulse);
+/* Sets a limit to a value that was not refused. At most RR_LIMITS_SET_MAX in a tick; one place counts once. */
+void rr_limits_set(struct rr_limits *limits, uint8_t place, int32_t value);
+
+/* Puts in force what has been set. */
+void rr_limits_enforce(struct rr_limits *limits);
+
+/* The digest is made a limit at a time: true while it is not whole yet. */
+bool rr_limits_digest_step(struct rr_limits *limits);
 
 #endif

@@ -73,6 +73,11 @@ static enum rr_line_kind judged(struct rr_line *line, uint8_t length)
     return RR_LINE_REQUEST;
 }
 
+const char *rr_line_body(const struct rr_line *line)
+{
+    return line->body > 2 ? line->text + 3 : line->text + 2;
+}
+
 enum rr_line_kind rr_line_take(struct rr_line *line, uint8_t byte)
 {
     if (byte != '\n') {

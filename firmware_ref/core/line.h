@@ -24,6 +24,9 @@ struct rr_line {
     uint32_t overlong;
 };
 
+/* The body of a whole request after its tag and space. */
+const char *rr_line_body(const struct rr_line *line);
+
 /* Takes one byte and says what it ended. The text stays whole until the next call. */
 enum rr_line_kind rr_line_take(struct rr_line *line, uint8_t byte);
 

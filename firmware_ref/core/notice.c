@@ -1,4 +1,4 @@
-/* Notices: what happened in a tick, told at its end, and the words that answers share with them (SPEC section 14). */
+/* Notices: what happened, told in order, and the words that answers share with them (SPEC section 14). */
 #include "device.h"
 
 struct name {
@@ -8,103 +8,133 @@ struct name {
 #define NAME2(NAME, word) {word},
 #define NAME3(NAME, word, number) {word},
 #define NAME4(NAME, word, number, category) {word},
-static const struct name notice_names[] = {RR_NOTICE_LIST(NAME2)};
-static const struct name state_names[] = {RR_STATE_LIST(NAME3)};
-static const struct name source_names[] = {RR_SOURCE_LIST(NAME3)};
-static const struct name cause_names[] = {RR_CAUSE_LIST(NAME3)};
-static const struct name trip_names[] = {RR_TRIP_LIST(NAME4)};
+static const RR_FLASH struct name notice_names[] = {RR_NOTICE_LIST(NAME2)};
+static const RR_FLASH struct name state_names[] = {RR_STATE_LIST(NAME3)};
+static const RR_FLASH struct name source_names[] = {RR_SOURCE_LIST(NAME3)};
+static const RR_FLASH struct name cause_names[] = {RR_CAUSE_LIST(NAME3)};
+static const RR_FLASH struct name trip_names[] = {RR_TRIP_LIST(NAME4)};
 
-/* No notice but `who` is longer: number, word, tick and three signed numbers, with the check. */
-#define NOTICE_LONGEST 80u
-
-const char *rr_state_word(uint8_t state)
+const RR_FLASH char *rr_state_word(uint8_t state)
 {
     return state_names[state].text;
 }
 
-const char *rr_trip_word(uint8_t trip)
+const RR_FLASH char *rr_trip_word(uint8_t trip)
 {
     return trip_names[trip].text;
 }
 
-void rr_notice_identity(const struct rr_device *device, struct rr_out *out)
+/* Field 0 is the protocol's version; the rest as `who` lists them. */
+bool rr_notice_identity_field(struct rr_device *device, uint8_t field)
 {
-    rr_out_u32(out, RR_VERSION);
-    rr_out_word(out, device->port->firmware);
-    rr_out_word(out, device->port->board);
-    rr_out_word(out, device->port->serial);
-    rr_out_u32(out, device->boot);
-    rr_out_u32(out, RR_TICK_US);
-    rr_out_u32(out, RR_AXES);
-    rr_out_u32(out, RR_SERVOS);
-    rr_out_u32(out, RR_MAX_DUTY);
-    rr_out_u32(out, RR_QUEUE);
-    rr_out_u32(out, RR_TRAIL);
-    rr_out_u32(out, RR_KEEP);
-    rr_out_u32(out, RR_CAPS);
-}
-
-static void send_one(struct rr_device *device, const struct rr_happened *happened)
-{
-    struct rr_out out;
-    rr_out_begin(&out, device->port, device->self, NULL,
-                 happened->kind == RR_NOTICE_WHO ? RR_DEVICE_LINE_MAX : NOTICE_LONGEST);
-    rr_out_char(&out, 'N');
-    rr_out_hex2(&out, device->notices.number++);
-    rr_out_word(&out, notice_names[happened->kind].text);
-    rr_out_u32(&out, device->tick);
-    switch (happened->kind) {
-    case RR_NOTICE_BOOT:
-        rr_out_u32(&out, device->boot);
-        rr_out_word(&out, cause_names[happened->index].text);
-        break;
-    case RR_NOTICE_WHO:
-        rr_notice_identity(device, &out);
-        break;
-    case RR_NOTICE_STOP:
-        rr_out_u32(&out, (uint32_t)happened->value);
-        rr_out_word(&out, source_names[happened->index].text);
-        break;
-    case RR_NOTICE_OFF:
-        rr_out_word(&out, rr_state_word(happened->index));
-        break;
-    case RR_NOTICE_TRIP:
-        rr_out_word(&out, rr_trip_word((uint8_t)device->last_trip.trip));
-        rr_out_u32(&out, happened->index);
-        rr_out_i32(&out, happened->value);
-        rr_out_i32(&out, happened->bound);
-        break;
-    case RR_NOTICE_DONE:
-        rr_out_char(&out, ' ');
-        rr_out_hex2(&out, happened->index);
-        break;
-    case RR_NOTICE_DWELL:
-        rr_out_u32(&out, happened->index);
-        rr_out_u32(&out, (uint32_t)happened->value);
-        break;
+    static const RR_FLASH uint32_t sizes[] = {RR_TICK_US, RR_AXES, RR_SERVOS, RR_MAX_DUTY,
+                                              RR_QUEUE,   RR_TRAIL, RR_KEEP,  RR_CAPS};
+    switch (field) {
+    case 0:
+        rr_voice_u32(&device->voice, RR_VERSION);
+        return true;
+    case 1:
+        rr_voice_word(&device->voice, device->port->firmware);
+        return true;
+    case 2:
+        rr_voice_word(&device->voice, device->port->board);
+        return true;
+    case 3:
+        rr_voice_word(&device->voice, device->port->serial);
+        return true;
+    case 4:
+        rr_voice_u32(&device->voice, device->boot);
+        return true;
     default:
-        rr_out_u32(&out, (uint32_t)happened->value);
-        break;
+        if (field - 5u < sizeof sizes / sizeof sizes[0]) {
+            rr_voice_u32(&device->voice, sizes[field - 5u]);
+            return true;
+        }
+        return false;
     }
-    (void)rr_out_end(&out);
 }
 
-void rr_notice_send(struct rr_device *device)
+/* How many fields a notice has after its tick; `who` knows itself. */
+static const RR_FLASH uint8_t own_fields[] = {
+    [RR_NOTICE_BOOT] = 2, [RR_NOTICE_WHO] = 13, [RR_NOTICE_STOP] = 2,  [RR_NOTICE_OFF] = 1,
+    [RR_NOTICE_TRIP] = 4, [RR_NOTICE_DONE] = 1, [RR_NOTICE_DWELL] = 2, [RR_NOTICE_GARBLED] = 1,
+};
+_Static_assert(sizeof own_fields == RR_NOTICE_COUNT, "one row a notice");
+
+/* The fields after word and tick, counted from 0. */
+static bool own_field(struct rr_device *device, const struct rr_happened *happened, uint8_t field)
 {
-    for (uint8_t i = 0; i < device->notices.count; i++) {
-        send_one(device, &device->notices.happened[i]);
+    struct rr_voice *voice = &device->voice;
+    if (field >= own_fields[happened->kind]) {
+        return false;
     }
-    device->notices.count = 0;
+    switch (happened->kind) {
+    case RR_NOTICE_WHO:
+        return rr_notice_identity_field(device, field);
+    case RR_NOTICE_OFF:
+        rr_voice_word(voice, rr_state_word(happened->index));
+        return true;
+    case RR_NOTICE_DONE:
+        rr_voice_hex2(voice, ' ', happened->index);
+        return true;
+    default:
+        break;
+    }
+    if (field == 1 && happened->kind == RR_NOTICE_BOOT) {
+        rr_voice_word(voice, cause_names[happened->index].text);
+    } else if (field == 1 && happened->kind == RR_NOTICE_STOP) {
+        rr_voice_word(voice, source_names[happened->index].text);
+    } else if (field == 0 && happened->kind == RR_NOTICE_TRIP) {
+        rr_voice_word(voice, rr_trip_word(happened->index >> 4));
+    } else if (field == 1 && happened->kind == RR_NOTICE_TRIP) {
+        rr_voice_u32(voice, happened->index & 0xFu);
+    } else if (field == 0 && happened->kind == RR_NOTICE_BOOT) {
+        rr_voice_u32(voice, device->boot);
+    } else if (field == 0 && happened->kind == RR_NOTICE_DWELL) {
+        rr_voice_u32(voice, happened->index);
+    } else {
+        rr_voice_i32(voice, field == 3 ? happened->bound : happened->value);
+    }
+    return true;
+}
+
+bool rr_notice_field(struct rr_device *device, uint8_t field)
+{
+    const struct rr_happened *happened = &device->notices.happened[device->notices.first];
+    switch (field) {
+    case 0:
+        rr_voice_hex2(&device->voice, 'N', happened->number);
+        return true;
+    case 1:
+        rr_voice_word(&device->voice, notice_names[happened->kind].text);
+        return true;
+    case 2:
+        rr_voice_u32(&device->voice, device->tick - (uint16_t)((uint16_t)device->tick - happened->tick_low));
+        return true;
+    default:
+        return own_field(device, happened, (uint8_t)(field - 3u));
+    }
 }
 
 void rr_notice_push(struct rr_device *device, uint8_t kind, uint8_t index, int32_t value, int32_t bound)
 {
-    if (device->notices.count == RR_NOTICES) {
-        rr_notice_send(device); /* a flood of requests in one tick: early, but none is lost */
+    struct rr_notices *notices = &device->notices;
+    uint8_t number = notices->number++;
+    bool taking = device->taking;
+    device->taking = false;
+    while (notices->count == RR_NOTICES && rr_device_say(device)) { /* a flood in one tick: told early */
     }
-    struct rr_happened *happened = &device->notices.happened[device->notices.count++];
+    device->taking = taking;
+    if (notices->count == RR_NOTICES) {
+        return; /* no room: the host sees by the number that one is missing */
+    }
+    uint8_t place = (uint8_t)(notices->first + notices->count);
+    struct rr_happened *happened = &notices->happened[place >= RR_NOTICES ? place - RR_NOTICES : place];
+    notices->count++;
     happened->kind = kind;
     happened->index = index;
     happened->value = value;
     happened->bound = bound;
+    happened->number = number;
+    happened->tick_low = (uint16_t)device->tick;
 }

@@ -25,18 +25,17 @@ bool rr_orders_take_due(struct rr_orders *orders, uint32_t now, struct rr_order 
     return true;
 }
 
-void rr_glide_begin(struct rr_glide *glide, const struct rr_order *order)
+void rr_glide_begin(struct rr_glide *glide, const struct rr_order *order, int32_t goal)
 {
-    uint32_t way = order->value >= glide->value ? (uint32_t)(order->value - glide->value)
-                                                : (uint32_t)(glide->value - order->value);
-    glide->goal = order->value;
+    uint32_t way = goal >= glide->value ? (uint32_t)(goal - glide->value) : (uint32_t)(glide->value - goal);
+    glide->goal = goal;
     glide->ticks = order->ticks;
     glide->left = order->ticks;
     glide->sum = 0;
     glide->tag = order->tag;
     glide->pending = true;
     if (order->ticks == 0) {
-        glide->value = order->value;
+        glide->value = goal;
         return;
     }
     glide->whole = way / order->ticks; /* once an order, not once a tick */

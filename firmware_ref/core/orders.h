@@ -12,9 +12,8 @@ enum rr_order_kind { RR_ORDER_RAMP, RR_ORDER_SWING, RR_ORDER_REST };
 struct rr_order {
     uint32_t start;
     uint32_t ticks;
-    int32_t value; /* duty; pulse in ns; mode */
-    uint8_t kind;
-    uint8_t index;
+    int16_t value; /* duty; pulse in us; mode */
+    uint8_t kind_index; /* index to the low four bits, kind above */
     uint8_t tag;
 };
 
@@ -43,8 +42,8 @@ struct rr_glide {
     bool pending;   /* its `done` has not been sent */
 };
 
-/* Begins a glide from the present value at this tick (k = 0). */
-void rr_glide_begin(struct rr_glide *glide, const struct rr_order *order);
+/* Begins an order's glide from the present value to `goal` at this tick (k = 0). */
+void rr_glide_begin(struct rr_glide *glide, const struct rr_order *order, int32_t goal);
 
 /* Moves the glide on by one tick. */
 void rr_glide_step(struct rr_glide *glide);

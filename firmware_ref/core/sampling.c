@@ -1,4 +1,4 @@
-/* Samples on their way to the host: log, again, trail (SPEC LOG-1 to LOG-5, TRAIL-2, DATA-1, DATA-9). */
+/* Samples on their way to the host: log, again (SPEC LOG-1 to LOG-5, DATA-1, DATA-9). */
 #include "device.h"
 
 #define STATE_BIT  18u
@@ -31,119 +31,113 @@ bool rr_sampling_mask_fits(uint32_t mask)
     return (mask & ~fitted) == 0;
 }
 
-static int32_t value_of(const struct rr_device *device, uint8_t bit)
+/* The values of the channels in the mask, in order of their bits; returns how many. */
+static uint8_t gather(const struct rr_device *device, uint32_t mask, int32_t *values)
 {
-    if (bit == SUPPLY_BIT) {
-        return device->inputs.supply_mv;
-    }
-    if (bit == TEMPERATURE_BIT) {
-        return device->inputs.temperature_dc;
-    }
-    if (bit == STATE_BIT) {
-        return rr_sampling_state_bits(device);
+    int32_t *next = values;
+    uint16_t bits = (uint16_t)mask; /* axes and servos; the others lie above */
+    for (uint8_t i = 0; i < RR_AXES; i++) {
+        if ((bits & 1u) != 0) {
+            *next++ = device->axis[i].chain.duty;
+        }
+        if ((bits & 2u) != 0) {
+            *next++ = device->inputs.counts[i];
+        }
+        if ((bits & 4u) != 0) {
+            *next++ = device->inputs.current_ma[i];
+        }
+        bits = (uint16_t)(bits >> 3);
     }
 #if RR_SERVOS > 0
-    if (bit >= SERVO_BIT) {
-        return device->servo[bit - SERVO_BIT].pulse_ns / 1000;
+    bits = (uint16_t)mask >> SERVO_BIT;
+    for (uint8_t i = 0; i < RR_SERVOS; i++) {
+        if ((bits >> i & 1u) != 0) {
+            *next++ = device->servo[i].pulse_ns / 1000;
+        }
     }
 #endif
-    uint8_t axis = (uint8_t)(bit / 3u);
-    switch (bit % 3u) {
-    case 0:
-        return device->axis[axis].chain.duty;
-    case 1:
-        return device->inputs.counts[axis];
-    default:
-        return device->inputs.current_ma[axis];
+    if ((mask & (uint32_t)1 << SUPPLY_BIT) != 0) {
+        *next++ = device->inputs.supply_mv;
     }
+    if ((mask & (uint32_t)1 << TEMPERATURE_BIT) != 0) {
+        *next++ = device->inputs.temperature_dc;
+    }
+    if ((mask & (uint32_t)1 << STATE_BIT) != 0) {
+        *next++ = rr_sampling_state_bits(device);
+    }
+    return (uint8_t)(next - values);
 }
 
-#if RR_KEEP > 0
-static char *place_to_keep(struct rr_logging *logging, uint8_t number)
+static uint8_t after(uint8_t place)
 {
-    if (logging->kept_count < RR_KEEP) {
-        logging->kept_count++;
-    }
-    return logging->kept[number % RR_KEEP];
-}
-#endif
-
-/* Begins a data line; a copy is kept for `again`. */
-static void begin_line(struct rr_device *device, struct rr_out *out)
-{
-    char *copy = NULL;
-#if RR_KEEP > 0
-    copy = place_to_keep(&device->logging, device->logging.number);
-#endif
-    rr_out_begin(out, device->port, device->self, copy, RR_DEVICE_LINE_MAX);
-    rr_out_char(out, 'D');
-    rr_out_hex2(out, device->logging.number);
+    return place + 1u == RR_PARCELS ? 0 : (uint8_t)(place + 1u);
 }
 
-static void end_line(struct rr_device *device, struct rr_out *out, uint8_t samples)
+/* Ends the parcel that is being filled: it is to be said, or dropped whole (KIND-4), and kept either way. */
+static void post(struct rr_device *device, uint8_t length, uint8_t samples)
 {
     struct rr_logging *logging = &device->logging;
-    uint8_t length = rr_out_end(out);
-#if RR_KEEP > 0
-    logging->kept_length[logging->number % RR_KEEP] = length;
-#else
-    (void)length;
-#endif
-    logging->number++;
-    if (out->mute) {
+    struct rr_parcel *parcel = &logging->parcel[logging->filling];
+    parcel->length = length;
+    parcel->number = logging->number++;
+    bool no_room = !RR_SPREAD && device->port->room(device->self) < RR_DEVICE_LINE_MAX;
+    if (logging->waiting || no_room) {
         logging->dropped_ever += samples;
+    } else {
+        logging->saying = logging->filling;
+        logging->waiting = true;
     }
+    if (logging->waiting && after(logging->filling) == logging->saying) {
+        logging->kept_count = 0; /* a line is being said from the next parcel: this one is written over */
+        return;
+    }
+    logging->filling = after(logging->filling);
+    logging->kept_count = (uint8_t)(logging->kept_count == RR_KEEP ? RR_KEEP : logging->kept_count + 1u);
 }
 
-static void send_block(struct rr_device *device)
+static void place_block(struct rr_logging *logging)
+{
+    rr_block_place(&logging->block, logging->parcel[logging->filling].u.bytes, RR_PAYLOAD);
+}
+
+static void post_block(struct rr_device *device)
 {
     struct rr_block *block = &device->logging.block;
     uint8_t samples = block->samples;
     if (samples == 0) {
         return;
     }
-    uint8_t length = rr_block_close(block);
-    struct rr_out out;
-    begin_line(device, &out);
-    rr_out_char(&out, ' ');
-    for (uint8_t i = 0; i < length; i++) {
-        rr_out_char(&out, block->payload[i]);
-    }
-    end_line(device, &out, samples);
+    post(device, rr_block_close(block), samples);
+    place_block(&device->logging);
 }
 
-static void send_plain(struct rr_device *device)
+static void post_plain(struct rr_device *device)
 {
-    const struct rr_logging *logging = &device->logging;
-    struct rr_out out;
-    begin_line(device, &out);
-    rr_out_u32(&out, device->tick);
-    rr_out_u32(&out, logging->period);
-    rr_out_u32(&out, logging->mask);
-    for (uint8_t bit = 0; bit < 20; bit++) {
-        if ((logging->mask >> bit & 1u) != 0) {
-            rr_out_i32(&out, rr_block_held(bit, value_of(device, bit)));
-        }
-    }
-    end_line(device, &out, 1);
+    struct rr_logging *logging = &device->logging;
+    struct rr_parcel *parcel = &logging->parcel[logging->filling];
+    parcel->u.plain.tick = device->tick;
+    parcel->u.plain.mask = logging->mask;
+    parcel->u.plain.period = logging->period;
+    (void)gather(device, logging->mask, parcel->u.plain.value);
+    post(device, 0, 1);
 }
 
 uint32_t rr_sampling_change(struct rr_device *device, uint16_t period, uint32_t mask, uint8_t form)
 {
     struct rr_logging *logging = &device->logging;
-    send_block(device);
+    post_block(device);
+    logging->goes_first = logging->waiting;
     uint32_t made = logging->made;
     logging->made = 0;
     logging->period = period;
     logging->mask = mask;
     logging->form = form;
     logging->next_tick = device->tick + 1u;
-#if RR_KEEP > 0
     if (period != 0) { /* after `log 0` the lines stay kept: a host asks for those lost at the end */
         logging->kept_count = 0;
     }
-#endif
-    rr_block_prepare(&logging->block, mask, period, logging->payload, RR_PAYLOAD_MAX);
+    rr_block_prepare(&logging->block, mask, period, logging->channel);
+    place_block(logging);
     return made;
 }
 
@@ -154,18 +148,14 @@ static void sample(struct rr_device *device)
     logging->made_ever++;
     logging->next_tick += logging->period;
     if (logging->form == RR_FORM_PLAIN) {
-        send_plain(device);
+        post_plain(device);
         return;
     }
     int32_t values[RR_CHANNELS];
-    uint8_t channels = 0;
-    for (uint8_t bit = 0; bit < 20; bit++) {
-        if ((logging->mask >> bit & 1u) != 0) {
-            values[channels++] = value_of(device, bit);
-        }
-    }
+    (void)gather(device, logging->mask, values);
     if (!rr_block_add(&logging->block, device->tick, values)) {
-        send_block(device);
+        post_block(device);
+        (void)gather(device, logging->mask, values);
         (void)rr_block_add(&logging->block, device->tick, values);
     }
 }
@@ -182,53 +172,59 @@ void rr_sampling_tick(struct rr_device *device)
     const struct rr_block *block = &logging->block;
     if (block->samples == RR_BLOCK_SAMPLES_MAX ||
         (block->samples != 0 && device->tick - block->first_tick >= RR_FLUSH_TICKS)) {
-        send_block(device);
+        post_block(device);
     }
 }
 
-bool rr_sampling_again(const struct rr_device *device, uint8_t number)
+bool rr_sampling_again(struct rr_device *device, uint8_t number)
 {
-#if RR_KEEP > 0
-    uint8_t age = (uint8_t)(device->logging.number - number); /* 1 = the last */
-    return age >= 1 && age <= device->logging.kept_count;
-#else
-    (void)device;
-    (void)number;
-    return false;
-#endif
+    struct rr_logging *logging = &device->logging;
+    uint8_t age = (uint8_t)(logging->number - number); /* 1 = the last */
+    if (age < 1 || age > logging->kept_count) {
+        return false;
+    }
+    uint8_t place = (uint8_t)(logging->filling + RR_PARCELS - age);
+    logging->again = place >= RR_PARCELS ? (uint8_t)(place - RR_PARCELS) : place;
+    logging->again_waiting = true;
+    return true;
 }
 
-void rr_sampling_send_again(struct rr_device *device, uint8_t number)
+/* Field `number` of a plain line's values: the bit it stands for is found by counting. */
+static bool plain_value(struct rr_device *device, const struct rr_parcel *parcel, uint8_t number)
 {
-#if RR_KEEP > 0
-    const struct rr_logging *logging = &device->logging;
-    uint8_t length = logging->kept_length[number % RR_KEEP];
-    if (device->port->room(device->self) >= length) {
-        device->port->write(device->self, logging->kept[number % RR_KEEP], length);
-    }
-#else
-    (void)device;
-    (void)number;
-#endif
-}
-
-uint8_t rr_sampling_trail(struct rr_device *device, uint8_t axis, uint32_t first, char *payload)
-{
-    const struct rr_trail *trail = &device->trail;
-    if (trail->phase != RR_TRAIL_FROZEN || first >= trail->held) {
-        return 0;
-    }
-    struct rr_block block;
-    rr_block_prepare(&block, (uint32_t)7 << (3 * axis) | (uint32_t)1 << SUPPLY_BIT | (uint32_t)1 << STATE_BIT, 1,
-                     payload, RR_TRAIL_PAYLOAD_MAX);
-    for (uint16_t i = (uint16_t)first; i < trail->held; i++) {
-        uint32_t tick;
-        const struct rr_record *record = rr_trail_get(trail, i, &tick);
-        int32_t values[] = {record->duty[axis], record->counts[axis], record->current_ma[axis], record->supply_mv,
-                            record->bits};
-        if (!rr_block_add(&block, tick, values)) {
-            break;
+    uint32_t mask = parcel->u.plain.mask;
+    uint8_t passed = 0;
+    for (uint8_t bit = 0; mask != 0; bit++, mask >>= 1) {
+        if ((mask & 1u) != 0 && passed++ == number) {
+            rr_voice_i32(&device->voice, rr_block_held(bit, parcel->u.plain.value[number]));
+            return true;
         }
     }
-    return rr_block_close(&block);
+    return false;
+}
+
+bool rr_sampling_field(struct rr_device *device, const struct rr_parcel *parcel, uint8_t field)
+{
+    struct rr_voice *voice = &device->voice;
+    if (field == 0) {
+        rr_voice_hex2(voice, 'D', parcel->number);
+        return true;
+    }
+    if (parcel->length != 0) {
+        rr_voice_bits(voice, parcel->u.bytes, parcel->length);
+        return field == 1;
+    }
+    switch (field) {
+    case 1:
+        rr_voice_u32(voice, parcel->u.plain.tick);
+        return true;
+    case 2:
+        rr_voice_u32(voice, parcel->u.plain.period);
+        return true;
+    case 3:
+        rr_voice_u32(voice, parcel->u.plain.mask);
+        return true;
+    default:
+        return plain_value(device, parcel, (uint8_t)(field - 4u));
+    }
 }

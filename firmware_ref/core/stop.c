@@ -3,7 +3,7 @@
 
 static void end_orders(struct rr_device *device)
 {
-    device->orders.count = 0;
+    device->u.orders.count = 0;
     for (uint8_t i = 0; i < RR_AXES; i++) {
         rr_glide_end(&device->axis[i].demand, 0);
     }
@@ -51,7 +51,8 @@ void rr_stop_trip(struct rr_device *device, const struct rr_finding *finding)
     device->last_trip = *finding;
     device->last_trip_tick = device->tick;
     rr_trail_trip(&device->trail);
-    rr_notice_push(device, RR_NOTICE_TRIP, finding->index, finding->value, finding->bound);
+    rr_notice_push(device, RR_NOTICE_TRIP, (uint8_t)(finding->trip << 4 | finding->index), finding->value,
+                   finding->bound);
     if (rr_latch_category(finding->trip) == 0) {
         rr_stop_off(device);
     } else {

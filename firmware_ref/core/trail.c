@@ -44,3 +44,12 @@ const struct rr_record *rr_trail_get(const struct rr_trail *trail, uint16_t inde
     *tick = trail->last_tick - (uint32_t)(trail->held - 1u - index);
     return &trail->record[place];
 }
+
+int32_t rr_trail_counts(const struct rr_trail *trail, const struct rr_record *record, uint8_t axis)
+{
+    uint32_t last = (uint32_t)trail->last_counts[axis];
+    RR_TRAIL_COUNTS back = (RR_TRAIL_COUNTS)((RR_TRAIL_COUNTS)last - record->counts[axis]);
+    bool turned_up = back <= (RR_TRAIL_COUNTS)((RR_TRAIL_COUNTS)~(RR_TRAIL_COUNTS)0 >> 1);
+    uint32_t ahead = (uint32_t)(RR_TRAIL_COUNTS)(record->counts[axis] - (RR_TRAIL_COUNTS)last);
+    return (int32_t)(turned_up ? last - back : last + ahead);
+}

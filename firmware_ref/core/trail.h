@@ -8,9 +8,9 @@
 #include <stdint.h>
 
 struct rr_record {
-    int32_t counts[RR_AXES];
-    int32_t current_ma[RR_AXES];
-    int32_t supply_mv;
+    RR_TRAIL_COUNTS counts[RR_AXES]; /* the low bits: see `rr_trail_counts` */
+    RR_TRAIL_CURRENT current_ma[RR_AXES];
+    RR_TRAIL_SUPPLY supply_mv;
     int16_t duty[RR_AXES];
     uint16_t bits; /* state bits */
 };
@@ -19,10 +19,11 @@ enum rr_trail_phase { RR_TRAIL_RUNNING, RR_TRAIL_ENDING, RR_TRAIL_FROZEN };
 
 struct rr_trail {
     struct rr_record record[RR_TRAIL];
-    uint16_t next;      /* where the next record goes */
-    uint16_t held;      /* records in the ring */
-    uint16_t to_go;     /* records still to take before it freezes */
-    uint32_t last_tick; /* of the newest record */
+    uint16_t next;                /* where the next record goes */
+    uint16_t held;                /* records in the ring */
+    uint16_t to_go;               /* records still to take before it freezes */
+    uint32_t last_tick;           /* of the newest record */
+    int32_t last_counts[RR_AXES]; /* of the newest record, whole */
     uint8_t phase;
 };
 
@@ -35,10 +36,13 @@ void rr_trail_trip(struct rr_trail *trail);
 /* True where a record of this tick is wanted. */
 bool rr_trail_wants(const struct rr_trail *trail, bool live);
 
-/* The place for this tick's record, to be filled in by the caller. */
+/* The place for this tick's record, to be filled in by the caller, `last_counts` too. */
 struct rr_record *rr_trail_add(struct rr_trail *trail, uint32_t tick);
 
 /* Record `index` of a frozen trail, 0 = oldest; its tick by `tick`. */
 const struct rr_record *rr_trail_get(const struct rr_trail *trail, uint16_t index, uint32_t *tick);
+
+/* A record's whole counts, from its low bits and the newest record's counts. */
+int32_t rr_trail_counts(const struct rr_trail *trail, const struct rr_record *record, uint8_t axis);
 
 #endif
