@@ -24,6 +24,7 @@ COMMANDS = {
     "mock": "serve a board in software on a pseudo-terminal or a TCP port",
     "ports": "list the serial ports, and how to name each in a bench file",
     "read": "tell how a run ended, and check its account of every sample",
+    "doctor": "find out why a bench cannot be reached, or how well it is",
     "schema": "print the JSON Schema of bench or sequence files, for editors",
 }
 """Every command is a module of this room by the same name."""
