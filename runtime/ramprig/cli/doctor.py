@@ -6,7 +6,7 @@ import argparse
 import os
 import sys
 from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from enum import Enum
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -88,8 +88,7 @@ def _told(found: Found) -> int:
 def _look_at_bench(path: Path, url: str | None) -> int:
     from ramprig.bench import load_bench
     from ramprig.cli.running import Way, mock_url, open_port_for
-    from ramprig.sequence.running import wanted_of
-    from ramprig.session import Session
+    from ramprig.session import Session, Wanted
 
     bench = load_bench(path)
     url = bench.port.url if url is None else url
@@ -97,8 +96,9 @@ def _look_at_bench(path: Path, url: str | None) -> int:
         url = mock_url(url, path)
     try:
         port = open_port_for(Way(url=url, virtual=False, runs=None), bench)
-        wanted = replace(wanted_of(bench), limits={})  # a look changes nothing
-        with Session.open(port, wanted=wanted) as session:
+        board = bench.board
+        wanted = Wanted(board=board.name, serial=board.serial, axes=bench.axes, servos=bench.channels)
+        with Session.open(port, wanted=wanted) as session:  # without limits: a look changes nothing
             return max([_told(found) for found in link_findings(session, bench)])
     except RamprigError as error:
         _told(Found(Grade.BAD, str(error)))
