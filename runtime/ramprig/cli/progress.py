@@ -87,6 +87,7 @@ def _is_terminal(stream: TextIO) -> bool:
 
 def _width(stream: TextIO) -> int:
     try:
-        return os.get_terminal_size(stream.fileno()).columns
+        columns = os.get_terminal_size(stream.fileno()).columns
     except (OSError, ValueError):
         return WIDTH_DEFAULT
+    return columns or WIDTH_DEFAULT  # a terminal that was never told its size says 0
