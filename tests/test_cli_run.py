@@ -254,8 +254,9 @@ def test_the_same_seed_gives_the_same_samples(here: Path) -> None:
     assert one.read_bytes() == two.read_bytes()
 
 
-def test_a_title_names_the_run(here: Path) -> None:
+def test_a_title_names_the_run_whose_folder_is_told_first(here: Path, capsys: pytest.CaptureFixture[str]) -> None:
     assert main(["run", "short.yaml", "--port", "mock:?pace=virtual", "--title", "Vent 7, worn"]) == 0
+    assert capsys.readouterr().err.splitlines()[0] == f"recording to {only_run()}"
     assert "vent-7-worn" in only_run().name
     assert json.loads((only_run() / "run.json").read_text("utf-8"))["name"] == "Vent 7, worn"
 

@@ -113,6 +113,7 @@ def carry_out_run(pair: Pair, way: Way) -> int:
             progress=lambda far: progress.show(lambda: how_far(far)),
             guard=guard,
             asked_by=lambda: ", ".join(name for signals in watch for name in signals.received),
+            began=None if way.virtual else lambda folder: progress.line(f"recording to {folder}"),
         )
     except RamprigError:
         raise

@@ -83,11 +83,12 @@ def run_sequence(
     progress: Callable[[Progress], None] | None = None,
     guard: Callable[[Session], AbstractContextManager[object]] | None = None,
     asked_by: Callable[[], str] | None = None,
+    began: Callable[[Path], None] | None = None,
 ) -> RunResult:
     """Run a sequence on a port, which is closed at the end; tells how it ended.
 
     `guard` is entered while the device is open, such as `StopOnSignals`; `asked_by` tells who asked for a stop, where
-    one was asked for. Raises what opening the device raises
+    one was asked for; `began` is told of the run folder before anything moves. Raises what opening the device raises
     (LinkError and its kin), `FileError` where the plan does not fit the board, RecordError where the run folder cannot
     be made; in each case nothing has moved.
     """
@@ -109,6 +110,7 @@ def run_sequence(
             listeners=listeners,
             progress=progress,
             asked_by=asked_by,
+            began=began,
         )
 
 
@@ -121,6 +123,7 @@ def run_on_session(
     listeners: Listeners,
     progress: Callable[[Progress], None] | None = None,
     asked_by: Callable[[], str] | None = None,
+    began: Callable[[Path], None] | None = None,
 ) -> RunResult:
     """Run a sequence on a session that is open with this bench's limits and disarmed, such as a shell's; it stays open.
 
@@ -134,6 +137,8 @@ def run_on_session(
         return RunResult(outcome=_explained(outcome, [], asked_by), folder=None)
     troubles: list[Trouble] = []
     with _recording(wish, session, wish.runs, clock, port_name, listeners, troubles) as recorder:
+        if began is not None:
+            began(recorder.folder.path)
         outcome = run_plan(session, plan, rig, clock=clock, listeners=listeners, keeper=recorder, progress=progress)
         outcome = _explained(outcome, troubles, asked_by)
         folder = recorder.finish(_end_of(session, plan, outcome, clock))
