@@ -14,7 +14,7 @@ from functools import cache
 from pathlib import Path
 
 from ramprig_link.check import seal
-from ramprig_link.words import LIMITS, Cause
+from ramprig_link.words import LIMITS, Cap, Cause
 from scripted_device import TICKS, CountsRule, Device, InputsScript, Rule, bodies
 
 FIRMWARE = Path(__file__).resolve().parent.parent / "firmware_ref"
@@ -81,8 +81,11 @@ def inputs_type(axes: int) -> type[ctypes.Structure]:
 class CoreDevice:
     """One board from its start; `step` carries out the next tick and returns the bodies of the lines it made."""
 
+    build_options: tuple[str, ...] = ()
+    """Options besides the board's sizes: a subclass has another build, such as one with a seeded bug."""
+
     def __init__(self, device: Device, limits: Mapping[str, int], inputs: InputsScript) -> None:
-        self._core = library(defines(device))
+        self._core = library((*defines(device), *self.build_options))
         names = [device[name].encode("ascii") for name in ("firmware", "board", "serial")]
         self._self = self._core.scripted_new(*names)
         self._axes = device["axes"]
@@ -91,8 +94,8 @@ class CoreDevice:
         assert cause is not None
         self._core.scripted_start(self._self, int(cause), device["self_test"])
         self._inputs = inputs_type(self._axes).from_address(self._core.scripted_inputs(self._self))
-        self._inputs.supply_mv = 12_000
-        self._inputs.temperature_dc = 250
+        self._caps = Cap(device["caps"])
+        self._measured({"supply_mv": 12_000, "temperature_dc": 250})
         self.tick = device["start_tick"]
         self._rules = [CountsRule({"rule": "still"}, 0) for _ in range(self._axes)]
         self.change(inputs)
@@ -114,10 +117,17 @@ class CoreDevice:
         for axis, rule in enumerate(inputs.get("counts", [])):
             given: Rule = {"rule": "still", "at": rule} if isinstance(rule, int) else rule
             self._rules[axis] = CountsRule(given, self._inputs.counts[axis])
-        for axis, current_ma in enumerate(inputs.get("current_ma", [])):
-            self._inputs.current_ma[axis] = current_ma
-        self._inputs.supply_mv = inputs.get("supply_mv", self._inputs.supply_mv)
-        self._inputs.temperature_dc = inputs.get("temperature_dc", self._inputs.temperature_dc)
+        self._measured(inputs)
+
+    def _measured(self, inputs: InputsScript) -> None:
+        """Set what the board can measure; a port gives 0 for the rest."""
+        if Cap.CURRENT in self._caps:
+            for axis, current_ma in enumerate(inputs.get("current_ma", [])):
+                self._inputs.current_ma[axis] = current_ma
+        if Cap.SUPPLY in self._caps:
+            self._inputs.supply_mv = inputs.get("supply_mv", self._inputs.supply_mv)
+        if Cap.TEMPERATURE in self._caps:
+            self._inputs.temperature_dc = inputs.get("temperature_dc", self._inputs.temperature_dc)
 
     def send(self, body: str) -> None:
         """Have a line arrive with its right check."""
@@ -137,7 +147,8 @@ class CoreDevice:
     def step(self) -> list[str]:
         """Carry out one tick; the lines it made, checks verified and taken off."""
         for axis, rule in enumerate(self._rules):
-            self._inputs.counts[axis] = rule.next(self._core.scripted_duty(self._self, axis))
+            counts = rule.next(self._core.scripted_duty(self._self, axis))
+            self._inputs.counts[axis] = counts if Cap.ENCODER in self._caps else 0
         self.tick = self._core.scripted_tick(self._self) % TICKS
         length = ctypes.c_uint32()
         start = self._core.scripted_take(self._self, ctypes.byref(length))

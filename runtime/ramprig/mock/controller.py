@@ -294,7 +294,7 @@ class Controller:
         if trip is Trip.OVERLOAD:
             return self.watches[index].heat.still_hot
         if trip in (Trip.OVERVOLTAGE, Trip.UNDERVOLTAGE):
-            return self.supply.beyond is trip
+            return self.supply.beyond(trip)
         return trip is Trip.SELF_TEST
 
     # ---- states ----------------------------------------------------------------------------------------------------

@@ -257,9 +257,6 @@ class SupplyWatch:
         if self._low_ticks >= self._ticks:
             self._found.append(Finding(Trip.UNDERVOLTAGE, 0, supply_mv, self.under_mv))
 
-    @property
-    def beyond(self) -> Trip:
-        """The trip whose bound the voltage is beyond now, NONE where it is within both."""
-        if self.supply_mv > self.over_mv:
-            return Trip.OVERVOLTAGE
-        return Trip.UNDERVOLTAGE if self.supply_mv < self.under_mv else Trip.NONE
+    def beyond(self, trip: Trip) -> bool:
+        """Whether the voltage is beyond the bound of this trip now; it can be beyond both, where they are crossed."""
+        return self.supply_mv > self.over_mv if trip is Trip.OVERVOLTAGE else self.supply_mv < self.under_mv
