@@ -14,7 +14,7 @@ CODEC = ROOT / "protocol" / "ramprig_link"
 
 ROOMS_FROM_THE_TOP = [
     *("cli", "shell", "report", "measure", "endure", "sequence", "record", "session"),
-    *("mock", "port", "bench", "yamlfile", "quantity", "cautions", "errors"),
+    *("mock", "port", "bench", "yamlfile", "quantity", "cautions", "extras", "errors"),
 ]
 
 CODEC_MAY_USE = {

@@ -70,6 +70,16 @@ class UsageError(RamprigError):
     """The command line or a typed command must be mended."""
 
 
+class PackageMissing(UsageError):
+    """A package that only some commands need is not installed: `package` is its name, `purpose` what it is for."""
+
+    def __init__(self, package: str, *, purpose: str, extra: str | None = None) -> None:
+        self.package = package
+        self.purpose = purpose
+        how = f"pip install {package}" + (f", or pip install 'ramprig[{extra}]'" if extra else "")
+        super().__init__(f"{purpose} needs the Python package {package}, which is not installed; get it with: {how}")
+
+
 class LinkError(RamprigError):
     """The link to the device must be seen to."""
 

@@ -1,0 +1,1 @@
+"""Endurance: cycles, wear and drift, life."""

@@ -1,0 +1,1 @@
+"""Measuring: procedures that learn about a bench, and the numbers they end in."""
