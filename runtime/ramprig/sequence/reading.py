@@ -16,6 +16,7 @@ from ramprig.yamlfile import (
     Key,
     Mark,
     Names,
+    Node,
     QuantityShape,
     Reader,
     Record,
@@ -27,6 +28,7 @@ from ramprig.yamlfile import (
     TableShape,
     TextShape,
     load,
+    load_text,
     shorten,
     suggestion,
 )
@@ -80,7 +82,15 @@ def read_sequence(path: str | Path, *, settings: Mapping[str, str] | None = None
 
     Raises `FileError`, and `UsageError` for a setting of a name that the file does not have.
     """
-    return _Files(path, settings or {}).whole()
+    return _Files(path, settings or {}).whole(load(path))
+
+
+def sequence_of_text(text: str, file: str = "sequence.yaml") -> Sequence:
+    """The sequence that a text says; `file` is the name that messages give, and what it includes is looked for there.
+
+    Raises `FileError`.
+    """
+    return _Files(file, {}).whole(load_text(text, file))
 
 
 class _UsedNames(Names):
@@ -105,8 +115,7 @@ class _Files:
         self.sources: dict[Path, Source] = {}
         self.inclusions = 0
 
-    def whole(self) -> Sequence:
-        node = load(self.path)
+    def whole(self, node: Node) -> Sequence:
         self.sources[Path(self.path).resolve()] = node.mark.source
         found = _keys(Reader(node))
         values = VALUES.shape.read(found["values"]) if "values" in found else {}

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Mapping
 from contextlib import AbstractContextManager, contextmanager, nullcontext
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 
 from ramprig.bench import Bench
@@ -59,6 +59,20 @@ class RunWish:
     title: str = ""
     settings: Mapping[str, object] | None = None
     seed: int | None = None
+    virtual: bool = False
+    short_id: str | None = None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Recorded:
+    """How something on a bench is written down: where, under which name, with which inputs beside the bench file."""
+
+    bench: Bench
+    runs: Path
+    name: str
+    port_name: str
+    settings: Mapping[str, object] = field(default_factory=dict)
+    inputs: tuple[InputFile, ...] = ()
     virtual: bool = False
     short_id: str | None = None
 
@@ -136,7 +150,8 @@ def run_on_session(
         outcome = run_plan(session, plan, rig, clock=clock, listeners=listeners, progress=progress)
         return RunResult(outcome=_explained(outcome, [], asked_by), folder=None)
     troubles: list[Trouble] = []
-    with _recording(wish, session, wish.runs, clock, port_name, listeners, troubles) as recorder:
+    what = _recorded(wish, wish.runs, port_name)
+    with recording(what, session, clock=clock, listeners=listeners, troubles=troubles) as recorder:
         if began is not None:
             began(recorder.folder.path)
         outcome = run_plan(session, plan, rig, clock=clock, listeners=listeners, keeper=recorder, progress=progress)
@@ -183,14 +198,8 @@ class _Keeping:
 
 
 @contextmanager
-def _recording(
-    wish: RunWish,
-    session: Session,
-    runs: Path,
-    clock: Clock,
-    port_name: str,
-    listeners: Listeners,
-    troubles: list[Trouble],
+def recording(
+    what: Recorded, session: Session, *, clock: Clock, listeners: Listeners, troubles: list[Trouble]
 ) -> Iterator[Recorder]:
     """A recorder that listens to the session; a run that breaks off is written down as far as it came.
 
@@ -202,7 +211,7 @@ def _recording(
             session.panic(1)
             troubles.append(trouble)
 
-    recorder = _recorder(wish, session, runs, clock, port_name, on_trouble)
+    recorder = _recorder(what, session, clock, on_trouble)
     keeping = _Keeping(recorder, on_trouble)
     listeners.add(on_block=keeping.on_block, on_event=recorder.on_event)
     try:
@@ -214,38 +223,48 @@ def _recording(
         listeners.remove(on_block=keeping.on_block, on_event=recorder.on_event)
 
 
-def _recorder(
-    wish: RunWish,
-    session: Session,
-    runs: Path,
-    clock: Clock,
-    port_name: str,
-    on_trouble: Callable[[Trouble], None],
-) -> Recorder:
-    sequence, bench = wish.sequence, wish.bench
-    roles = ["sequence", *["include"] * (len(sequence.files) - 1)]
-    inputs = [InputFile("bench", bench.file, bench.file_bytes)]
-    inputs += [InputFile(role, file.file, file.data) for role, file in zip(roles, sequence.files, strict=True)]
+def _recorder(what: Recorded, session: Session, clock: Clock, on_trouble: Callable[[Trouble], None]) -> Recorder:
     identity = jsonable(session.identity)
     assert isinstance(identity, dict)  # a dataclass is written as an object
-    settings: dict[str, object] = {"values": dict(sequence.values), **(wish.settings or {})}
+    bench = what.bench
     description = RunDescription(
-        name=wish.title or sequence.name, port=port_name, identity=identity, settings=settings, inputs=inputs
+        name=what.name,
+        port=what.port_name,
+        identity=identity,
+        settings=what.settings,
+        inputs=[InputFile("bench", bench.file, bench.file_bytes), *what.inputs],
     )
-    folder = RunFolder.create(runs, description, started_unix_s=clock.wall(), short_id=wish.short_id)
+    folder = RunFolder.create(what.runs, description, started_unix_s=clock.wall(), short_id=what.short_id)
 
     return Recorder(
         folder,
         bench_columns(bench, tick_us=session.identity.tick_us),
-        start=_anchor(session, clock),
+        start=anchor(session, clock),
         tick_us=session.identity.tick_us,
         clock=clock,
         on_trouble=on_trouble,
-        threaded=not wish.virtual,
+        threaded=not what.virtual,
     )
 
 
-def _anchor(session: Session, clock: Clock) -> Anchor:
+def _recorded(wish: RunWish, runs: Path, port_name: str) -> Recorded:
+    """How a run of a sequence is written down."""
+    sequence = wish.sequence
+    roles = ["sequence", *["include"] * (len(sequence.files) - 1)]
+    return Recorded(
+        bench=wish.bench,
+        runs=runs,
+        name=wish.title or sequence.name,
+        port_name=port_name,
+        settings={"values": dict(sequence.values), **(wish.settings or {})},
+        inputs=tuple(InputFile(role, file.file, file.data) for role, file in zip(roles, sequence.files, strict=True)),
+        virtual=wish.virtual,
+        short_id=wish.short_id,
+    )
+
+
+def anchor(session: Session, clock: Clock) -> Anchor:
+    """This instant on all clocks."""
     return Anchor(tick=session.tick_now(), host_s=clock.now(), unix_s=clock.wall())
 
 
@@ -271,7 +290,7 @@ def _end_of(session: Session, plan: Plan, outcome: Outcome, clock: Clock) -> Run
     return RunEnd(
         verdict=outcome.verdict.word,
         stop_reason=outcome.sentence,
-        end=_anchor(session, clock) if known else None,
+        end=anchor(session, clock) if known else None,
         drift_ppm=None if fit is None else fit.drift_ppm,
         accounts=() if account is None else (account,),
         link=health if isinstance(health, dict) else {},
