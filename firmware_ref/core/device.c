@@ -300,7 +300,8 @@ static void load_limits(struct rr_device *device)
     rr_limits_defaults(&device->limits);
     for (uint8_t place = 0; place < RR_LIMITS; place++) {
         int32_t value;
-        if (rr_store_read(device->port, device->self, (uint8_t)(1u + place), &value)) {
+        if (rr_store_read(device->port, device->self, (uint8_t)(1u + place), &value) &&
+            rr_limits_possible(place, value)) { /* another build of the board may have kept what this one cannot do */
             rr_limits_set(&device->limits, place, value);
             rr_limits_enforce(&device->limits);
         }

@@ -52,7 +52,7 @@ static void judge_current(struct rr_guard *guard, const struct rr_guard_limits *
         return;
     }
     uint16_t enough = RR_SEEDED(OVERCURRENT_LATE, (uint16_t)(limits->trip_ticks + 1u), limits->trip_ticks);
-    if (guard->over_for < enough) {
+    if (guard->over_for < UINT16_MAX) { /* counted on, not held at `enough`: that limit may be raised meanwhile */
         guard->over_for++;
     }
     if (guard->over_for >= enough) {

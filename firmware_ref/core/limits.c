@@ -185,14 +185,24 @@ static bool is_looser(const RR_FLASH struct row *row, int32_t now, int32_t value
     return row->tighter == RR_TIGHTER_HIGHER ? value < now : true;
 }
 
+/* Outside the item's own range, or the board's? */
+static bool is_beyond(const RR_FLASH struct row *row, int32_t value)
+{
+    return value < row->least || value > row->greatest || (row->number == RR_LIMIT_CEILING_DUTY && value > RR_MAX_DUTY);
+}
+
+bool rr_limits_possible(uint8_t place, int32_t value)
+{
+    uint8_t index;
+    return !is_beyond(row_at(place, &index), value);
+}
+
 static bool is_out_of_range(const struct rr_limits *limits, const RR_FLASH struct row *row, uint8_t index, int32_t value)
 {
-    if (value < row->least || value > row->greatest) {
+    if (is_beyond(row, value)) {
         return true;
     }
     switch (row->number) {
-    case RR_LIMIT_CEILING_DUTY:
-        return value > RR_MAX_DUTY;
     case RR_LIMIT_PULSE_MIN_US:
         return value > rr_limits_get(limits, RR_LIMIT_PULSE_MAX_US, index);
     case RR_LIMIT_PULSE_MAX_US:

@@ -48,6 +48,9 @@ uint8_t rr_limits_place(uint8_t number, uint32_t index);
 /* Why a limit must not take a value, or RR_REASON_COUNT where it may. */
 uint8_t rr_limits_refusal(const struct rr_limits *limits, uint8_t number, uint32_t index, int32_t value, bool armed);
 
+/* May the limit at this place have this value on this board, whatever the others are? For what comes from a store. */
+bool rr_limits_possible(uint8_t place, int32_t value);
+
 /* The defaults of the table, a ceiling held to the board's own, all in force. */
 void rr_limits_defaults(struct rr_limits *limits);
 

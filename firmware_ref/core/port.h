@@ -39,7 +39,8 @@ struct rr_port {
     void (*pulse)(void *self, uint8_t servo, uint32_t pulse_ns);
     /* All outputs off, by the shortest way there is. */
     void (*off)(void *self);
-    /* Reads or writes the store that survives power-off: `length` bytes at `offset`. Returns false where there is none. */
+    /* Reads or writes the store that survives power-off: `length` bytes at `offset`. Returns false where there is none.
+     * A write may take the bytes in any order, but must be done with all of them before the next write begins. */
     bool (*load)(void *self, uint16_t offset, void *bytes, uint16_t length);
     bool (*store)(void *self, uint16_t offset, const void *bytes, uint16_t length);
     /* The worst time of a tick so far in us, 0 where not measured. */

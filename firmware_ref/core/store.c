@@ -3,23 +3,34 @@
 
 #include "check.h"
 
+#define CHECK      4u
+#define GENERATION 6u
+#define ERASED     0xFFu /* a generation that is never given */
+
+static uint8_t next_generation(uint8_t generation)
+{
+    return generation + 1u >= ERASED ? 0 : (uint8_t)(generation + 1u);
+}
+
 static uint16_t check_of(const uint8_t *record, uint8_t slot)
 {
     uint16_t crc = rr_crc16(RR_CRC16_START, slot); /* so that a record in a wrong place is not taken */
-    for (uint8_t i = 0; i < 5; i++) {
+    for (uint8_t i = 0; i < CHECK; i++) {
         crc = rr_crc16(crc, record[i]);
     }
-    return crc;
+    return rr_crc16(crc, record[GENERATION]);
+}
+
+static uint16_t place_of(uint8_t slot, uint8_t copy)
+{
+    return (uint16_t)(slot * RR_SLOT + copy * RR_RECORD);
 }
 
 /* Reads one of the slot's two records; false where it is not whole. */
 static bool read_record(const struct rr_port *port, void *self, uint8_t slot, uint8_t copy, uint8_t *record)
 {
-    uint16_t offset = (uint16_t)(slot * RR_SLOT + copy * RR_RECORD);
-    if (!port->load(self, offset, record, RR_RECORD)) {
-        return false;
-    }
-    return check_of(record, slot) == (uint16_t)(record[5] << 8 | record[6]);
+    return port->load(self, place_of(slot, copy), record, RR_RECORD) && record[GENERATION] != ERASED &&
+           check_of(record, slot) == (uint16_t)(record[CHECK] << 8 | record[CHECK + 1u]);
 }
 
 /* The newer whole copy: 0, 1, or 2 where there is none. `record` holds it. */
@@ -28,7 +39,7 @@ static uint8_t newer(const struct rr_port *port, void *self, uint8_t slot, uint8
     uint8_t other[RR_RECORD];
     bool first = read_record(port, self, slot, 0, record);
     bool second = read_record(port, self, slot, 1, other);
-    if (second && (!first || (int8_t)(uint8_t)(other[4] - record[4]) > 0)) {
+    if (second && (!first || other[GENERATION] == next_generation(record[GENERATION]))) {
         for (uint8_t i = 0; i < RR_RECORD; i++) {
             record[i] = other[i];
         }
@@ -51,13 +62,14 @@ bool rr_store_write(const struct rr_port *port, void *self, uint8_t slot, int32_
 {
     uint8_t record[RR_RECORD];
     uint8_t copy = newer(port, self, slot, record);
-    uint8_t generation = copy == 2 ? 0 : (uint8_t)(record[4] + 1u);
-    for (uint8_t i = 0; i < 4; i++) {
+    uint16_t place = place_of(slot, copy == 0 ? 1 : 0);
+    record[GENERATION] = copy == 2 ? 0 : next_generation(record[GENERATION]);
+    for (uint8_t i = 0; i < CHECK; i++) {
         record[i] = (uint8_t)((uint32_t)value >> (24 - 8 * i));
     }
-    record[4] = generation;
     uint16_t crc = check_of(record, slot);
-    record[5] = (uint8_t)(crc >> 8);
-    record[6] = (uint8_t)crc;
-    return port->store(self, (uint16_t)(slot * RR_SLOT + (copy == 0 ? 1u : 0u) * RR_RECORD), record, RR_RECORD);
+    record[CHECK] = (uint8_t)(crc >> 8);
+    record[CHECK + 1u] = (uint8_t)crc;
+    return port->store(self, place, record, GENERATION) &&
+           port->store(self, (uint16_t)(place + GENERATION), &record[GENERATION], 1);
 }

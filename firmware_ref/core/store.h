@@ -1,7 +1,10 @@
 /* Values that survive power-off: two copies of each, so that a power cut at any byte leaves the old or the new value.
  *
- * A slot is two records of RR_RECORD bytes; a record is a value, a generation and a CRC-16 over both. The one written is
- * always the older or broken one of the two, so the newer stays whole until the write is done. */
+ * A slot is two records of RR_RECORD bytes; a record is a value, a CRC-16 over it, its slot and its generation, and last
+ * the generation. The one written is always the older or broken one of the two. Its generation is written by itself, after
+ * all else: until then the record has its old generation, older than that of the other record, or that of erased bytes,
+ * which no whole record has. So neither a cut nor a byte that power-off spoils can leave a third value, not even where a
+ * half-written record should have a right check by chance. */
 #ifndef RAMPRIG_STORE_H
 #define RAMPRIG_STORE_H
 
@@ -10,7 +13,7 @@
 #include <stdbool.h>
 #include <stdint.h>
 
-#define RR_RECORD 7u             /* bytes: value 4, generation 1, check 2 */
+#define RR_RECORD 7u             /* bytes: value 4, check 2, generation 1 */
 #define RR_SLOT   (2u * RR_RECORD)
 #define RR_SLOT_BOOT 0u          /* the boot number; the limits follow in the order of the digest */
 #define RR_STORE_BYTES (RR_SLOT * (1u + RR_LIMITS))

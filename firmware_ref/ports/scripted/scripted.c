@@ -15,6 +15,7 @@ struct scripted {
     struct rr_inputs inputs;
     uint8_t store[RR_STORE_BYTES];
     uint32_t store_writes_left; /* bytes until the power goes; UINT32_MAX = never */
+    uint8_t store_spoils;       /* bits of the byte then under way that turn round */
     int16_t duty[RR_AXES];
     bool brake[RR_AXES];
     uint32_t pulse_ns[RR_SERVOS > 0 ? RR_SERVOS : 1];
@@ -99,7 +100,12 @@ static bool load(void *self, uint16_t offset, void *bytes, uint16_t length)
 static bool store(void *self, uint16_t offset, const void *bytes, uint16_t length)
 {
     struct scripted *s = self;
-    for (uint16_t i = 0; i < length && s->store_writes_left > 0; i++) {
+    for (uint16_t i = 0; i < length; i++) {
+        if (s->store_writes_left == 0) {
+            s->store[offset + i] ^= s->store_spoils;
+            s->store_spoils = 0;
+            break;
+        }
         s->store[offset + i] = ((const uint8_t *)bytes)[i];
         if (s->store_writes_left != UINT32_MAX) {
             s->store_writes_left--;
@@ -141,6 +147,18 @@ void scripted_preset(struct scripted *s, uint8_t number, uint8_t index, int32_t 
 void scripted_cut_store_after(struct scripted *s, uint32_t bytes)
 {
     s->store_writes_left = bytes;
+}
+
+/* ... and the byte that is then under way is spoilt: these bits of it turn round. */
+void scripted_tear(struct scripted *s, uint8_t bits)
+{
+    s->store_spoils = bits;
+}
+
+uint8_t *scripted_store(struct scripted *s, uint32_t *length)
+{
+    *length = RR_STORE_BYTES;
+    return s->store;
 }
 
 void scripted_start(struct scripted *s, uint8_t cause, int32_t fault)

@@ -57,7 +57,7 @@ class ServoPulse:
         if self.demand.moving:
             self.demand.advance(age)
         if order.goal and not self.demand.value:
-            self.demand.set(self._home_ns)
+            self.demand.set(self.pulse_ns or self._home_ns)
         self.demand.begin(order.goal, ticks=order.ticks, age=age)
         self._tag = order.tag
         self.steady = False
