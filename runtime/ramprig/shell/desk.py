@@ -361,7 +361,9 @@ class Desk:
                 self._arm(session)
             case c.Disarm():
                 session.disarm()
-                self._say("disarmed: all outputs are off")
+                self._state = "off"
+                self._forget_motion()
+                self._say("disarmed")
             case c.Clear():
                 session.clear()
                 self._state = "off"
@@ -391,6 +393,10 @@ class Desk:
                 self._run(file, session)
 
     def _arm(self, session: Session) -> None:
+        if session.armed:
+            raise UsageError("the outputs are armed already")
+        if session.trip is not None:
+            raise UsageError("a trip is latched: 'why' tells of it, 'clear' ends it once its cause is gone")
         if not self._cautioned:
             self._cautioned = True
             self._say(REMINDER)

@@ -212,7 +212,7 @@ class Screen:
         bind("down", lambda hold: hold.change(-1))
         for name in ("q", "c-d"):
             bind(name, lambda hold: hold.leave())
-        keys.add("escape", filter=jogging)(lambda event: self._hold.leave() if self._hold is not None else None)
+        bind("escape", lambda hold: hold.leave())  # eager: it is told from an arrow key by the parser
 
         @keys.add(Keys.Any, filter=jogging)
         @keys.add(Keys.BracketedPaste, filter=jogging)
@@ -275,7 +275,7 @@ class Screen:
         self.app.invalidate()
 
     def _leave(self) -> None:
-        if not self.app.is_done:
+        if self.app.is_running and not self.app.is_done:
             self.app.exit()
 
     # ---- running -------------------------------------------------------------------------------------------------

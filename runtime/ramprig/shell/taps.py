@@ -80,6 +80,8 @@ class TappedInput(Input):
         text = self._decoder.decode(data)
         self._follow_paste(text)
         self._parser.feed(text)
+        if stopped:  # a paste may have begun in the same bytes
+            self._give_up_paste()
         self._closed = self._closed or over
         if self._ready is not None:
             self._ready()
