@@ -27,6 +27,8 @@ _PLANT_FAULTS = {
     "one_channel": PlantFault.ONE_CHANNEL,
     "jammed_shaft": PlantFault.JAMMED,
     "noisy_counts": PlantFault.NOISY_COUNTS,
+    "lead_open": PlantFault.LEAD_OPEN,
+    "encoders_exchanged": PlantFault.ENCODERS_EXCHANGED,
 }
 
 
@@ -47,19 +49,21 @@ def schedule(setup: MockSetup) -> list[tuple[int, str, int, float]]:
 class PlantInputs:
     """What the board's pins read from the plant. The counters begin at 0 with each start of the board."""
 
-    __slots__ = ("_axes", "_encoders", "_plant", "_sensors", "_zero", "read_supply_mv")
+    __slots__ = ("_axes", "_encoders", "_plant", "_sensors", "_wired", "_zero", "read_supply_mv")
 
     def __init__(self, plant: Plant) -> None:
         self._plant = plant
         self._axes = plant.axes
         self._sensors = plant.sensors
         self._encoders = plant.encoders
+        self._wired = plant.wired_to
         self._zero = [plant.read_counts(i) for i in range(len(plant.axes))]
         self.read_supply_mv = plant.read_supply_mv
 
     def read_counts(self, axis: int) -> int:
         """Counts since the board's start."""
-        counts = self._encoders[axis].read(self._axes[axis].angle_rad) - self._zero[axis]
+        wired = self._wired[axis]
+        counts = self._encoders[wired].read(self._axes[wired].angle_rad) - self._zero[wired]
         return counts if -_HALF <= counts < _HALF else (counts + _HALF) % (2 * _HALF) - _HALF
 
     def read_current_ma(self, axis: int) -> int:

@@ -33,6 +33,8 @@ FAULTS = {
         FaultKind(name="leads_swapped", per_axis=True, text="the motor's leads are exchanged: it turns backwards"),
         FaultKind(name="encoder_dead", per_axis=True, text="the encoder gives no edges: the counts stand still"),
         FaultKind(name="one_channel", per_axis=True, text="one encoder phase is missing: the counts toggle by one"),
+        FaultKind(name="lead_open", per_axis=True, text="a lead of the motor is off: no current, no motion"),
+        FaultKind(name="encoders_exchanged", text="each encoder is plugged in where that of another axis belongs"),
         FaultKind(name="jammed_shaft", per_axis=True, text="the shaft is held fast"),
         FaultKind(
             name="current_offset", per_axis=True, default=350.0, unit="mA", least=-100_000.0, most=100_000.0,

@@ -27,7 +27,8 @@ class Axis:
     mean over the last tick.
     Settable while running: friction, resistance and load (`viscous_nms`, `coulomb_nm`, `static_nm`, `load_nm`,
     `resistance_20_ohm`), `leads_swapped` and `jammed`. `load_nm` is a constant torque at the output shaft, such as a
-    weight's, against positive motion.
+    weight's, against positive motion. `stops_rad`, None for none, are angles of the motor's shaft that it cannot pass:
+    what a clamped output and the play of a gear leave it.
     """
 
     __slots__ = (
@@ -60,6 +61,7 @@ class Axis:
         "restless",
         "siemens",
         "speed_rad_s",
+        "stops_rad",
         "surplus_a",
         "winding_c",
     )
@@ -89,6 +91,7 @@ class Axis:
         self._static_nm = motor.static_nm
         self._load_nm = 0.0
         self._jammed = False
+        self.stops_rad: tuple[float, float] | None = None
         self._per_duty = 1.0 / DUTY_FULL
         self._rebuild()
 
@@ -156,6 +159,21 @@ class Axis:
         if value:
             self.speed_rad_s = 0.0
         self._hold()
+
+    def turn_by_hand(self, radians: float) -> None:
+        """Turn the motor's shaft from outside by this much; one that is jammed does not turn."""
+        if not self._jammed:
+            self.angle_rad += radians
+            self.meet_stops()
+
+    def meet_stops(self) -> None:
+        """Hold a shaft that has run into one of its stops; it does not bounce."""
+        if self.stops_rad is None:
+            return
+        low, high = self.stops_rad
+        if not low <= self.angle_rad <= high:
+            self.angle_rad = min(max(self.angle_rad, low), high)
+            self.speed_rad_s = 0.0
 
     @property
     def leads_swapped(self) -> bool:

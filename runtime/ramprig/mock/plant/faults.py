@@ -14,6 +14,10 @@ CURRENT_OFFSET_MA = 350.0
 """What an offset fault adds to the current reading."""
 
 
+OPEN_OHM = 10_000.0
+"""What a winding with an open lead has: a milliampere flows, far below what a sensor tells from nothing."""
+
+
 class PlantFault(StrEnum):
     """What can be broken; the values are the names that users type."""
 
@@ -25,6 +29,8 @@ class PlantFault(StrEnum):
     JAMMED = "jammed"
     CURRENT_OFFSET = "current-offset"
     WEAK_SUPPLY = "brown-out"
+    LEAD_OPEN = "lead-open"
+    ENCODERS_EXCHANGED = "encoders-exchanged"
 
 
 def _phases(plant: Plant, axis: int, on: bool) -> None:
@@ -61,6 +67,17 @@ def _weak_supply(plant: Plant, axis: int, on: bool) -> None:
     plant.supply.resistance_ohm = plant.parameters.supply.resistance_ohm * (WEAK_SUPPLY_TIMES if on else 1.0)
 
 
+def _open(plant: Plant, axis: int, on: bool) -> None:
+    usual_ohm = plant.parameters.axes[axis].motor.resistance_20_ohm
+    plant.axes[axis].resistance_20_ohm = OPEN_OHM if on else usual_ohm
+
+
+def _exchange(plant: Plant, axis: int, on: bool) -> None:
+    del axis  # each encoder is plugged in where the next one belongs
+    axes = len(plant.axes)
+    plant.wired_to[:] = [(place + on) % axes for place in range(axes)]
+
+
 _SWITCHES: dict[PlantFault, Callable[[Plant, int, bool], None]] = {
     PlantFault.PHASES_SWAPPED: _phases,
     PlantFault.LEADS_SWAPPED: _leads,
@@ -70,6 +87,8 @@ _SWITCHES: dict[PlantFault, Callable[[Plant, int, bool], None]] = {
     PlantFault.JAMMED: _jam,
     PlantFault.CURRENT_OFFSET: _offset,
     PlantFault.WEAK_SUPPLY: _weak_supply,
+    PlantFault.LEAD_OPEN: _open,
+    PlantFault.ENCODERS_EXCHANGED: _exchange,
 }
 
 

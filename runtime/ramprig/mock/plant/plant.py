@@ -18,10 +18,14 @@ class Plant:
     """Everything the board's pins lead to.
 
     Set `axes[n].duty`, `axes[n].brake` and `servos[n].pulse_us`, call `step()` once a tick, and read the sensors. The
-    same `seed`, drive and order of readings give the same readings, byte for byte.
+    same `seed`, drive and order of readings give the same readings, byte for byte. `wired_to[n]` is the axis whose
+    encoder is plugged in where that of axis n belongs.
     """
 
-    __slots__ = ("_to_warm", "_warm_ticks", "axes", "encoders", "parameters", "sensors", "servos", "supply", "tick_us")
+    __slots__ = (
+        *("_to_warm", "_warm_ticks", "axes", "encoders", "parameters", "sensors", "servos", "supply", "tick_us"),
+        "wired_to",
+    )
 
     def __init__(self, parameters: PlantParameters = VENT_BENCH, *, tick_us: int = 1000, seed: int = 0) -> None:
         self.parameters = parameters
@@ -37,6 +41,7 @@ class Plant:
         self.sensors = tuple(
             CurrentSensor(axis.sensor, randomness=random.Random(source.getrandbits(64))) for axis in parameters.axes
         )
+        self.wired_to = list(range(len(self.axes)))
         self._warm_ticks = max(1, WARM_EVERY_US // tick_us)
         self._to_warm = self._warm_ticks
 
@@ -63,8 +68,7 @@ class Plant:
         load_a = supply.standby_a
         siemens = 0.0
         for servo in self.servos:
-            if servo.busy:
-                servo.step()
+            servo.step()
             load_a += servo.current_a
         bus_v = supply.bus_v
         for axis in axes:
@@ -78,6 +82,8 @@ class Plant:
         bus_v = supply.step(load_a, siemens)
         for axis in axes:
             axis.advance(bus_v)
+            if axis.stops_rad is not None:
+                axis.meet_stops()
 
     def read_counts(self, axis: int) -> int:
         """Return the encoder counter: motor-shaft counts (x4), 32 bits signed, wrapping."""
