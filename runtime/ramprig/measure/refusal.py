@@ -1,0 +1,14 @@
+"""When a measurement gives no numbers, and says why instead."""
+
+from __future__ import annotations
+
+from ramprig.errors import RamprigError
+
+
+class NotMeasurable(RamprigError):
+    """What was recorded cannot give the result: `found` says what stands in the way, `wanted` what would help."""
+
+    def __init__(self, found: str, *, wanted: str) -> None:
+        self.found = found
+        self.wanted = wanted
+        super().__init__(f"no result: {found}; {wanted}")

@@ -1,0 +1,44 @@
+"""A procedure's own limits: the bench as its file says it, with some limits tighter and none looser."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from fractions import Fraction
+
+from ramprig.bench import Bench, Motor, Setting
+from ramprig.bench.limits import setting, speed_setting
+from ramprig.quantity import CURRENT, DUTY, SPEED, Quantity, format_current, format_duty, format_speed
+
+
+def tightened(
+    bench: Bench,
+    motor: str,
+    *,
+    ceiling_duty: int | None = None,
+    trip_a: float | None = None,
+    speed_rpm: float | None = None,
+) -> Bench:
+    """The bench with this motor's ceiling (1/10000), overcurrent trip and overspeed trip no higher than these.
+
+    A limit that is tighter already stays. The speed needs an encoder, and is passed over without one.
+    """
+    found = bench.motor(motor)
+    tighter: dict[str, Setting] = {}
+    if ceiling_duty is not None:
+        duty = Quantity(DUTY, Fraction(ceiling_duty, 100), format_duty(ceiling_duty))
+        tighter["ceiling_duty"] = setting("ceiling_duty", duty, found.mark)
+    if trip_a is not None:
+        amperes = Quantity(CURRENT, Fraction(round(trip_a * 1000), 1000), format_current(trip_a))
+        tighter["trip_ma"] = setting("trip_ma", amperes, found.mark)
+    if speed_rpm is not None and found.encoder is not None:
+        speed = Quantity(SPEED, Fraction(speed_rpm), format_speed(speed_rpm))
+        tighter["speed_counts"] = speed_setting(speed, found.counts_per_turn, found.mark)
+    kept = {item: limit for item, limit in tighter.items() if _is_tighter(limit, found)}
+    changed = replace(found, settings={**found.settings, **kept})
+    return replace(bench, motors=tuple(changed if one.name == motor else one for one in bench.motors))
+
+
+def _is_tighter(limit: Setting, motor: Motor) -> bool:
+    """Whether a limit, lower being tighter, is below the motor's own; 0 is no limit at all for the speed."""
+    own = motor.limits(1000)[limit.item]
+    return limit.in_units(1000) < own or (limit.item == "speed_counts" and own == 0)
