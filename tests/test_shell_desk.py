@@ -298,6 +298,17 @@ def test_a_jammed_shaft_trips_and_the_reason_is_told(watched: tuple[DeskBench, W
     bench.type("disarm")
 
 
+def test_a_trip_between_two_commands_is_kept_until_it_is_cleared(bench: DeskBench) -> None:
+    armed(bench).type("ramp vent 30 %")
+    bench.fault("jammed_shaft")
+    bench.let_pass(2.0)
+    assert isinstance(bench.desk.failed, Tripped)
+    assert bench.desk.snapshot.state == "tripped"
+    bench.fault("jammed_shaft", 0.0)
+    bench.type("clear")
+    assert bench.desk.failed is None
+
+
 def test_a_lost_link_is_told_and_reopening_starts_disarmed(watched: tuple[DeskBench, Watched]) -> None:
     bench, watch = watched
     bench.type("log start")

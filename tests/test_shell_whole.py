@@ -123,6 +123,11 @@ def test_a_signal_stops_piped_lines_with_exit_code_5(tmp_path: Path) -> None:
     assert "stop confirmed" in out
 
 
+def test_piped_lines_do_without_a_terminal_library() -> None:
+    check = "import sys, ramprig.shell; sys.exit('prompt_toolkit' in sys.modules)"
+    assert subprocess.run([sys.executable, "-c", check], check=False).returncode == 0
+
+
 def test_a_reader_that_is_gone_does_not_hold_the_printer(tmp_path: Path) -> None:
     class Gone(io.StringIO):
         def write(self, text: str) -> int:
@@ -200,6 +205,7 @@ def test_a_stop_is_on_the_wire_within_50_ms_while_a_motor_turns_and_output_flood
         os.close(reader)
         os.close(writer)
     assert len(latencies_s) == 4
+    print("latencies in ms:", [round(latency_s * 1000, 2) for latency_s in latencies_s])
     assert max(latencies_s) < 0.05, latencies_s
     assert worker.off_confirmed
 

@@ -17,7 +17,8 @@ from ramprig.errors import LinkError, RamprigError, StoppedByUser
 from ramprig.port.base import Port
 from ramprig.session.signals import StopOnSignals
 
-from .desk import Desk, Reopener
+from .desk import Desk
+from .keeper import Reopener
 from .outbox import Outbox
 from .plain import Printer, run_plain
 from .stopkeys import StopKey
