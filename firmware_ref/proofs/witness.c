@@ -81,6 +81,11 @@ static bool is_tagged(const char *body)
     return strspn(body, "0123456789abcdef") >= 2 && (body[2] == ' ' || body[2] == '\0');
 }
 
+bool witness_request(const uint8_t *line, size_t length, char *body)
+{
+    return opened((const char *)line, length, HOST_LINE_MAX, body) && is_tagged(body);
+}
+
 uint32_t witness_digest(const int32_t *limits)
 {
     uint32_t crc = 0xFFFFFFFFu;
@@ -313,11 +318,11 @@ static const char *judge_lines(struct witness *w, const struct witness_tick *see
         return "LINE-2: a line of the device is not well made";
     }
     const char *broken = NULL;
-    if (seen->sent != NULL &&
-        opened((const char *)seen->sent, seen->sent_length, HOST_LINE_MAX, request) && is_tagged(request)) {
+    if (seen->sent != NULL && witness_request(seen->sent, seen->sent_length, request)) {
         bool repeat = strcmp(request, w->last_sent) == 0;
         broken = judge_request(w, request, told.answer);
-        if (broken == NULL && !repeat && strstr(told.answer, " late") != NULL && !told.tripped) {
+        const char *last = strrchr(told.answer, ' ');
+        if (broken == NULL && !repeat && last != NULL && strcmp(last, " late") == 0 && !told.tripped) {
             broken = "ORDER-2: a late order did not trip";
         }
     } else if (told.answer[0] != '\0') {

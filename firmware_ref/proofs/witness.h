@@ -70,6 +70,10 @@ uint32_t witness_digest(const int32_t *limits);
 /* Writes body, check and LF; returns the length. `line` has room for WITNESS_LINE_MAX bytes. */
 size_t witness_seal(const char *body, char *line);
 
+/* Is the line, with its LF, a request (SPEC LINE-2 to LINE-5, CHECK-1, BAD-5)? Then `body` is what comes before the check;
+ * it has room for WITNESS_LINE_MAX bytes. */
+bool witness_request(const uint8_t *line, size_t length, char *body);
+
 /* Is the value looser than the present one (SPEC LIMIT-3)? */
 bool witness_is_looser(enum witness_limit limit, int32_t present, int32_t value);
 
