@@ -3,8 +3,6 @@
 #include "seeded.h"
 #include "store.h"
 
-#include <string.h>
-
 #define WORD_OK RR_REASON_COUNT
 
 static uint8_t index_refusal(uint8_t word, const struct rr_arguments *given)
@@ -137,7 +135,9 @@ static uint8_t do_order(struct rr_device *device, uint8_t kind, int16_t value, u
 {
     int32_t ahead = (int32_t)(start - device->tick);
     if (RR_SEEDED(LATE_ORDER_CARRIED_OUT, false, ahead <= 0)) {
-        rr_finding_note(&device->late, RR_TRIP_LATE_ORDER, ahead == INT32_MIN ? INT32_MAX : -ahead, 0);
+        if (device->late_by < 0) {
+            device->late_by = ahead == INT32_MIN ? INT32_MAX : -ahead;
+        }
         return RR_REASON_LATE;
     }
     if (ahead > (int32_t)RR_HORIZON_TICKS) {
@@ -190,7 +190,8 @@ static uint8_t do_limit(struct rr_device *device, const struct rr_arguments *giv
     }
     rr_limits_set(&device->limits, place, (int32_t)given->value[2]);
     if ((RR_CAPS & RR_CAP_KEEPS_LIMITS) != 0) {
-        device->unsaved[place >> 3] |= (uint8_t)(1u << (place & 7u));
+        uint8_t *byte = &device->unsaved[place >> 3];
+        *byte = (uint8_t)(*byte | (uint8_t)(1u << (place & 7u)));
     }
     return WORD_OK;
 }
@@ -245,7 +246,7 @@ static uint8_t understood(struct rr_device *device, const char *text, uint8_t *w
     if (reason == WORD_OK) {
         reason = range_refusal(device, *word, given);
     }
-    if (reason == WORD_OK && (rr_fields_states(*word) >> device->latch.state & 1u) == 0) {
+    if (reason == WORD_OK && ((unsigned)rr_fields_states(*word) >> device->latch.state & 1u) == 0) {
         reason = RR_REASON_STATE;
     }
     return reason;
@@ -292,7 +293,7 @@ static void answer(struct rr_device *device, const char *text)
     uint32_t told = 0;
     memory->full = true;
     memory->reply.tag = device->line.tag;
-    strcpy(memory->body, text);
+    rr_body_keep(&memory->body, text);
     memory->reply.reason = carried_out(device, text, &memory->reply.word, &told);
     memory->reply.tick = device->tick;
     memory->reply.waiting = true;
@@ -311,7 +312,7 @@ static bool is_kept_tag(const struct rr_device *device)
 /* TAG-4: the kept tag with another body? */
 static bool is_misused_tag(const struct rr_device *device)
 {
-    return is_kept_tag(device) && strcmp(device->memory.body, rr_line_body(&device->line)) != 0;
+    return is_kept_tag(device) && !rr_body_is(&device->memory.body, rr_line_body(&device->line));
 }
 
 /* Answers wait for one another, and for the digest; an urgent `stop` waits for no answer but its own kind. */

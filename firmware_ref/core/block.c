@@ -87,10 +87,10 @@ static void put_wide(struct rr_block *block, uint32_t value, uint8_t count)
 }
 
 /* k of DATA-7: the least with N 2^k >= A, at most RICE_K_MAX. */
-static uint8_t parameter_of(uint8_t count, uint32_t sum)
+static uint8_t parameter_of(uint8_t count, RR_SUM sum)
 {
     uint8_t k = 0;
-    for (uint32_t reach = count; k < RR_RICE_K_MAX && reach < sum; reach <<= 1) {
+    for (RR_SUM reach = count; k < RR_RICE_K_MAX && reach < sum; reach <<= 1) {
         k++;
     }
     return k;
@@ -135,7 +135,7 @@ void rr_block_prepare(struct rr_block *block, uint32_t mask, uint16_t period, st
     for (uint8_t bit = 0; bit < 20; bit++) {
         if ((mask >> bit & 1u) != 0) {
             channel[block->channels].shape = shape_of(bit);
-            channel[block->channels].sum = (uint32_t)1 << RR_RICE_K_START;
+            channel[block->channels].sum = (RR_SUM)1 << RR_RICE_K_START;
             block->channels++;
         }
     }
@@ -212,7 +212,7 @@ static void put_sample(struct rr_block *block, const int32_t *values)
         if (halve) {
             channel->sum >>= 1;
         }
-        channel->sum += u < RR_RICE_SUM_CAP ? u : RR_RICE_SUM_CAP;
+        channel->sum = (RR_SUM)(channel->sum + (u < RR_RICE_SUM_CAP ? u : RR_RICE_SUM_CAP));
     }
     block->count = (uint8_t)((halve ? RR_RICE_RESET / 2 : block->count) + 1u);
     block->samples++;
@@ -236,7 +236,7 @@ uint8_t rr_block_close(struct rr_block *block)
     for (uint8_t i = 0; i < block->channels; i++) {
         struct rr_channel *channel = &block->channel[i];
         uint8_t k = parameter_of(block->samples == 0 ? 1 : block->count, channel->sum);
-        channel->sum = (uint32_t)1 << k; /* as the header of the next block will say */
+        channel->sum = (RR_SUM)1 << k; /* as the header of the next block will say */
     }
     if (block->samples == 1) {
         put_first(block, false);

@@ -64,6 +64,16 @@
 #define RR_FLASH
 #endif
 
+/* A running mean's sum needs 22 bits: 32 values of RICE_SUM_CAP. */
+#ifndef RR_SUM
+#define RR_SUM uint32_t
+#endif
+
+/* How the last request is kept to know a repetition (TAG-3): 1 whole, 0 by its length and 48 bits of checks. */
+#ifndef RR_KEEP_BODY
+#define RR_KEEP_BODY 1
+#endif
+
 /* What a record of the trail holds. A board may have narrower ones where its sensors and its encoder's speed fit them:
  * counts need only span what a shaft can turn within the trail. */
 #ifndef RR_TRAIL_COUNTS

@@ -115,8 +115,11 @@ static void judge_lease(const struct rr_device *device, struct rr_finding *findi
 /* (c) The guard: all findings of this tick, of which the lowest number latches (TRIP-1). */
 static void guard(struct rr_device *device)
 {
-    struct rr_finding finding = device->late;
-    device->late.trip = RR_TRIP_NONE;
+    struct rr_finding finding = {RR_TRIP_NONE, 0, 0, 0};
+    if (device->late_by >= 0) {
+        rr_finding_note(&finding, RR_TRIP_LATE_ORDER, device->late_by, 0);
+        device->late_by = -1;
+    }
     if (device->port->took_break(device->self)) {
         rr_finding_note(&finding, RR_TRIP_LINE_BREAK, 0, 0);
         finding.index = 0;
@@ -256,6 +259,11 @@ static void drive(struct rr_device *device)
     }
 #endif
     if (rr_latch_stop_is_over(&device->latch, device->tick, device->limits.board.stop_ticks, turning)) {
+        for (uint8_t i = 0; i < RR_AXES; i++) {
+            if (device->axis[i].chain.duty != 0) { /* cut now: this tick is the first to end at zero */
+                rr_chain_off(&device->axis[i].chain);
+            }
+        }
         rr_stop_off(device);
         device->at_ceiling = false; /* in states off and tripped the bits are 0 */
         device->at_slew = false;
@@ -317,10 +325,11 @@ static uint32_t next_boot(struct rr_device *device)
     return next;
 }
 
-void rr_device_start(struct rr_device *device, const struct rr_port *port, void *self, uint8_t cause, int32_t fault)
+void rr_device_start(struct rr_device *device, const RR_FLASH struct rr_port *port, void *self, uint8_t cause, int32_t fault)
 {
     memset(device, 0, sizeof *device);
     device->tick = RR_START_TICK;
+    device->late_by = -1;
     device->port = port;
     device->self = self;
     port->off(self);

@@ -54,10 +54,22 @@ struct rr_aside {
     bool waiting;
 };
 
+/* The last request's body, whole or by its checks. */
+struct rr_body {
+#if RR_KEEP_BODY
+    char text[RR_BODY_MAX + 1];
+#else
+    uint8_t length;
+    uint16_t crc;
+    uint16_t sum;
+    uint16_t sum_of_sums;
+#endif
+};
+
 /* One request's exactly-once memory (SPEC TAG-3). */
 struct rr_memory {
     struct rr_reply reply;
-    char body[RR_BODY_MAX + 1]; /* what follows the tag */
+    struct rr_body body; /* what follows the tag */
     bool full;
 };
 
@@ -132,12 +144,12 @@ struct rr_notices {
 enum rr_saying { RR_SAYING_NOTHING, RR_SAYING_REPLY, RR_SAYING_ASIDE, RR_SAYING_NOTICE, RR_SAYING_DATA, RR_SAYING_AGAIN };
 
 struct rr_device {
-    const struct rr_port *port;
+    const RR_FLASH struct rr_port *port;
     void *self;
     uint32_t tick;
     uint32_t boot;
     struct rr_latch latch;
-    struct rr_finding late; /* an order of this tick came late */
+    int32_t late_by; /* an order of this tick came so many ticks late; negative = none did */
     struct rr_finding last_trip;
     uint32_t last_trip_tick;
     uint32_t renewed; /* tick of the last lease renewal */
@@ -145,9 +157,12 @@ struct rr_device {
     uint32_t lease_ticks;
     uint16_t over_for; /* ticks in a row beyond the supply's limits */
     uint16_t under_for;
-    bool at_ceiling;
-    bool at_slew;
-    bool locked;
+    bool at_ceiling : 1;
+    bool at_slew : 1;
+    bool locked : 1;
+    bool packing_busy : 1; /* a trail answer is in the making */
+    bool taking : 1;       /* requests are being carried out: notices wait for (f) of the tick */
+    bool garbled_ever : 1;
     struct rr_inputs inputs; /* of this tick, offsets taken off */
     struct rr_limits limits;
     struct rr_axis axis[RR_AXES];
@@ -159,7 +174,6 @@ struct rr_device {
         struct rr_orders orders;
         struct rr_packing packing;
     } u;
-    bool packing_busy;
     struct rr_line line;
     uint8_t heard; /* enum rr_line_kind: a line that waits to be carried out */
     struct rr_memory memory;
@@ -169,18 +183,16 @@ struct rr_device {
     struct rr_notices notices;
     struct rr_voice voice;
     uint8_t saying; /* enum rr_saying */
-    bool taking;    /* requests are being carried out: notices wait for (f) of the tick */
     uint8_t unsaved[(RR_LIMITS + 7) / 8]; /* bit by place: a limit's value is not in the store yet */
     uint32_t lines;
     uint32_t repeats;
     uint32_t garbled_told;
     uint32_t garbled_at;
-    bool garbled_ever;
 };
 
 /* Takes over after a start: outputs off, limits from the store, notice `boot`. `cause` is the reset's (enum rr_cause),
  * `fault` the number of a failed self-test or 0. */
-void rr_device_start(struct rr_device *device, const struct rr_port *port, void *self, uint8_t cause, int32_t fault);
+void rr_device_start(struct rr_device *device, const RR_FLASH struct rr_port *port, void *self, uint8_t cause, int32_t fault);
 
 /* Carries out one tick. */
 void rr_device_tick(struct rr_device *device);
@@ -198,6 +210,9 @@ void rr_device_settle(struct rr_device *device);
 /* answer.c: carries out a request; may it be answered yet? */
 bool rr_answer_may(const struct rr_device *device);
 void rr_answer_request(struct rr_device *device);
+/* body.c: keeps a request's body, and knows it again. */
+void rr_body_keep(struct rr_body *body, const char *text);
+bool rr_body_is(const struct rr_body *body, const char *text);
 /* reply.c: answers as numbers, and the fields they are said in. Each `..._field` gives the voice its next field, and
  * returns false where there is none. */
 void rr_reply_note(struct rr_device *device, uint8_t word, uint32_t told);

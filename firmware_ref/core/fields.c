@@ -2,7 +2,6 @@
 #include "fields.h"
 
 #include <stddef.h>
-#include <string.h>
 
 struct word_row {
     char name[9];
@@ -11,7 +10,7 @@ struct word_row {
 };
 
 #define ROW(NAME, word, kinds, states) {word, kinds, states},
-static const struct word_row words[RR_WORD_COUNT] = {RR_WORD_LIST(ROW)};
+static const RR_FLASH struct word_row words[RR_WORD_COUNT] = {RR_WORD_LIST(ROW)};
 #undef ROW
 
 /* The length of the field that begins at text: up to a space or the end. */
@@ -24,9 +23,14 @@ static uint8_t field_length(const char *text)
     return length;
 }
 
-static bool is_word(const char *field, uint8_t length, const char *word)
+static bool is_word(const char *field, uint8_t length, const RR_FLASH char *word)
 {
-    return strncmp(field, word, length) == 0 && word[length] == '\0';
+    for (uint8_t i = 0; i < length; i++) {
+        if (field[i] != word[i] || word[i] == '\0') {
+            return false;
+        }
+    }
+    return word[length] == '\0';
 }
 
 uint8_t rr_fields_word(const char *text, const char **rest)
@@ -46,6 +50,9 @@ uint8_t rr_fields_states(uint8_t word)
     return words[word].states;
 }
 
+#define TENTH      429496729ul /* of 2^32 - 1, so that no division is needed */
+#define TENTH_REST 5u
+
 /* `0`, or a digit 1 to 9 and further digits, at most `greatest`. */
 static bool read_size(const char *field, uint8_t length, uint32_t greatest, uint32_t *value)
 {
@@ -58,13 +65,13 @@ static bool read_size(const char *field, uint8_t length, uint32_t greatest, uint
             return false;
         }
         uint8_t digit = (uint8_t)(field[i] - '0');
-        if (sum > (greatest - digit) / 10u) {
-            return false;
+        if (i == 9 && (sum > TENTH || (sum == TENTH && digit > TENTH_REST))) {
+            return false; /* the tenth digit may go past 32 bits */
         }
         sum = sum * 10u + digit;
     }
     *value = sum;
-    return true;
+    return sum <= greatest;
 }
 
 static bool read_signed(const char *field, uint8_t length, uint32_t *value)
@@ -108,16 +115,16 @@ struct named {
 };
 
 #define NAMED(NAME, word, number) {word, number},
-static const struct named rests[] = {RR_REST_LIST(NAMED)};
-static const struct named forms[] = {RR_FORM_LIST(NAMED)};
+static const RR_FLASH struct named rests[] = {RR_REST_LIST(NAMED)};
+static const RR_FLASH struct named forms[] = {RR_FORM_LIST(NAMED)};
 #undef NAMED
 #define NAMED(NAME, word, number, per, least, greatest, standard, tighter) {word, number},
-static const struct named limits[] = {RR_LIMIT_LIST(NAMED)};
+static const RR_FLASH struct named limits[] = {RR_LIMIT_LIST(NAMED)};
 #undef NAMED
 
-static bool read_named(const struct named *table, size_t rows, const char *field, uint8_t length, uint32_t *value)
+static bool read_named(const RR_FLASH struct named *table, uint8_t rows, const char *field, uint8_t length, uint32_t *value)
 {
-    for (size_t i = 0; i < rows; i++) {
+    for (uint8_t i = 0; i < rows; i++) {
         if (is_word(field, length, table[i].name)) {
             *value = table[i].number;
             return true;
@@ -152,7 +159,7 @@ static bool read_field(char kind, const char *field, uint8_t length, uint32_t *v
 
 bool rr_fields_arguments(uint8_t word, const char *rest, struct rr_arguments *arguments)
 {
-    const char *kind = words[word].kinds;
+    const RR_FLASH char *kind = words[word].kinds;
     arguments->count = 0;
     while (*rest == ' ') {
         const char *field = rest + 1;

@@ -19,7 +19,7 @@ static bool hear(struct rr_device *device)
             return i != 0;
         }
         enum rr_line_kind kind = rr_line_take(&device->line, (uint8_t)byte);
-        device->heard = kind == RR_LINE_GARBLED ? (uint8_t)RR_LINE_NONE : (uint8_t)kind;
+        device->heard = (uint8_t)(kind == RR_LINE_GARBLED ? RR_LINE_NONE : kind);
     }
     return true;
 }

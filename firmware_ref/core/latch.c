@@ -4,7 +4,7 @@
 #include "seeded.h"
 
 #define CATEGORY(NAME, word, number, category) category,
-static const uint8_t categories[RR_TRIP_COUNT] = {RR_TRIP_LIST(CATEGORY)};
+static const RR_FLASH uint8_t categories[RR_TRIP_COUNT] = {RR_TRIP_LIST(CATEGORY)};
 #undef CATEGORY
 
 bool rr_latch_is_live(const struct rr_latch *latch)

@@ -4,8 +4,6 @@
 #include "check.h"
 #include "seeded.h"
 
-#include <string.h>
-
 #define CHECK_LENGTH 5u /* a space and four hex digits */
 
 static int8_t hex_value(char c)
@@ -44,6 +42,18 @@ static bool check_is_right(const char *text, uint8_t body)
     return true;
 }
 
+static const RR_FLASH char bare_stop[] = "stop";
+static const RR_FLASH char bare_who[] = "who";
+
+static bool is_bare(const char *text, const RR_FLASH char *word)
+{
+    while (*text == *word && *word != '\0') {
+        text++;
+        word++;
+    }
+    return *text == *word;
+}
+
 /* A whole line, its LF and a CR before it gone: what is it? */
 static enum rr_line_kind judged(struct rr_line *line, uint8_t length)
 {
@@ -52,10 +62,10 @@ static enum rr_line_kind judged(struct rr_line *line, uint8_t length)
         return RR_LINE_GARBLED;
     }
     text[length] = '\0';
-    if (strcmp(text, "stop") == 0) {
+    if (is_bare(text, bare_stop)) {
         return RR_LINE_BARE_STOP;
     }
-    if (strcmp(text, "who") == 0) {
+    if (is_bare(text, bare_who)) {
         return RR_LINE_BARE_WHO;
     }
     if (length < 2u + CHECK_LENGTH) {

@@ -27,8 +27,8 @@ bool rr_orders_take_due(struct rr_orders *orders, uint32_t now, struct rr_order 
 
 void rr_glide_begin(struct rr_glide *glide, const struct rr_order *order, int32_t goal)
 {
-    uint32_t way = goal >= glide->value ? (uint32_t)(goal - glide->value) : (uint32_t)(glide->value - goal);
-    glide->goal = goal;
+    glide->down = goal < glide->value;
+    uint32_t way = glide->down ? (uint32_t)(glide->value - goal) : (uint32_t)(goal - glide->value);
     glide->ticks = order->ticks;
     glide->left = order->ticks;
     glide->sum = 0;
@@ -53,15 +53,13 @@ void rr_glide_step(struct rr_glide *glide)
         glide->sum -= glide->ticks;
         step++;
     }
-    glide->value = glide->goal >= glide->value ? (int32_t)(glide->value + (int32_t)step)
-                                               : (int32_t)(glide->value - (int32_t)step);
+    glide->value = glide->down ? (int32_t)(glide->value - (int32_t)step) : (int32_t)(glide->value + (int32_t)step);
     glide->left--;
 }
 
 void rr_glide_end(struct rr_glide *glide, int32_t value)
 {
     glide->value = value;
-    glide->goal = value;
     glide->left = 0;
     glide->pending = false;
 }

@@ -32,13 +32,13 @@ bool rr_orders_take_due(struct rr_orders *orders, uint32_t now, struct rr_order 
 /* A value on its way: at tick T + k it is d + s floor(|D - d| k / n), without a division in the tick (SPEC ORDER-4). */
 struct rr_glide {
     int32_t value;
-    int32_t goal;
     uint32_t whole; /* floor(|D - d| / n) */
     uint32_t part;  /* |D - d| mod n */
     uint32_t sum;   /* running sum of parts, below n */
     uint32_t ticks; /* n */
     uint32_t left;  /* ticks to go; 0 = at the goal */
     uint8_t tag;    /* of the order */
+    bool down;      /* the goal lies below */
     bool pending;   /* its `done` has not been sent */
 };
 

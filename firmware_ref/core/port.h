@@ -1,6 +1,6 @@
 /* How hardware enters the core: one const struct of functions, filled in by a port.
  *
- * The core calls every function from `rr_device_tick` or `rr_device_start` only, never from an interrupt, and never one
+ * The core calls every function from `rr_device_start`, `rr_device_tick` and `rr_device_idle` only, never from an interrupt, and never one
  * from inside another. A port may fill its receive ring, count edges and keep PWM running in interrupts; what it shares
  * with them it must guard itself. */
 #ifndef RAMPRIG_PORT_H
@@ -39,16 +39,17 @@ struct rr_port {
     void (*pulse)(void *self, uint8_t servo, uint32_t pulse_ns);
     /* All outputs off, by the shortest way there is. */
     void (*off)(void *self);
-    /* Reads or writes the store that survives power-off: `length` bytes at `offset`. Returns false where there is none.
-     * A write may take the bytes in any order, but must be done with all of them before the next write begins. */
+    /* Reads or writes the store that survives power-off: `length` bytes at `offset`. Returns false, nothing done, where there is none or it is busy.
+     * A write may take the bytes in any order, but must be done with all of them before the next write begins; a store that
+     * writes on after the return must take a second write that goes on where the first ends. */
     bool (*load)(void *self, uint16_t offset, void *bytes, uint16_t length);
     bool (*store)(void *self, uint16_t offset, const void *bytes, uint16_t length);
     /* The worst time of a tick so far in us, 0 where not measured. */
     uint32_t (*worst_us)(void *self);
     /* Identity: three tokens (SPEC WHO-1). */
-    const char *firmware;
-    const char *board;
-    const char *serial;
+    const RR_FLASH char *firmware;
+    const RR_FLASH char *board;
+    const RR_FLASH char *serial;
 };
 
 #endif

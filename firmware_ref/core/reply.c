@@ -36,7 +36,7 @@ static void note_state(struct rr_device *device, uint32_t *value)
     }
 #if RR_SERVOS > 0
     for (uint8_t i = 0; i < RR_SERVOS; i++) {
-        *value++ = (uint32_t)device->servo[i].pulse_ns / 1000u;
+        *value++ = rr_servo_us(device->servo[i].pulse_ns);
     }
 #endif
 }

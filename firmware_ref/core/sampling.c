@@ -52,7 +52,7 @@ static uint8_t gather(const struct rr_device *device, uint32_t mask, int32_t *va
     bits = (uint16_t)mask >> SERVO_BIT;
     for (uint8_t i = 0; i < RR_SERVOS; i++) {
         if ((bits >> i & 1u) != 0) {
-            *next++ = device->servo[i].pulse_ns / 1000;
+            *next++ = rr_servo_us(device->servo[i].pulse_ns);
         }
     }
 #endif

@@ -26,44 +26,51 @@ static uint16_t place_of(uint8_t slot, uint8_t copy)
     return (uint16_t)(slot * RR_SLOT + copy * RR_RECORD);
 }
 
-/* Reads one of the slot's two records; false where it is not whole. */
-static bool read_record(const struct rr_port *port, void *self, uint8_t slot, uint8_t copy, uint8_t *record)
+static bool is_whole(const uint8_t *record, uint8_t slot)
 {
-    return port->load(self, place_of(slot, copy), record, RR_RECORD) && record[GENERATION] != ERASED &&
+    return record[GENERATION] != ERASED &&
            check_of(record, slot) == (uint16_t)(record[CHECK] << 8 | record[CHECK + 1u]);
 }
 
-/* The newer whole copy: 0, 1, or 2 where there is none. `record` holds it. */
-static uint8_t newer(const struct rr_port *port, void *self, uint8_t slot, uint8_t *record)
+enum newer { FIRST, SECOND, NEITHER, BUSY };
+
+/* Which of the slot's two records is the newer whole one; `record` holds it. BUSY where they cannot be read now. */
+static uint8_t newer(const RR_FLASH struct rr_port *port, void *self, uint8_t slot, uint8_t *record)
 {
     uint8_t other[RR_RECORD];
-    bool first = read_record(port, self, slot, 0, record);
-    bool second = read_record(port, self, slot, 1, other);
-    if (second && (!first || other[GENERATION] == next_generation(record[GENERATION]))) {
+    if (!port->load(self, place_of(slot, 0), record, RR_RECORD) ||
+        !port->load(self, place_of(slot, 1), other, RR_RECORD)) {
+        return BUSY;
+    }
+    bool first = is_whole(record, slot);
+    if (is_whole(other, slot) && (!first || other[GENERATION] == next_generation(record[GENERATION]))) {
         for (uint8_t i = 0; i < RR_RECORD; i++) {
             record[i] = other[i];
         }
-        return 1;
+        return SECOND;
     }
-    return first ? 0 : 2;
+    return first ? FIRST : NEITHER;
 }
 
-bool rr_store_read(const struct rr_port *port, void *self, uint8_t slot, int32_t *value)
+bool rr_store_read(const RR_FLASH struct rr_port *port, void *self, uint8_t slot, int32_t *value)
 {
     uint8_t record[RR_RECORD];
-    if (newer(port, self, slot, record) == 2) {
+    if (newer(port, self, slot, record) >= NEITHER) {
         return false;
     }
     *value = (int32_t)((uint32_t)record[0] << 24 | (uint32_t)record[1] << 16 | (uint32_t)record[2] << 8 | record[3]);
     return true;
 }
 
-bool rr_store_write(const struct rr_port *port, void *self, uint8_t slot, int32_t value)
+bool rr_store_write(const RR_FLASH struct rr_port *port, void *self, uint8_t slot, int32_t value)
 {
     uint8_t record[RR_RECORD];
     uint8_t copy = newer(port, self, slot, record);
-    uint16_t place = place_of(slot, copy == 0 ? 1 : 0);
-    record[GENERATION] = copy == 2 ? 0 : next_generation(record[GENERATION]);
+    if (copy == BUSY) {
+        return false;
+    }
+    uint16_t place = place_of(slot, copy == FIRST ? 1 : 0);
+    record[GENERATION] = copy == NEITHER ? 0 : next_generation(record[GENERATION]);
     for (uint8_t i = 0; i < CHECK; i++) {
         record[i] = (uint8_t)((uint32_t)value >> (24 - 8 * i));
     }

@@ -24,7 +24,7 @@ bool rr_trail_wants(const struct rr_trail *trail, bool live)
 struct rr_record *rr_trail_add(struct rr_trail *trail, uint32_t tick)
 {
     struct rr_record *record = &trail->record[trail->next];
-    trail->next = (uint16_t)(trail->next + 1u == RR_TRAIL ? 0 : trail->next + 1u);
+    trail->next = (rr_trail_index)(trail->next + 1u == RR_TRAIL ? 0 : trail->next + 1u);
     trail->last_tick = tick;
     if (trail->held < RR_TRAIL) {
         trail->held++;

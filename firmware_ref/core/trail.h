@@ -15,13 +15,19 @@ struct rr_record {
     uint16_t bits; /* state bits */
 };
 
+#if RR_TRAIL < 256
+typedef uint8_t rr_trail_index;
+#else
+typedef uint16_t rr_trail_index;
+#endif
+
 enum rr_trail_phase { RR_TRAIL_RUNNING, RR_TRAIL_ENDING, RR_TRAIL_FROZEN };
 
 struct rr_trail {
     struct rr_record record[RR_TRAIL];
-    uint16_t next;                /* where the next record goes */
-    uint16_t held;                /* records in the ring */
-    uint16_t to_go;               /* records still to take before it freezes */
+    rr_trail_index next;          /* where the next record goes */
+    rr_trail_index held;          /* records in the ring */
+    rr_trail_index to_go;         /* records still to take before it freezes */
     uint32_t last_tick;           /* of the newest record */
     int32_t last_counts[RR_AXES]; /* of the newest record, whole */
     uint8_t phase;

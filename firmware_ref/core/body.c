@@ -1,0 +1,45 @@
+/* A request's body, kept to know a repetition (SPEC TAG-3). */
+#include "device.h"
+
+#if RR_KEEP_BODY
+
+#include <string.h>
+
+void rr_body_keep(struct rr_body *body, const char *text)
+{
+    strcpy(body->text, text);
+}
+
+bool rr_body_is(const struct rr_body *body, const char *text)
+{
+    return strcmp(body->text, text) == 0;
+}
+
+#else
+
+#include "check.h"
+
+void rr_body_keep(struct rr_body *body, const char *text)
+{
+    body->length = 0;
+    body->crc = RR_CRC16_START;
+    body->sum = 0;
+    body->sum_of_sums = 0;
+    while (*text != '\0') {
+        uint8_t byte = (uint8_t)*text++;
+        body->length++;
+        body->crc = rr_crc16(body->crc, byte);
+        body->sum = (uint16_t)(body->sum + byte);
+        body->sum_of_sums = (uint16_t)(body->sum_of_sums + body->sum);
+    }
+}
+
+bool rr_body_is(const struct rr_body *body, const char *text)
+{
+    struct rr_body other;
+    rr_body_keep(&other, text);
+    return other.length == body->length && other.crc == body->crc && other.sum == body->sum &&
+           other.sum_of_sums == body->sum_of_sums;
+}
+
+#endif
