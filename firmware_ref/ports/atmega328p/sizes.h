@@ -1,0 +1,30 @@
+/* The core's sizes on this board: 2 kB of memory, an 8-bit adder, program memory that is not read as data. */
+#ifndef ATMEGA328P_SIZES_H
+#define ATMEGA328P_SIZES_H
+
+#define RR_AXES     1
+#define RR_SERVOS   2
+#define RR_MAX_DUTY 9800 /* the high side's bootstrap capacitor needs the low side on for a part of each period */
+#define RR_QUEUE    8
+#define RR_TRAIL    32
+#define RR_KEEP     0
+#define RR_NOTICES  6
+#define RR_PAYLOAD  56 /* characters: 42 bytes, of which there are two */
+#define RR_TRAIL_PAYLOAD 44
+#define RR_CAPS (RR_CAP_ENCODER | RR_CAP_CURRENT | RR_CAP_SUPPLY | RR_CAP_KEEPS_LIMITS | RR_CAP_BREAK)
+
+/* Lines are made between the ticks, eight characters at a time. */
+#define RR_SPREAD 1
+#define RR_PIECE  8
+
+#define RR_FLASH __flash
+#define RR_SUM   __uint24
+#define RR_KEEP_BODY 0
+
+/* 10-bit converters: currents to 13.5 A, supplies to 21.5 V (board.h), and a shaft that turns less than 32768 counts in
+ * the 32 ms of the trail. */
+#define RR_TRAIL_COUNTS  uint16_t
+#define RR_TRAIL_CURRENT int16_t
+#define RR_TRAIL_SUPPLY  uint16_t
+
+#endif

@@ -1,0 +1,64 @@
+/* The 1 kHz tick; see tick.h. */
+#include "tick.h"
+
+#include <avr/interrupt.h>
+#include <avr/io.h>
+#include <avr/sleep.h>
+
+/* 16 MHz / 64 / 250 = 1 kHz. */
+#define TOP 249u
+#define US_A_STEP 4u
+
+static volatile uint8_t due; /* ticks not yet begun: more than one where main was late, so that none is left out */
+static uint16_t worst_steps;
+
+ISR(TIMER0_COMPA_vect)
+{
+    due++;
+}
+
+void tick_begin(void)
+{
+    OCR0A = TOP;
+    TCCR0A = 1u << WGM01;
+    TCCR0B = 1u << CS01 | 1u << CS00;
+    TIMSK0 = 1u << OCIE0A;
+    SMCR = 0; /* sleep is idle: timers, UART and converter run on */
+}
+
+bool tick_take(void)
+{
+    if (due == 0) {
+        return false;
+    }
+    cli();
+    due--;
+    sei();
+    return true;
+}
+
+void tick_end(void)
+{
+    uint16_t steps = TCNT0;
+    steps = (uint16_t)(steps + due * (TOP + 1u));
+    if (steps > worst_steps) {
+        worst_steps = steps;
+    }
+}
+
+uint16_t tick_worst_us(void)
+{
+    return (uint16_t)(worst_steps * US_A_STEP);
+}
+
+void tick_sleep(void)
+{
+    cli();
+    if (due == 0) {
+        sleep_enable();
+        sei(); /* the next instruction still runs before an interrupt */
+        sleep_cpu();
+        sleep_disable();
+    }
+    sei();
+}

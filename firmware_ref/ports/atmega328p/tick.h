@@ -1,0 +1,22 @@
+/* The 1 kHz tick by Timer0, how long the work in it takes, and sleep until something happens. */
+#ifndef ATMEGA328P_TICK_H
+#define ATMEGA328P_TICK_H
+
+#include <stdbool.h>
+#include <stdint.h>
+
+void tick_begin(void);
+
+/* True when a tick is due; it is then taken as begun. */
+bool tick_take(void);
+
+/* The work of the tick is done: notes its time, from when it was due. */
+void tick_end(void);
+
+/* The worst time so far in us, to 4 us. */
+uint16_t tick_worst_us(void);
+
+/* Sleeps until the next interrupt, unless a tick is due. */
+void tick_sleep(void);
+
+#endif
