@@ -61,7 +61,9 @@ def test_0_a_rehearsal_that_passes(here: Path, capsys: pytest.CaptureFixture[str
     said = capsys.readouterr()
     folder = only_run()
     assert said.out == f"run folder: {folder}\npassed: all steps carried out, 1 expectation held\n"
-    assert said.err == running.NOT_PROVED + "\n"
+    on, not_proved = said.err.splitlines()
+    assert on.startswith("rehearsing on the ")
+    assert not_proved == running.NOT_PROVED
     assert "short-rehearsal" in folder.name
     manifest = read_manifest(folder)
     assert (manifest["verdict"], manifest["settings"]["rehearsal"]) == ("passed", True)
@@ -175,7 +177,7 @@ def test_a_bug_in_a_run_stops_the_motors_first_and_says_so(
     monkeypatch.setattr(running, "how_far", broken)
     monkeypatch.setattr("ramprig.cli.progress.LINE_EVERY_S", 0.0)
     assert main(["rehearse", "short.yaml"]) == EXIT_BUG
-    stopped, bug, where = capsys.readouterr().err.splitlines()
+    _, stopped, bug, where = capsys.readouterr().err.splitlines()
     assert stopped == "The motors were stopped first: confirmed."
     assert bug == "This is a bug in ramprig: ZeroDivisionError: a bug of the test"
     path = Path(where.split()[4].rstrip(";"))

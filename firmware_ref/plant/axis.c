@@ -74,6 +74,12 @@ double plant_axis_bridge_current_a(const struct plant_axis *axis)
     return axis->per_duty > 0.0 ? axis->current_a : -axis->current_a;
 }
 
+void plant_axis_set_resistance(struct plant_axis *axis, double resistance_20_ohm)
+{
+    axis->resistance_20_ohm = resistance_20_ohm;
+    (void)rebuild(axis); /* a motor possible at the start is not made too stiff by what the faults set */
+}
+
 void plant_axis_set_load(struct plant_axis *axis, double load_nm)
 {
     axis->load_motor_nm = load_nm / axis->parameters->motor.gear_ratio;

@@ -57,6 +57,9 @@ void plant_axis_warm(struct plant_axis *axis, uint32_t ticks);
 /* The current as the bridge's sensor sees it. */
 double plant_axis_bridge_current_a(const struct plant_axis *axis);
 
+/* The winding's resistance at 20 degC, brushes included. */
+void plant_axis_set_resistance(struct plant_axis *axis, double resistance_20_ohm);
+
 /* Torque at the output shaft against positive motion. */
 void plant_axis_set_load(struct plant_axis *axis, double load_nm);
 void plant_axis_set_jammed(struct plant_axis *axis, bool jammed);

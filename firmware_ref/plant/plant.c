@@ -4,6 +4,7 @@
 #include <math.h>
 #include <string.h>
 
+#define OPEN_OHM      10000.0 /* what a winding with an open lead has: far less flows than a sensor can tell */
 #define WARM_EVERY_US 50000u /* how often winding temperatures are brought up to date */
 
 bool plant_start(struct plant *plant, const struct plant_parameters *parameters, uint32_t tick_us, uint64_t seed)
@@ -12,6 +13,7 @@ bool plant_start(struct plant *plant, const struct plant_parameters *parameters,
     plant_supply_start(&plant->supply, &plant->parameters.supply, tick_us);
     bool possible = true;
     for (uint8_t i = 0; i < parameters->axes; i++) {
+        plant->wired_to[i] = i;
         possible = plant_axis_start(&plant->axis[i], &plant->parameters.axis[i], tick_us) && possible;
     }
     for (uint8_t i = 0; i < parameters->servos; i++) {
@@ -126,6 +128,13 @@ bool plant_set_fault(struct plant *plant, const char *name, uint8_t axis, double
         plant_axis_set_jammed(&plant->axis[axis], on);
     } else if (strcmp(name, "current_offset") == 0) {
         plant->sensor[axis].offset_ma = plant->parameters.axis[axis].sensor.offset_ma + amount;
+    } else if (strcmp(name, "lead_open") == 0) {
+        double usual_ohm = plant->parameters.axis[axis].motor.resistance_20_ohm;
+        plant_axis_set_resistance(&plant->axis[axis], on ? OPEN_OHM : usual_ohm);
+    } else if (strcmp(name, "encoders_exchanged") == 0) {
+        for (uint8_t i = 0; i < plant->parameters.axes; i++) {
+            plant->wired_to[i] = (uint8_t)((i + on) % plant->parameters.axes);
+        }
     } else if (strcmp(name, "weak_supply") == 0) {
         plant_supply_set_resistance(&plant->supply,
                                     plant->parameters.supply.resistance_ohm * (on ? amount : 1.0));

@@ -23,6 +23,7 @@ struct plant {
     struct plant_servo servo[PLANT_SERVOS_MAX];
     struct plant_encoder encoder[PLANT_AXES_MAX];
     struct plant_current_sensor sensor[PLANT_AXES_MAX];
+    uint8_t wired_to[PLANT_AXES_MAX]; /* the axis whose encoder is plugged in where that of axis n belongs */
     uint32_t warm_ticks;
     uint32_t to_warm;
 };

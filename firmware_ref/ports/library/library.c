@@ -85,18 +85,9 @@ void library_reset(struct simulated *s, uint8_t cause)
     simulated_reset(s, cause);
 }
 
-/* A fault by the mock's name for it; false for one that is not the board's or plant's. */
 int library_fault(struct simulated *s, const char *name, uint8_t axis, double amount)
 {
-    if (strcmp(name, "brownout_on_start") == 0) {
-        s->sag_ticks = (uint32_t)(amount + 0.5);
-        return true;
-    }
-    if (strcmp(name, "deaf") == 0) {
-        s->deaf = amount > 0.0;
-        return true;
-    }
-    return plant_set_fault(&s->plant, name, axis, amount);
+    return simulated_fault(s, name, axis, amount);
 }
 
 /* The store's bytes, and whether they have changed since the last call. */

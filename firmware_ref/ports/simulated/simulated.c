@@ -58,7 +58,8 @@ static void inputs(void *self, struct rr_inputs *read)
     memset(read, 0, sizeof *read);
     for (uint8_t i = 0; i < RR_AXES; i++) {
         if ((RR_CAPS & RR_CAP_ENCODER) != 0) {
-            read->counts[i] = (int32_t)((uint32_t)plant_read_counts(&s->plant, i) - s->counts_zero[i]);
+            uint8_t wired = s->plant.wired_to[i];
+            read->counts[i] = (int32_t)((uint32_t)plant_read_counts(&s->plant, wired) - s->counts_zero[wired]);
         }
         if ((RR_CAPS & RR_CAP_CURRENT) != 0) {
             read->current_ma[i] = plant_read_current_ma(&s->plant, i);
@@ -321,6 +322,19 @@ void simulated_receive(struct simulated *s, const uint8_t *bytes, uint32_t lengt
 void simulated_purge(struct simulated *s)
 {
     s->wire.to_board_count = 0;
+}
+
+bool simulated_fault(struct simulated *s, const char *name, uint8_t axis, double amount)
+{
+    if (strcmp(name, "brownout_on_start") == 0) {
+        s->sag_ticks = (uint32_t)(amount + 0.5);
+        return true;
+    }
+    if (strcmp(name, "deaf") == 0) {
+        s->deaf = amount > 0.0;
+        return true;
+    }
+    return plant_set_fault(&s->plant, name, axis, amount);
 }
 
 void simulated_break(struct simulated *s)

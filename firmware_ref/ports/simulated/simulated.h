@@ -84,6 +84,9 @@ void simulated_reset(struct simulated *s, uint8_t cause);
 void simulated_receive(struct simulated *s, const uint8_t *bytes, uint32_t length);
 void simulated_purge(struct simulated *s);
 
+/* Switches a fault of the board or plant, by the mock's name for it; 0 is off. False for a name that is neither's. */
+bool simulated_fault(struct simulated *s, const char *name, uint8_t axis, double amount);
+
 /* Holds the receive line in the BREAK condition. */
 void simulated_break(struct simulated *s);
 

@@ -87,12 +87,12 @@ def _told(found: Found) -> int:
 
 def _look_at_bench(path: Path, url: str | None) -> int:
     from ramprig.bench import load_bench
-    from ramprig.cli.running import Way, mock_url, open_port_for
+    from ramprig.cli.running import SIMULATED, Way, mock_url, open_port_for
     from ramprig.session import Session, Wanted
 
     bench = load_bench(path)
     url = bench.port.url if url is None else url
-    if url.startswith("mock:"):
+    if url.startswith(SIMULATED):
         url = mock_url(url, path)
     try:
         port = open_port_for(Way(url=url, virtual=False, runs=None), bench)

@@ -18,7 +18,7 @@ from ramprig.errors import Bug, RamprigError
 
 COMMANDS = {
     "check": "print what a sequence or bench file means, before anything moves",
-    "rehearse": "run a sequence on the mock in virtual time",
+    "rehearse": "run a sequence on a simulated board in virtual time",
     "run": "run a sequence on the bench",
     "shell": "drive the bench by hand",
     "mock": "serve a board in software on a pseudo-terminal or a TCP port",

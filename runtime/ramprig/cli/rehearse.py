@@ -1,10 +1,11 @@
-"""`ramprig rehearse FILE`: a sequence on the mock in virtual time, where hours pass in seconds and nothing moves."""
+"""`ramprig rehearse FILE`: a sequence on a simulated board in virtual time: hours pass in seconds, nothing moves."""
 
 from __future__ import annotations
 
 import argparse
 
 from ramprig.cli.running import NOT_PROVED, Way, add_run_arguments, carry_out_run, mock_url
+from ramprig.cli.say import tell
 
 
 def declare(parser: argparse.ArgumentParser) -> None:
@@ -15,16 +16,22 @@ def declare(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--fault", action="append", default=[], metavar="NAME[:AXIS][=VALUE]", help="see `ramprig mock --faults`"
     )
+    parser.add_argument(
+        "--on", choices=("core", "mock"), help="the firmware core in C, or the mock in Python (default: core if it can)"
+    )
     parser.epilog = NOT_PROVED
 
 
 def carry_out(args: argparse.Namespace) -> int:
     """Rehearse; returns the exit code that the run would have."""
     from ramprig.cli.files import read_pair, values_of
+    from ramprig.mock.core import rehearsal_on
 
     pair = read_pair(args.file, bench=args.bench, values=values_of(args.settings))
+    device = rehearsal_on(pair.bench, wanted=args.on)
+    tell(f"rehearsing on {device.on}")
     way = Way(
-        url=mock_url("mock:", pair.bench_path, virtual=True, seed=args.seed, faults=args.fault),
+        url=mock_url(device.scheme, pair.bench_path, virtual=True, seed=args.seed, faults=args.fault),
         virtual=True,
         runs=None if args.no_record else args.runs,
         title=args.title or f"{pair.sequence.name} rehearsal",

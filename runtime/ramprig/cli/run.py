@@ -6,7 +6,7 @@ import argparse
 import sys
 from typing import TYPE_CHECKING
 
-from ramprig.cli.running import Way, add_run_arguments, carry_out_run, mock_url, on_terminal
+from ramprig.cli.running import SIMULATED, Way, add_run_arguments, carry_out_run, mock_url, on_terminal
 from ramprig.cli.say import tell
 from ramprig.errors import StoppedByUser
 
@@ -31,8 +31,8 @@ def carry_out(args: argparse.Namespace) -> int:
 
     pair = read_pair(args.file, bench=args.bench, values=values_of(args.settings))
     url = pair.bench.port.url if args.port is None else args.port
-    is_mock = url.startswith("mock:")
-    if is_mock:
+    is_simulated = url.startswith(SIMULATED)
+    if is_simulated:
         url = mock_url(url, pair.bench_path)
     elif not args.yes and on_terminal():
         ask(pair, url)

@@ -25,6 +25,8 @@ if TYPE_CHECKING:
 FAILURES_SHOWN = 20
 """Failed expectations printed at the end; all are in the run folder."""
 RUNS = Path("runs")
+SIMULATED = ("mock:", "core:")
+"""Ports that are made from the bench file, where they do not name one."""
 
 NOT_PROVED = (
     "A rehearsal shows that the sequence does what you mean, against a model with the bench file's figures. It does "

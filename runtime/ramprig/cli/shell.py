@@ -6,7 +6,7 @@ import argparse
 from dataclasses import replace
 from pathlib import Path
 
-from ramprig.cli.running import RUNS, Way, mock_url, open_port_for
+from ramprig.cli.running import RUNS, SIMULATED, Way, mock_url, open_port_for
 from ramprig.errors import UsageError
 
 USUAL_BENCH = Path("bench.yaml")
@@ -30,7 +30,7 @@ def carry_out(args: argparse.Namespace) -> int:
         raise UsageError("which bench? Give --bench FILE, or begin where there is a bench.yaml")
     bench = load_bench(path)
     url = bench.port.url if args.port is None else args.port
-    if url.startswith("mock:"):
+    if url.startswith(SIMULATED):
         url = mock_url(url, path)
     way = Way(url=url, virtual=False, runs=args.runs)
     bench = replace(bench, port=replace(bench.port, url=url))

@@ -41,14 +41,18 @@ class Rehearsal:
     on: str
 
 
-def rehearsal_on(bench: Bench) -> Rehearsal:
-    """The firmware core where it can be built for the bench's board, else the mock.
+def rehearsal_on(bench: Bench, *, wanted: str | None = None) -> Rehearsal:
+    """The firmware core where it can be built for the bench's board, else the mock; or the one that is `wanted`.
 
-    Raises FileError at what the bench's model lacks.
+    Raises UsageError where the core is wanted and cannot be built, and FileError at what the bench's model lacks.
     """
+    if wanted == "mock":
+        return Rehearsal(scheme="mock:", on="the mock in Python")
     setup = setup_of_bench(bench)
     try:
         load(defines(setup.board))
     except UsageError as error:
+        if wanted is not None:
+            raise
         return Rehearsal(scheme="mock:", on=f"the mock in Python ({error})")
     return Rehearsal(scheme="core:", on="the firmware core and plant in C")
