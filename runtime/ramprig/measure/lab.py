@@ -22,7 +22,7 @@ from ramprig.session.events import Event, Restarted, Tripped
 from ramprig.session.gaps import Accounting
 from ramprig.session.session import Session
 
-from .refusal import CannotMeasure
+from .refusal import NotMeasurable
 from .script import Script
 from .trace import Trace, columns_of
 
@@ -67,7 +67,7 @@ class _Listening:
     def on_block(self, block: Block) -> None:
         """Keep it."""
         if len(self.blocks) >= BLOCKS_MAX:
-            raise CannotMeasure("a stage went on for longer than its samples can be kept")
+            raise NotMeasurable("a stage went on for longer than its samples can be kept")
         self.blocks.append(block)
 
     def on_session_event(self, event: Event) -> None:
@@ -132,12 +132,12 @@ class Lab:
         return max(1, 2 * max(1, len(self.rig.axes)), -(-self.rig.tick_us // 1000))
 
     def run(self, script: Script) -> Trace:
-        """Carry out a stage to its end; raises CannotMeasure where it did not come there."""
+        """Carry out a stage to its end; raises NotMeasurable where it did not come there."""
         trace = self.attempt(script)
         if not trace.whole:
-            raise CannotMeasure(f"'{trace.name}' was not carried out to its end: {trace.ending}")
+            raise NotMeasurable(f"'{trace.name}' was not carried out to its end: {trace.ending}")
         if not len(trace.ticks):
-            raise CannotMeasure(f"no samples came in '{trace.name}'")
+            raise NotMeasurable(f"no samples came in '{trace.name}'")
         return trace
 
     def attempt(self, script: Script) -> Trace:

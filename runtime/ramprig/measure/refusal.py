@@ -8,7 +8,9 @@ from ramprig.errors import RamprigError
 class NotMeasurable(RamprigError):
     """What was recorded cannot give the result: `found` says what stands in the way, `wanted` what would help."""
 
-    def __init__(self, found: str, *, wanted: str) -> None:
+    exit_code = 1
+
+    def __init__(self, found: str, *, wanted: str = "") -> None:
         self.found = found
         self.wanted = wanted
-        super().__init__(f"no result: {found}; {wanted}")
+        super().__init__(f"no result: {found}" + (f"; {wanted}" if wanted else ""))

@@ -23,7 +23,7 @@ from ramprig.session.session import Session
 from .findings import Findings
 from .lab import Bystander, Lab
 from .plots import png
-from .refusal import CannotMeasure
+from .refusal import NotMeasurable
 
 
 class Procedure(Protocol):
@@ -40,7 +40,7 @@ class Procedure(Protocol):
         ...
 
     def bench(self, bench: Bench) -> Bench:
-        """The bench with the procedure's own limits, none looser. Raises CannotMeasure for what it is not fit for."""
+        """The bench with the procedure's own limits, none looser. Raises NotMeasurable for what it is not fit for."""
         ...
 
     def moves(self, bench: Bench) -> str:
@@ -48,7 +48,7 @@ class Procedure(Protocol):
         ...
 
     def carry_out(self, lab: Lab) -> Findings:
-        """Do it. Raises CannotMeasure where the data do not carry numbers."""
+        """Do it. Raises NotMeasurable where the data do not carry numbers."""
         ...
 
 
@@ -87,7 +87,7 @@ def measure(
 ) -> Measurement:
     """Carry a procedure out on a port, which is closed at the end, and put the bench's own limits back on the device.
 
-    Raises CannotMeasure, what opening the device raises, LinkLost and StoppedByUser; outputs are off in each case.
+    Raises NotMeasurable, what opening the device raises, LinkLost and StoppedByUser; outputs are off in each case.
     """
     tight = procedure.bench(bench)
     listeners = Listeners()
@@ -175,7 +175,7 @@ class _Run:
     def _recorded(self, lab: Lab, recorder: Recorder) -> Measurement:
         try:
             findings = self.procedure.carry_out(lab)
-        except CannotMeasure as refusal:
+        except NotMeasurable as refusal:
             recorder.finish(self._end(lab, "not measured", str(refusal), None))
             raise
         self._write(recorder, findings)

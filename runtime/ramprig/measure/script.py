@@ -52,9 +52,8 @@ class Script:
                 f"reverse: {{motor: {motor}, to: {percent(duty)}, in: {up} ms, down in: {down} ms, still within: 20 s}}"
             )
         else:
-            self.step(
-                f"ramp: {{motor: {motor}, to: {percent(duty)}, in: {self._ms(axis.least_ticks(before, duty), in_ms)} ms}}"
-            )
+            ms = self._ms(axis.least_ticks(before, duty), in_ms)
+            self.step(f"ramp: {{motor: {motor}, to: {percent(duty)}, in: {ms} ms}}")
         self._duty[motor] = duty
         if duty:
             self._sign[motor] = 1 if duty > 0 else -1
