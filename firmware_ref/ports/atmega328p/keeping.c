@@ -15,7 +15,8 @@ static volatile uint8_t left; /* bytes still to write */
 static volatile uint8_t next;
 static volatile uint16_t address;
 
-ISR(EE_READY_vect)
+/* The next byte on its way, or no more of them. */
+static void write_next(void)
 {
     if (left == 0) {
         EECR = 0;
@@ -26,6 +27,11 @@ ISR(EE_READY_vect)
     left--;
     EECR = 1u << EERIE | 1u << EEMPE;
     EECR = 1u << EERIE | 1u << EEMPE | 1u << EEPE; /* within four cycles */
+}
+
+ISR(EE_READY_vect)
+{
+    write_next();
 }
 
 void keeping_begin(void)
@@ -51,25 +57,30 @@ bool keeping_load(uint16_t offset, uint8_t *bytes, uint8_t length)
     return true;
 }
 
+/* Appends to what is to be written. */
+static void append(const uint8_t *bytes, uint8_t length)
+{
+    for (uint8_t i = 0; i < length; i++) {
+        record[next + left + i] = bytes[i];
+    }
+    left = (uint8_t)(left + length);
+}
+
 bool keeping_store(uint16_t offset, const uint8_t *bytes, uint8_t length)
 {
-    bool goes_on = false;
+    bool taken = false;
     ATOMIC_BLOCK(ATOMIC_RESTORESTATE) /* some 10 us, when a limit is set */
     {
-        goes_on = left != 0 && offset == address + left && next + left + length <= RECORD;
-        if (goes_on || (!is_busy() && length <= RECORD)) {
-            if (!goes_on) {
-                address = offset;
-                next = 0;
-                left = 0;
-            }
-            for (uint8_t i = 0; i < length; i++) {
-                record[next + left + i] = bytes[i];
-            }
-            left = (uint8_t)(left + length);
-            EECR |= 1u << EERIE; /* ready at once: the interrupt writes the first */
-            goes_on = true;
+        if (left != 0 && offset == address + left && (uint8_t)(next + left + length) <= RECORD) {
+            append(bytes, length);
+            taken = true;
+        } else if (!is_busy() && length <= RECORD) {
+            address = offset;
+            next = 0;
+            append(bytes, length);
+            write_next();
+            taken = true;
         }
     }
-    return goes_on;
+    return taken;
 }
