@@ -3,16 +3,24 @@
 
 #include "seeded.h"
 
+/*@ assigns \nothing;
+    ensures \result == (duty > 0 ? 1 : duty < 0 ? -1 : 0); */
 static int8_t sign_of(int16_t duty)
 {
     return (int8_t)((duty > 0) - (duty < 0));
 }
 
+/*@ requires -RR_DUTY_FULL <= duty <= RR_DUTY_FULL;
+    assigns \nothing;
+    ensures \result == rr_size(duty); */
 static int16_t size_of(int16_t duty)
 {
     return duty < 0 ? (int16_t)-duty : duty;
 }
 
+/*@ requires 0 <= ceiling <= RR_DUTY_FULL;
+    assigns \nothing;
+    ensures \result == (duty > ceiling ? ceiling : duty < -ceiling ? -ceiling : duty); */
 static int16_t held_within(int16_t duty, int16_t ceiling)
 {
     if (duty > ceiling) {
@@ -21,18 +29,30 @@ static int16_t held_within(int16_t duty, int16_t ceiling)
     return RR_SEEDED(CEILING_ONE_SIDED, false, duty < -ceiling) ? (int16_t)-ceiling : duty;
 }
 
+/*@ assigns \nothing;
+    ensures \result == rr_one_more(ticks); */
 static uint16_t one_more(uint16_t ticks)
 {
     return ticks == UINT16_MAX ? ticks : (uint16_t)(ticks + 1u);
 }
 
 /* CHAIN-2: where t has the other sign, zero comes first. */
+/*@ assigns \nothing;
+    ensures \result == ((target > 0 && duty < 0) || (target < 0 && duty > 0) || target == 0 ? 0 : target); */
 static int16_t next_target(int16_t duty, int16_t target)
 {
     return sign_of(target) == -sign_of(duty) ? 0 : target;
 }
 
 /* CHAIN-2: from d towards a target of the same sign, growing by at most `up`, falling by at most `down`. */
+/*@ requires -RR_DUTY_FULL <= duty <= RR_DUTY_FULL && -RR_DUTY_FULL <= wanted <= RR_DUTY_FULL;
+    requires 1 <= up <= RR_DUTY_FULL && 1 <= down <= RR_DUTY_FULL;
+    requires !(duty > 0 && wanted < 0) && !(duty < 0 && wanted > 0);
+    assigns \nothing;
+    ensures rr_size(\result) <= rr_size(duty) + up && rr_size(\result) >= rr_size(duty) - down;
+    ensures rr_size(\result) <= rr_size(duty) || rr_size(\result) <= rr_size(wanted);
+    ensures (duty > 0 || wanted > 0) ==> \result >= 0;
+    ensures (duty < 0 || wanted < 0) ==> \result <= 0; */
 static int16_t slewed(int16_t duty, int16_t wanted, int16_t up, int16_t down)
 {
     int16_t size = size_of(duty);
@@ -49,6 +69,9 @@ static int16_t slewed(int16_t duty, int16_t wanted, int16_t up, int16_t down)
 }
 
 /* S3: may the bridge leave zero for this sign? */
+/*@ requires \valid_read(chain) && \valid_read(limits);
+    assigns \nothing;
+    ensures \result <==> (sign == chain->last_sign || rr_rested(chain, limits)); */
 static bool may_leave_zero(const struct rr_chain *chain, const struct rr_chain_limits *limits, int8_t sign)
 {
     if (sign == chain->last_sign || RR_SEEDED(START_UNGUARDED, chain->last_sign == 0, false)) {
@@ -69,6 +92,11 @@ void rr_chain_watch(struct rr_chain *chain, const struct rr_chain_limits *limits
     }
 }
 
+/*@ requires \valid(chain) && -RR_DUTY_FULL <= duty <= RR_DUTY_FULL && rr_chain_ok(chain);
+    assigns chain->duty, chain->last_sign, chain->zero_for;
+    ensures rr_chain_ok(chain) && chain->duty == duty;
+    ensures chain->zero_for == (duty == 0 ? rr_one_more(\old(chain->zero_for)) : 0);
+    ensures chain->last_sign == (duty > 0 ? 1 : duty < 0 ? -1 : \old(chain->last_sign)); */
 static void set_duty(struct rr_chain *chain, int16_t duty)
 {
     bool resting = RR_SEEDED(DWELL_FROM_COMMAND, size_of(duty) < size_of(chain->duty), false) || duty == 0;
