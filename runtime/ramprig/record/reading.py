@@ -2,7 +2,7 @@
 there.
 
 A run that was killed has a `run.json` that says `running`, perhaps a torn last row and a torn last event: all that is
-accepted, and said.
+accepted, and said. A run that was gone on with after an interruption has several parts, each with a samples file.
 """
 
 from __future__ import annotations
@@ -22,7 +22,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ..errors import RecordError
-from .folder import EVENTS_FILE, FORMAT, RUN_FILE, SAMPLES_FILE
+from .events import from_rfc3339
+from .folder import CYCLES_FILE, EVENTS_FILE, FORMAT, NOTES_FILE, RUN_FILE
+from .parts import parts_of, whole_account
 
 CHUNK_BYTES = 4 * 1024 * 1024
 EXAMPLES_MAX = 5  # ticks that a statement names
@@ -145,13 +147,43 @@ def read_manifest(folder: Path) -> Document:
     return manifest
 
 
+def sample_files(folder: Path) -> list[Path]:
+    """The samples files of all parts of the run, in order; a part that broke off before its first row may lack its own.
+
+    Ticks of different files have nothing to do with each other where the board restarted between them; `time_s` goes
+    on over all of them. Raises RecordError.
+    """
+    paths = [folder / str(part["samples_file"]) for part in parts_of(read_manifest(folder))]
+    return [path for path in paths if path.exists()]
+
+
+def read_cycles(folder: Path) -> tuple[list[Document], int]:
+    """The count of cycles line by line, and the length in bytes of a torn last line; empty where there is none."""
+    path = folder / CYCLES_FILE
+    return read_events(path) if path.exists() else ([], 0)
+
+
+def read_notes(folder: Path) -> list[Document]:
+    """What people noted by hand, in the form of events; empty where there is nothing."""
+    path = folder / NOTES_FILE
+    return read_events(path)[0] if path.exists() else []
+
+
+def run_events(folder: Path) -> list[Document]:
+    """Everything that happened, with what people noted in its place by time of day. Raises RecordError."""
+    events, _ = read_events(folder / EVENTS_FILE)
+    notes = read_notes(folder)
+    return sorted([*events, *notes], key=lambda event: from_rfc3339(event["utc"])) if notes else events
+
+
 @dataclass(frozen=True, slots=True)
 class Audit:
     """What a run folder holds against what it says.
 
     `missing` counts samples that should be in the file and are not, `unexpected` rows whose tick no logging made, and
     `known_lost` those that are told as lost. `statements` says everything that is not as it should be, for the user;
-    `exact` is true where there is nothing to say.
+    `exact` is true where there is nothing to say. `interruptions` tells of each break that the run went on after: not
+    a fault of the folder, and yet to be known.
     """
 
     finished: bool
@@ -160,6 +192,8 @@ class Audit:
     missing: int
     unexpected: int
     statements: tuple[str, ...]
+    parts: int = 1
+    interruptions: tuple[str, ...] = ()
 
     @property
     def exact(self) -> bool:
@@ -170,33 +204,79 @@ class Audit:
 def audit(folder: Path) -> Audit:
     """Check the run folder; raises RecordError only where it cannot be read as one at all."""
     manifest = read_manifest(folder)
-    samples = read_samples(folder / SAMPLES_FILE, columns=())
     events, torn_event_bytes = read_events(folder / EVENTS_FILE)
+    entries = parts_of(manifest)
     finished = manifest.get("status") == "finished"
-    statements: list[str] = []
-    if not finished:
-        statements.append(_how_it_broke_off(samples, events))
-    if samples.torn_bytes:
-        statements.append(f"the last row is torn ({samples.torn_bytes} bytes) and was left out")
+    by_part = _events_by_part(events, len(entries))
+    parts = [
+        _audit_part(folder, entry, its_events, last=entry is entries[-1], several=len(entries) > 1)
+        for entry, its_events in zip(entries, by_part, strict=True)
+    ]
+    statements = [text for part in parts for text in part.statements]
     if torn_event_bytes:
         statements.append(f"the last event is torn ({torn_event_bytes} bytes) and was left out")
-    statements += [f"trouble with the disk: {trouble['text']}" for trouble in manifest.get("disk_troubles", [])]
-    known_lost, missing, unexpected = 0, 0, 0
+    if read_cycles(folder)[1]:
+        statements.append("the last line of the count of cycles is torn and was left out")
     if finished:
-        account = manifest["samples"]
-        known_lost = account["lost"]
-        found = _compare(account, samples.ticks)
-        missing, unexpected = found.missing, found.unexpected
-        statements += found.statements
         statements += _changed_files(folder, manifest)
+    if finished and len(entries) > 1 and manifest.get("samples") != whole_account(entries):
+        statements.append("the account of the whole run is not the sum of its parts")
+    statements += _changed_photos(folder)
+    return Audit(
+        finished,
+        sum(part.rows for part in parts),
+        sum(part.known_lost for part in parts),
+        sum(part.missing for part in parts),
+        sum(part.unexpected for part in parts),
+        tuple(statements),
+        len(entries),
+        tuple(str(each.get("text")) for each in manifest.get("interruptions", [])),
+    )
+
+
+def _events_by_part(events: list[Document], parts: int) -> list[list[Document]]:
+    """The events of each part, divided where a run was gone on with."""
+    divided: list[list[Document]] = [[] for _ in range(parts)]
+    part = 1
+    for event in events:
+        if event["kind"] == "run_resumed":
+            part = int(event["part"])
+        if part <= parts:
+            divided[part - 1].append(event)
+    return divided
+
+
+def _audit_part(folder: Path, entry: Document, events: list[Document], *, last: bool, several: bool) -> Audit:
+    """One part of a run: its rows against its account, or against its events where it has none."""
+    path = folder / str(entry["samples_file"])
+    where = f"part {entry['part']}: " if several else ""
+    finished = entry.get("status") == "finished"
+    if not path.exists() and not finished:
+        samples = Samples((), np.empty(0, np.int64), {}, {}, 0)
+    else:
+        samples = read_samples(path, columns=())
+    statements: list[str] = []
+    if not finished and last:
+        statements.append(_how_it_broke_off(samples, events))
+    if samples.torn_bytes and (last or finished):  # an earlier part that broke off is told of as an interruption
+        statements.append(f"the last row is torn ({samples.torn_bytes} bytes) and was left out")
+    troubles = entry.get("disk_troubles") or []
+    statements += [f"trouble with the disk: {trouble['text']}" for trouble in troubles]
+    account = entry.get("samples")
+    if account:
+        found = _compare(account, samples.ticks)
+        known_lost, missing, unexpected = account["lost"], found.missing, found.unexpected
+        statements += found.statements
     else:
         known_lost, found_statements = _gaps_by_ticks(samples.ticks, events)
+        missing = unexpected = 0
         statements += found_statements
-    return Audit(finished, len(samples), known_lost, missing, unexpected, tuple(statements))
+    texts = tuple(where + text for text in statements)
+    return Audit(finished, len(samples), known_lost, missing, unexpected, texts)
 
 
-def _how_it_broke_off(samples: Samples, events: list[Document]) -> str:
-    last_row = f"the last row is of tick {samples.ticks[-1]}" if len(samples) else "there is no row"
+def _how_it_broke_off(ticks: NDArray[np.int64], events: list[Document]) -> str:
+    last_row = f"the last row is of tick {ticks[-1]}" if len(ticks) else "there is no row"
     last_event = f"the last event is '{events[-1]['kind']}' at {events[-1]['utc']}" if events else "there is no event"
     return f"the run did not end in order ({RUN_FILE} says it is still running): {last_row}, {last_event}"
 
@@ -285,3 +365,9 @@ def _changed_files(folder: Path, manifest: Document) -> list[str]:
         if found != entry["sha256"]:
             statements.append(f"{entry['file']} was changed after the run")
     return statements
+
+
+def _changed_photos(folder: Path) -> list[str]:
+    """Photos of notes that are gone or no longer as they were copied."""
+    entries = [photo for note in read_notes(folder) for photo in note.get("photos", [])]
+    return _changed_files(folder, {"files": entries})
