@@ -99,8 +99,8 @@ int16_t rr_chain_step(struct rr_chain *chain, const struct rr_chain_limits *limi
 
 /* The bridge was switched off: ends the tick with duty 0. */
 /*@ requires \valid(chain) && rr_chain_ok(chain);
-    assigns chain->duty, chain->zero_for, chain->held_for;
-    ensures rr_chain_ok(chain) && chain->duty == 0;
+    assigns chain->duty, chain->last_sign, chain->zero_for, chain->held_for;
+    ensures rr_chain_ok(chain) && chain->duty == 0 && chain->last_sign == \old(chain->last_sign);
     ensures S3_count: chain->zero_for == rr_one_more(\old(chain->zero_for));
 */
 void rr_chain_off(struct rr_chain *chain);
