@@ -9,14 +9,18 @@ the reserve.
 from __future__ import annotations
 
 import contextlib
+import errno
 import hashlib
 import os
+import sys
 from dataclasses import dataclass
 from pathlib import Path
 
 RESERVE_BYTES = 256 * 1024
 """Kept back on the disk while a run is on, and given up when the disk is full, so that the reason can still be
 written."""
+
+CHUNK_BYTES = 1024 * 1024
 
 _APPEND = os.O_WRONLY | os.O_APPEND | getattr(os, "O_BINARY", 0) | getattr(os, "O_CLOEXEC", 0)
 
@@ -37,6 +41,53 @@ class AppendFile:
         self._open = True
         self.size_bytes = self.synced_bytes = 0
         self.lines = self.synced_lines = 0
+
+    @classmethod
+    def reopen(cls, path: Path) -> tuple[AppendFile, int]:
+        """The file that an earlier program wrote, to be gone on with, and how long a torn last line was cut off.
+
+        Its counts and hash are those of all that is in it. Raises OSError, BlockingIOError where another program holds
+        it; then nothing is changed.
+        """
+        found = cls(path, new=False)
+        try:
+            if not found.hold_alone():
+                raise BlockingIOError(errno.EWOULDBLOCK, "another program is writing it", str(path))
+            return found, found._take_over()
+        except BaseException:
+            found.close()
+            raise
+
+    def _take_over(self) -> int:
+        """Count and hash what is in the file, and cut a torn last line off; its length."""
+        size_bytes, lines, rest = 0, 0, b""
+        with open(self.path, "rb") as file:
+            while chunk := file.read(CHUNK_BYTES):
+                data = rest + chunk
+                whole = data.rfind(b"\n") + 1
+                self._hash.update(data[:whole])
+                size_bytes, lines, rest = size_bytes + whole, lines + data.count(b"\n"), data[whole:]
+        if rest:
+            os.ftruncate(self._handle, size_bytes)
+        os.fsync(self._handle)
+        self.size_bytes = self.synced_bytes = size_bytes
+        self.lines = self.synced_lines = lines
+        return len(rest)
+
+    def hold_alone(self) -> bool:
+        """Keep other programs from holding this file too, until it is closed; False where one does (POSIX only).
+
+        Readers are not hindered.
+        """
+        if sys.platform == "win32":
+            return True
+        import fcntl
+
+        try:
+            fcntl.flock(self._handle, fcntl.LOCK_EX | fcntl.LOCK_NB)
+        except OSError:
+            return False
+        return True
 
     @property
     def dirty(self) -> bool:

@@ -5,6 +5,9 @@
         samples.csv     every sample
         events.jsonl    everything that happened
         trail.csv       the fast record around a trip, where there was one
+        cycles.jsonl    the count of cycles, where the sequence has cycles
+        samples-2.csv   the samples after the first interruption, where the run was gone on with
+        notes.jsonl     what people noted by hand, with copies of their photos
         bench.yaml ...  copies of the files the run was made from
 
 A folder is never used twice: where the name exists already, it gets a number.
@@ -28,15 +31,20 @@ import numpy as np
 from .. import __version__
 from ..errors import RecordError
 from .appendfile import AppendFile, Reserve, replace_file, sync_folder
-from .events import Json, jsonable
+from .events import Json, from_rfc3339, jsonable
+from .parts import Document, Earlier, earlier_of
 
 FORMAT = "ramprig run 1"
 RUN_FILE = "run.json"
 SAMPLES_FILE = "samples.csv"
 EVENTS_FILE = "events.jsonl"
 TRAIL_FILE = "trail.csv"
+CYCLES_FILE = "cycles.jsonl"
+NOTES_FILE = "notes.jsonl"
 RESERVE_FILE = "reserve.bin"
-OWN_FILES = (RUN_FILE, SAMPLES_FILE, EVENTS_FILE, TRAIL_FILE, RESERVE_FILE)
+OWN_FILES = (RUN_FILE, SAMPLES_FILE, EVENTS_FILE, TRAIL_FILE, CYCLES_FILE, NOTES_FILE, RESERVE_FILE)
+GOING_ON = (EVENTS_FILE, CYCLES_FILE)
+"""Files that a later part of a run adds to."""
 
 SLUG_MAX = 40  # characters of the name that go into the folder's
 SAME_NAME_MAX = 999  # folders of one name before we say that something is wrong
@@ -103,13 +111,19 @@ def software() -> dict[str, Json]:
 
 
 class RunFolder:
-    """The folder of one run while it is being written. Make it with `create`."""
+    """The folder of one run while it is being written. Make it with `create`, or `reopen` it for another part.
+
+    `earlier` is what the earlier parts left, None for the first; `torn_bytes` were cut off from their last lines.
+    """
 
     def __init__(self, path: Path, description: RunDescription, *, started_unix_s: float) -> None:
         self.path = path
         self.description = description
         self.started_unix_s = started_unix_s
         self.reserve = Reserve(path / RESERVE_FILE)
+        self.earlier: Earlier | None = None
+        self.torn_bytes = 0
+        self._reopened: dict[str, AppendFile] = {}
         self._files: list[AppendFile] = []
         self._inputs: list[Json] = []
 
@@ -135,6 +149,37 @@ class RunFolder:
             raise RecordError(f"the run folder cannot be made in {root}: {error.strerror or error}") from error
         return folder
 
+    @classmethod
+    def reopen(
+        cls,
+        path: Path,
+        manifest: Document,
+        interruption: Mapping[str, Json],
+        *,
+        port: str,
+        identity: Mapping[str, Json],
+    ) -> RunFolder:
+        """The folder of a run that was interrupted, for its next part. Raises RecordError, also where it is under way.
+
+        `manifest` is its `run.json`, `interruption` what is to be told of the break; `port` and `identity` are those of
+        the part to come.
+        """
+        description = RunDescription(name=str(manifest.get("name")), port=port, identity=identity)
+        folder = cls(path, description, started_unix_s=from_rfc3339(manifest["started"]).timestamp())
+        try:
+            for name in GOING_ON:
+                if (path / name).exists():
+                    folder._reopened[name], torn_bytes = AppendFile.reopen(path / name)
+                    folder.torn_bytes += torn_bytes
+            folder.earlier = earlier_of(manifest, path, interruption, GOING_ON)
+            (path / RESERVE_FILE).unlink(missing_ok=True)
+            folder.reserve.take()
+            sync_folder(path)
+        except OSError as error:
+            folder.close()
+            raise RecordError(f"the run folder {path} cannot be gone on with: {error.strerror or error}") from error
+        return folder
+
     def _copy_inputs(self) -> None:
         used = {name.lower() for name in OWN_FILES}
         for given in self.description.inputs:
@@ -153,13 +198,31 @@ class RunFolder:
 
     def new_file(self, name: str) -> AppendFile:
         """A new file of lines in the folder, which `run.json` will list; where the name is taken it gets a number."""
-        used = {path.name.lower() for path in self.path.iterdir()}
-        file = AppendFile(self.path / _free_name(name, used))
+        file = AppendFile(self.path / self.free_name(name))
         self._files.append(file)
         return file
 
+    def free_name(self, name: str) -> str:
+        """The name that `new_file` would take."""
+        return _free_name(name, {path.name.lower() for path in self.path.iterdir()})
+
+    def go_on(self, name: str) -> AppendFile | None:
+        """The file of this name that earlier parts wrote, for more; None where there is none."""
+        file = self._reopened.pop(name, None)
+        if file is not None:
+            self._files.append(file)
+        return file
+
+    def close(self) -> None:
+        """Close the files that were reopened and not taken by `go_on`."""
+        for file in self._reopened.values():
+            file.close()
+        self._reopened.clear()
+
     def head(self) -> dict[str, Json]:
         """What `run.json` says at the start and at the end alike."""
+        if self.earlier is not None:
+            return dict(self.earlier.head)
         about = self.description
         return {
             "format": FORMAT,
@@ -174,7 +237,8 @@ class RunFolder:
 
     def files(self) -> list[Json]:
         """The files written so far, each with its size and hash."""
-        return [
+        earlier = [] if self.earlier is None else list(self.earlier.files)
+        return earlier + [
             {"file": file.path.name, "bytes": file.size_bytes, "lines": file.lines, "sha256": file.sha256}
             for file in self._files
         ]

@@ -25,6 +25,7 @@ from ..errors import RecordError
 from .events import from_rfc3339
 from .folder import CYCLES_FILE, EVENTS_FILE, FORMAT, NOTES_FILE, RUN_FILE
 from .parts import parts_of, whole_account
+from .scan import read_ticks
 
 CHUNK_BYTES = 4 * 1024 * 1024
 EXAMPLES_MAX = 5  # ticks that a statement names
@@ -251,28 +252,26 @@ def _audit_part(folder: Path, entry: Document, events: list[Document], *, last: 
     path = folder / str(entry["samples_file"])
     where = f"part {entry['part']}: " if several else ""
     finished = entry.get("status") == "finished"
-    if not path.exists() and not finished:
-        samples = Samples((), np.empty(0, np.int64), {}, {}, 0)
-    else:
-        samples = read_samples(path, columns=())
+    broke_off_at_once = not path.exists() and not finished
+    ticks, torn_bytes = (np.empty(0, np.int64), 0) if broke_off_at_once else read_ticks(path)
     statements: list[str] = []
     if not finished and last:
-        statements.append(_how_it_broke_off(samples, events))
-    if samples.torn_bytes and (last or finished):  # an earlier part that broke off is told of as an interruption
-        statements.append(f"the last row is torn ({samples.torn_bytes} bytes) and was left out")
+        statements.append(_how_it_broke_off(ticks, events))
+    if torn_bytes and (last or finished):  # an earlier part that broke off is told of as an interruption
+        statements.append(f"the last row is torn ({torn_bytes} bytes) and was left out")
     troubles = entry.get("disk_troubles") or []
     statements += [f"trouble with the disk: {trouble['text']}" for trouble in troubles]
     account = entry.get("samples")
     if account:
-        found = _compare(account, samples.ticks)
+        found = _compare(account, ticks)
         known_lost, missing, unexpected = account["lost"], found.missing, found.unexpected
         statements += found.statements
     else:
-        known_lost, found_statements = _gaps_by_ticks(samples.ticks, events)
+        known_lost, found_statements = _gaps_by_ticks(ticks, events)
         missing = unexpected = 0
         statements += found_statements
     texts = tuple(where + text for text in statements)
-    return Audit(finished, len(samples), known_lost, missing, unexpected, texts)
+    return Audit(finished, len(ticks), known_lost, missing, unexpected, texts)
 
 
 def _how_it_broke_off(ticks: NDArray[np.int64], events: list[Document]) -> str:

@@ -11,11 +11,12 @@ from pathlib import Path
 from ..errors import RecordError
 from ..port.clock import Clock
 from ..session.blocks import Block
-from .appendfile import AppendFile
+from .appendfile import AppendFile, sync_folder
 from .columns import Columns
 from .events import Json, RunTime, encode_line, event_object, jsonable, rfc3339
-from .folder import EVENTS_FILE, SAMPLES_FILE, TRAIL_FILE, RunFolder
+from .folder import CYCLES_FILE, EVENTS_FILE, SAMPLES_FILE, TRAIL_FILE, RunFolder, software
 from .manifest import Anchor, RunEnd, clocks, sample_account, speed_account
+from .parts import PART_KEYS, Earlier, whole_account
 from .rows import RowPrinter
 from .space import SpacePolicy, SpaceWatch, disk_free
 from .speed import SpeedMethod
@@ -54,13 +55,30 @@ class DiskTrouble:
     text: str
 
 
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RunResumed:
+    """A run that was interrupted goes on: `part` begins, with a samples file of its own.
+
+    `torn_bytes` were cut off from lines of events and cycles that the interruption had left unfinished.
+    """
+
+    tick: int
+    host_s: float
+    part: int
+    samples_file: str
+    torn_bytes: int
+
+
 class Recorder:
     """The one who writes a run down. Blocks and events come from one thread; the disk is written by another one.
 
     `start` ties the clocks together and is where `time_s` begins. `on_trouble` is called before anything else when
     the disk is in trouble, from any thread; it stops the motor where `trouble.kind.demands_stop`, and must not block
     or raise. `threaded` false is for virtual time: everything is written in the caller's thread, and the same input
-    gives the same bytes.
+    gives the same bytes; synced only where it is to be `durable` (None: where it is threaded). `limits_digest` is that
+    of the limits in force, for the record.
+
+    In a folder that was reopened it writes the next part of the run; `time_s` goes on from the start of the first.
     """
 
     def __init__(
@@ -73,6 +91,8 @@ class Recorder:
         clock: Clock,
         on_trouble: Callable[[Trouble], None],
         threaded: bool = True,
+        durable: bool | None = None,
+        limits_digest: str = "",
         method: SpeedMethod | None = None,
         space: SpacePolicy | None = None,
         free: Callable[[Path], int] = disk_free,
@@ -83,7 +103,9 @@ class Recorder:
         self._start = start
         self._clock = clock
         self._method = method or SpeedMethod()
-        self._when = RunTime(tick_us, start.tick, start.host_s, start.unix_s)
+        offset = round((start.unix_s - folder.started_unix_s) * 1e6 / tick_us) if folder.earlier else 0
+        self._when = RunTime(tick_us, start.tick - offset, start.host_s, start.unix_s)
+        self._limits_digest = limits_digest
         self._user_on_trouble = on_trouble
         self._printer = self._new_printer(columns)
         self._batch: list[Block] = []
@@ -93,31 +115,58 @@ class Recorder:
         self._troubles: list[Json] = []
         self._manifest_lock = threading.Lock()
         self._finished = False
+        self._cycles = folder.go_on(CYCLES_FILE)
+        self._cycles_given = self._cycles_kept = 0
+        self._samples_name = folder.free_name(SAMPLES_FILE)
         self._samples, self._events = self._begin_files()
         self._threaded = threaded
         self._writer = DiskWriter(
-            (self._samples, self._events),
+            [file for file in (self._samples, self._events, self._cycles) if file is not None],
             on_trouble=self._on_trouble,
             after_trouble=self._after_trouble,
             on_sync=self._on_sync,
             threaded=threaded,
+            durable=durable,
             now=clock.now,
             sync_every_s=sync_every_s,
         )
         self._watch = SpaceWatch(folder.path, space or SpacePolicy(), tell=self._writer.tell, free=free)
-        self.on_event(RunStarted(tick=start.tick, host_s=start.host_s, name=folder.description.name))
+        if folder.earlier is None:
+            self.on_event(RunStarted(tick=start.tick, host_s=start.host_s, name=folder.description.name))
+        else:
+            self._tell_resumed(folder.earlier.number)
 
     def _new_printer(self, columns: Columns) -> RowPrinter:
         return RowPrinter(columns, tick_us=self._when.tick_us, tick_zero=self._when.tick_zero, method=self._method)
 
     def _begin_files(self) -> tuple[AppendFile, AppendFile]:
         try:
+            events = self.folder.go_on(EVENTS_FILE) or self.folder.new_file(EVENTS_FILE)
+            events.hold_alone()
             self._write_manifest("running", None)
-            samples = self.folder.new_file(SAMPLES_FILE)
+            samples = self.folder.new_file(self._samples_name)
             samples.append(self._printer.header())
-            return samples, self.folder.new_file(EVENTS_FILE)
+            return samples, events
         except OSError as error:
             raise RecordError(f"the run folder {self.folder.path} cannot be written: {error.strerror}") from error
+
+    def _tell_resumed(self, part: int) -> None:
+        start = self._start
+        self.on_event(
+            RunResumed(
+                tick=start.tick,
+                host_s=start.host_s,
+                part=part,
+                samples_file=self._samples_name,
+                torn_bytes=self.folder.torn_bytes,
+            )
+        )
+
+    def _open_cycles(self) -> AppendFile:
+        if self._cycles is None:
+            self._cycles = self.folder.new_file(CYCLES_FILE)
+            self._writer.add_file(self._cycles)
+        return self._cycles
 
     # ---- while the run is on ------------------------------------------------------------------------------------
 
@@ -142,6 +191,29 @@ class Recorder:
         """Write down an event (a dataclass, see `events.py`), synced to the disk soon; never raises RecordError."""
         line = encode_line(event_object(event, when=self._when, host_s=self._clock.now()))
         self._writer.submit(lambda: self._events.append(line), vital=True, sync=True)
+
+    def on_cycle(self, event: object) -> None:
+        """Write an event down in the count of cycles and have the disk hold it; never raises RecordError.
+
+        `cycles_pending` tells when that is done.
+        """
+        line = encode_line(event_object(event, when=self._when, host_s=self._clock.now()))
+        self._cycles_given += 1
+
+        def write() -> None:
+            file = self._open_cycles()
+            file.append(line)
+            if self._writer.durable:
+                file.sync()
+                if file.lines == 1:
+                    sync_folder(self.folder.path)
+            self._cycles_kept += 1
+
+        self._writer.submit(write, vital=True)
+
+    def cycles_pending(self) -> int:
+        """How many events given to `on_cycle` are not yet known to be on the disk."""
+        return self._cycles_given - self._cycles_kept
 
     def on_trail(self, blocks: Sequence[Block]) -> None:
         """Write the fast record around a trip into `trail.csv` (a second one of the run into `trail-2.csv`)."""
@@ -206,8 +278,9 @@ class Recorder:
                 self._submit_batch()
         self._writer.close()
         self.folder.reserve.free()
-        for file in (self._samples, self._events):
-            file.close()
+        for file in (self._samples, self._events, self._cycles):
+            if file is not None:
+                file.close()
         try:
             self._write_manifest("finished", end)
         except OSError as error:
@@ -222,6 +295,7 @@ class Recorder:
         contents["verdict"] = end.verdict if end else None
         contents["stop_reason"] = end.stop_reason if end else None
         contents["disk_troubles"] = list(self._troubles)
+        contents["limits_digest"] = self._limits_digest
         contents["columns"] = list(self.columns.names)
         contents["clocks"] = clocks(
             self._start, end.end if end else None, when=self._when, drift_ppm=end.drift_ppm if end else None
@@ -231,8 +305,30 @@ class Recorder:
         )
         if end is not None:
             contents |= self._end_of(end)
+        if self.folder.earlier is not None:
+            self._add_parts(contents, self.folder.earlier)
         with self._manifest_lock:
             self.folder.write_manifest(contents)
+
+    def _add_parts(self, contents: dict[str, Json], earlier: Earlier) -> None:
+        """All parts of the run with what each has of its own, and the account over all of them."""
+        about = self.folder.description
+        part: dict[str, Json] = {
+            "part": earlier.number,
+            "samples_file": self._samples_name,
+            "status": contents["status"],
+            "started": rfc3339(self._start.unix_s),
+            "ended": contents["ended"],
+            "port": about.port,
+            "device": jsonable(about.identity),
+            "software": software(),
+        }
+        part |= {key: contents.get(key) for key in PART_KEYS}
+        parts: list[Json] = [*earlier.parts, part]
+        contents["parts"] = parts
+        contents["interruptions"] = list(earlier.interruptions)
+        if contents["status"] == "finished":
+            contents["samples"] = whole_account([entry for entry in parts if isinstance(entry, dict)])
 
     def _end_of(self, end: RunEnd) -> dict[str, Json]:
         account = sample_account(

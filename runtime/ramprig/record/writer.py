@@ -85,7 +85,8 @@ class DiskWriter:
     """Carries out jobs that write to `files`, one after another, in the order in which they were handed over.
 
     `threaded`: in a thread of its own, synced every `sync_every_s` and with each job that asks for it; else at once
-    in the caller's thread and synced at the end only (virtual time, where nothing is lost that cannot be made again).
+    in the caller's thread and, unless `durable`, synced at the end only (virtual time, where nothing is lost that
+    cannot be made again).
     `on_trouble` is called at most once for each kind of trouble, from whichever thread meets it, and must not raise.
     `after_trouble` is called next, for a trouble that loses rows: from then on only vital jobs are carried out, and
     they are let fail. `on_sync` is called after each timed sync (free space is looked at there); it may call `tell`.
@@ -99,6 +100,7 @@ class DiskWriter:
         after_trouble: Callable[[Trouble], None],
         on_sync: Callable[[], None],
         threaded: bool,
+        durable: bool | None = None,
         now: Callable[[], float] = time.monotonic,
         sync_every_s: float = SYNC_EVERY_S,
         queue_max: int = QUEUE_MAX,
@@ -109,6 +111,7 @@ class DiskWriter:
         self._on_sync = on_sync
         self._now = now
         self._sync_every_s = sync_every_s
+        self.durable = threaded if durable is None else durable
         self._last_sync_s = self._last_progress_s = now()
         self._told: set[TroubleKind] = set()
         self._telling = threading.Lock()
@@ -217,6 +220,8 @@ class DiskWriter:
 
     def _look_at_space(self) -> None:
         if self._now() - self._last_sync_s >= self._sync_every_s:
+            if self.durable:
+                self._sync()
             self._last_sync_s = self._now()
             self._on_sync()
 
@@ -226,7 +231,7 @@ class DiskWriter:
             return
         try:
             job.work()
-            if job.sync and self._thread is not None and self._now() - self._last_sync_s >= SYNC_REST_S:
+            if job.sync and self.durable and self._now() - self._last_sync_s >= SYNC_REST_S:
                 self._sync_files()
         except OSError as error:
             self.tell(trouble_of(error))
