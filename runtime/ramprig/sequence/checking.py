@@ -9,6 +9,7 @@ from ramprig.quantity import format_angle, format_duration, format_duty, format_
 from ramprig.quantity.kinds import DUTY_RATE
 from ramprig.yamlfile import suggestion
 
+from .names import CYCLE_BEGIN
 from .rig import Axis, Channel, Rig
 from .scene import MotorScene, Scene
 from .steps import Expect, Measure, Step, Sweep, Together, Wait, What
@@ -138,6 +139,20 @@ def check_measure(rig: Rig, scene: Scene, measure: Measure) -> None:
             mark = measure.marks.get("over", measure.mark)
             found = f"the window of {format_duration(measure.over_s)} is longer than what has gone by here"
             raise mark.error(found, f"at most {rig.show(scene.elapsed)}, or hold before it")
+
+
+def check_confirm(step: Step, scene: Scene) -> None:
+    """A travel is confirmed within a cycle only."""
+    if CYCLE_BEGIN not in scene.marks:
+        raise step.mark.error("a 'confirm' stands outside a cycle", "use 'expect', or put it among a cycle's steps")
+
+
+def check_at_zero(step: Step, scene: Scene, key: str, what: str) -> None:
+    """A run can go on at any cycle, so each begins and ends with all motors at zero."""
+    for name, motor in scene.motors.items():
+        if motor.duty:
+            found = f"{what} with {name} at {format_duty(motor.duty)}"
+            raise step.error(key, found, f"bring it to zero, as by 'coast: {name}'")
 
 
 def check_reachable(rig: Rig, scene: Scene, measure: Measure) -> None:

@@ -7,20 +7,25 @@ since from its second pass on it begins as it ends.
 from __future__ import annotations
 
 from collections import deque
+from collections.abc import Mapping
 from dataclasses import replace
 from fractions import Fraction
 
 from ramprig.bench import Bench
 from ramprig.errors import FileError
 from ramprig.quantity import format_duration, format_duty
+from ramprig.yamlfile import Mark
 
 from . import checking
+from .cycle_plan import BlockSoFar, compile_cycles, left_over
 from .motion import Mover
-from .plan import Await, Branches, Judge, Loop, Moment, Part, Plan, Run, Series, Totals
+from .plan import Await, Branches, Cycles, Judge, Loop, Moment, Part, Plan, Run, Series, Totals
 from .reading import Sequence
 from .rig import Rig
 from .scene import MotorScene, Scene, ServoScene
 from .steps import (
+    Confirm,
+    Cycle,
     Ease,
     Expect,
     Hold,
@@ -50,14 +55,41 @@ SETTLING_KEPT_S = 120
 """How long after a ramp a settling time can still be judged."""
 
 
-def compile_plan(sequence: Sequence, bench: Bench, *, tick_us: int = 1000) -> Plan:
-    """The plan of a sequence on a bench whose board has this tick. Raises `FileError` at the step that cannot be."""
+def compile_plan(
+    sequence: Sequence, bench: Bench, *, tick_us: int = 1000, so_far: Mapping[int, BlockSoFar] | None = None
+) -> Plan:
+    """The plan of a sequence on a bench whose board has this tick. Raises `FileError` at the step that cannot be.
+
+    With `so_far`, what earlier parts of the run have done by block of cycles, it is the plan of the rest. A sequence
+    with cycles is refused where it could not be resumed at any of them.
+    """
+    steps, first_block = left_over(sequence.steps, so_far or {})
+    plan = _plan_of(sequence, steps, bench, tick_us, first_block, so_far or {})
+    if not so_far:
+        for number, step in enumerate(step for step in sequence.steps if isinstance(step, Cycle)):
+            try:
+                _plan_of(sequence, sequence.steps[sequence.steps.index(step) :], bench, tick_us, number + 1, {})
+            except FileError as error:
+                found = f"{error.found}, when an interrupted run is resumed at the cycle in line {step.mark.line}"
+                raise FileError(found, wanted=error.wanted, place=error.place, text=error.text) from error
+    return plan
+
+
+def _plan_of(
+    sequence: Sequence,
+    steps: tuple[Step, ...],
+    bench: Bench,
+    tick_us: int,
+    first_block: int,
+    so_far: Mapping[int, BlockSoFar],
+) -> Plan:
+    """The plan of these steps of the sequence's own, begun with all motors at rest."""
     rig = Rig.of(bench, tick_us=tick_us)
-    compiler = _Compiler(rig)
+    compiler = _Compiler(rig, next_block=first_block, so_far=so_far)
     scene = Scene(
         motors={name: MotorScene() for name in rig.axes}, servos={name: ServoScene() for name in rig.channels}
     )
-    body = compiler.series(sequence.steps, scene, sequence.name)
+    body = compiler.series(steps, scene, sequence.name, mark=sequence.mark, outermost=True)
     closing, remarks = compiler.closing(sequence, scene)
     root = Series(
         mark=sequence.mark, text=sequence.name, totals=body.totals.then(closing.totals), parts=(body, closing)
@@ -71,7 +103,8 @@ def compile_plan(sequence: Sequence, bench: Bench, *, tick_us: int = 1000) -> Pl
         period_ticks=_period(rig, sequence),
         mask=rig.mask,
         longest_window=compiler.window + int(rig.ticks(Fraction(WINDOW_MARGIN_S))),
-        remarks=(*remarks, *unused),
+        remarks=(*remarks, *compiler.remarks, *unused),
+        cycles=tuple(part for part in body.parts if isinstance(part, Cycles)),
     )
 
 
@@ -87,22 +120,30 @@ def _period(rig: Rig, sequence: Sequence) -> int:
 
 
 class _Compiler:
-    """Compiles the steps of one sequence; `window` grows to the longest look back, in ticks."""
+    """Compiles the steps of one sequence; `window` grows to the longest look back, in ticks.
 
-    def __init__(self, rig: Rig) -> None:
+    `next_block` is the number of the next block of cycles, `so_far` what is done of each.
+    """
+
+    def __init__(self, rig: Rig, *, next_block: int, so_far: Mapping[int, BlockSoFar]) -> None:
         self.rig = rig
+        self.next_block = next_block
+        self.so_far = so_far
+        self.remarks: list[str] = []
         self.move = Mover(rig)
         self.window = 0
         self.reaction = int(rig.ticks(WAIT_REACTION_S))
         self._repeats: dict[tuple[int, tuple[object, ...]], tuple[Part, Scene]] = {}
 
-    def series(self, steps: tuple[Step, ...], scene: Scene, text: str) -> Series:
-        """The steps one after the other."""
+    def series(
+        self, steps: tuple[Step, ...], scene: Scene, text: str, *, mark: Mark | None = None, outermost: bool = False
+    ) -> Series:
+        """The steps one after the other; cycles only where they are the `outermost`. Without steps `mark` is needed."""
         parts: list[Part] = []
         totals = Totals()
         recent: deque[int] = deque(maxlen=BURST_ORDERS)
         for step in steps:
-            part = self.part(step, scene)
+            part = self._block(step, scene) if outermost and isinstance(step, Cycle) else self.part(step, scene)
             if isinstance(part, Run) and part.motions:
                 if len(recent) == BURST_ORDERS:
                     checking.check_rate(self.rig, step, "in", BURST_ORDERS, scene.elapsed - recent[0])
@@ -110,8 +151,17 @@ class _Compiler:
             parts.append(part)
             totals = totals.then(part.totals)
             scene.elapsed += part.totals.least
-        mark = steps[0].mark
+        mark = steps[0].mark if mark is None else mark
         return Series(mark=mark, text=text, totals=totals, parts=tuple(parts))
+
+    def _block(self, step: Cycle, scene: Scene) -> Part:
+        """A block of cycles, with its number."""
+        block = self.next_block
+        self.next_block += 1
+        part = compile_cycles(self.rig, self.series, step, scene, block=block, so_far=self.so_far.get(block))
+        if not part.confirmed:
+            self.remarks.append(f"the cycle '{part.name}' has no 'confirm': its cycles are counted as commanded only")
+        return part
 
     def part(self, step: Step, scene: Scene) -> Part:
         """One step; leaves the scene as it is at the step's end, `elapsed` excepted."""
@@ -166,6 +216,17 @@ class _Compiler:
                     measure=measure,
                     stop_on_failure=stop,
                 )
+            case Confirm(measure=measure):
+                checking.check_confirm(step, scene)
+                self._measure(measure, scene)
+                text = f"confirm {measure}"
+                totals = Totals(judgements=1)
+                return Judge(
+                    mark=step.mark, text=text, totals=totals, measure=measure, stop_on_failure=False, confirms=True
+                )
+            case Cycle():
+                wanted = "put it among the sequence's own steps, not inside another step or an included file"
+                raise step.mark.error("a cycle stands inside another step", wanted)
             case Note(name=name):
                 scene.marks |= {name}
                 return Moment(mark=step.mark, text=f"mark {name}", totals=Totals(), name=name)

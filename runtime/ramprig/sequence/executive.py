@@ -3,6 +3,8 @@
 Orders leave AHEAD_S before their start, so that a pause of the host never shows in the motion. Expectations and waits
 are looked at when the samples they need have come. However it ends, the outputs are off, and confirmed off, before
 `execute` returns. The same loop runs in real and in virtual time.
+
+Longer than most files here: what a strand may ask for is answered in one place, by one view of ticks and samples.
 """
 
 from __future__ import annotations
@@ -18,15 +20,17 @@ from ramprig.session.blocks import Block
 from ramprig.session.events import Event, OrderDone, Restarted, Tripped
 from ramprig.session.session import Session
 
+from .cycle_run import CycleBook, Due, RunSoFar
 from .dispatch import Dispatch
 from .expect import LEAD_IN_S, Bearings, Eye, Finding
 from .happened import Marked, PassBegun, WaitEnded
+from .names import CYCLE_BEGIN
 from .outcome import Ended, Judged, Tally, Verdict
 from .plan import Await, Judge, Moment, Part, Plan, Standstill
 from .rig import Axis, Rig
 from .ring import Ring
 from .steps import Measure
-from .strands import Ask, Begin, Fork, Hang, Look, Note, Pass, Reach, Resumed, Send, Walk, walk
+from .strands import Ask, Begin, Fork, Hang, Look, NextTurn, Note, Pass, Reach, Resumed, Send, Turn, Walk, walk
 
 AHEAD_S = 0.8
 """Orders are sent, and the plan is walked, so long ahead of their tick."""
@@ -42,7 +46,7 @@ SAMPLES_LATE_S = 3.0
 class Progress:
     """How far a run is: times in s, `fraction` 0 to 1 of the known length, `doing` the step in words.
 
-    `left_s` does not know how long the waits to come will take.
+    `left_s` does not know how long the waits to come will take. `cycle` is the cycle under way, 0 where none is.
     """
 
     elapsed_s: float
@@ -53,6 +57,15 @@ class Progress:
     passes: int
     held: int
     failed: int
+    cycle: int = 0
+    cycles_done: int = 0
+
+
+@dataclass(frozen=True, slots=True)
+class TurnBegun:
+    """A cycle or a check that was commanded begins at this tick: an item of the agenda."""
+
+    tick: int
 
 
 @dataclass(slots=True, eq=False)
@@ -75,7 +88,11 @@ class _Join:
 
 @dataclass(slots=True)
 class Executive:
-    """One run of a plan. `tell` takes the events of the run, `progress` is called each time the loop comes round."""
+    """One run of a plan. `tell` takes the events of the run, `progress` is called each time the loop comes round.
+
+    `book` counts the cycles. `until_s` of the port's clock is when the run must end, whatever is left to do, with the
+    sentence `until_text`.
+    """
 
     session: Session
     clock: Clock
@@ -83,6 +100,9 @@ class Executive:
     rig: Rig
     tell: Callable[[object], None]
     progress: Callable[[Progress], None] | None = None
+    book: CycleBook | None = None
+    until_s: float | None = None
+    until_text: str = ""
     tally: Tally = field(default_factory=Tally)
     passes: int = 0
     part: Part | None = None
@@ -94,9 +114,10 @@ class Executive:
     _ring: Ring = field(init=False)
     _bearings: Bearings = field(default_factory=Bearings)
     _strands: list[_Strand] = field(default_factory=list)
-    _agenda: list[tuple[int, int, Note | Begin | Pass]] = field(default_factory=list)
+    _agenda: list[tuple[int, int, Note | Begin | Pass | TurnBegun]] = field(default_factory=list)
     _number: count[int] = field(default_factory=count)
     _dispatch: Dispatch = field(init=False)
+    _commanded: Due | None = None
     _waited: int = 0
     _end: int = 0
 
@@ -104,6 +125,8 @@ class Executive:
         self._dispatch = Dispatch(self.session, tick_s=self._tick_s, tell=self.tell)
         longest = max([self.plan.longest_window, *(axis.still_ticks for axis in self.rig.axes.values())])
         self._ring = Ring(longest + round((LEAD_IN_S + SAMPLES_LATE_S) / self._tick_s))
+        if self.book is None:
+            self.book = CycleBook(RunSoFar(), tick_s=self._tick_s, write=self.tell, pending=lambda: 0)
 
     # ---- what is heard -------------------------------------------------------------------------------------------
 
@@ -178,6 +201,8 @@ class Executive:
             raise Ended(Verdict.TRIPPED, f"the device restarted ({cause})", self.place)
         if self.trip is not None:
             raise Ended(Verdict.TRIPPED, "", self.place)  # whoever brings the run down asks the device why
+        if self.until_s is not None and self.clock.now() >= self.until_s:
+            raise Ended(Verdict.STOPPED, self.until_text, self.place)
 
     @property
     def place(self) -> Place | None:
@@ -198,6 +223,8 @@ class Executive:
             passes=self.passes,
             held=self.tally.held,
             failed=self.tally.failed,
+            cycle=0 if self.book is None else self.book.number,
+            cycles_done=0 if self.book is None else self.book.counted.done,
         )
 
     def _idle_s(self) -> float:
@@ -214,7 +241,7 @@ class Executive:
                     wait_s = min(wait_s, (tick - ahead - self.now) * self._tick_s)
                 case Send(order=order):
                     wait_s = min(wait_s, max((order.start - ahead - self.now) * self._tick_s, self._tick_s * 5))
-                case Hang() | Look():
+                case Hang() | Look() | NextTurn():
                     wait_s = min(wait_s, POLL_S)
         return max(wait_s, self._tick_s)
 
@@ -275,6 +302,8 @@ class Executive:
                 return self._hang(strand, strand.ask)
             case Look():
                 return self._look(strand, strand.ask)
+            case NextTurn():
+                return self._next_turn(strand, strand.ask, ahead)
         return True
 
     # ---- orders --------------------------------------------------------------------------------------------------
@@ -302,9 +331,13 @@ class Executive:
 
     def _label(self) -> None:
         """The step that is under way is the one that began last, whether its samples have come or not."""
-        begun = [item for item in self._agenda if item[0] <= self.now and isinstance(item[2], Begin)]
+        begun = [
+            (tick, number, item.part)
+            for tick, number, item in self._agenda
+            if tick <= self.now and isinstance(item, Begin)
+        ]
         if begun:
-            self.part = max(begun)[2].part
+            self.part = max(begun)[2]
 
     def _attend(self) -> None:
         """Do what is due on the agenda, in order of tick."""
@@ -320,6 +353,10 @@ class Executive:
                 case Pass(number=number, part=part):
                     self.passes += 1
                     self.tell(PassBegun(tick=tick, place=str(part.mark.place), number=number, of=part.times))
+                case TurnBegun():
+                    self._bearings.note(CYCLE_BEGIN, self._ring, self.rig.axes, tick)
+                    if self.book is not None:
+                        self.tell(self.book.begin(tick))
                 case Note(part=Judge() as judge):
                     self._judge(judge, tick)
                 case Note(part=Moment(name=name)):
@@ -336,6 +373,8 @@ class Executive:
     def _judge(self, judge: Judge, tick: int) -> None:
         judged = Judged.of(judge, tick, self._find(judge.measure, tick))
         self.tally.take(judged)
+        if self.book is not None:
+            self.book.take(judged, confirms=judge.confirms)
         if not judged.held and self.first_failure_place is None:
             self.first_failure_place = judge.mark.place
         self.tell(judged)
@@ -390,6 +429,46 @@ class Executive:
             )
         self._resume(strand, Resumed(at, finding.holds))
         return True
+
+    def _next_turn(self, strand: _Strand, ask: NextTurn, ahead: int) -> bool:
+        """Between two turns of a block of cycles: count the one that is over, and let the next one begin in time."""
+        book = self.book
+        assert book is not None  # made with the executive
+        book.enter(ask.part, ask.tick)
+        if self._commanded is None:
+            if book.under_way and not self._close_turn(book, ask):
+                return False
+            due = book.due(ask.tick)
+            if due.turn is not Turn.OVER:
+                if due.tick > ahead:
+                    return False
+                book.command(due.turn)
+            self._commanded = due
+        if book.pending():
+            return False
+        due, self._commanded = self._commanded, None
+        at = max(due.tick, self.session.start_in())
+        if due.turn is Turn.OVER:
+            book.finish_block(ask.tick)
+        else:
+            heapq.heappush(self._agenda, (at, next(self._number), TurnBegun(at)))
+        self._waited += at - ask.tick - (ask.part.rest if due.tick > ask.tick else 0)
+        self._resume(strand, Resumed(at, turn=due.turn))
+        return True
+
+    def _close_turn(self, book: CycleBook, ask: NextTurn) -> bool:
+        """Count the turn that is over, once everything in it has been looked at."""
+        if not self._judged_up_to(ask.tick):
+            return False
+        book.close(ask.tick)
+        too_many = book.too_many_failed()
+        if too_many:
+            raise Ended(Verdict.FAILED, too_many, ask.part.mark.place)
+        return True
+
+    def _judged_up_to(self, tick: int) -> bool:
+        """Whether everything up to the tick has happened and been looked at."""
+        return self.now >= tick and self._have(tick) and not (self._agenda and self._agenda[0][0] <= tick)
 
 
 def _start_of(strand: _Strand) -> int:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 
 
@@ -41,3 +42,98 @@ class OrderOverdue:
     order: str
     index: int
     value: int
+
+
+# ---- cycles: the first two go to the event log, the others, one line each, to the count of cycles ------------------
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class CycleBegun:
+    """Cycle `number` of the run begins at this tick."""
+
+    tick: int
+    number: int
+    name: str
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class CheckBegun:
+    """A check begins at this tick, after so many cycles done."""
+
+    tick: int
+    after: int
+    name: str
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class CycleCommanded:
+    """Cycle `number` of the run, of this block, is about to be commanded; written down before its first order."""
+
+    tick: int | None
+    number: int
+    block: int
+    name: str
+    part: int
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class CycleDone:
+    """A cycle is over at `tick`; `outcome` is confirmed, failed, or commanded where nothing in it is confirmed.
+
+    `run_s` is how long the block has been run, over all parts of the run; `starts` the starts of each motor. `found`
+    says what its confirmations found. The counts are those of the whole run, this cycle included.
+    """
+
+    tick: int
+    begin_tick: int
+    number: int
+    block: int
+    name: str
+    part: int
+    outcome: str
+    found: tuple[str, ...]
+    expectations_held: int
+    expectations_failed: int
+    run_s: float
+    starts: Mapping[str, int]
+    commanded: int
+    confirmed: int
+    failed: int
+    interrupted: int
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class CheckDone:
+    """A check of this block is over at `tick`, after so many cycles done."""
+
+    tick: int
+    begin_tick: int
+    after: int
+    block: int
+    name: str
+    part: int
+    expectations_held: int
+    expectations_failed: int
+    run_s: float
+    starts: Mapping[str, int]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class CycleInterrupted:
+    """Cycle `number` was commanded and broken off: whether it moved is not known, and it counts as not done."""
+
+    tick: int | None
+    number: int
+    block: int
+    part: int
+    why: str
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class BlockOver:
+    """All cycles of this block are done."""
+
+    tick: int
+    block: int
+    part: int
+    run_s: float

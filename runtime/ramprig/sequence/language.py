@@ -31,6 +31,7 @@ from ramprig.yamlfile import (
     suggestion,
 )
 
+from .cycle_shape import ConfirmShape, cycle_shape
 from .measures import MeasureShape
 from .names import MARK_NAME, MOTOR_NAME, SERVO_NAME
 from .steps import (
@@ -273,6 +274,8 @@ class Language:
             "sweep": StepWord(SweepStep(), "a servo or a motor from one end to another and back"),
             "together": StepWord(self._together(), "branches of steps side by side"),
             "repeat": StepWord(self._repeat(), "steps again and again"),
+            "cycle": StepWord(cycle_shape(self.steps), "steps that are one cycle of a test, counted and confirmed"),
+            "confirm": StepWord(ConfirmShape(), "judges a travel by the encoder: the cycle is confirmed or failed"),
             "wait": StepWord(WaitShape(), "goes on once a measurement holds"),
             "expect": StepWord(ExpectShape(), "judges a measurement"),
             "mark": StepWord(Built(MARK_NAME, _note), "names this moment"),

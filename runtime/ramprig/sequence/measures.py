@@ -28,11 +28,16 @@ _BELONG = {
 
 
 class MeasureShape(Shape[Measure]):
-    """A measurement of a motor with the band that it must lie in; `extra` keys may stand beside it."""
+    """A measurement of a motor with the band that it must lie in; `extra` keys may stand beside it.
 
-    def __init__(self, *, extra: tuple[Key[object], ...] = (), settling: bool = True) -> None:
+    `whats` are the measurements that may stand here, all where left out.
+    """
+
+    def __init__(
+        self, *, extra: tuple[Key[object], ...] = (), settling: bool = True, whats: tuple[What, ...] = tuple(What)
+    ) -> None:
         self.extra = extra
-        self.whats = tuple(what for what in What if settling or what is not What.SETTLING)
+        self.whats = tuple(what for what in whats if settling or what is not What.SETTLING)
 
     def read(self, reader: Reader) -> Measure:  # noqa: D102  (the base class says it, here and below)
         return self.read_with(reader)[0]

@@ -6,7 +6,7 @@ orders are made only as they are sent. Times in a part are ticks relative to its
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
 from enum import Enum
 
@@ -170,10 +170,11 @@ class Await(Part):
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Judge(Part):
-    """Judges a measurement at this tick, in no time."""
+    """Judges a measurement at this tick, in no time; `confirms` the cycle it stands in."""
 
     measure: Measure
     stop_on_failure: bool
+    confirms: bool = False
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -214,11 +215,40 @@ class Loop(Part):
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class Cycles(Part):
+    """The cycles of one `cycle` step, the `block`-th of the sequence, counted from 1; times in ticks.
+
+    A part may depend on what came before it, so there are several of each: `first` follows the first check or
+    `before`, `later` another cycle, `checked` a check. `starts` are the departures from zero in one cycle, the greatest
+    number of any of these parts, by motor; `check_starts` those of a check. `confirmed` tells whether the cycle has a
+    `confirm` at all.
+    """
+
+    block: int
+    name: str
+    before: Part | None
+    first_check: Part | None
+    check: Part | None
+    first: Part
+    later: Part
+    checked: Part
+    check_every: int | None
+    times: int | None
+    for_ticks: int | None
+    rest: int
+    starts_per_hour: int | None
+    starts: Mapping[str, int]
+    check_starts: Mapping[str, int]
+    failed_most: int | None
+    confirmed: bool
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class Plan:
     """A whole sequence, ready to run: `root` is the tree, its last part brings every motor to zero.
 
     `period_ticks` and `mask` are how it is logged. `longest_window` is the longest time back, in ticks, that an
-    expectation looks. `remarks` are sentences for the user.
+    expectation looks. `remarks` are sentences for the user. `cycles` are those of the tree, in order.
     """
 
     name: str
@@ -229,6 +259,7 @@ class Plan:
     mask: int
     longest_window: int
     remarks: tuple[str, ...]
+    cycles: tuple[Cycles, ...] = ()
 
     @property
     def totals(self) -> Totals:

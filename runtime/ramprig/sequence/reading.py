@@ -33,8 +33,9 @@ from ramprig.yamlfile import (
     suggestion,
 )
 
+from .cycle_shape import ON_INTERRUPTION
 from .language import Language
-from .steps import Include, Step
+from .steps import Include, Interruptions, Step
 
 INCLUDES_DEEP = 8
 """Deepest chain of files that include one another."""
@@ -61,7 +62,8 @@ class Sequence:
 
     `bench` is the bench file it names, as a path from where the program runs, with the place that names it;
     `log_period_s` overrides the bench's. `values` are those in force, `unused` those of the file's own that no step
-    uses. `files` are all files read, the sequence's own first, each once.
+    uses. `files` are all files read, the sequence's own first, each once. `interruptions` is what the run does when it
+    is interrupted.
     """
 
     name: str
@@ -75,6 +77,7 @@ class Sequence:
     unused: tuple[str, ...]
     steps: tuple[Step, ...]
     files: tuple[Source, ...] = field(repr=False, compare=False)
+    interruptions: Interruptions = field(default_factory=Interruptions)
 
 
 def read_sequence(path: str | Path, *, settings: Mapping[str, str] | None = None) -> Sequence:
@@ -127,6 +130,7 @@ class _Files:
         values |= self.settings
         names = _UsedNames(values)
         steps = self._steps(found["steps"], names, (Path(self.path).resolve(),))
+        interruptions = self._interruptions(found, names)
         bench = found.get("bench")
         log = found.get("log")
         return Sequence(
@@ -141,7 +145,14 @@ class _Files:
             unused=tuple(name for name in values if name not in names.used),
             steps=steps,
             files=tuple(self.sources.values()),
+            interruptions=interruptions,
         )
+
+    def _interruptions(self, found: Mapping[str, Reader], names: Names) -> Interruptions:
+        reader = found.get(ON_INTERRUPTION.name)
+        if reader is None:
+            return Interruptions()
+        return ON_INTERRUPTION.shape.read(Reader(reader.node, key=reader.key, names=names))
 
     def _steps(self, reader: Reader, names: Names, chain: tuple[Path, ...]) -> tuple[Step, ...]:
         language = Language(_IncludeShape(self, names, chain))
@@ -212,4 +223,4 @@ class _IncludeShape(Shape[Step]):
 SCHEMA_LANGUAGE = Language(_IncludeShape(None, Names({}), ()))
 """The language without files behind it."""
 STEPS: Key[tuple[Step, ...]] = Key("steps", SCHEMA_LANGUAGE.steps, "what is done, in order", required=True)
-FILE_KEYS: tuple[Key[object], ...] = (NAME, ABOUT, BENCH, LOG_KEY, VALUES, STEPS)
+FILE_KEYS: tuple[Key[object], ...] = (NAME, ABOUT, BENCH, LOG_KEY, VALUES, ON_INTERRUPTION, STEPS)

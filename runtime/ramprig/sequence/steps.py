@@ -229,3 +229,45 @@ class Include(Step):
 
     file: str
     steps: tuple[Step, ...]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Confirm(Step):
+    """Judges a travel by the encoder and so decides whether the cycle it stands in is confirmed or failed."""
+
+    measure: Measure
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Cycle(Step):
+    """The unit of a test: `steps` carried out until `times` cycles are done, or for `for_s` of running (whole cycles).
+
+    `before` is done once, and once more whenever the run is resumed; `check` is a reference done before the first
+    cycle, after every `check_every` cycles and after a resumption. `rest_s` follows each of them. `starts_per_hour`
+    bounds the starts of each motor in any 60 minutes. More than `failed_most` failed cycles end the run.
+    """
+
+    name: str
+    steps: tuple[Step, ...]
+    before: tuple[Step, ...]
+    check: tuple[Step, ...]
+    check_every: int | None
+    times: int | None
+    for_s: Fraction | None
+    rest_s: Fraction
+    starts_per_hour: int | None
+    failed_most: int | None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Interruptions:
+    """What a run does when link or board fail it: stop (`resumes` 0), or go on by itself at most so many times.
+
+    The board must be back `within_s` of the interruption. `after_trip`: also after a trip other than that of a lost
+    link.
+    """
+
+    resumes: int = 0
+    within_s: Fraction = Fraction(120)
+    after_trip: bool = False
+    said: bool = False

@@ -9,8 +9,9 @@ from __future__ import annotations
 import heapq
 from collections.abc import Generator, Iterator
 from dataclasses import dataclass
+from enum import Enum, auto
 
-from .plan import Await, Branches, Judge, Loop, Moment, Order, Part, Run, Series, Standstill
+from .plan import Await, Branches, Cycles, Judge, Loop, Moment, Order, Part, Run, Series, Standstill
 from .steps import Measure
 
 
@@ -82,15 +83,32 @@ class Fork:
     parts: tuple[Part, ...]
 
 
+class Turn(Enum):
+    """What a block of cycles does next."""
+
+    CYCLE = auto()
+    CHECK = auto()
+    OVER = auto()
+
+
+@dataclass(frozen=True, slots=True)
+class NextTurn:
+    """What went before is over at this tick: count it once its samples have come, and tell what is next, and when."""
+
+    tick: int
+    part: Cycles
+
+
 @dataclass(frozen=True, slots=True)
 class Resumed:
-    """What a strand is resumed with: the tick to go on at, and the answer to a `Look`."""
+    """What a strand is resumed with: the tick to go on at, and the answer to a `Look` or a `NextTurn`."""
 
     tick: int
     holds: bool = False
+    turn: Turn = Turn.OVER
 
 
-Ask = Reach | Send | Note | Begin | Pass | Hang | Look | Fork
+Ask = Reach | Send | Note | Begin | Pass | Hang | Look | Fork | NextTurn
 Walk = Generator[Ask, Resumed, int]
 
 
@@ -112,6 +130,8 @@ def walk(part: Part, at: int) -> Walk:
             return (yield Fork(at, parts)).tick
         case Loop():
             return (yield from _loop(part, at))
+        case Cycles():
+            return (yield from _cycles(part, at))
         case Standstill() | Await():
             yield Reach(at)
             yield Begin(at, part)
@@ -143,3 +163,23 @@ def _loop(part: Loop, begin: int) -> Walk:
             if answer.holds:
                 break
     return at
+
+
+def _cycles(part: Cycles, at: int) -> Walk:
+    """Turns until the book says that it is over; every turn begins when the one before has been written down."""
+    if part.before is not None:
+        at = yield from walk(part.before, at)
+    following: Part = part.first
+    check = part.first_check
+    while True:
+        answer = yield NextTurn(at, part)
+        match answer.turn:
+            case Turn.OVER:
+                return answer.tick
+            case Turn.CHECK:
+                assert check is not None  # a check is due only where the plan has one
+                at = yield from walk(check, answer.tick)
+                following = part.first if check is part.first_check else part.checked
+            case Turn.CYCLE:
+                at = yield from walk(following, answer.tick)
+                following, check = part.later, part.check

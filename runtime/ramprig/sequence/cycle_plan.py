@@ -1,0 +1,233 @@
+"""A `cycle` step becomes a block of cycles in the plan, or an error; and what is left of a run that was interrupted.
+
+Cycle, check and `before` each begin and end with all motors at zero, so that a run can go on at any cycle.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
+from fractions import Fraction
+from typing import Protocol
+
+from ramprig.quantity import format_duration
+
+from . import checking
+from .names import CYCLE_BEGIN
+from .plan import Branches, Cycles, Judge, Loop, Part, Series, Totals
+from .rig import Rig
+from .scene import Scene
+from .steps import Cycle, Step
+
+HOUR_S = 3600
+TURN_REACTION_S = Fraction(1, 2)
+"""From the end of a cycle until the next may begin, where there is no rest: its samples must come, the disk must hold
+the count."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class BlockSoFar:
+    """What earlier parts of a run have done of a block: cycles done (confirmed, failed or only commanded) and time run.
+
+    `failed` are those of `done` that failed. `over` tells that the block was finished.
+    """
+
+    done: int = 0
+    failed: int = 0
+    run_s: float = 0.0
+    over: bool = False
+
+
+class SeriesMaker(Protocol):
+    """Compiles steps one after the other."""
+
+    def __call__(self, steps: tuple[Step, ...], scene: Scene, text: str) -> Series:
+        """The steps as a part; the scene is moved on to their end."""
+        ...
+
+
+def left_over(steps: tuple[Step, ...], so_far: Mapping[int, BlockSoFar]) -> tuple[tuple[Step, ...], int]:
+    """The steps that are still to be carried out, and the number of the first block of cycles among them.
+
+    A run goes on at the block that was under way; after the last one that was finished; or, where none was begun, at
+    the beginning.
+    """
+    places = [place for place, step in enumerate(steps) if isinstance(step, Cycle)]
+    begun = [block for block in so_far if 1 <= block <= len(places)]
+    if not begun:
+        return steps, 1
+    last = max(begun)
+    if so_far[last].over:
+        return steps[places[last - 1] + 1 :], last + 1
+    return steps[places[last - 1] :], last
+
+
+@dataclass(slots=True)
+class _Walked:
+    """The parts of a block, each as it is where it can stand."""
+
+    before: Part | None
+    first_check: Part | None
+    first: Part
+    later: Part
+    check: Part | None = None
+    checked: Part | None = None
+    starts: dict[str, int] = field(default_factory=dict)
+
+
+def compile_cycles(
+    rig: Rig, series: SeriesMaker, step: Cycle, scene: Scene, *, block: int, so_far: BlockSoFar | None
+) -> Cycles:
+    """The block of a `cycle` step; leaves the scene as it is at its end. Raises `FileError`."""
+    rest = checking.whole_ticks(rig, step, "rest", step.rest_s)
+    for_ticks = None if step.for_s is None else checking.whole_ticks(rig, step, "for", step.for_s)
+    checking.check_at_zero(step, scene, "", "a block of cycles begins")
+    walked = _walk(rig, series, step, scene)
+    bodies = [part for part in (walked.first, walked.later, walked.checked) if part is not None]
+    checks = [part for part in (walked.first_check, walked.check) if part is not None]
+    starts, check_starts = _most_starts(bodies), _most_starts(checks)
+    _check_starts(step, starts, check_starts)
+    times = step.times
+    text = _text(rig, step, rest)
+    part = Cycles(
+        mark=step.mark,
+        text=text,
+        totals=Totals(),
+        block=block,
+        name=step.name,
+        before=walked.before,
+        first_check=walked.first_check,
+        check=walked.check,
+        first=walked.first,
+        later=walked.later,
+        checked=walked.checked or walked.later,
+        check_every=step.check_every,
+        times=times,
+        for_ticks=for_ticks,
+        rest=rest,
+        starts_per_hour=step.starts_per_hour,
+        starts=starts,
+        check_starts=check_starts,
+        failed_most=step.failed_most,
+        confirmed=all(_confirms(body) for body in bodies),
+    )
+    return _with_totals(rig, part, so_far or BlockSoFar())
+
+
+def _walk(rig: Rig, series: SeriesMaker, step: Cycle, scene: Scene) -> _Walked:
+    """Every order in which before, check and cycle can follow each other, walked once.
+
+    After a check and a cycle everything that either moves has been moved, so from then on a cycle begins as the one
+    before it began.
+    """
+
+    def once(steps: tuple[Step, ...], key: str, what: str) -> Part:
+        begin = scene.elapsed
+        part = series(steps, scene, what)
+        checking.check_at_zero(step, scene, key, f"{what} ends")
+        checking.check_rate(rig, step, key, part.totals.orders, part.totals.least)
+        scene.elapsed = begin
+        return part
+
+    def cycle() -> Part:
+        marks = scene.marks
+        scene.marks |= {CYCLE_BEGIN}
+        part = once(step.steps, "steps", "a cycle")
+        scene.marks -= {CYCLE_BEGIN} - marks
+        if part.totals.least == 0 and part.totals.waits == 0:
+            raise step.mark.error("the steps of this cycle take no time", "add a hold, or a motion that takes some")
+        return part
+
+    begin = scene.elapsed
+    before = once(step.before, "before", "'before'") if step.before else None
+    first_check = once(step.check, "check", "a check") if step.check else None
+    walked = _Walked(before=before, first_check=first_check, first=cycle(), later=cycle())
+    if step.check:
+        walked.check = once(step.check, "check", "a check")
+        walked.checked = cycle()
+    scene.elapsed = begin
+    return walked
+
+
+def _most_starts(parts: list[Part]) -> dict[str, int]:
+    names = sorted({name for part in parts for name in part.totals.starts})
+    return {name: max(part.totals.starts.get(name, 0) for part in parts) for name in names}
+
+
+def _check_starts(step: Cycle, starts: Mapping[str, int], check_starts: Mapping[str, int]) -> None:
+    if step.starts_per_hour is None:
+        return
+    for what, found in (("a cycle", starts), ("a check", check_starts)):
+        for name, count in found.items():
+            if count > step.starts_per_hour:
+                raise step.error(
+                    "starts per hour", f"{what} starts {name} {count} times, more than may be in an hour", "allow more"
+                )
+
+
+def _confirms(part: Part) -> bool:
+    """Whether a `confirm` is certain to be met in the part."""
+    match part:
+        case Judge(confirms=confirms):
+            return confirms
+        case Series(parts=parts) | Branches(parts=parts):
+            return any(_confirms(inner) for inner in parts)
+        case Loop(first=first):
+            return _confirms(first)
+        case _:
+            return False
+
+
+def _text(rig: Rig, step: Cycle, rest: int) -> str:
+    length = f"x {step.times}" if step.for_s is None else f"for {format_duration(step.for_s)}"
+    text = f"cycle '{step.name}' {length}"
+    if rest:
+        text += f", rest {rig.show(rest)}"
+    if step.starts_per_hour is not None:
+        text += f", at most {step.starts_per_hour} starts per hour"
+    if step.check_every is not None:
+        text += f", check every {step.check_every}"
+    return text
+
+
+def _with_totals(rig: Rig, part: Cycles, so_far: BlockSoFar) -> Cycles:
+    """The block with what is left of it added up."""
+    reaction = int(rig.ticks(TURN_REACTION_S))
+    hour = int(rig.ticks(Fraction(HOUR_S)))
+    body_least = min(part.first.totals.least, part.later.totals.least, part.checked.totals.least)
+    body_most = max(part.first.totals.most, part.later.totals.most, part.checked.totals.most)
+    if part.times is not None:
+        count = max(0, part.times - so_far.done)
+    else:
+        assert part.for_ticks is not None  # a cycle says how often or for how long
+        left = max(0, part.for_ticks - int(so_far.run_s * 1_000_000 / rig.tick_us))
+        count = -(-left // max(1, body_least + part.rest))
+    before = part.before.totals if part.before is not None else Totals()
+    check = part.check.totals if part.check is not None else Totals()
+    checks = 0 if part.check_every is None else 1 + count // part.check_every
+    rests = (count + checks) * part.rest
+    whole = before.then(part.later.totals.times(count)).then(check.times(checks))
+    least = whole.least + max(0, rests - part.rest)
+    most = before.most + count * body_most + checks * check.most + rests + (count + checks) * reaction
+    least, most = _with_guard(part, count, checks, hour, least, most)
+    if part.for_ticks is not None:
+        # a cycle begins only while less than `for` has been run, whatever it waits for
+        most = before.most + left + body_most + check.most + 2 * part.rest + 2 * reaction + hour
+        least = min(most, max(least, left))
+    totals = replace(whole, least=least, most=max(least, most), waits=whole.waits + count + checks)
+    return replace(part, totals=totals)
+
+
+def _with_guard(part: Cycles, count: int, checks: int, hour: int, least: int, most: int) -> tuple[int, int]:
+    """The times with the waits for the starts per hour: whole hours of which each allows so many starts."""
+    if part.starts_per_hour is None:
+        return least, most
+    names = part.starts.keys() | part.check_starts.keys()
+    starts = max(
+        (count * part.starts.get(name, 0) + checks * part.check_starts.get(name, 0) for name in names), default=0
+    )
+    turn = max([*part.starts.values(), *part.check_starts.values()], default=1)
+    usable = max(1, part.starts_per_hour - turn + 1)  # a turn begins only when all its starts are allowed
+    body = max(part.first.totals.most, part.later.totals.most, part.checked.totals.most)
+    least = max(least, max(0, -(-starts // part.starts_per_hour) - 1) * hour)
+    return least, most + -(-starts // usable) * (hour + body)

@@ -1,0 +1,348 @@
+"""Counts the cycles of a run and says which turn comes next, and when: a cycle, a check, or none.
+
+Nothing is counted twice or lost because each turn waits for the disk:
+
+    the cycle is written down as commanded    ->  on the disk  ->  its orders go out
+    its samples have come, it is judged       ->  written down as done, on the disk  ->  the next is commanded
+
+So whatever breaks off, what has really been done is at least the count of cycles done and at most one more.
+"""
+
+from __future__ import annotations
+
+from collections import deque
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field, replace
+from enum import StrEnum
+
+from .cycle_plan import HOUR_S, BlockSoFar
+from .happened import BlockOver, CheckBegun, CheckDone, CycleBegun, CycleCommanded, CycleDone, CycleInterrupted
+from .outcome import Judged
+from .plan import Cycles
+from .strands import Turn
+
+FOUND_MAX = 20
+"""Confirmations of one cycle whose findings are written down."""
+
+
+class CycleOutcome(StrEnum):
+    """What became of a cycle that was done."""
+
+    CONFIRMED = "confirmed"
+    FAILED = "failed"
+    COMMANDED = "commanded"
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Counted:
+    """The cycles of a run.
+
+    `commanded` = `confirmed` + `failed` + `unjudged` + `interrupted` + the one under way. `interrupted` ones were
+    broken off: each may or may not have moved.
+    """
+
+    commanded: int = 0
+    confirmed: int = 0
+    failed: int = 0
+    unjudged: int = 0
+    interrupted: int = 0
+
+    @property
+    def done(self) -> int:
+        """Cycles carried out to their end."""
+        return self.confirmed + self.failed + self.unjudged
+
+    def __str__(self) -> str:
+        text = f"{self.commanded} commanded, {self.confirmed} confirmed, {self.failed} failed"
+        if self.unjudged:
+            text += f", {self.unjudged} not judged"
+        return text + (f", {self.interrupted} broken off" if self.interrupted else "")
+
+
+@dataclass(frozen=True, slots=True)
+class PastStarts:
+    """So many starts of a motor, at the latest so long ago."""
+
+    motor: str
+    count: int
+    age_s: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RunSoFar:
+    """What the earlier parts of a run leave to the next one; `part` is the number of the next one."""
+
+    part: int = 1
+    counted: Counted = field(default_factory=Counted)
+    blocks: Mapping[int, BlockSoFar] = field(default_factory=dict)
+    starts: tuple[PastStarts, ...] = ()
+    held: int = 0
+    failed: int = 0
+    first_failure: str = ""
+
+
+class StartsGuard:
+    """Remembers the starts of each motor for an hour; times in s on one axis, not decreasing."""
+
+    def __init__(self) -> None:
+        self._starts: dict[str, deque[tuple[float, int]]] = {}
+
+    def note(self, starts: Mapping[str, int], at_s: float) -> None:
+        """These starts were over at `at_s`."""
+        for motor, count in starts.items():
+            past = self._starts.setdefault(motor, deque())
+            if count:
+                past.append((at_s, count))
+            _forget(past, at_s)
+
+    def earliest_s(self, starts: Mapping[str, int], now_s: float, *, per_hour: int) -> float:
+        """When a turn with these starts may begin, `now_s` or later, with at most `per_hour` in any 60 minutes."""
+        return max((self._earliest_s(motor, count, now_s, per_hour) for motor, count in starts.items()), default=now_s)
+
+    def _earliest_s(self, motor: str, count: int, now_s: float, per_hour: int) -> float:
+        past = self._starts.setdefault(motor, deque())
+        _forget(past, now_s)
+        excess = sum(number for _, number in past) + count - per_hour
+        earliest_s = now_s
+        for at_s, number in past:
+            if excess <= 0:
+                break
+            excess -= number
+            earliest_s = at_s + HOUR_S
+        return earliest_s
+
+
+def _forget(past: deque[tuple[float, int]], now_s: float) -> None:
+    while past and past[0][0] <= now_s - HOUR_S:
+        past.popleft()
+
+
+@dataclass(slots=True)
+class _UnderWay:
+    """The turn under way: its number (0 for a check), where it began, and what was judged in it."""
+
+    turn: Turn
+    number: int
+    begin_tick: int | None = None
+    confirms: int = 0
+    unconfirmed: int = 0
+    held: int = 0
+    failed: int = 0
+    found: list[str] = field(default_factory=list)
+
+
+@dataclass(frozen=True, slots=True)
+class Due:
+    """The next turn, and the tick at which it may begin at the earliest."""
+
+    turn: Turn
+    tick: int
+
+
+class CycleBook:
+    """The count of one run. `write` takes an event for the count of cycles, `pending` tells how many of those are not
+    yet on the disk."""
+
+    def __init__(
+        self,
+        so_far: RunSoFar,
+        *,
+        tick_s: float,
+        write: Callable[[object], None],
+        pending: Callable[[], int],
+    ) -> None:
+        self.counted = so_far.counted
+        self.pending = pending
+        self._so_far = so_far
+        self._tick_s = tick_s
+        self._write = write
+        self._part: Cycles | None = None
+        self._under_way: _UnderWay | None = None
+        self._guard: StartsGuard | None = None  # made at the first block, when the tick is known
+        self._block = BlockSoFar()
+        self._begin_tick = 0
+        self._since_check: int | None = None
+        self._turned = False
+
+    @property
+    def under_way(self) -> bool:
+        """Whether a turn has begun that is not over."""
+        return self._under_way is not None
+
+    @property
+    def number(self) -> int:
+        """The cycle under way, else 0."""
+        return 0 if self._under_way is None else self._under_way.number
+
+    # ---- one block -----------------------------------------------------------------------------------------------
+
+    def enter(self, part: Cycles, tick: int) -> None:
+        """Begin, or go on, with this block from `tick` on; does nothing where it is under way."""
+        if self._part is part:
+            return
+        self._part = part
+        self._block = self._so_far.blocks.get(part.block, BlockSoFar())
+        self._begin_tick = tick
+        self._since_check = None
+        self._turned = False
+        if self._guard is None:
+            self._guard = StartsGuard()
+            for past in sorted(self._so_far.starts, key=lambda past: -past.age_s):
+                self._guard.note({past.motor: past.count}, tick * self._tick_s - past.age_s)
+
+    def due(self, tick: int) -> Due:
+        """What comes after the turn that was over at `tick`."""
+        part = self._known_part()
+        earliest = tick + (part.rest if self._turned else 0)
+        if part.check is not None and (self._since_check is None or self._since_check >= (part.check_every or 1)):
+            return Due(Turn.CHECK, self._allowed(part.check_starts, earliest))
+        if part.times is not None and self._block.done >= part.times:
+            return Due(Turn.OVER, tick)
+        if part.for_ticks is not None and self._run_s(tick) >= part.for_ticks * self._tick_s:
+            return Due(Turn.OVER, tick)
+        return Due(Turn.CYCLE, self._allowed(part.starts, earliest))
+
+    def _allowed(self, starts: Mapping[str, int], earliest: int) -> int:
+        per_hour = self._known_part().starts_per_hour
+        if self._guard is None or per_hour is None:
+            return earliest
+        allowed_s = self._guard.earliest_s(starts, earliest * self._tick_s, per_hour=per_hour)
+        return max(earliest, round(allowed_s / self._tick_s))
+
+    def _run_s(self, tick: int) -> float:
+        return self._block.run_s + (tick - self._begin_tick) * self._tick_s
+
+    def command(self, turn: Turn) -> None:
+        """The turn is about to begin: a cycle is written down, and must be on the disk before its first order."""
+        part = self._known_part()
+        self._turned = True
+        if turn is Turn.CHECK:
+            self._under_way = _UnderWay(turn, 0)
+            return
+        self.counted = replace(self.counted, commanded=self.counted.commanded + 1)
+        self._under_way = _UnderWay(turn, self.counted.commanded)
+        self._write(
+            CycleCommanded(
+                tick=None, number=self.counted.commanded, block=part.block, name=part.name, part=self._so_far.part
+            )
+        )
+
+    def begin(self, tick: int) -> CycleBegun | CheckBegun:
+        """The turn that was commanded begins at `tick`; the event that tells of it."""
+        assert self._under_way is not None  # it was commanded
+        self._under_way.begin_tick = tick
+        name = self._known_part().name
+        if self._under_way.turn is Turn.CHECK:
+            return CheckBegun(tick=tick, after=self.counted.done, name=name)
+        return CycleBegun(tick=tick, number=self._under_way.number, name=name)
+
+    def take(self, judged: Judged, *, confirms: bool) -> None:
+        """An expectation was judged in the turn under way, if there is one."""
+        turn = self._under_way
+        if turn is None:
+            return
+        turn.held += judged.held
+        turn.failed += not judged.held
+        if confirms:
+            turn.confirms += 1
+            turn.unconfirmed += not judged.held
+            if len(turn.found) < FOUND_MAX:
+                turn.found.append(judged.found)
+
+    def close(self, tick: int) -> CycleOutcome | None:
+        """The turn under way is over at `tick`, everything in it judged; what became of a cycle, None for a check."""
+        part, turn = self._known_part(), self._under_way
+        assert turn is not None  # whoever closes has seen that it is under way
+        assert turn.begin_tick is not None  # and it has begun
+        self._under_way = None
+        starts = part.check_starts if turn.turn is Turn.CHECK else part.starts
+        if self._guard is not None:
+            self._guard.note(starts, tick * self._tick_s)
+        if turn.turn is Turn.CHECK:
+            self._since_check = 0
+            self._write(
+                CheckDone(
+                    tick=tick,
+                    begin_tick=turn.begin_tick,
+                    after=self.counted.done,
+                    block=part.block,
+                    name=part.name,
+                    part=self._so_far.part,
+                    expectations_held=turn.held,
+                    expectations_failed=turn.failed,
+                    run_s=round(self._run_s(tick), 6),
+                    starts=starts,
+                )
+            )
+            return None
+        outcome = _outcome(turn)
+        self._count(outcome)
+        self._write(self._done(part, turn, turn.begin_tick, tick, outcome))
+        return outcome
+
+    def _count(self, outcome: CycleOutcome) -> None:
+        counted, failed = self.counted, outcome is CycleOutcome.FAILED
+        self.counted = replace(
+            counted,
+            confirmed=counted.confirmed + (outcome is CycleOutcome.CONFIRMED),
+            failed=counted.failed + failed,
+            unjudged=counted.unjudged + (outcome is CycleOutcome.COMMANDED),
+        )
+        self._block = replace(self._block, done=self._block.done + 1, failed=self._block.failed + failed)
+        if self._since_check is not None:
+            self._since_check += 1
+
+    def _done(self, part: Cycles, turn: _UnderWay, begin_tick: int, tick: int, outcome: CycleOutcome) -> CycleDone:
+        return CycleDone(
+            tick=tick,
+            begin_tick=begin_tick,
+            number=turn.number,
+            block=part.block,
+            name=part.name,
+            part=self._so_far.part,
+            outcome=outcome.value,
+            found=tuple(turn.found),
+            expectations_held=turn.held,
+            expectations_failed=turn.failed,
+            run_s=round(self._run_s(tick), 6),
+            starts=part.starts,
+            commanded=self.counted.commanded,
+            confirmed=self.counted.confirmed,
+            failed=self.counted.failed,
+            interrupted=self.counted.interrupted,
+        )
+
+    def too_many_failed(self) -> str:
+        """Why the run must end for the cycles that have failed; empty where it need not."""
+        part = self._known_part()
+        if part.failed_most is None or self._block.failed <= part.failed_most:
+            return ""
+        return f"{self._block.failed} cycles of '{part.name}' have failed, {part.failed_most} are allowed"
+
+    def finish_block(self, tick: int) -> None:
+        """All cycles of the block are done."""
+        part = self._known_part()
+        self._write(
+            BlockOver(tick=tick, block=part.block, part=self._so_far.part, run_s=round(self._run_s(tick), 6))
+        )
+
+    def abandon(self, why: str) -> None:
+        """The run is over: a cycle under way is written down as broken off. Never raises."""
+        turn, self._under_way = self._under_way, None
+        if turn is None or turn.turn is not Turn.CYCLE:
+            return
+        self.counted = replace(self.counted, interrupted=self.counted.interrupted + 1)
+        part = self._known_part()
+        self._write(
+            CycleInterrupted(tick=None, number=turn.number, block=part.block, part=self._so_far.part, why=why)
+        )
+
+    def _known_part(self) -> Cycles:
+        assert self._part is not None  # `enter` comes first
+        return self._part
+
+
+def _outcome(turn: _UnderWay) -> CycleOutcome:
+    if turn.unconfirmed:
+        return CycleOutcome.FAILED
+    return CycleOutcome.CONFIRMED if turn.confirms else CycleOutcome.COMMANDED
