@@ -2,11 +2,16 @@
 
 from __future__ import annotations
 
+import os
 import shutil
+import subprocess
+import sys
+import zipfile
 from collections.abc import Iterator
 from pathlib import Path
 
 import pytest
+from hatchling.builders.wheel import WheelBuilder
 
 from ramprig.bench import load_bench
 from ramprig.errors import FileError, UsageError
@@ -183,6 +188,27 @@ def test_what_is_built_is_kept_for_the_next_time(tmp_path: Path, monkeypatch: py
     assert build.build("right", [right], (), shared=False) == first
     right.write_text("int main(void) { return X; }\n")
     assert build.build("right", [right], ("-DX=1",), shared=False) != first
+
+
+@needs_compiler
+@pytest.mark.process
+def test_an_installed_wheel_has_the_sources_it_builds_from(tmp_path: Path) -> None:
+    wheel = next(WheelBuilder(str(SCRIPTS.parent)).build(directory=str(tmp_path), versions=["standard"]))
+    installed = tmp_path / "installed"
+    with zipfile.ZipFile(wheel) as archive:
+        archive.extractall(installed)
+    program = (
+        "import ramprig; from ramprig.mock.core import build, open_core\n"
+        "print(ramprig.__file__, build.firmware(), open_core('core:?pace=virtual').read(1.0))"
+    )
+    environment = {**os.environ, "PYTHONPATH": str(installed), "XDG_CACHE_HOME": str(tmp_path / "cache")}
+    done = subprocess.run(
+        [sys.executable, "-c", program], env=environment, cwd=tmp_path, capture_output=True, text=True, check=False
+    )
+    assert done.stdout.split()[:2] == [
+        str(installed / "ramprig" / "__init__.py"), str(installed / "ramprig" / "_firmware")
+    ], done.stderr  # fmt: skip
+    assert "N00 boot 0 1 power" in done.stdout
 
 
 def test_the_compiler_is_the_one_the_environment_names(monkeypatch: pytest.MonkeyPatch) -> None:

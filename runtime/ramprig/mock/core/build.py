@@ -37,7 +37,7 @@ NO_COMPILER = "there is no C compiler here (Debian: apt-get install gcc libc6-de
 
 def firmware() -> Path | None:
     """The folder of the C sources, None where they are not installed."""
-    return next((path for path in (CHECKOUT, INSTALLED) if (path / "core" / "device.c").exists()), None)
+    return next((path for path in (INSTALLED, CHECKOUT) if (path / "core" / "device.c").exists()), None)
 
 
 def compiler() -> str | None:
