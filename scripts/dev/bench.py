@@ -30,21 +30,10 @@ def csv_lines() -> list[str]:
     ]
 
 
-def rehearsal_lines() -> list[str]:
-    """The endurance sequence on the Python mock against real time."""
-    speed = bench_rehearsal.measure()
-    return [
-        f"rehearsal:           {speed.ratio:.0f} times real time at 100 samples a second on the Python mock "
-        f"(aim {bench_rehearsal.AIM:.0f} or more)",
-        f"                     {speed.mock_s / speed.took_s:.0%} of it is the mock's own; without that "
-        f"{speed.host_ratio:.0f} times",
-    ]
-
-
 PARTS: tuple[Callable[[], list[str]], ...] = (
     bench_roundtrip.lines,
     bench_codec.lines,
-    rehearsal_lines,
+    bench_rehearsal.lines,
     csv_lines,
     bench_start.lines,
 )
