@@ -17,7 +17,10 @@ from ramprig.bench import load_bench
 from ramprig.errors import FileError, UsageError
 from ramprig.mock import FAULTS, Board, LimitStore, MockSetup, open_mock
 from ramprig.mock.core import CorePort, SimulatedDevice, build, open_core, rehearsal_on, why_not
+from ramprig.mock.core.__main__ import main as plant_main
 from ramprig.mock.core.build import NO_COMPILER
+from ramprig.mock.core.parameters import plant_text
+from ramprig.mock.from_bench import plant_of_bench
 from ramprig.mock.port import MockPort
 from ramprig.port.base import Port
 from ramprig.port.clock import VirtualClock
@@ -153,6 +156,14 @@ def test_a_paced_port_follows_its_clock() -> None:
     port = open_core("core:")
     assert port.read(1.0).startswith(b"N00 boot")
     port.close()
+
+
+def test_the_plant_of_a_bench_file_can_be_printed(capsys: pytest.CaptureFixture[str]) -> None:
+    assert plant_main([str(BENCH)]) == 0
+    assert capsys.readouterr().out == plant_text(plant_of_bench(load_bench(BENCH)))
+    assert plant_main(["absent.yaml"]) == 2
+    assert "absent.yaml" in capsys.readouterr().err
+    assert plant_main([]) == 2
 
 
 def test_a_rehearsal_says_what_it_runs_on(monkeypatch: pytest.MonkeyPatch) -> None:

@@ -173,6 +173,12 @@ def test_what_means_nothing_is_refused(arguments: list[str], told: str) -> None:
     assert told in done.stderr
 
 
+def test_help_is_no_error() -> None:
+    done = subprocess.run([program(Board()), "--help"], capture_output=True, text=True, check=False)
+    assert (done.returncode, done.stderr) == (0, "")
+    assert "--lockstep" in done.stdout
+
+
 def test_a_wrong_line_of_a_plant_is_named(tmp_path: Path) -> None:
     plant = tmp_path / "plant"
     plant.write_text("supply.volts 12\nsupply.volts -1\n")

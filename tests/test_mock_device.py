@@ -393,3 +393,17 @@ def test_a_setup_that_cannot_be_is_refused() -> None:
         Board(serial="a b")
     with pytest.raises(FileError, match="queue is 4"):
         Board(queue=4)
+
+
+def test_a_servo_gets_the_pulse_with_which_its_swing_ends() -> None:
+    """The tick that ends a swing was once left out, so a swing of one tick never reached the servo."""
+    host = Host(MockDevice(replace(INSTANT, limits={**QUICK, ("pulse_slew_ns", 0): 2_000_000})))
+    controller = host.device.controller
+    assert controller is not None
+    host.ok(f"arm 5000 {controller.limits.digest()}")
+    host.ok(f"swing 0 1700 0 {controller.age + 20}")
+    host.run(1000)
+    servo = host.device.plant.servos[0]
+    assert servo.pulse_us == 1700.0
+    parameters = servo.parameters
+    assert servo.angle_deg == pytest.approx((1700.0 - parameters.neutral_us) / parameters.us_per_deg)

@@ -98,6 +98,10 @@ static bool read_options(struct options *options, int count, char **arguments)
 {
     *options = (struct options){.baud = 115200, .board = "ramprig-core", .serial = "POSIX-0001"};
     for (int i = 1; i < count; i++) {
+        if (strcmp(arguments[i], "--help") == 0) {
+            fputs(usage, stdout);
+            exit(0);
+        }
         if (strcmp(arguments[i], "--lockstep") == 0) {
             options->lockstep = true;
         } else if (i + 1 >= count || !read_option(options, arguments[i], arguments[i + 1])) {
