@@ -170,6 +170,7 @@ def measured(
     """Carry a procedure out on the mock of a bench; raises what it raises."""
     device = MockDevice(change(setup_of_bench(bench, faults=faults)), seed=seed)
     prepare(device)
+    own_trace = device.trace
     port = MockPort(device, pace="virtual", seed=seed)
     peaks = [0.0, 0.0]
 
@@ -177,6 +178,8 @@ def measured(
         for axis in device.plant.axes:
             peaks[0] = max(peaks[0], abs(axis.speed_rad_s))
             peaks[1] = max(peaks[1], abs(axis.mean_a))
+        if own_trace is not None:
+            own_trace(tick, controller)
 
     device.trace = watch
     told: list[str] = []

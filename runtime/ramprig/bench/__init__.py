@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from .bench import Bench, bench_of_text, load_bench
 from .limits import LimitKey, Setting
+from .measured import MeasuredEntry, MeasuredValue
 from .model import MotorModel, ServoModel, SupplyModel
 from .motor import Encoder, Motor, duty_parts
 from .schema import bench_schema
@@ -26,6 +27,8 @@ __all__ = [
     "LimitKey",
     "LinkTimes",
     "LogDefaults",
+    "MeasuredEntry",
+    "MeasuredValue",
     "MockFault",
     "MockSettings",
     "Motor",

@@ -24,6 +24,7 @@ from ..yamlfile import (
     suggestion,
 )
 from .limits import LimitKey, Setting
+from .measured import MEASURED, MeasuredPart, unknown_subject
 from .motor import MOTOR, Motor
 from .servo import SERVO, Servo
 from .station import (
@@ -58,6 +59,7 @@ class Bench:
     log: LogDefaults
     safety: Safety
     mock: MockSettings
+    measured: MeasuredPart = field(default_factory=dict)
     mark: Mark = field(compare=False, repr=False)
 
     @property
@@ -161,6 +163,8 @@ _LOG = Key("log", LOG, "how a run is sampled")
 _SAFETY = Key("safety", SAFETY, "who, where, and what else can stop it")
 _MOCK = Key("mock", MOCK, "how the mock behaves in a rehearsal")
 
+_MEASURED = Key("measured", MEASURED, "what `ramprig measure --save` found; it writes this part itself")
+
 
 def _bench(fields: Fields) -> Bench:
     motors = fields.get(_MOTORS) or {}
@@ -183,11 +187,15 @@ def _bench(fields: Fields) -> Bench:
         log=fields.get(_LOG) or LogDefaults(),
         safety=fields.get(_SAFETY) or Safety(),
         mock=fields.get(_MOCK) or MockSettings(),
+        measured=fields.get(_MEASURED) or {},
         mark=fields.mark,
     )
     for fault in bench.mock.faults:
         if fault.motor is not None and fault.motor not in motors:
             raise fault.mark.error(f"no motor is called '{fault.motor}'", suggestion(fault.motor, motors, "motors"))
+    unknown = unknown_subject(bench.measured, {*motors, *servos})
+    if unknown is not None:
+        raise unknown
     bench.limits()  # whatever no board with a tick of 1 ms can keep is refused here, at its line
     return bench
 
@@ -204,7 +212,7 @@ def _check_numbers(users: list[tuple[int, str, Mark]], what: str) -> None:
 
 
 BENCH = Record(
-    (_NAME, _PORT, _BOARD, _SUPPLY, _MOTORS, _SERVOS, _LINK, _LOG, _SAFETY, _MOCK),
+    (_NAME, _PORT, _BOARD, _SUPPLY, _MOTORS, _SERVOS, _LINK, _LOG, _SAFETY, _MOCK, _MEASURED),
     _bench,
 )
 """The whole file."""

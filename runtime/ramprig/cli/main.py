@@ -25,13 +25,14 @@ COMMANDS = {
     "ports": "list the serial ports, and how to name each in a bench file",
     "read": "tell how a run ended, and check its account of every sample",
     "doctor": "find out why a bench cannot be reached, or how well it is",
+    "measure": "check a motor's wiring; measure a motor, a servo or the link",
     "schema": "print the JSON Schema of bench or sequence files, for editors",
 }
 """Every command is a module of this room by the same name."""
 
 EXIT_CODES = """exit codes:
   0   passed
-  1   an expectation failed
+  1   an expectation failed, or a measurement found a fault or gave no result
   2   the command line or a file must be mended
   3   the device tripped or refused
   4   the link was lost, or another device answered

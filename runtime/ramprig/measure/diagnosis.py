@@ -232,7 +232,8 @@ def decided(push: Push, bring: Bring) -> bool:
         return True
     if _other(push.elsewhere):
         return True
-    return turned_by_current(push, current_floor_a(bring))
+    # A few counts are neither silence nor motion: a stronger pulse tells.
+    return push.span <= 1 and turned_by_current(push, current_floor_a(bring))
 
 
 def offset_bound_a(rated_a: float) -> float:

@@ -27,8 +27,9 @@ class Picture:
 class Findings:
     """What was found on `subject`, a motor's or servo's name, or "link".
 
-    `good` is False where the bench is not as it should be. `values` are the results by name, `facts` what else a
-    program may want (JSON), `lines` what a person should read besides, in order.
+    `good` is False where the bench is not as it should be. `values` are the results by name: lower-case words joined
+    by `_`, 24 characters at most, as a bench file takes them. `facts` are what else a program may want (JSON), `lines`
+    what a person should read besides, in order.
     """
 
     procedure: str
@@ -43,7 +44,7 @@ class Findings:
     def text(self) -> list[str]:
         """For the terminal: values first, then lines, the sentence last."""
         width = max((len(name) for name in self.values), default=0)
-        numbers = [f"{name:<{width}}  {value}" for name, value in self.values.items()]
+        numbers = [f"{name.replace('_', ' '):<{width}}  {value}" for name, value in self.values.items()]
         return [*numbers, *self.lines, self.sentence]
 
     def to_json(self) -> dict[str, Json]:

@@ -269,7 +269,9 @@ class _Check:
     def _told(self, bring: Bring, verdict: Verdict) -> Findings:
         rest = bring.rest
         count = max(2.0, REST_S * 1000 / self.lab.period_ms)
-        values = {"current zero": Measured(rest.offset_a, "A", rest.noise_a / math.sqrt(count), count - 1)}
+        values = {
+            "current_zero": Measured(rest.offset_a + bring.zero_a, "A", rest.noise_a / math.sqrt(count), count - 1)
+        }
         lines = list(verdict.lines)
         if abs(rest.offset_a) > 0.2 * offset_bound_a(bring.rated_a) and verdict.case is Case.GOOD:
             lines.append(f"note: the current zero is off by {format_current(rest.offset_a)}")

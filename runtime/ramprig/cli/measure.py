@@ -1,0 +1,253 @@
+"""`ramprig measure WHAT`: bring-up check, curves and other measurements on one motor, one servo or the link."""
+
+from __future__ import annotations
+
+import argparse
+import json
+import sys
+import threading
+from collections.abc import Callable
+from dataclasses import replace
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from ramprig.cli.progress import Progress
+from ramprig.cli.running import NOT_PROVED, RUNS, mock_url, on_terminal
+from ramprig.cli.say import say_surely, tell
+from ramprig.errors import RamprigError, StoppedByUser, UsageError
+
+if TYPE_CHECKING:
+    from ramprig.bench import Bench, Motor
+    from ramprig.measure.lab import Bystander
+    from ramprig.measure.running import Measurement, Procedure
+    from ramprig.port.base import Port
+
+WHAT = {
+    "wiring": "bring-up check: is the motor wired as the bench file says, and if not, what is wrong",
+    "curve": "duty to speed, both ways, up and down: dead band, hysteresis, linear range, no-load current",
+    "coastdown": "how the shaft runs down with the bridge off: friction over inertia",
+    "backlash": "lost motion at reversal",
+    "servo": "positioning, timing and end stops of a servo",
+    "link": "round trip, latency grid, clock drift, byte errors with the motor off and on",
+}
+MOTORS_ONLY = ("wiring", "curve", "coastdown", "backlash")
+
+EPILOG = "\n".join(
+    [
+        "what:",
+        *(f"  {name:<10} {text}" for name, text in WHAT.items()),
+        "",
+        "Each runs under limits of its own, none looser than the bench file's, and puts those back. It asks before it",
+        "arms. Exits with 1 where the bench is not as it should be, or the data do not carry a result.",
+    ]
+)
+
+
+def declare(parser: argparse.ArgumentParser) -> None:
+    """What to measure, on what, and where."""
+    parser.add_argument("what", choices=tuple(WHAT), metavar="WHAT", help=", ".join(WHAT))
+    parser.add_argument("--bench", type=Path, required=True, metavar="FILE", help="the bench file")
+    parser.add_argument("--motor", metavar="NAME", help="the motor, where the bench has several")
+    parser.add_argument("--servo", metavar="NAME", help="the servo, where the bench has several")
+    parser.add_argument("--port", metavar="URL", help="the port, instead of the bench's")
+    parser.add_argument("--rehearse", action="store_true", help="on the mock in virtual time")
+    parser.add_argument("--seed", type=int, metavar="N", help="of the rehearsal: the same seed gives the same run")
+    parser.add_argument("--fault", action="append", default=[], metavar="NAME[:AXIS][=VALUE]", help="of the rehearsal")
+    parser.add_argument("--runs", type=Path, default=RUNS, metavar="DIR", help="where run folders go (default: runs)")
+    parser.add_argument("--no-record", action="store_true", help="write no run folder")
+    parser.add_argument("--save", action="store_true", help="write the results into the bench file")
+    parser.add_argument("--json", action="store_true", help="print the result as JSON")
+    parser.add_argument("--yes", action="store_true", help="do not ask before anything moves")
+    parser.add_argument("--by-hand", action="store_true", help="wiring: with turns by hand, for which it asks")
+    parser.add_argument("--repeats", type=int, metavar="N", help="how often, where it repeats something")
+    parser.add_argument("--clamped", action="store_true", help="backlash: the output shaft is clamped fast")
+    parser.add_argument("--second", metavar="NAME", help="a motor entry whose encoder sits on the output or the horn")
+    parser.add_argument("--creep", action="store_true", help="servo: creep towards the end stops and find them")
+    parser.epilog = EPILOG
+
+
+def carry_out(args: argparse.Namespace) -> int:
+    """Measure; 0 where all is well, 1 where the bench is not as it should be."""
+    from ramprig.bench import load_bench
+    from ramprig.measure.bench_entry import save
+
+    bench = load_bench(args.bench)
+    if args.save and args.no_record:
+        raise UsageError("--save needs the run folder to refer to: leave --no-record out")
+    procedure = procedure_of(args, bench)
+    procedure.bench(bench)  # what the bench is not fit for is refused before a port is opened
+    url = _url(args, bench)
+    if not args.yes and not args.rehearse and not url.startswith("mock:") and on_terminal():
+        ask(procedure, bench, url)
+    done = _measure(args, procedure, bench, url)
+    show(done, as_json=args.json)
+    if args.rehearse:
+        tell(NOT_PROVED)
+    if args.save:
+        if done.findings.good:
+            save(args.bench, replace(done, board=f"{done.board}, rehearsed") if args.rehearse else done)
+            tell(f"written into {args.bench}")
+        else:
+            tell("nothing was written into the bench file: the bench is not as it should be")
+    return 0 if done.findings.good else 1
+
+
+def procedure_of(args: argparse.Namespace, bench: Bench) -> Procedure:
+    """The procedure that is asked for. Raises UsageError for what it cannot be made from."""
+    if args.repeats is not None and args.repeats < 1:
+        raise UsageError(f"--repeats {args.repeats}: at least 1")
+    repeats = {} if args.repeats is None else {"repeats": args.repeats}
+    match args.what:
+        case "wiring":
+            from ramprig.measure.procedures.wiring import Wiring
+
+            return Wiring(motor=_motor(args, bench), by_hand=args.by_hand)
+        case "curve":
+            from ramprig.measure.procedures.curve import Curve
+
+            return Curve(motor=_motor(args, bench), **repeats)
+        case "coastdown":
+            from ramprig.measure.procedures.coastdown import CoastDown
+
+            return CoastDown(motor=_motor(args, bench), **repeats)
+        case "backlash":
+            from ramprig.measure.procedures.backlash import Backlash
+
+            return Backlash(motor=_motor(args, bench), clamped=args.clamped, second=args.second, **repeats)
+        case "servo":
+            from ramprig.measure.procedures.servo import ServoCheck
+
+            servo = _one(args.servo, [servo.name for servo in bench.servos], "servo")
+            return ServoCheck(servo=servo, second=args.second, creep=args.creep, **repeats)
+        case _:
+            from ramprig.measure.procedures.linkcheck import LinkCheck
+
+            motor = args.motor or (bench.motors[0].name if len(bench.motors) == 1 else None)
+            return LinkCheck(motor=None if motor is None else bench.motor(motor).name)
+
+
+def _motor(args: argparse.Namespace, bench: Bench) -> str:
+    name = _one(args.motor, [motor.name for motor in bench.motors], "motor")
+    return bench.motor(name).name
+
+
+def _one(said: str | None, names: list[str], what: str) -> str:
+    """The name that was said, else the only one there is."""
+    if said is not None:
+        if said not in names:
+            raise UsageError(f"--{what} {said}: the bench has {', '.join(names) or f'no {what}'}")
+        return said
+    if len(names) != 1:
+        has = f"has {', '.join(names)}: say --{what} NAME" if names else f"has no {what}"
+        raise UsageError(f"the bench {has}")
+    return names[0]
+
+
+def _url(args: argparse.Namespace, bench: Bench) -> str:
+    if args.rehearse:
+        return mock_url(args.port or "mock:", args.bench, virtual=True, seed=args.seed, faults=args.fault)
+    if args.fault or args.seed is not None:
+        raise UsageError("--fault and --seed belong to --rehearse")
+    url: str = args.port or bench.port.url
+    return mock_url(url, args.bench) if url.startswith("mock:") else url
+
+
+def ask(procedure: Procedure, bench: Bench, url: str) -> None:
+    """Show the cautions and what will move, and wait for the word `yes`. Raises StoppedByUser for any other."""
+    from ramprig.cautions import cautions_lines
+
+    moves = procedure.moves(bench)
+    if not moves:
+        return
+    for line in [*cautions_lines(), "", f"port      {url}", moves]:
+        tell(line)
+    tell("Type yes and ENTER to arm and measure; anything else leaves everything off.")
+    if sys.stdin.readline().strip().lower() != "yes":
+        raise StoppedByUser("Not measured: it was not confirmed. Nothing has moved.")
+
+
+def _measure(args: argparse.Namespace, procedure: Procedure, bench: Bench, url: str) -> Measurement:
+    from ramprig.measure.running import MeasureWish, measure
+    from ramprig.mock.url import register
+    from ramprig.port.open import open_port
+    from ramprig.session.signals import StopOnSignals
+
+    register()
+    port = open_port(url, baud=bench.port.baud, dtr=bench.port.dtr)
+    wish = MeasureWish(
+        runs=None if args.no_record else args.runs,
+        settings={"port": url, "rehearsal": args.rehearse, "what": args.what},
+        seed=(bench.mock.seed if args.seed is None else args.seed) if args.rehearse else None,
+        virtual=args.rehearse,
+    )
+    progress = Progress()
+    try:
+        return measure(
+            procedure,
+            bench,
+            port,
+            wish,
+            bystander=_bystander(port, rehearse=args.rehearse),
+            tell=progress.line,
+            progress=lambda text: progress.show(lambda: text),
+            guard=StopOnSignals,
+        )
+    except RamprigError:
+        raise
+    finally:
+        progress.close()
+
+
+def _bystander(port: Port, *, rehearse: bool) -> Bystander | None:
+    """Who can be asked: the mock's own bystander, or the person at the terminal."""
+    from ramprig.mock.port import MockPort
+
+    if isinstance(port, MockPort):
+        from ramprig.measure.rehearsing import SimulatedBystander
+
+        return SimulatedBystander(port.device)
+    return Person() if on_terminal() and not rehearse else None
+
+
+class Person:
+    """The person at the terminal, asked while time goes on."""
+
+    def turn(self, motor: Motor, turns: int, pump: Callable[[float], None]) -> bool:
+        """Ask for turns by hand; False where that cannot be done."""
+        answer = answered(
+            f"The outputs are off. Turn the output shaft of {motor.name} by hand exactly {turns} turns the way a "
+            "positive duty is to turn it, then press ENTER; type no and ENTER where it cannot be turned.",
+            pump,
+        )
+        return not answer.startswith("n")
+
+    def turned_forwards(self, motor: Motor, duty: int, pump: Callable[[float], None]) -> bool | None:
+        """Ask which way the shaft turned; None where the person does not know."""
+        answer = answered(
+            f"At the first pulses, did {motor.name} turn the way a positive duty is to turn it? yes, no, or ENTER "
+            "where you did not see it.",
+            pump,
+        )
+        return {"y": True, "n": False}.get(answer[:1])
+
+
+def answered(question: str, pump: Callable[[float], None]) -> str:
+    """What is typed, in small letters; time goes on by `pump` while it is waited for."""
+    tell(question)
+    lines: list[str] = []
+    reader = threading.Thread(target=lambda: lines.append(sys.stdin.readline()), daemon=True)
+    reader.start()
+    while reader.is_alive():
+        pump(0.1)
+    return lines[0].strip().lower() if lines else ""
+
+
+def show(done: Measurement, *, as_json: bool) -> None:
+    """The result on standard output, where it is written down on standard error."""
+    if as_json:
+        say_surely(json.dumps(done.findings.to_json(), ensure_ascii=False, allow_nan=False, indent=2))
+    else:
+        for line in done.findings.text():
+            say_surely(line)
+    if done.folder is not None:
+        tell(f"run folder: {done.folder}")
