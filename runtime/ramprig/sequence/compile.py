@@ -105,6 +105,7 @@ def _plan_of(
         longest_window=compiler.window + int(rig.ticks(Fraction(WINDOW_MARGIN_S))),
         remarks=(*remarks, *compiler.remarks, *unused),
         cycles=tuple(part for part in body.parts if isinstance(part, Cycles)),
+        counts_cycles=any(isinstance(step, Cycle) for step in sequence.steps),
     )
 
 

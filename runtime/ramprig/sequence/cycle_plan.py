@@ -111,7 +111,7 @@ def compile_cycles(
         failed_most=step.failed_most,
         confirmed=all(_confirms(body) for body in bodies),
     )
-    return _with_totals(rig, part, so_far or BlockSoFar())
+    return _with_totals(rig, part, so_far)
 
 
 def _walk(rig: Rig, series: SeriesMaker, step: Cycle, scene: Scene) -> _Walked:
@@ -190,8 +190,9 @@ def _text(rig: Rig, step: Cycle, rest: int) -> str:
     return text
 
 
-def _with_totals(rig: Rig, part: Cycles, so_far: BlockSoFar) -> Cycles:
+def _with_totals(rig: Rig, part: Cycles, begun: BlockSoFar | None) -> Cycles:
     """The block with what is left of it added up."""
+    so_far = begun or BlockSoFar()
     reaction = int(rig.ticks(TURN_REACTION_S))
     hour = int(rig.ticks(Fraction(HOUR_S)))
     body_least = min(part.first.totals.least, part.later.totals.least, part.checked.totals.least)
@@ -209,7 +210,7 @@ def _with_totals(rig: Rig, part: Cycles, so_far: BlockSoFar) -> Cycles:
     whole = before.then(part.later.totals.times(count)).then(check.times(checks))
     least = whole.least + max(0, rests - part.rest)
     most = before.most + count * body_most + checks * check.most + rests + (count + checks) * reaction
-    least, most = _with_guard(part, count, checks, hour, least, most)
+    least, most = _with_guard(part, count, checks, hour, least, most, resumed=begun is not None)
     if part.for_ticks is not None:
         # a cycle begins only while less than `for` has been run, whatever it waits for
         most = before.most + left + body_most + check.most + 2 * part.rest + 2 * reaction + hour
@@ -218,8 +219,13 @@ def _with_totals(rig: Rig, part: Cycles, so_far: BlockSoFar) -> Cycles:
     return replace(part, totals=totals)
 
 
-def _with_guard(part: Cycles, count: int, checks: int, hour: int, least: int, most: int) -> tuple[int, int]:
-    """The times with the waits for the starts per hour: whole hours of which each allows so many starts."""
+def _with_guard(
+    part: Cycles, count: int, checks: int, hour: int, least: int, most: int, *, resumed: bool
+) -> tuple[int, int]:
+    """The times with the waits for the starts per hour: whole hours of which each allows so many starts.
+
+    In a run that is `resumed` the first hour's may have been used up before.
+    """
     if part.starts_per_hour is None:
         return least, most
     names = part.starts.keys() | part.check_starts.keys()
@@ -230,4 +236,5 @@ def _with_guard(part: Cycles, count: int, checks: int, hour: int, least: int, mo
     usable = max(1, part.starts_per_hour - turn + 1)  # a turn begins only when all its starts are allowed
     body = max(part.first.totals.most, part.later.totals.most, part.checked.totals.most)
     least = max(least, max(0, -(-starts // part.starts_per_hour) - 1) * hour)
-    return least, most + -(-starts // usable) * (hour + body)
+    waits = max(0, starts - 1) // usable + resumed
+    return least, most + waits * (hour + body)

@@ -17,7 +17,7 @@ from enum import StrEnum
 
 from .cycle_plan import HOUR_S, BlockSoFar
 from .happened import BlockOver, CheckBegun, CheckDone, CycleBegun, CycleCommanded, CycleDone, CycleInterrupted
-from .outcome import Judged
+from .outcome import Counted, Judged
 from .plan import Cycles
 from .strands import Turn
 
@@ -31,32 +31,6 @@ class CycleOutcome(StrEnum):
     CONFIRMED = "confirmed"
     FAILED = "failed"
     COMMANDED = "commanded"
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Counted:
-    """The cycles of a run.
-
-    `commanded` = `confirmed` + `failed` + `unjudged` + `interrupted` + the one under way. `interrupted` ones were
-    broken off: each may or may not have moved.
-    """
-
-    commanded: int = 0
-    confirmed: int = 0
-    failed: int = 0
-    unjudged: int = 0
-    interrupted: int = 0
-
-    @property
-    def done(self) -> int:
-        """Cycles carried out to their end."""
-        return self.confirmed + self.failed + self.unjudged
-
-    def __str__(self) -> str:
-        text = f"{self.commanded} commanded, {self.confirmed} confirmed, {self.failed} failed"
-        if self.unjudged:
-            text += f", {self.unjudged} not judged"
-        return text + (f", {self.interrupted} broken off" if self.interrupted else "")
 
 
 @dataclass(frozen=True, slots=True)
@@ -189,6 +163,8 @@ class CycleBook:
             self._guard = StartsGuard()
             for past in sorted(self._so_far.starts, key=lambda past: -past.age_s):
                 self._guard.note({past.motor: past.count}, tick * self._tick_s - past.age_s)
+        if part.before is not None:
+            self._guard.note(part.before.totals.starts, tick * self._tick_s)
 
     def due(self, tick: int) -> Due:
         """What comes after the turn that was over at `tick`."""

@@ -8,14 +8,16 @@ from typing import Protocol
 
 from ramprig.errors import LinkError, LinkLost, Place, RecordError, Refused, StoppedByUser, WrongDevice
 from ramprig.port.clock import Clock
+from ramprig.quantity import format_duration
 from ramprig.session.blocks import Block
-from ramprig.session.events import Tripped
+from ramprig.session.events import Event, HostSlept, Tripped
 from ramprig.session.session import Session
 from ramprig_link.words import State
 
+from .cycle_run import CycleBook
 from .executive import Executive, Progress
 from .listeners import Listeners
-from .outcome import Ended, Outcome, Verdict
+from .outcome import Ended, Outcome, Tally, Verdict
 from .plan import Plan
 from .rig import Rig
 from .tripsay import explain_trip
@@ -29,6 +31,8 @@ OFF_SEEN_S = 6.0
 TRAIL_WAIT_S = 1.0
 """The trail is frozen within this time of a trip."""
 POLL_S = 0.05
+SLEEPS_MAX = 1000
+"""Sleeps of the host that an outcome lists."""
 
 
 class Keeper(Protocol):
@@ -41,6 +45,14 @@ class Keeper(Protocol):
     def on_trail(self, blocks: Sequence[Block]) -> None:
         """Take the fast record around a trip."""
         ...
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Bounds:
+    """When a run must end, whatever is left to do: `until_s` on the port's clock, and the sentence that says why."""
+
+    until_s: float
+    text: str
 
 
 @dataclass(frozen=True, slots=True)
@@ -59,13 +71,18 @@ def run_plan(
     listeners: Listeners,
     keeper: Keeper | None = None,
     progress: Callable[[Progress], None] | None = None,
+    book: CycleBook | None = None,
+    tally: Tally | None = None,
+    bounds: Bounds | None = None,
 ) -> Outcome:
     """Log, arm, carry the plan out, and end with the outputs off; tells how it ended.
 
-    `clock` is the port's, `listeners` are those of the session. Raises nothing for what device, link, disk or user do:
+    `clock` is the port's, `listeners` are those of the session. `book` counts the cycles and `tally` the expectations,
+    from what earlier parts of the run have done. Raises nothing for what device, link, disk or user do:
     that is the outcome. Any other exception stops the motors first.
     """
     run = _Run(session, plan, rig, clock, keeper, listeners, progress)
+    run.begin_with(book, tally, bounds)
     try:
         return run.whole()
     finally:
@@ -94,11 +111,26 @@ class _Run:
         tell = _nothing if keeper is None else keeper.on_event
         self.executive = Executive(session, clock, plan, rig, tell, progress)
         self.confirmed = True
-        listeners.add(on_block=self.executive.on_block, on_event=self.executive.on_event)
+        self.slept_s: list[float] = []
+        listeners.add(on_block=self.executive.on_block, on_event=self._on_event)
+
+    def begin_with(self, book: CycleBook | None, tally: Tally | None, bounds: Bounds | None) -> None:
+        """What is counted already, and how long it may take."""
+        if book is not None:
+            self.executive.book = book
+        if tally is not None:
+            self.executive.tally = tally
+        if bounds is not None:
+            self.executive.until_s, self.executive.until_text = bounds.until_s, bounds.text
+
+    def _on_event(self, event: Event) -> None:
+        if isinstance(event, HostSlept) and len(self.slept_s) < SLEEPS_MAX:
+            self.slept_s.append(round(event.slept_s, 1))
+        self.executive.on_event(event)
 
     def leave(self) -> None:
         """Listen no longer."""
-        self.listeners.remove(on_block=self.executive.on_block, on_event=self.executive.on_event)
+        self.listeners.remove(on_block=self.executive.on_block, on_event=self._on_event)
 
     def whole(self) -> Outcome:
         """The run and its end."""
@@ -108,6 +140,8 @@ class _Run:
             self.session.stop(1)
             raise
         end = self._bring_down(end)
+        if self.executive.book is not None:
+            self.executive.book.abandon(end.sentence)
         return self._outcome(end)
 
     # ---- while it lasts ------------------------------------------------------------------------------------------
@@ -151,10 +185,9 @@ class _Run:
             if tally.held:
                 text += f", {_count(tally.held, 'expectation')} held"
             return _End(Verdict.PASSED, text, None)
-        first = tally.failures[0]
         place = self.executive.first_failure_place
         more = f" (and {tally.failed - 1} more)" if tally.failed > 1 else ""
-        return _End(Verdict.FAILED, f"{first.sentence}{more}", place)
+        return _End(Verdict.FAILED, f"{tally.first}{more}", place)
 
     def _refused(self, refused: Refused) -> _End:
         """A refusal is often the first sign of a trip, whose notice is on its way."""
@@ -245,11 +278,11 @@ class _Run:
 
     def _outcome(self, end: _End) -> Outcome:
         executive = self.executive
-        tally = executive.tally
+        tally, trip, book = executive.tally, executive.trip, executive.book
         elapsed_s = max(0, executive.now - executive.start) * self.plan.tick_us / 1e6 if executive.start else 0.0
         return Outcome(
             verdict=end.verdict,
-            sentence=end.sentence,
+            sentence=end.sentence + self._beside(),
             place=end.place,
             held=tally.held,
             failed=tally.failed,
@@ -258,7 +291,22 @@ class _Run:
             elapsed_s=elapsed_s,
             stop_confirmed=self.confirmed,
             overdue=executive.overdue,
+            trip="" if trip is None else trip.trip,
+            restarted=executive.restarted is not None,
+            cycles=book.counted if book is not None and self.plan.counts_cycles else None,
+            slept_s=tuple(self.slept_s),
         )
+
+    def _beside(self) -> str:
+        """What else must be known of the run, for the end of its sentence."""
+        book = self.executive.book
+        text = ""
+        if book is not None and self.plan.counts_cycles:
+            text += f"; cycles: {book.counted}"
+        if self.slept_s:
+            times = _count(len(self.slept_s), "time")
+            text += f"; the host slept {times}, {format_duration(sum(self.slept_s))} in all"
+        return text
 
 
 def _nothing(event: object) -> None:

@@ -80,11 +80,12 @@ class Judged:
 
 @dataclass(slots=True)
 class Tally:
-    """The expectations of a run: how many held, how many not, and the first of those."""
+    """The expectations of a run: how many held, how many not, those of this part of it, and the first in words."""
 
     held: int = 0
     failed: int = 0
     failures: list[Judged] = field(default_factory=list)
+    first: str = ""
 
     def take(self, judged: Judged) -> None:
         """Count one."""
@@ -92,8 +93,35 @@ class Tally:
             self.held += 1
             return
         self.failed += 1
+        self.first = self.first or judged.sentence
         if len(self.failures) < FAILURES_KEPT:
             self.failures.append(judged)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Counted:
+    """The cycles of a run.
+
+    `commanded` = `confirmed` + `failed` + `unjudged` + `interrupted` + the one under way. `interrupted` ones were
+    broken off: each may or may not have moved.
+    """
+
+    commanded: int = 0
+    confirmed: int = 0
+    failed: int = 0
+    unjudged: int = 0
+    interrupted: int = 0
+
+    @property
+    def done(self) -> int:
+        """Cycles carried out to their end."""
+        return self.confirmed + self.failed + self.unjudged
+
+    def __str__(self) -> str:
+        text = f"{self.commanded} commanded, {self.confirmed} confirmed, {self.failed} failed"
+        if self.unjudged:
+            text += f", {self.unjudged} not judged"
+        return text + (f", {self.interrupted} broken off" if self.interrupted else "")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -101,7 +129,9 @@ class Outcome:
     """The end of a run.
 
     `sentence` says why it ended, `place` is the step that it ended at or the first expectation that failed, None where
-    no step had begun. `stop_confirmed` tells whether the device and its measurements say that all is off.
+    no step had begun. `stop_confirmed` tells whether the device and its measurements say that all is off. `trip` is the
+    word of the trip that ended it, `restarted` whether a restart of the device did. `cycles` are counted over all parts
+    of the run, None where the sequence has none. `slept_s` are the times for which the host was found to have slept.
     """
 
     verdict: Verdict
@@ -114,6 +144,10 @@ class Outcome:
     elapsed_s: float
     stop_confirmed: bool
     overdue: int
+    trip: str = ""
+    restarted: bool = False
+    cycles: Counted | None = None
+    slept_s: tuple[float, ...] = ()
 
     @property
     def exit_code(self) -> int:

@@ -260,6 +260,7 @@ class Plan:
     longest_window: int
     remarks: tuple[str, ...]
     cycles: tuple[Cycles, ...] = ()
+    counts_cycles: bool = False
 
     @property
     def totals(self) -> Totals:

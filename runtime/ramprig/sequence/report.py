@@ -10,7 +10,7 @@ from ramprig.quantity import format_bytes, format_current, format_duration, form
 from ramprig.record.columns import predicted_bytes
 
 from .columns import bench_columns
-from .plan import Branches, Loop, Part, Plan, Run, Series, Totals
+from .plan import Branches, Cycles, Loop, Part, Plan, Run, Series, Totals
 
 LINES_MAX = 2000
 """A timeline has at most so many lines; a longer one says how many are left out."""
@@ -44,6 +44,7 @@ def summary_lines(plan: Plan, bench: Bench) -> list[str]:
     lines += [f"motor     {text}" for text in _motors(plan, bench)]
     totals = plan.totals
     lines.append(f"orders    {totals.orders}, expectations {totals.judgements}")
+    lines += [f"cycles    {part.text.removeprefix('cycle ')}" for part in plan.cycles]
     lines.append(f"log       {_log(plan, bench)}")
     lines += [f"remark    {remark}" for remark in plan.remarks]
     return lines
@@ -151,7 +152,23 @@ def _walk(part: Part, at: int, *, later: bool, depth: int) -> Iterator[_Line]:
         case Loop(first=first):
             yield _Line(at, later, depth, part, part.text)
             yield from _walk(first, at, later=later, depth=depth + 1)
+        case Cycles():
+            yield _Line(at, later, depth, part, part.text)
+            yield from _walk_cycles(part, at, depth=depth + 1)
         case Run(length=0, motions=()):
             return
         case _:
             yield _Line(at, later, depth, part, part.text)
+
+
+def _walk_cycles(part: Cycles, at: int, *, depth: int) -> Iterator[_Line]:
+    """Each kind of turn once: when one begins depends on those before, so later lines are of an unknown time."""
+    turns = (("before the first cycle", part.before), ("check", part.first_check), ("each cycle", part.first))
+    later = False
+    for text, turn in turns:
+        if turn is None:
+            continue
+        yield _Line(at, later, depth, turn, text)
+        yield from _walk(turn, at, later=later, depth=depth + 1)
+        at += turn.totals.least
+        later = True

@@ -11,7 +11,7 @@ from ramprig.bench import Bench
 from ramprig.errors import RecordError
 from ramprig.port.base import Port
 from ramprig.port.clock import Clock
-from ramprig.record.events import Json, jsonable
+from ramprig.record.events import Json, jsonable, rfc3339
 from ramprig.record.folder import InputFile, RunDescription, RunFolder
 from ramprig.record.manifest import Anchor, RunEnd
 from ramprig.record.recorder import Recorder
@@ -22,12 +22,14 @@ from ramprig.session.opening import Wanted
 from ramprig.session.readings import Identity
 from ramprig.session.session import Session
 
+from .carry_on import CarryOn, check_same, end_latch
 from .columns import bench_columns
 from .compile import compile_plan
-from .ending import run_plan
+from .cycle_run import CycleBook, RunSoFar
+from .ending import Bounds, run_plan
 from .executive import Progress
 from .listeners import Listeners
-from .outcome import Outcome, Verdict
+from .outcome import Outcome, Tally, Verdict
 from .plan import Plan
 from .reading import Sequence
 from .rig import Rig
@@ -50,7 +52,8 @@ class RunWish:
 
     `runs` is the folder for run folders, None for none. `settings` are the values of the command line, for the record.
     `virtual` is for a port in virtual time: the log is written in the caller's thread, and the same input gives the
-    same bytes.
+    same bytes; `durable` has it synced all the same. `latest_end_unix_s` is when the run must be over. `carry_on` makes
+    it the next part of a run that was interrupted.
     """
 
     sequence: Sequence
@@ -61,6 +64,9 @@ class RunWish:
     seed: int | None = None
     virtual: bool = False
     short_id: str | None = None
+    durable: bool | None = None
+    latest_end_unix_s: float | None = None
+    carry_on: CarryOn | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -75,6 +81,8 @@ class Recorded:
     inputs: tuple[InputFile, ...] = ()
     virtual: bool = False
     short_id: str | None = None
+    durable: bool | None = None
+    carry_on: CarryOn | None = None
 
 
 def wanted_of(bench: Bench) -> Wanted:
@@ -145,19 +153,47 @@ def run_on_session(
     """
     identity = session.identity
     rig = Rig.of(wish.bench, tick_us=identity.tick_us)
-    plan = compile_plan(wish.sequence, wish.bench, tick_us=identity.tick_us)
-    if wish.runs is None:
-        outcome = run_plan(session, plan, rig, clock=clock, listeners=listeners, progress=progress)
+    carry_on = wish.carry_on
+    so_far = RunSoFar() if carry_on is None else carry_on.so_far
+    plan = compile_plan(wish.sequence, wish.bench, tick_us=identity.tick_us, so_far=so_far.blocks)
+    bounds = _bounds(wish, clock)
+    runs = wish.runs if carry_on is None else carry_on.folder.parent
+    if runs is None:
+        outcome = run_plan(session, plan, rig, clock=clock, listeners=listeners, progress=progress, bounds=bounds)
         return RunResult(outcome=_explained(outcome, [], asked_by), folder=None)
+    if carry_on is not None:
+        check_same(session, carry_on)
+        end_latch(session, carry_on, rig)
     troubles: list[Trouble] = []
-    what = _recorded(wish, wish.runs, port_name)
+    what = _recorded(wish, runs, port_name)
     with recording(what, session, clock=clock, listeners=listeners, troubles=troubles) as recorder:
         if began is not None:
             began(recorder.folder.path)
-        outcome = run_plan(session, plan, rig, clock=clock, listeners=listeners, keeper=recorder, progress=progress)
+        book = CycleBook(so_far, tick_s=plan.tick_us / 1e6, write=recorder.on_cycle, pending=recorder.cycles_pending)
+        outcome = run_plan(
+            session,
+            plan,
+            rig,
+            clock=clock,
+            listeners=listeners,
+            keeper=recorder,
+            progress=progress,
+            book=book,
+            tally=Tally(held=so_far.held, failed=so_far.failed, first=so_far.first_failure),
+            bounds=bounds,
+        )
         outcome = _explained(outcome, troubles, asked_by)
         folder = recorder.finish(_end_of(session, plan, outcome, clock))
     return RunResult(outcome=outcome, folder=folder)
+
+
+def _bounds(wish: RunWish, clock: Clock) -> Bounds | None:
+    """When the run must be over, on the port's clock."""
+    if wish.latest_end_unix_s is None:
+        return None
+    at = rfc3339(wish.latest_end_unix_s, decimals=0)
+    text = f"ended in order at its latest end, {at}, before all steps were carried out"
+    return Bounds(until_s=clock.now() + wish.latest_end_unix_s - clock.wall(), text=text)
 
 
 def _explained(outcome: Outcome, troubles: list[Trouble], asked_by: Callable[[], str] | None) -> Outcome:
@@ -224,8 +260,28 @@ def recording(
 
 
 def _recorder(what: Recorded, session: Session, clock: Clock, on_trouble: Callable[[Trouble], None]) -> Recorder:
+    return Recorder(
+        _folder(what, session, clock),
+        bench_columns(what.bench, tick_us=session.identity.tick_us),
+        start=anchor(session, clock),
+        tick_us=session.identity.tick_us,
+        clock=clock,
+        on_trouble=on_trouble,
+        threaded=not what.virtual,
+        durable=what.durable,
+        limits_digest=session.limits.digest,
+    )
+
+
+def _folder(what: Recorded, session: Session, clock: Clock) -> RunFolder:
+    """A new run folder, or the one of the run that is to be gone on with."""
     identity = jsonable(session.identity)
     assert isinstance(identity, dict)  # a dataclass is written as an object
+    carry_on = what.carry_on
+    if carry_on is not None:
+        return RunFolder.reopen(
+            carry_on.folder, dict(carry_on.manifest), carry_on.interruption, port=what.port_name, identity=identity
+        )
     bench = what.bench
     description = RunDescription(
         name=what.name,
@@ -234,32 +290,27 @@ def _recorder(what: Recorded, session: Session, clock: Clock, on_trouble: Callab
         settings=what.settings,
         inputs=[InputFile("bench", bench.file, bench.file_bytes), *what.inputs],
     )
-    folder = RunFolder.create(what.runs, description, started_unix_s=clock.wall(), short_id=what.short_id)
-
-    return Recorder(
-        folder,
-        bench_columns(bench, tick_us=session.identity.tick_us),
-        start=anchor(session, clock),
-        tick_us=session.identity.tick_us,
-        clock=clock,
-        on_trouble=on_trouble,
-        threaded=not what.virtual,
-    )
+    return RunFolder.create(what.runs, description, started_unix_s=clock.wall(), short_id=what.short_id)
 
 
 def _recorded(wish: RunWish, runs: Path, port_name: str) -> Recorded:
     """How a run of a sequence is written down."""
     sequence = wish.sequence
+    settings: dict[str, object] = {"values": dict(sequence.values), **(wish.settings or {})}
+    if wish.latest_end_unix_s is not None:
+        settings["latest_end"] = rfc3339(wish.latest_end_unix_s)
     roles = ["sequence", *["include"] * (len(sequence.files) - 1)]
     return Recorded(
         bench=wish.bench,
         runs=runs,
         name=wish.title or sequence.name,
         port_name=port_name,
-        settings={"values": dict(sequence.values), **(wish.settings or {})},
+        settings=settings,
         inputs=tuple(InputFile(role, file.file, file.data) for role, file in zip(roles, sequence.files, strict=True)),
         virtual=wish.virtual,
         short_id=wish.short_id,
+        durable=wish.durable,
+        carry_on=wish.carry_on,
     )
 
 
@@ -286,7 +337,12 @@ def _end_of(session: Session, plan: Plan, outcome: Outcome, clock: Clock) -> Run
         "orders_overdue": outcome.overdue,
         "planned_s": round(plan.totals.least * plan.tick_us / 1e6, 3),
         "remarks": list(plan.remarks),
+        "trip": outcome.trip,
+        "device_restarted": outcome.restarted,
+        "host_slept_s": list(outcome.slept_s),
     }
+    if outcome.cycles is not None:
+        results["cycles"] = jsonable(outcome.cycles)
     return RunEnd(
         verdict=outcome.verdict.word,
         stop_reason=outcome.sentence,
