@@ -146,15 +146,15 @@ size_t endpoint_read(struct endpoint *endpoint, uint8_t *bytes, size_t most, int
         }
     }
     (void)poll(watched, 2, wait_ms);
-    if (endpoint->listener >= 0 && (watched[1].revents & POLLIN) != 0) {
+    ssize_t got = 0;
+    if (endpoint->host >= 0 && watched[0].revents != 0) {
+        got = read(endpoint->host, bytes, most);
+        if (got <= 0 && !(got < 0 && (errno == EAGAIN || errno == EINTR))) {
+            drop_host(endpoint);
+        }
+    }
+    if (endpoint->listener >= 0 && (watched[1].revents & POLLIN) != 0) { /* after the one before has been seen to go */
         *came = take_host(endpoint);
-    }
-    if (endpoint->host < 0 || watched[0].revents == 0) {
-        return 0;
-    }
-    ssize_t got = read(endpoint->host, bytes, most);
-    if (got <= 0 && !(got < 0 && (errno == EAGAIN || errno == EINTR))) {
-        drop_host(endpoint);
     }
     return got > 0 ? (size_t)got : 0;
 }
