@@ -222,6 +222,19 @@ def test_an_installed_wheel_has_the_sources_it_builds_from(tmp_path: Path) -> No
     assert "N00 boot 0 1 power" in done.stdout
 
 
+@needs_compiler
+def test_the_cache_keeps_what_was_used_last(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(build, "cache_folder", lambda: tmp_path / "cache")
+    monkeypatch.setattr(build, "BUILDS_MAX", 2)
+    right = tmp_path / "right.c"
+    right.write_text("int main(void) { return 0; }\n")
+    built = []
+    for number in range(3):
+        built.append(build.build("right", [right], (f"-DX={number}",), shared=False))
+        os.utime(built[-1], (number, number))
+    assert [path.exists() for path in built] == [False, True, True]
+
+
 def test_the_compiler_is_the_one_the_environment_names(monkeypatch: pytest.MonkeyPatch) -> None:
     named = shutil.which("sh")
     monkeypatch.setenv("CC", "sh")

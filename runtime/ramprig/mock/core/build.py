@@ -26,6 +26,9 @@ FLAGS = ("-std=c11", "-O2", "-ffp-contract=off")
 
 BUILD_TIMEOUT_S = 120.0
 
+BUILDS_MAX = 64
+"""Most files that are kept; beyond, the one used longest ago goes."""
+
 HERE = Path(__file__).resolve()
 INSTALLED = HERE.parents[2] / "_firmware"
 """Where a wheel has the C sources."""
@@ -96,7 +99,18 @@ def build(name: str, sources: list[Path], options: tuple[str, ...], *, shared: b
     out = folder / f"{name}-{key[:20]}{suffix}"
     if not out.exists():
         _compile(command, flags, sources, out)
+        _prune(folder)
+    with contextlib.suppress(OSError):
+        os.utime(out)
     return out
+
+
+def _prune(folder: Path) -> None:
+    """Remove what was used longest ago; what cannot be removed, being in use, stays."""
+    with contextlib.suppress(OSError):
+        kept = sorted((path for path in folder.iterdir() if path.is_file()), key=lambda path: path.stat().st_mtime)
+        for path in kept[:-BUILDS_MAX]:
+            path.unlink()
 
 
 def _writable(folder: Path) -> Path:
