@@ -5,7 +5,8 @@
     python3 scripts/test.py --soak             everything, the minutes-long tests included
     python3 scripts/test.py tests/test_x.py -k name     what is not an option of ours goes to pytest
 
-All checks run even where an earlier one fails; the exit status is 0 only if all passed.
+All checks run even where an earlier one fails; the exit status is 0 only if all passed. The compilers and libraries
+that the firmware's tests need are installed where we may, and otherwise named: those tests are then skipped.
 """
 
 import os
@@ -14,6 +15,7 @@ import sys
 
 sys.path.insert(0, os.path.dirname(os.path.abspath(__file__)))
 import environment
+import toolchain
 
 OPTIONS = ("--quick", "--soak")
 
@@ -38,12 +40,15 @@ def main(arguments: "list[str]") -> int:
         print(__doc__)
         return 0
     python = environment.ready_or_exit()
+    lacking = toolchain.provide(environment.say)
     verdicts = []
     for title, command in commands(python, arguments):
         print(f"\n=== {title} ===", flush=True)
         done = subprocess.run(command, cwd=environment.ROOT, env=environment.clean_variables(), check=False)
         verdicts.append((title.split(":")[0], done.returncode == 0))
-    print(", ".join(f"{name} {'passed' if passed else 'FAILED'}" for name, passed in verdicts), flush=True)
+    summary = [f"{name} {'passed' if passed else 'FAILED'}" for name, passed in verdicts]
+    summary += [f"{part.title} SKIPPED (tools missing)" for part in lacking]
+    print(", ".join(summary), flush=True)
     return 0 if all(passed for _, passed in verdicts) else 1
 
 

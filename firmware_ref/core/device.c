@@ -333,8 +333,8 @@ void rr_device_start(struct rr_device *device, const RR_FLASH struct rr_port *po
     device->port = port;
     device->self = self;
     port->off(self);
-    device->boot = next_boot(device);
     load_limits(device);
+    device->boot = next_boot(device); /* last: it may leave the store busy */
     if (fault != 0) {
         device->last_trip = (struct rr_finding){RR_TRIP_SELF_TEST, 0, fault, 0};
     } else if (cause == RR_CAUSE_BROWNOUT || cause == RR_CAUSE_WATCHDOG) {

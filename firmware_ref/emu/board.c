@@ -73,11 +73,13 @@ static void probe(const struct board *board, char *answer, size_t room)
     chip_outputs(&board->chip, &outputs);
     snprintf(answer, room,
              "cycle=%" PRIu64 " stack=%u lost=%" PRIu64 " resets=%" PRIu64 " crashed=%d enabled=%d duty=%d brake=%d"
-             " pulse0_half_us=%u pulse1_half_us=%u both=%d counts=%d off_us=%" PRIu64 " marked=%d worst_us=%u",
+             " pulse0_half_us=%u pulse1_half_us=%u both=%d counts=%d off_us=%" PRIu64 " marked=%d worst_us=%u"
+             " ticks=%" PRIu64 " tick_cycle=%" PRIu64,
              (uint64_t)board->chip.avr->cycle, chip_stack_bytes(&board->chip), board->wire.lost, board->chip.resets,
              board->chip.crashed, outputs.enabled, outputs.duty, outputs.brake, outputs.pulse_half_us[0],
              outputs.pulse_half_us[1], board->bench.was_driven_twice, (int32_t)board->bench.counts,
-             board->bench.worst_off_cycles / CYCLES_A_US, board->bench.marked, chip_take_worst_us(&board->chip));
+             board->bench.worst_off_cycles / CYCLES_A_US, board->bench.marked, chip_take_worst_us(&board->chip),
+             board->chip.ticks, board->chip.tick_cycle);
 }
 
 void board_command(struct board *board, const char *command, char *answer, size_t room)

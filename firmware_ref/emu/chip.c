@@ -6,6 +6,7 @@
 #include <simavr/avr_extint.h>
 #include <simavr/avr_ioport.h>
 #include <simavr/sim_elf.h>
+#include <simavr/sim_interrupts.h>
 
 #include <stdio.h>
 #include <stdlib.h>
@@ -13,6 +14,7 @@
 
 #define FREQUENCY (CYCLES_A_US * 1000000u)
 #define PAINT 0xA5u
+#define TICK_VECTOR 14u /* TIMER0_COMPA */
 #define FLAG_WATCHDOG (1u << 3) /* in MCUSR */
 
 /* Addresses in data memory (data sheet, register summary). */
@@ -57,6 +59,7 @@ static void set_up_again(struct chip *chip)
     uint32_t flags = 0; /* neither to the console nor asleep on polling */
     chip->was_reset = false;
     chip->resets++;
+    chip->ticks = 0;
     avr->data[MCUSR_] = chip->reset_flags;
     chip->reset_flags = FLAG_WATCHDOG; /* the next one, if nobody else asks for it */
     avr_ioctl(avr, AVR_IOCTL_UART_SET_FLAGS('0'), &flags);
@@ -80,9 +83,20 @@ static uint16_t address_of(const elf_firmware_t *program, const char *name)
     return 0;
 }
 
+static void on_tick(avr_irq_t *irq, uint32_t value, void *param)
+{
+    struct chip *chip = param;
+    (void)irq;
+    if (value != 0) {
+        chip->ticks++;
+        chip->tick_cycle = chip->avr->cycle;
+    }
+}
+
 static void find_pins(struct chip *chip)
 {
     avr_t *avr = chip->avr;
+    avr_irq_register_notify(avr_get_interrupt_irq(avr, TICK_VECTOR) + AVR_INT_IRQ_RUNNING, on_tick, chip);
     chip->encoder_a = avr_io_getirq(avr, AVR_IOCTL_IOPORT_GETIRQ('D'), ENCODER_A);
     chip->encoder_b = avr_io_getirq(avr, AVR_IOCTL_IOPORT_GETIRQ('D'), ENCODER_A + 1);
     chip->current = avr_io_getirq(avr, AVR_IOCTL_ADC_GETIRQ, ADC_IRQ_ADC0);

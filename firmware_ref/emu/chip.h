@@ -28,6 +28,8 @@ struct chip {
     bool was_reset;
     void (*reset_of_chip)(struct avr_t *avr);
     uint64_t resets;
+    uint64_t ticks;      /* interrupts of the program's tick since the last reset */
+    uint64_t tick_cycle; /* when the last one came */
 };
 
 /* What the outputs do, read from the registers behind the pins. */

@@ -50,7 +50,11 @@
 #ifndef SERIAL
 #define SERIAL "unset"
 #endif
+#ifndef FIRMWARE_NAME
 #define FIRMWARE_NAME "ref-1.0.0"
+#endif
+#ifndef BOARD_NAME
 #define BOARD_NAME    "atmega328p"
+#endif
 
 #endif

@@ -1,17 +1,25 @@
-/* The core's sizes on this board: 2 kB of memory, an 8-bit adder, program memory that is not read as data. */
+/* The core's sizes on this board (those in #ifndef a test build may change): 2 kB of memory, an 8-bit adder, program memory that is not read as data. */
 #ifndef ATMEGA328P_SIZES_H
 #define ATMEGA328P_SIZES_H
 
 #define RR_AXES     1
+#ifndef RR_SERVOS
 #define RR_SERVOS   2
+#endif
+#ifndef RR_MAX_DUTY
 #define RR_MAX_DUTY 9800 /* the high side's bootstrap capacitor needs the low side on for a part of each period */
+#endif
 #define RR_QUEUE    8
 #define RR_TRAIL    32
+#ifndef RR_KEEP
 #define RR_KEEP     0
+#endif
 #define RR_NOTICES  6
 #define RR_PAYLOAD  56 /* characters: 42 bytes, of which there are two */
 #define RR_TRAIL_PAYLOAD 44
+#ifndef RR_CAPS
 #define RR_CAPS (RR_CAP_ENCODER | RR_CAP_CURRENT | RR_CAP_SUPPLY | RR_CAP_KEEPS_LIMITS | RR_CAP_BREAK)
+#endif
 
 /* Lines are made between the ticks, eight characters at a time. */
 #define RR_SPREAD 1

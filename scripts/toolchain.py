@@ -1,0 +1,81 @@
+"""The programs outside Python that parts of the project need, and the Debian packages they come from: the one place.
+
+`scripts/test.py` calls `provide`: as root on Debian it installs what is missing, elsewhere it names it. A part whose
+tools are missing is skipped by its tests with `why_not`'s message, never passed.
+
+Standard library only.
+"""
+
+import glob
+import os
+import shutil
+import subprocess
+from collections.abc import Callable, Iterable
+from dataclasses import dataclass
+
+
+@dataclass(frozen=True)
+class Part:
+    """A part of the project and what it needs: programs on the path, files (as patterns), and their packages."""
+
+    title: str
+    programs: tuple[str, ...]
+    files: tuple[str, ...]
+    packages: tuple[str, ...]
+
+
+CORE = Part("the firmware's core as a program", ("cc",), (), ("gcc", "libc6-dev"))
+BOARD = Part(
+    "the ATmega328P firmware",
+    ("avr-gcc", "avr-size", "avr-nm", "make"),
+    ("/usr/lib/avr/include/avr/io.h",),
+    ("gcc-avr", "avr-libc", "binutils-avr", "make"),
+)
+EMULATOR = Part(
+    "the emulated board",
+    ("cc",),
+    ("/usr/include/simavr/sim_avr.h", "/usr/include/libelf.h", "/usr/lib/*/libsimavr.so"),
+    ("gcc", "libc6-dev", "libsimavr-dev", "libelf-dev"),
+)
+PARTS = (CORE, BOARD, EMULATOR)
+
+
+def is_there(part: Part) -> bool:
+    """Whether all a part needs is installed."""
+    return all(shutil.which(name) for name in part.programs) and all(glob.glob(pattern) for pattern in part.files)
+
+
+def why_not(*parts: Part) -> str:
+    """Why one of the parts cannot be built or run here, naming the packages; "" where all can."""
+    lacking = [part for part in parts if not is_there(part)]
+    if not lacking:
+        return ""
+    return f"tools missing for {' and '.join(part.title for part in lacking)}: install {' '.join(packages_of(lacking))}"
+
+
+def packages_of(parts: "Iterable[Part]") -> "list[str]":
+    """The Debian packages of some parts, each once."""
+    return list(dict.fromkeys(package for part in parts for package in part.packages))
+
+
+def may_install() -> bool:
+    """Whether this is a Debian machine and we are root."""
+    debian = os.path.exists("/etc/debian_version") and shutil.which("apt-get") is not None
+    return debian and hasattr(os, "geteuid") and os.geteuid() == 0
+
+
+def provide(say: "Callable[[str], None]") -> "list[Part]":
+    """Install what is missing where we may, and say what was done or is missing; the parts that cannot be tested."""
+    lacking = [part for part in PARTS if not is_there(part)]
+    if lacking and may_install():
+        packages = packages_of(lacking)
+        say(f"Installing with apt-get: {' '.join(packages)} ...")
+        quiet = dict(os.environ, DEBIAN_FRONTEND="noninteractive")
+        install = ["apt-get", "install", "-y", "-q", "--no-install-recommends", *packages]
+        if subprocess.run(install, env=quiet, capture_output=True, check=False).returncode != 0:
+            subprocess.run(["apt-get", "update", "-q"], env=quiet, capture_output=True, check=False)
+            subprocess.run(install, env=quiet, capture_output=True, check=False)
+        lacking = [part for part in PARTS if not is_there(part)]
+    for part in lacking:
+        say(f"SKIPPED, not passed: {part.title}; it needs: apt-get install {' '.join(part.packages)}")
+    return lacking
