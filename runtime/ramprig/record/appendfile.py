@@ -147,6 +147,14 @@ def sync_folder(folder: Path) -> None:
         os.close(handle)
 
 
+def write_new(path: Path, data: bytes) -> None:
+    """A new file of these contents, on the disk itself; raises OSError, FileExistsError where there is one."""
+    with open(path, "xb") as file:
+        file.write(data)
+        file.flush()
+        os.fsync(file.fileno())
+
+
 def replace_file(path: Path, data: bytes) -> None:
     """Give `path` the contents `data` in one step: a reader, or a crash, sees the old or the new, never a part.
 

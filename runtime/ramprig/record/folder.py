@@ -30,7 +30,7 @@ import numpy as np
 
 from .. import __version__
 from ..errors import RecordError
-from .appendfile import AppendFile, Reserve, replace_file, sync_folder
+from .appendfile import AppendFile, Reserve, replace_file, sync_folder, write_new
 from .events import Json, from_rfc3339, jsonable
 from .parts import Document, Earlier, earlier_of
 
@@ -185,7 +185,7 @@ class RunFolder:
         for given in self.description.inputs:
             name = _free_name(Path(given.name).name or given.role, used)
             used.add(name.lower())
-            (self.path / name).write_bytes(given.content)
+            write_new(self.path / name, given.content)
             self._inputs.append(
                 {
                     "role": given.role,

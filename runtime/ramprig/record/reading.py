@@ -155,7 +155,16 @@ def sample_files(folder: Path) -> list[Path]:
     on over all of them. Raises RecordError.
     """
     paths = [folder / str(part["samples_file"]) for part in parts_of(read_manifest(folder))]
-    return [path for path in paths if path.exists()]
+    return [path for path in paths if _has_header(path)]
+
+
+def _has_header(path: Path) -> bool:
+    """Whether a samples file was begun: a part that broke off at once may have left none, or a piece of its header."""
+    try:
+        with open(path, "rb") as file:
+            return file.readline(CHUNK_BYTES).endswith(b"\n")
+    except FileNotFoundError:
+        return False
 
 
 def read_cycles(folder: Path) -> tuple[list[Document], int]:
@@ -205,9 +214,10 @@ class Audit:
 def audit(folder: Path) -> Audit:
     """Check the run folder; raises RecordError only where it cannot be read as one at all."""
     manifest = read_manifest(folder)
-    events, torn_event_bytes = read_events(folder / EVENTS_FILE)
-    entries = parts_of(manifest)
     finished = manifest.get("status") == "finished"
+    begun = finished or (folder / EVENTS_FILE).exists()
+    events, torn_event_bytes = read_events(folder / EVENTS_FILE) if begun else ([], 0)
+    entries = parts_of(manifest)
     by_part = _events_by_part(events, len(entries))
     parts = [
         _audit_part(folder, entry, its_events, last=entry is entries[-1], several=len(entries) > 1)
@@ -252,8 +262,7 @@ def _audit_part(folder: Path, entry: Document, events: list[Document], *, last: 
     path = folder / str(entry["samples_file"])
     where = f"part {entry['part']}: " if several else ""
     finished = entry.get("status") == "finished"
-    broke_off_at_once = not path.exists() and not finished
-    ticks, torn_bytes = (np.empty(0, np.int64), 0) if broke_off_at_once else read_ticks(path)
+    ticks, torn_bytes = read_ticks(path) if finished or _has_header(path) else (np.empty(0, np.int64), 0)
     statements: list[str] = []
     if not finished and last:
         statements.append(_how_it_broke_off(ticks, events))

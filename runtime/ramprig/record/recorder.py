@@ -23,7 +23,7 @@ from .speed import SpeedMethod
 from .writer import SYNC_EVERY_S, DiskWriter, Trouble
 
 BATCH_ROWS = 1024
-"""In virtual time so many rows are printed together; in real time every block is written as it comes."""
+"""In virtual time so many rows are printed together; a log that must be durable takes every block as it comes."""
 
 PERIODS_MAX = 16
 """Different sample periods whose speed resolution `run.json` lists."""
@@ -119,7 +119,6 @@ class Recorder:
         self._cycles_given = self._cycles_kept = 0
         self._samples_name = folder.free_name(SAMPLES_FILE)
         self._samples, self._events = self._begin_files()
-        self._threaded = threaded
         self._writer = DiskWriter(
             [file for file in (self._samples, self._events, self._cycles) if file is not None],
             on_trouble=self._on_trouble,
@@ -146,6 +145,8 @@ class Recorder:
             self._write_manifest("running", None)
             samples = self.folder.new_file(self._samples_name)
             samples.append(self._printer.header())
+            samples.sync()
+            sync_folder(self.folder.path)
             return samples, events
         except OSError as error:
             raise RecordError(f"the run folder {self.folder.path} cannot be written: {error.strerror}") from error
@@ -178,7 +179,7 @@ class Recorder:
             self._periods_ticks.append(period_ticks)
         self._batch.append(block)
         self._batch_rows += len(block)
-        if self._threaded or self._batch_rows >= BATCH_ROWS:
+        if self._writer.durable or self._batch_rows >= BATCH_ROWS:
             self._submit_batch()
 
     def _submit_batch(self) -> None:
@@ -195,13 +196,15 @@ class Recorder:
     def on_cycle(self, event: object) -> None:
         """Write an event down in the count of cycles and have the disk hold it; never raises RecordError.
 
-        `cycles_pending` tells when that is done.
+        `cycles_pending` tells when that is done. The disk holds all rows and events handed over before it first.
         """
         line = encode_line(event_object(event, when=self._when, host_s=self._clock.now()))
         self._cycles_given += 1
 
         def write() -> None:
             file = self._open_cycles()
+            if self._writer.durable:
+                self._writer.sync_files()
             file.append(line)
             if self._writer.durable:
                 file.sync()

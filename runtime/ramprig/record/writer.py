@@ -232,7 +232,7 @@ class DiskWriter:
         try:
             job.work()
             if job.sync and self.durable and self._now() - self._last_sync_s >= SYNC_REST_S:
-                self._sync_files()
+                self.sync_files()
         except OSError as error:
             self.tell(trouble_of(error))
         except (
@@ -240,14 +240,15 @@ class DiskWriter:
         ) as error:  # a fault of ours must stop the motor as a full disk does, not end the thread in silence
             self.tell(Trouble(TroubleKind.FAULT, f"writing the log failed: {type(error).__name__}: {error}"))
 
-    def _sync_files(self) -> None:
+    def sync_files(self) -> None:
+        """Have the disk hold all files as they are now; to be called from a job. Raises OSError."""
         for file in self._files:
             file.sync()
         self._last_sync_s = self._now()
 
     def _sync(self) -> None:
         try:
-            self._sync_files()
+            self.sync_files()
         except OSError as error:
             self._last_sync_s = self._now()
             self.tell(trouble_of(error))

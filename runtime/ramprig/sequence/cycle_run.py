@@ -44,7 +44,11 @@ class PastStarts:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class RunSoFar:
-    """What the earlier parts of a run leave to the next one; `part` is the number of the next one."""
+    """What the earlier parts of a run leave to the next one; `part` is the number of the next one.
+
+    `open_number` is a cycle of the block `open_block` that was broken off without a word, None where there is none:
+    `counted` has it as interrupted, and the next part writes that down.
+    """
 
     part: int = 1
     counted: Counted = field(default_factory=Counted)
@@ -53,6 +57,8 @@ class RunSoFar:
     held: int = 0
     failed: int = 0
     first_failure: str = ""
+    open_number: int | None = None
+    open_block: int = 0
 
 
 class StartsGuard:
@@ -137,6 +143,16 @@ class CycleBook:
         self._begin_tick = 0
         self._since_check: int | None = None
         self._turned = False
+        if so_far.open_number is not None:
+            write(
+                CycleInterrupted(
+                    tick=None,
+                    number=so_far.open_number,
+                    block=so_far.open_block,
+                    part=so_far.part,
+                    why="found when the run was resumed: its end was never written down",
+                )
+            )
 
     @property
     def under_way(self) -> bool:
