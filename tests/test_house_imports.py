@@ -13,7 +13,7 @@ PROGRAM = ROOT / "runtime" / "ramprig"
 CODEC = ROOT / "protocol" / "ramprig_link"
 
 ROOMS_FROM_THE_TOP = [
-    *("cli", "shell", "report", "measure", "endure", "sequence", "record", "session"),
+    *("cli", "shell", "report", "measure", "accept", "endure", "sequence", "record", "session"),
     *("mock", "port", "bench", "yamlfile", "quantity", "cautions", "extras", "errors"),
 ]
 

@@ -9,8 +9,8 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from invariants import Key, Witness, digest_of
 from mock_host import QUICK
+from ramprig.accept.invariants import Key, Witness, digest_of
 from ramprig.mock import Board, Controller, LimitStore, MockDevice, MockSetup, ScriptedInputs
 from ramprig.mock.drive import Drive
 from ramprig.mock.servos import ServoPulse
@@ -99,7 +99,7 @@ class Rig:
 
     def verdict(self) -> list[str]:
         self.run(300)
-        return self.witness.check()
+        return [str(violation) for violation in self.witness.judge()]
 
 
 def _split(body: str) -> tuple[str, tuple[str, ...]]:
@@ -181,7 +181,7 @@ def to_and_fro(rig: Rig) -> list[str]:
 def test_the_fixed_sequence_reaches_both_signs_and_the_ceiling() -> None:
     rig = rig_of_plant(1)
     assert to_and_fro(rig) == []
-    duties = [row.duty[0] for row in rig.witness.rows]
+    duties = [row.duty[0] for row in rig.witness.history.values()]
     assert max(duties) == 6000
     assert min(duties) == -6000
 
