@@ -21,7 +21,7 @@
 enum {
     DDR_B = 0x24, PORT_B = 0x25, DDR_D = 0x2A, PORT_D = 0x2B, MCUSR_ = 0x54,
     TCCR1A_ = 0x80, OCR1A_ = 0x88, OCR1B_ = 0x8A, TCCR2A_ = 0xB0, OCR2A_ = 0xB3, OCR2B_ = 0xB4,
-    UCSR0A_ = 0xC0, UBRR0L_ = 0xC4, UBRR0H_ = 0xC5
+    UCSR0A_ = 0xC0, UCSR0B_ = 0xC1, UBRR0L_ = 0xC4, UBRR0H_ = 0xC5
 };
 
 /* The pins of ports/atmega328p/board.h. */
@@ -177,7 +177,8 @@ uint32_t chip_byte_cycles(const struct chip *chip)
     const uint8_t *data = chip->avr->data;
     uint32_t divider = (uint32_t)(data[UBRR0L_] | (data[UBRR0H_] & 0x0Fu) << 8);
     uint32_t clocks = (data[UCSR0A_] & 1u << 1) != 0 ? 8u : 16u;
-    return divider == 0 ? 0 : 10u * clocks * (divider + 1u);
+    bool is_on = (data[UCSR0B_] & 1u << 4) != 0;
+    return is_on ? 10u * clocks * (divider + 1u) : 0;
 }
 
 static bool is_driven_high(const struct chip *chip, uint8_t ddr, uint8_t port, uint8_t bit)

@@ -22,7 +22,8 @@ static volatile uint8_t sending_out;
 static volatile bool broke;
 static volatile uint32_t lost;
 
-/* A byte with a framing error is kept as one that no line may have, so that its line is refused; a zero is a BREAK. */
+/* A byte with a framing error is kept as one that no line may have, so that its line is refused; a zero is a BREAK, and no
+ * byte at all. */
 #define SPOILT 0xFFu
 
 ISR(USART_RX_vect)
@@ -35,6 +36,7 @@ ISR(USART_RX_vect)
     if ((status & 1u << FE0) != 0) {
         if (byte == 0) {
             broke = true;
+            return;
         }
         byte = SPOILT;
     }

@@ -5,8 +5,11 @@
 #include <avr/io.h>
 #include <avr/sleep.h>
 
-/* 16 MHz / 64 / 250 = 1 kHz. */
+/* 16 MHz / 64 / 250 = 1 kHz. A test build may have a slower clock, to see each tick by itself. */
 #define TOP 249u
+#ifndef TICK_CLOCK
+#define TICK_CLOCK (1u << CS01 | 1u << CS00)
+#endif
 #define US_A_STEP 4u
 
 static volatile uint8_t due; /* ticks not yet begun: more than one where main was late, so that none is left out */
@@ -21,7 +24,7 @@ void tick_begin(void)
 {
     OCR0A = TOP;
     TCCR0A = 1u << WGM01;
-    TCCR0B = 1u << CS01 | 1u << CS00;
+    TCCR0B = TICK_CLOCK;
     TIMSK0 = 1u << OCIE0A;
     SMCR = 0; /* sleep is idle: timers, UART and converter run on */
 }
