@@ -233,7 +233,8 @@ def decided(push: Push, bring: Bring) -> bool:
     if _other(push.elsewhere):
         return True
     # A few counts are neither silence nor motion: a stronger pulse tells.
-    return push.span <= 1 and turned_by_current(push, current_floor_a(bring))
+    silent = push.span <= 1 and all(abs(counts) <= 1 for counts in push.elsewhere.values())
+    return silent and turned_by_current(push, current_floor_a(bring))
 
 
 def offset_bound_a(rated_a: float) -> float:

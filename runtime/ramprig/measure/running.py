@@ -40,7 +40,7 @@ class Procedure(Protocol):
         ...
 
     def bench(self, bench: Bench) -> Bench:
-        """The bench with the procedure's own limits, none looser. Raises NotMeasurable for what it is not fit for."""
+        """The bench with the procedure's own limits. Raises NotMeasurable for what it is not fit for."""
         ...
 
     def moves(self, bench: Bench) -> str:

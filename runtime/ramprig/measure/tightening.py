@@ -1,4 +1,4 @@
-"""A procedure's own limits: the bench as its file says it, with some limits tighter and none looser."""
+"""A procedure's own limits: the bench as its file says it, with some limits tighter."""
 
 from __future__ import annotations
 
@@ -6,8 +6,8 @@ from dataclasses import replace
 from fractions import Fraction
 
 from ramprig.bench import Bench, Motor, Setting
-from ramprig.bench.limits import setting, speed_setting
-from ramprig.quantity import CURRENT, DUTY, SPEED, Quantity, format_current, format_duty, format_speed
+from ramprig.bench.limits import Scale, setting, speed_setting
+from ramprig.quantity import CURRENT, DUTY, DUTY_RATE, SPEED, Quantity, format_current, format_duty, format_speed
 
 
 def tightened(
@@ -35,6 +35,26 @@ def tightened(
         tighter["speed_counts"] = speed_setting(speed, found.counts_per_turn, found.mark)
     kept = {item: limit for item, limit in tighter.items() if _is_tighter(limit, found)}
     changed = replace(found, settings={**found.settings, **kept})
+    return replace(bench, motors=tuple(changed if one.name == motor else one for one in bench.motors))
+
+
+def cut_at_once(bench: Bench, motor: str) -> Bench:
+    """The bench with this motor's duty free to fall to zero in one tick, so that a coasting bridge is off at once.
+
+    The one limit that a procedure loosens: for running down without drive. The duty must be taken to zero alone, and
+    with the bridge coasting: then nothing brakes, and nothing is given back to the supply.
+    """
+    found = bench.motor(motor)
+    at_once = Setting(
+        item="slew_down_duty",
+        value=Fraction(10_000),
+        kind=DUTY_RATE,
+        units=Fraction(1),
+        scale=Scale.PLAIN,
+        text="at once",
+        mark=found.mark,
+    )
+    changed = replace(found, settings={**found.settings, "slew_down_duty": at_once})
     return replace(bench, motors=tuple(changed if one.name == motor else one for one in bench.motors))
 
 

@@ -47,7 +47,10 @@ LEAD_S = 0.2
 
 @dataclass(frozen=True, slots=True)
 class LinkHealth:
-    """How the link fares: round trips in s of the last exchanges (0 before the first), and counts since the opening."""
+    """How the link fares: round trips in s of the last exchanges (0 before the first), and counts since the opening.
+
+    `bytes_in` are all that came, those before the opening was over included.
+    """
 
     round_trip_median_s: float
     round_trip_worst_s: float
@@ -55,6 +58,7 @@ class LinkHealth:
     dropped_lines: int
     unasked_lines: int
     worst_late_s: float
+    bytes_in: int = 0
 
 
 class Session:
@@ -176,6 +180,7 @@ class Session:
             dropped_lines=core.dropped_lines,
             unasked_lines=core.sampling.unasked,
             worst_late_s=core.worst_late_s,
+            bytes_in=core.pump.bytes_in,
         )
 
     @property

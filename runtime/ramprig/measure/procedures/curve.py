@@ -13,9 +13,10 @@ from ramprig.measure.deadband import Excursion, excursion
 from ramprig.measure.findings import Findings, Picture
 from ramprig.measure.lab import Lab
 from ramprig.measure.numbers.fit import Fit, fit_linear
-from ramprig.measure.numbers.uncertainty import Measured, combine, coverage_factor
+from ramprig.measure.numbers.uncertainty import Measured, coverage_factor
 from ramprig.measure.quality import Zero, check_moves, check_not_saturated, need_encoder
 from ramprig.measure.refusal import NotMeasurable
+from ramprig.measure.spread import spread
 from ramprig.measure.trace import Floats, MotorTrace
 from ramprig.quantity import digits, format_duty, format_speed
 
@@ -239,14 +240,6 @@ def _hysteresis(levels: Sequence[Level]) -> float:
 
 
 # ---- what is told --------------------------------------------------------------------------------------------------
-
-
-def spread(values: Sequence[float], reading_u: Sequence[float], unit: str, *, factor: float = 1.0) -> Measured:
-    """The mean of repeats: their scatter, and what reading each off is uncertain by, which repeats do not average."""
-    found = factor * np.asarray(values, float)
-    scatter = float(found.std(ddof=1)) / math.sqrt(len(found))
-    reading = factor * float(np.mean(reading_u))
-    return combine(float(found.mean()), unit, [(scatter, len(found) - 1), (reading, math.inf)])
 
 
 def _told(motor: Motor, ways: tuple[Way, ...]) -> Findings:

@@ -7,11 +7,13 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from ramprig.measure.trace import MotorTrace
+from ramprig.measure.numbers.uncertainty import Measured
+from ramprig.measure.trace import Floats, MotorTrace
 
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
+    from .coastdown import RunDown
     from .curve import Way
 
 FORWARD, BACKWARD, MODEL, FAINT = "#1f5fa8", "#b3541e", "#2b2b2b", "#8a8a8a"
@@ -70,3 +72,72 @@ def curve(figure: Figure, ways: Sequence[Way], *, title: str) -> None:
     for axis in (speed, off, current, dead):
         axis.grid(alpha=0.3)
         axis.axvline(0.0, color=FAINT, linewidth=0.8)
+
+
+def coastdown(figure: Figure, runs: Sequence[RunDown], per_turn: float, *, title: str) -> None:
+    """Turns of the output over the time of each run-down with the fit, and what the fit leaves, in counts."""
+    turns, left = figure.subplots(2, 1, sharex=True, height_ratios=(2.5, 1))
+    for run in runs:
+        colour = FORWARD if run.sign > 0 else BACKWARD
+        shown = run.trace.time_s <= 1.1 * run.length_s
+        turns.plot(run.trace.time_s[shown], run.trace.counts[shown] / per_turn, color=colour, linewidth=1.2)
+        kept = run.trace.time_s[: len(run.fit.residuals)]
+        fitted = run.trace.counts[: len(run.fit.residuals)] - run.fit.residuals
+        turns.plot(kept, fitted / per_turn, color=MODEL, linewidth=0.8, linestyle="--")
+        left.plot(kept, run.fit.residuals, color=colour, linewidth=0.7)
+    turns.set_title(f"{title}: running down with the bridge off (blue forward, orange backward, dashed: fit)")
+    turns.set_ylabel("turns of the output")
+    left.set_ylabel("counts off the fit")
+    left.set_xlabel("time since the bridge went off, s")
+    for axis in (turns, left):
+        axis.grid(alpha=0.3)
+
+
+def repeats(figure: Figure, values: Sequence[float], mean: Measured, *, title: str, label: str) -> None:
+    """Each repeat, their mean, and its 95 % interval."""
+    axes = figure.subplots()
+    numbers = np.arange(1, len(values) + 1)
+    low, high = mean.interval()
+    axes.axhspan(low, high, color=FORWARD, alpha=0.15, linewidth=0)
+    axes.axhline(mean.value, color=MODEL, linewidth=0.9)
+    axes.plot(numbers, values, "o", color=FORWARD, fillstyle="none")
+    axes.set_xticks(numbers)
+    axes.set_xlabel("repeat")
+    axes.set_ylabel(label)
+    axes.set_title(f"{title} (band: 95 % of the mean)")
+    axes.grid(alpha=0.3)
+
+
+def round_trips(figure: Figure, trips_s: Sequence[float]) -> None:
+    """How often each round trip came."""
+    axes = figure.subplots()
+    axes.hist([1000 * one for one in trips_s], bins=40, color=FORWARD, alpha=0.8)
+    axes.axvspan(14.0, 18.0, color=FAINT, alpha=0.15, linewidth=0)
+    axes.set_xlabel("round trip, ms (grey: where a USB adapter's latency timer of 16 ms puts it)")
+    axes.set_ylabel("exchanges")
+    axes.set_title("round trips of the link")
+    axes.grid(alpha=0.3)
+
+
+def positions(figure: Figure, targets: Floats, up: Floats, down: Floats, *, title: str) -> None:
+    """Deviation at each target, approached from below and from above, with two standard deviations."""
+    axes = figure.subplots()
+    for deviations, colour, label, shift in ((up, FORWARD, "from below", -0.3), (down, BACKWARD, "from above", 0.3)):
+        axes.errorbar(
+            targets + shift,
+            deviations.mean(axis=1),
+            yerr=2 * deviations.std(axis=1, ddof=1),
+            color=colour,
+            marker="o",
+            markersize=4,
+            linewidth=0.9,
+            capsize=3,
+            label=f"{label}, mean and 2 s",
+        )
+        axes.plot(np.repeat(targets + shift, deviations.shape[1]), deviations.ravel(), ".", color=colour, alpha=0.4)
+    axes.axhline(0.0, color=FAINT, linewidth=0.8)
+    axes.set_xlabel("target, deg")
+    axes.set_ylabel("deviation, deg")
+    axes.set_title(f"{title}: measured less commanded angle")
+    axes.legend(fontsize=8, frameon=False)
+    axes.grid(alpha=0.3)
