@@ -7,7 +7,7 @@ from types import ModuleType
 
 from .errors import PackageMissing
 
-PROVIDERS = {"scipy": "measure", "matplotlib": "measure"}
+PROVIDERS = {"scipy": "measure", "matplotlib": "measure", "wakepy": "night"}
 """The optional extra of this distribution that brings each package."""
 
 

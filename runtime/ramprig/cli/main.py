@@ -20,6 +20,8 @@ COMMANDS = {
     "check": "print what a sequence or bench file means, before anything moves",
     "rehearse": "run a sequence on a simulated board in virtual time",
     "run": "run a sequence on the bench",
+    "resume": "go on with a run that was interrupted, at its next cycle",
+    "note": "keep a remark or a photo with a run, with the time",
     "shell": "drive the bench by hand",
     "mock": "serve a board in software on a pseudo-terminal or a TCP port",
     "ports": "list the serial ports, and how to name each in a bench file",

@@ -12,6 +12,7 @@ if TYPE_CHECKING:
     from ramprig.record.reading import Audit
 
 GAPS_SHOWN = 10
+NOTES_SHOWN = 20
 UNSOUND_CODE = 2
 
 
@@ -27,7 +28,7 @@ def carry_out(args: argparse.Namespace) -> int:
 
     manifest = read_manifest(args.run)
     found = audit(args.run)
-    for line in summary(manifest, found):
+    for line in [*summary(manifest, found), *note_lines(args.run)]:
         say(line)
     return 0 if found.exact else UNSOUND_CODE
 
@@ -36,6 +37,7 @@ def summary(manifest: dict[str, Any], found: Audit) -> list[str]:  # Any: JSON a
     """The run in a few lines, and the statements of the audit."""
     device = manifest.get("device") or {}
     board = " ".join(str(device[key]) for key in ("board", "serial") if key in device)
+    cycles = (manifest.get("results") or {}).get("cycles")
     facts = [
         ("run", manifest.get("run")),
         ("name", manifest.get("name")),
@@ -48,6 +50,9 @@ def summary(manifest: dict[str, Any], found: Audit) -> list[str]:  # Any: JSON a
         ("samples", samples_line(manifest, found)),
     ]
     lines = [f"{name:<9}{value}" for name, value in facts]
+    if cycles:
+        lines.append("cycles   " + ", ".join(f"{count} {name}" for name, count in cycles.items()))
+    lines += [f"{'broken' if i == 0 else '':<9}{text}" for i, text in enumerate(found.interruptions)]
     lines += [f"{'':9}{line}" for line in gap_lines(manifest.get("samples") or {})]
     verdicts = found.statements or ("every sample is in the file or told as lost, and no file was changed",)
     return lines + [f"{'checked' if i == 0 else '':<9}{text}" for i, text in enumerate(verdicts)]
@@ -72,3 +77,16 @@ def gap_lines(account: dict[str, Any]) -> list[str]:  # Any: as in summary
     ]
     more = len(gaps) - len(lines) + int(account.get("gaps_unlisted", 0))
     return [*lines, f"and {more} gaps more"] if more else lines
+
+
+def note_lines(folder: Path) -> list[str]:
+    """What people noted by hand, the last of it where it is much."""
+    from ramprig.record.reading import read_notes
+
+    notes = read_notes(folder)
+    lines = [f"noted    {len(notes) - NOTES_SHOWN} notes more before these"] if len(notes) > NOTES_SHOWN else []
+    for note in notes[-NOTES_SHOWN:]:
+        photos = ", ".join(str(photo["file"]) for photo in note.get("photos", []))
+        by = f" ({note['by']})" if note.get("by") else ""
+        lines.append(f"noted    {note['utc']} {note['text']}{by}" + (f" [{photos}]" if photos else ""))
+    return lines

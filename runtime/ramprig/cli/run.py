@@ -4,8 +4,11 @@ from __future__ import annotations
 
 import argparse
 import sys
+import time
+from dataclasses import replace
 from typing import TYPE_CHECKING
 
+from ramprig.cli.night import carry_out_unattended, seconds_of
 from ramprig.cli.running import SIMULATED, Way, add_run_arguments, carry_out_run, mock_url, on_terminal
 from ramprig.cli.say import tell
 from ramprig.errors import StoppedByUser
@@ -14,7 +17,13 @@ if TYPE_CHECKING:
     from ramprig.cli.files import Pair
 
 EPILOG = """On a terminal it shows what will move and asks before it arms; --yes does not ask. SIGINT (Ctrl-C),
-SIGTERM and SIGHUP stop the motors in order, a second one within a second cuts them off."""
+SIGTERM and SIGHUP stop the motors in order, a second one within a second cuts them off.
+
+--unattended starts only where the rules for a run that nobody stands beside hold, and names each one that does not;
+it shows a sheet for the door, puts it into the run folder as a page to print, and keeps the computer awake.
+
+A run with cycles that was interrupted goes on by itself where the sequence says so ('on interruption'), else by
+`ramprig resume`."""
 
 
 def declare(parser: argparse.ArgumentParser) -> None:
@@ -22,6 +31,9 @@ def declare(parser: argparse.ArgumentParser) -> None:
     add_run_arguments(parser)
     parser.add_argument("--port", metavar="URL", help="the port, instead of the bench's (see `ramprig ports`)")
     parser.add_argument("--yes", action="store_true", help="do not ask before anything moves")
+    parser.add_argument("--unattended", action="store_true", help="start only where the rules for the night hold")
+    parser.add_argument("--at-most", metavar="TIME", help="end in order after this time, such as '9 h'")
+    parser.add_argument("--accept-sleep", action="store_true", help="go on though the computer may fall asleep")
     parser.epilog = EPILOG
 
 
@@ -34,9 +46,25 @@ def carry_out(args: argparse.Namespace) -> int:
     is_simulated = url.startswith(SIMULATED)
     if is_simulated:
         url = mock_url(url, pair.bench_path)
-    elif not args.yes and on_terminal():
-        ask(pair, url)
-    return carry_out_run(pair, Way(url=url, virtual=False, runs=args.runs, title=args.title))
+    way = Way(url=url, virtual=False, runs=args.runs, title=args.title)
+
+    def ask_first() -> None:
+        if not is_simulated and not args.yes and on_terminal():
+            ask(pair, url)
+
+    if args.unattended:
+        return carry_out_unattended(
+            pair,
+            way,
+            at_most=args.at_most,
+            accept_sleep=args.accept_sleep,
+            ask=ask_first,
+            run=lambda way: carry_out_run(pair, way),
+        )
+    ask_first()
+    at_most_s = seconds_of(args.at_most)
+    latest_s = None if at_most_s is None else time.time() + at_most_s
+    return carry_out_run(pair, replace(way, latest_end_unix_s=latest_s))
 
 
 def ask(pair: Pair, url: str) -> None:

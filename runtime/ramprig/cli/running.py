@@ -4,8 +4,8 @@ from __future__ import annotations
 
 import argparse
 import sys
-from collections.abc import Sequence
-from dataclasses import dataclass
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import TYPE_CHECKING
 from urllib.parse import urlencode
@@ -17,9 +17,11 @@ from ramprig.errors import RamprigError
 if TYPE_CHECKING:
     from ramprig.bench import Bench
     from ramprig.cli.files import Pair
+    from ramprig.endure.doorsheet import DoorSheet
     from ramprig.port.base import Port
     from ramprig.sequence.executive import Progress as HowFar
     from ramprig.sequence.outcome import Outcome
+    from ramprig.sequence.running import RunWish
     from ramprig.session import Session
 
 FAILURES_SHOWN = 20
@@ -41,13 +43,19 @@ NOT_OFF = (
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Way:
-    """Where and how to run: on `url` of the bench's or the user's choice; `runs` None writes nothing down."""
+    """Where and how to run: on `url` of the bench's or the user's choice; `runs` None writes nothing down.
+
+    `latest_end_unix_s` is when the run must be over; `settings` go on record. `sheet` is put into the run folder.
+    """
 
     url: str
     virtual: bool
     runs: Path | None
     title: str = ""
     seed: int | None = None
+    latest_end_unix_s: float | None = None
+    settings: Mapping[str, object] = field(default_factory=dict)
+    sheet: DoorSheet | None = None
 
 
 def add_run_arguments(parser: argparse.ArgumentParser) -> None:
@@ -87,36 +95,68 @@ def open_port_for(way: Way, bench: Bench) -> Port:
 
 def carry_out_run(pair: Pair, way: Way) -> int:
     """Run, with progress and a sentence at the end; returns the exit code. Raises what `run_sequence` raises."""
-    from ramprig.sequence.running import RunWish, run_sequence
-    from ramprig.session.signals import StopOnSignals
+    from ramprig.sequence.running import RunWish
 
     wish = RunWish(
         sequence=pair.sequence,
         bench=pair.bench,
         runs=way.runs,
         title=way.title,
-        settings={"port": way.url, "rehearsal": way.virtual},
+        settings={"port": way.url, "rehearsal": way.virtual, **way.settings},
         seed=way.seed,
         virtual=way.virtual,
+        latest_end_unix_s=way.latest_end_unix_s,
     )
+    return carry_out_wish(wish, way)
+
+
+def carry_out_wish(wish: RunWish, way: Way) -> int:
+    """As `carry_out_run`, for a run that is wished for in full, such as one that is gone on with.
+
+    On a bench it goes on by itself after an interruption where the sequence says so; a rehearsal does not.
+    """
+    import time
+
+    from ramprig.endure.resume import Surroundings, run_enduring
+    from ramprig.sequence.running import run_sequence
+    from ramprig.session.signals import StopOnSignals
+
     sessions: list[Session] = []
     watch: list[StopOnSignals] = []
+    progress = Progress()
 
     def guard(session: Session) -> StopOnSignals:
         sessions.append(session)
         watch.append(StopOnSignals(session))
         return watch[-1]
 
-    progress = Progress()
+    def began(folder: Path) -> None:
+        progress.line(f"recording to {folder}")
+        if way.sheet is not None:
+            keep_sheet(way.sheet, folder)
+
+    around = Surroundings(
+        open_port=lambda: open_port_for(way, wish.bench),
+        pause=time.sleep,
+        wall=time.time,
+        tell=progress.line,
+        progress=lambda far: progress.show(lambda: how_far(far)),
+        guard=guard,
+        asked_by=lambda: ", ".join(name for signals in watch for name in signals.received),
+        began=None if way.virtual else began,
+    )
     try:
-        result = run_sequence(
-            wish,
-            open_port_for(way, pair.bench),
-            progress=lambda far: progress.show(lambda: how_far(far)),
-            guard=guard,
-            asked_by=lambda: ", ".join(name for signals in watch for name in signals.received),
-            began=None if way.virtual else lambda folder: progress.line(f"recording to {folder}"),
-        )
+        if way.virtual:
+            result = run_sequence(
+                wish,
+                around.open_port(),
+                progress=around.progress,
+                guard=guard,
+                asked_by=around.asked_by,
+                began=around.began,
+            )
+        else:
+            result = run_enduring(wish, around)
     except RamprigError:
         raise
     except Exception:  # a bug: what became of the motors comes first, the bug itself is told by `main`
@@ -127,6 +167,22 @@ def carry_out_run(pair: Pair, way: Way) -> int:
         progress.close()
     tell_end(result.outcome, result.folder, rehearsal=way.virtual)
     return result.outcome.exit_code
+
+
+SHEET_NAMES = ("door-sheet.txt", "door-sheet.html")
+
+
+def keep_sheet(sheet: DoorSheet, folder: Path) -> None:
+    """Put the door sheet into the run folder as text and page; one that cannot be written was shown all the same."""
+    for name, text in zip(SHEET_NAMES, (sheet.text(), sheet.html()), strict=True):
+        path = folder / name
+        try:
+            if not path.exists():
+                path.write_text(text, "utf-8")
+        except OSError as error:
+            tell(f"the door sheet cannot be written to {path}: {error.strerror}")
+            return
+    tell(f"door sheet to print: {folder / SHEET_NAMES[1]}")
 
 
 def tell_stop(session: Session) -> None:
@@ -143,6 +199,8 @@ def how_far(far: HowFar) -> str:
     text = f"{far.fraction:4.0%}  {format_duration(round(far.left_s))} left  {far.doing}"
     if far.passes:
         text += f"  pass {far.passes}"
+    if far.cycle or far.cycles_done:
+        text += f"  cycle {far.cycle or far.cycles_done}"
     if far.failed:
         text += f"  {far.failed} failed"
     return text

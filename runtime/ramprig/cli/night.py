@@ -1,0 +1,77 @@
+"""Starting a run that nobody stands beside: the rules, the door sheet, and a computer that stays awake."""
+
+from __future__ import annotations
+
+import platform
+import time
+from collections.abc import Callable, Iterable
+from dataclasses import replace
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from ramprig.cli.say import tell
+from ramprig.errors import UsageError
+
+if TYPE_CHECKING:
+    from ramprig.cli.files import Pair
+    from ramprig.cli.running import Way
+
+
+def seconds_of(text: str | None) -> float | None:
+    """The duration of an option such as `--at-most '9 h'`. Raises UsageError."""
+    from ramprig.quantity import DURATION, QuantityError, parse
+
+    if text is None:
+        return None
+    try:
+        value = float(parse(text, DURATION).value)
+    except QuantityError as error:
+        raise UsageError(f"--at-most {text}: {error}") from error
+    if value <= 0:
+        raise UsageError(f"--at-most {text}: it must be more than 0 s")
+    return value
+
+
+def refuse_missing(missing: Iterable[object]) -> None:
+    """Raise UsageError that names every rule that does not hold, if there is one."""
+    lines = [f"  {rule}" for rule in missing]
+    if lines:
+        count = "one rule does" if len(lines) == 1 else f"{len(lines)} rules do"
+        raise UsageError(f"Not started unattended: {count} not hold.\n" + "\n".join(lines))
+
+
+def carry_out_unattended(
+    pair: Pair, way: Way, *, at_most: str | None, accept_sleep: bool, ask: Callable[[], None], run: Callable[[Way], int]
+) -> int:
+    """Check the rules, show the door sheet, ask, and run awake. Raises UsageError where a rule does not hold."""
+    from ramprig.endure.awake import keep_awake
+    from ramprig.endure.doorsheet import door_sheet
+    from ramprig.endure.unattended import longest_s, missing_rules
+    from ramprig.record.space import disk_free
+    from ramprig.sequence.compile import compile_plan
+
+    at_most_s = seconds_of(at_most)
+    plan = compile_plan(pair.sequence, pair.bench)
+    free_bytes = disk_free(_standing(Path(".") if way.runs is None else way.runs))
+    refuse_missing(
+        missing_rules(pair.bench, pair.sequence, plan, url=way.url, free_bytes=free_bytes, at_most_s=at_most_s)
+    )
+    with keep_awake(accept_sleep=accept_sleep) as awake:
+        start_s = time.time()
+        latest_s = start_s + longest_s(plan, pair.sequence, at_most_s=at_most_s)
+        sheet = door_sheet(
+            pair.bench, pair.sequence, plan, start_unix_s=start_s, latest_end_unix_s=latest_s, host=platform.node()
+        )
+        tell(sheet.text())
+        tell(str(awake))
+        ask()
+        settings = {**way.settings, "unattended": True, "kept_awake_by": awake.method or None}
+        return run(replace(way, latest_end_unix_s=latest_s, settings=settings, sheet=sheet))
+
+
+def _standing(path: Path) -> Path:
+    """The folder, or the nearest above it that is there already: it has the disk on which it will be made."""
+    path = path.absolute()
+    while not path.exists():
+        path = path.parent
+    return path

@@ -1,0 +1,76 @@
+"""`ramprig resume RUN`: go on with a run that was interrupted, at its next cycle."""
+
+from __future__ import annotations
+
+import argparse
+import sys
+import time
+from collections.abc import Iterator
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from ramprig.cli.running import SIMULATED, Way, carry_out_wish, mock_url, on_terminal
+from ramprig.cli.say import tell
+from ramprig.errors import StoppedByUser
+
+if TYPE_CHECKING:
+    from ramprig.endure.resume import Broken
+
+EPILOG = """What is gone on with is the run as it was begun: its sequence, values and bench file. The board must be the
+same one with the same program and limits; its port may have another name by now (--port). The cycle that the
+interruption fell into counts as not done, and is told apart. New samples go into a file of their own beside the old
+ones; run.json tells of each interruption."""
+
+
+def declare(parser: argparse.ArgumentParser) -> None:
+    """The run and its port."""
+    parser.add_argument("run", type=Path, help="the run's folder")
+    parser.add_argument("--port", metavar="URL", help="the port, where it has another name now")
+    parser.add_argument("--yes", action="store_true", help="do not ask before anything moves")
+    parser.add_argument("--after-trip", action="store_true", help="go on though the run ended by a trip of the board")
+    parser.epilog = EPILOG
+
+
+def carry_out(args: argparse.Namespace) -> int:
+    """Go on; returns the exit code of the whole run's verdict."""
+    from ramprig.endure.resume import read_broken, wish_to_carry_on
+    from ramprig.sequence.running import RunWish
+
+    now_s = time.time()
+    broken = read_broken(args.run, now_unix_s=now_s)
+    url = args.port or broken.port_url
+    simulated = url.startswith(SIMULATED)
+    if simulated:
+        url = mock_url(url, Path(broken.bench.file))
+    for line in what_is_known(broken):
+        tell(line)
+    wish = RunWish(sequence=broken.sequence, bench=broken.bench)
+    wish = wish_to_carry_on(broken, wish, by="command", now_unix_s=now_s, after_trip=args.after_trip)
+    if not simulated and not args.yes and on_terminal():
+        ask()
+    return carry_out_wish(wish, Way(url=url, virtual=False, runs=args.run.parent))
+
+
+def what_is_known(broken: Broken) -> Iterator[str]:
+    """What broke the run off, what is done of it, and what is not known."""
+    from ramprig.quantity import format_duration
+
+    counted = broken.so_far.counted
+    yield f"run       {broken.folder}"
+    yield f"broken    {broken.cause}, {format_duration(round(time.time() - broken.last_unix_s))} ago"
+    yield f"cycles    {counted}"
+    if broken.open_number is not None:
+        yield f"unknown   cycle {broken.open_number} was commanded, and its end is not known: it counts as not done"
+    for name in broken.changed:
+        yield f"changed   {name} is not as it was when the run began: the copy in the run folder is used"
+
+
+def ask() -> None:
+    """Wait for the word `yes`. Raises StoppedByUser for any other."""
+    from ramprig.cautions import cautions_lines
+
+    for line in cautions_lines():
+        tell(line)
+    tell("Type yes and ENTER to arm and go on; anything else leaves everything off.")
+    if sys.stdin.readline().strip().lower() != "yes":
+        raise StoppedByUser("Not gone on with: it was not confirmed. Nothing has moved.")
