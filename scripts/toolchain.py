@@ -37,7 +37,19 @@ EMULATOR = Part(
     ("/usr/include/simavr/sim_avr.h", "/usr/include/libelf.h", "/usr/lib/*/libsimavr.so"),
     ("gcc", "libc6-dev", "libsimavr-dev", "libelf-dev"),
 )
-PARTS = (CORE, BOARD, EMULATOR)
+PROOFS = Part(
+    "the proofs of the firmware",
+    ("frama-c", "why3", "cvc4", "z3"),
+    (),
+    ("frama-c-base", "why3", "cvc4", "z3"),
+)
+FUZZING = Part(
+    "fuzzing of the firmware",
+    ("clang",),
+    ("/usr/lib/llvm-*/lib/clang/*/lib/linux/libclang_rt.fuzzer*",),
+    ("clang", "libclang-rt-dev"),
+)
+PARTS = (CORE, BOARD, EMULATOR, PROOFS, FUZZING)
 
 
 def is_there(part: Part) -> bool:
@@ -71,10 +83,11 @@ def provide(say: "Callable[[str], None]") -> "list[Part]":
         packages = packages_of(lacking)
         say(f"Installing with apt-get: {' '.join(packages)} ...")
         quiet = dict(os.environ, DEBIAN_FRONTEND="noninteractive")
-        install = ["apt-get", "install", "-y", "-q", "--no-install-recommends", *packages]
-        if subprocess.run(install, env=quiet, capture_output=True, check=False).returncode != 0:
+        install = ["apt-get", "install", "-y", "-q", "--no-install-recommends"]
+        if subprocess.run([*install, *packages], env=quiet, capture_output=True, check=False).returncode != 0:
             subprocess.run(["apt-get", "update", "-q"], env=quiet, capture_output=True, check=False)
-            subprocess.run(install, env=quiet, capture_output=True, check=False)
+            for part in lacking:  # one by one: a package that this release does not have must not keep the others out
+                subprocess.run([*install, *part.packages], env=quiet, capture_output=True, check=False)
         lacking = [part for part in PARTS if not is_there(part)]
     for part in lacking:
         say(f"SKIPPED, not passed: {part.title}; it needs: apt-get install {' '.join(part.packages)}")

@@ -92,12 +92,12 @@ static uint8_t held(uint32_t ticks)
 static void put_glide(int32_t *to, const struct rr_glide *glide)
 {
     to[0] = glide->value;
-    to[1] = glide->goal;
-    to[2] = (int32_t)glide->left;
+    to[1] = (int32_t)glide->left;
     if (glide->left != 0) {
-        to[3] = (int32_t)glide->whole;
-        to[4] = (int32_t)glide->part;
-        to[5] = (int32_t)(glide->sum * 64u + glide->ticks);
+        to[2] = (int32_t)glide->whole;
+        to[3] = (int32_t)glide->part;
+        to[4] = (int32_t)(glide->sum * 64u + glide->ticks);
+        to[5] = glide->down;
     }
 }
 

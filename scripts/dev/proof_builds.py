@@ -51,12 +51,13 @@ def core_sources() -> list[Path]:
     return sorted(CORE.glob("*.c"))
 
 
-def build_explorer(out: Path, *, bug: int = 0, spread: bool = False) -> None:
+def build_explorer(out: Path, *, bug: int = 0, spread: bool = False, optimise: bool = True) -> None:
     """Compile proofs/explore.c to `out`. `spread`: the core's work done between the ticks, as on a small controller."""
     assert COMPILER is not None
     sources = [PROOFS / "explore.c", PROOFS / "witness.c", PROOFS / "rig.c", *core_sources()]
     sizes = ["-DRR_KEEP=0", "-DRR_TICK_US=12500", f"-DRR_SEEDED_BUG={bug}", f"-DRR_SPREAD={int(spread)}"]
-    subprocess.run([COMPILER, "-std=c11", "-O2", *WARNINGS, *SMALL, *sizes, "-o", out, *sources], check=True)
+    level = "-O2" if optimise else "-O0"
+    subprocess.run([COMPILER, "-std=c11", level, *WARNINGS, *SMALL, *sizes, "-o", out, *sources], check=True)
 
 
 TARGETS = ("line", "device", "spread")
