@@ -16,8 +16,10 @@ from ramprig.errors import LinkLost, WrongDevice
 from ramprig.measure.diagnosis import Bring, Case, Push, Rest, Verdict, judge
 from ramprig.measure.procedures.wiring import CEILING_DUTY, SPEED_SHARE, Wiring
 from ramprig.measure.refusal import NotMeasurable
+from ramprig.mock.device import MockDevice
 from ramprig.mock.faults import FAULTS
 from ramprig.mock.setup import MockSetup
+from ramprig_link.words import Cause
 from sequence_rig import small_bench
 
 VENT = Path(__file__).resolve().parent.parent / "scripts" / "vent_bench.yaml"
@@ -168,6 +170,15 @@ def test_a_current_that_reads_beyond_the_trip_is_refused_and_nothing_moves() -> 
         measured(Wiring(motor="vent"), small_bench(), faults=("current_offset=2000",))
 
 
+def test_a_trip_from_before_is_shown_and_not_cleared() -> None:
+    def trip(device: MockDevice) -> None:
+        device.restart(Cause.WATCHDOG)
+        device.advance(5000)
+
+    with pytest.raises(NotMeasurable, match=r"still tripped from before \(restarted\)"):
+        measured(Wiring(motor="vent"), load_bench(VENT), prepare=trip)
+
+
 def test_the_run_folder_holds_stages_samples_result_and_picture(tmp_path: Path) -> None:
     done = measured(Wiring(motor="vent"), load_bench(VENT), runs=tmp_path, pictures=True)
     assert done.folder is not None
@@ -218,6 +229,18 @@ STILL = {"moved": 0.0, "span": 0, "toggles": 0}
         (bring(rest=dataclasses.replace(REST, supply_v=None)), Case.GOOD),
         (bring(rest=dataclasses.replace(REST, count_span=1, count_changes=3)), Case.GOOD),
         (bring(forward=(), backward=()), Case.NONE_OF_THESE),
+        (bring(forward=(push(0.05, **STILL),), backward=(push(-0.05, **STILL),)), Case.ENCODER_DEAD),
+        (
+            bring(
+                forward=(push(0.05, **STILL),),
+                backward=(push(-0.05, **STILL),),
+                hand_turns=2,
+                hand_counts=5760.0,
+                hand_span=5760,
+                expected_counts=5760.0,
+            ),
+            Case.COUNTS_STOP,
+        ),
         (bring(sag_low_v=0.5), Case.GOOD),
         (bring(sag_low_v=1.5), Case.WEAK_SUPPLY),
         (

@@ -23,6 +23,11 @@ def echo_lines(bench: Bench, *, tick_us: int) -> list[str]:
         lines += _servo_lines(servo, tick_us)
     lines.append(_link(bench, tick_us))
     lines += _notes(bench, tick_us)
+    lines += [
+        f"{subject}: measured: {procedure}, {entry.date}, on {entry.board}, run {entry.run}"
+        for subject, entries in bench.measured.items()
+        for procedure, entry in entries.items()
+    ]
     missing = bench.safety.missing()
     if missing:
         lines.append(f"safety: not said: {', '.join(missing)}")

@@ -12,7 +12,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from ramprig.cli.progress import Progress
-from ramprig.cli.running import NOT_PROVED, RUNS, mock_url, on_terminal
+from ramprig.cli.running import RUNS, mock_url, on_terminal
 from ramprig.cli.say import say_surely, tell
 from ramprig.errors import RamprigError, StoppedByUser, UsageError
 
@@ -30,7 +30,7 @@ WHAT = {
     "servo": "positioning, timing and end stops of a servo",
     "link": "round trip, latency grid, clock drift, byte errors with the motor off and on",
 }
-MOTORS_ONLY = ("wiring", "curve", "coastdown", "backlash")
+OF_THE_MODEL = "A rehearsal measures the model that the bench file describes: it says nothing of the real bench."
 
 EPILOG = "\n".join(
     [
@@ -82,7 +82,7 @@ def carry_out(args: argparse.Namespace) -> int:
     done = _measure(args, procedure, bench, url)
     show(done, as_json=args.json)
     if args.rehearse:
-        tell(NOT_PROVED)
+        tell(OF_THE_MODEL)
     if args.save:
         if done.findings.good:
             save(args.bench, replace(done, board=f"{done.board}, rehearsed") if args.rehearse else done)

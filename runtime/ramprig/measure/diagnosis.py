@@ -93,6 +93,12 @@ class Case(Enum):
         "motor's terminals",
         "a sagging supply and interference look the same from here",
     )
+    COUNTS_STOP = (
+        "the counts come when the shaft is turned by hand, and stop when the motor runs",
+        "give the encoder a supply that does not sag with the motor, twist the motor's leads, shield the encoder's, and "
+        "fit 0.1 uF across the motor's terminals",
+        "a sagging supply and interference look the same from here",
+    )
     OFFSET = ("the current sensor does not show zero with the outputs off", "", "")
     WEAK_SUPPLY = (
         "the supply sags under load",
@@ -367,9 +373,11 @@ def _without_counts(bring: Bring) -> Verdict:
         return Verdict(case=Case.ONE_CHANNEL, because=f"{toggles} changes by one count and back")
     if max(push.span for push in pushes) > COUNTS_ENOUGH // 2:
         return Verdict(case=Case.NONE_OF_THESE, because="a few counts, neither silence nor motion")
-    return _by_current(bring) or Verdict(
-        case=Case.ENCODER_DEAD, because="the current tells of a turning shaft, and no count came"
-    )
+    found = _by_current(bring)
+    if found is not None:
+        return found
+    case = Case.COUNTS_STOP if bring.hand_span >= COUNTS_ENOUGH else Case.ENCODER_DEAD
+    return Verdict(case=case, because="the current tells of a turning shaft, and no count came")
 
 
 def _by_current(bring: Bring) -> Verdict | None:

@@ -132,16 +132,20 @@ class Lab:
         return max(1, 2 * max(1, len(self.rig.axes)), -(-self.rig.tick_us // 1000))
 
     def run(self, script: Script) -> Trace:
-        """Carry out a stage to its end; raises NotMeasurable where it did not come there."""
-        trace = self.attempt(script)
+        """Carry out a stage to its end; raises NotMeasurable where it did not come there. A trip stays latched."""
+        trace = self.attempt(script, recover=False)
         if not trace.whole:
             raise NotMeasurable(f"'{trace.name}' was not carried out to its end: {trace.ending}")
         if not len(trace.ticks):
             raise NotMeasurable(f"no samples came in '{trace.name}'")
         return trace
 
-    def attempt(self, script: Script) -> Trace:
-        """Carry out a stage as far as it comes; a trip is cleared afterwards, a restarted device opened again."""
+    def attempt(self, script: Script, *, recover: bool = True) -> Trace:
+        """Carry out a stage as far as it comes.
+
+        With `recover` the device is made ready for the next stage: a trip of this one is cleared, for it is a finding
+        like others, and a device that restarted is opened again.
+        """
         self._stages += 1
         sequence = sequence_of_text(script.text, f"stage {self._stages}")
         self._keep(f"{self._stages:02d}-{sequence.name.replace(' ', '-')}.yaml", script.text.encode())
@@ -167,7 +171,8 @@ class Lab:
         self._raise_for(outcome)
         self._account()
         trace = self._trace(sequence.name, heard, outcome)
-        self._recover(heard)
+        if recover:
+            self._recover(heard)
         return trace
 
     def watch(self, name: str, seconds: float, *, during: Callable[[], None] | None = None) -> Trace:

@@ -101,6 +101,11 @@ def measure(
     with session, guard(session) if guard is not None else nullcontext():
         run = _Run(procedure, tight, port, session, listeners, wish, tell)
         try:
+            if session.trip is not None:
+                raise NotMeasurable(
+                    f"the device is still tripped from before ({session.trip.trip})",
+                    wanted="see to its cause, and clear it in `ramprig shell`",
+                )
             return run.whole(bystander=bystander, progress=progress)
         finally:
             _put_back(session, bench, tell)
@@ -112,8 +117,10 @@ def _put_back(session: Session, bench: Bench, tell: Callable[[str], None]) -> No
     limits = bench.limits(
         tick_us=identity.tick_us, axes=identity.axes, servos=identity.servos, max_duty=identity.max_duty
     )
+    stopped = session.last_stop
     try:
-        if session.valid:
+        # After a stop that is not confirmed nothing is sent: the lease must be free to end what still runs.
+        if session.valid and not session.armed and (stopped is None or stopped.confirmed):
             session.write_limits(limits)
             return
     except (LinkError, Refused):

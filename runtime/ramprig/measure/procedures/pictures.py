@@ -111,7 +111,9 @@ def repeats(figure: Figure, values: Sequence[float], mean: Measured, *, title: s
 def round_trips(figure: Figure, trips_s: Sequence[float]) -> None:
     """How often each round trip came."""
     axes = figure.subplots()
-    axes.hist([1000 * one for one in trips_s], bins=40, color=FORWARD, alpha=0.8)
+    trips_ms = 1000 * np.asarray(trips_s)
+    bins = np.arange(0.0, max(20.0, float(trips_ms.max())) + 1.0, 0.5)
+    axes.hist(trips_ms, bins=bins.tolist(), color=FORWARD, alpha=0.8)
     axes.axvspan(14.0, 18.0, color=FAINT, alpha=0.15, linewidth=0)
     axes.set_xlabel("round trip, ms (grey: where a USB adapter's latency timer of 16 ms puts it)")
     axes.set_ylabel("exchanges")
