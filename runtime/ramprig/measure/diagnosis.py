@@ -95,8 +95,8 @@ class Case(Enum):
     )
     COUNTS_STOP = (
         "the counts come when the shaft is turned by hand, and stop when the motor runs",
-        "give the encoder a supply that does not sag with the motor, twist the motor's leads, shield the encoder's, and "
-        "fit 0.1 uF across the motor's terminals",
+        "give the encoder a supply that does not sag with the motor, twist the motor's leads, shield the encoder's, "
+        "and fit 0.1 uF across the motor's terminals",
         "a sagging supply and interference look the same from here",
     )
     OFFSET = ("the current sensor does not show zero with the outputs off", "", "")
