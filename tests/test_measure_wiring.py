@@ -6,6 +6,7 @@ import dataclasses
 import json
 import math
 import random
+import re
 from pathlib import Path
 
 import pytest
@@ -165,9 +166,12 @@ def test_a_bench_that_is_tighter_than_the_check_stays_so() -> None:
     assert Wiring(motor="vent").bench(bench_of_text(text)).limits()["ceiling_duty", 0] == 1200
 
 
-def test_a_current_that_reads_beyond_the_trip_is_refused_and_nothing_moves() -> None:
-    with pytest.raises(NotMeasurable, match="beyond the check's own trip"):
-        measured(Wiring(motor="vent"), small_bench(), faults=("current_offset=2000",))
+def test_a_current_that_reads_beyond_the_trip_is_told_and_nothing_moves() -> None:
+    done = measured(Wiring(motor="vent"), small_bench(), faults=("current_offset=2000",))
+    assert done.findings.facts["case"] == "offset"
+    assert re.search(r"write 'current zero: (1999|2000|2001) mA'", done.findings.lines[1])
+    assert done.fastest_rad_s == 0.0
+    assert done.most_a == 0.0
 
 
 def test_a_trip_from_before_is_shown_and_not_cleared() -> None:
