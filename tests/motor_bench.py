@@ -2,9 +2,8 @@
 
 from __future__ import annotations
 
-import dataclasses
 import random
-from collections.abc import Iterator
+from collections.abc import Iterable, Iterator
 
 import numpy as np
 
@@ -78,15 +77,28 @@ def measuring_run(sign: int) -> Iterator[tuple[int, int]]:
 
 
 def record(
-    parameters: PlantParameters, drive: Iterator[tuple[int, int]], *, seed: int = 0, tick_us: int = 1000
+    parameters: PlantParameters,
+    drive: Iterable[tuple[int, int]],
+    *,
+    seed: int = 0,
+    tick_us: int = 1000,
+    brake: bool = False,
+    jammed: bool = False,
+    winding: bool = False,
 ) -> Recording:
-    """Run a plant through the drive and log every tick: the sensors first, then the duty set (RUN-2 of SPEC.md)."""
+    """Run a plant through the drive and log every tick: the sensors first, then the duty set (RUN-2 of SPEC.md).
+
+    At zero duty it coasts, or brakes. `winding` records the winding's temperature, too.
+    """
     plant = Plant(parameters, tick_us=tick_us, seed=seed)
+    axis = plant.axes[0]
+    axis.brake, axis.jammed = brake, jammed
     rows = []
     for duty, ticks in drive:
         for _ in range(ticks):
-            rows.append((plant.read_counts(0), plant.read_current_ma(0), plant.read_supply_mv(), duty))
-            plant.axes[0].duty = duty
+            counts, current_ma = plant.read_counts(0), plant.read_current_ma(0)
+            rows.append((counts, current_ma, plant.read_supply_mv(), duty, plant.read_temperature_dc(0)))
+            axis.duty = duty
             plant.step()
     table = np.array(rows)
     return Recording(
@@ -95,8 +107,10 @@ def record(
         supply_v=table[:, 2] / 1000.0,
         current_a=table[:, 1] / 1000.0,
         counts=table[:, 0],
-        coasting=table[:, 3] == 0,
+        coasting=(table[:, 3] == 0) & (not brake),
         counts_per_turn=parameters.axes[0].encoder.counts_per_turn,
+        held=jammed,
+        winding_c=table[:, 4] / 10.0 if winding else None,
     )
 
 
@@ -105,10 +119,3 @@ def both_ways(passes: int = 1) -> Iterator[tuple[int, int]]:
     for _ in range(passes):
         yield from measuring_run(1)
         yield from measuring_run(-1)
-
-
-def with_motor(parameters: PlantParameters, **changes: float) -> PlantParameters:
-    """The same bench with other motor parameters."""
-    axis = parameters.axes[0]
-    motor = dataclasses.replace(axis.motor, **changes)  # type: ignore[arg-type]  # all of them are floats
-    return dataclasses.replace(parameters, axes=(dataclasses.replace(axis, motor=motor),))

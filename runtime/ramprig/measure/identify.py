@@ -35,6 +35,8 @@ L_KNOWN_TO = 0.25
 """An inductance with a larger relative standard uncertainty is called not found; a choice of ours."""
 PUSH_SHARE = 0.8
 """A driven shaft counts as still only while the motor's torque stays below this share of the Coulomb friction."""
+ROUNDS = 3
+"""So often windows that do not fit the rest are left out of the first search."""
 MISFIT = 25.0
 """A window whose mean square residual exceeds so many times the median's is left out and named; a choice of ours."""
 FULL_RANGE = 0.995
@@ -178,7 +180,7 @@ def _check_signs(turning: Sequence[Window]) -> None:
 
 
 def _known(solution: Solution, index: int) -> bool:
-    return math.sqrt(solution.covariance[index, index]) <= L_KNOWN_TO * abs(solution.values[index])
+    return math.sqrt(solution.covariance[index, index]) <= L_KNOWN_TO * abs(float(solution.values[index]))
 
 
 def _fitted(windows: list[Window], known: Instruments, warnings: list[str]) -> tuple[Solution, list[Window], Noise]:
@@ -193,18 +195,31 @@ def _fitted(windows: list[Window], known: Instruments, warnings: list[str]) -> t
     free = [*CORE, L, OFFSET] + ([] if measured else [RISE])
 
     few = _liveliest(moving)
-    solution = joint.solve(
-        few, start, free=[i for i in free if i not in (L, RISE)], bridge_ohm=known.bridge_ohm, noise=noise
-    )
-    solution = joint.solve(few, solution.values, free=free, bridge_ohm=known.bridge_ohm, noise=noise)
-    noise = _noise_found(solution, noise)
+    for _ in range(ROUNDS):
+        solution = joint.solve(
+            few, start, free=[i for i in free if i not in (L, RISE)], bridge_ohm=known.bridge_ohm, noise=noise
+        )
+        solution = joint.solve(few, solution.values, free=free, bridge_ohm=known.bridge_ohm, noise=noise)
+        kept, _ = _sorted_out(few, solution.sums)
+        if len(kept) == len(few):
+            break
+        few = kept
+    noise = _noise_found(solution.sums, len(solution.free), noise)
     windows = _trusted(windows, solution.values)
-    solution = joint.solve(windows, solution.values, free=free, bridge_ohm=known.bridge_ohm, noise=noise)
-    kept = _without_misfits(windows, solution, warnings)
-    if len(kept) < len(windows):
-        noise = _noise_found(solution, noise)
-        solution = joint.solve(kept, solution.values, free=free, bridge_ohm=known.bridge_ohm, noise=noise)
-    return solution, kept, noise
+    at_first = joint.sums(solution.values, windows, bridge_ohm=known.bridge_ohm, noise=noise)
+    kept, out = _sorted_out(windows, at_first)
+    if len(out) > MOST_LEFT_OUT * len(windows):
+        raise NotMeasurable(
+            f"{len(out)} of {len(windows)} stretches do not fit one motor with constant friction",
+            wanted="look at the residuals: a slipping coupling, a load that varies or lost counts do this",
+        )
+    warnings.extend(
+        f"left out {window.motion} from {window.begin_s:.3f} s for {len(window) * window.period_s:.3f} s: "
+        "it does not fit the rest"
+        for window in out
+    )
+    solution = joint.solve(kept, solution.values, free=free, bridge_ohm=known.bridge_ohm, noise=noise)
+    return solution, kept, _noise_found(solution.sums, len(solution.free), noise)
 
 
 def _step_rad(windows: Sequence[Window]) -> float:
@@ -234,29 +249,18 @@ def _trusted(windows: Sequence[Window], values: Array) -> list[Window]:
     ]
 
 
-def _without_misfits(windows: list[Window], solution: Solution, warnings: list[str]) -> list[Window]:
-    ratio = solution.sums.by_window / np.median(solution.sums.by_window)
-    kept = [window for window, size in zip(windows, ratio, strict=True) if size <= MISFIT]
-    out = [window for window, size in zip(windows, ratio, strict=True) if size > MISFIT]
-    if len(out) > MOST_LEFT_OUT * len(windows):
-        raise NotMeasurable(
-            f"{len(out)} of {len(windows)} stretches do not fit one motor with constant friction",
-            wanted="look at the residuals: a slipping coupling, a load that varies or lost counts do this",
-        )
-    for window in out:
-        warnings.append(
-            f"left out {window.motion} from {window.begin_s:.3f} s for {len(window) * window.period_s:.3f} s: "
-            "it does not fit the rest"
-        )
-    return kept
+def _sorted_out(windows: Sequence[Window], found: joint.Sums) -> tuple[list[Window], list[Window]]:
+    """The windows that fit the rest, and those that do not."""
+    fits = found.by_window <= MISFIT * np.median(found.by_window)
+    kept = [window for window, good in zip(windows, fits, strict=True) if good]
+    return kept, [window for window, good in zip(windows, fits, strict=True) if not good]
 
 
-def _noise_found(solution: Solution, noise: Noise) -> Noise:
+def _noise_found(found: joint.Sums, free: int, noise: Noise) -> Noise:
     """The readings' standard deviations as the residuals show them."""
-    total = solution.sums
-    spent = (total.states + len(solution.free)) / total.readings
-    current = math.sqrt(total.square_current / (total.count_current * (1.0 - spent)))
-    angle = math.sqrt(total.square_angle / (total.count_angle * (1.0 - spent)))
+    left = 1.0 - (found.states + free) / found.readings
+    current = math.sqrt(found.square_current / (found.count_current * left))
+    angle = math.sqrt(found.square_angle / (found.count_angle * left))
     return Noise(noise.current_a * current, noise.angle_rad * angle)
 
 
@@ -274,9 +278,9 @@ def _result(
         covariance[:, R] /= factor
         covariance[R, R] += (values[R] * copper.ALPHA_20_PER_K / factor * known.start_u_k) ** 2
     # Welch-Satterthwaite with one finite contribution: the others, from outside, count as known.
-    dofs = dof * (np.diag(covariance) / np.maximum(np.diag(statistical), 1e-300)) ** 2
-    for names in solution.weak:
-        warnings.append(f"{' and '.join(names)} cannot be told apart by what was recorded")
+    own, whole = np.diag(statistical), np.diag(covariance)
+    dofs = np.where(own > 0.0, dof * (whole / np.where(own > 0.0, own, 1.0)) ** 2, math.inf)
+    warnings.extend(f"{' and '.join(names)} cannot be told apart by what was recorded" for names in solution.weak)
 
     def one(index: int, unit: str) -> Measured:
         return Measured(float(values[index]), unit, math.sqrt(covariance[index, index]), float(dofs[index]))

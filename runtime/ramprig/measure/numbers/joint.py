@@ -205,7 +205,8 @@ def _channels(motion: Motion) -> int:
 def _stacked(states: Array, angles: Array, motion: Motion) -> Array:
     """Predicted channels `(m, channels, n)`: the current, 0 when coasting, and the angle where the shaft turns."""
     if motion is Motion.STILL:
-        return states[:, :1]
+        alone: Array = states[:, :1]
+        return alone
     current = np.zeros_like(angles) if motion is Motion.COASTING else states[:, 0]
     return np.stack([current, angles], axis=1)
 
@@ -213,7 +214,7 @@ def _stacked(states: Array, angles: Array, motion: Motion) -> Array:
 def _turned(row: Array, states: Array) -> Array:
     """Angle from the states, `(m, n)`, starting at 0."""
     moved = row[0] * states[:, 0] + row[1] * states[:, 1]
-    found = np.zeros_like(moved)
+    found: Array = np.zeros_like(moved)
     np.cumsum(moved[:, :-1], axis=1, out=found[:, 1:])
     return found
 

@@ -90,7 +90,7 @@ class Window:
 def unwrapped(counts: NDArray[np.int64]) -> NDArray[np.int64]:
     """Counts without their wraps at 32 bits."""
     moves = np.diff(np.asarray(counts, np.int64))
-    moves = (moves + 2**31) % 2**32 - 2**31
+    moves = np.mod(moves + 2**31, 2**32) - 2**31
     return np.concatenate([[0], np.cumsum(moves)])
 
 
@@ -111,7 +111,8 @@ def _directions(counts: NDArray[np.int64], look: int) -> NDArray[np.int64]:
 
 def _resting(counts: NDArray[np.int64], quiet: int) -> NDArray[np.bool_]:
     """Where the encoder neither moved since `quiet` samples nor moves within the next `quiet`."""
-    return (counts == _shifted(counts, -quiet)) & (counts == _shifted(counts, quiet))
+    resting: NDArray[np.bool_] = (counts == _shifted(counts, -quiet)) & (counts == _shifted(counts, quiet))
+    return resting
 
 
 def _runs(labels: NDArray[np.int64]) -> Iterator[tuple[int, int, int]]:
