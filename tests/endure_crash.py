@@ -216,12 +216,18 @@ class Host:
         self.meddle: Callable[[Host], None] = lambda host: None
         self.said: list[str] = []
         self.away_until_s = 0.0
+        self.latest_end_unix_s: float | None = None
         self._clock: VirtualClock | None = None
 
     @property
     def run_folder(self) -> Path:
         (only,) = (self.folder / "runs").iterdir()
         return only
+
+    def record_exists(self) -> bool:
+        """Whether the run has begun to count."""
+        runs = self.folder / "runs"
+        return runs.exists() and any((path / "cycles.jsonl").exists() for path in runs.iterdir())
 
     def record(self) -> CycleRecord:
         return read_cycle_record(self.run_folder)
@@ -253,7 +259,13 @@ class Host:
         """One life, to its end. Raises Killed where it dies before."""
         sequence = read_sequence(self.folder / "crash.yaml")
         wish = RunWish(
-            sequence=sequence, bench=self.bench, runs=self.folder / "runs", seed=self.seed, virtual=True, durable=True
+            sequence=sequence,
+            bench=self.bench,
+            runs=self.folder / "runs",
+            seed=self.seed,
+            virtual=True,
+            durable=True,
+            latest_end_unix_s=self.latest_end_unix_s,
         )
         around = Surroundings(
             open_port=lambda: self._open(process),

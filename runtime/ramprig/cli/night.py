@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import platform
 import time
-from collections.abc import Callable, Iterable
+from collections.abc import Callable, Iterable, Mapping
 from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -13,8 +13,10 @@ from ramprig.cli.say import tell
 from ramprig.errors import UsageError
 
 if TYPE_CHECKING:
-    from ramprig.cli.files import Pair
+    from ramprig.bench import Bench
     from ramprig.cli.running import Way
+    from ramprig.sequence.cycle_plan import BlockSoFar
+    from ramprig.sequence.reading import Sequence
 
 
 def seconds_of(text: str | None) -> float | None:
@@ -41,9 +43,20 @@ def refuse_missing(missing: Iterable[object]) -> None:
 
 
 def carry_out_unattended(
-    pair: Pair, way: Way, *, at_most: str | None, accept_sleep: bool, ask: Callable[[], None], run: Callable[[Way], int]
+    sequence: Sequence,
+    bench: Bench,
+    way: Way,
+    *,
+    so_far: Mapping[int, BlockSoFar],
+    at_most: str | None,
+    accept_sleep: bool,
+    ask: Callable[[], None],
+    run: Callable[[Way], int],
 ) -> int:
-    """Check the rules, show the door sheet, ask, and run awake. Raises UsageError where a rule does not hold."""
+    """Check the rules, show the door sheet, ask, and run awake. Raises UsageError where a rule does not hold.
+
+    `so_far` is what is done of a run that is gone on with.
+    """
     from ramprig.endure.awake import keep_awake
     from ramprig.endure.doorsheet import door_sheet
     from ramprig.endure.unattended import longest_s, missing_rules
@@ -51,16 +64,14 @@ def carry_out_unattended(
     from ramprig.sequence.compile import compile_plan
 
     at_most_s = seconds_of(at_most)
-    plan = compile_plan(pair.sequence, pair.bench)
+    plan = compile_plan(sequence, bench, so_far=so_far)
     free_bytes = disk_free(_standing(Path(".") if way.runs is None else way.runs))
-    refuse_missing(
-        missing_rules(pair.bench, pair.sequence, plan, url=way.url, free_bytes=free_bytes, at_most_s=at_most_s)
-    )
+    refuse_missing(missing_rules(bench, sequence, plan, url=way.url, free_bytes=free_bytes, at_most_s=at_most_s))
     with keep_awake(accept_sleep=accept_sleep) as awake:
         start_s = time.time()
-        latest_s = start_s + longest_s(plan, pair.sequence, at_most_s=at_most_s)
+        latest_s = start_s + longest_s(plan, sequence, at_most_s=at_most_s)
         sheet = door_sheet(
-            pair.bench, pair.sequence, plan, start_unix_s=start_s, latest_end_unix_s=latest_s, host=platform.node()
+            bench, sequence, plan, start_unix_s=start_s, latest_end_unix_s=latest_s, host=platform.node()
         )
         tell(sheet.text())
         tell(str(awake))

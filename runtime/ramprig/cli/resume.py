@@ -6,9 +6,11 @@ import argparse
 import sys
 import time
 from collections.abc import Iterator
+from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+from ramprig.cli.night import carry_out_unattended, seconds_of
 from ramprig.cli.running import SIMULATED, Way, carry_out_wish, mock_url, on_terminal
 from ramprig.cli.say import tell
 from ramprig.errors import StoppedByUser
@@ -28,6 +30,9 @@ def declare(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--port", metavar="URL", help="the port, where it has another name now")
     parser.add_argument("--yes", action="store_true", help="do not ask before anything moves")
     parser.add_argument("--after-trip", action="store_true", help="go on though the run ended by a trip of the board")
+    parser.add_argument("--unattended", action="store_true", help="go on only where the rules for the night hold")
+    parser.add_argument("--at-most", metavar="TIME", help="end in order after this time, such as '9 h'")
+    parser.add_argument("--accept-sleep", action="store_true", help="go on though the computer may fall asleep")
     parser.epilog = EPILOG
 
 
@@ -44,11 +49,39 @@ def carry_out(args: argparse.Namespace) -> int:
         url = mock_url(url, Path(broken.bench.file))
     for line in what_is_known(broken):
         tell(line)
-    wish = RunWish(sequence=broken.sequence, bench=broken.bench)
-    wish = wish_to_carry_on(broken, wish, by="command", now_unix_s=now_s, after_trip=args.after_trip)
-    if not simulated and not args.yes and on_terminal():
-        ask()
-    return carry_out_wish(wish, Way(url=url, virtual=False, runs=args.run.parent))
+    way = Way(url=url, virtual=False, runs=args.run.parent)
+
+    def ask_first() -> None:
+        if not simulated and not args.yes and on_terminal():
+            ask()
+
+    def go_on(way: Way) -> int:
+        wish = wish_to_carry_on(
+            broken,
+            RunWish(sequence=broken.sequence, bench=broken.bench),
+            by="command",
+            now_unix_s=now_s,
+            after_trip=args.after_trip,
+            latest_end_unix_s=way.latest_end_unix_s,
+        )
+        return carry_out_wish(wish, way)
+
+    if args.unattended:
+        return carry_out_unattended(
+            broken.sequence,
+            broken.bench,
+            way,
+            so_far=broken.so_far.blocks,
+            at_most=args.at_most,
+            accept_sleep=args.accept_sleep,
+            ask=ask_first,
+            run=go_on,
+        )
+    at_most_s = seconds_of(args.at_most)
+    if at_most_s is not None:
+        way = replace(way, latest_end_unix_s=now_s + at_most_s)
+    ask_first()
+    return go_on(way)
 
 
 def what_is_known(broken: Broken) -> Iterator[str]:

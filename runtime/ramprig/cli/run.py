@@ -54,8 +54,10 @@ def carry_out(args: argparse.Namespace) -> int:
 
     if args.unattended:
         return carry_out_unattended(
-            pair,
+            pair.sequence,
+            pair.bench,
             way,
+            so_far={},
             at_most=args.at_most,
             accept_sleep=args.accept_sleep,
             ask=ask_first,

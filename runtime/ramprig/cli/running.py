@@ -132,7 +132,7 @@ def carry_out_wish(wish: RunWish, way: Way) -> int:
 
     def began(folder: Path) -> None:
         progress.line(f"recording to {folder}")
-        if way.sheet is not None:
+        if way.sheet is not None and len(sessions) == 1:  # later parts of the run are on the first one's sheet
             keep_sheet(way.sheet, folder)
 
     around = Surroundings(
@@ -169,20 +169,25 @@ def carry_out_wish(wish: RunWish, way: Way) -> int:
     return result.outcome.exit_code
 
 
-SHEET_NAMES = ("door-sheet.txt", "door-sheet.html")
+SHEETS_MAX = 1000
 
 
 def keep_sheet(sheet: DoorSheet, folder: Path) -> None:
     """Put the door sheet into the run folder as text and page; one that cannot be written was shown all the same."""
-    for name, text in zip(SHEET_NAMES, (sheet.text(), sheet.html()), strict=True):
-        path = folder / name
-        try:
-            if not path.exists():
-                path.write_text(text, "utf-8")
-        except OSError as error:
-            tell(f"the door sheet cannot be written to {path}: {error.strerror}")
-            return
-    tell(f"door sheet to print: {folder / SHEET_NAMES[1]}")
+    number = next(number for number in range(1, SHEETS_MAX) if not (folder / _sheet_name(number, "html")).exists())
+    page = folder / _sheet_name(number, "html")
+    try:
+        (folder / _sheet_name(number, "txt")).write_text(sheet.text(), "utf-8")
+        page.write_text(sheet.html(), "utf-8")
+    except OSError as error:
+        tell(f"the door sheet cannot be written to {page}: {error.strerror}")
+        return
+    tell(f"door sheet to print: {page}")
+
+
+def _sheet_name(number: int, suffix: str) -> str:
+    """Each part of a run that is started unattended has a sheet of its own."""
+    return f"door-sheet.{suffix}" if number == 1 else f"door-sheet-{number}.{suffix}"
 
 
 def tell_stop(session: Session) -> None:

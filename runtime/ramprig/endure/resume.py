@@ -18,7 +18,7 @@ from ramprig.bench import Bench, load_bench
 from ramprig.errors import LinkError, RecordError, Refused, UsageError, WrongDevice
 from ramprig.port.base import Port
 from ramprig.quantity import format_duration
-from ramprig.record.events import from_rfc3339, jsonable
+from ramprig.record.events import from_rfc3339, jsonable, rfc3339
 from ramprig.record.folder import EVENTS_FILE
 from ramprig.record.parts import parts_of
 from ramprig.record.reading import read_events, read_manifest
@@ -157,9 +157,18 @@ def _last_open(lines: Any, open_number: int | None) -> int | None:  # Any: JSON 
 
 
 def wish_to_carry_on(
-    broken: Broken, wish: RunWish, *, by: str, now_unix_s: float, after_trip: bool = False
+    broken: Broken,
+    wish: RunWish,
+    *,
+    by: str,
+    now_unix_s: float,
+    after_trip: bool = False,
+    latest_end_unix_s: float | None = None,
 ) -> RunWish:
-    """The wish for the next part of the run. Raises Refused after a trip that nobody has said may be passed over."""
+    """The wish for the next part of the run, which ends by `latest_end_unix_s`, None: as the run was begun.
+
+    Raises Refused after a trip that nobody has said may be passed over, UsageError where its latest end has gone by.
+    """
     if broken.cause is Cause.TRIP and not after_trip:
         raise Refused(
             "resume", "trip", f"the run ended by a trip ({broken.manifest.get('stop_reason')}); --after-trip goes on"
@@ -176,10 +185,16 @@ def wish_to_carry_on(
     told = jsonable(interruption)
     assert isinstance(told, dict)  # a dataclass is written as an object
     first = parts_of(dict(broken.manifest))[0]
-    latest = (broken.manifest.get("settings") or {}).get("latest_end")
+    settings = dict(broken.manifest.get("settings") or {})
+    if latest_end_unix_s is not None:
+        settings["latest_end"] = rfc3339(latest_end_unix_s)
+    elif settings.get("latest_end") is not None:
+        latest_end_unix_s = from_rfc3339(str(settings["latest_end"])).timestamp()
+        if latest_end_unix_s <= now_unix_s:
+            raise UsageError(f"the run's latest end, {settings['latest_end']}, has gone by; say --at-most TIME anew")
     carry_on = CarryOn(
         folder=broken.folder,
-        manifest=broken.manifest,
+        manifest={**broken.manifest, "settings": settings},
         so_far=broken.so_far,
         interruption=told,
         board=dict(first.get("device") or {}),
@@ -191,7 +206,7 @@ def wish_to_carry_on(
         sequence=broken.sequence,
         bench=broken.bench,
         carry_on=carry_on,
-        latest_end_unix_s=None if latest is None else from_rfc3339(str(latest)).timestamp(),
+        latest_end_unix_s=latest_end_unix_s,
     )
 
 

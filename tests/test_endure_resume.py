@@ -1,0 +1,279 @@
+"""Interruptions of every kind: what goes on by itself, what only by hand, what never, and what the record tells."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from pathlib import Path
+
+import pytest
+
+from endure_crash import CYCLES, START_UNIX_S, Host, Killed, Process
+from ramprig.endure.interruption import Cause, cause_of_manifest
+from ramprig.endure.resume import read_broken
+from ramprig.errors import RecordError, Refused, UsageError, WrongDevice
+from ramprig.record.reading import audit, read_events, read_manifest, read_samples, sample_files
+from ramprig.sequence.outcome import Verdict
+from ramprig_link.words import Cause as BootCause
+
+GO_ON = "on interruption: {resume at most: 2, within: 20 s}"
+LATE_S = 4.0
+"""Into the run, in the second cycle."""
+
+
+def once(what: str, after_s: float = LATE_S) -> Callable[[Host], None]:
+    """A hook that does something to the board once, at this time of the run."""
+    done: list[str] = []
+
+    def meddle(host: Host) -> None:
+        if done or host.now_unix_s() < START_UNIX_S + after_s:
+            return
+        done.append(what)
+        match what:
+            case "unplug":
+                host.device.faults.set("unplug", True)
+                host.away_until_s = host.unix_s + 5.0
+            case "restart":
+                host.device.restart(BootCause.BROWNOUT)
+            case fault:
+                host.device.faults.set(fault, True)
+
+    return meddle
+
+
+def replug(host: Host) -> None:
+    """Have the cable back at the next opening: a fault of the mock lasts until it is switched off."""
+    pause = host.pause
+
+    def pause_and_plug(seconds: float) -> None:
+        pause(seconds)
+        host.device.faults.set("unplug", False)
+
+    host.pause = pause_and_plug  # type: ignore[method-assign]  # the test's own host
+
+
+@pytest.mark.parametrize(("what", "cause"), [("unplug", Cause.LINK), ("restart", Cause.RESTART)])
+def test_a_lost_link_or_a_restart_is_gone_on_with_by_itself_where_the_sequence_says_so(
+    tmp_path: Path, what: str, cause: Cause
+) -> None:
+    host = Host(tmp_path, policy=GO_ON)
+    host.meddle = once(what)
+    replug(host)
+    result = host.run(Process())
+    assert result.outcome.verdict is Verdict.PASSED, result.outcome
+    assert host.opened >= 2
+    folder = host.run_folder
+    (told,) = read_manifest(folder)["interruptions"]
+    assert (told["cause"], told["by"], told["number"]) == (cause.value, "policy", 1)
+    assert told["down_s"] > 0
+    assert audit(folder).exact, audit(folder).statements
+    counted = host.record().counted
+    assert (counted.confirmed, counted.failed) == (CYCLES, 0)
+    assert counted.confirmed <= host.witness.done <= counted.confirmed + counted.interrupted
+    assert [event["part"] for event in read_events(folder / "events.jsonl")[0] if event["kind"] == "run_resumed"] == [2]
+    assert "interruption 1: " in audit(folder).interruptions[0]
+
+
+def test_without_a_word_in_the_sequence_an_interrupted_run_stops(tmp_path: Path) -> None:
+    host = Host(tmp_path)
+    host.meddle = once("restart")
+    result = host.run(Process())
+    assert result.outcome.verdict is Verdict.TRIPPED
+    assert result.outcome.restarted
+    assert "the device restarted" in result.outcome.sentence
+    assert host.opened == 1
+
+
+def test_by_itself_it_goes_on_no_more_often_than_said(tmp_path: Path) -> None:
+    host = Host(tmp_path, policy="on interruption: {resume at most: 1, within: 20 s}")
+    count: list[float] = []
+
+    def meddle(host: Host) -> None:
+        now_s = host.now_unix_s()
+        if host.record_exists() and now_s > (count[-1] if count else START_UNIX_S + 2.0) + 2.5:
+            count.append(now_s)
+            host.device.restart(BootCause.BROWNOUT)
+
+    host.meddle = meddle
+    result = host.run(Process())
+    assert result.outcome.verdict is Verdict.TRIPPED
+    assert len(read_manifest(host.run_folder)["interruptions"]) == 1
+    host.meddle = lambda host: None
+    assert host.run(Process(), resume=True).outcome.verdict is Verdict.PASSED  # by hand it may
+    assert [each["by"] for each in read_manifest(host.run_folder)["interruptions"]] == ["policy", "command"]
+
+
+def test_a_board_that_does_not_come_back_ends_the_run(tmp_path: Path) -> None:
+    host = Host(tmp_path, policy=GO_ON)
+    host.meddle = once("unplug")  # and nobody plugs it in again
+    result = host.run(Process())
+    assert result.outcome.verdict is Verdict.LINK_LOST
+    assert "the board did not come back within 20 s" in result.outcome.sentence
+    assert read_manifest(host.run_folder)["verdict"] == "link lost"
+
+
+def test_after_a_trip_it_never_goes_on_by_itself_and_by_hand_only_where_told(tmp_path: Path) -> None:
+    host = Host(tmp_path, policy=GO_ON)
+    host.meddle = once("jammed_shaft")
+    result = host.run(Process())
+    assert result.outcome.verdict is Verdict.TRIPPED
+    assert result.outcome.trip in ("overcurrent", "stall")
+    assert host.opened == 1
+    host.meddle = lambda host: None
+    host.device.faults.set("jammed_shaft", False)
+    host.pause(2.0)
+    with pytest.raises(Refused, match="ended by a trip"):
+        host.run(Process(), resume=True)
+    assert host.run(Process(), resume=True, after_trip=True).outcome.verdict is Verdict.PASSED
+    assert read_manifest(host.run_folder)["interruptions"][0]["cause"] == Cause.TRIP.value
+
+
+def test_where_the_sequence_says_so_it_goes_on_after_a_trip_too(tmp_path: Path) -> None:
+    host = Host(tmp_path, policy="on interruption: {resume at most: 1, within: 20 s, after a trip: yes}")
+    host.meddle = once("jammed_shaft")
+    pause = host.pause
+
+    def pause_and_free(seconds: float) -> None:
+        host.device.faults.set("jammed_shaft", False)
+        pause(seconds)
+
+    host.pause = pause_and_free  # type: ignore[method-assign]  # the test's own host
+    assert host.run(Process()).outcome.verdict is Verdict.PASSED
+
+
+def test_a_trip_other_than_the_interruptions_own_is_somebodys_to_look_at(tmp_path: Path) -> None:
+    host = Host(tmp_path)
+    jam = once("jammed_shaft", 1.9)  # in the drive of the first cycle
+
+    def jam_and_die(host: Host) -> None:
+        jam(host)
+        process.dead = bool(host.device.faults.get("jammed_shaft"))
+
+    process = Process()
+    host.meddle = jam_and_die
+    with pytest.raises(Killed):
+        host.run(process)
+    host.pause(3.0)  # driven on against a held shaft until the board trips by itself
+    host.device.faults.set("jammed_shaft", False)
+    host.meddle = lambda host: None
+    with pytest.raises(Refused, match="look at the bench first"):
+        host.run(Process(), resume=True)
+    assert host.run(Process(), resume=True, after_trip=True).outcome.verdict is Verdict.PASSED
+
+
+def test_a_full_disk_stops_the_run_and_it_goes_on_when_there_is_room(tmp_path: Path) -> None:
+    host = Host(tmp_path)
+    result = host.run(Process(full_at=350))
+    assert result.outcome.verdict is Verdict.NOT_RECORDED
+    assert result.outcome.stop_confirmed
+    manifest = read_manifest(host.run_folder)
+    assert cause_of_manifest(manifest) is Cause.DISK
+    confirmed = host.record().counted.confirmed
+    assert confirmed <= host.witness.done <= confirmed + 1
+    assert host.run(Process(), resume=True).outcome.verdict is Verdict.PASSED
+    counted = host.record().counted
+    assert counted.confirmed == CYCLES
+    found = audit(host.run_folder)
+    unwritten = read_manifest(host.run_folder)["parts"][0]["samples"]["unwritten"]
+    assert (found.missing, found.unexpected) == (unwritten, 0)
+    assert any("the disk is full" in text for text in found.statements)
+    assert not [text for text in found.statements if text.startswith("part 2")]
+
+
+def test_another_board_or_other_limits_are_refused_and_nothing_is_written(tmp_path: Path) -> None:
+    host = Host(tmp_path)
+    with pytest.raises(Killed):
+        host.run(Process(die_at=400))
+    before = (host.run_folder / "run.json").read_bytes()
+    host.pause(3.0)
+    host.device.faults.set("second_board", True)
+    with pytest.raises(WrongDevice, match="serial"):
+        host.run(Process(), resume=True)
+    assert (host.run_folder / "run.json").read_bytes() == before
+    host.device.faults.set("second_board", False)
+    assert host.run(Process(), resume=True).outcome.verdict is Verdict.PASSED
+
+
+def test_the_copies_in_the_folder_are_used_where_the_files_have_changed(tmp_path: Path) -> None:
+    host = Host(tmp_path)
+    with pytest.raises(Killed):
+        host.run(Process(die_at=400))
+    path = tmp_path / "crash.yaml"
+    path.write_text(path.read_text("utf-8").replace(f"times: {CYCLES}", "times: 9"), "utf-8")
+    broken = read_broken(host.run_folder, now_unix_s=host.now_unix_s())
+    assert [Path(name).name for name in broken.changed] == ["crash.yaml"]
+    host.pause(3.0)
+    host.run(Process(), resume=True)
+    assert host.record().counted.confirmed == CYCLES
+    host_copy = host.run_folder / "crash.yaml"
+    host_copy.write_text("sequence: other\n", "utf-8")
+    assert any("crash.yaml was changed" in text for text in audit(host.run_folder).statements)
+
+
+def test_a_run_that_came_to_its_end_or_has_no_cycles_is_not_gone_on_with(tmp_path: Path) -> None:
+    host = Host(tmp_path)
+    host.run(Process())
+    with pytest.raises(UsageError, match="came to its end"):
+        host.run(Process(), resume=True)
+    other = tmp_path / "other"
+    other.mkdir()
+    plain = Host(other)
+    path = other / "crash.yaml"
+    path.write_text("sequence: plain\nbench: bench.yaml\nsteps: [{hold: 10 s}]\n", "utf-8")
+    with pytest.raises(Killed):
+        plain.run(Process(die_at=250))
+    with pytest.raises(UsageError, match="no 'cycle'"):
+        plain.run(Process(), resume=True)
+
+
+def test_a_run_that_is_under_way_cannot_be_resumed(tmp_path: Path) -> None:
+    host = Host(tmp_path)
+    seen: list[str] = []
+
+    def meddle(host: Host) -> None:
+        if host.record_exists() and not seen:
+            other = Host.__new__(Host)
+            other.__dict__ |= host.__dict__ | {"meddle": lambda host: None}
+            with pytest.raises(RecordError, match="another program"):
+                other.run(Process(), resume=True)
+            seen.append("refused")
+            host.device.restart(BootCause.BROWNOUT)
+
+    host.meddle = meddle
+    host.run(Process())
+    assert seen == ["refused"]
+
+
+def test_rows_and_times_go_on_over_the_parts(tmp_path: Path) -> None:
+    host = Host(tmp_path, policy=GO_ON)
+    host.meddle = once("restart")
+    host.run(Process())
+    one, two = [read_samples(path) for path in sample_files(host.run_folder)]
+    assert two.ticks[0] < one.ticks[-1]  # the board's ticks began anew ...
+    assert two.numbers["time_s"][0] > one.numbers["time_s"][-1]  # ... and the time of the run did not
+    account = read_manifest(host.run_folder)["samples"]
+    assert account["written"] == len(one) + len(two)
+    assert {logging["part"] for logging in account["loggings"]} == {1, 2}
+
+
+def test_the_latest_end_ends_the_run_in_order_and_holds_for_its_later_parts(tmp_path: Path) -> None:
+    host = Host(tmp_path)
+    host.latest_end_unix_s = START_UNIX_S + 4.0
+    result = host.run(Process())
+    assert result.outcome.verdict is Verdict.STOPPED
+    assert result.outcome.sentence.startswith("ended in order at its latest end, 2027-01-15T08:00:04Z")
+    assert result.outcome.stop_confirmed
+    with pytest.raises(UsageError, match="has gone by"):
+        host.run(Process(), resume=True)
+
+
+def test_limits_that_differ_are_refused(tmp_path: Path) -> None:
+    host = Host(tmp_path)
+    with pytest.raises(Killed):
+        host.run(Process(die_at=400))
+    host.pause(3.0)
+    path = host.run_folder / "run.json"
+    text = path.read_text("utf-8")
+    digest = read_manifest(host.run_folder)["limits_digest"]
+    path.write_text(text.replace(digest, "0000"), "utf-8")
+    with pytest.raises(WrongDevice, match="limits of the digest"):
+        host.run(Process(), resume=True)
