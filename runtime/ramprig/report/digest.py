@@ -1,0 +1,261 @@
+"""One pass through all samples of a run: envelopes against time, first and last cycle, the curve, and each interval."""
+
+from __future__ import annotations
+
+import math
+from bisect import bisect_right
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+from ramprig.record.scan import Piece, Scan
+
+from .envelope import INTERVALS_MAX, Band, Envelope
+from .facts import Facts
+
+Floats = NDArray[np.float64]
+
+OVERLAY_INTERVALS = 700
+CURVE_LEVELS_MAX = 400
+"""Duty levels of a curve that are kept apart, both ways together."""
+STEADY_S = 0.3
+"""A duty counts as held after so long without a change; the speed follows it within that, as a choice of ours."""
+ROWS_MAX = 20_000
+"""Lines of the table of intervals; longer runs are summed over several cycles or minutes a line."""
+CURVE_STEP_PCT = 0.5
+
+
+@dataclass(slots=True)
+class Level:
+    """Samples at one held duty: `duty_pct`, reached by a duty growing in size or not, and the speeds found there."""
+
+    duty_pct: float
+    is_growing: bool
+    samples: int = 0
+    speed_sum: float = 0.0
+    least: float = math.inf
+    greatest: float = -math.inf
+
+    @property
+    def mean(self) -> float:
+        """Mean speed, rpm."""
+        return self.speed_sum / self.samples
+
+
+@dataclass(slots=True)
+class Window:
+    """A cycle to be laid over another: its number from 1, begin and end in s of the run, and its envelope."""
+
+    number: int
+    begin_s: float
+    end_s: float
+    envelope: Envelope
+
+
+@dataclass(frozen=True, slots=True)
+class Interval:
+    """Least, mean and greatest of each column between two times of the run."""
+
+    number: int
+    begin_s: float
+    end_s: float
+    samples: int
+    columns: dict[str, tuple[float, float, float]]
+
+
+@dataclass(slots=True)
+class Digest:
+    """What the samples of a run come to. `breaks` are times where the board restarted or the run was gone on with."""
+
+    columns: tuple[str, ...]
+    envelope: Envelope
+    windows: list[Window] = field(default_factory=list)
+    levels: dict[tuple[str, float, bool], Level] = field(default_factory=dict)
+    intervals: list[Interval] = field(default_factory=list)
+    rows: int = 0
+    first_s: float = math.nan
+    last_s: float = math.nan
+    torn_bytes: int = 0
+    breaks: list[float] = field(default_factory=list)
+    totals: dict[str, tuple[float, float, float]] = field(default_factory=dict)
+
+    def band(self, name: str) -> Band:
+        """A column against time."""
+        return self.envelope.band(name)
+
+    def curve(self, motor: str) -> list[Level]:
+        """Held duties of a motor with their speeds, by duty; fewer than three levels are no curve."""
+        found = sorted(
+            (level for (name, _, _), level in self.levels.items() if name == motor and level.samples >= 3),
+            key=lambda level: (level.duty_pct, level.is_growing),
+        )
+        return found if len({level.duty_pct for level in found if level.duty_pct}) >= 3 else []
+
+
+def plotted_columns(facts: Facts) -> tuple[str, ...]:
+    """The columns that a report shows."""
+    wanted = [f"{motor}.{what}" for motor in facts.motors for what in ("duty_pct", "speed_rpm", "current_a")]
+    wanted += [f"{servo}.pulse_us" for servo in facts.servos]
+    wanted += ["supply_v", "temperature_degc"]
+    return tuple(name for name in wanted if name in facts.columns)
+
+
+def digest_samples(facts: Facts) -> Digest:
+    """Read all samples files of the run once, piece by piece."""
+    columns = plotted_columns(facts)
+    digest = Digest(columns, Envelope(columns, intervals_max=INTERVALS_MAX))
+    digest.windows = _windows(facts.passes, columns)
+    table = _IntervalTable(columns, _edges(facts))
+    curves = {motor: _CurveWalk(digest, motor) for motor in facts.motors if f"{motor}.speed_rpm" in columns}
+    offset_s = 0.0
+    for path in facts.sample_files:
+        scan = Scan(path, columns=("time_s", *columns))
+        for piece in scan:
+            times = piece.numbers["time_s"] + offset_s
+            if digest.rows and times[0] <= digest.last_s:
+                offset_s += digest.last_s - float(times[0]) + 0.001  # ticks that begin anew must not run backwards
+                times = times + (digest.last_s - times[0] + 0.001)
+                digest.breaks.append(digest.last_s)
+            _take(digest, table, times, piece)
+            for walk in curves.values():
+                walk.take(times, piece)
+        digest.torn_bytes += scan.torn_bytes
+    digest.intervals = table.rows()
+    digest.totals = table.totals()
+    return digest
+
+
+def _take(digest: Digest, table: _IntervalTable, times: Floats, piece: Piece) -> None:
+    times = np.maximum.accumulate(times)
+    if math.isnan(digest.first_s):
+        digest.first_s = float(times[0])
+    digest.last_s = float(times[-1])
+    digest.rows += len(times)
+    digest.envelope.add(times, piece.numbers)
+    table.add(times, piece)
+    for window in digest.windows:
+        begin, end = np.searchsorted(times, (window.begin_s, window.end_s))
+        if end > begin:
+            inside = {name: piece.numbers[name][begin:end] for name in digest.columns}
+            window.envelope.add(times[begin:end] - window.begin_s, inside)
+
+
+def _windows(passes: Sequence[float], columns: tuple[str, ...]) -> list[Window]:
+    """The first cycle, one in the middle, and the last whole ones."""
+    if len(passes) < 3:
+        return []
+    last = len(passes) - 1  # the last begin has no end: the cycle before it is the last whole one
+    numbers = sorted({1, max(1, last // 2), last})
+    return [
+        Window(number, passes[number - 1], passes[number], Envelope(columns, intervals_max=OVERLAY_INTERVALS))
+        for number in numbers
+    ]
+
+
+def _edges(facts: Facts) -> list[float] | float:
+    """Where intervals begin: at cycles where there are some, else every minute (given as a width)."""
+    if len(facts.passes) < 2:
+        return 60.0
+    stride = -(-len(facts.passes) // ROWS_MAX)
+    return facts.passes[::stride]
+
+
+class _IntervalTable:
+    """Sums over the intervals between edges, a piece at a time."""
+
+    def __init__(self, columns: tuple[str, ...], edges: list[float] | float) -> None:
+        self._columns = columns
+        self._edges = edges
+        self._sums: dict[int, tuple[float, float, int, dict[str, list[float]]]] = {}
+
+    def add(self, times: Floats, piece: Piece) -> None:
+        if isinstance(self._edges, float):
+            numbers = (times // self._edges).astype(np.int64)
+        else:
+            numbers = np.searchsorted(self._edges, times, side="right")
+        begins = np.flatnonzero(np.diff(numbers, prepend=numbers[0] - 1))
+        for begin, end in zip(begins.tolist(), [*begins[1:].tolist(), len(times)], strict=True):
+            self._add_one(int(numbers[begin]), times[begin:end], piece, begin, end)
+
+    def _add_one(self, number: int, times: Floats, piece: Piece, begin: int, end: int) -> None:
+        first, _, count, sums = self._sums.get(number, (float(times[0]), 0.0, 0, {}))
+        for name in self._columns:
+            values = piece.numbers[name][begin:end]
+            values = values[~np.isnan(values)]
+            if not len(values):
+                continue
+            low, total, high, known = sums.get(name, [math.inf, 0.0, -math.inf, 0])
+            sums[name] = [
+                min(low, float(values.min())), total + float(values.sum()),
+                max(high, float(values.max())), known + len(values),
+            ]  # fmt: skip
+        self._sums[number] = first, float(times[-1]), count + len(times), sums
+
+    def rows(self) -> list[Interval]:
+        """The intervals in order; number 0 is what came before the first cycle."""
+        found = []
+        for number, (first, last, count, sums) in sorted(self._sums.items()):
+            columns = {name: (low, total / known, high) for name, (low, total, high, known) in sums.items()}
+            found.append(Interval(number, first, last, count, columns))
+        return found
+
+    def totals(self) -> dict[str, tuple[float, float, float]]:
+        """Least, mean and greatest of each column over the whole run."""
+        found: dict[str, tuple[float, float, float]] = {}
+        for name in self._columns:
+            parts = [sums[name] for _, _, _, sums in self._sums.values() if name in sums]
+            if parts:
+                known = sum(part[3] for part in parts)
+                found[name] = (min(p[0] for p in parts), sum(p[1] for p in parts) / known, max(p[2] for p in parts))
+        return found
+
+
+class _CurveWalk:
+    """Collects the speed at held duties, remembering across pieces since when the duty is held, and from where."""
+
+    def __init__(self, digest: Digest, motor: str) -> None:
+        self._digest = digest
+        self._motor = motor
+        self._duty = math.nan
+        self._since_s = 0.0
+        self._growing = True
+
+    def take(self, times: Floats, piece: Piece) -> None:
+        duty = piece.numbers[f"{self._motor}.duty_pct"]
+        speed = piece.numbers[f"{self._motor}.speed_rpm"]
+        begins = np.flatnonzero(np.diff(duty, prepend=duty[0] + 1) != 0)
+        ends = np.append(begins[1:], len(duty))
+        long = times[ends - 1] - times[begins] > STEADY_S
+        long[[0, -1]] = True  # the first may have begun in the piece before, the last may go on in the next
+        for begin, end in zip(begins[long].tolist(), ends[long].tolist(), strict=True):
+            here = float(duty[begin])
+            before = float(duty[begin - 1]) if begin else self._duty
+            if here != before:
+                if not math.isnan(before):
+                    self._growing = abs(here) > abs(before)
+                self._duty, self._since_s = here, float(times[begin])
+            if float(times[end - 1]) - self._since_s > STEADY_S:
+                self._hold(times[begin:end], speed[begin:end])
+
+    def _hold(self, times: Floats, speed: Floats) -> None:
+        kept = speed[(times - self._since_s > STEADY_S) & ~np.isnan(speed)]
+        if not len(kept):
+            return
+        duty = round(self._duty / CURVE_STEP_PCT) * CURVE_STEP_PCT
+        key = self._motor, duty, self._growing
+        level = self._digest.levels.get(key)
+        if level is None:
+            if len(self._digest.levels) >= CURVE_LEVELS_MAX:
+                return
+            level = self._digest.levels[key] = Level(duty, self._growing)
+        level.samples += len(kept)
+        level.speed_sum += float(kept.sum())
+        level.least = min(level.least, float(kept.min()))
+        level.greatest = max(level.greatest, float(kept.max()))
+
+
+def cycle_at(passes: Sequence[float], time_s: float) -> int:
+    """The number of the cycle at a time of the run, 0 before the first."""
+    return bisect_right(passes, time_s)

@@ -1,0 +1,220 @@
+"""What a run folder tells beside its samples, gathered in one pass and in bounded memory however long the run was."""
+
+from __future__ import annotations
+
+import json
+from collections import Counter
+from collections.abc import Iterator
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any
+
+from ramprig.bench import Bench, bench_of_text
+from ramprig.errors import FileError, RecordError
+from ramprig.record.folder import EVENTS_FILE, SAMPLES_FILE
+from ramprig.record.reading import read_manifest
+
+Document = dict[str, Any]  # JSON as it comes: what is in it is checked where it is used
+
+KEPT_MAX = 2000
+"""So many events of one kind are kept with their fields; all are counted."""
+PASSES_MAX = 100_000
+FAILURES_MAX = 200
+"""Failed judgements of one expectation that are kept with their values."""
+CYCLES_FILE = "cycles.jsonl"
+NOTES_FILE = "notes.jsonl"
+
+KEPT_KINDS = frozenset(
+    {
+        *("run_started", "run_resumed", "run_finished", "opened", "armed", "limit_written"),
+        *("tripped", "restarted", "device_exchanged", "stop_begun", "stopped", "stop_asked", "stop_judged"),
+        *("gap_found", "late_host", "host_slept", "wall_clock_set", "link_trouble", "notices_missed", "disk_trouble"),
+        *("marked", "order_overdue", "noticed", "check_begun", "cycle_interrupted"),
+    }
+)
+
+
+@dataclass(slots=True)
+class Expectation:
+    """One expectation of the sequence over all its judgements. `failures` are the first that did not hold."""
+
+    place: str
+    text: str
+    held: int = 0
+    failed: int = 0
+    least: float | None = None
+    most: float | None = None
+    last_found: str = ""
+    failures: list[Document] = field(default_factory=list)
+
+    @property
+    def judged(self) -> int:
+        """How often it was judged."""
+        return self.held + self.failed
+
+    @property
+    def what(self) -> str:
+        """What is measured, such as `speed of vent`."""
+        return self.text.partition(" is ")[0]
+
+    @property
+    def limit(self) -> str:
+        """What it must be, such as `38 rpm +- 10 % over 500 ms`."""
+        return self.text.partition(" is ")[2] or self.text
+
+    def take(self, event: Document) -> None:
+        """Count one judgement."""
+        value = event.get("value")
+        if isinstance(value, int | float):
+            self.least = value if self.least is None else min(self.least, value)
+            self.most = value if self.most is None else max(self.most, value)
+        self.last_found = str(event.get("found", ""))
+        if event.get("held"):
+            self.held += 1
+            return
+        self.failed += 1
+        if len(self.failures) < FAILURES_MAX:
+            self.failures.append(event)
+
+
+@dataclass(slots=True)
+class Facts:
+    """A run: its manifest, its bench where the copy can be read, and its events by kind.
+
+    `events` keeps the first KEPT_MAX of each kind that matters, `counts` counts all. `passes` are the begins of the
+    repeat that went on for longest, in s of the run, or of the cycles where there are any.
+    """
+
+    folder: Path
+    manifest: Document
+    bench: Bench | None = None
+    bench_trouble: str = ""
+    events: dict[str, list[Document]] = field(default_factory=dict)
+    counts: Counter[str] = field(default_factory=Counter)
+    expectations: dict[tuple[str, str], Expectation] = field(default_factory=dict)
+    passes: list[float] = field(default_factory=list)
+    cycles: list[Document] = field(default_factory=list)
+    notes: list[Document] = field(default_factory=list)
+    last_event: Document | None = None
+    torn_event_bytes: int = 0
+
+    def of(self, kind: str) -> list[Document]:
+        """The events of a kind that were kept, in order."""
+        return self.events.get(kind, [])
+
+    @property
+    def name(self) -> str:
+        """The run's folder name, its identifier."""
+        return str(self.manifest.get("run") or self.folder.name)
+
+    @property
+    def verdict(self) -> str:
+        """As `run.json` has it; `broken off` where the run never ended in order."""
+        if self.manifest.get("status") != "finished":
+            return "broken off"
+        return str(self.manifest.get("verdict") or "none")
+
+    @property
+    def parts(self) -> list[Document]:
+        """An entry for each part of the run; one where it was never gone on with."""
+        whole = dict(self.manifest) | {"samples_file": SAMPLES_FILE, "part": 1}
+        return list(self.manifest.get("parts") or [whole])
+
+    @property
+    def sample_files(self) -> list[Path]:
+        """The samples files that are there, in the order of the parts."""
+        names = [str(part.get("samples_file") or SAMPLES_FILE) for part in self.parts]
+        return [self.folder / name for name in names if (self.folder / name).is_file()]
+
+    @property
+    def tick_us(self) -> int:
+        """The board's tick."""
+        return int((self.manifest.get("clocks") or {}).get("tick_us") or 1000)
+
+    @property
+    def columns(self) -> list[str]:
+        """The columns of the samples."""
+        return [str(name) for name in self.manifest.get("columns") or []]
+
+    @property
+    def motors(self) -> list[str]:
+        """The motors in the order of their columns."""
+        return [name.removesuffix(".duty_pct") for name in self.columns if name.endswith(".duty_pct")]
+
+    @property
+    def servos(self) -> list[str]:
+        """The servos in the order of their columns."""
+        return [name.removesuffix(".pulse_us") for name in self.columns if name.endswith(".pulse_us")]
+
+    def motor_on(self, axis: int) -> str:
+        """The motor on an axis of the board, by its name."""
+        if self.bench is not None:
+            return next((motor.name for motor in self.bench.motors if motor.axis == axis), f"axis {axis}")
+        return self.motors[axis] if axis < len(self.motors) else f"axis {axis}"
+
+    @property
+    def limits(self) -> dict[tuple[str, int], int]:
+        """All limits of the board as the bench file asks for them, in protocol units; empty without its copy."""
+        if self.bench is None:
+            return {}
+        device = self.manifest.get("device") or {}
+        try:
+            return self.bench.limits(tick_us=self.tick_us, axes=device.get("axes"), servos=device.get("servos"))
+        except FileError:
+            return {}
+
+
+def gather(folder: Path) -> Facts:
+    """Read a run folder; raises RecordError where it is none."""
+    facts = Facts(folder, read_manifest(folder))
+    _read_bench(facts)
+    series: dict[str, list[float]] = {}
+    for event in lines_of(folder / EVENTS_FILE, facts):
+        _take(facts, event, series)
+    if series:
+        facts.passes = max(series.items(), key=lambda entry: (entry[0] == "cycle", entry[1][-1] - entry[1][0]))[1]
+    facts.cycles = list(lines_of(folder / CYCLES_FILE)) if (folder / CYCLES_FILE).is_file() else []
+    facts.notes = list(lines_of(folder / NOTES_FILE)) if (folder / NOTES_FILE).is_file() else []
+    return facts
+
+
+def lines_of(path: Path, facts: Facts | None = None) -> Iterator[Document]:
+    """The objects of a file of JSON lines, one after another; a torn last line is left out, and told to `facts`."""
+    try:
+        with open(path, "rb") as file:
+            for line in file:
+                if not line.endswith(b"\n"):
+                    if facts is not None:
+                        facts.torn_event_bytes = len(line)
+                    return
+                yield json.loads(line)
+    except (OSError, ValueError) as error:
+        raise RecordError(f"{path} cannot be read as an event log: {error}") from error
+
+
+def _take(facts: Facts, event: Document, series: dict[str, list[float]]) -> None:
+    kind = str(event.get("kind"))
+    facts.counts[kind] += 1
+    facts.last_event = event
+    if kind in KEPT_KINDS:
+        kept = facts.events.setdefault(kind, [])
+        if len(kept) < KEPT_MAX:
+            kept.append(event)
+    elif kind == "judged":
+        key = str(event.get("place")), str(event.get("expectation"))
+        facts.expectations.setdefault(key, Expectation(*key)).take(event)
+    if kind in ("pass_begun", "cycle_begun") and isinstance(event.get("time_s"), int | float):
+        begins = series.setdefault("cycle" if kind == "cycle_begun" else str(event.get("place")), [])
+        if len(begins) < PASSES_MAX:
+            begins.append(float(event["time_s"]))
+
+
+def _read_bench(facts: Facts) -> None:
+    entry = next((entry for entry in facts.manifest.get("inputs") or [] if entry.get("role") == "bench"), None)
+    if entry is None:
+        facts.bench_trouble = "the run folder has no copy of a bench file"
+        return
+    try:
+        facts.bench = bench_of_text((facts.folder / entry["file"]).read_text("utf-8"), str(entry["name"]))
+    except (OSError, ValueError, FileError) as error:
+        facts.bench_trouble = f"the copy of the bench file cannot be read: {error}"

@@ -1,0 +1,169 @@
+"""The report of a run as one self-contained HTML file.
+
+Its contents follow the list of ISO/IEC 17025:2017 clause 7.8.2 where it applies; clause letters are given from memory
+and the report claims no accreditation.
+"""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+
+from ramprig import __version__
+from ramprig.record.reading import Audit
+
+from . import page, plots, sections
+from .compare import compared
+from .digest import Digest
+from .explain import Explanation, view_of_trip
+from .facts import Facts
+
+ENTRIES = {
+    "lab": "laboratory and its address",
+    "customer": "customer and contact",
+    "item": "item tested, and how it is told apart",
+    "condition": "condition of the item",
+    "received": "date of receipt",
+    "environment": "environment",
+    "instruments": "instruments and their calibration",
+    "authorised": "authorised by",
+    "deviations": "deviations from the method",
+}
+"""What a person may enter for the report: name and meaning."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Read:
+    """One run, read whole: its facts, the digest of its samples, the audit of its account, and why it ended."""
+
+    facts: Facts
+    digest: Digest
+    audit: Audit
+    explanation: Explanation | None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Wish:
+    """What goes onto the paper besides the runs: `issued` is the time of writing, `entries` what people said."""
+
+    issued: str
+    entries: Mapping[str, str] = field(default_factory=dict)
+
+
+class _Figures:
+    """Numbers figures through the whole report."""
+
+    def __init__(self) -> None:
+        self._count = 0
+
+    def put(self, found: list[plots.Plot]) -> str:
+        parts = []
+        for plot in found:
+            self._count += 1
+            parts.append(page.figure(self._count, plot.caption, plot.svg))
+        return "".join(parts)
+
+
+def report_id(reads: list[Read]) -> str:
+    """Unique for these runs as they are: the name of the first and a hash of what `run.json` of each says."""
+    digest = hashlib.sha256()
+    for read in reads:
+        digest.update((read.facts.folder / "run.json").read_bytes())
+    more = f"+{len(reads) - 1}" if len(reads) > 1 else ""
+    return f"{reads[0].facts.name}{more} / {digest.hexdigest()[:12]}"
+
+
+def render(reads: list[Read], wish: Wish) -> str:
+    """The whole file for one run, or for several with what differs between them first."""
+    number_of = report_id(reads)
+    figures = _Figures()
+    title = f"Test report: {reads[0].facts.manifest.get('name') or reads[0].facts.name}"
+    if len(reads) > 1:
+        title = f"Comparison of {len(reads)} test runs"
+    parts = [_head(title, number_of, reads, wish)]
+    number = 1
+    if len(reads) > 1:
+        parts.append(page.section(number, "Conditions of the runs compared", number_of, compared(reads)))
+        number += 1
+    for read in reads:
+        prefix = f"{read.facts.name}: " if len(reads) > 1 else ""
+        for name, content in _parts_of(read, wish, figures):
+            parts.append(page.section(number, prefix + name, number_of, content))
+            number += 1
+    parts.append(page.section(number, "What this report holds of clause 7.8.2", number_of, sections.clauses(wish.entries)))
+    parts.append(_end(number_of))
+    return page.page(title, number_of, "\n".join(parts))
+
+
+def _head(title: str, number_of: str, reads: list[Read], wish: Wish) -> str:
+    verdicts = "".join(_verdict(read, named=len(reads) > 1) for read in reads)
+    return (
+        '<header><p class="kicker">ramprig '
+        f"{__version__} &middot; motor bench</p><h1>{page.text(title)}</h1>"
+        f'<p class="id">report {page.text(number_of)}<br>issued {page.text(wish.issued)}</p></header>{verdicts}'
+    )
+
+
+def _verdict(read: Read, *, named: bool) -> str:
+    facts = read.facts
+    word = facts.verdict
+    kind = "passed" if word == "passed" else "bad"
+    mark = "&#10003;" if word == "passed" else "&#10007;"
+    lines = [f'<p class="word">{mark} {page.text(word)}</p>', f"<p>{page.text(facts.manifest.get('stop_reason'))}</p>"]
+    if named:
+        lines.insert(0, f'<p class="id" style="text-align:left">{page.text(facts.name)}</p>')
+    if read.explanation is not None and read.explanation.likely is not None:
+        likely = read.explanation.likely
+        sentence = likely.sentence[0].upper() + likely.sentence[1:]
+        lines.insert(0, f"<p><strong>Likely cause: {page.text(sentence)}.</strong></p>")
+        lines.append(f"<p>Because: {page.text('; '.join(likely.evidence))}.</p>")
+        lines.append(f"<p>Next: {page.text(likely.next_step)}</p>")
+        others = [cause.sentence for cause in read.explanation.causes[1:3] if cause.weight >= 0.25]
+        if others:
+            lines.append(f'<p class="note">Less likely: {page.text("; or ".join(others))}.</p>')
+    return f'<div class="verdict {kind}">{"".join(lines)}</div>'
+
+
+def _parts_of(read: Read, wish: Wish, figures: _Figures) -> list[tuple[str, str]]:
+    """The parts of one run: name and content."""
+    facts, digest = read.facts, read.digest
+    found = [
+        ("Item, rig and environment", sections.item_and_rig(facts, wish.entries)),
+        ("Method", sections.method(facts)),
+        ("Results", sections.results(facts) + _ranges(digest)),
+        ("Deviations and interruptions", sections.interruptions(facts, digest, wish.entries)),
+        ("Account of the samples", sections.account(facts, read.audit)),
+        ("Protections", sections.protections(facts)),
+    ]
+    trip = view_of_trip(facts)
+    if trip is not None:
+        found.insert(0, ("Record around the trip", figures.put(plots.trip_record(*trip))))
+    pictures = figures.put(plots.against_time(facts, digest))
+    found.append(("Against time", pictures or page.paragraph("There are no samples to draw.", kind="note")))
+    for name, pictures in (
+        ("Cycle over cycle", figures.put([*plots.overlays(facts, digest), *plots.by_cycle(facts, digest)])),
+        ("Duty to speed", figures.put(plots.curves(facts, digest))),
+    ):
+        if pictures:
+            found.append((name, pictures))
+    return found
+
+
+def _ranges(digest: Digest) -> str:
+    rows = []
+    for column, (low, mean, high) in digest.totals.items():
+        name, unit = plots.label_of(column)
+        rows.append([page.text(name), f"{low:.4g}", f"{mean:.4g}", f"{high:.4g}", page.text(unit)])
+    if not rows:
+        return ""
+    heads = ["over the whole run", "least", "mean", "greatest", "unit"]
+    return "<h3>Range of each quantity</h3>" + page.table(heads, rows, numbers=(1, 2, 3))
+
+
+def _end(number_of: str) -> str:
+    return (
+        '<div class="end"><p style="max-width:none">The results relate only to the items tested, in the condition and '
+        "under the conditions told above.<br>This report is to be passed on whole.</p>"
+        f'<p class="id" style="text-align:center;max-width:none">End of report {page.text(number_of)}</p></div>'
+    )
