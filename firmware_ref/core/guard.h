@@ -54,6 +54,9 @@ bool rr_guard_persists(const struct rr_guard *guard, const struct rr_guard_limit
                        int32_t current_ma);
 
 /* The gain of the thermal model for a time constant in s. */
+/*@ requires 1 <= thermal_s;
+    assigns \nothing;
+*/
 uint32_t rr_guard_gain(uint16_t thermal_s);
 
 /* Notes a finding if its trip has a lower number than the one held. */
