@@ -17,8 +17,13 @@ from ramprig.errors import LinkLost, WrongDevice
 from ramprig.measure.diagnosis import Bring, Case, Push, Rest, Verdict, judge
 from ramprig.measure.procedures.wiring import CEILING_DUTY, SPEED_SHARE, Wiring
 from ramprig.measure.refusal import NotMeasurable
+from ramprig.measure.running import MeasureWish, measure
+from ramprig.mock.core import why_not
+from ramprig.mock.core.device import SimulatedDevice
+from ramprig.mock.core.url import CorePort
 from ramprig.mock.device import MockDevice
 from ramprig.mock.faults import FAULTS
+from ramprig.mock.from_bench import setup_of_bench
 from ramprig.mock.setup import MockSetup
 from ramprig_link.words import Cause
 from sequence_rig import small_bench
@@ -70,6 +75,16 @@ def test_each_fault_gets_its_own_verdict(fault: str) -> None:
         done = checked(fault, seed)
         assert done.findings.facts["case"] == VERDICTS[fault].name.lower(), (seed, done.findings)
         assert done.findings.good == (VERDICTS[fault] is Case.GOOD)
+
+
+@pytest.mark.skipif(why_not() is not None, reason=why_not() or "")
+@pytest.mark.parametrize("fault", ["", "leads_swapped", "encoder_dead", "one_channel", "lead_open", "jammed_shaft"])
+def test_the_firmware_core_gets_the_same_verdicts(fault: str) -> None:
+    bench = drawn_bench(11).bench
+    device = SimulatedDevice(setup_of_bench(bench, faults=(fault,) if fault else ()), seed=11)
+    port = CorePort(device, pace="virtual", seed=11)
+    done = measure(Wiring(motor="vent"), bench, port, MeasureWish(seed=11, virtual=True))
+    assert done.findings.facts["case"] == VERDICTS[fault].name.lower()
 
 
 @pytest.mark.soak
