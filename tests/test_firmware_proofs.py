@@ -12,10 +12,10 @@ import subprocess
 from pathlib import Path
 
 import pytest
-
-import core_device
 import toolchain
 from dev import fuzz, proof_builds, prove
+
+import core_device
 from test_vectors_exchanges import VECTORS, differences
 
 WRONG_TOOLS = prove.missing_tools()
@@ -61,6 +61,8 @@ PROVED = {
     "STOP_NEVER_CUT": ("latch", "rr_latch_stop_is_over"),
     "TRIP_CLEARS_ITSELF": ("latch", "rr_latch_off"),
     "SERVO_PAST_ITS_END": ("servo", "rr_servo_step_ns"),
+    "OVERCURRENT_LATE": ("guard", "judge_current"),
+    "SQUARE_IN_INT": ("guard", "judge_heat"),
 }
 
 # A vector of protocol/vectors/exchanges.json that the core with the bug answers otherwise.
@@ -70,7 +72,8 @@ EXCHANGED = {
     "START_UNGUARDED": "disarm: refused for a demand that the dwell lock holds back",
     "DWELL_FROM_COMMAND": "the dwell lock: the other sign only after dwell_ticks at zero",
     "STANDSTILL_IGNORED": "the lock waits for standstill too",
-    "REPEAT_RENEWS": "every new request renews the lease, a refused one too; a repeat, a garbled line and a bare one do not",
+    "REPEAT_RENEWS": "every new request renews the lease, a refused one too; "
+    "a repeat, a garbled line and a bare one do not",
     "LEASE_FORGOTTEN": "bare who renews nothing",
     "STOP_NEVER_CUT": "a category 1 stop lasts stop_ticks at most",
     "TRIP_CLEARS_ITSELF": "bare who renews nothing",
