@@ -6,8 +6,8 @@
 
 Prints goals proved and in all for each part, and names each goal that is not proved. Exit status 0 where all are
 proved, 1 where one is not, 2 where the tools are missing or of another version than the contracts were proved with:
-then nothing is counted as proved. Which functions are proved is the list `PARTS` here; firmware_ref/proofs/README.md says what that
-means, and what is not proved.
+then nothing is counted as proved. Which functions are proved is the list `PARTS` here; firmware_ref/proofs/README.md
+says what that means, and what is not proved.
 """
 
 from __future__ import annotations
