@@ -1,9 +1,9 @@
 /* Stops and trips: how the outputs go off and what latches (SPEC STOP-1 to STOP-6, TRIP-1, TRIP-2). */
 #include "device.h"
 
+/* The queue is empty with the state: it is there in `armed` only, and `arm` begins it. Its memory may hold a trail now. */
 static void end_orders(struct rr_device *device)
 {
-    device->u.orders.count = 0;
     for (uint8_t i = 0; i < RR_AXES; i++) {
         rr_glide_end(&device->axis[i].demand, 0);
     }
