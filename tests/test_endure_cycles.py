@@ -92,7 +92,7 @@ def test_on_interruption_says_how_often_a_run_goes_on(
     tmp_path: Path, text: str, resumes: int, within_s: int, *, after_trip: bool
 ) -> None:
     policy = sequence_of(tmp_path, cycle("times: 2"), head=f"on interruption: {text}\n").interruptions
-    assert (policy.resumes, policy.within_s, policy.after_trip) == (resumes, within_s, after_trip)
+    assert (policy.resumes, float(policy.within_s), policy.after_trip) == (resumes, within_s, after_trip)
     assert policy.said
 
 

@@ -60,6 +60,8 @@ def test_a_lost_link_or_a_restart_is_gone_on_with_by_itself_where_the_sequence_s
     replug(host)
     result = host.run(Process())
     assert result.outcome.verdict is Verdict.PASSED, result.outcome
+    assert result.outcome.sentence.endswith(f"; interrupted 1 time: {cause}")
+    assert read_manifest(host.run_folder)["stop_reason"] == result.outcome.sentence
     assert host.opened >= 2
     folder = host.run_folder
     (told,) = read_manifest(folder)["interruptions"]

@@ -53,8 +53,8 @@ class _Lock(Protocol):
 
 def _lock() -> _Lock:
     """A lock against sleep that lets the screen go dark. Raises PackageMissing."""
-    keep = need("wakepy.keep", purpose="keeping the computer awake")
-    return cast("_Lock", keep.running(on_fail="pass"))
+    wakepy = need("wakepy", purpose="keeping the computer awake")
+    return cast("_Lock", wakepy.keep.running(on_fail="pass"))
 
 
 @contextmanager

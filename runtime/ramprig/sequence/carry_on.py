@@ -60,3 +60,14 @@ def end_latch(session: Session, carry_on: CarryOn, rig: Rig) -> None:
     if trip.trip not in carry_on.forgiven:
         raise Refused("resume", trip.trip, f"the device is tripped: {explain_trip(trip, rig)}; look at the bench first")
     session.clear()
+
+
+def told_breaks(carry_on: CarryOn) -> str:
+    """How often the run was interrupted and by what, for the end of its last sentence."""
+    breaks = [*carry_on.manifest.get("interruptions", []), carry_on.interruption]
+    counts: dict[str, int] = {}
+    for each in breaks:
+        cause = str(each.get("cause"))
+        counts[cause] = counts.get(cause, 0) + 1
+    causes = ", ".join(cause if count == 1 else f"{cause} ({count} times)" for cause, count in counts.items())
+    return f"; interrupted {len(breaks)} {'time' if len(breaks) == 1 else 'times'}: {causes}"

@@ -10,7 +10,7 @@ from pathlib import Path
 from ramprig.bench import Bench
 from ramprig.errors import RecordError
 from ramprig.port.base import Port
-from ramprig.port.clock import Clock
+from ramprig.port.clock import Clock, VirtualClock
 from ramprig.record.events import Json, jsonable, rfc3339
 from ramprig.record.folder import InputFile, RunDescription, RunFolder
 from ramprig.record.manifest import Anchor, RunEnd
@@ -22,7 +22,7 @@ from ramprig.session.opening import Wanted
 from ramprig.session.readings import Identity
 from ramprig.session.session import Session
 
-from .carry_on import CarryOn, check_same, end_latch
+from .carry_on import CarryOn, check_same, end_latch, told_breaks
 from .columns import bench_columns
 from .compile import compile_plan
 from .cycle_run import CycleBook, RunSoFar
@@ -183,6 +183,8 @@ def run_on_session(
             bounds=bounds,
         )
         outcome = _explained(outcome, troubles, asked_by)
+        if carry_on is not None:
+            outcome = replace(outcome, sentence=outcome.sentence + told_breaks(carry_on))
         folder = recorder.finish(_end_of(session, plan, outcome, clock))
     return RunResult(outcome=outcome, folder=folder)
 
@@ -267,8 +269,8 @@ def _recorder(what: Recorded, session: Session, clock: Clock, on_trouble: Callab
         tick_us=session.identity.tick_us,
         clock=clock,
         on_trouble=on_trouble,
-        threaded=not what.virtual,
-        durable=what.durable,
+        threaded=not (what.virtual or isinstance(clock, VirtualClock)),  # a virtual clock does not wait for a thread
+        durable=not what.virtual if what.durable is None else what.durable,
         limits_digest=session.limits.digest,
     )
 
