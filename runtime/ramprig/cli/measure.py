@@ -25,10 +25,12 @@ if TYPE_CHECKING:
 WHAT = {
     "wiring": "bring-up check: is the motor wired as the bench file says, and if not, what is wrong",
     "curve": "duty to speed, both ways, up and down: dead band, hysteresis, linear range, no-load current",
+    "constants": "resistance, motor constant, friction, inertia, inductance: one fit over pulses, levels and run-downs",
     "coastdown": "how the shaft runs down with the bridge off: friction over inertia",
     "backlash": "lost motion at reversal",
     "servo": "positioning, timing and end stops of a servo",
     "link": "round trip, latency grid, clock drift, byte errors with the motor off and on",
+    "pwm": "ripple, resolution, audibility and dead-time error against the PWM frequency; reckoned, nothing moves",
 }
 OF_THE_MODEL = "A rehearsal measures the model that the bench file describes: it says nothing of the real bench."
 
@@ -62,8 +64,25 @@ def declare(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--repeats", type=int, metavar="N", help="how often, where it repeats something")
     parser.add_argument("--clamped", action="store_true", help="backlash: the output shaft is clamped fast")
     parser.add_argument("--second", metavar="NAME", help="a motor entry whose encoder sits on the output or the horn")
+    parser.add_argument(
+        "--scale-error",
+        type=float,
+        default=0.0,
+        metavar="PERCENT",
+        help="constants: standard uncertainty of the scales of current and supply (default: 0, taken as exact)",
+    )
+    declare_pwm(parser)
     parser.add_argument("--creep", action="store_true", help="servo: creep towards the end stops and find them")
     parser.epilog = EPILOG
+
+
+def declare_pwm(parser: argparse.ArgumentParser) -> None:
+    """What the PWM adviser is told of the board."""
+    parser.add_argument("--frequency", type=float, metavar="HZ", help="pwm: the frequency that the board has now")
+    parser.add_argument("--clock", type=float, default=16e6, metavar="HZ", help="pwm: of the timer (default: 16e6)")
+    parser.add_argument("--dead-time", type=float, default=0.0, metavar="NS", help="pwm: dead time of a leg")
+    parser.add_argument("--centred", action="store_true", help="pwm: a timer that counts up and down")
+    parser.add_argument("--bipolar", action="store_true", help="pwm: both legs switch, locked in antiphase")
 
 
 def carry_out(args: argparse.Namespace) -> int:
@@ -72,6 +91,8 @@ def carry_out(args: argparse.Namespace) -> int:
     from ramprig.measure.bench_entry import save
 
     bench = load_bench(args.bench)
+    if args.what == "pwm":
+        return _advise(args, bench)
     if args.save and args.no_record:
         raise UsageError("--save needs the run folder to refer to: leave --no-record out")
     procedure = procedure_of(args, bench)
@@ -106,6 +127,10 @@ def procedure_of(args: argparse.Namespace, bench: Bench) -> Procedure:
             from ramprig.measure.procedures.curve import Curve
 
             return Curve(motor=_motor(args, bench), **repeats)
+        case "constants":
+            from ramprig.measure.procedures.constants import Constants
+
+            return Constants(motor=_motor(args, bench), scale_u=args.scale_error / 100.0, **repeats)
         case "coastdown":
             from ramprig.measure.procedures.coastdown import CoastDown
 
@@ -124,6 +149,32 @@ def procedure_of(args: argparse.Namespace, bench: Bench) -> Procedure:
 
             motor = args.motor or (bench.motors[0].name if len(bench.motors) == 1 else None)
             return LinkCheck(motor=None if motor is None else bench.motor(motor).name)
+
+
+def _advise(args: argparse.Namespace, bench: Bench) -> int:
+    """The PWM adviser: no port, no run folder; its plot goes into the folder of run folders."""
+    from ramprig.measure.procedures.pwm import PwmWish, advise, write
+
+    if args.save:
+        raise UsageError("pwm measures nothing that could be saved")
+    wish = PwmWish(
+        motor=_motor(args, bench),
+        frequency_hz=args.frequency,
+        clock_hz=args.clock,
+        dead_time_s=args.dead_time / 1e9,
+        centred=args.centred,
+        bipolar=args.bipolar,
+    )
+    findings = advise(bench, wish)
+    if args.json:
+        say_surely(json.dumps(findings.to_json(), ensure_ascii=False, allow_nan=False, indent=2))
+    else:
+        for line in findings.text():
+            say_surely(line)
+    if not args.no_record:
+        for path in write(findings, args.runs, tell=tell):
+            tell(f"written: {path}")
+    return 0
 
 
 def _motor(args: argparse.Namespace, bench: Bench) -> str:
