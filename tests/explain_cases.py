@@ -5,6 +5,7 @@ from __future__ import annotations
 import random
 import re
 from collections.abc import Callable
+from contextlib import AbstractContextManager, nullcontext
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -92,104 +93,141 @@ def _break(device: MockDevice, port: MockPort, session: Session) -> None:
     port.send_break()
 
 
-TIGHT = (("current: {at most: 2.5 A, for: 5 ms}", "current: {at most: 950 mA, for: 5 ms}"),)
-STEEP = (*TIGHT, ("slew: 100 %/s", "slew: 2000 %/s"))
-QUICK_FALL = (*TIGHT, ("fall: 200 %/s", "fall: 2000 %/s"))
+Change = tuple[str, str]
+
+TIGHT: Change = ("current: {at most: 2.5 A, for: 5 ms}", "current: {at most: 950 mA, for: 5 ms}")
+STEEP: Change = ("slew: 100 %/s", "slew: 2000 %/s")
+QUICK_FALL: Change = ("fall: 200 %/s", "fall: 2000 %/s")
+SHORT_HEAT: Change = ("time constant: 60 s", "time constant: 1 s")
+RATED_LOW: Change = ("rated: {current: 900 mA", "rated: {current: 60 mA")
+STICKY: tuple[Change, ...] = (
+    ("stall: {duty: 15 %", "stall: {duty: 1 %"),
+    ("breakaway friction: 2.2 mN m", "breakaway friction: 14 mN m"),
+    ("running friction: 1.5 mN m", "running friction: 10 mN m"),
+)
+NO_SINK: tuple[Change, ...] = (("can sink: yes", "can sink: no"), ("fall: 200 %/s", "fall: 400 %/s"))
 MANY = "\n".join(["- ramp: {motor: vent, to: 60 %, in: 700 ms}", "- ramp: {motor: vent, to: 40 %, in: 300 ms}"] * 6)
-NO_SINK = (("can sink: yes", "can sink: no"), ("fall: 200 %/s", "fall: 400 %/s"))
+
+
+def allowed(least: str, most: str) -> Change:
+    return "allowed: 9 V to 16 V", f"allowed: {least} V to {most} V"
+
+
+def volts(value: str) -> Change:
+    return "voltage: 12 V", f"voltage: {value} V"
+
+
+def run_and_stop(duty: int, fall_ms: int) -> str:
+    return (
+        f"- ramp: {{motor: vent, to: {duty} %, in: 900 ms}}\n- hold: 1500 ms\n"
+        f"- ramp: {{motor: vent, to: 0 %, in: {fall_ms} ms}}\n- hold: 2 s"
+    )
+
+
+@dataclass(frozen=True)
+class Draw:
+    """What is drawn at random for every case."""
+
+    rng: Random
+    duty: int
+    ramp_ms: int
+    at_s: float
+
+    def lasting(self, truth: str, fault: str, *changes: Change) -> Case:
+        return Case(truth, faults=(fault,), duty=self.duty, ramp_ms=self.ramp_ms, change=changes)
+
+    def later(self, truth: str, fault: str, *, hold_ms: int = 3000) -> Case:
+        return Case(truth, later=(fault,), at_s=self.at_s, duty=self.duty, ramp_ms=self.ramp_ms, hold_ms=hold_ms)
+
+    def changed(self, truth: str, *changes: Change, real: tuple[Change, ...] = (), hold_ms: int = 3000) -> Case:
+        return Case(truth, change=changes, real=real, duty=self.duty, ramp_ms=self.ramp_ms, hold_ms=hold_ms)
+
+    def doing(self, truth: str, act: Callable[[MockDevice, MockPort, Session], None]) -> Case:
+        return Case(truth, duty=self.duty, ramp_ms=self.ramp_ms, meddle=_once(self.at_s, act))
+
+    def either(self, *choices: str) -> str:
+        return self.rng.choice(choices)
+
+
+def _inrush(draw: Draw) -> Case:
+    duty = draw.rng.choice((60, 65, 70)) * draw.rng.choice((1, -1))
+    return Case("inrush", change=(TIGHT, STEEP), duty=duty, ramp_ms=draw.rng.choice((50, 60, 80)))
+
+
+def _dead_band(draw: Draw) -> Case:
+    return Case("dead_band", change=STICKY, duty=draw.rng.choice((6, 8, 10, 12)) * draw.rng.choice((1, -1)))
+
+
+def _overspeed(draw: Draw) -> Case:
+    limit = ("      duty: 80 %", f"      speed: {draw.either('20', '25', '30')} rpm\n      duty: 80 %")
+    return Case("limit_low", change=(limit,), duty=draw.rng.choice((60, 65, 70)), ramp_ms=900)
+
+
+def _regeneration(draw: Draw) -> Case:
+    change = (*NO_SINK, allowed("9", draw.either("12.6", "12.8", "13")))
+    return Case("regeneration", change=change, steps=run_and_stop(75, 200))
+
+
+def _sag(draw: Draw) -> Case:
+    change = (("slew: 100 %/s", "slew: 1000 %/s"), ("voltage: 12 V\n", "voltage: 12 V\n  trip after: 2 ms\n"))
+    fault = f"weak_supply={draw.rng.randrange(90, 160)}"
+    return Case("sag", faults=(fault,), change=change, duty=draw.duty, ramp_ms=80)
+
+
+def _noise(draw: Draw) -> Case:
+    rate = 10 ** draw.rng.uniform(-1.6, -0.8)
+    return draw.later("noise", f"{draw.either('bit_errors', 'dropped_bytes')}={rate:.3g}")
+
+
+def _hang_late(draw: Draw) -> Case:
+    act = _once(draw.at_s, _hang(draw.rng.uniform(1.6, 3.0)))
+    return Case("host_hung", change=(("lease: 500 ms", "lease: 4 s"),), steps=MANY, meddle=act)
+
+
+MAKERS: dict[str, Callable[[Draw], Case]] = {
+    "jam": lambda draw: draw.later("jam", "jammed_shaft"),
+    "held": lambda draw: draw.lasting("held", "jammed_shaft"),
+    "encoder_dead": lambda draw: draw.lasting("encoder_dead", "encoder_dead"),
+    "encoder_dies": lambda draw: draw.later("encoder_dead", "encoder_dead"),
+    "one_channel": lambda draw: draw.lasting("one_channel", "one_channel"),
+    "open_lead": lambda draw: draw.lasting("open_lead", "lead_open"),
+    "lead_comes_off": lambda draw: draw.later("open_lead", "lead_open", hold_ms=8000),
+    "leads": lambda draw: draw.lasting("swapped", "leads_swapped"),
+    "phases": lambda draw: draw.lasting("swapped", "phases_swapped"),
+    "exchanged": lambda draw: draw.lasting("encoders_exchanged", "encoders_exchanged"),
+    "sensor": lambda draw: draw.lasting("current_sensor", f"current_offset={draw.rng.randrange(2600, 4000)}"),
+    "sensor_overload": lambda draw: draw.lasting(
+        "current_sensor", f"current_offset={draw.rng.randrange(1000, 1800)}", SHORT_HEAT
+    ),
+    "overload": lambda draw: draw.changed("overload", RATED_LOW, SHORT_HEAT, hold_ms=6000),
+    "inrush": _inrush,
+    "braking": lambda draw: Case("braking", change=(TIGHT, QUICK_FALL), steps=run_and_stop(abs(draw.duty), 40)),
+    "dead_band": _dead_band,
+    "overspeed": _overspeed,
+    "regeneration": _regeneration,
+    "supply_high": lambda draw: draw.changed(
+        "supply_high", allowed("9", "13"), real=(volts(draw.either("13.2", "13.6", "14")),)
+    ),
+    "supply_low": lambda draw: draw.changed("supply_low", real=(volts(draw.either("6", "7.5", "8.6")),)),
+    "sag": _sag,
+    "brownout": lambda draw: draw.lasting("brownout", f"brownout_on_start={draw.rng.randrange(3, 60)}"),
+    "unplug": lambda draw: draw.later("unplugged", "unplug"),
+    "deaf": lambda draw: draw.later("silent", "deaf"),
+    "noise": _noise,
+    "hang": lambda draw: draw.doing("host_hung", _hang(draw.rng.uniform(0.8, 3.0))),
+    "hang_late": _hang_late,
+    "line_break": lambda draw: draw.doing("line_break", _break),
+    "user": lambda draw: draw.doing("user", _panic),
+    "other_board": lambda draw: draw.later("other_board", "second_board"),
+}
+"""A case of each kind, its strengths drawn at random."""
 
 
 def case_of(kind: str, rng: Random) -> Case:
     """A case of this kind with duty, times and strengths drawn at random."""
     duty = rng.randrange(40, 75, 5) * rng.choice((1, -1))
-    ramp_ms = rng.randrange(400, 900, 100)
-    at_s = rng.uniform(1.4, 2.6)
-    common = {"duty": duty, "ramp_ms": max(ramp_ms, abs(duty) * 10 + 10)}
-    match kind:
-        case "jam":
-            return Case("jam", later=("jammed_shaft",), at_s=at_s, **common)
-        case "held":
-            return Case("held", faults=("jammed_shaft",), **common)
-        case "encoder_dead":
-            return Case("encoder_dead", faults=("encoder_dead",), **common)
-        case "encoder_dies":
-            return Case("encoder_dead", later=("encoder_dead",), at_s=at_s, **common)
-        case "one_channel":
-            return Case("one_channel", faults=("one_channel",), **common)
-        case "open_lead":
-            return Case("open_lead", faults=("lead_open",), **common)
-        case "lead_comes_off":
-            return Case("open_lead", later=("lead_open",), at_s=at_s, hold_ms=8000, **common)
-        case "leads":
-            return Case("swapped", faults=("leads_swapped",), **common)
-        case "phases":
-            return Case("swapped", faults=("phases_swapped",), **common)
-        case "exchanged":
-            return Case("encoders_exchanged", faults=("encoders_exchanged",), **common)
-        case "sensor":
-            return Case("current_sensor", faults=(f"current_offset={rng.randrange(2600, 4000)}",), **common)
-        case "sensor_overload":
-            slow = (("time constant: 60 s", "time constant: 1 s"),)
-            return Case("current_sensor", faults=(f"current_offset={rng.randrange(1000, 1800)}",), change=slow,
-                        **common)  # fmt: skip
-        case "overload":
-            rated = (("rated: {current: 900 mA", "rated: {current: 60 mA"), ("time constant: 60 s", "time constant: 1 s"))
-            return Case("overload", change=rated, hold_ms=6000, **common)
-        case "inrush":
-            return Case("inrush", change=STEEP, duty=duty, ramp_ms=rng.choice((50, 60, 80)))
-        case "dead_band":
-            low = (("stall: {duty: 15 %", "stall: {duty: 1 %"), ("breakaway friction: 2.2 mN m", "breakaway friction: 14 mN m"),
-                   ("running friction: 1.5 mN m", "running friction: 10 mN m"))  # fmt: skip
-            return Case("dead_band", change=low, duty=rng.choice((6, 8, 10, 12)) * rng.choice((1, -1)))
-        case "overspeed":
-            low_rpm = rng.choice((20, 25, 30))
-            limit = (("      duty: 80 %", f"      speed: {low_rpm} rpm\n      duty: 80 %"),)
-            return Case("limit_low", change=limit, duty=rng.choice((60, 65, 70)), ramp_ms=900)
-        case "regeneration":
-            more = (("allowed: 9 V to 16 V", f"allowed: 9 V to {rng.choice(('12.6', '12.8', '13'))} V"),)
-            steps = "- ramp: {motor: vent, to: 75 %, in: 900 ms}\n- hold: 1500 ms\n- ramp: {motor: vent, to: 0 %, in: 200 ms}\n- hold: 2 s"
-            return Case("regeneration", change=(*NO_SINK, *more), steps=steps)
-        case "supply_high":
-            return Case("supply_high", change=(("allowed: 9 V to 16 V", "allowed: 9 V to 13 V"),),
-                        real=(("voltage: 12 V", f"voltage: {rng.choice(('13.2', '13.6', '14'))} V"),), **common)  # fmt: skip
-        case "supply_low":
-            return Case("supply_low", real=(("voltage: 12 V", f"voltage: {rng.choice(('6', '7.5', '8.6'))} V"),), **common)
-        case "sag":
-            steep = (("slew: 100 %/s", "slew: 1000 %/s"), ("voltage: 12 V\n", "voltage: 12 V\n  trip after: 2 ms\n"))
-            return Case("sag", faults=(f"weak_supply={rng.randrange(60, 140)}",), change=steep, duty=duty, ramp_ms=80)
-        case "brownout":
-            return Case("brownout", faults=(f"brownout_on_start={rng.randrange(3, 60)}",), **common)
-        case "unplug":
-            return Case("unplugged", later=("unplug",), at_s=at_s, **common)
-        case "deaf":
-            return Case("silent", later=("deaf",), at_s=at_s, **common)
-        case "noise":
-            rate = 10 ** rng.uniform(-1.6, -0.8)
-            return Case("noise", later=(f"{rng.choice(('bit_errors', 'dropped_bytes'))}={rate:.3g}",), at_s=at_s,
-                        **common)  # fmt: skip
-        case "hang":
-            return Case("host_hung", meddle=_once(at_s, _hang(rng.uniform(0.8, 3.0))), **common)
-        case "hang_late":
-            return Case("host_hung", change=(("lease: 500 ms", "lease: 4 s"),), steps=MANY,
-                        meddle=_once(at_s, _hang(rng.uniform(1.6, 3.0))))  # fmt: skip
-        case "braking":
-            steps = f"- ramp: {{motor: vent, to: {abs(duty)} %, in: 900 ms}}\n- hold: 1500 ms\n- ramp: {{motor: vent, to: 0 %, in: 40 ms}}\n- hold: 2 s"
-            return Case("braking", change=QUICK_FALL, steps=steps)
-        case "line_break":
-            return Case("line_break", meddle=_once(at_s, _break), **common)
-        case "user":
-            return Case("user", meddle=_once(at_s, _panic), **common)
-        case "other_board":
-            return Case("other_board", later=("second_board",), at_s=at_s, **common)
-    raise AssertionError(kind)
-
-
-KINDS = (
-    *("jam", "held", "encoder_dead", "encoder_dies", "one_channel", "open_lead", "lead_comes_off", "leads", "phases"),
-    *("exchanged", "sensor", "sensor_overload", "overload", "inrush", "dead_band", "overspeed", "regeneration"),
-    *("supply_high", "supply_low", "sag", "brownout", "unplug", "deaf", "noise", "hang", "hang_late", "braking", "line_break", "user"),
-    "other_board",
-)
+    ramp_ms = max(rng.randrange(400, 900, 100), abs(duty) * 10 + 10)
+    return MAKERS[kind](Draw(rng, duty, ramp_ms, rng.uniform(1.4, 2.6)))
 
 
 def run_case(folder: Path, case: Case, *, seed: int) -> tuple[RunResult, Explanation | None]:
@@ -209,14 +247,12 @@ def run_case(folder: Path, case: Case, *, seed: int) -> tuple[RunResult, Explana
             if meddle is not None:
                 meddle(now, device, port, sessions[0])
 
-    def guard(session: Session) -> Session:
+    def guard(session: Session) -> AbstractContextManager[object]:
         sessions.append(session)
-        from contextlib import nullcontext
-
-        return nullcontext(session)  # type: ignore[return-value]  # run_sequence only enters and leaves it
+        return nullcontext()
 
     wish = RunWish(sequence=read_sequence(path), bench=bench, runs=folder / "runs", virtual=True, seed=seed)
-    result = run_sequence(wish, port, progress=progress, guard=guard)  # type: ignore[arg-type]  # as above
+    result = run_sequence(wish, port, progress=progress, guard=guard)
     assert result.folder is not None
     return result, explain_folder(result.folder)
 

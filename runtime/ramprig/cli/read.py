@@ -23,10 +23,15 @@ def declare(parser: argparse.ArgumentParser) -> None:
 
 
 def carry_out(args: argparse.Namespace) -> int:
-    """Print what the folder says and what it holds."""
+    """Print why the run ended as it did, unless it passed, then what the folder says and what it holds."""
     from ramprig.record.reading import audit, read_manifest
+    from ramprig.report.explain import explain_folder
 
     manifest = read_manifest(args.run)
+    explanation = explain_folder(args.run)
+    if explanation is not None:
+        for line in [*explanation.lines(), ""]:
+            say(line)
     found = audit(args.run)
     for line in [*summary(manifest, found), *note_lines(args.run)]:
         say(line)

@@ -9,7 +9,7 @@ from ramprig.cli.say import say, tell
 from ramprig.errors import UsageError
 
 EPILOG = """The files go into the run's folder; for several runs into the folder they lie in, or --out. An entry puts
-what only people know into the report, such as --entry item='vent 12 V, no. 0042' --entry environment='22 degC, 40 %'."""
+what only people know into the report, such as --entry item='vent, no. 42' --entry environment='22 degC, 40 %'."""
 
 
 def declare(parser: argparse.ArgumentParser) -> None:

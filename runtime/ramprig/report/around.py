@@ -155,7 +155,7 @@ class Around:
         return float(found[-1]) if len(found) else math.nan
 
     def locked_current(self, duty: float | None = None) -> float:
-        """What would flow at this duty (the present one) with the shaft held, A, from the bench's model; NaN without."""
+        """What would flow at this duty (the present one) with the shaft held, A; NaN without a model."""
         if self.locked_ohm is None:
             return math.nan
         share = self.duty_now if duty is None else duty
@@ -235,9 +235,7 @@ def _trail_of(folder: Path, motor: str, tick: int) -> Piece | None:
     return None
 
 
-def _joined(
-    times: Floats, tail: Piece, trail: Piece | None, tick: int, tick_us: int
-) -> Callable[[str | None], Floats]:
+def _joined(times: Floats, tail: Piece, trail: Piece | None, tick: int, tick_us: int) -> Callable[[str | None], Floats]:
     """A way to get a column by name (None: the times) of the samples before the trail, the trail, and those after."""
     if trail is None:
         return lambda name: times if name is None else tail.numbers.get(name, np.full(len(times), np.nan))

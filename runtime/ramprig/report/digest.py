@@ -113,6 +113,8 @@ def digest_samples(facts: Facts) -> Digest:
     for path in facts.sample_files:
         scan = Scan(path, columns=("time_s", *columns))
         for piece in scan:
+            for servo in facts.servos:
+                _blank_zero(piece.numbers[f"{servo}.pulse_us"])
             times = piece.numbers["time_s"] + offset_s
             if digest.rows and times[0] <= digest.last_s:
                 offset_s += digest.last_s - float(times[0]) + 0.001  # ticks that begin anew must not run backwards
@@ -125,6 +127,11 @@ def digest_samples(facts: Facts) -> Digest:
     digest.intervals = table.rows()
     digest.totals = table.totals()
     return digest
+
+
+def _blank_zero(pulses: Floats) -> None:
+    """A servo without pulses stands nowhere."""
+    pulses[pulses == 0] = math.nan
 
 
 def _take(digest: Digest, table: _IntervalTable, times: Floats, piece: Piece) -> None:

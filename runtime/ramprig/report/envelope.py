@@ -47,7 +47,7 @@ class Envelope:
         shape = (len(self._names), self._max)
         self._least = np.full(shape, np.nan)
         self._greatest = np.full(shape, np.nan)
-        self._sum = np.zeros(shape)
+        self._sum: Floats = np.zeros(shape)
         self._known = np.zeros(shape, np.int64)
 
     @property
@@ -99,7 +99,7 @@ class Envelope:
         there = np.flatnonzero(self._samples)
         known = self._known[row, there]
         with np.errstate(invalid="ignore", divide="ignore"):
-            mean = self._sum[row, there] / np.where(known, known, np.nan)
+            mean: Floats = self._sum[row, there] / np.where(known, known, np.nan)
         start_s = self._start_s or 0.0
         return Band(
             start_s + (there + 0.5) * self._width_s,

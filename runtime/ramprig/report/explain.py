@@ -46,16 +46,12 @@ class Explanation:
         first = self.likely
         if first is None:
             return _wrapped("ended", f"{self.what}. No likely cause was found in what was recorded.", width)
-        lines = _wrapped("likely", _sentence(first.sentence), width)
+        lines = _wrapped("likely", f"{first.sentence}.", width)
         lines += _wrapped("because", "; ".join(first.evidence), width) if first.evidence else []
         lines += _wrapped("next", first.next_step, width)
         others = [cause.sentence for cause in self.causes[1:SHOWN_MAX] if cause.weight >= 0.25]
         lines += _wrapped("or", "; or ".join(others), width) if others else []
         return lines
-
-
-def _sentence(text: str) -> str:
-    return text[0].upper() + text[1:] + "."
 
 
 def _wrapped(label: str, text: str, width: int) -> list[str]:
@@ -246,7 +242,9 @@ def _host(facts: Facts, lease_ms: float) -> Iterator[Cause]:
         yield Cause(
             key="host_hung",
             sentence="this computer was held up: the program could not call in",
-            evidence=(f"it was {format_duration(round(late_s, 3))} late; the lease is {format_duration(lease_ms / 1e3)}",),
+            evidence=(
+                f"it was {format_duration(round(late_s, 3))} late; the lease is {format_duration(lease_ms / 1e3)}",
+            ),
             next_step="Close what else uses the computer; watch for a full disk, swapping, a suspended terminal.",
             weight=0.9 if late_s * 1000 > HUNG_SHARE * lease_ms else 0.4,
         )

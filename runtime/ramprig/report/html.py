@@ -91,7 +91,9 @@ def render(reads: list[Read], wish: Wish) -> str:
         for name, content in _parts_of(read, wish, figures):
             parts.append(page.section(number, prefix + name, number_of, content))
             number += 1
-    parts.append(page.section(number, "What this report holds of clause 7.8.2", number_of, sections.clauses(wish.entries)))
+    parts.append(
+        page.section(number, "What this report holds of clause 7.8.2", number_of, sections.clauses(wish.entries))
+    )
     parts.append(_end(number_of))
     return page.page(title, number_of, "\n".join(parts))
 
@@ -112,11 +114,10 @@ def _verdict(read: Read, *, named: bool) -> str:
     mark = "&#10003;" if word == "passed" else "&#10007;"
     lines = [f'<p class="word">{mark} {page.text(word)}</p>', f"<p>{page.text(facts.manifest.get('stop_reason'))}</p>"]
     if named:
-        lines.insert(0, f'<p class="id" style="text-align:left">{page.text(facts.name)}</p>')
+        lines.insert(0, f'<p class="id named">{page.text(facts.name)}</p>')
     if read.explanation is not None and read.explanation.likely is not None:
         likely = read.explanation.likely
-        sentence = likely.sentence[0].upper() + likely.sentence[1:]
-        lines.insert(0, f"<p><strong>Likely cause: {page.text(sentence)}.</strong></p>")
+        lines.insert(0, f"<p><strong>Likely cause: {page.text(likely.sentence)}.</strong></p>")
         lines.append(f"<p>Because: {page.text('; '.join(likely.evidence))}.</p>")
         lines.append(f"<p>Next: {page.text(likely.next_step)}</p>")
         others = [cause.sentence for cause in read.explanation.causes[1:3] if cause.weight >= 0.25]

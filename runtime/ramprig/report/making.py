@@ -38,9 +38,7 @@ def read_run(folder: Path) -> Read:
     return Read(facts=facts, digest=digest_samples(facts), audit=audit(folder), explanation=explain(facts))
 
 
-def make_report(
-    folders: Sequence[Path], *, out: Path, issued: str, entries: Mapping[str, str] | None = None
-) -> Made:
+def make_report(folders: Sequence[Path], *, out: Path, issued: str, entries: Mapping[str, str] | None = None) -> Made:
     """Write the report of these runs into the folder `out`, and beside each run the table of its intervals.
 
     Each file is replaced in one step; nothing of a run itself is touched. Raises RecordError.

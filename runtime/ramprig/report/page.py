@@ -44,13 +44,14 @@ svg{display:block;width:100%;height:auto;font:11px "Segoe UI",Roboto,Arial,sans-
 svg text{fill:#333}svg text.l{fill:#55616b}svg text.e{font-size:10px;fill:#333;paint-order:stroke;stroke:#fff;
 stroke-width:3px}svg .g{stroke:#e6eaec;stroke-width:1}svg .a{stroke:#8a949b;stroke-width:1}
 .end{margin-top:2.5rem;border-top:2px solid var(--ink);padding-top:.6rem;text-align:center}
-details summary{cursor:pointer;color:var(--sign)}
+code{font-size:.92em}
+header .id,.named{text-align:left}
 @media (max-width:34rem){main{padding:1.2rem .9rem}dl{grid-template-columns:1fr;gap:0}dd{margin-bottom:.4rem}
 h2{display:block}h2 small{display:block;text-align:left}}
 @media print{@page{size:A4;margin:16mm 15mm 18mm}
 body{font-size:10pt}main{max-width:none;padding:0}h2{break-after:avoid;margin-top:1.5rem}h3{break-after:avoid}
-tr,.verdict,dl{break-inside:avoid}thead{display:table-header-group}pre{break-inside:auto;font-size:8pt}
-details>summary{display:none}.verdict,pre{background:#fff}}
+tr,.verdict,dd,dt{break-inside:avoid}thead{display:table-header-group}pre{break-inside:auto;font-size:8pt}
+.verdict,pre{background:#fff}}
 """
 
 
@@ -100,7 +101,7 @@ def paragraph(sentence: str, *, kind: str = "") -> str:
 def section(number: int, title: str, report_id: str, *parts: str) -> str:
     """A numbered part, with the report's identifier on it."""
     return (
-        f'<section><h2><span>{number}&ensp;{escape(title)}</span><small>{escape(report_id)}</small></h2>'
+        f"<section><h2><span>{number}&ensp;{escape(title)}</span><small>{escape(report_id)}</small></h2>"
         f"{''.join(parts)}</section>"
     )
 

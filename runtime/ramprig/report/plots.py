@@ -257,12 +257,11 @@ def trip_record(event: Document, look: Around) -> list[Plot]:
 
 
 def _speed_of(times: Floats, counts: Floats, counts_per_rev: float) -> Floats:
-    """Speed over a window of 20 ms or two samples, whichever is longer."""
-    window = max(2, int(np.searchsorted(times, times[0] + 0.02)))
-    speed = np.full(len(times), np.nan)
-    if len(times) > window:
-        with np.errstate(invalid="ignore", divide="ignore"):
-            speed[window:] = (counts[window:] - counts[:-window]) / (times[window:] - times[:-window])
+    """Speed over the last 20 ms, or since the sample before where those are farther apart."""
+    places = np.arange(len(times))
+    since = np.minimum(np.searchsorted(times, times - 0.02), np.maximum(places - 1, 0))
+    with np.errstate(invalid="ignore", divide="ignore"):
+        speed = (counts - counts[since]) / (times - times[since])
     if counts_per_rev > 0:
         speed *= 60 / counts_per_rev
     speed[~np.isfinite(speed)] = np.nan

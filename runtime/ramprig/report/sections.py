@@ -1,4 +1,4 @@
-"""The parts of a report that are words and tables: item and rig, method, results, interruptions, account, protections."""
+"""The parts of a report that are words and tables, from item and rig to the protections in force."""
 
 from __future__ import annotations
 
@@ -21,6 +21,7 @@ RULE = (
 )
 ROWS_MAX = 400
 """Lines of one table; what is left out is counted and stands in the run folder."""
+RESOLUTION_AT_RPM = (1.0, 10.0, 100.0, 1000.0)
 SEQUENCE_MAX = 60_000
 """Characters of one file of the sequence that are shown."""
 TRIP_LIMITS = ("trip_ma", "rated_ma", "stall_duty", "wrong_counts", "speed_counts", "under_mv", "over_mv")
@@ -137,9 +138,9 @@ def _clock_text(clocks: Document) -> str:
 def results(facts: Facts) -> str:
     """Each expectation: what, where, limit, values, verdict; the rule; failures with their values."""
     if not facts.expectations:
-        return page.paragraph("The sequence has no expectations, so there is nothing to pass or fail.") + page.paragraph(
-            RULE, kind="note"
-        )
+        return page.paragraph(
+            "The sequence has no expectations, so there is nothing to pass or fail."
+        ) + page.paragraph(RULE, kind="note")
     found = list(facts.expectations.values())
     rows = [_expectation(entry) for entry in found[:ROWS_MAX]]
     heads = ["what", "where", "limit", "values found", "judged", "failed", "verdict"]
@@ -209,15 +210,19 @@ def _resolution(facts: Facts) -> str:
     """How far a value may be off by the way it was measured."""
     rows = []
     for column in (facts.manifest.get("speed") or {}).get("columns") or []:
-        for entry in column.get("resolution") or []:
-            if entry.get("at_rpm") in (1.0, 10.0, 100.0, 1000.0):
-                rows.append([page.text(column["column"]), f"{entry['at_rpm']:g} rpm", f"{entry['rpm']:g} rpm"])
+        rows += [
+            [page.text(column["column"]), f"{entry['at_rpm']:g} rpm", f"{entry['rpm']:g} rpm"]
+            for entry in column.get("resolution") or []
+            if entry.get("at_rpm") in RESOLUTION_AT_RPM
+        ]
     text = (
         "Resolution of a single logged speed, from the encoder's counts alone; a mean over a window is finer by the "
         "window's length. The uncertainty of current and supply is that of the board's sensors, which this program "
         "does not know: enter the instruments' calibration. No expanded uncertainty is claimed."
     )
-    return "<h3>Uncertainty</h3>" + page.paragraph(text) + page.table(["speed", "at", "resolution"], rows, numbers=(1, 2))
+    return (
+        "<h3>Uncertainty</h3>" + page.paragraph(text) + page.table(["speed", "at", "resolution"], rows, numbers=(1, 2))
+    )
 
 
 def interruptions(facts: Facts, digest: Digest, entries: Mapping[str, str]) -> str:
@@ -336,7 +341,7 @@ def _in_force(facts: Facts) -> list[tuple[str, object]]:
         same = f"yes: {told}" if told == own else f"NO: the board has {told}, the bench file comes to {own}"
     return [
         ("limits of the board are those of the bench file (digest)", same),
-        ("armed", f"{len(armed)} times, each under that digest" if armed else "never"),
+        ("armed", f"{'once' if len(armed) == 1 else f'{len(armed)} times'}, under that digest" if armed else "never"),
         ("lease: the board stops by itself after", f"{armed[-1].get('lease_ms')} ms of silence" if armed else ""),
         ("trips in this run", str(facts.counts["tripped"])),
         ("stop confirmed by measurement", _stop_text(facts)),

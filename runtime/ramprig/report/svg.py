@@ -31,11 +31,8 @@ def ticks(low: float, high: float, *, wish: int = 5) -> list[float]:
     span = high - low
     if not (math.isfinite(span) and span > 0):
         return [low]
-    step = 10 ** math.floor(math.log10(span / wish))
-    for factor in (1, 2, 5, 10):
-        if span / (step * factor) <= wish:
-            step *= factor
-            break
+    power = 10 ** math.floor(math.log10(span / wish))
+    step = min((power * factor for factor in (1, 2, 5, 10)), key=lambda size: abs(math.log(span / size / wish)))
     first = math.ceil(low / step - 1e-9)
     last = math.floor(high / step + 1e-9)
     return [round(number * step, 12) for number in range(first, last + 1)]
@@ -44,7 +41,7 @@ def ticks(low: float, high: float, *, wish: int = 5) -> list[float]:
 def tick_text(value: float, step: float) -> str:
     """The number with as many decimals as its step needs."""
     decimals = max(0, -math.floor(math.log10(step) + 1e-9)) if step > 0 else 0
-    return f"{value + 0.0:.{min(decimals, 6)}f}".replace("-0.0", "0.0") if value == 0 else f"{value:.{min(decimals, 6)}f}"
+    return f"{value if value else 0.0:.{min(decimals, 6)}f}"
 
 
 def padded(low: float, high: float, *, zero: bool = False) -> tuple[float, float]:
@@ -162,14 +159,12 @@ class Chart:
         """The chart as an `svg` element; `alt` says in words what it shows."""
         height = self.height + (16 if self._legend else 0)
         inner = "".join((*self._axes(), *self._parts, *self._legend_parts()))
-        return (
-            f'<svg viewBox="0 0 {WIDTH} {height}" role="img" aria-label="{escape(alt, quote=True)}">{inner}</svg>'
-        )
+        return f'<svg viewBox="0 0 {WIDTH} {height}" role="img" aria-label="{escape(alt, quote=True)}">{inner}</svg>'
 
     def _axes(self) -> list[str]:
         bottom = self._bottom
         parts = []
-        ys = ticks(*self.y_range, wish=max(3, self.height // 38))
+        ys = ticks(*self.y_range, wish=max(3, self.height // 36))
         step = ys[1] - ys[0] if len(ys) > 1 else 1.0
         for value in ys:
             at = float(self.y(value))
@@ -180,7 +175,9 @@ class Chart:
         for value in xs:
             at = float(self.x(value))
             parts.append(f'<line x1="{at:.1f}" x2="{at:.1f}" y1="{bottom:.1f}" y2="{bottom + 4:.1f}" class="a"/>')
-            parts.append(f'<text x="{at:.1f}" y="{bottom + 15:.1f}" text-anchor="middle">{tick_text(value, step)}</text>')
+            parts.append(
+                f'<text x="{at:.1f}" y="{bottom + 15:.1f}" text-anchor="middle">{tick_text(value, step)}</text>'
+            )
         parts.append(f'<path d="M{LEFT} {TOP}V{bottom:.1f}H{WIDTH - RIGHT}" class="a" fill="none"/>')
         middle = (TOP + bottom) / 2
         parts.append(
@@ -220,6 +217,8 @@ def _points(xs: Floats, ys: Floats) -> str:
 def _path(xs: Floats, ys: Floats, values: Floats) -> str:
     pieces = []
     for begin, end in _stretches(~np.isnan(values)):
-        points = " ".join(f"{x:.1f} {y:.1f}" for x, y in zip(xs[begin:end].tolist(), ys[begin:end].tolist(), strict=True))
+        points = " ".join(
+            f"{x:.1f} {y:.1f}" for x, y in zip(xs[begin:end].tolist(), ys[begin:end].tolist(), strict=True)
+        )
         pieces.append(f"M{points}" + ("h.1" if end - begin == 1 else ""))
     return "".join(pieces)

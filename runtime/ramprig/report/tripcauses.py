@@ -31,7 +31,7 @@ NO_CURRENT_A = 0.03
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Cause:
-    """A possible cause: a word for programs, a sentence, what speaks for it, what to do next, and how likely, 0 to 1."""
+    """A possible cause: a word for programs, a sentence, what speaks for it, the next step, how likely (0 to 1)."""
 
     key: str
     sentence: str
@@ -129,7 +129,7 @@ def _held(trip: Trip, weight: float) -> Cause:
                 f"with the duty still at {_duty(look)}",
                 trip.current_text,
             ),
-            next_step="With the power cut, turn the shaft by hand: look for an end stop, a foreign body, a broken gear.",
+            next_step="With the power cut, turn the shaft by hand: look for an end stop, a foreign body, a gear.",
             weight=weight,
         )
     return Cause(
@@ -335,7 +335,7 @@ def _wrong_way(trip: Trip) -> Iterator[Cause]:
             key="driven_back",
             sentence=f"{trip.motor} was driven back by its load, or its coupling slipped: it had turned right before",
             evidence=(f"{trip.value} counts against {_duty(look)}", trip.start_text),
-            next_step="Look what pulls at the shaft; check the coupling; give more duty where the load is at its worst.",
+            next_step="Look what pulls at the shaft; check the coupling; give more duty where the load is worst.",
             weight=0.7,
         )
     yield Cause(

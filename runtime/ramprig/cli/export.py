@@ -1,0 +1,33 @@
+"""`ramprig export RUN --to FORMAT`: the samples of a run for other programs; the log itself stays as it is."""
+
+from __future__ import annotations
+
+import argparse
+from pathlib import Path
+
+from ramprig.cli.say import say
+
+EPILOG = """parquet needs the package pyarrow, mdf4 the package asammdf: pip install 'ramprig[export]'. excel-csv is text
+in UTF-16 with tabs, or with --decimal comma with semicolons, split before the last row that a sheet can hold."""
+
+
+def declare(parser: argparse.ArgumentParser) -> None:
+    """The run, the format, where to."""
+    from ramprig.record.export import Mark, To
+
+    parser.add_argument("run", type=Path, help="the run's folder")
+    parser.add_argument("--to", required=True, type=To, choices=list(To), metavar="FORMAT", help=", ".join(To))
+    parser.add_argument("--out", type=Path, metavar="DIR", help="where the files go (default: the run's folder)")
+    parser.add_argument(
+        "--decimal", type=Mark, choices=list(Mark), default=Mark.POINT, help="of excel-csv (default: point)"
+    )
+    parser.epilog = EPILOG
+
+
+def carry_out(args: argparse.Namespace) -> int:
+    """Write the files and say which."""
+    from ramprig.record.export import export_run
+
+    for done in export_run(args.run, args.to, out=args.out, mark=args.decimal):
+        say(f"{done.path}  {done.rows} rows")
+    return 0

@@ -1,0 +1,209 @@
+"""Gives the samples of a finished run to other programs: Parquet, text that spreadsheets read, and MDF 4.
+
+Each is written after the run, from the text log, in pieces of bounded size; the log stays what counts. A file is made
+under another name and put in place whole, so that a broken-off export leaves none. Parquet needs the package pyarrow
+(row groups are written piece by piece), MDF 4 the package asammdf (ASAM MDF 4.10; it holds one part of a run in memory).
+"""
+
+from __future__ import annotations
+
+import contextlib
+import os
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+from enum import StrEnum
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from ..errors import RecordError, UsageError
+from ..extras import need
+from .folder import SAMPLES_FILE
+from .reading import read_manifest
+from .scan import WORD_COLUMNS, Piece, Scan
+
+if TYPE_CHECKING:
+    from types import ModuleType
+
+SHEET_ROWS = 1_048_576
+"""Rows of a sheet in Microsoft Excel (its published limit), the header included; a longer log is split before it."""
+PIECE_BYTES = 4 * 1024 * 1024
+UNITS = {"duty_pct": "%", "speed_rpm": "rpm", "current_a": "A", "pulse_us": "us", "angle_deg": "deg",
+         "position_rev": "rev", "time_s": "s", "supply_v": "V", "temperature_degc": "degC"}  # fmt: skip
+
+
+class To(StrEnum):
+    """What a run can be exported to."""
+
+    PARQUET = "parquet"
+    EXCEL_CSV = "excel-csv"
+    MDF4 = "mdf4"
+
+
+class Mark(StrEnum):
+    """How the text for spreadsheets marks decimals: `point` with tabs between fields, or `comma` with semicolons."""
+
+    POINT = "point"
+    COMMA = "comma"
+
+
+@dataclass(frozen=True, slots=True)
+class Exported:
+    """A file that was written, with its rows."""
+
+    path: Path
+    rows: int
+
+
+def export_run(
+    folder: Path, to: To, *, out: Path | None = None, mark: Mark = Mark.POINT, sheet_rows: int = SHEET_ROWS
+) -> list[Exported]:
+    """Write the samples of a run to `out`, its own folder where None; one file for each part of the run, or more.
+
+    Raises RecordError where the run cannot be read or the file not be written, PackageMissing without its package.
+    """
+    manifest = read_manifest(folder)
+    names = [str(part.get("samples_file") or SAMPLES_FILE) for part in manifest.get("parts") or [{}]]
+    target = out or folder
+    done: list[Exported] = []
+    try:
+        target.mkdir(parents=True, exist_ok=True)
+        for name in names:
+            path = folder / name
+            if not path.is_file():
+                raise RecordError(f"{path} is missing")
+            stem = path.stem
+            if to is To.PARQUET:
+                done.append(_parquet(Scan(path, piece_bytes=PIECE_BYTES), target / f"{stem}.parquet", manifest))
+            elif to is To.MDF4:
+                done.append(_mdf4(Scan(path, piece_bytes=PIECE_BYTES), target / f"{stem}.mf4", manifest))
+            else:
+                done += _sheets(path, target, mark, sheet_rows)
+    except OSError as error:
+        raise RecordError(f"the export cannot be written in {target}: {error.strerror or error}") from error
+    return done
+
+
+@contextlib.contextmanager
+def _in_place(path: Path) -> Iterator[Path]:
+    """A name to write to, which becomes `path` when all went well and is removed when not."""
+    part = path.with_name(f"part-{path.name}")
+    try:
+        yield part
+        os.replace(part, path)
+    finally:
+        with contextlib.suppress(OSError):
+            part.unlink(missing_ok=True)
+
+
+def unit_of(column: str) -> str:
+    """The unit of a column, empty for counts, ticks and words."""
+    return UNITS.get(column.rpartition(".")[2], "")
+
+
+# ---- Parquet --------------------------------------------------------------------------------------------------------
+
+
+def _parquet(scan: Scan, path: Path, manifest: dict[str, Any]) -> Exported:  # Any: JSON as it comes
+    arrow: Any = need("pyarrow", purpose="the export to Parquet")  # Any, here and below: the package has no types
+    parquet: Any = need("pyarrow.parquet", purpose="the export to Parquet")
+    schema = _schema(arrow, scan.names, manifest)
+    rows = 0
+    with _in_place(path) as part, parquet.ParquetWriter(part, schema, compression="zstd") as writer:
+        for piece in scan:
+            arrays = [arrow.array(_column(piece, name), type=schema.field(name).type, from_pandas=True)
+                      for name in scan.names]  # fmt: skip
+            writer.write_table(arrow.Table.from_arrays(arrays, schema=schema))
+            rows += len(piece)
+    return Exported(path, rows)
+
+
+def _schema(arrow: Any, names: Sequence[str], manifest: dict[str, Any]) -> Any:
+    fields = []
+    for name in names:
+        kind = arrow.float64()
+        if name == "tick" or name.endswith(".counts"):
+            kind = arrow.int64()
+        elif name in WORD_COLUMNS:
+            kind = arrow.string()
+        fields.append(arrow.field(name, kind, metadata={"unit": unit_of(name)}))
+    about = {"run": str(manifest.get("run")), "started": str(manifest.get("started")), "format": "ramprig samples"}
+    return arrow.schema(fields, metadata=about)
+
+
+def _column(piece: Piece, name: str) -> Any:
+    if name == "tick":
+        return piece.ticks
+    return piece.words[name].tolist() if name in piece.words else piece.numbers[name]
+
+
+# ---- text for spreadsheets -----------------------------------------------------------------------------------------
+
+
+def _sheets(path: Path, target: Path, mark: Mark, sheet_rows: int) -> list[Exported]:
+    """UTF-16 with its byte-order mark, little-endian: the text that spreadsheets take in any locale.
+
+    `point` has tabs between the fields, `comma` semicolons. Each file has a header and stays within `sheet_rows`.
+    """
+    if sheet_rows < 2:
+        raise UsageError(f"a sheet of {sheet_rows} rows cannot hold a header and a row")
+    done: list[Exported] = []
+    rows = _sheet_rows(path, mark)
+    header = next(rows)
+    row = next(rows, None)
+    while row is not None or not done:
+        number = f"-{len(done) + 1}" if done else ""
+        file_path = target / f"{path.stem}-excel{number}.csv"
+        count = 0
+        with _in_place(file_path) as part, open(part, "w", encoding="utf-16-le", newline="") as file:
+            file.write("\ufeff" + header)
+            while row is not None and count < sheet_rows - 1:
+                file.write(row)
+                count += 1
+                row = next(rows, None)
+        done.append(Exported(file_path, count))
+    return done
+
+
+def _sheet_rows(path: Path, mark: Mark) -> Iterator[str]:
+    """The header and each row, as text with its end."""
+    with open(path, encoding="utf-8", newline="") as file:
+        for line in file:
+            if not line.endswith("\n"):
+                return  # a torn last row
+            if mark is Mark.COMMA:
+                yield line.replace(",", ";").replace(".", ",") if line[:1].isdigit() else line.replace(",", ";")
+            else:
+                yield line.replace(",", "\t")
+
+
+# ---- MDF 4 ----------------------------------------------------------------------------------------------------------
+
+
+def _mdf4(scan: Scan, path: Path, manifest: dict[str, Any]) -> Exported:  # Any: JSON as it comes
+    module: ModuleType = need("asammdf", purpose="the export to MDF 4")
+    asammdf: Any = module
+    pieces = list(scan)
+    rows = sum(map(len, pieces))
+    times = np.concatenate([np.empty(0), *(piece.numbers["time_s"] for piece in pieces)])
+    signals = []
+    for name in scan.names:
+        if name == "time_s":
+            continue
+        if name in WORD_COLUMNS:
+            samples: Any = np.char.encode(
+                np.concatenate([np.empty(0, np.str_), *(piece.words[name] for piece in pieces)]), "utf-8"
+            )
+        elif name == "tick":
+            samples = np.concatenate([np.empty(0, np.int64), *(piece.ticks for piece in pieces)])
+        else:
+            samples = np.concatenate([np.empty(0), *(piece.numbers[name] for piece in pieces)])
+        more = {"encoding": "utf-8"} if name in WORD_COLUMNS else {}
+        signals.append(asammdf.Signal(samples=samples, timestamps=times, name=name, unit=unit_of(name), **more))
+    with _in_place(path) as part, asammdf.MDF(version="4.10") as file:
+        file.append(signals, comment=f"ramprig run {manifest.get('run')}", common_timebase=True)
+        written = Path(str(file.save(part.with_suffix(".mf4"), overwrite=True)))
+        if written != part:
+            os.replace(written, part)
+    return Exported(path, rows)
