@@ -26,6 +26,8 @@ COMMANDS = {
     "mock": "serve a board in software on a pseudo-terminal or a TCP port",
     "ports": "list the serial ports, and how to name each in a bench file",
     "read": "tell how a run ended, and check its account of every sample",
+    "report": "write the report of a run, or of several beside each other",
+    "export": "give the samples of a run to other programs",
     "doctor": "find out why a bench cannot be reached, or how well it is",
     "measure": "check a motor's wiring; measure a motor, a servo or the link",
     "schema": "print the JSON Schema of bench or sequence files, for editors",
