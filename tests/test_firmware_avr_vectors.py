@@ -23,8 +23,8 @@ pytestmark = [pytest.mark.skipif(bool(WHY_NOT), reason=WHY_NOT), pytest.mark.pro
 STRETCH = 16
 TICK_US = 1000 * STRETCH
 BYTE_US = 87
-AHEAD_US = 1500
-"""How long before its tick a line is whole."""
+AHEAD_US = 9000
+"""How long before its tick a line is whole: the board reads lines in the first half of the tick before only."""
 FLOOD_BYTES = 150
 """More than this does not come within a tick."""
 FIRST_TICK = 1

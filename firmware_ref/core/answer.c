@@ -76,8 +76,8 @@ static uint8_t range_refusal(const struct rr_device *device, uint8_t word, const
         out = given->value[0] > 255;
         break;
     case RR_WORD_LIMIT:
-        out = given->count == 3 && rr_limits_refusal(&device->limits, (uint8_t)given->value[0], given->value[1],
-                                                     (int32_t)given->value[2], false) == RR_REASON_RANGE;
+        out = given->count == 3 && rr_limits_is_out(&device->limits, (uint8_t)given->value[0], (uint8_t)given->value[1],
+                                                    (int32_t)given->value[2]);
         break;
     default:
         break;
@@ -91,7 +91,9 @@ static uint8_t do_arm(struct rr_device *device, const struct rr_arguments *given
         return RR_REASON_DIGEST;
     }
     device->lease_ms = (uint16_t)given->value[0];
-    device->lease_ticks = (given->value[0] * 1000u + RR_TICK_US - 1u) / RR_TICK_US;
+    device->lease_ticks = 1000u % RR_TICK_US == 0
+                              ? (uint16_t)(given->value[0] * (1000u / RR_TICK_US))
+                              : (uint16_t)((given->value[0] * 1000u + RR_TICK_US - 1u) / RR_TICK_US);
     rr_latch_arm(&device->latch);
     for (uint8_t i = 0; i < RR_AXES; i++) {
         rr_glide_end(&device->axis[i].demand, 0);
@@ -176,19 +178,21 @@ static uint8_t do_clear(struct rr_device *device)
     return WORD_OK;
 }
 
-static uint8_t do_limit(struct rr_device *device, const struct rr_arguments *given)
+/* `told` is the value then in force, or from the next tick on. */
+static uint8_t do_limit(struct rr_device *device, uint8_t place, const struct rr_arguments *given, uint32_t *told)
 {
     bool live = RR_SEEDED(LOOSER_WHILE_ARMED, false, rr_latch_is_live(&device->latch));
-    if (given->count < 3) {
+    int32_t now = rr_limits_at(&device->limits, place);
+    int32_t value = (int32_t)given->value[2];
+    *told = (uint32_t)now;
+    if (given->count < 3 || value == now) {
         return WORD_OK;
     }
-    uint8_t reason = rr_limits_refusal(&device->limits, (uint8_t)given->value[0], given->value[1],
-                                       (int32_t)given->value[2], live);
-    uint8_t place = rr_limits_place((uint8_t)given->value[0], given->value[1]);
-    if (reason != WORD_OK || rr_limits_at(&device->limits, place) == (int32_t)given->value[2]) {
-        return reason;
+    if (live && rr_limits_is_looser(place, now, value)) {
+        return RR_REASON_ARMED;
     }
-    rr_limits_set(&device->limits, place, (int32_t)given->value[2]);
+    *told = (uint32_t)value;
+    rr_limits_set(&device->limits, place, value);
     if ((RR_CAPS & RR_CAP_KEEPS_LIMITS) != 0) {
         uint8_t *byte = &device->unsaved[place >> 3];
         *byte = (uint8_t)(*byte | (uint8_t)(1u << (place & 7u)));
@@ -217,7 +221,7 @@ static uint8_t carry_out(struct rr_device *device, uint8_t word, const struct rr
     case RR_WORD_CLEAR:
         return do_clear(device);
     case RR_WORD_LIMIT:
-        return do_limit(device, given);
+        return do_limit(device, device->line.u.request.place, given, told);
     case RR_WORD_LOG:
         *told = rr_sampling_change(device, (uint16_t)value[0], value[1], (uint8_t)value[2]);
         return WORD_OK;
@@ -231,8 +235,8 @@ static uint8_t carry_out(struct rr_device *device, uint8_t word, const struct rr
     }
 }
 
-/* The request's word and arguments, or the reason to refuse them, by BAD-5. */
-static uint8_t understood(struct rr_device *device, const char *text, uint8_t *word, struct rr_arguments *given)
+/* The request's word and arguments, or the reason to refuse them, by BAD-5 as far as the state does not matter. */
+static uint8_t understood(const struct rr_device *device, const char *text, uint8_t *word, struct rr_arguments *given)
 {
     const char *rest;
     *word = rr_fields_word(text, &rest);
@@ -243,28 +247,36 @@ static uint8_t understood(struct rr_device *device, const char *text, uint8_t *w
         return RR_REASON_ARGS;
     }
     uint8_t reason = index_refusal(*word, given);
-    if (reason == WORD_OK) {
-        reason = range_refusal(device, *word, given);
-    }
-    if (reason == WORD_OK && ((unsigned)rr_fields_states(*word) >> device->latch.state & 1u) == 0) {
-        reason = RR_REASON_STATE;
-    }
-    return reason;
+    return reason == WORD_OK ? range_refusal(device, *word, given) : reason;
 }
 
-/* Carries out a request; the reason of its refusal, or WORD_OK with the number that only the word can tell. */
-static uint8_t carried_out(struct rr_device *device, const char *text, uint8_t *word, uint32_t *told)
+void rr_answer_read(struct rr_device *device)
 {
-    struct rr_arguments given;
-    uint8_t reason = understood(device, text, word, &given);
-    if (reason != WORD_OK) {
-        return reason;
+    const struct rr_memory *memory = &device->memory;
+    const char *text = rr_line_body(&device->line);
+    struct rr_request request;
+    request.reason = understood(device, text, &request.word, &request.given);
+    request.place = 0;
+    if (request.reason == WORD_OK && request.word == RR_WORD_LIMIT) {
+        request.place = rr_limits_place((uint8_t)request.given.value[0], request.given.value[1]);
     }
-    reason = carry_out(device, *word, &given, told);
-    if (*word == RR_WORD_LIMIT) {
-        *told = (uint32_t)rr_limits_get(&device->limits, (uint8_t)given.value[0], (uint8_t)given.value[1]);
+    rr_body_take(&request.body, text);
+    request.kept_tag = RR_SEEDED(MEMORY_FORGETS, false, memory->full && memory->reply.tag == device->line.tag);
+    request.repeated = request.kept_tag && rr_body_equals(&memory->body, &request.body);
+    device->line.u.request = request;
+}
+
+/* Carries out the request; the reason of its refusal, or WORD_OK with the number that only the word can tell. */
+static uint8_t carried_out(struct rr_device *device, uint32_t *told)
+{
+    const struct rr_request *request = &device->line.u.request;
+    if (request->reason != WORD_OK) {
+        return request->reason;
     }
-    return reason;
+    if (((unsigned)rr_fields_states(request->word) >> device->latch.state & 1u) == 0) {
+        return RR_REASON_STATE;
+    }
+    return carry_out(device, request->word, &request->given, told);
 }
 
 /* An answer outside the exactly-once memory. */
@@ -277,24 +289,15 @@ static void answer_aside(struct rr_device *device, uint8_t reason)
     device->aside.waiting = true;
 }
 
-/* TAG-5: `stop` under tag ff. */
-static void answer_urgent(struct rr_device *device, const char *text)
-{
-    const char *rest;
-    uint8_t word;
-    uint32_t told;
-    bool is_stop = rr_fields_word(text, &rest) == RR_WORD_STOP;
-    answer_aside(device, is_stop ? carried_out(device, text, &word, &told) : (uint8_t)RR_REASON_TAG);
-}
-
-static void answer(struct rr_device *device, const char *text)
+static void answer(struct rr_device *device)
 {
     struct rr_memory *memory = &device->memory;
     uint32_t told = 0;
     memory->full = true;
+    memory->body = device->line.u.request.body;
     memory->reply.tag = device->line.tag;
-    rr_body_keep(&memory->body, text);
-    memory->reply.reason = carried_out(device, text, &memory->reply.word, &told);
+    memory->reply.word = device->line.u.request.word;
+    memory->reply.reason = carried_out(device, &told);
     memory->reply.tick = device->tick;
     memory->reply.waiting = true;
     if (memory->reply.reason == WORD_OK) {
@@ -302,30 +305,18 @@ static void answer(struct rr_device *device, const char *text)
     }
 }
 
-/* TAG-3: the tag of the request that is kept? */
-static bool is_kept_tag(const struct rr_device *device)
-{
-    const struct rr_memory *memory = &device->memory;
-    return RR_SEEDED(MEMORY_FORGETS, false, memory->full && memory->reply.tag == device->line.tag);
-}
-
-/* TAG-4: the kept tag with another body? */
-static bool is_misused_tag(const struct rr_device *device)
-{
-    return is_kept_tag(device) && !rr_body_is(&device->memory.body, rr_line_body(&device->line));
-}
-
 /* Answers wait for one another, and for the digest; an urgent `stop` waits for no answer but its own kind. */
 bool rr_answer_may(const struct rr_device *device)
 {
+    const struct rr_request *request = &device->line.u.request;
+    const struct rr_logging *logging = &device->logging;
     if (!RR_SPREAD && device->port->room(device->self) < RR_DEVICE_LINE_MAX) {
         return false;
     }
-    if (device->line.tag == RR_TAG_URGENT || is_misused_tag(device)) {
+    if (device->line.tag == RR_TAG_URGENT || (request->kept_tag && !request->repeated)) {
         return !device->aside.waiting;
     }
-    const char *rest;
-    if (device->logging.waiting && rr_fields_word(rr_line_body(&device->line), &rest) == RR_WORD_LOG) {
+    if (request->word == RR_WORD_LOG && (logging->waiting || logging->taken || logging->flush_due)) {
         return false; /* what is held of the old logging comes first (LOG-4), and there is place for one line */
     }
     return !device->memory.reply.waiting && device->limits.digest_place == RR_LIMITS;
@@ -333,20 +324,22 @@ bool rr_answer_may(const struct rr_device *device)
 
 void rr_answer_request(struct rr_device *device)
 {
-    const char *text = rr_line_body(&device->line);
+    const struct rr_request *request = &device->line.u.request;
     bool urgent = device->line.tag == RR_TAG_URGENT;
-    bool repeated = !urgent && is_kept_tag(device) && !is_misused_tag(device);
+    bool repeated = !urgent && request->repeated;
+    uint32_t told;
     if (!repeated || RR_SEEDED(REPEAT_RENEWS, true, false)) {
         device->renewed = device->tick;
     }
-    if (urgent) {
-        answer_urgent(device, text);
-    } else if (is_misused_tag(device)) {
-        answer_aside(device, RR_REASON_TAG);
+    if (urgent) { /* TAG-5 */
+        bool is_stop = request->word == RR_WORD_STOP;
+        answer_aside(device, is_stop ? carried_out(device, &told) : (uint8_t)RR_REASON_TAG);
     } else if (repeated) {
         device->repeats++;
         device->memory.reply.waiting = true;
+    } else if (request->kept_tag) { /* TAG-4 */
+        answer_aside(device, RR_REASON_TAG);
     } else {
-        answer(device, text);
+        answer(device);
     }
 }

@@ -1,25 +1,25 @@
-/* A request's body, kept to know a repetition (SPEC TAG-3). */
-#include "device.h"
+/* A request's body, kept to know a repetition; see request.h. */
+#include "request.h"
 
 #if RR_KEEP_BODY
 
 #include <string.h>
 
-void rr_body_keep(struct rr_body *body, const char *text)
+void rr_body_take(struct rr_body *body, const char *text)
 {
     strcpy(body->text, text);
 }
 
-bool rr_body_is(const struct rr_body *body, const char *text)
+bool rr_body_equals(const struct rr_body *body, const struct rr_body *other)
 {
-    return strcmp(body->text, text) == 0;
+    return strcmp(body->text, other->text) == 0;
 }
 
 #else
 
 #include "check.h"
 
-void rr_body_keep(struct rr_body *body, const char *text)
+void rr_body_take(struct rr_body *body, const char *text)
 {
     body->length = 0;
     body->crc = RR_CRC16_START;
@@ -34,12 +34,10 @@ void rr_body_keep(struct rr_body *body, const char *text)
     }
 }
 
-bool rr_body_is(const struct rr_body *body, const char *text)
+bool rr_body_equals(const struct rr_body *body, const struct rr_body *other)
 {
-    struct rr_body other;
-    rr_body_keep(&other, text);
-    return other.length == body->length && other.crc == body->crc && other.sum == body->sum &&
-           other.sum_of_sums == body->sum_of_sums;
+    return other->length == body->length && other->crc == body->crc && other->sum == body->sum &&
+           other->sum_of_sums == body->sum_of_sums;
 }
 
 #endif

@@ -98,6 +98,7 @@ _Static_assert(RR_QUEUE >= RR_QUEUE_MIN && RR_QUEUE <= 255, "SPEC WHO-1; the que
 _Static_assert(RR_TRAIL >= RR_TRAIL_MIN && RR_TRAIL % 4 == 0, "SPEC WHO-1, TRAIL-1");
 _Static_assert(RR_SPREAD || RR_LIMITS_SET_MAX >= RR_LIMITS, "a tick may carry out any number of requests");
 _Static_assert(RR_PAYLOAD <= RR_PAYLOAD_MAX && RR_TRAIL_PAYLOAD <= RR_TRAIL_PAYLOAD_MAX, "SPEC DATA-9, TRAIL-2");
+_Static_assert(RR_TICK_US >= 100 && RR_TICK_US <= 100000, "a lease of 5000 ms fits 16 bits of ticks");
 _Static_assert(RR_MAX_DUTY >= 0 && RR_MAX_DUTY <= RR_DUTY_FULL, "duty in 1/10000");
 
 #endif

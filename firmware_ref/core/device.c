@@ -28,14 +28,15 @@ static void carry_out_line(struct rr_device *device)
         if (is_live(device)) {
             rr_stop_begin(device, 0, RR_SOURCE_BARE);
         } else {
-            rr_notice_push(device, RR_NOTICE_OFF, device->latch.state, 0, 0);
+            rr_notice_push(device, RR_NOTICE_OFF, device->latch.state, 0);
         }
         break;
     default:
-        rr_notice_push(device, RR_NOTICE_WHO, 0, 0, 0);
+        rr_notice_push(device, RR_NOTICE_WHO, 0, 0);
         break;
     }
     device->heard = RR_LINE_NONE;
+    device->read = false;
 }
 
 /* (a) The requests that have arrived and can be answered; one a tick where work is spread. */
@@ -44,7 +45,7 @@ static void take_requests(struct rr_device *device)
     device->taking = !RR_SPREAD;
     do {
         rr_device_settle(device);
-        if (device->heard == RR_LINE_NONE || (device->heard == RR_LINE_REQUEST && !rr_answer_may(device))) {
+        if (device->heard == RR_LINE_NONE || (device->heard == RR_LINE_REQUEST && !(device->read && rr_answer_may(device)))) {
             break;
         }
         carry_out_line(device);
@@ -63,7 +64,7 @@ static void tell_garbled(struct rr_device *device)
     device->garbled_told = device->line.garbled;
     device->garbled_at = device->tick;
     device->garbled_ever = true;
-    rr_notice_push(device, RR_NOTICE_GARBLED, 0, (int32_t)device->line.garbled, 0);
+    rr_notice_push(device, RR_NOTICE_GARBLED, 0, 0);
 }
 
 /* (b) */
@@ -172,7 +173,7 @@ static void begin_order(struct rr_device *device, const struct rr_order *order)
         break;
     default:
         device->axis[index].brake = order->value == RR_REST_BRAKE;
-        rr_notice_push(device, RR_NOTICE_DONE, order->tag, 0, 0);
+        rr_notice_push(device, RR_NOTICE_DONE, order->tag, 0);
         break;
     }
 }
@@ -188,9 +189,10 @@ static void move_demands(struct rr_device *device)
         rr_glide_step(&device->servo[i].swing);
     }
 #endif
-    struct rr_order order;
-    while (device->latch.state == RR_STATE_ARMED && rr_orders_take_due(&device->u.orders, device->tick, &order)) {
-        begin_order(device, &order);
+    const struct rr_order *order = NULL;
+    while (device->latch.state == RR_STATE_ARMED &&
+           (order = rr_orders_take_due(&device->u.orders, device->tick)) != NULL) {
+        begin_order(device, order);
     }
 }
 
@@ -205,11 +207,11 @@ static void drive_axis(struct rr_device *device, uint8_t index)
     device->at_slew = device->at_slew || news.at_slew;
     device->locked = device->locked || news.locked;
     if (news.let_go != 0) {
-        rr_notice_push(device, RR_NOTICE_DWELL, index, news.let_go, 0);
+        rr_notice_push(device, RR_NOTICE_DWELL, index, news.let_go);
     }
     if (axis->demand.pending && axis->demand.left == 0 && news.settled) {
         axis->demand.pending = false;
-        rr_notice_push(device, RR_NOTICE_DONE, axis->demand.tag, 0, 0);
+        rr_notice_push(device, RR_NOTICE_DONE, axis->demand.tag, 0);
     }
 }
 
@@ -231,7 +233,7 @@ static void drive_servo(struct rr_device *device, uint8_t index)
     device->at_slew = device->at_slew || (goal != 0 && servo->pulse_ns != rr_servo_held_ns(limits, goal));
     if (servo->swing.pending && servo->swing.left == 0 && servo->pulse_ns == goal) {
         servo->swing.pending = false;
-        rr_notice_push(device, RR_NOTICE_DONE, servo->swing.tag, 0, 0);
+        rr_notice_push(device, RR_NOTICE_DONE, servo->swing.tag, 0);
     }
 }
 #endif
@@ -291,6 +293,7 @@ static void record(struct rr_device *device)
 void rr_device_tick(struct rr_device *device)
 {
     take_requests(device);
+    device->line_waits = (device->line_ended || device->heard != RR_LINE_NONE) ? (device->line_waits + 1u) & 7u : 0u;
     tell_garbled(device);
     read_inputs(device);
     guard(device);
@@ -343,10 +346,10 @@ void rr_device_start(struct rr_device *device, const RR_FLASH struct rr_port *po
     device->latch.trip = device->last_trip.trip;
     device->latch.state = device->latch.trip != RR_TRIP_NONE ? RR_STATE_TRIPPED : RR_STATE_OFF;
     device->last_trip_tick = device->latch.trip != RR_TRIP_NONE ? device->tick : 0;
-    rr_notice_push(device, RR_NOTICE_BOOT, cause, 0, 0);
+    rr_notice_push(device, RR_NOTICE_BOOT, cause, 0);
     if (device->latch.trip != RR_TRIP_NONE) {
-        rr_notice_push(device, RR_NOTICE_TRIP, (uint8_t)(device->latch.trip << 4), device->last_trip.value, 0);
-        rr_notice_push(device, RR_NOTICE_OFF, device->latch.state, 0, 0);
+        rr_notice_push(device, RR_NOTICE_TRIP, (uint8_t)(device->latch.trip << 4), 0);
+        rr_notice_push(device, RR_NOTICE_OFF, device->latch.state, 0);
     }
     rr_device_settle(device);
 }

@@ -54,18 +54,6 @@ struct rr_aside {
     bool waiting;
 };
 
-/* The last request's body, whole or by its checks. */
-struct rr_body {
-#if RR_KEEP_BODY
-    char text[RR_BODY_MAX + 1];
-#else
-    uint8_t length;
-    uint16_t crc;
-    uint16_t sum;
-    uint16_t sum_of_sums;
-#endif
-};
-
 /* One request's exactly-once memory (SPEC TAG-3). */
 struct rr_memory {
     struct rr_reply reply;
@@ -104,9 +92,12 @@ struct rr_logging {
     uint8_t kept_count;
     uint8_t number; /* of the next data line */
     uint8_t form;
+    bool taken;     /* `sample` waits to be put into its line */
+    bool flush_due; /* the packed line is to be closed after it */
     uint16_t period;
     uint32_t mask;
-    uint32_t next_tick;
+    uint32_t next_tick; /* of the next sample; the one taken was a period before */
+    int32_t sample[RR_CHANNELS];
     uint32_t made; /* by this logging */
     uint32_t made_ever;
     uint32_t dropped_ever;
@@ -125,8 +116,7 @@ struct rr_packing {
 
 /* What happened, told in order (SPEC NOTE-1). */
 struct rr_happened {
-    int32_t value;
-    int32_t bound;
+    uint16_t value;    /* category, ticks; a trip's numbers are with the trip */
     uint16_t tick_low; /* the tick's low half: it is told long before it could be mistaken */
     uint8_t kind;      /* enum rr_notice */
     uint8_t index;     /* axis, servo, tag, state, cause or source; of a trip its number too, in the upper four bits */
@@ -151,10 +141,11 @@ struct rr_device {
     struct rr_latch latch;
     int32_t late_by; /* an order of this tick came so many ticks late; negative = none did */
     struct rr_finding last_trip;
+    struct rr_finding trip_before; /* the last that had another number, until it has been told */
     uint32_t last_trip_tick;
     uint32_t renewed; /* tick of the last lease renewal */
     uint16_t lease_ms;
-    uint32_t lease_ticks;
+    uint16_t lease_ticks;
     uint16_t over_for; /* ticks in a row beyond the supply's limits */
     uint16_t under_for;
     bool at_ceiling : 1;
@@ -163,6 +154,9 @@ struct rr_device {
     bool packing_busy : 1; /* a trail answer is in the making */
     bool taking : 1;       /* requests are being carried out: notices wait for (f) of the tick */
     bool garbled_ever : 1;
+    bool line_ended : 1; /* an LF has been heard, and its line is not judged yet */
+    uint8_t line_waits : 3; /* ticks that a line has waited to be judged, read or answered */
+    bool read : 1;       /* the line heard has been read: it holds its request in place of its text */
     struct rr_inputs inputs; /* of this tick, offsets taken off */
     struct rr_limits limits;
     struct rr_axis axis[RR_AXES];
@@ -197,8 +191,9 @@ void rr_device_start(struct rr_device *device, const RR_FLASH struct rr_port *po
 /* Carries out one tick. */
 void rr_device_tick(struct rr_device *device);
 
-/* Does a small piece of what can wait: hearing, saying, keeping. False where there is nothing to do now. */
-bool rr_device_idle(struct rr_device *device);
+/* Does a piece of what can wait: hearing, saying, and where `long_ones` reading a request, coding a sample, and keeping,
+ * which take a small controller up to a third of a ms. False where there is nothing to do now. */
+bool rr_device_idle(struct rr_device *device, bool long_ones);
 
 /* ---- between the files of the device, not for ports ---- */
 
@@ -207,12 +202,10 @@ uint8_t rr_device_queued(const struct rr_device *device);
 /* idle.c: says a piece of a line; false where there is nothing to say, or no room. All idle work, where it is not spread. */
 bool rr_device_say(struct rr_device *device);
 void rr_device_settle(struct rr_device *device);
-/* answer.c: carries out a request; may it be answered yet? */
+/* answer.c: reads the request of a line; may it be answered yet; carries it out. */
+void rr_answer_read(struct rr_device *device);
 bool rr_answer_may(const struct rr_device *device);
 void rr_answer_request(struct rr_device *device);
-/* body.c: keeps a request's body, and knows it again. */
-void rr_body_keep(struct rr_body *body, const char *text);
-bool rr_body_is(const struct rr_body *body, const char *text);
 /* reply.c: answers as numbers, and the fields they are said in. Each `..._field` gives the voice its next field, and
  * returns false where there is none. */
 void rr_reply_note(struct rr_device *device, uint8_t word, uint32_t told);
@@ -223,7 +216,7 @@ void rr_stop_begin(struct rr_device *device, uint8_t category, uint8_t source);
 void rr_stop_off(struct rr_device *device);
 void rr_stop_trip(struct rr_device *device, const struct rr_finding *finding);
 /* notice.c: notices. */
-void rr_notice_push(struct rr_device *device, uint8_t kind, uint8_t index, int32_t value, int32_t bound);
+void rr_notice_push(struct rr_device *device, uint8_t kind, uint8_t index, uint16_t value);
 bool rr_notice_field(struct rr_device *device, uint8_t field);
 bool rr_notice_identity_field(struct rr_device *device, uint8_t field);
 const RR_FLASH char *rr_state_word(uint8_t state);
@@ -233,6 +226,7 @@ uint16_t rr_sampling_state_bits(const struct rr_device *device);
 bool rr_sampling_mask_fits(uint32_t mask);
 uint32_t rr_sampling_change(struct rr_device *device, uint16_t period, uint32_t mask, uint8_t form);
 void rr_sampling_tick(struct rr_device *device);
+bool rr_sampling_step(struct rr_device *device); /* puts a taken sample into its line; false where there is none */
 bool rr_sampling_again(struct rr_device *device, uint8_t number);
 bool rr_sampling_field(struct rr_device *device, const struct rr_parcel *parcel, uint8_t field);
 /* packing.c: the payload of a `trail` answer, a record at a time. */

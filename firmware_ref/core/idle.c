@@ -7,19 +7,25 @@
 /* No notice but `who` is longer: number, word, tick and three signed numbers, with the check. */
 #define NOTICE_LONGEST 80u
 
-/* Takes bytes until a line waits to be carried out. */
-static bool hear(struct rr_device *device)
+/* A whole line is judged and read at the latest after this time, well below ANSWER_TICKS. */
+#define PATIENCE_TICKS 5u
+
+/* Takes bytes until a line waits to be carried out. To judge a line at its LF is a long piece of work. */
+static bool hear(struct rr_device *device, bool long_ones)
 {
     for (uint8_t i = 0; i < RR_PIECE; i++) {
-        if (device->heard != RR_LINE_NONE) {
+        if (device->heard != RR_LINE_NONE || (device->line_ended && !long_ones)) {
             return i != 0;
         }
-        int byte = device->port->read(device->self);
+        int byte = device->line_ended ? '\n' : device->port->read(device->self);
         if (byte < 0) {
             return i != 0;
         }
-        enum rr_line_kind kind = rr_line_take(&device->line, (uint8_t)byte);
-        device->heard = (uint8_t)(kind == RR_LINE_GARBLED ? RR_LINE_NONE : kind);
+        device->line_ended = byte == '\n' && !long_ones;
+        if (!device->line_ended) {
+            enum rr_line_kind kind = rr_line_take(&device->line, (uint8_t)byte);
+            device->heard = (uint8_t)(kind == RR_LINE_GARBLED ? RR_LINE_NONE : kind);
+        }
     }
     return true;
 }
@@ -164,11 +170,15 @@ static bool save(struct rr_device *device)
     return false;
 }
 
-bool rr_device_idle(struct rr_device *device)
+/* One of the pieces that take longer. */
+static bool do_long(struct rr_device *device)
 {
-    bool heard = hear(device);
-    bool spoke = rr_device_say(device);
-    if (heard || spoke) {
+    if (rr_sampling_step(device)) {
+        return true;
+    }
+    if (device->heard == RR_LINE_REQUEST && !device->read) {
+        rr_answer_read(device);
+        device->read = true;
         return true;
     }
     if (device->packing_busy) {
@@ -178,8 +188,20 @@ bool rr_device_idle(struct rr_device *device)
     return rr_limits_digest_step(&device->limits) || save(device);
 }
 
+bool rr_device_idle(struct rr_device *device, bool long_ones)
+{
+    if (device->line_waits >= PATIENCE_TICKS) { /* fast logging has left no time: late rather than never */
+        long_ones = true;
+        device->line_waits = 0;
+    }
+    bool heard = hear(device, long_ones);
+    bool done = long_ones && do_long(device);
+    bool spoke = rr_device_say(device);
+    return heard || done || spoke;
+}
+
 void rr_device_settle(struct rr_device *device)
 {
-    while (!RR_SPREAD && rr_device_idle(device)) {
+    while (!RR_SPREAD && rr_device_idle(device, true)) {
     }
 }

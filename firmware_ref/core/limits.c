@@ -171,8 +171,10 @@ static bool zero_is_off(uint8_t number)
            number == RR_LIMIT_SPEED_COUNTS;
 }
 
-static bool is_looser(const RR_FLASH struct row *row, int32_t now, int32_t value)
+bool rr_limits_is_looser(uint8_t place, int32_t now, int32_t value)
 {
+    uint8_t index;
+    const RR_FLASH struct row *row = row_at(place, &index);
     if (value == now) {
         return false;
     }
@@ -197,12 +199,12 @@ bool rr_limits_possible(uint8_t place, int32_t value)
     return !is_beyond(row_at(place, &index), value);
 }
 
-static bool is_out_of_range(const struct rr_limits *limits, const RR_FLASH struct row *row, uint8_t index, int32_t value)
+bool rr_limits_is_out(const struct rr_limits *limits, uint8_t number, uint8_t index, int32_t value)
 {
-    if (is_beyond(row, value)) {
+    if (!rr_limits_possible(rr_limits_place(number, index), value)) {
         return true;
     }
-    switch (row->number) {
+    switch (number) {
     case RR_LIMIT_PULSE_MIN_US:
         return value > rr_limits_get(limits, RR_LIMIT_PULSE_MAX_US, index);
     case RR_LIMIT_PULSE_MAX_US:
@@ -210,20 +212,6 @@ static bool is_out_of_range(const struct rr_limits *limits, const RR_FLASH struc
     default:
         return false;
     }
-}
-
-uint8_t rr_limits_refusal(const struct rr_limits *limits, uint8_t number, uint32_t index, int32_t value, bool armed)
-{
-    uint8_t place = rr_limits_place(number, index);
-    if (place == RR_LIMITS) {
-        return RR_REASON_INDEX;
-    }
-    uint8_t at;
-    const RR_FLASH struct row *row = row_at(place, &at);
-    if (is_out_of_range(limits, row, at, value)) {
-        return RR_REASON_RANGE;
-    }
-    return armed && is_looser(row, rr_limits_at(limits, place), value) ? RR_REASON_ARMED : RR_REASON_COUNT;
 }
 
 void rr_limits_defaults(struct rr_limits *limits)

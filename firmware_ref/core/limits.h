@@ -45,8 +45,11 @@ struct rr_limits {
 /* The place of a limit in the order of the digest, or RR_LIMITS where there is no such index. */
 uint8_t rr_limits_place(uint8_t number, uint32_t index);
 
-/* Why a limit must not take a value, or RR_REASON_COUNT where it may. */
-uint8_t rr_limits_refusal(const struct rr_limits *limits, uint8_t number, uint32_t index, int32_t value, bool armed);
+/* Is the value outside the item's range, the board's, or what another limit allows (LIMIT-2)? The limit must exist. */
+bool rr_limits_is_out(const struct rr_limits *limits, uint8_t number, uint8_t index, int32_t value);
+
+/* Is the value looser than the one now (LIMIT-3)? */
+bool rr_limits_is_looser(uint8_t place, int32_t now, int32_t value);
 
 /* May the limit at this place have this value on this board, whatever the others are? For what comes from a store. */
 bool rr_limits_possible(uint8_t place, int32_t value);

@@ -57,7 +57,7 @@ static bool is_bare(const char *text, const RR_FLASH char *word)
 /* A whole line, its LF and a CR before it gone: what is it? */
 static enum rr_line_kind judged(struct rr_line *line, uint8_t length)
 {
-    char *text = line->text;
+    char *text = line->u.text;
     if (!all_printable(text, length)) {
         return RR_LINE_GARBLED;
     }
@@ -85,14 +85,14 @@ static enum rr_line_kind judged(struct rr_line *line, uint8_t length)
 
 const char *rr_line_body(const struct rr_line *line)
 {
-    return line->body > 2 ? line->text + 3 : line->text + 2;
+    return line->body > 2 ? line->u.text + 3 : line->u.text + 2;
 }
 
 enum rr_line_kind rr_line_take(struct rr_line *line, uint8_t byte)
 {
     if (byte != '\n') {
         if (line->length < RR_SEEDED(LINE_ONE_TOO_LONG, RR_HOST_LINE_MAX + 1, RR_HOST_LINE_MAX)) {
-            line->text[line->length++] = (char)byte;
+            line->u.text[line->length++] = (char)byte;
         }
         return RR_LINE_NONE;
     }
@@ -103,7 +103,7 @@ enum rr_line_kind rr_line_take(struct rr_line *line, uint8_t byte)
         line->garbled++;
         return RR_LINE_GARBLED;
     }
-    if (length > 0 && line->text[length - 1] == '\r') {
+    if (length > 0 && line->u.text[length - 1] == '\r') {
         length--;
     }
     if (length == 0) {

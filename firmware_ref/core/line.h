@@ -2,7 +2,7 @@
 #ifndef RAMPRIG_LINE_H
 #define RAMPRIG_LINE_H
 
-#include "config.h"
+#include "request.h"
 
 #include <stdbool.h>
 #include <stdint.h>
@@ -16,7 +16,10 @@ enum rr_line_kind {
 };
 
 struct rr_line {
-    char text[RR_HOST_LINE_MAX]; /* the body, ended by NUL once a line is whole */
+    union {
+        char text[RR_HOST_LINE_MAX]; /* the body, ended by NUL once a line is whole */
+        struct rr_request request;   /* in its place, once whoever took the line has read it */
+    } u;
     uint8_t length;              /* bytes held; RR_HOST_LINE_MAX once the line is too long */
     uint8_t body;                /* length of the body once a line is whole */
     uint8_t tag;

@@ -61,6 +61,20 @@ static const RR_FLASH uint8_t own_fields[] = {
 };
 _Static_assert(sizeof own_fields == RR_NOTICE_COUNT, "one row a notice");
 
+/* Of a trip: its word, index, value and bound. */
+static void trip_field(struct rr_device *device, uint8_t index, uint8_t field)
+{
+    bool is_last = device->last_trip.trip == index >> 4;
+    const struct rr_finding *trip = is_last ? &device->last_trip : &device->trip_before;
+    if (field == 0) {
+        rr_voice_word(&device->voice, rr_trip_word(index >> 4));
+    } else if (field == 1) {
+        rr_voice_u32(&device->voice, index & 0xFu);
+    } else {
+        rr_voice_i32(&device->voice, field == 2 ? trip->value : trip->bound);
+    }
+}
+
 /* The fields after word and tick, counted from 0. */
 static bool own_field(struct rr_device *device, const struct rr_happened *happened, uint8_t field)
 {
@@ -77,6 +91,9 @@ static bool own_field(struct rr_device *device, const struct rr_happened *happen
     case RR_NOTICE_DONE:
         rr_voice_hex2(voice, ' ', happened->index);
         return true;
+    case RR_NOTICE_TRIP:
+        trip_field(device, happened->index, field);
+        return true;
     default:
         break;
     }
@@ -84,16 +101,14 @@ static bool own_field(struct rr_device *device, const struct rr_happened *happen
         rr_voice_word(voice, cause_names[happened->index].text);
     } else if (field == 1 && happened->kind == RR_NOTICE_STOP) {
         rr_voice_word(voice, source_names[happened->index].text);
-    } else if (field == 0 && happened->kind == RR_NOTICE_TRIP) {
-        rr_voice_word(voice, rr_trip_word(happened->index >> 4));
-    } else if (field == 1 && happened->kind == RR_NOTICE_TRIP) {
-        rr_voice_u32(voice, happened->index & 0xFu);
+    } else if (happened->kind == RR_NOTICE_GARBLED) {
+        rr_voice_u32(voice, device->garbled_told);
     } else if (field == 0 && happened->kind == RR_NOTICE_BOOT) {
         rr_voice_u32(voice, device->boot);
     } else if (field == 0 && happened->kind == RR_NOTICE_DWELL) {
         rr_voice_u32(voice, happened->index);
     } else {
-        rr_voice_i32(voice, field == 3 ? happened->bound : happened->value);
+        rr_voice_u32(voice, happened->value);
     }
     return true;
 }
@@ -116,7 +131,7 @@ bool rr_notice_field(struct rr_device *device, uint8_t field)
     }
 }
 
-void rr_notice_push(struct rr_device *device, uint8_t kind, uint8_t index, int32_t value, int32_t bound)
+void rr_notice_push(struct rr_device *device, uint8_t kind, uint8_t index, uint16_t value)
 {
     struct rr_notices *notices = &device->notices;
     uint8_t number = notices->number++;
@@ -134,7 +149,6 @@ void rr_notice_push(struct rr_device *device, uint8_t kind, uint8_t index, int32
     happened->kind = kind;
     happened->index = index;
     happened->value = value;
-    happened->bound = bound;
     happened->number = number;
     happened->tick_low = (uint16_t)device->tick;
 }

@@ -1,10 +1,12 @@
 /* The order queue and linear motion; see orders.h. */
 #include "orders.h"
 
+#include <stddef.h>
+
 void rr_orders_add(struct rr_orders *orders, const struct rr_order *order, uint32_t now)
 {
     uint8_t place = orders->count;
-    while (place > 0 && orders->order[place - 1].start - now > order->start - now) {
+    while (place > 0 && orders->order[place - 1].start - now <= order->start - now) {
         orders->order[place] = orders->order[place - 1];
         place--;
     }
@@ -12,17 +14,33 @@ void rr_orders_add(struct rr_orders *orders, const struct rr_order *order, uint3
     orders->count++;
 }
 
-bool rr_orders_take_due(struct rr_orders *orders, uint32_t now, struct rr_order *due)
+const struct rr_order *rr_orders_take_due(struct rr_orders *orders, uint32_t now)
 {
-    if (orders->count == 0 || orders->order[0].start != now) {
-        return false;
+    if (orders->count == 0 || orders->order[orders->count - 1].start != now) {
+        return NULL;
     }
-    *due = orders->order[0];
     orders->count--;
-    for (uint8_t i = 0; i < orders->count; i++) {
-        orders->order[i] = orders->order[i + 1];
+    return &orders->order[orders->count];
+}
+
+/* floor(way / ticks) and the rest, ticks not 0: over the quotient's bits only, where a library's division takes all 32. */
+static void divide(struct rr_glide *glide, uint32_t way, uint32_t ticks)
+{
+    uint32_t half = way >> 1;
+    uint32_t whole = 0;
+    uint32_t bit = 1;
+    while (ticks <= half) {
+        ticks <<= 1;
+        bit <<= 1;
     }
-    return true;
+    for (; bit != 0; bit >>= 1, ticks >>= 1) {
+        if (way >= ticks) {
+            way -= ticks;
+            whole |= bit;
+        }
+    }
+    glide->whole = whole;
+    glide->part = way;
 }
 
 void rr_glide_begin(struct rr_glide *glide, const struct rr_order *order, int32_t goal)
@@ -38,8 +56,7 @@ void rr_glide_begin(struct rr_glide *glide, const struct rr_order *order, int32_
         glide->value = goal;
         return;
     }
-    glide->whole = way / order->ticks; /* once an order, not once a tick */
-    glide->part = way % order->ticks;
+    divide(glide, way, order->ticks);
 }
 
 void rr_glide_step(struct rr_glide *glide)

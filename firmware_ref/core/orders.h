@@ -17,7 +17,7 @@ struct rr_order {
     uint8_t tag;
 };
 
-/* Sorted by start, equal starts in order of arrival; `order[0]` is the next. */
+/* Sorted by start, equal starts in order of arrival; the next is the last in the array. */
 struct rr_orders {
     struct rr_order order[RR_QUEUE];
     uint8_t count;
@@ -26,8 +26,8 @@ struct rr_orders {
 /* Puts an order in its place. The queue must not be full; `now` settles which start comes first over the wrap. */
 void rr_orders_add(struct rr_orders *orders, const struct rr_order *order, uint32_t now);
 
-/* Takes out the next order if it starts at this tick. */
-bool rr_orders_take_due(struct rr_orders *orders, uint32_t now, struct rr_order *due);
+/* Takes out the next order if it starts at this tick, else NULL; it stays where it is until another is added. */
+const struct rr_order *rr_orders_take_due(struct rr_orders *orders, uint32_t now);
 
 /* A value on its way: at tick T + k it is d + s floor(|D - d| k / n), without a division in the tick (SPEC ORDER-4). */
 struct rr_glide {

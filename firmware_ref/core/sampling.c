@@ -1,6 +1,8 @@
 /* Samples on their way to the host: log, again (SPEC LOG-1 to LOG-5, DATA-1, DATA-9). */
 #include "device.h"
 
+#include <string.h>
+
 #define STATE_BIT  18u
 #define SUPPLY_BIT 16u
 #define TEMPERATURE_BIT 17u
@@ -111,20 +113,55 @@ static void post_block(struct rr_device *device)
     place_block(&device->logging);
 }
 
-static void post_plain(struct rr_device *device)
+static void post_plain(struct rr_device *device, uint32_t tick)
 {
     struct rr_logging *logging = &device->logging;
     struct rr_parcel *parcel = &logging->parcel[logging->filling];
-    parcel->u.plain.tick = device->tick;
+    parcel->u.plain.tick = tick;
     parcel->u.plain.mask = logging->mask;
     parcel->u.plain.period = logging->period;
-    (void)gather(device, logging->mask, parcel->u.plain.value);
+    memcpy(parcel->u.plain.value, logging->sample, sizeof parcel->u.plain.value);
     post(device, 0, 1);
+}
+
+static void put_packed(struct rr_device *device, uint32_t tick)
+{
+    struct rr_logging *logging = &device->logging;
+    int32_t values[RR_CHANNELS]; /* used up by the coding */
+    memcpy(values, logging->sample, sizeof values);
+    if (!rr_block_add(&logging->block, tick, values)) {
+        post_block(device);
+        memcpy(values, logging->sample, sizeof values);
+        (void)rr_block_add(&logging->block, tick, values);
+    }
+}
+
+bool rr_sampling_step(struct rr_device *device)
+{
+    struct rr_logging *logging = &device->logging;
+    if (!logging->taken && !logging->flush_due) {
+        return false;
+    }
+    uint32_t tick = logging->next_tick - logging->period;
+    if (!logging->taken) {
+        post_block(device);
+        logging->flush_due = false;
+    } else if (logging->form == RR_FORM_PLAIN) {
+        post_plain(device, tick);
+    } else {
+        put_packed(device, tick);
+        logging->flush_due = (logging->flush_due && logging->block.first_tick != tick) ||
+                             logging->block.samples == RR_BLOCK_SAMPLES_MAX;
+    }
+    logging->taken = false;
+    return true;
 }
 
 uint32_t rr_sampling_change(struct rr_device *device, uint16_t period, uint32_t mask, uint8_t form)
 {
     struct rr_logging *logging = &device->logging;
+    while (rr_sampling_step(device)) {
+    }
     post_block(device);
     logging->goes_first = logging->waiting;
     uint32_t made = logging->made;
@@ -141,25 +178,6 @@ uint32_t rr_sampling_change(struct rr_device *device, uint16_t period, uint32_t 
     return made;
 }
 
-static void sample(struct rr_device *device)
-{
-    struct rr_logging *logging = &device->logging;
-    logging->made++;
-    logging->made_ever++;
-    logging->next_tick += logging->period;
-    if (logging->form == RR_FORM_PLAIN) {
-        post_plain(device);
-        return;
-    }
-    int32_t values[RR_CHANNELS];
-    (void)gather(device, logging->mask, values);
-    if (!rr_block_add(&logging->block, device->tick, values)) {
-        post_block(device);
-        (void)gather(device, logging->mask, values);
-        (void)rr_block_add(&logging->block, device->tick, values);
-    }
-}
-
 void rr_sampling_tick(struct rr_device *device)
 {
     struct rr_logging *logging = &device->logging;
@@ -167,12 +185,17 @@ void rr_sampling_tick(struct rr_device *device)
         return;
     }
     if (device->tick == logging->next_tick) {
-        sample(device);
+        while (rr_sampling_step(device)) { /* the last one, where there was no time for it */
+        }
+        (void)gather(device, logging->mask, logging->sample);
+        logging->taken = true;
+        logging->next_tick += logging->period;
+        logging->made++;
+        logging->made_ever++;
     }
     const struct rr_block *block = &logging->block;
-    if (block->samples == RR_BLOCK_SAMPLES_MAX ||
-        (block->samples != 0 && device->tick - block->first_tick >= RR_FLUSH_TICKS)) {
-        post_block(device);
+    logging->flush_due = block->samples != 0 && device->tick - block->first_tick >= RR_FLUSH_TICKS;
+    while (!RR_SPREAD && rr_sampling_step(device)) {
     }
 }
 

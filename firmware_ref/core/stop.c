@@ -29,12 +29,12 @@ void rr_stop_off(struct rr_device *device)
     }
 #endif
     rr_latch_off(&device->latch);
-    rr_notice_push(device, RR_NOTICE_OFF, device->latch.state, 0, 0);
+    rr_notice_push(device, RR_NOTICE_OFF, device->latch.state, 0);
 }
 
 void rr_stop_begin(struct rr_device *device, uint8_t category, uint8_t source)
 {
-    rr_notice_push(device, RR_NOTICE_STOP, source, category, 0);
+    rr_notice_push(device, RR_NOTICE_STOP, source, category);
     if (category == 0) {
         rr_stop_off(device);
         return;
@@ -48,11 +48,11 @@ void rr_stop_trip(struct rr_device *device, const struct rr_finding *finding)
     if (!rr_latch_trip(&device->latch, finding->trip, device->tick)) {
         return;
     }
+    device->trip_before = device->last_trip;
     device->last_trip = *finding;
     device->last_trip_tick = device->tick;
     rr_trail_trip(&device->trail);
-    rr_notice_push(device, RR_NOTICE_TRIP, (uint8_t)(finding->trip << 4 | finding->index), finding->value,
-                   finding->bound);
+    rr_notice_push(device, RR_NOTICE_TRIP, (uint8_t)(finding->trip << 4 | finding->index), 0);
     if (rr_latch_category(finding->trip) == 0) {
         rr_stop_off(device);
     } else {

@@ -94,7 +94,7 @@ void rig_preset(struct rig *rig, uint8_t number, int32_t value)
 
 static void settle(struct rig *rig)
 {
-    while (RR_SPREAD && rr_device_idle(&rig->device)) {
+    while (RR_SPREAD && rr_device_idle(&rig->device, true)) {
     }
 }
 

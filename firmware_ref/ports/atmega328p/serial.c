@@ -9,9 +9,9 @@
 #include <util/atomic.h>
 
 /* Each ring holds one byte less than its size. Main reads every 0.4 ms at the latest, which is 20 bytes at 500 kbaud. */
-#define RECEIVE_RING 32u
+#define RECEIVE_RING 23u
 #define SEND_RING 16u /* what is said waits in the core; this bridges a tick */
-#define AFTER(place, ring) ((uint8_t)(((place) + 1u) & ((ring) - 1u)))
+#define AFTER(place, ring) ((uint8_t)((place) + 1u == (ring) ? 0 : (place) + 1u))
 
 static volatile uint8_t received[RECEIVE_RING];
 static volatile uint8_t received_in;

@@ -14,16 +14,16 @@
 #ifndef RR_KEEP
 #define RR_KEEP     0
 #endif
-#define RR_NOTICES  6
-#define RR_PAYLOAD  56 /* characters: 42 bytes, of which there are two */
-#define RR_TRAIL_PAYLOAD 44
+#define RR_NOTICES  8
+#define RR_PAYLOAD  54 /* characters: as many as a plain sample of all channels takes bytes for */
+#define RR_TRAIL_PAYLOAD 36
 #ifndef RR_CAPS
 #define RR_CAPS (RR_CAP_ENCODER | RR_CAP_CURRENT | RR_CAP_SUPPLY | RR_CAP_KEEPS_LIMITS | RR_CAP_BREAK)
 #endif
 
-/* Lines are made between the ticks, eight characters at a time. */
+/* Lines are made between the ticks, three characters at a time. */
 #define RR_SPREAD 1
-#define RR_PIECE  8
+#define RR_PIECE  3
 
 #define RR_FLASH __flash
 #define RR_SUM   __uint24

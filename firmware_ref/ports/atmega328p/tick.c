@@ -11,6 +11,7 @@
 #define TICK_CLOCK (1u << CS01 | 1u << CS00)
 #endif
 #define US_A_STEP 4u
+#define LONG_STEPS 120u /* in steps of 4 us: the longest piece of idle work, interrupts within it */
 
 static volatile uint8_t due; /* ticks not yet begun: more than one where main was late, so that none is left out */
 static uint16_t worst_steps;
@@ -52,6 +53,11 @@ void tick_end(void)
 uint16_t tick_worst_us(void)
 {
     return (uint16_t)(worst_steps * US_A_STEP);
+}
+
+bool tick_is_early(void)
+{
+    return due == 0 && TCNT0 < TOP - LONG_STEPS;
 }
 
 void tick_sleep(void)

@@ -16,6 +16,9 @@ void tick_end(void);
 /* The worst time so far in us, to 4 us. */
 uint16_t tick_worst_us(void);
 
+/* True while there is time before the next tick for a long piece of idle work. */
+bool tick_is_early(void);
+
 /* Sleeps until the next interrupt, unless a tick is due. */
 void tick_sleep(void);
 
