@@ -7,8 +7,8 @@ from pathlib import Path
 
 from ramprig.cli.say import say
 
-EPILOG = """parquet needs the package pyarrow, mdf4 the package asammdf: pip install 'ramprig[export]'. excel-csv is text
-in UTF-16 with tabs, or with --decimal comma with semicolons, split before the last row that a sheet can hold."""
+EPILOG = """parquet needs the package pyarrow, mdf4 the package asammdf: pip install 'ramprig[export]'. excel-csv is
+text in UTF-16 with tabs, or with --decimal comma with semicolons, split before the last row that a sheet can hold."""
 
 
 def declare(parser: argparse.ArgumentParser) -> None:

@@ -2,7 +2,8 @@
 
 Each is written after the run, from the text log, in pieces of bounded size; the log stays what counts. A file is made
 under another name and put in place whole, so that a broken-off export leaves none. Parquet needs the package pyarrow
-(row groups are written piece by piece), MDF 4 the package asammdf (ASAM MDF 4.10; it holds one part of a run in memory).
+(row groups are written piece by piece), MDF 4 the package asammdf (ASAM MDF 4.10; one part of a run is held in
+memory).
 """
 
 from __future__ import annotations

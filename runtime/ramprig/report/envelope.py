@@ -101,8 +101,9 @@ class Envelope:
         with np.errstate(invalid="ignore", divide="ignore"):
             mean: Floats = self._sum[row, there] / np.where(known, known, np.nan)
         start_s = self._start_s or 0.0
+        middles = (start_s + (there + 0.5) * self._width_s).astype(np.float64)
         return Band(
-            start_s + (there + 0.5) * self._width_s,
+            middles,
             self._least[row, there],
             mean,
             self._greatest[row, there],

@@ -1,0 +1,119 @@
+"""junit.xml is valid against the published schema, counts what it holds, and carries no control characters."""
+
+from __future__ import annotations
+
+import random
+from collections.abc import Callable
+from pathlib import Path
+from typing import Any
+from xml.etree import ElementTree
+
+import pytest
+from hypothesis import given
+from hypothesis import strategies as st
+
+from explain_cases import Case, case_of, run_case
+from ramprig.report.facts import Expectation, Facts, gather
+from ramprig.report.junit import Case as JunitCase
+from ramprig.report.junit import cases_of, junit_xml
+
+SCHEMA = Path(__file__).parent / "data" / "junit-10.xsd"
+"""By Gregory Boissinot (MIT licence, its notice inside), as pytest's source distribution 9.2.0 carries it."""
+
+Valid = Callable[[str], bool]
+FAILING = """- ramp: {motor: vent, to: 40 %, in: 500 ms}
+- hold: 1 s
+- expect: {speed of: vent, is: at least 60 rpm}
+- expect: {current of: vent, is: at most 2 A}"""
+
+
+@pytest.fixture(scope="module")
+def is_valid() -> Valid:
+    xmlschema = pytest.importorskip("xmlschema", reason="needs the package xmlschema")
+    schema: Any = xmlschema.XMLSchema(SCHEMA)  # Any: the package has no types
+    return lambda text: bool(schema.is_valid(text))
+
+
+def facts_of(folder: Path, case: Case) -> Facts:
+    result, _ = run_case(folder, case, seed=1)
+    assert result.folder is not None
+    return gather(result.folder)
+
+
+@pytest.fixture(scope="module")
+def failed(tmp_path_factory: pytest.TempPathFactory) -> Facts:
+    return facts_of(tmp_path_factory.mktemp("failed"), Case("", steps=FAILING))
+
+
+@pytest.fixture(scope="module")
+def tripped(tmp_path_factory: pytest.TempPathFactory) -> Facts:
+    return facts_of(tmp_path_factory.mktemp("tripped"), case_of("jam", random.Random(2)))
+
+
+def test_what_is_written_is_valid_and_counts_itself(failed: Facts, tripped: Facts, is_valid: Valid) -> None:
+    text = junit_xml([failed, tripped])
+    assert is_valid(text)
+    root = ElementTree.fromstring(text)
+    suites = root.findall("testsuite")
+    assert [suite.get("name") for suite in suites] == [failed.name, tripped.name]
+    for node in (root, *suites):
+        assert node.get("tests") == str(len(list(node.iter("testcase"))))
+        assert node.get("failures") == str(len(list(node.iter("failure"))))
+        assert node.get("errors") == str(len(list(node.iter("error"))))
+    for suite in suites:
+        assert suite.get("skipped") == str(len(list(suite.iter("skipped"))))
+
+
+def test_the_schema_refuses_what_it_should(failed: Facts, is_valid: Valid) -> None:
+    text = junit_xml([failed])
+    assert not is_valid(text.replace("<testsuites ", '<testsuites skipped="0" '))
+    assert not is_valid(text.replace(' time="', ' time="1.75041', 1))
+    assert not is_valid(text.replace("<testcase classname", "<testcase nonsense"))
+
+
+def test_each_expectation_and_each_limit_is_one_case(failed: Facts) -> None:
+    cases = list(cases_of(failed))
+    names = [(case.group, case.name) for case in cases]
+    assert len(set(names)) == len(names)
+    wanted = [case for case in cases if case.name.startswith("speed of vent")]
+    assert len(wanted) == 1
+    assert "at least 60 rpm" in wanted[0].failure
+    assert "s.yaml:6" in wanted[0].group
+    assert "last found" in wanted[0].out
+    held = next(case for case in cases if case.name.startswith("current of vent"))
+    assert held.failure == ""
+    limits = [case for case in cases if case.group == "limits"]
+    assert {case.name for case in limits} >= {"vent: trip_ma", "vent: stall_duty", "under_mv", "over_mv", "lease_ms"}
+    assert not any(case.failure for case in limits)
+    assert any(case.skipped for case in limits if case.name == "vent: speed_counts")  # off in this bench file
+
+
+def test_a_trip_fails_its_limit_and_the_run(tripped: Facts) -> None:
+    cases = {(case.group, case.name): case for case in cases_of(tripped)}
+    assert "tripped" in cases["run", "carried out to its end"].failure
+    assert "likely" in cases["run", "carried out to its end"].out
+    failing = [name for (group, name), case in cases.items() if group == "limits" and case.failure]
+    assert failing in (["vent: trip_ma"], ["vent: stall_duty"])
+
+
+def test_a_run_that_broke_off_is_an_error(failed: Facts, is_valid: Valid) -> None:
+    broken = Facts(failed.folder, failed.manifest | {"status": "running", "stop_reason": None, "results": None})
+    assert is_valid(junit_xml([broken]))
+    assert next(cases_of(broken)).error.startswith("broken off")
+
+
+@given(st.text(), st.text(alphabet=st.characters(codec="utf-8"), max_size=30))
+def test_no_noise_of_a_serial_line_breaks_the_file(noise: str, more: str) -> None:
+    dirty = f"\x00\x1b[31m{noise}]]>&<\x7f{more}\ufffe"
+    case = JunitCase(dirty, dirty, dirty, failure=dirty)
+    node = ElementTree.fromstring(case.xml())
+    for text in (node.get("name"), node.get("classname"), node.findtext("system-out")):
+        assert text is not None
+        assert "\x1b" not in text
+        assert "\x00" not in text
+
+
+def test_noise_in_a_run_leaves_a_valid_file(failed: Facts, is_valid: Valid) -> None:
+    noisy = Facts(failed.folder, failed.manifest | {"stop_reason": "garbled: \x00\x1b[2J\x9b \ud800", "run": "a\x01b"})
+    noisy.expectations = {("f:1:1", "x"): Expectation("f:1:1", "speed\x02 is <&>")}
+    assert is_valid(junit_xml([noisy]))

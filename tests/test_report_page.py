@@ -1,0 +1,210 @@
+"""The report is one file that needs nothing else, says what the run folder says, and flags what cannot be compared."""
+
+from __future__ import annotations
+
+import random
+import re
+from html.parser import HTMLParser
+from pathlib import Path
+
+import pytest
+
+from explain_cases import Case, case_of, run_case
+from ramprig.cli.main import main
+from ramprig.report.compare import differing
+from ramprig.report.facts import gather
+from ramprig.report.making import Made, make_report, read_run
+from ramprig.report.svg import Chart, ticks
+
+STEPS = """- repeat:
+    times: 6
+    steps:
+      - sweep: {motor: vent, shape: steps, from: 30 %, to: 60 %, steps: 3, pause: 500 ms}
+      - sweep: {motor: vent, shape: steps, from: 60 %, to: 30 %, steps: 3, pause: 500 ms}
+      - expect: {speed of: vent, is: at least 5 rpm}
+      - expect: {speed of: vent, is: at most 6 rpm}"""
+VOID = {"meta", "br"}
+
+
+class Reader(HTMLParser):
+    """Checks that elements nest, and gathers tags, attributes and text."""
+
+    def __init__(self) -> None:
+        super().__init__()
+        self.open: list[str] = []
+        self.tags: list[str] = []
+        self.links: list[str] = []
+        self.words: list[str] = []
+
+    def handle_starttag(self, tag: str, attrs: list[tuple[str, str | None]]) -> None:
+        self.tags.append(tag)
+        self.links += [value or "" for name, value in attrs if name in ("src", "href", "xlink:href")]
+        if tag not in VOID:
+            self.open.append(tag)
+
+    def handle_startendtag(self, tag: str, attrs: list[tuple[str, str | None]]) -> None:
+        self.tags.append(tag)
+
+    def handle_endtag(self, tag: str) -> None:
+        assert self.open.pop() == tag
+
+    def handle_data(self, data: str) -> None:
+        self.words.append(data)
+
+    @property
+    def text(self) -> str:
+        return " ".join(" ".join(self.words).split())
+
+
+def read_page(path: Path) -> Reader:
+    reader = Reader()
+    reader.feed(path.read_text("utf-8"))
+    reader.close()
+    assert reader.open == []
+    return reader
+
+
+@pytest.fixture(scope="module")
+def run(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    result, _ = run_case(tmp_path_factory.mktemp("run"), Case("", steps=STEPS), seed=2)
+    assert result.folder is not None
+    return result.folder
+
+
+@pytest.fixture(scope="module")
+def jammed(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    result, _ = run_case(tmp_path_factory.mktemp("jam"), case_of("jam", random.Random(2)), seed=2)
+    assert result.folder is not None
+    return result.folder
+
+
+def made(folder: Path, out: Path, **entries: str) -> Made:
+    return make_report([folder], out=out, issued="2026-03-01T08:00:00Z", entries=entries)
+
+
+def test_a_report_needs_nothing_but_itself(run: Path, tmp_path: Path) -> None:
+    done = made(run, tmp_path)
+    page = read_page(done.report)
+    assert page.links == []
+    assert not {"script", "link", "img", "iframe", "object"} & set(page.tags)
+    text = done.report.read_text("utf-8")
+    assert "url(" not in text
+    assert "@import" not in text
+    assert re.findall(r"https?://\S+", text) == []
+    assert "default-src 'none'" in text
+    assert done.report.stat().st_size < 1_000_000
+
+
+def test_every_part_bears_the_identifier_and_the_end_is_clear(run: Path, tmp_path: Path) -> None:
+    text = made(run, tmp_path).report.read_text("utf-8")
+    number = re.search(r"report (\S+ / [0-9a-f]{12})", text)
+    assert number is not None
+    heads = re.findall(r"<h2>.*?</h2>", text)
+    assert len(heads) >= 8
+    assert all(number[1] in head for head in heads)
+    assert text.rstrip().endswith("</html>")
+    assert f"End of report {number[1]}" in text[-400:]
+    assert "relate only to the items tested" in text[-700:]
+
+
+def test_results_tell_place_limit_value_and_verdict(run: Path, tmp_path: Path) -> None:
+    page = read_page(made(run, tmp_path).report)
+    assert "speed of vent" in page.text
+    assert "at least 5 rpm" in page.text
+    assert "at most 6 rpm" in page.text
+    assert "s.yaml:9" in page.text
+    assert "pass" in page.words or any("pass" in word for word in page.words)
+    assert any("FAIL" in word for word in page.words)
+    assert "Decision rule" in page.text
+    assert "no guard band" in page.text
+    assert "every sample is in the file" in page.text.lower()
+    assert "Likely cause: speed of vent was not at most 6 rpm" in page.text
+
+
+def test_plots_show_cycles_curve_and_limits(run: Path, tmp_path: Path) -> None:
+    text = made(run, tmp_path).report.read_text("utf-8")
+    for wanted in ("first and last pass overlaid", "against pass", "both ways", "ceiling 80 %", "time of the run"):
+        assert wanted in text, wanted
+    assert text.count("<svg") == text.count("<figcaption>")
+    assert text.count('role="img"') == text.count("aria-label=")
+
+
+def test_a_trip_comes_with_its_cause_first_and_its_record(jammed: Path, tmp_path: Path) -> None:
+    page = read_page(made(jammed, tmp_path).report)
+    likely = page.text.index("Likely cause")
+    assert likely < page.text.index("tripped")
+    assert "jammed while turning" in page.text
+    assert "Record around the trip" in page.text
+    assert "the board's trail, every tick" in page.text
+    assert "yes: " in page.text  # the board's digest of the limits is that of the bench file
+
+
+def test_entries_are_shown_escaped_and_the_rest_is_told_as_missing(run: Path, tmp_path: Path) -> None:
+    done = made(run, tmp_path, item="<script>alert(1)</script>&\x1b", customer="A & B")
+    text = done.report.read_text("utf-8")
+    assert "<script" not in text
+    assert "&lt;script&gt;" in text
+    assert "\x1b" not in text
+    page = read_page(done.report)
+    assert "A & B" in page.text
+    assert "not entered" in page.text
+
+
+def test_nothing_of_the_run_is_changed(run: Path, tmp_path: Path) -> None:
+    names = ("run.json", "samples.csv", "events.jsonl")
+    before = [(run / name).read_bytes() for name in names]
+    made(run, tmp_path)
+    assert [(run / name).read_bytes() for name in names] == before
+    assert read_run(run).audit.exact
+
+
+def test_the_same_run_gives_the_same_report(run: Path, tmp_path: Path) -> None:
+    first = made(run, tmp_path / "a").report.read_bytes()
+    assert made(run, tmp_path / "b").report.read_bytes() == first
+
+
+def test_comparing_runs_flags_what_differs_before_any_result(run: Path, jammed: Path, tmp_path: Path) -> None:
+    done = make_report([run, jammed], out=tmp_path, issued="2026-03-01T08:00:00Z")
+    page = read_page(done.report)
+    assert page.text.index("conditions differ") < page.text.index("Side by side") < page.text.index("Decision rule")
+    assert "sequence file" in differing([gather(run), gather(jammed)])
+    assert "bench file" not in differing([gather(run), gather(jammed)])
+
+
+def test_one_changed_condition_is_named(tmp_path: Path) -> None:
+    folders = []
+    for name, change in (("a", ()), ("b", (("current: {at most: 2.5 A", "current: {at most: 2 A"),))):
+        result, _ = run_case(tmp_path / name, Case("", duty=40, hold_ms=300, change=change), seed=1)
+        assert result.folder is not None
+        folders.append(gather(result.folder))
+    found = differing(folders)
+    assert found["limit trip_ma 0"] == ["2500", "2000"]
+    assert set(found) == {"bench file", "limit trip_ma 0", "limit trip_ma 1"}
+    assert differing([folders[0], folders[0]]) == {}
+
+
+def test_the_command_writes_the_files_and_tells_where(
+    run: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    assert main(["report", str(run), "--out", str(tmp_path), "--entry", "item=vent, no. 42"]) == 0
+    out = capsys.readouterr().out.splitlines()
+    assert out[:2] == [str(tmp_path / "report.html"), str(tmp_path / "junit.xml")]
+    assert "vent, no. 42" in (tmp_path / "report.html").read_text("utf-8")
+    assert main(["report", str(run), "--out", str(tmp_path), "--entry", "colour=red"]) == 2
+    assert "one of lab" in capsys.readouterr().err
+    assert main(["report", str(tmp_path)]) == 2
+
+
+@pytest.mark.parametrize(
+    ("low", "high"), [(0.0, 1.0), (-42.0, 42.0), (11.97, 12.01), (0.0, 28_800.0), (-1e-3, 2e-3), (5.0, 5.0)]
+)
+def test_axes_have_a_few_round_ticks_inside(low: float, high: float) -> None:
+    found = ticks(low, high)
+    assert 1 <= len(found) <= 9
+    assert low == high or len(found) >= 3
+    assert all(low - 1e-9 <= value <= high + 1e-9 for value in found)
+
+
+def test_a_chart_of_nothing_known_is_still_a_chart() -> None:
+    chart = Chart((0.0, 1.0), (0.0, 1.0), "A", "s")
+    assert chart.text("nothing").startswith("<svg")
