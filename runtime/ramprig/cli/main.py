@@ -30,13 +30,14 @@ COMMANDS = {
     "export": "give the samples of a run to other programs",
     "doctor": "find out why a bench cannot be reached, or how well it is",
     "measure": "check a motor's wiring; measure a motor, a servo or the link",
+    "accept": "check a board of your own against the protocol, clause by clause",
     "schema": "print the JSON Schema of bench or sequence files, for editors",
 }
 """Every command is a module of this room by the same name."""
 
 EXIT_CODES = """exit codes:
   0   passed
-  1   an expectation failed, or a measurement found a fault or gave no result
+  1   an expectation or a clause failed, or a measurement found a fault or gave no result
   2   the command line or a file must be mended
   3   the device tripped or refused
   4   the link was lost, or another device answered
