@@ -34,6 +34,9 @@ LEVELS = 10
 SETTLE_MS = 600
 WINDOW_MS = 400
 RUN_DOWN_MS = 1500
+CHANGE_MS = 300
+GENTLE_MS = 2000
+"""Down to zero takes this long at least: a motor that is led down fast lifts a supply that cannot sink."""
 LINEAR_WITHIN = 0.02
 """The linear range is where the speed is this near the line, as a share of the highest speed."""
 WAYS = (1, -1)
@@ -130,7 +133,7 @@ class Curve:
         most = min(SEARCH_DUTY, lab.rig.axes[motor.name].ceiling_duty)
         script = lab.script(f"search {WORDS[sign]}")
         script.hold(100).drive(motor.name, sign * most, in_ms=most * 1000 // SEARCH_PER_S).hold(100)
-        script.coast(motor.name).hold(RUN_DOWN_MS)
+        script.drive(motor.name, 0, in_ms=GENTLE_MS).coast(motor.name).hold(RUN_DOWN_MS)
         found = facing(lab.run(script).motor(motor), sign)
         check_moves(motor, found, most)
         moving = np.flatnonzero(found.counts > 12)
@@ -177,8 +180,8 @@ def _levels(lab: Lab, motor: Motor, sign: int, zero: Zero) -> tuple[Level, ...]:
     duties = [sign * round(ceiling * step / LEVELS) for step in range(1, LEVELS + 1)]
     script = lab.script(f"levels {WORDS[sign]}").hold(100)
     for duty in (*duties, *duties[-2::-1]):
-        script.drive(motor.name, duty, in_ms=100).hold(SETTLE_MS).mark("window").hold(WINDOW_MS).mark("done")
-    script.drive(motor.name, 0).coast(motor.name).hold(RUN_DOWN_MS)
+        script.drive(motor.name, duty, in_ms=CHANGE_MS).hold(SETTLE_MS).mark("window").hold(WINDOW_MS).mark("done")
+    script.drive(motor.name, 0, in_ms=GENTLE_MS).coast(motor.name).hold(RUN_DOWN_MS)
     trace = lab.run(script)
     found = trace.motor(motor)
     check_not_saturated(found, noise_a=zero.noise_a)
