@@ -11,7 +11,7 @@ from endure_crash import CYCLES, START_UNIX_S, Host, Killed, Process
 from ramprig.endure.interruption import Cause, cause_of_manifest
 from ramprig.endure.resume import read_broken
 from ramprig.errors import RecordError, Refused, UsageError, WrongDevice
-from ramprig.record.reading import audit, read_events, read_manifest, read_samples, sample_files
+from ramprig.record.reading import audit, read_events, read_manifest, read_notes, read_samples, sample_files
 from ramprig.sequence.outcome import Verdict
 from ramprig_link.words import Cause as BootCause
 
@@ -111,6 +111,9 @@ def test_a_board_that_does_not_come_back_ends_the_run(tmp_path: Path) -> None:
     assert result.outcome.verdict is Verdict.LINK_LOST
     assert "the board did not come back within 20 s" in result.outcome.sentence
     assert read_manifest(host.run_folder)["verdict"] == "link lost"
+    (note,) = read_notes(host.run_folder)
+    assert note["by"] == "ramprig"
+    assert note["text"].startswith("not gone on with: the board did not come back")
 
 
 def test_after_a_trip_it_never_goes_on_by_itself_and_by_hand_only_where_told(tmp_path: Path) -> None:
@@ -162,9 +165,10 @@ def test_a_trip_other_than_the_interruptions_own_is_somebodys_to_look_at(tmp_pat
     assert host.run(Process(), resume=True, after_trip=True).outcome.verdict is Verdict.PASSED
 
 
-def test_a_full_disk_stops_the_run_and_it_goes_on_when_there_is_room(tmp_path: Path) -> None:
+@pytest.mark.parametrize("full_at", [200, 350, 417, 460, 555])
+def test_a_full_disk_stops_the_run_and_it_goes_on_when_there_is_room(tmp_path: Path, full_at: int) -> None:
     host = Host(tmp_path)
-    result = host.run(Process(full_at=350))
+    result = host.run(Process(full_at=full_at))
     assert result.outcome.verdict is Verdict.NOT_RECORDED
     assert result.outcome.stop_confirmed
     manifest = read_manifest(host.run_folder)

@@ -34,6 +34,7 @@ from ramprig_link.words import Trip
 
 from .cycles import read_cycle_record
 from .interruption import LINK_TRIPS, Cause, Interruption, cause_of_manifest, cause_of_outcome, last_known_unix_s
+from .notes import add_note
 
 RETRY_S = 2.0
 """After an interruption the board is looked for this often."""
@@ -239,6 +240,7 @@ def run_enduring(wish: RunWish, around: Surroundings, *, port: Port | None = Non
     while (folder := result.folder) is not None and _may_go_on(wish.sequence, result.outcome, folder):
         later = _go_on(wish, around, folder)
         if isinstance(later, str):
+            add_note(folder, f"not gone on with: {later}", unix_s=around.wall(), by="ramprig")
             outcome = replace(result.outcome, sentence=f"{result.outcome.sentence}; not gone on with: {later}")
             return RunResult(outcome=outcome, folder=folder)
         result = later

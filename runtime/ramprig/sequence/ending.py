@@ -12,6 +12,7 @@ from ramprig.quantity import format_duration
 from ramprig.session.blocks import Block
 from ramprig.session.events import Event, HostSlept, Tripped
 from ramprig.session.session import Session
+from ramprig.session.stop import StopReport
 from ramprig_link.words import State
 
 from .cycle_run import CycleBook
@@ -112,6 +113,7 @@ class _Run:
         self.executive = Executive(session, clock, plan, rig, tell, progress)
         self.confirmed = True
         self.slept_s: list[float] = []
+        self.unrecorded: RecordError | None = None
         listeners.add(on_block=self.executive.on_block, on_event=self._on_event)
 
     def begin_with(self, book: CycleBook | None, tally: Tally | None, bounds: Bounds | None) -> None:
@@ -137,7 +139,7 @@ class _Run:
         try:
             end = self._carry_out()
         except BaseException:
-            self.session.stop(1)
+            self._stop()
             raise
         end = self._bring_down(end)
         if self.executive.book is not None:
@@ -213,7 +215,7 @@ class _Run:
                 sentence = self._take_trip(self.executive.trip)
                 end = _End(end.verdict, sentence, end.place)
             if not self._known_off():
-                report = self.session.stop(1)
+                report = self._stop()
                 self.confirmed = report.confirmed
                 if not report.confirmed:
                     end = _End(end.verdict, f"{end.sentence}; stop {report.verdict}", end.place)
@@ -224,14 +226,26 @@ class _Run:
                     )
             self._end_log()
         except StoppedByUser:
-            self.confirmed = self.session.stop(1).confirmed
+            self.confirmed = self._stop().confirmed
         except (LinkError, Refused) as error:
             self.confirmed = False
             if end.verdict is not Verdict.LINK_LOST:
                 end = _End(end.verdict, f"{end.sentence}; afterwards: {error}", end.place)
         except RecordError as error:
-            end = _End(Verdict.NOT_RECORDED, f"{end.sentence}; the log could not be written: {error}", end.place)
+            self.unrecorded = error
+            self.confirmed = self._stop().confirmed
+        if self.unrecorded is not None and end.verdict is not Verdict.NOT_RECORDED:
+            text = f"{end.sentence}; the log could not be written: {self.unrecorded}"
+            end = _End(Verdict.NOT_RECORDED, text, end.place)
         return end
+
+    def _stop(self) -> StopReport:
+        """Stop, confirmed or not. Whoever records may fail in the middle of it, once: then it is begun again."""
+        try:
+            return self.session.stop(1)
+        except RecordError as error:
+            self.unrecorded = error
+            return self.session.stop(1)
 
     def _known_off(self) -> bool:
         """Whether the device says, asked now, that its outputs are off."""
