@@ -89,7 +89,7 @@ def stepped(tmp_path_factory: pytest.TempPathFactory) -> tuple[Facts, Digest]:
 def test_the_cycles_of_a_run_are_found(stepped: tuple[Facts, Digest]) -> None:
     facts, digest = stepped
     assert len(facts.passes) == 4
-    assert [window.number for window in digest.windows] == [1, 3]
+    assert [window.number for window in digest.windows] == [1, 2, 3]
     rows = {row.number: row for row in digest.intervals}
     assert set(rows) == {0, 1, 2, 3, 4}
     assert sum(row.samples for row in digest.intervals) == digest.rows

@@ -67,7 +67,10 @@ class Interval:
 
 @dataclass(slots=True)
 class Digest:
-    """What the samples of a run come to. `breaks` are times where the board restarted or the run was gone on with."""
+    """What the samples of a run come to. `breaks` are times where the board restarted or the run was gone on with.
+
+    An interval is `interval_stride` cycles, or a minute; those from 1 to below `interval_edges` are whole cycles.
+    """
 
     columns: tuple[str, ...]
     envelope: Envelope
@@ -80,6 +83,8 @@ class Digest:
     torn_bytes: int = 0
     breaks: list[float] = field(default_factory=list)
     totals: dict[str, tuple[float, float, float]] = field(default_factory=dict)
+    interval_edges: int = 0
+    interval_stride: int = 1
 
     def band(self, name: str) -> Band:
         """A column against time."""
@@ -106,8 +111,12 @@ def digest_samples(facts: Facts) -> Digest:
     """Read all samples files of the run once, piece by piece."""
     columns = plotted_columns(facts)
     digest = Digest(columns, Envelope(columns, intervals_max=INTERVALS_MAX))
-    digest.windows = _windows(facts.passes, columns)
-    table = _IntervalTable(columns, _edges(facts))
+    digest.windows = _windows(facts, columns)
+    edges = _edges(facts)
+    if isinstance(edges, list):
+        digest.interval_edges = len(edges)
+        digest.interval_stride = -(-len(facts.passes) // ROWS_MAX)
+    table = _IntervalTable(columns, edges)
     curves = {motor: _CurveWalk(digest, motor) for motor in facts.motors if f"{motor}.speed_rpm" in columns}
     offset_s = 0.0
     for path in facts.sample_files:
@@ -149,16 +158,26 @@ def _take(digest: Digest, table: _IntervalTable, times: Floats, piece: Piece) ->
             window.envelope.add(times[begin:end] - window.begin_s, inside)
 
 
-def _windows(passes: Sequence[float], columns: tuple[str, ...]) -> list[Window]:
+def _windows(facts: Facts, columns: tuple[str, ...]) -> list[Window]:
     """The first cycle, one in the middle, and the last whole ones."""
-    if len(passes) < 3:
+    spans = _spans(facts)
+    if len(spans) < 2:
         return []
-    last = len(passes) - 1  # the last begin has no end: the cycle before it is the last whole one
-    numbers = sorted({1, max(1, last // 2), last})
-    return [
-        Window(number, passes[number - 1], passes[number], Envelope(columns, intervals_max=OVERLAY_INTERVALS))
-        for number in numbers
-    ]
+    chosen = sorted({0, (len(spans) - 1) // 2, len(spans) - 1})
+    return [Window(*spans[place], Envelope(columns, intervals_max=OVERLAY_INTERVALS)) for place in chosen]
+
+
+def _spans(facts: Facts) -> list[tuple[int, float, float]]:
+    """Number, begin and end in s of each whole cycle: without the rest after it where that is told apart."""
+    done = [event for event in facts.cycles if event.get("kind") == "cycle_done" and event.get("time_s") is not None]
+    if done:
+        tick_s = facts.tick_us / 1e6
+        return [
+            (int(event["number"]), event["time_s"] - (event["tick"] - event["begin_tick"]) * tick_s, event["time_s"])
+            for event in done
+        ]
+    pairs = zip(facts.passes, facts.passes[1:], strict=False)  # the last begin has no end
+    return [(number, begin, end) for number, (begin, end) in enumerate(pairs, 1)]
 
 
 def _edges(facts: Facts) -> list[float] | float:

@@ -264,14 +264,7 @@ def _link(facts: Facts, *, lease_ms: float) -> Iterator[Cause]:
         )
     damaged, told = _noise(facts)
     if damaged >= NOISE_LINES:
-        yield Cause(
-            key="noise",
-            sentence="the link is noisy: lines came damaged or not at all",
-            evidence=(", ".join(told), *_near_start(facts)),
-            next_step="Screen and shorten the cable, keep it off the motor leads, suppress the motor at its brushes; "
-            "`ramprig measure link` compares motor off and on.",
-            weight=0.88,
-        )
+        yield _noisy(facts, told, weight=0.88)
     if not gone:
         yield Cause(
             key="silent",
@@ -281,6 +274,17 @@ def _link(facts: Facts, *, lease_ms: float) -> Iterator[Cause]:
             next_step="Ask the board (`ramprig doctor`); check the data wires; power the board anew.",
             weight=0.6,
         )
+
+
+def _noisy(facts: Facts, told: list[str], *, weight: float) -> Cause:
+    return Cause(
+        key="noise",
+        sentence="the link is noisy: lines came damaged or not at all",
+        evidence=(", ".join(told), *_near_start(facts)),
+        next_step="Screen and shorten the cable, keep it off the motor leads, suppress the motor at its brushes; "
+        "`ramprig measure link` compares motor off and on.",
+        weight=weight,
+    )
 
 
 def _near_start(facts: Facts) -> tuple[str, ...]:
@@ -349,6 +353,9 @@ def _others(facts: Facts, verdict: str) -> Iterator[Cause]:
     elif verdict == "failed":
         yield from _failed(facts)
     elif verdict == "refused":
+        damaged, told = _noise(facts)
+        if damaged >= NOISE_LINES:
+            yield _noisy(facts, told, weight=0.92)  # a request that was damaged and repeated too late is refused
         yield Cause(
             key="refused",
             sentence="the board refused an order or a request",

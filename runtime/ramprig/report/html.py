@@ -18,6 +18,7 @@ from .compare import compared
 from .digest import Digest
 from .explain import Explanation, view_of_trip
 from .facts import Facts
+from .trends import trends_of
 
 ENTRIES = {
     "lab": "laboratory and its address",
@@ -143,12 +144,20 @@ def _parts_of(read: Read, wish: Wish, figures: _Figures) -> list[tuple[str, str]
     pictures = figures.put(plots.against_time(facts, digest))
     found.append(("Against time", pictures or page.paragraph("There are no samples to draw.", kind="note")))
     for name, pictures in (
-        ("Cycle over cycle", figures.put([*plots.overlays(facts, digest), *plots.by_cycle(facts, digest)])),
+        ("Cycle over cycle", figures.put(plots.overlays(facts, digest)) + _trends(read, figures)),
         ("Duty to speed", figures.put(plots.curves(facts, digest))),
     ):
         if pictures:
             found.append((name, pictures))
     return found
+
+
+def _trends(read: Read, figures: _Figures) -> str:
+    """Features against the cycle, and in words what they showed."""
+    found = trends_of(read.facts, read.digest)
+    if not found:
+        return ""
+    return figures.put(plots.by_cycle(read.facts, found)) + sections.trend_findings(found)
 
 
 def _ranges(digest: Digest) -> str:

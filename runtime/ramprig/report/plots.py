@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
@@ -10,10 +9,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from .around import Around
-from .digest import Digest, Interval, Level
+from .digest import Digest, Level
 from .envelope import Band
 from .facts import Document, Facts
-from .svg import BLUE, EVENTS_MAX, GREEN, GREY, ORANGE, SERIES, VERMILION, Chart, padded
+from .svg import BLUE, EVENTS_MAX, GREEN, GREY, ORANGE, PURPLE, SERIES, VERMILION, Chart, padded
+from .trends import Trend
 
 Floats = NDArray[np.float64]
 
@@ -174,32 +174,35 @@ def _overlay(column: str, what: str, digest: Digest, bands: Sequence[Band]) -> P
     return Plot(f"{text}, first and last {what} overlaid", chart.text(f"{text} of several {what}es over each other"))
 
 
-def by_cycle(facts: Facts, digest: Digest) -> list[Plot]:
-    """Least, mean and greatest of speed and current of each cycle."""
-    rows = [row for row in digest.intervals if row.number > 0]
-    if len(facts.passes) < 5 or len(rows) < 5:
-        return []
+def by_cycle(facts: Facts, found: Sequence[Trend]) -> list[Plot]:
+    """Each feature against the cycle, with its baseline and limits once there are cycles enough, and what was found."""
     what = "cycle" if facts.counts["cycle_begun"] else "pass"
-    columns = [f"{motor}.{part}" for motor in facts.motors for part in ("speed_rpm", "current_a")]
-    return [_by_cycle(column, what, rows) for column in columns if column in digest.columns]
+    return [_trend(trend, what) for trend in found]
 
 
-def _by_cycle(column: str, what: str, rows: Sequence[Interval]) -> Plot:
-    text, unit = label_of(column)
-    nothing = (math.nan, math.nan, math.nan)
-    values = np.array([row.columns.get(column, nothing) for row in rows])
-    numbers = np.array([float(row.number) for row in rows])
+def _trend(trend: Trend, what: str) -> Plot:
+    judged, settings = trend.judged, trend.judged.settings
+    levels: list[tuple[float, str, str]] = []
+    if judged.established:
+        mean = judged.baseline.mean
+        levels = [(mean, "baseline", GREY)]
+        for share, name, colour in (
+            (settings.watch_change, "watch", ORANGE),
+            (settings.fail_change, "fail", VERMILION),
+        ):
+            levels += [(mean * (1 + share), name, colour), (mean * (1 - share), name, colour)]
+    low, high = float(np.nanmin(trend.values)), float(np.nanmax(trend.values))
+    watched = [value for value, name, _ in levels if name != "fail"]
+    y_range = padded(min([low, *watched]), max([high, *watched]))
     chart = Chart(
-        (float(numbers[0]) - 0.5, float(numbers[-1]) + 0.5),
-        padded(float(np.nanmin(values[:, 0])), float(np.nanmax(values[:, 2]))),
-        unit,
-        what,
-        height=150,
+        (float(trend.numbers[0]) - 0.5, float(trend.numbers[-1]) + 0.5), y_range, trend.unit, what, height=160
     )
-    chart.band(numbers, values[:, 0], values[:, 2])
-    chart.line(numbers, values[:, 1], width=1.0)
-    caption = f"{text} against {what} (line: mean, area: least to greatest)"
-    return Plot(caption, chart.text(caption))
+    chart.line(trend.numbers, trend.values, width=1.0)
+    for value, name, colour in levels:
+        chart.level(value, f"{name} {value:.4g} {trend.unit}", colour=colour)
+    for finding in trend.findings[:EVENTS_MAX]:
+        chart.event(float(finding.cycle), f"{finding.level.name.lower()}: {finding.sign}", colour=PURPLE)
+    return Plot(f"{trend.name} of each {what}", chart.text(f"{trend.name} against {what}, {low:g} to {high:g}"))
 
 
 def curves(facts: Facts, digest: Digest) -> list[Plot]:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 
 from ramprig.quantity import format_duration
 from ramprig.record.reading import Audit
@@ -12,6 +12,7 @@ from ramprig_link.words import LIMITS, Per
 from . import page
 from .digest import Digest
 from .facts import Document, Expectation, Facts
+from .trends import Trend
 
 RULE = (
     "Decision rule: an expectation passes where the value found lies within its limits, the limits included; there is "
@@ -230,7 +231,8 @@ def interruptions(facts: Facts, digest: Digest, entries: Mapping[str, str]) -> s
     rows: list[list[str]] = []
     for number, entry in enumerate(facts.manifest.get("interruptions") or [], 1):
         said = "; ".join(f"{key}: {value}" for key, value in entry.items() if value not in (None, ""))
-        rows.append([str(entry.get("utc") or ""), f"interruption {number}", page.text(said)])
+        text = f"{entry['text']}; before: {entry.get('reason') or 'nothing was said'}" if "text" in entry else said
+        rows.append([str(entry.get("resumed_utc") or ""), f"interruption {number}", page.text(text)])
     for kind, name in _INTERRUPTIONS.items():
         shown = facts.of(kind)[:50]
         rows += [[page.text(event.get("utc")), name, page.text(_event_text(event))] for event in shown]
@@ -305,6 +307,28 @@ def account(facts: Facts, audit: Audit) -> str:
     ]
     hashes = page.table(["file", "lines", "SHA-256"], files, numbers=(1,)) if files else ""
     return page.facts(pairs) + "".join(page.paragraph(text) for text in statements) + table + hashes
+
+
+def trend_findings(found: Sequence[Trend]) -> str:
+    """What the trends of the features showed, and by which figures."""
+    settings = found[0].judged.settings
+    rule = (
+        f"Looked for: after {settings.run_in} cycles of run-in and {settings.baseline} of baseline, changes beyond "
+        f"{settings.watch_change:.0%} (watch) and {settings.fail_change:.0%} (fail) of the baseline in {settings.k} of "
+        f"{settings.n} cycles, sudden changes (CUSUM), slow ones (EWMA), and drifts (Mann-Kendall, Sen). These figures "
+        "are choices of this program; they are no standard."
+    )
+    if not any(trend.judged.established for trend in found):
+        needed = settings.run_in + settings.baseline
+        return page.paragraph(f"No trend is judged: that takes more than {needed} cycles.", kind="note")
+    rows = [
+        [page.text(trend.name), str(finding.cycle), finding.level.name.lower(), page.text(str(finding))]
+        for trend in found
+        for finding in trend.findings
+    ]
+    if not rows:
+        return page.paragraph(f"No change was found. {rule}")
+    return page.table(["feature", "cycle", "level", "found"], rows, numbers=(1,)) + page.paragraph(rule, kind="note")
 
 
 def protections(facts: Facts) -> str:

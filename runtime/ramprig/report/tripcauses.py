@@ -129,7 +129,7 @@ def _held(trip: Trip, weight: float) -> Cause:
                 f"with the duty still at {_duty(look)}",
                 trip.current_text,
             ),
-            next_step="With the power cut, turn the shaft by hand: look for an end stop, a foreign body, a gear.",
+            next_step="With the power cut, turn the shaft by hand: look for an end stop or something caught in it.",
             weight=weight,
         )
     return Cause(

@@ -1,0 +1,95 @@
+"""Cycles in a report: laid over each other without their rests, and their features judged by the streaming trends."""
+
+from __future__ import annotations
+
+import json
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+from explain_cases import Case, run_case
+from ramprig.report.digest import Digest, Interval, digest_samples
+from ramprig.report.envelope import Envelope
+from ramprig.report.facts import Facts, gather
+from ramprig.report.making import make_report
+from ramprig.report.trends import trends_of
+
+STEPS = """- cycle:
+    times: 7
+    rest: 3 s
+    steps:
+      - ramp: {motor: vent, to: 50 %, in: 600 ms}
+      - hold: 600 ms
+      - confirm: {position of: vent, is: at least 10 deg}
+      - coast: {motor: vent, in: 500 ms}
+      - wait: {speed of: vent, is: -0.5 rpm to 0.5 rpm, within: 3 s}"""
+
+
+@pytest.fixture(scope="module")
+def facts(tmp_path_factory: pytest.TempPathFactory) -> Facts:
+    result, _ = run_case(tmp_path_factory.mktemp("cycles"), Case("", steps=STEPS), seed=4)
+    assert result.folder is not None
+    return gather(result.folder)
+
+
+def test_cycles_are_laid_over_each_other_without_their_rests(facts: Facts) -> None:
+    digest = digest_samples(facts)
+    assert [window.number for window in digest.windows] == [1, 4, 7]
+    for window in digest.windows:
+        assert 1.5 < window.end_s - window.begin_s < 3.5
+        assert window.begin_s == pytest.approx(facts.passes[window.number - 1], abs=0.01)
+        band = window.envelope.band("vent.duty_pct")
+        assert float(np.nanmax(band.greatest)) == 50.0
+        assert float(band.time_s[0]) >= -0.02
+        assert float(band.time_s[-1]) <= window.end_s - window.begin_s + 0.02
+
+
+def test_a_report_counts_cycles_and_shows_their_features(facts: Facts, tmp_path: Path) -> None:
+    done = make_report([facts.folder], out=tmp_path, issued="2026-03-01T08:00:00Z")
+    text = done.report.read_text("utf-8")
+    for wanted in ("cycles commanded", "confirmed by the encoder", "first and last cycle overlaid", "of each cycle"):
+        assert wanted in text, wanted
+    assert "No trend is judged: that takes more than 120 cycles" in text
+
+
+def test_an_interruption_is_told(facts: Facts, tmp_path: Path) -> None:
+    for name in ("samples.csv", "events.jsonl", "vent", "bench.yaml"):
+        if (facts.folder / name).is_file():
+            (tmp_path / name).write_bytes((facts.folder / name).read_bytes())
+    interruption = {"number": 1, "text": "interruption 1: the board restarted", "reason": "it browned out",
+                    "resumed_utc": "2026-03-01T08:00:00Z"}  # fmt: skip
+    manifest = dict(facts.manifest) | {"interruptions": [interruption]}
+    (tmp_path / "run.json").write_text(json.dumps(manifest), encoding="utf-8")
+    text = make_report([tmp_path], out=tmp_path / "out", issued="").report.read_text("utf-8")
+    assert "interruption 1: the board restarted; before: it browned out" in text
+
+
+def made_up(values: np.ndarray[tuple[int], np.dtype[np.float64]]) -> tuple[Facts, Digest]:
+    """A run of cycles whose greatest currents are these."""
+    facts = Facts(Path("made-up"), {"columns": ["vent.duty_pct", "vent.current_a"]})
+    facts.passes = [13.0 * number for number in range(len(values) + 1)]
+    digest = Digest(("vent.current_a",), Envelope(["vent.current_a"]), interval_edges=len(facts.passes))
+    digest.intervals = [
+        Interval(number, 0.0, 13.0, 1300, {"vent.current_a": (-0.1, 0.05, float(value))})
+        for number, value in enumerate(values, 1)
+    ]
+    return facts, digest
+
+
+def test_a_current_that_grows_is_found_and_a_steady_one_is_not() -> None:
+    random = np.random.default_rng(8)
+    noise = 1 + random.normal(0, 0.02, 600)
+    steady = 0.9 * noise
+    growing = steady * (1 + 0.0005 * np.maximum(0, np.arange(600) - 150))
+    (calm,) = trends_of(*made_up(steady))
+    (found,) = trends_of(*made_up(growing))
+    assert calm.name == "vent: greatest current"
+    assert calm.findings == ()
+    assert calm.judged.established
+    assert found.findings
+    assert 150 < found.findings[0].cycle < 600
+
+
+def test_few_cycles_have_no_trend() -> None:
+    assert trends_of(*made_up(np.ones(4))) == []
