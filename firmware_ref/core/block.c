@@ -87,10 +87,10 @@ static void put_wide(struct rr_block *block, uint32_t value, uint8_t count)
 }
 
 /* k of DATA-7: the least with N 2^k >= A, at most RICE_K_MAX. */
-static uint8_t parameter_of(uint8_t count, RR_SUM sum)
+static uint8_t parameter_of(uint8_t count, RR_U24 sum)
 {
     uint8_t k = 0;
-    for (RR_SUM reach = count; k < RR_RICE_K_MAX && reach < sum; reach <<= 1) {
+    for (RR_U24 reach = count; k < RR_RICE_K_MAX && reach < sum; reach <<= 1) {
         k++;
     }
     return k;
@@ -106,24 +106,34 @@ static uint32_t folded(int32_t residual)
     return residual < 0 ? ~((uint32_t)residual << 1) : (uint32_t)residual << 1;
 }
 
-static uint8_t code_length(uint32_t u, uint8_t k)
+/* How a folded residual is coded: `ones` one bits and a zero, then k bits; or the escape. */
+struct code {
+    uint8_t k;
+    uint8_t ones; /* RICE_QUOTIENT_MAX = the escape */
+};
+
+static struct code code_of(uint32_t u, uint8_t k)
 {
     uint32_t quotient = u >> k;
-    return quotient < RR_RICE_QUOTIENT_MAX ? (uint8_t)(quotient + 1u + k) : (uint8_t)(RR_RICE_QUOTIENT_MAX + 32u);
+    return (struct code){k, quotient < RR_RICE_QUOTIENT_MAX ? (uint8_t)quotient : (uint8_t)RR_RICE_QUOTIENT_MAX};
 }
 
-static void put_code(struct rr_block *block, uint32_t u, uint8_t k)
+static uint8_t length_of(struct code code)
 {
-    uint32_t quotient = u >> k;
-    if (quotient >= RR_RICE_QUOTIENT_MAX) {
+    return code.ones == RR_RICE_QUOTIENT_MAX ? (uint8_t)(RR_RICE_QUOTIENT_MAX + 32u) : (uint8_t)(code.ones + 1u + code.k);
+}
+
+static void put_code(struct rr_block *block, uint32_t u, struct code code)
+{
+    if (code.ones == RR_RICE_QUOTIENT_MAX) {
         put_bits(block, 0xFFFFu, RR_RICE_QUOTIENT_MAX);
         put_wide(block, u, 32);
         return;
     }
-    uint8_t ones = (uint8_t)quotient;
-    put_bits(block, (uint16_t)((2ul << ones) - 2u), (uint8_t)(ones + 1u));
-    put_wide(block, u, k);
+    put_bits(block, (uint16_t)((2ul << code.ones) - 2u), (uint8_t)(code.ones + 1u));
+    put_bits(block, (uint16_t)u & (uint16_t)((1u << code.k) - 1u), code.k);
 }
+_Static_assert(RR_RICE_K_MAX < 16 && RR_RICE_QUOTIENT_MAX == 16, "put_bits takes 16 at most");
 
 void rr_block_prepare(struct rr_block *block, uint32_t mask, uint16_t period, struct rr_channel *channel)
 {
@@ -135,7 +145,7 @@ void rr_block_prepare(struct rr_block *block, uint32_t mask, uint16_t period, st
     for (uint8_t bit = 0; bit < 20; bit++) {
         if ((mask >> bit & 1u) != 0) {
             channel[block->channels].shape = shape_of(bit);
-            channel[block->channels].sum = (RR_SUM)1 << RR_RICE_K_START;
+            channel[block->channels].sum = (RR_U24)1 << RR_RICE_K_START;
             block->channels++;
         }
     }
@@ -180,7 +190,7 @@ static void open_block(struct rr_block *block, uint32_t tick, const int32_t *val
 
 /* Puts the folded residuals in the place of the values, and returns the bits their codes take. What a channel then holds
  * of the sample is right only if the sample is taken: one that opens the next block sets it anew. */
-static uint16_t fold(struct rr_block *block, int32_t *values)
+static uint16_t fold(struct rr_block *block, int32_t *values, struct code *codes)
 {
     uint16_t needed = 0;
     uint8_t second = 0;
@@ -196,23 +206,24 @@ static uint16_t fold(struct rr_block *block, int32_t *values)
         }
         uint32_t u = folded(residual);
         values[i] = (int32_t)u;
-        needed = (uint16_t)(needed + code_length(u, parameter_of(block->count, channel->sum)));
+        codes[i] = code_of(u, parameter_of(block->count, channel->sum));
+        needed = (uint16_t)(needed + length_of(codes[i]));
     }
     return needed;
 }
 
-/* Codes the folded residuals and lets the running means learn from them (DATA-7). */
-static void put_sample(struct rr_block *block, const int32_t *values)
+/* Writes the codes and lets the running means learn from them (DATA-7). */
+static void put_sample(struct rr_block *block, const int32_t *values, const struct code *codes)
 {
     bool halve = block->count == RR_RICE_RESET;
     for (uint8_t i = 0; i < block->channels; i++) {
         struct rr_channel *channel = &block->channel[i];
         uint32_t u = (uint32_t)values[i];
-        put_code(block, u, parameter_of(block->count, channel->sum));
+        put_code(block, u, codes[i]);
         if (halve) {
             channel->sum >>= 1;
         }
-        channel->sum = (RR_SUM)(channel->sum + (u < RR_RICE_SUM_CAP ? u : RR_RICE_SUM_CAP));
+        channel->sum = (RR_U24)(channel->sum + (u < RR_RICE_SUM_CAP ? u : RR_RICE_SUM_CAP));
     }
     block->count = (uint8_t)((halve ? RR_RICE_RESET / 2 : block->count) + 1u);
     block->samples++;
@@ -224,10 +235,12 @@ bool rr_block_add(struct rr_block *block, uint32_t tick, int32_t *values)
         open_block(block, tick, values);
         return true;
     }
-    if (block->samples == RR_BLOCK_SAMPLES_MAX || fold(block, values) > (uint16_t)(block->room - block->bits)) {
+    struct code codes[RR_CHANNELS];
+    if (block->samples == RR_BLOCK_SAMPLES_MAX ||
+        fold(block, values, codes) > (uint16_t)(block->room - block->bits)) {
         return false;
     }
-    put_sample(block, values);
+    put_sample(block, values, codes);
     return true;
 }
 
@@ -236,7 +249,7 @@ uint8_t rr_block_close(struct rr_block *block)
     for (uint8_t i = 0; i < block->channels; i++) {
         struct rr_channel *channel = &block->channel[i];
         uint8_t k = parameter_of(block->samples == 0 ? 1 : block->count, channel->sum);
-        channel->sum = (RR_SUM)1 << k; /* as the header of the next block will say */
+        channel->sum = (RR_U24)1 << k; /* as the header of the next block will say */
     }
     if (block->samples == 1) {
         put_first(block, false);

@@ -16,7 +16,7 @@
 
 struct rr_channel {
     int32_t value; /* of the sample before */
-    RR_SUM sum;    /* A of DATA-7 */
+    RR_U24 sum;    /* A of DATA-7 */
     uint8_t shape; /* its row in the table of channels */
 };
 

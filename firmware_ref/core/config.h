@@ -64,9 +64,10 @@
 #define RR_FLASH
 #endif
 
-/* A running mean's sum needs 22 bits: 32 values of RICE_SUM_CAP. */
-#ifndef RR_SUM
-#define RR_SUM uint32_t
+/* An unsigned type of 24 bits or more: for a running mean's sum (22 bits: 32 values of RICE_SUM_CAP), and for a glide's way
+ * (2600 us in ns, 20000 of duty). */
+#ifndef RR_U24
+#define RR_U24 uint32_t
 #endif
 
 /* How the last request is kept to know a repetition (TAG-3): 1 whole, 0 by its length and 48 bits of checks. */

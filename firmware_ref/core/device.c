@@ -222,6 +222,7 @@ static void drive_servo(struct rr_device *device, uint8_t index)
     struct rr_servo *servo = &device->servo[index];
     const struct rr_servo_limits *limits = &device->limits.servo[index];
     int32_t goal = servo->swing.value;
+    int32_t before = servo->pulse_ns;
     if (goal == 0) {
         servo->pulse_ns = 0;
     } else if (servo->pulse_ns == 0) {
@@ -229,7 +230,9 @@ static void drive_servo(struct rr_device *device, uint8_t index)
     } else {
         servo->pulse_ns = rr_servo_step_ns(limits, servo->pulse_ns, goal);
     }
-    device->port->pulse(device->self, index, (uint32_t)servo->pulse_ns);
+    if (servo->pulse_ns != before) {
+        device->port->pulse(device->self, index, (uint32_t)servo->pulse_ns);
+    }
     device->at_slew = device->at_slew || (goal != 0 && servo->pulse_ns != rr_servo_held_ns(limits, goal));
     if (servo->swing.pending && servo->swing.left == 0 && servo->pulse_ns == goal) {
         servo->swing.pending = false;

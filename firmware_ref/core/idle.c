@@ -195,9 +195,11 @@ bool rr_device_idle(struct rr_device *device, bool long_ones)
         device->line_waits = 0;
     }
     bool heard = hear(device, long_ones);
-    bool done = long_ones && do_long(device);
+    if (long_ones && do_long(device)) {
+        return true;
+    }
     bool spoke = rr_device_say(device);
-    return heard || done || spoke;
+    return heard || spoke;
 }
 
 void rr_device_settle(struct rr_device *device)

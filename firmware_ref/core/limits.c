@@ -77,17 +77,26 @@ uint8_t rr_limits_place(uint8_t number, uint32_t index)
     return RR_LIMITS;
 }
 
-/* The row of a place that exists; the index by `index`. */
+/* The row of a place that exists; the index by `index`. The rows of the device come first, then axes, then servos. */
 static const RR_FLASH struct row *row_at(uint8_t place, uint8_t *index)
 {
     const RR_FLASH struct row *row = rows;
-    uint8_t many = fitted(row->per);
-    while (place >= many) {
-        place = (uint8_t)(place - many);
-        row++;
-        many = fitted(row->per);
+    *index = 0;
+    if (place < RR_DEVICE_LIMITS) {
+        return row + place;
     }
-    *index = place;
+    row += RR_DEVICE_LIMITS;
+    place = (uint8_t)(place - RR_DEVICE_LIMITS);
+    if (place < RR_AXIS_LIMITS * RR_AXES) {
+        *index = place % RR_AXES;
+        return row + place / RR_AXES;
+    }
+#if RR_SERVOS > 0
+    row += RR_AXIS_LIMITS;
+    place = (uint8_t)(place - RR_AXIS_LIMITS * RR_AXES);
+    *index = place % RR_SERVOS;
+    row += place / RR_SERVOS;
+#endif
     return row;
 }
 

@@ -24,19 +24,22 @@ const struct rr_order *rr_orders_take_due(struct rr_orders *orders, uint32_t now
 }
 
 /* floor(way / ticks) and the rest, ticks not 0: over the quotient's bits only, where a library's division takes all 32. */
-static void divide(struct rr_glide *glide, uint32_t way, uint32_t ticks)
+static void divide(struct rr_glide *glide, RR_U24 way, uint32_t ticks)
 {
-    uint32_t half = way >> 1;
-    uint32_t whole = 0;
-    uint32_t bit = 1;
-    while (ticks <= half) {
-        ticks <<= 1;
-        bit <<= 1;
-    }
-    for (; bit != 0; bit >>= 1, ticks >>= 1) {
-        if (way >= ticks) {
-            way -= ticks;
-            whole |= bit;
+    RR_U24 whole = 0;
+    if (ticks <= way) {
+        RR_U24 half = way >> 1;
+        RR_U24 step = (RR_U24)ticks;
+        RR_U24 bit = 1;
+        while (step <= half) {
+            step <<= 1;
+            bit <<= 1;
+        }
+        for (; bit != 0; bit >>= 1, step >>= 1) {
+            if (way >= step) {
+                way -= step;
+                whole |= bit;
+            }
         }
     }
     glide->whole = whole;
@@ -56,7 +59,7 @@ void rr_glide_begin(struct rr_glide *glide, const struct rr_order *order, int32_
         glide->value = goal;
         return;
     }
-    divide(glide, way, order->ticks);
+    divide(glide, (RR_U24)way, order->ticks);
 }
 
 void rr_glide_step(struct rr_glide *glide)

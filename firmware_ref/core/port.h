@@ -35,7 +35,7 @@ struct rr_port {
     void (*inputs)(void *self, struct rr_inputs *inputs);
     /* Sets a bridge: duty in 1/10000 by sign and magnitude; at 0 it brakes or coasts. */
     void (*bridge)(void *self, uint8_t axis, int16_t duty, bool brake);
-    /* Sets a servo's pulse in ns, 0 = none. */
+    /* Sets a servo's pulse in ns, 0 = none; called when it changes. */
     void (*pulse)(void *self, uint8_t servo, uint32_t pulse_ns);
     /* All outputs off, by the shortest way there is. */
     void (*off)(void *self);

@@ -19,7 +19,7 @@ int32_t rr_servo_first_ns(const struct rr_servo_limits *limits)
 uint16_t rr_servo_us(int32_t pulse_ns)
 {
     uint16_t us = (uint16_t)((uint32_t)pulse_ns >> 10);
-    us = (uint16_t)(us + (us >> 6) + (us >> 7)); /* by 1/1024 (1 + 1/64 + 1/128), a little less than 1/1000 */
+    us = (uint16_t)(us + (us >> 6) + (us >> 7) + (us >> 11)); /* (1 + 1/64 + 1/128 + 1/2048) / 1024: a little below 1/1000 */
     uint16_t left = (uint16_t)((uint32_t)pulse_ns - (uint32_t)us * 1000u);
     while (left >= 1000u) {
         left = (uint16_t)(left - 1000u);

@@ -146,7 +146,7 @@ int main(void)
             rr_device_tick(&device);
             tick_end();
             wdt_reset();
-        } else if (!rr_device_idle(&device, tick_is_early())) {
+        } else if (tick_is_near() || !rr_device_idle(&device, tick_is_early())) {
             tick_sleep();
         }
     }

@@ -23,10 +23,10 @@
 
 /* Lines are made between the ticks, three characters at a time. */
 #define RR_SPREAD 1
-#define RR_PIECE  3
+#define RR_PIECE  2
 
 #define RR_FLASH __flash
-#define RR_SUM   __uint24
+#define RR_U24   __uint24
 #define RR_KEEP_BODY 0
 
 /* 10-bit converters: currents to 13.5 A, supplies to 21.5 V (board.h), and a shaft that turns less than 32768 counts in

@@ -11,7 +11,8 @@
 #define TICK_CLOCK (1u << CS01 | 1u << CS00)
 #endif
 #define US_A_STEP 4u
-#define LONG_STEPS 120u /* in steps of 4 us: the longest piece of idle work, interrupts within it */
+#define SHORT_STEPS 10u /* and the longest short one */
+#define LONG_STEPS 125u /* in steps of 4 us: the longest piece of idle work, interrupts within it */
 
 static volatile uint8_t due; /* ticks not yet begun: more than one where main was late, so that none is left out */
 static uint16_t worst_steps;
@@ -58,6 +59,11 @@ uint16_t tick_worst_us(void)
 bool tick_is_early(void)
 {
     return due == 0 && TCNT0 < TOP - LONG_STEPS;
+}
+
+bool tick_is_near(void)
+{
+    return TCNT0 >= TOP - SHORT_STEPS;
 }
 
 void tick_sleep(void)

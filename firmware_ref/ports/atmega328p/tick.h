@@ -19,6 +19,9 @@ uint16_t tick_worst_us(void);
 /* True while there is time before the next tick for a long piece of idle work. */
 bool tick_is_early(void);
 
+/* True where the next tick is so near that it is better waited for. */
+bool tick_is_near(void);
+
 /* Sleeps until the next interrupt, unless a tick is due. */
 void tick_sleep(void);
 
