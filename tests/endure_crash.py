@@ -246,6 +246,10 @@ class Host:
             self.unix_s = max(self.unix_s, self._clock.wall())
         return self.unix_s
 
+    def forget_clock(self) -> None:
+        """The wall clock is what `unix_s` says from now on."""
+        self._clock = None
+
     def pause(self, seconds: float) -> None:
         """Time passes for the board, while no host is there."""
         self.now_unix_s()

@@ -21,7 +21,7 @@ from ramprig.errors import RecordError, UsageError
 from ramprig.record.reading import audit, read_manifest, read_samples, sample_files
 from ramprig.sequence.outcome import Verdict
 
-POINTS_QUICK = 12
+POINTS_QUICK = 8
 POINTS_ALL = 300
 SECOND_DEATH = 0.4
 """Share of the points at which the resumed run dies too."""

@@ -261,6 +261,20 @@ def test_rows_and_times_go_on_over_the_parts(tmp_path: Path) -> None:
     assert {logging["part"] for logging in account["loggings"]} == {1, 2}
 
 
+def test_times_go_on_though_the_wall_clock_was_set_back(tmp_path: Path) -> None:
+    host = Host(tmp_path)
+    with pytest.raises(Killed):
+        host.run(Process(die_at=400))
+    host.pause(3.0)
+    host.unix_s -= 7200.0
+    host.forget_clock()
+    host.run(Process(), resume=True)
+    one, two = [read_samples(path).numbers["time_s"] for path in sample_files(host.run_folder)]
+    assert two[0] > one[-1]
+    assert read_manifest(host.run_folder)["interruptions"][0]["down_s"] == 0
+    assert audit(host.run_folder).exact
+
+
 def test_the_latest_end_ends_the_run_in_order_and_holds_for_its_later_parts(tmp_path: Path) -> None:
     host = Host(tmp_path)
     host.latest_end_unix_s = START_UNIX_S + 4.0

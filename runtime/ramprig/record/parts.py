@@ -13,6 +13,7 @@ from pathlib import Path
 from typing import Any
 
 from .events import Json
+from .scan import Scan
 
 SUMS = ("expected", "received", "lost", "written", "unwritten", "gaps_unlisted")
 MORE_SUMS = ("asked_again", "recovered", "duplicates", "strange_lines")
@@ -28,12 +29,14 @@ class Earlier:
     """What `run.json` says of the earlier parts of a run, for the one that is to follow.
 
     `parts` has an entry for each, `files` every file of theirs that is closed for good, `head` what stays the same.
+    `last_time_s` is that of their last row: times go on from there though the wall clock was set back meanwhile.
     """
 
     head: Mapping[str, Json]
     parts: Sequence[Json]
     interruptions: Sequence[Json]
     files: Sequence[Json] = field(default_factory=list)
+    last_time_s: float = 0.0
 
     @property
     def number(self) -> int:
@@ -78,7 +81,27 @@ def earlier_of(manifest: Document, folder: Path, interruption: Mapping[str, Json
         parts=parts,
         interruptions=[*manifest.get("interruptions", []), dict(interruption)],
         files=files,
+        last_time_s=_last_time_s([folder / str(part["samples_file"]) for part in parts]),
     )
+
+
+def _last_time_s(paths: Sequence[Path]) -> float:
+    """The time of the last row of these samples files; 0 where there is none. Raises RecordError."""
+    found_s = 0.0
+    for path in paths:
+        if has_header(path):
+            times = Scan(path, columns=("time_s",)).tail().numbers["time_s"]
+            found_s = max(found_s, float(times[-1]) if len(times) else 0.0)
+    return found_s
+
+
+def has_header(path: Path) -> bool:
+    """Whether a samples file was begun: a part that broke off at once may have left none, or a piece of its header."""
+    try:
+        with open(path, "rb") as file:
+            return file.readline(CHUNK_BYTES).endswith(b"\n")
+    except FileNotFoundError:
+        return False
 
 
 def file_entry(path: Path) -> dict[str, Json]:

@@ -24,7 +24,7 @@ from numpy.typing import NDArray
 from ..errors import RecordError
 from .events import from_rfc3339
 from .folder import CYCLES_FILE, EVENTS_FILE, FORMAT, NOTES_FILE, RUN_FILE
-from .parts import parts_of, whole_account
+from .parts import has_header, parts_of, whole_account
 from .scan import read_ticks
 
 CHUNK_BYTES = 4 * 1024 * 1024
@@ -155,16 +155,7 @@ def sample_files(folder: Path) -> list[Path]:
     on over all of them. Raises RecordError.
     """
     paths = [folder / str(part["samples_file"]) for part in parts_of(read_manifest(folder))]
-    return [path for path in paths if _has_header(path)]
-
-
-def _has_header(path: Path) -> bool:
-    """Whether a samples file was begun: a part that broke off at once may have left none, or a piece of its header."""
-    try:
-        with open(path, "rb") as file:
-            return file.readline(CHUNK_BYTES).endswith(b"\n")
-    except FileNotFoundError:
-        return False
+    return [path for path in paths if has_header(path)]
 
 
 def read_cycles(folder: Path) -> tuple[list[Document], int]:
@@ -262,7 +253,7 @@ def _audit_part(folder: Path, entry: Document, events: list[Document], *, last: 
     path = folder / str(entry["samples_file"])
     where = f"part {entry['part']}: " if several else ""
     finished = entry.get("status") == "finished"
-    ticks, torn_bytes = read_ticks(path) if finished or _has_header(path) else (np.empty(0, np.int64), 0)
+    ticks, torn_bytes = read_ticks(path) if finished or has_header(path) else (np.empty(0, np.int64), 0)
     statements: list[str] = []
     if not finished and last:
         statements.append(_how_it_broke_off(ticks, events))

@@ -103,8 +103,10 @@ class Recorder:
         self._start = start
         self._clock = clock
         self._method = method or SpeedMethod()
-        offset = round((start.unix_s - folder.started_unix_s) * 1e6 / tick_us) if folder.earlier else 0
-        self._when = RunTime(tick_us, start.tick - offset, start.host_s, start.unix_s)
+        since_s = 0.0
+        if folder.earlier is not None:
+            since_s = max(start.unix_s - folder.started_unix_s, folder.earlier.last_time_s)
+        self._when = RunTime(tick_us, start.tick - round(since_s * 1e6 / tick_us), start.host_s, start.unix_s)
         self._limits_digest = limits_digest
         self._user_on_trouble = on_trouble
         self._printer = self._new_printer(columns)
