@@ -11,7 +11,7 @@ LEASE_MS = 300
 WRAP = 1 << 32
 
 
-@check("ARM-1 ARM-2 ARM-3 S6 LIMIT-5 DISARM-1 BAD-5", Power.ARMED)
+@check("ARM-1 ARM-2 ARM-3 S6 LIMIT-5 DISARM-1 BAD-5 FIELD-5", Power.ARMED)
 def arming(trial: Trial) -> None:
     """`arm` asks for the right digest, a lease within its limits and state off; `disarm` ends it."""
     talk, digest = trial.talk, trial.digest
@@ -22,6 +22,8 @@ def arming(trial: Trial) -> None:
             continue
         trial.refused(body, "digest", "ARM-2 S6")
         trial.talk.ask("stop 0")
+    for spelt in ("", f"{digest[:7]}", f"0{digest}", f"{digest[:7]}g", f"{digest} 0", "ABCDEF00"):
+        trial.refused(f"arm {longest} {spelt}".rstrip(), "args", "FIELD-5 BAD-5")
     trial.refused(f"arm 49 {digest}", "range", "ARM-1")
     trial.refused(f"arm {longest + 1} {digest}", "range", "ARM-1")
     first = trial.arm()

@@ -32,7 +32,7 @@ def _off_in_tick(trial: Trial, tick: int) -> None:
     trial.require(duty == 0, "TRIP-1", f"the duty is {duty} in the tick of the trip")
 
 
-@check("TRIP-1 TRIP-3 CLEAR-1 WHY-1 S5 LIMIT-4", Power.MOTOR)
+@check("TRIP-1 TRIP-3 CLEAR-1 WHY-1 S5 LIMIT-4", Power.MOTOR, current=True)
 def overcurrent(trial: Trial) -> None:
     """More than `trip_ma` for `trip_ticks` in a row trips in that tick and has the bridge off in it."""
     talk, axis = trial.talk, trial.wish.axis
@@ -101,7 +101,7 @@ def supply_trips(trial: Trial) -> None:
         latched(trial, since, trip)
 
 
-@check("TRIP-8 CLEAR-1 S5", Power.ARMED)
+@check("TRIP-8 CLEAR-1 S5", Power.ARMED, current=True)
 def overload(trial: Trial) -> None:
     """The thermal model trips in the step in which its heat reaches the limit, and lets go at 7/8 of it."""
     talk, axis = trial.talk, trial.wish.axis
@@ -285,7 +285,8 @@ def trail(trial: Trial) -> None:
                 same = row.duty[axis] == block.columns[0][i] and (
                     not row.counts or row.counts[axis] == block.columns[1][i]
                 )
-                trial.require(same, "TRAIL-1", f"the trail of tick {row.tick} differs from its sample")
+                record = [column[i] for column in block.columns]
+                trial.require(same, "TRAIL-1", f"the trail of tick {row.tick} has {record}, the sample {row}")
         last = talk.ticks.near(block.first_tick) + block.rows - 1
         first += block.rows
         if first >= total or not block.rows:

@@ -45,6 +45,13 @@ def _logged(trial: Trial, period: int, mask: int, form: str, ticks: int) -> tupl
     return first, int(ended.fields[1]), talk.data_lines(since)
 
 
+def _numbered(trial: Trial, lines: list[Data], lost: int) -> None:
+    """Each line has the number after the last one's, where none was dropped."""
+    numbers = [line.number for line in lines]
+    wanted = [(numbers[0] + i) % 256 for i in range(len(numbers))] if numbers else []
+    trial.require(lost > 0 or numbers == wanted, "KIND-1", f"the data lines have the numbers {numbers}")
+
+
 def _account(trial: Trial, blocks: list[SampleBlock], first: int, period: int, mask: int, made: int, lost: int) -> None:
     """Every sample is there, where it belongs, and once."""
     ticks = [(b.first_tick + i * b.period) % (1 << 32) for b in blocks for i in range(b.rows)]
@@ -81,6 +88,7 @@ def packed_log(trial: Trial) -> None:
         trial.require(counted == made, "COUNT-1 LOG-2", f"the log made {made} samples, `counters` has {counted}")
         trial.require(not any(" " in line.body for line in lines), "DATA-2", "a packed log has a plain line")
         blocks = [decode_data(line.body) for line in lines if " " not in line.body]
+        _numbered(trial, lines, after[DROPPED] - before[DROPPED])
         _account(trial, blocks, first, period, chosen, made, after[DROPPED] - before[DROPPED])
         _values(trial, blocks, chosen)
         long = [b for b in blocks if (b.rows - 1) * b.period > FLUSH_TICKS]
@@ -96,6 +104,7 @@ def plain_log(trial: Trial) -> None:
     after = trial.counters()
     trial.require(all(" " in line.body for line in lines), "DATA-1", "a plain log has a packed line")
     blocks = [decode_data(line.body) for line in lines]
+    _numbered(trial, lines, after[DROPPED] - before[DROPPED])
     _account(trial, blocks, first, 40, mask, made, after[DROPPED] - before[DROPPED])
     _values(trial, blocks, mask)
 

@@ -38,12 +38,13 @@ class Power(Enum):
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Check:
-    """One check: the clauses it covers, in a sentence what it does, and what it switches on."""
+    """One check: the clauses it covers, what it does in a sentence, what it switches on; `current`: it samples that."""
 
     name: str
     clauses: tuple[str, ...]
     text: str
     power: Power
+    current: bool = False
     run: Callable[[Trial], None]
 
 
@@ -67,6 +68,10 @@ class Result:
 
 class Untested(Exception):
     """A check cannot be made on this board; the text says why."""
+
+
+class Missing(Untested):
+    """Samples that a check judges by were dropped on a slow link; another try may have them."""
 
 
 class Broken(Exception):
@@ -254,11 +259,11 @@ class Trial:
         return None if self.witness is None else self.witness.history.get(tick)
 
     def rows(self, first: int, last: int) -> list[Row]:
-        """The samples of these ticks; Untested where one is missing."""
+        """The samples of these ticks; Missing where one is missing."""
         rows = [self.row(tick) for tick in range(first, last + 1)]
         missing = sum(row is None for row in rows)
         if missing:
-            raise Untested(f"{missing} of {len(rows)} samples are missing: this link cannot carry one sample a tick")
+            raise Missing(f"{missing} of {len(rows)} samples are missing: this link cannot carry one sample a tick")
         return [row for row in rows if row is not None]
 
     def duties(self, first: int, last: int) -> list[int]:
@@ -298,14 +303,16 @@ class Trial:
 _ALL: list[Check] = []
 
 
-def check(clauses: str, power: Power = Power.NONE) -> Callable[[Callable[[Trial], None]], Callable[[Trial], None]]:
+def check(
+    clauses: str, power: Power = Power.NONE, *, current: bool = False
+) -> Callable[[Callable[[Trial], None]], Callable[[Trial], None]]:
     """Declare a function as a check: its name is the function's, its text the docstring's first sentence."""
 
     def declare(run: Callable[[Trial], None]) -> Callable[[Trial], None]:
         text = re.split(r"(?<=[.])\s|\n\n", (run.__doc__ or "").strip())[0].replace("\n", " ")
         text = re.sub(r" +", " ", text)
         name = run.__name__.replace("_", "-")
-        _ALL.append(Check(name=name, clauses=tuple(clauses.split()), text=text, power=power, run=run))
+        _ALL.append(Check(name=name, clauses=tuple(clauses.split()), text=text, power=power, current=current, run=run))
         return run
 
     return declare
