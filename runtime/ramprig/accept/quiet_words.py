@@ -76,7 +76,7 @@ def states(trial: Trial) -> None:
 
 @check("BAD-5 FIELD-1 FIELD-3 FIELD-4 ORDER-4 ORDER-5 STOP-2 TRAIL-2 LOG-1 LOG-5 LIMIT-1")
 def refusals(trial: Trial) -> None:
-    """Every word but `arm` refuses too few and too many arguments, a missing index, a value out of range, and the wrong state."""
+    """Every word but `arm` refuses wrong numbers of arguments, a missing index, what is out of range, a wrong state."""
     who = trial.identity
     for word in WORDS.values():
         if word.name == "arm":  # however wrong, not before power may be switched on

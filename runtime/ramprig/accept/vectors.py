@@ -1,7 +1,7 @@
 """The protocol's vectors that a live board can answer: which they are, read from the files that the codec is tested by.
 
-Of `lines.json` every line for the board that ends and says nothing of arming; of `exchanges.json` those that need neither inputs
-nor limits nor a board of their own, and whose answers are the same on any board.
+Of `lines.json` every line for the board that ends and says nothing of arming; of `exchanges.json` those that need
+neither inputs nor limits nor a board of their own, and whose answers are the same on any board.
 """
 
 from __future__ import annotations
