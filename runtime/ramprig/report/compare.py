@@ -90,8 +90,8 @@ def _range_rows(reads: list[Read]) -> list[list[str]]:
         name, unit = label_of(column)
         cells = []
         for read in reads:
-            low, mean, high = read.digest.totals.get(column, (float("nan"),) * 3)
-            cells.append(page.text(f"{low:.4g} / {mean:.4g} / {high:.4g}"))
+            found = read.digest.totals.get(column)
+            cells.append(OTHERWISE if found is None else page.text(" / ".join(f"{value:.4g}" for value in found)))
         rows.append([page.text(f"{name}, {unit} (least / mean / greatest)"), *cells])
     return rows
 

@@ -87,8 +87,8 @@ def render(reads: list[Read], wish: Wish) -> str:
     if len(reads) > 1:
         parts.append(page.section(number, "Conditions of the runs compared", number_of, compared(reads)))
         number += 1
-    for read in reads:
-        prefix = f"{read.facts.name}: " if len(reads) > 1 else ""
+    for place, read in enumerate(reads, 1):
+        prefix = f"Run {place}: " if len(reads) > 1 else ""
         for name, content in _parts_of(read, wish, figures):
             parts.append(page.section(number, prefix + name, number_of, content))
             number += 1

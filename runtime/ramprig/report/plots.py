@@ -19,6 +19,7 @@ Floats = NDArray[np.float64]
 
 SPANS = ((7200.0, 3600.0, "h"), (180.0, 60.0, "min"), (0.0, 1.0, "s"))
 TRIP_BEFORE_S, TRIP_AFTER_S = 0.25, 0.1
+SPEED_OVER_S = 0.008
 COLUMN_TEXT = {
     "duty_pct": ("duty at the bridge", "%"),
     "speed_rpm": ("speed", "rpm"),
@@ -260,9 +261,9 @@ def trip_record(event: Document, look: Around) -> list[Plot]:
 
 
 def _speed_of(times: Floats, counts: Floats, counts_per_rev: float) -> Floats:
-    """Speed over the last 20 ms, or since the sample before where those are farther apart."""
+    """Speed over the last SPEED_OVER_S, or since the sample before where those are farther apart."""
     places = np.arange(len(times))
-    since = np.minimum(np.searchsorted(times, times - 0.02), np.maximum(places - 1, 0))
+    since = np.minimum(np.searchsorted(times, times - SPEED_OVER_S), np.maximum(places - 1, 0))
     with np.errstate(invalid="ignore", divide="ignore"):
         speed = (counts - counts[since]) / (times - times[since])
     if counts_per_rev > 0:
