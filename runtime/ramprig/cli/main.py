@@ -31,6 +31,7 @@ COMMANDS = {
     "doctor": "find out why a bench cannot be reached, or how well it is",
     "measure": "check a motor's wiring; measure a motor, a servo or the link",
     "accept": "check a board of your own against the protocol, clause by clause",
+    "forecast": "tell what a run will do, within which bounds, and the odds that it trips",
     "schema": "print the JSON Schema of bench or sequence files, for editors",
 }
 """Every command is a module of this room by the same name."""

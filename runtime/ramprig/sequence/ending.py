@@ -19,7 +19,7 @@ from .cycle_run import CycleBook
 from .executive import Executive, Progress
 from .listeners import Listeners
 from .outcome import Ended, Outcome, Tally, Verdict
-from .plan import Plan
+from .plan import Part, Plan
 from .rig import Rig
 from .tripsay import explain_trip
 
@@ -75,15 +75,17 @@ def run_plan(
     book: CycleBook | None = None,
     tally: Tally | None = None,
     bounds: Bounds | None = None,
+    begun: Callable[[int, Part], None] | None = None,
 ) -> Outcome:
     """Log, arm, carry the plan out, and end with the outputs off; tells how it ended.
 
     `clock` is the port's, `listeners` are those of the session. `book` counts the cycles and `tally` the expectations,
-    from what earlier parts of the run have done. Raises nothing for what device, link, disk or user do:
+    from what earlier parts of the run have done; `begun` is told of each step that begins. Raises nothing for what device, link, disk or user do:
     that is the outcome. Any other exception stops the motors first.
     """
     run = _Run(session, plan, rig, clock, keeper, listeners, progress)
     run.begin_with(book, tally, bounds)
+    run.executive.begun = begun
     try:
         return run.whole()
     finally:

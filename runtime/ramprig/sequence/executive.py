@@ -91,7 +91,7 @@ class Executive:
     """One run of a plan. `tell` takes the events of the run, `progress` is called each time the loop comes round.
 
     `book` counts the cycles. `until_s` of the port's clock is when the run must end, whatever is left to do, with the
-    sentence `until_text`.
+    sentence `until_text`. `begun` is told of each step that begins, with its tick.
     """
 
     session: Session
@@ -103,6 +103,7 @@ class Executive:
     book: CycleBook | None = None
     until_s: float | None = None
     until_text: str = ""
+    begun: Callable[[int, Part], None] | None = None
     tally: Tally = field(default_factory=Tally)
     passes: int = 0
     part: Part | None = None
@@ -347,7 +348,9 @@ class Executive:
                 return
             heapq.heappop(self._agenda)
             match item:
-                case Begin(ends=ends, ramped=ramped):
+                case Begin(part=part, ends=ends, ramped=ramped):
+                    if self.begun is not None:
+                        self.begun(tick, part)
                     if ends is not None:
                         self._bearings.ramp_ends[ramped] = ends
                 case Pass(number=number, part=part):

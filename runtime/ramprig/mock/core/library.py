@@ -36,6 +36,12 @@ _SIGNATURES: dict[str, tuple[type[ctypes._SimpleCData] | None, Arguments]] = {  
     "store": (_HANDLE, (_HANDLE,)),
     "store_bytes": (ctypes.c_uint32, ()),
     "took_stored": (ctypes.c_int, (_HANDLE,)),
+    "watch_new": (_HANDLE, (ctypes.c_uint32, ctypes.c_uint32)),
+    "watch_free": (None, (_HANDLE,)),
+    "watch_hold": (None, (_HANDLE, ctypes.c_uint32, ctypes.c_uint32)),
+    "watch_take": (_HANDLE, (_HANDLE, _HANDLE)),
+    "run_watched": (ctypes.c_uint32, (_HANDLE, ctypes.c_uint32, _HANDLE)),
+    "set_winding": (None, (_HANDLE, ctypes.c_uint8, ctypes.c_double)),
 }
 
 

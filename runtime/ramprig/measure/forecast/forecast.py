@@ -1,0 +1,317 @@
+"""The forecast of a sequence on a bench: intervals, margins, duty types and the odds of a trip, as text and as JSON."""
+
+from __future__ import annotations
+
+import math
+from collections import Counter
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from ramprig.bench import Bench
+from ramprig.errors import UsageError
+from ramprig.extras import need
+from ramprig.measure.numbers.uncertainty import rounded_pair
+from ramprig.measure.refusal import NotMeasurable
+from ramprig.quantity import format_bytes, format_duration
+from ramprig.record.columns import predicted_bytes
+from ramprig.record.events import Json, jsonable
+from ramprig.sequence.columns import bench_columns
+from ramprig.sequence.compile import compile_plan
+from ramprig.sequence.plan import Plan
+from ramprig.sequence.reading import Sequence as Steps
+
+from .draws import Belief, belief_of
+from .dutytype import DutyType, duty_type
+from .limits import Margin, margins
+from .montecarlo import Draw, Job, draws_of
+from .play import core_is_there, play
+from .reduction import cut_of, marks_of
+
+DRAWS = 200
+COVERAGE = 0.95
+ENAMEL_C = 105.0
+"""What the winding of class A stands for long (IEC 60085, from memory); small motors say seldom what theirs does."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ForecastWish:
+    """How many draws, from which seed, on how many cores (None: all), within which time, reduced or not."""
+
+    draws: int = DRAWS
+    seed: int = 1
+    workers: int | None = None
+    most_s: float = 600.0
+    reduce: bool = True
+    on_core: bool | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class Interval:
+    """A forecast: the median and the ends between which 95 % of the draws lie, in `unit`."""
+
+    median: float
+    low: float
+    high: float
+    unit: str
+
+    @classmethod
+    def of(cls, values: Sequence[float], unit: str) -> Interval:
+        """From the draws: the quantiles i/(n + 1), which a further draw stays within with this probability."""
+        tail = (1.0 - COVERAGE) / 2.0
+        low, median, high = np.quantile(np.asarray(values, float), [tail, 0.5, 1.0 - tail], method="weibull")
+        return cls(float(median), float(low), float(high), unit)
+
+    def holds(self, value: float, *, within: float = 0.0) -> bool:
+        """Whether a value lies between the ends, give or take `within`, the value's own resolution."""
+        return self.low - within <= value <= self.high + within
+
+    def __str__(self) -> str:
+        half = (self.high - self.low) / 2.0
+        if half <= 0.0:
+            return f"{self.median:.6g} {self.unit} in every draw"
+        _, rounded = rounded_pair(self.median, half)
+        places = len(rounded.partition(".")[2])
+        low, median, high = (f"{value:.{places}f}" for value in (self.low, self.median, self.high))
+        return f"{median} {self.unit} ({low} to {high})"
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Odds:
+    """So many of so many draws; `low` and `high` are the 95 % confidence bounds (Clopper and Pearson 1934)."""
+
+    times: int
+    of: int
+    low: float
+    high: float
+
+    @classmethod
+    def count(cls, times: int, of: int) -> Odds:
+        """The bounds by quantiles of the beta distribution."""
+        stats = need("scipy.stats", purpose="the bounds of odds")
+        low = float(stats.beta.ppf(0.025, times, of - times + 1)) if times else 0.0
+        high = float(stats.beta.ppf(0.975, times + 1, of - times)) if times < of else 1.0
+        return cls(times=times, of=of, low=low, high=high)
+
+    def __str__(self) -> str:
+        share = 100 * self.times / self.of
+        bounds = f"between {100 * self.low:.2g} % and {100 * self.high:.2g} %"
+        return f"{share:.2g} % ({self.times} of {self.of} draws; {bounds})"
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Forecast:
+    """What is forecast. `values` by name such as `vent.peak_current`; `trips` are causes with how often."""
+
+    name: str
+    sources: Mapping[str, str]
+    how: tuple[str, ...]
+    values: Mapping[str, Interval]
+    margins: tuple[Margin, ...]
+    duty_types: Mapping[str, DutyType]
+    starts_per_hour: Mapping[str, float]
+    log_bytes: int
+    trip: Odds
+    failure: Odds
+    trips: Mapping[str, int]
+    failures: Mapping[str, int]
+    notes: tuple[str, ...]
+    draws: tuple[Draw, ...] = field(repr=False, default=())
+
+    def text(self) -> list[str]:
+        """For the terminal, the sentence last."""
+        width = max(len(name) for name in self.values)
+        lines = [self.name, *(f"from      {name}: {source}" for name, source in self.sources.items())]
+        lines += [f"how       {text}" for text in self.how]
+        lines += [f"  {name.replace('_', ' '):<{width}}  {value}" for name, value in self.values.items()]
+        lines += [
+            f"  {name}: {rate:.3g} starts per hour; {self.duty_types[name]}"
+            for name, rate in self.starts_per_hour.items()
+        ]
+        lines += [f"limit     {margin.text()}" for margin in self.margins]
+        lines.append(f"log       about {format_bytes(self.log_bytes)}")
+        lines.append(f"trips     {self.trip}")
+        lines += [f"            {times} x {cause}" for cause, times in self.trips.items()]
+        if self.failure.times:
+            lines.append(f"failures  {self.failure}")
+            lines += [f"            {times} x {what}" for what, times in self.failures.items()]
+        lines += [f"note      {note}" for note in self.notes]
+        return [*lines, self.sentence]
+
+    @property
+    def sentence(self) -> str:
+        """The whole of it in a sentence."""
+        took = self.values["duration"]
+        tight = [f"the {one.name} of {one.subject}" for one in self.margins if one.verdict == "tight"]
+        risk = "no draw trips" if not self.trip.times else f"it trips in {100 * self.trip.times / self.trip.of:.2g} %"
+        limits = f"; too tight: {', '.join(tight)}" if tight else ""
+        return f"{self.name}: takes about {format_duration(round(took.median))}; {risk}{limits}."
+
+    def to_json(self) -> dict[str, Json]:
+        """For programs."""
+        return {
+            "forecast": self.name,
+            "sources": dict(self.sources),
+            "how": list(self.how),
+            "values": {name: jsonable(_as_dict(value)) for name, value in self.values.items()},
+            "limits": [jsonable(margin) for margin in self.margins],
+            "duty_types": {name: jsonable(kind) for name, kind in self.duty_types.items()},
+            "starts_per_hour": dict(self.starts_per_hour),
+            "log_bytes": self.log_bytes,
+            "odds": {"trip": jsonable(self.trip), "failure": jsonable(self.failure)},
+            "trips": dict(self.trips),
+            "failures": dict(self.failures),
+            "notes": list(self.notes),
+            "sentence": self.sentence,
+        }
+
+
+def _as_dict(value: Interval) -> dict[str, float | str]:
+    return {"median": value.median, "low": value.low, "high": value.high, "unit": value.unit, "coverage": COVERAGE}
+
+
+def forecast(
+    sequence: Steps,
+    bench: Bench,
+    wish: ForecastWish,
+    *,
+    belief: Belief | None = None,
+    progress: Callable[[int, int], None] = lambda done, of: None,
+) -> Forecast:
+    """Forecast a sequence. `belief` takes the place of what the bench file says.
+
+    Raises `FileError` where the plan does not fit the bench, NotMeasurable where too little is known of a motor or no
+    draw comes to its end, and UsageError for a wish that makes no sense.
+    """
+    if wish.draws < 20:
+        raise UsageError(f"{wish.draws} draws: at least 20")
+    plan = compile_plan(sequence, bench)
+    believed = belief_of(bench) if belief is None else belief
+    on_core = core_is_there(believed.setup) if wish.on_core is None else wish.on_core
+    cut = cut_of(sequence, lambda steps: _least_s(steps, bench)) if wish.reduce else None
+    job = Job(
+        bench=bench,
+        belief=believed,
+        cold=plan if cut is None else compile_plan(cut.cold, bench),
+        hot=None if cut is None else compile_plan(cut.hot, bench),
+        cut=cut,
+        seed=wish.seed,
+        on_core=on_core,
+    )
+    draws = draws_of(job, wish.draws, workers=wish.workers, most_s=wish.most_s, progress=progress)
+    return _told(plan, bench, job, wish, draws)
+
+
+def _least_s(steps: Steps, bench: Bench) -> float:
+    plan = compile_plan(steps, bench)
+    return plan.totals.least * plan.tick_us / 1e6
+
+
+def _told(plan: Plan, bench: Bench, job: Job, wish: ForecastWish, draws: list[Draw]) -> Forecast:
+    whole = [draw for draw in draws if draw.whole]
+    trips = Counter(_shortened(draw.trip) for draw in draws if draw.trip)
+    if len(whole) < 2:
+        common = trips.most_common(1)[0][0] if trips else next((draw.failed for draw in draws if draw.failed), "")
+        raise NotMeasurable(
+            f"only {len(whole)} of {len(draws)} draws come to their end: {common}",
+            wanted="mend the limit or the sequence first; `ramprig rehearse` shows where it ends",
+        )
+    values = _values(bench, draws, whole)
+    hours = max(values["duration"].median, 1e-3) / 3600.0
+    starts = {name: count / hours for name, count in plan.totals.starts.items() if count}
+    if job.cut is not None and job.cut.for_s is not None:
+        starts = {name: rate * _passes_share(job, draws) for name, rate in starts.items()}
+    rows = int(values["duration"].median * 1e6 / plan.tick_us / plan.period_ticks) + 1
+    failures = Counter(draw.failed for draw in draws if draw.failed)
+    return Forecast(
+        name=plan.name,
+        sources={name: known.source for name, known in job.belief.motors.items()},
+        how=_how(job, wish, draws),
+        values=values,
+        margins=tuple(margins(bench, draws, tick_us=plan.tick_us)),
+        duty_types=_duty_types(job, starts),
+        starts_per_hour=starts,
+        log_bytes=predicted_bytes(bench_columns(bench, tick_us=plan.tick_us), rows, period_ticks=plan.period_ticks),
+        trip=Odds.count(sum(trips.values()), len(draws)),
+        failure=Odds.count(sum(failures.values()), len(draws)),
+        trips=dict(trips.most_common(5)),
+        failures=dict(failures.most_common(3)),
+        notes=_notes(job, draws, whole, values),
+        draws=tuple(draws),
+    )
+
+
+def _shortened(trip: str) -> str:
+    """The cause without the numbers of one draw, so that alike ones count as one."""
+    return trip.partition(":")[0]
+
+
+def _passes_share(job: Job, draws: list[Draw]) -> float:
+    """Passes as they are over passes as the plan reckons them, which does not know the waits."""
+    found = float(np.median([draw.passes for draw in draws if draw.whole]))
+    assert job.cut is not None, "asked only of a reduced run"
+    assert job.cut.for_s is not None, "asked only of a run for a time"
+    cold = job.cold.totals
+    least_s = cold.least * job.cold.tick_us / 1e6 / 3
+    return min(1.0, found / max(1.0, math.ceil(job.cut.for_s / least_s)))
+
+
+def _values(bench: Bench, draws: list[Draw], whole: list[Draw]) -> dict[str, Interval]:
+    values = {
+        "duration": Interval.of([draw.elapsed_s for draw in whole], "s"),
+        "energy": Interval.of([draw.energy_j / 1000.0 for draw in whole], "kJ"),
+        "supply_high": Interval.of([draw.bus_high_v for draw in draws], "V"),
+        "supply_low": Interval.of([draw.bus_low_v for draw in draws], "V"),
+    }
+    for motor in bench.motors:
+        name = motor.name
+        per_rpm = 60.0 / math.tau / float(motor.gear_ratio)
+        values[f"{name}.peak_current"] = Interval.of([draw.motors[name].peak_a for draw in draws], "A")
+        values[f"{name}.speed"] = Interval.of([draw.motors[name].speed_rad_s * per_rpm for draw in draws], "rpm")
+        values[f"{name}.hottest"] = Interval.of([draw.motors[name].hottest_c for draw in whole], "degC")
+        values[f"{name}.end_temperature"] = Interval.of([draw.motors[name].end_c for draw in whole], "degC")
+    return values
+
+
+def _how(job: Job, wish: ForecastWish, draws: list[Draw]) -> tuple[str, ...]:
+    device = "the firmware core and plant in C" if job.on_core else "the mock in Python"
+    lines = [f"{len(draws)} draws (seed {wish.seed}) on {device}; each figure drawn on its own, correlations left out"]
+    if len(draws) - 1 < wish.draws:
+        lines.append(f"{wish.draws} draws were asked for; more would take longer than {format_duration(wish.most_s)}")
+    if job.cut is not None:
+        lines.append(job.cut.text())
+    lines.append("values: median, and the ends between which 95 % of the draws lie")
+    return tuple(lines)
+
+
+def _duty_types(job: Job, starts: Mapping[str, float]) -> dict[str, DutyType]:
+    """From the run with every figure at its value."""
+    run = play(job.cold, job.bench, job.belief.setup, seed=1, on_core=job.on_core)
+    found = {}
+    for name, motor in run.motors.items():
+        rows = slice(0, len(motor.duty))
+        if job.cut is not None:
+            marks = marks_of(run, job.cut)
+            rows = slice(marks[1], marks[2])
+        tau_s = job.belief.motors[name].figures["thermal_time"].value
+        kind = duty_type(motor.duty[rows], motor.square_a2[rows], run.row_s, tau_s=tau_s, periodic=job.cut is not None)
+        if name in starts or kind.word != "none":
+            found[name] = kind
+    return found
+
+
+def _notes(job: Job, draws: list[Draw], whole: list[Draw], values: Mapping[str, Interval]) -> tuple[str, ...]:
+    notes = []
+    if len(whole) < len(draws):
+        notes.append(f"time, energy and temperatures are of the {len(whole)} draws that come to their end")
+    for name, known in job.belief.motors.items():
+        if known.usual:
+            said = ", ".join(one.replace("_", " ") for one in known.usual)
+            notes.append(f"{name}: nothing says its {said}: a usual figure is taken, twice as uncertain")
+        if values[f"{name}.hottest"].high > ENAMEL_C:
+            notes.append(
+                f"{name}: its winding may pass {ENAMEL_C:g} degC, what class A stands (IEC 60085, from memory); the "
+                "board does not see it"
+            )
+    return tuple(notes)
