@@ -9,11 +9,11 @@ import math
 import random
 import time
 
-import motor_bench as bench
 import numpy as np
-import plant_bench
 import pytest
 
+import motor_bench as bench
+import plant_bench
 from ramprig.measure.identify import Identification, Instruments, identify
 from ramprig.measure.numbers.uncertainty import Measured
 from ramprig.measure.numbers.windows import Recording, unwrapped
@@ -80,7 +80,7 @@ def test_a_hundred_random_motors_lie_in_the_stated_intervals_in_90_to_99_of_100_
 @pytest.mark.soak
 def test_ten_minutes_at_1_khz_are_fitted_in_3_s() -> None:
     parameters = bench.random_bench(5)
-    passes = bench.both_ways(passes=45)
+    passes = bench.both_ways(passes=48)
     recording = bench.record(parameters, passes)
     recording = dataclasses.replace(
         recording,

@@ -107,7 +107,7 @@ def test_the_exponential_agrees_with_scipys() -> None:
 def test_a_pulse_at_rest_rises_with_the_electrical_time_constant() -> None:
     constants = MotorConstants(resistance_ohm=2.0, inductance_h=1e-3, constant_vs=0.02, inertia_kgm2=1e-6)
     states = motor.simulate(constants, np.full(10, 4.0), period_s=1e-4, motion=Motion.STILL)
-    assert states[0] == pytest.approx(constants.pulse_current_a(4.0, 1e-4 * np.arange(11)), rel=1e-10)
+    assert states[0] == pytest.approx(constants.pulse_current_a(4.0, 1e-4 * np.arange(11.0)), rel=1e-10)
     assert np.all(states[1:] == 0.0)
 
 

@@ -29,16 +29,22 @@ UNITS = ("ohm", "V*s", "N*m*s", "kg*m2", "H", "N*m")
 KEYS = ("resistance_20", "constant", "viscous", "inertia", "inductance", "coulomb")
 """The results' names, in the order of `joint.NAMES`."""
 
-FIRST_WINDOWS = 120
+FIRST_WINDOWS = 80
 """So many windows, the lively ones first, find the constants before all are used: the same end, sooner."""
 L_KNOWN_TO = 0.25
 """An inductance with a larger relative standard uncertainty is called not found; a choice of ours."""
 PUSH_SHARE = 0.8
 """A driven shaft counts as still only while the motor's torque stays below this share of the Coulomb friction."""
+ELECTRICAL_PERIODS = (0.1, 0.3, 0.6, 1.0, 1.7, 3.0, 10.0, 50.0, 300.0)
+"""Electrical time constants tried at first, in sample periods."""
+GOOD_FIT = 2.0
+"""Mean square of the residuals, over the noise first assumed, below which no other way is tried."""
 ROUNDS = 3
 """So often windows that do not fit the rest are left out of the first search."""
 MISFIT = 25.0
 """A window whose mean square residual exceeds so many times the median's is left out and named; a choice of ours."""
+LEAST_NOISE_A, LEAST_NOISE_RAD = 1e-7, 1e-8
+"""Readings are never taken to be better than this, so that data without any noise can be fitted, too."""
 FULL_RANGE = 0.995
 """From this share of its range on a current sensor counts as saturated."""
 MOST_LEFT_OUT = 0.25
@@ -148,7 +154,7 @@ def identify(recordings: Sequence[Recording], instruments: Instruments | None = 
     _check_signs(turning)
     warnings: list[str] = []
     solution, windows, noise = _fitted(windows, known, warnings)
-    if solution.free.count(L) and not _known(solution, L):
+    if not _inductance_known(solution, windows):
         warnings.append(
             "the inductance cannot be found at this sample period: log faster, or give pulses at a held shaft"
         )
@@ -179,8 +185,12 @@ def _check_signs(turning: Sequence[Window]) -> None:
         )
 
 
-def _known(solution: Solution, index: int) -> bool:
-    return math.sqrt(solution.covariance[index, index]) <= L_KNOWN_TO * abs(float(solution.values[index]))
+def _inductance_known(solution: Solution, windows: Sequence[Window]) -> bool:
+    """Whether the samples determine it: it is not at the least that they can tell, and its uncertainty is small."""
+    covariance, _ = _statistical(solution, windows)
+    least = joint.LEAST_PERIODS * min(window.period_s for window in windows) * solution.values[R]
+    found = float(solution.values[L])
+    return found > 1.5 * least and math.sqrt(covariance[L, L]) <= L_KNOWN_TO * found
 
 
 def _fitted(windows: list[Window], known: Instruments, warnings: list[str]) -> tuple[Solution, list[Window], Noise]:
@@ -196,18 +206,15 @@ def _fitted(windows: list[Window], known: Instruments, warnings: list[str]) -> t
 
     few = _liveliest(moving)
     for _ in range(ROUNDS):
-        solution = joint.solve(
-            few, start, free=[i for i in free if i not in (L, RISE)], bridge_ohm=known.bridge_ohm, noise=noise
-        )
-        solution = joint.solve(few, solution.values, free=free, bridge_ohm=known.bridge_ohm, noise=noise)
+        solution = _from_start(few, start, free, known, noise)
         kept, _ = _sorted_out(few, solution.sums)
         if len(kept) == len(few):
             break
         few = kept
     noise = _noise_found(solution.sums, len(solution.free), noise)
     windows = _trusted(windows, solution.values)
-    at_first = joint.sums(solution.values, windows, bridge_ohm=known.bridge_ohm, noise=noise)
-    kept, out = _sorted_out(windows, at_first)
+    before = joint.sums(solution.values, windows, bridge_ohm=known.bridge_ohm, noise=noise)
+    kept, out = _sorted_out(windows, before)
     if len(out) > MOST_LEFT_OUT * len(windows):
         raise NotMeasurable(
             f"{len(out)} of {len(windows)} stretches do not fit one motor with constant friction",
@@ -220,6 +227,41 @@ def _fitted(windows: list[Window], known: Instruments, warnings: list[str]) -> t
     )
     solution = joint.solve(kept, solution.values, free=free, bridge_ohm=known.bridge_ohm, noise=noise)
     return solution, kept, _noise_found(solution.sums, len(solution.free), noise)
+
+
+def _from_start(
+    windows: Sequence[Window], start: Array, free: Sequence[int], known: Instruments, noise: Noise
+) -> Solution:
+    """The first search: the inductance after the others, or with them, until one way leads to a good fit.
+
+    How good is judged by the middle window, so that a few that do not belong do not count. A fast winding (L/R of some
+    periods) is found by the first way, a slow one by the others.
+    """
+    found: list[Solution] = []
+    for with_others, guessed in ((False, True), (False, False), (True, True)):
+        values = start.copy()
+        if guessed:
+            values[L] = _best_inductance(windows, values, known, noise)
+        early = [index for index in free if index != RISE and (with_others or index != L)]
+        values = joint.solve(windows, values, free=early, bridge_ohm=known.bridge_ohm, noise=noise).values
+        if guessed and not with_others:
+            values = values.copy()
+            values[L] = _best_inductance(windows, values, known, noise)
+        found.append(joint.solve(windows, values, free=free, bridge_ohm=known.bridge_ohm, noise=noise))
+        if found[-1].settled and float(np.median(found[-1].sums.by_window)) < GOOD_FIT:
+            break
+    return min(found, key=lambda solution: float(np.median(solution.sums.by_window)))
+
+
+def _best_inductance(windows: Sequence[Window], values: Array, known: Instruments, noise: Noise) -> float:
+    """The inductance, of a row of them, that fits best as things stand: the fit has no slope to follow when far off."""
+    best = (math.inf, float(values[L]))
+    for periods in ELECTRICAL_PERIODS:
+        trial = values.copy()
+        trial[L] = periods * windows[0].period_s * (values[R] + known.bridge_ohm)
+        square = joint.sums(trial, windows, bridge_ohm=known.bridge_ohm, noise=noise).square
+        best = min(best, (square, float(trial[L])))
+    return best[1]
 
 
 def _step_rad(windows: Sequence[Window]) -> float:
@@ -261,7 +303,7 @@ def _noise_found(found: joint.Sums, free: int, noise: Noise) -> Noise:
     left = 1.0 - (found.states + free) / found.readings
     current = math.sqrt(found.square_current / (found.count_current * left))
     angle = math.sqrt(found.square_angle / (found.count_angle * left))
-    return Noise(noise.current_a * current, noise.angle_rad * angle)
+    return Noise(max(noise.current_a * current, LEAST_NOISE_A), max(noise.angle_rad * angle, LEAST_NOISE_RAD))
 
 
 def _result(

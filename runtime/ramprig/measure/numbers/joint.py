@@ -31,13 +31,17 @@ _POSITIVE = [R, K, J, L]
 _DYNAMIC = {Motion.TURNING: [R, K, B, J, L], Motion.COASTING: [B, J], Motion.STILL: [R, L]}
 _STATES = {Motion.TURNING: 3, Motion.COASTING: 2, Motion.STILL: 1, Motion.IDLE: 0}
 
-MOST_STEPS = 40
+MOST_STEPS = 60
 SETTLED = 0.01
 """The search has settled when no parameter wants to move by more than this share of its standard uncertainty."""
 LARGEST_CHANGE = 2.5
 """A positive parameter changes by at most this factor a step."""
 NODES = 7
 """Resistances at which the motion is worked out exactly; windows' own ones lie between."""
+LEAST_DIAGONAL = 1e-150
+"""Stands for a parameter without any effect, so that it can be scaled by."""
+LEAST_PERIODS = 0.02
+"""Least L/R in sample periods: anything less is the same to the samples."""
 SINGULAR = 1e-11
 """Below this eigenvalue of the normal equations, with unit diagonal, a combination of parameters is undetermined."""
 
@@ -225,7 +229,7 @@ def _projected(left: Array, basis: Array) -> tuple[Array, Array]:
     best = np.zeros(len(basis))
     for _ in range(2):  # the second pass takes back what rounding left of the first
         gram = rows @ rows.T
-        size = np.sqrt(np.maximum(np.diag(gram), 1e-300))
+        size = np.sqrt(np.maximum(np.diag(gram), LEAST_DIAGONAL))
         more = np.linalg.solve(gram / np.outer(size, size) + 1e-14 * np.eye(len(size)), rows @ left.ravel() / size)
         more /= size
         best += more
@@ -243,7 +247,7 @@ def sums(values: Array, windows: Sequence[Window], *, bridge_ohm: float, noise: 
         rows = np.concatenate([found.slopes, found.basis, left[None]]).reshape(9 + states, left.size)
         gram = rows @ rows.T
         if states:
-            size = np.sqrt(np.maximum(np.diag(gram)[8:-1], 1e-300))
+            size = np.sqrt(np.maximum(np.diag(gram)[8:-1], LEAST_DIAGONAL))
             cross = gram[8:-1, :] / size[:, None]
             own = gram[8:-1, 8:-1] / np.outer(size, size) + 1e-14 * np.eye(states)
             gram = gram - cross.T @ np.linalg.solve(own, cross)
@@ -284,6 +288,7 @@ def solve(windows: Sequence[Window], start: Array, *, free: Sequence[int], bridg
         raise UsageError("nothing to fit: no window of the recordings can be used")
     chosen = np.array(sorted(free))
     values = start.copy()
+    period_s = min(window.period_s for window in windows)
     now = sums(values, windows, bridge_ohm=bridge_ohm, noise=noise)
     damping = 1e-6
     settled = False
@@ -292,12 +297,18 @@ def solve(windows: Sequence[Window], start: Array, *, free: Sequence[int], bridg
         if expected < SETTLED**2 * len(chosen):
             settled = True
             break
-        further = _limited(values, chosen, step)
-        then = sums(further, windows, bridge_ohm=bridge_ohm, noise=noise)
+        further = _limited(values, chosen, step, period_s)
+        # A trial step may lead where the motion overflows: it then counts as worse, and a shorter one is taken.
+        with np.errstate(all="ignore"):
+            then = sums(further, windows, bridge_ohm=bridge_ohm, noise=noise)
         if then.square <= now.square:
             gained = now.square - then.square
             values, now = further, then
-            damping = max(damping / 10.0, 1e-12)
+            # Less damping only where the linear forecast was good, else a curved valley takes two trials a step.
+            if gained > 0.75 * expected:
+                damping = max(damping / 10.0, 1e-12)
+            elif gained < 0.25 * expected:
+                damping *= 3.0
             if gained < SETTLED**2:
                 settled = True
                 break
@@ -312,25 +323,27 @@ def solve(windows: Sequence[Window], start: Array, *, free: Sequence[int], bridg
 def _step(now: Sums, chosen: NDArray[np.int64], damping: float) -> tuple[Array, float]:
     """The damped step of the free parameters, and how much it lowers the sum of squares if all is linear."""
     matrix, vector = now.matrix[np.ix_(chosen, chosen)], now.vector[chosen]
-    size = np.sqrt(np.maximum(np.diag(matrix), 1e-300))
+    size = np.sqrt(np.maximum(np.diag(matrix), LEAST_DIAGONAL))
     scaled = matrix / np.outer(size, size)
     step = np.linalg.solve(scaled + (damping + 1e-14) * np.eye(len(chosen)), vector / size)
     return step / size, float(step @ (vector / size))
 
 
-def _limited(values: Array, chosen: NDArray[np.int64], step: Array) -> Array:
+def _limited(values: Array, chosen: NDArray[np.int64], step: Array, period_s: float) -> Array:
     """Values after the step, positive ones kept positive."""
     further = values.copy()
     further[chosen] += step
     for index in _POSITIVE:
         further[index] = np.clip(further[index], values[index] / LARGEST_CHANGE, values[index] * LARGEST_CHANGE)
+    if L in chosen:
+        further[L] = max(further[L], LEAST_PERIODS * period_s * further[R])
     return further
 
 
 def _covariance(matrix: Array, chosen: NDArray[np.int64]) -> tuple[Array, tuple[tuple[str, ...], ...]]:
     """Inverse of the normal equations, and the combinations that they do not determine."""
     part = matrix[np.ix_(chosen, chosen)]
-    size = np.sqrt(np.maximum(np.diag(part), 1e-300))
+    size = np.sqrt(np.maximum(np.diag(part), LEAST_DIAGONAL))
     levels, frame = np.linalg.eigh(part / np.outer(size, size))
     weak = tuple(
         tuple(NAMES[chosen[place]] for place in np.flatnonzero(np.abs(direction) > 0.2))
@@ -351,7 +364,7 @@ def scatter(found: Sums, free: Sequence[int]) -> Array:
     """
     chosen = np.array(sorted(free))
     count = len(found.by_window)
-    size = np.sqrt(np.maximum(np.diag(found.matrix)[chosen], 1e-300))
+    size = np.sqrt(np.maximum(np.diag(found.matrix)[chosen], LEAST_DIAGONAL))
     scale = np.outer(size, size)
     moves = []
     for matrix, score in zip(found.matrices, found.scores, strict=True):
