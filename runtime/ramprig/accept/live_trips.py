@@ -178,9 +178,8 @@ def stall(trial: Trial) -> None:
     tick, notice = trial.tripped(since, Trip.STALL, "TRIP-5", timeout_s=5.0)
     talk.beat_s = None
     trial.come()
-    rows = trial.rows(start, tick)
     bound = trial.limits["stall_duty", axis]
-    pushed = next((row.tick for row in rows if abs(row.duty[axis]) >= bound), None)
+    pushed = next((t for t in range(start, tick) if abs(trial.duties(t, t)[0]) >= bound), None)
     wanted = None if pushed is None else pushed + ticks  # the guard sees the duty of the tick before
     trial.require(tick == wanted, "TRIP-5", f"stall in tick {tick}; {ticks} ticks of duty were over in {wanted}")
     trial.require(notice.fields[1:4:2] == (str(axis), str(ticks)), "TRIP-5", f"the trip tells {notice.fields}")
