@@ -31,9 +31,23 @@ def figures() -> dict[str, Measured]:
 
 @needs_avr
 @pytest.mark.process
-@pytest.mark.parametrize("name", ["static memory", "stack"])
+@pytest.mark.parametrize(
+    "name",
+    [
+        "static memory",
+        "stack",
+        "worst tick",
+        pytest.param("flash", marks=pytest.mark.xfail(strict=True, reason="not met: 27 of 16 kB, of the chip's 32")),
+    ],
+)
 def test_the_firmware_keeps_its_budget(name: str) -> None:
     assert figures()[name].fits, figures()[name]
+
+
+@needs_avr
+@pytest.mark.process
+def test_the_program_leaves_room_on_the_chip() -> None:
+    assert figures()["flash"].value <= 30 * 1024
 
 
 @needs_cc

@@ -8,17 +8,33 @@
 #define TEMPERATURE_BIT 17u
 #define SERVO_BIT  12u
 
-uint16_t rr_sampling_state_bits(const struct rr_device *device)
+static bool is_braking(const struct rr_device *device)
 {
     bool braking = false;
-    bool live = rr_latch_is_live(&device->latch);
     for (uint8_t i = 0; i < RR_AXES; i++) {
-        braking = braking || (live && device->axis[i].brake && device->axis[i].chain.duty == 0);
+        braking = braking || (device->axis[i].brake && device->axis[i].chain.duty == 0);
     }
-    return (uint16_t)(device->latch.state << RR_BITS_STATE_LOW | device->locked << RR_BITS_DWELL_LOCK_LOW |
-                      device->at_ceiling << RR_BITS_AT_CEILING_LOW | device->at_slew << RR_BITS_AT_SLEW_LOW |
-                      braking << RR_BITS_BRAKING_LOW | device->latch.trip << RR_BITS_TRIP_LOW);
+    return braking && rr_latch_is_live(&device->latch);
 }
+
+uint16_t rr_sampling_state_bits(const struct rr_device *device)
+{
+    uint8_t low = (uint8_t)(device->latch.state << RR_BITS_STATE_LOW); /* by bytes, and no shift by a variable */
+    if (device->locked) {
+        low |= 1u << RR_BITS_DWELL_LOCK_LOW;
+    }
+    if (device->at_ceiling) {
+        low |= 1u << RR_BITS_AT_CEILING_LOW;
+    }
+    if (device->at_slew) {
+        low |= 1u << RR_BITS_AT_SLEW_LOW;
+    }
+    if (is_braking(device)) {
+        low |= 1u << RR_BITS_BRAKING_LOW;
+    }
+    return (uint16_t)(low | device->latch.trip << RR_BITS_TRIP_LOW);
+}
+_Static_assert(RR_BITS_BRAKING_LOW < 8 && RR_BITS_TRIP_LOW == 8, "the trip has the upper byte");
 
 bool rr_sampling_mask_fits(uint32_t mask)
 {

@@ -1,7 +1,7 @@
 /* Motor current and supply by the converter; see analog.h.
  *
- * A conversion takes 104 us (125 kHz, the data sheet's range for 10 bits is 50 to 200 kHz). Four of the current, then one
- * of the supply: every 520 us there is a new mean of the current over 416 us. */
+ * A conversion takes 104 us (125 kHz, the data sheet's range for 10 bits is 50 to 200 kHz). The supply, then four of the
+ * current: a round takes 520 us, and what a tick judges is the mean of the current over the last 416 us of it. */
 #include "analog.h"
 
 #include "board.h"
@@ -17,7 +17,7 @@
 
 static volatile uint16_t current_sum;
 static volatile uint16_t supply_reading;
-static volatile uint8_t readings; /* of the round; the supply comes after CURRENT_READINGS */
+static volatile uint8_t readings; /* of the round; the supply comes first */
 static volatile uint16_t current_so_far;
 static volatile bool whole_round;
 
@@ -25,28 +25,39 @@ ISR(ADC_vect)
 {
     uint16_t reading = ADC;
     uint8_t place = readings;
-    if (place == CURRENT_READINGS) {
+    readings = (uint8_t)(place + 1u);
+    if (place == 0) {
         supply_reading = reading;
-        whole_round = true;
+        current_so_far = 0;
         ADMUX = REFERENCE | CURRENT_CHANNEL;
-        readings = 0;
-    } else {
-        uint16_t sum = place == 0 ? reading : (uint16_t)(current_so_far + reading);
-        current_so_far = sum;
-        readings = (uint8_t)(place + 1u);
-        if (place == CURRENT_READINGS - 1u) {
-            current_sum = sum;
-            ADMUX = REFERENCE | SUPPLY_CHANNEL;
-        }
+        ADCSRA = START;
+        return;
     }
+    uint16_t sum = (uint16_t)(current_so_far + reading);
+    if (place == CURRENT_READINGS) {
+        current_sum = sum;
+        whole_round = true;
+        return;
+    }
+    current_so_far = sum;
+    ADCSRA = START;
+}
+
+void analog_start(void)
+{
+    if (readings <= CURRENT_READINGS) { /* the last round still runs: after a tick that was late */
+        return;
+    }
+    readings = 0;
+    ADMUX = REFERENCE | SUPPLY_CHANNEL;
     ADCSRA = START;
 }
 
 void analog_begin(void)
 {
     DIDR0 = 1u << CURRENT_CHANNEL | 1u << SUPPLY_CHANNEL;
-    ADMUX = REFERENCE | CURRENT_CHANNEL;
-    ADCSRA = START;
+    readings = CURRENT_READINGS + 1u;
+    analog_start();
 }
 
 bool analog_is_ready(void)

@@ -145,9 +145,14 @@ int main(void)
         if (tick_take()) {
             rr_device_tick(&device);
             tick_end();
+            analog_start();
             wdt_reset();
         } else if (tick_is_near() || !rr_device_idle(&device, tick_is_early())) {
-            tick_sleep();
+            cli(); /* so that nothing can come between looking and sleeping */
+            if (serial_is_quiet()) {
+                tick_sleep();
+            }
+            sei();
         }
     }
 }

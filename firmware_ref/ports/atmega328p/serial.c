@@ -69,6 +69,11 @@ void serial_begin(void)
     UCSR0B = 1u << RXCIE0 | 1u << RXEN0 | 1u << TXEN0;
 }
 
+bool serial_is_quiet(void)
+{
+    return received_out == received_in;
+}
+
 int serial_read(void)
 {
     uint8_t out = received_out;

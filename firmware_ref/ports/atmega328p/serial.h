@@ -7,6 +7,9 @@
 
 void serial_begin(void);
 
+/* True where no received byte waits. */
+bool serial_is_quiet(void);
+
 /* The next received byte, or -1. */
 int serial_read(void);
 

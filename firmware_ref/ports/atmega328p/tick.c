@@ -68,12 +68,10 @@ bool tick_is_near(void)
 
 void tick_sleep(void)
 {
-    cli();
     if (due == 0) {
         sleep_enable();
         sei(); /* the next instruction still runs before an interrupt */
         sleep_cpu();
         sleep_disable();
     }
-    sei();
 }

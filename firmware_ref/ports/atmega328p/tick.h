@@ -22,7 +22,7 @@ bool tick_is_early(void);
 /* True where the next tick is so near that it is better waited for. */
 bool tick_is_near(void);
 
-/* Sleeps until the next interrupt, unless a tick is due. */
+/* Sleeps until the next interrupt, unless a tick is due. To be called with interrupts off; they may be on afterwards. */
 void tick_sleep(void);
 
 #endif
