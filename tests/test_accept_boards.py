@@ -109,3 +109,21 @@ def test_a_noisy_line_is_told_and_not_taken_for_a_fault_of_the_words() -> None:
     verdict = accepted(mock_port(MockSetup(faults=("bit_errors=0.0003",))), only="identity", energise=False)
     assert verdict.results[1].check.name == "identity"
     assert verdict.exit_code in (0, 1)
+
+
+def test_a_stop_from_the_user_ends_it_with_all_off_and_the_limits_as_they_were() -> None:
+    port = mock_port(MockSetup(limits=OWN))
+    talk = Talk(port)
+
+    def running(text: str) -> None:
+        if text == "passed      first-motion":
+            talk.panic(0)
+
+    verdict = accept(port, Wish(energise=lambda trial: True), tell=running, talk=talk)
+    assert verdict.exit_code == 5
+    assert verdict.unrestored == []
+    assert verdict.results[-1].check.name == "ramps-and-slew"
+    assert port.device.controller is not None
+    left = port.device.controller.limits
+    assert {key: left[key] for key in OWN} == OWN
+    assert port.device.controller.state.word == "off"

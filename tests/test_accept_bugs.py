@@ -32,10 +32,10 @@ FOUND = {
     16: ("exactly-once", "TAG-3"),
 }
 
-# What a host cannot see, and why.
+# What a host cannot see of the core on this processor, and why; test_accept_emulated.py finds both on an ATmega328P.
 UNSEEN = {
     17: "an int of 32 bits or more wraps to the right square; where an int has 16 bits, TRIP-8 fails",
-    18: "the byte too many lands behind the buffer: what it does, if anything, is the compiler's choice of layout",
+    18: "the byte too many lands in room that the buffer's union happens to have behind the text",
 }
 NOTICED_WHERE_SEEN = {17: "TRIP-8", 18: "LINE-5"}
 CHECK_OF = {17: "overload", 18: "overlong-lines"}
