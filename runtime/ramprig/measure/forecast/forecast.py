@@ -27,7 +27,7 @@ from .dutytype import DutyType, duty_type
 from .limits import Margin, margins
 from .montecarlo import Draw, Job, draws_of
 from .play import core_is_there, play
-from .reduction import cut_of, marks_of
+from .reduction import COLD_PASSES, cut_of, marks_of
 
 DRAWS = 200
 COVERAGE = 0.95
@@ -218,7 +218,7 @@ def _told(plan: Plan, bench: Bench, job: Job, wish: ForecastWish, draws: list[Dr
             wanted="mend the limit or the sequence first; `ramprig rehearse` shows where it ends",
         )
     values = _values(bench, draws, whole)
-    hours = max(values["duration"].median, 1e-3) / 3600.0
+    hours = max(values["duration"].median / 3600.0, 1.0)  # a short run has its starts in one hour
     starts = {name: count / hours for name, count in plan.totals.starts.items() if count}
     if job.cut is not None and job.cut.for_s is not None:
         starts = {name: rate * _passes_share(job, draws) for name, rate in starts.items()}
@@ -253,14 +253,14 @@ def _passes_share(job: Job, draws: list[Draw]) -> float:
     assert job.cut is not None, "asked only of a reduced run"
     assert job.cut.for_s is not None, "asked only of a run for a time"
     cold = job.cold.totals
-    least_s = cold.least * job.cold.tick_us / 1e6 / 3
+    least_s = cold.least * job.cold.tick_us / 1e6 / COLD_PASSES
     return min(1.0, found / max(1.0, math.ceil(job.cut.for_s / least_s)))
 
 
 def _values(bench: Bench, draws: list[Draw], whole: list[Draw]) -> dict[str, Interval]:
     values = {
         "duration": Interval.of([draw.elapsed_s for draw in whole], "s"),
-        "energy": Interval.of([draw.energy_j / 1000.0 for draw in whole], "kJ"),
+        "energy": _energy([draw.energy_j for draw in whole]),
         "supply_high": Interval.of([draw.bus_high_v for draw in draws], "V"),
         "supply_low": Interval.of([draw.bus_low_v for draw in draws], "V"),
     }
@@ -272,6 +272,13 @@ def _values(bench: Bench, draws: list[Draw], whole: list[Draw]) -> dict[str, Int
         values[f"{name}.hottest"] = Interval.of([draw.motors[name].hottest_c for draw in whole], "degC")
         values[f"{name}.end_temperature"] = Interval.of([draw.motors[name].end_c for draw in whole], "degC")
     return values
+
+
+def _energy(joules: list[float]) -> Interval:
+    """In kJ from one on."""
+    if float(np.median(joules)) < 1000.0:
+        return Interval.of(joules, "J")
+    return Interval.of([one / 1000.0 for one in joules], "kJ")
 
 
 def _how(job: Job, wish: ForecastWish, draws: list[Draw]) -> tuple[str, ...]:

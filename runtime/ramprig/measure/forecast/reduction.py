@@ -22,10 +22,11 @@ from ramprig.sequence.steps import Cycle, Include, Repeat, Step
 
 from .play import Floats, MotorPlay, Play
 
-COLD_PASSES = 3
-"""Two whole ones, of which the second begins as all later ones do, and the one after which the tail is simulated."""
+COLD_PASSES = 5
+"""The first; three that begin as all later ones do, whose mean length counts, since a wait ends on the runner's grid of
+50 ms and passes differ by as much; and the one after which the tail is simulated."""
 HOT_PASSES = 2
-LEAST_PASSES = 8
+LEAST_PASSES = 12
 """With fewer passes the whole is simulated."""
 PASSES_MAX = 10_000_000
 
@@ -152,7 +153,7 @@ def warm_guess(cold: Play, cut: Cut, thermal_time_s: Mapping[str, float]) -> dic
 def night_of(cut: Cut, cold: Play, hot: Play) -> Night:
     """Put the whole run together from its cold and hot parts, both of which came to their end."""
     rows, hot_rows = marks_of(cold, cut), marks_of(hot, cut)
-    lengths = ((rows[2] - rows[1]) * cold.row_s, _later_length_s(cold, hot, rows, hot_rows))
+    lengths = (_later_rows(rows) * cold.row_s, _later_length_s(cold, hot, rows, hot_rows))
     far = np.arange(_most_passes(cut, min(lengths)), dtype=float)
     heating = {name: _heating(cold.motors[name], hot.motors[name], rows, hot_rows, far) for name in cold.motors}
     warmth = _warmth(heating, len(far))
@@ -188,12 +189,17 @@ def night_of(cut: Cut, cold: Play, hot: Play) -> Night:
 def _later_length_s(cold: Play, hot: Play, rows: tuple[int, ...], hot_rows: tuple[int, ...]) -> float:
     """A later pass when hot: the cold one with the difference that heat makes to the first."""
     first = (hot_rows[1] - hot_rows[0]) - (rows[1] - rows[0])
-    return max(1, rows[2] - rows[1] + first) * cold.row_s
+    return max(1.0, _later_rows(rows) + first) * cold.row_s
+
+
+def _later_rows(rows: tuple[int, ...]) -> float:
+    """The mean length of the later passes of the cold run, in rows."""
+    return (rows[-1] - rows[1]) / (len(rows) - 2)
 
 
 def _energies(cold: Play, hot: Play, rows: tuple[int, ...], hot_rows: tuple[int, ...]) -> tuple[float, float]:
     """Of a later pass, cold and hot."""
-    later = float(cold.energy_j[rows[1] : rows[2]].sum())
+    later = float(cold.energy_j[rows[1] : rows[-1]].sum()) / (len(rows) - 2)
     change = float(hot.energy_j[hot_rows[0] : hot_rows[1]].sum() - cold.energy_j[rows[0] : rows[1]].sum())
     return later, later + change
 
