@@ -234,11 +234,16 @@ def simulated(*, ageing: bool, cycles: int = CYCLES) -> list[Finding]:
             if ms % SAMPLE_MS == 0:
                 counts = plant.read_counts(0)
                 rows.append(
-                    {"tick": float(cycle * CYCLE_MS + ms), "vent.duty_pct": axis.duty / 100,
-                     "vent.counts": float(counts), "vent.position_rev": counts / 5760, "vent.current_a": plant.read_current_ma(0) / 1000,
-                     "vent.speed_rpm": (counts - last) / 5760 * 60000 / SAMPLE_MS,
-                     "supply_v": plant.read_supply_mv() / 1000}
-                )  # fmt: skip
+                    {
+                        "tick": float(cycle * CYCLE_MS + ms),
+                        "vent.duty_pct": axis.duty / 100,
+                        "vent.counts": float(counts),
+                        "vent.position_rev": counts / 5760,
+                        "vent.speed_rpm": (counts - last) / 5760 * 60000 / SAMPLE_MS,
+                        "vent.current_a": plant.read_current_ma(0) / 1000,
+                        "supply_v": plant.read_supply_mv() / 1000,
+                    }
+                )
                 last = counts
             plant.step()
         for done in walk.take(1, piece_of(rows)):
