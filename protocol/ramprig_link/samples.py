@@ -115,10 +115,11 @@ def _wrapped(value: int) -> int:
 class _Track:
     """What the decoder keeps of one channel while it goes through a block."""
 
-    __slots__ = ("bent", "column", "k", "slope", "total")
+    __slots__ = ("bent", "column", "k", "last", "slope", "total")
 
     def __init__(self, first: int, k: int, *, bent: bool) -> None:
         self.column = [first]
+        self.last = first
         self.slope = 0
         self.bent = bent
         self.k = k
@@ -181,22 +182,25 @@ def _later_samples(bits: str, at: int, end: int, tracks: list[_Track], rows: int
             k = track.k
             zero = find("0", at, at + RICE_QUOTIENT_MAX)
             if zero >= 0:
-                u = ((zero - at) << k) + int(bits[zero : zero + 1 + k], 2)
+                u = zero - at
                 at = zero + 1 + k
+                if k:
+                    u = (u << k) + int(bits[zero:at], 2)
             else:
                 at += RICE_QUOTIENT_MAX + _ESCAPED_BITS
                 u = int(bits[at - _ESCAPED_BITS : at], 2)
             rise = track.slope - ((u + 1) >> 1) if u & 1 else track.slope + (u >> 1)
-            value = track.column[-1] + rise
+            value = track.last + rise
             if not -_I32_WRAP <= value < _I32_WRAP:
                 value = _wrapped(value)
+            track.last = value
             track.column.append(value)
             if track.bent:
-                track.slope = _wrapped(rise)
-            if halve:
-                track.total >>= 1
-            track.total += u if u < RICE_SUM_CAP else RICE_SUM_CAP
-            track.k = rice_parameter(track.total, count)
+                track.slope = rise if -_I32_WRAP <= rise < _I32_WRAP else _wrapped(rise)
+            total = track.total >> 1 if halve else track.total
+            track.total = total = total + (u if u < RICE_SUM_CAP else RICE_SUM_CAP)
+            k = ((total - 1) // count).bit_length() if total else 0  # `rice_parameter`, without the call
+            track.k = k if k < RICE_K_MAX else RICE_K_MAX
         if at > end:
             raise SampleFault(f"the bits end in sample {row + 1} of {rows}")
     if at > end:

@@ -73,26 +73,41 @@ class Cable:
         self._to_device = Corruptor(Rates(), seed=f"{seed}/to device")
         self._to_host = Corruptor(Rates(), seed=f"{seed}/to host")
         self._rates = Rates()
+        self._looked_at = self._rated_at = -1
+        self._look()
         self._held: list[tuple[int, bytes]] = []
+        self._held_bytes = 0
 
     @property
     def is_out(self) -> bool:
         """Whether the cable is pulled out."""
-        return bool(self.device.faults.get("unplug"))
+        if self.device.faults.changes != self._looked_at:
+            self._look()
+        return self._is_out
 
     @property
     def tick_ns(self) -> int:
         """The true length of the board's tick."""
-        drift_ppm = self.device.faults.get("clock_drift")
-        return round(self.device.board.tick_us * NS_PER_US * (1.0 + drift_ppm * 1e-6))
+        if self.device.faults.changes != self._looked_at:
+            self._look()
+        return self._tick_ns
+
+    def _look(self) -> None:
+        """Take over the faults of the cable but those of single bytes; done again only when a fault was switched."""
+        faults = self.device.faults
+        self._looked_at = faults.changes
+        self._is_out = bool(faults.get("unplug"))
+        self._tick_ns = round(self.device.board.tick_us * NS_PER_US * (1.0 + faults.get("clock_drift") * 1e-6))
+        self._grid_ns = round(faults.get("delivery_grid") * NS_PER_MS)
 
     def opened(self) -> None:
         """A host has opened the port: what it meets there by the faults that are on."""
-        self._held.clear()
+        self._drop_held()
         self.device.opened()
         count = int(self.device.faults.get("garbage_after_open"))
         if count:
             self._held.append((self.now_ns, self._garbage.randbytes(count)))
+            self._held_bytes += count
 
     def send(self, data: bytes) -> None:
         """Put bytes from the host on the wire now."""
@@ -117,11 +132,13 @@ class Cable:
         `now_ns` is then that moment; it does not move where `until_ns` has passed.
         """
         while True:
-            due = self._take_due()
-            if due:
-                return due
-            release_ns = self._held[0][0] if self._held else until_ns
-            target_ns = max(self.now_ns, min(until_ns, release_ns))
+            target_ns = until_ns
+            if self._held:
+                due = self._take_due()
+                if due:
+                    return due
+                target_ns = min(until_ns, self._held[0][0])
+            target_ns = max(self.now_ns, target_ns)
             tick_ns = self.tick_ns
             ticks = (target_ns - self._device_ns) // tick_ns
             if ticks > 0:
@@ -151,6 +168,9 @@ class Cable:
 
     def _renew_rates(self) -> None:
         faults = self.device.faults
+        if faults.changes == self._rated_at:
+            return
+        self._rated_at = faults.changes
         rates = Rates(flip=faults.get("bit_errors"), drop=faults.get("dropped_bytes"))
         if rates != self._rates:
             self._rates = rates
@@ -160,15 +180,20 @@ class Cable:
     def _hold(self, output: bytes) -> None:
         """Take what the device has sent, to be handed over now or at the next point of the delivery grid."""
         if self.is_out:
-            self._held.clear()
+            self._drop_held()
             return
         self._renew_rates()
         data = self._to_host.apply(output)
-        grid_ns = round(self.device.faults.get("delivery_grid") * NS_PER_MS)
+        grid_ns = self._grid_ns  # as `is_out` has just seen
         release_ns = -(-self.now_ns // grid_ns) * grid_ns if grid_ns else self.now_ns
         self._held.append((release_ns, data))
-        while sum(len(piece) for _, piece in self._held) > HELD_MAX_BYTES:
-            del self._held[0]
+        self._held_bytes += len(data)
+        while self._held_bytes > HELD_MAX_BYTES:
+            self._held_bytes -= len(self._held.pop(0)[1])
+
+    def _drop_held(self) -> None:
+        self._held.clear()
+        self._held_bytes = 0
 
     def _take_due(self) -> bytes:
         if not self._held:
@@ -176,6 +201,7 @@ class Cable:
         count = 0
         while count < len(self._held) and self._held[count][0] <= self.now_ns:
             count += 1
-        due = b"".join(piece for _, piece in self._held[:count])
+        due = b"".join([piece for _, piece in self._held[:count]])
         del self._held[:count]
+        self._held_bytes -= len(due)
         return due

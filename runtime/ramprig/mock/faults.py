@@ -125,12 +125,13 @@ def parse_fault(text: str) -> tuple[str, int, float]:
 
 
 class FaultSwitches:
-    """Which faults are on, and how strong; `act` is told of each change: name, axis, strength."""
+    """Which faults are on, and how strong; `act` is told of each change: name, axis, strength. `changes` counts them."""
 
     def __init__(self, act: Callable[[str, int, float], None], *, axes: int) -> None:
         self._act = act
         self._axes = axes
         self._on: dict[tuple[str, int], float] = {}
+        self.changes = 0
 
     def set(self, name: str, value: float | bool = True, *, axis: int = 0) -> None:
         """Switch a fault on, off, or to a strength; raises UsageError for what there is not."""
@@ -145,6 +146,7 @@ class FaultSwitches:
             self._on[key] = amount
         else:
             del self._on[key]
+        self.changes += 1
         self._act(name, key[1], amount)
 
     def set_all(self, texts: Iterable[str]) -> None:
@@ -155,7 +157,9 @@ class FaultSwitches:
 
     def get(self, name: str, *, axis: int = 0) -> float:
         """The strength of a fault, 0 where it is off."""
-        return self._on.get((known(name).name, axis), 0.0)
+        if name not in FAULTS:
+            known(name)  # raises
+        return self._on.get((name, axis), 0.0)
 
     def on(self) -> dict[tuple[str, int], float]:
         """The faults that are on: strength by name and axis."""

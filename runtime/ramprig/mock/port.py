@@ -63,7 +63,8 @@ class DevicePort(ClosesItself, Generic[D]):
             raise LinkLost(f"{self.name} was closed while it was in use")
         if self._cable.is_out:
             raise LinkLost(f"{self.name}: the cable was pulled out (fault unplug)")
-        self._send_urgent()
+        if self._urgent:
+            self._send_urgent()
 
     def _send_urgent(self) -> None:
         while self._urgent:
@@ -72,10 +73,11 @@ class DevicePort(ClosesItself, Generic[D]):
     def read(self, timeout_s: float) -> bytes:
         """As `Port.read`, on the port's own clock."""
         self._check()
-        until_ns = self._now_ns() + max(0, round(timeout_s * NS_PER_S))
+        now_ns = self._now_ns()
+        until_ns = now_ns + max(0, round(timeout_s * NS_PER_S))
         if self._virtual is not None:
             data = self._cable.run(until_ns)
-            late_ns = self._cable.now_ns - self._now_ns()
+            late_ns = self._cable.now_ns - now_ns
             if late_ns > 0:
                 self._virtual.advance(late_ns / NS_PER_S)
             return data

@@ -87,14 +87,16 @@ class RowPrinter:
         """The rows of the blocks, in order; blocks of one layout that follow each other are printed together."""
         texts = []
         together: list[Block] = []
+        count = 0
         for block in blocks:
             if together and (block.layout != together[-1].layout or block.ticks[0] <= together[-1].ticks[-1]):
                 texts.append(self._print(together))
-                together = []
+                together, count = [], 0
             together.append(block)
-            if sum(map(len, together)) >= ROWS_AT_ONCE:
+            count += len(block)
+            if count >= ROWS_AT_ONCE:
                 texts.append(self._print(together))
-                together = []
+                together, count = [], 0
         if together:
             texts.append(self._print(together))
         return b"".join(texts)

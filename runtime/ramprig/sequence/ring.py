@@ -48,8 +48,7 @@ class Ring:
         for block in reversed(self._blocks):
             if block.ticks[-1] <= after:
                 break
-            low = int(np.searchsorted(block.ticks, after, side="right"))
-            high = int(np.searchsorted(block.ticks, until, side="right"))
+            low, high = block.ticks.searchsorted((after, until), side="right").tolist()
             if high > low:
                 ticks.append(block.ticks[low:high])
                 values.append(block.column(kind, index)[low:high].astype(np.int64))
@@ -61,7 +60,7 @@ class Ring:
         """The newest value of a channel at `tick` or before; None where none is kept."""
         for block in reversed(self._blocks):
             if block.ticks[0] <= tick:
-                place = int(np.searchsorted(block.ticks, tick, side="right")) - 1
+                place = int(block.ticks.searchsorted(tick, side="right")) - 1
                 return int(block.column(kind, index)[place])
         return None
 

@@ -6,11 +6,15 @@ One `Block` object goes to all of them; its arrays are read-only, so that nobody
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
 
 from ramprig_link.samples import ChannelRef, SampleBlock, channels_of
+
+LAYOUTS_KEPT = 64
+"""So many layouts are remembered: a line of samples names its own anew."""
 
 Ticks = NDArray[np.int64]
 Values = NDArray[np.int32]
@@ -27,6 +31,7 @@ class Layout:
     period_ticks: int
 
     @classmethod
+    @lru_cache(LAYOUTS_KEPT)
     def of(cls, mask: int, period_ticks: int) -> Layout:
         """The layout of a `log` request with this mask; raises `SampleFault` for a mask with unknown bits."""
         return cls(channels_of(mask), period_ticks)
@@ -69,11 +74,11 @@ class Block:
 
     def after(self, tick: int) -> Block | None:
         """The part of the block later than `tick`, the block itself where that is all of it, None where it is none."""
-        start = int(np.searchsorted(self.ticks, tick, side="right"))
-        if start == 0:
+        if self.ticks[0] > tick:
             return self
-        if start == len(self.ticks):
+        if self.ticks[-1] <= tick:
             return None
+        start = int(self.ticks.searchsorted(tick, side="right"))
         return Block(self.ticks[start:], self.values[start:], self.layout)
 
 

@@ -89,7 +89,7 @@ class LowerHull:
 
     def support(self, slope: float) -> Line:
         """The highest line of this slope under all points. Needs a point."""
-        return Line(slope, min(y - slope * x for x, y in self.corners))
+        return Line(slope, min([y - slope * x for x, y in self.corners]))
 
 
 def _turn(a: tuple[float, float], b: tuple[float, float], c: tuple[float, float]) -> float:
@@ -140,11 +140,16 @@ class ClockFit:
 
     def tick_not_later(self, host_s: float) -> int:
         """A tick that the device has reached at `host_s`, a time after the last exchange: never too late."""
-        return self.origin_tick + math.floor((host_s - self.origin_s - self.slowest.intercept) / self.slowest.slope)
+        return _tick_on(self.slowest, host_s - self.origin_s, self.origin_tick)
 
     def tick_not_earlier(self, host_s: float) -> int:
         """A tick that the device has not passed at `host_s`, a time after the last exchange: never too early."""
         return self.origin_tick + math.ceil((host_s - self.origin_s - self.fastest.intercept) / self.fastest.slope)
+
+
+def _tick_on(slowest: Line, elapsed_s: float, origin_tick: int) -> int:
+    """The last tick that has begun `elapsed_s` after the origin, by this line."""
+    return origin_tick + math.floor((elapsed_s - slowest.intercept) / slowest.slope)
 
 
 class _Generation:
@@ -182,6 +187,10 @@ class _Generation:
             exchanges=self.received.count,
         )
 
+    def slowest(self, tick_s: float) -> Line:
+        """The line `ClockFit.slowest` alone."""
+        return self.received.support(self._slopes(tick_s)[1])
+
     @staticmethod
     def _line(hull: LowerHull, nominal: float, wide: bool) -> Line:
         """The hull's best line where its slope is a believable one, else the supporting line of the nearest slope."""
@@ -196,13 +205,16 @@ class _Generation:
     def _slopes(self, tick_s: float) -> tuple[float, float]:
         """The least and the greatest slope of a line with all sendings below and all receptions above it."""
         low, high = tick_s * (1 - DRIFT_MAX), tick_s * (1 + DRIFT_MAX)
+        received = self.received.corners
         for x, below in self.sent.corners:
-            for across, above in self.received.corners:
-                rise = above + below  # the sendings are kept upside down
+            for across, above in received:
+                if across == x:
+                    continue
+                slope = (above + below) / (across - x)  # the sendings are kept upside down
                 if across > x:
-                    high = min(high, rise / (across - x))
-                elif across < x:
-                    low = max(low, rise / (across - x))
+                    high = slope if slope < high else high
+                else:
+                    low = slope if slope > low else low
         # A clock whose rate changed in the window may leave none; then the two bounds have crossed.
         return min(low, high), max(low, high)
 
@@ -223,6 +235,7 @@ class ClockFitter:
         self.passed_over = 0
         self._generations: list[_Generation] = []
         self._fit: ClockFit | None = None
+        self._slowest: Line | None = None
 
     def add(self, tick: int, sent_s: float, received_s: float) -> None:
         """Take an exchange: unwrapped tick of the answer, host times on one monotonic clock, in s."""
@@ -236,7 +249,7 @@ class ClockFitter:
             del generations[:-2]
         for generation in generations:
             generation.add(tick, sent_s, received_s)
-        self._fit = None
+        self._fit = self._slowest = None
 
     @property
     def fit(self) -> ClockFit | None:
@@ -244,3 +257,12 @@ class ClockFitter:
         if self._fit is None and self._generations:
             self._fit = self._generations[0].fit(self.tick_s)
         return self._fit
+
+    def tick_not_later(self, host_s: float) -> int | None:
+        """As `ClockFit.tick_not_later` of the present fit, without the rest of it; None before the first exchange."""
+        if not self._generations:
+            return None
+        oldest = self._generations[0]
+        if self._slowest is None:
+            self._slowest = oldest.slowest(self.tick_s)
+        return _tick_on(self._slowest, host_s - oldest.origin_s, oldest.origin_tick)

@@ -231,7 +231,8 @@ class Core:
         now_s = self.clock.now()
         match delivery:
             case Block():
-                self.latest = replace(self.latest, block=delivery, block_s=now_s)
+                latest = self.latest
+                self.latest = Latest(latest.reading, latest.reading_s, delivery, now_s)
                 if self.on_block is not None:
                     self.on_block(delivery)
             case Gap(first_tick, count, period_ticks, reason):

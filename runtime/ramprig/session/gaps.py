@@ -137,11 +137,12 @@ class SampleStream:
         late = first <= self._newest[0]
         if not late:
             self._newest = (int(block.ticks[-1]), number)
-        if any(held.first_tick == first for held in self._held) or block.after(self.next_tick - 1) is None:
+        if any(held.first_tick == first for held in self._held) or block.ticks[-1] < self.next_tick:
             self._duplicates += len(block)
             return self._release()
         self._held.append(_Held(block, number, late))
-        self._held.sort(key=lambda held: held.first_tick)
+        if len(self._held) > 1:
+            self._held.sort(key=lambda held: held.first_tick)
         return self._release()
 
     def end(self, made: int) -> list[Delivery]:

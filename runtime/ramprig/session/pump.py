@@ -192,13 +192,13 @@ class Pump:
             raise StoppedByUser(f"a stop of category {self.panic_category} was asked for")
 
     def _wait_until(self, until_s: float, now_s: float) -> float:
-        times = [until_s, now_s + TURN_MAX_S]
+        wait_s = min(until_s, now_s + TURN_MAX_S)
+        if self.muted:
+            return wait_s
         due_s = self.link.due_at_s
-        if due_s is not None and not self.muted:
-            times.append(due_s)
-        elif self.beat_s is not None and not self.muted:
-            times.append(self._sent_s + self.beat_s)
-        return min(times)
+        if due_s is not None:
+            return min(wait_s, due_s)
+        return wait_s if self.beat_s is None else min(wait_s, self._sent_s + self.beat_s)
 
     def _send_new(self, now_s: float) -> None:
         if self.link.outstanding is not None:

@@ -221,7 +221,9 @@ class Session:
 
     def tick_now(self) -> int:
         """A tick the device has reached by now, never later than the truth; unwrapped."""
-        return self._fit().tick_not_later(self._core.clock.now())
+        fitter, now_s = self._core.fitter, self._core.clock.now()
+        tick = fitter.tick_not_later(now_s) if fitter is not None else None
+        return self._fit().tick_not_later(self._core.clock.now()) if tick is None else tick
 
     def start_in(self, lead_s: float = LEAD_S) -> int:
         """The tick at which an order sent now can start, `lead_s` from now or later where the link needs it.
