@@ -2,17 +2,21 @@
 
 from __future__ import annotations
 
+import csv
 import json
+import re
 from pathlib import Path
 
 import numpy as np
 import pytest
 
 from explain_cases import Case, run_case
+from ramprig.endure.features import CycleFeatures, DriveFeatures, MotorFeatures, Span
 from ramprig.report.digest import Digest, Interval, digest_samples
 from ramprig.report.envelope import Envelope
 from ramprig.report.facts import Facts, gather
 from ramprig.report.making import make_report
+from ramprig.report.plots import by_cycle
 from ramprig.report.trends import trends_of
 
 STEPS = """- cycle:
@@ -51,6 +55,35 @@ def test_a_report_counts_cycles_and_shows_their_features(facts: Facts, tmp_path:
     for wanted in ("cycles commanded", "confirmed by the encoder", "first and last cycle overlaid", "of each cycle"):
         assert wanted in text, wanted
     assert "No trend is judged: that takes more than 120 cycles" in text
+    for wanted in ("vent forward: steady current", "vent forward: coast down", "vent: energy"):
+        assert f"{wanted} of each cycle" in text, wanted
+    (path,) = done.features
+    with open(path, encoding="utf-8", newline="") as file:
+        rows = list(csv.DictReader(file))
+    path.unlink()
+    assert [row["number"] for row in rows] == [str(number) for number in range(1, 8)]
+    assert {row["outcome"] for row in rows} == {"confirmed"}
+    assert all(float(row["vent forward: steady current (A)"]) > 0.0 for row in rows)
+    assert all(row["vent backward: steady current (A)"] == "" for row in rows)
+
+
+def test_a_feature_that_ages_is_shown_in_the_report_of_its_run() -> None:
+    facts, digest = made_up(np.ones(300))
+    for number in range(1, 301):
+        drive = DriveFeatures(steady_current_a=0.3 * (1 + 0.001 * max(0, number - 200)))
+        motor = MotorFeatures(forward=drive, position_error_rev=0.001 * number)
+        span = Span(number=number, part=1, begin_tick=0, end_tick=1000, outcome="confirmed")
+        digest.features.append(
+            CycleFeatures(
+                span=span, samples=100, left_out=0, duration_s=1.0, lowest_supply_v=12.0, motors={"vent": motor}
+            )
+        )
+    found = {trend.name: trend for trend in trends_of(facts, digest)}
+    assert list(found) == ["duration", "lowest supply", "vent forward: steady current"]
+    assert found["duration"].findings == ()
+    current = found["vent forward: steady current"]
+    assert current.unit == "A"
+    assert 200 < current.findings[0].cycle <= 300
 
 
 def test_an_interruption_is_told(facts: Facts, tmp_path: Path) -> None:
@@ -93,3 +126,16 @@ def test_a_current_that_grows_is_found_and_a_steady_one_is_not() -> None:
 
 def test_few_cycles_have_no_trend() -> None:
     assert trends_of(*made_up(np.ones(4))) == []
+
+
+def test_a_long_tests_plot_stays_small_and_keeps_its_spike() -> None:
+    values = np.full(10_000, 0.9)
+    values[7_777] = 1.7
+    facts, digest = made_up(values)
+    (plot,) = by_cycle(facts, trends_of(facts, digest))
+    assert len(plot.svg) < 60_000
+    (polygon,) = re.findall(r'<polygon points="([^"]*)"', plot.svg)
+    heights = [float(point.split(",")[1]) for point in polygon.split()]
+    # The spike is told alone; all else lies on one level, and heights count downwards.
+    assert min(heights) < np.median(heights) - 20.0
+    assert sum(height < np.median(heights) - 0.5 for height in heights) == 1

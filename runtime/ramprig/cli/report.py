@@ -34,7 +34,7 @@ def carry_out(args: argparse.Namespace) -> int:
     runs: list[Path] = args.runs
     out = args.out or (runs[0] if len(runs) == 1 else runs[0].resolve().parent)
     made = make_report(runs, out=out, issued=rfc3339(time.time(), decimals=0), entries=entries_of(args.entry))
-    for path in (made.report, made.junit, *made.intervals):
+    for path in (made.report, made.junit, *made.intervals, *made.features):
         say(str(path))
     tell("Open the report in a browser; print it on A4 for paper.")
     return 0

@@ -10,6 +10,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from ramprig.endure.features import CycleFeatures, FeatureWalk, spans_of
 from ramprig.record.scan import Piece, Scan
 
 from .envelope import INTERVALS_MAX, Band, Envelope
@@ -25,6 +26,8 @@ STEADY_S = 0.3
 ROWS_MAX = 20_000
 """Lines of the table of intervals; longer runs are summed over several cycles or minutes a line."""
 CURVE_STEP_PCT = 0.5
+FEATURES_MAX = 50_000
+"""Cycles and checks whose features are kept, at under 1 kB each; a longer run's later ones are left out."""
 
 
 @dataclass(slots=True)
@@ -70,6 +73,7 @@ class Digest:
     """What the samples of a run come to. `breaks` are times where the board restarted or the run was gone on with.
 
     An interval is `interval_stride` cycles, or a minute; those from 1 to below `interval_edges` are whole cycles.
+    `features` are those of the cycles and checks of the count of cycles, the first FEATURES_MAX.
     """
 
     columns: tuple[str, ...]
@@ -85,6 +89,7 @@ class Digest:
     totals: dict[str, tuple[float, float, float]] = field(default_factory=dict)
     interval_edges: int = 0
     interval_stride: int = 1
+    features: list[CycleFeatures] = field(default_factory=list)
 
     def band(self, name: str) -> Band:
         """A column against time."""
@@ -118,10 +123,12 @@ def digest_samples(facts: Facts) -> Digest:
         digest.interval_stride = -(-len(facts.passes) // ROWS_MAX)
     table = _IntervalTable(columns, edges)
     curves = {motor: _CurveWalk(digest, motor) for motor in facts.motors if f"{motor}.speed_rpm" in columns}
+    aged = FeatureWalk(facts.columns, spans_of(facts.cycles), tick_us=facts.tick_us)
     offset_s = 0.0
-    for path in facts.sample_files:
-        scan = Scan(path, columns=("time_s", *columns))
+    for part, path in facts.files_of_parts:
+        scan = Scan(path, columns={"time_s", *columns, *(aged.columns if aged.spans else ())})
         for piece in scan:
+            _keep_features(digest, aged.take(part, piece))
             for servo in facts.servos:
                 _blank_zero(piece.numbers[f"{servo}.pulse_us"])
             times = piece.numbers["time_s"] + offset_s
@@ -132,10 +139,15 @@ def digest_samples(facts: Facts) -> Digest:
             _take(digest, table, times, piece)
             for walk in curves.values():
                 walk.take(times, piece)
+        _keep_features(digest, aged.close_part(part))
         digest.torn_bytes += scan.torn_bytes
     digest.intervals = table.rows()
     digest.totals = table.totals()
     return digest
+
+
+def _keep_features(digest: Digest, found: list[CycleFeatures]) -> None:
+    digest.features += found[: FEATURES_MAX - len(digest.features)]
 
 
 def _blank_zero(pulses: Floats) -> None:

@@ -123,8 +123,13 @@ class Facts:
     @property
     def sample_files(self) -> list[Path]:
         """The samples files that are there, in the order of the parts."""
-        names = [str(part.get("samples_file") or SAMPLES_FILE) for part in self.parts]
-        return [self.folder / name for name in names if (self.folder / name).is_file()]
+        return [path for _, path in self.files_of_parts]
+
+    @property
+    def files_of_parts(self) -> list[tuple[int, Path]]:
+        """The same, each after the number of its part."""
+        names = [(int(part.get("part") or 1), str(part.get("samples_file") or SAMPLES_FILE)) for part in self.parts]
+        return [(part, self.folder / name) for part, name in names if (self.folder / name).is_file()]
 
     @property
     def tick_us(self) -> int:

@@ -4,10 +4,12 @@ from __future__ import annotations
 
 import csv
 import io
+import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
+from ramprig.endure.features import CycleFeatures, unit_of
 from ramprig.errors import RecordError
 from ramprig.record.appendfile import replace_file
 from ramprig.record.reading import audit
@@ -21,6 +23,7 @@ from .junit import junit_xml
 REPORT_FILE = "report.html"
 JUNIT_FILE = "junit.xml"
 INTERVALS_FILE = "intervals.csv"
+FEATURES_FILE = "features.csv"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -30,6 +33,7 @@ class Made:
     report: Path
     junit: Path
     intervals: tuple[Path, ...]
+    features: tuple[Path, ...] = ()
 
 
 def read_run(folder: Path) -> Read:
@@ -39,16 +43,18 @@ def read_run(folder: Path) -> Read:
 
 
 def make_report(folders: Sequence[Path], *, out: Path, issued: str, entries: Mapping[str, str] | None = None) -> Made:
-    """Write the report of these runs into the folder `out`, and beside each run the table of its intervals.
+    """Write the report of these runs into the folder `out`, and beside each run tables of its intervals and features.
 
     Each file is replaced in one step; nothing of a run itself is touched. Raises RecordError.
     """
     reads = [read_run(folder) for folder in folders]
     text = render(reads, Wish(issued=issued, entries=entries or {}))
+    with_cycles = [read for read in reads if read.digest.features]
     made = Made(
         report=out / REPORT_FILE,
         junit=out / JUNIT_FILE,
         intervals=tuple(read.facts.folder / INTERVALS_FILE for read in reads),
+        features=tuple(read.facts.folder / FEATURES_FILE for read in with_cycles),
     )
     try:
         out.mkdir(parents=True, exist_ok=True)
@@ -56,6 +62,8 @@ def make_report(folders: Sequence[Path], *, out: Path, issued: str, entries: Map
         replace_file(made.junit, junit_xml([read.facts for read in reads]).encode("utf-8"))
         for path, read in zip(made.intervals, reads, strict=True):
             replace_file(path, intervals_csv(read.digest))
+        for path, read in zip(made.features, with_cycles, strict=True):
+            replace_file(path, features_csv(read.digest.features))
     except OSError as error:
         raise RecordError(f"the report cannot be written in {out}: {error.strerror or error}") from error
     return made
@@ -71,4 +79,19 @@ def intervals_csv(digest: Digest) -> bytes:
         values = [row.columns.get(column, ("", "", "")) for column in digest.columns]
         cells = [f"{value:.6g}" if isinstance(value, float) else value for triple in values for value in triple]
         writer.writerow([row.number, f"{row.begin_s:.3f}", f"{row.end_s:.3f}", row.samples, *cells])
+    return out.getvalue().encode("utf-8")
+
+
+def features_csv(features: Sequence[CycleFeatures]) -> bytes:
+    """The features of each cycle, and of each check as number 0, a line each; those that are missing are empty."""
+    out = io.StringIO(newline="")
+    writer = csv.writer(out)
+    names = list(features[0].values()) if features else []
+    heads = [f"{name} ({unit_of(name)})" if unit_of(name) else name for name in names]
+    writer.writerow(["number", "part", "begin_tick", "end_tick", "outcome", "samples", "left_out", *heads])
+    for each in features:
+        span, values = each.span, each.values()
+        cells = ["" if math.isnan(values[name]) else f"{values[name]:.6g}" for name in names]
+        place = [span.number, span.part, span.begin_tick, span.end_tick, span.outcome or "check"]
+        writer.writerow([*place, each.samples, each.left_out, *cells])
     return out.getvalue().encode("utf-8")

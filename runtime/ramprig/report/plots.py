@@ -20,6 +20,8 @@ Floats = NDArray[np.float64]
 SPANS = ((7200.0, 3600.0, "h"), (180.0, 60.0, "min"), (0.0, 1.0, "s"))
 TRIP_BEFORE_S, TRIP_AFTER_S = 0.25, 0.1
 SPEED_OVER_S = 0.008
+TREND_POINTS_MAX = 1000
+"""Points of one feature against the cycle; more are summed up."""
 COLUMN_TEXT = {
     "duty_pct": ("duty at the bridge", "%"),
     "speed_rpm": ("speed", "rpm"),
@@ -198,12 +200,30 @@ def _trend(trend: Trend, what: str) -> Plot:
     chart = Chart(
         (float(trend.numbers[0]) - 0.5, float(trend.numbers[-1]) + 0.5), y_range, trend.unit, what, height=160
     )
-    chart.line(trend.numbers, trend.values, width=1.0)
+    _trend_line(chart, trend)
     for value, name, colour in levels:
         chart.level(value, f"{name} {value:.4g} {trend.unit}", colour=colour)
     for finding in trend.findings[:EVENTS_MAX]:
         chart.event(float(finding.cycle), f"{finding.level.name.lower()}: {finding.sign}", colour=PURPLE)
     return Plot(f"{trend.name} of each {what}", chart.text(f"{trend.name} against {what}, {low:g} to {high:g}"))
+
+
+def _trend_line(chart: Chart, trend: Trend) -> None:
+    """Every value; of more than TREND_POINTS_MAX least, mean and greatest of several in a row, so that none is lost."""
+    count = len(trend.values)
+    if count <= TREND_POINTS_MAX:
+        chart.line(trend.numbers, trend.values, width=1.0)
+        return
+    stride = -(-count // TREND_POINTS_MAX)
+    padding = np.full(-count % stride, np.nan)
+    rows = np.concatenate((trend.values, padding)).reshape(-1, stride)
+    known = ~np.isnan(rows)
+    some = known.any(axis=1)
+    low = np.where(some, np.where(known, rows, np.inf).min(axis=1), np.nan)
+    high = np.where(some, np.where(known, rows, -np.inf).max(axis=1), np.nan)
+    mean = np.where(known, rows, 0.0).sum(axis=1) / np.where(some, known.sum(axis=1), np.nan)
+    chart.band(trend.numbers[::stride], low, high)
+    chart.line(trend.numbers[::stride], mean, width=1.0)
 
 
 def curves(facts: Facts, digest: Digest) -> list[Plot]:

@@ -1,8 +1,8 @@
 """Features of each cycle from the samples, and what the streaming trends of `endure` make of them.
 
-Features here are those that any sequence has: the fastest speed, the greatest current, the lowest supply and how long
-a cycle took. The limits drawn are those of the default settings of `endure.trends`: choices of this program and no
-standard.
+The features of a test by cycles are those of `endure.features`. For other runs they are what any sequence has: the
+fastest speed, the greatest current, the lowest supply and how long a pass took. The limits drawn are those of the
+default settings of `endure.trends`: choices of this program and no standard.
 """
 
 from __future__ import annotations
@@ -13,6 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from ramprig.endure.features import is_judged, unit_of
 from ramprig.endure.trends import FeatureTrend, Finding, TrendSettings
 
 from .digest import Digest
@@ -35,7 +36,13 @@ class Trend:
 
 
 def trends_of(facts: Facts, digest: Digest) -> list[Trend]:
-    """The features of the whole cycles of a run; none where there are fewer than CYCLES_MIN."""
+    """The features of the whole cycles of a run; none where there are fewer than CYCLES_MIN.
+
+    Checks between the cycles are not among them: there are too few of them for a baseline.
+    """
+    by_feature = _by_feature(digest)
+    if by_feature:
+        return by_feature
     rows = [row for row in digest.intervals if 0 < row.number < digest.interval_edges]
     if len(facts.passes) <= CYCLES_MIN or len(rows) < CYCLES_MIN:
         return []
@@ -56,6 +63,18 @@ def trends_of(facts: Facts, digest: Digest) -> list[Trend]:
     if times is not None:
         found.append(_judged("duration", "s", *times))
     return [trend for trend in found if not np.isnan(trend.values).all()]
+
+
+def _by_feature(digest: Digest) -> list[Trend]:
+    cycles = [each for each in digest.features if not each.span.is_check]
+    if len(cycles) < CYCLES_MIN:
+        return []
+    numbers = np.array([float(each.span.number) for each in cycles])
+    rows = [each.values() for each in cycles]
+    columns = {name: np.array([row[name] for row in rows]) for name in rows[0] if is_judged(name)}
+    return [
+        _judged(name, unit_of(name), numbers, values) for name, values in columns.items() if not np.isnan(values).all()
+    ]
 
 
 def _size(triple: tuple[float, float, float] | None) -> float:
