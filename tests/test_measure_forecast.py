@@ -255,6 +255,31 @@ def test_a_run_that_always_trips_gives_no_numbers(tmp_path: Path) -> None:
         forecast(sequence(SHORT), bench, ForecastWish(draws=20, workers=1))
 
 
+FAST_FALL = """
+sequence: fast fall
+steps:
+  - repeat:
+      times: {times}
+      steps:
+        - ramp: {{motor: vent, to: 70 %, in: 800 ms}}
+        - hold: 500 ms
+        - coast: {{motor: vent, in: 40 ms}}
+        - hold: 500 ms
+"""
+
+
+@pytest.mark.parametrize("times", [1, 40])
+def test_a_supply_that_shuts_down_is_an_end_like_a_trip(tmp_path: Path, times: int) -> None:
+    bench = vent_with(tmp_path, "fall: 100 %/s", "fall: 2000 %/s")
+    fast = sequence(FAST_FALL.format(times=times))
+    with pytest.raises(NotMeasurable, match="come to their end: overvoltage"):
+        forecast(fast, bench, ForecastWish(draws=20, workers=1))
+    path = tmp_path / "bench.yaml"
+    path.write_text(path.read_text("utf-8").replace("9 V to 16 V", "9 V to 24 V"), "utf-8")
+    with pytest.raises(NotMeasurable, match="come to their end"):
+        forecast(fast, load_bench(path), ForecastWish(draws=20, workers=1))
+
+
 def test_measured_constants_take_the_place_of_the_model(tmp_path: Path) -> None:
     text = VENT.read_text("utf-8") + (
         "measured:\n  vent:\n    constants:\n      date: '2026-03-01'\n      board: 'mock'\n      run: 'r1'\n"

@@ -86,7 +86,7 @@ def one_draw(job: Job, number: int) -> Draw:
     random = np.random.default_rng([job.seed, number]) if number else None
     setup = drawn_setup(job.belief, random)
     cold = play(job.cold, job.bench, setup, seed=number + 1, on_core=job.on_core)
-    if job.cut is None or job.hot is None or cold.tripped or not _went_through(cold):
+    if job.cut is None or job.hot is None or not _went_through(cold, job.cold):
         return _draw(job, setup, cold, None)
     taus = {name: setup.plant.axes[axis].motor.thermal_time_s for name, axis in job.belief.axis_of.items()}
     warm = warm_guess(cold, job.cut, taus)
@@ -94,14 +94,16 @@ def one_draw(job: Job, number: int) -> Draw:
     return _draw(job, setup, cold, hot)
 
 
-def _went_through(run: Play) -> bool:
-    return run.verdict in (Verdict.PASSED, Verdict.FAILED)
+def _went_through(run: Play, plan: Plan) -> bool:
+    """Whether all steps were carried out: an expectation that stops the run ends it early, too."""
+    return not run.tripped and run.elapsed_s >= plan.totals.least * run.tick_s - run.row_s
 
 
 def _draw(job: Job, setup: MockSetup, cold: Play, hot: Play | None) -> Draw:
     runs = [cold] if hot is None else [cold, hot]
     last = runs[-1]
-    whole = all(_went_through(run) for run in runs)
+    plans = [job.cold, job.hot] if job.hot is not None else [job.cold]
+    whole = len(runs) == len(plans) and all(_went_through(run, plan) for run, plan in zip(runs, plans, strict=True))
     night = night_of(job.cut, cold, hot) if hot is not None and whole and job.cut is not None else None
     motors = {}
     for name in cold.motors:

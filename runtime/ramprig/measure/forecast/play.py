@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ramprig.bench import Bench
-from ramprig.errors import UsageError
+from ramprig.errors import LinkError, UsageError
 from ramprig.mock.core.library import defines, load
 from ramprig.mock.core.watched import AXIS_COLUMNS, BUS_COLUMNS, EVERY_TICKS, Watched, WatchedCore, WatchedMock
 from ramprig.mock.port import DevicePort
@@ -45,7 +45,8 @@ class Play:
     """A run that is over. Rows are `row_s` apart and begin with the run's first tick, `bus_*` in V, energy in J.
 
     `passes` are the ticks since the run's begin at which passes began, by where the repeat stands, `cycles` those of
-    cycles; `steps` the steps that began, with their places in words. `tripped` says why it tripped, empty if not.
+    cycles; `step_ticks` and `step_names` the steps that began. `tripped` says what ended it before its end, a trip or
+    the loss of the board with its supply; empty where nothing did.
     """
 
     verdict: Verdict
@@ -126,9 +127,18 @@ def play(
     session = Session.open(
         port, wanted=wanted_of(bench), seed=seed, on_block=listeners.on_block, on_event=listeners.on_event
     )
-    with session:
-        outcome = run_plan(session, plan, rig, clock=port.clock, listeners=listeners, keeper=notes, begun=notes.begun)
-        return _play(rig, outcome, notes, device.rows)
+    played: Play | None = None
+    try:
+        with session:
+            outcome = run_plan(
+                session, plan, rig, clock=port.clock, listeners=listeners, keeper=notes, begun=notes.begun
+            )
+            played = _play(rig, outcome, notes, device.rows)
+    except LinkError:
+        # Closing asks a board that has gone, with its supply, for its account; how the run ended is known by then.
+        if played is None:
+            raise
+    return played
 
 
 def _play(rig: Rig, outcome: Outcome, notes: _Notes, rows: Floats) -> Play:
@@ -152,7 +162,7 @@ def _play(rig: Rig, outcome: Outcome, notes: _Notes, rows: Floats) -> Play:
         verdict=outcome.verdict,
         sentence=outcome.sentence,
         place="" if outcome.place is None else str(outcome.place),
-        tripped=outcome.sentence if outcome.verdict is Verdict.TRIPPED else "",
+        tripped="" if outcome.verdict in (Verdict.PASSED, Verdict.FAILED) else outcome.sentence,
         elapsed_s=outcome.elapsed_s,
         row_s=EVERY_TICKS * tick_s,
         tick_s=tick_s,

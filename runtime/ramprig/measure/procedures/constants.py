@@ -38,6 +38,8 @@ LEVEL_MS = 500
 RUN_UP = 0.875
 RUN_UP_MS = 700
 RUN_DOWN_MS = 1500
+STILL_WITHIN_S = 60
+"""A shaft that turns for longer is not one for this measurement."""
 REST_MS = 300
 RAMPED_MOST = 0.05
 """A larger change of duty from sample to sample is a step at some tick between, not a ramp."""
@@ -123,6 +125,8 @@ class Constants:
             script.drive(name, sign * round(share * ceiling)).hold(LEVEL_MS)
         # never down to a lower level under drive: that would give energy back to the supply
         script.coast(name).hold(RUN_DOWN_MS)
+        # nor from zero up while the shaft still turns: a duty below its speed brakes it
+        script.step(f"wait: {{speed of: {name}, is: -1 rpm to 1 rpm, within: {STILL_WITHIN_S} s}}")
         script.drive(name, sign * round(RUN_UP * ceiling)).hold(RUN_UP_MS).coast(name).hold(RUN_DOWN_MS)
         return script.hold(REST_MS)
 

@@ -81,7 +81,7 @@ class WatchedCore(SimulatedDevice):
     @property
     def rows(self) -> NDArray[np.float64]:
         """As `Watched`."""
-        return np.frombuffer(bytes(self._gathered), np.float64).reshape(-1, self._columns)
+        return np.frombuffer(self._gathered, np.float64).reshape(-1, self._columns).copy()
 
     def set_winding(self, axis: int, celsius: float) -> None:
         """As `Watched`."""
