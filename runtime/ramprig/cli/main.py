@@ -32,6 +32,7 @@ COMMANDS = {
     "measure": "check a motor's wiring; measure a motor, a servo or the link",
     "accept": "check a board of your own against the protocol, clause by clause",
     "forecast": "tell what a run will do, within which bounds, and the odds that it trips",
+    "life": "estimate how long samples live, or plan the test that shows it",
     "schema": "print the JSON Schema of bench or sequence files, for editors",
 }
 """Every command is a module of this room by the same name."""
