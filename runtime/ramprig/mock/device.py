@@ -201,7 +201,7 @@ class MockDevice:
             return self._run_booting(ticks), b""
         transmitter, receiver, plant = controller.transmitter, self._receiver, self.plant
         drives = tuple(zip(controller.drives, plant.axes, strict=True))
-        servos = tuple(zip(controller.pulses, plant.servos, strict=True))
+        servos = [(pulse, servo, -1) for pulse, servo in zip(controller.pulses, plant.servos, strict=True)]
         tick, step, supply, brownout_mv = controller.tick, plant.step, controller.supply, self.setup.brownout_mv
         watching = bool(self.faults.get("brownout_on_start"))
         elapsed = self.ticks
@@ -215,10 +215,11 @@ class MockDevice:
             for drive, axis in drives:
                 axis.duty = drive.duty
                 axis.brake = drive.brake
-            for pulse, servo in servos:
-                pulse_us = pulse.pulse_ns / 1000.0 if pulse.pulse_ns else None
-                if pulse_us != servo.pulse_us:
-                    servo.pulse_us = pulse_us
+            for at, (pulse, servo, told_ns) in enumerate(servos):
+                pulse_ns = pulse.pulse_ns
+                if pulse_ns != told_ns:
+                    servo.pulse_us = pulse_ns / 1000.0 if pulse_ns else None
+                    servos[at] = pulse, servo, pulse_ns
             step()
             elapsed += 1
             if trace is not None:

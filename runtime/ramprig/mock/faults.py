@@ -125,7 +125,10 @@ def parse_fault(text: str) -> tuple[str, int, float]:
 
 
 class FaultSwitches:
-    """Which faults are on, and how strong; `act` is told of each change: name, axis, strength. `changes` counts them."""
+    """Which faults are on, and how strong; `act` is told of each change: name, axis, strength.
+
+    `changes` counts the changes.
+    """
 
     def __init__(self, act: Callable[[str, int, float], None], *, axes: int) -> None:
         self._act = act

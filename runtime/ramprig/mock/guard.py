@@ -19,12 +19,13 @@ CURRENT_MAX_MA = 65535
 """The thermal model takes no more than this for a current."""
 
 _UNREACHED = 1 << 40
+_HALF = 0x80000000  # within it two counts are as far apart as they seem: `apart` without the call, in every tick
 
 
 def apart(a: int, b: int) -> int:
     """The difference of two counts, by SPEC section 2."""
     difference = a - b
-    if -0x80000000 < difference < 0x80000000:
+    if -_HALF < difference < _HALF:
         return difference
     return max((difference + 0x80000000 & 0xFFFFFFFF) - 0x80000000, -0x7FFFFFFF)
 
@@ -186,17 +187,26 @@ class AxisWatch:
     def _move(self, counts: int, age: int) -> None:
         """Take over counts that differ, and mark when they leave the band of standstill."""
         self._seen = self.counts = counts
-        if abs(apart(counts, self._still_mark)) > self._still_counts:
+        off = counts - self._still_mark
+        if not -_HALF < off < _HALF:
+            off = apart(counts, self._still_mark)
+        if off > self._still_counts or -off > self._still_counts:
             self._still_mark = counts
             self.still_age = age
 
     def _follow(self, age: int, duty: int) -> None:
         """Judge a movement of a driven shaft: is it enough, and is it the right way?"""
         counts = self.counts
-        if abs(apart(counts, self._stall_mark)) >= self._stall_counts:
+        off = counts - self._stall_mark
+        if not -_HALF < off < _HALF:
+            off = apart(counts, self._stall_mark)
+        if off >= self._stall_counts or -off >= self._stall_counts:
             self._stall_mark = counts
             self._stall_age = age
-        ahead = apart(counts, self._wrong_mark) * (self._sense if duty > 0 else -self._sense)
+        ahead = counts - self._wrong_mark
+        if not -_HALF < ahead < _HALF:
+            ahead = apart(counts, self._wrong_mark)
+        ahead *= self._sense if duty > 0 else -self._sense
         if ahead > 0:
             self._wrong_mark = counts
         elif ahead <= -self._wrong_counts:

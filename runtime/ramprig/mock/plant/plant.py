@@ -45,15 +45,18 @@ class Plant:
         self._warm_ticks = max(1, WARM_EVERY_US // tick_us)
         self._to_warm = self._warm_ticks
 
+    def _warm(self) -> None:
+        self._to_warm = self._warm_ticks
+        for axis in self.axes:
+            axis.warm(self._warm_ticks)
+
     def step(self) -> None:
         """Advance everything one tick."""
         axes = self.axes
         supply = self.supply
         self._to_warm -= 1
         if not self._to_warm:
-            self._to_warm = self._warm_ticks
-            for axis in axes:
-                axis.warm(self._warm_ticks)
+            self._warm()
         for axis in axes:
             if axis.duty or axis.speed_rad_s or axis.current_a or axis.restless or axis.surplus_a:
                 break
@@ -68,7 +71,8 @@ class Plant:
         load_a = supply.standby_a
         siemens = 0.0
         for servo in self.servos:
-            servo.step()
+            if servo.busy:
+                servo.step()
             load_a += servo.current_a
         bus_v = supply.bus_v
         for axis in axes:

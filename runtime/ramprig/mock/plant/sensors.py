@@ -91,7 +91,8 @@ class Encoder:
                 moved = (GRAY_UP[position & 3] >> 1) - (GRAY_UP[before & 3] >> 1)
             if self.phases_swapped:
                 moved = -moved
-            self._count = (self._count + moved + _HALF) % _WRAP - _HALF
+            count = self._count + moved
+            self._count = count if -_HALF <= count < _HALF else (count + _HALF) % _WRAP - _HALF
         if self.noisy:
             return (self._count + self._random.randrange(-1, 2) + _HALF) % _WRAP - _HALF
         return self._count
