@@ -83,7 +83,7 @@ def test_a_plan_says_how_many_and_how_long(capsys: pytest.CaptureFixture[str]) -
     assert figures["time_each"] == pytest.approx(20000 * (math.log(0.1) / math.log(0.9) / 8) ** (1 / 1.8))
     assert main(["life", "--plan", "20000", "--samples", "8", "--shape", "1.8"]) == 0
     text = capsys.readouterr().out
-    assert "8 samples to 3.495e+04 each with at most 0 failures" in text
+    assert "8 samples to 34950 each with at most 0 failures" in text
     assert "taking a Weibull shape of 1.8 as known" in text
 
 

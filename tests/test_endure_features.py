@@ -23,8 +23,13 @@ from ramprig.endure.features import (
 )
 from ramprig.endure.trends import Finding, Level, TrendWatch
 from ramprig.errors import RecordError
+from ramprig.mock.device import MockDevice
 from ramprig.mock.plant import VENT_BENCH, Plant
+from ramprig.mock.port import MockPort
 from ramprig.record.scan import Piece
+from ramprig.report.making import make_report
+from ramprig.sequence.executive import Progress
+from ramprig.session.session import Session
 
 NAMES = ["tick", "time_s", *(f"vent.{name}" for name in features.CHANNELS), "supply_v", "state"]
 Columns = dict[str, list[float]]
@@ -146,8 +151,8 @@ def test_names_and_units() -> None:
     units = {name.rpartition(": ")[2]: unit_of(name) for name in names}
     assert units == {
         "duration": "s", "lowest supply": "V", "peak current": "A", "energy": "J", "position error": "rev",
-        "travel ratio": "", "steady current": "A", "steady speed": "rpm", "time to speed": "s", "coast down": "s",
-        "breakaway duty": "%",
+        "travel ratio": "", "steady current": "A", "steady speed": "rpm", "time to speed": "s", "coast-down time": "s",
+        "break-away duty": "%",
     }  # fmt: skip
     assert [name for name in names if not is_judged(name)] == ["vent: position error"]
 
@@ -199,6 +204,43 @@ def test_a_recorded_run_has_features_for_each_cycle_and_check(tmp_path: Path) ->
         assert 0.2 < forward.coast_down_s < 2.0
         assert each.motors["vent"].energy_j > 0.0
         assert each.motors["vent"].peak_current_a > forward.steady_current_a > 0.0
+
+
+AGEING_FROM_S = 350.0
+ONE_WAY = """- cycle:
+    times: 178
+    rest: 100 ms
+    steps:
+      - ramp: {motor: vent, to: 60 %, in: 700 ms}
+      - hold: 600 ms
+      - confirm: {position of: vent, is: at least 10 deg}
+      - coast: {motor: vent, in: 500 ms}
+      - wait: {speed of: vent, is: -0.5 rpm to 0.5 rpm, within: 3 s}"""
+
+
+def test_ageing_while_a_run_is_recorded_is_found_in_its_folder_within_30_cycles(tmp_path: Path) -> None:
+    # The friction grows by 0.15 % of its first value a second, 0.36 % a cycle, from the 146th cycle or so on.
+    fresh_nm: list[float] = []
+
+    def age(now: Progress, device: MockDevice, port: MockPort, session: Session) -> None:
+        del port, session
+        axis = device.plant.axes[0]
+        fresh_nm.append(axis.coulomb_nm)
+        axis.coulomb_nm = fresh_nm[0] * (1.0 + 0.0015 * max(0.0, now.elapsed_s - AGEING_FROM_S))
+
+    result, _ = run_case(tmp_path, Case("", steps=ONE_WAY, meddle=age), seed=4)
+    assert result.folder is not None
+    watch, found, since = TrendWatch(), [], 0
+    for each in cycle_features(result.folder):
+        if not since and each.span.begin_tick > AGEING_FROM_S * 1000.0:
+            since = each.span.number
+        found += watch.add(each.span.number, {k: v for k, v in each.values().items() if is_judged(k)})
+    assert since > 125
+    assert found[0].feature == "vent forward: steady current"
+    assert since < found[0].cycle <= since + 30
+    assert found[0].change > 0.0
+    text = make_report([result.folder], out=tmp_path / "out", issued="").report.read_text("utf-8")
+    assert str(found[0]) in text
 
 
 # ---- the mock's drive, new and ageing --------------------------------------------------------------------------------

@@ -55,7 +55,7 @@ def test_a_report_counts_cycles_and_shows_their_features(facts: Facts, tmp_path:
     for wanted in ("cycles commanded", "confirmed by the encoder", "first and last cycle overlaid", "of each cycle"):
         assert wanted in text, wanted
     assert "No trend is judged: that takes more than 120 cycles" in text
-    for wanted in ("vent forward: steady current", "vent forward: coast down", "vent: energy"):
+    for wanted in ("vent forward: steady current", "vent forward: coast-down time", "vent: energy"):
         assert f"{wanted} of each cycle" in text, wanted
     (path,) = done.features
     with open(path, encoding="utf-8", newline="") as file:

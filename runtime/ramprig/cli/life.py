@@ -157,13 +157,14 @@ def _counted(times: Times) -> str:
 
 def _fitted(times: Times, args: argparse.Namespace) -> tuple[Figures, list[str]]:
     """Weibull by maximum likelihood, and the life with likelihood-ratio bounds."""
-    from ramprig.endure.life import fit_weibull, likelihood_bounds
+    from ramprig.endure.life import fit_weibull, in_figures, likelihood_bounds
 
     share, confidence = share_of(args.share, "--share"), share_of(args.confidence, "--confidence")
     fit = fit_weibull(times.failures, times.suspensions)
     low, high = likelihood_bounds(fit, share, confidence=confidence)
     one_sided = 50.0 + 50.0 * confidence
-    name = f"B{100.0 * share:g}"
+    name, sure = f"B{100.0 * share:g}", f"with {100.0 * confidence:g} % confidence"
+    life, least, most = (in_figures(value) for value in (fit.life(share), low, high))
     figures: Figures = {
         "samples": len(times.failures) + len(times.suspensions), "failures": len(times.failures), "unit": args.unit,
         "shape": fit.shape, "shape_sd": fit.shape_sd, "scale": fit.scale, "scale_sd": fit.scale_sd, "share": share,
@@ -172,10 +173,10 @@ def _fitted(times: Times, args: argparse.Namespace) -> tuple[Figures, list[str]]
     lines = [
         _counted(times),
         f"Weibull shape    {fit.shape:.3g}  (standard uncertainty {fit.shape_sd:.2g}; {meaning(fit)})",
-        f"Weibull scale    {fit.scale:.4g} {args.unit}  (standard uncertainty {fit.scale_sd:.2g}; 63.2 % have failed)",
-        f"{name:<16} {fit.life(share):.4g} {args.unit}, between {low:.4g} and {high:.4g} with {100 * confidence:g} % "
-        "confidence",
-        f"So {100 * (1 - share):g} % live longer than {low:.4g} {args.unit} with {one_sided:g} % confidence.",
+        f"Weibull scale    {in_figures(fit.scale)} {args.unit}  (standard uncertainty {in_figures(fit.scale_sd)}; by then "
+        "63.2 % have failed)",
+        f"{name:<16} {life} {args.unit}, between {least} and {most} {sure}",
+        f"So {100 * (1 - share):g} % live longer than {least} {args.unit} with {one_sided:g} % confidence.",
         "Maximum likelihood, bounds by the likelihood ratio; two parameters, one cause of failure taken for granted.",
     ]
     if len(times.failures) < 5:
@@ -194,7 +195,7 @@ def meaning(fit: Weibull) -> str:
 
 def _shown(times: Times, args: argparse.Namespace) -> tuple[Figures, list[str]]:
     """What at most one failure shows, or any with the shape taken as known."""
-    from ramprig.endure.life import fit_weibull, reliability_shown, weibayes
+    from ramprig.endure.life import fit_weibull, in_figures, reliability_shown, weibayes
 
     share, confidence = share_of(args.share, "--share"), share_of(args.confidence, "--confidence")
     count, failed = len(times.failures) + len(times.suspensions), len(times.failures)
@@ -208,7 +209,10 @@ def _shown(times: Times, args: argparse.Namespace) -> tuple[Figures, list[str]]:
         life = scale * (-math.log1p(-share)) ** (1.0 / args.shape)
         figures |= {"scale_at_least": scale, "share": share, "life_at_least": life}
         text = f"With a Weibull shape of {args.shape:g} taken as known, {100 * (1 - share):g} % live longer than"
-        return figures, [_counted(times), f"{text} {life:.4g} {args.unit} with {100 * confidence:g} % confidence."]
+        return figures, [
+            _counted(times),
+            f"{text} {in_figures(life)} {args.unit} with {100 * confidence:g} % confidence.",
+        ]
     if failed:
         fit_weibull(times.failures, times.suspensions)  # which says why it cannot be, and what to do
     least = min(times.suspensions)
@@ -220,7 +224,7 @@ def _shown(times: Times, args: argparse.Namespace) -> tuple[Figures, list[str]]:
 
 def _planned(args: argparse.Namespace) -> tuple[Figures, list[str]]:
     """How many samples, and how long."""
-    from ramprig.endure.life import plan
+    from ramprig.endure.life import in_figures, plan
 
     if args.failures < 0 or (args.samples is not None and args.samples < 1):
         raise UsageError("--failures is 0 or more and --samples 1 or more")
@@ -237,5 +241,5 @@ def _planned(args: argparse.Namespace) -> tuple[Figures, list[str]]:
         "reliability": found.reliability, "confidence": found.confidence, "failures": found.failures,
         "shape": found.shape,
     }  # fmt: skip
-    total = f"That is {found.samples * found.time_each:.4g} {args.unit} in all."
+    total = f"That is {in_figures(found.samples * found.time_each)} {args.unit} in all."
     return figures, [f"{found}.", total]

@@ -117,6 +117,7 @@ class CycleFeatures:
 DRIVE_NAMES = tuple(field.name for field in fields(DriveFeatures))
 MOTOR_NAMES = ("peak_current_a", "energy_j", "position_error_rev", "travel_ratio")
 _UNITS = {"a": "A", "rpm": "rpm", "s": "s", "j": "J", "pct": "%", "rev": "rev"}
+_WORDS = {"coast_down_s": "coast-down time", "breakaway_duty_pct": "break-away duty"}
 NOT_JUDGED = ("position error",)
 """Features that are told but have no trend of their own."""
 
@@ -124,6 +125,8 @@ NOT_JUDGED = ("position error",)
 def named(attribute: str) -> str:
     """The words of an attribute without its unit: `steady current` of `steady_current_a`."""
     words, _, unit = attribute.rpartition("_")
+    if attribute in _WORDS:
+        return _WORDS[attribute]
     return (words if unit in _UNITS else attribute).replace("_", " ")
 
 

@@ -270,10 +270,15 @@ class Plan:
     def __str__(self) -> str:
         known = "" if self.shape is None else f", taking a Weibull shape of {self.shape:g} as known"
         return (
-            f"{self.samples} samples to {self.time_each:.4g} each with at most {self.failures} failures show a "
-            f"reliability of {100 * self.reliability:g} % at {self.life:.4g} with {100 * self.confidence:g} % "
+            f"{self.samples} samples to {in_figures(self.time_each)} each with at most {self.failures} failures show a "
+            f"reliability of {100 * self.reliability:g} % at {in_figures(self.life)} with {100 * self.confidence:g} % "
             f"confidence{known}"
         )
+
+
+def in_figures(value: float) -> str:
+    """Four significant figures without an exponent where people would write none: `34950`, not `3.495e+04`."""
+    return f"{float(f'{value:.4g}'):.10g}"
 
 
 def plan(
