@@ -26,6 +26,7 @@ from ramprig.errors import RecordError
 from ramprig.mock.device import MockDevice
 from ramprig.mock.plant import VENT_BENCH, Plant
 from ramprig.mock.port import MockPort
+from ramprig.record.folder import FORMAT
 from ramprig.record.scan import Piece
 from ramprig.report.making import make_report
 from ramprig.sequence.executive import Progress
@@ -241,6 +242,31 @@ def test_ageing_while_a_run_is_recorded_is_found_in_its_folder_within_30_cycles(
     assert found[0].change > 0.0
     text = make_report([result.folder], out=tmp_path / "out", issued="").report.read_text("utf-8")
     assert str(found[0]) in text
+
+
+def test_a_run_in_parts_is_read_part_by_part(tmp_path: Path) -> None:
+    # The board restarted: the ticks of the second part begin anew.
+    heads = [name for name in NAMES if name != "state"]
+    for name in ("samples.csv", "samples_2.csv"):
+        rows = [dict(row) | {"time_s": row["tick"] / 1000} for row in known_rows()]
+        lines = [",".join(heads)]
+        lines += [",".join([f"{row['tick']:.0f}", *(f"{row[head]:.6f}" for head in heads[1:])]) for row in rows]
+        (tmp_path / name).write_text("\n".join(lines) + "\n", encoding="utf-8")
+    parts = [{"part": 1, "samples_file": "samples.csv"}, {"part": 2, "samples_file": "samples_2.csv"}]
+    manifest = {"format": FORMAT, "columns": heads, "clocks": {"tick_us": 1000}, "parts": parts}
+    (tmp_path / "run.json").write_text(json.dumps(manifest), encoding="utf-8")
+    assert list(cycle_features(tmp_path)) == []
+    done = [
+        {"kind": "cycle_done", "number": number, "part": part, "begin_tick": 0, "tick": 12_000, "outcome": "confirmed"}
+        for number, part in ((1, 1), (3, 2))
+    ]
+    lost = {"kind": "cycle_interrupted", "number": 2, "part": 2}
+    text = "".join(json.dumps(line) + "\n" for line in (done[0], lost, done[1]))
+    (tmp_path / "cycles.jsonl").write_text(text, encoding="utf-8")
+    one, two = cycle_features(tmp_path)
+    assert (one.span.number, two.span.number, two.span.part) == (1, 3, 2)
+    assert one.values() == pytest.approx(two.values(), nan_ok=True)
+    assert one.motors["vent"].forward.steady_speed_rpm == pytest.approx(40.0)
 
 
 # ---- the mock's drive, new and ageing --------------------------------------------------------------------------------

@@ -173,8 +173,8 @@ def _fitted(times: Times, args: argparse.Namespace) -> tuple[Figures, list[str]]
     lines = [
         _counted(times),
         f"Weibull shape    {fit.shape:.3g}  (standard uncertainty {fit.shape_sd:.2g}; {meaning(fit)})",
-        f"Weibull scale    {in_figures(fit.scale)} {args.unit}  (standard uncertainty {in_figures(fit.scale_sd)}; by then "
-        "63.2 % have failed)",
+        f"Weibull scale    {in_figures(fit.scale)} {args.unit}  (standard uncertainty {in_figures(fit.scale_sd)}; "
+        "by then 63.2 % have failed)",
         f"{name:<16} {life} {args.unit}, between {least} and {most} {sure}",
         f"So {100 * (1 - share):g} % live longer than {least} {args.unit} with {one_sided:g} % confidence.",
         "Maximum likelihood, bounds by the likelihood ratio; two parameters, one cause of failure taken for granted.",
