@@ -156,3 +156,17 @@ def test_answers_out_of_order_are_passed_over_and_counted() -> None:
     fit = fitter.fit
     assert fit is not None
     assert fit.exchanges == 1
+
+
+def test_the_present_tick_is_that_of_the_whole_fit() -> None:
+    wire = Wire(-80e-6, seed=11)
+    fitter = ClockFitter(0.001)
+    assert fitter.tick_not_later(10.0) is None
+    for beat in range(8000):  # past the window, so that the oldest exchanges are dropped meanwhile
+        tick, sent_s, received_s = wire.exchange(10.0 + beat * 0.2)
+        fitter.add(tick, sent_s, received_s)
+        if beat % 50 < 3:
+            early, later = fitter.tick_not_later(received_s), fitter.tick_not_later(received_s + 0.7)
+            fit = fitter.fit
+            assert fit is not None
+            assert (early, later) == (fit.tick_not_later(received_s), fit.tick_not_later(received_s + 0.7))

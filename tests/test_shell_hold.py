@@ -67,6 +67,8 @@ def test_a_slope_is_the_specs_formula(start: int, ticks: int, begin: int, end: i
     value = Slope(start, ticks, begin, end).at(start + after)
     if after >= ticks:
         assert value == end
+    elif after < 0:
+        assert value == begin
     else:
         sign = 1 if end > begin else -1
-        assert value == begin + sign * (abs(end - begin) * max(0, after) // ticks)
+        assert value == begin + sign * (abs(end - begin) * after // ticks)
