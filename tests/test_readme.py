@@ -1,4 +1,4 @@
-"""README.md tells the truth: every command in it is run, and prints what stands there."""
+"""README.md and the guides tell the truth: every command in it is run, and prints what stands there."""
 
 from __future__ import annotations
 
@@ -19,9 +19,11 @@ TEXT = readme_console.README.read_text("utf-8")
 
 @pytest.mark.process
 @pytest.mark.skipif(shutil.which("bash") is None, reason="README's commands are run by bash, which is not here")
-def test_every_console_command_prints_what_stands_below_it() -> None:
-    assert len(re.findall(r"^\$ ", TEXT, re.MULTILINE)) >= 10
-    assert "\n".join(readme_console.differences(TEXT)) == ""
+@pytest.mark.parametrize("guide", readme_console.GUIDES, ids=lambda guide: guide.name)
+def test_every_console_command_prints_what_stands_below_it(guide: Path) -> None:
+    text = guide.read_text("utf-8")
+    assert len(re.findall(r"^\$ ", text, re.MULTILINE)) >= 9
+    assert "\n".join(readme_console.differences(text)) == ""
 
 
 def test_commands_in_other_blocks_are_the_two_that_other_tests_run() -> None:

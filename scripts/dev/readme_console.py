@@ -1,11 +1,11 @@
-"""Runs the `console` blocks of README.md and compares, or renews, the output that is printed there.
+"""Runs the `console` blocks of README.md and of the guides, and compares, or renews, the output printed there.
 
 In a block each line that begins with `$ ` is a command, given to bash; what follows it is its standard output. All
 blocks of the file run in order in one empty folder that has a copy of `scripts/`. What differs from run to run (run
 folders' names, times of day) is compared by its form only.
 
     python scripts/dev/readme_console.py            compare; prints each difference, exit 1 where there is one
-    python scripts/dev/readme_console.py --renew    write the output as it is now into README.md
+    python scripts/dev/readme_console.py --renew    write the output as it is now into the files
 """
 
 from __future__ import annotations
@@ -23,6 +23,8 @@ from pathlib import Path
 
 ROOT = Path(__file__).resolve().parent.parent.parent
 README = ROOT / "README.md"
+GUIDES = (README, ROOT / "scripts" / "night_run.md")
+"""The files whose blocks are run, each in a folder of its own."""
 COMMAND_S = 120.0
 """A command that takes longer is broken."""
 FENCE = re.compile(r"^```console\n(.*?)^```$", re.MULTILINE | re.DOTALL)
@@ -30,7 +32,9 @@ VARYING = (
     (re.compile(r"\b\d{8}T\d{6}Z-([a-z0-9-]+)-[0-9a-f]{6}\b"), r"RUN-\1"),
     (re.compile(r"\b\d{4}-\d\d-\d\dT\d\d:\d\d:\d\d(\.\d+)?Z"), "TIME"),
     (re.compile(r"\b\d{4}-\d\d-\d\d \d\d:\d\d\b"), "TIME"),
+    (re.compile(r"\b[A-Z][a-z]{2} \d\d [A-Z][a-z]{2} \d{4} \d\d:\d\d \(UTC[+-]\d{4}\)"), "TIME"),
     (re.compile(r"\b(core|mock):\?"), "SIMULATED:?"),
+    (re.compile(r"the firmware core and plant in C|the mock in Python"), "SIMULATED"),
     (re.compile(r"  (-?\d+ mA|0 A)  "), "  NOISE  "),  # of a current at rest
     (re.compile(r"^link [\d.]+ ms", re.MULTILINE), "link TIME"),
     (re.compile(r"outputs off after \d+ ms"), "outputs off after TIME"),
@@ -66,12 +70,17 @@ def settled(output: str) -> str:
 
 
 def carried_out(text: str, folder: Path) -> str:
-    """The command's standard output, run in the folder by bash with this Python's programs first on the path."""
+    """The command's standard output, run in the folder by bash with this Python's programs first on the path.
+
+    Raises RuntimeError where it fails; one that is meant to fail ends with `; echo "exit code $?"`.
+    """
     path = f"{Path(sys.executable).parent}{os.pathsep}{os.environ.get('PATH', '')}"
     done = subprocess.run(
         ["bash", "-c", text], cwd=folder, env=os.environ | {"PATH": path, "COLUMNS": "100"}, stdin=subprocess.DEVNULL,
-        stdout=subprocess.PIPE, stderr=subprocess.DEVNULL, timeout=COMMAND_S, check=False,
+        capture_output=True, timeout=COMMAND_S, check=False,
     )  # fmt: skip
+    if done.returncode:
+        raise RuntimeError(f"`{text}` ended with {done.returncode}: {done.stderr.decode('utf-8', 'replace')}")
     return "".join(line.rstrip() + "\n" for line in done.stdout.decode("utf-8").splitlines())
 
 
@@ -84,10 +93,10 @@ def all_run(text: str, folder: Path) -> Iterator[tuple[Command, str]]:
 
 
 def differences(text: str) -> list[str]:
-    """What README says otherwise than the commands do."""
+    """What the text says otherwise than the commands do."""
     with tempfile.TemporaryDirectory() as folder:
         return [
-            f"$ {command.text}\n--- README says\n{command.output}--- it prints\n{now}"
+            f"$ {command.text}\n--- the text says\n{command.output}--- it prints\n{now}"
             for command, now in all_run(text, Path(folder))
             if settled(command.output) != settled(now)
         ]
@@ -108,13 +117,13 @@ def renewed(text: str) -> str:
 def main() -> int:
     """Compare or renew."""
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0] if __doc__ else None)
-    parser.add_argument("--renew", action="store_true", help="write the output as it is now into README.md")
-    text = README.read_text("utf-8")
+    parser.add_argument("--renew", action="store_true", help="write the output as it is now into the files")
     if parser.parse_args().renew:
-        README.write_text(renewed(text), "utf-8")
+        for guide in GUIDES:
+            guide.write_text(renewed(guide.read_text("utf-8")), "utf-8")
         return 0
-    found = differences(text)
-    print("\n".join(found) or "README's output is what the commands print")
+    found = [difference for guide in GUIDES for difference in differences(guide.read_text("utf-8"))]
+    print("\n".join(found) or "the output in the texts is what the commands print")
     return 1 if found else 0
 
 
