@@ -12,6 +12,7 @@ import pytest
 
 from explain_cases import Case, run_case
 from ramprig.endure.features import CycleFeatures, DriveFeatures, MotorFeatures, Span
+from ramprig.report.checks import checks_table
 from ramprig.report.digest import Digest, Interval, digest_samples
 from ramprig.report.envelope import Envelope
 from ramprig.report.facts import Facts, gather
@@ -122,6 +123,23 @@ def test_a_current_that_grows_is_found_and_a_steady_one_is_not() -> None:
     assert calm.judged.established
     assert found.findings
     assert 150 < found.findings[0].cycle < 600
+
+
+def test_checks_are_told_by_their_first_and_last() -> None:
+    def check(after: int, speed_rpm: float) -> CycleFeatures:
+        motor = MotorFeatures(forward=DriveFeatures(steady_speed_rpm=speed_rpm), position_error_rev=0.001)
+        span = Span(number=0, part=1, begin_tick=0, end_tick=1000, after=after)
+        return CycleFeatures(
+            span=span, samples=100, left_out=0, duration_s=1.0, lowest_supply_v=12.0, motors={"vent": motor}
+        )
+
+    text = checks_table([check(0, 20.0), check(100, 19.5), check(200, 18.0)])
+    assert "3 checks were done, the first after 0 cycles and the last after 200" in text
+    row = next(row for row in text.split("<tr>") if "vent forward: steady speed" in row)
+    assert re.findall(r"<td[^>]*>([^<]*)</td>", row)[1:] == ["20", "18", "-10.0 %", "rpm"]
+    error = next(row for row in text.split("<tr>") if "vent: position error" in row)
+    assert "%" not in error
+    assert checks_table([check(0, 20.0)]) == ""
 
 
 def test_few_cycles_have_no_trend() -> None:

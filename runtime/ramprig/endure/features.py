@@ -77,13 +77,17 @@ class MotorFeatures:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Span:
-    """Where a cycle, or a check with the number 0, lies: ticks of the board in one part of the run, ends included."""
+    """Where a cycle, or a check with the number 0, lies: ticks of the board in one part of the run, ends included.
+
+    `after` is how many cycles were done before a check.
+    """
 
     number: int
     part: int
     begin_tick: int
     end_tick: int
     outcome: str = ""
+    after: int = 0
 
     @property
     def is_check(self) -> bool:
@@ -178,6 +182,7 @@ def spans_of(lines: Iterable[Line]) -> list[Span]:
                 begin_tick=int(line["begin_tick"]),
                 end_tick=int(line["tick"]),
                 outcome=str(line.get("outcome", "")),
+                after=int(line.get("after") or 0),
             )
             for line in lines
             if line.get("kind") in ("cycle_done", "check_done")

@@ -14,6 +14,7 @@ from ramprig import __version__
 from ramprig.record.reading import Audit
 
 from . import page, plots, sections
+from .checks import checks_table
 from .compare import compared
 from .digest import Digest
 from .explain import Explanation, view_of_trip
@@ -157,7 +158,8 @@ def _trends(read: Read, figures: _Figures) -> str:
     found = trends_of(read.facts, read.digest)
     if not found:
         return ""
-    return figures.put(plots.by_cycle(read.facts, found)) + sections.trend_findings(found)
+    words = sections.trend_findings(found) + checks_table(read.digest.features)
+    return figures.put(plots.by_cycle(read.facts, found)) + words
 
 
 def _ranges(digest: Digest) -> str:

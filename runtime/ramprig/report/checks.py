@@ -1,0 +1,38 @@
+"""Tells what the checks between cycles showed: each feature at the first and at the last of them, and the change.
+
+Checks run the same short reference each time, so that their features do not depend on the load of the cycles. There
+are few of them; nothing is judged here.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+
+from ramprig.endure.features import CycleFeatures, is_judged, unit_of
+
+from . import page
+
+CHECKS_MIN = 2
+
+
+def checks_table(features: Sequence[CycleFeatures]) -> str:
+    """A table of the checks among these features, with a heading; empty where there are fewer than CHECKS_MIN."""
+    checks = [each for each in features if each.span.is_check]
+    if len(checks) < CHECKS_MIN:
+        return ""
+    first, last = checks[0].values(), checks[-1].values()
+    rows = []
+    for name, before in first.items():
+        after = last.get(name, math.nan)
+        if math.isnan(before) or math.isnan(after):
+            continue
+        change = f"{100.0 * (after - before) / abs(before):+.1f} %" if before and is_judged(name) else ""
+        rows.append([page.text(name), f"{before:.4g}", f"{after:.4g}", change, unit_of(name)])
+    if not rows:
+        return ""
+    said = f"{len(checks)} checks were done, the first after {checks[0].span.after} cycles and the last after "
+    said += f"{checks[-1].span.after}. They are told and not judged: there are too few for a baseline."
+    heads = ["feature of the check", "first", "last", "change", "unit"]
+    table = page.table(heads, rows, numbers=(1, 2, 3))
+    return "<h3>Checks between the cycles</h3>" + table + page.paragraph(said, kind="note")
