@@ -138,6 +138,42 @@ def test_a_cycle_without_samples_or_motion_has_no_features() -> None:
     assert walked([], [WHOLE]) == []
 
 
+def test_a_cycle_that_begins_with_a_slow_ramp_shows_its_break_away_duty() -> None:
+    (found,) = walked(known_rows()[55:], [Span(number=1, part=1, begin_tick=550, end_tick=12_000)])
+    assert found.motors["vent"].forward.breakaway_duty_pct == pytest.approx(10.0, abs=0.8)
+    assert found.motors["vent"].forward.time_to_speed_s == pytest.approx(1.85, abs=0.011)
+
+
+def test_a_motor_that_is_under_way_when_the_cycle_begins_has_no_time_to_speed() -> None:
+    (found,) = walked(known_rows()[100:], [Span(number=1, part=1, begin_tick=1000, end_tick=12_000)])
+    forward = found.motors["vent"].forward
+    assert math.isnan(forward.time_to_speed_s)
+    assert math.isnan(forward.breakaway_duty_pct)
+    assert forward.steady_speed_rpm == pytest.approx(40.0)
+    assert forward.coast_down_s == pytest.approx(0.95, abs=0.021)
+
+
+@pytest.mark.parametrize("seed", range(40))
+def test_whatever_comes_gives_numbers_that_can_be(seed: int) -> None:
+    source = np.random.default_rng(seed)
+    count = int(source.integers(0, 120))
+    times = np.cumsum(source.choice([0.0, 0.01, 0.3, 2.0], count))
+
+    def channel(scale: float) -> np.ndarray[tuple[int], np.dtype[np.float64]]:
+        values = np.repeat(source.choice([-1.0, -0.5, 0.0, 0.5, 1.0], -(-count // 8)), 8)[:count] * scale
+        values[source.random(count) < 0.1 * source.integers(0, 3)] = math.nan
+        return values
+
+    scales = zip(features.CHANNELS, (60.0, 1000.0, 1.0, 40.0, 0.5), strict=True)
+    found = features.motor_features(times, {name: channel(scale) for name, scale in scales}, channel(12.0))
+    for drive in (found.forward, found.backward):
+        for seconds in (drive.time_to_speed_s, drive.coast_down_s):
+            assert math.isnan(seconds) or 0.0 <= seconds <= times[-1] - times[0]
+        assert math.isnan(drive.breakaway_duty_pct) or 0.0 < drive.breakaway_duty_pct <= 60.0
+    assert math.isnan(found.peak_current_a) or 0.0 <= found.peak_current_a <= 0.5
+    assert math.isnan(found.travel_ratio) or found.travel_ratio >= 0.0
+
+
 def test_a_cycle_too_long_is_cut_and_counted(monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(features, "CYCLE_ROWS_MAX", 700)
     (found,) = walked(known_rows(), [WHOLE], pieces=5)

@@ -33,10 +33,14 @@ AT_SPEED = 0.95
 """Share of the steady speed at which the motor has come to speed."""
 AT_REST = 0.05
 """Share of the steady speed below which it has run down."""
+UNDER_WAY = 0.15
+"""A cycle whose first duty is more than this share of the hold's begins with the motor under way."""
 MOVED_COUNTS = 2
 """More counts than this are a motion; fewer are a shaft that trembles on an edge."""
 BREAKAWAY_PCT_PER_S = 25.0
 """A ramp steeper than this passes the break-away duty before the counts can tell; none is given then."""
+FROM_REST_PCT = 3.0
+"""A cycle whose first duty is no more than this is taken to begin at rest."""
 GAP_S = 0.5
 """No energy is counted over a gap in the samples longer than this."""
 CHANNELS = ("duty_pct", "counts", "position_rev", "speed_rpm", "current_a")
@@ -316,7 +320,9 @@ def _drive(times: Floats, channels: Mapping[str, Floats], sign: float) -> DriveF
     middle = int(np.searchsorted(times, (times[begin] + times[end - 1]) / 2.0))
     steady_speed = _mean(speed[middle:end])
     before = np.flatnonzero(~(duty[:begin] > 0.0))
-    first = int(before[-1]) if len(before) else 0
+    # A cycle that begins under way does not show how long the motor took; one that begins with the ramp does.
+    begun = end if duty[0] > UNDER_WAY * duty[begin] else 0
+    first = int(before[-1]) if len(before) else begun
     driven = np.flatnonzero(duty[end:] != 0.0)
     # The duty falls to zero, stays there, and ends with the next drive: of the other direction, or a rising one.
     zero = np.flatnonzero(duty[end:] == 0.0)
@@ -362,9 +368,10 @@ def _crossing(times: Floats, values: Floats, level: float) -> float:
 def _breakaway(times: Floats, duty: Floats, counts: Floats) -> float:
     """The duty at which the shaft first moves in a slow ramp from rest; NaN where nothing of the kind is there."""
     driven = np.flatnonzero(duty > 0.0)
-    if not len(driven) or driven[0] == 0:
+    if not len(driven) or (driven[0] == 0 and duty[0] > FROM_REST_PCT):
         return math.nan
     first = int(driven[0])
+    before = max(0, first - 1)
     earlier = counts[max(0, first - 5) : first + 1]
     if np.isnan(earlier).any() or np.ptp(earlier) > MOVED_COUNTS:
         return math.nan
@@ -372,5 +379,7 @@ def _breakaway(times: Floats, duty: Floats, counts: Floats) -> float:
     if not len(moved):
         return math.nan
     k = first + int(moved[0])
-    slew = (duty[k] - duty[first - 1]) / max(float(times[k] - times[first - 1]), 1e-9)
+    if not np.all(duty[first : k + 1] > 0.0):
+        return math.nan
+    slew = (duty[k] - duty[before]) / max(float(times[k] - times[before]), 1e-9)
     return float(duty[k]) if 0.0 < slew <= BREAKAWAY_PCT_PER_S else math.nan
