@@ -30,6 +30,7 @@ COMMAND_S = 120.0
 FENCE = re.compile(r"^```console\n(.*?)^```$", re.MULTILINE | re.DOTALL)
 VARYING = (
     (re.compile(r"\b\d{8}T\d{6}Z-([a-z0-9-]+)-[0-9a-f]{6}\b"), r"RUN-\1"),
+    (re.compile(r"\b\d{8}T\d{6}Z\b"), "START"),
     (re.compile(r"\b\d{4}-\d\d-\d\dT\d\d:\d\d:\d\d(\.\d+)?Z"), "TIME"),
     (re.compile(r"\b\d{4}-\d\d-\d\d \d\d:\d\d\b"), "TIME"),
     (re.compile(r"\b[A-Z][a-z]{2} \d\d [A-Z][a-z]{2} \d{4} \d\d:\d\d \(UTC[+-]\d{4}\)"), "TIME"),
