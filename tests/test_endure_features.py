@@ -7,6 +7,7 @@ import math
 from pathlib import Path
 
 import numpy as np
+import numpy.typing as npt
 import pytest
 
 from explain_cases import Case, run_case
@@ -157,10 +158,11 @@ def test_a_motor_that_is_under_way_when_the_cycle_begins_has_no_time_to_speed() 
 def test_whatever_comes_gives_numbers_that_can_be(seed: int) -> None:
     source = np.random.default_rng(seed)
     count = int(source.integers(0, 120))
-    times = np.cumsum(source.choice([0.0, 0.01, 0.3, 2.0], count))
+    times = np.cumsum(source.choice([0.0, 0.01, 0.3, 2.0], count), dtype=np.float64)
 
-    def channel(scale: float) -> np.ndarray[tuple[int], np.dtype[np.float64]]:
-        values = np.repeat(source.choice([-1.0, -0.5, 0.0, 0.5, 1.0], -(-count // 8)), 8)[:count] * scale
+    def channel(scale: float) -> npt.NDArray[np.float64]:
+        steps = source.choice([-1.0, -0.5, 0.0, 0.5, 1.0], -(-count // 8))
+        values: npt.NDArray[np.float64] = np.repeat(steps, 8)[:count].astype(np.float64) * scale
         values[source.random(count) < 0.1 * source.integers(0, 3)] = math.nan
         return values
 

@@ -28,7 +28,7 @@ def test_every_sample_lies_within_its_interval_and_every_extreme_is_kept(
     values: list[float], piece: int, seed: int
 ) -> None:
     random = np.random.default_rng(seed)
-    times = np.cumsum(random.choice([0.01, 0.01, 0.01, 0.02, 0.5], len(values)))
+    times = np.cumsum(random.choice([0.01, 0.01, 0.01, 0.02, 0.5], len(values)), dtype=np.float64)
     column = np.array(values)
     envelope = Envelope(["a"], intervals_max=32)
     for begin in range(0, len(values), piece):
