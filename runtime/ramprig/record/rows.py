@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from dataclasses import dataclass
 from functools import lru_cache
 
 import numpy as np
@@ -51,6 +52,64 @@ class Unwrapper:
         return values
 
 
+@dataclass(frozen=True, slots=True)
+class Cells:
+    """One column of printed rows as numbers: `scaled` (n,) int64 / 10^`decimals`; nothing stands where `blank` is true.
+
+    The numbers are those of the text, digit by digit. `blank` is (n,) bool, None where every field is filled.
+    """
+
+    scaled: Ints
+    decimals: int
+    blank: NDArray[np.bool_] | None = None
+
+    def __getitem__(self, rows: slice) -> Cells:
+        """Some of the rows; nothing is copied."""
+        return Cells(self.scaled[rows], self.decimals, None if self.blank is None else self.blank[rows])
+
+    def pieces(self, lead: str) -> list[Piece]:
+        """The column as text."""
+        pieces = digits.number_pieces(self.scaled, decimals=self.decimals, lead=lead)
+        return pieces if self.blank is None else digits.blank(pieces, self.blank)
+
+
+@dataclass(frozen=True, slots=True)
+class Rows:
+    """Printed rows of one logging, in order of tick: `data` has one line for each of `ticks`, (n,) int64.
+
+    `cells` are the columns of numbers by name, without tick and time; a column that was not logged is not among them.
+    """
+
+    ticks: Ints
+    data: bytes
+    period_ticks: int
+    cells: Mapping[str, Cells]
+
+    def __len__(self) -> int:
+        return len(self.ticks)
+
+    def __getitem__(self, rows: slice) -> Rows:
+        """Some of the rows, which follow each other."""
+        begin, end, _ = rows.indices(len(self.ticks))
+        if (begin, end) == (0, len(self.ticks)):
+            return self
+        edges = self._edges()
+        cells = {name: cells[rows] for name, cells in self.cells.items()}
+        return Rows(self.ticks[rows], self.data[edges[begin] : edges[end]], self.period_ticks, cells)
+
+    def lines(self, kept: NDArray[np.bool_]) -> bytes:
+        """The text of the rows where (n,) `kept` is true."""
+        if kept.all():
+            return self.data
+        edges = self._edges()
+        return b"".join(self.data[edges[row] : edges[row + 1]] for row in np.flatnonzero(kept).tolist())
+
+    def _edges(self) -> list[int]:
+        """Where each row begins in the text, and where the last one ends."""
+        edges: list[int] = (np.flatnonzero(np.frombuffer(self.data, np.uint8) == ord("\n")) + 1).tolist()
+        return [0, *edges]
+
+
 class RowPrinter:
     """Prints blocks as rows of one samples file; remembers between blocks what counts and speeds need, in fixed memory.
 
@@ -84,24 +143,26 @@ class RowPrinter:
         return record(self.columns.names)
 
     def rows(self, blocks: Sequence[Block]) -> bytes:
+        """The rows of the blocks, in order, as text."""
+        return b"".join(rows.data for rows in self.tables(blocks))
+
+    def tables(self, blocks: Sequence[Block]) -> Iterator[Rows]:
         """The rows of the blocks, in order; blocks of one layout that follow each other are printed together."""
-        texts = []
         together: list[Block] = []
         count = 0
         for block in blocks:
             if together and (block.layout != together[-1].layout or block.ticks[0] <= together[-1].ticks[-1]):
-                texts.append(self._print(together))
+                yield self._print(together)
                 together, count = [], 0
             together.append(block)
             count += len(block)
             if count >= ROWS_AT_ONCE:
-                texts.append(self._print(together))
+                yield self._print(together)
                 together, count = [], 0
         if together:
-            texts.append(self._print(together))
-        return b"".join(texts)
+            yield self._print(together)
 
-    def _print(self, blocks: list[Block]) -> bytes:
+    def _print(self, blocks: list[Block]) -> Rows:
         if len(blocks) == 1:
             ticks, values = blocks[0].ticks, blocks[0].values
         else:
@@ -112,42 +173,56 @@ class RowPrinter:
         self._last_tick = int(ticks[-1])
         batch = _Batch(ticks, values, blocks[0].layout, self._unwrappers)
         pieces: list[Piece] = []
+        known: dict[str, Cells] = {}
         for place, field in enumerate(self.columns.fields):
-            pieces += self._field(field, batch, "," if place else "")
+            lead = "," if place else ""
+            cells = self._cells(field, batch)
+            if cells is not None:
+                pieces += cells.pieces(lead)
+                if not isinstance(field, TickField | TimeField):
+                    known[field.name] = cells
+            else:
+                pieces += self._words(field, batch, lead)
         pieces.append(digits.constant_piece("\r\n", len(ticks)))
-        return digits.joined(pieces)
+        return Rows(ticks, digits.joined(pieces), blocks[0].layout.period_ticks, known)
 
-    def _field(self, field: Field, batch: _Batch, lead: str) -> list[Piece]:
+    def _cells(self, field: Field, batch: _Batch) -> Cells | None:
+        """The numbers of a column; None where it holds words, or nothing because it is not logged."""
         match field:
             case TickField():
-                return digits.number_pieces(batch.ticks, decimals=0, lead=lead)
+                return Cells(batch.ticks, 0)
             case TimeField():
                 micros = (batch.ticks - self._tick_zero) * field.tick_us
-                scaled = micros // 1000 if field.decimals == 3 else micros
-                return digits.number_pieces(scaled, decimals=field.decimals, lead=lead)
+                return Cells(micros // 1000 if field.decimals == 3 else micros, field.decimals)
         raw = batch.raw(field.channel)
         if raw is None:
-            return [digits.constant_piece(lead, len(batch.ticks))]
+            return None
         match field:
             case ScaledField():
-                return _scaled(field, raw, lead)
+                return _scaled(field, raw)
             case CountsField():
-                return digits.number_pieces(batch.unwrapped(field.channel), decimals=0, lead=lead)
+                return Cells(batch.unwrapped(field.channel), 0)
             case TurnsField():
                 factor = field.sign * 10**field.decimals / field.counts_per_rev
                 turns = np.rint(batch.unwrapped(field.channel) * factor).astype(np.int64)
-                return digits.number_pieces(turns, decimals=field.decimals, lead=lead)
+                return Cells(turns, field.decimals)
             case SpeedField():
-                return self._speed(field, raw, batch, lead)
+                return self._speed(field, raw, batch)
             case LabelField():
-                return _labels(raw, self._label[field.name], lead)
+                return None
 
-    def _speed(self, field: SpeedField, raw: NDArray[np.int32], batch: _Batch, lead: str) -> list[Piece]:
+    def _words(self, field: Field, batch: _Batch, lead: str) -> list[Piece]:
+        """A column that holds words, or nothing."""
+        raw = batch.raw(field.channel) if isinstance(field, LabelField) else None
+        if raw is None:
+            return [digits.constant_piece(lead, len(batch.ticks))]
+        return _labels(raw, self._label[field.name], lead)
+
+    def _speed(self, field: SpeedField, raw: NDArray[np.int32], batch: _Batch) -> Cells:
         rpm = self._speeds[field.name].feed(batch.ticks, raw, period_ticks=batch.layout.period_ticks)
         unknown = np.isnan(rpm)
         scaled = np.rint(np.where(unknown, 0.0, rpm) * (field.sign * 10**field.decimals)).astype(np.int64)
-        pieces = digits.number_pieces(scaled, decimals=field.decimals, lead=lead)
-        return digits.blank(pieces, unknown) if unknown.any() else pieces
+        return Cells(scaled, field.decimals, unknown if unknown.any() else None)
 
 
 class _Batch:
@@ -174,18 +249,17 @@ class _Batch:
         return self._unwrapped[channel]
 
 
-def _scaled(field: ScaledField, raw: NDArray[np.int32], lead: str) -> list[Piece]:
+def _scaled(field: ScaledField, raw: NDArray[np.int32]) -> Cells:
     factor = field.factor * 10**field.decimals
     whole = round(factor)
     if field.offset == 0 and math.isclose(factor, whole, rel_tol=1e-12):
         scaled = raw.astype(np.int64) * whole  # exact: duty, current and supply are printed as the device told them
     else:
         scaled = np.rint((raw + field.offset) * factor).astype(np.int64)
-    pieces = digits.number_pieces(scaled, decimals=field.decimals, lead=lead)
     if field.blank_at is None:
-        return pieces
+        return Cells(scaled, field.decimals)
     none = raw == field.blank_at
-    return digits.blank(pieces, none) if none.any() else pieces
+    return Cells(scaled, field.decimals, none if none.any() else None)
 
 
 def _labels(raw: NDArray[np.int32], label: Callable[[int], str], lead: str) -> list[Piece]:
