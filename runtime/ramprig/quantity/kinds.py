@@ -161,6 +161,7 @@ TORQUE = Kind(
     "1.5 mN m",
     signed=False,
 )
+ENERGY = Kind("an energy", (_unit("J", 1, "W s", "W*s", shown=True), _unit("Wh", 3600)), "25 J", signed=False)
 VISCOUS = Kind(
     "a viscous friction", (_unit("N m s/rad", 1, "N*m*s/rad", "Nms/rad", shown=True),), "8e-7 N m s/rad", signed=False
 )
@@ -169,6 +170,6 @@ THERMAL_RESISTANCE = Kind("a thermal resistance", (_unit("K/W", 1, "degC/W", sho
 ALL_KINDS = (
     *(DURATION, DUTY, DUTY_RATE, SHARE, CURRENT, VOLTAGE, SPEED, ANGLE, ANGLE_RATE, PULSE, PULSE_SCALE, TEMPERATURE),
     *(TEMPERATURE_STEP, FREQUENCY, COUNTS, RESISTANCE, INDUCTANCE, CAPACITANCE, MOTOR_CONSTANT, INERTIA, TORQUE),
-    *(VISCOUS, THERMAL_RESISTANCE),
+    *(VISCOUS, THERMAL_RESISTANCE, ENERGY),
 )
 """Every kind there is."""

@@ -1,21 +1,21 @@
 """How a file says what a cycle of a test is, when it counts, and what an interruption of the run leads to.
 
-    on interruption: {resume at most: 3, within: 2 min}
-    steps:
-      - cycle:
-          name: open and close
-          times: 5000
-          rest: 20 s
-          starts per hour: 150
-          failed at most: 3
-          before: [{move: {servo: latch, to: 0 deg, in: 1 s}}]
-          check every: 250
-          check: [...]
-          steps:
-            - ramp: {motor: vent, to: 60 %, in: 500 ms}
-            - hold: 4 s
-            - confirm: {position of: vent, is: at least 500 deg}
-            - coast: {motor: vent, in: 700 ms}
+on interruption: {resume at most: 3, within: 2 min}
+steps:
+  - cycle:
+      name: open and close
+      times: 5000
+      rest: 20 s
+      starts per hour: 150
+      failed at most: 3
+      before: [{move: {servo: latch, to: 0 deg, in: 1 s}}]
+      check every: 250
+      check: [...]
+      steps:
+        - ramp: {motor: vent, to: 60 %, in: 500 ms}
+        - hold: 4 s
+        - confirm: {position of: vent, is: at least 500 deg}
+        - coast: {motor: vent, in: 700 ms}
 """
 
 from __future__ import annotations
@@ -44,6 +44,8 @@ from ramprig.yamlfile import (
 from .measures import MeasureShape
 from .names import CYCLE_BEGIN
 from .steps import Confirm, Cycle, Interruptions, Step, What
+from .wear_limits import WearWish
+from .wear_shape import WEAR
 
 CYCLES_MAX = 10_000_000
 STARTS_MAX = 100_000
@@ -59,7 +61,9 @@ FOR = Key(
 )
 REST = Key("rest", QuantityShape(DURATION, least="0 s", most="24 h"), "outputs at zero after each cycle and check")
 STARTS = Key(
-    "starts per hour", CountShape(1, STARTS_MAX), "most starts of each motor in any 60 minutes; a cycle waits for it"
+    "starts per hour",
+    CountShape(1, STARTS_MAX),
+    "most starts of each motor in any 60 minutes; cycles and checks are spaced evenly for it",
 )
 FAILED = Key("failed at most", CountShape(0, CYCLES_MAX), "the run ends once more cycles than this have failed")
 CHECK_EVERY = Key("check every", CountShape(1, CYCLES_MAX), "cycles between two checks")
@@ -77,12 +81,13 @@ def cycle_shape(steps: Shape[tuple[Step, ...]]) -> Shape[Step]:
     before: Key[tuple[Step, ...]] = Key("before", steps, "done before the first cycle and again after an interruption")
     check: Key[tuple[Step, ...]] = Key("check", steps, "a short reference, so that trends do not depend on the load")
 
+    keys: tuple[Key[object], ...] = (NAME, TIMES, FOR, REST, STARTS, FAILED, before, CHECK_EVERY, check, WEAR, inner)
+
     def build(f: Fields) -> Step:
         _check_said(f)
         if f.said(check) != f.said(CHECK_EVERY):
             missing = CHECK_EVERY.name if f.said(check) else check.name
             raise f.mark.error(f"'{missing}' is missing in this cycle", "'check' and 'check every' go together")
-        keys: tuple[Key[object], ...] = (NAME, TIMES, FOR, REST, STARTS, FAILED, CHECK_EVERY, check, before, inner)
         length, rest = f.get(FOR), f.get(REST)
         return Cycle(
             mark=f.mark,
@@ -97,9 +102,10 @@ def cycle_shape(steps: Shape[tuple[Step, ...]]) -> Shape[Step]:
             rest_s=Fraction(0) if rest is None else rest.value,
             starts_per_hour=f.get(STARTS),
             failed_most=f.get(FAILED),
+            wear=f.get(WEAR) if f.said(WEAR) else WearWish(),
         )
 
-    return Record((NAME, TIMES, FOR, REST, STARTS, FAILED, before, CHECK_EVERY, check, inner), build)
+    return Record(keys, build)
 
 
 def _check_said(f: Fields) -> None:

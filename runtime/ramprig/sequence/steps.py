@@ -16,6 +16,8 @@ from ramprig.errors import FileError
 from ramprig.quantity import ANGLE, COUNTS, CURRENT, DURATION, SPEED, Band, Kind, format_duration
 from ramprig.yamlfile import Mark
 
+from .wear_limits import WearWish
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Step:
@@ -244,7 +246,8 @@ class Cycle(Step):
 
     `before` is done once, and once more whenever the run is resumed; `check` is a reference done before the first
     cycle, after every `check_every` cycles and after a resumption. `rest_s` follows each of them. `starts_per_hour`
-    bounds the starts of each motor in any 60 minutes. More than `failed_most` failed cycles end the run.
+    bounds the starts of each motor in any 60 minutes. More than `failed_most` failed cycles end the run. `wear` is what
+    is judged from cycle to cycle, None where nothing is.
     """
 
     name: str
@@ -257,6 +260,7 @@ class Cycle(Step):
     rest_s: Fraction
     starts_per_hour: int | None
     failed_most: int | None
+    wear: WearWish | None = field(default_factory=WearWish)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
