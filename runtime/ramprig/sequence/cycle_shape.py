@@ -1,21 +1,24 @@
 """How a file says what a cycle of a test is, when it counts, and what an interruption of the run leads to.
 
-on interruption: {resume at most: 3, within: 2 min}
-steps:
-  - cycle:
-      name: open and close
-      times: 5000
-      rest: 20 s
-      starts per hour: 150
-      failed at most: 3
-      before: [{move: {servo: latch, to: 0 deg, in: 1 s}}]
-      check every: 250
-      check: [...]
-      steps:
-        - ramp: {motor: vent, to: 60 %, in: 500 ms}
-        - hold: 4 s
-        - confirm: {position of: vent, is: at least 500 deg}
-        - coast: {motor: vent, in: 700 ms}
+    on interruption: {resume at most: 3, within: 2 min}
+    steps:
+      - cycle:
+          name: open and close
+          times: 5000
+          rest: 20 s
+          starts per hour: 150
+          failed at most: 3
+          before: [{move: {servo: latch, to: 0 deg, in: 1 s}}]
+          check every: 250
+          check: [...]
+          wear: {limits: [{feature: steady current, of: vent, fail: +25 %}]}
+          steps:
+            - ramp: {motor: vent, to: 60 %, in: 500 ms}
+            - hold: 4 s
+            - confirm: {position of: vent, is: at least 500 deg}
+            - coast: {motor: vent, in: 700 ms}
+
+What a cycle says of wear is in `wear_shape`.
 """
 
 from __future__ import annotations
