@@ -67,6 +67,13 @@ class Cells:
         """Some of the rows; nothing is copied."""
         return Cells(self.scaled[rows], self.decimals, None if self.blank is None else self.blank[rows])
 
+    def values(self) -> NDArray[np.float64]:
+        """(n,) float64, exactly what reading the text gives; NaN where nothing stands."""
+        values: NDArray[np.float64] = self.scaled / 10.0**self.decimals
+        if self.blank is not None:
+            values[self.blank] = math.nan
+        return values
+
     def pieces(self, lead: str) -> list[Piece]:
         """The column as text."""
         pieces = digits.number_pieces(self.scaled, decimals=self.decimals, lead=lead)
@@ -148,21 +155,19 @@ class RowPrinter:
 
     def tables(self, blocks: Sequence[Block]) -> Iterator[Rows]:
         """The rows of the blocks, in order; blocks of one layout that follow each other are printed together."""
-        together: list[Block] = []
-        count = 0
-        for block in blocks:
-            if together and (block.layout != together[-1].layout or block.ticks[0] <= together[-1].ticks[-1]):
-                yield self._print(together)
-                together, count = [], 0
-            together.append(block)
-            count += len(block)
-            if count >= ROWS_AT_ONCE:
-                yield self._print(together)
-                together, count = [], 0
-        if together:
+        for together in _together(blocks):
             yield self._print(together)
 
-    def _print(self, blocks: list[Block]) -> Rows:
+    def numbers(self, blocks: Sequence[Block]) -> Iterator[tuple[Ints, dict[str, Cells]]]:
+        """The same without the text: ticks, and the columns of numbers by name. A printer serves for one or the
+        other."""
+        for together in _together(blocks):
+            batch = self._batch(together)
+            fields = [field for field in self.columns.fields if not isinstance(field, TickField | TimeField)]
+            known = {field.name: self._cells(field, batch) for field in fields}
+            yield batch.ticks, {name: cells for name, cells in known.items() if cells is not None}
+
+    def _batch(self, blocks: list[Block]) -> _Batch:
         if len(blocks) == 1:
             ticks, values = blocks[0].ticks, blocks[0].values
         else:
@@ -171,7 +176,11 @@ class RowPrinter:
         if self._last_tick is not None and ticks[0] <= self._last_tick:
             self._begin_anew()
         self._last_tick = int(ticks[-1])
-        batch = _Batch(ticks, values, blocks[0].layout, self._unwrappers)
+        return _Batch(ticks, values, blocks[0].layout, self._unwrappers)
+
+    def _print(self, blocks: list[Block]) -> Rows:
+        batch = self._batch(blocks)
+        ticks = batch.ticks
         pieces: list[Piece] = []
         known: dict[str, Cells] = {}
         for place, field in enumerate(self.columns.fields):
@@ -223,6 +232,23 @@ class RowPrinter:
         unknown = np.isnan(rpm)
         scaled = np.rint(np.where(unknown, 0.0, rpm) * (field.sign * 10**field.decimals)).astype(np.int64)
         return Cells(scaled, field.decimals, unknown if unknown.any() else None)
+
+
+def _together(blocks: Sequence[Block]) -> Iterator[list[Block]]:
+    """Blocks of one layout that follow each other, ROWS_AT_ONCE rows or a block more at most."""
+    together: list[Block] = []
+    count = 0
+    for block in blocks:
+        if together and (block.layout != together[-1].layout or block.ticks[0] <= together[-1].ticks[-1]):
+            yield together
+            together, count = [], 0
+        together.append(block)
+        count += len(block)
+        if count >= ROWS_AT_ONCE:
+            yield together
+            together, count = [], 0
+    if together:
+        yield together
 
 
 class _Batch:
