@@ -139,6 +139,35 @@ def test_servo_pulses_have_half_microsecond_steps() -> None:
         assert made.probe()["pulse0_half_us"] == 0
 
 
+@pytest.mark.parametrize(
+    ("current_ma", "supply_mv"), [(0, 12000), (4, 9000), (-4, 11988), (1000, 15000), (-7000, 21400)]
+)
+def test_current_and_supply_are_read_as_the_chips_converter_has_them(current_ma: int, supply_mv: int) -> None:
+    """Code = V x 1024 / reference, rounded down (ATmega328P data sheet, "ADC conversion result"); scales of board.h."""
+    with started() as made:
+        made.command(f"script 0 {current_ma} {supply_mv}")
+        made.run_us(20_000)
+        fields = made.ask("state")
+        current_code = (2_500_000 + 185 * current_ma) * 1024 // 5_000_000
+        supply_code = supply_mv * 10_000 // 43 * 1024 // 5_000_000
+        assert int(fields[9]) == (current_code - 512) * 27_027 // 1024
+        assert int(fields[5]) == supply_code * 21_500 // 1024
+
+
+def test_a_servo_at_the_pins_turns_as_far_as_its_pulse_says() -> None:
+    """At its end stop it would draw 0.7 A for ever, through the supply's 0.15 ohm; at rest it draws 8 mA."""
+    with board() as made:
+        made.run_us(150_000)
+        at_rest_mv = int(made.ask("state")[5])
+        made.arm()
+        made.ask(f"swing 0 1700 1 {made.tick() + 40}")
+        for _ in range(20):
+            made.run_us(30_000)
+            made.ask("beat")
+        assert made.probe()["pulse0_half_us"] == 3400
+        assert int(made.ask("state")[5]) >= at_rest_mv - 21  # a step of the converter
+
+
 def test_no_count_is_lost_at_40000_counts_a_second_with_logging_on() -> None:
     with started() as made:
         assert made.ask("log 1 7 packed")[0] == "ok"

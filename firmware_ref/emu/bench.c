@@ -8,17 +8,16 @@
 #define STEP_CYCLES (BENCH_STEP_US * CYCLES_A_US)
 #define WATCH_CYCLES 160u /* 10 us: how finely the bridge is watched after a mark */
 
-/* Scales of ports/atmega328p/board.h: mV at the pin. */
-static uint32_t current_pin_mv(int32_t current_ma)
+/* What the parts of ports/atmega328p/board.h make of current and supply, in uV at the pins. */
+static uint32_t current_pin_uv(int32_t current_ma)
 {
-    int32_t pin = 2500 + current_ma * 185 / 1000;
-    return pin < 0 ? 0u : pin > 5000 ? 5000u : (uint32_t)pin;
+    int32_t pin = 2500000 + current_ma * 185;
+    return pin < 0 ? 0u : (uint32_t)pin;
 }
 
-static uint32_t supply_pin_mv(uint32_t supply_mv)
+static uint32_t supply_pin_uv(uint32_t supply_mv)
 {
-    uint32_t pin = supply_mv * 10u / 43u;
-    return pin > 5000u ? 5000u : pin;
+    return (uint32_t)(supply_mv * UINT64_C(10000) / 43u);
 }
 
 /* One edge of the encoder, then the next one in equal distance until the step's end. */
@@ -55,14 +54,14 @@ static void step_plant(struct bench *bench, const struct chip_outputs *outputs)
     struct plant *plant = &bench->plant;
     plant->axis[0].duty = outputs->duty;
     plant->axis[0].brake = outputs->brake;
-    for (uint8_t i = 0; i < plant->parameters.servos && i < 2; i++) {
-        plant_servo_set_pulse(&plant->servo[i], outputs->pulse_half_us[i] * 500);
+    for (uint8_t i = 0; i < plant->parameters.servos; i++) {
+        plant_servo_set_pulse(&plant->servo[i], outputs->pulse_half_us[i] / 2.0);
     }
     plant_step(plant);
     turn_to(bench, (uint32_t)plant_read_counts(plant, 0));
     int32_t supply_mv = plant_read_supply_mv(plant);
-    chip_set_current_pin(bench->chip, current_pin_mv(plant_read_current_ma(plant, 0)));
-    chip_set_supply_pin(bench->chip, supply_pin_mv(supply_mv < 0 ? 0u : (uint32_t)supply_mv));
+    chip_set_current_pin(bench->chip, current_pin_uv(plant_read_current_ma(plant, 0)));
+    chip_set_supply_pin(bench->chip, supply_pin_uv(supply_mv < 0 ? 0u : (uint32_t)supply_mv));
 }
 
 static void step_script(struct bench *bench)
@@ -70,8 +69,8 @@ static void step_script(struct bench *bench)
     bench->target_micro += bench->rate_micro;
     int64_t whole = bench->target_micro / 1000000;
     turn_to(bench, (uint32_t)whole);
-    chip_set_current_pin(bench->chip, current_pin_mv(bench->current_ma));
-    chip_set_supply_pin(bench->chip, supply_pin_mv(bench->supply_mv));
+    chip_set_current_pin(bench->chip, current_pin_uv(bench->current_ma));
+    chip_set_supply_pin(bench->chip, supply_pin_uv(bench->supply_mv));
 }
 
 static avr_cycle_count_t step(avr_t *avr, avr_cycle_count_t when, void *param)
@@ -102,14 +101,13 @@ static avr_cycle_count_t watch(avr_t *avr, avr_cycle_count_t when, void *param)
     return 0;
 }
 
-bool bench_begin(struct bench *bench, struct chip *chip, uint64_t seed)
+bool bench_begin(struct bench *bench, struct chip *chip, const struct plant_parameters *parameters, uint64_t seed)
 {
     memset(bench, 0, sizeof *bench);
     bench->chip = chip;
     bench->kind = BENCH_PLANT;
-    struct plant_parameters parameters;
-    plant_parameters_vent(&parameters);
-    if (!plant_start(&bench->plant, &parameters, BENCH_STEP_US, seed)) {
+    if (parameters->axes != 1 || parameters->servos > CHIP_SERVOS ||
+        !plant_start(&bench->plant, parameters, BENCH_STEP_US, seed)) {
         return false;
     }
     bench_after_reset(bench);

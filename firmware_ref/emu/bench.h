@@ -27,8 +27,8 @@ struct bench {
     bool was_driven_twice; /* both bridge inputs on PWM at once: must never be */
 };
 
-/* Starts with the vent drive's bench. False where it is beyond simulation. */
-bool bench_begin(struct bench *bench, struct chip *chip, uint64_t seed);
+/* Starts with a plant of one axis and at most as many servos as the chip drives. False where it has others, or cannot be. */
+bool bench_begin(struct bench *bench, struct chip *chip, const struct plant_parameters *parameters, uint64_t seed);
 
 /* A script's shaft turns at so many counts a second from now on; its current and supply are these. */
 void bench_script(struct bench *bench, int32_t counts_per_s, int32_t current_ma, uint32_t supply_mv);

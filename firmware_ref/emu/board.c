@@ -12,15 +12,15 @@
 enum { FLAG_POWER = 1u << 0, FLAG_EXTERNAL = 1u << 1, FLAG_BROWNOUT = 1u << 2, FLAG_WATCHDOG = 1u << 3 };
 
 bool board_begin(struct board *board, const char *elf, const uint8_t *eeprom, uint32_t eeprom_bytes, uint8_t reset_flags,
-                 uint64_t seed)
+                 const struct plant_parameters *plant, uint64_t seed)
 {
     memset(board, 0, sizeof *board);
     if (!chip_load(&board->chip, elf, eeprom, eeprom_bytes, reset_flags)) {
         return false;
     }
     wire_begin(&board->wire, &board->chip);
-    if (!bench_begin(&board->bench, &board->chip, seed)) {
-        fprintf(stderr, "emu: the plant cannot be simulated\n");
+    if (!bench_begin(&board->bench, &board->chip, plant, seed)) {
+        fprintf(stderr, "emu: the plant has other motors and servos than the board (1 and at most %u), or cannot be\n", CHIP_SERVOS);
         return false;
     }
     board->resets_seen = board->chip.resets;

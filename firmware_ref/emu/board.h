@@ -19,9 +19,9 @@ struct board {
 /* The bits of MCUSR for a reset's cause by name, 0 where there is none. */
 uint8_t board_reset_flags(const char *cause);
 
-/* Starts a board with this program. False, told on stderr, where it cannot. */
+/* Starts a board with this program and plant. False, told on stderr, where it cannot. */
 bool board_begin(struct board *board, const char *elf, const uint8_t *eeprom, uint32_t eeprom_bytes, uint8_t reset_flags,
-                 uint64_t seed);
+                 const struct plant_parameters *plant, uint64_t seed);
 
 /* Runs for at most so long; ends early with the LF of a line of the chip where `until_line`. */
 void board_run(struct board *board, uint32_t advance_us, bool until_line);

@@ -13,6 +13,7 @@
 #include <string.h>
 
 #define FREQUENCY (CYCLES_A_US * 1000000u)
+#define REFERENCE_MV 5000u
 #define PAINT 0xA5u
 #define TICK_VECTOR 14u /* TIMER0_COMPA */
 #define FLAG_WATCHDOG (1u << 3) /* in MCUSR */
@@ -119,7 +120,7 @@ bool chip_load(struct chip *chip, const char *elf, const uint8_t *eeprom, uint32
         return false;
     }
     program.frequency = FREQUENCY;
-    program.vcc = program.avcc = program.aref = 5000;
+    program.vcc = program.avcc = program.aref = REFERENCE_MV;
     chip->avr = avr_make_mcu_by_name("atmega328p");
     if (chip->avr == NULL) {
         fprintf(stderr, "emu: this simavr knows no atmega328p\n");
@@ -220,14 +221,23 @@ void chip_set_encoder(const struct chip *chip, uint32_t count)
     avr_raise_irq(chip->encoder_b, b);
 }
 
-void chip_set_current_pin(const struct chip *chip, uint32_t millivolts)
+/* The whole mV for which simavr gives the code that the chip gives for these uV: the chip's is V x 1024 / reference (data sheet,
+ * "ADC conversion result"), at most 1023, simavr's V x 1023 / reference, both rounded down. */
+static uint32_t converter_mv(uint32_t microvolts)
 {
-    avr_raise_irq(chip->current, millivolts);
+    uint32_t code = (uint32_t)(microvolts * UINT64_C(1024) / (REFERENCE_MV * 1000u));
+    code = code > 1023u ? 1023u : code;
+    return (code * REFERENCE_MV + 1022u) / 1023u;
 }
 
-void chip_set_supply_pin(const struct chip *chip, uint32_t millivolts)
+void chip_set_current_pin(const struct chip *chip, uint32_t microvolts)
 {
-    avr_raise_irq(chip->supply, millivolts);
+    avr_raise_irq(chip->current, converter_mv(microvolts));
+}
+
+void chip_set_supply_pin(const struct chip *chip, uint32_t microvolts)
+{
+    avr_raise_irq(chip->supply, converter_mv(microvolts));
 }
 
 uint32_t chip_take_worst_us(const struct chip *chip)

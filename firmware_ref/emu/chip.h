@@ -13,6 +13,7 @@
 #include <stdint.h>
 
 #define CYCLES_A_US 16u
+#define CHIP_SERVOS 2u
 
 struct chip {
     avr_t *avr;
@@ -38,7 +39,7 @@ struct chip_outputs {
     bool brake;
     bool enabled;
     bool both_driven; /* both inputs are on PWM: must never be */
-    uint32_t pulse_half_us[2];
+    uint32_t pulse_half_us[CHIP_SERVOS];
 };
 
 /* Loads a program. `eeprom` may be NULL, else `eeprom_bytes` of it. False, told on stderr, where it cannot be loaded. */
@@ -55,9 +56,9 @@ void chip_outputs(const struct chip *chip, struct chip_outputs *outputs);
 /* Sets the encoder's pins by a count of quadrature steps. */
 void chip_set_encoder(const struct chip *chip, uint32_t count);
 
-/* Sets the analog inputs in mV at the pins. */
-void chip_set_current_pin(const struct chip *chip, uint32_t millivolts);
-void chip_set_supply_pin(const struct chip *chip, uint32_t millivolts);
+/* Sets the analog inputs in uV at the pins. */
+void chip_set_current_pin(const struct chip *chip, uint32_t microvolts);
+void chip_set_supply_pin(const struct chip *chip, uint32_t microvolts);
 
 /* Cycles of a byte on the wire, by the UART's registers; 0 before it is set up. */
 uint32_t chip_byte_cycles(const struct chip *chip);

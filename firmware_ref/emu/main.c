@@ -17,6 +17,7 @@
 
 #define PACE_US 250u /* slice of the paced mode: how late a byte may be */
 #define COMMAND_BYTES 200u
+#define LINE_BYTES 128
 #define FRAME_BYTES 65535u
 
 static const char usage[] =
@@ -26,12 +27,14 @@ static const char usage[] =
     "  --pty              (default) the serial line on a pseudo-terminal, in real time; commands as lines on stdin\n"
     "  --eeprom FILE      the EEPROM's content at the start\n"
     "  --cause CAUSE      power (default), external, brownout or watchdog\n"
+    "  --plant FILE       names and values of the plant, one in each line; else the vent drive's\n"
     "  --seed NUMBER      of the sensors' noise\n";
 
 struct options {
     const char *elf;
     const char *eeprom;
     const char *cause;
+    const char *plant;
     uint64_t seed;
     enum { PTY, LOCKSTEP, LOCKSTEP_PTY } mode;
 };
@@ -54,6 +57,8 @@ static bool read_options(int count, char **words, struct options *options)
             options->eeprom = words[++i];
         } else if (strcmp(word, "--cause") == 0 && value != NULL) {
             options->cause = words[++i];
+        } else if (strcmp(word, "--plant") == 0 && value != NULL) {
+            options->plant = words[++i];
         } else if (strcmp(word, "--seed") == 0 && value != NULL) {
             options->seed = strtoull(words[++i], NULL, 10);
         } else if (word[0] != '-' && options->elf == NULL) {
@@ -65,9 +70,36 @@ static bool read_options(int count, char **words, struct options *options)
     return options->elf != NULL;
 }
 
+/* Lines of a name and a value, as `ramprig-core` takes them. */
+static bool read_plant(struct plant_parameters *parameters, const char *path)
+{
+    FILE *file = fopen(path, "r");
+    char line[LINE_BYTES];
+    char name[LINE_BYTES];
+    double value;
+    unsigned number = 0;
+    bool right = file != NULL;
+    while (right && fgets(line, sizeof line, file) != NULL) {
+        number++;
+        right = sscanf(line, "%127s %lf", name, &value) == 2 && plant_parameters_set(parameters, name, value);
+    }
+    if (file != NULL) {
+        fclose(file);
+    }
+    if (!right) {
+        fprintf(stderr, "emu: %s:%u: this is no parameter of the plant with a value it can have\n", path, number);
+    }
+    return right;
+}
+
 static bool start_board(const struct options *options)
 {
     static uint8_t eeprom[1024];
+    struct plant_parameters plant;
+    plant_parameters_vent(&plant);
+    if (options->plant != NULL && !read_plant(&plant, options->plant)) {
+        return false;
+    }
     memset(eeprom, 0xFF, sizeof eeprom);
     if (options->eeprom != NULL) {
         FILE *file = fopen(options->eeprom, "rb");
@@ -82,7 +114,7 @@ static bool start_board(const struct options *options)
         fprintf(stderr, "emu: no reset has the cause %s\n", options->cause);
         return false;
     }
-    return board_begin(&board, options->elf, eeprom, sizeof eeprom, flags, options->seed);
+    return board_begin(&board, options->elf, eeprom, sizeof eeprom, flags, &plant, options->seed);
 }
 
 /* ---- bytes in and out, whole or not at all ---- */
