@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import ctypes
+import math
 from functools import cache
 
 from ramprig.mock.core.build import build, firmware
@@ -19,6 +20,7 @@ def library() -> ctypes.CDLL:
     loaded = ctypes.CDLL(str(build("plant", sorted((root / "plant").glob("*.c")), WARNINGS, shared=True)))
     handle, byte, whole, real = ctypes.c_void_p, ctypes.c_uint8, ctypes.c_int32, ctypes.c_double
     loaded.probe_new.restype = handle
+    loaded.probe_output_rad.restype = real
     signatures: dict[str, list[object]] = {
         "probe_free": [handle],
         "probe_parameter": [handle, ctypes.c_char_p, real],
@@ -26,6 +28,10 @@ def library() -> ctypes.CDLL:
         "probe_fault": [handle, ctypes.c_char_p, byte, real],
         "probe_load": [handle, byte, real],
         "probe_speed": [handle, byte, real],
+        "probe_stops": [handle, byte, real, real],
+        "probe_hand": [handle, byte, real],
+        "probe_output_rad": [handle, byte],
+        "probe_worn": [handle, byte, ctypes.POINTER(real)],
         "probe_drive": [handle, byte, whole, ctypes.c_int],
         "probe_pulse": [handle, byte, real],
         "probe_step": [handle, ctypes.c_uint32],
@@ -71,6 +77,22 @@ class CPlant:
 
     def set_speed(self, axis: int, speed_rad_s: float) -> None:
         self._c.probe_speed(self._probe, axis, speed_rad_s)
+
+    def stops(self, axis: int, stops_rad: tuple[float, float] | None) -> None:
+        low_rad, high_rad = (-math.inf, math.inf) if stops_rad is None else stops_rad
+        self._c.probe_stops(self._probe, axis, low_rad, high_rad)
+
+    def turn_by_hand(self, axis: int, radians: float) -> None:
+        self._c.probe_hand(self._probe, axis, radians)
+
+    def output_rad(self, axis: int) -> float:
+        return float(self._c.probe_output_rad(self._probe, axis))
+
+    def worn(self, axis: int) -> list[float]:
+        """Shares of friction and resistance, and play, that have worn."""
+        values = (ctypes.c_double * 3)()
+        self._c.probe_worn(self._probe, axis, values)
+        return list(values)
 
     def drive(self, axis: int, duty: int, brake: bool = False) -> None:
         self._c.probe_drive(self._probe, axis, duty, brake)

@@ -16,7 +16,17 @@ from c_plant import CPlant, Refused
 from plant_bench import CTMS_POSITION, CTMS_SPEED, MODELICA, bench, matrices
 from ramprig.mock.core import why_not
 from ramprig.mock.core.parameters import plant_text, plant_values
-from ramprig.mock.plant import VENT_BENCH, MotorParameters, Plant, PlantFault, PlantParameters, set_fault
+from ramprig.mock.plant import (
+    VENT_BENCH,
+    Ageing,
+    MotorParameters,
+    Plant,
+    PlantFault,
+    PlantParameters,
+    set_fault,
+    set_play,
+    set_wear,
+)
 
 pytestmark = pytest.mark.skipif(why_not() is not None, reason=why_not() or "")
 
@@ -30,6 +40,8 @@ FAULTS = {
     PlantFault.ONE_CHANNEL: "one_channel",
     PlantFault.NOISY_COUNTS: "noisy_counts",
     PlantFault.JAMMED: "jammed_shaft",
+    PlantFault.OUTPUT_CLAMPED: "output_clamped",
+    PlantFault.LEAD_OPEN: "lead_open",
 }
 
 TWO_MOTORS = dataclasses.replace(
@@ -42,6 +54,19 @@ TWO_MOTORS = dataclasses.replace(
         ),
     ),
     servos=(VENT_BENCH.servos[0], dataclasses.replace(VENT_BENCH.servos[0], us_per_deg=-9.0)),
+)
+
+GEARED = dataclasses.replace(
+    TWO_MOTORS,
+    axes=(
+        dataclasses.replace(
+            TWO_MOTORS.axes[0],
+            motor=dataclasses.replace(TWO_MOTORS.axes[0].motor, play_rad=0.03, output_friction_nm=0.12),
+        ),
+        dataclasses.replace(
+            TWO_MOTORS.axes[1], encoder=dataclasses.replace(TWO_MOTORS.axes[1].encoder, lines=500, on_output=True)
+        ),
+    ),
 )
 
 
@@ -68,6 +93,22 @@ class Pair:
         set_fault(self.python, fault, axis=axis, on=on)
         self.c.fault(FAULTS[fault], axis, float(on))
 
+    def play(self, degrees: float, axis: int) -> None:
+        set_play(self.python, degrees, axis=axis)
+        self.c.fault("gear_play", axis, degrees)
+
+    def wear(self, ageing: Ageing, amount: float, axis: int) -> None:
+        set_wear(self.python, ageing, amount, axis=axis)
+        self.c.fault(ageing, axis, amount)
+
+    def stops(self, stops_rad: tuple[float, float] | None, axis: int) -> None:
+        self.python.axes[axis].stops_rad = stops_rad
+        self.c.stops(axis, stops_rad)
+
+    def turn_by_hand(self, radians: float, axis: int) -> None:
+        self.python.axes[axis].turn_by_hand(radians)
+        self.c.turn_by_hand(axis, radians)
+
     def step(self) -> None:
         self.python.step()
         self.c.step()
@@ -75,6 +116,9 @@ class Pair:
             assert self.c.read(index) == (self.python.read_counts(index), self.python.read_current_ma(index))
             state = [axis.current_a, axis.mean_a, axis.speed_rad_s, axis.angle_rad, axis.winding_c]
             assert self.c.axis(index) == pytest.approx(state, rel=TOLERANCE, abs=1e-15)
+            assert self.c.output_rad(index) == pytest.approx(axis.output_rad, rel=TOLERANCE, abs=1e-15)
+            worn = [axis.worn.friction, axis.worn.resistance, axis.worn.play_rad]
+            assert self.c.worn(index) == pytest.approx(worn, rel=TOLERANCE, abs=1e-15)
             assert self.c.temperature_dc(index) == self.python.read_temperature_dc(index)
         for index, servo in enumerate(self.python.servos):
             bus = [self.python.supply.bus_v, self.python.supply.current_a, servo.angle_deg, servo.current_a]
@@ -96,6 +140,38 @@ def stir(pair: Pair, drawn: random.Random) -> None:
             pair.fault(drawn.choice(sorted(FAULTS)), axis, drawn.random() < 0.3)
         case _:
             pair.drive(axis, drawn.randrange(-10_000, 10_001), False)
+
+
+def stir_gear(pair: Pair, drawn: random.Random) -> None:
+    """Change one thing behind a motor at random, or another as `stir` does."""
+    axis = drawn.randrange(len(pair.python.axes))
+    angle_rad = pair.python.axes[axis].angle_rad
+    match drawn.randrange(10):
+        case 0:
+            pair.play(drawn.choice([0.0, 0.3, 2.0, 20.0]), axis)
+        case 1:
+            pair.fault(PlantFault.OUTPUT_CLAMPED, axis, drawn.random() < 0.5)
+        case 2:
+            pair.stops(drawn.choice([None, None, (angle_rad - 3.0, angle_rad + 1.0), (-math.inf, angle_rad)]), axis)
+        case 3:
+            pair.turn_by_hand(drawn.choice([-4.0, 0.7, 30.0]), axis)
+        case 4:
+            pair.wear(drawn.choice(list(Ageing)), drawn.choice([0.0, 100.0, 20_000.0]), axis)
+        case _:
+            stir(pair, drawn)
+
+
+@pytest.mark.parametrize("seed", range(6))
+def test_both_forms_agree_on_play_stops_wear_and_hands(seed: int) -> None:
+    drawn = random.Random(seed)
+    pair = Pair(GEARED if seed % 2 else TWO_MOTORS, seed=seed, tick_us=1000 if seed % 4 else 2000)
+    flanks = set()
+    for tick in range(1000):
+        if tick % 20 == 0:
+            stir_gear(pair, drawn)
+        pair.step()
+        flanks |= {(axis.gear.flank, axis.gear.through, axis.gear.pressed) for axis in pair.python.axes}
+    assert len(flanks) > 3
 
 
 @pytest.mark.parametrize("seed", range(8))
@@ -226,4 +302,4 @@ def test_a_motor_beyond_simulation_is_refused() -> None:
 def test_the_text_form_names_every_parameter_with_its_exact_value() -> None:
     rows = [line.split(" ") for line in plant_text(TWO_MOTORS).splitlines()]
     assert {name: float(value) for name, value in rows} == plant_values(TWO_MOTORS)
-    assert len(rows) == 7 + 2 * 18 + 2 * 9 + 2
+    assert len(rows) == 7 + 2 * 21 + 2 * 9 + 2

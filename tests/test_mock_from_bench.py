@@ -40,7 +40,6 @@ def test_an_encoder_that_counts_the_other_way_has_its_phases_swapped() -> None:
 @pytest.mark.parametrize(
     ("old", "new", "sentence"),
     [
-        ("on: motor shaft", "on: output shaft", "the encoder of 'vent' sits behind the gear"),
         ("      inertia: 60 g cm2\n", "", "'inertia' is missing in 'model'"),
     ],
 )

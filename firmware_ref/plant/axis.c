@@ -6,6 +6,7 @@
 #define MOST_EVENTS 16    /* changes of motion followed within one tick */
 #define DRIFT       1e-3  /* change of resistance that makes new rows */
 #define SPENT_A     1e-9
+#define TAU         6.283185307179586
 
 static bool is_zero(double value)
 {
@@ -19,7 +20,12 @@ static bool is_off(const struct plant_axis *axis)
 
 static void hold(struct plant_axis *axis)
 {
-    axis->stick_nm = axis->jammed ? (double)INFINITY : axis->static_nm;
+    const struct plant_motor_parameters *motor = &axis->parameters->motor;
+    bool through = axis->gear.through;
+    double dragged_nm = through ? motor->output_friction_nm / motor->gear_ratio : 0.0;
+    axis->load_motor_nm = through ? axis->laden_nm : 0.0;
+    axis->running_nm = axis->coulomb_nm + dragged_nm;
+    axis->stick_nm = axis->jammed || axis->gear.pressed ? (double)INFINITY : axis->static_nm + dragged_nm;
     axis->restless = fabs(axis->load_motor_nm) > axis->stick_nm;
 }
 
@@ -63,8 +69,12 @@ bool plant_axis_start(struct plant_axis *axis, const struct plant_axis_parameter
     axis->viscous_nms = motor->viscous_nms;
     axis->coulomb_nm = motor->coulomb_nm;
     axis->static_nm = motor->static_nm;
-    axis->load_motor_nm = 0.0;
+    axis->laden_nm = 0.0;
     axis->jammed = false;
+    axis->wear = (struct plant_wear){0.0, 0.0, 0.0};
+    axis->worn = (struct plant_wear){0.0, 0.0, 0.0};
+    axis->worn_at_rad = 0.0;
+    plant_gear_start(&axis->gear, parameters);
     axis->per_duty = 1.0 / PLANT_DUTY_FULL;
     return rebuild(axis);
 }
@@ -82,8 +92,69 @@ void plant_axis_set_resistance(struct plant_axis *axis, double resistance_20_ohm
 
 void plant_axis_set_load(struct plant_axis *axis, double load_nm)
 {
-    axis->load_motor_nm = load_nm / axis->parameters->motor.gear_ratio;
+    axis->laden_nm = load_nm / axis->parameters->motor.gear_ratio;
     hold(axis);
+}
+
+static void set_gear(struct plant_axis *axis, double play_rad, bool clamped, double low_rad, double high_rad)
+{
+    plant_gear_set(&axis->gear, play_rad, clamped, low_rad, high_rad, axis->angle_rad);
+    hold(axis);
+}
+
+void plant_axis_set_play(struct plant_axis *axis, double play_rad)
+{
+    set_gear(axis, play_rad, axis->gear.clamped, axis->gear.low_rad, axis->gear.high_rad);
+}
+
+void plant_axis_set_clamped(struct plant_axis *axis, bool clamped)
+{
+    set_gear(axis, axis->gear.play_rad, clamped, axis->gear.low_rad, axis->gear.high_rad);
+}
+
+void plant_axis_set_stops(struct plant_axis *axis, double low_rad, double high_rad)
+{
+    set_gear(axis, axis->gear.play_rad, axis->gear.clamped, low_rad, high_rad);
+}
+
+void plant_axis_set_wear(struct plant_axis *axis, struct plant_wear wear)
+{
+    axis->wear = wear;
+    axis->worn_at_rad = axis->angle_rad;
+}
+
+void plant_axis_turn_by_hand(struct plant_axis *axis, double radians)
+{
+    if (axis->jammed) {
+        return;
+    }
+    axis->angle_rad += radians;
+    if (axis->gear.linked) {
+        plant_axis_follow(axis);
+    }
+}
+
+double plant_axis_output_rad(const struct plant_axis *axis)
+{
+    return plant_gear_output_rad(&axis->gear, axis->angle_rad);
+}
+
+void plant_axis_follow(struct plant_axis *axis)
+{
+    struct plant_gear *gear = &axis->gear;
+    bool was_through = gear->through;
+    bool was_pressed = gear->pressed;
+    const struct plant_motor_parameters *motor = &axis->parameters->motor;
+    double held = plant_gear_hold(gear, axis->angle_rad, motor->constant_vs * axis->current_a - axis->load_motor_nm);
+    if (gear->pressed || held < axis->angle_rad || held > axis->angle_rad) {
+        axis->angle_rad = held;
+        axis->speed_rad_s = 0.0;
+    }
+    bool light = fabs(axis->laden_nm) * gear->ratio <= motor->output_friction_nm;
+    plant_gear_carry(gear, held, axis->speed_rad_s, axis->current_a, light ? 0.0 : copysign(1.0, axis->laden_nm));
+    if (gear->through != was_through || gear->pressed != was_pressed) {
+        hold(axis);
+    }
 }
 
 void plant_axis_set_jammed(struct plant_axis *axis, bool jammed)
@@ -103,7 +174,7 @@ void plant_axis_set_leads_swapped(struct plant_axis *axis, bool swapped)
 /* The torque against a shaft that turns with this speed. */
 static double opposing_nm(const struct plant_axis *axis, double speed)
 {
-    return axis->load_motor_nm + (speed > 0.0 ? axis->coulomb_nm : -axis->coulomb_nm);
+    return axis->load_motor_nm + (speed > 0.0 ? axis->running_nm : -axis->running_nm);
 }
 
 /* The ratio with which a bridge that is off conducts through the whole tick, 0 if it does not. */
@@ -196,7 +267,7 @@ static int glide(struct plant_axis *axis, int left, double volts, bool off, doub
         return 0;
     }
     const struct flow_ladder *ladder = open_circuit ? &axis->slack : is_zero(side) ? &axis->stuck : &axis->turning;
-    double torque = axis->load_motor_nm + side * axis->coulomb_nm;
+    double torque = axis->load_motor_nm + side * axis->running_nm;
     double charge = 0.0;
     for (int level = 0; level < FLOW_HALVINGS + 2; level++) {
         /* One pass over the levels spells out `left` in binary, the last unit at its end being the change itself. */
@@ -331,9 +402,36 @@ void plant_axis_advance(struct plant_axis *axis, double bus_v)
     axis->heat_a2 += axis->mean_a * axis->mean_a;
 }
 
+/* Adds the wear of the way turned since the last time. */
+static void wear_on(struct plant_axis *axis)
+{
+    const struct plant_motor_parameters *motor = &axis->parameters->motor;
+    const struct plant_wear *wear = &axis->wear;
+    double turns = fabs(axis->angle_rad - axis->worn_at_rad) / (TAU * axis->gear.ratio);
+    axis->worn_at_rad = axis->angle_rad;
+    if (is_zero(turns)) {
+        return;
+    }
+    axis->worn.friction += wear->friction * turns;
+    axis->worn.resistance += wear->resistance * turns;
+    axis->worn.play_rad += wear->play_rad * turns;
+    axis->coulomb_nm += motor->coulomb_nm * wear->friction * turns;
+    axis->static_nm += motor->static_nm * wear->friction * turns;
+    axis->resistance_20_ohm += motor->resistance_20_ohm * wear->resistance * turns;
+    if (wear->play_rad > 0.0 && !axis->gear.linked) {
+        plant_axis_set_play(axis, wear->play_rad * turns);
+    } else if (wear->play_rad > 0.0) {
+        plant_gear_widen(&axis->gear, wear->play_rad * turns);
+    }
+    hold(axis);
+}
+
 void plant_axis_warm(struct plant_axis *axis, uint32_t ticks)
 {
     const struct plant_motor_parameters *motor = &axis->parameters->motor;
+    if (axis->wear.friction > 0.0 || axis->wear.resistance > 0.0 || axis->wear.play_rad > 0.0) {
+        wear_on(axis);
+    }
     double ohm = axis->resistance_20_ohm * plant_copper_factor(axis->winding_c);
     double final_c = motor->ambient_c + motor->thermal_resistance_k_w * ohm * axis->heat_a2 / ticks;
     axis->heat_a2 = 0.0;

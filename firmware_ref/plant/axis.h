@@ -3,7 +3,15 @@
 #define RAMPRIG_PLANT_AXIS_H
 
 #include "flow.h"
+#include "gear.h"
 #include "parameters.h"
+
+/* What a turn of the output shaft adds, or what it has added so far; told in `ramprig.mock.plant.wear`. */
+struct plant_wear {
+    double friction;   /* share of the new motor's */
+    double resistance; /* likewise */
+    double play_rad;   /* at the output */
+};
 
 struct plant_axis {
     const struct plant_axis_parameters *parameters;
@@ -25,10 +33,16 @@ struct plant_axis {
     double viscous_nms;
     double coulomb_nm;
     double static_nm;
-    double load_motor_nm; /* at the motor's shaft */
+    double laden_nm; /* the load at the motor's shaft */
     bool jammed;
+    struct plant_wear wear;
     bool restless; /* the load alone turns a shaft at rest */
     /* Worked out from the above. */
+    struct plant_gear gear;
+    struct plant_wear worn;
+    double worn_at_rad;
+    double load_motor_nm; /* the load and the friction of a turning shaft, as they act on the motor now */
+    double running_nm;
     double per_duty;
     double ratio;
     double drop_now_v;
@@ -51,6 +65,13 @@ double plant_axis_prepare(struct plant_axis *axis, double bus_v);
 /* One tick at this bus voltage, after `plant_axis_prepare`. */
 void plant_axis_advance(struct plant_axis *axis, double bus_v);
 
+/* After each tick of an axis whose gear is `linked`: holds a shaft that has run into a stop, takes the output along, and
+ * sees what acts on the motor from now on. */
+void plant_axis_follow(struct plant_axis *axis);
+
+/* The output shaft's angle. */
+double plant_axis_output_rad(const struct plant_axis *axis);
+
 /* Lets the winding take up the heat of the last ticks. */
 void plant_axis_warm(struct plant_axis *axis, uint32_t ticks);
 
@@ -59,6 +80,18 @@ double plant_axis_bridge_current_a(const struct plant_axis *axis);
 
 /* The winding's resistance at 20 degC, brushes included. */
 void plant_axis_set_resistance(struct plant_axis *axis, double resistance_20_ohm);
+
+/* The gear's lost motion at the output, end to end; whether the output is held fast; angles of the motor's shaft that it
+ * cannot pass, infinite for none. */
+void plant_axis_set_play(struct plant_axis *axis, double play_rad);
+void plant_axis_set_clamped(struct plant_axis *axis, bool clamped);
+void plant_axis_set_stops(struct plant_axis *axis, double low_rad, double high_rad);
+
+/* What each turn of the output adds from now on; what it has added so far stays. */
+void plant_axis_set_wear(struct plant_axis *axis, struct plant_wear wear);
+
+/* Turns the motor's shaft from outside; one that is jammed does not turn. */
+void plant_axis_turn_by_hand(struct plant_axis *axis, double radians);
 
 /* Torque at the output shaft against positive motion. */
 void plant_axis_set_load(struct plant_axis *axis, double load_nm);

@@ -23,9 +23,14 @@
     X(thermal_resistance_k_w, LEAST, 0.0) \
     X(thermal_time_s, ABOVE, 0.0)        \
     X(ambient_c, LEAST, -200.0)          \
-    X(gear_ratio, ABOVE, 0.0)
+    X(gear_ratio, ABOVE, 0.0)            \
+    X(play_rad, LEAST, 0.0)              \
+    X(output_friction_nm, LEAST, 0.0)
 
-#define PLANT_ENCODER_LIST(X) X(lines, LEAST, 1.0)
+/* `on_output` is 0 or 1. */
+#define PLANT_ENCODER_LIST(X) \
+    X(lines, LEAST, 1.0)      \
+    X(on_output, LEAST, 0.0)
 
 #define PLANT_BRIDGE_LIST(X)       \
     X(resistance_ohm, LEAST, 0.0)  \

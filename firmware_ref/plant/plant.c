@@ -5,6 +5,8 @@
 #include <string.h>
 
 #define OPEN_OHM      10000.0 /* what a winding with an open lead has: far less flows than a sensor can tell */
+#define WEAR_TURNS    1000.0  /* the wear faults are told for so many turns of the output */
+#define PI            3.141592653589793
 #define WARM_EVERY_US 50000u /* how often winding temperatures are brought up to date */
 
 bool plant_start(struct plant *plant, const struct plant_parameters *parameters, uint32_t tick_us, uint64_t seed)
@@ -87,12 +89,17 @@ void plant_step(struct plant *plant)
     bus_v = plant_supply_step(&plant->supply, load_a, siemens);
     for (uint8_t i = 0; i < plant->parameters.axes; i++) {
         plant_axis_advance(&plant->axis[i], bus_v);
+        if (plant->axis[i].gear.linked) {
+            plant_axis_follow(&plant->axis[i]);
+        }
     }
 }
 
 int32_t plant_read_counts(struct plant *plant, uint8_t axis)
 {
-    return plant_encoder_read(&plant->encoder[axis], plant->axis[axis].angle_rad);
+    const struct plant_axis *turned = &plant->axis[axis];
+    bool on_output = plant->parameters.axis[axis].encoder.on_output > 0.0;
+    return plant_encoder_read(&plant->encoder[axis], on_output ? plant_axis_output_rad(turned) : turned->angle_rad);
 }
 
 int32_t plant_read_current_ma(struct plant *plant, uint8_t axis)
@@ -108,6 +115,23 @@ int32_t plant_read_supply_mv(const struct plant *plant)
 int16_t plant_read_temperature_dc(const struct plant *plant, uint8_t axis)
 {
     return (int16_t)rint(plant->axis[axis].winding_c * 10.0);
+}
+
+/* What wears and how much of it in WEAR_TURNS; false for a name that is none of these. */
+static bool set_wear(struct plant_axis *axis, const char *name, double amount)
+{
+    struct plant_wear wear = axis->wear;
+    if (strcmp(name, "friction_wear") == 0) {
+        wear.friction = amount / 100.0 / WEAR_TURNS;
+    } else if (strcmp(name, "resistance_wear") == 0) {
+        wear.resistance = amount / 100.0 / WEAR_TURNS;
+    } else if (strcmp(name, "play_wear") == 0) {
+        wear.play_rad = amount * (PI / 180.0) / WEAR_TURNS;
+    } else {
+        return false;
+    }
+    plant_axis_set_wear(axis, wear);
+    return true;
 }
 
 bool plant_set_fault(struct plant *plant, const char *name, uint8_t axis, double amount)
@@ -129,7 +153,8 @@ bool plant_set_fault(struct plant *plant, const char *name, uint8_t axis, double
     } else if (strcmp(name, "current_offset") == 0) {
         plant->sensor[axis].offset_ma = plant->parameters.axis[axis].sensor.offset_ma + amount;
     } else if (strcmp(name, "lead_open") == 0) {
-        double usual_ohm = plant->parameters.axis[axis].motor.resistance_20_ohm;
+        double new_ohm = plant->parameters.axis[axis].motor.resistance_20_ohm;
+        double usual_ohm = new_ohm * (1.0 + plant->axis[axis].worn.resistance);
         plant_axis_set_resistance(&plant->axis[axis], on ? OPEN_OHM : usual_ohm);
     } else if (strcmp(name, "encoders_exchanged") == 0) {
         for (uint8_t i = 0; i < plant->parameters.axes; i++) {
@@ -138,8 +163,14 @@ bool plant_set_fault(struct plant *plant, const char *name, uint8_t axis, double
     } else if (strcmp(name, "weak_supply") == 0) {
         plant_supply_set_resistance(&plant->supply,
                                     plant->parameters.supply.resistance_ohm * (on ? amount : 1.0));
+    } else if (strcmp(name, "output_clamped") == 0) {
+        plant_axis_set_clamped(&plant->axis[axis], on);
+    } else if (strcmp(name, "gear_play") == 0) {
+        double usual_rad = plant->parameters.axis[axis].motor.play_rad;
+        double worn_rad = plant->axis[axis].worn.play_rad;
+        plant_axis_set_play(&plant->axis[axis], (on ? amount * (PI / 180.0) : usual_rad) + worn_rad);
     } else {
-        return false;
+        return set_wear(&plant->axis[axis], name, amount);
     }
     return true;
 }

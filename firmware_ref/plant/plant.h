@@ -34,7 +34,7 @@ bool plant_start(struct plant *plant, const struct plant_parameters *parameters,
 /* Advances everything one tick. */
 void plant_step(struct plant *plant);
 
-/* The encoder counter: motor-shaft counts (x4), wrapping. */
+/* The encoder counter: counts (x4) of the shaft that it sits on, wrapping. */
 int32_t plant_read_counts(struct plant *plant, uint8_t axis);
 
 /* The signed motor current as sensed at the bridge. Noise is drawn at each reading. */

@@ -47,6 +47,30 @@ void probe_speed(struct probe *probe, uint8_t axis, double speed_rad_s)
     probe->plant.axis[axis].speed_rad_s = speed_rad_s;
 }
 
+void probe_stops(struct probe *probe, uint8_t axis, double low_rad, double high_rad)
+{
+    plant_axis_set_stops(&probe->plant.axis[axis], low_rad, high_rad);
+}
+
+void probe_hand(struct probe *probe, uint8_t axis, double radians)
+{
+    plant_axis_turn_by_hand(&probe->plant.axis[axis], radians);
+}
+
+double probe_output_rad(const struct probe *probe, uint8_t axis)
+{
+    return plant_axis_output_rad(&probe->plant.axis[axis]);
+}
+
+/* What has worn: friction, resistance, play. */
+void probe_worn(const struct probe *probe, uint8_t axis, double *values)
+{
+    const struct plant_wear *worn = &probe->plant.axis[axis].worn;
+    values[0] = worn->friction;
+    values[1] = worn->resistance;
+    values[2] = worn->play_rad;
+}
+
 void probe_drive(struct probe *probe, uint8_t axis, int32_t duty, int brake)
 {
     probe->plant.axis[axis].duty = duty;

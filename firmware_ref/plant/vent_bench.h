@@ -22,7 +22,10 @@
     X("axis.0.motor.thermal_time_s", 90.0) \
     X("axis.0.motor.ambient_c", 22.0) \
     X("axis.0.motor.gear_ratio", 90.0) \
+    X("axis.0.motor.play_rad", 0.0) \
+    X("axis.0.motor.output_friction_nm", 0.0) \
     X("axis.0.encoder.lines", 16.0) \
+    X("axis.0.encoder.on_output", 0.0) \
     X("axis.0.bridge.resistance_ohm", 0.1) \
     X("axis.0.bridge.freewheel_drop_v", 1.4) \
     X("axis.0.sensor.offset_ma", 4.0) \

@@ -32,7 +32,8 @@ from ..yamlfile import BandShape, Fields, FlagShape, Key, QuantityShape, Record
 class MotorModel:
     """A brushed permanent-magnet motor with its bridge and current sensor, on the motor's own shaft.
 
-    `constant_vs` is the voltage constant in V s/rad and the torque constant in N m/A at once. None: not said.
+    `constant_vs` is the voltage constant in V s/rad and the torque constant in N m/A at once. `play_deg` and
+    `output_friction_nm` alone are those of the output shaft. None: not said.
     """
 
     resistance_ohm: float
@@ -42,6 +43,8 @@ class MotorModel:
     viscous_nms: float
     running_nm: float
     breakaway_nm: float
+    play_deg: float = 0.0
+    output_friction_nm: float = 0.0
     thermal_resistance_k_w: float | None
     thermal_s: float | None
     ambient_c: float | None
@@ -89,6 +92,10 @@ INERTIA_KEY = Key("inertia", QuantityShape(INERTIA), "rotor, gear and load, at t
 VISCOUS_KEY = Key("viscous friction", QuantityShape(VISCOUS), "friction that grows with the speed")
 RUNNING = Key("running friction", QuantityShape(TORQUE), "friction that does not depend on the speed")
 BREAKAWAY = Key("breakaway friction", QuantityShape(TORQUE), "torque at which the shaft starts to turn")
+PLAY = Key("play", QuantityShape(ANGLE, least="0 deg"), "lost motion of the gear at the output shaft, end to end")
+OUTPUT_FRICTION = Key(
+    "output friction", QuantityShape(TORQUE, least="0 N m"), "at the output shaft, behind the play of the gear"
+)
 HEAT = Key("thermal resistance", QuantityShape(THERMAL_RESISTANCE), "winding to ambient")
 HEAT_TIME = Key("thermal time", QuantityShape(DURATION, least="1 s"), "time constant of the winding's temperature")
 AMBIENT = Key("ambient", QuantityShape(TEMPERATURE), "temperature around the motor")
@@ -125,6 +132,8 @@ def _motor_model(fields: Fields) -> MotorModel:
         viscous_nms=_to(fields.get(VISCOUS_KEY), "N m s/rad") or 0.0,
         running_nm=running,
         breakaway_nm=running if breakaway is None else breakaway,
+        play_deg=_to(fields.get(PLAY), "deg") or 0.0,
+        output_friction_nm=_to(fields.get(OUTPUT_FRICTION), "N m") or 0.0,
         thermal_resistance_k_w=_to(fields.get(HEAT), "K/W"),
         thermal_s=_to(fields.get(HEAT_TIME), "s"),
         ambient_c=_to(fields.get(AMBIENT), "degC"),
@@ -139,8 +148,9 @@ def _motor_model(fields: Fields) -> MotorModel:
 
 MOTOR_MODEL = Record(
     (
-        *(RESISTANCE_KEY, INDUCTANCE_KEY, CONSTANT, INERTIA_KEY, VISCOUS_KEY, RUNNING, BREAKAWAY, HEAT, HEAT_TIME),
-        *(AMBIENT, BRIDGE, FREEWHEEL, SENSOR_OFFSET, SENSOR_NOISE, SENSOR_RANGE, SENSOR_STEP),
+        *(RESISTANCE_KEY, INDUCTANCE_KEY, CONSTANT, INERTIA_KEY, VISCOUS_KEY, RUNNING, BREAKAWAY, PLAY),
+        *(OUTPUT_FRICTION, HEAT, HEAT_TIME, AMBIENT, BRIDGE, FREEWHEEL),
+        *(SENSOR_OFFSET, SENSOR_NOISE, SENSOR_RANGE, SENSOR_STEP),
     ),
     _motor_model,
 )

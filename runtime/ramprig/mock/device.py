@@ -15,7 +15,7 @@ from .controller import Controller
 from .drive import Drive
 from .faults import FaultSwitches, parse_fault
 from .limits import LimitStore
-from .plant import Plant, PlantFault, set_fault
+from .plant import Ageing, Plant, PlantFault, set_fault, set_play, set_wear
 from .setup import MockSetup
 from .transmit import BITS_PER_BYTE, Transmitter
 
@@ -29,6 +29,7 @@ _PLANT_FAULTS = {
     "noisy_counts": PlantFault.NOISY_COUNTS,
     "lead_open": PlantFault.LEAD_OPEN,
     "encoders_exchanged": PlantFault.ENCODERS_EXCHANGED,
+    "output_clamped": PlantFault.OUTPUT_CLAMPED,
 }
 
 
@@ -63,7 +64,8 @@ class PlantInputs:
     def read_counts(self, axis: int) -> int:
         """Counts since the board's start."""
         wired = self._wired[axis]
-        counts = self._encoders[wired].read(self._axes[wired].angle_rad) - self._zero[wired]
+        encoder, turned = self._encoders[wired], self._axes[wired]
+        counts = encoder.read(turned.output_rad if encoder.on_output else turned.angle_rad) - self._zero[wired]
         return counts if -_HALF <= counts < _HALF else (counts + _HALF) % (2 * _HALF) - _HALF
 
     def read_current_ma(self, axis: int) -> int:
@@ -310,5 +312,9 @@ class MockDevice:
             plant.sensors[axis].offset_ma = plant.parameters.axes[axis].sensor.offset_ma + amount
         elif name == "weak_supply":
             plant.supply.resistance_ohm = plant.parameters.supply.resistance_ohm * (amount or 1.0)
+        elif name == "gear_play":
+            set_play(plant, amount, axis=axis)
+        elif name in tuple(Ageing):
+            set_wear(plant, Ageing(name), amount, axis=axis)
         elif name == "second_board":
             self._swap(bool(amount))

@@ -37,6 +37,23 @@ FAULTS = {
         FaultKind(name="encoders_exchanged", text="each encoder is plugged in where that of another axis belongs"),
         FaultKind(name="jammed_shaft", per_axis=True, text="the shaft is held fast"),
         FaultKind(
+            name="gear_play", per_axis=True, default=1.0, unit="deg", least=1e-3, most=45.0,
+            text="the gear has this much play at its output",
+        ),
+        FaultKind(name="output_clamped", per_axis=True, text="the output shaft is clamped fast behind the gear's play"),
+        FaultKind(
+            name="friction_wear", per_axis=True, default=10.0, unit="% in 1000 turns", least=1e-3, most=1e5,
+            text="the friction grows by this share of its first value with every 1000 turns of the output",
+        ),
+        FaultKind(
+            name="resistance_wear", per_axis=True, default=10.0, unit="% in 1000 turns", least=1e-3, most=1e5,
+            text="the winding's and brushes' resistance grows by this share with every 1000 turns of the output",
+        ),
+        FaultKind(
+            name="play_wear", per_axis=True, default=1.0, unit="deg in 1000 turns", least=1e-3, most=1e4,
+            text="the gear's play grows by this with every 1000 turns of the output",
+        ),
+        FaultKind(
             name="current_offset", per_axis=True, default=350.0, unit="mA", least=-100_000.0, most=100_000.0,
             text="the current sensor reads too much by this",
         ),

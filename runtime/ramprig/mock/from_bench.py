@@ -6,6 +6,8 @@ invented figures; it is refused at its line.
 
 from __future__ import annotations
 
+import math
+
 from ramprig.bench import Bench, MockFault, Motor, MotorModel, Servo, ServoModel, SupplyModel
 from ramprig.errors import UsageError
 
@@ -107,13 +109,13 @@ def _axis(motor: Motor) -> AxisParameters:
         found = f"'{motor.name}' has no 'model'"
         raise motor.mark.error(found, "a mock of it needs resistance, inductance, constant and inertia there")
     encoder = motor.encoder
-    if encoder is not None and not encoder.on_motor_shaft and motor.gear_ratio != 1:
-        found = f"the encoder of '{motor.name}' sits behind the gear"
-        raise motor.mark.error(found, "the mock has encoders on the motor's shaft only")
     return AxisParameters(
         name=motor.name,
         motor=_motor(model, float(motor.gear_ratio)),
-        encoder=EncoderParameters(lines=1 if encoder is None else encoder.lines),
+        encoder=EncoderParameters(
+            lines=1 if encoder is None else encoder.lines,
+            on_output=encoder is not None and not encoder.on_motor_shaft,
+        ),
         bridge=BridgeParameters(resistance_ohm=model.bridge_ohm, freewheel_drop_v=model.freewheel_v),
         sensor=_sensor(model),
     )
@@ -130,6 +132,8 @@ def _motor(model: MotorModel, gear_ratio: float) -> MotorParameters:
         coulomb_nm=model.running_nm,
         static_nm=model.breakaway_nm,
         gear_ratio=gear_ratio,
+        play_rad=model.play_deg * (math.pi / 180.0),
+        output_friction_nm=model.output_friction_nm,
         thermal_resistance_k_w=_or(model.thermal_resistance_k_w, usual.thermal_resistance_k_w),
         thermal_time_s=_or(model.thermal_s, usual.thermal_time_s),
         ambient_c=_or(model.ambient_c, usual.ambient_c),

@@ -14,6 +14,9 @@ carries duty * i. Ripple is not simulated; `ripple` has its formulas. At zero du
 (v = 0). A coasting one is off: the current runs down through the diodes against the bus, v = -sign(i) * (bus + drop),
 then the circuit is open until the back EMF exceeds bus and drop together.
 
+Between the motor's shaft and the output lies a gear, with play where a bench has it (`gear`). What wears with the way
+turned is in `wear`.
+
 Over a tick the equations are linear, so each tick is one multiplication by a matrix exponential made beforehand
 (`flow`): exact however stiff the winding is. Where a tick is not linear from end to end (the shaft stops, breaks
 away, or the current runs out), the instant is found by halving, to a 4096th of a tick (`axis`). The bus voltage is
@@ -21,7 +24,8 @@ constant over a tick and is solved for together with the currents it drives, so 
 """
 
 from .axis import Axis
-from .faults import PlantFault, set_fault
+from .faults import Ageing, PlantFault, set_fault, set_play, set_wear
+from .gear import Gear
 from .parameters import (
     VENT_BENCH,
     AxisParameters,
@@ -37,15 +41,18 @@ from .plant import Plant
 from .sensors import CurrentSensor, Encoder, QuadratureDecoder
 from .servo import Servo
 from .supply import Supply
+from .wear import Wear
 
 __all__ = [
     "VENT_BENCH",
+    "Ageing",
     "Axis",
     "AxisParameters",
     "BridgeParameters",
     "CurrentSensor",
     "Encoder",
     "EncoderParameters",
+    "Gear",
     "MotorParameters",
     "Plant",
     "PlantFault",
@@ -56,5 +63,8 @@ __all__ = [
     "ServoParameters",
     "Supply",
     "SupplyParameters",
+    "Wear",
     "set_fault",
+    "set_play",
+    "set_wear",
 ]

@@ -10,7 +10,9 @@ from __future__ import annotations
 import math
 
 from .flow import HALVINGS, UNITS, Rows, transitions
+from .gear import Gear
 from .parameters import DUTY_FULL, AxisParameters, copper_factor
+from .wear import Wear
 
 MOST_EVENTS = 16
 """Changes of motion followed within one tick; past them the shaft and current are stopped until the next."""
@@ -27,8 +29,8 @@ class Axis:
     mean over the last tick.
     Settable while running: friction, resistance and load (`viscous_nms`, `coulomb_nm`, `static_nm`, `load_nm`,
     `resistance_20_ohm`), `leads_swapped` and `jammed`. `load_nm` is a constant torque at the output shaft, such as a
-    weight's, against positive motion. `stops_rad`, None for none, are angles of the motor's shaft that it cannot pass:
-    what a clamped output and the play of a gear leave it.
+    weight's, against positive motion. `play_rad`, `clamped` and `stops_rad` are those of the `Gear` behind it, where
+    `output_rad` is told. `wear` is what each turn of the output adds to friction, resistance and play.
     """
 
     __slots__ = (
@@ -39,31 +41,36 @@ class Axis:
         "_heat_a2",
         "_jammed",
         "_ladders",
+        "_laden_nm",
         "_load_nm",
         "_open",
         "_per_duty",
         "_ratio",
         "_resistance_20_ohm",
         "_resistance_ohm",
+        "_running_nm",
         "_static_nm",
         "_stick_nm",
         "_stuck",
         "_tick_s",
         "_turning",
         "_viscous_nms",
+        "_wear",
+        "_worn_at_rad",
         "angle_rad",
         "brake",
         "current_a",
         "duty",
         "free_a",
+        "gear",
         "mean_a",
         "parameters",
         "restless",
         "siemens",
         "speed_rad_s",
-        "stops_rad",
         "surplus_a",
         "winding_c",
+        "worn",
     )
 
     def __init__(self, parameters: AxisParameters, *, tick_us: int = 1000) -> None:
@@ -89,9 +96,12 @@ class Axis:
         self._viscous_nms = motor.viscous_nms
         self._coulomb_nm = motor.coulomb_nm
         self._static_nm = motor.static_nm
-        self._load_nm = 0.0
+        self._laden_nm = 0.0
         self._jammed = False
-        self.stops_rad: tuple[float, float] | None = None
+        self.gear = Gear(motor.gear_ratio, play_rad=motor.play_rad, is_watched=parameters.encoder.on_output)
+        self._wear: Wear | None = None
+        self.worn = Wear()
+        self._worn_at_rad = 0.0
         self._per_duty = 1.0 / DUTY_FULL
         self._rebuild()
 
@@ -141,11 +151,11 @@ class Axis:
     @property
     def load_nm(self) -> float:
         """Constant torque at the output shaft against positive motion; it also turns a slack motor backwards."""
-        return self._load_nm * self.parameters.motor.gear_ratio
+        return self._laden_nm * self.parameters.motor.gear_ratio
 
     @load_nm.setter
     def load_nm(self, value: float) -> None:
-        self._load_nm = value / self.parameters.motor.gear_ratio
+        self._laden_nm = value / self.parameters.motor.gear_ratio
         self._hold()
 
     @property
@@ -160,20 +170,76 @@ class Axis:
             self.speed_rad_s = 0.0
         self._hold()
 
+    @property
+    def output_rad(self) -> float:
+        """The output shaft's angle."""
+        return self.gear.output_rad(self.angle_rad)
+
+    @property
+    def play_rad(self) -> float:
+        """The gear's lost motion at the output, end to end."""
+        return self.gear.settings[0]
+
+    @play_rad.setter
+    def play_rad(self, value: float) -> None:
+        self.gear.set(value, *self.gear.settings[1:], self.angle_rad)
+        self._hold()
+
+    @property
+    def clamped(self) -> bool:
+        """Whether the output shaft is held fast where it stands."""
+        return self.gear.settings[1]
+
+    @clamped.setter
+    def clamped(self, value: bool) -> None:
+        self.gear.set(self.play_rad, value, self.stops_rad, self.angle_rad)
+        self._hold()
+
+    @property
+    def stops_rad(self) -> tuple[float, float] | None:
+        """Angles of the motor's shaft that it cannot pass, None for none."""
+        return self.gear.settings[2]
+
+    @stops_rad.setter
+    def stops_rad(self, value: tuple[float, float] | None) -> None:
+        self.gear.set(self.play_rad, self.clamped, value, self.angle_rad)
+        self._hold()
+
+    @property
+    def wear(self) -> Wear:
+        """What each turn of the output adds from now on; what it has added so far is in `worn`, and stays."""
+        return self._wear or Wear()
+
+    @wear.setter
+    def wear(self, value: Wear) -> None:
+        self._wear = None if value == Wear() else value
+        self._worn_at_rad = self.angle_rad
+
     def turn_by_hand(self, radians: float) -> None:
         """Turn the motor's shaft from outside by this much; one that is jammed does not turn."""
         if not self._jammed:
             self.angle_rad += radians
-            self.meet_stops()
+            if self.gear.linked:
+                self.follow()
 
-    def meet_stops(self) -> None:
-        """Hold a shaft that has run into one of its stops; it does not bounce."""
-        if self.stops_rad is None:
-            return
-        low, high = self.stops_rad
-        if not low <= self.angle_rad <= high:
-            self.angle_rad = min(max(self.angle_rad, low), high)
+    def follow(self) -> None:
+        """Hold a shaft that has run into a stop, take the output along, and see what acts on the motor from now on.
+
+        To be called after each tick of an axis whose gear is `linked`. A shaft does not bounce off its stop.
+        """
+        gear = self.gear
+        was = gear.through, gear.pressed
+        held_rad = gear.hold(self.angle_rad, self._constant_vs * self.current_a - self._load_nm)
+        if held_rad != self.angle_rad:
+            self.angle_rad = held_rad
             self.speed_rad_s = 0.0
+        elif gear.pressed:
+            self.speed_rad_s = 0.0
+        laden_nm = self._laden_nm
+        held = abs(laden_nm) * gear.ratio <= self.parameters.motor.output_friction_nm
+        gear.carry(held_rad, self.speed_rad_s, self.current_a, 0.0 if held else math.copysign(1.0, laden_nm))
+        if (gear.through, gear.pressed) != was:
+            self._hold()
 
     @property
     def leads_swapped(self) -> bool:
@@ -190,7 +256,11 @@ class Axis:
         return self.current_a if self._per_duty > 0.0 else -self.current_a
 
     def _hold(self) -> None:
-        self._stick_nm = math.inf if self._jammed else self._static_nm
+        gear, motor = self.gear, self.parameters.motor
+        dragged_nm = motor.output_friction_nm / motor.gear_ratio if gear.through else 0.0
+        self._load_nm = self._laden_nm if gear.through else 0.0
+        self._running_nm = self._coulomb_nm + dragged_nm
+        self._stick_nm = math.inf if self._jammed or gear.pressed else self._static_nm + dragged_nm
         self.restless = abs(self._load_nm) > self._stick_nm
 
     def _rebuild(self) -> None:
@@ -231,7 +301,7 @@ class Axis:
                 return 0.0
         if speed:
             rows = self._turning
-            torque = self._load_nm + (self._coulomb_nm if speed > 0.0 else -self._coulomb_nm)
+            torque = self._load_nm + (self._running_nm if speed > 0.0 else -self._running_nm)
             self.free_a = rows[8] * current + rows[9] * speed + rows[11] * torque + rows[10] * self._drop_now_v
         else:
             rows = self._stuck
@@ -273,7 +343,7 @@ class Axis:
             return
         volts = ratio * bus_v + self._drop_now_v if ratio else 0.0
         if speed:
-            torque = self._load_nm + (self._coulomb_nm if speed > 0.0 else -self._coulomb_nm)
+            torque = self._load_nm + (self._running_nm if speed > 0.0 else -self._running_nm)
             ii, iw, iv, it, wi, ww, wv, wt, mi, mw, mv, mt, ai, aw, av, at = self._turning
             then = ii * current + iw * speed + iv * volts + it * torque
             speed_then = wi * current + ww * speed + wv * volts + wt * torque
@@ -299,7 +369,7 @@ class Axis:
     def _coast(self, speed: float, bus_v: float) -> None:
         """Advance one tick with the circuit open and the shaft turning."""
         rows = self._open
-        torque = self._load_nm + (self._coulomb_nm if speed > 0.0 else -self._coulomb_nm)
+        torque = self._load_nm + (self._running_nm if speed > 0.0 else -self._running_nm)
         then = rows[5] * speed + rows[7] * torque
         if then * speed <= 0.0:
             self._by_events(bus_v)
@@ -362,7 +432,7 @@ class Axis:
             return 0, 0.0
         turning, stuck, slack = self._ladders
         ladder = slack if open_circuit else turning if side else stuck
-        torque = self._load_nm + side * self._coulomb_nm
+        torque = self._load_nm + side * self._running_nm
         charge = 0.0
         for level in range(HALVINGS + 2):
             # One pass over the levels spells out `left` in binary, the last unit at its end being the change itself.
@@ -393,6 +463,8 @@ class Axis:
     def warm(self, ticks: int) -> None:
         """Let the winding take up the heat of the last `ticks` ticks, and give off what it gives off in them."""
         motor = self.parameters.motor
+        if self._wear is not None:
+            self._wear_on(self._wear)
         ohm = self._resistance_20_ohm * copper_factor(self.winding_c)
         final_c = motor.ambient_c + motor.thermal_resistance_k_w * ohm * self._heat_a2 / ticks
         self._heat_a2 = 0.0
@@ -400,6 +472,27 @@ class Axis:
         ohm = self._resistance_20_ohm * copper_factor(self.winding_c) + self.parameters.bridge.resistance_ohm
         if abs(ohm - self._resistance_ohm) > _DRIFT * self._resistance_ohm:
             self._rebuild()
+
+    def _wear_on(self, wear: Wear) -> None:
+        """Add the wear of the way turned since the last time; ways to and fro in between do not count."""
+        turns = abs(self.angle_rad - self._worn_at_rad) / (math.tau * self.gear.ratio)
+        self._worn_at_rad = self.angle_rad
+        if not turns:
+            return
+        motor, worn = self.parameters.motor, self.worn
+        self.worn = Wear(
+            friction=worn.friction + wear.friction * turns,
+            resistance=worn.resistance + wear.resistance * turns,
+            play_rad=worn.play_rad + wear.play_rad * turns,
+        )
+        self._coulomb_nm += motor.coulomb_nm * wear.friction * turns
+        self._static_nm += motor.static_nm * wear.friction * turns
+        self._resistance_20_ohm += motor.resistance_20_ohm * wear.resistance * turns
+        if wear.play_rad and not self.gear.linked:
+            self.play_rad = wear.play_rad * turns
+        elif wear.play_rad:
+            self.gear.widen(wear.play_rad * turns)
+        self._hold()
 
 
 def _apply(rows: Rows, current: float, speed: float, volts: float, torque: float) -> tuple[float, float, float, float]:

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
+from dataclasses import replace
 from enum import StrEnum
 
 from .plant import Plant
@@ -31,6 +33,7 @@ class PlantFault(StrEnum):
     WEAK_SUPPLY = "brown-out"
     LEAD_OPEN = "lead-open"
     ENCODERS_EXCHANGED = "encoders-exchanged"
+    OUTPUT_CLAMPED = "output-clamped"
 
 
 def _phases(plant: Plant, axis: int, on: bool) -> None:
@@ -68,7 +71,8 @@ def _weak_supply(plant: Plant, axis: int, on: bool) -> None:
 
 
 def _open(plant: Plant, axis: int, on: bool) -> None:
-    usual_ohm = plant.parameters.axes[axis].motor.resistance_20_ohm
+    new_ohm = plant.parameters.axes[axis].motor.resistance_20_ohm
+    usual_ohm = new_ohm * (1.0 + plant.axes[axis].worn.resistance)
     plant.axes[axis].resistance_20_ohm = OPEN_OHM if on else usual_ohm
 
 
@@ -76,6 +80,10 @@ def _exchange(plant: Plant, axis: int, on: bool) -> None:
     del axis  # each encoder is plugged in where the next one belongs
     axes = len(plant.axes)
     plant.wired_to[:] = [(place + on) % axes for place in range(axes)]
+
+
+def _clamp(plant: Plant, axis: int, on: bool) -> None:
+    plant.axes[axis].clamped = on
 
 
 _SWITCHES: dict[PlantFault, Callable[[Plant, int, bool], None]] = {
@@ -89,9 +97,41 @@ _SWITCHES: dict[PlantFault, Callable[[Plant, int, bool], None]] = {
     PlantFault.WEAK_SUPPLY: _weak_supply,
     PlantFault.LEAD_OPEN: _open,
     PlantFault.ENCODERS_EXCHANGED: _exchange,
+    PlantFault.OUTPUT_CLAMPED: _clamp,
 }
 
 
 def set_fault(plant: Plant, fault: PlantFault, *, axis: int = 0, on: bool = True) -> None:
     """Switch a fault of the plant on or off; it acts from the next tick or reading on."""
     _SWITCHES[fault](plant, axis, on)
+
+
+class Ageing(StrEnum):
+    """What can be made to wear; the values are the names that users type."""
+
+    FRICTION = "friction_wear"
+    RESISTANCE = "resistance_wear"
+    PLAY = "play_wear"
+
+
+WEAR_TURNS = 1000.0
+"""The wear faults are told for so many turns of the output."""
+
+
+def set_wear(plant: Plant, ageing: Ageing, amount: float, *, axis: int = 0) -> None:
+    """Have an axis age from now on: % of the new motor's, or degrees of play, in WEAR_TURNS; 0 ends the ageing."""
+    turned = plant.axes[axis]
+    match ageing:
+        case Ageing.FRICTION:
+            turned.wear = replace(turned.wear, friction=amount / 100.0 / WEAR_TURNS)
+        case Ageing.RESISTANCE:
+            turned.wear = replace(turned.wear, resistance=amount / 100.0 / WEAR_TURNS)
+        case Ageing.PLAY:
+            turned.wear = replace(turned.wear, play_rad=amount * (math.pi / 180.0) / WEAR_TURNS)
+
+
+def set_play(plant: Plant, degrees: float, *, axis: int = 0) -> None:
+    """Give a gear so much play, beside what has worn; 0 for what the bench says."""
+    usual_rad = plant.parameters.axes[axis].motor.play_rad
+    worn_rad = plant.axes[axis].worn.play_rad
+    plant.axes[axis].play_rad = (degrees * (math.pi / 180.0) if degrees else usual_rad) + worn_rad

@@ -39,8 +39,9 @@ class MotorParameters:
     """A brushed permanent-magnet motor, everything referred to the motor's own shaft.
 
     `constant_vs` is both the voltage constant in V*s/rad and the torque constant in N*m/A. `static_nm` is the
-    break-away torque, at least `coulomb_nm`. `gear_ratio` is motor turns per output turn; the gear is ideal, its
-    losses belong into the friction and its inertia into `inertia_kgm2`.
+    break-away torque, at least `coulomb_nm`. `gear_ratio` is motor turns per output turn; the gear is stiff, its
+    losses belong into the friction and its inertia into `inertia_kgm2`. `play_rad` is its lost motion at the output,
+    end to end; `output_friction_nm` is friction at the output shaft, felt by the motor only while it moves the output.
     """
 
     resistance_20_ohm: float
@@ -54,13 +55,15 @@ class MotorParameters:
     thermal_time_s: float = 60.0
     ambient_c: float = 20.0
     gear_ratio: float = 1.0
+    play_rad: float = 0.0
+    output_friction_nm: float = 0.0
 
     def __post_init__(self) -> None:
         for name in ("resistance_20_ohm", "inductance_h", "constant_vs", "inertia_kgm2"):
             _check(self, name, above=0.0)
         for name in ("thermal_time_s", "gear_ratio"):
             _check(self, name, above=0.0)
-        for name in ("viscous_nms", "coulomb_nm", "thermal_resistance_k_w"):
+        for name in ("viscous_nms", "coulomb_nm", "thermal_resistance_k_w", "play_rad", "output_friction_nm"):
             _check(self, name, least=0.0)
         _check(self, "static_nm", least=self.coulomb_nm)
         _check(self, "ambient_c", least=-200.0)
@@ -80,16 +83,17 @@ class BridgeParameters:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class EncoderParameters:
-    """A quadrature encoder on the motor shaft; every line gives four counts."""
+    """A quadrature encoder on the motor's shaft, or with `on_output` on the output; every line gives four counts."""
 
     lines: int
+    on_output: bool = False
 
     def __post_init__(self) -> None:
         _check(self, "lines", least=1)
 
     @property
     def counts_per_turn(self) -> int:
-        """Counts in one turn of the motor shaft."""
+        """Counts in one turn of the shaft that it sits on."""
         return 4 * self.lines
 
 

@@ -86,12 +86,13 @@ class Plant:
         bus_v = supply.step(load_a, siemens)
         for axis in axes:
             axis.advance(bus_v)
-            if axis.stops_rad is not None:
-                axis.meet_stops()
+            if axis.gear.linked:
+                axis.follow()
 
     def read_counts(self, axis: int) -> int:
-        """Return the encoder counter: motor-shaft counts (x4), 32 bits signed, wrapping."""
-        return self.encoders[axis].read(self.axes[axis].angle_rad)
+        """Return the encoder counter: counts (x4) of the shaft that it sits on, 32 bits signed, wrapping."""
+        encoder, turned = self.encoders[axis], self.axes[axis]
+        return encoder.read(turned.output_rad if encoder.on_output else turned.angle_rad)
 
     def read_current_ma(self, axis: int) -> int:
         """Return the signed motor current as sensed at the bridge: positive the way a positive duty drives it."""

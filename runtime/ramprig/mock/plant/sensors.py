@@ -49,11 +49,12 @@ class QuadratureDecoder:
 
 
 class Encoder:
-    """Counts of the motor shaft: the angle rounded down to whole counts, wrapping at 32 bits signed.
+    """Counts of a shaft: the angle rounded down to whole counts, wrapping at 32 bits signed.
 
-    Faults may be set at any time, and act from the next reading on. `phases_swapped` counts the wrong way; `dead`
-    freezes the count; `one_channel` leaves phase A alone, so the count goes to and fro by one; `noisy` moves each
-    reading by -1, 0 or +1, without a lasting error.
+    `on_output` says that the angle to be read is that of the output shaft, not the motor's. Faults may be set at any
+    time, and act from the next reading on. `phases_swapped` counts the wrong way; `dead` freezes the count;
+    `one_channel` leaves phase A alone, so the count goes to and fro by one; `noisy` moves each reading by -1, 0 or +1,
+    without a lasting error.
     """
 
     __slots__ = (
@@ -63,6 +64,7 @@ class Encoder:
         "_random",
         "dead",
         "noisy",
+        "on_output",
         "one_channel",
         "phases_swapped",
     )
@@ -70,6 +72,7 @@ class Encoder:
     def __init__(self, parameters: EncoderParameters, *, randomness: random.Random) -> None:
         self._counts_per_rad = parameters.counts_per_turn / math.tau
         self._random = randomness
+        self.on_output = parameters.on_output
         self._position = 0
         self._count = 0
         self.phases_swapped = False
