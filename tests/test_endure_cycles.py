@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
+import itertools
 from collections import deque
 from pathlib import Path
 
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from ramprig.endure.cycles import CycleRecord, read_cycle_record
@@ -17,11 +18,13 @@ from ramprig.record.appendfile import AppendFile
 from ramprig.record.events import encode_line
 from ramprig.sequence.compile import compile_plan
 from ramprig.sequence.cycle_plan import BlockSoFar
-from ramprig.sequence.cycle_run import CycleBook, PastStarts, RunSoFar, StartsGuard
+from ramprig.sequence.cycle_run import CycleBook, PastStarts, RunSoFar
 from ramprig.sequence.executive import Progress
 from ramprig.sequence.happened import CheckBegun, CheckDone, CycleBegun, CycleCommanded, CycleDone, CycleInterrupted
 from ramprig.sequence.outcome import Verdict
+from ramprig.sequence.plan import Cycles
 from ramprig.sequence.report import report_lines
+from ramprig.sequence.spacing import StartsGuard
 from ramprig.sequence.strands import Turn
 from ramprig.session.events import HostSlept
 from ramprig.session.session import Session
@@ -193,13 +196,30 @@ def test_a_host_that_slept_is_told_in_the_last_sentence(tmp_path: Path) -> None:
 # ---- starts per hour -----------------------------------------------------------------------------------------------
 
 
+def test_cycles_are_spaced_evenly_for_their_starts_per_hour(tmp_path: Path) -> None:
+    """720 starts per hour: one each 5 s, and a cycle's length over 720 more."""
+    run = rehearse(tmp_path, cycle("times: 4\n    starts per hour: 720"), head="log: {period: 20 ms}\n")
+    begins = [event.begin_tick for event in done(run)]
+    assert [later - begin for begin, later in itertools.pairwise(begins)] == [5002] * 3  # a cycle takes 1.1 s
+    tick_s = run.plan.tick_us / 1e6
+    assert run.plan.totals.least * tick_s <= run.outcome.elapsed_s <= run.plan.totals.most * tick_s
+    assert run.progress[-1].left_s == pytest.approx(0.0, abs=0.6)
+
+
 @pytest.mark.soak
-def test_a_cycle_waits_until_an_hour_allows_its_starts(tmp_path: Path) -> None:
+def test_no_cycle_comes_sooner_than_an_hour_allows_its_starts(tmp_path: Path) -> None:
     run = rehearse(tmp_path, cycle("times: 3\n    starts per hour: 2"), head="log: {period: 1 s}\n")
     first, second, third = done(run)
-    assert second.begin_tick - first.tick < 2000
+    assert 1_800_000 <= second.begin_tick - first.begin_tick < 1_802_000
     assert third.begin_tick - first.tick >= 3_600_000
     assert third.begin_tick - first.tick < 3_602_000
+
+
+def test_a_cycle_that_would_begin_after_its_time_is_not_waited_for(tmp_path: Path) -> None:
+    run = rehearse(tmp_path, cycle("for: 12 s\n    starts per hour: 720"), head="log: {period: 20 ms}\n")
+    assert len(done(run)) == 3  # at 0 s, 5 s and 10 s; one at 15 s would be too late
+    tick_s = run.plan.tick_us / 1e6
+    assert run.plan.totals.least * tick_s <= run.outcome.elapsed_s <= run.plan.totals.most * tick_s
 
 
 @pytest.mark.parametrize(("age_s", "wait_s"), [(3590.0, 10), (3600.0, 0), (1.0, 3599)])
@@ -230,15 +250,74 @@ def test_no_rolling_hour_ever_has_more_starts_than_allowed(per_hour: int, turns:
         assert sum(at_s - 3600 < other <= at_s for other in made) <= per_hour
 
 
+class Turned:
+    """Goes through a block of a plan as a run does, each turn as long as it may be or as short, and keeps the begins
+    and ends of its turns in ticks."""
+
+    def __init__(self, part: Cycles, *, most: bool) -> None:
+        book = CycleBook(RunSoFar(), tick_s=0.001, write=lambda event: None, pending=lambda: 0)
+        tick = (part.before.totals.most if most else part.before.totals.least) if part.before is not None else 0
+        book.enter(part, tick)
+        self.turns: list[tuple[int, int, dict[str, int]]] = []
+        while (due := book.due(tick)).turn is not Turn.OVER:
+            book.command(due.turn)
+            book.begin(due.tick)
+            body, starts = (part.later, part.starts)
+            if due.turn is Turn.CHECK:
+                assert part.check is not None
+                body, starts = part.check, part.check_starts
+            tick = due.tick + (body.totals.most if most else body.totals.least)
+            book.close(tick)
+            self.turns.append((due.tick, tick, dict(starts)))
+        self.over = tick
+
+
+PLAIN = "\n      - ramp: {motor: vent, to: 60 %, in: 600 ms}\n      - coast: {motor: vent, in: 300 ms}\n"
+OTHER = PLAIN.replace("vent", "fan")
+
+
+@settings(max_examples=40, deadline=None)
+@given(
+    length=st.one_of(st.integers(1, 40).map("times: {}".format), st.integers(1, 4).map("for: {} h".format)),
+    per_hour=st.integers(4, 24),
+    every=st.integers(1, 6),
+    steps=st.sampled_from([DRIVE, DRIVE * 2, DRIVE + OTHER]),
+    check=st.sampled_from(["", PLAIN, PLAIN * 2, OTHER]),
+    rest_s=st.sampled_from([0, 5, 300]),
+)
+def test_the_plan_bounds_the_time_of_spaced_cycles(
+    tmp_path_factory: pytest.TempPathFactory,
+    length: str,
+    per_hour: int,
+    every: int,
+    steps: str,
+    check: str,
+    rest_s: int,
+) -> None:
+    keys = f"{length}\n    rest: {rest_s} s\n    starts per hour: {per_hour}"
+    if check:
+        keys += f"\n    check every: {every}\n    check:{check.rstrip()}"
+    plan = plan_of(tmp_path_factory.mktemp("p"), cycle(keys, steps + "\n      - hold: 1 s\n"))
+    (part,) = plan.cycles
+    for most in (False, True):
+        found = Turned(part, most=most)
+        assert part.totals.least <= found.over <= part.totals.most
+        for motor in part.starts:
+            made = [(end, starts.get(motor, 0)) for _, end, starts in found.turns]
+            for begin, _, starts in found.turns:
+                recent = sum(count for end, count in made if begin - 3_600_000 < end <= begin)
+                assert recent + starts.get(motor, 0) <= per_hour or not starts.get(motor)
+
+
 def test_the_plan_tells_of_cycles_and_bounds_their_time(tmp_path: Path) -> None:
     keys = "name: open\n    times: 100\n    rest: 2 s\n    starts per hour: 30\n    check every: 50"
     keys += "\n    check: [{hold: 1 s}]"
     plan = plan_of(tmp_path, cycle(keys))
     tick_s = plan.tick_us / 1e6
     assert plan.totals.least * tick_s >= 3 * 3600  # 100 starts at 30 an hour: three whole hours of waiting
-    assert plan.totals.most * tick_s < 5 * 3600
+    assert plan.totals.most * tick_s < 3.5 * 3600
     text = "\n".join(report_lines(plan, small_bench()))
-    assert "cycles    'open' x 100, rest 2 s, at most 30 starts per hour, check every 50" in text
+    assert "cycles    'open' x 100, rest 2 s, at most 30 starts per hour (one every 2 min), check every 50" in text
     assert "each cycle" in text
     left = compile_plan(sequence_of(tmp_path, cycle(keys)), small_bench(), so_far={1: BlockSoFar(done=90)})
     assert left.totals.least < plan.totals.least

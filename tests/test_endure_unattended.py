@@ -187,8 +187,7 @@ HAZARDS
   motor 'vent' turns at up to 60 % of full drive, both ways if the test says
     so
   servo 'latch' moves between -40 deg and 40 deg
-  everything starts by itself and without warning, also after a rest of 20 s,
-    or of up to an hour, as starts per hour are limited
+  everything starts by itself and without warning, also after a pause of 20 s
   after a lost link or a restart it may start again by itself, 2 times, within
     5 min
   supply 12 V, fuse 3 A; motors and bridge may be hot

@@ -15,9 +15,10 @@ from ramprig.errors import RecordError
 from ramprig.record.events import from_rfc3339
 from ramprig.record.folder import CYCLES_FILE
 from ramprig.record.reading import read_cycles
-from ramprig.sequence.cycle_plan import HOUR_S, BlockSoFar
+from ramprig.sequence.cycle_plan import BlockSoFar
 from ramprig.sequence.cycle_run import CycleOutcome, PastStarts
 from ramprig.sequence.outcome import Counted
+from ramprig.sequence.spacing import HOUR_S
 
 Line = Mapping[str, Any]  # JSON as it comes: what is in it is checked where it is used
 

@@ -125,10 +125,8 @@ def _hazards(bench: Bench, sequence: Sequence, plan: Plan) -> Iterator[str]:
         yield f"motor '{name}' turns at up to {format_duty(duty)} of full drive, both ways if the test says so"
     for servo in bench.servos:
         yield f"servo '{servo.name}' moves between {servo.low_deg:g} deg and {servo.high_deg:g} deg"
-    rests = [part.rest for part in plan.cycles if part.rest]
-    pauses = f", also after a rest of {format_duration(max(rests) * plan.tick_us / 1e6)}" if rests else ""
-    hours = any(part.starts_per_hour is not None for part in plan.cycles)
-    pauses += ", or of up to an hour, as starts per hour are limited" if hours else ""
+    longest = max((pause for part in plan.cycles for pause in (part.pause, part.check_pause)), default=0)
+    pauses = f", also after a pause of {format_duration(longest * plan.tick_us / 1e6)}" if longest else ""
     yield f"everything starts by itself and without warning{pauses}"
     policy = sequence.interruptions
     if policy.resumes:
@@ -153,7 +151,7 @@ def _isolate(bench: Bench) -> Iterator[str]:
 def _normal(plan: Plan) -> Iterator[str]:
     for part in plan.cycles:
         length = format_duration(part.later.totals.least * plan.tick_us / 1e6)
-        rest = f", then rests {format_duration(part.rest * plan.tick_us / 1e6)}" if part.rest else ""
+        rest = f", then rests {format_duration(part.pause * plan.tick_us / 1e6)}" if part.pause else ""
         yield f"each '{part.name}' takes about {length}{rest}"
     texts = list(dict.fromkeys(_judged(plan.root)))
     yield from texts[:NORMAL_MAX]

@@ -17,9 +17,9 @@ from .names import CYCLE_BEGIN
 from .plan import Branches, Cycles, Judge, Loop, Part, Series, Totals
 from .rig import Rig
 from .scene import Scene
+from .spacing import HOUR_S, TurnBound, least_ticks, most_ticks_a_turn, share_ticks
 from .steps import Cycle, Step
 
-HOUR_S = 3600
 TURN_REACTION_S = Fraction(1, 2)
 """From the end of a cycle until the next may begin, where there is no rest: its samples must come, the disk must hold
 the count."""
@@ -87,11 +87,9 @@ def compile_cycles(
     checks = [part for part in (walked.first_check, walked.check) if part is not None]
     starts, check_starts = _most_starts(bodies), _most_starts(checks)
     _check_starts(step, starts, check_starts)
-    times = step.times
-    text = _text(rig, step, rest)
     part = Cycles(
         mark=step.mark,
-        text=text,
+        text="",
         totals=Totals(),
         block=block,
         name=step.name,
@@ -102,16 +100,19 @@ def compile_cycles(
         later=walked.later,
         checked=walked.checked or walked.later,
         check_every=step.check_every,
-        times=times,
+        times=step.times,
         for_ticks=for_ticks,
         rest=rest,
+        pause=rest,
+        check_pause=rest,
         starts_per_hour=step.starts_per_hour,
         starts=starts,
         check_starts=check_starts,
         failed_most=step.failed_most,
         confirmed=all(_confirms(body) for body in bodies),
     )
-    return _with_totals(rig, part, so_far)
+    part = _with_pauses(rig, part)
+    return _with_totals(rig, replace(part, text=_text(rig, step, part)), so_far)
 
 
 def _walk(rig: Rig, series: SeriesMaker, step: Cycle, scene: Scene) -> _Walked:
@@ -178,16 +179,34 @@ def _confirms(part: Part) -> bool:
             return False
 
 
-def _text(rig: Rig, step: Cycle, rest: int) -> str:
+def _text(rig: Rig, step: Cycle, part: Cycles) -> str:
     length = f"x {step.times}" if step.for_s is None else f"for {format_duration(step.for_s)}"
     text = f"cycle '{step.name}' {length}"
-    if rest:
-        text += f", rest {rig.show(rest)}"
+    if part.rest:
+        text += f", rest {rig.show(part.rest)}"
     if step.starts_per_hour is not None:
         text += f", at most {step.starts_per_hour} starts per hour"
+        if part.pause > part.rest:
+            pitch = _turns(part, 1, 0, most=False)[0].ticks + part.pause
+            text += f" (one every {format_duration(round(pitch * rig.tick_us / 1e6, 1))})"
     if step.check_every is not None:
         text += f", check every {step.check_every}"
     return text
+
+
+def _with_pauses(rig: Rig, part: Cycles) -> Cycles:
+    """The block with the pauses that spacing its starts leads to."""
+    per_hour = part.starts_per_hour
+    if per_hour is None:
+        return part
+    hour = int(rig.ticks(Fraction(HOUR_S)))
+    pauses = [part.rest, part.rest]
+    for place, turn in enumerate(_turns(part, 1, 1, most=False)):
+        for count in turn.starts.values():
+            if count:
+                share = share_ticks(count, per_hour=per_hour, ticks=turn.ticks, hour=hour)
+                pauses[place] = max(pauses[place], share - turn.ticks)
+    return replace(part, pause=pauses[0], check_pause=pauses[1])
 
 
 def _with_totals(rig: Rig, part: Cycles, begun: BlockSoFar | None) -> Cycles:
@@ -195,46 +214,61 @@ def _with_totals(rig: Rig, part: Cycles, begun: BlockSoFar | None) -> Cycles:
     so_far = begun or BlockSoFar()
     reaction = int(rig.ticks(TURN_REACTION_S))
     hour = int(rig.ticks(Fraction(HOUR_S)))
+    left = 0
     body_least = min(part.first.totals.least, part.later.totals.least, part.checked.totals.least)
-    body_most = max(part.first.totals.most, part.later.totals.most, part.checked.totals.most)
     if part.times is not None:
         count = max(0, part.times - so_far.done)
     else:
         assert part.for_ticks is not None  # a cycle says how often or for how long
         left = max(0, part.for_ticks - int(so_far.run_s * 1_000_000 / rig.tick_us))
-        count = -(-left // max(1, body_least + part.rest))
+        count = -(-left // max(1, body_least + part.pause))
     before = part.before.totals if part.before is not None else Totals()
     check = part.check.totals if part.check is not None else Totals()
     checks = 0 if part.check_every is None else 1 + count // part.check_every
-    rests = (count + checks) * part.rest
     whole = before.then(part.later.totals.times(count)).then(check.times(checks))
-    least = whole.least + max(0, rests - part.rest)
-    most = before.most + count * body_most + checks * check.most + rests + (count + checks) * reaction
-    least, most = _with_guard(part, count, checks, hour, least, most, resumed=begun is not None)
+    least = whole.least + max(0, count + checks - 1) * part.rest
+    if part.starts_per_hour is not None:
+        spaced = least_ticks(_turns(part, count, checks, most=False), per_hour=part.starts_per_hour, hour=hour)
+        least = max(least, before.least + spaced)
+    most = before.most + _most(part, count, checks, reaction, hour) + _most_of_past(part, before, hour, begun=begun)
     if part.for_ticks is not None:
-        # a cycle begins only while less than `for` has been run, whatever it waits for
-        most = before.most + left + body_most + check.most + 2 * part.rest + 2 * reaction + hour
-        least = min(most, max(least, left))
+        # a cycle begins only while less than `for` has been run, whatever it waits for; a check may wait once more
+        body_most = max(body.totals.most for body in (part.first, part.later, part.checked))
+        most = before.most + left + body_most + check.most + 2 * part.rest + 2 * reaction
+        most += hour if part.starts_per_hour is not None and any(part.check_starts.values()) else 0
+        least = min(most, max(before.least, before.least + left - part.pause))
     totals = replace(whole, least=least, most=max(least, most), waits=whole.waits + count + checks)
     return replace(part, totals=totals)
 
 
-def _with_guard(
-    part: Cycles, count: int, checks: int, hour: int, least: int, most: int, *, resumed: bool
-) -> tuple[int, int]:
-    """The times with the waits for the starts per hour: whole hours of which each allows so many starts.
+def _turns(part: Cycles, count: int, checks: int, *, most: bool) -> list[TurnBound]:
+    """The cycles and checks of a block, each as long as it can be or as short."""
+    bodies = [body.totals for body in (part.first, part.later, part.checked)]
+    ticks = max(body.most for body in bodies) if most else min(body.least for body in bodies)
+    turns = [TurnBound(count=count, starts=part.starts, ticks=ticks)]
+    if part.check is not None:
+        check = part.check.totals.most if most else part.check.totals.least
+        turns.append(TurnBound(count=checks, starts=part.check_starts, ticks=check))
+    return turns
 
-    In a run that is `resumed` the first hour's may have been used up before.
-    """
+
+def _most(part: Cycles, count: int, checks: int, reaction: int, hour: int) -> int:
+    """So long take so many cycles and checks with all their waits, at the longest."""
+    turns = _turns(part, count, checks, most=True)
+    total = 0
+    for turn in turns:
+        pitch = turn.ticks + part.rest + reaction
+        if part.starts_per_hour is not None:
+            spaced = most_ticks_a_turn(turns, turn, per_hour=part.starts_per_hour, hour=hour)
+            pitch = max(pitch, spaced + reaction)
+        total += turn.count * pitch
+    return total
+
+
+def _most_of_past(part: Cycles, before: Totals, hour: int, *, begun: BlockSoFar | None) -> int:
+    """How long the first turn may wait for starts that came before it: of a part of the run that was interrupted, of
+    an earlier block, of `before`."""
     if part.starts_per_hour is None:
-        return least, most
-    names = part.starts.keys() | part.check_starts.keys()
-    starts = max(
-        (count * part.starts.get(name, 0) + checks * part.check_starts.get(name, 0) for name in names), default=0
-    )
-    turn = max([*part.starts.values(), *part.check_starts.values()], default=1)
-    usable = max(1, part.starts_per_hour - turn + 1)  # a turn begins only when all its starts are allowed
-    body = max(part.first.totals.most, part.later.totals.most, part.checked.totals.most)
-    least = max(least, max(0, -(-starts // part.starts_per_hour) - 1) * hour)
-    waits = max(0, starts - 1) // usable + resumed
-    return least, most + waits * (hour + body)
+        return 0
+    earlier = begun is not None or part.block > 1 or any(before.starts.values())
+    return hour if earlier else 0

@@ -10,17 +10,20 @@ So whatever breaks off, what has really been done is at least the count of cycle
 
 from __future__ import annotations
 
-from collections import deque
+import math
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field, replace
 from enum import StrEnum
 
-from .cycle_plan import HOUR_S, BlockSoFar
+from .cycle_plan import BlockSoFar
 from .happened import BlockOver, CheckBegun, CheckDone, CycleBegun, CycleCommanded, CycleDone, CycleInterrupted
 from .outcome import Counted, Judged
 from .plan import Cycles
+from .spacing import StartsGuard
 from .strands import Turn
 
+ROUNDING_TICKS = 1e-3
+"""A begin reckoned in s may be off by so much of a tick."""
 FOUND_MAX = 20
 """Confirmations of one cycle whose findings are written down."""
 
@@ -59,42 +62,6 @@ class RunSoFar:
     first_failure: str = ""
     open_number: int | None = None
     open_block: int = 0
-
-
-class StartsGuard:
-    """Remembers the starts of each motor for an hour; times in s on one axis, not decreasing."""
-
-    def __init__(self) -> None:
-        self._starts: dict[str, deque[tuple[float, int]]] = {}
-
-    def note(self, starts: Mapping[str, int], at_s: float) -> None:
-        """These starts were over at `at_s`."""
-        for motor, count in starts.items():
-            past = self._starts.setdefault(motor, deque())
-            if count:
-                past.append((at_s, count))
-            _forget(past, at_s)
-
-    def earliest_s(self, starts: Mapping[str, int], now_s: float, *, per_hour: int) -> float:
-        """When a turn with these starts may begin, `now_s` or later, with at most `per_hour` in any 60 minutes."""
-        return max((self._earliest_s(motor, count, now_s, per_hour) for motor, count in starts.items()), default=now_s)
-
-    def _earliest_s(self, motor: str, count: int, now_s: float, per_hour: int) -> float:
-        past = self._starts.setdefault(motor, deque())
-        _forget(past, now_s)
-        excess = sum(number for _, number in past) + count - per_hour
-        earliest_s = now_s
-        for at_s, number in past:
-            if excess <= 0:
-                break
-            excess -= number
-            earliest_s = at_s + HOUR_S
-        return earliest_s
-
-
-def _forget(past: deque[tuple[float, int]], now_s: float) -> None:
-    while past and past[0][0] <= now_s - HOUR_S:
-        past.popleft()
 
 
 @dataclass(slots=True)
@@ -143,6 +110,8 @@ class CycleBook:
         self._begin_tick = 0
         self._since_check: int | None = None
         self._turned = False
+        self.pause = 0
+        """Planned between the turn that was closed last and the next one, in ticks."""
         if so_far.open_number is not None:
             write(
                 CycleInterrupted(
@@ -190,16 +159,17 @@ class CycleBook:
             return Due(Turn.CHECK, self._allowed(part.check_starts, earliest))
         if part.times is not None and self._block.done >= part.times:
             return Due(Turn.OVER, tick)
-        if part.for_ticks is not None and self._run_s(tick) >= part.for_ticks * self._tick_s:
+        allowed = self._allowed(part.starts, earliest)
+        if part.for_ticks is not None and self._run_s(allowed) >= part.for_ticks * self._tick_s:
             return Due(Turn.OVER, tick)
-        return Due(Turn.CYCLE, self._allowed(part.starts, earliest))
+        return Due(Turn.CYCLE, allowed)
 
     def _allowed(self, starts: Mapping[str, int], earliest: int) -> int:
         per_hour = self._known_part().starts_per_hour
         if self._guard is None or per_hour is None:
             return earliest
         allowed_s = self._guard.earliest_s(starts, earliest * self._tick_s, per_hour=per_hour)
-        return max(earliest, round(allowed_s / self._tick_s))
+        return max(earliest, math.ceil(allowed_s / self._tick_s - ROUNDING_TICKS))
 
     def _run_s(self, tick: int) -> float:
         return self._block.run_s + (tick - self._begin_tick) * self._tick_s
@@ -248,8 +218,10 @@ class CycleBook:
         assert turn.begin_tick is not None  # and it has begun
         self._under_way = None
         starts = part.check_starts if turn.turn is Turn.CHECK else part.starts
+        self.pause = part.check_pause if turn.turn is Turn.CHECK else part.pause
         if self._guard is not None:
-            self._guard.note(starts, tick * self._tick_s)
+            took_s = (tick - turn.begin_tick) * self._tick_s
+            self._guard.note(starts, tick * self._tick_s, took_s=took_s)
         if turn.turn is Turn.CHECK:
             self._since_check = 0
             self._write(

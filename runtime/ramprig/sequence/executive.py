@@ -455,7 +455,7 @@ class Executive:
             book.finish_block(ask.tick)
         else:
             heapq.heappush(self._agenda, (at, next(self._number), TurnBegun(at)))
-        self._waited += at - ask.tick - (ask.part.rest if due.tick > ask.tick else 0)
+        self._waited += at - ask.tick - (book.pause if due.tick > ask.tick else 0)
         self._resume(strand, Resumed(at, turn=due.turn))
         return True
 

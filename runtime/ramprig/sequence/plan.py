@@ -220,8 +220,9 @@ class Cycles(Part):
 
     A part may depend on what came before it, so there are several of each: `first` follows the first check or
     `before`, `later` another cycle, `checked` a check. `starts` are the departures from zero in one cycle, the greatest
-    number of any of these parts, by motor; `check_starts` those of a check. `confirmed` tells whether the cycle has a
-    `confirm` at all.
+    number of any of these parts, by motor; `check_starts` those of a check. `pause` and `check_pause` are planned
+    between the end of a cycle or check and the next turn: the rest, or longer where starts are spaced. `confirmed`
+    tells whether the cycle has a `confirm` at all.
     """
 
     block: int
@@ -236,6 +237,8 @@ class Cycles(Part):
     times: int | None
     for_ticks: int | None
     rest: int
+    pause: int
+    check_pause: int
     starts_per_hour: int | None
     starts: Mapping[str, int]
     check_starts: Mapping[str, int]
