@@ -64,7 +64,7 @@ def main() -> None:
             handed += len(block)
             if number % 10 == 0:
                 recorder.on_event(GapFilled(tick=int(block.ticks[0]), host_s=clock.now(), count=0))
-            say("rows", handed, recorder._samples.lines - 1, recorder._samples.synced_lines - 1)
+            say("rows", handed, recorder._samples.written_rows, recorder._samples.synced_rows)
             if number % 64 == 63:
                 recorder._writer._queue.join()  # stays below the bound of the queue, and lets the two race in between
     except RecordError:

@@ -18,9 +18,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ramprig.errors import RecordError
-from ramprig.record.folder import SAMPLES_FILE
-from ramprig.record.reading import read_cycles, read_manifest
-from ramprig.record.scan import Piece, Scan
+from ramprig.record.reading import files_by_part, read_cycles, read_manifest
+from ramprig.record.scan import Piece
+from ramprig.record.volumes import Stream
 
 Floats = NDArray[np.float64]
 Line = Mapping[str, Any]  # JSON as it comes: what is in it is checked where it is used
@@ -166,12 +166,8 @@ def cycle_features(folder: Path) -> Iterator[CycleFeatures]:
     walk = FeatureWalk(names, spans_of(lines), tick_us=int((manifest.get("clocks") or {}).get("tick_us") or 1000))
     if not walk.spans:
         return
-    for entry in manifest.get("parts") or [{"part": 1}]:
-        path = folder / str(entry.get("samples_file") or SAMPLES_FILE)
-        if not path.is_file():
-            continue
-        part = int(entry.get("part") or 1)
-        for piece in Scan(path, columns=walk.columns):
+    for part, paths in files_by_part(manifest, folder).items():
+        for piece in Stream(paths, columns=walk.columns):
             yield from walk.take(part, piece)
         yield from walk.close_part(part)
 

@@ -20,9 +20,10 @@ import numpy as np
 
 from ..errors import RecordError, UsageError
 from ..extras import need
-from .folder import SAMPLES_FILE
+from .parts import parts_of
 from .reading import read_manifest
-from .scan import WORD_COLUMNS, Piece, Scan
+from .scan import WORD_COLUMNS, Piece
+from .volumes import Stream, volume_names
 
 if TYPE_CHECKING:
     from types import ModuleType
@@ -62,25 +63,27 @@ def export_run(
 ) -> list[Exported]:
     """Write the samples of a run to `out`, its own folder where None; one file for each part of the run, or more.
 
+    The volumes of a part come together in one.
+
     Raises RecordError where the run cannot be read or the file not be written, PackageMissing without its package.
     """
     manifest = read_manifest(folder)
-    names = [str(part.get("samples_file") or SAMPLES_FILE) for part in manifest.get("parts") or [{}]]
     target = out or folder
     done: list[Exported] = []
     try:
         target.mkdir(parents=True, exist_ok=True)
-        for name in names:
-            path = folder / name
-            if not path.is_file():
-                raise RecordError(f"{path} is missing")
-            stem = path.stem
+        for part in parts_of(manifest):
+            paths = [folder / name for name in volume_names(folder, part)]
+            for path in paths:
+                if not path.is_file():
+                    raise RecordError(f"{path} is missing")
+            stem = paths[0].stem
             if to is To.PARQUET:
-                done.append(_parquet(Scan(path, piece_bytes=PIECE_BYTES), target / f"{stem}.parquet", manifest))
+                done.append(_parquet(Stream(paths, piece_bytes=PIECE_BYTES), target / f"{stem}.parquet", manifest))
             elif to is To.MDF4:
-                done.append(_mdf4(Scan(path, piece_bytes=PIECE_BYTES), target / f"{stem}.mf4", manifest))
+                done.append(_mdf4(Stream(paths, piece_bytes=PIECE_BYTES), target / f"{stem}.mf4", manifest))
             else:
-                done += _sheets(path, target, mark, sheet_rows)
+                done += _sheets(paths, target, mark, sheet_rows)
     except OSError as error:
         raise RecordError(f"the export cannot be written in {target}: {error.strerror or error}") from error
     return done
@@ -106,7 +109,7 @@ def unit_of(column: str) -> str:
 # ---- Parquet --------------------------------------------------------------------------------------------------------
 
 
-def _parquet(scan: Scan, path: Path, manifest: dict[str, Any]) -> Exported:  # Any: JSON as it comes
+def _parquet(scan: Stream, path: Path, manifest: dict[str, Any]) -> Exported:  # Any: JSON as it comes
     arrow: Any = need("pyarrow", purpose="the export to Parquet")  # Any, here and below: the package has no types
     parquet: Any = need("pyarrow.parquet", purpose="the export to Parquet")
     schema = _schema(arrow, scan.names, manifest)
@@ -142,7 +145,7 @@ def _column(piece: Piece, name: str) -> Any:
 # ---- text for spreadsheets -----------------------------------------------------------------------------------------
 
 
-def _sheets(path: Path, target: Path, mark: Mark, sheet_rows: int) -> list[Exported]:
+def _sheets(paths: Sequence[Path], target: Path, mark: Mark, sheet_rows: int) -> list[Exported]:
     """UTF-16 with its byte-order mark, little-endian: the text that spreadsheets take in any locale.
 
     `point` has tabs between the fields, `comma` semicolons. Each file has a header and stays within `sheet_rows`.
@@ -150,12 +153,12 @@ def _sheets(path: Path, target: Path, mark: Mark, sheet_rows: int) -> list[Expor
     if sheet_rows < 2:
         raise UsageError(f"a sheet of {sheet_rows} rows cannot hold a header and a row")
     done: list[Exported] = []
-    rows = _sheet_rows(path, mark)
+    rows = _sheet_rows(paths, mark)
     header = next(rows)
     row = next(rows, None)
     while row is not None or not done:
         number = f"-{len(done) + 1}" if done else ""
-        file_path = target / f"{path.stem}-excel{number}.csv"
+        file_path = target / f"{paths[0].stem}-excel{number}.csv"
         count = 0
         with _in_place(file_path) as part, open(part, "w", encoding="utf-16-le", newline="") as file:
             file.write("\ufeff" + header)
@@ -167,22 +170,23 @@ def _sheets(path: Path, target: Path, mark: Mark, sheet_rows: int) -> list[Expor
     return done
 
 
-def _sheet_rows(path: Path, mark: Mark) -> Iterator[str]:
-    """The header and each row, as text with its end."""
-    with open(path, encoding="utf-8", newline="") as file:
-        for line in file:
-            if not line.endswith("\n"):
-                return  # a torn last row
-            if mark is Mark.COMMA:
-                yield line.replace(",", ";").replace(".", ",") if line[:1].isdigit() else line.replace(",", ";")
-            else:
-                yield line.replace(",", "\t")
+def _sheet_rows(paths: Sequence[Path], mark: Mark) -> Iterator[str]:
+    """The header once and each row, as text with its end."""
+    for path in paths:
+        with open(path, encoding="utf-8", newline="") as file:
+            header = file.readline()
+            if path is paths[0]:
+                yield header.replace(",", ";" if mark is Mark.COMMA else "\t")
+            for line in file:
+                if not line.endswith("\n"):
+                    break  # a torn last row
+                yield line.replace(",", ";").replace(".", ",") if mark is Mark.COMMA else line.replace(",", "\t")
 
 
 # ---- MDF 4 ----------------------------------------------------------------------------------------------------------
 
 
-def _mdf4(scan: Scan, path: Path, manifest: dict[str, Any]) -> Exported:  # Any: JSON as it comes
+def _mdf4(scan: Stream, path: Path, manifest: dict[str, Any]) -> Exported:  # Any: JSON as it comes
     module: ModuleType = need("asammdf", purpose="the export to MDF 4")
     asammdf: Any = module
     pieces = list(scan)

@@ -2,7 +2,7 @@
 
     runs/20260301T083000Z-vent-endurance-3fa9c2/
         run.json        what, when, with what, verdict and account; replaced in one step at the start and at the end
-        samples.csv     every sample
+        samples.csv     every sample, up to a million; then samples.0002.csv and so on (see `volumes.py`)
         events.jsonl    everything that happened
         trail.csv       the fast record around a trip, where there was one
         cycles.jsonl    the count of cycles, where the sequence has cycles
@@ -33,6 +33,7 @@ from ..errors import RecordError
 from .appendfile import AppendFile, Reserve, replace_file, sync_folder, write_new
 from .events import Json, from_rfc3339, jsonable
 from .parts import Document, Earlier, earlier_of
+from .volumes import OWN_NAME
 
 FORMAT = "ramprig run 1"
 RUN_FILE = "run.json"
@@ -124,7 +125,7 @@ class RunFolder:
         self.earlier: Earlier | None = None
         self.torn_bytes = 0
         self._reopened: dict[str, AppendFile] = {}
-        self._files: list[AppendFile] = []
+        self._files: list[AppendFile | dict[str, Json]] = []
         self._inputs: list[Json] = []
 
     @classmethod
@@ -183,7 +184,8 @@ class RunFolder:
     def _copy_inputs(self) -> None:
         used = {name.lower() for name in OWN_FILES}
         for given in self.description.inputs:
-            name = _free_name(Path(given.name).name or given.role, used)
+            name = Path(given.name).name or given.role
+            name = _free_name(f"{given.role}-{name}" if OWN_NAME.fullmatch(name) else name, used)
             used.add(name.lower())
             write_new(self.path / name, given.content)
             self._inputs.append(
@@ -201,6 +203,16 @@ class RunFolder:
         file = AppendFile(self.path / self.free_name(name))
         self._files.append(file)
         return file
+
+    def seal(self, file: AppendFile) -> None:
+        """Close a file that takes no more, and keep what `run.json` says of it."""
+        self._files[self._files.index(file)] = _entry_of(file)
+        file.close()
+
+    def drop(self, file: AppendFile) -> None:
+        """Close a file that could not be begun; `run.json` will not list it."""
+        self._files.remove(file)
+        file.close()
 
     def free_name(self, name: str) -> str:
         """The name that `new_file` would take."""
@@ -237,16 +249,25 @@ class RunFolder:
 
     def files(self) -> list[Json]:
         """The files written so far, each with its size and hash."""
-        earlier = [] if self.earlier is None else list(self.earlier.files)
-        return earlier + [
-            {"file": file.path.name, "bytes": file.size_bytes, "lines": file.lines, "sha256": file.sha256}
-            for file in self._files
+        return self._earlier_files() + [
+            _entry_of(file) if isinstance(file, AppendFile) else file for file in self._files
         ]
+
+    def closed_files(self) -> list[Json]:
+        """Those among them that will not change any more."""
+        return [*self._earlier_files(), *(file for file in self._files if not isinstance(file, AppendFile))]
+
+    def _earlier_files(self) -> list[Json]:
+        return [] if self.earlier is None else list(self.earlier.files)
 
     def write_manifest(self, contents: Mapping[str, Json]) -> None:
         """Replace `run.json` in one step; raises OSError, and then the old one stands."""
         text = json.dumps(contents, ensure_ascii=False, allow_nan=False, indent=2) + "\n"
         replace_file(self.path / RUN_FILE, text.encode("utf-8", errors="backslashreplace"))
+
+
+def _entry_of(file: AppendFile) -> dict[str, Json]:
+    return {"file": file.path.name, "bytes": file.size_bytes, "lines": file.lines, "sha256": file.sha256}
 
 
 def _new_folder(root: Path, stem: str) -> Path:

@@ -1,4 +1,4 @@
-"""The parts of a run that was interrupted and gone on with: each has its own samples file, clocks and account.
+"""The parts of a run that was interrupted and gone on with: each has its own samples files, clocks and account.
 
 A part never touches the rows of an earlier one: ticks begin anew when a board restarts, an account is exact only for
 what one recorder saw, and a file that only one recorder wrote can be checked. Events and cycles go on in one file.
@@ -13,13 +13,12 @@ from pathlib import Path
 from typing import Any
 
 from .events import Json
-from .scan import Scan
+from .volumes import SAMPLES_FIRST, Stream, volume_files, volume_names
 
 SUMS = ("expected", "received", "lost", "written", "unwritten", "gaps_unlisted")
 MORE_SUMS = ("asked_again", "recovered", "duplicates", "strange_lines")
 HEAD_KEYS = ("format", "run", "name", "software", "port", "device", "settings", "inputs", "started")
 PART_KEYS = ("clocks", "verdict", "stop_reason", "samples", "link", "results", "limits_digest", "disk_troubles")
-SAMPLES_FIRST = "samples.csv"
 CHUNK_BYTES = 1024 * 1024
 Document = dict[str, Any]  # JSON as it comes: what is in it is checked where it is used
 
@@ -51,6 +50,7 @@ def parts_of(manifest: Document) -> list[Document]:
     entry: Document = {
         "part": 1,
         "samples_file": SAMPLES_FIRST,
+        "samples_files": manifest.get("samples_files"),
         "status": manifest.get("status"),
         "started": manifest.get("started"),
         "ended": manifest.get("ended"),
@@ -70,10 +70,12 @@ def earlier_of(manifest: Document, folder: Path, interruption: Mapping[str, Json
     parts = parts_of(manifest)
     if parts[-1].get("status") != "finished":
         parts[-1] |= {"status": "broken off"}
+    parts[-1] |= {"samples_files": volume_names(folder, parts[-1])}
     known = {entry["file"]: entry for entry in manifest.get("files", [])}
     files: list[Json] = []
-    for path in sorted(folder.glob("samples*.csv")) + sorted(folder.glob("trail*.csv")):
-        if path.name not in going_on:
+    volumes = [folder / name for part in parts for name in volume_names(folder, part)]
+    for path in [*volumes, *sorted(folder.glob("trail*.csv"))]:
+        if path.name not in going_on and (path.name in known or path.exists()):
             entry = known.get(path.name)
             files.append(entry if entry is not None else file_entry(path))
     return Earlier(
@@ -81,27 +83,16 @@ def earlier_of(manifest: Document, folder: Path, interruption: Mapping[str, Json
         parts=parts,
         interruptions=[*manifest.get("interruptions", []), dict(interruption)],
         files=files,
-        last_time_s=_last_time_s([folder / str(part["samples_file"]) for part in parts]),
+        last_time_s=max([_last_time_s(volume_files(folder, part)) for part in parts], default=0.0),
     )
 
 
-def _last_time_s(paths: Sequence[Path]) -> float:
-    """The time of the last row of these samples files; 0 where there is none. Raises RecordError."""
-    found_s = 0.0
-    for path in paths:
-        if has_header(path):
-            times = Scan(path, columns=("time_s",)).tail().numbers["time_s"]
-            found_s = max(found_s, float(times[-1]) if len(times) else 0.0)
-    return found_s
-
-
-def has_header(path: Path) -> bool:
-    """Whether a samples file was begun: a part that broke off at once may have left none, or a piece of its header."""
-    try:
-        with open(path, "rb") as file:
-            return file.readline(CHUNK_BYTES).endswith(b"\n")
-    except FileNotFoundError:
-        return False
+def _last_time_s(volumes: Sequence[Path]) -> float:
+    """The time of the last row of a part; 0 where there is none. Raises RecordError."""
+    if not volumes:
+        return 0.0
+    times = Stream(volumes, columns=("time_s",)).tail().numbers["time_s"]
+    return float(times[-1]) if len(times) else 0.0
 
 
 def file_entry(path: Path) -> dict[str, Json]:

@@ -24,8 +24,8 @@ from numpy.typing import NDArray
 from ..errors import RecordError
 from .events import from_rfc3339
 from .folder import CYCLES_FILE, EVENTS_FILE, FORMAT, NOTES_FILE, RUN_FILE
-from .parts import has_header, parts_of, whole_account
-from .scan import read_ticks
+from .parts import parts_of, whole_account
+from .volumes import Stream, volume_files
 
 CHUNK_BYTES = 4 * 1024 * 1024
 EXAMPLES_MAX = 5  # ticks that a statement names
@@ -151,11 +151,15 @@ def read_manifest(folder: Path) -> Document:
 def sample_files(folder: Path) -> list[Path]:
     """The samples files of all parts of the run, in order; a part that broke off before its first row may lack its own.
 
-    Ticks of different files have nothing to do with each other where the board restarted between them; `time_s` goes
+    Ticks of different parts have nothing to do with each other where the board restarted between them; `time_s` goes
     on over all of them. Raises RecordError.
     """
-    paths = [folder / str(part["samples_file"]) for part in parts_of(read_manifest(folder))]
-    return [path for path in paths if has_header(path)]
+    return [path for paths in files_by_part(read_manifest(folder), folder).values() for path in paths]
+
+
+def files_by_part(manifest: Document, folder: Path) -> dict[int, list[Path]]:
+    """The samples files of each part by its number, both in order; only files that were begun."""
+    return {int(part["part"]): volume_files(folder, part) for part in parts_of(manifest)}
 
 
 def read_cycles(folder: Path) -> tuple[list[Document], int]:
@@ -250,10 +254,11 @@ def _events_by_part(events: list[Document], parts: int) -> list[list[Document]]:
 
 def _audit_part(folder: Path, entry: Document, events: list[Document], *, last: bool, several: bool) -> Audit:
     """One part of a run: its rows against its account, or against its events where it has none."""
-    path = folder / str(entry["samples_file"])
     where = f"part {entry['part']}: " if several else ""
     finished = entry.get("status") == "finished"
-    ticks, torn_bytes = read_ticks(path) if finished or has_header(path) else (np.empty(0, np.int64), 0)
+    stream = Stream(volume_files(folder, entry), columns=())
+    ticks = np.concatenate([np.empty(0, np.int64), *(piece.ticks for piece in stream)])
+    torn_bytes = stream.torn_bytes
     statements: list[str] = []
     if not finished and last:
         statements.append(_how_it_broke_off(ticks, events))

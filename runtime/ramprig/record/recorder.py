@@ -14,12 +14,14 @@ from ..session.blocks import Block
 from .appendfile import AppendFile, sync_folder
 from .columns import Columns
 from .events import Json, RunTime, encode_line, event_object, jsonable, rfc3339
-from .folder import CYCLES_FILE, EVENTS_FILE, SAMPLES_FILE, TRAIL_FILE, RunFolder, software
+from .folder import CYCLES_FILE, EVENTS_FILE, TRAIL_FILE, RunFolder, software
 from .manifest import Anchor, RunEnd, clocks, sample_account, speed_account
 from .parts import PART_KEYS, Earlier, whole_account
 from .rows import RowPrinter
 from .space import SpacePolicy, SpaceWatch, disk_free
 from .speed import SpeedMethod
+from .volumes import SAMPLES_FIRST, VolumeLimits
+from .volumewriter import VolumeWriter
 from .writer import SYNC_EVERY_S, DiskWriter, Trouble
 
 BATCH_ROWS = 1024
@@ -69,6 +71,15 @@ class RunResumed:
     torn_bytes: int
 
 
+@dataclass(frozen=True, slots=True, kw_only=True)
+class VolumeBegun:
+    """The samples from this tick on are in `samples_file`; the one before has `rows` rows and is closed."""
+
+    tick: int
+    samples_file: str
+    rows_before: int
+
+
 class Recorder:
     """The one who writes a run down. Blocks and events come from one thread; the disk is written by another one.
 
@@ -94,6 +105,7 @@ class Recorder:
         durable: bool | None = None,
         limits_digest: str = "",
         method: SpeedMethod | None = None,
+        volumes: VolumeLimits | None = None,
         space: SpacePolicy | None = None,
         free: Callable[[Path], int] = disk_free,
         sync_every_s: float = SYNC_EVERY_S,
@@ -119,10 +131,11 @@ class Recorder:
         self._finished = False
         self._cycles = folder.go_on(CYCLES_FILE)
         self._cycles_given = self._cycles_kept = 0
-        self._samples_name = folder.free_name(SAMPLES_FILE)
-        self._samples, self._events = self._begin_files()
+        self._samples_names: list[str] = []
+        self._events, self._samples = self._begin_files(volumes or VolumeLimits())
+        cycles = [] if self._cycles is None else [self._cycles]
         self._writer = DiskWriter(
-            [file for file in (self._samples, self._events, self._cycles) if file is not None],
+            [self._samples, self._events, *cycles],
             on_trouble=self._on_trouble,
             after_trouble=self._after_trouble,
             on_sync=self._on_sync,
@@ -140,18 +153,29 @@ class Recorder:
     def _new_printer(self, columns: Columns) -> RowPrinter:
         return RowPrinter(columns, tick_us=self._when.tick_us, tick_zero=self._when.tick_zero, method=self._method)
 
-    def _begin_files(self) -> tuple[AppendFile, AppendFile]:
+    def _begin_files(self, volumes: VolumeLimits) -> tuple[AppendFile, VolumeWriter]:
         try:
             events = self.folder.go_on(EVENTS_FILE) or self.folder.new_file(EVENTS_FILE)
             events.hold_alone()
+            self._samples_names = [self.folder.free_name(SAMPLES_FIRST)]
             self._write_manifest("running", None)
-            samples = self.folder.new_file(self._samples_name)
-            samples.append(self._printer.header())
-            samples.sync()
-            sync_folder(self.folder.path)
-            return samples, events
+            samples = VolumeWriter(
+                self.folder,
+                self._printer.header(),
+                limits=volumes,
+                tick_us=self._when.tick_us,
+                on_begun=self._on_volume,
+            )
+            self._samples_names = samples.names
+            return events, samples
         except OSError as error:
             raise RecordError(f"the run folder {self.folder.path} cannot be written: {error.strerror}") from error
+
+    def _on_volume(self, tick: int, rows_before: int) -> None:
+        """A further volume has begun: told in the events, and the hash of the one before kept in `run.json`."""
+        event = VolumeBegun(tick=tick, samples_file=self._samples.names[-1], rows_before=rows_before)
+        self._events.append(encode_line(event_object(event, when=self._when, host_s=self._clock.now())))
+        self._write_manifest("running", None)
 
     def _tell_resumed(self, part: int) -> None:
         start = self._start
@@ -160,7 +184,7 @@ class Recorder:
                 tick=start.tick,
                 host_s=start.host_s,
                 part=part,
-                samples_file=self._samples_name,
+                samples_file=self._samples.names[0],
                 torn_bytes=self.folder.torn_bytes,
             )
         )
@@ -188,7 +212,11 @@ class Recorder:
         batch, self._batch = self._batch, []
         self._batch_rows = 0
         if batch:
-            self._writer.submit(lambda: self._samples.append(self._printer.rows(batch)))
+            self._writer.submit(lambda: self._write_rows(batch))
+
+    def _write_rows(self, batch: Sequence[Block]) -> None:
+        for rows in self._printer.tables(batch):
+            self._samples.append(rows)
 
     def on_event(self, event: object) -> None:
         """Write down an event (a dataclass, see `events.py`), synced to the disk soon; never raises RecordError."""
@@ -283,9 +311,10 @@ class Recorder:
                 self._submit_batch()
         self._writer.close()
         self.folder.reserve.free()
-        for file in (self._samples, self._events, self._cycles):
-            if file is not None:
-                file.close()
+        self._samples.close()
+        self._events.close()
+        if self._cycles is not None:
+            self._cycles.close()
         try:
             self._write_manifest("finished", end)
         except OSError as error:
@@ -295,6 +324,7 @@ class Recorder:
     def _write_manifest(self, status: str, end: RunEnd | None) -> None:
         contents = self.folder.head()
         contents["status"] = status
+        contents["samples_files"] = list(self._samples_names)
         contents["started"] = rfc3339(self.folder.started_unix_s)
         contents["ended"] = rfc3339(self._clock.wall()) if end else None
         contents["verdict"] = end.verdict if end else None
@@ -308,6 +338,7 @@ class Recorder:
         contents["speed"] = speed_account(
             self.columns, self._method, tick_us=self._when.tick_us, periods_ticks=sorted(self._periods_ticks)
         )
+        contents["files"] = self.folder.closed_files() if end is None else self.folder.files()
         if end is not None:
             contents |= self._end_of(end)
         if self.folder.earlier is not None:
@@ -320,7 +351,8 @@ class Recorder:
         about = self.folder.description
         part: dict[str, Json] = {
             "part": earlier.number,
-            "samples_file": self._samples_name,
+            "samples_file": self._samples_names[0],
+            "samples_files": list(self._samples_names),
             "status": contents["status"],
             "started": rfc3339(self._start.unix_s),
             "ended": contents["ended"],
@@ -337,11 +369,10 @@ class Recorder:
 
     def _end_of(self, end: RunEnd) -> dict[str, Json]:
         account = sample_account(
-            end.accounts, received_rows=self._received_rows, written_rows=max(0, self._samples.lines - 1)
+            end.accounts, received_rows=self._received_rows, written_rows=self._samples.written_rows
         )
         return {
             "samples": account,
             "link": jsonable(end.link),
             "results": jsonable(end.results),
-            "files": self.folder.files(),
         }

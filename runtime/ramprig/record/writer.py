@@ -14,9 +14,9 @@ import time
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from enum import StrEnum
+from typing import Protocol
 
 from ..errors import RecordError
-from .appendfile import AppendFile
 
 QUEUE_MAX = 512
 """Jobs that may wait for the disk: at one data line each 20 ms some ten seconds; then the run ends with `queue
@@ -74,6 +74,13 @@ def trouble_of(error: OSError) -> Trouble:
     return Trouble(TroubleKind.DISK_ERROR, f"the disk cannot be written: {error.strerror or error}{where}")
 
 
+class Syncable(Protocol):
+    """Something on the disk that is written piece by piece."""
+
+    def sync(self) -> None:
+        """Have the disk itself hold what was written. Raises OSError."""
+
+
 @dataclass(frozen=True, slots=True)
 class _Job:
     work: Callable[[], None]
@@ -94,7 +101,7 @@ class DiskWriter:
 
     def __init__(
         self,
-        files: Sequence[AppendFile],
+        files: Sequence[Syncable],
         *,
         on_trouble: Callable[[Trouble], None],
         after_trouble: Callable[[Trouble], None],
@@ -253,6 +260,6 @@ class DiskWriter:
             self._last_sync_s = self._now()
             self.tell(trouble_of(error))
 
-    def add_file(self, file: AppendFile) -> None:
+    def add_file(self, file: Syncable) -> None:
         """Sync this file too from now on; to be called from a job."""
         self._files.append(file)

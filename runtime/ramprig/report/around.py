@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 from ramprig.bench import Motor
 from ramprig.errors import RecordError
 from ramprig.record.scan import Piece, Scan
+from ramprig.record.volumes import Stream
 
 from .facts import Facts
 
@@ -180,11 +181,11 @@ def around(facts: Facts, motor: str, tick: int, *, time_s: float | None) -> Arou
 
     `time_s` is the tick's time in the run, to find it where ticks begin anew in later parts.
     """
-    files = facts.sample_files
+    files = facts.last_files
     if not files:
         return None
     try:
-        tail = Scan(files[-1]).tail()
+        tail = Stream(files).tail()
     except RecordError:
         return None
     if time_s is not None and "time_s" in tail.numbers:

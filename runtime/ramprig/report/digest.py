@@ -11,7 +11,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ramprig.endure.features import CycleFeatures, FeatureWalk, spans_of
-from ramprig.record.scan import Piece, Scan
+from ramprig.record.scan import Piece
+from ramprig.record.volumes import Stream
 
 from .envelope import INTERVALS_MAX, Band, Envelope
 from .facts import Facts
@@ -125,9 +126,9 @@ def digest_samples(facts: Facts) -> Digest:
     curves = {motor: _CurveWalk(digest, motor) for motor in facts.motors if f"{motor}.speed_rpm" in columns}
     aged = FeatureWalk(facts.columns, spans_of(facts.cycles), tick_us=facts.tick_us)
     offset_s = 0.0
-    for part, path in facts.files_of_parts:
-        scan = Scan(path, columns={"time_s", *columns, *(aged.columns if aged.spans else ())})
-        for piece in scan:
+    for part, paths in facts.files_of_parts.items():
+        stream = Stream(paths, columns={"time_s", *columns, *(aged.columns if aged.spans else ())})
+        for piece in stream:
             _keep_features(digest, aged.take(part, piece))
             for servo in facts.servos:
                 _blank_zero(piece.numbers[f"{servo}.pulse_us"])
@@ -140,7 +141,7 @@ def digest_samples(facts: Facts) -> Digest:
             for walk in curves.values():
                 walk.take(times, piece)
         _keep_features(digest, aged.close_part(part))
-        digest.torn_bytes += scan.torn_bytes
+        digest.torn_bytes += stream.torn_bytes
     digest.intervals = table.rows()
     digest.totals = table.totals()
     return digest

@@ -187,12 +187,12 @@ def _restarted(facts: Facts, event: Document) -> Iterator[Cause]:
 def _last_moment(facts: Facts, event: Document) -> tuple[int, float | None]:
     """The last tick before a restart: the tick of the event is of the new start."""
     from ramprig.errors import RecordError
-    from ramprig.record.scan import Scan
+    from ramprig.record.volumes import Stream
 
     del event
     try:
-        tail = Scan(facts.sample_files[-1], columns=["time_s"]).tail(4096)
-    except (RecordError, IndexError):
+        tail = Stream(facts.last_files, columns=["time_s"]).tail(4096)
+    except RecordError:
         return 0, None
     if not len(tail):
         return 0, None

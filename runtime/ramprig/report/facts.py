@@ -12,7 +12,7 @@ from typing import Any
 from ramprig.bench import Bench, bench_of_text
 from ramprig.errors import FileError, RecordError
 from ramprig.record.folder import EVENTS_FILE, SAMPLES_FILE
-from ramprig.record.reading import read_manifest
+from ramprig.record.reading import files_by_part, read_manifest
 
 Document = dict[str, Any]  # JSON as it comes: what is in it is checked where it is used
 
@@ -121,15 +121,14 @@ class Facts:
         return list(self.manifest.get("parts") or [whole])
 
     @property
-    def sample_files(self) -> list[Path]:
-        """The samples files that are there, in the order of the parts."""
-        return [path for _, path in self.files_of_parts]
+    def files_of_parts(self) -> dict[int, list[Path]]:
+        """The samples files that are there, of each part by its number, in order."""
+        return files_by_part(self.manifest, self.folder)
 
     @property
-    def files_of_parts(self) -> list[tuple[int, Path]]:
-        """The same, each after the number of its part."""
-        names = [(int(part.get("part") or 1), str(part.get("samples_file") or SAMPLES_FILE)) for part in self.parts]
-        return [(part, self.folder / name) for part, name in names if (self.folder / name).is_file()]
+    def last_files(self) -> list[Path]:
+        """The samples files of the last part that has any."""
+        return next((paths for paths in reversed(self.files_of_parts.values()) if paths), [])
 
     @property
     def tick_us(self) -> int:
