@@ -9,6 +9,7 @@ from pathlib import Path
 import pytest
 import toolchain
 from dev.build_firmware import PORT, Measured, baud_error_permille, measure
+from dev.emulated_board import EmulatedBoard
 
 from avr_builds import WHY_NOT, emulator, program
 
@@ -48,6 +49,17 @@ def test_the_firmware_keeps_its_budget(name: str) -> None:
 @pytest.mark.process
 def test_the_program_leaves_room_on_the_chip() -> None:
     assert figures()["flash"].value <= 30 * 1024
+
+
+@needs_avr
+@pytest.mark.process
+@pytest.mark.parametrize("options", [(), ("-O2",)], ids=["as it is", "for speed"])
+def test_tables_in_flash_are_read_from_flash_at_any_optimisation(options: tuple[str, ...]) -> None:
+    """See "A bug of the compiler" in the port's README."""
+    with EmulatedBoard(emulator(), program(*options)) as board:
+        board.run_us(20_000)
+        for (name, index), value in board.limits.items():
+            assert board.ask(f"limit {name} {index}")[2:] == [str(value)], (name, index)
 
 
 @needs_cc
