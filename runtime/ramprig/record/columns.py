@@ -26,7 +26,7 @@ class MotorColumns:
     `duty_sign` is -1 where the user's forward is the device's backward, and turns duty and current over. `count_sign`
     is -1 where the counts fall while the motor turns in the user's forward direction, and turns position and speed
     over. The counts themselves are always logged as the device tells them, so that a wrong constant can be mended
-    afterwards.
+    afterwards. `on_output` says that the encoder sits on the output shaft, behind the play of the gear.
     """
 
     name: str
@@ -34,6 +34,7 @@ class MotorColumns:
     counts_per_rev: float
     duty_sign: int = 1
     count_sign: int = 1
+    on_output: bool = False
 
 
 @dataclass(frozen=True, slots=True)
@@ -100,13 +101,17 @@ class TurnsField:
 
 @dataclass(frozen=True, slots=True)
 class SpeedField:
-    """Speed of the output shaft, estimated from the counts; empty while it is not known."""
+    """Speed of the output shaft, estimated from the counts; empty while it is not known.
+
+    `on_output` says where the encoder sits: it does not change the estimate, but what can be told from it.
+    """
 
     name: str
     channel: ChannelKey
     counts_per_rev: float
     sign: int
     decimals: int = 3
+    on_output: bool = False
 
 
 @dataclass(frozen=True, slots=True)
@@ -142,6 +147,11 @@ class Columns:
     def speeds(self) -> tuple[SpeedField, ...]:
         """The columns that need a speed estimator."""
         return tuple(field for field in self.fields if isinstance(field, SpeedField))
+
+    @property
+    def on_output(self) -> frozenset[str]:
+        """The motors whose encoder sits on the output shaft."""
+        return frozenset(field.name.rpartition(".")[0] for field in self.speeds if field.on_output)
 
     def only(self, channels: Collection[ChannelKey]) -> Columns:
         """The columns that these channels fill, tick and time among them."""
@@ -186,7 +196,7 @@ def _motor_fields(motor: MotorColumns) -> list[Field]:
         ScaledField(f"{name}.duty_pct", ("duty", axis), motor.duty_sign / 100, 2),
         CountsField(f"{name}.counts", counts),
         TurnsField(f"{name}.position_rev", counts, per_rev, sign, turns_decimals(per_rev)),
-        SpeedField(f"{name}.speed_rpm", counts, per_rev, sign),
+        SpeedField(f"{name}.speed_rpm", counts, per_rev, sign, on_output=motor.on_output),
         ScaledField(f"{name}.current_a", ("current_ma", axis), motor.duty_sign / 1000, 3),
     ]
 

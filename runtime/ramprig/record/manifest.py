@@ -74,8 +74,12 @@ def _anchor(anchor: Anchor) -> dict[str, Json]:
     }
 
 
-def sample_account(accounts: Sequence[Accounting], *, received_rows: int, written_rows: int) -> dict[str, Json]:
-    """Where every sample of the run is: expected = received + lost, received = written + unwritten.
+def sample_account(
+    accounts: Sequence[Accounting], *, received_rows: int, written_rows: int, thinned_rows: int = 0
+) -> dict[str, Json]:
+    """Where every sample of the run is: expected = received + lost, received = written + thinned + unwritten.
+
+    Thinned rows were left out as the sequence wants it, unwritten ones because the disk would not take them.
 
     `complete` is true where the device confirmed for every logging how many it made. Without accounts (the caller had
     none) what was received is all that is known.
@@ -86,7 +90,8 @@ def sample_account(accounts: Sequence[Accounting], *, received_rows: int, writte
         "received": received,
         "lost": sum(account.lost for account in accounts),
         "written": written_rows,
-        "unwritten": received - written_rows,
+        "thinned": thinned_rows,
+        "unwritten": received - written_rows - thinned_rows,
         "complete": bool(accounts) and all(account.complete for account in accounts),
         "gaps": [jsonable(gap) for account in accounts for gap in account.gaps],
         "gaps_unlisted": sum(account.gaps_unlisted for account in accounts),
@@ -117,6 +122,7 @@ def speed_account(
             "column": field.name,
             "counts_per_rev": field.counts_per_rev,
             "count_sign": field.sign,
+            "encoder_on_output": field.on_output,
             "slowest_rpm": _short(slowest_rpm(counts_per_rev=field.counts_per_rev, method=method)),
             "resolution": [
                 {

@@ -16,6 +16,7 @@ def bench_columns(bench: Bench, *, tick_us: int) -> Columns:
             motor.axis,
             float(motor.counts_per_turn) or COUNTS_PER_REV_WITHOUT_ENCODER,
             count_sign=-1 if motor.sense < 0 else 1,
+            on_output=motor.encoder is not None and not motor.encoder.on_motor_shaft,
         )
         for motor in bench.motors
     ]
