@@ -143,8 +143,9 @@ def test_streaming_mean_and_spread_keep_their_digits(
 
 def test_k_of_n_forgets_what_is_older() -> None:
     votes = charts.KOfN(2, 3)
-    answers = [votes.add(yes) for yes in (True, False, False, True, True, False, False)]
+    answers = [votes.add(yes, at) for at, yes in enumerate((True, False, False, True, True, False, False))]
     assert answers == [False, False, False, False, True, True, False]
+    assert votes.where == (4,)
 
 
 def test_blocks_stay_few_and_keep_the_slope() -> None:
@@ -203,7 +204,7 @@ def ageing(seed: int, *, per_1000: float, cycles: int = 4000, noise: float = 0.0
 
 
 def first_cycle(values: list[float], settings: TrendSettings | None = None) -> dict[Level, int]:
-    trend = FeatureTrend("steady current", settings)
+    trend = FeatureTrend("steady current", settings or TrendSettings())
     found: dict[Level, int] = {}
     for cycle, value in enumerate(values):
         for finding in trend.add(cycle, value):
@@ -214,7 +215,7 @@ def first_cycle(values: list[float], settings: TrendSettings | None = None) -> d
 @pytest.mark.parametrize("seed", range(5))
 def test_an_ageing_motors_current_is_found_within_400_cycles_of_its_beginning(seed: int) -> None:
     # Friction grows so that the current rises by 10 % in 1000 cycles, under noise of 2 %: at 400 cycles it is 4 %.
-    found = first_cycle(ageing(seed, per_1000=0.10))
+    found = first_cycle(ageing(seed, per_1000=0.10), TrendSettings(fail_change=0.25))
     assert 500 < found[Level.WATCH] <= 900
     # The limit of 25 % is crossed at cycle 3000; noise of 2 % spreads that by some hundred cycles.
     assert 2600 <= found[Level.FAIL] <= 3200

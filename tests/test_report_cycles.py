@@ -65,7 +65,7 @@ def test_a_report_counts_cycles_and_shows_their_features(facts: Facts, tmp_path:
     assert [row["number"] for row in rows] == [str(number) for number in range(1, 8)]
     assert {row["outcome"] for row in rows} == {"confirmed"}
     assert all(float(row["vent forward: steady current (A)"]) > 0.0 for row in rows)
-    assert all(row["vent backward: steady current (A)"] == "" for row in rows)
+    assert not [name for name in rows[0] if name.startswith("vent backward")]  # it never went there
 
 
 def test_a_feature_that_ages_is_shown_in_the_report_of_its_run() -> None:

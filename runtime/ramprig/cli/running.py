@@ -5,7 +5,7 @@ from __future__ import annotations
 import argparse
 import sys
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 from urllib.parse import urlencode
@@ -117,6 +117,7 @@ def carry_out_wish(wish: RunWish, way: Way) -> int:
     """
     import time
 
+    from ramprig.endure.live import watching
     from ramprig.endure.resume import Surroundings, run_enduring
     from ramprig.sequence.running import run_sequence
     from ramprig.session.signals import StopOnSignals
@@ -124,6 +125,7 @@ def carry_out_wish(wish: RunWish, way: Way) -> int:
     sessions: list[Session] = []
     watch: list[StopOnSignals] = []
     progress = Progress()
+    wish = replace(wish, watching=watching(progress.line))
 
     def guard(session: Session) -> StopOnSignals:
         sessions.append(session)

@@ -104,17 +104,22 @@ class KOfN:
 
     k: int
     n: int
-    _last: deque[bool] = field(init=False)
+    _last: deque[tuple[int, bool]] = field(init=False)
 
     def __post_init__(self) -> None:
         if not 1 <= self.k <= self.n:
             raise UsageError(f"{self.k} of {self.n}; the first must be between 1 and the second")
         self._last = deque(maxlen=self.n)
 
-    def add(self, yes: bool) -> bool:
-        """Take one answer and return whether enough of the last ones are yes."""
-        self._last.append(yes)
-        return sum(self._last) >= self.k
+    def add(self, yes: bool, at: int = 0) -> bool:
+        """Take one answer, of the cycle `at`, and return whether enough of the last ones are yes."""
+        self._last.append((at, yes))
+        return sum(answer for _, answer in self._last) >= self.k
+
+    @property
+    def where(self) -> tuple[int, ...]:
+        """The cycles among the last ones whose answer was yes."""
+        return tuple(at for at, answer in self._last if answer)
 
 
 @dataclass(slots=True)

@@ -32,8 +32,9 @@ from ramprig.sequence.steps import Cycle
 from ramprig.session.session import Session
 from ramprig_link.words import Trip
 
-from .cycles import read_cycle_record
+from .cycles import CycleRecord, read_cycle_record
 from .interruption import LINK_TRIPS, Cause, Interruption, cause_of_manifest, cause_of_outcome, last_known_unix_s
+from .live import watching
 from .notes import add_note
 
 RETRY_S = 2.0
@@ -45,6 +46,7 @@ class Broken:
     """A run that may be gone on with: its folder, what it was made from, and what is known of it.
 
     `changed` are files that are no longer as they were when the run began; the copies in the run folder are used.
+    `lines` are those of the count of cycles.
     """
 
     folder: Path
@@ -57,6 +59,7 @@ class Broken:
     open_number: int | None
     last_unix_s: float
     changed: tuple[str, ...]
+    lines: tuple[Mapping[str, Any], ...] = ()
 
 
 # ---- what a folder says --------------------------------------------------------------------------------------------
@@ -71,7 +74,8 @@ def read_broken(folder: Path, *, now_unix_s: float) -> Broken:
     if cause is None:
         raise UsageError(f"{folder}: this run came to its end ({manifest.get('verdict')}); there is nothing to resume")
     sequence, bench, changed = _made_from(folder, manifest)
-    so_far, open_number = _so_far(folder, manifest, now_unix_s)
+    record = read_cycle_record(folder)
+    so_far, open_number = _so_far(folder, manifest, record, now_unix_s)
     if not any(isinstance(step, Cycle) for step in sequence.steps):
         raise UsageError(f"{folder}: the sequence has no 'cycle', so there is no place to go on at; run it anew")
     events, _ = _events_of(folder)
@@ -86,6 +90,7 @@ def read_broken(folder: Path, *, now_unix_s: float) -> Broken:
         open_number=open_number,
         last_unix_s=last_known_unix_s(manifest, events, folder),
         changed=changed,
+        lines=tuple(record.lines),
     )
 
 
@@ -118,9 +123,10 @@ def _digest(path: Path) -> str:
         return ""
 
 
-def _so_far(folder: Path, manifest: Mapping[str, Any], now_unix_s: float) -> tuple[RunSoFar, int | None]:
+def _so_far(
+    folder: Path, manifest: Mapping[str, Any], record: CycleRecord, now_unix_s: float
+) -> tuple[RunSoFar, int | None]:
     """What is done, and the cycle whose end is not known; that one is counted as broken off."""
-    record = read_cycle_record(folder)
     counted = record.counted
     if record.open_number is not None:
         counted = replace(counted, interrupted=counted.interrupted + 1)
@@ -201,6 +207,7 @@ def wish_to_carry_on(
         board=dict(first.get("device") or {}),
         limits_digest=str(first.get("limits_digest") or ""),
         forgiven=frozenset(trip.word for trip in Trip) if after_trip else LINK_TRIPS,
+        lines=broken.lines,
     )
     return replace(
         wish,
@@ -233,9 +240,12 @@ class Surroundings:
 def run_enduring(wish: RunWish, around: Surroundings, *, port: Port | None = None) -> RunResult:
     """Run a sequence and go on after each lost link and restarted board, as often as the sequence allows.
 
-    `port` is the open port of the first part, None to open it. Raises what `run_sequence` raises, for the first part
+    Its cycles are judged for wear, also where the wish says nothing of it. `port` is the open port of the first part,
+    None to open it. Raises what `run_sequence` raises, for the first part
     alone; a board that does not come back in time ends the run with the outcome of the part before.
     """
+    if wish.watching is None:
+        wish = replace(wish, watching=watching(around.tell))
     result = _run(wish, around, around.open_port() if port is None else port)
     while (folder := result.folder) is not None and _may_go_on(wish.sequence, result.outcome, folder):
         later = _go_on(wish, around, folder)

@@ -1,8 +1,9 @@
 """Decides, cycle by cycle and in constant memory, whether a feature of an endurance test changes: watch, or fail.
 
-The first cycles after run-in give the baseline. Then five looks at each value, all against that baseline and all
-allowing for its own uncertainty: the change itself against two limits, k of n; a CUSUM for sudden changes; an EWMA
-for slow ones; and Mann-Kendall with Sen's slope on block means for drifts over the whole test.
+The first cycles after run-in give the baseline. Then five looks at each value, all against that baseline: the change
+itself against the feature's limits (`sequence.wear_limits`), k of n; and, allowing for the baseline's own uncertainty,
+a CUSUM for sudden changes; an EWMA for slow ones; and Mann-Kendall with Sen's slope on block means for drifts over the
+whole test. Only a limit that somebody has set is a failure; what the others find is to be watched.
 
 The default figures are choices of this program, found by simulation; they are no standard and no maker's limit.
 False alarms, by `python -m pytest -m soak tests/test_endure_trends.py -s`: see `FALSE_ALARMS`. Detection, in the same
@@ -13,10 +14,13 @@ standard deviations within 10, the mock's vent drive with friction growing by 0.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
 from enum import IntEnum, StrEnum
 
 from ramprig.errors import UsageError
+from ramprig.sequence.wear_limits import Threshold, WearLimit
+from ramprig.sequence.wear_words import FEATURE_WORDS, show_feature, word_of
 
 from .charts import Blocks, Cusum, Ewma, KOfN, Spread
 from .mannkendall import mann_kendall, sen_slope
@@ -50,19 +54,22 @@ class Sign(StrEnum):
 class TrendSettings:
     """Figures of the decision; see the module's first lines for what the defaults are worth.
 
-    `run_in` cycles are not looked at, `baseline` ones give mean and spread. A change counts towards `watch_change` or
-    `fail_change` (shares of the baseline) only beyond `least_sds` standard deviations, too, in `k` of `n` cycles.
+    `run_in` cycles are not looked at, `baseline` ones give mean and spread. A feature without a limit of its own has
+    `watch_change` and, where there is one, `fail_change` (shares of the baseline, either way) in `k` of `n` cycles;
+    beyond such a limit of nobody's a value counts only where it is off by `least_sds` standard deviations, too. Without
+    `detectors` limits are all that is looked at.
+
     CUSUM figures are in standard deviations, `ewma_width` in those of the weighted mean. A drift needs a Mann-Kendall
     Z of `drift_z` and a change over the test of `least_change`. Values further than `clip_sds` off count as that far,
     so that one outlier is no finding. `floor` is the least standard deviation, as a share of the baseline: it keeps a
-    quiet feature's trifles from being findings. `run_in` must outlast the winding's warming (three of its thermal time
-    constants), or that is what will be found.
+    quiet feature's trifles from being findings. The run-in must outlast the winding's warming, or that is what will be
+    found.
     """
 
     run_in: int = 20
     baseline: int = 100
     watch_change: float = 0.10
-    fail_change: float = 0.25
+    fail_change: float | None = None
     least_sds: float = 5.0
     k: int = 3
     n: int = 5
@@ -75,22 +82,34 @@ class TrendSettings:
     least_change: float = 0.02
     clip_sds: float = 4.0
     floor: float = 0.015
+    detectors: bool = True
 
     def __post_init__(self) -> None:
         if self.baseline < 10 or self.run_in < 0:
             raise UsageError(f"a baseline of {self.baseline} cycles after {self.run_in}; it needs at least 10 after 0")
-        if not 0.0 < self.watch_change <= self.fail_change:
+        fail_change = math.inf if self.fail_change is None else self.fail_change
+        if not 0.0 < self.watch_change <= fail_change:
             raise UsageError(
-                f"limits of {self.watch_change:g} (watch) and {self.fail_change:g} (fail); the first must be above 0 "
+                f"limits of {self.watch_change:g} (watch) and {fail_change:g} (fail); the first must be above 0 "
                 "and not above the second"
             )
+
+    def limit_of(self, feature: str) -> WearLimit:
+        """The limits of a feature that has none of its own."""
+        watch, fail = (
+            None if change is None else Threshold(text=f"+- {100.0 * change:g} %", low=-change, high=change)
+            for change in (self.watch_change, self.fail_change)
+        )
+        return WearLimit(feature=feature, watch=watch, fail=fail, k=self.k, n=self.n)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Finding:
     """A change found at `cycle`: `change` is the present mean's share off the baseline, `per_1000` Sen's slope.
 
-    `per_1000` is the change in 1000 cycles as a share of the baseline; None until there are blocks enough.
+    `per_1000` is the change in 1000 cycles as a share of the baseline; None until there are blocks enough. Where a
+    limit found it, `now` is the last value, `limit` what it is beyond in `k` of the last `n` cycles, and `cycles` are
+    those. `baseline` and `change` are NaN where a limit in the feature's unit found it before there was a baseline.
     """
 
     feature: str
@@ -101,34 +120,61 @@ class Finding:
     now: float
     change: float
     per_1000: float | None
+    limit: str = ""
+    k: int = 0
+    n: int = 0
+    cycles: tuple[int, ...] = ()
 
     def __str__(self) -> str:
-        slope = "" if self.per_1000 is None else f", {100.0 * self.per_1000:+.2g} % in 1000 cycles"
-        return (
-            f"{self.feature}: {self.sign} at cycle {self.cycle}, {self.now:.4g} against {self.baseline:.4g} at first "
-            f"({100.0 * self.change:+.1f} %{slope})"
-        )
+        """What was found, in one sentence."""
+        value = show_feature(self.feature, self.now)
+        text = f"{self.feature}: {self.level.name.lower()} limit" if self.limit else f"{self.feature}: {self.sign}"
+        text += f" at cycle {self.cycle}, {value}"
+        if not math.isnan(self.baseline):
+            slope = "" if self.per_1000 is None else f", {100.0 * self.per_1000:+.2g} % in 1000 cycles"
+            change = f"{100.0 * self.change:+.1f} %{slope}"
+            text += f" against {show_feature(self.feature, self.baseline)} at first ({change})"
+        if self.limit:
+            listed = ", ".join(map(str, self.cycles))
+            text += f"; beyond {self.limit} in {len(self.cycles)} of the last {self.n} cycles: {listed}"
+        return text
 
 
+@dataclass(slots=True)
 class FeatureTrend:
-    """One feature's stream. `level` is the worst found so far; each sign and level is reported once."""
+    """One feature's stream. `level` is the worst found so far; each sign and level is reported once.
 
-    def __init__(self, feature: str, settings: TrendSettings | None = None) -> None:
-        self.feature = feature
-        self.settings = settings or TrendSettings()
-        self.level = Level.OK
-        self.baseline = Spread()
-        self.missing = 0
-        self._told: set[tuple[Sign, Level]] = set()
-        self._seen = 0
-        self._sd = 0.0
-        self._correlated = 1.0
-        self._watch = KOfN(self.settings.k, self.settings.n)
-        self._fail = KOfN(self.settings.k, self.settings.n)
-        self._cusum = Cusum(0.0, self.settings.cusum_slack, self.settings.cusum_limit)
-        self._ewma = Ewma(0.0, self.settings.ewma_share)
-        self._blocks = Blocks()
-        self._slope: float | None = None
+    Two of them are equal where they will judge alike whatever comes.
+    """
+
+    feature: str
+    settings: TrendSettings = field(default_factory=TrendSettings)
+    limit: WearLimit | None = None
+    level: Level = Level.OK
+    baseline: Spread = field(default_factory=Spread)
+    missing: int = 0
+    _told: set[tuple[Sign, Level]] = field(default_factory=set)
+    _seen: int = 0
+    _sd: float = 0.0
+    _correlated: float = 1.0
+    _limit: WearLimit = field(init=False)
+    _detects: bool = field(init=False)
+    _watch: KOfN = field(init=False)
+    _fail: KOfN = field(init=False)
+    _cusum: Cusum = field(init=False)
+    _ewma: Ewma = field(init=False)
+    _blocks: Blocks = field(default_factory=Blocks)
+    _slope: float | None = None
+
+    def __post_init__(self) -> None:
+        settings = self.settings
+        self._limit = self.limit or settings.limit_of(self.feature)
+        word = FEATURE_WORDS.get(word_of(self.feature))
+        self._detects = settings.detectors and not (word is not None and word.about_zero)
+        self._watch = KOfN(self._limit.k, self._limit.n)
+        self._fail = KOfN(self._limit.k, self._limit.n)
+        self._cusum = Cusum(0.0, settings.cusum_slack, settings.cusum_limit)
+        self._ewma = Ewma(0.0, settings.ewma_share)
 
     @property
     def established(self) -> bool:
@@ -139,6 +185,14 @@ class FeatureTrend:
     def mean_now(self) -> float:
         """The weighted mean of the last cycles; the baseline's mean before it is complete."""
         return self.baseline.mean + self._ewma.value * self._sd
+
+    def limit_values(self) -> list[tuple[Level, float]]:
+        """The values that its limits come to, those of changes only once the baseline is complete."""
+        found = []
+        for level, threshold in ((Level.WATCH, self._limit.watch), (Level.FAIL, self._limit.fail)):
+            if threshold is not None and (self.established or not threshold.is_share):
+                found += [(level, end) for end in threshold.ends(self.baseline.mean) if end is not None]
+        return found
 
     def add(self, cycle: int, value: float) -> list[Finding]:
         """Take the value of one cycle and return what it newly shows. A value that is not finite counts as missing."""
@@ -153,10 +207,12 @@ class FeatureTrend:
             self.baseline.add(value)
             if self.baseline.count == self.settings.baseline:
                 self._settle()
-            return []
-        found = self._limits(value) + self._charts(value)
-        if finished:
-            found += self._drift()
+            found = self._limits(cycle, value, is_known=False)
+        else:
+            found = self._limits(cycle, value, is_known=True)
+            if self._detects:
+                found += self._charts(value)
+                found += self._drift() if finished else []
         return [self._finding(cycle, sign, level, value) for sign, level in found if self._new(sign, level)]
 
     def _settle(self) -> None:
@@ -166,15 +222,18 @@ class FeatureTrend:
         self._correlated = math.sqrt((1.0 + together) / (1.0 - together))
         self._sd = max(baseline.sd, settings.floor * abs(baseline.mean), 1e-300)
 
-    def _limits(self, value: float) -> list[tuple[Sign, Level]]:
-        settings = self.settings
-        away, scale = abs(value - self.baseline.mean), abs(self.baseline.mean)
-        least = settings.least_sds * self._sd
+    def _limits(self, cycle: int, value: float, *, is_known: bool) -> list[tuple[Sign, Level]]:
+        """What the limits say; those that need the baseline only where it `is_known`."""
         found = []
-        if self._watch.add(away > max(settings.watch_change * scale, least)):
-            found.append((Sign.LIMIT, Level.WATCH))
-        if self._fail.add(away > max(settings.fail_change * scale, least)):
-            found.append((Sign.LIMIT, Level.FAIL))
+        sides = ((self._limit.watch, self._watch, Level.WATCH), (self._limit.fail, self._fail, Level.FAIL))
+        for threshold, votes, level in sides:
+            if threshold is None or (threshold.is_share and not is_known):
+                continue
+            beyond = threshold.is_beyond(value, self.baseline.mean)
+            if not self._limit.place:  # nobody's limit must not call the feature's own noise a change
+                beyond &= abs(value - self.baseline.mean) > self.settings.least_sds * self._sd
+            if votes.add(beyond, cycle):
+                found.append((Sign.LIMIT, level))
         return found
 
     def _charts(self, value: float) -> list[tuple[Sign, Level]]:
@@ -218,9 +277,9 @@ class FeatureTrend:
         return True
 
     def _finding(self, cycle: int, sign: Sign, level: Level, value: float) -> Finding:
-        mean = self.baseline.mean
+        mean = self.baseline.mean if self.established else math.nan
         now = value if sign is Sign.LIMIT else self.mean_now
-        return Finding(
+        found = Finding(
             feature=self.feature,
             cycle=cycle,
             level=level,
@@ -230,6 +289,24 @@ class FeatureTrend:
             change=(now - mean) / abs(mean) if mean else math.inf,
             per_1000=self.slope_per_1000(),
         )
+        if sign is not Sign.LIMIT:
+            return found
+        threshold = self._limit.fail if level is Level.FAIL else self._limit.watch
+        votes = self._fail if level is Level.FAIL else self._watch
+        assert threshold is not None  # it is what found it
+        return replace(found, limit=self._said(threshold), k=votes.k, n=votes.n, cycles=votes.where)
+
+    def _said(self, threshold: Threshold) -> str:
+        """A threshold as it was written and, where it is a change, what it comes to."""
+        if not threshold.is_share:
+            return f"'{threshold.text}'"
+        low, high = threshold.ends(self.baseline.mean)
+        ends = [
+            f"{what} {show_feature(self.feature, end)}"
+            for what, end in (("below", low), ("above", high))
+            if end is not None
+        ]
+        return f"{threshold.text} ({' or '.join(ends)})"
 
 
 class TrendWatch:
@@ -239,7 +316,7 @@ class TrendWatch:
         self.settings = settings or TrendSettings()
         self.features: dict[str, FeatureTrend] = {}
 
-    def add(self, cycle: int, values: dict[str, float]) -> list[Finding]:
+    def add(self, cycle: int, values: Mapping[str, float]) -> list[Finding]:
         """Take the features of one cycle and return what they newly show, in the features' order."""
         found = []
         for name, value in values.items():

@@ -9,14 +9,15 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 
-from ramprig.endure.features import CycleFeatures, is_judged, unit_of
+from ramprig.endure.features import is_judged, unit_of
+from ramprig.endure.recorded import TurnFeatures
 
 from . import page
 
 CHECKS_MIN = 2
 
 
-def checks_table(features: Sequence[CycleFeatures]) -> str:
+def checks_table(features: Sequence[TurnFeatures]) -> str:
     """A table of the checks among these features, with a heading; empty where there are fewer than CHECKS_MIN."""
     checks = [each for each in features if each.span.is_check]
     if len(checks) < CHECKS_MIN:

@@ -10,7 +10,8 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-from ramprig.endure.features import CycleFeatures, FeatureWalk, spans_of
+from ramprig.endure.features import FeatureWalk, spans_of
+from ramprig.endure.recorded import TurnFeatures, recorded_features
 from ramprig.record.scan import Piece
 from ramprig.record.volumes import Stream
 
@@ -74,7 +75,8 @@ class Digest:
     """What the samples of a run come to. `breaks` are times where the board restarted or the run was gone on with.
 
     An interval is `interval_stride` cycles, or a minute; those from 1 to below `interval_edges` are whole cycles.
-    `features` are those of the cycles and checks of the count of cycles, the first FEATURES_MAX.
+    `features` are those of the cycles and checks of the count of cycles, the first FEATURES_MAX: as they were recorded
+    while the run was under way, else from the samples.
     """
 
     columns: tuple[str, ...]
@@ -90,7 +92,7 @@ class Digest:
     totals: dict[str, tuple[float, float, float]] = field(default_factory=dict)
     interval_edges: int = 0
     interval_stride: int = 1
-    features: list[CycleFeatures] = field(default_factory=list)
+    features: list[TurnFeatures] = field(default_factory=list)
 
     def band(self, name: str) -> Band:
         """A column against time."""
@@ -124,7 +126,9 @@ def digest_samples(facts: Facts) -> Digest:
         digest.interval_stride = -(-len(facts.passes) // ROWS_MAX)
     table = _IntervalTable(columns, edges)
     curves = {motor: _CurveWalk(digest, motor) for motor in facts.motors if f"{motor}.speed_rpm" in columns}
-    aged = FeatureWalk(facts.columns, spans_of(facts.cycles), tick_us=facts.tick_us)
+    recorded = recorded_features(facts.cycles)
+    _keep_features(digest, recorded or [])
+    aged = FeatureWalk(facts.columns, spans_of(facts.cycles) if recorded is None else [], tick_us=facts.tick_us)
     offset_s = 0.0
     for part, paths in facts.files_of_parts.items():
         stream = Stream(paths, columns={"time_s", *columns, *(aged.columns if aged.spans else ())})
@@ -147,7 +151,7 @@ def digest_samples(facts: Facts) -> Digest:
     return digest
 
 
-def _keep_features(digest: Digest, found: list[CycleFeatures]) -> None:
+def _keep_features(digest: Digest, found: Sequence[TurnFeatures]) -> None:
     digest.features += found[: FEATURES_MAX - len(digest.features)]
 
 

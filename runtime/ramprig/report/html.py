@@ -19,7 +19,7 @@ from .compare import compared
 from .digest import Digest
 from .explain import Explanation, view_of_trip
 from .facts import Facts
-from .trends import trends_of
+from .trends import rules_in_force, trends_of
 
 ENTRIES = {
     "lab": "laboratory and its address",
@@ -158,7 +158,7 @@ def _trends(read: Read, figures: _Figures) -> str:
     found = trends_of(read.facts, read.digest)
     if not found:
         return ""
-    words = sections.trend_findings(found) + checks_table(read.digest.features)
+    words = sections.trend_findings(found, rules_in_force(read.facts)) + checks_table(read.digest.features)
     return figures.put(plots.by_cycle(read.facts, found)) + words
 
 

@@ -9,7 +9,8 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
-from ramprig.endure.features import CycleFeatures, unit_of
+from ramprig.endure.features import unit_of
+from ramprig.endure.recorded import TurnFeatures, names_of
 from ramprig.errors import RecordError
 from ramprig.record.appendfile import replace_file
 from ramprig.record.reading import audit
@@ -82,16 +83,19 @@ def intervals_csv(digest: Digest) -> bytes:
     return out.getvalue().encode("utf-8")
 
 
-def features_csv(features: Sequence[CycleFeatures]) -> bytes:
-    """The features of each cycle, and of each check as number 0, a line each; those that are missing are empty."""
+def features_csv(features: Sequence[TurnFeatures]) -> bytes:
+    """The features of each cycle, and of each check as number 0, a line each; those that are missing are empty.
+
+    A feature that is missing in all of them has no column.
+    """
     out = io.StringIO(newline="")
     writer = csv.writer(out)
-    names = list(features[0].values()) if features else []
+    names = names_of(features)
     heads = [f"{name} ({unit_of(name)})" if unit_of(name) else name for name in names]
     writer.writerow(["number", "part", "begin_tick", "end_tick", "outcome", "samples", "left_out", *heads])
     for each in features:
         span, values = each.span, each.values()
-        cells = ["" if math.isnan(values[name]) else f"{values[name]:.6g}" for name in names]
+        cells = ["" if math.isnan(values.get(name, math.nan)) else f"{values[name]:.6g}" for name in names]
         place = [span.number, span.part, span.begin_tick, span.end_tick, span.outcome or "check"]
         writer.writerow([*place, each.samples, each.left_out, *cells])
     return out.getvalue().encode("utf-8")

@@ -8,6 +8,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from ramprig.endure.trends import Level as WearLevel
+
 from .around import Around
 from .digest import Digest, Level
 from .envelope import Band
@@ -183,17 +185,12 @@ def by_cycle(facts: Facts, found: Sequence[Trend]) -> list[Plot]:
     return [_trend(trend, what) for trend in found]
 
 
+LIMIT_COLOURS = {WearLevel.WATCH: ORANGE, WearLevel.FAIL: VERMILION}
+
+
 def _trend(trend: Trend, what: str) -> Plot:
-    judged, settings = trend.judged, trend.judged.settings
-    levels: list[tuple[float, str, str]] = []
-    if judged.established:
-        mean = judged.baseline.mean
-        levels = [(mean, "baseline", GREY)]
-        for share, name, colour in (
-            (settings.watch_change, "watch", ORANGE),
-            (settings.fail_change, "fail", VERMILION),
-        ):
-            levels += [(mean * (1 + share), name, colour), (mean * (1 - share), name, colour)]
+    levels = [(trend.judged.baseline.mean, "baseline", GREY)] if trend.judged.established else []
+    levels += [(value, level.name.lower(), LIMIT_COLOURS[level]) for level, value in trend.judged.limit_values()]
     low, high = float(np.nanmin(trend.values)), float(np.nanmax(trend.values))
     watched = [value for value, name, _ in levels if name != "fail"]
     y_range = padded(min([low, *watched]), max([high, *watched]))

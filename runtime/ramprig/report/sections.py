@@ -6,6 +6,7 @@ from collections.abc import Mapping, Sequence
 
 from ramprig.quantity import format_duration
 from ramprig.record.reading import Audit
+from ramprig.sequence.wear_limits import WearRules
 from ramprig.session.limits import LimitTable
 from ramprig_link.words import LIMITS, Per
 
@@ -25,6 +26,10 @@ ROWS_MAX = 400
 RESOLUTION_AT_RPM = (1.0, 10.0, 100.0, 1000.0)
 SEQUENCE_MAX = 60_000
 """Characters of one file of the sequence that are shown."""
+NO_STANDARD = (
+    "Sudden changes are looked for by CUSUM, slow ones by EWMA, drifts by Mann-Kendall and Sen. Where the figures are "
+    "not those of the file they are choices of this program and no standard."
+)
 TRIP_LIMITS = ("trip_ma", "rated_ma", "stall_duty", "wrong_counts", "speed_counts", "under_mv", "over_mv")
 ZERO_IS_OFF = ("rated_ma", "stall_duty", "speed_counts", "under_mv")
 
@@ -309,26 +314,21 @@ def account(facts: Facts, audit: Audit) -> str:
     return page.facts(pairs) + "".join(page.paragraph(text) for text in statements) + table + hashes
 
 
-def trend_findings(found: Sequence[Trend]) -> str:
-    """What the trends of the features showed, and by which figures."""
-    settings = found[0].judged.settings
-    rule = (
-        f"Looked for: after {settings.run_in} cycles of run-in and {settings.baseline} of baseline, changes beyond "
-        f"{settings.watch_change:.0%} (watch) and {settings.fail_change:.0%} (fail) of the baseline in {settings.k} of "
-        f"{settings.n} cycles, sudden changes (CUSUM), slow ones (EWMA), and drifts (Mann-Kendall, Sen). These figures "
-        "are choices of this program; they are no standard."
-    )
-    if not any(trend.judged.established for trend in found):
-        needed = settings.run_in + settings.baseline
-        return page.paragraph(f"No trend is judged: that takes more than {needed} cycles.", kind="note")
+def trend_findings(found: Sequence[Trend], rules: Sequence[WearRules]) -> str:
+    """What the trends of the features showed, and by which rules."""
+    lines = [line for each in rules for line in each.lines()]
+    rule = page.paragraph(f"Looked for: {'; '.join(lines)}. {NO_STANDARD}", kind="note")
     rows = [
         [page.text(trend.name), str(finding.cycle), finding.level.name.lower(), page.text(str(finding))]
         for trend in found
         for finding in trend.findings
     ]
-    if not rows:
-        return page.paragraph(f"No change was found. {rule}")
-    return page.table(["feature", "cycle", "level", "found"], rows, numbers=(1,)) + page.paragraph(rule, kind="note")
+    if rows:
+        return page.table(["feature", "cycle", "level", "found"], rows, numbers=(1,)) + rule
+    if not any(trend.judged.established for trend in found):
+        needed = min((each.run_in_cycles + each.baseline for each in rules), default=0)
+        return page.paragraph(f"No trend is judged: that takes more than {needed} cycles.", kind="note") + rule
+    return page.paragraph("No change was found.") + rule
 
 
 def protections(facts: Facts) -> str:

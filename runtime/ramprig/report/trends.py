@@ -1,20 +1,25 @@
-"""Features of each cycle from the samples, and what the streaming trends of `endure` make of them.
+"""Features of each cycle, and what the streaming trends of `endure` make of them.
 
-The features of a test by cycles are those of `endure.features`. For other runs they are what any sequence has: the
-fastest speed, the greatest current, the lowest supply and how long a pass took. The limits drawn are those of the
-default settings of `endure.trends`: choices of this program and no standard.
+The features of a test by cycles are those that the run itself recorded and judged, and they are judged here by the same
+judge and the same rules, so that the report says what the run said. For other runs they are what any sequence has: the
+fastest speed, the greatest current, the lowest supply and how long a pass took, judged by the default settings of
+`endure.trends`: choices of this program and no standard.
 """
 
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
-from ramprig.endure.features import is_judged, unit_of
-from ramprig.endure.trends import FeatureTrend, Finding, TrendSettings
+from ramprig.endure.features import unit_of
+from ramprig.endure.recorded import TurnFeatures
+from ramprig.endure.trends import FeatureTrend, Finding
+from ramprig.endure.wear import Cycle, WearJudge, as_recorded
+from ramprig.sequence.wear_limits import WearRules, WearWish, rules_of
 
 from .digest import Digest
 from .facts import Facts
@@ -35,12 +40,38 @@ class Trend:
     findings: tuple[Finding, ...]
 
 
+def rules_in_force(facts: Facts) -> tuple[WearRules, ...]:
+    """The limits to wear by which the cycles of a run are judged: those that were in force while it was under way.
+
+    A run that recorded none is judged by the default ones, without waiting for windings to be warm.
+    """
+    settings = facts.manifest.get("settings") or {}
+    if "wear" in settings:
+        return rules_of(settings["wear"])
+    names = {int(line.get("block") or 1): str(line.get("name")) for line in facts.cycles if "block" in line}
+    wish = WearWish()
+    return tuple(
+        WearRules(
+            block=block,
+            name=name,
+            run_in_cycles=wish.run_in_cycles,
+            run_in_s=0.0,
+            baseline=wish.baseline,
+            detectors=wish.detectors,
+            motors=tuple(facts.motors),
+            limits=(),
+            others=wish.others,
+        )
+        for block, name in sorted((names or {1: "cycle"}).items())
+    )
+
+
 def trends_of(facts: Facts, digest: Digest) -> list[Trend]:
     """The features of the whole cycles of a run; none where there are fewer than CYCLES_MIN.
 
     Checks between the cycles are not among them: there are too few of them for a baseline.
     """
-    by_feature = _by_feature(digest)
+    by_feature = _by_feature(facts, digest)
     if by_feature:
         return by_feature
     rows = [row for row in digest.intervals if 0 < row.number < digest.interval_edges]
@@ -65,16 +96,51 @@ def trends_of(facts: Facts, digest: Digest) -> list[Trend]:
     return [trend for trend in found if not np.isnan(trend.values).all()]
 
 
-def _by_feature(digest: Digest) -> list[Trend]:
-    cycles = [each for each in digest.features if not each.span.is_check]
+def wear_of(facts: Facts, cycles: Sequence[Cycle]) -> tuple[WearJudge, list[tuple[int, Finding]]]:
+    """What the run's own judge makes of its cycles, and its findings in order, each after its block."""
+    judge = WearJudge.of(rules_in_force(facts), tick_us=facts.tick_us)
+    return judge, [(cycle.block, finding) for cycle in cycles for finding in judge.take(cycle)]
+
+
+def cycles_of(facts: Facts, features: Sequence[TurnFeatures]) -> list[Cycle]:
+    """The cycles of a run with their features: as recorded, all of them, else those given, from the samples."""
+    done = [line for line in facts.cycles if line.get("kind") == "cycle_done"]
+    if any(line.get("features") for line in done):
+        return [Cycle.of(line) for line in done]
+    blocks = {int(line["number"]): int(line.get("block") or 1) for line in done}
+    return [
+        Cycle(
+            number=each.span.number,
+            block=blocks.get(each.span.number, 1),
+            part=each.span.part,
+            begin_tick=each.span.begin_tick,
+            end_tick=each.span.end_tick,
+            features=as_recorded(each.values()),
+        )
+        for each in features
+        if not each.span.is_check
+    ]
+
+
+def _by_feature(facts: Facts, digest: Digest) -> list[Trend]:
+    cycles = cycles_of(facts, digest.features)
     if len(cycles) < CYCLES_MIN:
         return []
-    numbers = np.array([float(each.span.number) for each in cycles])
-    rows = [each.values() for each in cycles]
-    columns = {name: np.array([row[name] for row in rows]) for name in rows[0] if is_judged(name)}
-    return [
-        _judged(name, unit_of(name), numbers, values) for name, values in columns.items() if not np.isnan(values).all()
-    ]
+    judge, findings = wear_of(facts, cycles)
+    found = []
+    for number, block in judge.blocks.items():
+        of_block = [cycle for cycle in cycles if cycle.block == number]
+        numbers = np.array([float(cycle.number) for cycle in of_block])
+        prefix = f"'{block.rules.name}' " if len(judge.blocks) > 1 else ""
+        for name in dict.fromkeys(name for cycle in of_block for name in cycle.features):
+            limit = block.rules.limit_of(name)
+            if limit is None:
+                continue
+            values = np.array([cycle.features.get(name, math.nan) for cycle in of_block])
+            judged = block.features.get(name) or FeatureTrend(name, limit=limit)
+            of_feature = tuple(finding for at, finding in findings if at == number and finding.feature == name)
+            found.append(Trend(prefix + name, unit_of(name), numbers, values, judged, of_feature))
+    return found
 
 
 def _size(triple: tuple[float, float, float] | None) -> float:
@@ -92,7 +158,7 @@ def _times(facts: Facts) -> tuple[Floats, Floats] | None:
 
 
 def _judged(name: str, unit: str, numbers: Floats, values: Floats) -> Trend:
-    judged = FeatureTrend(name, TrendSettings())
+    judged = FeatureTrend(name)
     findings: list[Finding] = []
     for number, value in zip(numbers.tolist(), values.tolist(), strict=True):
         findings += judged.add(int(number), value)

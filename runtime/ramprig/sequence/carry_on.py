@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Collection, Mapping
+from collections.abc import Collection, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -12,6 +12,7 @@ from ramprig.record.events import Json, jsonable
 from ramprig.session.session import Session
 
 from .cycle_run import RunSoFar
+from .cycle_watch import Line
 from .rig import Rig
 from .tripsay import explain_trip
 
@@ -24,7 +25,8 @@ class CarryOn:
     """A run that was interrupted and is to be gone on with: its folder and `run.json`, and what is done of it.
 
     `interruption` is what the record tells of the break; `board` the device's identity and `limits_digest` its limits
-    in the first part. A latch of the trips `forgiven` is ended; with any other the run is not gone on with.
+    in the first part. A latch of the trips `forgiven` is ended; with any other the run is not gone on with. `lines` are
+    those of the count of cycles.
     """
 
     folder: Path
@@ -34,6 +36,7 @@ class CarryOn:
     board: Mapping[str, object]
     limits_digest: str
     forgiven: Collection[str]
+    lines: Sequence[Line] = ()
 
 
 def check_same(session: Session, carry_on: CarryOn) -> None:

@@ -19,6 +19,7 @@ from .rig import Rig
 from .scene import Scene
 from .spacing import HOUR_S, TurnBound, least_ticks, most_ticks_a_turn, share_ticks
 from .steps import Cycle, Step
+from .wear_plan import wear_rules
 
 TURN_REACTION_S = Fraction(1, 2)
 """From the end of a cycle until the next may begin, where there is no rest: its samples must come, the disk must hold
@@ -110,9 +111,14 @@ def compile_cycles(
         check_starts=check_starts,
         failed_most=step.failed_most,
         confirmed=all(_confirms(body) for body in bodies),
+        wear=wear_rules(rig, step, block=block, driven=_driven(bodies)),
     )
     part = _with_pauses(rig, part)
     return _with_totals(rig, replace(part, text=_text(rig, step, part)), so_far)
+
+
+def _driven(bodies: list[Part]) -> set[str]:
+    return {name for body in bodies for name, duty in body.totals.peak_duty.items() if duty}
 
 
 def _walk(rig: Rig, series: SeriesMaker, step: Cycle, scene: Scene) -> _Walked:

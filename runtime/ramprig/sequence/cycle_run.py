@@ -16,6 +16,7 @@ from dataclasses import dataclass, field, replace
 from enum import StrEnum
 
 from .cycle_plan import BlockSoFar
+from .cycle_watch import CycleWatch, Seen, TurnDone
 from .happened import BlockOver, CheckBegun, CheckDone, CycleBegun, CycleCommanded, CycleDone, CycleInterrupted
 from .outcome import Counted, Judged
 from .plan import Cycles
@@ -76,6 +77,7 @@ class _UnderWay:
     held: int = 0
     failed: int = 0
     found: list[str] = field(default_factory=list)
+    seen: Seen = field(default_factory=Seen)
 
 
 @dataclass(frozen=True, slots=True)
@@ -88,7 +90,7 @@ class Due:
 
 class CycleBook:
     """The count of one run. `write` takes an event for the count of cycles, `pending` tells how many of those are not
-    yet on the disk."""
+    yet on the disk. `watch` looks on at the cycles."""
 
     def __init__(
         self,
@@ -97,8 +99,10 @@ class CycleBook:
         tick_s: float,
         write: Callable[[object], None],
         pending: Callable[[], int],
+        watch: CycleWatch | None = None,
     ) -> None:
         self.counted = so_far.counted
+        self.watch = watch
         self.pending = pending
         self._so_far = so_far
         self._tick_s = tick_s
@@ -178,6 +182,8 @@ class CycleBook:
         """The turn is about to begin: a cycle is written down, and must be on the disk before its first order."""
         part = self._known_part()
         self._turned = True
+        if self.watch is not None:
+            self.watch.commanded()
         if turn is Turn.CHECK:
             self._under_way = _UnderWay(turn, 0)
             return
@@ -193,6 +199,8 @@ class CycleBook:
         """The turn that was commanded begins at `tick`; the event that tells of it."""
         assert self._under_way is not None  # it was commanded
         self._under_way.begin_tick = tick
+        if self.watch is not None:
+            self.watch.begun(tick)
         name = self._known_part().name
         if self._under_way.turn is Turn.CHECK:
             return CheckBegun(tick=tick, after=self.counted.done, name=name)
@@ -210,6 +218,20 @@ class CycleBook:
             turn.unconfirmed += not judged.held
             if len(turn.found) < FOUND_MAX:
                 turn.found.append(judged.found)
+
+    def look(self, tick: int) -> tuple[object, ...]:
+        """Have the turn under way, which is over at `tick`, looked at; events of what was found. Then it is closed."""
+        turn = self._under_way
+        assert turn is not None  # whoever asks has seen that it is under way
+        if self.watch is None or turn.begin_tick is None:
+            return ()
+        block = self._known_part().block
+        turn.seen = self.watch.done(
+            TurnDone(
+                number=turn.number, block=block, begin_tick=turn.begin_tick, end_tick=tick, after=self.counted.done
+            )
+        )
+        return turn.seen.found
 
     def close(self, tick: int) -> CycleOutcome | None:
         """The turn under way is over at `tick`, everything in it judged; what became of a cycle, None for a check."""
@@ -236,6 +258,9 @@ class CycleBook:
                     expectations_failed=turn.failed,
                     run_s=round(self._run_s(tick), 6),
                     starts=starts,
+                    samples=turn.seen.samples,
+                    left_out=turn.seen.left_out,
+                    features=turn.seen.features,
                 )
             )
             return None
@@ -274,6 +299,9 @@ class CycleBook:
             confirmed=self.counted.confirmed,
             failed=self.counted.failed,
             interrupted=self.counted.interrupted,
+            samples=turn.seen.samples,
+            left_out=turn.seen.left_out,
+            features=turn.seen.features,
         )
 
     def too_many_failed(self) -> str:
@@ -286,9 +314,7 @@ class CycleBook:
     def finish_block(self, tick: int) -> None:
         """All cycles of the block are done."""
         part = self._known_part()
-        self._write(
-            BlockOver(tick=tick, block=part.block, part=self._so_far.part, run_s=round(self._run_s(tick), 6))
-        )
+        self._write(BlockOver(tick=tick, block=part.block, part=self._so_far.part, run_s=round(self._run_s(tick), 6)))
 
     def abandon(self, why: str) -> None:
         """The run is over: a cycle under way is written down as broken off. Never raises."""
@@ -297,9 +323,7 @@ class CycleBook:
             return
         self.counted = replace(self.counted, interrupted=self.counted.interrupted + 1)
         part = self._known_part()
-        self._write(
-            CycleInterrupted(tick=None, number=turn.number, block=part.block, part=self._so_far.part, why=why)
-        )
+        self._write(CycleInterrupted(tick=None, number=turn.number, block=part.block, part=self._so_far.part, why=why))
 
     def _known_part(self) -> Cycles:
         assert self._part is not None  # `enter` comes first

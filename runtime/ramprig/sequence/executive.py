@@ -441,6 +441,7 @@ class Executive:
         if self._commanded is None:
             if book.under_way and not self._close_turn(book, ask):
                 return False
+            self._check_wear(book)
             due = book.due(ask.tick)
             if due.turn is not Turn.OVER:
                 if due.tick > ahead:
@@ -463,11 +464,19 @@ class Executive:
         """Count the turn that is over, once everything in it has been looked at."""
         if not self._judged_up_to(ask.tick):
             return False
+        for found in book.look(ask.tick):  # on the disk before the cycle that shows it
+            self.tell(found)
         book.close(ask.tick)
         too_many = book.too_many_failed()
         if too_many:
             raise Ended(Verdict.FAILED, too_many, ask.part.mark.place)
         return True
+
+    def _check_wear(self, book: CycleBook) -> None:
+        """End where the cycles so far, those of earlier parts of the run among them, show too much wear."""
+        why, place = ("", None) if book.watch is None else book.watch.too_worn()
+        if why:
+            raise Ended(Verdict.FAILED, why, place)
 
     def _judged_up_to(self, tick: int) -> bool:
         """Whether everything up to the tick has happened and been looked at."""

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -81,7 +81,8 @@ class CycleDone:
     """A cycle is over at `tick`; `outcome` is confirmed, failed, or commanded where nothing in it is confirmed.
 
     `run_s` is how long the block has been run, over all parts of the run; `starts` the starts of each motor. `found`
-    says what its confirmations found. The counts are those of the whole run, this cycle included.
+    says what its confirmations found. The counts are those of the whole run, this cycle included. `features` are what
+    it showed, by name, from so many `samples`; `left_out` ones were beyond the bound of one cycle.
     """
 
     tick: int
@@ -100,11 +101,14 @@ class CycleDone:
     confirmed: int
     failed: int
     interrupted: int
+    samples: int = 0
+    left_out: int = 0
+    features: Mapping[str, float] = field(default_factory=dict)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class CheckDone:
-    """A check of this block is over at `tick`, after so many cycles done."""
+    """A check of this block is over at `tick`, after so many cycles done; the last three as in a cycle."""
 
     tick: int
     begin_tick: int
@@ -116,6 +120,9 @@ class CheckDone:
     expectations_failed: int
     run_s: float
     starts: Mapping[str, int]
+    samples: int = 0
+    left_out: int = 0
+    features: Mapping[str, float] = field(default_factory=dict)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -13,6 +13,7 @@ from enum import Enum
 from ramprig.yamlfile import Mark
 
 from .steps import AtZero, Measure
+from .wear_limits import WearRules
 
 
 class Kind(Enum):
@@ -222,7 +223,8 @@ class Cycles(Part):
     `before`, `later` another cycle, `checked` a check. `starts` are the departures from zero in one cycle, the greatest
     number of any of these parts, by motor; `check_starts` those of a check. `pause` and `check_pause` are planned
     between the end of a cycle or check and the next turn: the rest, or longer where starts are spaced. `confirmed`
-    tells whether the cycle has a `confirm` at all.
+    tells whether the cycle has a `confirm` at all. `wear` are the rules by which the cycles are judged for drift, None
+    where they are not.
     """
 
     block: int
@@ -244,6 +246,7 @@ class Cycles(Part):
     check_starts: Mapping[str, int]
     failed_most: int | None
     confirmed: bool
+    wear: WearRules | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -269,6 +272,11 @@ class Plan:
     def totals(self) -> Totals:
         """What it all adds up to."""
         return self.root.totals
+
+    @property
+    def wear(self) -> tuple[WearRules, ...]:
+        """The rules by which its cycles are judged, a block after the other."""
+        return tuple(part.wear for part in self.cycles if part.wear is not None)
 
 
 REST_VALUES = {AtZero.COAST: 0, AtZero.BRAKE: 1}

@@ -26,6 +26,7 @@ from .carry_on import CarryOn, check_same, end_latch, told_breaks
 from .columns import bench_columns
 from .compile import compile_plan
 from .cycle_run import CycleBook, RunSoFar
+from .cycle_watch import CycleWatch, Watched, Watching
 from .ending import Bounds, run_plan
 from .executive import Progress
 from .listeners import Listeners
@@ -53,7 +54,8 @@ class RunWish:
     `runs` is the folder for run folders, None for none. `settings` are the values of the command line, for the record.
     `virtual` is for a port in virtual time: the log is written in the caller's thread, and the same input gives the
     same bytes; `durable` has it synced all the same. `latest_end_unix_s` is when the run must be over. `carry_on` makes
-    it the next part of a run that was interrupted.
+    it the next part of a run that was interrupted. `watching` makes who looks on at the cycles and judges their wear;
+    without it the limits to wear in the file are not in force.
     """
 
     sequence: Sequence
@@ -67,6 +69,7 @@ class RunWish:
     durable: bool | None = None
     latest_end_unix_s: float | None = None
     carry_on: CarryOn | None = None
+    watching: Watching | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -157,36 +160,78 @@ def run_on_session(
     so_far = RunSoFar() if carry_on is None else carry_on.so_far
     plan = compile_plan(wish.sequence, wish.bench, tick_us=identity.tick_us, so_far=so_far.blocks)
     bounds = _bounds(wish, clock)
+    watch = _watch(wish, plan, so_far.part)
     runs = wish.runs if carry_on is None else carry_on.folder.parent
-    if runs is None:
-        outcome = run_plan(session, plan, rig, clock=clock, listeners=listeners, progress=progress, bounds=bounds)
-        return RunResult(outcome=_explained(outcome, [], asked_by), folder=None)
-    if carry_on is not None:
-        check_same(session, carry_on)
-        end_latch(session, carry_on, rig)
-    troubles: list[Trouble] = []
-    what = _recorded(wish, runs, port_name)
-    with recording(what, session, clock=clock, listeners=listeners, troubles=troubles) as recorder:
-        if began is not None:
-            began(recorder.folder.path)
-        book = CycleBook(so_far, tick_s=plan.tick_us / 1e6, write=recorder.on_cycle, pending=recorder.cycles_pending)
-        outcome = run_plan(
-            session,
-            plan,
-            rig,
-            clock=clock,
-            listeners=listeners,
-            keeper=recorder,
-            progress=progress,
-            book=book,
-            tally=Tally(held=so_far.held, failed=so_far.failed, first=so_far.first_failure),
-            bounds=bounds,
-        )
-        outcome = _explained(outcome, troubles, asked_by)
+    with _looking_on(watch, listeners):
+        if runs is None:
+            book = CycleBook(so_far, tick_s=plan.tick_us / 1e6, write=_nowhere, pending=lambda: 0, watch=watch)
+            outcome = run_plan(
+                session, plan, rig, clock=clock, listeners=listeners, progress=progress, book=book, bounds=bounds
+            )
+            return RunResult(outcome=_explained(outcome, [], asked_by), folder=None)
         if carry_on is not None:
-            outcome = replace(outcome, sentence=outcome.sentence + told_breaks(carry_on))
-        folder = recorder.finish(_end_of(session, plan, outcome, clock))
+            check_same(session, carry_on)
+            end_latch(session, carry_on, rig)
+        troubles: list[Trouble] = []
+        what = _recorded(wish, runs, port_name, plan)
+        with recording(what, session, clock=clock, listeners=listeners, troubles=troubles) as recorder:
+            if began is not None:
+                began(recorder.folder.path)
+            outcome = run_plan(
+                session,
+                plan,
+                rig,
+                clock=clock,
+                listeners=listeners,
+                keeper=recorder,
+                progress=progress,
+                book=CycleBook(
+                    so_far,
+                    tick_s=plan.tick_us / 1e6,
+                    write=recorder.on_cycle,
+                    pending=recorder.cycles_pending,
+                    watch=watch,
+                ),
+                tally=Tally(held=so_far.held, failed=so_far.failed, first=so_far.first_failure),
+                bounds=bounds,
+            )
+            outcome = _explained(outcome, troubles, asked_by)
+            if carry_on is not None:
+                outcome = replace(outcome, sentence=outcome.sentence + told_breaks(carry_on))
+            folder = recorder.finish(_end_of(session, plan, outcome, clock))
     return RunResult(outcome=outcome, folder=folder)
+
+
+def _nowhere(event: object) -> None:
+    """The count of cycles of a run that is not written down."""
+
+
+def _watch(wish: RunWish, plan: Plan, part: int) -> CycleWatch | None:
+    """Who looks on at the cycles; nobody where there are none, or nobody is to."""
+    if wish.watching is None or not plan.counts_cycles:
+        return None
+    return wish.watching(
+        Watched(
+            rules=plan.wear,
+            columns=bench_columns(wish.bench, tick_us=plan.tick_us),
+            tick_us=plan.tick_us,
+            part=part,
+            lines=() if wish.carry_on is None else wish.carry_on.lines,
+        )
+    )
+
+
+@contextmanager
+def _looking_on(watch: CycleWatch | None, listeners: Listeners) -> Iterator[None]:
+    """Have it see the samples; before the run's own eye, so that it has them when a cycle is over."""
+    if watch is None:
+        yield
+        return
+    listeners.add(on_block=watch.on_block)
+    try:
+        yield
+    finally:
+        listeners.remove(on_block=watch.on_block)
 
 
 def _bounds(wish: RunWish, clock: Clock) -> Bounds | None:
@@ -295,10 +340,12 @@ def _folder(what: Recorded, session: Session, clock: Clock) -> RunFolder:
     return RunFolder.create(what.runs, description, started_unix_s=clock.wall(), short_id=what.short_id)
 
 
-def _recorded(wish: RunWish, runs: Path, port_name: str) -> Recorded:
+def _recorded(wish: RunWish, runs: Path, port_name: str, plan: Plan) -> Recorded:
     """How a run of a sequence is written down."""
     sequence = wish.sequence
     settings: dict[str, object] = {"values": dict(sequence.values), **(wish.settings or {})}
+    if plan.counts_cycles and wish.watching is not None:
+        settings["wear"] = list(plan.wear)
     if wish.latest_end_unix_s is not None:
         settings["latest_end"] = rfc3339(wish.latest_end_unix_s)
     roles = ["sequence", *["include"] * (len(sequence.files) - 1)]

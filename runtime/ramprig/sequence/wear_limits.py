@@ -15,7 +15,7 @@ from ramprig.errors import RecordError
 from ramprig.quantity import format_duration
 from ramprig.yamlfile import Mark
 
-from .wear_words import Way
+from .wear_words import FEATURE_WORDS, Way, motor_of, word_of
 
 RUN_IN_CYCLES = 20
 RUN_IN_TIME_CONSTANTS = 5
@@ -112,7 +112,8 @@ class WearRules:
 
     Cycles are not judged while fewer than `run_in_cycles` are done or less than `run_in_s` has gone by since the block
     began, or went on after an interruption; the next `baseline` ones are what later ones are judged against. With
-    `detectors`, sudden changes, slow ones and drifts of the features that have limits are looked for too.
+    `detectors`, sudden changes, slow ones and drifts of the features that have limits are looked for too. `others` are
+    the limits of features that have none of their own, of the whole cycle or of one of the `motors` that it drives.
     """
 
     block: int
@@ -121,12 +122,19 @@ class WearRules:
     run_in_s: float
     baseline: int
     detectors: bool
+    motors: tuple[str, ...]
     limits: tuple[WearLimit, ...]
     others: WearLimit | None
 
     def limit_of(self, feature: str) -> WearLimit | None:
         """The limits of a feature; None where it is not judged."""
-        return next((limit for limit in self.limits if limit.feature == feature), self.others)
+        own = next((limit for limit in self.limits if limit.feature == feature), None)
+        if own is not None:
+            return own
+        word = FEATURE_WORDS.get(word_of(feature))
+        about_zero = word is not None and word.about_zero  # it has no share of itself
+        motor = motor_of(feature)
+        return None if about_zero or (motor and motor not in self.motors) else self.others
 
     def lines(self) -> Iterator[str]:
         """The rules in words."""
@@ -172,6 +180,7 @@ def _rules(found: Document) -> WearRules:
         run_in_s=float(found["run_in_s"]),
         baseline=int(found["baseline"]),
         detectors=bool(found["detectors"]),
+        motors=tuple(map(str, found["motors"])),
         limits=tuple(_limit(each) for each in found["limits"]),
         others=None if found["others"] is None else _limit(found["others"]),
     )

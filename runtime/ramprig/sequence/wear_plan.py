@@ -29,6 +29,7 @@ def wear_rules(rig: Rig, step: Cycle, *, block: int, driven: Set[str]) -> WearRu
         run_in_s=_run_in_s(rig, wish, driven),
         baseline=wish.baseline,
         detectors=wish.detectors,
+        motors=tuple(sorted(driven)),
         limits=limits,
         others=wish.others,
     )

@@ -75,6 +75,11 @@ def word_of(full_name: str) -> str:
     return full_name.rpartition(": ")[2]
 
 
+def motor_of(full_name: str) -> str:
+    """The motor of a feature by its full name; empty for one of the whole cycle."""
+    return full_name.rpartition(": ")[0].partition(" ")[0]
+
+
 def show_feature(full_name: str, value: float) -> str:
     """A feature's value as an engineer reads it; a plain number where its word is not known or it has no unit."""
     word = FEATURE_WORDS.get(word_of(full_name))

@@ -7,6 +7,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from ramprig.bench import Bench
+from ramprig.endure.live import watching
 from ramprig.port.clock import Clock, VirtualClock
 from ramprig.quantity import format_duration
 from ramprig.sequence.compile import compile_plan
@@ -46,7 +47,13 @@ def run_file(file: str, stage: Stage, *, say: Say, progress: Callable[[Progress]
     Raises FileError, RecordError and what the session raises before anything has moved.
     """
     sequence = read_sequence(file)
-    wish = RunWish(sequence=sequence, bench=stage.bench, runs=stage.runs, virtual=isinstance(stage.clock, VirtualClock))
+    wish = RunWish(
+        sequence=sequence,
+        bench=stage.bench,
+        runs=stage.runs,
+        virtual=isinstance(stage.clock, VirtualClock),
+        watching=watching(say),
+    )
     result = run_on_session(
         wish,
         stage.session,

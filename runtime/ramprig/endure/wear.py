@@ -1,0 +1,165 @@
+"""Judges the features of the cycles of a run by its rules, cycle after cycle, in memory that does not grow with it.
+
+There is one judge for a run under way, for one that is gone on with, and for the report: the same rules and the same
+recorded cycles give the same findings, and the same state.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterable, Iterator, Mapping, Sequence
+from dataclasses import dataclass, field
+from typing import Any
+
+from ramprig.errors import RecordError
+from ramprig.sequence.wear_limits import WearLimit, WearRules
+
+from .trends import FeatureTrend, Finding, Level, TrendSettings
+
+Line = Mapping[str, Any]  # JSON as it comes: what is in it is checked where it is used
+
+FIGURES = 7
+"""Significant figures of a feature that are recorded and judged; no sensor of a bench has as many."""
+TOLD_MAX = 3
+"""Features that the end of a run names; the report has them all."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Cycle:
+    """One cycle that was done, as it is recorded: ticks, ends included, and its features by full name.
+
+    Features that it does not show are left out.
+    """
+
+    number: int
+    block: int
+    part: int
+    begin_tick: int
+    end_tick: int
+    features: Mapping[str, float]
+
+    @classmethod
+    def of(cls, line: Line) -> Cycle:
+        """The cycle of a `cycle_done` line of the count of cycles. Raises RecordError."""
+        try:
+            return cls(
+                number=int(line["number"]),
+                block=int(line.get("block") or 1),
+                part=int(line.get("part") or 1),
+                begin_tick=int(line["begin_tick"]),
+                end_tick=int(line["tick"]),
+                features={str(name): float(value) for name, value in (line.get("features") or {}).items()},
+            )
+        except (KeyError, TypeError, ValueError) as error:
+            raise RecordError(f"a line of the count of cycles lacks what its features need: {error!r}") from error
+
+
+def as_recorded(values: Mapping[str, float]) -> dict[str, float]:
+    """The features of a cycle as they are written down: known ones only, to FIGURES figures."""
+    return {name: float(f"{value:.{FIGURES}g}") for name, value in values.items() if math.isfinite(value)}
+
+
+@dataclass(slots=True)
+class BlockJudge:
+    """The features of one block of cycles, judged by its rules. Two that are equal will judge alike."""
+
+    rules: WearRules
+    tick_us: int
+    features: dict[str, FeatureTrend] = field(default_factory=dict)
+    cycles: int = 0
+    run_in: int = 0
+    _part: int = 0
+    _since_tick: int = 0
+
+    def take(self, cycle: Cycle) -> list[Finding]:
+        """Take the next cycle and return what it newly shows, in the features' order."""
+        if cycle.part != self._part:  # also after an interruption: the windings have cooled meanwhile
+            self._part, self._since_tick = cycle.part, cycle.begin_tick
+        self.cycles += 1
+        gone_s = (cycle.begin_tick - self._since_tick) * self.tick_us / 1e6
+        if self.cycles <= self.rules.run_in_cycles or gone_s < self.rules.run_in_s:
+            self.run_in += 1
+            return []
+        found: list[Finding] = []
+        for name, value in cycle.features.items():
+            trend = self._trend(name)
+            if trend is not None:
+                found += trend.add(cycle.number, value)
+        return found
+
+    def _trend(self, name: str) -> FeatureTrend | None:
+        """The stream of a feature; None where it is not judged."""
+        trend = self.features.get(name)
+        limit = self.rules.limit_of(name)
+        if trend is not None or limit is None:
+            return trend
+        settings = TrendSettings(run_in=0, baseline=self.rules.baseline, detectors=self.rules.detectors)
+        trend = self.features[name] = FeatureTrend(name, settings, limit)
+        return trend
+
+    @property
+    def level(self) -> Level:
+        """The worst of all features."""
+        return max((trend.level for trend in self.features.values()), default=Level.OK)
+
+    @property
+    def established(self) -> bool:
+        """Whether anything is judged against a baseline yet."""
+        return any(trend.established for trend in self.features.values())
+
+
+@dataclass(slots=True)
+class WearJudge:
+    """All blocks of a run. Cycles of blocks without rules are passed over."""
+
+    blocks: dict[int, BlockJudge]
+    worst: Finding | None = None
+    worst_block: int = 0
+
+    @classmethod
+    def of(cls, rules: Iterable[WearRules], *, tick_us: int) -> WearJudge:
+        """A judge that has seen nothing."""
+        return cls({each.block: BlockJudge(each, tick_us) for each in rules})
+
+    def take(self, cycle: Cycle) -> list[Finding]:
+        """Take the next cycle of the run and return what it newly shows."""
+        block = self.blocks.get(cycle.block)
+        found = [] if block is None else block.take(cycle)
+        if self.worst is None:
+            self.worst = next((finding for finding in found if finding.level is Level.FAIL), None)
+            self.worst_block = cycle.block if self.worst is not None else 0
+        return found
+
+    def replay(self, lines: Iterable[Line]) -> Iterator[tuple[Cycle, list[Finding]]]:
+        """Take every cycle that lines of the count of cycles tell as done. Raises RecordError."""
+        for line in lines:
+            if line.get("kind") == "cycle_done":
+                cycle = Cycle.of(line)
+                yield cycle, self.take(cycle)
+
+    @property
+    def failing(self) -> WearLimit | None:
+        """The limit whose passing ends the run."""
+        return None if self.worst is None else self.blocks[self.worst_block].rules.limit_of(self.worst.feature)
+
+    def to_watch(self) -> list[str]:
+        """The features beyond a limit to watch, or that a detector has found, with their change."""
+        return [
+            f"{name} {_change(trend)}"
+            for block in self.blocks.values()
+            for name, trend in block.features.items()
+            if trend.level is not Level.OK
+        ]
+
+
+def _change(trend: FeatureTrend) -> str:
+    mean = trend.baseline.mean
+    if not trend.established or not mean:
+        return "beyond its limit"
+    return f"{100.0 * (trend.mean_now - mean) / abs(mean):+.1f} %"
+
+
+def listed(texts: Sequence[str], most: int = TOLD_MAX) -> str:
+    """Some of the texts in a row, the rest counted."""
+    more = len(texts) - most
+    return ", ".join(texts[:most]) + (f" and {more} more" if more > 0 else "")
