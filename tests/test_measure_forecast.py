@@ -21,6 +21,7 @@ from ramprig.measure.forecast.forecast import Forecast, ForecastWish, Interval, 
 from ramprig.measure.forecast.montecarlo import heat_a2, periodic_heat_a2
 from ramprig.measure.forecast.play import Play, core_is_there, play
 from ramprig.measure.forecast.reduction import cut_of, night_of, warm_guess
+from ramprig.measure.forecast.turns import follow
 from ramprig.measure.known import Known, figures_of
 from ramprig.measure.numbers.uncertainty import Measured
 from ramprig.measure.refusal import NotMeasurable
@@ -171,6 +172,79 @@ def test_the_reduced_run_is_the_full_one(often: str) -> None:
     rise = float(motor.winding_c.max()) - 22.0
     assert night.hottest_c["vent"] - 22.0 == pytest.approx(rise, rel=0.02)
     assert night.end_c["vent"] == pytest.approx(float(motor.winding_c[-1]), abs=0.02 * rise + 0.02)
+
+
+CYCLES = """
+sequence: to and fro, counted
+log: {{period: 20 ms}}
+steps:
+  - hold: 300 ms
+  - cycle:
+      {keys}
+      steps:
+        - reverse: {{motor: vent, to: 75 %, in: 800 ms, still within: 5 s}}
+        - hold: 1500 ms
+        - confirm: {{position of: vent, is: at least 60 deg}}
+        - reverse: {{motor: vent, to: -60 %, in: 800 ms, still within: 5 s}}
+        - hold: 1 s
+        - coast: {{motor: vent, in: 800 ms}}
+        - hold: 700 ms
+  - hold: 1 s
+"""
+CHECK = """check every: {every}
+      check:
+        - reverse: {{motor: vent, to: 40 %, in: 500 ms, still within: 5 s}}
+        - hold: 3 s
+        - coast: {{motor: vent, in: 800 ms}}
+        - hold: 500 ms"""
+KEYS = (
+    "times: 40\n      rest: 1 s",
+    "times: 40\n      starts per hour: 720",
+    "times: 41\n      " + CHECK.format(every=1),
+    "times: 40\n      starts per hour: 720\n      " + CHECK.format(every=3),
+    "times: 40\n      rest: 2 s\n      starts per hour: 720\n      failed at most: 2\n      " + CHECK.format(every=10),
+    "for: 8 min\n      starts per hour: 600\n      " + CHECK.format(every=9),
+)
+
+
+@pytest.mark.skipif(not ON_CORE, reason="without a C compiler a full night takes minutes")
+@pytest.mark.parametrize("keys", KEYS)
+def test_reduced_cycles_with_checks_and_spaced_starts_are_the_full_ones(keys: str) -> None:
+    steps, bench = sequence(CYCLES.format(keys=keys)), hot_bench()
+    plan = compile_plan(steps, bench)
+    cut = cut_of(steps, lambda one: compile_plan(one, bench).totals.least / 1000.0)
+    assert cut is not None
+    assert cut.block is not None
+    setup = drawn_setup(belief_of(bench), None)
+    motors = {"vent": setup.plant.axes[0].motor}
+    full = play(plan, bench, setup, seed=4)
+    cold = play(compile_plan(cut.cold, bench), bench, setup, seed=4)
+    warm = dict(follow(cut.block, plan.cycles[0], cold, None, motors).last_c)
+    hot = play(compile_plan(cut.hot, bench), bench, setup, seed=4, windings_c=warm)
+    night = follow(cut.block, plan.cycles[0], cold, hot, motors)
+    motor = full.motors["vent"]
+    assert float(motor.winding_c.max()) > 25.0, "it must warm for this to say anything"
+    checks = sum(turn.check for turn in full.turns)
+    assert (night.passes, night.checks) == (len(full.turns) - checks, checks)
+    assert night.elapsed_s == pytest.approx(full.elapsed_s, rel=7e-3)
+    assert night.energy_j == pytest.approx(float(full.energy_j.sum()), rel=7e-3)
+    rise = float(motor.winding_c.max()) - 22.0
+    assert night.hottest_c["vent"] - 22.0 == pytest.approx(rise, rel=0.02)
+    assert night.end_c["vent"] == pytest.approx(float(motor.winding_c[-1]), abs=0.02 * rise + 0.02)
+
+
+def test_a_night_of_many_cycles_is_followed_only_until_it_repeats() -> None:
+    """Ten million cycles at once: what repeats is passed over, and the count and time come out all the same."""
+    steps, bench = sequence(CYCLES.format(keys="times: 10000000\n      " + CHECK.format(every=1000))), hot_bench()
+    plan = compile_plan(steps, bench)
+    cut = cut_of(steps, lambda one: compile_plan(one, bench).totals.least / 1000.0)
+    assert cut is not None
+    assert cut.block is not None
+    setup = drawn_setup(belief_of(bench), None)
+    cold = play(compile_plan(cut.cold, bench), bench, setup, seed=4, on_core=ON_CORE)
+    night = follow(cut.block, plan.cycles[0], cold, None, {"vent": setup.plant.axes[0].motor})
+    assert (night.passes, night.checks) == (10_000_000, 10_001)
+    assert plan.totals.least / 1000.0 <= night.elapsed_s <= 1.1 * plan.totals.least / 1000.0
 
 
 def test_what_is_not_periodic_is_not_cut() -> None:

@@ -19,15 +19,15 @@ from ramprig.record.columns import predicted_bytes
 from ramprig.record.events import Json, jsonable
 from ramprig.sequence.columns import bench_columns
 from ramprig.sequence.compile import compile_plan
-from ramprig.sequence.plan import Plan
+from ramprig.sequence.plan import Cycles, Plan
 from ramprig.sequence.reading import Sequence as Steps
 
 from .draws import Belief, belief_of
 from .dutytype import DutyType, duty_type
 from .limits import Margin, margins
-from .montecarlo import Draw, Job, draws_of
+from .montecarlo import Draw, Job, draws_of, with_pause
 from .play import core_is_there, play
-from .reduction import COLD_PASSES, cut_of, marks_of
+from .reduction import COLD_PASSES, Cut, alike_of, cut_of
 
 DRAWS = 200
 COVERAGE = 0.95
@@ -196,11 +196,17 @@ def forecast(
         cold=plan if cut is None else compile_plan(cut.cold, bench),
         hot=None if cut is None else compile_plan(cut.hot, bench),
         cut=cut,
+        part=None if cut is None else _part_of(plan, cut),
         seed=wish.seed,
         on_core=on_core,
     )
     draws = draws_of(job, wish.draws, workers=wish.workers, most_s=wish.most_s, progress=progress)
     return _told(plan, bench, job, wish, draws)
+
+
+def _part_of(plan: Plan, cut: Cut) -> Cycles | None:
+    """The plan's part of the block of cycles that is cut."""
+    return next((part for part in plan.cycles if cut.block is not None and str(part.mark.place) == cut.place), None)
 
 
 def _least_s(steps: Steps, bench: Bench) -> float:
@@ -221,7 +227,7 @@ def _told(plan: Plan, bench: Bench, job: Job, wish: ForecastWish, draws: list[Dr
     hours = max(values["duration"].median / 3600.0, 1.0)  # a short run has its starts in one hour
     starts = {name: count / hours for name, count in plan.totals.starts.items() if count}
     if job.cut is not None and job.cut.for_s is not None:
-        starts = {name: rate * _passes_share(job, draws) for name, rate in starts.items()}
+        starts = {name: rate * _passes_share(plan, job, draws) for name, rate in starts.items()}
     rows = int(values["duration"].median * 1e6 / plan.tick_us / plan.period_ticks) + 1
     failures = Counter(draw.failed for draw in draws if draw.failed)
     return Forecast(
@@ -230,7 +236,7 @@ def _told(plan: Plan, bench: Bench, job: Job, wish: ForecastWish, draws: list[Dr
         how=_how(job, wish, draws),
         values=values,
         margins=tuple(margins(bench, draws, tick_us=plan.tick_us)),
-        duty_types=_duty_types(job, starts),
+        duty_types=_duty_types(job, starts, draws[0].pause_s),
         starts_per_hour=starts,
         log_bytes=predicted_bytes(bench_columns(bench, tick_us=plan.tick_us), rows, period_ticks=plan.period_ticks),
         trip=Odds.count(sum(trips.values()), len(draws)),
@@ -247,13 +253,16 @@ def _shortened(trip: str) -> str:
     return trip.partition(":")[0]
 
 
-def _passes_share(job: Job, draws: list[Draw]) -> float:
+def _passes_share(plan: Plan, job: Job, draws: list[Draw]) -> float:
     """Passes as they are over passes as the plan reckons them, which does not know the waits."""
     found = float(np.median([draw.passes for draw in draws if draw.whole]))
     assert job.cut is not None, "asked only of a reduced run"
     assert job.cut.for_s is not None, "asked only of a run for a time"
-    cold = job.cold.totals
-    least_s = cold.least * job.cold.tick_us / 1e6 / COLD_PASSES
+    if job.part is not None:
+        least = min(body.totals.least for body in (job.part.first, job.part.later, job.part.checked)) + job.part.pause
+        least_s = least * plan.tick_us / 1e6
+    else:
+        least_s = job.cold.totals.least * plan.tick_us / 1e6 / COLD_PASSES
     return min(1.0, found / max(1.0, math.ceil(job.cut.for_s / least_s)))
 
 
@@ -292,17 +301,18 @@ def _how(job: Job, wish: ForecastWish, draws: list[Draw]) -> tuple[str, ...]:
     return tuple(lines)
 
 
-def _duty_types(job: Job, starts: Mapping[str, float]) -> dict[str, DutyType]:
-    """From the run with every figure at its value."""
+def _duty_types(job: Job, starts: Mapping[str, float], pause_s: float) -> dict[str, DutyType]:
+    """From the run with every figure at its value; `pause_s` is what spacing its starts adds to a cycle."""
     run = play(job.cold, job.bench, job.belief.setup, seed=1, on_core=job.on_core)
     found = {}
     for name, motor in run.motors.items():
-        rows = slice(0, len(motor.duty))
+        duty, square = motor.duty, motor.square_a2
         if job.cut is not None:
-            marks = marks_of(run, job.cut)
-            rows = slice(marks[1], marks[2])
+            alike = alike_of(run, job.cut)
+            rows, added_s = slice(alike.begin, alike.end), pause_s * alike.passes
+            duty, square = (with_pause(values[rows], added_s, run.row_s) for values in (duty, square))
         tau_s = job.belief.motors[name].figures["thermal_time"].value
-        kind = duty_type(motor.duty[rows], motor.square_a2[rows], run.row_s, tau_s=tau_s, periodic=job.cut is not None)
+        kind = duty_type(duty, square, run.row_s, tau_s=tau_s, periodic=job.cut is not None)
         if name in starts or kind.word != "none":
             found[name] = kind
     return found

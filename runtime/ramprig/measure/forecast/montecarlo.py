@@ -12,20 +12,23 @@ import os
 import time
 from collections.abc import Callable, Iterator, Mapping
 from concurrent.futures import ProcessPoolExecutor
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import partial
 
 import numpy as np
 
 from ramprig.bench import Bench
+from ramprig.mock.plant import MotorParameters
 from ramprig.mock.setup import MockSetup
 from ramprig.sequence.outcome import Verdict
-from ramprig.sequence.plan import Plan
+from ramprig.sequence.plan import Cycles, Plan
 from ramprig.sequence.rig import Rig
 
 from .draws import Belief, drawn_setup
 from .play import Floats, MotorPlay, Play, play
-from .reduction import Cut, marks_of, night_of, warm_guess
+from .reduction import Cut, Night, alike_of, night_of, warm_guess
+from .turnlines import row_of
+from .turns import follow
 
 CHUNK = 5
 """Draws handed to a core at a time."""
@@ -33,13 +36,17 @@ CHUNK = 5
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Job:
-    """What every draw is made from: plans of the whole sequence or, where it is `cut`, of its cold and hot parts."""
+    """What every draw is made from: plans of the whole sequence or, where it is `cut`, of its cold and hot parts.
+
+    `part` is the plan's part of a block of cycles that is cut.
+    """
 
     bench: Bench
     belief: Belief
     cold: Plan
     hot: Plan | None
     cut: Cut | None
+    part: Cycles | None
     seed: int
     on_core: bool
 
@@ -65,6 +72,7 @@ class Draw:
     """One draw. `trip` says why it tripped, empty where it did not; `failed` what was not as expected.
 
     `whole` tells that it came to its end, so that its time, energy and end temperatures are those of the whole run.
+    `pause_s` is the shortest pause between two cycles that comes of spacing their starts.
     """
 
     whole: bool
@@ -78,6 +86,7 @@ class Draw:
     bus_low_v: float
     bus_low_step: str
     passes: int
+    pause_s: float
     motors: Mapping[str, MotorDraw]
 
 
@@ -88,10 +97,17 @@ def one_draw(job: Job, number: int) -> Draw:
     cold = play(job.cold, job.bench, setup, seed=number + 1, on_core=job.on_core)
     if job.cut is None or job.hot is None or not _went_through(cold, job.cold):
         return _draw(job, setup, cold, None)
-    taus = {name: setup.plant.axes[axis].motor.thermal_time_s for name, axis in job.belief.axis_of.items()}
-    warm = warm_guess(cold, job.cut, taus)
+    parameters = _parameters(job, setup)
+    if job.cut.block is None or job.part is None:
+        warm = warm_guess(cold, job.cut, {name: motor.thermal_time_s for name, motor in parameters.items()})
+    else:
+        warm = dict(follow(job.cut.block, job.part, cold, None, parameters).last_c)
     hot = play(job.hot, job.bench, setup, seed=number + 1, windings_c=warm, on_core=job.on_core)
     return _draw(job, setup, cold, hot)
+
+
+def _parameters(job: Job, setup: MockSetup) -> dict[str, MotorParameters]:
+    return {name: setup.plant.axes[axis].motor for name, axis in job.belief.axis_of.items()}
 
 
 def _went_through(run: Play, plan: Plan) -> bool:
@@ -104,18 +120,21 @@ def _draw(job: Job, setup: MockSetup, cold: Play, hot: Play | None) -> Draw:
     last = runs[-1]
     plans = [job.cold, job.hot] if job.hot is not None else [job.cold]
     whole = len(runs) == len(plans) and all(_went_through(run, plan) for run, plan in zip(runs, plans, strict=True))
-    night = night_of(job.cut, cold, hot) if hot is not None and whole and job.cut is not None else None
+    night = _night(job, setup, cold, hot) if hot is not None and whole else None
     motors = {}
     for name in cold.motors:
         parts = [(run, run.motors[name]) for run in runs]
-        motors[name] = _motor(job, name, parts, None if night is None else night.passes)
+        motors[name] = _motor(job, name, parts, night)
         if night is not None:
-            motors[name] = _at_night(motors[name], night.hottest_c[name], night.end_c[name])
+            motors[name] = replace(motors[name], hottest_c=night.hottest_c[name], end_c=night.end_c[name])
     trip, trip_step = next(((run.tripped, run.place) for run in runs if run.tripped), ("", ""))
     over = next((name for name, one in motors.items() if one.overload >= 1.0), None)
     if not trip and over is not None:
         trip, trip_step = f"overload: {over} grows too hot by the board's own model in the course of the run", ""
     failed = next((run.sentence for run in runs if run.verdict is not Verdict.PASSED and not run.tripped), "")
+    too_many = "" if night is None else _too_many_failed(job, runs, night.passes)
+    if too_many:
+        failed, whole = too_many, False
     high, high_step = _extreme([(run, run.bus_high_v) for run in runs])
     low, low_step = _extreme([(run, -run.bus_low_v) for run in runs])
     return Draw(
@@ -130,11 +149,40 @@ def _draw(job: Job, setup: MockSetup, cold: Play, hot: Play | None) -> Draw:
         bus_low_v=-low,
         bus_low_step=low_step,
         passes=0 if night is None else night.passes,
+        pause_s=0.0 if night is None else night.pause_s,
         motors=motors,
     )
 
 
-def _motor(job: Job, name: str, parts: list[tuple[Play, MotorPlay]], passes: int | None) -> MotorDraw:
+def _night(job: Job, setup: MockSetup, cold: Play, hot: Play) -> Night | None:
+    if job.cut is None:
+        return None
+    if job.cut.block is None or job.part is None:
+        return night_of(job.cut, cold, hot)
+    found = follow(job.cut.block, job.part, cold, hot, _parameters(job, setup))
+    return Night(
+        passes=found.passes,
+        elapsed_s=found.elapsed_s,
+        energy_j=found.energy_j,
+        hottest_c=found.hottest_c,
+        end_c=found.end_c,
+        pause_s=found.pause_s,
+    )
+
+
+def _too_many_failed(job: Job, runs: list[Play], cycles: int) -> str:
+    """Why the run would end before its time, if cycles fail as often as among those simulated; empty if it does not."""
+    block = None if job.cut is None else job.cut.block
+    if block is None or block.failed_most is None:
+        return ""
+    done = [turn for run in runs for turn in run.turns if not turn.check]
+    failed = sum(turn.failed for turn in done)
+    if failed * cycles <= block.failed_most * len(done):
+        return ""
+    return f"{failed} of {len(done)} cycles simulated fail: more than {block.failed_most} would of {cycles}"
+
+
+def _motor(job: Job, name: str, parts: list[tuple[Play, MotorPlay]], night: Night | None) -> MotorDraw:
     peak, peak_step = _extreme([(run, motor.peak_a) for run, motor in parts])
     lasting, lasting_step = _extreme([(run, motor.lasting_a) for run, motor in parts])
     speed, speed_step = _extreme([(run, motor.speed_rad_s) for run, motor in parts])
@@ -142,10 +190,8 @@ def _motor(job: Job, name: str, parts: list[tuple[Play, MotorPlay]], passes: int
     index = rig.axes[name].index
     rated_a, tau_s = rig.limits["rated_ma", index] / 1000.0, float(rig.limits["thermal_s", index])
     heat = [float(heat_a2(motor.square_a2, run.row_s, tau_s).max(initial=0.0)) for run, motor in parts]
-    if passes is not None and job.cut is not None:
-        run, motor = parts[0]
-        rows = marks_of(run, job.cut)
-        heat.append(periodic_heat_a2(motor.square_a2[rows[1] : rows[2]], run.row_s, tau_s, passes))
+    if night is not None and job.cut is not None:
+        heat.append(_night_heat_a2(job.cut, parts[0], night, tau_s))
     return MotorDraw(
         peak_a=peak,
         peak_step=peak_step,
@@ -156,20 +202,6 @@ def _motor(job: Job, name: str, parts: list[tuple[Play, MotorPlay]], passes: int
         overload=math.sqrt(max(heat)) / rated_a if rated_a else 0.0,
         hottest_c=max(float(motor.winding_c.max(initial=-273.0)) for _, motor in parts),
         end_c=float(parts[-1][1].winding_c[-1]),
-    )
-
-
-def _at_night(motor: MotorDraw, hottest_c: float, end_c: float) -> MotorDraw:
-    return MotorDraw(
-        peak_a=motor.peak_a,
-        peak_step=motor.peak_step,
-        lasting_a=motor.lasting_a,
-        lasting_step=motor.lasting_step,
-        speed_rad_s=motor.speed_rad_s,
-        speed_step=motor.speed_step,
-        overload=motor.overload,
-        hottest_c=hottest_c,
-        end_c=end_c,
     )
 
 
@@ -193,15 +225,44 @@ def heat_a2(square_a2: Floats, row_s: float, tau_s: float) -> Floats:
     return found
 
 
-def periodic_heat_a2(square_a2: Floats, row_s: float, tau_s: float, passes: int) -> float:
-    """The highest heat in the last of so many equal passes: that of one pass from 0, and what is left from before."""
+def _night_heat_a2(cut: Cut, part: tuple[Play, MotorPlay], night: Night, tau_s: float) -> float:
+    """The highest heat of the board's model at the end of the night, with a check after many cycles."""
+    run, motor = part
+    alike = alike_of(run, cut)
+    square = with_pause(motor.square_a2[alike.begin : alike.end], night.pause_s * alike.passes, run.row_s)
+    check = next((turn for turn in run.turns if turn.check), None)
+    rows = slice(0, 0) if check is None else slice(row_of(run, check.begin), row_of(run, check.end))
+    passes = max(1, night.passes // alike.passes)
+    return periodic_heat_a2(square, run.row_s, tau_s, passes, then=motor.square_a2[rows])
+
+
+def with_pause(values: Floats, pause_s: float, row_s: float) -> Floats:
+    """The rows, and those of a pause after them, in which nothing is driven."""
+    return np.concatenate([values, np.zeros(round(pause_s / row_s))])
+
+
+NOTHING: Floats = np.empty(0)
+
+
+def periodic_heat_a2(square_a2: Floats, row_s: float, tau_s: float, passes: int, *, then: Floats = NOTHING) -> float:
+    """The highest heat in the last of so many equal passes and in what comes `then`: that of each from 0, and what is
+    left from before."""
     once = heat_a2(square_a2, row_s, tau_s)
     if not len(once):
         return 0.0
     kept = math.exp(-len(once) * row_s / tau_s)
     begin = float(once[-1]) * (1.0 - kept ** (passes - 1)) / (1.0 - kept)
-    left = np.exp(-row_s / tau_s * np.arange(1, len(once) + 1))
-    return float((once + begin * left).max())
+    highest = float((once + begin * _left(len(once), row_s, tau_s)).max())
+    if not len(then):
+        return highest
+    end = float(once[-1]) + begin * kept
+    return max(highest, float((heat_a2(then, row_s, tau_s) + end * _left(len(then), row_s, tau_s)).max()))
+
+
+def _left(rows: int, row_s: float, tau_s: float) -> Floats:
+    """What is left of a heat of 1 after each row."""
+    left: Floats = np.exp(-row_s / tau_s * np.arange(1, rows + 1))
+    return left
 
 
 def cores() -> int:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import bisect
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,8 +15,9 @@ from ramprig.mock.core.library import defines, load
 from ramprig.mock.core.watched import AXIS_COLUMNS, BUS_COLUMNS, EVERY_TICKS, Watched, WatchedCore, WatchedMock
 from ramprig.mock.port import DevicePort
 from ramprig.mock.setup import MockSetup
+from ramprig.sequence.cycle_run import CycleOutcome
 from ramprig.sequence.ending import run_plan
-from ramprig.sequence.happened import CycleBegun, PassBegun
+from ramprig.sequence.happened import CheckDone, CycleDone, PassBegun
 from ramprig.sequence.listeners import Listeners
 from ramprig.sequence.outcome import Outcome, Verdict
 from ramprig.sequence.plan import Part, Plan
@@ -40,13 +41,23 @@ class MotorPlay:
     winding_c: Floats
 
 
+@dataclass(frozen=True, slots=True)
+class TurnPlayed:
+    """A cycle or a check that was done, in ticks since the run's begin; `failed` is a cycle that was not confirmed."""
+
+    check: bool
+    begin: int
+    end: int
+    failed: bool
+
+
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Play:
     """A run that is over. Rows are `row_s` apart and begin with the run's first tick, `bus_*` in V, energy in J.
 
-    `passes` are the ticks since the run's begin at which passes began, by where the repeat stands, `cycles` those of
-    cycles; `step_ticks` and `step_names` the steps that began. `tripped` says what ended it before its end, a trip or
-    the loss of the board with its supply; empty where nothing did.
+    `passes` are the ticks since the run's begin at which passes began, by where the repeat stands; `turns` are the
+    cycles and checks that were done; `step_ticks` and `step_names` the steps that began. `tripped` says what ended it
+    before its end, a trip or the loss of the board with its supply; empty where nothing did.
     """
 
     verdict: Verdict
@@ -61,7 +72,7 @@ class Play:
     energy_j: Floats
     motors: Mapping[str, MotorPlay]
     passes: Mapping[str, tuple[int, ...]]
-    cycles: tuple[int, ...]
+    turns: tuple[TurnPlayed, ...]
     step_ticks: tuple[int, ...]
     step_names: tuple[str, ...]
 
@@ -77,16 +88,18 @@ class _Notes:
     """Listens to the run."""
 
     passes: dict[str, list[int]] = field(default_factory=dict)
-    cycles: list[int] = field(default_factory=list)
+    turns: list[TurnPlayed] = field(default_factory=list)
     steps: list[tuple[int, str]] = field(default_factory=list)
 
     def on_event(self, event: object) -> None:
-        """Passes and cycles."""
+        """Passes, cycles and checks."""
         match event:
             case PassBegun(tick=tick, place=place):
                 self.passes.setdefault(place, []).append(tick)
-            case CycleBegun(tick=tick):
-                self.cycles.append(tick)
+            case CycleDone(tick=tick, begin_tick=begin, outcome=outcome):
+                self.turns.append(TurnPlayed(False, begin, tick, outcome == CycleOutcome.FAILED))
+            case CheckDone(tick=tick, begin_tick=begin):
+                self.turns.append(TurnPlayed(True, begin, tick, False))
 
     def on_trail(self, blocks: Sequence[Block]) -> None:
         """Not needed."""
@@ -171,7 +184,7 @@ def _play(rig: Rig, outcome: Outcome, notes: _Notes, rows: Floats) -> Play:
         energy_j=rows[:, 2],
         motors=motors,
         passes={place: tuple(tick - start for tick in ticks) for place, ticks in notes.passes.items()},
-        cycles=tuple(tick - start for tick in notes.cycles),
+        turns=tuple(replace(turn, begin=turn.begin - start, end=turn.end - start) for turn in notes.turns),
         step_ticks=tuple(tick - start for tick, _ in notes.steps),
         step_names=tuple(name for _, name in notes.steps),
     )

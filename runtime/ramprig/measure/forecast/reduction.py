@@ -1,9 +1,10 @@
 """A periodic night is not simulated tick by tick: a few passes cold, a few hot, and the winding between in closed form.
 
-The longest repeat (or block of cycles) among the sequence's own steps is cut to a few passes. These are simulated in
-full twice: from ambient, and with the windings where they end after many passes. Over one pass the winding's
-temperature goes from T to F(T), F being as good as a straight line (one thermal node whose heat grows with the copper's
-resistance): its slope and place follow from the cold and the hot simulation, so that after n passes
+The longest repeat (or block of cycles, of which `turns` tells more) among the sequence's own steps is cut to a few
+passes. These are simulated in full twice: from ambient, and with the windings where they end after many passes. Over
+one pass the winding's temperature goes from T to F(T), F being as good as a straight line (one thermal node whose heat
+grows with the copper's resistance): its slope and place follow from the cold and the hot simulation, so that after n
+passes
     T(n) = T* + slope^(n - 1) (T(1) - T*),   T* = F(T*).
 The length and energy of a pass go from their cold to their hot values as the temperature does. What is not cut, before
 and after the repeat, is simulated as it is.
@@ -16,16 +17,19 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from ramprig.quantity import format_duration
 from ramprig.sequence.reading import Sequence
 from ramprig.sequence.steps import Cycle, Include, Repeat, Step
 
 from .play import Floats, MotorPlay, Play
+from .turnlines import row_of
 
 COLD_PASSES = 5
 """The first; three that begin as all later ones do, whose mean length counts, since a wait ends on the runner's grid of
 50 ms and passes differ by as much; and the one after which the tail is simulated."""
 HOT_PASSES = 2
+GROUP_CYCLES = 4
+"""Cycles between two checks that are simulated: the first, three as all later ones are."""
+HOT_GROUP_CYCLES = 2
 LEAST_PASSES = 12
 """With fewer passes the whole is simulated."""
 PASSES_MAX = 10_000_000
@@ -35,35 +39,38 @@ PASSES_MAX = 10_000_000
 class Cut:
     """How a sequence is reduced: the sequences with few passes, where the repeat stands, and how long it goes on.
 
-    `cycles` says that it is a block of cycles. One of `times` and `for_s` is given.
+    `block` is the block of cycles, None where it is a repeat. One of `times` and `for_s` is given.
     """
 
     cold: Sequence
     hot: Sequence
     place: str
-    cycles: bool
+    block: Cycle | None
     times: int | None
     for_s: float | None
 
     def text(self) -> str:
         """The reduction in words."""
-        what = "cycle" if self.cycles else "repeat"
-        return (
-            f"reduced: of the {what} at {self.place} {COLD_PASSES} passes from ambient and {HOT_PASSES} hot are "
-            "simulated, what lies between by the winding's closed form"
-        )
+        if self.block is None or not self.block.check:
+            what = "repeat" if self.block is None else "cycle"
+            few = f"of the {what} at {self.place} {COLD_PASSES} passes from ambient and {HOT_PASSES} hot are"
+        else:
+            cold, hot = _few(self.block, cold=True).times, _few(self.block, cold=False).times
+            few = f"of the cycle at {self.place} {cold} from ambient and {hot} hot with their checks are"
+        spaced = ", and its starts are spaced" if self.block is not None and self.block.starts_per_hour else ""
+        return f"reduced: {few} simulated, what lies between by the winding's closed form{spaced}"
 
 
 def cut_of(sequence: Sequence, lengths_s: Callable[[Sequence], float]) -> Cut | None:
     """The reduction of a sequence; None where it has no long repeat of its own that can be cut.
 
-    `lengths_s` tells the least time that a sequence takes. A repeat that ends by a measurement, and cycles with checks
-    or a bound on starts per hour, are not cut: their passes are not alike.
+    `lengths_s` tells the least time that a sequence takes. A repeat that ends by a measurement is not cut: its passes
+    are not alike.
     """
     best: tuple[float, Cut] | None = None
     whole_s = lengths_s(sequence)
     for path, step in _candidates(sequence.steps, ()):
-        cold = replace(sequence, steps=_with_passes(sequence.steps, path, COLD_PASSES))
+        cold = replace(sequence, steps=_shortened(sequence.steps, path, cold=True))
         saved_s = whole_s - lengths_s(cold)
         assert isinstance(step, Repeat | Cycle)
         pass_s = lengths_s(cold) / COLD_PASSES
@@ -71,9 +78,9 @@ def cut_of(sequence: Sequence, lengths_s: Callable[[Sequence], float]) -> Cut | 
             continue
         cut = Cut(
             cold=cold,
-            hot=replace(sequence, steps=_with_passes(sequence.steps, path, HOT_PASSES)),
+            hot=replace(sequence, steps=_shortened(sequence.steps, path, cold=False)),
             place=str(step.mark.place),
-            cycles=isinstance(step, Cycle),
+            block=step if isinstance(step, Cycle) else None,
             times=step.times,
             for_s=None if step.for_s is None else float(step.for_s),
         )
@@ -90,22 +97,33 @@ def _candidates(steps: tuple[Step, ...], path: tuple[int, ...]) -> list[tuple[tu
                 found += _candidates(inner, here)
             case Repeat(until=None):
                 found.append((here, step))
-            case Cycle(check=(), starts_per_hour=None, failed_most=None):
+            case Cycle():
                 found.append((here, step))
     return found
 
 
-def _with_passes(steps: tuple[Step, ...], path: tuple[int, ...], passes: int) -> tuple[Step, ...]:
-    """The steps with the one at `path` repeated so often."""
+def _shortened(steps: tuple[Step, ...], path: tuple[int, ...], *, cold: bool) -> tuple[Step, ...]:
+    """The steps with few passes of the one at `path`."""
     number, rest = path[0], path[1:]
     step = steps[number]
     changed: Step
     if isinstance(step, Include) and rest:
-        changed = replace(step, steps=_with_passes(step.steps, rest, passes))
+        changed = replace(step, steps=_shortened(step.steps, rest, cold=cold))
+    elif isinstance(step, Cycle):
+        changed = _few(step, cold=cold)
     else:
-        assert isinstance(step, Repeat | Cycle)
-        changed = replace(step, times=passes, for_s=None)
+        assert isinstance(step, Repeat)
+        changed = replace(step, times=COLD_PASSES if cold else HOT_PASSES, for_s=None)
     return (*steps[:number], changed, *steps[number + 1 :])
+
+
+def _few(block: Cycle, *, cold: bool) -> Cycle:
+    """A few cycles of the block, in which each kind of turn is there and one of its kind or more follow it."""
+    times, every = COLD_PASSES if cold else HOT_PASSES, None
+    if block.check:
+        every = min(block.check_every or 1, GROUP_CYCLES if cold else HOT_GROUP_CYCLES)
+        times = max(every + 1, GROUP_CYCLES) if cold else every
+    return replace(block, times=times, for_s=None, check_every=every, starts_per_hour=None, failed_most=None, wear=None)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -119,19 +137,45 @@ class Heating:
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Night:
-    """The whole of a reduced run: passes, time and energy, and each motor's winding at its hottest and at the end."""
+    """The whole of a reduced run: passes, time and energy, and each motor's winding at its hottest and at the end.
+
+    `pause_s` is the shortest pause before a cycle that was left out of the simulation.
+    """
 
     passes: int
     elapsed_s: float
     energy_j: float
     hottest_c: Mapping[str, float]
     end_c: Mapping[str, float]
+    pause_s: float = 0.0
 
 
 def marks_of(run: Play, cut: Cut) -> tuple[int, ...]:
     """The rows at which the passes of the cut repeat began."""
-    ticks = run.cycles if cut.cycles else run.passes.get(cut.place, ())
-    return tuple(round(tick * run.tick_s / run.row_s) for tick in ticks)
+    return tuple(row_of(run, tick) for tick in run.passes.get(cut.place, ()))
+
+
+@dataclass(frozen=True, slots=True)
+class Alike:
+    """The rows of the cold run that all goes on like: from `begin` up to `end`, which are `passes` passes or cycles."""
+
+    begin: int
+    end: int
+    passes: int
+
+
+def alike_of(run: Play, cut: Cut) -> Alike:
+    """What the night repeats: a pass; of cycles with checks a group, a check and the cycles up to the next, where one
+    is simulated whole, else one cycle."""
+    if cut.block is None:
+        marks = marks_of(run, cut)
+        return Alike(marks[1], marks[2], 1)
+    every = cut.block.check_every
+    if every is not None and every <= GROUP_CYCLES:
+        checks = [turn.begin for turn in run.turns if turn.check]
+        return Alike(row_of(run, checks[0]), row_of(run, checks[1]), every)
+    begins = [turn.begin for turn in run.turns if not turn.check]
+    return Alike(row_of(run, begins[1]), row_of(run, begins[2]), 1)
 
 
 def _winding(motor: MotorPlay, row: int) -> float:
@@ -241,8 +285,3 @@ def _passes(cut: Cut, pass_s: Floats) -> int:
     assert cut.for_s is not None, "a repeat says how often or for how long"
     begun_s = np.concatenate([[0.0], np.cumsum(pass_s)])
     return max(1, min(len(pass_s), int(np.searchsorted(begun_s, cut.for_s - 1e-9, side="left"))))
-
-
-def shown(cut: Cut) -> str:
-    """How long the repeat goes on, for people."""
-    return f"{cut.times} passes" if cut.for_s is None else format_duration(cut.for_s)
