@@ -11,7 +11,7 @@ import numpy.typing as npt
 import pytest
 
 from explain_cases import Case, run_case
-from ramprig.endure import features
+from ramprig.endure import features, motorfeatures
 from ramprig.endure.features import (
     CycleFeatures,
     FeatureWalk,
@@ -33,14 +33,14 @@ from ramprig.report.making import make_report
 from ramprig.sequence.executive import Progress
 from ramprig.session.session import Session
 
-NAMES = ["tick", "time_s", *(f"vent.{name}" for name in features.CHANNELS), "supply_v", "state"]
+NAMES = ["tick", "time_s", *(f"vent.{name}" for name in motorfeatures.CHANNELS), "supply_v", "state"]
 Columns = dict[str, list[float]]
 
 
 def piece_of(rows: list[dict[str, float]]) -> Piece:
     numbers = {
         name: np.array([row.get(name, math.nan) for row in rows])
-        for name in (*(f"vent.{channel}" for channel in features.CHANNELS), "supply_v")
+        for name in (*(f"vent.{channel}" for channel in motorfeatures.CHANNELS), "supply_v")
     }
     return Piece(np.array([row["tick"] for row in rows], np.int64), numbers)
 
@@ -166,8 +166,8 @@ def test_whatever_comes_gives_numbers_that_can_be(seed: int) -> None:
         values[source.random(count) < 0.1 * source.integers(0, 3)] = math.nan
         return values
 
-    scales = zip(features.CHANNELS, (60.0, 1000.0, 1.0, 40.0, 0.5), strict=True)
-    found = features.motor_features(times, {name: channel(scale) for name, scale in scales}, channel(12.0))
+    scales = zip(motorfeatures.CHANNELS, (60.0, 1000.0, 1.0, 40.0, 0.5), strict=True)
+    found = motorfeatures.motor_features(times, {name: channel(scale) for name, scale in scales}, channel(12.0))
     for drive in (found.forward, found.backward):
         for seconds in (drive.time_to_speed_s, drive.coast_down_s):
             assert math.isnan(seconds) or 0.0 <= seconds <= times[-1] - times[0]
@@ -191,7 +191,7 @@ def test_names_and_units() -> None:
     assert units == {
         "duration": "s", "lowest supply": "V", "peak current": "A", "energy": "J", "position error": "rev",
         "travel ratio": "", "steady current": "A", "steady speed": "rpm", "time to speed": "s", "coast-down time": "s",
-        "break-away duty": "%",
+        "break-away duty": "%", "break-away current": "A", "start delay": "s", "lost motion": "deg",
     }  # fmt: skip
     assert [name for name in names if not is_judged(name)] == ["vent: position error"]
 

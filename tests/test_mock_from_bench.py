@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import math
+
 import pytest
 
 from ramprig.bench import bench_of_text
@@ -27,6 +29,29 @@ def test_faults_of_the_bench_are_those_of_the_mock() -> None:
     setup = setup_of_bench(bench_of_text(BENCH + faults, "b.yaml"), faults=("unplug",))
     assert setup.faults == ("deaf", "jammed_shaft:1", "unplug")
     assert [(fault.text, fault.from_s) for fault in setup.timed_faults] == [("encoder_dead:0", 2.0)]
+
+
+def test_a_fault_of_the_bench_may_have_a_strength() -> None:
+    wear = "{fault: friction_wear, motor: vent, strength: 2.5, from: 1 s}"
+    faults = f"mock: {{faults: [{wear}, {{fault: weak_supply, strength: 3}}]}}"
+    setup = setup_of_bench(bench_of_text(BENCH + faults, "b.yaml"))
+    assert setup.faults == ("weak_supply=3",)
+    assert [fault.text for fault in setup.timed_faults] == ["friction_wear:0=2.5"]
+    with pytest.raises(FileError, match="fault jammed_shaft cannot be 2") as caught:
+        setup_of_bench(bench_of_text(BENCH + "mock: {faults: [{fault: jammed_shaft, strength: 2}]}", "b.yaml"))
+    assert caught.value.place is not None
+
+
+def test_play_and_an_encoder_on_the_output_come_from_the_bench() -> None:
+    text = BENCH.replace("on: motor shaft", "on: output shaft", 1)
+    text = text.replace(
+        "inertia: 60 g cm2\n", "inertia: 60 g cm2\n      play: 1.5 deg\n      output friction: 20 mN m\n", 1
+    )
+    vent, fan = setup_of_bench(bench_of_text(text, "b.yaml")).plant.axes
+    assert vent.motor.play_rad == pytest.approx(math.radians(1.5))
+    assert vent.motor.output_friction_nm == pytest.approx(0.02)
+    assert (vent.encoder.on_output, fan.encoder.on_output) == (True, False)
+    assert fan.motor.play_rad == 0.0
 
 
 def test_an_encoder_that_counts_the_other_way_has_its_phases_swapped() -> None:

@@ -18,6 +18,7 @@ from ..yamlfile import (
     ListShape,
     Mark,
     QuantityShape,
+    RatioShape,
     Record,
     ScalarOr,
     TextShape,
@@ -102,6 +103,8 @@ class Safety:
 class MockFault:
     """A fault that the mock has: its name, the motor it is in (None: where it applies), and from when to when.
 
+    `strength` is in the fault's own unit, None its usual one.
+
     `mark` is where the file names it, for whoever knows which faults there are.
     """
 
@@ -109,6 +112,7 @@ class MockFault:
     motor: str | None = None
     from_s: float = 0.0
     until_s: float | None = None
+    strength: float | None = None
     mark: Mark = field(compare=False, repr=False)
 
 
@@ -229,6 +233,7 @@ _FAULT = Key("fault", _FAULT_NAME, "name of the fault", required=True)
 _MOTOR = Key("motor", TextShape(), "the motor it is in")
 _FROM = Key("from", QuantityShape(DURATION), "when it begins")
 _UNTIL = Key("until", QuantityShape(DURATION), "when it ends")
+_STRENGTH = Key("strength", RatioShape(), "how strong it is, in its own unit: see `ramprig mock --faults`")
 _SEED = Key("seed", CountShape(), "the same seed gives the same bytes", default=1)
 
 
@@ -242,6 +247,7 @@ def _fault(fields: Fields) -> MockFault:
         motor=fields.get(_MOTOR),
         from_s=from_s,
         until_s=None if end is None else end.to("s"),
+        strength=None if (strength := fields.get(_STRENGTH)) is None else float(strength),
         mark=fields.at(_FAULT),
     )
 
@@ -251,11 +257,11 @@ _FAULTS = Key(
     ListShape(
         ScalarOr(
             Built(_FAULT_NAME, lambda name, mark: MockFault(name=name, mark=mark)),
-            Record((_FAULT, _MOTOR, _FROM, _UNTIL), _fault),
+            Record((_FAULT, _MOTOR, _FROM, _UNTIL, _STRENGTH), _fault),
         ),
         most=32,
     ),
-    "faults that the mock has, by name or with motor and times",
+    "faults that the mock has, by name or with motor, times and strength",
     default=(),
 )
 

@@ -12,7 +12,7 @@ from ramprig.bench import Bench, MockFault, Motor, MotorModel, Servo, ServoModel
 from ramprig.errors import UsageError
 
 from .board import Board
-from .faults import known
+from .faults import known, strength
 from .plant import (
     VENT_BENCH,
     AxisParameters,
@@ -82,10 +82,11 @@ def _fault_text(bench: Bench, fault: MockFault) -> str:
     """The fault as the mock spells it: with `_`, and the axis of its motor."""
     spelt = fault.name.replace("-", "_")
     try:
-        known(spelt)
+        kind = known(spelt)
+        amount = "" if fault.strength is None else f"={strength(kind, fault.strength):g}"
     except UsageError as error:
         raise fault.mark.error(str(error)) from error
-    return spelt if fault.motor is None else f"{spelt}:{bench.motor(fault.motor).axis}"
+    return (spelt if fault.motor is None else f"{spelt}:{bench.motor(fault.motor).axis}") + amount
 
 
 def _supply(bench: Bench) -> SupplyParameters:
