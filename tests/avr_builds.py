@@ -19,7 +19,7 @@ def emulator() -> Path:
 
 
 @cache
-def program(*defines: str, serial: str = "T1", baud: int = 115200) -> Path:
-    """The firmware with these -D options."""
+def program(*defines: str, serial: str = "T1", baud: int = 115200, scripted: bool = False) -> Path:
+    """The firmware with these options; `scripted` with what its sensors measure written by the test."""
     folder = Path(_OUT.name) / f"program-{len(list(Path(_OUT.name).iterdir()))}"
-    return build_program(folder, serial=serial, baud=baud, defines=defines)
+    return build_program(folder, serial=serial, baud=baud, defines=defines, scripted=scripted)

@@ -98,8 +98,9 @@ def drawn_apart(ticks: Numbers, duty: Numbers, bridge_step_pct: float) -> Number
     rate = np.zeros_like(duty)
     rate[:-1] = np.abs(np.diff(duty)) / row_ticks
     rate[1:] = np.maximum(rate[1:], rate[:-1])
-    late = np.divide(bridge_step_pct / 2, rate, out=np.zeros_like(rate), where=rate > 0)
-    return np.minimum(late, row_ticks)
+    late: Numbers = np.divide(bridge_step_pct / 2, rate, out=np.zeros_like(rate), where=rate > 0)
+    capped: Numbers = np.minimum(late, row_ticks)
+    return capped
 
 
 def starts_and_stops(duty: Numbers) -> Numbers:

@@ -88,6 +88,7 @@ void board_command(struct board *board, const char *command, char *answer, size_
     unsigned number;
     int counts_per_s;
     int current_ma;
+    int64_t value;
     double amount;
     snprintf(answer, room, "ok");
     if (strcmp(command, "break") == 0) {
@@ -106,6 +107,10 @@ void board_command(struct board *board, const char *command, char *answer, size_
     } else if (sscanf(command, "fault %63s %lf", name, &amount) == 2) {
         if (!plant_set_fault(&board->bench.plant, name, 0, amount)) {
             snprintf(answer, room, "? the plant has no fault %s", name);
+        }
+    } else if (sscanf(command, "set %63s %u %" SCNd64, name, &number, &value) == 3) {
+        if (number > 4 || !chip_set_variable(&board->chip, name, (uint8_t)number, (uint32_t)value)) {
+            snprintf(answer, room, "? the program has no variable %s of %u bytes", name, number);
         }
     } else if (strcmp(command, "mark") == 0) {
         bench_mark(&board->bench);

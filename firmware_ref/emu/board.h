@@ -30,6 +30,7 @@ void board_run(struct board *board, uint32_t advance_us, bool until_line);
  *   break | framing BYTE | noise ONE_IN | lost_encoder 0|1
  *   reset power|external|brownout|watchdog
  *   script COUNTS_PER_S CURRENT_MA SUPPLY_MV | fault NAME AMOUNT   (of the plant)
+ *   set NAME BYTES VALUE  writes a variable of the program
  *   mark                  begins to time until the bridge is off
  *   probe                 what the outputs do, the stack's depth and more, as `name=value` fields; `worst_us` since the last
  * An unknown or wrong command answers `? ...`. */

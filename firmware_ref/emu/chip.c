@@ -111,25 +111,24 @@ static void find_pins(struct chip *chip)
 
 bool chip_load(struct chip *chip, const char *elf, const uint8_t *eeprom, uint32_t eeprom_bytes, uint8_t reset_flags)
 {
-    elf_firmware_t program;
     memset(chip, 0, sizeof *chip);
-    memset(&program, 0, sizeof program);
+    elf_firmware_t *program = &chip->program;
     avr_global_logger_set(no_log);
-    if (elf_read_firmware(elf, &program) != 0) {
+    if (elf_read_firmware(elf, program) != 0) {
         fprintf(stderr, "emu: %s cannot be read as a program for the controller\n", elf);
         return false;
     }
-    program.frequency = FREQUENCY;
-    program.vcc = program.avcc = program.aref = REFERENCE_MV;
+    program->frequency = FREQUENCY;
+    program->vcc = program->avcc = program->aref = REFERENCE_MV;
     chip->avr = avr_make_mcu_by_name("atmega328p");
     if (chip->avr == NULL) {
         fprintf(stderr, "emu: this simavr knows no atmega328p\n");
         return false;
     }
     avr_init(chip->avr);
-    avr_load_firmware(chip->avr, &program);
-    chip->memory_end = address_of(&program, "_end");
-    chip->worst_at = address_of(&program, "worst_steps"); /* tick.c */
+    avr_load_firmware(chip->avr, program);
+    chip->memory_end = address_of(program, "_end");
+    chip->worst_at = address_of(program, "worst_steps"); /* tick.c */
     chip->avr->sleep = no_sleep;
     chip->avr->run_cycle_limit = 1000;
     find_pins(chip);
@@ -250,6 +249,18 @@ uint32_t chip_take_worst_us(const struct chip *chip)
     data[chip->worst_at] = 0;
     data[chip->worst_at + 1] = 0;
     return steps * 4u;
+}
+
+bool chip_set_variable(const struct chip *chip, const char *name, uint8_t bytes, uint32_t value)
+{
+    uint16_t at = address_of(&chip->program, name);
+    if (at == 0 || bytes > sizeof value || at + bytes > chip->avr->ramend) {
+        return false;
+    }
+    for (uint8_t i = 0; i < bytes; i++) {
+        chip->avr->data[at + i] = (uint8_t)(value >> (8 * i));
+    }
+    return true;
 }
 
 uint16_t chip_stack_bytes(const struct chip *chip)

@@ -8,6 +8,7 @@
 
 #include <simavr/avr_uart.h>
 #include <simavr/sim_avr.h>
+#include <simavr/sim_elf.h>
 
 #include <stdbool.h>
 #include <stdint.h>
@@ -22,6 +23,7 @@ struct chip {
     avr_irq_t *encoder_b;
     avr_irq_t *current;
     avr_irq_t *supply;
+    elf_firmware_t program; /* its symbols */
     uint16_t worst_at;    /* address of the program's own worst tick, 0 = unknown */
     uint16_t memory_end;  /* first address the stack may not reach: the program's own memory lies below */
     uint8_t reset_flags;  /* MCUSR at the next start */
@@ -65,6 +67,9 @@ uint32_t chip_byte_cycles(const struct chip *chip);
 
 /* The worst time of a tick by the program's own measure in us, since the last call; 0 where it has none. */
 uint32_t chip_take_worst_us(const struct chip *chip);
+
+/* Writes the low `bytes` bytes of a value into a variable of the program, 1 to 4. False where there is none of the name. */
+bool chip_set_variable(const struct chip *chip, const char *name, uint8_t bytes, uint32_t value);
 
 /* The deepest the stack has been since the start, in bytes. */
 uint16_t chip_stack_bytes(const struct chip *chip);

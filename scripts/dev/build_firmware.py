@@ -58,10 +58,21 @@ def run(command: list[str | Path], cwd: Path | None = None) -> str:
     return done.stdout
 
 
-def build_program(out: Path, *, serial: str = "unset", baud: int = 115200, defines: tuple[str, ...] = ()) -> Path:
-    """The firmware as an ELF file, made anew in `out`."""
+def scripted_sources() -> list[Path]:
+    """The firmware's sources with its sensors replaced: a test writes what they measure."""
+    replaced = {"analog.c", "encoder.c", "encoder.S"}
+    own = [path for path in sorted(PORT.glob("*.[cS]")) if path.name not in replaced]
+    return [*sorted((FIRMWARE / "core").glob("*.c")), *own, FIRMWARE / "emu" / "scripted" / "inputs.c"]
+
+
+def build_program(
+    out: Path, *, serial: str = "unset", baud: int = 115200, defines: tuple[str, ...] = (), scripted: bool = False
+) -> Path:
+    """The firmware as an ELF file, made anew in `out`; `scripted` with what its sensors measure written by a test."""
     command: list[str | Path] = ["make", "-s", "-B", f"BUILD={out}", f"SERIAL={serial}", f"BAUD={baud}"]
     command.append(f"EXTRA={' '.join(defines)}")
+    if scripted:
+        command.append(f"SOURCES={' '.join(map(str, scripted_sources()))}")
     run(command, PORT)
     return out / "ramprig.elf"
 

@@ -19,6 +19,11 @@ _Static_assert(F_CPU == 16000000ul, "the timers' divisors are for 16 MHz");
 /* Longer than the slowest start, far shorter than a lease. */
 #define WATCHDOG WDTO_60MS
 
+/* A board with a temperature sensor has its reading here, in 1/10 degC. */
+#ifndef TEMPERATURE_DC
+#define TEMPERATURE_DC 0
+#endif
+
 static struct rr_device device;
 static int32_t counts;
 
@@ -61,7 +66,7 @@ static void inputs(void *self, struct rr_inputs *read)
     read->counts[0] = counts;
     read->current_ma[0] = analog_current_ma();
     read->supply_mv = analog_supply_mv();
-    read->temperature_dc = 0;
+    read->temperature_dc = TEMPERATURE_DC;
     read->illegal_edges = encoder_illegal();
 }
 
