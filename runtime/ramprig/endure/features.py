@@ -79,9 +79,9 @@ class CycleFeatures:
 
 
 DRIVE_NAMES = tuple(each.name for each in fields(DriveFeatures))
-MOTOR_NAMES = ("peak_current_a", "energy_j", "position_error_rev", "travel_ratio", "lost_motion_deg")
+MOTOR_NAMES = ("peak_current_a", "energy_j", "position_error_rev", "travel_ratio", "lost_motion_deg", "resistance_ohm")
 SERVO_NAMES = tuple(each.name for each in fields(ServoFeatures))
-_UNITS = {"a": "A", "rpm": "rpm", "s": "s", "j": "J", "pct": "%", "rev": "rev", "deg": "deg", "v": "V"}
+_UNITS = {"a": "A", "rpm": "rpm", "s": "s", "j": "J", "pct": "%", "rev": "rev", "deg": "deg", "v": "V", "ohm": "ohm"}
 _WORDS = {
     "coast_down_s": "coast-down time",
     "breakaway_duty_pct": "break-away duty",
@@ -98,7 +98,9 @@ NEEDS = {
     "start delay": "a start from rest, and an encoder",
     "position error": "a drive both ways, and an encoder",
     "travel ratio": "a drive both ways, and an encoder",
-    "lost motion": "the encoder on the output shaft, and a slow ramp from rest right after a drive the other way; or "
+    "resistance": "a ramp from rest of at most 25 %/s that goes on after the first motion, an encoder, a current "
+    "sensor and the supply's reading",
+    "lost motion": "the encoder on the output shaft, and such a ramp from rest right after a drive the other way; or "
     "the output clamped, and the motor pressed both ways. An encoder on the motor's shaft alone cannot show it",
     "move time": "a supply that sags measurably under the servo, while no motor is driven: a hobby servo tells nothing "
     "itself",

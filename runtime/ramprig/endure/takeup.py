@@ -1,22 +1,24 @@
-"""What the beginning of a drive shows: break-away, the delay of the motion, and the gear's lost motion at a reversal.
+"""What the beginning of a drive shows: break-away, its delay, the resistance, and the gear's lost motion at a reversal.
 
-Lost motion needs both ends of the gear. It is told
+A slow ramp from rest is a measurement of the motor by itself. By its voltage balance, duty times supply is resistance
+times current plus constant times speed (the inductance's share is nothing in a slow ramp). Summed up over time from
+rest, the output has turned by
 
-- by pressing: the encoder on the motor's shaft, the output clamped, and held duties both ways under which the motor
-  stands: the way between the two stands, the gear's winding up under that torque included;
-- by a ramp: the encoder on the output, and a slow ramp from rest against the direction of the drive before. At a duty
-  that grows evenly the position follows x = A (duty - d0)^2 once the motor turns, and the output is behind that by
-  what the motor had to turn first: x + lost. Three factors of a parabola through the positions after the output has
-  begun to move give it. Taken for one friction before and behind the play, and no lag: what that amounts to on a rig
-  is a constant part of the figure, so trends of it are worth more than its size.
+    position = a * sum(duty supply dt) - b * sum(current dt) - lost
 
-With an encoder on the motor's shaft and an output that is free, nothing here tells it.
+with b / a the resistance of winding, brushes, leads and bridge together, whatever friction and load are. Least squares
+over the samples after the encoder has begun to move give a, b, and what the motor turned before the output followed.
+That is the lost motion of the gear where the encoder sits on the output and the drive before was the other way.
+
+With the encoder on the motor's shaft, lost motion is told where the output is clamped and the motor pressed both ways:
+the way between the two stands, the gear's winding up under that torque included. With an output that is free, an
+encoder on the motor's shaft cannot tell it.
 """
 
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from itertools import pairwise
 
@@ -37,12 +39,10 @@ STAND_S = 0.4
 """A duty held for so long is looked at for a motor that stands under it, in its second half."""
 LOST_MOST_REV = 10.0 / 360.0
 """A motor that is pressed both ways and turns its output further than this is between stops, not in its play."""
-EVEN_PCT = 0.06
-"""How far a ramp's duty may be off a straight line: a ramp moves in whole hundredths."""
 FIT_LEAST = 12
-"""Samples of the ramp after the output has begun to move, fewer than which give no parabola."""
+"""Samples of the ramp after the encoder has begun to move, fewer than which give nothing."""
 FIT_GROWTH = 1.5
-"""The duty must grow by this factor at least after the output has begun to move."""
+"""The duty must grow by this factor at least after the encoder has begun to move."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -118,47 +118,62 @@ def breakaway(times: Floats, channels: Mapping[str, Floats], start: Start) -> tu
     return float(np.interp(at_s, times[moved - 1 : moved + 1], duty[moved - 1 : moved + 1])), size
 
 
-# ---- lost motion -----------------------------------------------------------------------------------------------------
+# ---- resistance and lost motion --------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Balance:
+    """The voltage balance of a slow ramp: `lost_rev` is in turns of the output.
+
+    `after_other_way` says that the drive before was of the other direction, so that the gear had play to take up.
+    """
+
+    lost_rev: float
+    resistance_ohm: float
+    after_other_way: bool
+
+
+def balances(
+    times: Floats, channels: Mapping[str, Floats], supply: Floats, starts: Sequence[Start]
+) -> Iterator[Balance]:
+    """That of each slow ramp from rest that shows it; see the first lines. `supply` (n,) is in V."""
+    for start in starts:
+        begin = max(0, start.first - 1)
+        part = slice(begin, start.ends)
+        grown, at, bus = np.abs(channels["duty_pct"][part]) / 100.0, times[part], supply[part]
+        current = channels["current_a"][part] * start.sign
+        turned = (channels["position_rev"][part] - channels["position_rev"][start.first]) * start.sign
+        free = start.moved - begin
+        if len(at) - free < FIT_LEAST or grown[-1] < FIT_GROWTH * grown[free]:
+            continue
+        is_slow = 100.0 * (grown[-1] - grown[0]) <= SLOW_PCT_PER_S * (at[-1] - at[0])
+        if not is_slow or np.isnan(grown + bus + current + turned).any():
+            continue
+        columns = (_summed(at, grown * bus)[free:], -_summed(at, current)[free:], -np.ones(len(at) - free))
+        driving, dropping, lost = (float(each) for each in np.linalg.lstsq(np.column_stack(columns), turned[free:])[0])
+        if driving > 0.0 and dropping > 0.0:  # else it is no motor that was measured
+            yield Balance(lost_rev=lost, resistance_ohm=dropping / driving, after_other_way=start.after == -start.sign)
+
+
+def _summed(times: Floats, values: Floats) -> Floats:
+    """The integral up to each sample, by trapezes."""
+    parts = (values[1:] + values[:-1]) / 2.0 * np.diff(times)
+    return np.concatenate(([0.0], np.cumsum(parts)))
+
+
+def resistance_ohm(found: Sequence[Balance]) -> float:
+    """The mean of the cycle's slow ramps; NaN without one."""
+    return float(np.mean([each.resistance_ohm for each in found])) if found else math.nan
 
 
 def lost_motion_deg(
-    times: Floats, channels: Mapping[str, Floats], starts: Sequence[Start], *, on_output: bool
+    times: Floats, channels: Mapping[str, Floats], found: Sequence[Balance], *, on_output: bool
 ) -> float:
     """Degrees at the output; NaN where the motion or the encoder's place does not show it. See the first lines."""
-    duty, counts, position = channels["duty_pct"], channels["counts"], channels["position_rev"]
     if not on_output:
-        return 360.0 * _pressed_rev(times, duty, counts, position)
-    lost = [
-        360.0 * _by_ramp_rev(duty, position, start)
-        for start in starts
-        if start.after == -start.sign and _is_even(times, duty, start)
-    ]
-    known = [each for each in lost if not math.isnan(each)]
-    return float(np.mean(known)) if known else math.nan
-
-
-def _is_even(times: Floats, duty: Floats, start: Start) -> bool:
-    """Whether the duty grows slowly, and as a straight line, from the first sample to `ends`."""
-    at, grown = times[start.first : start.ends], np.abs(duty[start.first : start.ends])
-    if len(at) < FIT_LEAST or at[-1] <= at[0]:
-        return False
-    slew = (grown[-1] - grown[0]) / (at[-1] - at[0])
-    line = grown[0] + slew * (at - at[0])
-    return bool(slew <= SLOW_PCT_PER_S and np.abs(grown - line).max() <= EVEN_PCT)
-
-
-def _by_ramp_rev(duty: Floats, position: Floats, start: Start) -> float:
-    """The parabola's constant part; see the first lines."""
-    grown, turned = np.abs(duty[start.moved : start.ends]), position[start.moved : start.ends]
-    turned = (turned - position[start.first]) * start.sign
-    known = ~np.isnan(turned)
-    grown, turned = grown[known], turned[known]
-    if len(grown) < FIT_LEAST or grown[-1] < FIT_GROWTH * grown[0]:
-        return math.nan
-    c0, c1, c2 = (float(each) for each in np.polynomial.Polynomial.fit(grown, turned, 2).convert().coef)
-    if c2 <= 0.0 or c1 >= 0.0:
-        return math.nan  # no motor that gets faster with its duty, from a duty above zero
-    return c1 * c1 / (4.0 * c2) - c0
+        return 360.0 * _pressed_rev(times, channels["duty_pct"], channels["counts"], channels["position_rev"])
+    lost = [each.lost_rev for each in found if each.after_other_way]
+    return 360.0 * float(np.mean(lost)) if lost else math.nan
 
 
 def _pressed_rev(times: Floats, duty: Floats, counts: Floats, position: Floats) -> float:
