@@ -10,11 +10,22 @@ import numpy.typing as npt
 import pytest
 
 from ramprig.endure import takeup
-from ramprig.endure.features import NEEDS, CycleFeatures, FeatureWalk, Span, absent, named, on_output_of
+from ramprig.endure.features import (
+    NEEDS,
+    CycleFeatures,
+    FeatureWalk,
+    Span,
+    absent,
+    is_judged,
+    named,
+    on_output_of,
+    unit_of,
+)
 from ramprig.endure.motorfeatures import CHANNELS, MotorFeatures, motor_features
 from ramprig.endure.servotiming import ServoFeatures, servo_features
 from ramprig.mock.plant import VENT_BENCH, Plant, PlantFault, Servo, set_fault
 from ramprig.record.scan import Piece
+from ramprig.sequence.wear_words import FEATURE_WORDS, word_of
 
 Floats = npt.NDArray[np.float64]
 GEAR = 90.0
@@ -261,6 +272,12 @@ def test_every_feature_of_a_motor_or_servo_says_what_it_asks_for() -> None:
     assert words - set(NEEDS) == {"duration", "lowest supply", "peak current", "energy"}
     assert set(NEEDS) <= words
     assert named("lost_motion_deg") == "lost motion"
+
+
+def test_every_judged_feature_of_a_motor_has_its_word_for_limits() -> None:
+    judged = {name for name in walked().values() if is_judged(name) and not name.startswith("latch")}
+    assert {word_of(name) for name in judged} <= set(FEATURE_WORDS)
+    assert all(unit_of(name) == FEATURE_WORDS[word_of(name)].unit for name in judged)
 
 
 def test_the_manifest_tells_which_encoders_sit_on_the_output() -> None:

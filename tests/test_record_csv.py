@@ -102,9 +102,9 @@ def test_the_header_has_the_columns_of_the_bench_in_order() -> None:
     )
 
 
-def printer(**signs: int) -> RowPrinter:
+def printer(*, duty_sign: int = 1, count_sign: int = 1) -> RowPrinter:
     columns = columns_of(
-        [MotorColumns("vent", 0, 1632.67, **signs)],
+        [MotorColumns("vent", 0, 1632.67, duty_sign, count_sign)],
         [ServoColumns("latch", 0, neutral_us=1500, us_per_deg=10)],
         tick_us=TICK_US,
     )

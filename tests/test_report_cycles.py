@@ -11,7 +11,8 @@ import numpy as np
 import pytest
 
 from explain_cases import Case, run_case
-from ramprig.endure.features import CycleFeatures, DriveFeatures, MotorFeatures, Span
+from ramprig.endure.features import CycleFeatures, Span
+from ramprig.endure.motorfeatures import DriveFeatures, MotorFeatures
 from ramprig.report.checks import checks_table
 from ramprig.report.digest import Digest, Interval, digest_samples
 from ramprig.report.envelope import Envelope

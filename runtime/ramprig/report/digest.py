@@ -10,7 +10,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-from ramprig.endure.features import FeatureWalk, spans_of
+from ramprig.endure.features import FeatureWalk, on_output_of, spans_of
 from ramprig.endure.recorded import TurnFeatures, recorded_features
 from ramprig.record.scan import Piece
 from ramprig.record.volumes import Stream
@@ -128,7 +128,8 @@ def digest_samples(facts: Facts) -> Digest:
     curves = {motor: _CurveWalk(digest, motor) for motor in facts.motors if f"{motor}.speed_rpm" in columns}
     recorded = recorded_features(facts.cycles)
     _keep_features(digest, recorded or [])
-    aged = FeatureWalk(facts.columns, spans_of(facts.cycles) if recorded is None else [], tick_us=facts.tick_us)
+    spans, on_output = [] if recorded is not None else spans_of(facts.cycles), on_output_of(facts.manifest)
+    aged = FeatureWalk(facts.columns, spans, tick_us=facts.tick_us, on_output=on_output)
     offset_s = 0.0
     for part, paths in facts.files_of_parts.items():
         stream = Stream(paths, columns={"time_s", *columns, *(aged.columns if aged.spans else ())})
