@@ -20,58 +20,23 @@ from endure_crash import Killed, Process
 from ramprig.errors import RecordError
 from ramprig.record import appendfile
 from ramprig.record.export import To, export_run
-from ramprig.record.folder import InputFile, RunDescription, RunFolder
-from ramprig.record.manifest import RunEnd
+from ramprig.record.keeping import Keeping
 from ramprig.record.reading import audit, read_events, read_manifest, read_samples, sample_files
 from ramprig.record.recorder import Recorder
 from ramprig.record.scan import Scan
 from ramprig.record.volumes import VOLUMES_MAX, Stream, VolumeLimits, volume_name
 from ramprig.record.writer import Trouble
-from ramprig.session.gaps import Accounting
-from record_samples import TICK_US, UTC_START_S, blocks_of, start_anchor, vent_columns, virtual_clock
+from record_long import begin, finish, rows_of
+from record_samples import blocks_of
 
 SAMPLES = 400
 
 
-def account_of(samples: int) -> Accounting:
-    return Accounting(
-        first_tick=5000, period_ticks=2, expected=samples, received=samples, lost=0, gaps=(), gaps_unlisted=0,
-        made=samples, asked_again=0, recovered=0, duplicates=0, strange_lines=0,
-    )  # fmt: skip
-
-
-def begin(
-    root: Path, limits: VolumeLimits | None, *, on_trouble: Callable[[Trouble], None] = print, durable: bool = False
-) -> Recorder:
-    description = RunDescription(name="long", inputs=(InputFile("bench", "samples.csv", b"motors: {}\n"),))
-    folder = RunFolder.create(root, description, started_unix_s=UTC_START_S, short_id="abc123")
-    return Recorder(
-        folder, vent_columns(), start=start_anchor(), tick_us=TICK_US, clock=virtual_clock(), on_trouble=on_trouble,
-        threaded=False, durable=durable, volumes=limits, free=lambda _: 10**12,
-    )  # fmt: skip
-
-
-def finish(recorder: Recorder, samples: int = SAMPLES) -> Path:
-    return recorder.finish(RunEnd(verdict="passed", stop_reason="over", accounts=(account_of(samples),)))
-
-
 def run(root: Path, limits: VolumeLimits | None, *, size: int = 50, samples: int = SAMPLES) -> Path:
-    recorder = begin(root, limits)
+    recorder = begin(root, Keeping(volumes=limits or VolumeLimits()))
     for block in blocks_of(samples, size=size):
         recorder.on_block(block)
     return finish(recorder, samples)
-
-
-def rows_of(folder: Path) -> list[bytes]:
-    """The rows of all volumes without their headers, each of which must be the same."""
-    found: list[bytes] = []
-    headers = set()
-    for path in sample_files(folder):
-        header, *rows = path.read_bytes().splitlines(keepends=True)
-        headers.add(header)
-        found += rows
-    assert len(headers) == 1
-    return found
 
 
 @settings(max_examples=12, deadline=None)
@@ -120,7 +85,7 @@ def test_each_volume_is_hashed_in_the_manifest_and_told_in_the_events(tmp_path: 
 
 
 def test_a_closed_volume_is_in_the_manifest_while_the_run_is_still_on(tmp_path: Path) -> None:
-    recorder = begin(tmp_path, VolumeLimits(rows=150))
+    recorder = begin(tmp_path, Keeping(volumes=VolumeLimits(rows=150)))
     for block in blocks_of(1200, size=50):
         recorder.on_block(block)
     manifest = read_manifest(recorder.folder.path)
@@ -198,7 +163,7 @@ def operations_of_a_run(root: Path) -> int:
 
 def live(root: Path, process: Process, *, made: Callable[[Recorder], None] = lambda recorder: None) -> None:
     """A run that begins a volume every 20 rows, synced after every block of 5."""
-    recorder = begin(root, VolumeLimits(rows=20), durable=True)
+    recorder = begin(root, Keeping(volumes=VolumeLimits(rows=20)), durable=True)
     made(recorder)
     for block in blocks_of(60, size=5):
         recorder.on_block(block)
@@ -287,7 +252,9 @@ def test_a_disk_that_is_full_at_any_moment_of_a_change_leaves_exact_counts(
         with monkeypatch.context() as patch:
             shim = SimpleNamespace(**{name: getattr(os, name) for name in dir(os)})
             shim.write, shim.open = disk.write, disk.open
-            recorder = begin(tmp_path / str(full_at), VolumeLimits(rows=20), on_trouble=note, durable=True)
+            recorder = begin(
+                tmp_path / str(full_at), Keeping(volumes=VolumeLimits(rows=20)), on_trouble=note, durable=True
+            )
             patch.setattr(appendfile, "os", shim)
             try:
                 for block in blocks_of(100, size=5):

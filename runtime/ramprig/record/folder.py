@@ -6,6 +6,8 @@
         events.jsonl    everything that happened
         trail.csv       the fast record around a trip, where there was one
         cycles.jsonl    the count of cycles, where the sequence has cycles
+        cycle-ranges.csv      least, mean and greatest of each column over each cycle
+        interval-ranges.csv   the same over each interval of a thinned log
         samples-2.csv   the samples after the first interruption, where the run was gone on with
         notes.jsonl     what people noted by hand, with copies of their photos
         bench.yaml ...  copies of the files the run was made from
@@ -41,10 +43,15 @@ SAMPLES_FILE = "samples.csv"
 EVENTS_FILE = "events.jsonl"
 TRAIL_FILE = "trail.csv"
 CYCLES_FILE = "cycles.jsonl"
+CYCLE_RANGES_FILE = "cycle-ranges.csv"
+INTERVAL_RANGES_FILE = "interval-ranges.csv"
 NOTES_FILE = "notes.jsonl"
 RESERVE_FILE = "reserve.bin"
-OWN_FILES = (RUN_FILE, SAMPLES_FILE, EVENTS_FILE, TRAIL_FILE, CYCLES_FILE, NOTES_FILE, RESERVE_FILE)
-GOING_ON = (EVENTS_FILE, CYCLES_FILE)
+OWN_FILES = (
+    *(RUN_FILE, SAMPLES_FILE, EVENTS_FILE, TRAIL_FILE, CYCLES_FILE),
+    *(CYCLE_RANGES_FILE, INTERVAL_RANGES_FILE, NOTES_FILE, RESERVE_FILE),
+)
+GOING_ON = (EVENTS_FILE, CYCLES_FILE, CYCLE_RANGES_FILE, INTERVAL_RANGES_FILE)
 """Files that a later part of a run adds to."""
 
 SLUG_MAX = 40  # characters of the name that go into the folder's

@@ -18,7 +18,10 @@ from .volumes import SAMPLES_FIRST, Stream, volume_files, volume_names
 SUMS = ("expected", "received", "lost", "written", "unwritten", "gaps_unlisted")
 MORE_SUMS = ("asked_again", "recovered", "duplicates", "strange_lines")
 HEAD_KEYS = ("format", "run", "name", "software", "port", "device", "settings", "inputs", "started")
-PART_KEYS = ("clocks", "verdict", "stop_reason", "samples", "link", "results", "limits_digest", "disk_troubles")
+PART_KEYS = (
+    *("clocks", "verdict", "stop_reason", "samples", "link", "results", "limits_digest", "disk_troubles"),
+    "keeping",
+)
 CHUNK_BYTES = 1024 * 1024
 Document = dict[str, Any]  # JSON as it comes: what is in it is checked where it is used
 
@@ -114,6 +117,8 @@ def whole_account(parts: Sequence[Document]) -> dict[str, Json]:
     known = [(entry["part"], entry["samples"]) for entry in parts if entry.get("samples")]
     without = [entry["part"] for entry in parts if not entry.get("samples")]
     whole: dict[str, Json] = {key: sum(account[key] for _, account in known) for key in SUMS + MORE_SUMS}
+    if any("thinned" in account for _, account in known):
+        whole["thinned"] = sum(account.get("thinned", 0) for _, account in known)
     whole["complete"] = not without and all(account["complete"] for _, account in known)
     for key in ("gaps", "loggings"):
         whole[key] = [{"part": part} | dict(found) for part, account in known for found in account[key]]

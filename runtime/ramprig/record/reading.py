@@ -23,12 +23,12 @@ from numpy.typing import NDArray
 
 from ..errors import RecordError
 from .events import from_rfc3339
+from .expected import KeptTicks, compare, without_account
 from .folder import CYCLES_FILE, EVENTS_FILE, FORMAT, NOTES_FILE, RUN_FILE
 from .parts import parts_of, whole_account
 from .volumes import Stream, volume_files
 
 CHUNK_BYTES = 4 * 1024 * 1024
-EXAMPLES_MAX = 5  # ticks that a statement names
 Document = dict[str, Any]  # JSON as it comes: what is in it is checked where it is used
 
 
@@ -257,102 +257,45 @@ def _audit_part(folder: Path, entry: Document, events: list[Document], *, last: 
     where = f"part {entry['part']}: " if several else ""
     finished = entry.get("status") == "finished"
     stream = Stream(volume_files(folder, entry), columns=())
-    ticks = np.concatenate([np.empty(0, np.int64), *(piece.ticks for piece in stream)])
-    torn_bytes = stream.torn_bytes
-    statements: list[str] = []
-    if not finished and last:
-        statements.append(_how_it_broke_off(ticks, events))
-    if torn_bytes and (last or finished):  # an earlier part that broke off is told of as an interruption
-        statements.append(f"the last row is torn ({torn_bytes} bytes) and was left out")
-    troubles = entry.get("disk_troubles") or []
-    statements += [f"trouble with the disk: {trouble['text']}" for trouble in troubles]
+    kept = KeptTicks.of(entry, events)
     account = entry.get("samples")
     if account:
-        found = _compare(account, ticks)
-        known_lost, missing, unexpected = account["lost"], found.missing, found.unexpected
-        statements += found.statements
+        rows, known_lost, missing, unexpected, found = _against_account(account, kept, stream)
+        ending: list[str] = []
     else:
-        known_lost, found_statements = _gaps_by_ticks(ticks, events)
-        missing = unexpected = 0
-        statements += found_statements
-    texts = tuple(where + text for text in statements)
-    return Audit(finished, len(ticks), known_lost, missing, unexpected, texts)
+        ticks = np.concatenate([np.empty(0, np.int64), *(piece.ticks for piece in stream)])
+        known_lost, found = without_account(ticks, events, kept)
+        rows, missing, unexpected = len(ticks), 0, 0
+        ending = [] if finished or not last else [_how_it_broke_off(ticks, events)]
+    statements = list(ending)
+    if stream.torn_bytes and (last or finished):  # an earlier part that broke off is told of as an interruption
+        statements.append(f"the last row is torn ({stream.torn_bytes} bytes) and was left out")
+    troubles = entry.get("disk_troubles") or []
+    statements += [f"trouble with the disk: {trouble['text']}" for trouble in troubles]
+    texts = tuple(where + text for text in statements + found)
+    return Audit(finished, rows, known_lost, missing, unexpected, texts)
+
+
+def _against_account(account: Document, kept: KeptTicks | None, stream: Stream) -> tuple[int, int, int, int, list[str]]:
+    """Rows, those told as lost, missing and unexpected ones, and what is to be said."""
+    if account["loggings"]:
+        found = compare(account, kept, (piece.ticks for piece in stream))
+        statements = found.statements()
+        if statements and account["gaps_unlisted"]:
+            statements = []
+            if found.rows != account["written"]:
+                statements = ["the rows differ from the account, and not all of its gaps are listed"]
+            return found.rows, account["lost"], 0, 0, statements
+        return found.rows, account["lost"], found.missing, found.unexpected, statements
+    rows = sum(len(piece) for piece in stream)
+    statements = [] if rows == account["written"] else [f"{rows} rows are there, {account['written']} were written"]
+    return rows, account["lost"], 0, 0, statements
 
 
 def _how_it_broke_off(ticks: NDArray[np.int64], events: list[Document]) -> str:
     last_row = f"the last row is of tick {ticks[-1]}" if len(ticks) else "there is no row"
     last_event = f"the last event is '{events[-1]['kind']}' at {events[-1]['utc']}" if events else "there is no event"
     return f"the run did not end in order ({RUN_FILE} says it is still running): {last_row}, {last_event}"
-
-
-@dataclass(frozen=True, slots=True)
-class _Comparison:
-    missing: int
-    unexpected: int
-    statements: list[str]
-
-
-def _compare(account: Document, ticks: NDArray[np.int64]) -> _Comparison:
-    """The ticks in the file against those that the loggings made and did not lose."""
-    if not account["loggings"]:
-        if len(ticks) == account["written"]:
-            return _Comparison(0, 0, [])
-        return _Comparison(0, 0, [f"{len(ticks)} rows are there, {account['written']} were written"])
-    expected = _expected_ticks(account)
-    if np.array_equal(expected, ticks):
-        return _Comparison(0, 0, [])
-    if account["gaps_unlisted"]:
-        if len(ticks) == account["written"]:
-            return _Comparison(0, 0, [])
-        return _Comparison(0, 0, ["the rows differ from the account, and not all of its gaps are listed"])
-    statements = []
-    absent, extra = np.setdiff1d(expected, ticks), np.setdiff1d(ticks, expected)
-    if len(absent):
-        statements.append(f"{len(absent)} samples are missing that were received: ticks {_some(absent)}")
-    if len(extra):
-        statements.append(f"{len(extra)} rows are of ticks that no logging made: {_some(extra)}")
-    if not statements:
-        statements.append("the rows are not in the order in which they were made, or some are there twice")
-    return _Comparison(len(absent), len(extra), statements)
-
-
-def _expected_ticks(account: Document) -> NDArray[np.int64]:
-    parts = []
-    for logging in account["loggings"]:
-        first, period = logging["first_tick"], logging["period_ticks"]
-        made = np.arange(logging["expected"], dtype=np.int64) * period + first
-        kept = np.ones(len(made), dtype=np.bool_)
-        for gap in account["gaps"]:
-            begin, rest = divmod(gap["first_tick"] - first, period)
-            if rest == 0 and 0 <= begin < len(made) and gap["period_ticks"] == period:
-                kept[begin : begin + gap["count"]] = False
-        parts.append(made[kept])
-    return np.concatenate(parts)
-
-
-def _gaps_by_ticks(ticks: NDArray[np.int64], events: list[Document]) -> tuple[int, list[str]]:
-    """For a run without an account: what its events tell as lost, and whether the ticks in the file agree."""
-    told = {event["tick"]: event for event in events if event["kind"] == "gap_found"}
-    steps = np.diff(ticks)
-    if len(steps) == 0:
-        return sum(event["count"] for event in told.values()), []
-    changes = np.flatnonzero(steps[1:] != steps[:-1]) + 1
-    usual = int(np.median(steps))
-    untold = [
-        int(ticks[place]) + usual
-        for place in ({0} | set(changes.tolist()))
-        if steps[place] > usual and int(ticks[place]) + usual not in told
-    ]
-    statements = []
-    if untold:
-        ordered = np.array(sorted(untold), dtype=np.int64)
-        statements.append(f"rows are missing, or the period changed, at {len(ordered)} places: ticks {_some(ordered)}")
-    return sum(event["count"] for event in told.values()), statements
-
-
-def _some(ticks: NDArray[np.int64]) -> str:
-    shown = ", ".join(map(str, ticks[:EXAMPLES_MAX].tolist()))
-    return shown + (" ..." if len(ticks) > EXAMPLES_MAX else "")
 
 
 def _changed_files(folder: Path, manifest: Document) -> list[str]:

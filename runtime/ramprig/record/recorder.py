@@ -15,13 +15,15 @@ from .appendfile import AppendFile, sync_folder
 from .columns import Columns
 from .events import Json, RunTime, encode_line, event_object, jsonable, rfc3339
 from .folder import CYCLES_FILE, EVENTS_FILE, TRAIL_FILE, RunFolder, software
+from .keeping import Keeping
 from .manifest import Anchor, RunEnd, clocks, sample_account, speed_account
 from .parts import PART_KEYS, Earlier, whole_account
+from .ranges import SpanPrinter
 from .rows import RowPrinter
+from .samplelog import SampleLog
 from .space import SpacePolicy, SpaceWatch, disk_free
 from .speed import SpeedMethod
-from .volumes import SAMPLES_FIRST, VolumeLimits
-from .volumewriter import VolumeWriter
+from .volumes import SAMPLES_FIRST
 from .writer import SYNC_EVERY_S, DiskWriter, Trouble
 
 BATCH_ROWS = 1024
@@ -105,7 +107,7 @@ class Recorder:
         durable: bool | None = None,
         limits_digest: str = "",
         method: SpeedMethod | None = None,
-        volumes: VolumeLimits | None = None,
+        keeping: Keeping | None = None,
         space: SpacePolicy | None = None,
         free: Callable[[Path], int] = disk_free,
         sync_every_s: float = SYNC_EVERY_S,
@@ -132,7 +134,8 @@ class Recorder:
         self._cycles = folder.go_on(CYCLES_FILE)
         self._cycles_given = self._cycles_kept = 0
         self._samples_names: list[str] = []
-        self._events, self._samples = self._begin_files(volumes or VolumeLimits())
+        self._keeping = keeping or Keeping()
+        self._events, self._samples = self._begin_files()
         cycles = [] if self._cycles is None else [self._cycles]
         self._writer = DiskWriter(
             [self._samples, self._events, *cycles],
@@ -153,28 +156,35 @@ class Recorder:
     def _new_printer(self, columns: Columns) -> RowPrinter:
         return RowPrinter(columns, tick_us=self._when.tick_us, tick_zero=self._when.tick_zero, method=self._method)
 
-    def _begin_files(self, volumes: VolumeLimits) -> tuple[AppendFile, VolumeWriter]:
+    def _begin_files(self) -> tuple[AppendFile, SampleLog]:
         try:
             events = self.folder.go_on(EVENTS_FILE) or self.folder.new_file(EVENTS_FILE)
             events.hold_alone()
             self._samples_names = [self.folder.free_name(SAMPLES_FIRST)]
             self._write_manifest("running", None)
-            samples = VolumeWriter(
+            part = 1 if self.folder.earlier is None else self.folder.earlier.number
+            when = self._when
+            samples = SampleLog(
                 self.folder,
-                self._printer.header(),
-                limits=volumes,
-                tick_us=self._when.tick_us,
-                on_begun=self._on_volume,
+                self._printer,
+                self._keeping,
+                spans=SpanPrinter(self.columns, part=part, tick_us=when.tick_us, tick_zero=when.tick_zero),
+                tick_us=when.tick_us,
+                tell=self._tell_at_once,
+                on_volume=self._on_volume,
             )
             self._samples_names = samples.names
             return events, samples
         except OSError as error:
             raise RecordError(f"the run folder {self.folder.path} cannot be written: {error.strerror}") from error
 
+    def _tell_at_once(self, event: object) -> None:
+        """Write an event down from where the disk is written. Raises OSError."""
+        self._events.append(encode_line(self._told(event)))
+
     def _on_volume(self, tick: int, rows_before: int) -> None:
         """A further volume has begun: told in the events, and the hash of the one before kept in `run.json`."""
-        event = VolumeBegun(tick=tick, samples_file=self._samples.names[-1], rows_before=rows_before)
-        self._events.append(encode_line(event_object(event, when=self._when, host_s=self._clock.now())))
+        self._tell_at_once(VolumeBegun(tick=tick, samples_file=self._samples.names[-1], rows_before=rows_before))
         self._write_manifest("running", None)
 
     def _tell_resumed(self, part: int) -> None:
@@ -212,24 +222,35 @@ class Recorder:
         batch, self._batch = self._batch, []
         self._batch_rows = 0
         if batch:
-            self._writer.submit(lambda: self._write_rows(batch))
+            self._writer.submit(lambda: self._samples.write(batch))
 
-    def _write_rows(self, batch: Sequence[Block]) -> None:
-        for rows in self._printer.tables(batch):
-            self._samples.append(rows)
+    def _told(self, event: object) -> dict[str, Json]:
+        return event_object(event, when=self._when, host_s=self._clock.now())
+
+    def _mind(self, told: dict[str, Json]) -> None:
+        """Have the samples log know of an event, after the rows that came before it; never raises RecordError."""
+        if self._writer.failure is not None or not self._samples.concerns(told):
+            return
+        with contextlib.suppress(RecordError):  # told through on_trouble
+            self._submit_batch()
+            self._writer.submit(lambda: self._samples.happened(told))
 
     def on_event(self, event: object) -> None:
         """Write down an event (a dataclass, see `events.py`), synced to the disk soon; never raises RecordError."""
-        line = encode_line(event_object(event, when=self._when, host_s=self._clock.now()))
+        told = self._told(event)
+        line = encode_line(told)
         self._writer.submit(lambda: self._events.append(line), vital=True, sync=True)
+        self._mind(told)
 
     def on_cycle(self, event: object) -> None:
         """Write an event down in the count of cycles and have the disk hold it; never raises RecordError.
 
         `cycles_pending` tells when that is done. The disk holds all rows and events handed over before it first.
         """
-        line = encode_line(event_object(event, when=self._when, host_s=self._clock.now()))
+        told = self._told(event)
+        line = encode_line(told)
         self._cycles_given += 1
+        self._mind(told)
 
         def write() -> None:
             file = self._open_cycles()
@@ -287,8 +308,7 @@ class Recorder:
     def _after_trouble(self, trouble: Trouble) -> None:
         def write_reason() -> None:
             self.folder.reserve.free()
-            event = DiskTrouble(trouble=trouble.kind.value, text=trouble.text)
-            self._events.append(encode_line(event_object(event, when=self._when, host_s=self._clock.now())))
+            self._tell_at_once(DiskTrouble(trouble=trouble.kind.value, text=trouble.text))
             self._write_manifest("running", None)
 
         self._writer.submit(write_reason, vital=True, sync=True)
@@ -309,6 +329,7 @@ class Recorder:
         if self._writer.failure is None:
             with contextlib.suppress(RecordError):  # told through on_trouble, and in the account as unwritten rows
                 self._submit_batch()
+                self._writer.submit(self._samples.end)
         self._writer.close()
         self.folder.reserve.free()
         self._samples.close()
@@ -325,6 +346,7 @@ class Recorder:
         contents = self.folder.head()
         contents["status"] = status
         contents["samples_files"] = list(self._samples_names)
+        contents["keeping"] = jsonable(self._keeping)
         contents["started"] = rfc3339(self.folder.started_unix_s)
         contents["ended"] = rfc3339(self._clock.wall()) if end else None
         contents["verdict"] = end.verdict if end else None
@@ -369,7 +391,10 @@ class Recorder:
 
     def _end_of(self, end: RunEnd) -> dict[str, Json]:
         account = sample_account(
-            end.accounts, received_rows=self._received_rows, written_rows=self._samples.written_rows
+            end.accounts,
+            received_rows=self._received_rows,
+            written_rows=self._samples.written_rows,
+            thinned_rows=self._samples.thinned_rows,
         )
         return {
             "samples": account,

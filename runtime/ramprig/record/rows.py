@@ -104,12 +104,13 @@ class Rows:
         cells = {name: cells[rows] for name, cells in self.cells.items()}
         return Rows(self.ticks[rows], self.data[edges[begin] : edges[end]], self.period_ticks, cells)
 
-    def lines(self, kept: NDArray[np.bool_]) -> bytes:
-        """The text of the rows where (n,) `kept` is true."""
+    def only(self, kept: NDArray[np.bool_]) -> Rows:
+        """The rows where (n,) `kept` is true, without their cells."""
         if kept.all():
-            return self.data
+            return self
         edges = self._edges()
-        return b"".join(self.data[edges[row] : edges[row + 1]] for row in np.flatnonzero(kept).tolist())
+        data = b"".join(self.data[edges[row] : edges[row + 1]] for row in np.flatnonzero(kept).tolist())
+        return Rows(self.ticks[kept], data, self.period_ticks, {})
 
     def _edges(self) -> list[int]:
         """Where each row begins in the text, and where the last one ends."""

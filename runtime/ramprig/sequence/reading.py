@@ -11,13 +11,12 @@ from fractions import Fraction
 from pathlib import Path
 
 from ramprig.errors import UsageError
-from ramprig.quantity import DURATION
+from ramprig.record.keeping import Keeping
 from ramprig.yamlfile import (
     Key,
     Mark,
     Names,
     Node,
-    QuantityShape,
     Reader,
     Record,
     Scalar,
@@ -35,6 +34,7 @@ from ramprig.yamlfile import (
 
 from .cycle_shape import ON_INTERRUPTION
 from .language import Language
+from .log_shape import LOG, LogWish
 from .steps import Include, Interruptions, Step
 
 INCLUDES_DEEP = 8
@@ -42,14 +42,10 @@ INCLUDES_DEEP = 8
 INCLUDES_MAX = 64
 """Most files read for one sequence, each inclusion counted."""
 
-LOG_PERIOD = Key(
-    "period", QuantityShape(DURATION, least="1 ms", most="10 s"), "time between two samples", required=True
-)
-LOG: Record[Fraction] = Record((LOG_PERIOD,), lambda f: f[LOG_PERIOD].value)
 NAME = Key("sequence", TextShape(), "what this sequence is called", required=True)
 ABOUT = Key("about", TextShape(), "what it does and for whom")
 BENCH = Key("bench", TextShape(), "the bench file it is made for, relative to this file")
-LOG_KEY = Key("log", LOG, "sampling, where it differs from the bench's")
+LOG_KEY = Key("log", LOG, "sampling, where it differs from the bench's, and how the log is kept")
 VALUES: Key[dict[str, str]] = Key(
     "values", TableShape(TextShape(), "name of a value"), "named values, settable with --set"
 )
@@ -61,9 +57,9 @@ class Sequence:
     """A sequence as its files say it.
 
     `bench` is the bench file it names, as a path from where the program runs, with the place that names it;
-    `log_period_s` overrides the bench's. `values` are those in force, `unused` those of the file's own that no step
-    uses. `files` are all files read, the sequence's own first, each once. `interruptions` is what the run does when it
-    is interrupted.
+    `log_period_s` overrides the bench's, `keeping` says how the log is kept. `values` are those in force, `unused`
+    those of the file's own that no step uses. `files` are all files read, the sequence's own first, each once.
+    `interruptions` is what the run does when it is interrupted.
     """
 
     name: str
@@ -78,6 +74,7 @@ class Sequence:
     steps: tuple[Step, ...]
     files: tuple[Source, ...] = field(repr=False, compare=False)
     interruptions: Interruptions = field(default_factory=Interruptions)
+    keeping: Keeping = field(default_factory=Keeping)
 
 
 def read_sequence(path: str | Path, *, settings: Mapping[str, str] | None = None) -> Sequence:
@@ -132,20 +129,22 @@ class _Files:
         steps = self._steps(found["steps"], names, (Path(self.path).resolve(),))
         interruptions = self._interruptions(found, names)
         bench = found.get("bench")
-        log = found.get("log")
+        log_reader = found.get("log")
+        log = LogWish() if log_reader is None else LOG.read(Reader(log_reader.node, key=log_reader.key, names=names))
         return Sequence(
             name=NAME.shape.read(found["sequence"]),
             about=ABOUT.shape.read(found["about"]) if "about" in found else "",
             mark=node.mark,
             bench=None if bench is None else Path(self.path).parent / BENCH.shape.read(bench),
             bench_mark=None if bench is None else bench.mark,
-            log_period_s=None if log is None else LOG.read(log),
-            log_mark=None if log is None else log.mark,
+            log_period_s=log.period_s,
+            log_mark=None if log_reader is None else log_reader.mark,
             values=values,
             unused=tuple(name for name in values if name not in names.used),
             steps=steps,
             files=tuple(self.sources.values()),
             interruptions=interruptions,
+            keeping=log.keeping,
         )
 
     def _interruptions(self, found: Mapping[str, Reader], names: Names) -> Interruptions:

@@ -13,6 +13,7 @@ from ramprig.port.base import Port
 from ramprig.port.clock import Clock, VirtualClock
 from ramprig.record.events import Json, jsonable, rfc3339
 from ramprig.record.folder import InputFile, RunDescription, RunFolder
+from ramprig.record.keeping import Keeping
 from ramprig.record.manifest import Anchor, RunEnd
 from ramprig.record.recorder import Recorder
 from ramprig.record.writer import Trouble, TroubleKind
@@ -86,6 +87,7 @@ class Recorded:
     short_id: str | None = None
     durable: bool | None = None
     carry_on: CarryOn | None = None
+    keeping: Keeping = field(default_factory=Keeping)
 
 
 def wanted_of(bench: Bench) -> Wanted:
@@ -317,6 +319,7 @@ def _recorder(what: Recorded, session: Session, clock: Clock, on_trouble: Callab
         threaded=not (what.virtual or isinstance(clock, VirtualClock)),  # a virtual clock does not wait for a thread
         durable=not what.virtual if what.durable is None else what.durable,
         limits_digest=session.limits.digest,
+        keeping=what.keeping,
     )
 
 
@@ -360,6 +363,7 @@ def _recorded(wish: RunWish, runs: Path, port_name: str, plan: Plan) -> Recorded
         short_id=wish.short_id,
         durable=wish.durable,
         carry_on=wish.carry_on,
+        keeping=replace(sequence.keeping, cycle_ranges=plan.counts_cycles),
     )
 
 
