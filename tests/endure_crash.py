@@ -57,6 +57,13 @@ steps:
         - coast: {{motor: vent, in: 300 ms}}
   - hold: 100 ms
 """
+LOGS = (
+    "{period: 10 ms}",
+    "{period: 10 ms, new file: {after rows: 100}}",
+    "{period: 10 ms, new file: {after rows: 100}, "
+    "thin: {keep every: 5, ranges every: 1 s, before: 400 ms, after: 200 ms, around: [cycle, failure]}}",
+)
+"""How the samples are kept: in one file, in several, and thinned."""
 COUNTS_PER_DEG = 64 * 90 / 360
 WITNESS_TICKS = 10
 
@@ -203,10 +210,12 @@ class MortalPort(ClosesItself):
 class Host:
     """A bench on a board that lives on, and lives of the host program one after another."""
 
-    def __init__(self, folder: Path, *, seed: int = 1, policy: str = "on interruption: stop") -> None:
+    def __init__(
+        self, folder: Path, *, seed: int = 1, policy: str = "on interruption: stop", log: str = LOGS[0]
+    ) -> None:
         self.folder = folder
         (folder / "bench.yaml").write_text(BENCH, "utf-8")
-        (folder / "crash.yaml").write_text(SEQUENCE.replace("POLICY", policy), "utf-8")
+        (folder / "crash.yaml").write_text(SEQUENCE.replace("POLICY", policy).replace("LOG", log), "utf-8")
         self.bench = load_bench(folder / "bench.yaml")
         self.device = MockDevice(setup_of_bench(self.bench), seed=seed)
         self.witness = Witness(self.device)

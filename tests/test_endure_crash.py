@@ -15,13 +15,13 @@ from tempfile import TemporaryDirectory
 
 import pytest
 
-from endure_crash import CYCLES, Host, Killed, Process
+from endure_crash import CYCLES, LOGS, Host, Killed, Process
 from ramprig.endure.cycles import read_cycle_record
 from ramprig.errors import RecordError, UsageError
 from ramprig.record.reading import audit, read_manifest, read_samples, sample_files
 from ramprig.sequence.outcome import Verdict
 
-POINTS_QUICK = 8
+POINTS_QUICK = 9
 POINTS_ALL = 300
 SECOND_DEATH = 0.4
 """Share of the points at which the resumed run dies too."""
@@ -29,11 +29,11 @@ DOWN_S = (0.05, 40.0)
 
 
 @cache
-def operations_of_a_whole_run() -> int:
+def operations_of_a_whole_run(log: str) -> int:
     """How many operations an undisturbed run takes."""
     with TemporaryDirectory() as folder:
         process = Process()
-        assert Host(Path(folder)).run(process).outcome.verdict is Verdict.PASSED
+        assert Host(Path(folder), log=log).run(process).outcome.verdict is Verdict.PASSED
     return process.operations
 
 
@@ -80,15 +80,17 @@ class Life:
 def live_through(folder: Path, point: int) -> None:
     """One run that dies at a random operation, at times twice, and is resumed to its end."""
     chance = random.Random(f"crash {point}")
-    host = Host(folder, seed=point)
+    log = LOGS[point % len(LOGS)]
+    operations = operations_of_a_whole_run(log)
+    host = Host(folder, seed=point, log=log)
     life = Life(host, chance, {})
-    assert life.die(chance.randrange(operations_of_a_whole_run()), resume=False)
+    assert life.die(chance.randrange(operations), resume=False)
     if not (folder / "runs").exists():
         return  # it died before there was anything to write down
     with suppress(UsageError):  # it was over already, which is checked next
         try:
             if chance.random() < SECOND_DEATH:
-                life.die(chance.randrange(operations_of_a_whole_run()), resume=True)
+                life.die(chance.randrange(operations), resume=True)
             result = host.run(Process(), resume=True)
         except RecordError as error:
             if host.witness.done:

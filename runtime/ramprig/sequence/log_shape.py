@@ -21,7 +21,7 @@ from ramprig.record.keeping import AROUND_DEFAULT, AROUND_TEXTS, Around, Keeping
 from ramprig.record.volumes import ROWS_DEFAULT, VolumeLimits
 from ramprig.yamlfile import CountShape, Fields, Key, ListShape, QuantityShape, Record, WordShape
 
-VOLUME_ROWS_LEAST = 1000
+VOLUME_ROWS_LEAST = 100
 VOLUME_ROWS_MOST = 1_000_000_000
 EVERY_MOST = 1_000_000
 
