@@ -298,6 +298,49 @@ def test_a_jammed_shaft_trips_and_the_reason_is_told(watched: tuple[DeskBench, W
     bench.type("disarm")
 
 
+def test_the_likely_cause_of_a_trip_is_said_at_once_without_a_log(bench: DeskBench, tmp_path: Path) -> None:
+    armed(bench).type("ramp vent 70 % in 1 s")
+    bench.let_pass(2.0)
+    bench.fault("jammed_shaft")
+    said = bench.let_pass(2.0)
+    tripped = next(place for place, line in enumerate(said) if line.startswith("TRIPPED: overcurrent on vent"))
+    after = said[tripped + 1 :]
+    after.remove("all outputs are off (state tripped)")
+    assert after[0] == "likely   vent jammed while turning: something stopped the shaft."
+    assert after[1].startswith("because  the shaft turned at up to 4")
+    assert any(line.startswith("next     With the power cut, turn the shaft by hand") for line in after)
+    assert bench.type("why")[1:] == after
+    assert not (tmp_path / "runs").exists() or not list((tmp_path / "runs").iterdir())
+    bench.fault("jammed_shaft", 0.0)
+    bench.type("clear")
+
+
+def test_what_cannot_be_explained_hides_no_trip(bench: DeskBench, monkeypatch: pytest.MonkeyPatch) -> None:
+    def full(*_: object, **__: object) -> None:
+        raise OSError(28, "No space left on device")
+
+    monkeypatch.setattr("tempfile.TemporaryDirectory", full)
+    armed(bench)
+    bench.fault("jammed_shaft")
+    with pytest.raises(Tripped, match="stall on vent"):
+        bench.type("jog vent 40 % for 5 s")
+    said = bench.let_pass(2.0)
+    assert any(line.startswith("the cause could not be looked for: OSError") for line in said)
+    bench.fault("jammed_shaft", 0.0)
+    bench.type("clear")
+
+
+def test_a_sequence_run_in_the_shell_tells_the_likely_cause(bench: DeskBench) -> None:
+    bench.fault("jammed_shaft")
+    with pytest.raises(RamprigError, match="tripped"):
+        bench.type(f"run {SCRIPTS / 'jog_check.yaml'}")
+    said = bench.hear()
+    likely = next(place for place, line in enumerate(said) if line.startswith("likely   vent"))
+    assert likely < next(place for place, line in enumerate(said) if line.startswith("tripped: "))
+    bench.fault("jammed_shaft", 0.0)
+    bench.type("clear")
+
+
 def test_a_trip_between_two_commands_is_kept_until_it_is_cleared(bench: DeskBench) -> None:
     armed(bench).type("ramp vent 30 %")
     bench.fault("jammed_shaft")
@@ -315,7 +358,9 @@ def test_a_lost_link_is_told_and_reopening_starts_disarmed(watched: tuple[DeskBe
     watch.script = [(1.0, lambda b: b.fault("unplug"))]
     with pytest.raises(LinkLost):
         bench.type("jog vent 30 % for 20 s")
-    assert any("LINK LOST" in line for line in bench.hear())
+    said = bench.hear()
+    lost = next(place for place, line in enumerate(said) if "LINK LOST" in line)
+    assert said[lost + 1].startswith("likely   the cable was pulled")
     assert bench.desk.dead
     assert bench.desk.snapshot.state == "no link"
     with pytest.raises(LinkError, match="'reopen'"):

@@ -23,7 +23,10 @@ AIM_S = 60.0
 DRAWS = 200
 WORKERS = 2
 SCRIPTS = Path(__file__).resolve().parent.parent
-NIGHTS = (("repeat for 8 h", "overnight_sweep.yaml", {"night": "8 h"}), ("950 cycles", "vent_night.yaml", {"cycles": "950"}))
+NIGHTS = (
+    ("repeat for 8 h", "overnight_sweep.yaml", {"night": "8 h"}),
+    ("950 cycles", "vent_night.yaml", {"cycles": "950"}),
+)
 """A repeat, and cycles with checks whose starts are spaced so that they take eight hours."""
 
 

@@ -223,26 +223,14 @@ def tell_end(outcome: Outcome, folder: Path | None, *, rehearsal: bool) -> None:
     if rehearsal:
         tell(NOT_PROVED)
     if folder is not None:
+        from ramprig.report.explain import likely_lines
+
         for line in likely_lines(folder):
             say_surely(line)
         say_surely(f"run folder: {folder}")
     if not outcome.stop_confirmed:
         say_surely(NOT_OFF)
     say_surely(str(outcome))
-
-
-def likely_lines(folder: Path) -> list[str]:
-    """The likely cause with what speaks for it and the next step; none where the run passed.
-
-    The run is over and its sentence follows: whatever goes wrong in explaining it must not hide that.
-    """
-    from ramprig.report.explain import explain_folder
-
-    try:
-        explanation = explain_folder(folder)
-    except Exception as error:  # also a bug of ours: the end of the run is to be told all the same
-        return [f"the end could not be explained: {type(error).__name__}: {error}"]
-    return [] if explanation is None else explanation.lines()
 
 
 def on_terminal() -> bool:

@@ -63,6 +63,18 @@ def explain_folder(folder: Path) -> Explanation | None:
     return explain(gather(folder))
 
 
+def likely_lines(folder: Path) -> list[str]:
+    """The likely cause with what speaks for it and the next step, for a terminal; none where the run passed.
+
+    The run is over and its sentence follows: whatever goes wrong in explaining it must not hide that.
+    """
+    try:
+        explanation = explain_folder(folder)
+    except Exception as error:  # also a bug of ours: the end of the run is to be told all the same
+        return [f"the end could not be explained: {type(error).__name__}: {error}"]
+    return [] if explanation is None else explanation.lines()
+
+
 def explain(facts: Facts) -> Explanation | None:
     """As `explain_folder`, of what was gathered."""
     verdict = facts.verdict

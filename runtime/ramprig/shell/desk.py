@@ -141,6 +141,7 @@ class Desk(Keeper):
         )
         over = "" if session.trip is not None else " (cleared since)"
         self._say(f"last trip, at tick {record.tick}: {explain_trip(trip, self._rig)}{over}")
+        self._say_all(self.likely)
 
     def _move(self, command: c.Command) -> None:
         motions = self._motions

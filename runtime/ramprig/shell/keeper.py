@@ -17,10 +17,11 @@ from ramprig.quantity import format_duration
 from ramprig.sequence.listeners import Listeners
 from ramprig.sequence.rig import Rig
 from ramprig.sequence.tripsay import explain_trip
-from ramprig.session import Session, StopReport, Wanted
+from ramprig.session import Block, Session, StopReport, Wanted
 from ramprig.session import events as e
 from ramprig_link.host import HostLink
 
+from .aftermath import Aftermath
 from .live import Live, Snapshot
 from .logbook import Logbook
 from .motions import Motions
@@ -77,6 +78,7 @@ class Keeper:
         self._log = Logbook(bench, runs, self._listeners, port.clock, demand_stop=self._disk_trouble)
         self._teller = Teller(bench)
         self._live = Live(bench)
+        self._aftermath = Aftermath(bench, port.clock)
         self._state = "opening"
         self._doing = ""
         self._last_trip = ""
@@ -86,6 +88,9 @@ class Keeper:
         self._cautioned = False
         self._closing = False
         self._trail_tries = 0
+        self._unexplained: e.Tripped | None = None
+        self.likely: list[str] = []
+        """What was said of the cause of the last trip that was seen to come."""
         self._looked_s = 0.0
 
     # ---- stopping, from any thread -------------------------------------------------------------------------------
@@ -126,6 +131,10 @@ class Keeper:
         self._teller.rig = self._rig
         self._motions = Motions(self._rig, session, now=self._clock.now, breathe=self._breathe_armed, say=self._say)
         self._live.forget()
+        self._aftermath.forget()
+        self._unexplained = None
+        self.likely = []
+        self._trail_tries = 0
         self._lost = self._unconfirmed = False
         self.failed = None
         self._state = "tripped" if session.trip is not None else "off"
@@ -139,7 +148,7 @@ class Keeper:
             return True
         if not self._lost and (self._state in ("armed", "stopping") or self._unconfirmed):
             self._stop(1)
-        if self._log.open and not self._lost:
+        if self._trail_tries and not self._lost:
             self._wait_for_trail()
         if self._log.open:
             self._end_log("the shell was left")
@@ -195,8 +204,10 @@ class Keeper:
         if now_s - self._looked_s >= pace_s:
             self._looked_s = now_s
             if session.valid and not self._unconfirmed:
-                self._state = session.state().state.word
-                self._save_trail(session)
+                reading = session.state()
+                self._state = reading.state.word
+                self._aftermath.take_reading(reading)
+                self._look_at_trail(session)
             self._look()
 
     def _look(self) -> None:
@@ -221,21 +232,33 @@ class Keeper:
         session = self._session
         return "restarted" if session is not None and not session.valid else self._state
 
-    def _save_trail(self, session: Session) -> None:
-        """After a trip, once the board has it whole, put its fast record into the open log."""
+    def _look_at_trail(self, session: Session) -> None:
+        """After a trip, once the board has its fast record whole: put it into the open log, say the likely cause."""
         if self._trail_tries == 0:
             return
         self._trail_tries -= 1
         if session.trip is None or self._state != "tripped":
+            self._trail_tries = 0  # it was cleared, and its trail may be gone
             return
         block = session.trail(min(session.trip.index, session.identity.axes - 1))
-        if block is not None:
-            self._trail_tries = 0
+        if block is None and self._trail_tries:
+            return
+        self._trail_tries = 0
+        if self._unexplained is not None:
+            self._explain("tripped", explain_trip(self._unexplained, self._rig), trail=block)
+            self._unexplained = None
+        if block is not None and self._log.open:
             self._log.trail(block)
             self._say(f"the trail of the trip is in the log ({len(block)} records)")
 
+    def _explain(self, verdict: str, reason: str, *, trail: Block | None = None) -> None:
+        if self._session is not None:
+            self.likely = self._aftermath.lines(self._session, self._rig, verdict=verdict, reason=reason, trail=trail)
+            self._say_all(self.likely)
+
     def _on_event(self, event: e.Event) -> None:
         """From inside the pump: must not call the session."""
+        self._aftermath.take_event(event)
         match event:
             case e.Armed():
                 self._state = "armed"
@@ -248,6 +271,7 @@ class Keeper:
                 self._last_trip = event.trip
                 self._trail_tries = TRAIL_TRIES if self._log.open else 0
                 if event.learned is not e.Learned.AT_OPEN:
+                    self._trail_tries, self._unexplained = TRAIL_TRIES, event
                     self.failed = Tripped(event.trip, event.tick or 0, explain_trip(event, self._rig))
             case e.Restarted():
                 self.failed = Tripped("restarted", event.tick or 0, "the device has restarted")
@@ -271,6 +295,7 @@ class Keeper:
             case LinkLost():
                 self._lost = True
                 self._say(f"LINK LOST: {error}")
+                self._explain("link lost", str(error))
                 self._say("The board stops by itself when its lease is over. 'reopen' opens the device anew.")
                 if self._log.open:
                     self._end_log("the link was lost", sampling=False)

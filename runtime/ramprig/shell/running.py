@@ -63,6 +63,11 @@ def run_file(file: str, stage: Stage, *, say: Say, progress: Callable[[Progress]
         progress=progress,
     )
     outcome = result.outcome
+    if result.folder is not None:
+        from ramprig.report.explain import likely_lines
+
+        for line in likely_lines(result.folder):
+            say(line)
     say(str(outcome))
     for failure in outcome.failures:
         say(f"  failed: {failure.sentence} [{failure.place}]")
