@@ -31,6 +31,8 @@ from .reduction import COLD_PASSES, Cut, alike_of, cut_of
 
 DRAWS = 200
 COVERAGE = 0.95
+LONG_S = 600.0
+"""From so long on a duration is told in hours, minutes and seconds."""
 ENAMEL_C = 105.0
 """What the winding of class A stands for long (IEC 60085, from memory); small motors say seldom what theirs does."""
 
@@ -69,6 +71,9 @@ class Interval:
 
     def __str__(self) -> str:
         half = (self.high - self.low) / 2.0
+        if self.unit == "s" and self.median >= LONG_S:
+            low, median, high = (format_duration(round(value)) for value in (self.low, self.median, self.high))
+            return f"{median} ({low} to {high})"
         if half <= 0.0:
             return f"{self.median:.6g} {self.unit} in every draw"
         _, rounded = rounded_pair(self.median, half)
