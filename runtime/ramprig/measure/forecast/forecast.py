@@ -73,7 +73,7 @@ class Interval:
         half = (self.high - self.low) / 2.0
         if self.unit == "s" and self.median >= LONG_S:
             low, median, high = (format_duration(round(value)) for value in (self.low, self.median, self.high))
-            return f"{median} ({low} to {high})"
+            return f"{median} in every draw" if low == high else f"{median} ({low} to {high})"
         if half <= 0.0:
             return f"{self.median:.6g} {self.unit} in every draw"
         _, rounded = rounded_pair(self.median, half)
