@@ -12,9 +12,8 @@ from dataclasses import dataclass
 
 from ramprig.bench import Bench, Motor
 from ramprig.quantity import format_bytes, format_duration
-from ramprig.record.columns import predicted_bytes
 from ramprig.record.space import SpacePolicy
-from ramprig.sequence.columns import bench_columns
+from ramprig.sequence.log_forecast import forecast_log
 from ramprig.sequence.plan import Plan
 from ramprig.sequence.reading import Sequence
 
@@ -141,5 +140,4 @@ def _disk(bench: Bench, plan: Plan, seconds: float, free_bytes: int) -> Iterator
 
 def forecast_bytes(bench: Bench, plan: Plan, seconds: float) -> int:
     """How large the log becomes in so many seconds, in bytes."""
-    rows = round(seconds * 1e6 / plan.tick_us) // plan.period_ticks + 1
-    return predicted_bytes(bench_columns(bench, tick_us=plan.tick_us), rows, period_ticks=plan.period_ticks)
+    return forecast_log(plan, bench, round(seconds * 1e6 / plan.tick_us)).size_bytes

@@ -106,6 +106,7 @@ def _plan_of(
         remarks=(*remarks, *compiler.remarks, *unused),
         cycles=tuple(part for part in body.parts if isinstance(part, Cycles)),
         counts_cycles=any(isinstance(step, Cycle) for step in sequence.steps),
+        keeping=sequence.keeping,
     )
 
 

@@ -10,6 +10,7 @@ from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
 from enum import Enum
 
+from ramprig.record.keeping import Keeping
 from ramprig.yamlfile import Mark
 
 from .steps import AtZero, Measure
@@ -254,7 +255,8 @@ class Plan:
     """A whole sequence, ready to run: `root` is the tree, its last part brings every motor to zero.
 
     `period_ticks` and `mask` are how it is logged. `longest_window` is the longest time back, in ticks, that an
-    expectation looks. `remarks` are sentences for the user. `cycles` are those of the tree, in order.
+    expectation looks. `remarks` are sentences for the user. `cycles` are those of the tree, in order. `keeping` is how
+    the log is kept.
     """
 
     name: str
@@ -267,6 +269,7 @@ class Plan:
     remarks: tuple[str, ...]
     cycles: tuple[Cycles, ...] = ()
     counts_cycles: bool = False
+    keeping: Keeping = field(default_factory=Keeping)
 
     @property
     def totals(self) -> Totals:

@@ -6,10 +6,9 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 
 from ramprig.bench import Bench, Motor
-from ramprig.quantity import format_bytes, format_current, format_duration, format_duty
-from ramprig.record.columns import predicted_bytes
+from ramprig.quantity import format_current, format_duration, format_duty
 
-from .columns import bench_columns
+from .log_forecast import log_text, thinning_text
 from .plan import Branches, Cycles, Loop, Part, Plan, Run, Series, Totals
 
 LINES_MAX = 2000
@@ -45,7 +44,9 @@ def summary_lines(plan: Plan, bench: Bench) -> list[str]:
     totals = plan.totals
     lines.append(f"orders    {totals.orders}, expectations {totals.judgements}")
     lines += [f"cycles    {part.text.removeprefix('cycle ')}" for part in plan.cycles]
-    lines.append(f"log       {_log(plan, bench)}")
+    lines.append(f"log       {log_text(plan, bench)}")
+    if plan.keeping.thinning is not None:
+        lines.append(f"thinned   {thinning_text(plan)}")
     lines += [f"remark    {remark}" for remark in plan.remarks]
     return lines
 
@@ -87,20 +88,6 @@ def _motor(motor: Motor, totals: Totals, bench: Bench) -> str:
 
 def _count(number: int, what: str) -> str:
     return f"{number} {what}" if number == 1 else f"{number} {what}s"
-
-
-def _log(plan: Plan, bench: Bench) -> str:
-    columns = bench_columns(bench, tick_us=plan.tick_us)
-    totals = plan.totals
-    period = format_duration(_seconds(plan, plan.period_ticks))
-    rows = totals.least // plan.period_ticks + 1
-    size = format_bytes(predicted_bytes(columns, rows, period_ticks=plan.period_ticks))
-    text = f"every {period}, about {rows} rows, {size}"
-    if totals.most > totals.least:
-        rows = totals.most // plan.period_ticks + 1
-        size = format_bytes(predicted_bytes(columns, rows, period_ticks=plan.period_ticks))
-        text += f"; {rows} rows, {size} at the longest"
-    return text
 
 
 # ---- the timeline ------------------------------------------------------------------------------------------------

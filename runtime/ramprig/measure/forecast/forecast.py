@@ -15,10 +15,9 @@ from ramprig.extras import need
 from ramprig.measure.numbers.uncertainty import rounded_pair
 from ramprig.measure.refusal import NotMeasurable
 from ramprig.quantity import format_bytes, format_duration
-from ramprig.record.columns import predicted_bytes
 from ramprig.record.events import Json, jsonable
-from ramprig.sequence.columns import bench_columns
 from ramprig.sequence.compile import compile_plan
+from ramprig.sequence.log_forecast import forecast_log
 from ramprig.sequence.plan import Cycles, Plan
 from ramprig.sequence.reading import Sequence as Steps
 
@@ -243,7 +242,7 @@ def _told(plan: Plan, bench: Bench, job: Job, wish: ForecastWish, draws: list[Dr
         margins=tuple(margins(bench, draws, tick_us=plan.tick_us)),
         duty_types=_duty_types(job, starts, draws[0].pause_s),
         starts_per_hour=starts,
-        log_bytes=predicted_bytes(bench_columns(bench, tick_us=plan.tick_us), rows, period_ticks=plan.period_ticks),
+        log_bytes=forecast_log(plan, bench, rows * plan.period_ticks).size_bytes,
         trip=Odds.count(sum(trips.values()), len(draws)),
         failure=Odds.count(sum(failures.values()), len(draws)),
         trips=dict(trips.most_common(5)),
