@@ -42,9 +42,9 @@ def cycle_of(wear: str) -> Cycle:
 
 def rules(wear: str, *driven: str) -> WearRules:
     """Its rules on the small bench, where it drives these motors."""
-    found = wear_rules(Rig.of(small_bench()), cycle_of(wear), block=1, driven=set(driven or ("vent",)))
-    assert found is not None
-    return found
+    driven_here = set(driven or ("vent",))
+    found = wear_rules(Rig.of(small_bench()), cycle_of(wear), block=1, driven=driven_here, driven_in_check=None)
+    return found[0]
 
 
 def limit(text: str) -> str:
@@ -56,21 +56,46 @@ def test_without_a_word_everything_is_watched_and_nothing_ends_the_run() -> None
     assert found.limits == ()
     assert found.detectors
     assert not found.can_fail
-    assert (found.run_in_cycles, found.baseline) == (20, 100)
+    assert (found.run_in_turns, found.baseline) == (20, 100)
     assert found.run_in_s == 5 * 60.0  # five of the thermal time constants that the bench file says
     other = found.limit_of("vent: energy")
     assert other is not None
     assert other.watch == Threshold(text="+- 10 %", low=-0.1, high=0.1)
     assert list(found.lines()) == [
-        "'open': after a run-in of 20 cycles and 5 min, against the 100 cycles after it",
-        "every feature: watch +- 10 %, in 3 of 5 cycles",
-        "sudden and slow changes and drifts: watch, by figures of this program, no standard",
+        "'open' after a run-in of 20 cycles and 5 min, against the 100 cycles after it",
+        "every feature: watch +- 10 %, 3 of 5 cycles",
+        "sudden changes, slow ones and drifts: watch (figures of this program, no standard)",
         "no limit ends the run",
     ]
 
 
 def test_wear_off_judges_nothing() -> None:
-    assert wear_rules(Rig.of(small_bench()), cycle_of("wear: off"), block=1, driven={"vent"}) is None
+    assert both("wear: off") == ()
+
+
+def both(wear: str) -> tuple[WearRules, ...]:
+    """The rules of cycles that drive `vent`, and of checks that drive `fan`."""
+    rig = Rig.of(small_bench())
+    return wear_rules(rig, cycle_of(wear), block=1, driven={"vent"}, driven_in_check={"fan"})
+
+
+def test_checks_have_limits_of_their_own() -> None:
+    cycles, checks = both(
+        "wear:\n"
+        "        limits: [{feature: energy, of: vent, fail: +5 %}]\n"
+        "        checks: {baseline: 4, limits: [{feature: lost motion, of: fan, fail: at most 4 deg}]}"
+    )
+    assert cycles.drives == ("vent", "latch", "flap")
+    assert checks.drives == ("fan", "latch", "flap")
+    assert (checks.run_in_turns, checks.baseline, checks.detectors) == (1, 4, False)
+    assert list(checks.lines()) == [
+        "checks of 'open' after a run-in of 1 check and 5 min, against the 4 checks after it",
+        "fan: lost motion: fail at most 4 deg, 3 of 5 checks",
+        "every other feature: watch +- 10 %, 3 of 5 checks",
+    ]
+    assert len(both("wear: {checks: off}")) == 1
+    with pytest.raises(FileError, match="this limits a check, and the cycle has none"):
+        rules("wear: {checks: {limits: [{feature: energy, of: vent, fail: +5 %}]}}")
 
 
 def test_what_a_file_says_is_in_force() -> None:
@@ -86,7 +111,7 @@ def test_what_a_file_says_is_in_force() -> None:
         "        other features: ignore\n"
         "        detectors: off"
     )
-    assert (found.run_in_cycles, found.run_in_s, found.baseline, found.detectors) == (30, 600.0, 50, False)
+    assert (found.run_in_turns, found.run_in_s, found.baseline, found.detectors) == (30, 600.0, 50, False)
     assert found.can_fail
     by_name = {each.feature: each for each in found.limits}
     assert list(by_name) == [
@@ -128,8 +153,9 @@ def test_what_a_file_says_is_in_force() -> None:
         (limit("feature: energy, of: vent, fail: +1 %, cycles: 6 of 5"), "6 of 5", "found '6 of 5' for 'cycles'"),
         (limit("feature: position error, of: vent, fail: +3 %"), "+3 %", "a feature that lies about zero"),
         (limit("feature: travel ratio, of: vent, fail: at most 3"), "at most 3}", "found 'at most 3' for 'fail'"),
+        (limit("feature: move time, of: lotch, fail: +1 %"), "lotch", "no servo 'lotch'; did you mean 'latch'?"),
         (limit("feature: energy, of: vant, fail: +1 %"), "vant", "no motor 'vant'; did you mean 'vent'?"),
-        (limit("feature: energy, of: fan, fail: +1 %"), "fan", "'fan' is not driven in this cycle"),
+        (limit("feature: energy, of: fan, fail: +1 %"), "fan", "'fan' is not driven here"),
         (
             "wear: {limits: [{feature: energy, of: vent, fail: +1 %}, {feature: energy, of: vent, fail: +2 %}]}",
             "{feature: energy, of: vent, fail: +2",
@@ -154,7 +180,7 @@ def test_a_motor_without_an_encoder_has_no_speed_to_limit() -> None:
     bench = bench_of_text(text, "bench.yaml")
     step = cycle_of(limit("feature: steady speed, of: vent, fail: -10 %"))
     with pytest.raises(FileError, match="'vent' has no encoder, so its steady speed is not measured"):
-        wear_rules(Rig.of(bench), step, block=1, driven={"vent"})
+        wear_rules(Rig.of(bench), step, block=1, driven={"vent"}, driven_in_check=None)
 
 
 # ---- thresholds ------------------------------------------------------------------------------------------------------

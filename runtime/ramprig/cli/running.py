@@ -119,6 +119,8 @@ def carry_out_wish(wish: RunWish, way: Way) -> int:
 
     from ramprig.endure.live import watching
     from ramprig.endure.resume import Surroundings, run_enduring
+    from ramprig.sequence.compile import compile_plan
+    from ramprig.sequence.report import wear_lines
     from ramprig.sequence.running import run_sequence
     from ramprig.session.signals import StopOnSignals
 
@@ -126,6 +128,9 @@ def carry_out_wish(wish: RunWish, way: Way) -> int:
     watch: list[StopOnSignals] = []
     progress = Progress()
     wish = replace(wish, watching=watching(progress.line))
+    so_far = None if wish.carry_on is None else wish.carry_on.so_far.blocks
+    for line in wear_lines(compile_plan(wish.sequence, wish.bench, so_far=so_far)):
+        progress.line(line)
 
     def guard(session: Session) -> StopOnSignals:
         sessions.append(session)

@@ -153,6 +153,10 @@ def _normal(plan: Plan) -> Iterator[str]:
         length = format_duration(part.later.totals.least * plan.tick_us / 1e6)
         rest = f", then rests {format_duration(part.pause * plan.tick_us / 1e6)}" if part.pause else ""
         yield f"each '{part.name}' takes about {length}{rest}"
+    for rules in plan.wear:
+        for limit in rules.limits:
+            if limit.fail is not None:
+                yield f"it ends by itself once {limit.feature} is beyond {limit.fail.text}: worn"
     texts = list(dict.fromkeys(_judged(plan.root)))
     yield from texts[:NORMAL_MAX]
     if len(texts) > NORMAL_MAX:

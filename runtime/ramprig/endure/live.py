@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import math
 from collections import deque
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 
 from ramprig.errors import Place
@@ -32,11 +32,12 @@ LATE_PIECES = 4
 class WearFound:
     """A feature of the cycles has changed: an event of the run. `level` is `watch` or `fail`, `sign` what found it.
 
-    `baseline`, `now` and `change` (a share) are as in `trends.Finding`; `cycles` are those beyond `limit`. `text` says
-    it all in a sentence.
+    `turn` is cycle or check, `number` the cycle's or the check's count; `baseline`, `now` and `change` (a share) are as
+    in `trends.Finding`; `cycles` are those beyond `limit`. `text` says it all in a sentence.
     """
 
     tick: int
+    turn: str
     number: int
     block: int
     feature: str
@@ -54,7 +55,8 @@ class WearFound:
         """The event of what a cycle that is over showed."""
         return cls(
             tick=turn.end_tick,
-            number=turn.number,
+            turn=finding.turn,
+            number=finding.cycle,
             block=turn.block,
             feature=finding.feature,
             level=finding.level.name.lower(),
@@ -81,8 +83,8 @@ class LiveWatch:
         self._say = say
         self._part = watched.part
         self._tick_us = watched.tick_us
-        self._names = list(watched.columns.names)
-        walk = features.FeatureWalk(self._names, (), tick_us=watched.tick_us)
+        self._columns = watched.columns
+        walk = self._walk(())
         fields = tuple(field for field in watched.columns.fields if field.name in walk.columns)
         self._printer = RowPrinter(Columns(fields), tick_us=watched.tick_us, tick_zero=0)
         self._blocks: list[Block] = []
@@ -133,7 +135,7 @@ class LiveWatch:
         self._kept_rows = sum(len(piece) for piece in self._pieces)
 
     def done(self, turn: TurnDone) -> Seen:
-        """It is over: its features, and what a cycle newly shows."""
+        """It is over: its features, and what it newly shows."""
         self._take()
         self._is_on = False
         found = self._features(turn)
@@ -146,18 +148,22 @@ class LiveWatch:
             end_tick=turn.end_tick,
             features=recorded,
         )
-        findings = [] if turn.number == 0 else self.judge.take(cycle)
+        findings = self.judge.take(cycle)
         for finding in findings:
             self._say(str(finding))
         events = tuple(WearFound.of(finding, turn) for finding in findings)
         return Seen(features=recorded, samples=found.samples, left_out=found.left_out, found=events)
+
+    def _walk(self, spans: Sequence[features.Span]) -> features.FeatureWalk:
+        columns = self._columns
+        return features.FeatureWalk(columns.names, spans, tick_us=self._tick_us, on_output=columns.on_output)
 
     def _features(self, turn: TurnDone) -> features.CycleFeatures:
         """By the same walk as over a file."""
         span = features.Span(
             number=turn.number, part=self._part, begin_tick=turn.begin_tick, end_tick=turn.end_tick, after=turn.after
         )
-        walk = features.FeatureWalk(self._names, [span], tick_us=self._tick_us)
+        walk = self._walk([span])
         found: list[features.CycleFeatures] = []
         for piece in (*self._pieces, *self._late):
             found += walk.take(self._part, piece)

@@ -109,7 +109,8 @@ class Finding:
 
     `per_1000` is the change in 1000 cycles as a share of the baseline; None until there are blocks enough. Where a
     limit found it, `now` is the last value, `limit` what it is beyond in `k` of the last `n` cycles, and `cycles` are
-    those. `baseline` and `change` are NaN where a limit in the feature's unit found it before there was a baseline.
+    those. With the `turn` check all of these are checks. `baseline` and `change` are NaN where a limit in the feature's
+    unit found it before there was a baseline.
     """
 
     feature: str
@@ -124,19 +125,20 @@ class Finding:
     k: int = 0
     n: int = 0
     cycles: tuple[int, ...] = ()
+    turn: str = "cycle"
 
     def __str__(self) -> str:
         """What was found, in one sentence."""
         value = show_feature(self.feature, self.now)
         text = f"{self.feature}: {self.level.name.lower()} limit" if self.limit else f"{self.feature}: {self.sign}"
-        text += f" at cycle {self.cycle}, {value}"
+        text += f" at {self.turn} {self.cycle}, {value}"
         if not math.isnan(self.baseline):
-            slope = "" if self.per_1000 is None else f", {100.0 * self.per_1000:+.2g} % in 1000 cycles"
+            slope = "" if self.per_1000 is None else f", {100.0 * self.per_1000:+.2g} % in 1000 {self.turn}s"
             change = f"{100.0 * self.change:+.1f} %{slope}"
             text += f" against {show_feature(self.feature, self.baseline)} at first ({change})"
         if self.limit:
             listed = ", ".join(map(str, self.cycles))
-            text += f"; beyond {self.limit} in {len(self.cycles)} of the last {self.n} cycles: {listed}"
+            text += f"; beyond {self.limit} in {len(self.cycles)} of the last {self.n} {self.turn}s: {listed}"
         return text
 
 
@@ -150,6 +152,7 @@ class FeatureTrend:
     feature: str
     settings: TrendSettings = field(default_factory=TrendSettings)
     limit: WearLimit | None = None
+    turn: str = "cycle"
     level: Level = Level.OK
     baseline: Spread = field(default_factory=Spread)
     missing: int = 0
@@ -288,6 +291,7 @@ class FeatureTrend:
             now=now,
             change=(now - mean) / abs(mean) if mean else math.inf,
             per_1000=self.slope_per_1000(),
+            turn=self.turn,
         )
         if sign is not Sign.LIMIT:
             return found

@@ -12,12 +12,13 @@ from dataclasses import dataclass, field
 from typing import Any
 
 from ramprig.errors import RecordError
-from ramprig.sequence.wear_limits import WearLimit, WearRules
+from ramprig.sequence.wear_limits import TurnKind, WearLimit, WearRules
 
 from .trends import FeatureTrend, Finding, Level, TrendSettings
 
 Line = Mapping[str, Any]  # JSON as it comes: what is in it is checked where it is used
 
+CYCLE_DONE, CHECK_DONE = "cycle_done", "check_done"
 FIGURES = 7
 """Significant figures of a feature that are recorded and judged; no sensor of a bench has as many."""
 TOLD_MAX = 3
@@ -26,9 +27,9 @@ TOLD_MAX = 3
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Cycle:
-    """One cycle that was done, as it is recorded: ticks, ends included, and its features by full name.
+    """One cycle that was done, or a check with the number 0, as it is recorded: ticks, ends included, and features.
 
-    Features that it does not show are left out.
+    These are by full name; those that it does not show are left out.
     """
 
     number: int
@@ -40,10 +41,10 @@ class Cycle:
 
     @classmethod
     def of(cls, line: Line) -> Cycle:
-        """The cycle of a `cycle_done` line of the count of cycles. Raises RecordError."""
+        """That of a `cycle_done` or `check_done` line of the count of cycles. Raises RecordError."""
         try:
             return cls(
-                number=int(line["number"]),
+                number=int(line["number"]) if line["kind"] == CYCLE_DONE else 0,
                 block=int(line.get("block") or 1),
                 part=int(line.get("part") or 1),
                 begin_tick=int(line["begin_tick"]),
@@ -61,12 +62,16 @@ def as_recorded(values: Mapping[str, float]) -> dict[str, float]:
 
 @dataclass(slots=True)
 class BlockJudge:
-    """The features of one block of cycles, judged by its rules. Two that are equal will judge alike."""
+    """The features of the cycles of one block, or of its checks, judged by their rules.
+
+    Two that are equal will judge alike. `turns` counts those that it took, `run_in` those of them that were not looked
+    at. Cycles go by their numbers, checks by their count.
+    """
 
     rules: WearRules
     tick_us: int
     features: dict[str, FeatureTrend] = field(default_factory=dict)
-    cycles: int = 0
+    turns: int = 0
     run_in: int = 0
     _part: int = 0
     _since_tick: int = 0
@@ -75,16 +80,16 @@ class BlockJudge:
         """Take the next cycle and return what it newly shows, in the features' order."""
         if cycle.part != self._part:  # also after an interruption: the windings have cooled meanwhile
             self._part, self._since_tick = cycle.part, cycle.begin_tick
-        self.cycles += 1
+        self.turns += 1
         gone_s = (cycle.begin_tick - self._since_tick) * self.tick_us / 1e6
-        if self.cycles <= self.rules.run_in_cycles or gone_s < self.rules.run_in_s:
+        if self.turns <= self.rules.run_in_turns or gone_s < self.rules.run_in_s:
             self.run_in += 1
             return []
         found: list[Finding] = []
         for name, value in cycle.features.items():
             trend = self._trend(name)
             if trend is not None:
-                found += trend.add(cycle.number, value)
+                found += trend.add(cycle.number or self.turns, value)
         return found
 
     def _trend(self, name: str) -> FeatureTrend | None:
@@ -94,7 +99,7 @@ class BlockJudge:
         if trend is not None or limit is None:
             return trend
         settings = TrendSettings(run_in=0, baseline=self.rules.baseline, detectors=self.rules.detectors)
-        trend = self.features[name] = FeatureTrend(name, settings, limit)
+        trend = self.features[name] = FeatureTrend(name, settings, limit, turn=self.rules.turn)
         return trend
 
     @property
@@ -110,37 +115,35 @@ class BlockJudge:
 
 @dataclass(slots=True)
 class WearJudge:
-    """All blocks of a run. Cycles of blocks without rules are passed over."""
+    """All blocks of a run, by number and kind of turn. Turns without rules are passed over."""
 
-    blocks: dict[int, BlockJudge]
+    blocks: dict[tuple[int, TurnKind], BlockJudge]
     worst: Finding | None = None
-    worst_block: int = 0
+    failing: WearLimit | None = None
+    """The first finding that ends the run, and the limit it is beyond."""
 
     @classmethod
     def of(cls, rules: Iterable[WearRules], *, tick_us: int) -> WearJudge:
         """A judge that has seen nothing."""
-        return cls({each.block: BlockJudge(each, tick_us) for each in rules})
+        return cls({(each.block, each.turn): BlockJudge(each, tick_us) for each in rules})
 
     def take(self, cycle: Cycle) -> list[Finding]:
-        """Take the next cycle of the run and return what it newly shows."""
-        block = self.blocks.get(cycle.block)
-        found = [] if block is None else block.take(cycle)
+        """Take the next turn of the run and return what it newly shows."""
+        block = self.blocks.get((cycle.block, TurnKind.CYCLE if cycle.number else TurnKind.CHECK))
+        if block is None:
+            return []
+        found = block.take(cycle)
         if self.worst is None:
             self.worst = next((finding for finding in found if finding.level is Level.FAIL), None)
-            self.worst_block = cycle.block if self.worst is not None else 0
+            self.failing = None if self.worst is None else block.rules.limit_of(self.worst.feature)
         return found
 
     def replay(self, lines: Iterable[Line]) -> Iterator[tuple[Cycle, list[Finding]]]:
-        """Take every cycle that lines of the count of cycles tell as done. Raises RecordError."""
+        """Take every turn that lines of the count of cycles tell as done. Raises RecordError."""
         for line in lines:
-            if line.get("kind") == "cycle_done":
+            if line.get("kind") in (CYCLE_DONE, CHECK_DONE):
                 cycle = Cycle.of(line)
                 yield cycle, self.take(cycle)
-
-    @property
-    def failing(self) -> WearLimit | None:
-        """The limit whose passing ends the run."""
-        return None if self.worst is None else self.blocks[self.worst_block].rules.limit_of(self.worst.feature)
 
     def to_watch(self) -> list[str]:
         """The features beyond a limit to watch, or that a detector has found, with their change."""

@@ -33,7 +33,7 @@ def checks_table(features: Sequence[TurnFeatures]) -> str:
     if not rows:
         return ""
     said = f"{len(checks)} checks were done, the first after {checks[0].span.after} cycles and the last after "
-    said += f"{checks[-1].span.after}. They are told and not judged: there are too few for a baseline."
+    said += f"{checks[-1].span.after}. What was judged of them stands above."
     heads = ["feature of the check", "first", "last", "change", "unit"]
     table = page.table(heads, rows, numbers=(1, 2, 3))
     return "<h3>Checks between the cycles</h3>" + table + page.paragraph(said, kind="note")

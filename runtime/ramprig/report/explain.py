@@ -16,6 +16,7 @@ from ramprig.quantity import format_duration, format_voltage
 from .around import Around, around
 from .facts import Document, Facts, gather
 from .tripcauses import Cause, Trip, causes_of
+from .worn import worn_causes
 
 NEAR_S = 3.0
 """Events so long before the end belong to it."""
@@ -385,6 +386,7 @@ def _stop_verdict(facts: Facts) -> tuple[str, ...]:
 
 
 def _failed(facts: Facts) -> Iterator[Cause]:
+    yield from worn_causes(facts)
     failing = [found for found in facts.expectations.values() if found.failed]
     for place, found in enumerate(failing[:SHOWN_MAX]):
         first = found.failures[0]

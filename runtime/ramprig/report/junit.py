@@ -1,4 +1,4 @@
-"""`junit.xml` of runs: one test case for each expectation, each limit that trips, and the run itself.
+"""`junit.xml` of runs: one test case for each expectation, each limit to wear or that trips, and the run itself.
 
 The attributes are those that the schema of the Jenkins xUnit plugin (G. Boissinot, MIT, as kept by pytest in
 `junit-10.xsd`) takes in the places where it takes them. Measured values stand in `system-out`, as some readers refuse
@@ -17,6 +17,7 @@ from ramprig_link.words import LIMITS
 from .explain import explain
 from .facts import Expectation, Facts
 from .page import clean
+from .worn import wear_cases
 
 TRIPS = {
     "trip_ma": "overcurrent",
@@ -110,10 +111,12 @@ def _elapsed_s(facts: Facts) -> float:
 
 
 def cases_of(facts: Facts) -> Iterator[Case]:
-    """The run itself, its expectations, and the limits in force."""
+    """The run itself, its expectations, the limits to wear, and the limits in force."""
     yield _run_case(facts)
     for found in facts.expectations.values():
         yield _expectation_case(found)
+    for worn in wear_cases(facts):
+        yield Case(worn.group, worn.name, worn.out, failure=worn.failure, skipped=worn.skipped)
     tripped = {(event["trip"], int(event.get("index", 0))): event for event in facts.of("tripped")}
     for (item, index), value in facts.limits.items():
         if item not in TRIPS:

@@ -182,7 +182,7 @@ def _overlay(column: str, what: str, digest: Digest, bands: Sequence[Band]) -> P
 def by_cycle(facts: Facts, found: Sequence[Trend]) -> list[Plot]:
     """Each feature against the cycle, with its baseline and limits once there are cycles enough, and what was found."""
     what = "cycle" if facts.counts["cycle_begun"] else "pass"
-    return [_trend(trend, what) for trend in found]
+    return [_trend(trend, what if what == "pass" else trend.judged.turn) for trend in found]
 
 
 LIMIT_COLOURS = {WearLevel.WATCH: ORANGE, WearLevel.FAIL: VERMILION}

@@ -6,7 +6,7 @@ from collections.abc import Mapping, Sequence
 
 from ramprig.quantity import format_duration
 from ramprig.record.reading import Audit
-from ramprig.sequence.wear_limits import WearRules
+from ramprig.sequence.wear_limits import TurnKind, WearRules
 from ramprig.session.limits import LimitTable
 from ramprig_link.words import LIMITS, Per
 
@@ -326,7 +326,7 @@ def trend_findings(found: Sequence[Trend], rules: Sequence[WearRules]) -> str:
     if rows:
         return page.table(["feature", "cycle", "level", "found"], rows, numbers=(1,)) + rule
     if not any(trend.judged.established for trend in found):
-        needed = min((each.run_in_cycles + each.baseline for each in rules), default=0)
+        needed = min((each.run_in_turns + each.baseline for each in rules if each.turn is TurnKind.CYCLE), default=0)
         return page.paragraph(f"No trend is judged: that takes more than {needed} cycles.", kind="note") + rule
     return page.paragraph("No change was found.") + rule
 

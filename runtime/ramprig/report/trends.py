@@ -18,8 +18,8 @@ from numpy.typing import NDArray
 from ramprig.endure.features import unit_of
 from ramprig.endure.recorded import TurnFeatures
 from ramprig.endure.trends import FeatureTrend, Finding
-from ramprig.endure.wear import Cycle, WearJudge, as_recorded
-from ramprig.sequence.wear_limits import WearRules, WearWish, rules_of
+from ramprig.endure.wear import CHECK_DONE, CYCLE_DONE, Cycle, WearJudge, as_recorded
+from ramprig.sequence.wear_limits import TurnKind, WearRules, WearWish, rules_of
 
 from .digest import Digest
 from .facts import Facts
@@ -54,11 +54,12 @@ def rules_in_force(facts: Facts) -> tuple[WearRules, ...]:
         WearRules(
             block=block,
             name=name,
-            run_in_cycles=wish.run_in_cycles,
+            turn=TurnKind.CYCLE,
+            run_in_turns=wish.run_in_cycles,
             run_in_s=0.0,
             baseline=wish.baseline,
             detectors=wish.detectors,
-            motors=tuple(facts.motors),
+            drives=(*facts.motors, *facts.servos),
             limits=(),
             others=wish.others,
         )
@@ -67,10 +68,7 @@ def rules_in_force(facts: Facts) -> tuple[WearRules, ...]:
 
 
 def trends_of(facts: Facts, digest: Digest) -> list[Trend]:
-    """The features of the whole cycles of a run; none where there are fewer than CYCLES_MIN.
-
-    Checks between the cycles are not among them: there are too few of them for a baseline.
-    """
+    """The features of the whole cycles of a run, and of its checks; none where there are fewer than CYCLES_MIN."""
     by_feature = _by_feature(facts, digest)
     if by_feature:
         return by_feature
@@ -97,17 +95,17 @@ def trends_of(facts: Facts, digest: Digest) -> list[Trend]:
 
 
 def wear_of(facts: Facts, cycles: Sequence[Cycle]) -> tuple[WearJudge, list[tuple[int, Finding]]]:
-    """What the run's own judge makes of its cycles, and its findings in order, each after its block."""
+    """What the run's own judge makes of its turns, and its findings in order, each after its block."""
     judge = WearJudge.of(rules_in_force(facts), tick_us=facts.tick_us)
     return judge, [(cycle.block, finding) for cycle in cycles for finding in judge.take(cycle)]
 
 
 def cycles_of(facts: Facts, features: Sequence[TurnFeatures]) -> list[Cycle]:
-    """The cycles of a run with their features: as recorded, all of them, else those given, from the samples."""
-    done = [line for line in facts.cycles if line.get("kind") == "cycle_done"]
+    """The turns of a run with their features: as recorded, all of them, else the cycles given, from the samples."""
+    done = [line for line in facts.cycles if line.get("kind") in (CYCLE_DONE, CHECK_DONE)]
     if any(line.get("features") for line in done):
         return [Cycle.of(line) for line in done]
-    blocks = {int(line["number"]): int(line.get("block") or 1) for line in done}
+    blocks = {int(line["number"]): int(line.get("block") or 1) for line in done if line.get("kind") == CYCLE_DONE}
     return [
         Cycle(
             number=each.span.number,
@@ -124,21 +122,25 @@ def cycles_of(facts: Facts, features: Sequence[TurnFeatures]) -> list[Cycle]:
 
 def _by_feature(facts: Facts, digest: Digest) -> list[Trend]:
     cycles = cycles_of(facts, digest.features)
-    if len(cycles) < CYCLES_MIN:
-        return []
     judge, findings = wear_of(facts, cycles)
     found = []
-    for number, block in judge.blocks.items():
-        of_block = [cycle for cycle in cycles if cycle.block == number]
-        numbers = np.array([float(cycle.number) for cycle in of_block])
-        prefix = f"'{block.rules.name}' " if len(judge.blocks) > 1 else ""
+    several = len({number for number, _ in judge.blocks}) > 1
+    for (number, turn), block in judge.blocks.items():
+        is_check = turn is TurnKind.CHECK
+        of_block = [cycle for cycle in cycles if cycle.block == number and (cycle.number == 0) == is_check]
+        numbers = np.array([float(cycle.number or place) for place, cycle in enumerate(of_block, 1)])
+        if len(of_block) < CYCLES_MIN:
+            continue
+        prefix = f"'{block.rules.name}' " if several else ""
         for name in dict.fromkeys(name for cycle in of_block for name in cycle.features):
             limit = block.rules.limit_of(name)
             if limit is None:
                 continue
             values = np.array([cycle.features.get(name, math.nan) for cycle in of_block])
-            judged = block.features.get(name) or FeatureTrend(name, limit=limit)
-            of_feature = tuple(finding for at, finding in findings if at == number and finding.feature == name)
+            judged = block.features.get(name) or FeatureTrend(name, limit=limit, turn=turn)
+            of_feature = tuple(
+                finding for at, finding in findings if at == number and finding.feature == name and finding.turn == turn
+            )
             found.append(Trend(prefix + name, unit_of(name), numbers, values, judged, of_feature))
     return found
 

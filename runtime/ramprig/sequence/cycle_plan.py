@@ -111,7 +111,13 @@ def compile_cycles(
         check_starts=check_starts,
         failed_most=step.failed_most,
         confirmed=all(_confirms(body) for body in bodies),
-        wear=wear_rules(rig, step, block=block, driven=_driven(bodies)),
+        wear=wear_rules(
+            rig,
+            step,
+            block=block,
+            driven=_driven(bodies),
+            driven_in_check=_driven(checks) if checks else None,
+        ),
     )
     part = _with_pauses(rig, part)
     return _with_totals(rig, replace(part, text=_text(rig, step, part)), so_far)

@@ -224,7 +224,7 @@ class Cycles(Part):
     `before`, `later` another cycle, `checked` a check. `starts` are the departures from zero in one cycle, the greatest
     number of any of these parts, by motor; `check_starts` those of a check. `pause` and `check_pause` are planned
     between the end of a cycle or check and the next turn: the rest, or longer where starts are spaced. `confirmed`
-    tells whether the cycle has a `confirm` at all. `wear` are the rules by which the cycles are judged for drift, None
+    tells whether the cycle has a `confirm` at all. `wear` are the rules by which the turns are judged for drift, none
     where they are not.
     """
 
@@ -247,7 +247,7 @@ class Cycles(Part):
     check_starts: Mapping[str, int]
     failed_most: int | None
     confirmed: bool
-    wear: WearRules | None = None
+    wear: tuple[WearRules, ...] = ()
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -279,7 +279,7 @@ class Plan:
     @property
     def wear(self) -> tuple[WearRules, ...]:
         """The rules by which its cycles are judged, a block after the other."""
-        return tuple(part.wear for part in self.cycles if part.wear is not None)
+        return tuple(rules for part in self.cycles for rules in part.wear)
 
 
 REST_VALUES = {AtZero.COAST: 0, AtZero.BRAKE: 1}

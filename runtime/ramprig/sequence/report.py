@@ -44,11 +44,17 @@ def summary_lines(plan: Plan, bench: Bench) -> list[str]:
     totals = plan.totals
     lines.append(f"orders    {totals.orders}, expectations {totals.judgements}")
     lines += [f"cycles    {part.text.removeprefix('cycle ')}" for part in plan.cycles]
+    lines += wear_lines(plan)
     lines.append(f"log       {log_text(plan, bench)}")
     if plan.keeping.thinning is not None:
         lines.append(f"thinned   {thinning_text(plan)}")
     lines += [f"remark    {remark}" for remark in plan.remarks]
     return lines
+
+
+def wear_lines(plan: Plan) -> list[str]:
+    """By which limits the cycles are judged for drift and wear; none where they are not."""
+    return [f"wear      {text}" for rules in plan.wear for text in rules.lines()]
 
 
 def _seconds(plan: Plan, ticks: int) -> float:

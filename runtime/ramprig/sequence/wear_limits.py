@@ -7,7 +7,8 @@ rules, which lie in `run.json` as they were in force. The default figures are ch
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
+from enum import StrEnum
 from fractions import Fraction
 from typing import Any
 
@@ -15,7 +16,7 @@ from ramprig.errors import RecordError
 from ramprig.quantity import format_duration
 from ramprig.yamlfile import Mark
 
-from .wear_words import FEATURE_WORDS, Way, motor_of, word_of
+from .wear_words import FEATURE_WORDS, Way, drive_of, word_of
 
 RUN_IN_CYCLES = 20
 RUN_IN_TIME_CONSTANTS = 5
@@ -23,6 +24,10 @@ RUN_IN_TIME_CONSTANTS = 5
 of the warming (e^-5), and copper's resistance, which grows by 0.393 % a kelvin (IEC 60028), is steady with it."""
 BASELINE_CYCLES = 100
 BASELINE_LEAST = 10
+CHECKS_RUN_IN = 1
+"""The first check comes before the first cycle, with everything cold."""
+CHECKS_BASELINE = 10
+CHECKS_BASELINE_LEAST = 3
 K_DEFAULT, N_DEFAULT = 3, 5
 WATCH_DEFAULT_SHARE = 0.10
 
@@ -54,7 +59,7 @@ class Threshold:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class WearLimit:
-    """The limits of one feature by its full name; beyond one in `k` of the last `n` cycles is a finding.
+    """The limits of one feature by its full name; beyond one in `k` of the last `n` turns is a finding.
 
     `place` is where the file says it; empty for the default, which a noisy feature must also pass by some of its
     standard deviations.
@@ -71,7 +76,7 @@ class WearLimit:
         said = [
             f"{name} {each.text}" for name, each in (("watch", self.watch), ("fail", self.fail)) if each is not None
         ]
-        return f"{', '.join(said)}, in {self.k} of {self.n} cycles"
+        return f"{', '.join(said)}, {self.k} of {self.n}"
 
 
 WATCH_DEFAULT = Threshold(text="+- 10 %", low=-WATCH_DEFAULT_SHARE, high=WATCH_DEFAULT_SHARE)
@@ -80,12 +85,13 @@ OTHERS_DEFAULT = WearLimit(feature="", watch=WATCH_DEFAULT, fail=None)
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class SaidLimit:
-    """A limit as the file says it: of a word, of `motor` ("" for the cycle's own), in one direction or both."""
+    """A limit as the file says it: of a word, of the motor or servo `drive` ("" for the cycle's own), in one direction
+    or both."""
 
     mark: Mark
     word: str
-    motor: str
-    motor_mark: Mark
+    drive: str
+    drive_mark: Mark
     way: Way | None
     watch: Threshold | None
     fail: Threshold | None
@@ -94,9 +100,19 @@ class SaidLimit:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class ChecksWish:
+    """What a cycle says of wear in its checks: as for the cycles themselves. Checks are few, so that nothing but limits
+    is looked at."""
+
+    baseline: int = CHECKS_BASELINE
+    limits: tuple[SaidLimit, ...] = ()
+    others: WearLimit | None = OTHERS_DEFAULT
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class WearWish:
     """What a cycle says of wear. `run_in_s` None is what the windings need; `others` are the limits of the features
-    that `limits` do not name, None where those are not judged at all."""
+    that `limits` do not name, None where those are not judged at all. `checks` None judges no check."""
 
     run_in_cycles: int = RUN_IN_CYCLES
     run_in_s: Fraction | None = None
@@ -104,25 +120,35 @@ class WearWish:
     detectors: bool = True
     limits: tuple[SaidLimit, ...] = ()
     others: WearLimit | None = OTHERS_DEFAULT
+    checks: ChecksWish | None = field(default_factory=ChecksWish)
+
+
+class TurnKind(StrEnum):
+    """What is judged: the cycles of a block, or the checks between them."""
+
+    CYCLE = "cycle"
+    CHECK = "check"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class WearRules:
-    """The rules of one block of cycles, as they are in force on a bench.
+    """The rules for the turns of one kind in one block of cycles, as they are in force on a bench.
 
-    Cycles are not judged while fewer than `run_in_cycles` are done or less than `run_in_s` has gone by since the block
-    began, or went on after an interruption; the next `baseline` ones are what later ones are judged against. With
+    Turns are not judged while fewer than `run_in_turns` are done or less than `run_in_s` has gone by since the first
+    one, or the first after an interruption; the next `baseline` ones are what later ones are judged against. With
     `detectors`, sudden changes, slow ones and drifts of the features that have limits are looked for too. `others` are
-    the limits of features that have none of their own, of the whole cycle or of one of the `motors` that it drives.
+    the limits of features that have none of their own, of the whole cycle or of one of the `drives`: the motors that it
+    drives, and the servos.
     """
 
     block: int
     name: str
-    run_in_cycles: int
+    turn: TurnKind
+    run_in_turns: int
     run_in_s: float
     baseline: int
     detectors: bool
-    motors: tuple[str, ...]
+    drives: tuple[str, ...]
     limits: tuple[WearLimit, ...]
     others: WearLimit | None
 
@@ -132,21 +158,23 @@ class WearRules:
         if own is not None:
             return own
         word = FEATURE_WORDS.get(word_of(feature))
-        about_zero = word is not None and word.about_zero  # it has no share of itself
-        motor = motor_of(feature)
-        return None if about_zero or (motor and motor not in self.motors) else self.others
+        drive = drive_of(feature)
+        is_left_out = (word is not None and word.on_request) or (drive and drive not in self.drives)
+        return None if is_left_out else self.others
 
     def lines(self) -> Iterator[str]:
         """The rules in words."""
-        run_in = f"{self.run_in_cycles} cycles and {format_duration(self.run_in_s)}"
-        yield f"'{self.name}': after a run-in of {run_in}, against the {self.baseline} cycles after it"
+        plural = "" if self.run_in_turns == 1 else "s"
+        run_in = f"{self.run_in_turns} {self.turn}{plural} and {format_duration(self.run_in_s)}"
+        whose = f"'{self.name}'" if self.turn is TurnKind.CYCLE else f"checks of '{self.name}'"
+        yield f"{whose} after a run-in of {run_in}, against the {self.baseline} {self.turn}s after it"
         for limit in self.limits:
-            yield f"{limit.feature}: {limit}"
+            yield f"{limit.feature}: {limit} {self.turn}s"
         what = "every other feature" if self.limits else "every feature"
         if self.others is not None:
-            yield f"{what}: {self.others}"
+            yield f"{what}: {self.others} {self.turn}s"
         if self.detectors:
-            yield "sudden and slow changes and drifts: watch, by figures of this program, no standard"
+            yield "sudden changes, slow ones and drifts: watch (figures of this program, no standard)"
         if not self.can_fail:
             yield "no limit ends the run"
 
@@ -176,11 +204,12 @@ def _rules(found: Document) -> WearRules:
     return WearRules(
         block=int(found["block"]),
         name=str(found["name"]),
-        run_in_cycles=int(found["run_in_cycles"]),
+        turn=TurnKind(found["turn"]),
+        run_in_turns=int(found["run_in_turns"]),
         run_in_s=float(found["run_in_s"]),
         baseline=int(found["baseline"]),
         detectors=bool(found["detectors"]),
-        motors=tuple(map(str, found["motors"])),
+        drives=tuple(map(str, found["drives"])),
         limits=tuple(_limit(each) for each in found["limits"]),
         others=None if found["others"] is None else _limit(found["others"]),
     )

@@ -3,35 +3,65 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Set
+from dataclasses import replace
 
 from ramprig.yamlfile import suggestion
 
 from .rig import Axis, Rig
 from .steps import Cycle
-from .wear_limits import RUN_IN_TIME_CONSTANTS, SaidLimit, WearLimit, WearRules, WearWish
-from .wear_words import FEATURE_WORDS, full_names
+from .wear_limits import (
+    CHECKS_RUN_IN,
+    RUN_IN_TIME_CONSTANTS,
+    SaidLimit,
+    TurnKind,
+    WearLimit,
+    WearRules,
+    WearWish,
+)
+from .wear_words import FEATURE_WORDS, Whose, full_names
 
 
-def wear_rules(rig: Rig, step: Cycle, *, block: int, driven: Set[str]) -> WearRules | None:
-    """The rules of the block, None where nothing is judged; `driven` are the motors that a cycle drives.
+def wear_rules(
+    rig: Rig, step: Cycle, *, block: int, driven: Set[str], driven_in_check: Set[str] | None
+) -> tuple[WearRules, ...]:
+    """The rules of the block: for its cycles and, where it has some, for its checks; none where nothing is judged.
 
-    Raises `FileError` at a limit of a motor that the bench does not have, that is not driven, or that lacks the encoder
-    that the feature needs.
+    `driven` are the motors that a cycle drives, `driven_in_check` those of a check, None where it has none. Raises
+    `FileError` at a limit of a motor that the bench does not have, that is not driven, or that lacks the encoder that
+    the feature needs; and at limits of checks where there are none.
     """
     wish = step.wear
     if wish is None:
-        return None
-    limits = tuple(limit for said in wish.limits for limit in _limits(rig, said, driven))
-    return WearRules(
+        return ()
+    cycles = WearRules(
         block=block,
         name=step.name,
-        run_in_cycles=wish.run_in_cycles,
+        turn=TurnKind.CYCLE,
+        run_in_turns=wish.run_in_cycles,
         run_in_s=_run_in_s(rig, wish, driven),
         baseline=wish.baseline,
         detectors=wish.detectors,
-        motors=tuple(sorted(driven)),
-        limits=limits,
+        drives=(*sorted(driven), *rig.channels),
+        limits=tuple(limit for said in wish.limits for limit in _limits(rig, said, driven)),
         others=wish.others,
+    )
+    checks = wish.checks
+    if driven_in_check is None or checks is None:
+        if checks is not None and checks.limits:
+            raise checks.limits[0].mark.error("this limits a check, and the cycle has none", "add 'check', or leave it")
+        return (cycles,)
+    return (
+        cycles,
+        replace(
+            cycles,
+            turn=TurnKind.CHECK,
+            run_in_turns=CHECKS_RUN_IN,
+            baseline=checks.baseline,
+            detectors=False,
+            drives=(*sorted(driven_in_check), *rig.channels),
+            limits=tuple(limit for said in checks.limits for limit in _limits(rig, said, driven_in_check)),
+            others=checks.others,
+        ),
     )
 
 
@@ -50,19 +80,28 @@ def _time_constant_s(rig: Rig, axis: Axis) -> float:
 
 
 def _limits(rig: Rig, said: SaidLimit, driven: Set[str]) -> Iterator[WearLimit]:
-    if said.motor:
-        _check_motor(rig, said, driven)
-    for name in full_names(said.word, said.motor, said.way):
+    match FEATURE_WORDS[said.word].whose:
+        case Whose.SERVO:
+            _check_servo(rig, said)
+        case Whose.MOTOR | Whose.WAY:
+            _check_motor(rig, said, driven)
+    for name in full_names(said.word, said.drive, said.way):
         yield WearLimit(feature=name, watch=said.watch, fail=said.fail, k=said.k, n=said.n, place=str(said.mark.place))
 
 
+def _check_servo(rig: Rig, said: SaidLimit) -> None:
+    if said.drive not in rig.channels:
+        found = f"the bench has no servo '{said.drive}'"
+        raise said.drive_mark.error(found, suggestion(said.drive, rig.channels, "its servos"))
+
+
 def _check_motor(rig: Rig, said: SaidLimit, driven: Set[str]) -> None:
-    axis = rig.axes.get(said.motor)
+    axis = rig.axes.get(said.drive)
     if axis is None:
-        found = f"the bench has no motor '{said.motor}'"
-        raise said.motor_mark.error(found, suggestion(said.motor, rig.axes, "its motors"))
-    if said.motor not in driven:
-        raise said.motor_mark.error(f"'{said.motor}' is not driven in this cycle", "limit a motor that is")
+        found = f"the bench has no motor '{said.drive}'"
+        raise said.drive_mark.error(found, suggestion(said.drive, rig.axes, "its motors"))
+    if said.drive not in driven:
+        raise said.drive_mark.error(f"'{said.drive}' is not driven here", "limit a motor that is")
     if FEATURE_WORDS[said.word].needs_encoder and not axis.has_encoder:
-        found = f"'{said.motor}' has no encoder, so its {said.word} is not measured"
-        raise said.motor_mark.error(found, "limit its steady current, peak current or energy")
+        found = f"'{said.drive}' has no encoder, so its {said.word} is not measured"
+        raise said.drive_mark.error(found, "limit its steady current, peak current or energy")

@@ -8,6 +8,7 @@
         - {feature: position error, of: vent, fail: -3 deg to 3 deg}
       other features: {watch: +- 15 %}
       detectors: on
+      checks: {limits: [{feature: lost motion, of: vent, fail: at most 4 deg}]}
 
 A threshold is a change against the baseline, with a sign and in %, or a range in the feature's unit.
 """
@@ -40,10 +41,13 @@ from .names import MOTOR_NAME
 from .wear_limits import (
     BASELINE_CYCLES,
     BASELINE_LEAST,
+    CHECKS_BASELINE,
+    CHECKS_BASELINE_LEAST,
     K_DEFAULT,
     N_DEFAULT,
     OTHERS_DEFAULT,
     RUN_IN_CYCLES,
+    ChecksWish,
     SaidLimit,
     Threshold,
     WearLimit,
@@ -146,9 +150,9 @@ class KOfNShape(Shape[tuple[int, int]]):
 
 
 FEATURE = Key("feature", WordShape(tuple(FEATURE_WORDS)), "what is limited in each cycle", required=True)
-OF = Key("of", MOTOR_NAME, "the motor's name in the bench file, where the feature is a motor's")
+OF = Key("of", MOTOR_NAME, "the name of the motor or servo in the bench file, where the feature is of one")
 GOING = Key("going", WordShape(tuple(Way)), "the direction, where the feature has one; both where left out")
-CYCLES = Key("cycles", KOfNShape(), "in how many of the last cycles it must be beyond to count")
+CYCLES = Key("cycles", KOfNShape(), "in how many of the last cycles (or checks) it must be beyond to count")
 WATCH_TEXT = "beyond this it is noted and told"
 FAIL_TEXT = "beyond this the run ends as failed"
 
@@ -177,8 +181,8 @@ class LimitShape(Shape[SaidLimit]):
             return SaidLimit(
                 mark=f.mark,
                 word=f[FEATURE],
-                motor=f.get(OF) or "",
-                motor_mark=f.at(OF),
+                drive=f.get(OF) or "",
+                drive_mark=f.at(OF),
                 way=None if way is None else Way(way),
                 watch=f.get(watch),
                 fail=f.get(fail),
@@ -197,7 +201,7 @@ def _check_whose(f: Fields, word: FeatureWord) -> None:
     if word.whose is Whose.CYCLE and f.said(OF):
         raise f.error(OF, f"'of' does not go with '{feature}'", "it belongs to the whole cycle")
     if word.whose is not Whose.CYCLE and not f.said(OF):
-        raise f.mark.error(f"'of' is missing beside '{feature}'", "name the motor, as in 'of: vent'")
+        raise f.mark.error(f"'of' is missing beside '{feature}'", "name the motor or servo, as in 'of: vent'")
     if word.whose is not Whose.WAY and f.said(GOING):
         raise f.error(GOING, f"'going' does not go with '{feature}'", "it has no direction")
 
@@ -250,6 +254,28 @@ DETECTORS = Key(
 )
 
 
+CHECKS_BASELINE_KEY = Key(
+    "baseline",
+    CountShape(CHECKS_BASELINE_LEAST, 100_000),
+    "checks after the first one that later ones are judged against",
+    default=CHECKS_BASELINE,
+)
+
+
+def _checks(f: Fields) -> ChecksWish:
+    limits = f.get(LIMITS) or ()
+    _check_once(limits)
+    others = f.get(OTHERS) if f.said(OTHERS) else OTHERS_DEFAULT
+    return ChecksWish(baseline=f[CHECKS_BASELINE_KEY], limits=limits, others=others)
+
+
+CHECKS: Key[ChecksWish | None] = Key(
+    "checks",
+    OrWord("off", Record((CHECKS_BASELINE_KEY, LIMITS, OTHERS), _checks)),
+    "the same for the checks between the cycles, which have a baseline of their own",
+)
+
+
 def _wear(f: Fields) -> WearWish:
     limits = f.get(LIMITS) or ()
     _check_once(limits)
@@ -261,13 +287,14 @@ def _wear(f: Fields) -> WearWish:
         detectors=f[DETECTORS] == "on",
         limits=limits,
         others=f.get(OTHERS) if f.said(OTHERS) else OTHERS_DEFAULT,
+        checks=f.get(CHECKS) if f.said(CHECKS) else ChecksWish(),
     )
 
 
 def _check_once(limits: tuple[SaidLimit, ...]) -> None:
     seen: dict[str, Mark] = {}
     for limit in limits:
-        for name in full_names(limit.word, limit.motor, limit.way):
+        for name in full_names(limit.word, limit.drive, limit.way):
             if name in seen:
                 place = f"line {seen[name].line}"
                 raise limit.mark.error(f"a second limit of '{name}'", f"the first is in {place}: a feature has one")
@@ -276,7 +303,7 @@ def _check_once(limits: tuple[SaidLimit, ...]) -> None:
 
 WEAR: Key[WearWish | None] = Key(
     "wear",
-    OrWord("off", Record((RUN_IN, BASELINE, LIMITS, OTHERS, DETECTORS), _wear)),
+    OrWord("off", Record((RUN_IN, BASELINE, LIMITS, OTHERS, DETECTORS, CHECKS), _wear)),
     "which drift and wear is watched for, cycle by cycle, and which ends the run",
 )
 """A key of a cycle."""

@@ -1,0 +1,444 @@
+"""Wear judged while a run is under way: the features of the log itself, watched, able to end the run, and resumed."""
+
+from __future__ import annotations
+
+import copy
+import json
+import random
+from collections.abc import Callable
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any
+from xml.etree import ElementTree
+
+import numpy as np
+import pytest
+
+from endure_crash import CYCLES as FEW
+from endure_crash import Host, Killed, Process
+from ramprig.endure import features, live
+from ramprig.endure.features import cycle_features
+from ramprig.endure.live import LiveWatch
+from ramprig.endure.motorfeatures import MotorFeatures
+from ramprig.endure.resume import read_broken
+from ramprig.endure.servotiming import ServoFeatures
+from ramprig.endure.trends import Level
+from ramprig.endure.wear import Cycle, WearJudge, as_recorded
+from ramprig.errors import UsageError
+from ramprig.mock.device import MockDevice
+from ramprig.mock.from_bench import setup_of_bench
+from ramprig.mock.port import MockPort
+from ramprig.record.reading import read_events, read_manifest
+from ramprig.report.explain import explain_folder
+from ramprig.report.facts import gather
+from ramprig.report.making import make_report
+from ramprig.report.trends import cycles_of, wear_of
+from ramprig.sequence.cycle_watch import CycleWatch, Watched, place_of
+from ramprig.sequence.executive import Progress
+from ramprig.sequence.outcome import Verdict
+from ramprig.sequence.running import RunResult, RunWish, run_sequence
+from ramprig.sequence.wear_limits import Threshold, TurnKind, WearLimit, WearRules, rules_of
+from ramprig.sequence.wear_words import FEATURE_WORDS, Whose, drive_of, full_names, word_of
+from sequence_rig import sequence_of, small_bench
+
+WEAR = "wear: {run in: {cycles: 2, for: 5 s}, baseline: 10, LIMITS}"
+STEPS = """- cycle:
+    name: open
+    times: TIMES
+    WEAR
+    check every: 20
+    check: [{ramp: {motor: vent, to: 30 %, in: 300 ms}}, {hold: 500 ms}, {coast: {motor: vent, in: 300 ms}}]
+    steps:
+      - ramp: {motor: vent, to: 50 %, in: 500 ms}
+      - hold: 500 ms
+      - confirm: {position of: vent, is: at least 10 deg}
+      - coast: {motor: vent, in: 300 ms}
+      - wait: {speed of: vent, is: -0.5 rpm to 0.5 rpm, within: 3 s}"""
+
+
+CYCLES_OF_1 = (1, TurnKind.CYCLE)
+
+
+@dataclass
+class Looked:
+    """A run that was carried out, what was said in it, and who looked on."""
+
+    result: RunResult
+    said: list[str]
+    watch: LiveWatch
+
+    @property
+    def folder(self) -> Path:
+        assert self.result.folder is not None
+        return self.result.folder
+
+    @property
+    def lines(self) -> list[dict[str, Any]]:
+        """The count of cycles."""
+        return [json.loads(line) for line in (self.folder / "cycles.jsonl").read_text("utf-8").splitlines()]
+
+
+def look(
+    folder: Path, *, limits: str, times: int, meddle: Callable[[Progress, MockDevice], None] | None = None
+) -> Looked:
+    """Run the cycles on the mock, with these limits."""
+    bench = small_bench()
+    steps = STEPS.replace("TIMES", str(times)).replace("WEAR", WEAR.replace(", LIMITS", limits and f", {limits}"))
+    sequence = sequence_of(folder, steps, head="log: {period: 5 ms}\n")
+    device = MockDevice(setup_of_bench(bench), seed=3)
+    said: list[str] = []
+    watches: list[LiveWatch] = []
+
+    def watching(watched: Watched) -> CycleWatch:
+        watches.append(LiveWatch(watched, say=said.append))
+        return watches[-1]
+
+    def progress(now: Progress) -> None:
+        if meddle is not None:
+            meddle(now, device)
+
+    wish = RunWish(sequence=sequence, bench=bench, runs=folder / "runs", virtual=True, seed=3, watching=watching)
+    result = run_sequence(wish, MockPort(device, pace="virtual", seed=3), progress=progress)
+    (watch,) = watches
+    return Looked(result, said, watch)
+
+
+def stiffer(times: float, *, from_cycle: int) -> Callable[[Progress, MockDevice], None]:
+    """Friction that is so many times as large from this cycle on."""
+    fresh_nm: list[float] = []
+
+    def meddle(now: Progress, device: MockDevice) -> None:
+        axis = device.plant.axes[0]
+        fresh_nm.append(axis.coulomb_nm)
+        axis.coulomb_nm = fresh_nm[0] * (times if now.cycles_done >= from_cycle - 1 else 1.0)
+
+    return meddle
+
+
+@pytest.fixture(scope="module")
+def worn(tmp_path_factory: pytest.TempPathFactory) -> Looked:
+    """A run that a limit to wear ends: the friction doubles from cycle 25 on."""
+    limits = "limits: [{feature: steady current, of: vent, going: forward, watch: +10 %, fail: +25 %}]"
+    return look(tmp_path_factory.mktemp("worn"), limits=limits, times=60, meddle=stiffer(2.0, from_cycle=25))
+
+
+# ---- what is recorded ------------------------------------------------------------------------------------------------
+
+
+def test_the_recorded_features_are_those_of_the_log_digit_by_digit(worn: Looked) -> None:
+    done = [line for line in worn.lines if line["kind"] in ("cycle_done", "check_done")]
+    from_file = list(cycle_features(worn.folder))
+    assert len(done) == len(from_file) > 25
+    for line, computed in zip(done, from_file, strict=True):
+        assert line["features"] == as_recorded(computed.values())
+        assert (line["samples"], line["left_out"]) == (computed.samples, computed.left_out)
+        assert line["features"]["vent forward: steady current"] > 0.0
+
+
+def test_a_cycle_beyond_its_bound_is_recorded_as_a_reader_of_the_log_gets_it(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr(features, "CYCLE_ROWS_MAX", 150)
+    monkeypatch.setattr(live, "BATCH_ROWS", 16)
+    run = look(tmp_path, limits="", times=3)
+    done = [line for line in run.lines if line["kind"] in ("cycle_done", "check_done")]
+    for line, computed in zip(done, cycle_features(run.folder), strict=True):
+        assert line["features"] == as_recorded(computed.values())
+        assert (line["samples"], line["left_out"]) == (computed.samples, computed.left_out)
+        assert line["left_out"] > 0
+
+
+def test_the_rules_in_force_are_on_record(worn: Looked) -> None:
+    rules, checks = rules_of(read_manifest(worn.folder)["settings"]["wear"])
+    assert (rules.name, rules.run_in_turns, rules.run_in_s, rules.baseline) == ("open", 2, 5.0, 10)
+    assert rules.drives == ("vent", "latch", "flap")
+    assert [limit.feature for limit in rules.limits] == ["vent forward: steady current"]
+    assert rules == worn.watch.judge.blocks[CYCLES_OF_1].rules
+    assert (checks.turn, checks.run_in_turns, checks.baseline, checks.detectors) == (TurnKind.CHECK, 1, 10, False)
+
+
+# ---- what it leads to ------------------------------------------------------------------------------------------------
+
+
+def test_a_limit_to_wear_ends_the_run_in_order_with_a_sentence_that_says_it_all(worn: Looked) -> None:
+    outcome = worn.result.outcome
+    assert outcome.verdict is Verdict.FAILED
+    assert outcome.exit_code == 1
+    assert outcome.stop_confirmed
+    assert outcome.sentence.startswith("vent forward: steady current: fail limit at cycle 27, ")
+    assert "; beyond +25 % (above " in outcome.sentence
+    assert " in 3 of the last 5 cycles: 25, 26, 27; cycles: 27 commanded, 27 confirmed, 0 failed" in outcome.sentence
+    assert " mA against " in outcome.sentence
+    assert str(outcome.place).endswith("s.yaml:7:68")  # the limit itself
+    manifest = read_manifest(worn.folder)
+    assert (manifest["verdict"], manifest["status"]) == ("failed", "finished")
+    assert manifest["results"]["exit_code"] == 1
+
+
+def test_what_is_found_is_an_event_before_the_cycle_that_shows_it_and_a_line_for_the_user(worn: Looked) -> None:
+    events, _ = read_events(worn.folder / "events.jsonl")
+    found = [event for event in events if event["kind"] == "wear_found"]
+    assert [event["text"] for event in found] == worn.said
+    levels = {event["level"] for event in found}
+    assert levels == {"watch", "fail"}
+    first = next(event for event in found if event["feature"] == "vent forward: steady current")
+    assert first["number"] >= 25
+    done = {line["number"]: line for line in worn.lines if line["kind"] == "cycle_done"}
+    for event in found:
+        assert event["tick"] == done[event["number"]]["tick"]
+    (failing,) = [event for event in found if event["level"] == "fail"]
+    assert failing["cycles"] == [25, 26, 27]
+    assert failing["limit"].startswith("+25 % (above ")
+    assert failing["now"] > 1.25 * failing["baseline"]
+
+
+def test_the_report_says_what_the_run_said(worn: Looked, tmp_path: Path) -> None:
+    facts = gather(worn.folder)
+    judge, findings = wear_of(facts, cycles_of(facts, ()))
+    assert [str(finding) for _, finding in findings] == worn.said
+    assert judge == worn.watch.judge
+    made = make_report([worn.folder], out=tmp_path, issued="")
+    text = made.report.read_text("utf-8")
+    for said in worn.said:
+        assert said in text.replace("&#x27;", "'")
+    suite = ElementTree.parse(made.junit).getroot().find("testsuite")
+    assert suite is not None
+    cases = {case.get("name"): case for case in suite.iter("testcase") if case.get("classname") == "wear 'open'"}
+    failed = cases["vent forward: steady current: watch +10 %, fail +25 %, 3 of 5"].find("failure")
+    assert failed is not None
+    assert "fail limit at cycle 27" in str(failed.get("message"))
+    assert cases["every other feature: watch +- 10 %, 3 of 5"].find("failure") is None
+
+
+def test_the_end_is_explained(worn: Looked) -> None:
+    explanation = explain_folder(worn.folder)
+    assert explanation is not None
+    assert explanation.likely is not None
+    assert explanation.likely.key == "wear"
+    assert "vent forward: steady current is " in explanation.likely.sentence
+    assert "gear, bearings, brushes" in explanation.likely.next_step
+
+
+def test_a_run_that_wear_has_ended_is_over(worn: Looked) -> None:
+    with pytest.raises(UsageError, match="came to its end"):
+        read_broken(worn.folder, now_unix_s=2e9)
+
+
+def test_what_is_only_to_be_watched_ends_nothing_and_is_told_at_the_end(tmp_path: Path) -> None:
+    run = look(tmp_path, limits="detectors: off", times=22, meddle=stiffer(1.5, from_cycle=18))
+    outcome = run.result.outcome
+    assert outcome.verdict is Verdict.PASSED
+    assert "; to watch: " in outcome.sentence
+    assert "vent forward: steady current beyond" not in outcome.sentence
+    assert run.watch.judge.blocks[CYCLES_OF_1].features["vent forward: steady current"].level is Level.WATCH
+    assert all(": watch limit at cycle " in said for said in run.said)
+
+
+def test_a_limit_in_the_features_unit_needs_no_baseline(tmp_path: Path) -> None:
+    limits = "limits: [{feature: peak current, of: vent, fail: at most 100 mA, cycles: 1 of 1}]"
+    run = look(tmp_path, limits=limits, times=30)
+    assert run.result.outcome.verdict is Verdict.FAILED
+    assert "vent: peak current: fail limit at cycle " in run.result.outcome.sentence
+    assert "beyond 'at most 100 mA' in 1 of the last 1 cycles" in run.result.outcome.sentence
+    assert run.watch.judge.blocks[CYCLES_OF_1].turns - run.watch.judge.blocks[CYCLES_OF_1].run_in == 1
+
+
+def test_without_a_folder_wear_ends_a_run_too(tmp_path: Path) -> None:
+    bench = small_bench()
+    steps = STEPS.replace("TIMES", "30").replace(
+        "WEAR",
+        WEAR.replace("5 s", "0 s").replace(
+            "LIMITS", "limits: [{feature: duration, fail: at most 1 s, cycles: 2 of 2}]"
+        ),
+    )
+    sequence = sequence_of(tmp_path, steps, head="log: {period: 5 ms}\n")
+    port = MockPort(MockDevice(setup_of_bench(bench), seed=3), pace="virtual", seed=3)
+    said: list[str] = []
+    wish = RunWish(sequence=sequence, bench=bench, virtual=True, watching=live.watching(said.append))
+    result = run_sequence(wish, port)
+    assert result.folder is None
+    assert result.outcome.verdict is Verdict.FAILED
+    assert "cycles: 3, 4; cycles: 4 commanded" in result.outcome.sentence
+
+
+# ---- gone on with ----------------------------------------------------------------------------------------------------
+
+CYCLES = 22
+CRASH_WEAR = "wear: {run in: {cycles: 2, for: 3 s}, baseline: 10, limits: [LIMIT]}\n      check every: 2"
+
+
+@dataclass
+class Snapshots:
+    """The judge of each part as it began, and what it was after so many turns of the run."""
+
+    begun: list[WearJudge] = field(default_factory=list)
+    after: dict[int, WearJudge] = field(default_factory=dict)
+
+
+def turns(judge: WearJudge) -> int:
+    """How many cycles and checks it has seen."""
+    return sum(block.turns for block in judge.blocks.values())
+
+
+def watch_host(host: Host, monkeypatch: pytest.MonkeyPatch) -> Snapshots:
+    """Have every part of the host's run leave what its judge was."""
+    snapshots = Snapshots()
+
+    class Watch(LiveWatch):
+        def __init__(self, watched: Watched, *, say: Callable[[str], None]) -> None:
+            super().__init__(watched, say=say)
+            snapshots.begun.append(copy.deepcopy(self.judge))
+
+        def done(self, turn: Any) -> Any:  # Any: as the class it stands for
+            seen = super().done(turn)
+            snapshots.after[turns(self.judge)] = copy.deepcopy(self.judge)
+            return seen
+
+    monkeypatch.setattr(live, "LiveWatch", Watch)
+    path = host.folder / "crash.yaml"
+    text = path.read_text("utf-8").replace("check every: 2", CRASH_WEAR)
+    limit = "{feature: energy, of: vent, watch: +- 3 %, fail: +90 %}"
+    path.write_text(text.replace("LIMIT", limit).replace(f"times: {FEW}", f"times: {CYCLES}"), "utf-8")
+    return snapshots
+
+
+def die_and_resume(folder: Path, monkeypatch: pytest.MonkeyPatch, point: int) -> None:
+    """A run that dies at a random operation and goes on, its judge compared with what it was."""
+    chance = random.Random(f"wear {point}")
+    host = Host(folder, seed=point)
+    snapshots = watch_host(host, monkeypatch)
+    process = Process(die_at=chance.randrange(1200, 3600))
+    with pytest.raises(Killed):
+        host.run(process)
+    process.cut_power(chance)
+    record = host.record()
+    kept = len(record.cycles()) + len(record.checks())
+    assert 0 < record.counted.done < CYCLES
+    host.pause(3.0)
+    host.run(Process(), resume=True)
+    _, second = snapshots.begun
+    assert second == snapshots.after[kept]
+    facts = gather(host.run_folder)
+    judge, _ = wear_of(facts, cycles_of(facts, ()))
+    assert judge == snapshots.after[max(snapshots.after)]
+    assert judge.blocks[CYCLES_OF_1].turns == CYCLES
+    assert judge.blocks[CYCLES_OF_1].run_in > 2 + 1  # the windings have cooled while nobody drove them
+
+
+@pytest.mark.parametrize("point", range(2))
+def test_a_resumed_run_judges_as_if_it_had_never_been_interrupted(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, point: int
+) -> None:
+    die_and_resume(tmp_path, monkeypatch, point)
+
+
+@pytest.mark.soak
+@pytest.mark.parametrize("point", range(2, 40))
+def test_the_same_at_forty_moments(tmp_path: Path, monkeypatch: pytest.MonkeyPatch, point: int) -> None:
+    die_and_resume(tmp_path, monkeypatch, point)
+
+
+def test_a_run_that_died_while_wear_was_ending_it_ends_at_once_when_it_is_resumed(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    def host_in(name: str) -> Host:
+        (tmp_path / name).mkdir()
+        host = Host(tmp_path / name, seed=1)
+        watch_host(host, monkeypatch)
+        path = host.folder / "crash.yaml"
+        text = path.read_text("utf-8").replace("fail: +90 %", "fail: at most 0.1 J, cycles: 1 of 1")
+        path.write_text(text, "utf-8")
+        return host
+
+    whole = Process()
+    assert host_in("whole").run(whole).outcome.verdict is Verdict.FAILED
+    host = host_in("broken")
+    with pytest.raises(Killed):
+        host.run(Process(die_at=whole.operations - 12))
+    done = host.record().counted.done
+    host.pause(3.0)
+    result = host.run(Process(), resume=True)
+    assert result.outcome.verdict is Verdict.FAILED
+    assert f"vent: energy: fail limit at cycle {done}" in result.outcome.sentence
+    counted = host.record().counted
+    assert (counted.commanded, counted.done) == (done, done)
+
+
+# ---- the judge -------------------------------------------------------------------------------------------------------
+
+
+def rules(**changes: Any) -> WearRules:  # Any: whatever the rules take
+    limit = WearLimit(
+        feature="vent: energy", watch=Threshold(text="+10 %", high=0.1), fail=None, k=2, n=3, place="f.yaml:1:1"
+    )
+    usual: dict[str, Any] = {
+        "block": 1, "name": "open", "turn": TurnKind.CYCLE, "run_in_turns": 3, "run_in_s": 60.0, "baseline": 10,
+        "detectors": True,
+        "drives": ("vent",), "limits": (limit,), "others": None,
+    }  # fmt: skip
+    return WearRules(**(usual | changes))
+
+
+def cycle(number: int, *, at_s: float, part: int = 1, others: dict[str, float] | None = None) -> Cycle:
+    begin = round(at_s * 1000)
+    return Cycle(
+        number=number, block=1, part=part, begin_tick=begin, end_tick=begin + 900,
+        features={"vent: energy": 1.0} | (others or {}),
+    )  # fmt: skip
+
+
+def test_the_run_in_lasts_for_its_cycles_and_its_time_and_comes_again_after_an_interruption() -> None:
+    judge = WearJudge.of([rules()], tick_us=1000)
+    block = judge.blocks[CYCLES_OF_1]
+    for number in range(1, 9):
+        judge.take(cycle(number, at_s=5.0 + 10.0 * number))
+    assert block.run_in == 6  # those that begin less than 60 s after the first one
+    for number in range(9, 13):
+        judge.take(cycle(number, at_s=20.0 * number, part=2))
+    assert block.run_in == 6 + 3
+    slow = WearJudge.of([rules()], tick_us=1000)
+    for number in range(1, 9):
+        slow.take(cycle(number, at_s=100.0 * number))
+    assert slow.blocks[CYCLES_OF_1].run_in == 3
+
+
+def test_features_of_motors_that_are_not_driven_are_not_judged() -> None:
+    others = WearLimit(feature="", watch=Threshold(text="+- 1 %", low=-0.01, high=0.01), fail=None)
+    judge = WearJudge.of([rules(run_in_turns=0, run_in_s=0.0, others=others)], tick_us=1000)
+    source = np.random.default_rng(1)
+    for number in range(1, 60):
+        noise = {"fan: peak current": float(source.uniform(0.1, 9.0)), "vent: position error": float(source.normal())}
+        judge.take(cycle(number, at_s=float(number), others={"duration": 1.0} | noise))
+    assert list(judge.blocks[CYCLES_OF_1].features) == ["vent: energy", "duration"]
+    assert judge.to_watch() == []
+
+
+def test_every_feature_that_is_computed_has_its_word_and_unit() -> None:
+    span = features.Span(number=1, part=1, begin_tick=0, end_tick=1)
+    made = features.CycleFeatures(
+        span=span, samples=0, left_out=0, duration_s=1.0, lowest_supply_v=1.0, motors={"vent": MotorFeatures()},
+        servos={"latch": ServoFeatures()},
+    )  # fmt: skip
+    names = list(made.values())
+    assert {word_of(name) for name in names} == set(FEATURE_WORDS)
+    for name in names:
+        word = FEATURE_WORDS[word_of(name)]
+        assert features.unit_of(name) == word.unit, name
+        assert features.is_judged(name) == (not word.on_request), name
+        drive = {Whose.CYCLE: "", Whose.SERVO: "latch"}.get(word.whose, "vent")
+        assert drive_of(name) == drive
+        assert name in full_names(word_of(name), drive, None)
+
+
+def test_blocks_are_judged_each_by_its_own_rules() -> None:
+    judge = WearJudge.of([rules(run_in_turns=0, run_in_s=0.0)], tick_us=1000)
+    other = Cycle(number=1, block=2, part=1, begin_tick=0, end_tick=900, features={"vent: energy": 99.0})
+    assert judge.take(other) == []
+    assert judge.blocks[CYCLES_OF_1].turns == 0
+
+
+@pytest.mark.parametrize(
+    ("text", "place"), [("a/b.yaml:3:14", "a/b.yaml:3:14"), ("C:\\x.yaml:3:1", "C:\\x.yaml:3:1"), ("", "None")]
+)
+def test_a_place_is_read_back(text: str, place: str) -> None:
+    assert str(place_of(text)) == place
