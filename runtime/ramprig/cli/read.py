@@ -59,7 +59,10 @@ def summary(manifest: dict[str, Any], found: Audit) -> list[str]:  # Any: JSON a
         lines.append("cycles   " + ", ".join(f"{count} {name}" for name, count in cycles.items()))
     lines += [f"{'broken' if i == 0 else '':<9}{text}" for i, text in enumerate(found.interruptions)]
     lines += [f"{'':9}{line}" for line in gap_lines(manifest.get("samples") or {})]
-    verdicts = found.statements or ("every sample is in the file or told as lost, and no file was changed",)
+    whole = "every sample is in the file or told as lost, and no file was changed"
+    if (manifest.get("samples") or {}).get("thinned"):
+        whole = "every sample is in the file, thinned on purpose or told as lost, and no file was changed"
+    verdicts = found.statements or (whole,)
     return lines + [f"{'checked' if i == 0 else '':<9}{text}" for i, text in enumerate(verdicts)]
 
 
@@ -69,8 +72,9 @@ def samples_line(manifest: dict[str, Any], found: Audit) -> str:  # Any: as in s
     if not account:
         return f"{found.rows} rows in the file, {found.known_lost} told as lost"
     parts = [f"{account[key]} {key}" for key in ("expected", "received", "lost", "written")]
-    parts += [f"{account[key]} {key}" for key in ("recovered", "unwritten") if account.get(key)]
-    return ", ".join(parts) + f"; {found.rows} rows in the file"
+    parts += [f"{account[key]} {key}" for key in ("thinned", "recovered", "unwritten") if account.get(key)]
+    volumes = sum(len(part.get("samples_files") or [""]) for part in manifest.get("parts") or [manifest])
+    return ", ".join(parts) + f"; {found.rows} rows in {'the file' if volumes == 1 else f'{volumes} files'}"
 
 
 def gap_lines(account: dict[str, Any]) -> list[str]:  # Any: as in summary

@@ -17,6 +17,7 @@ from ramprig.record.volumes import Stream
 
 from .envelope import INTERVALS_MAX, Band, Envelope
 from .facts import Facts
+from .kept import RangeLine, ranges_path, read_ranges, thinning_of
 
 Floats = NDArray[np.float64]
 
@@ -76,7 +77,8 @@ class Digest:
 
     An interval is `interval_stride` cycles, or a minute; those from 1 to below `interval_edges` are whole cycles.
     `features` are those of the cycles and checks of the count of cycles, the first FEATURES_MAX: as they were recorded
-    while the run was under way, else from the samples.
+    while the run was under way, else from the samples, unless those were thinned. Of a thinned log intervals, totals
+    and the envelope's ends are of all samples, from the ranges that were recorded with it.
     """
 
     columns: tuple[str, ...]
@@ -128,7 +130,9 @@ def digest_samples(facts: Facts) -> Digest:
     curves = {motor: _CurveWalk(digest, motor) for motor in facts.motors if f"{motor}.speed_rpm" in columns}
     recorded = recorded_features(facts.cycles)
     _keep_features(digest, recorded or [])
-    spans, on_output = [] if recorded is not None else spans_of(facts.cycles), on_output_of(facts.manifest)
+    is_thinned = thinning_of(facts) is not None
+    spans = [] if recorded is not None or is_thinned else spans_of(facts.cycles)
+    on_output = on_output_of(facts.manifest)
     aged = FeatureWalk(facts.columns, spans, tick_us=facts.tick_us, on_output=on_output)
     offset_s = 0.0
     for part, paths in facts.files_of_parts.items():
@@ -147,9 +151,25 @@ def digest_samples(facts: Facts) -> Digest:
                 walk.take(times, piece)
         _keep_features(digest, aged.close_part(part))
         digest.torn_bytes += stream.torn_bytes
+    if is_thinned:
+        table = _from_ranges(facts, digest, edges) or table
     digest.intervals = table.rows()
     digest.totals = table.totals()
     return digest
+
+
+def _from_ranges(facts: Facts, digest: Digest, edges: list[float] | float) -> _IntervalTable | None:
+    """The table of intervals over all samples, and the envelope widened to them; None where no ranges were recorded."""
+    finest = ranges_path(facts, with_cycles=False)
+    path = ranges_path(facts, with_cycles=isinstance(edges, list))
+    if path is None or finest is None:
+        return None
+    for line in read_ranges(finest, digest.columns):
+        digest.envelope.widen(line.first_s, line.last_s, {name: found[:3] for name, found in line.columns.items()})
+    table = _IntervalTable(digest.columns, edges)
+    for line in read_ranges(path, digest.columns):
+        table.add_line(line)
+    return table
 
 
 def _keep_features(digest: Digest, found: Sequence[TurnFeatures]) -> None:
@@ -236,6 +256,18 @@ class _IntervalTable:
                 max(high, float(values.max())), known + len(values),
             ]  # fmt: skip
         self._sums[number] = first, float(times[-1]), count + len(times), sums
+
+    def add_line(self, line: RangeLine) -> None:
+        """A span that was summed up while it was recorded; it belongs where it begins."""
+        if isinstance(self._edges, float):
+            number = int(line.first_s // self._edges)
+        else:
+            number = bisect_right(self._edges, line.first_s)
+        first, _, count, sums = self._sums.get(number, (line.first_s, 0.0, 0, {}))
+        for name, (least, mean, greatest, known) in line.columns.items():
+            low, total, high, before = sums.get(name, [math.inf, 0.0, -math.inf, 0])
+            sums[name] = [min(low, least), total + mean * known, max(high, greatest), before + known]
+        self._sums[number] = first, line.last_s, count + line.samples, sums
 
     def rows(self) -> list[Interval]:
         """The intervals in order; number 0 is what came before the first cycle."""

@@ -79,6 +79,28 @@ class Envelope:
             self._sum[row, into] += np.add.reduceat(np.where(known, values, 0.0), begins)
             self._known[row, into] += np.add.reduceat(known.astype(np.int64), begins)
 
+    def widen(self, begin_s: float, end_s: float, columns: Mapping[str, tuple[float, float, float]]) -> None:
+        """Between these times there were samples, not given to `add`, with this least, mean and greatest value.
+
+        The means of intervals that have samples of their own stay those of their samples. Comes after all `add`.
+        """
+        if self._start_s is None:
+            self._start_s, self._width_s = begin_s, max(1e-3, (end_s - begin_s) / self._max)
+        while (end_s - self._start_s) / self._width_s >= self._max:
+            self._join_pairs()
+        first, last = (max(0, int((at - self._start_s) / self._width_s)) for at in (begin_s, end_s))
+        places = slice(first, last + 1)
+        self._samples[places] = np.maximum(self._samples[places], 2)  # more than one sample lies behind it
+        for row, name in enumerate(self._names):
+            if name not in columns:
+                continue
+            least, mean, greatest = columns[name]
+            self._least[row, places] = np.fmin(self._least[row, places], least)
+            self._greatest[row, places] = np.fmax(self._greatest[row, places], greatest)
+            empty = self._known[row, places] == 0
+            self._sum[row, places][empty] = mean
+            self._known[row, places][empty] = 1
+
     def _join_pairs(self) -> None:
         half = self._max // 2
         self._width_s *= 2

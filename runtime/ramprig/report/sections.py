@@ -13,6 +13,7 @@ from ramprig_link.words import LIMITS, Per
 from . import page
 from .digest import Digest
 from .facts import Document, Expectation, Facts
+from .kept import said_of_thinning, whole_of
 from .trends import Trend
 
 RULE = (
@@ -296,11 +297,16 @@ def _wall_text(facts: Facts) -> str:
 def account(facts: Facts, audit: Audit) -> str:
     """Where every sample is, checked against the rows when the report was made."""
     found = facts.manifest.get("samples") or {}
-    names = ("expected", "received", "lost", "written", "unwritten", "recovered", "duplicates", "strange_lines")
+    names = (
+        *("expected", "received", "lost", "written", "thinned", "unwritten"),
+        *("recovered", "duplicates", "strange_lines"),
+    )
     pairs: list[tuple[str, object]] = [(name.replace("_", " "), str(found[name])) for name in names if name in found]
     pairs.append(("rows in the file", str(audit.rows)))
     pairs.append(("confirmed by the board", "yes, for every logging" if found.get("complete") else "no"))
-    statements = audit.statements or ("Every sample is in the file or told as lost, and no file was changed.",)
+    statements = audit.statements or (f"{whole_of(found)}, and no file was changed.",)
+    thinned = said_of_thinning(facts)
+    statements = (thinned, *statements) if thinned else statements
     gaps = [
         [str(gap.get("first_tick")), str(gap.get("count")), str(gap.get("period_ticks")), page.text(gap.get("reason"))]
         for gap in (found.get("gaps") or [])[:ROWS_MAX]

@@ -1,0 +1,109 @@
+"""What a report takes from a thinned log: the ranges that were recorded over all samples, and how to say it."""
+
+from __future__ import annotations
+
+import csv
+import io
+from collections.abc import Iterator, Mapping
+from dataclasses import dataclass
+from pathlib import Path
+
+from ramprig.errors import RecordError
+from ramprig.record.folder import CYCLE_RANGES_FILE, INTERVAL_RANGES_FILE
+from ramprig.record.keeping import Around, Thinning
+from ramprig.sequence.log_forecast import said_of
+
+from .facts import Facts
+
+
+@dataclass(frozen=True, slots=True)
+class RangeLine:
+    """One span of a ranges file: the times of its first and last sample, and of each column least, mean, greatest and
+    how many samples had a value; columns without any are not among them."""
+
+    what: str
+    number: int
+    first_s: float
+    last_s: float
+    samples: int
+    columns: Mapping[str, tuple[float, float, float, int]]
+
+
+def thinning_of(facts: Facts) -> Thinning | None:
+    """The rule by which the log was thinned, by the first part that was; None where every row was to be kept."""
+    for part in [facts.manifest, *facts.parts]:
+        rule = (part.get("keeping") or {}).get("thinning")
+        if rule is not None:
+            return Thinning(
+                every=rule.get("every"),
+                ranges_s=rule.get("ranges_s"),
+                before_s=float(rule["before_s"]),
+                after_s=float(rule["after_s"]),
+                around=frozenset(Around(word) for word in rule["around"]),
+            )
+    return None
+
+
+def ranges_path(facts: Facts, *, with_cycles: bool) -> Path | None:
+    """The ranges over all samples of the run: of its cycles if it has any and they are wanted, else of its intervals;
+    None where there are neither."""
+    names = [CYCLE_RANGES_FILE, INTERVAL_RANGES_FILE] if with_cycles else [INTERVAL_RANGES_FILE, CYCLE_RANGES_FILE]
+    return next((facts.folder / name for name in names if (facts.folder / name).is_file()), None)
+
+
+def read_ranges(path: Path, columns: tuple[str, ...]) -> Iterator[RangeLine]:
+    """The spans with samples, one after another; a torn last line is left out. Raises RecordError."""
+    try:
+        with open(path, encoding="utf-8", newline="") as file:
+            names = next(csv.reader([file.readline()]), [])
+            for line in file:
+                if not line.endswith("\n"):
+                    return
+                fields = dict(zip(names, next(csv.reader(io.StringIO(line, newline=""))), strict=True))
+                if int(fields["samples"]):
+                    yield _line(fields, columns)
+    except (OSError, ValueError, KeyError, csv.Error) as error:
+        raise RecordError(f"{path} cannot be read as a ranges file: {error!r}") from error
+
+
+def _line(fields: Mapping[str, str], columns: tuple[str, ...]) -> RangeLine:
+    found = {}
+    for name in columns:
+        count = int(fields.get(f"{name}.count") or 0)
+        if count:
+            least, mean, greatest = (float(fields[f"{name}.{each}"]) for each in ("least", "mean", "greatest"))
+            found[name] = least, mean, greatest, count
+    return RangeLine(
+        fields["what"],
+        int(fields["number"]),
+        float(fields["first_s"]),
+        float(fields["last_s"]),
+        int(fields["samples"]),
+        found,
+    )
+
+
+def said_of_thinning(facts: Facts) -> str:
+    """How the log was thinned and what the report makes of it; empty where it was not."""
+    rule = thinning_of(facts)
+    if rule is None:
+        return ""
+    spans = facts.counts["full_rate_begun"]
+    text = (
+        f"The log was thinned on purpose: {said_of(rule)}. Full rate was kept {spans} times, the begin and the end of "
+        "the run among them. Every sample was received and judged while the run was under way; those left out are "
+        "counted as thinned, not as lost."
+    )
+    path = ranges_path(facts, with_cycles=len(facts.passes) >= 2)
+    if path is None:
+        return f"{text} Plots and ranges show the rows that were kept: what lay between two of them is not known."
+    return f"{text} Ranges, and the bands of the plots, are of all samples, from {path.name}."
+
+
+def whole_of(account: Mapping[str, object]) -> str:
+    """What holds where the audit has found nothing."""
+    return (
+        "Every sample is in the file, thinned on purpose or told as lost"
+        if account.get("thinned")
+        else "Every sample is in the file or told as lost"
+    )

@@ -1,0 +1,128 @@
+"""The report of a thinned run says the same of the run as that of the full one, and says what was left out."""
+
+from __future__ import annotations
+
+import csv
+import io
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+from kept_runs import FULL, THIN, rehearsed
+from ramprig.cli.read import summary
+from ramprig.errors import RecordError
+from ramprig.record.folder import CYCLE_RANGES_FILE, INTERVAL_RANGES_FILE
+from ramprig.record.reading import audit, read_manifest
+from ramprig.report.digest import Digest, digest_samples
+from ramprig.report.envelope import Envelope
+from ramprig.report.facts import gather
+from ramprig.report.kept import read_ranges, said_of_thinning, thinning_of
+from ramprig.report.making import intervals_csv, make_report
+
+
+@pytest.fixture(scope="module")
+def full(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    return rehearsed(tmp_path_factory.mktemp("report") / "full", FULL)
+
+
+@pytest.fixture(scope="module")
+def thinned(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    return rehearsed(tmp_path_factory.mktemp("report") / "thinned", THIN)
+
+
+def digest(folder: Path) -> Digest:
+    return digest_samples(gather(folder))
+
+
+def numbers(data: bytes) -> tuple[list[str], np.ndarray[tuple[int, ...], np.dtype[np.float64]]]:
+    head, *rows = csv.reader(io.StringIO(data.decode("utf-8"), newline=""))
+    return head, np.array([[float(cell) if cell else np.nan for cell in row] for row in rows])
+
+
+def test_the_intervals_of_a_thinned_run_are_those_of_all_samples(full: Path, thinned: Path) -> None:
+    head, expected = numbers(intervals_csv(digest(full)))
+    same, found = numbers(intervals_csv(digest(thinned)))
+    assert same == head
+    assert found.shape == expected.shape
+    exact = [place for place, name in enumerate(head) if not name.endswith(".mean")]
+    assert np.array_equal(found[:, exact], expected[:, exact], equal_nan=True)
+    assert np.allclose(found, expected, rtol=1e-4, atol=1e-4, equal_nan=True)  # means: three decimals more than a value
+
+
+def test_the_totals_and_the_ends_of_the_plots_are_those_of_all_samples(full: Path, thinned: Path) -> None:
+    whole, less = digest(full), digest(thinned)
+    assert less.rows < whole.rows / 4
+    for column, (least, mean, greatest) in whole.totals.items():
+        assert (less.totals[column][0], less.totals[column][2]) == (least, greatest)
+        assert less.totals[column][1] == pytest.approx(mean, rel=1e-4, abs=1e-4)
+        band, wide = whole.band(column), less.band(column)
+        assert (np.nanmin(wide.least), np.nanmax(wide.greatest)) == (np.nanmin(band.least), np.nanmax(band.greatest))
+        assert not wide.is_exact
+
+
+def test_features_come_from_the_run_itself_or_not_at_all(full: Path, thinned: Path, tmp_path: Path) -> None:
+    one, other = digest(full).features, digest(thinned).features
+    assert len(one) == len(other) == 5  # three cycles and two checks
+    assert [each.values() for each in one] == [each.values() for each in other]
+    assert digest(rehearsed(tmp_path / "unwatched", THIN, watched=False)).features == []
+
+
+def test_the_report_and_the_summary_say_what_was_left_out(full: Path, thinned: Path, tmp_path: Path) -> None:
+    made = make_report([thinned], out=tmp_path, issued="2026-01-01T00:00:00Z")
+    text = made.report.read_text("utf-8")
+    assert "The log was thinned on purpose: every 50th row and ranges over each 1 s; full rate from 0 s before" in text
+    assert "Every sample is in the file, thinned on purpose or told as lost" in text
+    assert said_of_thinning(gather(full)) == ""
+    manifest = read_manifest(thinned)
+    lines = summary(manifest, audit(thinned))
+    account = manifest["samples"]
+    assert f"{account['written']} written, {account['thinned']} thinned; {account['written']} rows in the file" in str(
+        lines
+    )
+    assert lines[-1].endswith(
+        "every sample is in the file, thinned on purpose or told as lost, and no file was changed"
+    )
+
+
+def test_without_ranges_the_report_says_that_it_shows_kept_rows_alone(thinned: Path) -> None:
+    assert "are of all samples, from cycle-ranges.csv." in said_of_thinning(gather(thinned))
+    facts = gather(thinned)
+    facts.folder = thinned.parent  # as if neither file were there
+    assert "what lay between two of them is not known" in said_of_thinning(facts)
+    rule = thinning_of(facts)
+    assert rule is not None
+    assert (rule.every, rule.ranges_s, rule.before_s, rule.after_s) == (50, 1.0, 0.0, 0.0)
+
+
+def test_a_torn_last_line_of_a_ranges_file_is_left_out_and_a_broken_one_told(thinned: Path, tmp_path: Path) -> None:
+    data = (thinned / CYCLE_RANGES_FILE).read_bytes()
+    path = tmp_path / CYCLE_RANGES_FILE
+    path.write_bytes(data[:-30])
+    whole = list(read_ranges(thinned / CYCLE_RANGES_FILE, ("supply_v",)))
+    assert list(read_ranges(path, ("supply_v",))) == whole[:-1]
+    path.write_bytes(data[:-30] + b"\r\n")
+    with pytest.raises(RecordError, match=r"cycle-ranges\.csv cannot be read as a ranges file"):
+        list(read_ranges(path, ("supply_v",)))
+    assert len(list(read_ranges(thinned / INTERVAL_RANGES_FILE, ("supply_v",)))) > 3
+
+
+def test_an_envelope_that_is_widened_keeps_its_means_and_fills_what_was_empty() -> None:
+    envelope = Envelope(["a"], intervals_max=10)
+    envelope.add(np.array([0.0, 1.0, 2.0]), {"a": np.array([1.0, 2.0, 3.0])})
+    envelope.widen(1.0, 2.0, {"a": (-5.0, 0.0, 9.0)})
+    envelope.widen(4.0, 5.0, {"a": (7.0, 7.5, 8.0)})
+    band = envelope.band("a")
+    assert band.least.tolist() == [1.0, -5.0, -5.0, 7.0, 7.0]
+    assert band.greatest.tolist() == [1.0, 9.0, 9.0, 8.0, 8.0]
+    assert band.mean.tolist() == [1.0, 2.0, 3.0, 7.5, 7.5]
+    assert not band.is_exact
+
+
+def test_an_envelope_of_ranges_alone_covers_their_time() -> None:
+    envelope = Envelope(["a"], intervals_max=10)
+    envelope.widen(0.0, 10.0, {"a": (1.0, 2.0, 3.0)})
+    envelope.widen(10.0, 100.0, {"a": (0.0, 1.0, 5.0)})
+    band = envelope.band("a")
+    assert (band.least.min(), band.greatest.max()) == (0.0, 5.0)
+    assert band.time_s[-1] > 90
