@@ -2,7 +2,7 @@
 
 The build's ticks are stretched sixteenfold, so that each line comes and is answered within the tick before the next;
 it is sent so that it is whole shortly before its tick. What the sensors read at each tick is what the mock read in the
-same script. The board makes its lines between the ticks, so answers, notices and data lines are each in their own order.
+script. The board makes its lines between ticks, so answers, notices and data lines are each in their own order.
 """
 
 from __future__ import annotations
@@ -27,8 +27,8 @@ LAST_US = 2000
 """How long before its tick the inputs are written: the tick before has long read its own."""
 START_US = 8000
 """When the inputs of the first tick are written: the board has begun, its first tick comes later."""
-MOST_BYTES = 300
-"""What comes between the work of the tick before and the line's end."""
+MOST_BYTES = 90
+"""What comes in one go and is heard whole, longer than any line; of 120 some are lost at this rate, and counted."""
 AFTER_TICKS = 8
 PAYLOAD = 64
 """Characters of a data line: what the memory has room for beside four kept lines."""
@@ -123,7 +123,7 @@ def play(script: Script, folder: Path) -> list[str]:
         if first_us is not None:
             carry_out(board, script, 0, first_us)
         first_us = until_first_tick(board)
-        for tick in range(1, script.ticks):
+        for tick in range(1, script.ticks + AFTER_TICKS):
             carry_out(board, script, tick, first_us)
         board.run_us(first_us + TICK_US * (script.ticks + AFTER_TICKS) - board.now_us)
         assert board.garbled == 0
