@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import shutil
 from collections.abc import Callable
 from pathlib import Path
 
@@ -213,6 +214,31 @@ def test_the_copies_in_the_folder_are_used_where_the_files_have_changed(tmp_path
     host_copy = host.run_folder / "crash.yaml"
     host_copy.write_text("sequence: other\n", "utf-8")
     assert any("crash.yaml was changed" in text for text in audit(host.run_folder).statements)
+
+
+def test_copies_stand_for_files_that_lay_in_other_folders(tmp_path: Path) -> None:
+    """All copies lie side by side in the run folder, two of one name among them; the files themselves are gone."""
+    host = Host(tmp_path)
+    for folder in ("parts", "parts/more"):
+        (tmp_path / folder).mkdir()
+    path = tmp_path / "crash.yaml"
+    whole = path.read_text("utf-8")
+    (tmp_path / "parts" / "end.yaml").write_text("sequence: a\nsteps:\n  - include: more/end.yaml\n", "utf-8")
+    (tmp_path / "parts" / "more" / "end.yaml").write_text(
+        "sequence: b\nvalues: {wait: 1 s}\nsteps:\n  - hold: wait\n", "utf-8"
+    )
+    path.write_text(whole + "  - include: {file: parts/end.yaml}\n", "utf-8")
+    with pytest.raises(Killed):
+        host.run(Process(die_at=400))
+    names = [entry["name"] for entry in read_manifest(host.run_folder)["inputs"]]
+    shutil.rmtree(tmp_path / "parts")
+    broken = read_broken(host.run_folder, now_unix_s=host.now_unix_s())
+    assert [Path(name).name for name in broken.changed] == ["end.yaml", "end.yaml"]
+    assert [source.file for source in broken.sequence.files] == names[1:]
+    path.write_text(whole, "utf-8")  # the host of this test reads the file itself before it resumes
+    host.pause(3.0)
+    assert host.run(Process(), resume=True).outcome.verdict is Verdict.PASSED
+    assert host.record().counted.confirmed == CYCLES
 
 
 def test_a_run_that_came_to_its_end_or_has_no_cycles_is_not_gone_on_with(tmp_path: Path) -> None:

@@ -16,6 +16,7 @@ from explain_cases import Case, case_of, run_case
 from ramprig.report.facts import Expectation, Facts, gather
 from ramprig.report.junit import Case as JunitCase
 from ramprig.report.junit import cases_of, junit_xml
+from ramprig.report.sections import results
 
 SCHEMA = Path(__file__).parent / "data" / "junit-10.xsd"
 """By Gregory Boissinot (MIT licence, its notice inside), as pytest's source distribution 9.2.0 carries it."""
@@ -94,6 +95,51 @@ def test_a_trip_fails_its_limit_and_the_run(tripped: Facts) -> None:
     assert "likely" in cases["run", "carried out to its end"].out
     failing = [name for (group, name), case in cases.items() if group == "limits" and case.failure]
     assert failing in (["vent: trip_ma"], ["vent: stall_duty"])
+
+
+AHEAD = """- hold: 500 ms
+- expect: {current of: vent, is: at most 2 A}
+- ramp: {motor: vent, to: 40 %, in: 500 ms}
+- hold: 10 s
+- expect: {speed of: vent, is: at least 5 rpm}
+- repeat:
+    times: 3
+    steps:
+      - hold: 1 s
+      - expect: {current of: vent, is: at most 1.9 A, over: 500 ms}"""
+
+
+def test_what_the_run_never_came_to_judge_is_skipped_with_the_reason(tmp_path: Path, is_valid: Valid) -> None:
+    facts = facts_of(tmp_path, Case("", steps=AHEAD, faults=("jammed_shaft",)))
+    assert facts.verdict == "tripped"
+    cases = [case for case in cases_of(facts) if case.group not in ("run", "limits")]
+    assert [case.name.partition(" is ")[0] for case in cases] == ["current of vent", "speed of vent", "current of vent"]
+    assert [bool(case.skipped) for case in cases] == [False, True, True]
+    assert cases[1].skipped == "not judged: the run ended before (tripped)"
+    assert "s.yaml:8:" in cases[1].group
+    text = junit_xml([facts])
+    assert is_valid(text)
+    suite = ElementTree.fromstring(text).find("testsuite")
+    assert suite is not None
+    assert suite.get("skipped") == str(len(list(suite.iter("skipped"))))
+    page = results(facts)
+    assert page.count("<td>not judged</td>") == 2
+    assert "Of these, 2: not judged: the run ended before (tripped)." in page
+
+
+def test_a_run_that_passed_has_judged_all(tmp_path: Path) -> None:
+    facts = facts_of(tmp_path, Case("", steps=AHEAD))
+    assert facts.verdict == "passed"
+    assert not any(case.skipped for case in cases_of(facts) if case.group != "limits")
+
+
+def test_a_copy_of_the_sequence_that_is_gone_is_told(tmp_path: Path, is_valid: Valid) -> None:
+    facts = facts_of(tmp_path, Case("", steps=AHEAD, faults=("jammed_shaft",)))
+    (facts.folder / "s.yaml").unlink()
+    told = [case for case in cases_of(facts) if case.name == "expectations that were not judged"]
+    assert len(told) == 1
+    assert "s.yaml" in told[0].skipped
+    assert is_valid(junit_xml([facts]))
 
 
 def test_a_run_that_broke_off_is_an_error(failed: Facts, is_valid: Valid) -> None:

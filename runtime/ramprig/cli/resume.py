@@ -95,7 +95,8 @@ def what_is_known(broken: Broken) -> Iterator[str]:
     if broken.open_number is not None:
         yield f"unknown   cycle {broken.open_number} was commanded, and its end is not known: it counts as not done"
     for name in broken.changed:
-        yield f"changed   {name} is not as it was when the run began: the copy in the run folder is used"
+        how = "is not as it was when the run began" if Path(name).exists() else "is not to be found from here"
+        yield f"changed   {name} {how}: the copy in the run folder is used"
 
 
 def ask() -> None:

@@ -25,6 +25,7 @@ from ramprig.record.reading import read_events, read_manifest
 from ramprig.sequence.carry_on import CarryOn
 from ramprig.sequence.cycle_run import RunSoFar
 from ramprig.sequence.executive import Progress
+from ramprig.sequence.kept import kept_sequence, kept_values
 from ramprig.sequence.outcome import Outcome
 from ramprig.sequence.reading import Sequence, read_sequence
 from ramprig.sequence.running import RunResult, RunWish, run_sequence
@@ -111,8 +112,10 @@ def _made_from(folder: Path, manifest: Mapping[str, Any]) -> tuple[Sequence, Ben
     missing = [role for role in ("bench", "sequence") if role not in by_role]
     if missing:
         raise RecordError(f"{folder} has no copy of its {' and '.join(missing)}: the run cannot be gone on with")
-    values = {str(name): str(value) for name, value in (manifest.get("settings") or {}).get("values", {}).items()}
-    return read_sequence(by_role["sequence"], settings=values), load_bench(by_role["bench"]), changed
+    if changed:
+        return kept_sequence(folder, manifest), load_bench(by_role["bench"]), changed
+    sequence = read_sequence(by_role["sequence"], settings=kept_values(manifest))
+    return sequence, load_bench(by_role["bench"]), changed
 
 
 def _digest(path: Path) -> str:

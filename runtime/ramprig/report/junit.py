@@ -1,5 +1,7 @@
 """`junit.xml` of runs: one test case for each expectation, each limit to wear or that trips, and the run itself.
 
+An expectation that was never judged, as the run ended before it, is skipped with the reason.
+
 The attributes are those that the schema of the Jenkins xUnit plugin (G. Boissinot, MIT, as kept by pytest in
 `junit-10.xsd`) takes in the places where it takes them. Measured values stand in `system-out`, as some readers refuse
 properties inside a test case.
@@ -17,6 +19,7 @@ from ramprig_link.words import LIMITS
 from .explain import explain
 from .facts import Expectation, Facts
 from .page import clean
+from .unjudged import unjudged, why_unjudged
 from .worn import wear_cases
 
 TRIPS = {
@@ -115,8 +118,19 @@ def cases_of(facts: Facts) -> Iterator[Case]:
     yield _run_case(facts)
     for found in facts.expectations.values():
         yield _expectation_case(found)
+    missed, trouble = unjudged(facts)
+    for found in missed:
+        yield Case(found.place, found.text, f"limit: {found.limit}", skipped=why_unjudged(facts))
+    if trouble:
+        yield Case("run", "expectations that were not judged", trouble, skipped=f"they cannot be told: {trouble}")
     for worn in wear_cases(facts):
         yield Case(worn.group, worn.name, worn.out, failure=worn.failure, skipped=worn.skipped)
+    yield from _limit_cases(facts)
+
+
+def _limit_cases(facts: Facts) -> Iterator[Case]:
+    """Each limit of the board that trips."""
+    armed = bool(facts.counts["armed"])
     tripped = {(event["trip"], int(event.get("index", 0))): event for event in facts.of("tripped")}
     for (item, index), value in facts.limits.items():
         if item not in TRIPS:
@@ -130,6 +144,8 @@ def cases_of(facts: Facts) -> Iterator[Case]:
             yield Case("limits", name, f"{out}\nat {event.get('time_s')} s of the run", failure=failure)
         elif item in OFF_AT_ZERO and value == 0:
             yield Case("limits", name, out, skipped="this protection is off in the bench file")
+        elif not armed:
+            yield Case("limits", name, out, skipped="the outputs were never enabled in this run")
         else:
             yield Case("limits", name, f"{out}\nnot reached")
 

@@ -15,6 +15,7 @@ from .digest import Digest
 from .facts import Document, Expectation, Facts
 from .kept import said_of_thinning, whole_of
 from .trends import Trend
+from .unjudged import unjudged, why_unjudged
 
 RULE = (
     "Decision rule: an expectation passes where the value found lies within its limits, the limits included; there is "
@@ -144,16 +145,22 @@ def _clock_text(clocks: Document) -> str:
 
 def results(facts: Facts) -> str:
     """Each expectation: what, where, limit, values, verdict; the rule; failures with their values."""
-    if not facts.expectations:
+    missed, trouble = unjudged(facts)
+    if not facts.expectations and not missed:
         return page.paragraph(
             "The sequence has no expectations, so there is nothing to pass or fail."
         ) + page.paragraph(RULE, kind="note")
     found = list(facts.expectations.values())
-    rows = [_expectation(entry) for entry in found[:ROWS_MAX]]
+    rows = [_expectation(entry) for entry in (found + missed)[:ROWS_MAX]]
     heads = ["what", "where", "limit", "values found", "judged", "failed", "verdict"]
     parts = [page.paragraph(RULE), page.table(heads, rows, numbers=(4, 5))]
-    if len(found) > ROWS_MAX:
-        parts.append(page.paragraph(f"{len(found) - ROWS_MAX} more expectations are in the run folder."))
+    more = len(found) + len(missed) - ROWS_MAX
+    if more > 0:
+        parts.append(page.paragraph(f"{more} more expectations are in the run folder."))
+    if missed:
+        parts.append(page.paragraph(f"Of these, {len(missed)}: {why_unjudged(facts)}.", kind="note"))
+    if trouble:
+        parts.append(page.paragraph(f"Expectations that were not judged cannot be told: {trouble}.", kind="note"))
     parts.append(_failures(found))
     parts.append(_cycles(facts))
     parts.append(_resolution(facts))
@@ -165,10 +172,10 @@ def _expectation(entry: Expectation) -> list[str]:
         page.text(entry.what),
         f"<code>{page.text(entry.place)}</code>",
         page.text(entry.limit),
-        page.text(_values(entry)),
+        page.text(_values(entry)) if entry.judged else "",
         str(entry.judged),
         str(entry.failed),
-        page.status(entry.failed == 0),
+        page.status(entry.failed == 0) if entry.judged else page.text("not judged"),
     ]
 
 

@@ -10,7 +10,7 @@ from dataclasses import dataclass, field
 from fractions import Fraction
 from pathlib import Path
 
-from ramprig.errors import UsageError
+from ramprig.errors import FileError, UsageError
 from ramprig.record.keeping import Keeping
 from ramprig.yamlfile import (
     Key,
@@ -27,6 +27,7 @@ from ramprig.yamlfile import (
     TableShape,
     TextShape,
     load,
+    load_copy,
     load_text,
     shorten,
     suggestion,
@@ -77,12 +78,16 @@ class Sequence:
     keeping: Keeping = field(default_factory=Keeping)
 
 
-def read_sequence(path: str | Path, *, settings: Mapping[str, str] | None = None) -> Sequence:
+def read_sequence(
+    path: str | Path, *, settings: Mapping[str, str] | None = None, copies: Mapping[str, Path] | None = None
+) -> Sequence:
     """The sequence in the file at `path`, with named values replaced by `settings` (from `--set`).
 
-    Raises `FileError`, and `UsageError` for a setting of a name that the file does not have.
+    With `copies`, by the names of the files as they were read once, these are read in their place, and messages go on
+    giving the names: no other file is read. Raises `FileError`, and `UsageError` for a setting of a name that the file
+    does not have.
     """
-    return _Files(path, settings or {}).whole(load(path))
+    return _Files(path, settings or {}, copies).read_whole()
 
 
 def sequence_of_text(text: str, file: str = "sequence.yaml") -> Sequence:
@@ -109,11 +114,28 @@ class _UsedNames(Names):
 class _Files:
     """Reads one sequence with all that it includes; a thing of one use."""
 
-    def __init__(self, path: str | Path, settings: Mapping[str, str]) -> None:
+    def __init__(
+        self, path: str | Path, settings: Mapping[str, str], copies: Mapping[str, Path] | None = None
+    ) -> None:
         self.path = path
+        self.copies = copies
         self.settings = settings
         self.sources: dict[Path, Source] = {}
         self.inclusions = 0
+
+    def read_whole(self) -> Sequence:
+        return self.whole(self._load(Path(self.path)))
+
+    def _load(self, path: Path, *, named_at: Mark | None = None) -> Node:
+        if self.copies is None:
+            return load(path, named_at=named_at)
+        resolved = path.resolve()
+        same = (name for name in self.copies if Path(name).resolve() == resolved)
+        name = str(path) if str(path) in self.copies else next(same, None)
+        if name is None:
+            found = f"there is no copy of '{shorten(str(path))}'"
+            raise FileError(found) if named_at is None else named_at.error(found)
+        return load_copy(self.copies[name], file=name)
 
     def whole(self, node: Node) -> Sequence:
         self.sources[Path(self.path).resolve()] = node.mark.source
@@ -169,7 +191,7 @@ class _Files:
         if len(chain) > INCLUDES_DEEP or self.inclusions > INCLUDES_MAX:
             wanted = f"at most {INCLUDES_DEEP} deep and {INCLUDES_MAX} in all"
             raise file.fail("too many files include one another", wanted)
-        node = load(path, named_at=file.mark)
+        node = self._load(path, named_at=file.mark)
         self.sources.setdefault(resolved, node.mark.source)
         found = _keys(Reader(node))
         own = VALUES.shape.read(found["values"]) if "values" in found else {}

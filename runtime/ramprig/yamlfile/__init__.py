@@ -6,7 +6,7 @@ declaration reads a file and gives its JSON Schema.
 
 from __future__ import annotations
 
-from .compose import DEPTH_MAX, NODES_MAX, compose, load, load_text, shorten
+from .compose import DEPTH_MAX, NODES_MAX, compose, load, load_copy, load_text, shorten
 from .reader import Names, Reader, suggestion
 from .shapes import (
     BandShape,
@@ -62,6 +62,7 @@ __all__ = [
     "WordShape",
     "compose",
     "load",
+    "load_copy",
     "load_text",
     "read_source",
     "shorten",

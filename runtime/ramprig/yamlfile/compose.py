@@ -37,6 +37,11 @@ def load(path: str | Path, *, named_at: Mark | None = None) -> Node:
     return compose(read_source(path, named_at=named_at))
 
 
+def load_copy(copy: str | Path, *, file: str) -> Node:
+    """As `load`, from a copy of a file that messages go on calling `file`. Raises `FileError`."""
+    return compose(source_of(read_source(copy).data, file))
+
+
 def load_text(text: str, file: str) -> Node:
     """The tree of a text; `file` is the name that messages give."""
     return compose(source_of(text.encode("utf-8", "surrogatepass"), file))
