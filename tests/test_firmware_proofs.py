@@ -80,6 +80,8 @@ EXCHANGED = {
     "CLEAR_DESPITE_CAUSE": "overcurrent: trip_ticks in a row, off in the same tick, no clear while it persists",
     "LOOSER_WHILE_ARMED": "a ceiling tightened while armed cuts the bridge in the next tick",
     "ARM_ON_ANY_DIGEST": "arm asks for the state off, a lease within its limits, and the right digest",
+    "SERVO_PAST_ITS_END": "a servo's limits tightened during its swing hold it, either way, "
+    "and are not loosened while armed",
     "OVERCURRENT_LATE": "overcurrent: trip_ticks in a row, off in the same tick, no clear while it persists",
     "LATE_ORDER_CARRIED_OUT": "the horizon",
     "MEMORY_FORGETS": "the same tag and body is answered letter for letter, not carried out again",
