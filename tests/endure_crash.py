@@ -136,7 +136,9 @@ class Process:
         handle = os.open(path, flags, mode)
         if flags & os.O_APPEND:
             self.paths[handle] = Path(path)
-            self.synced.setdefault(Path(path), os.fstat(handle).st_size if not flags & os.O_CREAT else 0)
+            if flags & os.O_CREAT:
+                self.synced[Path(path)] = 0
+            self.synced.setdefault(Path(path), os.fstat(handle).st_size)
         return handle
 
     def _close(self, handle: int) -> None:
@@ -169,6 +171,7 @@ class Process:
 
     def cut_power(self, chance: random.Random) -> dict[Path, int]:
         """Lose what was not synced, or any part of it; returns what was synced of each file, in bytes."""
+        self.synced = {path: size for path, size in self.synced.items() if path.exists()}
         for path, size in self.synced.items():
             left = chance.randint(size, path.stat().st_size)
             os.truncate(path, left)

@@ -8,6 +8,7 @@
         cycles.jsonl    the count of cycles, where the sequence has cycles
         cycle-ranges.csv      least, mean and greatest of each column over each cycle
         interval-ranges.csv   the same over each interval of a thinned log
+        held-1.csv, held-2.csv   while it runs: the last rows of a thinned log, not decided yet
         samples-2.csv   the samples after the first interruption, where the run was gone on with
         notes.jsonl     what people noted by hand, with copies of their photos
         bench.yaml ...  copies of the files the run was made from
@@ -34,7 +35,8 @@ from .. import __version__
 from ..errors import RecordError
 from .appendfile import AppendFile, Reserve, replace_file, sync_folder, write_new
 from .events import Json, from_rfc3339, jsonable
-from .parts import Document, Earlier, earlier_of
+from .held import absorb_held
+from .parts import Document, Earlier, earlier_of, parts_of
 from .volumes import OWN_NAME
 
 FORMAT = "ramprig run 1"
@@ -179,6 +181,7 @@ class RunFolder:
                 if (path / name).exists():
                     folder._reopened[name], torn_bytes = AppendFile.reopen(path / name)
                     folder.torn_bytes += torn_bytes
+            absorb_held(path, parts_of(manifest)[-1])
             folder.earlier = earlier_of(manifest, path, interruption, GOING_ON)
             (path / RESERVE_FILE).unlink(missing_ok=True)
             folder.reserve.take()

@@ -135,7 +135,8 @@ class Recorder:
         self._cycles_given = self._cycles_kept = 0
         self._samples_names: list[str] = []
         self._keeping = keeping or Keeping()
-        self._events, self._samples = self._begin_files()
+        durable = threaded if durable is None else durable
+        self._events, self._samples = self._begin_files(durable=durable)
         cycles = [] if self._cycles is None else [self._cycles]
         self._writer = DiskWriter(
             [self._samples, self._events, *cycles],
@@ -156,7 +157,7 @@ class Recorder:
     def _new_printer(self, columns: Columns) -> RowPrinter:
         return RowPrinter(columns, tick_us=self._when.tick_us, tick_zero=self._when.tick_zero, method=self._method)
 
-    def _begin_files(self) -> tuple[AppendFile, SampleLog]:
+    def _begin_files(self, *, durable: bool) -> tuple[AppendFile, SampleLog]:
         try:
             events = self.folder.go_on(EVENTS_FILE) or self.folder.new_file(EVENTS_FILE)
             events.hold_alone()
@@ -170,6 +171,7 @@ class Recorder:
                 self._keeping,
                 spans=SpanPrinter(self.columns, part=part, tick_us=when.tick_us, tick_zero=when.tick_zero),
                 tick_us=when.tick_us,
+                durable=durable,
                 tell=self._tell_at_once,
                 on_volume=self._on_volume,
             )

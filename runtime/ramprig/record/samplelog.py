@@ -1,7 +1,7 @@
 """What becomes of the samples of one part of a run on the disk: rows in volumes, all or some, and ranges beside them.
 
     blocks -> rows (printed) -> ranges of cycles and intervals        (every sample)
-                             -> thinner, where it is wanted -> volumes (what is kept)
+                             -> held rows, then the thinner, where it is wanted -> volumes (what is kept)
 
 All of it runs where the disk is written, in the order in which blocks and events were handed over.
 """
@@ -15,6 +15,7 @@ from ..session.blocks import Block
 from .appendfile import AppendFile, sync_folder
 from .events import Json
 from .folder import CYCLE_RANGES_FILE, INTERVAL_RANGES_FILE, RunFolder
+from .held import HeldRows
 from .keeping import Keeping
 from .ranges import CycleRanges, IntervalRanges, SpanPrinter, edges_of
 from .rows import RowPrinter, Rows
@@ -52,6 +53,7 @@ class RangesFile:
 class SampleLog:
     """Writes the samples of one part. Not for use by two threads at once.
 
+    `durable` has the rows that a thinned log has not decided yet on the disk too.
     `tell` takes events that come of it (full rate begun and ended), `on_volume` is that of VolumeWriter; both write to
     the disk at once and may raise OSError. Raises OSError.
     """
@@ -64,6 +66,7 @@ class SampleLog:
         *,
         spans: SpanPrinter,
         tick_us: int,
+        durable: bool,
         tell: Callable[[object], None],
         on_volume: Callable[[int, int], None],
     ) -> None:
@@ -76,6 +79,7 @@ class SampleLog:
         self._cycles: CycleRanges | None = None
         self._intervals: IntervalRanges | None = None
         self._thinner: Thinner | None = None
+        self._held: HeldRows | None = None
         thinning = keeping.thinning
         if keeping.cycle_ranges:
             file = RangesFile(folder, CYCLE_RANGES_FILE, spans.header())
@@ -83,6 +87,10 @@ class SampleLog:
             self._files.append(file)
         if thinning is not None:
             self._thinner = Thinner(thinning, tick_us=tick_us, write=self._volumes.append, tell=tell)
+            if durable:
+                self._held = HeldRows(
+                    folder.path, printer.header(), wait_s=thinning.before_s, tick_us=tick_us, settle=self._volumes.sync
+                )
             if thinning.ranges_s is not None:
                 file = RangesFile(folder, INTERVAL_RANGES_FILE, spans.header())
                 self._intervals = IntervalRanges(spans, length_s=thinning.ranges_s, tick_us=tick_us, write=file.append)
@@ -111,6 +119,8 @@ class SampleLog:
     def write(self, blocks: Sequence[Block]) -> None:
         """Blocks that follow those before."""
         for rows in self._printer.tables(blocks):
+            if self._held is not None:
+                self._held.append(rows)
             if self._thinner is None:
                 self._volumes.append(rows)
             else:
@@ -144,6 +154,8 @@ class SampleLog:
         """No more rows will come: write what is waiting."""
         if self._thinner is not None:
             self._thinner.flush()
+        if self._held is not None:
+            self._held.remove()
         for ranges in (self._cycles, self._intervals):
             if ranges is not None:
                 ranges.close()
@@ -151,6 +163,8 @@ class SampleLog:
     def sync(self) -> None:
         """Have the disk hold all that was written."""
         self._volumes.sync()
+        if self._held is not None:
+            self._held.sync()
         for file in self._files:
             file.sync()
 
@@ -158,6 +172,9 @@ class SampleLog:
         """Close all files without syncing; never raises."""
         with contextlib.suppress(OSError):
             self._volumes.close()
+        if self._held is not None:
+            with contextlib.suppress(OSError):
+                self._held.close()
         for file in self._files:
             with contextlib.suppress(OSError):
                 file.close()

@@ -29,7 +29,9 @@ VOLUMES_MAX = 9999
 ROWS_DEFAULT = 1_000_000
 """Rows of a volume: with its header it stays within the 1,048,576 rows of a sheet in Microsoft Excel."""
 HEADER_MAX_BYTES = 1024 * 1024
-OWN_NAME = re.compile(r"samples(-[0-9]+)?(\.[0-9]{4})?\.csv", re.IGNORECASE)
+HELD_NAMES = ("held-1.csv", "held-2.csv")
+"""Files of a thinned log with the rows that are not decided yet; see `held.py`."""
+OWN_NAME = re.compile(r"(samples(-[0-9]+)?(\.[0-9]{4})?|held-[12])\.csv", re.IGNORECASE)
 """Names that volumes have; nothing else in a run folder may be called so."""
 
 
@@ -60,9 +62,26 @@ def volume_names(folder: Path, part: Mapping[str, Any]) -> list[str]:  # Any: JS
 
 
 def volume_files(folder: Path, part: Mapping[str, Any]) -> list[Path]:  # Any: JSON as it comes
-    """The volumes that were begun, in order; a part that broke off at once may have none."""
+    """The volumes that were begun, in order, then those of held rows where the part is not over.
+
+    A part that broke off at once may have none.
+    """
     paths = [folder / name for name in volume_names(folder, part)]
-    return [path for path in paths if has_header(path)]
+    held = [] if part.get("status") == "finished" else held_files(folder)
+    return [path for path in paths if has_header(path)] + held
+
+
+def held_files(folder: Path) -> list[Path]:
+    """The files of held rows that have any, the older first."""
+    found = []
+    for path in (folder / name for name in HELD_NAMES):
+        if has_header(path):
+            with open(path, "rb") as file:
+                file.readline()
+                tick, comma, _ = file.readline(HEADER_MAX_BYTES).partition(b",")
+            if comma:
+                found.append((int(tick), path))
+    return [path for _, path in sorted(found)]
 
 
 def has_header(path: Path) -> bool:
@@ -77,6 +96,7 @@ def has_header(path: Path) -> bool:
 class Stream:
     """Iterates over the pieces of all volumes of a part as if they were one file; see `Scan`.
 
+    Of files of held rows those are taken that come after the ones before.
     Raises RecordError where one is no samples file, or has not the columns of the first.
     """
 
@@ -95,19 +115,42 @@ class Stream:
         return sum(scan.torn_bytes for scan in self._scans)
 
     def __iter__(self) -> Iterator[Piece]:
+        last: int | None = None
         for scan in self._scans:
-            yield from scan
+            for piece in scan:
+                later = _after(piece, last) if scan.path.name in HELD_NAMES else piece
+                if len(later):
+                    last = int(later.ticks[-1])
+                    yield later
 
     def tail(self, size_bytes: int = TAIL_BYTES) -> Piece:
         """The last rows, as many as about `size_bytes` hold, from more than one volume where the last one is short."""
-        pieces: list[Piece] = []
+        tails: list[tuple[Scan, Piece]] = []
         left = size_bytes
         for scan in reversed(self._scans):
-            pieces.insert(0, scan.tail(left))
+            tails.insert(0, (scan, scan.tail(left)))
             left -= scan.path.stat().st_size
             if left <= 0:
                 break
+        pieces: list[Piece] = []
+        last: int | None = None
+        for scan, piece in tails:
+            later = _after(piece, last) if scan.path.name in HELD_NAMES else piece
+            pieces.append(later)
+            last = int(later.ticks[-1]) if len(later) else last
         return joined(pieces)
+
+
+def _after(piece: Piece, tick: int | None) -> Piece:
+    """The rows of a piece that come after this tick."""
+    if tick is None or not len(piece) or piece.ticks[0] > tick:
+        return piece
+    begin = int(np.searchsorted(piece.ticks, tick, side="right"))
+    return Piece(
+        piece.ticks[begin:],
+        {name: numbers[begin:] for name, numbers in piece.numbers.items()},
+        {name: words[begin:] for name, words in piece.words.items()},
+    )
 
 
 def joined(pieces: Sequence[Piece]) -> Piece:

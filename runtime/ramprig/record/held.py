@@ -1,0 +1,116 @@
+"""Keeps on the disk what a thinned log has not decided yet, so that a killed run has its last rows at full rate.
+
+Two files take turns, each with the header and all rows of some seconds:
+
+    held-1.csv   rows of the present turn          a turn ends after the time that rows wait to be decided;
+    held-2.csv   rows of the turn before           then the older file is begun anew
+
+What the older file holds by then has been decided and, before it goes, synced in its volume. A run that ends in order
+writes its undecided rows to the volume and removes both; whoever reads one that did not takes from them the rows after
+the last one of its volumes, and resuming moves those there.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Mapping
+from pathlib import Path
+from typing import Any
+
+from .appendfile import AppendFile, sync_folder
+from .rows import Rows
+from .volumes import HELD_NAMES, Stream, held_files, volume_files
+
+TURN_LEAST_S = 5.0
+"""A turn is no shorter than this, however soon rows are decided."""
+
+
+class HeldRows:
+    """Writes the files; `settle` is called before an older one goes, and has the disk hold what was decided.
+
+    Raises OSError.
+    """
+
+    def __init__(self, folder: Path, header: bytes, *, wait_s: float, tick_us: int, settle: Callable[[], None]) -> None:
+        self._folder = folder
+        self._header = header
+        self._turn_ticks = round(max(wait_s, TURN_LEAST_S) * 1e6 / tick_us)
+        self._settle = settle
+        self._turn = 0
+        self._begin_tick: int | None = None
+        self._file: AppendFile | None = None
+
+    def append(self, rows: Rows) -> None:
+        """Rows that follow those before."""
+        first, begin = int(rows.ticks[0]), self._begin_tick
+        if self._file is None or begin is None or not begin <= first < begin + self._turn_ticks:
+            self._next_turn(first)
+        assert self._file is not None  # a turn has just begun
+        self._file.append(rows.data)
+
+    def _next_turn(self, tick: int) -> None:
+        if self._file is not None:
+            self._settle()
+            self._file.sync()
+            self.close()
+        path = self._folder / HELD_NAMES[self._turn % len(HELD_NAMES)]
+        path.unlink(missing_ok=True)
+        self._file = AppendFile(path)
+        self._file.append(self._header)
+        self._turn += 1
+        self._begin_tick = tick
+        sync_folder(self._folder)
+
+    def sync(self) -> None:
+        """Have the disk hold all that was written. Raises OSError."""
+        if self._file is not None:
+            self._file.sync()
+
+    def close(self) -> None:
+        """Close the file; what it holds stays."""
+        file, self._file = self._file, None
+        if file is not None:
+            file.close()
+
+    def remove(self) -> None:
+        """The volumes hold all rows that they are to hold. Raises OSError."""
+        self._settle()
+        self.close()
+        _remove(self._folder)
+
+
+def _remove(folder: Path) -> None:
+    for name in HELD_NAMES:
+        (folder / name).unlink(missing_ok=True)
+    sync_folder(folder)
+
+
+def absorb_held(folder: Path, part: Mapping[str, Any]) -> None:  # Any: JSON as it comes
+    """Move the held rows of a part that broke off to the end of its last volume. Raises OSError, RecordError.
+
+    Where that is broken off too, doing it again comes to the same.
+    """
+    held = held_files(folder)
+    if not held:
+        return
+    volumes = [path for path in volume_files(folder, part) if path not in held]
+    if volumes and part.get("status") != "finished":
+        file, _ = AppendFile.reopen(volumes[-1])
+        try:
+            last = _last_tick(volumes)
+            for path in held:
+                with open(path, "rb") as source:
+                    source.readline()
+                    lines = [line for line in source if line.endswith(b"\n") and int(line.split(b",")[0]) > last]
+                file.append(b"".join(lines))
+                last = max([last, *(int(line.split(b",")[0]) for line in lines[-1:])])
+            file.sync()
+        finally:
+            file.close()
+    _remove(folder)
+
+
+def _last_tick(volumes: list[Path]) -> float:
+    """The tick of the last row; before all of them where there is none."""
+    ticks = Stream(volumes, columns=()).tail().ticks
+    return float(ticks[-1]) if len(ticks) else -math.inf

@@ -1,0 +1,160 @@
+"""A thinned run that is killed has its last rows at full rate, and keeps them when it goes on."""
+
+from __future__ import annotations
+
+import random
+from pathlib import Path
+
+import pytest
+
+from endure_crash import Killed, Process
+from ramprig.record.folder import RunFolder
+from ramprig.record.keeping import Around, Keeping, Thinning
+from ramprig.record.reading import audit, read_events, read_manifest, sample_files
+from ramprig.record.recorder import Recorder
+from ramprig.record.volumes import HELD_NAMES, Stream, VolumeLimits, held_files, volume_files
+from ramprig.sequence.happened import Marked
+from record_long import FIRST_TICK, PERIOD, begin, finish
+from record_samples import blocks_of, start_anchor
+
+RULE = Thinning(every=50, before_s=0.4, after_s=0.2, around=frozenset({Around.MARK}))
+KEEPING = Keeping(volumes=VolumeLimits(rows=60), thinning=RULE)
+SAMPLES = 1500  # 3 s
+MARKED = 700
+BLOCK = 25
+
+
+@pytest.fixture(autouse=True)
+def short_turns(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr("ramprig.record.held.TURN_LEAST_S", 0.1)
+
+
+def live(recorder: Recorder, handed: list[int]) -> None:
+    """The run, synced after each block; `handed` has the tick up to which the disk holds everything."""
+    for block in blocks_of(SAMPLES, size=BLOCK):
+        recorder.on_block(block)
+        if block.ticks[-1] == FIRST_TICK + PERIOD * (MARKED - 1):
+            recorder.on_event(Marked(tick=int(block.ticks[-1]), name="here"))
+        recorder._writer.sync_files()
+        handed.append(int(block.ticks[-1]))
+
+
+def whole_run(root: Path, handed: list[int]) -> None:
+    recorder = begin(root, KEEPING, durable=True)
+    live(recorder, handed)
+    finish(recorder, SAMPLES)
+
+
+def kept_up_to(last: int, *, more: int = 0) -> set[int]:
+    """By definition, for a run whose last row is of this tick, or up to `more` ticks later."""
+    at = FIRST_TICK + PERIOD * (MARKED - 1)
+    return {
+        tick
+        for tick in range(FIRST_TICK, last + 1, PERIOD)
+        if tick // PERIOD % 50 == 0
+        or tick <= start_anchor().tick + 200
+        or (at <= last and at - 400 <= tick <= at + 200)
+        or tick >= last - 400 + more
+    }
+
+
+def ticks_in(folder: Path) -> list[int]:
+    part = {"samples_file": "samples.csv", **read_manifest(folder)}
+    return [tick for piece in Stream(volume_files(folder, part)) for tick in piece.ticks.tolist()]
+
+
+def killed(root: Path, die_at: int, chance: random.Random) -> tuple[Path, int] | None:
+    """A run that dies at this operation and loses its power; its folder, and the tick up to which it was synced."""
+    process = Process(die_at=die_at)
+    handed: list[int] = []
+    with process.alive(), pytest.raises(Killed):
+        whole_run(root, handed)
+    process.cut_power(chance)
+    if not handed:
+        return None
+    (folder,) = root.iterdir()
+    return folder, handed[-1]
+
+
+def operations(root: Path) -> int:
+    process = Process()
+    with process.alive():
+        whole_run(root, [])
+    return process.operations
+
+
+def check_killed(root: Path, die_at: int, chance: random.Random) -> None:
+    found = killed(root, die_at, chance)
+    if found is None:
+        return
+    folder, synced = found
+    ticks = ticks_in(folder)
+    assert ticks == sorted(set(ticks))
+    assert kept_up_to(synced, more=BLOCK * PERIOD) <= set(ticks)
+    manifest = read_manifest(folder)
+    audited = audit(folder)
+    if manifest["status"] == "finished":
+        return
+    assert (audited.missing, audited.unexpected) == (0, 0)
+    assert [text for text in audited.statements if "rows are missing" in text] == []
+    tail = Stream(sample_files(folder)).tail(2000)
+    assert tail.ticks.tolist() == ticks[-len(tail) :]
+    goes_on(folder, ticks)
+
+
+def goes_on(folder: Path, ticks: list[int]) -> None:
+    """Going on moves the held rows to the volume for good; a second try changes nothing."""
+    manifest = read_manifest(folder)
+    reopened = RunFolder.reopen(folder, manifest, {"text": "a break"}, port="", identity={})
+    reopened.close()
+    reopened.reserve.free()
+    assert not [name for name in HELD_NAMES if (folder / name).exists()]
+    assert ticks_in(folder) == ticks
+    assert reopened.earlier is not None
+    assert reopened.earlier.parts[-1]["status"] == "broken off"  # type: ignore[index,call-overload]  # JSON as it comes
+
+
+@pytest.mark.parametrize("step", range(3))
+def test_a_thinned_run_that_dies_has_its_last_rows_at_full_rate(tmp_path: Path, step: int) -> None:
+    chance = random.Random(step)
+    count = operations(tmp_path / "whole")
+    for number, die_at in enumerate(range(20 + 20 * step, count, 61)):
+        check_killed(tmp_path / f"at{number}", die_at, chance)
+
+
+@pytest.mark.soak
+@pytest.mark.parametrize("seed", range(10))
+def test_the_same_at_every_operation(tmp_path: Path, seed: int) -> None:
+    chance = random.Random(f"held {seed}")
+    for die_at in range(seed, operations(tmp_path / "whole"), 10):
+        check_killed(tmp_path / f"at{die_at}", die_at, chance)
+
+
+def test_a_run_that_ends_in_order_leaves_no_held_rows(tmp_path: Path) -> None:
+    recorder = begin(tmp_path, KEEPING, durable=True)
+    live(recorder, [])
+    assert len(held_files(recorder.folder.path)) == 2
+    folder = finish(recorder, SAMPLES)
+    assert held_files(folder) == []
+    assert set(ticks_in(folder)) == kept_up_to(FIRST_TICK + PERIOD * (SAMPLES - 1))
+    assert audit(folder).statements == ()
+    assert "full_rate_begun" in [event["kind"] for event in read_events(folder / "events.jsonl")[0]]
+
+
+def test_held_rows_are_few_however_long_the_run(tmp_path: Path) -> None:
+    recorder = begin(tmp_path, KEEPING, durable=True)
+    most = 0
+    for block in blocks_of(SAMPLES, size=BLOCK):
+        recorder.on_block(block)
+        sizes = [path.read_bytes().count(b"\n") - 1 for path in held_files(recorder.folder.path)]
+        most = max([most, sum(sizes)])
+    assert most <= 2 * (400 // PERIOD + BLOCK)
+    finish(recorder, SAMPLES)
+
+
+def test_in_virtual_time_nothing_is_held_on_the_disk(tmp_path: Path) -> None:
+    recorder = begin(tmp_path, KEEPING)
+    for block in blocks_of(SAMPLES, size=BLOCK):
+        recorder.on_block(block)
+    assert held_files(recorder.folder.path) == []
+    finish(recorder, SAMPLES)
