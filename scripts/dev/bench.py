@@ -15,7 +15,16 @@ from pathlib import Path
 
 sys.path.insert(0, str(Path(__file__).resolve().parent.parent))
 
-from dev import bench_codec, bench_csv, bench_forecast, bench_rehearsal, bench_report, bench_roundtrip, bench_start
+from dev import (
+    bench_codec,
+    bench_csv,
+    bench_emulated,
+    bench_forecast,
+    bench_rehearsal,
+    bench_report,
+    bench_roundtrip,
+    bench_start,
+)
 
 CSV_AIM = 2.0
 
@@ -37,6 +46,7 @@ PARTS: tuple[Callable[[], list[str]], ...] = (
     bench_forecast.lines,
     csv_lines,
     bench_report.lines,
+    bench_emulated.lines,
     bench_start.lines,
 )
 
