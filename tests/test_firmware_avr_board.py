@@ -96,6 +96,27 @@ def test_overcurrent_switches_the_bridge_off_within_a_tick_of_its_last_reading()
         assert [line for line in notices(made) if line.startswith("trip overcurrent")]
 
 
+def test_the_bridge_is_off_within_the_tick_that_reads_an_overcurrent() -> None:
+    """The reading is written between two ticks; the tick's work is done within its budget of 400 us."""
+    with EmulatedBoard(emulator(), program(scripted=True)) as made:
+        made.run_us(150_000)
+        for name, value in (("sense", 0), ("stall_duty", 0), ("trip_ticks", 1)):
+            made.set_limit(name, value)
+        assert made.ask("log 1 7 packed")[0] == "ok"
+        made.arm()
+        made.ask(f"ramp 0 2000 0 {made.tick() + 40}")
+        made.run_us(250_000)
+        tick_us = made.probe()["tick_cycle"] // 16
+        made.run_us((tick_us + 900 - made.now_us) % 1000)
+        made.command("set scripted_current_ma 2 5000")
+        assert made.probe()["enabled"] == 1
+        ticks = made.probe()["ticks"]
+        made.run_us(500)  # the next tick, up to its 400th us
+        found = made.probe()
+        assert found["ticks"] == ticks + 1
+        assert (found["enabled"], found["duty"]) == (0, 0)
+
+
 def test_a_break_stops_below_the_parser() -> None:
     with driving() as made:
         made.lines.clear()
