@@ -255,6 +255,15 @@ def test_a_feature_that_hardly_varies_is_not_called_changed_for_a_trifle() -> No
     assert first_cycle(values) == {}
 
 
+def test_without_detectors_the_present_value_is_the_last_one() -> None:
+    settings = TrendSettings(run_in=0, baseline=10, detectors=False)
+    trend = FeatureTrend("x", settings)
+    for cycle in range(10):
+        trend.add(cycle, 2.0)
+    trend.add(10, 3.0)
+    assert trend.mean_now == 3.0
+
+
 def test_values_that_are_missing_are_counted_and_do_no_harm() -> None:
     trend = FeatureTrend("energy")
     for cycle, value in enumerate(ageing(2, per_1000=0.0, cycles=600)):

@@ -25,7 +25,11 @@ from ramprig.sequence.schema import sequence_schema
 
 SCRIPTS = Path(__file__).resolve().parent.parent / "scripts"
 SEQUENCES = sorted(path for path in SCRIPTS.glob("*.yaml") if "\nsteps:" in path.read_text(encoding="utf-8"))
-SETTINGS = {"overnight_sweep.yaml": {"night": "30 s"}, "vent_night.yaml": {"cycles": "2"}}
+SETTINGS = {
+    "overnight_sweep.yaml": {"night": "30 s"},
+    "vent_night.yaml": {"cycles": "2"},
+    "vent_wear.yaml": {"cycles": "4"},  # of its 100, most of which it is not to come to
+}
 """What makes a long one short."""
 ENDURANCE = SCRIPTS / "vent_endurance.yaml"
 JAMMED = SCRIPTS / "jammed_vent.yaml"

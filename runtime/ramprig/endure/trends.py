@@ -168,6 +168,7 @@ class FeatureTrend:
     _ewma: Ewma = field(init=False)
     _blocks: Blocks = field(default_factory=Blocks)
     _slope: float | None = None
+    _last: float = 0.0
 
     def __post_init__(self) -> None:
         settings = self.settings
@@ -186,7 +187,10 @@ class FeatureTrend:
 
     @property
     def mean_now(self) -> float:
-        """The weighted mean of the last cycles; the baseline's mean before it is complete."""
+        """The weighted mean of the last cycles, the last value where no detectors look on; the baseline's mean before it
+        is complete."""
+        if self.established and not self._detects:
+            return self._last
         return self.baseline.mean + self._ewma.value * self._sd
 
     def limit_values(self) -> list[tuple[Level, float]]:
@@ -205,6 +209,7 @@ class FeatureTrend:
         self._seen += 1
         if self._seen <= self.settings.run_in:
             return []
+        self._last = value
         finished = self._blocks.add(cycle, value)
         if not self.established:
             self.baseline.add(value)
