@@ -187,8 +187,8 @@ class FeatureTrend:
 
     @property
     def mean_now(self) -> float:
-        """The weighted mean of the last cycles, the last value where no detectors look on; the baseline's mean before it
-        is complete."""
+        """The weighted mean of the last cycles, or the last value where no detectors look on; before it is complete the
+        baseline's mean."""
         if self.established and not self._detects:
             return self._last
         return self.baseline.mean + self._ewma.value * self._sd
