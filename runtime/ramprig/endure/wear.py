@@ -146,12 +146,12 @@ class WearJudge:
                 yield cycle, self.take(cycle)
 
     def to_watch(self) -> list[str]:
-        """The features beyond a limit to watch, or that a detector has found, with their change."""
+        """The features beyond a limit to watch, or that a detector has found, with their change; without any that fail."""
         return [
             f"{name} {_change(trend)}"
             for block in self.blocks.values()
             for name, trend in block.features.items()
-            if trend.level is not Level.OK
+            if trend.level is Level.WATCH
         ]
 
 
