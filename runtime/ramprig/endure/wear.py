@@ -146,7 +146,7 @@ class WearJudge:
                 yield cycle, self.take(cycle)
 
     def to_watch(self) -> list[str]:
-        """The features beyond a limit to watch, or that a detector has found, with their change; without any that fail."""
+        """The features beyond a limit to watch, or that a detector has found, with their change; none that fail."""
         return [
             f"{name} {_change(trend)}"
             for block in self.blocks.values()
