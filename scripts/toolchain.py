@@ -49,7 +49,8 @@ FUZZING = Part(
     ("/usr/lib/llvm-*/lib/clang/*/lib/linux/libclang_rt.fuzzer*",),
     ("clang", "libclang-rt-dev"),
 )
-PARTS = (CORE, BOARD, EMULATOR, PROOFS, FUZZING)
+GATES = Part("the FPGA blocks", ("iverilog", "vvp", "yosys"), (), ("iverilog", "yosys"))
+PARTS = (CORE, BOARD, EMULATOR, PROOFS, FUZZING, GATES)
 
 
 def is_there(part: Part) -> bool:

@@ -1,4 +1,4 @@
-"""words.py, words.h and the tables of SPEC.md are what protocol.toml gives."""
+"""words.py, words.h, words.vh and the tables of SPEC.md are what protocol.toml gives."""
 
 from __future__ import annotations
 

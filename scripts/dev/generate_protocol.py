@@ -1,10 +1,10 @@
-"""Make words.py, words.h and the tables of SPEC.md from protocol/protocol.toml.
+"""Make words.py, words.h, words.vh and the tables of SPEC.md from protocol/protocol.toml.
 
     python scripts/dev/generate_protocol.py            writes what differs and names it
     python scripts/dev/generate_protocol.py --check    writes nothing; exit status 1 where something differs
 
 The form of each output is in a file of its own beside this one: `protocol_python.py`, `protocol_header.py`,
-`protocol_tables.py`.
+`protocol_verilog.py`, `protocol_tables.py`.
 """
 
 from __future__ import annotations
@@ -14,12 +14,13 @@ import tomllib
 from pathlib import Path
 
 sys.path.insert(0, str(Path(__file__).resolve().parents[1]))
-from dev import protocol_header, protocol_python, protocol_tables
+from dev import protocol_header, protocol_python, protocol_tables, protocol_verilog
 
 ROOT = Path(__file__).resolve().parents[2]
 SOURCE = ROOT / "protocol" / "protocol.toml"
 PYTHON = ROOT / "protocol" / "ramprig_link" / "words.py"
 HEADER = ROOT / "firmware_ref" / "core" / "words.h"
+VERILOG = ROOT / "firmware_ref" / "fpga" / "words.vh"
 SPEC = ROOT / "protocol" / "SPEC.md"
 
 
@@ -29,6 +30,7 @@ def outputs() -> dict[Path, str]:
     return {
         PYTHON: protocol_python.module(protocol),
         HEADER: protocol_header.header(protocol),
+        VERILOG: protocol_verilog.header(protocol),
         SPEC: protocol_tables.with_tables(SPEC.read_text("utf-8"), protocol),
     }
 
