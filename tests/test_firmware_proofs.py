@@ -62,7 +62,7 @@ PROVED = {
     "TRIP_CLEARS_ITSELF": ("latch", "rr_latch_off"),
     "SERVO_PAST_ITS_END": ("servo", "rr_servo_step_ns"),
     "OVERCURRENT_LATE": ("guard", "judge_current"),
-    "SQUARE_IN_INT": ("guard", "judge_heat"),
+    "SQUARE_IN_INT": ("heat", "rr_heat_take"),
 }
 
 # A vector of protocol/vectors/exchanges.json that the core with the bug answers otherwise.

@@ -5,44 +5,23 @@
 
 #define WORD_OK RR_REASON_COUNT
 
-static uint8_t index_refusal(uint8_t word, const struct rr_arguments *given)
-{
-    switch (word) {
-    case RR_WORD_RAMP:
-    case RR_WORD_REST:
-    case RR_WORD_TRAIL:
-        return given->value[0] >= RR_AXES ? RR_REASON_INDEX : WORD_OK;
-    case RR_WORD_SWING:
-        return rr_limits_place(RR_LIMIT_PULSE_MIN_US, given->value[0]) == RR_LIMITS ? RR_REASON_INDEX : WORD_OK;
-    case RR_WORD_LIMIT:
-        return rr_limits_place((uint8_t)given->value[0], given->value[1]) == RR_LIMITS ? RR_REASON_INDEX : WORD_OK;
-    default:
-        return WORD_OK;
-    }
-}
-
 static bool ramp_is_out(const struct rr_device *device, const struct rr_arguments *given)
 {
     int32_t duty = (int32_t)given->value[1];
-    int32_t ceiling = rr_limits_get(&device->limits, RR_LIMIT_CEILING_DUTY, (uint8_t)given->value[0]);
+    int32_t ceiling = rr_limits_at(&device->limits, rr_limits_axis_place(RR_LIMIT_CEILING_DUTY, (uint8_t)given->value[0]));
     return duty > ceiling || duty < -ceiling || given->value[2] > RR_HORIZON_TICKS;
 }
 
 static bool swing_is_out(const struct rr_device *device, const struct rr_arguments *given)
 {
-#if RR_SERVOS > 0
     uint8_t servo = (uint8_t)given->value[0];
-    if (given->value[1] == 0) {
+    uint32_t pulse_us = given->value[1];
+    if (pulse_us == 0) {
         return given->value[2] != 0;
     }
-    return given->value[1] > (uint32_t)rr_limits_get(&device->limits, RR_LIMIT_PULSE_MAX_US, servo) ||
-           given->value[1] < (uint32_t)rr_limits_get(&device->limits, RR_LIMIT_PULSE_MIN_US, servo) ||
+    return pulse_us > (uint32_t)rr_limits_at(&device->limits, rr_limits_servo_place(RR_LIMIT_PULSE_MAX_US, servo)) ||
+           pulse_us < (uint32_t)rr_limits_at(&device->limits, rr_limits_servo_place(RR_LIMIT_PULSE_MIN_US, servo)) ||
            given->value[2] > RR_HORIZON_TICKS;
-#else
-    (void)device;
-    (void)given;
-    return true;
-#endif
 }
 
 static bool log_is_out(const struct rr_arguments *given)
@@ -53,34 +32,54 @@ static bool log_is_out(const struct rr_arguments *given)
     return given->value[0] > UINT16_MAX || given->value[1] == 0 || !rr_sampling_mask_fits(given->value[1]);
 }
 
-static uint8_t range_refusal(const struct rr_device *device, uint8_t word, const struct rr_arguments *given)
+static bool arm_is_out(const struct rr_device *device, const struct rr_arguments *given)
 {
+    return given->value[0] < 50 ||
+           given->value[0] > (uint32_t)rr_limits_at(&device->limits, rr_limits_row(RR_LIMIT_LEASE_MS));
+}
+
+/* The index of an axis, servo or limit first, then the range of what else is given. */
+static uint8_t refusal(const struct rr_device *device, struct rr_request *request)
+{
+    const struct rr_arguments *given = &request->given;
+    uint32_t index = given->count == 0 ? 0 : given->value[0];
+    bool missing = false;
     bool out = false;
-    switch (word) {
+    switch (request->word) {
     case RR_WORD_ARM:
-        out = given->value[0] < 50 || given->value[0] > (uint32_t)rr_limits_get(&device->limits, RR_LIMIT_LEASE_MS, 0);
+        out = arm_is_out(device, given);
         break;
     case RR_WORD_RAMP:
-        out = ramp_is_out(device, given);
+        missing = index >= RR_AXES;
+        out = !missing && ramp_is_out(device, given);
+        break;
+    case RR_WORD_REST:
+    case RR_WORD_TRAIL:
+        missing = index >= RR_AXES;
         break;
     case RR_WORD_SWING:
-        out = swing_is_out(device, given);
+        missing = rr_limits_place(RR_LIMIT_PULSE_MIN_US, index) == RR_LIMITS;
+        out = !missing && swing_is_out(device, given);
         break;
     case RR_WORD_STOP:
-        out = given->value[0] > 1;
+        out = index > 1;
         break;
     case RR_WORD_LOG:
         out = log_is_out(given);
         break;
     case RR_WORD_AGAIN:
-        out = given->value[0] > 255;
+        out = index > 255;
         break;
     case RR_WORD_LIMIT:
-        out = given->count == 3 && rr_limits_is_out(&device->limits, (uint8_t)given->value[0], (uint8_t)given->value[1],
-                                                    (int32_t)given->value[2]);
+        request->place = rr_limits_place_in_row((uint8_t)index, given->value[1]);
+        missing = request->place == RR_LIMITS;
+        out = !missing && given->count == 3 && rr_limits_is_out(&device->limits, request->place, (int32_t)given->value[2]);
         break;
     default:
         break;
+    }
+    if (missing) {
+        return RR_REASON_INDEX;
     }
     return out ? RR_REASON_RANGE : WORD_OK;
 }
@@ -132,9 +131,11 @@ static uint8_t do_disarm(struct rr_device *device)
 }
 
 /* ORDER-1, ORDER-2: late before far before full, so that a late order is never hidden. */
-static uint8_t do_order(struct rr_device *device, uint8_t kind, int16_t value, uint32_t ticks, uint32_t start,
-                        uint8_t index)
+static uint8_t do_order(struct rr_device *device, uint8_t kind, const struct rr_arguments *given)
 {
+    const uint32_t *value = given->value;
+    bool is_rest = kind == RR_ORDER_REST;
+    uint32_t start = value[is_rest ? 2 : 3];
     int32_t ahead = (int32_t)(start - device->tick);
     if (RR_SEEDED(LATE_ORDER_CARRIED_OUT, false, ahead <= 0)) {
         if (device->late_by < 0) {
@@ -148,8 +149,13 @@ static uint8_t do_order(struct rr_device *device, uint8_t kind, int16_t value, u
     if (device->u.orders.count == RR_QUEUE) {
         return RR_REASON_FULL;
     }
-    uint32_t carried_out = RR_SEEDED(LATE_ORDER_CARRIED_OUT, ahead < 0 ? device->tick : start, start);
-    struct rr_order order = {carried_out, ticks, value, (uint8_t)(kind << 4 | index), device->line.tag};
+    struct rr_order order = {
+        .start = RR_SEEDED(LATE_ORDER_CARRIED_OUT, ahead < 0 ? device->tick : start, start),
+        .ticks = is_rest ? 0 : value[2],
+        .value = (int16_t)value[1],
+        .kind_index = (uint8_t)(kind << 4 | (uint8_t)value[0]),
+        .tag = device->line.tag,
+    };
     rr_orders_add(&device->u.orders, &order, device->tick);
     return WORD_OK;
 }
@@ -164,13 +170,13 @@ static void do_stop(struct rr_device *device, uint8_t category)
 static uint8_t do_clear(struct rr_device *device)
 {
     uint8_t trip = device->latch.trip;
-    int32_t supply = device->inputs.supply_mv;
+    RR_SUPPLY supply = device->inputs.supply_mv;
     bool persists = trip == RR_TRIP_SELF_TEST ||
                     (trip == RR_TRIP_OVERVOLTAGE && supply > device->limits.board.over_mv) ||
                     (trip == RR_TRIP_UNDERVOLTAGE && supply < device->limits.board.under_mv);
-    const struct rr_axis *axis = &device->axis[device->last_trip.index];
-    persists = persists || rr_guard_persists(&axis->guard, &device->limits.axis[device->last_trip.index].guard, trip,
-                                             device->inputs.current_ma[device->last_trip.index]);
+    uint8_t axis = RR_AXIS(device->last_trip.index);
+    persists = persists || rr_guard_persists(&device->axis[axis].guard, &device->limits.axis[axis].guard, trip,
+                                             device->inputs.current_ma[axis]);
     if (RR_SEEDED(CLEAR_DESPITE_CAUSE, false, persists)) {
         return RR_REASON_CAUSE;
     }
@@ -188,7 +194,7 @@ static uint8_t do_limit(struct rr_device *device, uint8_t place, const struct rr
     if (given->count < 3 || value == now) {
         return WORD_OK;
     }
-    if (live && rr_limits_is_looser(place, now, value)) {
+    if (live && rr_limits_is_looser(&device->limits, place, now, value)) {
         return RR_REASON_ARMED;
     }
     *told = (uint32_t)value;
@@ -210,11 +216,9 @@ static uint8_t carry_out(struct rr_device *device, uint8_t word, const struct rr
     case RR_WORD_DISARM:
         return do_disarm(device);
     case RR_WORD_RAMP:
-        return do_order(device, RR_ORDER_RAMP, (int16_t)value[1], value[2], value[3], (uint8_t)value[0]);
     case RR_WORD_SWING:
-        return do_order(device, RR_ORDER_SWING, (int16_t)value[1], value[2], value[3], (uint8_t)value[0]);
     case RR_WORD_REST:
-        return do_order(device, RR_ORDER_REST, (int16_t)value[1], 0, value[2], (uint8_t)value[0]);
+        return do_order(device, (uint8_t)(word - RR_WORD_RAMP + RR_ORDER_RAMP), given);
     case RR_WORD_STOP:
         do_stop(device, (uint8_t)value[0]);
         return WORD_OK;
@@ -235,19 +239,22 @@ static uint8_t carry_out(struct rr_device *device, uint8_t word, const struct rr
     }
 }
 
-/* The request's word and arguments, or the reason to refuse them, by BAD-5 as far as the state does not matter. */
-static uint8_t understood(const struct rr_device *device, const char *text, uint8_t *word, struct rr_arguments *given)
+_Static_assert(RR_WORD_SWING - RR_WORD_RAMP == RR_ORDER_SWING - RR_ORDER_RAMP &&
+                   RR_WORD_REST - RR_WORD_RAMP == RR_ORDER_REST - RR_ORDER_RAMP,
+               "the orders' words are in the order of their kinds");
+
+/* The request's word and arguments, and the reason to refuse them, by BAD-5 as far as the state does not matter. */
+static uint8_t understood(const struct rr_device *device, const char *text, struct rr_request *request)
 {
     const char *rest;
-    *word = rr_fields_word(text, &rest);
-    if (*word == RR_WORD_COUNT) {
+    request->word = rr_fields_word(text, &rest);
+    if (request->word == RR_WORD_COUNT) {
         return RR_REASON_WORD;
     }
-    if (!rr_fields_arguments(*word, rest, given)) {
+    if (!rr_fields_arguments(request->word, rest, &request->given)) {
         return RR_REASON_ARGS;
     }
-    uint8_t reason = index_refusal(*word, given);
-    return reason == WORD_OK ? range_refusal(device, *word, given) : reason;
+    return refusal(device, request);
 }
 
 void rr_answer_read(struct rr_device *device)
@@ -255,13 +262,9 @@ void rr_answer_read(struct rr_device *device)
     const struct rr_memory *memory = &device->memory;
     const char *text = rr_line_body(&device->line);
     struct rr_request request;
-    request.reason = understood(device, text, &request.word, &request.given);
-    request.place = 0;
-    if (request.reason == WORD_OK && request.word == RR_WORD_LIMIT) {
-        request.place = rr_limits_place((uint8_t)request.given.value[0], request.given.value[1]);
-    }
+    request.reason = understood(device, text, &request);
     rr_body_take(&request.body, text);
-    request.kept_tag = RR_SEEDED(MEMORY_FORGETS, false, memory->full && memory->reply.tag == device->line.tag);
+    request.kept_tag = RR_SEEDED(MEMORY_FORGETS, false, memory->full && memory->reply.verdict.tag == device->line.tag);
     request.repeated = request.kept_tag && rr_body_equals(&memory->body, &request.body);
     device->line.u.request = request;
 }
@@ -279,14 +282,20 @@ static uint8_t carried_out(struct rr_device *device, uint32_t *told)
     return carry_out(device, request->word, &request->given, told);
 }
 
+RR_SHARED static void note_verdict(const struct rr_device *device, struct rr_verdict *verdict, uint8_t reason)
+{
+    verdict->tick = device->tick;
+    verdict->tag = device->line.tag;
+    verdict->reason = reason;
+}
+
 /* An answer outside the exactly-once memory. */
 static void answer_aside(struct rr_device *device, uint8_t reason)
 {
-    device->aside.tick = device->tick;
-    device->aside.tag = device->line.tag;
-    device->aside.reason = reason;
-    device->aside.state = device->latch.state;
-    device->aside.waiting = true;
+    struct rr_aside *aside = &device->aside;
+    note_verdict(device, &aside->verdict, reason);
+    aside->state = device->latch.state;
+    aside->waiting = true;
 }
 
 static void answer(struct rr_device *device)
@@ -295,12 +304,11 @@ static void answer(struct rr_device *device)
     uint32_t told = 0;
     memory->full = true;
     memory->body = device->line.u.request.body;
-    memory->reply.tag = device->line.tag;
     memory->reply.word = device->line.u.request.word;
-    memory->reply.reason = carried_out(device, &told);
-    memory->reply.tick = device->tick;
+    uint8_t reason = carried_out(device, &told);
+    note_verdict(device, &memory->reply.verdict, reason);
     memory->reply.waiting = true;
-    if (memory->reply.reason == WORD_OK) {
+    if (reason == WORD_OK) {
         rr_reply_note(device, memory->reply.word, told);
     }
 }
@@ -310,7 +318,7 @@ bool rr_answer_may(const struct rr_device *device)
 {
     const struct rr_request *request = &device->line.u.request;
     const struct rr_logging *logging = &device->logging;
-    if (!RR_SPREAD && device->port->room(device->self) < RR_DEVICE_LINE_MAX) {
+    if (!RR_SPREAD && RR_PORT(device)->room(RR_SELF(device)) < RR_DEVICE_LINE_MAX) {
         return false;
     }
     if (device->line.tag == RR_TAG_URGENT || (request->kept_tag && !request->repeated)) {
@@ -329,7 +337,7 @@ void rr_answer_request(struct rr_device *device)
     bool repeated = !urgent && request->repeated;
     uint32_t told;
     if (!repeated || RR_SEEDED(REPEAT_RENEWS, true, false)) {
-        device->renewed = device->tick;
+        device->renewed_low = (uint16_t)device->tick;
     }
     if (urgent) { /* TAG-5 */
         bool is_stop = request->word == RR_WORD_STOP;

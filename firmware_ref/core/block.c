@@ -14,31 +14,28 @@ struct shape {
 static const RR_FLASH struct shape shapes[] = {RR_CHANNEL_LIST(SHAPE)};
 #undef SHAPE
 
-/* `shape_of` knows the channels' order and bits; this is the table it stands for. */
-#define FIRST_BIT(NAME, per, first, step, width, order) CHANNEL_##NAME = first,
-enum first_bit { RR_CHANNEL_LIST(FIRST_BIT) };
-#undef FIRST_BIT
-_Static_assert(CHANNEL_DUTY == 0 && CHANNEL_COUNTS == 1 && CHANNEL_CURRENT_MA == 2, "three to an axis, from bit 0");
-_Static_assert(CHANNEL_PULSE_US == 12 && CHANNEL_SUPPLY_MV == 16 && CHANNEL_TEMPERATURE_DC == 17, "after the axes");
-_Static_assert(CHANNEL_STATE == 18 && sizeof shapes / sizeof shapes[0] == 7, "the last");
+/* `shape_of` knows the channels' order and bits. */
+_Static_assert(RR_CHANNEL_DUTY == 0 && RR_CHANNEL_COUNTS == 1 && RR_CHANNEL_CURRENT_MA == 2, "three to an axis, from bit 0");
+_Static_assert(RR_CHANNEL_PULSE_US == 12 && RR_CHANNEL_SUPPLY_MV == 16 && RR_CHANNEL_TEMPERATURE_DC == 17, "after the axes");
+_Static_assert(RR_CHANNEL_STATE == 18 && sizeof shapes / sizeof shapes[0] == 7, "the last");
 
-static uint8_t shape_of(uint8_t bit)
+static const RR_FLASH struct shape *shape_of(uint8_t bit)
 {
-    if (bit >= CHANNEL_SUPPLY_MV) {
-        return (uint8_t)(bit - CHANNEL_SUPPLY_MV + 4);
+    if (bit >= RR_CHANNEL_SUPPLY_MV) {
+        return &shapes[bit - RR_CHANNEL_SUPPLY_MV + 4];
     }
-    if (bit >= CHANNEL_PULSE_US) {
-        return 3;
+    if (bit >= RR_CHANNEL_PULSE_US) {
+        return &shapes[3];
     }
-    while (bit >= 3) {
-        bit = (uint8_t)(bit - 3);
+    while (bit >= RR_AXIS_CHANNELS) {
+        bit = (uint8_t)(bit - RR_AXIS_CHANNELS);
     }
-    return bit;
+    return &shapes[bit];
 }
 
-static int32_t held(uint8_t shape, int32_t value)
+int32_t rr_block_held(uint8_t bit, int32_t value)
 {
-    int32_t end = shapes[shape].end;
+    int32_t end = shape_of(bit)->end;
     if (end == 0) {
         return value;
     }
@@ -46,11 +43,6 @@ static int32_t held(uint8_t shape, int32_t value)
         return end - 1;
     }
     return value < -end ? -end : value;
-}
-
-int32_t rr_block_held(uint8_t bit, int32_t value)
-{
-    return held(shape_of(bit), value);
 }
 
 /* Appends the low `count` bits of `value`, at most 16, most significant first. */
@@ -144,7 +136,7 @@ void rr_block_prepare(struct rr_block *block, uint32_t mask, uint16_t period, st
     block->channels = 0;
     for (uint8_t bit = 0; bit < 20; bit++) {
         if ((mask >> bit & 1u) != 0) {
-            channel[block->channels].shape = shape_of(bit);
+            channel[block->channels].bit = bit;
             channel[block->channels].sum = (RR_U24)1 << RR_RICE_K_START;
             block->channels++;
         }
@@ -167,7 +159,7 @@ static void put_first(struct rr_block *block, bool with_k)
     put_bits(block, 0, 8);
     for (uint8_t i = 0; i < block->channels; i++) {
         const struct rr_channel *channel = &block->channel[i];
-        put_wide(block, (uint32_t)channel->value, shapes[channel->shape].width);
+        put_wide(block, (uint32_t)channel->value, shape_of(channel->bit)->width);
         if (with_k) {
             put_bits(block, parameter_of(1, channel->sum), 4); /* before its first residual A is 2^k */
         }
@@ -179,7 +171,7 @@ static void open_block(struct rr_block *block, uint32_t tick, const int32_t *val
     block->first_tick = tick;
     block->count = 1;
     for (uint8_t i = 0; i < block->channels; i++) {
-        block->channel[i].value = held(block->channel[i].shape, values[i]);
+        block->channel[i].value = rr_block_held(block->channel[i].bit, values[i]);
     }
     for (uint8_t i = 0; i < RR_SECOND_ORDER; i++) {
         block->difference[i] = 0;
@@ -196,10 +188,10 @@ static uint16_t fold(struct rr_block *block, int32_t *values, struct code *codes
     uint8_t second = 0;
     for (uint8_t i = 0; i < block->channels; i++) {
         struct rr_channel *channel = &block->channel[i];
-        int32_t value = held(channel->shape, values[i]);
+        int32_t value = rr_block_held(channel->bit, values[i]);
         int32_t residual = difference(value, channel->value);
         channel->value = value;
-        if (shapes[channel->shape].order == 2) {
+        if (shape_of(channel->bit)->order == 2) {
             int32_t before = block->difference[second];
             block->difference[second++] = residual;
             residual = difference(residual, before);

@@ -7,6 +7,12 @@
 #include <stdbool.h>
 #include <stdint.h>
 
+/* The first bit of each kind of channel in a mask; an axis has three, from its own first bit on. */
+#define RR_FIRST_BIT(NAME, per, first, step, width, order) RR_CHANNEL_##NAME = first,
+enum rr_channel_bit { RR_CHANNEL_LIST(RR_FIRST_BIT) };
+#undef RR_FIRST_BIT
+#define RR_AXIS_CHANNELS 3u
+
 /* The most channels a block of this build can have, and how many of them can be of order 2. */
 #define RR_CHANNELS (3 * RR_AXES + RR_SERVOS + 3)
 #define RR_SECOND_ORDER (2 * RR_AXES)
@@ -17,7 +23,7 @@
 struct rr_channel {
     int32_t value; /* of the sample before */
     RR_U24 sum;    /* A of DATA-7 */
-    uint8_t shape; /* its row in the table of channels */
+    uint8_t bit;   /* in the mask */
 };
 
 struct rr_block {

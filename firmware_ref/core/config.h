@@ -70,6 +70,18 @@
 #define RR_U24 uint32_t
 #endif
 
+/* The same, signed: for a pulse in ns and a duty. */
+#ifndef RR_I24
+#define RR_I24 int32_t
+#endif
+
+/* What a reading of the current and of the supply takes. A board may have narrower ones that hold all its sensors tell,
+ * the current less any offset_ma. */
+#ifndef RR_CURRENT
+#define RR_CURRENT int32_t
+#define RR_SUPPLY  int32_t
+#endif
+
 /* How the last request is kept to know a repetition (TAG-3): 1 whole, 0 by its length and 48 bits of checks. */
 #ifndef RR_KEEP_BODY
 #define RR_KEEP_BODY 1
@@ -85,6 +97,16 @@
 
 #ifndef RR_START_TICK
 #define RR_START_TICK 0 /* number of the first tick; another one only to test the wrap */
+#endif
+
+/* An axis by its number, which is 0 where there is one only: so that a small controller need not multiply to find it. */
+#define RR_AXIS(index) (RR_AXES == 1 ? 0 : (index))
+
+/* A function that is called from several places and is kept once: copies of it would cost a small controller more than calls. */
+#if defined __GNUC__ && RR_SPREAD
+#define RR_SHARED __attribute__((noinline))
+#else
+#define RR_SHARED
 #endif
 
 /* The number of limit values of this build, in the order of the digest. */

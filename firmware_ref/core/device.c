@@ -57,22 +57,24 @@ static void take_requests(struct rr_device *device)
 /* BAD-4: at most one notice in GARBLED_REST_TICKS; what came inside the rest is told when it is over. */
 static void tell_garbled(struct rr_device *device)
 {
-    if (device->line.garbled == device->garbled_told ||
-        (device->garbled_ever && device->tick - device->garbled_at < RR_GARBLED_REST_TICKS)) {
+    if (device->garbled_rest != 0) {
+        device->garbled_rest--;
+    }
+    if (device->garbled_rest != 0 || device->line.garbled == device->garbled_told) {
         return;
     }
     device->garbled_told = device->line.garbled;
-    device->garbled_at = device->tick;
-    device->garbled_ever = true;
+    device->garbled_rest = RR_GARBLED_REST_TICKS;
     rr_notice_push(device, RR_NOTICE_GARBLED, 0, 0);
 }
+_Static_assert(RR_GARBLED_REST_TICKS <= 255, "garbled_rest is a byte");
 
 /* (b) */
 static void read_inputs(struct rr_device *device)
 {
-    device->port->inputs(device->self, &device->inputs);
+    RR_PORT(device)->inputs(RR_SELF(device), &device->inputs);
     for (uint8_t i = 0; i < RR_AXES; i++) {
-        device->inputs.current_ma[i] -= device->limits.axis[i].guard.offset_ma;
+        device->inputs.current_ma[i] = (RR_CURRENT)(device->inputs.current_ma[i] - device->limits.axis[i].guard.offset_ma);
         rr_chain_watch(&device->axis[i].chain, &device->limits.axis[i].chain, device->inputs.counts[i]);
     }
 }
@@ -92,7 +94,7 @@ static void judge_supply(struct rr_device *device, struct rr_finding *finding)
     if ((RR_CAPS & RR_CAP_SUPPLY) == 0) {
         return;
     }
-    int32_t supply = device->inputs.supply_mv;
+    RR_SUPPLY supply = device->inputs.supply_mv;
     device->over_for = counted(device->over_for, supply > limits->over_mv);
     device->under_for = counted(device->under_for, supply < limits->under_mv);
     if (device->over_for >= limits->supply_ticks) {
@@ -106,9 +108,9 @@ static void judge_supply(struct rr_device *device, struct rr_finding *finding)
 /* LEASE-2 */
 static void judge_lease(const struct rr_device *device, struct rr_finding *finding)
 {
-    uint32_t silent = device->tick - device->renewed;
+    uint16_t silent = (uint16_t)((uint16_t)device->tick - device->renewed_low); /* armed: no more than the lease */
     if (RR_SEEDED(LEASE_FORGOTTEN, false, device->latch.state == RR_STATE_ARMED) && silent >= device->lease_ticks) {
-        uint32_t silent_ms = silent / 1000u * RR_TICK_US + silent % 1000u * RR_TICK_US / 1000u;
+        uint32_t silent_ms = RR_TICK_US == 1000 ? silent : (uint32_t)silent * RR_TICK_US / 1000u;
         rr_finding_note(finding, RR_TRIP_LINK_LOST, (int32_t)silent_ms, (int32_t)device->lease_ms);
     }
 }
@@ -121,24 +123,19 @@ static void guard(struct rr_device *device)
         rr_finding_note(&finding, RR_TRIP_LATE_ORDER, device->late_by, 0);
         device->late_by = -1;
     }
-    if (device->port->took_break(device->self)) {
+    if (RR_PORT(device)->took_break(RR_SELF(device))) {
         rr_finding_note(&finding, RR_TRIP_LINE_BREAK, 0, 0);
-        finding.index = 0;
     }
+    judge_supply(device, &finding);
+    judge_lease(device, &finding);
     for (uint8_t i = 0; i < RR_AXES; i++) {
         struct rr_axis *axis = &device->axis[i];
-        struct rr_finding of_axis = {RR_TRIP_NONE, i, 0, 0};
+        uint8_t before = finding.trip;
         rr_guard_step(&axis->guard, &device->limits.axis[i].guard, device->tick, axis->chain.duty, device->inputs.counts[i],
-                      device->inputs.current_ma[i], &of_axis);
-        if (of_axis.trip != RR_TRIP_NONE && (finding.trip == RR_TRIP_NONE || of_axis.trip < finding.trip)) {
-            finding = of_axis;
+                      device->inputs.current_ma[i], &finding);
+        if (finding.trip != before) {
+            finding.index = i;
         }
-    }
-    struct rr_finding of_board = {RR_TRIP_NONE, 0, 0, 0};
-    judge_supply(device, &of_board);
-    judge_lease(device, &of_board);
-    if (of_board.trip != RR_TRIP_NONE && (finding.trip == RR_TRIP_NONE || of_board.trip < finding.trip)) {
-        finding = of_board;
     }
     if (finding.trip != RR_TRIP_NONE) {
         rr_stop_trip(device, &finding);
@@ -150,10 +147,10 @@ static void begin_swing(struct rr_device *device, const struct rr_order *order, 
 #if RR_SERVOS > 0
     struct rr_servo *servo = &device->servo[index];
     if (servo->swing.value == 0) { /* no pulse: from home, or on from where pulses were taken away in this tick */
-        int32_t from = servo->pulse_ns != 0 ? servo->pulse_ns : rr_servo_first_ns(&device->limits.servo[index]);
+        rr_ns from = servo->pulse_ns != 0 ? servo->pulse_ns : rr_servo_first_ns(&device->limits.servo[index]);
         rr_glide_end(&servo->swing, from);
     }
-    rr_glide_begin(&servo->swing, order, (int32_t)order->value * 1000);
+    rr_glide_begin(&servo->swing, order, (rr_ns)((rr_ns)order->value * 1000));
 #else
     (void)device;
     (void)order;
@@ -202,7 +199,7 @@ static void drive_axis(struct rr_device *device, uint8_t index)
     struct rr_axis *axis = &device->axis[index];
     struct rr_chain_news news;
     int16_t duty = rr_chain_step(&axis->chain, &device->limits.axis[index].chain, (int16_t)axis->demand.value, &news);
-    device->port->bridge(device->self, index, duty, axis->brake);
+    RR_PORT(device)->bridge(RR_SELF(device), index, duty, axis->brake);
     device->at_ceiling = device->at_ceiling || news.at_ceiling;
     device->at_slew = device->at_slew || news.at_slew;
     device->locked = device->locked || news.locked;
@@ -221,8 +218,8 @@ static void drive_servo(struct rr_device *device, uint8_t index)
 {
     struct rr_servo *servo = &device->servo[index];
     const struct rr_servo_limits *limits = &device->limits.servo[index];
-    int32_t goal = servo->swing.value;
-    int32_t before = servo->pulse_ns;
+    rr_ns goal = servo->swing.value;
+    rr_ns before = servo->pulse_ns;
     if (goal == 0) {
         servo->pulse_ns = 0;
     } else if (servo->pulse_ns == 0) {
@@ -231,7 +228,7 @@ static void drive_servo(struct rr_device *device, uint8_t index)
         servo->pulse_ns = rr_servo_step_ns(limits, servo->pulse_ns, goal);
     }
     if (servo->pulse_ns != before) {
-        device->port->pulse(device->self, index, (uint32_t)servo->pulse_ns);
+        RR_PORT(device)->pulse(RR_SELF(device), index, (uint32_t)servo->pulse_ns);
     }
     device->at_slew = device->at_slew || (goal != 0 && servo->pulse_ns != rr_servo_held_ns(limits, goal));
     if (servo->swing.pending && servo->swing.left == 0 && servo->pulse_ns == goal) {
@@ -296,7 +293,11 @@ static void record(struct rr_device *device)
 void rr_device_tick(struct rr_device *device)
 {
     take_requests(device);
-    device->line_waits = (device->line_ended || device->heard != RR_LINE_NONE) ? (device->line_waits + 1u) & 7u : 0u;
+    if (device->line_ended || device->heard != RR_LINE_NONE) {
+        device->line_waits++;
+    } else {
+        device->line_waits = 0;
+    }
     tell_garbled(device);
     read_inputs(device);
     guard(device);
@@ -314,8 +315,8 @@ static void load_limits(struct rr_device *device)
     rr_limits_defaults(&device->limits);
     for (uint8_t place = 0; place < RR_LIMITS; place++) {
         int32_t value;
-        if (rr_store_read(device->port, device->self, (uint8_t)(1u + place), &value) &&
-            rr_limits_possible(place, value)) { /* another build of the board may have kept what this one cannot do */
+        if (rr_store_read(RR_PORT(device), RR_SELF(device), (uint8_t)(1u + place), &value) &&
+            rr_limits_possible(&device->limits, place, value)) { /* another build of the board may have kept what this one cannot do */
             rr_limits_set(&device->limits, place, value);
             rr_limits_enforce(&device->limits);
         }
@@ -324,21 +325,27 @@ static void load_limits(struct rr_device *device)
 
 static uint32_t next_boot(struct rr_device *device)
 {
+    (void)device; /* where RR_ONLY_PORT names the port */
     int32_t boot = 0;
-    (void)rr_store_read(device->port, device->self, RR_SLOT_BOOT, &boot);
+    (void)rr_store_read(RR_PORT(device), RR_SELF(device), RR_SLOT_BOOT, &boot);
     uint32_t next = (uint32_t)boot + 1u;
-    (void)rr_store_write(device->port, device->self, RR_SLOT_BOOT, (int32_t)next);
+    (void)rr_store_write(RR_PORT(device), RR_SELF(device), RR_SLOT_BOOT, (int32_t)next);
     return next;
 }
 
-void rr_device_start(struct rr_device *device, const RR_FLASH struct rr_port *port, void *self, uint8_t cause, int32_t fault)
+void rr_device_start(struct rr_device *device, const struct rr_port *port, void *self, uint8_t cause, int32_t fault)
 {
     memset(device, 0, sizeof *device);
     device->tick = RR_START_TICK;
     device->late_by = -1;
+#ifdef RR_ONLY_PORT
+    (void)port;
+    (void)self;
+#else
     device->port = port;
     device->self = self;
-    port->off(self);
+#endif
+    RR_PORT(device)->off(RR_SELF(device));
     load_limits(device);
     device->boot = next_boot(device); /* last: it may leave the store busy */
     if (fault != 0) {

@@ -28,7 +28,14 @@ struct rr_axis {
 
 struct rr_servo {
     struct rr_glide swing; /* in ns */
-    int32_t pulse_ns;      /* 0 = none */
+    rr_ns pulse_ns;        /* 0 = none */
+};
+
+/* What every answer begins with. */
+struct rr_verdict {
+    uint32_t tick;
+    uint8_t tag;
+    uint8_t reason; /* RR_REASON_COUNT = ok */
 };
 
 /* The most numbers of an answer: `state`, or `counters` with nine. */
@@ -37,19 +44,16 @@ struct rr_servo {
 
 /* An answer as numbers, from which it is said, and said again letter for letter (SPEC TAG-3). */
 struct rr_reply {
-    uint32_t tick;
+    struct rr_verdict verdict;
     uint32_t value[RR_REPLY_VALUES];
-    uint8_t tag;
     uint8_t word;
-    uint8_t reason; /* RR_REASON_COUNT = ok */
-    bool waiting;   /* to be said */
+    uint8_t count; /* of values */
+    bool waiting;  /* to be said */
 };
 
 /* An answer outside the exactly-once memory: to `stop` under tag ff, or a refusal with reason `tag`. */
 struct rr_aside {
-    uint32_t tick;
-    uint8_t tag;
-    uint8_t reason; /* RR_REASON_COUNT = ok */
+    struct rr_verdict verdict;
     uint8_t state;
     bool waiting;
 };
@@ -134,8 +138,10 @@ struct rr_notices {
 enum rr_saying { RR_SAYING_NOTHING, RR_SAYING_REPLY, RR_SAYING_ASIDE, RR_SAYING_NOTICE, RR_SAYING_DATA, RR_SAYING_AGAIN };
 
 struct rr_device {
-    const RR_FLASH struct rr_port *port;
+#ifndef RR_ONLY_PORT
+    const struct rr_port *port;
     void *self;
+#endif
     uint32_t tick;
     uint32_t boot;
     struct rr_latch latch;
@@ -143,20 +149,19 @@ struct rr_device {
     struct rr_finding last_trip;
     struct rr_finding trip_before; /* the last that had another number, until it has been told */
     uint32_t last_trip_tick;
-    uint32_t renewed; /* tick of the last lease renewal */
+    uint16_t renewed_low; /* low half of the tick of the last lease renewal */
     uint16_t lease_ms;
     uint16_t lease_ticks;
     uint16_t over_for; /* ticks in a row beyond the supply's limits */
     uint16_t under_for;
-    bool at_ceiling : 1;
-    bool at_slew : 1;
-    bool locked : 1;
-    bool packing_busy : 1; /* a trail answer is in the making */
-    bool taking : 1;       /* requests are being carried out: notices wait for (f) of the tick */
-    bool garbled_ever : 1;
-    bool line_ended : 1; /* an LF has been heard, and its line is not judged yet */
-    uint8_t line_waits : 3; /* ticks that a line has waited to be judged, read or answered */
-    bool read : 1;       /* the line heard has been read: it holds its request in place of its text */
+    bool at_ceiling;
+    bool at_slew;
+    bool locked;
+    bool packing_busy; /* a trail answer is in the making */
+    bool taking;       /* requests are being carried out: notices wait for (f) of the tick */
+    bool line_ended; /* an LF has been heard, and its line is not judged yet */
+    uint8_t line_waits; /* ticks that a line has waited to be judged, read or answered */
+    bool read;       /* the line heard has been read: it holds its request in place of its text */
     struct rr_inputs inputs; /* of this tick, offsets taken off */
     struct rr_limits limits;
     struct rr_axis axis[RR_AXES];
@@ -181,12 +186,12 @@ struct rr_device {
     uint32_t lines;
     uint32_t repeats;
     uint32_t garbled_told;
-    uint32_t garbled_at;
+    uint8_t garbled_rest; /* ticks until the next notice may be sent */
 };
 
 /* Takes over after a start: outputs off, limits from the store, notice `boot`. `cause` is the reset's (enum rr_cause),
  * `fault` the number of a failed self-test or 0. */
-void rr_device_start(struct rr_device *device, const RR_FLASH struct rr_port *port, void *self, uint8_t cause, int32_t fault);
+void rr_device_start(struct rr_device *device, const struct rr_port *port, void *self, uint8_t cause, int32_t fault);
 
 /* Carries out one tick. */
 void rr_device_tick(struct rr_device *device);
@@ -219,9 +224,10 @@ void rr_stop_trip(struct rr_device *device, const struct rr_finding *finding);
 void rr_notice_push(struct rr_device *device, uint8_t kind, uint8_t index, uint16_t value);
 bool rr_notice_field(struct rr_device *device, uint8_t field);
 bool rr_notice_identity_field(struct rr_device *device, uint8_t field);
-const RR_FLASH char *rr_state_word(uint8_t state);
-const RR_FLASH char *rr_trip_word(uint8_t trip);
+void rr_notice_say_state(struct rr_voice *voice, uint8_t state);
+void rr_notice_say_trip(struct rr_voice *voice, uint8_t trip);
 /* sampling.c: log, again, trail. */
+int32_t rr_sampling_channel(const struct rr_device *device, uint8_t bit); /* a channel's value at this tick */
 uint16_t rr_sampling_state_bits(const struct rr_device *device);
 bool rr_sampling_mask_fits(uint32_t mask);
 uint32_t rr_sampling_change(struct rr_device *device, uint16_t period, uint32_t mask, uint8_t form);

@@ -1,17 +1,18 @@
 /* The fields of a request; see fields.h. */
 #include "fields.h"
 
-#include <stddef.h>
+#include "names.h"
 
-struct word_row {
-    char name[9];
-    char kinds[5];
-    uint8_t states;
-};
-
-#define ROW(NAME, word, kinds, states) {word, kinds, states},
-static const RR_FLASH struct word_row words[RR_WORD_COUNT] = {RR_WORD_LIST(ROW)};
-#undef ROW
+static const RR_FLASH char words[] = RR_WORD_LIST(RR_NAME);
+#define KINDS(NAME, word, kinds, states) kinds "\0"
+static const RR_FLASH char kinds_of_words[] = RR_WORD_LIST(KINDS);
+#undef KINDS
+#define STATES(NAME, word, kinds, states) states,
+static const RR_FLASH uint8_t states_of_words[RR_WORD_COUNT] = {RR_WORD_LIST(STATES)};
+#undef STATES
+static const RR_FLASH char rests[] = RR_REST_LIST(RR_NAME);
+static const RR_FLASH char forms[] = RR_FORM_LIST(RR_NAME);
+static const RR_FLASH char limits[] = RR_LIMIT_LIST(RR_NAME);
 
 /* The length of the field that begins at text: up to a space or the end. */
 static uint8_t field_length(const char *text)
@@ -23,68 +24,65 @@ static uint8_t field_length(const char *text)
     return length;
 }
 
-static bool is_word(const char *field, uint8_t length, const RR_FLASH char *word)
-{
-    for (uint8_t i = 0; i < length; i++) {
-        if (field[i] != word[i] || word[i] == '\0') {
-            return false;
-        }
-    }
-    return word[length] == '\0';
-}
-
 uint8_t rr_fields_word(const char *text, const char **rest)
 {
     uint8_t length = field_length(text);
     *rest = text + length;
-    for (uint8_t i = 0; i < RR_WORD_COUNT; i++) {
-        if (is_word(text, length, words[i].name)) {
-            return i;
-        }
-    }
-    return RR_WORD_COUNT;
+    uint8_t word = rr_names_find(words, text, length);
+    return word == RR_NAME_UNKNOWN ? (uint8_t)RR_WORD_COUNT : word;
 }
 
 uint8_t rr_fields_states(uint8_t word)
 {
-    return words[word].states;
+    return states_of_words[word];
 }
 
 #define TENTH      429496729ul /* of 2^32 - 1, so that no division is needed */
 #define TENTH_REST 5u
 
-/* `0`, or a digit 1 to 9 and further digits, at most `greatest`. */
-static bool read_size(const char *field, uint8_t length, uint32_t greatest, uint32_t *value)
+/* `0`, or a digit 1 to 9 and further digits, below 2^32. */
+static bool read_size(const char *field, uint8_t length, uint32_t *value)
 {
-    if (length == 0 || length > 10 || (field[0] == '0' && length > 1)) {
+    if (length == 0 || (*field == '0' && length > 1)) {
         return false;
     }
     uint32_t sum = 0;
-    for (uint8_t i = 0; i < length; i++) {
-        if (field[i] < '0' || field[i] > '9') {
+    for (; length != 0; length--) {
+        uint8_t digit = (uint8_t)(*field++ - '0');
+        if (digit > 9 || sum > TENTH || (sum == TENTH && digit > TENTH_REST)) {
             return false;
-        }
-        uint8_t digit = (uint8_t)(field[i] - '0');
-        if (i == 9 && (sum > TENTH || (sum == TENTH && digit > TENTH_REST))) {
-            return false; /* the tenth digit may go past 32 bits */
         }
         sum = sum * 10u + digit;
     }
     *value = sum;
-    return sum <= greatest;
+    return true;
 }
 
 static bool read_signed(const char *field, uint8_t length, uint32_t *value)
 {
-    if (length > 0 && field[0] == '-') {
-        uint32_t size;
-        if (!read_size(field + 1, (uint8_t)(length - 1), 0x80000000ul, &size) || size == 0) {
-            return false;
-        }
-        *value = 0ul - size;
-        return true;
+    bool minus = *field == '-'; /* an empty field ends with another byte */
+    if (minus) {
+        field++;
+        length--;
     }
-    return read_size(field, length, 0x7FFFFFFFul, value);
+    if (!read_size(field, length, value)) {
+        return false;
+    }
+    if (minus && *value == 0) {
+        return false;
+    }
+    if (minus) {
+        *value = 0ul - *value;
+    }
+    return minus == (*value >> 31 != 0);
+}
+
+int8_t rr_fields_hex(char c)
+{
+    if (c >= '0' && c <= '9') {
+        return (int8_t)(c - '0');
+    }
+    return c >= 'a' && c <= 'f' ? (int8_t)(c - 'a' + 10) : (int8_t)-1;
 }
 
 static bool read_hex8(const char *field, uint8_t length, uint32_t *value)
@@ -92,85 +90,60 @@ static bool read_hex8(const char *field, uint8_t length, uint32_t *value)
     if (length != 8) {
         return false;
     }
-    uint32_t sum = 0;
-    for (uint8_t i = 0; i < 8; i++) {
-        char c = field[i];
-        uint8_t digit;
-        if (c >= '0' && c <= '9') {
-            digit = (uint8_t)(c - '0');
-        } else if (c >= 'a' && c <= 'f') {
-            digit = (uint8_t)(c - 'a' + 10);
-        } else {
+    *value = 0;
+    for (; length != 0; length--) {
+        int8_t digit = rr_fields_hex(*field++);
+        if (digit < 0) {
             return false;
         }
-        sum = sum << 4 | digit;
+        *value = *value << 4 | (uint8_t)digit;
     }
-    *value = sum;
     return true;
 }
 
-struct named {
-    char name[15];
-    uint8_t number;
-};
-
-#define NAMED(NAME, word, number) {word, number},
-static const RR_FLASH struct named rests[] = {RR_REST_LIST(NAMED)};
-static const RR_FLASH struct named forms[] = {RR_FORM_LIST(NAMED)};
-#undef NAMED
-#define NAMED(NAME, word, number, per, least, greatest, standard, tighter) {word, number},
-static const RR_FLASH struct named limits[] = {RR_LIMIT_LIST(NAMED)};
-#undef NAMED
-
-static bool read_named(const RR_FLASH struct named *table, uint8_t rows, const char *field, uint8_t length, uint32_t *value)
+static bool read_name(const RR_FLASH char *names, const char *field, uint8_t length, uint32_t *value)
 {
-    for (uint8_t i = 0; i < rows; i++) {
-        if (is_word(field, length, table[i].name)) {
-            *value = table[i].number;
-            return true;
-        }
-    }
-    return false;
+    *value = rr_names_find(names, field, length);
+    return *value != RR_NAME_UNKNOWN;
 }
 
 static bool read_field(char kind, const char *field, uint8_t length, uint32_t *value)
 {
     switch (kind) {
-    case 'u':
-    case 'a':
-    case 's':
-    case 'n':
-    case 't':
-        return read_size(field, length, 0xFFFFFFFFul, value);
     case 'i':
         return read_signed(field, length, value);
     case 'h':
         return read_hex8(field, length, value);
     case 'R':
-        return read_named(rests, sizeof rests / sizeof rests[0], field, length, value);
+        return read_name(rests, field, length, value);
     case 'F':
-        return read_named(forms, sizeof forms / sizeof forms[0], field, length, value);
+        return read_name(forms, field, length, value);
     case 'L':
-        return read_named(limits, sizeof limits / sizeof limits[0], field, length, value);
-    default:
-        return false;
+        return read_name(limits, field, length, value);
+    default: /* all others are numbers without a sign */
+        return read_size(field, length, value);
     }
 }
 
 bool rr_fields_arguments(uint8_t word, const char *rest, struct rr_arguments *arguments)
 {
-    const RR_FLASH char *kind = words[word].kinds;
+    const RR_FLASH char *kind = rr_names_at(kinds_of_words, word);
     arguments->count = 0;
     while (*rest == ' ') {
         const char *field = rest + 1;
         uint8_t length = field_length(field);
         rest = field + length;
-        if (*kind == '\0' || *kind == '?' || arguments->count == RR_ARGUMENTS_MAX ||
-            !read_field(*kind, field, length, &arguments->value[arguments->count])) {
+        if (*kind == '\0' || *kind == '?' || !read_field(*kind, field, length, &arguments->value[arguments->count])) {
             return false;
         }
         arguments->count++;
         kind++;
     }
-    return *kind == '\0' || *kind == '?' || (*kind != '\0' && kind[1] == '?');
+    return *kind == '\0' || *kind == '?' || kind[1] == '?';
 }
+
+#define KINDS_FIT(NAME, word, kinds, states) \
+    _Static_assert(sizeof kinds - 1u <= RR_ARGUMENTS_MAX, "a request's arguments have places");
+RR_WORD_LIST(KINDS_FIT)
+#undef KINDS_FIT
+_Static_assert(RR_REST_COAST == 0 && RR_REST_BRAKE == 1 && RR_FORM_PACKED == 0 && RR_FORM_PLAIN == 1, "a word's number is its place");

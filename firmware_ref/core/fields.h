@@ -9,7 +9,8 @@
 
 #define RR_ARGUMENTS_MAX 4u
 
-/* The arguments of a request by place. Signed ones are kept as their two's complement; words as their number. */
+/* The arguments of a request by place. Signed ones are kept as their two's complement; words as their number, that of a
+ * limit as its row (limits.h). */
 struct rr_arguments {
     uint32_t value[RR_ARGUMENTS_MAX];
     uint8_t count;
@@ -20,6 +21,9 @@ uint8_t rr_fields_word(const char *text, const char **rest);
 
 /* Reads what follows the word by the word's kinds. False where the number or the spelling is wrong. */
 bool rr_fields_arguments(uint8_t word, const char *rest, struct rr_arguments *arguments);
+
+/* The value of a hex digit, -1 where it is none. */
+int8_t rr_fields_hex(char c);
 
 /* The states in which the word is allowed, as bits. */
 uint8_t rr_fields_states(uint8_t word);

@@ -3,13 +3,11 @@
 
 #include "seeded.h"
 
-#define HEAT_ONE ((uint64_t)1 << 24) /* one mA^2 of heat */
-
 /*@ requires \valid(finding);
     assigns *finding;
     ensures finding->trip == (\old(finding->trip) == RR_TRIP_NONE || trip < \old(finding->trip) ? trip
                                                                                               : \old(finding->trip)); */
-void rr_finding_note(struct rr_finding *finding, uint8_t trip, int32_t value, int32_t bound)
+RR_SHARED void rr_finding_note(struct rr_finding *finding, uint8_t trip, int32_t value, int32_t bound)
 {
     if (finding->trip == RR_TRIP_NONE || trip < finding->trip) {
         finding->trip = trip;
@@ -19,7 +17,7 @@ void rr_finding_note(struct rr_finding *finding, uint8_t trip, int32_t value, in
 }
 
 /* Of counts (SPEC section 2): can be negated. */
-static int32_t difference(int32_t a, int32_t b)
+RR_SHARED static int32_t difference(int32_t a, int32_t b)
 {
     int32_t away = (int32_t)((uint32_t)a - (uint32_t)b);
     return away == INT32_MIN ? -INT32_MAX : away;
@@ -27,26 +25,9 @@ static int32_t difference(int32_t a, int32_t b)
 
 /*@ assigns \nothing;
     ensures \result == (value < 0 ? -value : value); */
-static uint32_t size_of(int32_t value)
+RR_SHARED static uint32_t size_of(int32_t value)
 {
     return value < 0 ? (uint32_t)-(value + 1) + 1u : (uint32_t)value; /* the least has no negative */
-}
-
-/* The whole root, by trying bits from the top: no division, sixteen steps. */
-/*@ assigns \nothing;
-    ensures \result * \result <= square; */
-static uint16_t root_of(uint64_t square)
-{
-    uint16_t root = 0;
-    /*@ loop invariant 0 <= root <= 65535 && root + 2 * bit <= 65536 && root * root <= square;
-        loop assigns bit, root; */
-    for (uint16_t bit = 0x8000u; bit != 0; bit >>= 1) {
-        uint32_t tried = (uint32_t)root + bit;
-        if ((uint64_t)tried * tried <= square) {
-            root = (uint16_t)tried;
-        }
-    }
-    return root;
 }
 
 /* floor(floor(a / b) / c) is floor(a / (b c)): the large division is done by the compiler. */
@@ -144,43 +125,21 @@ static void judge_speed(struct rr_guard *guard, const struct rr_guard_limits *li
     }
 }
 
-/*@ // TRIP-8: the sum grows by at most 65535^2 in a tick; the heat stays where 65535 mA for ever would bring it.
-    predicate rr_sum_ok(integer sum, integer ticks) = 0 <= sum <= ticks * 0xFFFE0001;
-    predicate rr_heat_ok(integer heat) = 0 <= heat < 0xFFFE0002 * 0x1000000;
-*/
-
 /* TRIP-8 */
 /*@ requires \valid(guard) && \valid_read(limits) && \valid(finding) && \separated(guard, limits, finding);
-    requires limits->gain <= 0x1000000;
-    requires rr_sum_ok(guard->square_sum, (tick + RR_THERMAL_TICKS - 1) % RR_THERMAL_TICKS);
-    requires rr_heat_ok(guard->heat);
-    assigns guard->square_sum, guard->heat, *finding;
-    ensures TRIP_8_sum: rr_sum_ok(guard->square_sum, tick % RR_THERMAL_TICKS);
-    ensures TRIP_8_heat: rr_heat_ok(guard->heat);
+    requires limits->gain < 0x1000000;
+    assigns guard->heat, *finding;
 */
 static void judge_heat(struct rr_guard *guard, const struct rr_guard_limits *limits, uint32_t tick, int32_t current_ma,
                        struct rr_finding *finding)
 {
-    uint32_t size = size_of(current_ma);
-    uint32_t u = size > 65535ul ? 65535ul : size;
-    //@ assert u <= 65535 && u * u <= 0xFFFE0001;
-    guard->square_sum += RR_SEEDED(SQUARE_IN_INT, (uint32_t)((int)u * (int)u), (uint32_t)(u * u));
+    rr_heat_take(&guard->heat, size_of(current_ma));
     if (tick % RR_THERMAL_TICKS != 0) {
         return;
     }
-    int64_t mean = (int64_t)(guard->square_sum / RR_THERMAL_TICKS);
-    guard->square_sum = 0;
-    //@ assert 0 <= mean <= 0xFFFE0001;
-    //@ ghost uint64_t level_before = guard->heat / HEAT_ONE;
-    //@ assert level_before * 0x1000000 <= guard->heat < (level_before + 1) * 0x1000000;
-    //@ assert mean >= level_before ==> (mean - level_before) * (0x1000000 - limits->gain) >= 0;
-    //@ assert mean >= level_before ==> (mean - level_before) * limits->gain >= 0;
-    //@ assert mean < level_before ==> (level_before - mean) * (0x1000000 - limits->gain) >= 0;
-    //@ assert mean < level_before ==> (level_before - mean) * limits->gain >= 0;
-    guard->heat = (uint64_t)((int64_t)guard->heat + (mean - (int64_t)(guard->heat / HEAT_ONE)) * (int64_t)limits->gain);
-    uint64_t level = guard->heat / HEAT_ONE;
-    if (limits->rated_ma > 0 && level >= (uint32_t)limits->rated_ma * (uint32_t)limits->rated_ma) {
-        rr_finding_note(finding, RR_TRIP_OVERLOAD, root_of(level), limits->rated_ma);
+    rr_heat_step(&guard->heat, limits->gain);
+    if (limits->rated_ma > 0 && guard->heat.level >= (uint32_t)limits->rated_ma * limits->rated_ma) {
+        rr_finding_note(finding, RR_TRIP_OVERLOAD, rr_heat_root(guard->heat.level), limits->rated_ma);
     }
 }
 
@@ -199,11 +158,11 @@ bool rr_guard_persists(const struct rr_guard *guard, const struct rr_guard_limit
     if (trip == RR_TRIP_OVERCURRENT) {
         return size_of(current_ma) > (uint32_t)limits->trip_ma;
     }
-    if (trip == RR_TRIP_OVERLOAD) {
-        uint64_t full = (uint64_t)limits->rated_ma * limits->rated_ma;
-        return full > 0 && guard->heat / HEAT_ONE * 8u > full * 7u;
+    if (trip == RR_TRIP_OVERLOAD) { /* above 7/8 of the square */
+        uint32_t full = (uint32_t)limits->rated_ma * limits->rated_ma;
+        return full > 0 && guard->heat.level > full - ((full + 7u) >> 3);
     }
     return false;
 }
 
-_Static_assert((uint64_t)RR_THERMAL_TICKS * RR_TICK_US <= 1000000ul, "TRIP-8: the gain is at most 1, so the heat fits 64 bits");
+_Static_assert((uint64_t)RR_THERMAL_TICKS * RR_TICK_US < 1000000ul, "TRIP-8: the gain is below 1");

@@ -6,6 +6,7 @@
 #define RAMPRIG_GUARD_H
 
 #include "config.h"
+#include "heat.h"
 
 #include <stdbool.h>
 #include <stdint.h>
@@ -33,8 +34,7 @@ struct rr_guard {
     int8_t push_sign;     /* its sign */
     int32_t furthest;     /* counts furthest along the duty */
     int32_t window_mark;  /* counts at the last tick divisible by SPEED_TICKS */
-    uint64_t square_sum;  /* of the currents since the last tick divisible by THERMAL_TICKS, mA^2 */
-    uint64_t heat;        /* mA^2 x 2^24 */
+    struct rr_heat heat;
 };
 
 /* A finding: trip, value and bound as in the notice. `trip` is RR_TRIP_NONE where there is none. */

@@ -17,7 +17,7 @@ static bool hear(struct rr_device *device, bool long_ones)
         if (device->heard != RR_LINE_NONE || (device->line_ended && !long_ones)) {
             return i != 0;
         }
-        int byte = device->line_ended ? '\n' : device->port->read(device->self);
+        int byte = device->line_ended ? '\n' : RR_PORT(device)->read(RR_SELF(device));
         if (byte < 0) {
             return i != 0;
         }
@@ -101,7 +101,7 @@ static bool begin_line(struct rr_device *device)
     while (!RR_SPREAD && device->saying != RR_SAYING_NOTHING) {
         const struct rr_notices *notices = &device->notices;
         bool is_short = device->saying == RR_SAYING_NOTICE && notices->happened[notices->first].kind != RR_NOTICE_WHO;
-        if (device->port->room(device->self) >= (is_short ? NOTICE_LONGEST : RR_DEVICE_LINE_MAX)) {
+        if (RR_PORT(device)->room(RR_SELF(device)) >= (is_short ? NOTICE_LONGEST : RR_DEVICE_LINE_MAX)) {
             break;
         }
         said(device);
@@ -133,7 +133,7 @@ static char next_character(struct rr_device *device)
 
 bool rr_device_say(struct rr_device *device)
 {
-    uint16_t room = device->port->room(device->self);
+    uint16_t room = RR_PORT(device)->room(RR_SELF(device));
     if (device->saying == RR_SAYING_NOTHING && (room == 0 || !begin_line(device))) {
         return false;
     }
@@ -143,7 +143,7 @@ bool rr_device_say(struct rr_device *device)
         piece[length++] = next_character(device);
     }
     if (length != 0) {
-        device->port->write(device->self, piece, length);
+        RR_PORT(device)->write(RR_SELF(device), piece, length);
     }
     return length != 0;
 }
@@ -161,7 +161,7 @@ static bool save(struct rr_device *device)
             bit = (uint8_t)(bit << 1);
             place++;
         }
-        if (!rr_store_write(device->port, device->self, (uint8_t)(1u + place), rr_limits_at(&device->limits, place))) {
+        if (!rr_store_write(RR_PORT(device), RR_SELF(device), (uint8_t)(1u + place), rr_limits_at(&device->limits, place))) {
             return false;
         }
         device->unsaved[i] = (uint8_t)(device->unsaved[i] & (uint8_t)~bit);

@@ -42,23 +42,48 @@ struct rr_limits {
     uint32_t digest;
 };
 
-/* The place of a limit in the order of the digest, or RR_LIMITS where there is no such index. */
-uint8_t rr_limits_place(uint8_t number, uint32_t index);
+/* The row of a limit in the table of limits: the device's first, then an axis's, then a servo's. */
+static inline uint8_t rr_limits_row(uint8_t number)
+{
+    if (number >= RR_LIMIT_PULSE_MIN_US) {
+        return (uint8_t)(number - RR_LIMIT_PULSE_MIN_US + RR_DEVICE_LIMITS + RR_AXIS_LIMITS);
+    }
+    return (uint8_t)(number >= RR_LIMIT_CEILING_DUTY ? number - RR_LIMIT_CEILING_DUTY + RR_DEVICE_LIMITS
+                                                     : number - RR_LIMIT_LEASE_MS);
+}
 
-/* Is the value outside the item's range, the board's, or what another limit allows (LIMIT-2)? The limit must exist. */
-bool rr_limits_is_out(const struct rr_limits *limits, uint8_t number, uint8_t index, int32_t value);
+/* Limits have places, in the order of the digest: row by row, in a row by its axes or servos. */
+static inline uint8_t rr_limits_axis_place(uint8_t number, uint8_t axis)
+{
+    return (uint8_t)(RR_DEVICE_LIMITS + (number - RR_LIMIT_CEILING_DUTY) * RR_AXES + axis);
+}
 
-/* Is the value looser than the one now (LIMIT-3)? */
-bool rr_limits_is_looser(uint8_t place, int32_t now, int32_t value);
+static inline uint8_t rr_limits_servo_place(uint8_t number, uint8_t servo)
+{
+    return (uint8_t)(RR_DEVICE_LIMITS + RR_AXIS_LIMITS * RR_AXES + (number - RR_LIMIT_PULSE_MIN_US) * RR_SERVOS + servo);
+}
+
+/* The place of a limit, or RR_LIMITS where there is no such index. */
+uint8_t rr_limits_place_in_row(uint8_t row, uint32_t index);
+
+static inline uint8_t rr_limits_place(uint8_t number, uint32_t index)
+{
+    return rr_limits_place_in_row(rr_limits_row(number), index);
+}
+
+/* Is the value outside the item's range, the board's, or what another limit allows (LIMIT-2)? */
+bool rr_limits_is_out(const struct rr_limits *limits, uint8_t place, int32_t value);
+
+/* Is the value looser than another one that is in force (LIMIT-3)? */
+bool rr_limits_is_looser(const struct rr_limits *limits, uint8_t place, int32_t now, int32_t value);
 
 /* May the limit at this place have this value on this board, whatever the others are? For what comes from a store. */
-bool rr_limits_possible(uint8_t place, int32_t value);
+bool rr_limits_possible(const struct rr_limits *limits, uint8_t place, int32_t value);
 
 /* The defaults of the table, a ceiling held to the board's own, all in force. */
 void rr_limits_defaults(struct rr_limits *limits);
 
-/* What a limit is, or will be from the next tick on; it must exist. */
-int32_t rr_limits_get(const struct rr_limits *limits, uint8_t number, uint8_t index);
+/* What a limit is, or will be from the next tick on. */
 int32_t rr_limits_at(const struct rr_limits *limits, uint8_t place);
 
 /* Sets a limit to a value that was not refused. At most RR_LIMITS_SET_MAX in a tick; one place counts once. */

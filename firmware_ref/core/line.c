@@ -2,17 +2,11 @@
 #include "line.h"
 
 #include "check.h"
+#include "fields.h"
+#include "names.h"
 #include "seeded.h"
 
 #define CHECK_LENGTH 5u /* a space and four hex digits */
-
-static int8_t hex_value(char c)
-{
-    if (c >= '0' && c <= '9') {
-        return (int8_t)(c - '0');
-    }
-    return c >= 'a' && c <= 'f' ? (int8_t)(c - 'a' + 10) : (int8_t)-1;
-}
 
 static bool all_printable(const char *text, uint8_t length)
 {
@@ -35,24 +29,15 @@ static bool check_is_right(const char *text, uint8_t body)
         crc = rr_crc16(crc, (uint8_t)text[i]);
     }
     for (uint8_t i = 0; i < 4; i++) {
-        if (hex_value(text[body + 1u + i]) != (int8_t)((crc >> (12 - 4 * i)) & 0xF)) {
+        if (rr_fields_hex(text[body + 1u + i]) != (int8_t)((crc >> (12 - 4 * i)) & 0xF)) {
             return false;
         }
     }
     return true;
 }
 
-static const RR_FLASH char bare_stop[] = "stop";
-static const RR_FLASH char bare_who[] = "who";
-
-static bool is_bare(const char *text, const RR_FLASH char *word)
-{
-    while (*text == *word && *word != '\0') {
-        text++;
-        word++;
-    }
-    return *text == *word;
-}
+/* LINE-7 */
+static const RR_FLASH char bare_words[] = "stop\0who\0";
 
 /* A whole line, its LF and a CR before it gone: what is it? */
 static enum rr_line_kind judged(struct rr_line *line, uint8_t length)
@@ -61,19 +46,16 @@ static enum rr_line_kind judged(struct rr_line *line, uint8_t length)
     if (!all_printable(text, length)) {
         return RR_LINE_GARBLED;
     }
-    text[length] = '\0';
-    if (is_bare(text, bare_stop)) {
-        return RR_LINE_BARE_STOP;
-    }
-    if (is_bare(text, bare_who)) {
-        return RR_LINE_BARE_WHO;
+    uint8_t bare = rr_names_find(bare_words, text, length);
+    if (bare != RR_NAME_UNKNOWN) {
+        return bare == 0 ? RR_LINE_BARE_STOP : RR_LINE_BARE_WHO;
     }
     if (length < 2u + CHECK_LENGTH) {
         return RR_LINE_GARBLED;
     }
     uint8_t body = (uint8_t)(length - CHECK_LENGTH);
-    int8_t high = hex_value(text[0]);
-    int8_t low = hex_value(text[1]);
+    int8_t high = rr_fields_hex(text[0]);
+    int8_t low = rr_fields_hex(text[1]);
     if (!check_is_right(text, body) || high < 0 || low < 0 || (body > 2 && text[2] != ' ')) {
         return RR_LINE_GARBLED;
     }

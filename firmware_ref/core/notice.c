@@ -1,130 +1,136 @@
 /* Notices: what happened, told in order, and the words that answers share with them (SPEC section 14). */
 #include "device.h"
 
-struct name {
-    char text[13];
-};
+#include "names.h"
 
-#define NAME2(NAME, word) {word},
-#define NAME3(NAME, word, number) {word},
-#define NAME4(NAME, word, number, category) {word},
-static const RR_FLASH struct name notice_names[] = {RR_NOTICE_LIST(NAME2)};
-static const RR_FLASH struct name state_names[] = {RR_STATE_LIST(NAME3)};
-static const RR_FLASH struct name source_names[] = {RR_SOURCE_LIST(NAME3)};
-static const RR_FLASH struct name cause_names[] = {RR_CAUSE_LIST(NAME3)};
-static const RR_FLASH struct name trip_names[] = {RR_TRIP_LIST(NAME4)};
+static const RR_FLASH char names[] = RR_NOTICE_LIST(RR_NAME);
+static const RR_FLASH char states[] = RR_STATE_LIST(RR_NAME);
+static const RR_FLASH char sources[] = RR_SOURCE_LIST(RR_NAME);
+static const RR_FLASH char causes[] = RR_CAUSE_LIST(RR_NAME);
+static const RR_FLASH char trips[] = RR_TRIP_LIST(RR_NAME);
 
-const RR_FLASH char *rr_state_word(uint8_t state)
+static void say_name(struct rr_voice *voice, const RR_FLASH char *table, uint8_t place)
 {
-    return state_names[state].text;
+    rr_voice_word(voice, rr_names_at(table, place));
 }
 
-const RR_FLASH char *rr_trip_word(uint8_t trip)
+void rr_notice_say_state(struct rr_voice *voice, uint8_t state)
 {
-    return trip_names[trip].text;
+    say_name(voice, states, state);
 }
 
-/* Field 0 is the protocol's version; the rest as `who` lists them. */
+void rr_notice_say_trip(struct rr_voice *voice, uint8_t trip)
+{
+    say_name(voice, trips, trip);
+}
+
+/* The numbers of `who` before its words, and after its boot number. */
+static const RR_FLASH uint16_t sizes[] = {RR_TICK_US, RR_AXES, RR_SERVOS, RR_MAX_DUTY, RR_QUEUE, RR_TRAIL, RR_KEEP, RR_CAPS};
+#define SIZES (sizeof sizes / sizeof sizes[0])
+_Static_assert(RR_TICK_US <= 65535 && RR_KEEP <= 65535 && RR_TRAIL <= 65535 && (uint16_t)(RR_CAPS) == (RR_CAPS), "two bytes each");
+
 bool rr_notice_identity_field(struct rr_device *device, uint8_t field)
 {
-    static const RR_FLASH uint32_t sizes[] = {RR_TICK_US, RR_AXES, RR_SERVOS, RR_MAX_DUTY,
-                                              RR_QUEUE,   RR_TRAIL, RR_KEEP,  RR_CAPS};
+    struct rr_voice *voice = &device->voice;
     switch (field) {
     case 0:
-        rr_voice_u32(&device->voice, RR_VERSION);
-        return true;
+        rr_voice_u32(voice, RR_VERSION);
+        break;
     case 1:
-        rr_voice_word(&device->voice, device->port->firmware);
-        return true;
+        rr_voice_word(voice, RR_PORT(device)->firmware);
+        break;
     case 2:
-        rr_voice_word(&device->voice, device->port->board);
-        return true;
+        rr_voice_word(voice, RR_PORT(device)->board);
+        break;
     case 3:
-        rr_voice_word(&device->voice, device->port->serial);
-        return true;
+        rr_voice_word(voice, RR_PORT(device)->serial);
+        break;
     case 4:
-        rr_voice_u32(&device->voice, device->boot);
-        return true;
+        rr_voice_u32(voice, device->boot);
+        break;
     default:
-        if (field - 5u < sizeof sizes / sizeof sizes[0]) {
-            rr_voice_u32(&device->voice, sizes[field - 5u]);
-            return true;
+        field = (uint8_t)(field - 5u);
+        if (field >= SIZES) {
+            return false;
         }
-        return false;
+        rr_voice_u32(voice, sizes[field]);
+        break;
     }
+    return true;
 }
 
-/* How many fields a notice has after its tick; `who` knows itself. */
-static const RR_FLASH uint8_t own_fields[] = {
-    [RR_NOTICE_BOOT] = 2, [RR_NOTICE_WHO] = 13, [RR_NOTICE_STOP] = 2,  [RR_NOTICE_OFF] = 1,
-    [RR_NOTICE_TRIP] = 4, [RR_NOTICE_DONE] = 1, [RR_NOTICE_DWELL] = 2, [RR_NOTICE_GARBLED] = 1,
-};
-_Static_assert(sizeof own_fields == RR_NOTICE_COUNT, "one row a notice");
-
-/* Of a trip: its word, index, value and bound. */
-static void trip_field(struct rr_device *device, uint8_t index, uint8_t field)
-{
-    bool is_last = device->last_trip.trip == index >> 4;
-    const struct rr_finding *trip = is_last ? &device->last_trip : &device->trip_before;
-    if (field == 0) {
-        rr_voice_word(&device->voice, rr_trip_word(index >> 4));
-    } else if (field == 1) {
-        rr_voice_u32(&device->voice, index & 0xFu);
-    } else {
-        rr_voice_i32(&device->voice, field == 2 ? trip->value : trip->bound);
-    }
-}
+/* The fields of each notice after its tick, a letter each: see `own_field`. */
+static const RR_FLASH char fields_of_notices[] = /* boot */ "bc\0" /* who */ "\0" /* stop */ "vs\0" /* off */ "S\0"
+                                                 /* trip */ "Tixy\0" /* done */ "h\0" /* dwell */ "iv\0" /* garbled */ "g";
+_Static_assert(RR_NOTICE_BOOT == 0 && RR_NOTICE_WHO == 1 && RR_NOTICE_STOP == 2 && RR_NOTICE_OFF == 3 && RR_NOTICE_TRIP == 4 &&
+                   RR_NOTICE_DONE == 5 && RR_NOTICE_DWELL == 6 && RR_NOTICE_GARBLED == 7 && RR_NOTICE_COUNT == 8,
+               "the notices' order");
 
 /* The fields after word and tick, counted from 0. */
 static bool own_field(struct rr_device *device, const struct rr_happened *happened, uint8_t field)
 {
     struct rr_voice *voice = &device->voice;
-    if (field >= own_fields[happened->kind]) {
-        return false;
-    }
-    switch (happened->kind) {
-    case RR_NOTICE_WHO:
+    const struct rr_finding *trip = device->last_trip.trip == happened->index >> 4 ? &device->last_trip : &device->trip_before;
+    if (happened->kind == RR_NOTICE_WHO) {
         return rr_notice_identity_field(device, field);
-    case RR_NOTICE_OFF:
-        rr_voice_word(voice, rr_state_word(happened->index));
-        return true;
-    case RR_NOTICE_DONE:
-        rr_voice_hex2(voice, ' ', happened->index);
-        return true;
-    case RR_NOTICE_TRIP:
-        trip_field(device, happened->index, field);
-        return true;
-    default:
-        break;
     }
-    if (field == 1 && happened->kind == RR_NOTICE_BOOT) {
-        rr_voice_word(voice, cause_names[happened->index].text);
-    } else if (field == 1 && happened->kind == RR_NOTICE_STOP) {
-        rr_voice_word(voice, source_names[happened->index].text);
-    } else if (happened->kind == RR_NOTICE_GARBLED) {
-        rr_voice_u32(voice, device->garbled_told);
-    } else if (field == 0 && happened->kind == RR_NOTICE_BOOT) {
+    const RR_FLASH char *letter = rr_names_at(fields_of_notices, happened->kind);
+    while (field-- != 0 && *letter != '\0') {
+        letter++;
+    }
+    switch (*letter) {
+    case 'b':
         rr_voice_u32(voice, device->boot);
-    } else if (field == 0 && happened->kind == RR_NOTICE_DWELL) {
-        rr_voice_u32(voice, happened->index);
-    } else {
+        break;
+    case 'c':
+        say_name(voice, causes, happened->index);
+        break;
+    case 'v':
         rr_voice_u32(voice, happened->value);
+        break;
+    case 's':
+        say_name(voice, sources, happened->index);
+        break;
+    case 'S':
+        say_name(voice, states, happened->index);
+        break;
+    case 'T':
+        say_name(voice, trips, happened->index >> 4);
+        break;
+    case 'i':
+        rr_voice_u32(voice, happened->index & 0xFu);
+        break;
+    case 'x':
+        rr_voice_i32(voice, trip->value);
+        break;
+    case 'y':
+        rr_voice_i32(voice, trip->bound);
+        break;
+    case 'h':
+        rr_voice_hex2(voice, ' ', happened->index);
+        break;
+    case 'g':
+        rr_voice_u32(voice, device->garbled_told);
+        break;
+    default:
+        return false;
     }
     return true;
 }
 
 bool rr_notice_field(struct rr_device *device, uint8_t field)
 {
+    struct rr_voice *voice = &device->voice;
     const struct rr_happened *happened = &device->notices.happened[device->notices.first];
     switch (field) {
     case 0:
-        rr_voice_hex2(&device->voice, 'N', happened->number);
+        rr_voice_hex2(voice, 'N', happened->number);
         return true;
     case 1:
-        rr_voice_word(&device->voice, notice_names[happened->kind].text);
+        say_name(voice, names, happened->kind);
         return true;
     case 2:
-        rr_voice_u32(&device->voice, device->tick - (uint16_t)((uint16_t)device->tick - happened->tick_low));
+        rr_voice_u32(voice, device->tick - (uint16_t)((uint16_t)device->tick - happened->tick_low));
         return true;
     default:
         return own_field(device, happened, (uint8_t)(field - 3u));

@@ -46,10 +46,10 @@ static void divide(struct rr_glide *glide, RR_U24 way, uint32_t ticks)
     glide->part = way;
 }
 
-void rr_glide_begin(struct rr_glide *glide, const struct rr_order *order, int32_t goal)
+void rr_glide_begin(struct rr_glide *glide, const struct rr_order *order, RR_I24 goal)
 {
     glide->down = goal < glide->value;
-    uint32_t way = glide->down ? (uint32_t)(glide->value - goal) : (uint32_t)(goal - glide->value);
+    RR_U24 way = (RR_U24)(glide->down ? glide->value - goal : goal - glide->value);
     glide->ticks = order->ticks;
     glide->left = order->ticks;
     glide->sum = 0;
@@ -59,7 +59,7 @@ void rr_glide_begin(struct rr_glide *glide, const struct rr_order *order, int32_
         glide->value = goal;
         return;
     }
-    divide(glide, (RR_U24)way, order->ticks);
+    divide(glide, way, order->ticks);
 }
 
 void rr_glide_step(struct rr_glide *glide)
@@ -67,17 +67,17 @@ void rr_glide_step(struct rr_glide *glide)
     if (glide->left == 0) {
         return;
     }
-    uint32_t step = glide->whole;
+    RR_U24 step = glide->whole;
     glide->sum += glide->part;
     if (glide->sum >= glide->ticks) {
         glide->sum -= glide->ticks;
         step++;
     }
-    glide->value = glide->down ? (int32_t)(glide->value - (int32_t)step) : (int32_t)(glide->value + (int32_t)step);
+    glide->value = (RR_I24)(glide->down ? glide->value - (RR_I24)step : glide->value + (RR_I24)step);
     glide->left--;
 }
 
-void rr_glide_end(struct rr_glide *glide, int32_t value)
+RR_SHARED void rr_glide_end(struct rr_glide *glide, RR_I24 value)
 {
     glide->value = value;
     glide->left = 0;

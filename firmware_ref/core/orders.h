@@ -31,9 +31,9 @@ const struct rr_order *rr_orders_take_due(struct rr_orders *orders, uint32_t now
 
 /* A value on its way: at tick T + k it is d + s floor(|D - d| k / n), without a division in the tick (SPEC ORDER-4). */
 struct rr_glide {
-    int32_t value;
-    uint32_t whole; /* floor(|D - d| / n) */
-    uint32_t part;  /* |D - d| mod n */
+    RR_I24 value;   /* duty or ns */
+    RR_U24 whole;   /* floor(|D - d| / n) */
+    RR_U24 part;    /* |D - d| mod n */
     uint32_t sum;   /* running sum of parts, below n */
     uint32_t ticks; /* n */
     uint32_t left;  /* ticks to go; 0 = at the goal */
@@ -43,12 +43,12 @@ struct rr_glide {
 };
 
 /* Begins an order's glide from the present value to `goal` at this tick (k = 0). */
-void rr_glide_begin(struct rr_glide *glide, const struct rr_order *order, int32_t goal);
+void rr_glide_begin(struct rr_glide *glide, const struct rr_order *order, RR_I24 goal);
 
 /* Moves the glide on by one tick. */
 void rr_glide_step(struct rr_glide *glide);
 
 /* Ends the glide: it rests at `value`, nothing is pending. */
-void rr_glide_end(struct rr_glide *glide, int32_t value);
+void rr_glide_end(struct rr_glide *glide, RR_I24 value);
 
 #endif

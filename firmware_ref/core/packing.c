@@ -1,9 +1,6 @@
 /* The payload of a `trail` answer, made a record at a time (SPEC TRAIL-2). */
 #include "device.h"
 
-#define SUPPLY_BIT 16u
-#define STATE_BIT  18u
-
 bool rr_packing_begin(struct rr_device *device, uint8_t axis, uint32_t first)
 {
     const struct rr_trail *trail = &device->trail;
@@ -11,7 +8,7 @@ bool rr_packing_begin(struct rr_device *device, uint8_t axis, uint32_t first)
         return false;
     }
     struct rr_packing *packing = &device->u.packing;
-    uint32_t mask = (uint32_t)7 << (3 * axis) | (uint32_t)1 << SUPPLY_BIT | (uint32_t)1 << STATE_BIT;
+    uint32_t mask = (uint32_t)7 << (3 * axis) | (uint32_t)1 << RR_CHANNEL_SUPPLY_MV | (uint32_t)1 << RR_CHANNEL_STATE;
     rr_block_prepare(&packing->block, mask, 1, packing->channel);
     rr_block_place(&packing->block, packing->bytes, RR_TRAIL_PAYLOAD);
     packing->next = (uint16_t)first;

@@ -15,8 +15,8 @@
 /* What the guard judges and the log shows: one reading of all inputs at a tick. */
 struct rr_inputs {
     int32_t counts[RR_AXES];     /* quadrature counts x4 since start, wrapping */
-    int32_t current_ma[RR_AXES]; /* motor current, signed as the bridge sees it, before the offset */
-    int32_t supply_mv;           /* 0 where not measured */
+    RR_CURRENT current_ma[RR_AXES]; /* motor current, signed as the bridge sees it, before the offset */
+    RR_SUPPLY supply_mv;           /* 0 where not measured */
     int16_t temperature_dc;      /* 0 where not measured */
     uint32_t illegal_edges;      /* encoder transitions that skipped a state, since start */
 };
@@ -51,5 +51,18 @@ struct rr_port {
     const RR_FLASH char *board;
     const RR_FLASH char *serial;
 };
+
+/* The port of a device. A board that has one device may name its port when the core is compiled, and the calls go straight
+ * to its functions; `self` is then NULL. */
+#ifdef RR_ONLY_PORT
+extern const struct rr_port RR_ONLY_PORT;
+#define RR_THE_PORT(port) (&RR_ONLY_PORT)
+#define RR_PORT(device) (&RR_ONLY_PORT)
+#define RR_SELF(device) NULL
+#else
+#define RR_THE_PORT(port) (port)
+#define RR_PORT(device) ((device)->port)
+#define RR_SELF(device) ((device)->self)
+#endif
 
 #endif

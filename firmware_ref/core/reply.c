@@ -1,131 +1,130 @@
 /* Answers as numbers, and the fields they are said in (SPEC section 8). */
 #include "device.h"
+#include "kept.h"
+#include "names.h"
 
-struct name {
-    char text[7];
-};
-#define NAME(NAME_, word) {word},
-static const RR_FLASH struct name reason_names[] = {RR_REASON_LIST(NAME)};
-#undef NAME
+#include <stddef.h>
 
-/* What the numbers of an `ok` are: u unsigned, i signed, S a state, T a trip. `state` goes on with three signed ones an
- * axis and an unsigned one a servo; `who` and `trail` are told apart. */
-struct form {
-    char kinds[10];
-};
-static const RR_FLASH struct form forms[RR_WORD_COUNT] = {
-    [RR_WORD_BEAT] = {"S"},      [RR_WORD_STATE] = {"STuii"}, [RR_WORD_ARM] = {"u"},   [RR_WORD_RAMP] = {"u"},
-    [RR_WORD_SWING] = {"u"},     [RR_WORD_REST] = {"u"},      [RR_WORD_STOP] = {"S"},  [RR_WORD_WHY] = {"Tuuii"},
-    [RR_WORD_LIMIT] = {"i"},     [RR_WORD_LOG] = {"uu"},      [RR_WORD_TRAIL] = {"u"}, [RR_WORD_COUNTERS] = {"uuuuuuuuu"},
-};
-
+static const RR_FLASH char reasons[] = RR_REASON_LIST(RR_NAME);
 static const RR_FLASH char ok[] = "ok";
 static const RR_FLASH char no[] = "no";
+
+/* What the numbers of an `ok` are, by words: u unsigned, i signed, S a state, T a trip; the last one goes on for all that
+ * follow it. `who` says its fields itself, `trail` has a payload after its number. */
+static const RR_FLASH char kinds[] = /* who */ "\0" /* beat */ "S\0" /* state */ "STui\0" /* arm */ "u\0" /* disarm */ "\0"
+                                     /* ramp */ "u\0" /* swing */ "u\0" /* rest */ "u\0" /* stop */ "S\0" /* clear */ "\0"
+                                     /* why */ "Tuui\0" /* limit */ "i\0" /* log */ "u\0" /* again */ "\0" /* trail */ "u\0"
+                                     /* counters */ "u";
+_Static_assert(RR_WORD_BEAT == 1 && RR_WORD_STATE == 2 && RR_WORD_STOP == 8 && RR_WORD_WHY == 10 && RR_WORD_LIMIT == 11 &&
+                   RR_WORD_COUNTERS == 15 && RR_WORD_COUNT == 16,
+               "the words' order");
+
+/* Numbers of an answer that stand somewhere in the device. */
+struct datum {
+    uint16_t offset;
+    uint8_t width;
+};
+#define DATUM(member, width) {offsetof(struct rr_device, member), width}
+static const RR_FLASH struct datum why[] = {
+    DATUM(last_trip.trip, RR_U8),   DATUM(last_trip_tick, RR_I32),  DATUM(last_trip.index, RR_U8),
+    DATUM(last_trip.value, RR_I32), DATUM(last_trip.bound, RR_I32),
+};
+static const RR_FLASH struct datum counters[] = {
+    DATUM(lines, RR_I32),   DATUM(line.garbled, RR_I32), DATUM(line.overlong, RR_I32),
+    DATUM(lines, RR_I32), /* for what the port counts */
+    DATUM(repeats, RR_I32), DATUM(lines, RR_I32), /* and measures */
+    DATUM(logging.made_ever, RR_I32), DATUM(logging.dropped_ever, RR_I32), DATUM(inputs.illegal_edges, RR_I32),
+};
+#define ROWS(table) (sizeof(table) / sizeof(table)[0])
+
+static void note(struct rr_device *device, const RR_FLASH struct datum *datum, uint8_t rows)
+{
+    struct rr_reply *reply = &device->memory.reply;
+    uint32_t *value = reply->value;
+    reply->count = rows;
+    for (; rows != 0; rows--, datum++) {
+        *value++ = (uint32_t)rr_kept_read((const uint8_t *)device + datum->offset, datum->width);
+    }
+}
 
 static void note_state(struct rr_device *device, uint32_t *value)
 {
     *value++ = device->latch.state;
     *value++ = device->latch.trip;
     *value++ = rr_device_queued(device);
-    *value++ = (uint32_t)device->inputs.supply_mv;
-    *value++ = (uint32_t)(int32_t)device->inputs.temperature_dc;
-    for (uint8_t i = 0; i < RR_AXES; i++) {
-        *value++ = (uint32_t)(int32_t)device->axis[i].chain.duty;
-        *value++ = (uint32_t)device->inputs.counts[i];
-        *value++ = (uint32_t)device->inputs.current_ma[i];
+    *value++ = (uint32_t)rr_sampling_channel(device, RR_CHANNEL_SUPPLY_MV);
+    *value++ = (uint32_t)rr_sampling_channel(device, RR_CHANNEL_TEMPERATURE_DC);
+    for (uint8_t bit = 0; bit < 3 * RR_AXES; bit++) {
+        *value++ = (uint32_t)rr_sampling_channel(device, bit);
     }
-#if RR_SERVOS > 0
-    for (uint8_t i = 0; i < RR_SERVOS; i++) {
-        *value++ = rr_servo_us(device->servo[i].pulse_ns);
+    for (uint8_t bit = RR_CHANNEL_PULSE_US; bit < RR_CHANNEL_PULSE_US + RR_SERVOS; bit++) {
+        *value++ = (uint32_t)rr_sampling_channel(device, bit);
     }
-#endif
-}
-
-static void note_counters(struct rr_device *device, uint32_t *value)
-{
-    value[0] = device->lines;
-    value[1] = device->line.garbled;
-    value[2] = device->line.overlong;
-    value[3] = device->port->overruns(device->self);
-    value[4] = device->repeats;
-    value[5] = device->port->worst_us(device->self);
-    value[6] = device->logging.made_ever;
-    value[7] = device->logging.dropped_ever;
-    value[8] = device->inputs.illegal_edges;
-}
-
-static void note_why(struct rr_device *device, uint32_t *value)
-{
-    value[0] = device->last_trip.trip;
-    value[1] = device->last_trip_tick;
-    value[2] = device->last_trip.index;
-    value[3] = (uint32_t)device->last_trip.value;
-    value[4] = (uint32_t)device->last_trip.bound;
 }
 
 void rr_reply_note(struct rr_device *device, uint8_t word, uint32_t told)
 {
-    uint32_t *value = device->memory.reply.value;
+    struct rr_reply *reply = &device->memory.reply;
+    reply->count = 1;
+    reply->value[0] = told;
     switch (word) {
     case RR_WORD_BEAT:
     case RR_WORD_STOP:
-        value[0] = device->latch.state;
+        reply->value[0] = device->latch.state;
         break;
     case RR_WORD_STATE:
-        note_state(device, value);
+        reply->count = RR_STATE_VALUES;
+        note_state(device, reply->value);
         break;
     case RR_WORD_ARM:
-        value[0] = device->lease_ms;
+        reply->value[0] = device->lease_ms;
         break;
     case RR_WORD_RAMP:
     case RR_WORD_SWING:
     case RR_WORD_REST:
-        value[0] = (uint32_t)(RR_QUEUE - rr_device_queued(device));
+        reply->value[0] = (uint8_t)(RR_QUEUE - rr_device_queued(device));
         break;
     case RR_WORD_WHY:
-        note_why(device, value);
+        note(device, why, ROWS(why));
         break;
     case RR_WORD_LOG:
-        value[0] = device->logging.period == 0 ? 0 : device->logging.next_tick;
-        value[1] = told;
+        reply->value[1] = told;
+        reply->value[0] = device->logging.period == 0 ? 0 : device->logging.next_tick;
+        reply->count = 2;
         break;
     case RR_WORD_COUNTERS:
-        note_counters(device, value);
+        note(device, counters, ROWS(counters));
+        reply->value[3] = RR_PORT(device)->overruns(RR_SELF(device));
+        reply->value[5] = RR_PORT(device)->worst_us(RR_SELF(device));
         break;
     default:
-        value[0] = told;
         break;
     }
 }
 
 /* Tag, verdict, tick, and the reason of a `no`. False beyond them. */
-static bool common_field(struct rr_voice *voice, uint8_t field, uint8_t tag, uint8_t reason, uint32_t tick)
+static bool common_field(struct rr_voice *voice, uint8_t field, const struct rr_verdict *verdict)
 {
+    bool is_ok = verdict->reason == RR_REASON_COUNT;
     switch (field) {
     case 0:
-        rr_voice_hex2(voice, 0, tag);
+        rr_voice_hex2(voice, 0, verdict->tag);
         return true;
     case 1:
-        rr_voice_word(voice, reason == RR_REASON_COUNT ? ok : no);
+        rr_voice_word(voice, is_ok ? ok : no);
         return true;
     case 2:
-        rr_voice_u32(voice, tick);
+        rr_voice_u32(voice, verdict->tick);
+        return true;
+    case 3:
+        if (is_ok) {
+            return false;
+        }
+        rr_voice_word(voice, rr_names_at(reasons, verdict->reason));
         return true;
     default:
-        if (field == 3 && reason != RR_REASON_COUNT) {
-            rr_voice_word(voice, reason_names[reason].text);
-            return true;
-        }
         return false;
     }
-}
-
-static char kind_of(uint8_t word, uint8_t number)
-{
-    if (word == RR_WORD_STATE && number >= 5) {
-        return number < 5 + 3 * RR_AXES ? 'i' : number < RR_STATE_VALUES ? 'u' : '\0';
-    }
-    return forms[word].kinds[number];
 }
 
 static bool ok_field(struct rr_device *device, const struct rr_reply *reply, uint8_t number)
@@ -134,22 +133,30 @@ static bool ok_field(struct rr_device *device, const struct rr_reply *reply, uin
     if (reply->word == RR_WORD_WHO) {
         return rr_notice_identity_field(device, number);
     }
-    if (reply->word == RR_WORD_TRAIL && number == 1) {
+    if (number >= reply->count) {
+        if (reply->word != RR_WORD_TRAIL || number != 1) {
+            return false;
+        }
         rr_voice_bits(voice, device->u.packing.bytes, device->u.packing.length);
         return true;
     }
-    switch (kind_of(reply->word, number)) {
+    const RR_FLASH char *kind = rr_names_at(kinds, reply->word);
+    for (uint8_t left = number; left != 0 && kind[1] != '\0'; left--) {
+        kind++;
+    }
+    uint32_t value = reply->value[number];
+    switch (*kind) {
     case 'u':
-        rr_voice_u32(voice, reply->value[number]);
+        rr_voice_u32(voice, value);
         return true;
     case 'i':
-        rr_voice_i32(voice, (int32_t)reply->value[number]);
+        rr_voice_i32(voice, (int32_t)value);
         return true;
     case 'S':
-        rr_voice_word(voice, rr_state_word((uint8_t)reply->value[number]));
+        rr_notice_say_state(voice, (uint8_t)value);
         return true;
     case 'T':
-        rr_voice_word(voice, rr_trip_word((uint8_t)reply->value[number]));
+        rr_notice_say_trip(voice, (uint8_t)value);
         return true;
     default:
         return false;
@@ -159,21 +166,21 @@ static bool ok_field(struct rr_device *device, const struct rr_reply *reply, uin
 bool rr_reply_field(struct rr_device *device, uint8_t field)
 {
     const struct rr_reply *reply = &device->memory.reply;
-    if (common_field(&device->voice, field, reply->tag, reply->reason, reply->tick)) {
+    if (common_field(&device->voice, field, &reply->verdict)) {
         return true;
     }
-    return reply->reason == RR_REASON_COUNT && ok_field(device, reply, (uint8_t)(field - 3u));
+    return reply->verdict.reason == RR_REASON_COUNT && ok_field(device, reply, (uint8_t)(field - 3u));
 }
 
 bool rr_reply_aside_field(struct rr_device *device, uint8_t field)
 {
     const struct rr_aside *aside = &device->aside;
-    if (common_field(&device->voice, field, aside->tag, aside->reason, aside->tick)) {
+    if (common_field(&device->voice, field, &aside->verdict)) {
         return true;
     }
-    if (aside->reason != RR_REASON_COUNT || field != 3) {
+    if (aside->verdict.reason != RR_REASON_COUNT || field != 3) {
         return false;
     }
-    rr_voice_word(&device->voice, rr_state_word(aside->state));
+    rr_notice_say_state(&device->voice, aside->state);
     return true;
 }

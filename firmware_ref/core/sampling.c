@@ -3,11 +3,6 @@
 
 #include <string.h>
 
-#define STATE_BIT  18u
-#define SUPPLY_BIT 16u
-#define TEMPERATURE_BIT 17u
-#define SERVO_BIT  12u
-
 static bool is_braking(const struct rr_device *device)
 {
     bool braking = false;
@@ -36,54 +31,56 @@ uint16_t rr_sampling_state_bits(const struct rr_device *device)
 }
 _Static_assert(RR_BITS_BRAKING_LOW < 8 && RR_BITS_TRIP_LOW == 8, "the trip has the upper byte");
 
+/* The channels that this board has. */
+#define HAS(capability, bits) ((RR_CAPS & RR_CAP_##capability) != 0 ? (uint32_t)(bits) : 0ul)
+#define AN_AXIS (1ul << RR_CHANNEL_DUTY | HAS(ENCODER, 1ul << RR_CHANNEL_COUNTS) | HAS(CURRENT, 1ul << RR_CHANNEL_CURRENT_MA))
+#define ALL_AXES (AN_AXIS | (RR_AXES > 1 ? AN_AXIS << 3 : 0ul) | (RR_AXES > 2 ? AN_AXIS << 6 : 0ul) | (RR_AXES > 3 ? AN_AXIS << 9 : 0ul))
+#define FITTED (ALL_AXES | ((1ul << RR_SERVOS) - 1ul) << RR_CHANNEL_PULSE_US | HAS(SUPPLY, 1ul << RR_CHANNEL_SUPPLY_MV) | \
+                HAS(TEMPERATURE, 1ul << RR_CHANNEL_TEMPERATURE_DC) | 1ul << RR_CHANNEL_STATE)
+
 bool rr_sampling_mask_fits(uint32_t mask)
 {
-    uint32_t fitted = (((uint32_t)1 << RR_SERVOS) - 1u) << SERVO_BIT | (uint32_t)1 << STATE_BIT;
-    fitted |= (RR_CAPS & RR_CAP_SUPPLY) != 0 ? (uint32_t)1 << SUPPLY_BIT : 0u;
-    fitted |= (RR_CAPS & RR_CAP_TEMPERATURE) != 0 ? (uint32_t)1 << TEMPERATURE_BIT : 0u;
-    for (uint8_t i = 0; i < RR_AXES; i++) {
-        fitted |= (uint32_t)1 << (3 * i);
-        fitted |= (RR_CAPS & RR_CAP_ENCODER) != 0 ? (uint32_t)2 << (3 * i) : 0u;
-        fitted |= (RR_CAPS & RR_CAP_CURRENT) != 0 ? (uint32_t)4 << (3 * i) : 0u;
-    }
-    return (mask & ~fitted) == 0;
+    return (mask & ~(uint32_t)FITTED) == 0;
 }
 
-/* The values of the channels in the mask, in order of their bits; returns how many. */
-static uint8_t gather(const struct rr_device *device, uint32_t mask, int32_t *values)
+int32_t rr_sampling_channel(const struct rr_device *device, uint8_t bit)
 {
-    int32_t *next = values;
-    uint16_t bits = (uint16_t)mask; /* axes and servos; the others lie above */
-    for (uint8_t i = 0; i < RR_AXES; i++) {
-        if ((bits & 1u) != 0) {
-            *next++ = device->axis[i].chain.duty;
-        }
-        if ((bits & 2u) != 0) {
-            *next++ = device->inputs.counts[i];
-        }
-        if ((bits & 4u) != 0) {
-            *next++ = device->inputs.current_ma[i];
-        }
-        bits = (uint16_t)(bits >> 3);
+    uint8_t i = 0;
+    switch (bit) {
+    case RR_CHANNEL_SUPPLY_MV:
+        return device->inputs.supply_mv;
+    case RR_CHANNEL_TEMPERATURE_DC:
+        return device->inputs.temperature_dc;
+    case RR_CHANNEL_STATE:
+        return rr_sampling_state_bits(device);
+    default:
+        break;
     }
 #if RR_SERVOS > 0
-    bits = (uint16_t)mask >> SERVO_BIT;
-    for (uint8_t i = 0; i < RR_SERVOS; i++) {
-        if ((bits >> i & 1u) != 0) {
-            *next++ = rr_servo_us(device->servo[i].pulse_ns);
-        }
+    if (bit >= RR_CHANNEL_PULSE_US) {
+        return rr_servo_us(device->servo[bit - RR_CHANNEL_PULSE_US].pulse_ns);
     }
 #endif
-    if ((mask & (uint32_t)1 << SUPPLY_BIT) != 0) {
-        *next++ = device->inputs.supply_mv;
+    while (bit >= RR_AXIS_CHANNELS) {
+        bit = (uint8_t)(bit - RR_AXIS_CHANNELS);
+        i++;
     }
-    if ((mask & (uint32_t)1 << TEMPERATURE_BIT) != 0) {
-        *next++ = device->inputs.temperature_dc;
+    if (bit == RR_CHANNEL_DUTY) {
+        return device->axis[RR_AXIS(i)].chain.duty;
     }
-    if ((mask & (uint32_t)1 << STATE_BIT) != 0) {
-        *next++ = rr_sampling_state_bits(device);
+    return bit == RR_CHANNEL_COUNTS ? device->inputs.counts[RR_AXIS(i)] : device->inputs.current_ma[RR_AXIS(i)];
+}
+
+/* The values of the channels that are logged, in order of their bits. */
+static void gather(struct rr_device *device)
+{
+    struct rr_logging *logging = &device->logging;
+    const struct rr_channel *channel = logging->channel;
+    int32_t *value = logging->sample;
+    for (uint8_t left = logging->block.channels; left != 0; left--) {
+        *value++ = rr_sampling_channel(device, channel->bit);
+        channel++;
     }
-    return (uint8_t)(next - values);
 }
 
 static uint8_t after(uint8_t place)
@@ -98,7 +95,7 @@ static void post(struct rr_device *device, uint8_t length, uint8_t samples)
     struct rr_parcel *parcel = &logging->parcel[logging->filling];
     parcel->length = length;
     parcel->number = logging->number++;
-    bool no_room = !RR_SPREAD && device->port->room(device->self) < RR_DEVICE_LINE_MAX;
+    bool no_room = !RR_SPREAD && RR_PORT(device)->room(RR_SELF(device)) < RR_DEVICE_LINE_MAX;
     if (logging->waiting || no_room) {
         logging->dropped_ever += samples;
     } else {
@@ -166,7 +163,7 @@ bool rr_sampling_step(struct rr_device *device)
         post_plain(device, tick);
     } else {
         put_packed(device, tick);
-        logging->flush_due = (logging->flush_due && logging->block.first_tick != tick) ||
+        logging->flush_due = (logging->flush_due && logging->block.samples != 1) ||
                              logging->block.samples == RR_BLOCK_SAMPLES_MAX;
     }
     logging->taken = false;
@@ -200,17 +197,17 @@ void rr_sampling_tick(struct rr_device *device)
     if (logging->period == 0) {
         return;
     }
-    if (device->tick == logging->next_tick) {
+    if ((uint16_t)device->tick == (uint16_t)logging->next_tick) { /* no period takes more than 16 bits */
         while (rr_sampling_step(device)) { /* the last one, where there was no time for it */
         }
-        (void)gather(device, logging->mask, logging->sample);
+        gather(device);
         logging->taken = true;
         logging->next_tick += logging->period;
         logging->made++;
         logging->made_ever++;
     }
     const struct rr_block *block = &logging->block;
-    logging->flush_due = block->samples != 0 && device->tick - block->first_tick >= RR_FLUSH_TICKS;
+    logging->flush_due = block->samples != 0 && (uint16_t)(device->tick - block->first_tick) >= RR_FLUSH_TICKS;
     while (!RR_SPREAD && rr_sampling_step(device)) {
     }
 }
@@ -231,13 +228,14 @@ bool rr_sampling_again(struct rr_device *device, uint8_t number)
 /* Field `number` of a plain line's values: the bit it stands for is found by counting. */
 static bool plain_value(struct rr_device *device, const struct rr_parcel *parcel, uint8_t number)
 {
-    uint32_t mask = parcel->u.plain.mask;
-    uint8_t passed = 0;
-    for (uint8_t bit = 0; mask != 0; bit++, mask >>= 1) {
-        if ((mask & 1u) != 0 && passed++ == number) {
+    uint8_t bit = 0;
+    uint8_t left = number;
+    for (uint32_t mask = parcel->u.plain.mask; mask != 0; mask >>= 1) {
+        if ((mask & 1u) != 0 && left-- == 0) {
             rr_voice_i32(&device->voice, rr_block_held(bit, parcel->u.plain.value[number]));
             return true;
         }
+        bit++;
     }
     return false;
 }

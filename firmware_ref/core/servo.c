@@ -3,7 +3,7 @@
 
 #include "seeded.h"
 
-int32_t rr_servo_held_ns(const struct rr_servo_limits *limits, int32_t pulse_ns)
+RR_SHARED rr_ns rr_servo_held_ns(const struct rr_servo_limits *limits, rr_ns pulse_ns)
 {
     if (pulse_ns < limits->least_ns) {
         return limits->least_ns;
@@ -11,14 +11,14 @@ int32_t rr_servo_held_ns(const struct rr_servo_limits *limits, int32_t pulse_ns)
     return pulse_ns > limits->greatest_ns ? limits->greatest_ns : pulse_ns;
 }
 
-int32_t rr_servo_first_ns(const struct rr_servo_limits *limits)
+rr_ns rr_servo_first_ns(const struct rr_servo_limits *limits)
 {
     return rr_servo_held_ns(limits, limits->home_ns);
 }
 
-uint16_t rr_servo_us(int32_t pulse_ns)
+uint16_t rr_servo_us(rr_ns pulse_ns)
 {
-    uint16_t us = (uint16_t)((uint32_t)pulse_ns >> 10);
+    uint16_t us = (uint16_t)((RR_U24)pulse_ns >> 10);
     us = (uint16_t)(us + (us >> 6) + (us >> 7) + (us >> 11)); /* (1 + 1/64 + 1/128 + 1/2048) / 1024: a little below 1/1000 */
     uint16_t left = (uint16_t)((uint32_t)pulse_ns - (uint32_t)us * 1000u);
     while (left >= 1000u) {
@@ -28,10 +28,10 @@ uint16_t rr_servo_us(int32_t pulse_ns)
     return us;
 }
 
-int32_t rr_servo_step_ns(const struct rr_servo_limits *limits, int32_t pulse_ns, int32_t goal_ns)
+rr_ns rr_servo_step_ns(const struct rr_servo_limits *limits, rr_ns pulse_ns, rr_ns goal_ns)
 {
-    int32_t goal = RR_SEEDED(SERVO_PAST_ITS_END, goal_ns, rr_servo_held_ns(limits, goal_ns));
-    int32_t pulse = rr_servo_held_ns(limits, pulse_ns); /* a limit tightened past the pulse cuts at once, like the ceiling */
+    rr_ns goal = RR_SEEDED(SERVO_PAST_ITS_END, goal_ns, rr_servo_held_ns(limits, goal_ns));
+    rr_ns pulse = rr_servo_held_ns(limits, pulse_ns); /* a limit tightened past the pulse cuts at once, like the ceiling */
     if (goal - pulse > limits->slew_ns) {
         return pulse + limits->slew_ns;
     }

@@ -7,11 +7,13 @@
 #include <stdbool.h>
 #include <stdint.h>
 
+typedef RR_I24 rr_ns; /* a pulse, or a difference of two */
+
 struct rr_servo_limits {
-    int32_t least_ns;
-    int32_t greatest_ns; /* not below least_ns (SPEC LIMIT-2) */
-    int32_t slew_ns;     /* a tick, at least 1 */
-    int32_t home_ns;
+    rr_ns least_ns;
+    rr_ns greatest_ns; /* not below least_ns (SPEC LIMIT-2) */
+    rr_ns slew_ns;     /* a tick, at least 1 */
+    rr_ns home_ns;
 };
 
 /*@ predicate rr_servo_limits_ok(struct rr_servo_limits *l) =
@@ -27,7 +29,7 @@ struct rr_servo_limits {
     ensures S7_inside: limits->least_ns <= \result <= limits->greatest_ns;
     ensures S7_home: \result == rr_held(limits, limits->home_ns);
 */
-int32_t rr_servo_first_ns(const struct rr_servo_limits *limits);
+rr_ns rr_servo_first_ns(const struct rr_servo_limits *limits);
 
 /* The pulse held inside the limits. */
 /*@ requires \valid_read(limits) && rr_servo_limits_ok(limits);
@@ -35,10 +37,10 @@ int32_t rr_servo_first_ns(const struct rr_servo_limits *limits);
     ensures S7_inside: limits->least_ns <= \result <= limits->greatest_ns;
     ensures S7_held: \result == rr_held(limits, pulse_ns);
 */
-int32_t rr_servo_held_ns(const struct rr_servo_limits *limits, int32_t pulse_ns);
+rr_ns rr_servo_held_ns(const struct rr_servo_limits *limits, rr_ns pulse_ns);
 
 /* The whole us of a pulse, below 2^22 ns, without a division: an 8-bit controller has one in each sample. */
-uint16_t rr_servo_us(int32_t pulse_ns);
+uint16_t rr_servo_us(rr_ns pulse_ns);
 
 /* The pulse one tick on from `pulse_ns` (not 0) towards `goal_ns`. */
 /*@ requires \valid_read(limits) && rr_servo_limits_ok(limits);
@@ -48,6 +50,6 @@ uint16_t rr_servo_us(int32_t pulse_ns);
     ensures S7_arrives: -limits->slew_ns <= rr_held(limits, goal_ns) - rr_held(limits, pulse_ns) <= limits->slew_ns ==>
                         \result == rr_held(limits, goal_ns);
 */
-int32_t rr_servo_step_ns(const struct rr_servo_limits *limits, int32_t pulse_ns, int32_t goal_ns);
+rr_ns rr_servo_step_ns(const struct rr_servo_limits *limits, rr_ns pulse_ns, rr_ns goal_ns);
 
 #endif

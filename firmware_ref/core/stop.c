@@ -16,7 +16,7 @@ static void end_orders(struct rr_device *device)
 
 void rr_stop_off(struct rr_device *device)
 {
-    device->port->off(device->self);
+    RR_PORT(device)->off(RR_SELF(device));
     end_orders(device);
     for (uint8_t i = 0; i < RR_AXES; i++) {
         device->axis[i].chain.duty = 0;

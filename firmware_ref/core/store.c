@@ -3,6 +3,8 @@
 
 #include "check.h"
 
+#include <string.h>
+
 #define CHECK      4u
 #define GENERATION 6u
 #define ERASED     0xFFu /* a generation that is never given */
@@ -35,34 +37,38 @@ static bool is_whole(const uint8_t *record, uint8_t slot)
 enum newer { FIRST, SECOND, NEITHER, BUSY };
 
 /* Which of the slot's two records is the newer whole one; `record` holds it. BUSY where they cannot be read now. */
-static uint8_t newer(const RR_FLASH struct rr_port *port, void *self, uint8_t slot, uint8_t *record)
+static uint8_t newer(const struct rr_port *port, void *self, uint8_t slot, uint8_t *record)
 {
+    (void)port; /* where RR_ONLY_PORT names it */
+    (void)self;
     uint8_t other[RR_RECORD];
-    if (!port->load(self, place_of(slot, 0), record, RR_RECORD) ||
-        !port->load(self, place_of(slot, 1), other, RR_RECORD)) {
+    if (!RR_THE_PORT(port)->load(self, place_of(slot, 0), record, RR_RECORD) ||
+        !RR_THE_PORT(port)->load(self, place_of(slot, 1), other, RR_RECORD)) {
         return BUSY;
     }
     bool first = is_whole(record, slot);
     if (is_whole(other, slot) && (!first || other[GENERATION] == next_generation(record[GENERATION]))) {
-        for (uint8_t i = 0; i < RR_RECORD; i++) {
-            record[i] = other[i];
-        }
+        memcpy(record, other, RR_RECORD);
         return SECOND;
     }
     return first ? FIRST : NEITHER;
 }
 
-bool rr_store_read(const RR_FLASH struct rr_port *port, void *self, uint8_t slot, int32_t *value)
+bool rr_store_read(const struct rr_port *port, void *self, uint8_t slot, int32_t *value)
 {
     uint8_t record[RR_RECORD];
     if (newer(port, self, slot, record) >= NEITHER) {
         return false;
     }
-    *value = (int32_t)((uint32_t)record[0] << 24 | (uint32_t)record[1] << 16 | (uint32_t)record[2] << 8 | record[3]);
+    uint32_t read = 0;
+    for (uint8_t i = 0; i < CHECK; i++) {
+        read = read << 8 | record[i];
+    }
+    *value = (int32_t)read;
     return true;
 }
 
-bool rr_store_write(const RR_FLASH struct rr_port *port, void *self, uint8_t slot, int32_t value)
+bool rr_store_write(const struct rr_port *port, void *self, uint8_t slot, int32_t value)
 {
     uint8_t record[RR_RECORD];
     uint8_t copy = newer(port, self, slot, record);
@@ -71,12 +77,13 @@ bool rr_store_write(const RR_FLASH struct rr_port *port, void *self, uint8_t slo
     }
     uint16_t place = place_of(slot, copy == FIRST ? 1 : 0);
     record[GENERATION] = copy == NEITHER ? 0 : next_generation(record[GENERATION]);
-    for (uint8_t i = 0; i < CHECK; i++) {
-        record[i] = (uint8_t)((uint32_t)value >> (24 - 8 * i));
+    uint32_t rest = (uint32_t)value;
+    for (uint8_t i = CHECK; i != 0; rest >>= 8) {
+        record[--i] = (uint8_t)rest;
     }
     uint16_t crc = check_of(record, slot);
     record[CHECK] = (uint8_t)(crc >> 8);
     record[CHECK + 1u] = (uint8_t)crc;
-    return port->store(self, place, record, GENERATION) &&
-           port->store(self, (uint16_t)(place + GENERATION), &record[GENERATION], 1);
+    return RR_THE_PORT(port)->store(self, place, record, GENERATION) &&
+           RR_THE_PORT(port)->store(self, (uint16_t)(place + GENERATION), &record[GENERATION], 1);
 }

@@ -19,9 +19,9 @@
 #define RR_STORE_BYTES (RR_SLOT * (1u + RR_LIMITS))
 
 /* Reads a slot. False where neither record is whole; `value` is then left alone. */
-bool rr_store_read(const RR_FLASH struct rr_port *port, void *self, uint8_t slot, int32_t *value);
+bool rr_store_read(const struct rr_port *port, void *self, uint8_t slot, int32_t *value);
 
 /* Writes a slot. False where the port has no store, or it is busy: then nothing has been written. */
-bool rr_store_write(const RR_FLASH struct rr_port *port, void *self, uint8_t slot, int32_t value);
+bool rr_store_write(const struct rr_port *port, void *self, uint8_t slot, int32_t value);
 
 #endif

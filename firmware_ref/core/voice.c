@@ -145,7 +145,7 @@ char rr_voice_tail(struct rr_voice *voice)
     return digit;
 }
 
-static void begin_field(struct rr_voice *voice, uint8_t form, char lead)
+RR_SHARED static void begin_field(struct rr_voice *voice, uint8_t form, char lead)
 {
     voice->form = form;
     voice->lead = (uint8_t)lead;

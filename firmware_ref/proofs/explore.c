@@ -120,7 +120,7 @@ static void key_of(const struct place *place, struct key *key)
         key->order[i][2] = d->u.orders.order[i].value;
         key->order_kind[i] = d->u.orders.order[i].kind_index;
     }
-    key->silent = armed ? held(d->tick - d->renewed) : 0;
+    key->silent = armed ? held((uint16_t)((uint16_t)d->tick - d->renewed_low)) : 0;
     key->lease = armed ? d->lease_ticks : 0;
     key->stopping_for = d->latch.state == RR_STATE_STOPPING ? held(d->tick - d->latch.stop_begun) : 0;
     key->pulse_ns = d->servo[0].pulse_ns;

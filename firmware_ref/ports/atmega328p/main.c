@@ -113,7 +113,7 @@ static const RR_FLASH char board_name[] = BOARD_NAME;
 static const RR_FLASH char serial_name[] = SERIAL;
 _Static_assert(sizeof serial_name > 1 && sizeof serial_name <= RR_TOKEN_MAX + 1, "SERIAL is a token (SPEC FIELD-4)");
 
-static const RR_FLASH struct rr_port port = {
+const struct rr_port board_port = {
     .read = read_byte,
     .room = room,
     .write = write_bytes,
@@ -142,7 +142,7 @@ int main(void)
     keeping_begin();
     analog_begin();
     sei();
-    rr_device_start(&device, &port, NULL, boot_cause(), fault);
+    rr_device_start(&device, &board_port, NULL, boot_cause(), fault);
     while (!analog_is_ready()) { /* half a millisecond, or the watchdog */
     }
     tick_begin();

@@ -38,7 +38,7 @@ void pulses_begin(void)
 
 void pulses_set(uint8_t servo, uint32_t pulse_ns)
 {
-    uint16_t us = rr_servo_us((int32_t)pulse_ns);
+    uint16_t us = rr_servo_us((rr_ns)pulse_ns);
     bool half = pulse_ns - (uint32_t)us * 1000u >= 500u;
     uint16_t steps = (uint16_t)(2u * us + (half ? 1u : 0u));
     if (steps == set_steps[servo]) {
