@@ -73,6 +73,8 @@ def _spelt(pattern: re.Pattern[str], text: str, wanted: str) -> str:
 
 def read_args(fields: Sequence[Field], texts: Sequence[str]) -> tuple[Value, ...]:
     """The values of a request's arguments; FieldError where their number or a spelling is wrong."""
+    if not fields and not texts:
+        return ()
     least = sum(not field.optional for field in fields)
     if not least <= len(texts) <= len(fields):
         names = " ".join(f"[{field.name}]" if field.optional else field.name for field in fields)

@@ -6,7 +6,9 @@ come, hands it to `receive`, then sends what `due` gives, and sleeps until `due_
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
+from functools import lru_cache
 
 from .check import seal
 from .faults import FieldError, LinkBusy, LinkMisuse, LinkSilent, SampleFault
@@ -16,6 +18,7 @@ from .messages import Answer, Data, Flaw, Garbled, Notice, Request, parse_device
 from .samples import SampleBlock, decode_data
 from .words import DEVICE_LINE_MAX, HOST_LINE_MAX, TAG_URGENT, WORDS
 
+PREPARED_KEPT = 512  # requests: a beat under each tag, and as many others
 AGAIN_WITHIN_LINES = 16  # a line asked for by `again` is taken for a new one after this many others
 
 # A stop goes out from signal handlers and other threads, so its bytes are made beforehand. The LF in front ends a
@@ -104,10 +107,20 @@ class _Outstanding:
     line: bytes
     sent_s: float
     wait_s: float
-    due_s: float
     repeats: int = 0
     hurried: int = 0
     hurry: bool = False
+
+
+@lru_cache(PREPARED_KEPT)
+def _prepared(tag: int, word: str, args: tuple[str, ...]) -> tuple[Request, bytes]:
+    """A request and its line, kept since nearly all are the same few hundred beats; as `HostLink.ask` raises."""
+    request = Request.of(tag, word, args)
+    request.values()
+    line = seal(request.body.encode("ascii"))
+    if len(line) > HOST_LINE_MAX:
+        raise LinkMisuse(f"a line of {len(line)} bytes is longer than {HOST_LINE_MAX}: {request.body!r}")
+    return request, line
 
 
 class HostLink:
@@ -115,15 +128,28 @@ class HostLink:
 
     A device may still keep the same tag from an earlier host; it then answers from memory, or `no tag`. The answer to a
     host's second request is always fresh.
+
+    `read_data`, where given, is asked first for number and samples of a line that begins as a data line does; what it
+    does not take is read as if it were not there. It must agree with `decode_data`.
+
+    `due_at_s` is when `due` has something to say next; None while nothing is outstanding.
     """
 
-    def __init__(self, first_tag: int, retry: RetryPolicy | None = None) -> None:
+    def __init__(
+        self,
+        first_tag: int,
+        retry: RetryPolicy | None = None,
+        *,
+        read_data: Callable[[bytes], tuple[int, SampleBlock] | None] | None = None,
+    ) -> None:
         if not 0 <= first_tag < TAG_URGENT:
             raise LinkMisuse(f"the first tag {first_tag} is not in 0 to {TAG_URGENT - 1}")
         self._next_tag = first_tag
         self._retry = retry or RetryPolicy()
+        self._read_data = read_data
         self._splitter = LineSplitter(DEVICE_LINE_MAX)
         self._outstanding: _Outstanding | None = None
+        self.due_at_s: float | None = None
         self._next_notice: int | None = None
         self._next_data: int | None = None
         self._again: int | None = None
@@ -134,11 +160,6 @@ class HostLink:
         """The request that has no answer yet."""
         return self._outstanding.request if self._outstanding else None
 
-    @property
-    def due_at_s(self) -> float | None:
-        """When `due` has something to say next; None while nothing is outstanding."""
-        return self._outstanding.due_s if self._outstanding else None
-
     def ask(self, word: str, *args: object, now_s: float) -> bytes:
         """The line of a new request, which is outstanding from now on.
 
@@ -148,16 +169,13 @@ class HostLink:
             raise LinkBusy(f"`{self._outstanding.request.body}` has no answer yet")
         if word not in WORDS:
             raise FieldError(word, wanted="a word of the protocol")
-        request = Request.of(self._next_tag, word, tuple(map(print_field, args)))
-        values = request.values()
-        line = seal(request.body.encode("ascii"))
-        if len(line) > HOST_LINE_MAX:
-            raise LinkMisuse(f"a line of {len(line)} bytes is longer than {HOST_LINE_MAX}: {request.body!r}")
+        request, line = _prepared(self._next_tag, word, tuple(map(print_field, args)))
         self._next_tag = (self._next_tag + 1) % TAG_URGENT
         wait_s = self._retry.first_s
-        self._outstanding = _Outstanding(request, line, now_s, wait_s, now_s + wait_s)
+        self.due_at_s = now_s + wait_s
+        self._outstanding = _Outstanding(request, line, now_s, wait_s)
         if word == "again":
-            self._again = int(values[0])
+            self._again = int(request.args[0])
             self._again_lines_left = AGAIN_WITHIN_LINES
         return line
 
@@ -173,7 +191,7 @@ class HostLink:
         out is not known. Call it after `receive`: an answer may have come while the host slept.
         """
         waiting = self._outstanding
-        if waiting is None or now_s < waiting.due_s:
+        if waiting is None or self.due_at_s is None or now_s < self.due_at_s:
             return None
         if waiting.hurry:
             waiting.hurry = False
@@ -185,7 +203,7 @@ class HostLink:
             request = self.abandon()
             sendings = waiting.repeats + waiting.hurried
             raise LinkSilent(tag=request.tag, word=request.word, sent_s=waiting.sent_s, repeats=sendings)
-        waiting.due_s = now_s + waiting.wait_s
+        self.due_at_s = now_s + waiting.wait_s
         return waiting.line
 
     def abandon(self) -> Request:
@@ -193,7 +211,7 @@ class HostLink:
         if self._outstanding is None:
             raise LinkMisuse("no request is outstanding")
         request = self._outstanding.request
-        self._outstanding = None
+        self._outstanding = self.due_at_s = None
         return request
 
     def receive(self, data: bytes, now_s: float) -> list[HostEvent]:
@@ -203,12 +221,16 @@ class HostLink:
     def _judge(self, line: bytes | Overlong, now_s: float) -> HostEvent:
         if isinstance(line, Overlong):
             return Dropped(b"", Flaw.OVERLONG)
+        if self._read_data is not None and line[:1] == b"D":
+            found = self._read_data(line)
+            if found is not None:
+                return self._placed(*found)
         message = parse_device_line(line)
         match message:
-            case Data():
-                return self._sampled(message, line)
             case Answer():
                 return self._answered(message, line, now_s)
+            case Data():
+                return self._sampled(message, line)
             case Notice():
                 return self._noticed(message, now_s)
             case Garbled():
@@ -220,7 +242,7 @@ class HostLink:
         waiting = self._outstanding
         if waiting is None or waiting.request.tag != answer.tag:
             return Dropped(line, "stale answer")
-        self._outstanding = None
+        self._outstanding = self.due_at_s = None
         if not answer.ok and waiting.request.word == "again":
             self._again = None
         return Answered(waiting.request, answer, waiting.sent_s, now_s, waiting.repeats + waiting.hurried)
@@ -233,7 +255,7 @@ class HostLink:
         waiting = self._outstanding
         if notice.word == "garbled" and waiting and waiting.hurried < self._retry.hurried_max:
             waiting.hurry = True
-            waiting.due_s = now_s
+            self.due_at_s = now_s
         return Noticed(notice, missed)
 
     def _sampled(self, data: Data, line: bytes) -> HostEvent:
@@ -242,12 +264,16 @@ class HostLink:
             block = decode_data(data.body)
         except SampleFault as fault:
             return Dropped(line, fault.why)
-        if self._is_again(data.number):
+        return self._placed(data.number, block)
+
+    def _placed(self, number: int, block: SampleBlock) -> Sampled:
+        """The samples of a data line by its number."""
+        if self._is_again(number):
             self._again = None
-            return Sampled(block, data.number, 0, again=True)
-        missed = 0 if self._next_data is None else (data.number - self._next_data) % 256
-        self._next_data = (data.number + 1) % 256
-        return Sampled(block, data.number, missed)
+            return Sampled(block, number, 0, again=True)
+        missed = 0 if self._next_data is None else (number - self._next_data) % 256
+        self._next_data = (number + 1) % 256
+        return Sampled(block, number, missed)
 
     def _is_again(self, number: int) -> bool:
         """Whether a data line of this number is the old one asked for: never where its number is the next one due."""

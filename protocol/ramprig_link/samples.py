@@ -13,9 +13,10 @@ from __future__ import annotations
 
 import re
 from binascii import a2b_base64, b2a_base64
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from functools import lru_cache
+from typing import Any, Protocol
 
 from .faults import FieldError, SampleFault
 from .fields import read_i32, read_u32
@@ -61,11 +62,21 @@ class ChannelRef:
     order: int
 
 
+class Columns(Protocol):
+    """Lists of integers, or what is read like them, such as an array of two dimensions."""
+
+    def __len__(self) -> int: ...
+
+    def __iter__(self) -> Iterator[Any]: ...
+
+    def __getitem__(self, place: int, /) -> Any: ...
+
+
 @dataclass(frozen=True, slots=True)
 class SampleBlock:
     """Samples one period apart: sample i was taken at tick `first_tick` + i `period`, modulo 2^32.
 
-    `columns` has one list of `rows` integers for each channel of `mask`, in order of the bits; the units are those of
+    `columns` has `rows` integers for each channel of `mask`, in order of the bits; the units are those of
     protocol.toml. `period` is 1 to 65535 ticks, `rows` 1 to 255.
     """
 
@@ -73,7 +84,7 @@ class SampleBlock:
     period: int
     mask: int
     rows: int
-    columns: list[list[int]]
+    columns: Columns
 
 
 def _all_channels() -> tuple[ChannelRef, ...]:

@@ -15,7 +15,7 @@ from ramprig.session.ticks import TickCounter
 from ramprig_link.check import digest
 from ramprig_link.faults import SampleFault
 from ramprig_link.messages import Answer, Data, FromDevice, Notice, Request, parse_device_line
-from ramprig_link.samples import channels_of, decode_data
+from ramprig_link.samples import Columns, channels_of, decode_data
 from ramprig_link.words import LIMITS, STATE_BITS, TRIPS, State, Tighter, Trip
 
 Key = tuple[str, int]
@@ -52,7 +52,7 @@ class Row:
     bits: int = 0
 
 
-def rows_of(block_ticks: int, period: int, mask: int, columns: list[list[int]]) -> Iterator[Row]:
+def rows_of(block_ticks: int, period: int, mask: int, columns: Columns) -> Iterator[Row]:
     """The rows of a block whose first sample was taken at the unwrapped tick `block_ticks`."""
     refs = channels_of(mask)
     for i in range(len(columns[0])):

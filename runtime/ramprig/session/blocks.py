@@ -84,8 +84,8 @@ class Block:
 
 def block_from(sample: SampleBlock, first_tick: int) -> Block:
     """The block of a decoded data line whose first sample was taken at the unwrapped tick `first_tick`."""
-    ticks = np.arange(sample.rows, dtype=np.int64) * sample.period + first_tick
-    values = np.array(sample.columns, dtype=np.int64).T.astype(np.int32)
+    ticks = np.arange(first_tick, first_tick + sample.rows * sample.period, sample.period, dtype=np.int64)
+    values = np.asarray(sample.columns, dtype=np.int32).T
     ticks.setflags(write=False)
     values.setflags(write=False)
     return Block(ticks, values, Layout.of(sample.mask, sample.period))
