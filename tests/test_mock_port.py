@@ -9,7 +9,10 @@ import pytest
 from ramprig.errors import LinkLost, UsageError
 from ramprig.mock import MockDevice, MockPort, MockSetup, open_mock
 from ramprig.mock.cable import Cable
+from ramprig.mock.core import SimulatedDevice, open_core, why_not
+from ramprig.mock.port import DevicePort
 from ramprig.mock.url import parse_mock
+from ramprig.port.base import PatientPort
 from ramprig.port.clock import VirtualClock
 from ramprig.port.open import open_port
 from ramprig_link.check import seal
@@ -140,6 +143,92 @@ def test_a_drifting_clock_gives_fewer_ticks() -> None:
     port = virtual("clock_drift=1000", baud=0)
     read_all(port, 100.0)
     assert port.device.ticks == pytest.approx(100_000 * (1 - 0.001), abs=2)
+
+
+@pytest.fixture(params=["mock", "core"])
+def logging(request: pytest.FixtureRequest) -> DevicePort[MockDevice] | DevicePort[SimulatedDevice]:
+    """A port in virtual time whose board logs, in the Python mock and in C."""
+    if request.param == "core" and why_not() is not None:
+        pytest.skip(why_not() or "")
+    port = open_core("core:?pace=virtual") if request.param == "core" else open_mock("mock:?pace=virtual")
+    port.read_until(0.1)
+    port.write(seal(b"01 log 10 7 packed"))
+    assert port.read_until(0.2).startswith(b"01 ok ")
+    assert isinstance(port, PatientPort)
+    return port
+
+
+def lines_of(data: bytes) -> list[str]:
+    """The kinds of whole lines."""
+    assert data == b"" or data.endswith(b"\n")
+    return [chr(line[0]) for line in data.splitlines()]
+
+
+LoggingPort = DevicePort[MockDevice] | DevicePort[SimulatedDevice]
+
+
+def test_a_patient_reader_gets_samples_with_what_is_said_next_or_at_the_end(logging: LoggingPort) -> None:
+    port, start_s = logging, logging.clock.now()
+    assert lines_of(port.read_until(start_s + 0.35)) == ["D"] * 3
+    assert port.clock.now() == pytest.approx(start_s + 0.35)
+    port.read_until(start_s + 0.46)
+    port.write(seal(b"02 beat"))
+    assert lines_of(port.read_until(start_s + 0.5)) == ["0"]
+    assert port.clock.now() < start_s + 0.47
+    port.read_until(start_s + 0.79)
+    port.write(seal(b"03 beat"))
+    port.write(seal(b"04 state") * 9)
+    assert lines_of(port.read_until(start_s + 0.9))[0] == "0"
+
+
+def test_patience_loses_and_reorders_nothing(logging: LoggingPort) -> None:
+    """The bytes are those that an eager reader of the same board gets."""
+    port = logging
+    eager = (
+        open_core("core:?pace=virtual") if isinstance(port.device, SimulatedDevice) else open_mock("mock:?pace=virtual")
+    )
+    eager.read(0.1)
+    eager.write(seal(b"01 log 10 7 packed"))
+    assert eager.read(0.1).startswith(b"01 ok ")
+    patient, impatient = b"", b""
+    for n in range(2, 12):
+        for reader in (port, eager):
+            reader.write(seal(f"{n:02x} state".encode("ascii")))
+        end_s = max(port.clock.now(), eager.clock.now()) + 0.0731 * n
+        while port.clock.now() < end_s:
+            patient += port.read_until(end_s)
+        while eager.clock.now() < end_s:
+            impatient += eager.read(max(1e-6, end_s - eager.clock.now()))
+    assert patient == impatient
+    assert patient.count(b"\nD") > 30
+
+
+def test_patience_has_a_bound(logging: LoggingPort) -> None:
+    data = logging.read_until(logging.clock.now() + 3600.0)
+    assert set(lines_of(data)) == {"D"}
+    assert 4096 <= len(data) <= 8192
+
+
+def test_time_is_not_before_the_end_of_a_wait_for_a_time() -> None:
+    port = virtual()
+    port.read(0.1)
+    until_s = port.clock.now()
+    for _ in range(500):
+        until_s += 0.0503
+        port.read_until(until_s)
+        assert 0.0 <= port.clock.now() - until_s <= 1.1e-6
+    now_s = port.clock.now()
+    assert port.read_until(now_s - 1.0) == b""
+    assert port.clock.now() == now_s
+
+
+def test_a_spoilt_cable_is_not_waited_for() -> None:
+    port = virtual("bit_errors=1e-9")
+    port.write(seal(b"01 log 10 7 packed"))
+    port.read_until(51.0)
+    port.read_until(51.0)
+    assert lines_of(port.read_until(60.0)) == ["D"]
+    assert port.clock.now() < 51.0
 
 
 class HandClock:

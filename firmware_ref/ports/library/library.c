@@ -49,15 +49,23 @@ int library_start(struct simulated *s, uint64_t seed, uint32_t baud, uint32_t bo
     return simulated_start(s, baud);
 }
 
-uint32_t library_run(struct simulated *s, uint32_t ticks)
+/* Where the bytes lie that the last run has sent. */
+const char *library_sent(struct simulated *s)
 {
-    return simulated_run(s, ticks);
+    return s->wire.sent;
 }
 
-/* What the last `library_run` sent. */
-const char *library_take(struct simulated *s, uint32_t *length)
+/* How many ticks have passed, and above them, from bit 32 on, how many bytes were sent: one call does for a host's turn. */
+static uint64_t library_passed(const struct simulated *s, uint32_t ticks)
 {
-    return simulated_take(s, length);
+    return (uint64_t)s->wire.sent_count << 32 | ticks;
+}
+
+uint64_t library_run(struct simulated *s, uint32_t ticks, int patient)
+{
+    uint32_t taken;
+    (void)simulated_take(s, &taken);
+    return library_passed(s, simulated_run(s, ticks, patient != 0));
 }
 
 uint64_t library_ticks(const struct simulated *s)
@@ -218,17 +226,16 @@ static void watch_tick(struct library_watch *watch, const struct simulated *s)
 }
 
 /* As `library_run`, with every tick watched; runs no further than the watch's table has room. */
-uint32_t library_run_watched(struct simulated *s, uint32_t ticks, struct library_watch *watch)
+uint64_t library_run_watched(struct simulated *s, uint32_t ticks, int patient, struct library_watch *watch)
 {
+    uint32_t taken;
     uint32_t passed = 0;
-    while (passed < ticks && watch->rows < watch->capacity) {
-        passed += simulated_run(s, 1);
+    (void)simulated_take(s, &taken);
+    while (passed < ticks && watch->rows < watch->capacity && simulated_run(s, 1, patient != 0) != 0) {
+        passed++;
         watch_tick(watch, s);
-        if (s->wire.sent_count != 0) {
-            break;
-        }
     }
-    return passed;
+    return library_passed(s, passed);
 }
 
 /* The winding of an axis at a temperature, as after hours of running. */

@@ -37,7 +37,7 @@ static uint32_t carry_out(struct lockstep *lockstep, struct simulated *s, uint8_
     uint64_t due = until_us / RR_TICK_US;
     while (length == 0 && s->ticks < due) {
         uint64_t left = due - s->ticks;
-        (void)simulated_run(s, left > UINT32_MAX ? UINT32_MAX : (uint32_t)left);
+        (void)simulated_run(s, left > UINT32_MAX ? UINT32_MAX : (uint32_t)left, false);
         sent = simulated_take(s, &length);
     }
     uint64_t board_us = s->ticks * RR_TICK_US;

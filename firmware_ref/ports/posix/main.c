@@ -175,7 +175,7 @@ static void catch_up(struct simulated *s, struct endpoint *endpoint, uint64_t *s
     }
     while (s->ticks < passed_us / RR_TICK_US) {
         uint32_t length;
-        (void)simulated_run(s, (uint32_t)(passed_us / RR_TICK_US - s->ticks));
+        (void)simulated_run(s, (uint32_t)(passed_us / RR_TICK_US - s->ticks), false);
         const char *sent = simulated_take(s, &length);
         endpoint_write(endpoint, sent, length, false);
     }

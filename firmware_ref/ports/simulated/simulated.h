@@ -13,6 +13,7 @@
 #define SIMULATED_WIRE_BYTES     65536u /* most bytes on their way from the host; more are lost, as on a full cable */
 #define SIMULATED_RECEIVE_BYTES  1024u  /* the board's receive ring; what does not fit counts as overrun */
 #define SIMULATED_TRANSMIT_BYTES 2048u  /* the board's transmit ring */
+#define SIMULATED_SENT_BYTES     8192u  /* most that waits for the host to take it */
 
 struct simulated_wire {
     uint32_t baud; /* 0 = takes no time */
@@ -26,8 +27,9 @@ struct simulated_wire {
     uint16_t to_host_count;
     uint16_t under_way;  /* length of the line whose bits are leaving, 0 = none */
     uint64_t free_at;    /* when its last bit has left */
-    char sent[SIMULATED_TRANSMIT_BYTES]; /* whole lines that have left, for the host to take */
+    char sent[SIMULATED_SENT_BYTES]; /* whole lines that have left, for the host to take */
     uint16_t sent_count;
+    bool spoke; /* not all of them are data lines */
 };
 
 struct simulated {
@@ -74,8 +76,9 @@ void simulated_preset(struct simulated *s, uint8_t number, uint8_t index, int32_
 /* Makes the plant and starts the board. False where the plant does not fit the board or is beyond simulation. */
 bool simulated_start(struct simulated *s, uint32_t baud);
 
-/* Lets up to `ticks` ticks pass, fewer where the board has sent something; returns how many have passed. */
-uint32_t simulated_run(struct simulated *s, uint32_t ticks);
+/* Lets up to `ticks` ticks pass, fewer where something sent has not been taken; returns how many have passed. With `patient`
+ * data lines alone do not end it: they wait for the next other line, while there is room. */
+uint32_t simulated_run(struct simulated *s, uint32_t ticks, bool patient);
 
 /* Resets the board: outputs off at once, what it was sending is lost, and after `boot_ticks` it starts anew. */
 void simulated_reset(struct simulated *s, uint8_t cause);

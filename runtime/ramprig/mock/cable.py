@@ -50,8 +50,11 @@ class Device(Protocol):
         """Let one tick pass."""
         ...
 
-    def advance(self, ticks: int) -> int:
-        """Let up to `ticks` ticks pass, fewer where the board sends something; returns how many have passed."""
+    def advance(self, ticks: int, *, patient: bool = False) -> int:
+        """Let up to `ticks` ticks pass, fewer where the board sends something; returns how many have passed.
+
+        With `patient` it need not end for data lines alone.
+        """
         ...
 
     def transmit(self) -> bytes:
@@ -73,7 +76,7 @@ class Cable:
         self._to_device = Corruptor(Rates(), seed=f"{seed}/to device")
         self._to_host = Corruptor(Rates(), seed=f"{seed}/to host")
         self._rates = Rates()
-        self._looked_at = self._rated_at = -1
+        self._looked_at = -1
         self._look()
         self._held: list[tuple[int, bytes]] = []
         self._held_bytes = 0
@@ -93,12 +96,18 @@ class Cable:
         return self._tick_ns
 
     def _look(self) -> None:
-        """Take over the faults of the cable but those of single bytes; done again only when a fault was switched."""
+        """Take over the faults of the cable; done again only when a fault was switched."""
         faults = self.device.faults
         self._looked_at = faults.changes
         self._is_out = bool(faults.get("unplug"))
         self._tick_ns = round(self.device.board.tick_us * NS_PER_US * (1.0 + faults.get("clock_drift") * 1e-6))
         self._grid_ns = round(faults.get("delivery_grid") * NS_PER_MS)
+        rates = Rates(flip=faults.get("bit_errors"), drop=faults.get("dropped_bytes"))
+        if rates != self._rates:
+            self._rates = rates
+            self._to_device.set_rates(rates)
+            self._to_host.set_rates(rates)
+        self._is_sound = not (self._is_out or self._grid_ns or rates.flip or rates.drop)
 
     def opened(self) -> None:
         """A host has opened the port: what it meets there by the faults that are on."""
@@ -112,13 +121,11 @@ class Cable:
     def send(self, data: bytes) -> None:
         """Put bytes from the host on the wire now."""
         if not self.is_out:
-            self._renew_rates()
             self.device.receive(self._to_device.apply(data))
 
     def urgent(self, data: bytes) -> None:
         """Take back what has not left the host and send this now."""
         if not self.is_out:
-            self._renew_rates()
             self.device.urgent(self._to_device.apply(data))
 
     def send_break(self) -> None:
@@ -126,11 +133,13 @@ class Cable:
         if not self.is_out:
             self.device.send_break()
 
-    def run(self, until_ns: int) -> bytes:
+    def run(self, until_ns: int, *, patient: bool = False) -> bytes:
         """Let time pass up to `until_ns`, or up to the moment at which bytes reach the host, and return these.
 
-        `now_ns` is then that moment; it does not move where `until_ns` has passed.
+        `now_ns` is then that moment; it does not move where `until_ns` has passed. With `patient`, on a sound cable,
+        data lines wait for the next other line, or for `until_ns`.
         """
+        device = self.device
         while True:
             target_ns = until_ns
             if self._held:
@@ -138,14 +147,19 @@ class Cable:
                 if due:
                     return due
                 target_ns = min(until_ns, self._held[0][0])
-            target_ns = max(self.now_ns, target_ns)
-            tick_ns = self.tick_ns
+            if target_ns < self.now_ns:
+                target_ns = self.now_ns
+            if device.faults.changes != self._looked_at:
+                self._look()
+            tick_ns = self._tick_ns
             ticks = (target_ns - self._device_ns) // tick_ns
             if ticks > 0:
-                self._device_ns += self.device.advance(ticks) * tick_ns
-                output = self.device.transmit()
+                self._device_ns += device.advance(ticks, patient=patient and self._is_sound) * tick_ns
+                output = device.transmit()
                 if output:
                     self.now_ns = max(self.now_ns, self._device_ns)
+                    if self._is_sound and not self._held and device.faults.changes == self._looked_at:
+                        return output
                     self._hold(output)
                     continue
                 if (target_ns - self._device_ns) // tick_ns > 0:
@@ -166,23 +180,11 @@ class Cable:
             if output:
                 self._hold(output)
 
-    def _renew_rates(self) -> None:
-        faults = self.device.faults
-        if faults.changes == self._rated_at:
-            return
-        self._rated_at = faults.changes
-        rates = Rates(flip=faults.get("bit_errors"), drop=faults.get("dropped_bytes"))
-        if rates != self._rates:
-            self._rates = rates
-            self._to_device.set_rates(rates)
-            self._to_host.set_rates(rates)
-
     def _hold(self, output: bytes) -> None:
         """Take what the device has sent, to be handed over now or at the next point of the delivery grid."""
         if self.is_out:
             self._drop_held()
             return
-        self._renew_rates()
         data = self._to_host.apply(output)
         grid_ns = self._grid_ns  # as `is_out` has just seen
         release_ns = -(-self.now_ns // grid_ns) * grid_ns if grid_ns else self.now_ns

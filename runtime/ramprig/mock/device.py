@@ -20,6 +20,8 @@ from .setup import MockSetup
 from .transmit import BITS_PER_BYTE, Transmitter
 
 _HALF = 1 << 31
+PATIENT_BYTES = 6144
+"""A patient host is not kept waiting where so many bytes have gathered."""
 _PLANT_FAULTS = {
     "phases_swapped": PlantFault.PHASES_SWAPPED,
     "leads_swapped": PlantFault.LEADS_SWAPPED,
@@ -119,6 +121,11 @@ class Receiver:
         return data
 
 
+def samples_alone(output: bytes) -> bool:
+    """Whether these lines are data lines, and few enough to wait for the next other one."""
+    return output[:1] == b"D" and len(output) < PATIENT_BYTES and all(line[:1] == b"D" for line in output.splitlines())
+
+
 class MockDevice:
     """A board with motors and servos on it. `ticks` counts from the making; the board's own tick starts at each boot.
 
@@ -179,11 +186,11 @@ class MockDevice:
         """Let one tick pass."""
         self._output += self._run(1)[1]
 
-    def advance(self, ticks: int) -> int:
-        """Let up to `ticks` ticks pass, fewer where the board sends something; returns how many have passed."""
+    def advance(self, ticks: int, *, patient: bool = False) -> int:
+        """As `Device.advance`."""
         done = 0
         while done < ticks and not self._output:
-            passed, self._output = self._run(ticks - done)
+            passed, self._output = self._run(ticks - done, patient=patient)
             done += passed
         return done
 
@@ -194,7 +201,7 @@ class MockDevice:
             self.faults.set(name, amount, axis=axis)
         return min(ticks, self._timed[0][0] - self.ticks) if self._timed else ticks
 
-    def _run(self, ticks: int) -> tuple[int, bytes]:
+    def _run(self, ticks: int, *, patient: bool = False) -> tuple[int, bytes]:
         """Run until output comes, the board or a fault changes, or `ticks` are over; returns ticks and output."""
         if self._timed:
             ticks = self._switch_timed(ticks)
@@ -210,6 +217,7 @@ class MockDevice:
         trace = self.trace
         end = elapsed + ticks
         output = b""
+        heard = False
         while elapsed < end:
             if receiver.waiting:
                 controller.receive(receiver.take(elapsed))
@@ -227,12 +235,15 @@ class MockDevice:
             if trace is not None:
                 trace(elapsed, controller)
             if transmitter.waiting:
-                output = transmitter.take(elapsed)
+                sent = transmitter.take(elapsed)
+                if sent:
+                    output += sent
+                    heard = not (patient and samples_alone(output))
             if supply.supply_mv < brownout_mv or (watching and self._sags(drives)):
                 self.ticks = elapsed
                 self.restart(Cause.BROWNOUT)
                 break
-            if output:
+            if heard:
                 break
         passed = elapsed - (end - ticks)
         self.ticks = elapsed

@@ -16,6 +16,8 @@ Pace = Literal["virtual", "real"]
 
 D = TypeVar("D", bound=Device)
 
+GRAIN_NS = 1000
+"""A wait that ends before its time by a rounding error goes on for so long."""
 WAIT_S = 0.001
 """How long a paced port sleeps between two looks at its device: one tick of most boards."""
 
@@ -50,6 +52,7 @@ class DevicePort(ClosesItself, Generic[D]):
             self._virtual = clock
         self.clock: Clock = SystemClock() if clock is None else clock
         self._start_s = self.clock.now()
+        self._start_ns = round(self._start_s * NS_PER_S)
         self._urgent: list[bytes] = []
         self._early = b""  # what came while the device caught up for a write
         self._closed = threading.Event()
@@ -73,20 +76,34 @@ class DevicePort(ClosesItself, Generic[D]):
     def read(self, timeout_s: float) -> bytes:
         """As `Port.read`, on the port's own clock."""
         self._check()
-        now_ns = self._now_ns()
-        until_ns = now_ns + max(0, round(timeout_s * NS_PER_S))
         if self._virtual is not None:
-            data = self._cable.run(until_ns)
-            late_ns = self._cable.now_ns - now_ns
-            if late_ns > 0:
-                self._virtual.advance(late_ns / NS_PER_S)
-            return data
+            return self._run_to(self._virtual, self._virtual.now_ns + max(0, round(timeout_s * NS_PER_S)), False)
+        until_ns = self._now_ns() + max(0, round(timeout_s * NS_PER_S))
         while True:
             data = self._catch_up()
             if data or self._now_ns() >= until_ns:
                 return data
             self._closed.wait(min(WAIT_S, max(0.0, (until_ns - self._now_ns()) / NS_PER_S)))
             self._check()
+
+    def read_until(self, until_s: float) -> bytes:
+        """As `PatientPort.read_until`."""
+        clock = self._virtual
+        if clock is None:
+            return self.read(until_s - self.clock.now())
+        self._check()
+        now_ns, until_ns = clock.now_ns, round(until_s * NS_PER_S)
+        if until_s > now_ns / NS_PER_S and (until_ns < now_ns + GRAIN_NS or until_ns / NS_PER_S < until_s):
+            until_ns = max(now_ns, until_ns) + GRAIN_NS
+        return self._run_to(clock, max(now_ns, until_ns), True)
+
+    def _run_to(self, clock: VirtualClock, until_ns: int, patient: bool) -> bytes:
+        cable = self._cable
+        data = cable.run(until_ns - self._start_ns, patient=patient)
+        now_ns = cable.now_ns + self._start_ns
+        if now_ns > clock.now_ns:
+            clock.now_ns = now_ns
+        return data
 
     def _catch_up(self) -> bytes:
         """Run the device to the clock's present time, and return all it has sent."""

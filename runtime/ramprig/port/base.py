@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from types import TracebackType
-from typing import Protocol, Self
+from typing import Protocol, Self, runtime_checkable
 
 from ramprig.port.clock import Clock
 
@@ -76,6 +76,17 @@ class Port(Protocol):
     def __exit__(
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None: ...
+
+
+@runtime_checkable
+class PatientPort(Protocol):
+    """A port in virtual time that need not wake its reader for what can wait: nothing is late for it there."""
+
+    def read_until(self, until_s: float) -> bytes:
+        """As `Port.read`, up to this time of the port's clock, which is then not before it; the far end's samples are
+        handed over with what it says next, or at the end.
+        """
+        ...
 
 
 class ClosesItself:

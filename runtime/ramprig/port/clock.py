@@ -37,19 +37,19 @@ class SystemClock:
 class VirtualClock:
     """A clock that stands still until it is advanced; both of its readings move together.
 
-    Time is kept as whole nanoseconds, so that a million small steps add up exactly.
+    Time is kept as whole nanoseconds, `now_ns`, so that a million small steps add up exactly.
     """
 
-    __slots__ = ("_now_ns", "_wall_start_s")
+    __slots__ = ("_wall_start_s", "now_ns")
 
     def __init__(self, *, start_s: float = 0.0, wall_s: float = 0.0) -> None:
         """`wall_s` is the Unix time at the start."""
-        self._now_ns = round(start_s * NS_PER_S)
+        self.now_ns = round(start_s * NS_PER_S)
         self._wall_start_s = wall_s - start_s
 
     def now(self) -> float:
         """Seconds, beginning at `start_s`."""
-        return self._now_ns / NS_PER_S
+        return self.now_ns / NS_PER_S
 
     def wall(self) -> float:
         """Unix seconds: the start's, plus what has been advanced."""
@@ -59,4 +59,4 @@ class VirtualClock:
         """Move on by `duration_s`, rounded to whole nanoseconds; raises ValueError where it is negative."""
         if not duration_s >= 0:
             raise ValueError(f"a clock cannot be advanced by {duration_s} s")
-        self._now_ns += round(duration_s * NS_PER_S)
+        self.now_ns += round(duration_s * NS_PER_S)

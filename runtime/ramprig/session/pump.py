@@ -11,14 +11,21 @@ import threading
 from collections import deque
 from collections.abc import Callable
 from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 from ramprig.errors import Bug, LinkError, LinkLost, StoppedByUser, UsageError
-from ramprig.port.base import Port
+from ramprig.port.base import PatientPort, Port
+from ramprig.port.clock import VirtualClock
 from ramprig_link.faults import FieldError, LinkFault, LinkSilent
 from ramprig_link.host import Answered, HostEvent, HostLink, RetryPolicy
 
+if TYPE_CHECKING:
+    from ramprig.mock.core.dataline import DataReader
+
 TURN_MAX_S = 0.05
 """Longest single read, so that a panic from another thread is seen soon."""
+VIRTUAL_TURN_MAX_S = 1.0
+"""The same in virtual time, where a read takes no time of anybody's."""
 TIME_GRAIN_S = 1e-6
 """No wait is shorter, so that one that is due in a rounding error's time does not spin on a clock of nanoseconds."""
 JOBS_MAX = 32
@@ -36,6 +43,16 @@ class Job:
     word: str
     args: tuple[object, ...]
     then: Callable[[Answered], None]
+
+
+def _data_reader() -> DataReader | None:
+    """The quick reader of data lines; a real line, which moves motors, relies on no C compiler."""
+    from ramprig.mock.core.dataline import data_reader
+
+    return data_reader()
+
+
+BEAT = Job("beat", (), lambda answered: None)
 
 
 class Pump:
@@ -59,7 +76,10 @@ class Pump:
     ) -> None:
         self.port = port
         self.clock = port.clock
-        self.link = HostLink(chance.randrange(TAG_COUNT), retry)
+        in_virtual_time = isinstance(port.clock, VirtualClock)
+        self._read_until = port.read_until if isinstance(port, PatientPort) and in_virtual_time else self._read_for
+        self._turn_max_s = VIRTUAL_TURN_MAX_S if in_virtual_time else TURN_MAX_S
+        self.link = HostLink(chance.randrange(TAG_COUNT), retry, read_data=_data_reader() if in_virtual_time else None)
         self.beat_s: float | None = None
         self.muted = False
         self.panic_category: int | None = None
@@ -102,10 +122,16 @@ class Pump:
 
         Raises LinkLost, and StoppedByUser after a panic until the stop is taken up.
         """
-        while True:
-            self.turn(until_s)
-            if self.clock.now() >= until_s:
-                return
+        self._enter()
+        try:
+            self._turn(until_s)
+            while self.clock.now() < until_s:
+                self._turn(until_s)
+        except LinkLost as error:
+            self.lost = error
+            raise
+        finally:
+            self._inside = False
 
     def request(self, word: str, *args: object) -> Answered:
         """Send a request before all that wait and work until it is answered, with `ok` or `no`.
@@ -120,7 +146,7 @@ class Pump:
         self._jobs.appendleft(job)
         try:
             while not box:
-                self.turn(self.clock.now() + TURN_MAX_S)
+                self.turn(self.clock.now() + self._turn_max_s)
         finally:
             if job in self._jobs:
                 self._jobs.remove(job)
@@ -153,13 +179,7 @@ class Pump:
 
     def turn(self, until_s: float) -> None:
         """One round: send what is due, read once until `until_s` at the longest, hand on what came."""
-        if self._inside:
-            raise Bug("the session was called from inside one of its own callbacks")
-        if threading.get_ident() != self._owner:
-            raise Bug("the session was called from another thread than the one that opened it")
-        if self.lost is not None:
-            raise self.lost
-        self._inside = True
+        self._enter()
         try:
             self._turn(until_s)
         except LinkLost as error:
@@ -168,45 +188,64 @@ class Pump:
         finally:
             self._inside = False
 
+    def _enter(self) -> None:
+        if self._inside:
+            raise Bug("the session was called from inside one of its own callbacks")
+        if threading.get_ident() != self._owner:
+            raise Bug("the session was called from another thread than the one that opened it")
+        if self.lost is not None:
+            raise self.lost
+        self._inside = True
+
     def _turn(self, until_s: float) -> None:
-        now_s = self.clock.now()
-        if self._turned_s is not None:
-            self._late(now_s - self._turned_s)
-        self._check_panic()
-        if not self.muted:
+        """As `turn`; some tens of turns pass in a second of the device's time, so that this is short."""
+        now_s, link = self.clock.now(), self.link
+        turned_s = self._turned_s
+        if turned_s is not None and now_s > turned_s:
+            self._late(now_s - turned_s)
+        if self.panic_category is not None:
+            self._check_panic()
+        if not self.muted and link.due_at_s is None:
             self._send_new(now_s)
-        wait_s = self._wait_until(until_s, now_s) - now_s
-        data = self.port.read(max(wait_s, TIME_GRAIN_S) if wait_s > 0.0 else 0.0)
+        data = self._read_until(self._wait_until(until_s, now_s))
         now_s = self.clock.now()
-        self.since_s, self._turned_s = self._turned_s or now_s, now_s
-        self.bytes_in += len(data)
+        self.since_s, self._turned_s = turned_s or now_s, now_s
         if data:
-            for event in self.link.receive(data, now_s):
+            self.bytes_in += len(data)
+            for event in link.receive(data, now_s):
                 self._take(event, now_s)
-        if not self.muted:
+        due_s = link.due_at_s
+        if due_s is not None and now_s >= due_s and not self.muted:
             self._repeat(now_s)
         self._chores(now_s)
+
+    def _read_for(self, until_s: float) -> bytes:
+        """What comes by `until_s`, on any port."""
+        wait_s = until_s - self.clock.now()
+        return self.port.read(max(wait_s, TIME_GRAIN_S) if wait_s > 0.0 else 0.0)
 
     def _check_panic(self) -> None:
         if self.panic_category is not None and not self.panic_taken:
             raise StoppedByUser(f"a stop of category {self.panic_category} was asked for")
 
     def _wait_until(self, until_s: float, now_s: float) -> float:
-        wait_s = min(until_s, now_s + TURN_MAX_S)
+        latest_s = now_s + self._turn_max_s
+        if latest_s < until_s:
+            until_s = latest_s
         if self.muted:
-            return wait_s
+            return until_s
         due_s = self.link.due_at_s
-        if due_s is not None:
-            return min(wait_s, due_s)
-        return wait_s if self.beat_s is None else min(wait_s, self._sent_s + self.beat_s)
+        if due_s is None:
+            if self.beat_s is None:
+                return until_s
+            due_s = self._sent_s + self.beat_s
+        return due_s if due_s < until_s else until_s
 
     def _send_new(self, now_s: float) -> None:
-        if self.link.outstanding is not None:
-            return
         if self._jobs:
             self._job = self._jobs.popleft()
         elif self.beat_s is not None and now_s >= self._sent_s + self.beat_s:  # the same sum as in `_wait_until`
-            self._job = Job("beat", (), lambda answered: None)
+            self._job = BEAT
         else:
             return
         try:
@@ -231,9 +270,10 @@ class Pump:
             self.port.write(line)
 
     def _take(self, event: HostEvent, now_s: float) -> None:
-        job = self._job
-        if isinstance(event, Answered):
-            self._job = None
+        if not isinstance(event, Answered):
+            self._hear(event, now_s)
+            return
+        job, self._job = self._job, None
         self._hear(event, now_s)
-        if isinstance(event, Answered) and job is not None:
+        if job is not None:
             job.then(event)

@@ -21,7 +21,7 @@ from ramprig.errors import UsageError
 COMPILERS = ("cc", "gcc", "clang")
 """Looked for in this order; the environment's `CC` comes before them."""
 
-FLAGS = ("-std=c11", "-O2", "-ffp-contract=off")
+FLAGS = ("-std=c11", "-O3", "-ffp-contract=off")
 """Without contraction the C plant rounds as the Python one does."""
 
 BUILD_TIMEOUT_S = 120.0

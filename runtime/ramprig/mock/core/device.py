@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import ctypes
 import os
+from collections.abc import Callable
 from dataclasses import replace
 from pathlib import Path
 
@@ -29,6 +30,9 @@ NOT_C = frozenset(
 """Faults of the cable and of the port, which are looked up when bytes pass; the others are the C parts'."""
 
 SEED_MASK = (1 << 64) - 1
+U32 = 0xFFFFFFFF
+SENT_BYTES = 8192
+"""The C side's SIMULATED_SENT_BYTES."""
 
 
 class SimulatedDevice:
@@ -44,9 +48,9 @@ class SimulatedDevice:
         self.setup = setup = replace(given, board=replace(given.board, firmware=FIRMWARE))
         self._board = setup.board
         self._core = Handle(setup.board)
-        self._run = self._core.library.library_run
-        self._take = self._core.library.library_take
-        self._length = ctypes.c_uint32()
+        self._run: Callable[[int, int, bool], int] = self._core.library.library_run
+        self._receive: Callable[[int, bytes, int], None] = self._core.library.library_receive
+        self._sent = memoryview((ctypes.c_char * SENT_BYTES).from_address(self._core.call("sent")))
         self._output = b""
         self._stores: dict[str, bytes] = {}
         self.faults = FaultSwitches(self._act, axes=setup.board.axes)
@@ -93,7 +97,7 @@ class SimulatedDevice:
 
     def receive(self, data: bytes) -> None:
         """Put bytes from the host on the receive line."""
-        self._core.call("receive", data, len(data))
+        self._receive(self._core.board, data, len(data))
 
     def urgent(self, data: bytes) -> None:
         """Take back what of the host's bytes is still unsent, and put these on the line."""
@@ -122,22 +126,20 @@ class SimulatedDevice:
             self._switch_timed(1)
         self._output += self._pass(1)[1]
 
-    def advance(self, ticks: int) -> int:
-        """Let up to `ticks` ticks pass, fewer where the board sends something; returns how many have passed."""
+    def advance(self, ticks: int, *, patient: bool = False) -> int:
+        """As `Device.advance`."""
         done = 0
         while done < ticks and not self._output:
             left = self._switch_timed(ticks - done) if self._timed else ticks - done
-            passed, self._output = self._pass(left)
+            passed, self._output = self._pass(left, patient)
             done += passed
         return done
 
-    def _pass(self, ticks: int) -> tuple[int, bytes]:
-        core = self._core.board
-        passed = int(self._run(core, min(ticks, 0xFFFFFFFF)))
-        start = self._take(core, ctypes.byref(self._length))
-        output = ctypes.string_at(start, self._length.value)
-        self._keep_store()
-        return passed, output
+    def _pass(self, ticks: int, patient: bool = False) -> tuple[int, bytes]:
+        result = self._run(self._core.board, ticks if ticks < U32 else U32, patient)
+        if self.setup.limits_path is not None:
+            self._keep_store()
+        return result & U32, self._sent[: result >> 32].tobytes()
 
     def _switch_timed(self, ticks: int) -> int:
         """Switch the timed faults that are due; returns the ticks, at most `ticks`, until the next one is."""

@@ -25,8 +25,8 @@ _SIGNATURES: dict[str, tuple[type[ctypes._SimpleCData] | None, Arguments]] = {  
     "parameter": (ctypes.c_int, (_HANDLE, _TEXT, ctypes.c_double)),
     "preset": (None, (_HANDLE, ctypes.c_uint8, ctypes.c_uint8, ctypes.c_int32)),
     "start": (ctypes.c_int, (_HANDLE, ctypes.c_uint64, ctypes.c_uint32, ctypes.c_uint32, ctypes.c_int32)),
-    "run": (ctypes.c_uint32, (_HANDLE, ctypes.c_uint32)),
-    "take": (_HANDLE, (_HANDLE, _HANDLE)),
+    "sent": (_HANDLE, (_HANDLE,)),
+    "run": (ctypes.c_uint64, (_HANDLE, ctypes.c_uint32, ctypes.c_int)),
     "ticks": (ctypes.c_uint64, (_HANDLE,)),
     "receive": (None, (_HANDLE, _TEXT, ctypes.c_uint32)),
     "purge": (None, (_HANDLE,)),
@@ -40,7 +40,7 @@ _SIGNATURES: dict[str, tuple[type[ctypes._SimpleCData] | None, Arguments]] = {  
     "watch_free": (None, (_HANDLE,)),
     "watch_hold": (None, (_HANDLE, ctypes.c_uint32, ctypes.c_uint32)),
     "watch_take": (_HANDLE, (_HANDLE, _HANDLE)),
-    "run_watched": (ctypes.c_uint32, (_HANDLE, ctypes.c_uint32, _HANDLE)),
+    "run_watched": (ctypes.c_uint64, (_HANDLE, ctypes.c_uint32, ctypes.c_int, _HANDLE)),
     "set_winding": (None, (_HANDLE, ctypes.c_uint8, ctypes.c_double)),
 }
 

@@ -21,7 +21,7 @@ from ramprig.mock.device import MockDevice
 from ramprig.mock.plant.parameters import DUTY_FULL
 from ramprig.mock.setup import MockSetup
 
-from .device import SimulatedDevice
+from .device import U32, SimulatedDevice
 
 EVERY_TICKS = 10
 ROOM_ROWS = 4096
@@ -67,16 +67,15 @@ class WatchedCore(SimulatedDevice):
             self._watch = None
             self._core.library.library_watch_free(watch)
 
-    def _pass(self, ticks: int) -> tuple[int, bytes]:
+    def _pass(self, ticks: int, patient: bool = False) -> tuple[int, bytes]:
         library, board = self._core.library, self._core.board
-        passed = int(library.library_run_watched(board, min(ticks, EVERY_TICKS * ROOM_ROWS), self._watch))
-        start = self._take(board, ctypes.byref(self._length))
-        output = ctypes.string_at(start, self._length.value)
+        most = min(ticks, EVERY_TICKS * ROOM_ROWS)
+        result = int(library.library_run_watched(board, most, patient, self._watch))
         table = library.library_watch_take(self._watch, ctypes.byref(self._rows))
         if self._rows.value:
             self._gathered += ctypes.string_at(table, 8 * self._columns * self._rows.value)
         self._keep_store()
-        return passed, output
+        return result & U32, self._sent[: result >> 32].tobytes()
 
     @property
     def rows(self) -> NDArray[np.float64]:
