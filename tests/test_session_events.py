@@ -24,7 +24,7 @@ from ramprig.session.events import (
     Trouble,
     WallClockSet,
 )
-from ramprig.session.watch import Fit, TickWatch, WallWatch
+from ramprig.session.watch import WALL_LOOK_S, Fit, TickWatch, WallWatch
 from ramprig_link.words import Cause, Rest
 from session_rig import MASK, Rig
 
@@ -211,12 +211,13 @@ def test_a_wall_clock_that_is_set_is_told() -> None:
     clock = Settable()
     watch = WallWatch(clock)
     clock.advance(5.0)
-    assert watch.moved_s() is None
+    assert watch.moved_s(clock.now()) is None
     clock.set_by_s = -3600.0
     clock.advance(5.0)
-    assert watch.moved_s() == pytest.approx(-3600.0)
+    assert watch.moved_s(clock.now()) == pytest.approx(-3600.0)
+    assert watch.look_s == clock.now() + WALL_LOOK_S
     clock.advance(5.0)
-    assert watch.moved_s() is None
+    assert watch.moved_s(clock.now()) is None
     assert WallClockSet(tick=None, host_s=0.0, moved_s=-3600.0).moved_s == -3600.0
 
 

@@ -112,7 +112,8 @@ class Core:
         self.lease_ms: int | None = None
         self.valid = False
         self.trip: Tripped | None = None
-        self.latest = Latest()
+        self._latest_reading: tuple[Reading | None, float | None] = None, None
+        self._latest_block: tuple[Block | None, float | None] = None, None
         self.marks = StopMarks()
         self.worst_late_s = 0.0
         self.repeats = 0
@@ -128,6 +129,11 @@ class Core:
         if self.known is None:
             raise Bug("the device is not known yet")
         return self.known
+
+    @property
+    def latest(self) -> Latest:
+        """The newest reading and samples."""
+        return Latest(*self._latest_reading, *self._latest_block)
 
     @property
     def armed(self) -> bool:
@@ -154,7 +160,7 @@ class Core:
     def take_state(self, answered: host.Answered) -> Reading:
         """The reading in an `ok` answer to `state`, which is then the newest that is known."""
         reading = self._reading(answered)
-        self.latest = replace(self.latest, reading=reading, reading_s=answered.received_s)
+        self._latest_reading = reading, answered.received_s
         self._set_state(reading.state)
         return reading
 
@@ -231,8 +237,7 @@ class Core:
         now_s = self.clock.now()
         match delivery:
             case Block():
-                latest = self.latest
-                self.latest = Latest(latest.reading, latest.reading_s, delivery, now_s)
+                self._latest_block = delivery, now_s
                 if self.on_block is not None:
                     self.on_block(delivery)
             case Gap(first_tick, count, period_ticks, reason):
@@ -254,14 +259,15 @@ class Core:
             self.tell(LateHost(tick=self.ticks.latest, host_s=self.clock.now(), late_s=gap_s))
 
     def _chores(self, now_s: float) -> None:
-        urgents = self.pump.urgents
-        while urgents:
-            category, sent = urgents.popleft()
+        pump = self.pump
+        while pump.urgents:
+            category, sent = pump.urgents.popleft()
             self.tell(StopAsked(tick=None, host_s=now_s, category=category, sent=sent))
-        moved_s = self.wall.moved_s()
-        if moved_s is not None:
-            self.tell(WallClockSet(tick=self.ticks.latest, host_s=now_s, moved_s=moved_s))
-        if self.pump.idle and not self.pump.muted:
+        if now_s >= self.wall.look_s:
+            moved_s = self.wall.moved_s(now_s)
+            if moved_s is not None:
+                self.tell(WallClockSet(tick=self.ticks.latest, host_s=now_s, moved_s=moved_s))
+        if self.sampling.wanting and pump.idle and not pump.muted:
             number = self.sampling.to_ask(now_s)
             if number is not None:
                 self.pump.post("again", number, then=self._took_again)
@@ -273,6 +279,8 @@ class Core:
 
     def _hear(self, event: host.HostEvent, now_s: float) -> None:
         match event:
+            case host.Sampled():
+                self._hear_samples(event, now_s)
             case host.Answered():
                 self._hear_answer(event)
             case host.UrgentAnswered(answer):
@@ -281,8 +289,6 @@ class Core:
                     self._hear_stop_state(answer.fields[0], now_s)
             case host.Noticed(notice, missed):
                 self._hear_notice(notice, missed, now_s)
-            case host.Sampled():
-                self._hear_samples(event, now_s)
             case host.Dropped(raw, why):
                 self.dropped_lines += 1
                 shown = raw[:DROPPED_SHOWN_BYTES].decode("ascii", "backslashreplace")

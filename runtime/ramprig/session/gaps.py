@@ -91,12 +91,9 @@ class Accounting:
 @dataclass(frozen=True, slots=True)
 class _Held:
     block: Block
+    first_tick: int
     number: int
     late: bool
-
-    @property
-    def first_tick(self) -> int:
-        return int(self.block.ticks[0])
 
 
 class SampleStream:
@@ -129,18 +126,23 @@ class SampleStream:
         """A data line has come, in whatever order."""
         if number == self._asked:
             self._asked = None
-        first = int(block.ticks[0])
+        first, last = int(block.ticks[0]), int(block.ticks[-1])
+        fits = block.layout is self.layout or block.layout == self.layout
+        if fits and first == self.next_tick and first > self._newest[0] and not self._held:  # as nearly every line
+            self._newest = last, number
+            self._pass(block, last, number)
+            return [block]
         offset = first - self.first_tick
-        if block.layout != self.layout or offset < 0 or offset % self.layout.period_ticks:
+        if not fits or offset < 0 or offset % self.layout.period_ticks:
             self._strange += 1
             return self._release()
         late = first <= self._newest[0]
         if not late:
-            self._newest = (int(block.ticks[-1]), number)
-        if any(held.first_tick == first for held in self._held) or block.ticks[-1] < self.next_tick:
+            self._newest = last, number
+        if any(held.first_tick == first for held in self._held) or last < self.next_tick:
             self._duplicates += len(block)
             return self._release()
-        self._held.append(_Held(block, number, late))
+        self._held.append(_Held(block, first, number, late))
         if len(self._held) > 1:
             self._held.sort(key=lambda held: held.first_tick)
         return self._release()
@@ -193,11 +195,13 @@ class SampleStream:
 
     def _candidates(self) -> list[int]:
         """Numbers of the lines that may fill the hole in front, the most likely first."""
-        if not self._hole():
+        if not self.has_hole:
             return []
         return [n for n in self._missing() if n not in self._gone and self._tries.get(n, 0) < AGAIN_TRIES]
 
-    def _hole(self) -> bool:
+    @property
+    def has_hole(self) -> bool:
+        """Whether samples before those held, or before the end of a logging that is over, are missing."""
         if self._held:
             return self._held[0].first_tick > self.next_tick
         return self._end_tick is not None and self.next_tick < self._end_tick
@@ -220,13 +224,13 @@ class SampleStream:
     def _release(self, *, give_up: GapReason | None = None) -> list[Delivery]:
         out: list[Delivery] = []
         while self._held:
-            if self._hole():
+            if self.has_hole:
                 reason = give_up or self._hopeless()
                 if reason is None:
                     return out
                 out.append(self._lose(self._held[0].first_tick, reason))
             out.extend(self._deliver(self._held.pop(0)))
-        if self._hole() and self._end_tick is not None:
+        if self.has_hole and self._end_tick is not None:
             reason = give_up or self._hopeless()
             if reason is not None:
                 out.append(self._lose(self._end_tick, reason))
@@ -263,15 +267,18 @@ class SampleStream:
         if part is None:
             return []
         first = self.next_tick
-        self.next_tick = int(part.ticks[-1]) + self.layout.period_ticks
-        self._last_number = held.number
-        self._received += len(part)
-        self._tries.clear()
-        self._gone.clear()
+        self._pass(part, int(part.ticks[-1]), held.number)
         if not held.late:
             return [part]
         self._recovered += len(part)
         return [Filled(first, len(part)), part]
+
+    def _pass(self, part: Block, last_tick: int, number: int) -> None:
+        self.next_tick = last_tick + self.layout.period_ticks
+        self._last_number = number
+        self._received += len(part)
+        self._tries.clear()
+        self._gone.clear()
 
     def accounting(self) -> Accounting:
         """Where every sample is by now; samples held back count as neither received nor lost yet."""

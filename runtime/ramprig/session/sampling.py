@@ -109,6 +109,11 @@ class Sampling:
 
     # ---- asking again --------------------------------------------------------------------------------------------
 
+    @property
+    def wanting(self) -> bool:
+        """Whether `to_ask` may have something to say: a line is missing or awaited."""
+        return self.stream is not None and (self.stream.has_hole or self._awaited is not None)
+
     def to_ask(self, now_s: float) -> int | None:
         """The number of the line to ask for now, which is then held to be asked for."""
         stream = self.stream

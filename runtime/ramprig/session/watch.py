@@ -6,7 +6,6 @@ does not fit is only a suspicion (a damaged line can pass a 16-bit check): `who`
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from enum import Enum, auto
 
 from ramprig.port.clock import Clock
@@ -28,32 +27,26 @@ class Fit(Enum):
     BEHIND = auto()
 
 
-@dataclass(frozen=True, slots=True)
-class _Anchor:
-    tick: int
-    sent_s: float
-    received_s: float
-
-
 class TickWatch:
     """Judges ticks by the last exchange that was right; knows nothing before the first."""
 
     def __init__(self, tick_s: float) -> None:
         self.tick_s = tick_s
-        self._anchor: _Anchor | None = None
+        self._anchor: tuple[int, float, float] | None = None
 
     def take(self, tick: int, sent_s: float, received_s: float) -> None:
         """An exchange that is held to be right."""
-        self._anchor = _Anchor(tick, sent_s, received_s)
+        self._anchor = tick, sent_s, received_s
 
     def judge(self, tick: int, sent_s: float, received_s: float) -> tuple[Fit, float]:
         """Where the unwrapped tick of an answer stands, and by how many seconds it is off."""
-        anchor = self._anchor
+        anchor = self._anchor  # tick, when its request was sent, when it was received
         if anchor is None:
             return Fit.RIGHT, 0.0
-        device_s = (tick - anchor.tick) * self.tick_s
-        shortest_s = sent_s - anchor.received_s
-        longest_s = received_s - anchor.sent_s
+        anchor_tick, anchor_sent_s, anchor_received_s = anchor
+        device_s = (tick - anchor_tick) * self.tick_s
+        shortest_s = sent_s - anchor_received_s
+        longest_s = received_s - anchor_sent_s
         slack_s = TICK_SLACK_S + DRIFT_MAX * longest_s
         if device_s > longest_s + slack_s:
             return Fit.AHEAD, device_s - longest_s
@@ -63,19 +56,16 @@ class TickWatch:
 
 
 class WallWatch:
-    """Notices when the wall clock moves against the monotonic one."""
+    """Notices when the wall clock moves against the monotonic one. `look_s` is when to look next."""
 
     def __init__(self, clock: Clock) -> None:
         self._clock = clock
         self._apart_s = clock.wall() - clock.now()
-        self._looked_s = clock.now()
+        self.look_s = clock.now() + WALL_LOOK_S
 
-    def moved_s(self) -> float | None:
+    def moved_s(self, now_s: float) -> float | None:
         """By how much the wall clock was moved since the last look, where that is WALL_STEP_S or more."""
-        now_s = self._clock.now()
-        if now_s - self._looked_s < WALL_LOOK_S:
-            return None
-        self._looked_s = now_s
+        self.look_s = now_s + WALL_LOOK_S
         apart_s = self._clock.wall() - now_s
         moved_s, self._apart_s = apart_s - self._apart_s, apart_s
         return moved_s if abs(moved_s) >= WALL_STEP_S else None
