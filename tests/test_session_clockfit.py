@@ -170,3 +170,31 @@ def test_the_present_tick_is_that_of_the_whole_fit() -> None:
             fit = fitter.fit
             assert fit is not None
             assert (early, later) == (fit.tick_not_later(received_s), fit.tick_not_later(received_s + 0.7))
+
+
+@pytest.mark.parametrize("seed", range(6))
+def test_the_bounds_of_the_rate_are_those_of_all_pairs_of_exchanges(seed: int) -> None:
+    """The greatest rate with every sending below the line and every reception above it, found without any hull."""
+    source = random.Random(seed)
+    fitter, exchanges, at_s, tick_s = ClockFitter(0.001), [], 0.0, 0.001 * (1 + source.uniform(-1, 1) * 3e-4)
+    for _ in range(60):
+        at_s += source.choice([0.02, 0.1, 0.5])
+        there_s, back_s = source.expovariate(300.0), source.expovariate(300.0)
+        tick = int((at_s + there_s) / tick_s)
+        exchanges.append((tick, at_s, at_s + there_s + back_s + 0.001))
+        fitter.add(*exchanges[-1])
+        at_s = exchanges[-1][2]
+        (first_tick, origin_s, _), last_s = exchanges[0], exchanges[-1][2]
+        rates = [
+            (received_s - sent_s) / (later - earlier)
+            for earlier, sent_s, _ in exchanges
+            for later, _, received_s in exchanges
+            if later > earlier
+        ]
+        greatest = min([0.001 * 1.02, *rates])
+        support_s = min(received_s - origin_s - greatest * (tick - first_tick) for tick, _, received_s in exchanges)
+        expected = first_tick + (last_s + 0.05 - origin_s - support_s) / greatest
+        assert fitter.tick_not_later(last_s + 0.05) == pytest.approx(expected, abs=1.001)
+        fit = fitter.fit
+        assert fit is not None
+        assert fit.slowest.slope == pytest.approx(greatest, rel=1e-12)

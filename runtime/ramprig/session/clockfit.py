@@ -155,21 +155,40 @@ def _tick_on(slowest: Line, elapsed_s: float, origin_tick: int) -> int:
 class _Generation:
     """The two hulls of one window: receptions as they are, sendings upside down."""
 
-    def __init__(self, origin_tick: int, origin_s: float) -> None:
+    def __init__(self, origin_tick: int, origin_s: float, tick_s: float) -> None:
         self.origin_tick = origin_tick
         self.origin_s = origin_s
         self.last_tick = origin_tick
         self.received = LowerHull()
         self.sent = LowerHull()
+        self._low, self._high = tick_s * (1 - DRIFT_MAX), tick_s * (1 + DRIFT_MAX)
 
     def add(self, tick: int, sent_s: float, received_s: float) -> None:
         x = float(tick - self.origin_tick)
+        above, below = received_s - self.origin_s, -(sent_s - self.origin_s)  # the sendings are kept upside down
         self.last_tick = tick
-        self.received.add(x, received_s - self.origin_s)
-        self.sent.add(x, -(sent_s - self.origin_s))
+        self.received.add(x, above)
+        self.sent.add(x, below)
+        self._narrow(x, above, below)
+
+    def _narrow(self, x: float, above: float, below: float) -> None:
+        """Take the exchange into the least and the greatest slope that a line between sendings and receptions has.
+
+        Corners alone bound them: what lies behind a hull's edge bounds less than the edge's ends do.
+        """
+        for sent_x, earlier_below in self.sent.corners:
+            if sent_x < x:
+                slope = (above + earlier_below) / (x - sent_x)
+                if slope < self._high:
+                    self._high = slope
+        for received_x, earlier_above in self.received.corners:
+            if received_x < x:
+                slope = (earlier_above + below) / (received_x - x)
+                if slope > self._low:
+                    self._low = slope
 
     def fit(self, tick_s: float) -> ClockFit:
-        low, high = self._slopes(tick_s)
+        low, high = self._slopes()
         wide = (self.last_tick - self.origin_tick) * tick_s >= SPAN_MIN_S
         late = self._line(self.received, tick_s, wide)
         early = _upside_down(self._line(self.sent, -tick_s, wide))
@@ -187,9 +206,9 @@ class _Generation:
             exchanges=self.received.count,
         )
 
-    def slowest(self, tick_s: float) -> Line:
+    def slowest(self) -> Line:
         """The line `ClockFit.slowest` alone."""
-        return self.received.support(self._slopes(tick_s)[1])
+        return self.received.support(self._slopes()[1])
 
     @staticmethod
     def _line(hull: LowerHull, nominal: float, wide: bool) -> Line:
@@ -202,21 +221,10 @@ class _Generation:
             return line
         return hull.support(min(max(line.slope, bounds[0]), bounds[1]))
 
-    def _slopes(self, tick_s: float) -> tuple[float, float]:
+    def _slopes(self) -> tuple[float, float]:
         """The least and the greatest slope of a line with all sendings below and all receptions above it."""
-        low, high = tick_s * (1 - DRIFT_MAX), tick_s * (1 + DRIFT_MAX)
-        received = self.received.corners
-        for x, below in self.sent.corners:
-            for across, above in received:
-                if across == x:
-                    continue
-                slope = (above + below) / (across - x)  # the sendings are kept upside down
-                if across > x:
-                    high = slope if slope < high else high
-                else:
-                    low = slope if slope > low else low
         # A clock whose rate changed in the window may leave none; then the two bounds have crossed.
-        return min(low, high), max(low, high)
+        return min(self._low, self._high), max(self._low, self._high)
 
 
 def _upside_down(line: Line) -> Line:
@@ -245,7 +253,7 @@ class ClockFitter:
             return
         span = WINDOW_S / self.tick_s
         if not generations or tick - generations[-1].origin_tick >= span:
-            generations.append(_Generation(tick, sent_s))
+            generations.append(_Generation(tick, sent_s, self.tick_s))
             del generations[:-2]
         for generation in generations:
             generation.add(tick, sent_s, received_s)
@@ -264,5 +272,5 @@ class ClockFitter:
             return None
         oldest = self._generations[0]
         if self._slowest is None:
-            self._slowest = oldest.slowest(self.tick_s)
+            self._slowest = oldest.slowest()
         return _tick_on(self._slowest, host_s - oldest.origin_s, oldest.origin_tick)
