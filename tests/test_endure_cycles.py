@@ -16,6 +16,7 @@ from ramprig.mock.device import MockDevice
 from ramprig.mock.port import MockPort
 from ramprig.record.appendfile import AppendFile
 from ramprig.record.events import encode_line
+from ramprig.sequence import executive
 from ramprig.sequence.compile import compile_plan
 from ramprig.sequence.cycle_plan import BlockSoFar
 from ramprig.sequence.cycle_run import CycleBook, PastStarts, RunSoFar
@@ -106,6 +107,22 @@ def test_on_interruption_refuses_the_rest(tmp_path: Path, text: str) -> None:
 
 
 # ---- carried out ---------------------------------------------------------------------------------------------------
+
+
+def test_a_rest_that_is_polled_without_looking_round_changes_nothing(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    keys = "times: 3\n    rest: 4 s\n    check every: 2\n    check: [{hold: 500 ms}]"
+
+    def told(polls: int) -> tuple[int, list[object], list[list[int]]]:
+        monkeypatch.setattr(executive, "QUIET_POLLS_MAX", polls)
+        run = rehearse(tmp_path, cycle(keys))
+        return len(run.progress), run.events, [run.ticks.tolist(), run.column("counts").tolist()]
+
+    (rounds, events, samples), (rounds_all, events_all, samples_all) = told(20), told(0)
+    assert rounds < rounds_all - 100
+    assert events == events_all
+    assert samples == samples_all
 
 
 def test_cycles_are_confirmed_rested_and_checked(tmp_path: Path) -> None:

@@ -19,6 +19,7 @@ from ramprig.port.clock import Clock
 from ramprig.session.blocks import Block
 from ramprig.session.events import Event, OrderDone, Restarted, Tripped
 from ramprig.session.session import Session
+from ramprig.session.watch import TICK_SLACK_S
 
 from .cycle_run import CycleBook, Due, RunSoFar
 from .dispatch import Dispatch
@@ -38,6 +39,8 @@ POLL_S = 0.05
 """How often samples are looked at while something waits for them."""
 IDLE_S = 0.25
 """How often the loop comes round while nothing is due."""
+QUIET_POLLS_MAX = 20
+"""Most polls in a row without coming round, while the next turn of a block is not due."""
 SAMPLES_LATE_S = 3.0
 """Samples that have not come so long after their tick are judged as missing."""
 
@@ -112,6 +115,7 @@ class Executive:
     now: int = 0
     trip: Tripped | None = None
     restarted: Restarted | None = None
+    _tick_s: float = field(init=False)
     _ring: Ring = field(init=False)
     _bearings: Bearings = field(default_factory=Bearings)
     _strands: list[_Strand] = field(default_factory=list)
@@ -119,10 +123,12 @@ class Executive:
     _number: count[int] = field(default_factory=count)
     _dispatch: Dispatch = field(init=False)
     _commanded: Due | None = None
+    _turn_due: int | None = None
     _waited: int = 0
     _end: int = 0
 
     def __post_init__(self) -> None:
+        self._tick_s = self.plan.tick_us / 1e6
         self._dispatch = Dispatch(self.session, tick_s=self._tick_s, tell=self.tell)
         longest = max([self.plan.longest_window, *(axis.still_ticks for axis in self.rig.axes.values())])
         self._ring = Ring(longest + round((LEAD_IN_S + SAMPLES_LATE_S) / self._tick_s))
@@ -150,10 +156,6 @@ class Executive:
 
     # ---- the loop ------------------------------------------------------------------------------------------------
 
-    @property
-    def _tick_s(self) -> float:
-        return self.plan.tick_us / 1e6
-
     def run(self) -> None:
         """Carry the plan out to its end. Raises `Ended` where it ends before, and what the session raises."""
         self._wait_for_samples()
@@ -169,6 +171,9 @@ class Executive:
             if self.progress is not None:
                 self.progress(self.where())
             self._pump_for(self._idle_s())
+            for _ in range(self._quiet_polls()):
+                self._check()
+                self._pump_for(POLL_S)
         self._finish_orders()
 
     def _wait_for_samples(self) -> None:
@@ -245,6 +250,17 @@ class Executive:
                 case Hang() | Look() | NextTurn():
                     wait_s = min(wait_s, POLL_S)
         return max(wait_s, self._tick_s)
+
+    def _quiet_polls(self) -> int:
+        """How many further polls come before the next turn's time where nothing but that is waited for.
+
+        Coming round in each of them would find nothing; they are made all the same, one by one.
+        """
+        due, self._turn_due = self._turn_due, None
+        if due is None or len(self._strands) > 1 or self._agenda or self._dispatch.waiting:
+            return 0
+        wait_s = (due - self.now) * self._tick_s - AHEAD_S - TICK_SLACK_S
+        return max(0, min(QUIET_POLLS_MAX, int(wait_s / POLL_S) - 1))
 
     # ---- strands -------------------------------------------------------------------------------------------------
 
@@ -445,6 +461,7 @@ class Executive:
             due = book.due(ask.tick)
             if due.turn is not Turn.OVER:
                 if due.tick > ahead:
+                    self._turn_due = due.tick
                     return False
                 book.command(due.turn)
             self._commanded = due
