@@ -97,7 +97,7 @@ def test_the_ready_bench_keeps_its_bytes_and_what_else_it_says(vent: Bench) -> N
     assert len(vent.digest_of_file) == 64
     assert vent.board.matches("ramprig-mock", "MOCK-0001")
     assert not vent.board.matches("other", "MOCK-0001")
-    assert vent.safety.missing() == ()
+    assert vent.safety.missing() == ("contact", "place"), "what stands in <...> is to be filled in"
     assert (vent.port.url, vent.port.baud, vent.port.dtr) == ("mock:", 115200, "leave")
     assert vent.log.period_s == 0.01
     with pytest.raises(FrozenInstanceError):
@@ -308,6 +308,7 @@ def test_the_echo_tells_what_the_file_means(vent: Bench) -> None:
         "vent: speed_counts: '75 rpm' is held as 74.87 rpm",
         "latch: 1100 us to 1900 us = -40 deg to 40 deg, home 1500 us = 0 deg (angles are commanded, not measured)",
         "link: the board stops by itself after 500 ms of silence, and is off 1 s later at most",
+        "safety: not said: contact, place",
     ]
 
 

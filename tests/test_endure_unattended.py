@@ -48,8 +48,9 @@ def night(folder: Path, text: str = NIGHT) -> Sequence:
 
 
 def bench(*changes: tuple[str, str]) -> Bench:
-    """The example bench with lines changed; each pattern must be there."""
+    """The example bench, filled in, with lines changed; each pattern must be there."""
     text = BENCH.read_text("utf-8")
+    text = re.sub("<name and telephone.*>", "A. Miller, 555 0100", text).replace("<room, bench, socket>", "room 12")
     for pattern, put in changes:
         text, count = re.subn(pattern, put, text, flags=re.MULTILINE)
         assert count, pattern
@@ -66,6 +67,14 @@ def missing(sequence: Sequence, bench: Bench, *, url: str = "mock:", free_bytes:
 
 def test_the_example_bench_holds_every_rule(tmp_path: Path) -> None:
     assert missing(night(tmp_path), bench()) == []
+
+
+def test_what_nobody_has_filled_in_is_not_said(tmp_path: Path) -> None:
+    named = missing(night(tmp_path), bench_of_text(BENCH.read_text("utf-8"), "bench.yaml"))
+    assert [one.partition(": not said")[0] for one in named] == [
+        "bench.yaml: safety: contact",
+        "bench.yaml: safety: place",
+    ]
 
 
 @pytest.mark.parametrize(
@@ -169,40 +178,25 @@ GOLDEN = """\
 UNATTENDED TEST RUNNING - until Fri 15 Jan 2027 18:00 (UTC+0000) at the latest
 ==============================================================================
 
-WHAT RUNS
-  vent night: Opens the vent again and again.
-  on the bench 'greenhouse vent drive', board ramprig-mock (any serial)
-  cycle 'open' x 1000, rest 20 s, at most 150 starts per hour
-
-WHERE
-  room, bench, socket; driven by the computer lab-pc-3
-
-WHEN
-  from Fri 15 Jan 2027 08:00 (UTC+0000), planned to end Fri 15 Jan 2027 15:06
-    (UTC+0000) (7 h 6 min)
-  over at Fri 15 Jan 2027 18:00 (UTC+0000) at the latest; if it still runs
-    then, isolate it
-
-HAZARDS
-  motor 'vent' turns at up to 60 % of full drive, both ways if the test says
-    so
-  servo 'latch' moves between -40 deg and 40 deg
-  everything starts by itself and without warning, also after a pause of 20 s
-  after a lost link or a restart it may start again by itself, 2 times, within
-    5 min
-  supply 12 V, fuse 3 A; motors and bridge may be hot
-  guard: clear cover over the gear
-
 TO MAKE IT DEAD
   1. cut the power: red mushroom button left of the rig
   2. then unplug the supply of the bridges, and see that nothing turns
   if the computer fails, the board stops by itself after 500 ms of silence and
     is off 1 s later; Ctrl-C at the computer stops in order
 
-WHAT NORMAL LOOKS LIKE
-  each 'open' takes about 5.6 s, then rests 20 s
-  current of vent is at most 1 A over 1 s
-  position of vent since cycle begin is at least 500 deg
+WHOM TO CALL
+  A. Miller, 555 0100
+
+HAZARDS
+  motor 'vent' turns at up to 60 % of full drive, both ways if the test says
+    so
+  servo 'latch' moves between -40 deg and 40 deg
+  everything starts by itself and without warning, also after a pause of about
+    20 s
+  after a lost link or a restart it may start again by itself, 2 times, within
+    5 min
+  supply 12 V, fuse 3 A; motors and bridge may be hot
+  guard: clear cover over the gear
 
 NOT NORMAL
   smoke, smell, sparks, a new noise, anything loose: isolate, leave it off,
@@ -210,12 +204,28 @@ NOT NORMAL
   the computer says tripped, link lost or stopped: the motor is off; leave it
     so, call
 
-WHOM TO CALL
-  name and telephone of who answers for the rig
-
 NOTE
   A stop by software is not an emergency stop: only the power cut makes the
     bench safe to touch.
+
+WHAT RUNS
+  vent night: Opens the vent again and again.
+  on the bench 'greenhouse vent drive', board ramprig-mock (any serial)
+  cycle 'open' x 1000, rest 20 s, at most 150 starts per hour
+
+WHERE
+  room 12; driven by the computer lab-pc-3
+
+WHEN
+  from Fri 15 Jan 2027 08:00 (UTC+0000), planned to end Fri 15 Jan 2027 15:06
+    (UTC+0000) (7 h 6 min)
+  over at Fri 15 Jan 2027 18:00 (UTC+0000) at the latest; if it still runs
+    then, isolate it
+
+WHAT NORMAL LOOKS LIKE
+  each 'open' takes about 5.6 s, then rests about 20 s
+  current of vent is at most 1 A over 1 s
+  position of vent since cycle begin is at least 500 deg
 """
 
 

@@ -4,23 +4,14 @@ from __future__ import annotations
 
 import random
 import re
-import shutil
-import subprocess
 from pathlib import Path
 
 import pytest
 
+from browser import CHROMIUM, WHY_NOT, chromium, sheets_mm
 from explain_cases import case_of, run_case
 from ramprig.report.making import make_report
 
-CHROMIUM = next(
-    (path for name in ("chromium", "chromium-browser", "google-chrome") if (path := shutil.which(name))), ""
-)
-WAIT_S = 120
-FLAGS = (
-    *("--headless", "--no-sandbox", "--disable-gpu", "--disable-quic", "--no-first-run"),
-    *("--disable-background-networking", "--disable-component-update", "--disable-sync"),
-)
 PROBE = """<script>addEventListener("load",()=>{const wide=document.documentElement.scrollWidth;
 const out=[...document.querySelectorAll("main *")].filter(e=>!e.closest("svg")&&e.getBoundingClientRect().right>
 innerWidth+1).length;
@@ -29,7 +20,7 @@ document.title=`wide=${wide} of=${innerWidth} out=${out} figures=${document.quer
 
 pytestmark = [
     pytest.mark.process,
-    pytest.mark.skipif(not CHROMIUM, reason="needs a browser: the Debian package chromium"),
+    pytest.mark.skipif(not CHROMIUM, reason=WHY_NOT),
 ]
 
 
@@ -39,17 +30,6 @@ def report(tmp_path_factory: pytest.TempPathFactory) -> Path:
     result, _ = run_case(folder, case_of("jam", random.Random(2)), seed=2)
     assert result.folder is not None
     return make_report([result.folder], out=folder / "out", issued="2026-03-01T08:00:00Z").report
-
-
-def chromium(profile: Path, *arguments: str) -> str:
-    done = subprocess.run(
-        [CHROMIUM, *FLAGS, f"--user-data-dir={profile}", *arguments],
-        capture_output=True,
-        text=True,
-        timeout=WAIT_S,
-        check=True,
-    )
-    return done.stdout
 
 
 @pytest.mark.parametrize("width_px", [1280, 794, 500])  # a screen, A4 at 96 dpi, the narrowest window of a browser
@@ -74,8 +54,6 @@ def test_a_picture_and_a_print_are_made(report: Path, tmp_path: Path) -> None:
     assert picture.read_bytes().startswith(b"\x89PNG")
     assert picture.stat().st_size > 50_000  # a blank page has a few kB
     chromium(tmp_path / "b", f"--print-to-pdf={paper}", "--no-pdf-header-footer", report.as_uri())
-    data = paper.read_bytes()
-    assert data.startswith(b"%PDF")
-    boxes = re.findall(rb"/MediaBox ?\[0 0 ([\d.]+) ([\d.]+)\]", data)
-    assert boxes
-    assert all(abs(float(w) - 595) < 2 and abs(float(h) - 842) < 2 for w, h in boxes)  # A4 in points
+    sheets = sheets_mm(paper)
+    assert sheets
+    assert all(abs(width - 210) < 1 and abs(height - 297) < 1 for width, height in sheets)  # A4

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Literal, cast
@@ -208,22 +209,30 @@ def _log(fields: Fields) -> LogDefaults:
 
 LOG = Record((_PERIOD, _FORM), _log)
 
-_CONTACT = Key("contact", TextShape(), "who answers for the bench, and how to reach them", default="")
+_CONTACT = Key("contact", TextShape(), "who answers for the bench, and how (`<...>` is not said yet)", default="")
 _PLACE = Key("place", TextShape(), "where it stands", default="")
 _FUSE = Key("fuse", QuantityShape(CURRENT, least="1 mA"), "in the supply to the bridges")
 _POWER_CUT = Key("power cut", TextShape(), "what cuts the motor's power by hand, and where it is", default="")
 _GUARD = Key("guard", TextShape(), "what keeps hands away", default="")
 
 
+_UNFILLED = re.compile(r"\s*(<.*>)?\s*", re.DOTALL)
+
+
 def _safety(fields: Fields) -> Safety:
     fuse = fields.get(_FUSE)
     return Safety(
-        contact=fields.get(_CONTACT) or "",
-        place=fields.get(_PLACE) or "",
+        contact=_said(fields.get(_CONTACT)),
+        place=_said(fields.get(_PLACE)),
         fuse_a=None if fuse is None else fuse.to("A"),
-        power_cut=fields.get(_POWER_CUT) or "",
-        guard=fields.get(_GUARD) or "",
+        power_cut=_said(fields.get(_POWER_CUT)),
+        guard=_said(fields.get(_GUARD)),
     )
+
+
+def _said(text: str | None) -> str:
+    """The text; nothing where it is a form that nobody has filled in yet, such as `<name and telephone>`."""
+    return "" if text is None or _UNFILLED.fullmatch(text) else text
 
 
 SAFETY = Record((_CONTACT, _PLACE, _FUSE, _POWER_CUT, _GUARD), _safety)

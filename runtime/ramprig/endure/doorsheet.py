@@ -1,7 +1,7 @@
 """The sheet for the door of the room in which a bench runs by itself: one page, as text and as HTML to be printed.
 
-It says what a stranger needs who finds the bench running: what runs, until when at the latest, what may hurt, how to
-make it dead, what normal looks like, and whom to call.
+It says what a stranger needs who finds the bench running, the most urgent first and in the largest letters: how to make
+it dead, whom to call, what may hurt; then what runs, until when at the latest, and what normal looks like.
 """
 
 from __future__ import annotations
@@ -20,6 +20,12 @@ from ramprig.sequence.reading import Sequence
 WIDTH = 78
 NORMAL_MAX = 8
 """Expectations that the sheet lists; the run folder has them all."""
+ENDS_MAX = 4
+"""Limits to wear that end the run which the sheet lists."""
+MUCH_LETTERS = 2000
+"""From so many letters on they are smaller, so that one sheet holds them."""
+URGENT = 2
+"""So many sections stand first and large."""
 NOT_SAID = "NOT SAID in the bench file"
 NO_EMERGENCY_STOP = "A stop by software is not an emergency stop: only the power cut makes the bench safe to touch."
 
@@ -42,25 +48,39 @@ class DoorSheet:
 
     def html(self) -> str:
         """As one self-contained page that prints on one sheet of A4 or Letter."""
-        body = "".join(
+        parts = [
             f"<section><h2>{html.escape(heading)}</h2>{''.join(f'<p>{html.escape(item)}</p>' for item in items)}"
             "</section>"
             for heading, items in self.sections
-        )
+        ]
+        body = f'<div class="urgent">{"".join(parts[:URGENT])}</div><div class="rest">{"".join(parts[URGENT:])}</div>'
         title = html.escape(self.title)
+        letters = sum(len(item) for _, items in self.sections for item in items)
+        size = ' class="much"' if letters > MUCH_LETTERS else ""
         return (
             f'<!DOCTYPE html>\n<html lang="en"><head><meta charset="utf-8"><title>{title}</title>\n'
-            f"<style>{_STYLE}</style></head>\n<body><h1>{title}</h1>{body}</body></html>\n"
+            f"<style>{_STYLE}</style></head>\n<body{size}><h1>{title}</h1>{body}</body></html>\n"
         )
 
 
 _STYLE = """
-@page { margin: 12mm }
-body { font: 12pt/1.3 sans-serif; max-width: 190mm; margin: 8mm auto; color: #000; background: #fff }
-h1 { font-size: 21pt; margin: 0 0 4mm; border: 1.2mm solid #000; padding: 3mm; overflow-wrap: anywhere }
-section { break-inside: avoid; margin: 0 0 3mm; border-bottom: 0.2mm solid #777; padding-bottom: 2mm }
-h2 { font-size: 13pt; margin: 0 0 1mm }
-p { margin: 0 0 0.6mm 5mm; overflow-wrap: anywhere }
+@page { margin: 11mm }
+* { box-sizing: border-box }
+body { font: 11pt/1.28 sans-serif; max-width: 190mm; margin: 6mm auto; padding: 0 4mm; color: #000; background: #fff }
+h1 { font-size: 21pt; line-height: 1.15; margin: 0 0 4mm; border: 1.2mm solid #000; padding: 3mm }
+h1, p { overflow-wrap: anywhere }
+h2 { font-size: 12.5pt; margin: 0 0 0.8mm }
+p { margin: 0 0 0.7mm 3mm; padding-left: 3mm; text-indent: -3mm }
+section { break-inside: avoid; margin: 0 0 2.5mm; border-bottom: 0.2mm solid #777; padding-bottom: 1.8mm }
+.urgent { font-size: 15pt }
+.urgent h2 { font-size: 17pt }
+.rest { columns: 2; column-gap: 7mm }
+.much { font-size: 9pt }
+.much h2 { font-size: 10.5pt }
+.much .urgent { font-size: 13pt }
+.much .urgent h2 { font-size: 15pt }
+@media (max-width: 600px) { .rest { columns: 1 } }
+@media print { body { margin: 0; padding: 0; max-width: none } .rest { columns: 2 } }
 """
 
 
@@ -81,6 +101,17 @@ def door_sheet(
     return DoorSheet(
         title=f"UNATTENDED TEST RUNNING - until {latest} at the latest",
         sections=(
+            ("To make it dead", tuple(_isolate(bench))),
+            ("Whom to call", (bench.safety.contact or NOT_SAID,)),
+            ("Hazards", tuple(_hazards(bench, sequence, plan))),
+            (
+                "Not normal",
+                (
+                    "smoke, smell, sparks, a new noise, anything loose: isolate, leave it off, call",
+                    "the computer says tripped, link lost or stopped: the motor is off; leave it so, call",
+                ),
+            ),
+            ("Note", (NO_EMERGENCY_STOP,)),
             ("What runs", tuple(_what(bench, plan))),
             ("Where", (f"{bench.safety.place or NOT_SAID}; driven by the computer {host}",)),
             (
@@ -90,18 +121,7 @@ def door_sheet(
                     f"over at {latest} at the latest; if it still runs then, isolate it",
                 ),
             ),
-            ("Hazards", tuple(_hazards(bench, sequence, plan))),
-            ("To make it dead", tuple(_isolate(bench))),
             ("What normal looks like", tuple(_normal(plan))),
-            (
-                "Not normal",
-                (
-                    "smoke, smell, sparks, a new noise, anything loose: isolate, leave it off, call",
-                    "the computer says tripped, link lost or stopped: the motor is off; leave it so, call",
-                ),
-            ),
-            ("Whom to call", (bench.safety.contact or NOT_SAID,)),
-            ("Note", (NO_EMERGENCY_STOP,)),
         ),
     )
 
@@ -126,7 +146,7 @@ def _hazards(bench: Bench, sequence: Sequence, plan: Plan) -> Iterator[str]:
     for servo in bench.servos:
         yield f"servo '{servo.name}' moves between {servo.low_deg:g} deg and {servo.high_deg:g} deg"
     longest = max((pause for part in plan.cycles for pause in (part.pause, part.check_pause)), default=0)
-    pauses = f", also after a pause of {format_duration(longest * plan.tick_us / 1e6)}" if longest else ""
+    pauses = f", also after a pause of about {_about(longest, plan)}" if longest else ""
     yield f"everything starts by itself and without warning{pauses}"
     policy = sequence.interruptions
     if policy.resumes:
@@ -135,6 +155,12 @@ def _hazards(bench: Bench, sequence: Sequence, plan: Plan) -> Iterator[str]:
     fuse = "no fuse is named" if bench.safety.fuse_a is None else f"fuse {format_current(bench.safety.fuse_a)}"
     yield f"supply {format_voltage(bench.supply.voltage_v)}, {fuse}; motors and bridge may be hot"
     yield f"guard: {bench.safety.guard or NOT_SAID}"
+
+
+def _about(ticks: int, plan: Plan) -> str:
+    """A duration for a passer-by: to the second from ten on."""
+    seconds = ticks * plan.tick_us / 1e6
+    return format_duration(round(seconds) if seconds >= 10 else round(seconds, 1))
 
 
 def _isolate(bench: Bench) -> Iterator[str]:
@@ -151,16 +177,18 @@ def _isolate(bench: Bench) -> Iterator[str]:
 def _normal(plan: Plan) -> Iterator[str]:
     for part in plan.cycles:
         length = format_duration(part.later.totals.least * plan.tick_us / 1e6)
-        rest = f", then rests {format_duration(part.pause * plan.tick_us / 1e6)}" if part.pause else ""
+        rest = f", then rests about {_about(part.pause, plan)}" if part.pause else ""
         yield f"each '{part.name}' takes about {length}{rest}"
-    for rules in plan.wear:
-        for limit in rules.limits:
-            if limit.fail is not None:
-                yield f"it ends by itself once {limit.feature} is beyond {limit.fail.text}: worn"
+    limits = [limit for rules in plan.wear for limit in rules.limits]
+    ends = [f"{limit.feature} is beyond {limit.fail.text}" for limit in limits if limit.fail is not None]
+    for end in ends[:ENDS_MAX]:
+        yield f"it ends by itself once {end}: worn"
+    if len(ends) > ENDS_MAX:
+        yield f"and beyond {len(ends) - ENDS_MAX} more limits to wear, in the run folder"
     texts = list(dict.fromkeys(_judged(plan.root)))
     yield from texts[:NORMAL_MAX]
     if len(texts) > NORMAL_MAX:
-        yield f"and {len(texts) - NORMAL_MAX} expectations more, in the run folder"
+        yield f"and {len(texts) - NORMAL_MAX} more, in the run folder"
     if not texts:
         yield "the sequence expects nothing that is measured"
 
