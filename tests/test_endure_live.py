@@ -33,12 +33,15 @@ from ramprig.report.explain import explain_folder
 from ramprig.report.facts import gather
 from ramprig.report.making import make_report
 from ramprig.report.trends import cycles_of, wear_of
-from ramprig.sequence.cycle_watch import CycleWatch, Watched, place_of
+from ramprig.sequence.columns import bench_columns
+from ramprig.sequence.cycle_watch import CycleWatch, TurnDone, Watched, place_of
 from ramprig.sequence.executive import Progress
 from ramprig.sequence.outcome import Verdict
+from ramprig.sequence.rig import Rig
 from ramprig.sequence.running import RunResult, RunWish, run_sequence
 from ramprig.sequence.wear_limits import Threshold, TurnKind, WearLimit, WearRules, rules_of
 from ramprig.sequence.wear_words import FEATURE_WORDS, Whose, drive_of, full_names, word_of
+from ramprig.session.blocks import Block, Layout
 from sequence_rig import sequence_of, small_bench
 
 WEAR = "wear: {run in: {cycles: 2, for: 5 s}, baseline: 10, LIMITS}"
@@ -79,11 +82,16 @@ class Looked:
 
 
 def look(
-    folder: Path, *, limits: str, times: int, meddle: Callable[[Progress, MockDevice], None] | None = None
+    folder: Path,
+    *,
+    limits: str = "",
+    wear: str = WEAR,
+    times: int,
+    meddle: Callable[[Progress, MockDevice], None] | None = None,
 ) -> Looked:
     """Run the cycles on the mock, with these limits."""
     bench = small_bench()
-    steps = STEPS.replace("TIMES", str(times)).replace("WEAR", WEAR.replace(", LIMITS", limits and f", {limits}"))
+    steps = STEPS.replace("TIMES", str(times)).replace("WEAR", wear.replace(", LIMITS", limits and f", {limits}"))
     sequence = sequence_of(folder, steps, head="log: {period: 5 ms}\n")
     device = MockDevice(setup_of_bench(bench), seed=3)
     said: list[str] = []
@@ -261,6 +269,42 @@ def test_without_a_folder_wear_ends_a_run_too(tmp_path: Path) -> None:
     assert "cycles: 3, 4; cycles: 4 commanded" in result.outcome.sentence
 
 
+def test_where_wear_is_off_nothing_is_judged_and_the_features_are_recorded_all_the_same(tmp_path: Path) -> None:
+    run = look(tmp_path, wear="wear: off", times=16, meddle=stiffer(3.0, from_cycle=14))
+    assert run.result.outcome.verdict is Verdict.PASSED
+    assert "to watch" not in run.result.outcome.sentence
+    assert run.said == []
+    assert read_manifest(run.folder)["settings"]["wear"] == []
+    done = [line for line in run.lines if line["kind"] == "cycle_done"]
+    assert all(line["features"]["vent forward: steady current"] > 0.0 for line in done)
+    text = make_report([run.folder], out=tmp_path / "out", issued="").report.read_text("utf-8")
+    assert "No trend is judged: the sequence says &#x27;wear: off&#x27;." in text
+    assert "vent forward: steady current of each cycle" in text
+
+
+def test_between_cycles_nothing_is_kept_however_long_that_lasts() -> None:
+    columns = bench_columns(small_bench(), tick_us=1000)
+    watch = LiveWatch(Watched(rules=[rules()], columns=columns, tick_us=1000), say=lambda text: None)
+    layout = Layout.of(Rig.of(small_bench()).mask, 10)
+
+    def come(first: int, count: int) -> None:
+        for tick in range(first, first + 10 * count, 200):
+            ticks = np.arange(tick, tick + 200, 10, dtype=np.int64)
+            watch.on_block(Block(ticks, np.zeros((20, len(layout.channels)), np.int32), layout))
+
+    come(0, 20_000)
+    assert watch._pieces == []
+    assert watch._rows < live.BATCH_ROWS
+    watch.commanded()
+    come(200_000, 4000)
+    watch.begun(210_000)
+    come(240_000, 1000)
+    seen = watch.done(TurnDone(number=1, block=1, begin_tick=210_000, end_tick=249_990, after=0))
+    assert seen.samples == 4000
+    assert seen.features["duration"] == pytest.approx(39.99)
+    assert watch._pieces == []
+
+
 # ---- gone on with ----------------------------------------------------------------------------------------------------
 
 CYCLES = 22
@@ -362,6 +406,21 @@ def test_a_run_that_died_while_wear_was_ending_it_ends_at_once_when_it_is_resume
     assert f"vent: energy: fail limit at cycle {done}" in result.outcome.sentence
     counted = host.record().counted
     assert (counted.commanded, counted.done) == (done, done)
+
+
+def test_a_resumed_run_keeps_the_limits_that_it_began_with(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    host = Host(tmp_path, seed=1)
+    snapshots = watch_host(host, monkeypatch)
+    with pytest.raises(Killed):
+        host.run(Process(die_at=1500))
+    path = host.run_folder / "run.json"
+    manifest = json.loads(path.read_text("utf-8"))
+    manifest["settings"]["wear"][0]["baseline"] = 12  # as if the program had had another default then
+    path.write_text(json.dumps(manifest), "utf-8")
+    host.pause(3.0)
+    host.run(Process(), resume=True)
+    assert snapshots.begun[1].blocks[CYCLES_OF_1].rules.baseline == 12
+    assert read_manifest(host.run_folder)["settings"]["wear"][0]["baseline"] == 12
 
 
 # ---- the judge -------------------------------------------------------------------------------------------------------

@@ -19,7 +19,7 @@ from dataclasses import dataclass, field, replace
 from enum import IntEnum, StrEnum
 
 from ramprig.errors import UsageError
-from ramprig.sequence.wear_limits import Threshold, WearLimit
+from ramprig.sequence.wear_limits import Threshold, WearLimit, WearRules
 from ramprig.sequence.wear_words import FEATURE_WORDS, show_feature, word_of
 
 from .charts import Blocks, Cusum, Ewma, KOfN, Spread
@@ -318,22 +318,34 @@ class FeatureTrend:
         return f"{threshold.text} ({' or '.join(ends)})"
 
 
+@dataclass(slots=True)
 class TrendWatch:
-    """All features of a test; features may be missing in some cycles."""
+    """All features of a test; features may be missing in some cycles. By `rules` where there are some, and those that
+    these leave out are not looked at; else each by the settings' own limits."""
 
-    def __init__(self, settings: TrendSettings | None = None) -> None:
-        self.settings = settings or TrendSettings()
-        self.features: dict[str, FeatureTrend] = {}
+    settings: TrendSettings = field(default_factory=TrendSettings)
+    rules: WearRules | None = None
+    features: dict[str, FeatureTrend] = field(default_factory=dict)
 
     def add(self, cycle: int, values: Mapping[str, float]) -> list[Finding]:
         """Take the features of one cycle and return what they newly show, in the features' order."""
         found = []
         for name, value in values.items():
-            trend = self.features.get(name)
-            if trend is None:
-                trend = self.features[name] = FeatureTrend(name, self.settings)
-            found += trend.add(cycle, value)
+            trend = self.features.get(name) or self._begin(name)
+            if trend is not None:
+                found += trend.add(cycle, value)
         return found
+
+    def _begin(self, name: str) -> FeatureTrend | None:
+        """The stream of a feature that comes for the first time; None where it is not judged."""
+        if self.rules is None:
+            trend = FeatureTrend(name, self.settings)
+        elif (limit := self.rules.limit_of(name)) is not None:
+            trend = FeatureTrend(name, self.settings, limit, turn=self.rules.turn)
+        else:
+            return None
+        self.features[name] = trend
+        return trend
 
     @property
     def level(self) -> Level:

@@ -14,7 +14,7 @@ from typing import Any
 from ramprig.errors import RecordError
 from ramprig.sequence.wear_limits import TurnKind, WearLimit, WearRules
 
-from .trends import FeatureTrend, Finding, Level, TrendSettings
+from .trends import FeatureTrend, Finding, Level, TrendSettings, TrendWatch
 
 Line = Mapping[str, Any]  # JSON as it comes: what is in it is checked where it is used
 
@@ -70,11 +70,15 @@ class BlockJudge:
 
     rules: WearRules
     tick_us: int
-    features: dict[str, FeatureTrend] = field(default_factory=dict)
     turns: int = 0
     run_in: int = 0
+    _watch: TrendWatch = field(init=False)
     _part: int = 0
     _since_tick: int = 0
+
+    def __post_init__(self) -> None:
+        settings = TrendSettings(run_in=0, baseline=self.rules.baseline, detectors=self.rules.detectors)
+        self._watch = TrendWatch(settings, self.rules)
 
     def take(self, cycle: Cycle) -> list[Finding]:
         """Take the next cycle and return what it newly shows, in the features' order."""
@@ -85,27 +89,17 @@ class BlockJudge:
         if self.turns <= self.rules.run_in_turns or gone_s < self.rules.run_in_s:
             self.run_in += 1
             return []
-        found: list[Finding] = []
-        for name, value in cycle.features.items():
-            trend = self._trend(name)
-            if trend is not None:
-                found += trend.add(cycle.number or self.turns, value)
-        return found
+        return self._watch.add(cycle.number or self.turns, cycle.features)
 
-    def _trend(self, name: str) -> FeatureTrend | None:
-        """The stream of a feature; None where it is not judged."""
-        trend = self.features.get(name)
-        limit = self.rules.limit_of(name)
-        if trend is not None or limit is None:
-            return trend
-        settings = TrendSettings(run_in=0, baseline=self.rules.baseline, detectors=self.rules.detectors)
-        trend = self.features[name] = FeatureTrend(name, settings, limit, turn=self.rules.turn)
-        return trend
+    @property
+    def features(self) -> Mapping[str, FeatureTrend]:
+        """The streams of the features that are judged, by name."""
+        return self._watch.features
 
     @property
     def level(self) -> Level:
         """The worst of all features."""
-        return max((trend.level for trend in self.features.values()), default=Level.OK)
+        return self._watch.level
 
     @property
     def established(self) -> bool:

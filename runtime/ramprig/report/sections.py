@@ -328,7 +328,9 @@ def account(facts: Facts, audit: Audit) -> str:
 
 
 def trend_findings(found: Sequence[Trend], rules: Sequence[WearRules]) -> str:
-    """What the trends of the features showed, and by which rules."""
+    """What the trends of the features showed, and by which rules; without rules nothing was judged."""
+    if not rules:
+        return page.paragraph("No trend is judged: the sequence says 'wear: off'.", kind="note")
     lines = [line for each in rules for line in each.lines()]
     rule = page.paragraph(f"Looked for: {'; '.join(lines)}. {NO_STANDARD}", kind="note")
     rows = [

@@ -123,6 +123,8 @@ def cycles_of(facts: Facts, features: Sequence[TurnFeatures]) -> list[Cycle]:
 def _by_feature(facts: Facts, digest: Digest) -> list[Trend]:
     cycles = cycles_of(facts, digest.features)
     judge, findings = wear_of(facts, cycles)
+    if not judge.blocks:
+        return _unjudged([cycle for cycle in cycles if cycle.number])
     found = []
     several = len({number for number, _ in judge.blocks}) > 1
     for (number, turn), block in judge.blocks.items():
@@ -143,6 +145,18 @@ def _by_feature(facts: Facts, digest: Digest) -> list[Trend]:
             )
             found.append(Trend(prefix + name, unit_of(name), numbers, values, judged, of_feature))
     return found
+
+
+def _unjudged(cycles: Sequence[Cycle]) -> list[Trend]:
+    """The features of a run whose file says that no wear is judged."""
+    if len(cycles) < CYCLES_MIN:
+        return []
+    numbers = np.array([float(cycle.number) for cycle in cycles])
+    columns = {
+        name: np.array([cycle.features.get(name, math.nan) for cycle in cycles])
+        for name in dict.fromkeys(name for cycle in cycles for name in cycle.features)
+    }
+    return [Trend(name, unit_of(name), numbers, values, FeatureTrend(name), ()) for name, values in columns.items()]
 
 
 def _size(triple: tuple[float, float, float] | None) -> float:

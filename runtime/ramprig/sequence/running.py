@@ -35,6 +35,7 @@ from .outcome import Outcome, Tally, Verdict
 from .plan import Plan
 from .reading import Sequence
 from .rig import Rig
+from .wear_limits import WearRules, rules_of
 
 DISK_STALL_S = 3.0
 """The motors are stopped when the disk has made no progress for so long."""
@@ -214,13 +215,19 @@ def _watch(wish: RunWish, plan: Plan, part: int) -> CycleWatch | None:
         return None
     return wish.watching(
         Watched(
-            rules=plan.wear,
+            rules=_rules(wish.carry_on, plan),
             columns=bench_columns(wish.bench, tick_us=plan.tick_us),
             tick_us=plan.tick_us,
             part=part,
             lines=() if wish.carry_on is None else wish.carry_on.lines,
         )
     )
+
+
+def _rules(carry_on: CarryOn | None, plan: Plan) -> tuple[WearRules, ...]:
+    """The limits to wear: those that the run began with, as its record has them, else those of the plan."""
+    settings = {} if carry_on is None else carry_on.manifest.get("settings") or {}
+    return rules_of(settings["wear"]) if "wear" in settings else plan.wear
 
 
 @contextmanager
