@@ -489,6 +489,19 @@ def test_every_feature_that_is_computed_has_its_word_and_unit() -> None:
         assert name in full_names(word_of(name), drive, None)
 
 
+def test_few_checks_are_a_baseline() -> None:
+    checks = rules(turn=TurnKind.CHECK, run_in_turns=1, run_in_s=0.0, baseline=3, detectors=False)
+    judge = WearJudge.of([checks], tick_us=1000)
+    found: list[str] = []
+    for count, energy_j in enumerate((9.0, 1.0, 1.02, 0.98, 1.3, 1.05, 1.2), 1):
+        turn = cycle(0, at_s=100.0 * count, others={"vent: energy": energy_j})
+        found += map(str, judge.take(turn))
+    assert found == [
+        "vent: energy: watch limit at check 7, 1.2 J against 1 J at first (+20.0 %); beyond +10 % (above 1.1 J) "
+        "in 2 of the last 3 checks: 5, 7"
+    ]
+
+
 def test_blocks_are_judged_each_by_its_own_rules() -> None:
     judge = WearJudge.of([rules(run_in_turns=0, run_in_s=0.0)], tick_us=1000)
     other = Cycle(number=1, block=2, part=1, begin_tick=0, end_tick=900, features={"vent: energy": 99.0})

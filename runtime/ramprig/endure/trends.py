@@ -19,7 +19,13 @@ from dataclasses import dataclass, field, replace
 from enum import IntEnum, StrEnum
 
 from ramprig.errors import UsageError
-from ramprig.sequence.wear_limits import Threshold, WearLimit, WearRules
+from ramprig.sequence.wear_limits import (
+    BASELINE_LEAST,
+    CHECKS_BASELINE_LEAST,
+    Threshold,
+    WearLimit,
+    WearRules,
+)
 from ramprig.sequence.wear_words import FEATURE_WORDS, show_feature, word_of
 
 from .charts import Blocks, Cusum, Ewma, KOfN, Spread
@@ -85,8 +91,10 @@ class TrendSettings:
     detectors: bool = True
 
     def __post_init__(self) -> None:
-        if self.baseline < 10 or self.run_in < 0:
-            raise UsageError(f"a baseline of {self.baseline} cycles after {self.run_in}; it needs at least 10 after 0")
+        least = BASELINE_LEAST if self.detectors else CHECKS_BASELINE_LEAST
+        if self.baseline < least or self.run_in < 0:
+            found = f"a baseline of {self.baseline} cycles after {self.run_in}"
+            raise UsageError(f"{found}; it needs at least {least} after 0")
         fail_change = math.inf if self.fail_change is None else self.fail_change
         if not 0.0 < self.watch_change <= fail_change:
             raise UsageError(
