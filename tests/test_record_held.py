@@ -8,12 +8,15 @@ from pathlib import Path
 import pytest
 
 from endure_crash import Killed, Process
+from ramprig.errors import RecordError
 from ramprig.record.folder import RunFolder
 from ramprig.record.keeping import Around, Keeping, Thinning
 from ramprig.record.reading import audit, read_events, read_manifest, sample_files
 from ramprig.record.recorder import Recorder
+from ramprig.record.rows import Rows
 from ramprig.record.volumes import HELD_NAMES, Stream, VolumeLimits, held_files, volume_files
 from ramprig.sequence.happened import Marked
+from ramprig.session.blocks import Block
 from record_long import FIRST_TICK, PERIOD, begin, finish
 from record_samples import blocks_of, start_anchor
 
@@ -37,6 +40,11 @@ def live(recorder: Recorder, handed: list[int]) -> None:
             recorder.on_event(Marked(tick=int(block.ticks[-1]), name="here"))
         recorder._writer.sync_files()
         handed.append(int(block.ticks[-1]))
+
+
+def hand_over(recorder: Recorder, blocks: list[Block]) -> None:
+    for block in blocks:
+        recorder.on_block(block)
 
 
 def whole_run(root: Path, handed: list[int]) -> None:
@@ -158,3 +166,25 @@ def test_in_virtual_time_nothing_is_held_on_the_disk(tmp_path: Path) -> None:
         recorder.on_block(block)
     assert held_files(recorder.folder.path) == []
     finish(recorder, SAMPLES)
+
+
+def test_rows_that_a_full_disk_kept_from_the_volumes_are_set_aside_when_the_run_goes_on(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    recorder = begin(tmp_path, KEEPING, durable=True, on_trouble=lambda trouble: None)
+    blocks = blocks_of(SAMPLES, size=BLOCK)
+    hand_over(recorder, blocks[:40])
+
+    def full(rows: Rows) -> None:
+        raise OSError(28, "No space left on device")
+
+    monkeypatch.setattr(recorder._samples._thinner, "_write", full)
+    with pytest.raises(RecordError):
+        hand_over(recorder, blocks[40:])
+    folder = finish(recorder, SAMPLES)
+    held = [path.read_bytes() for path in held_files(folder)]
+    before = audit(folder)
+    assert before.rows == read_manifest(folder)["samples"]["written"]
+    RunFolder.reopen(folder, read_manifest(folder), {"text": "a break"}, port="", identity={}).close()
+    assert [(folder / f"unwritten-{number}.csv").read_bytes() for number in (1, 2)] == held
+    assert held_files(folder) == []

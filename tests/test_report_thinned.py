@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import csv
 import io
+import shutil
 from pathlib import Path
 
 import numpy as np
@@ -14,6 +15,7 @@ from ramprig.cli.read import summary
 from ramprig.errors import RecordError
 from ramprig.record.folder import CYCLE_RANGES_FILE, INTERVAL_RANGES_FILE
 from ramprig.record.reading import audit, read_manifest
+from ramprig.report.compare import differing
 from ramprig.report.digest import Digest, digest_samples
 from ramprig.report.envelope import Envelope
 from ramprig.report.facts import gather
@@ -126,3 +128,22 @@ def test_an_envelope_of_ranges_alone_covers_their_time() -> None:
     band = envelope.band("a")
     assert (band.least.min(), band.greatest.max()) == (0.0, 5.0)
     assert band.time_s[-1] > 90
+
+
+def test_what_came_after_the_last_ranges_is_taken_from_the_rows(full: Path, thinned: Path, tmp_path: Path) -> None:
+    """As a run that was killed leaves it: the span under way has no line."""
+    folder = tmp_path / "killed"
+    shutil.copytree(thinned, folder)
+    data = (folder / CYCLE_RANGES_FILE).read_bytes()
+    lines = data.splitlines(keepends=True)
+    (folder / CYCLE_RANGES_FILE).write_bytes(b"".join(lines[:-2]))
+    whole, less = digest(full), digest(folder)
+    assert [row.samples for row in less.intervals[:-1]] == [row.samples for row in whole.intervals[:-1]]
+    assert 0 < less.intervals[-1].samples < whole.intervals[-1].samples
+    assert less.intervals[-1].end_s == whole.intervals[-1].end_s
+
+
+def test_runs_that_were_thinned_otherwise_are_told_apart_when_compared(full: Path, thinned: Path) -> None:
+    unlike = differing([gather(full), gather(thinned)])
+    assert unlike["log thinned"][0] == "-"
+    assert unlike["log thinned"][1].startswith("every 50th row and ranges over each 1 s; ")

@@ -11,7 +11,7 @@ from typing import Any
 from ramprig.quantity import format_duration
 from ramprig.record.events import from_rfc3339, rfc3339
 from ramprig.record.parts import parts_of
-from ramprig.record.volumes import volume_names
+from ramprig.record.volumes import volume_files
 from ramprig.sequence.outcome import Outcome, Verdict
 
 Document = Mapping[str, Any]  # JSON as it comes: what is in it is checked where it is used
@@ -135,9 +135,7 @@ _BY = {"policy": "the sequence's own rule", "command": "`ramprig resume`"}
 def last_known_unix_s(manifest: Document, events: Sequence[Document], folder: Path) -> float:
     """When the run was last known to be alive: its last event, or the last write to its samples."""
     times = [from_rfc3339(event["utc"]).timestamp() for event in events[-1:]]
-    path = folder / volume_names(folder, parts_of(dict(manifest))[-1])[-1]
     if manifest.get("status") == "finished" and manifest.get("ended"):
         return max([*times, from_rfc3339(str(manifest["ended"])).timestamp()])
-    if path.exists():
-        times.append(path.stat().st_mtime)
+    times += [path.stat().st_mtime for path in volume_files(folder, parts_of(dict(manifest))[-1])]
     return max(times, default=from_rfc3339(str(manifest["started"])).timestamp())

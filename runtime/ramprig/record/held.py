@@ -7,7 +7,8 @@ Two files take turns, each with the header and all rows of some seconds:
 
 What the older file holds by then has been decided and, before it goes, synced in its volume. A run that ends in order
 writes its undecided rows to the volume and removes both; whoever reads one that did not takes from them the rows after
-the last one of its volumes, and resuming moves those there.
+the last one of its volumes, and resuming moves those there. Of a run that ended because its disk was full, resuming
+keeps them as `unwritten-1.csv` and so on: its account tells those rows as unwritten.
 """
 
 from __future__ import annotations
@@ -88,13 +89,17 @@ def _remove(folder: Path) -> None:
 def absorb_held(folder: Path, part: Mapping[str, Any]) -> None:  # Any: JSON as it comes
     """Move the held rows of a part that broke off to the end of its last volume. Raises OSError, RecordError.
 
-    Where that is broken off too, doing it again comes to the same.
+    Where that is broken off too, doing it again comes to the same. A part whose account is made is left as it is.
     """
     held = held_files(folder)
+    if part.get("status") == "finished":
+        for path in held:
+            _set_aside(path)
+        return
     if not held:
         return
     volumes = [path for path in volume_files(folder, part) if path not in held]
-    if volumes and part.get("status") != "finished":
+    if volumes:
         file, _ = AppendFile.reopen(volumes[-1])
         try:
             last = _last_tick(volumes)
@@ -108,6 +113,15 @@ def absorb_held(folder: Path, part: Mapping[str, Any]) -> None:  # Any: JSON as 
         finally:
             file.close()
     _remove(folder)
+
+
+def _set_aside(path: Path) -> None:
+    """Give a file of held rows a name that nobody writes to again."""
+    number = 1
+    while (to := path.with_name(f"unwritten-{number}.csv")).exists():
+        number += 1
+    path.rename(to)
+    sync_folder(path.parent)
 
 
 def _last_tick(volumes: list[Path]) -> float:

@@ -5,7 +5,10 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from typing import TYPE_CHECKING
 
+from ramprig.sequence.log_forecast import said_of
+
 from . import page
+from .kept import thinning_of
 from .plots import label_of
 
 if TYPE_CHECKING:
@@ -29,6 +32,7 @@ def conditions(facts: Facts) -> dict[str, str]:
         "bench file": inputs.get("bench", OTHERWISE),
         "sequence file": inputs.get("sequence", OTHERWISE),
         "sample period, ticks": str(loggings[0].get("period_ticks")) if loggings else OTHERWISE,
+        "log thinned": OTHERWISE if (rule := thinning_of(facts)) is None else said_of(rule),
         "software": str((manifest.get("software") or {}).get("ramprig")),
         "parts (interruptions)": str(len(facts.parts)),
     }

@@ -126,11 +126,11 @@ def digest_samples(facts: Facts) -> Digest:
     if isinstance(edges, list):
         digest.interval_edges = len(edges)
         digest.interval_stride = -(-len(facts.passes) // ROWS_MAX)
-    table = _IntervalTable(columns, edges)
+    is_thinned = thinning_of(facts) is not None
+    table = _from_ranges(facts, columns, edges) if is_thinned else _IntervalTable(columns, edges)
     curves = {motor: _CurveWalk(digest, motor) for motor in facts.motors if f"{motor}.speed_rpm" in columns}
     recorded = recorded_features(facts.cycles)
     _keep_features(digest, recorded or [])
-    is_thinned = thinning_of(facts) is not None
     spans = [] if recorded is not None or is_thinned else spans_of(facts.cycles)
     on_output = on_output_of(facts.manifest)
     aged = FeatureWalk(facts.columns, spans, tick_us=facts.tick_us, on_output=on_output)
@@ -152,24 +152,26 @@ def digest_samples(facts: Facts) -> Digest:
         _keep_features(digest, aged.close_part(part))
         digest.torn_bytes += stream.torn_bytes
     if is_thinned:
-        table = _from_ranges(facts, digest, edges) or table
+        _widen(facts, digest)
     digest.intervals = table.rows()
     digest.totals = table.totals()
     return digest
 
 
-def _from_ranges(facts: Facts, digest: Digest, edges: list[float] | float) -> _IntervalTable | None:
-    """The table of intervals over all samples, and the envelope widened to them; None where no ranges were recorded."""
-    finest = ranges_path(facts, with_cycles=False)
+def _from_ranges(facts: Facts, columns: tuple[str, ...], edges: list[float] | float) -> _IntervalTable:
+    """A table of intervals that has all samples up to the end of the ranges that were recorded; rows may follow."""
+    table = _IntervalTable(columns, edges)
     path = ranges_path(facts, with_cycles=isinstance(edges, list))
-    if path is None or finest is None:
-        return None
-    for line in read_ranges(finest, digest.columns):
-        digest.envelope.widen(line.first_s, line.last_s, {name: found[:3] for name, found in line.columns.items()})
-    table = _IntervalTable(digest.columns, edges)
-    for line in read_ranges(path, digest.columns):
+    for line in read_ranges(path, columns) if path is not None else ():
         table.add_line(line)
     return table
+
+
+def _widen(facts: Facts, digest: Digest) -> None:
+    """Have the envelope reach to every sample of the finest ranges that were recorded."""
+    path = ranges_path(facts, with_cycles=False)
+    for line in read_ranges(path, digest.columns) if path is not None else ():
+        digest.envelope.widen(line.first_s, line.last_s, {name: found[:3] for name, found in line.columns.items()})
 
 
 def _keep_features(digest: Digest, found: Sequence[TurnFeatures]) -> None:
@@ -233,8 +235,16 @@ class _IntervalTable:
         self._columns = columns
         self._edges = edges
         self._sums: dict[int, tuple[float, float, int, dict[str, list[float]]]] = {}
+        self._summed_s = -math.inf
 
     def add(self, times: Floats, piece: Piece) -> None:
+        """Rows; those in the time of lines that were added before are in these already."""
+        known = int(np.searchsorted(times, self._summed_s, side="right"))
+        if known:
+            times = times[known:]
+            piece = Piece(piece.ticks[known:], {name: piece.numbers[name][known:] for name in self._columns})
+        if not len(times):
+            return
         if isinstance(self._edges, float):
             numbers = (times // self._edges).astype(np.int64)
         else:
@@ -259,6 +269,7 @@ class _IntervalTable:
 
     def add_line(self, line: RangeLine) -> None:
         """A span that was summed up while it was recorded; it belongs where it begins."""
+        self._summed_s = max(self._summed_s, line.last_s)
         if isinstance(self._edges, float):
             number = int(line.first_s // self._edges)
         else:
