@@ -39,11 +39,11 @@ FULL = "log: {period: 2 ms}"
 THIN = "log: {period: 2 ms, thin: {keep every: 50, ranges every: 1 s, before: 0 s, after: 0 s}}"
 
 
-def rehearsed(folder: Path, log: str, *, watched: bool = True) -> Path:
+def rehearsed(folder: Path, log: str, *, watched: bool = True, sequence: str = CYCLES) -> Path:
     """A run of three cycles with two checks on the mock; its folder."""
     folder.mkdir()
     (folder / "bench.yaml").write_text(BENCH, "utf-8")
-    (folder / "ranges.yaml").write_text(CYCLES.replace("LOG", log), "utf-8")
+    (folder / "ranges.yaml").write_text(sequence.replace("LOG", log), "utf-8")
     bench = load_bench(folder / "bench.yaml")
     port = MockPort(MockDevice(setup_of_bench(bench), seed=3), pace="virtual", seed=3)
     wish = RunWish(

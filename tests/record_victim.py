@@ -1,7 +1,7 @@
 """Writes a run until it is killed or its disk is full, and says on standard output how far it is: for
 test_record_crash.py.
 
-    python record_victim.py ROOT BLOCKS [FILE_SIZE_LIMIT]
+    python record_victim.py ROOT BLOCKS [FILE_SIZE_LIMIT [VOLUME_ROWS]]        (0: no limit)
 
 Lines: `folder PATH`, then for each block `rows HANDED WRITTEN SYNCED`; `stop KIND` when the motor is to be stopped;
 `raised`; `end`.
@@ -19,8 +19,10 @@ import numpy as np
 from ramprig.errors import RecordError
 from ramprig.port.clock import SystemClock
 from ramprig.record.folder import RunDescription, RunFolder
+from ramprig.record.keeping import Keeping
 from ramprig.record.manifest import Anchor, RunEnd
 from ramprig.record.recorder import Recorder
+from ramprig.record.volumes import VolumeLimits
 from ramprig.record.writer import Trouble
 from ramprig.session.events import GapFilled
 from record_samples import TICK_US, blocks_of, vent_columns
@@ -37,7 +39,7 @@ def main() -> None:
     clock = SystemClock()
     folder = RunFolder.create(root, RunDescription(name="victim"), started_unix_s=clock.wall())
     start = Anchor(0, clock.now(), clock.wall())
-    if len(sys.argv) > 3:
+    if len(sys.argv) > 3 and int(sys.argv[3]):
         import resource
 
         resource.setrlimit(resource.RLIMIT_FSIZE, (int(sys.argv[3]), resource.RLIM_INFINITY))
@@ -53,6 +55,7 @@ def main() -> None:
         clock=clock,
         on_trouble=on_trouble,
         sync_every_s=SYNC_EVERY_S,
+        keeping=Keeping(volumes=VolumeLimits(rows=int(sys.argv[4]))) if len(sys.argv) > 4 else None,
     )
     say("folder", folder.path)
     pattern = blocks_of(50)[0]

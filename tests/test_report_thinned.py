@@ -147,3 +147,29 @@ def test_runs_that_were_thinned_otherwise_are_told_apart_when_compared(full: Pat
     unlike = differing([gather(full), gather(thinned)])
     assert unlike["log thinned"][0] == "-"
     assert unlike["log thinned"][1].startswith("every 50th row and ranges over each 1 s; ")
+
+
+REPEATED = """
+sequence: repeated
+bench: bench.yaml
+log: {period: 10 ms, thin: {keep every: 50, ranges every: 7 s, before: 0 s, after: 0 s}}
+steps:
+  - repeat:
+      times: 70
+      steps:
+        - sweep: {motor: vent, shape: triangle, from: 20 %, to: 60 %, period: 2 s}
+"""
+
+
+def test_without_cycles_the_intervals_are_of_the_time_that_ranges_fit_into(tmp_path: Path) -> None:
+    found = digest(rehearsed(tmp_path / "repeated", "", sequence=REPEATED))
+    assert [(row.number, row.samples) for row in found.intervals] == [
+        (0, 6300),
+        (1, 6300),
+        (2, found.intervals[2].samples),
+    ]
+    manifest = read_manifest(next((tmp_path / "repeated" / "runs").iterdir()))
+    assert sum(row.samples for row in found.intervals) == manifest["samples"]["received"]
+    low, _, high = found.totals["vent.duty_pct"]
+    assert low == 0
+    assert high == pytest.approx(60.0, abs=0.5)  # the turning point of a sweep, which few of the rows show

@@ -17,7 +17,7 @@ from ramprig.record.volumes import Stream
 
 from .envelope import INTERVALS_MAX, Band, Envelope
 from .facts import Facts
-from .kept import RangeLine, ranges_path, read_ranges, thinning_of
+from .kept import RangeLine, has_cycle_ranges, ranges_path, read_ranges, thinning_of
 
 Floats = NDArray[np.float64]
 
@@ -29,6 +29,7 @@ STEADY_S = 0.3
 ROWS_MAX = 20_000
 """Lines of the table of intervals; longer runs are summed over several cycles or minutes a line."""
 CURVE_STEP_PCT = 0.5
+MINUTE_S = 60.0
 FEATURES_MAX = 50_000
 """Cycles and checks whose features are kept, at under 1 kB each; a longer run's later ones are left out."""
 
@@ -221,9 +222,15 @@ def _spans(facts: Facts) -> list[tuple[int, float, float]]:
 
 
 def _edges(facts: Facts) -> list[float] | float:
-    """Where intervals begin: at cycles where there are some, else every minute (given as a width)."""
+    """Where intervals begin: at cycles where there are some, else every minute (given as a width).
+
+    Of a thinned log the ranges that were recorded must fit into them, so a minute may be a little longer.
+    """
+    rule = thinning_of(facts)
+    if rule is not None and rule.ranges_s is not None and not has_cycle_ranges(facts):
+        return math.ceil(MINUTE_S / rule.ranges_s) * rule.ranges_s
     if len(facts.passes) < 2:
-        return 60.0
+        return MINUTE_S
     stride = -(-len(facts.passes) // ROWS_MAX)
     return facts.passes[::stride]
 

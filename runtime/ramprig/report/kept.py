@@ -51,6 +51,11 @@ def ranges_path(facts: Facts, *, with_cycles: bool) -> Path | None:
     return next((facts.folder / name for name in names if (facts.folder / name).is_file()), None)
 
 
+def has_cycle_ranges(facts: Facts) -> bool:
+    """Whether ranges of cycles were recorded."""
+    return (facts.folder / CYCLE_RANGES_FILE).is_file()
+
+
 def read_ranges(path: Path, columns: tuple[str, ...]) -> Iterator[RangeLine]:
     """The spans with samples, one after another; a torn last line is left out. Raises RecordError."""
     try:
