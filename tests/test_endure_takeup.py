@@ -259,12 +259,15 @@ def test_a_cycle_tells_its_features_by_name_and_which_are_absent_and_why() -> No
     values = found.values()
     assert values["vent: lost motion"] == found.motors["vent"].lost_motion_deg == pytest.approx(1.0, abs=0.1)
     assert "latch: move time" in values
-    missing = absent([values, values])
-    assert missing["latch: move time"] == NEEDS["move time"]
+    known = [name for name, value in values.items() if not math.isnan(value)]
+    missing = absent(known, motors=["vent", "fan"], servos=["latch"])
+    assert missing["vent: break-away duty"] == NEEDS["break-away duty"]
     assert "vent: lost motion" not in missing
-    assert "vent backward: break-away duty" in missing
-    assert absent([values, dict.fromkeys(values, 0.0)]) == {}
-    assert absent([]) == {}
+    assert not any(name.startswith(("fan", "latch")) for name in missing)  # they did not move
+    moved = absent([*known, "latch: commanded move time"], motors=["vent"], servos=["latch"])
+    assert set(moved) - set(missing) == {"latch: move time", "latch: supply sag"}
+    assert moved["latch: move time"] == NEEDS["move time"]
+    assert absent(values, motors=["vent"], servos=["latch"]) == {}
 
 
 def test_every_feature_of_a_motor_or_servo_says_what_it_asks_for() -> None:

@@ -120,13 +120,20 @@ def named(attribute: str) -> str:
     return (words if unit in _UNITS else attribute).replace("_", " ")
 
 
-def absent(rows: Iterable[Mapping[str, float]]) -> dict[str, str]:
-    """The features that none of these cycles has, by their full names, with what each would ask for."""
-    missing: dict[str, str] = {}
-    for place, row in enumerate(rows):
-        nothing = {name: NEEDS.get(name.rpartition(": ")[2], "") for name, value in row.items() if math.isnan(value)}
-        missing = nothing if place == 0 else {name: why for name, why in missing.items() if name in nothing}
-    return {name: why for name, why in missing.items() if why}
+def absent(known: Iterable[str], *, motors: Sequence[str], servos: Sequence[str]) -> dict[str, str]:
+    """The features that are not among the `known` full names, such as `vent: lost motion`, with what each asks for.
+
+    One that has directions is absent where neither has it; a motor or servo of which nothing is known did not move.
+    """
+    seen = {(name.rpartition(": ")[0].partition(" ")[0], name.rpartition(": ")[2]) for name in known}
+    moved = {drive for drive, _ in seen}
+    of_servos = {named(name) for name in SERVO_NAMES}
+    return {
+        f"{drive}: {word}": why
+        for drive in (*motors, *servos)
+        for word, why in NEEDS.items()
+        if (word in of_servos) == (drive in servos) and drive in moved and (drive, word) not in seen
+    }
 
 
 def unit_of(name: str) -> str:

@@ -20,6 +20,7 @@ from .digest import Digest
 from .explain import Explanation, view_of_trip
 from .facts import Facts
 from .trends import rules_in_force, trends_of
+from .untold import untold_table
 
 ENTRIES = {
     "lab": "laboratory and its address",
@@ -159,6 +160,7 @@ def _trends(read: Read, figures: _Figures) -> str:
     if not found:
         return ""
     words = sections.trend_findings(found, rules_in_force(read.facts)) + checks_table(read.digest.features)
+    words += untold_table(read.digest.features, motors=read.facts.motors, servos=read.facts.servos)
     return figures.put(plots.by_cycle(read.facts, found)) + words
 
 
