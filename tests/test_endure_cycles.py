@@ -142,6 +142,9 @@ def test_cycles_are_confirmed_rested_and_checked(tmp_path: Path) -> None:
     order = [event.number for event in run.events if isinstance(event, CycleCommanded)]
     assert order == [1, 2, 3, 4]
     assert run.outcome.overdue == 0
+    resting = {now.doing for now in run.progress if now.cycle == 0 and now.elapsed_s > ends[1] / 1000.0}
+    assert "rest until the next cycle" in resting
+    assert all(now.doing != "rest until the next cycle" for now in run.progress if now.cycle)
 
 
 def jam_second(now: Progress, device: MockDevice, session: Session, port: MockPort) -> None:

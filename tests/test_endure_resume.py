@@ -64,6 +64,8 @@ def test_a_lost_link_or_a_restart_is_gone_on_with_by_itself_where_the_sequence_s
     assert result.outcome.sentence.endswith(f"; interrupted 1 time: {cause}")
     assert read_manifest(host.run_folder)["stop_reason"] == result.outcome.sentence
     assert host.opened >= 2
+    assert host.said[0].startswith("interrupted: ")
+    assert host.said[1] == "looking for the board for 20 s at most"
     folder = host.run_folder
     (told,) = read_manifest(folder)["interruptions"]
     assert (told["cause"], told["by"], told["number"]) == (cause.value, "policy", 1)

@@ -97,7 +97,7 @@ def test_an_interruption_is_told(facts: Facts, tmp_path: Path) -> None:
     manifest = dict(facts.manifest) | {"interruptions": [interruption]}
     (tmp_path / "run.json").write_text(json.dumps(manifest), encoding="utf-8")
     text = make_report([tmp_path], out=tmp_path / "out", issued="").report.read_text("utf-8")
-    assert "interruption 1: the board restarted; before: it browned out" in text
+    assert "interruption 1</td><td>the board restarted; before: it browned out" in text
 
 
 def made_up(values: np.ndarray[tuple[int], np.dtype[np.float64]]) -> tuple[Facts, Digest]:

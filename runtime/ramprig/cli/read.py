@@ -74,7 +74,9 @@ def samples_line(manifest: dict[str, Any], found: Audit) -> str:  # Any: as in s
     parts = [f"{account[key]} {key}" for key in ("expected", "received", "lost", "written")]
     parts += [f"{account[key]} {key}" for key in ("thinned", "recovered", "unwritten") if account.get(key)]
     volumes = sum(len(part.get("samples_files") or [""]) for part in manifest.get("parts") or [manifest])
-    return ", ".join(parts) + f"; {found.rows} rows in {'the file' if volumes == 1 else f'{volumes} files'}"
+    text = ", ".join(parts) + f"; {found.rows} rows in {'the file' if volumes == 1 else f'{volumes} files'}"
+    beside = found.rows - int(account["written"])
+    return text + (f", {beside} of them from before a break, of which there is no account" if beside > 0 else "")
 
 
 def gap_lines(account: dict[str, Any]) -> list[str]:  # Any: as in summary

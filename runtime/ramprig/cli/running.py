@@ -119,6 +119,7 @@ def carry_out_wish(wish: RunWish, way: Way) -> int:
 
     from ramprig.endure.live import watching
     from ramprig.endure.resume import Surroundings, run_enduring
+    from ramprig.report.explain import likely_lines
     from ramprig.sequence.compile import compile_plan
     from ramprig.sequence.report import wear_lines
     from ramprig.sequence.running import run_sequence
@@ -150,6 +151,7 @@ def carry_out_wish(wish: RunWish, way: Way) -> int:
         progress=lambda far: progress.show(lambda: how_far(far)),
         guard=guard,
         asked_by=lambda: ", ".join(name for signals in watch for name in signals.received),
+        explain=likely_lines,
         began=None if way.virtual else began,
     )
     try:

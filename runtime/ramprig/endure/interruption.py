@@ -111,7 +111,7 @@ class Interruption:
         number = len(manifest.get("interruptions", [])) + 1
         down_s = round(max(0.0, now_unix_s - last_unix_s), 3)
         reason = str(manifest.get("stop_reason") or "")
-        text = f"interruption {number}: {cause} after {cycles_done} cycles done"
+        text = f"interruption {number}: {cause} after {cycles_done} {'cycle' if cycles_done == 1 else 'cycles'} done"
         if open_number is not None:
             text += f", in cycle {open_number}, which counts as not done"
         text += f"; the run went on {format_duration(down_s)} later, by {_BY[by]}"

@@ -75,8 +75,9 @@ def fit_weibull(failures: Sequence[float] | Array, suspensions: Sequence[float] 
     """
     failed, left = _checked(failures, suspensions)
     if len(np.unique(failed)) < 2:
+        count = "1 failure" if len(failed) == 1 else f"{len(failed)} failures"
         raise UsageError(
-            f"{len(failed)} failures; a Weibull fit needs two at different times. With none or one, use the "
+            f"{count}; a Weibull fit needs two at different times. With none or one, use the "
             "success-run numbers, or a shape known from elsewhere (Weibayes)"
         )
     optimize = need("scipy.optimize", purpose=PURPOSE)

@@ -226,8 +226,8 @@ class Surroundings:
     """What a run that goes on by itself needs of its caller.
 
     `open_port` opens the port anew, by whatever name it has now; `pause` lets so many seconds pass while no port is
-    open; `wall` is the time of day in Unix seconds. `tell` says what is going on to the user. The others are those of
-    `run_sequence`.
+    open; `wall` is the time of day in Unix seconds. `tell` says what is going on to the user; `explain` tells of the
+    run in a folder why it was interrupted, as far as that is known. The others are those of `run_sequence`.
     """
 
     open_port: Callable[[], Port]
@@ -237,6 +237,7 @@ class Surroundings:
     progress: Callable[[Progress], None] | None = None
     guard: Callable[[Session], AbstractContextManager[object]] | None = None
     asked_by: Callable[[], str] | None = None
+    explain: Callable[[Path], list[str]] = lambda folder: []
     began: Callable[[Path], None] | None = None
 
 
@@ -251,6 +252,8 @@ def run_enduring(wish: RunWish, around: Surroundings, *, port: Port | None = Non
         wish = replace(wish, watching=watching(around.tell))
     result = _run(wish, around, around.open_port() if port is None else port)
     while (folder := result.folder) is not None and _may_go_on(wish.sequence, result.outcome, folder):
+        for line in (f"interrupted: {result.outcome.sentence}", *around.explain(folder)):
+            around.tell(line)
         later = _go_on(wish, around, folder)
         if isinstance(later, str):
             add_note(folder, f"not gone on with: {later}", unix_s=around.wall(), by="ramprig")
@@ -279,7 +282,7 @@ def _go_on(wish: RunWish, around: Surroundings, folder: Path) -> RunResult | str
     """The next part of the run; a sentence where there is none, because the board did not come back as it was."""
     policy = wish.sequence.interruptions
     bound_s = around.wall() + float(policy.within_s)
-    around.tell(f"interrupted; looking for the board for {format_duration(policy.within_s)} at most")
+    around.tell(f"looking for the board for {format_duration(policy.within_s)} at most")
     while True:
         around.pause(RETRY_S)
         now_s = around.wall()

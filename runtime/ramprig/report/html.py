@@ -36,6 +36,12 @@ ENTRIES = {
 """What a person may enter for the report: name and meaning."""
 
 
+WENT_ON = ("passed", "failed")
+"""Verdicts of runs that came to their end: a trip in one of these was gone on after."""
+NOTHING = 1e-9
+"""A mean of so small a share of the greatest value is what rounding left of 0."""
+
+
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Read:
     """One run, read whole: its facts, the digest of its samples, the audit of its account, and why it ended."""
@@ -132,17 +138,20 @@ def _verdict(read: Read, *, named: bool) -> str:
 def _parts_of(read: Read, wish: Wish, figures: _Figures) -> list[tuple[str, str]]:
     """The parts of one run: name and content."""
     facts, digest = read.facts, read.digest
+    interruptions = ("Deviations and interruptions", sections.interruptions(facts, digest, wish.entries))
     found = [
         ("Item, rig and environment", sections.item_and_rig(facts, wish.entries)),
         ("Method", sections.method(facts)),
         ("Results", sections.results(facts) + _ranges(digest)),
-        ("Deviations and interruptions", sections.interruptions(facts, digest, wish.entries)),
+        interruptions,
         ("Account of the samples", sections.account(facts, read.audit)),
         ("Protections", sections.protections(facts)),
     ]
     trip = view_of_trip(facts)
     if trip is not None:
-        found.insert(0, ("Record around the trip", figures.put(plots.trip_record(*trip))))
+        record = ("Record around the trip", figures.put(plots.trip_record(*trip)))
+        # a trip that the run went on after is one of its interruptions, and not the first thing to be told
+        found.insert(found.index(interruptions) + 1 if facts.verdict in WENT_ON else 0, record)
     pictures = figures.put(plots.against_time(facts, digest))
     found.append(("Against time", pictures or page.paragraph("There are no samples to draw.", kind="note")))
     for name, pictures in (
@@ -168,6 +177,7 @@ def _ranges(digest: Digest) -> str:
     rows = []
     for column, (low, mean, high) in digest.totals.items():
         name, unit = plots.label_of(column)
+        mean = 0.0 if abs(mean) < NOTHING * max(abs(low), abs(high)) else mean
         rows.append([page.text(name), f"{low:.4g}", f"{mean:.4g}", f"{high:.4g}", page.text(unit)])
     if not rows:
         return ""

@@ -139,7 +139,9 @@ def _limit_cases(facts: Facts) -> Iterator[Case]:
         name = f"{facts.motor_on(index)}: {item}" if per_axis else item
         out = f"limit {item} = {value} (protocol units), trip {TRIPS[item]}"
         event = tripped.get((TRIPS[item], index))
-        if event is not None:
+        if event is not None and facts.verdict in ("passed", "failed"):
+            yield Case("limits", name, f"{out}\ntripped at {event.get('time_s')} s; the run was gone on with")
+        elif event is not None:
             failure = f"tripped: {TRIPS[item]}, value {event.get('value')}, bound {event.get('bound')}"
             yield Case("limits", name, f"{out}\nat {event.get('time_s')} s of the run", failure=failure)
         elif item in OFF_AT_ZERO and value == 0:

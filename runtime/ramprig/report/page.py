@@ -34,6 +34,7 @@ td.n,th.n{text-align:right}
 td.ok{color:var(--good);font-weight:600;white-space:nowrap}
 td.no{color:var(--bad);font-weight:700;white-space:nowrap}
 td{overflow-wrap:anywhere}
+td.t{white-space:nowrap;overflow-wrap:normal}
 dl{display:grid;grid-template-columns:12rem 1fr;gap:.22rem 1rem;margin:.5rem 0 1rem;font-size:.92rem}
 dt{color:var(--soft)}dd{margin:0;overflow-wrap:anywhere}
 pre{background:var(--tint);border:1px solid var(--rule);padding:.7rem .9rem;overflow-x:auto;white-space:pre-wrap;
@@ -90,6 +91,11 @@ def table(heads: Sequence[str], rows: Iterable[Sequence[str]], *, numbers: Seque
 def status(holds: bool) -> str:
     """A cell that says pass or fail in a sign, a word and a colour."""
     return '<td class="ok">&#10003; pass</td>' if holds else '<td class="no">&#10007; FAIL</td>'
+
+
+def short(value: object) -> str:
+    """A cell that stays on one line, such as a time of day."""
+    return f'<td class="t">{text(value)}</td>'
 
 
 def paragraph(sentence: str, *, kind: str = "") -> str:

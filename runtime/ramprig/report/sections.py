@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 
 from ramprig.quantity import format_duration
+from ramprig.record.events import from_rfc3339
 from ramprig.record.reading import Audit
 from ramprig.sequence.wear_limits import TurnKind, WearRules
 from ramprig.session.limits import LimitTable
@@ -86,25 +87,28 @@ def _parts_table(facts: Facts) -> str:
 def _notes(facts: Facts) -> str:
     if not facts.notes:
         return ""
-    shown = [{key: value for key, value in note.items() if key not in ("tick", "kind")} for note in facts.notes]
-    rows = [
-        [page.text(note.get("utc")), page.text("; ".join(f"{k}: {v}" for k, v in note.items() if k != "utc" and v))]
-        for note in shown[:ROWS_MAX]
-    ]
+    rows = [[page.short(note.get("utc")), page.text(_note_text(note))] for note in facts.notes[:ROWS_MAX]]
     return "<h3>Noted by hand</h3>" + page.table(["when (UTC)", "what"], rows)
+
+
+def _note_text(note: Document) -> str:
+    """What somebody wrote, who, and the name of the picture beside it."""
+    text = str(note.get("text") or "")
+    text += f" ({note['by']})" if note.get("by") else ""
+    names = [str(photo.get("file")) for photo in note.get("photos") or []]
+    return text + (f" [{', '.join(names)}]" if names else "")
 
 
 def method(facts: Facts) -> str:
     """The sequence as it was run, with its values and the hashes of all files."""
     manifest = facts.manifest
-    clocks, results = manifest.get("clocks") or {}, manifest.get("results") or {}
+    clocks = manifest.get("clocks") or {}
     values = (manifest.get("settings") or {}).get("values") or {}
     period = ((manifest.get("samples") or {}).get("loggings") or [{}])[0].get("period_ticks")
     pairs: list[tuple[str, object]] = [
         ("begun", manifest.get("started")),
         ("ended", manifest.get("ended") or "not in order"),
-        ("lasted, by the board's clock", _seconds(clocks.get("device_s"))),
-        ("planned at least", _seconds(results.get("planned_s"))),
+        *_lengths(facts),
         ("values given", ", ".join(f"{name} = {value}" for name, value in values.items()) or "none"),
         ("sampled", f"every {period} ticks of {clocks.get('tick_us')} us" if period else ""),
         ("speed", (manifest.get("speed") or {}).get("method")),
@@ -115,6 +119,24 @@ def method(facts: Facts) -> str:
         for entry in manifest.get("inputs") or []
     ]
     return page.facts(pairs) + page.table(["file", "name", "SHA-256 of the copy"], rows) + _sequence_texts(facts)
+
+
+def _lengths(facts: Facts) -> list[tuple[str, object]]:
+    """How long it lasted; of a run that was gone on with, the whole by the time of day and the last part."""
+    manifest = facts.manifest
+    lasted_s = (manifest.get("clocks") or {}).get("device_s")
+    planned_s = (manifest.get("results") or {}).get("planned_s")
+    if len(facts.parts) < 2:
+        return [("lasted, by the board's clock", _seconds(lasted_s)), ("planned at least", _seconds(planned_s))]
+    found: list[tuple[str, object]] = [
+        ("last part, by the board's clock", _seconds(lasted_s)),
+        ("last part, planned at least", _seconds(planned_s)),
+    ]
+    try:
+        whole = from_rfc3339(str(manifest.get("ended"))) - from_rfc3339(str(manifest.get("started")))
+    except ValueError:
+        return found
+    return [("lasted, interruptions included", _seconds(whole.total_seconds())), *found]
 
 
 def _sequence_texts(facts: Facts) -> str:
@@ -244,14 +266,15 @@ def interruptions(facts: Facts, digest: Digest, entries: Mapping[str, str]) -> s
     rows: list[list[str]] = []
     for number, entry in enumerate(facts.manifest.get("interruptions") or [], 1):
         said = "; ".join(f"{key}: {value}" for key, value in entry.items() if value not in (None, ""))
-        text = f"{entry['text']}; before: {entry.get('reason') or 'nothing was said'}" if "text" in entry else said
-        rows.append([str(entry.get("resumed_utc") or ""), f"interruption {number}", page.text(text)])
+        told = str(entry.get("text") or "").removeprefix(f"interruption {number}: ")
+        text = f"{told}; before: {entry.get('reason') or 'nothing was said'}" if told else said
+        rows.append([page.short(entry.get("resumed_utc")), page.short(f"interruption {number}"), page.text(text)])
     for kind, name in _INTERRUPTIONS.items():
         shown = facts.of(kind)[:50]
-        rows += [[page.text(event.get("utc")), name, page.text(_event_text(event))] for event in shown]
+        rows += [[page.short(event.get("utc")), page.short(name), page.text(_event_text(event))] for event in shown]
         more = facts.counts[kind] - len(shown)
         if more > 0:
-            rows.append(["", name, f"and {more} more"])
+            rows.append([page.short(shown[-1].get("utc")), page.short(name), f"and {more} more after that"])
     rows.sort(key=lambda row: row[0])
     remarks = (facts.manifest.get("results") or {}).get("remarks") or []
     pairs: list[tuple[str, object]] = [
@@ -284,9 +307,17 @@ _HEAD_KEYS = ("tick", "time_s", "utc", "kind")
 
 
 def _event_text(event: Document) -> str:
-    said = [f"{key.replace('_', ' ')} {value}" for key, value in event.items() if key not in _HEAD_KEYS and value != ""]
+    said = [_said(key, value) for key, value in event.items() if key not in _HEAD_KEYS and value not in ("", None)]
     at = f"at {event['time_s']} s: " if isinstance(event.get("time_s"), int | float) else ""
     return at + ", ".join(said)
+
+
+def _said(key: str, value: object) -> str:
+    """A field of an event in words; a duration with its unit."""
+    if key.endswith("_s") and isinstance(value, int | float):
+        return f"{key.removesuffix('_s').replace('_', ' ')} {format_duration(round(value, 3))}"
+    shown = f"{value:.4g}" if isinstance(value, float) else value
+    return f"{key.replace('_', ' ')} {shown}"
 
 
 def _stop_text(facts: Facts) -> str:

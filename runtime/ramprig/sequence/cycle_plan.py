@@ -17,7 +17,7 @@ from .names import CYCLE_BEGIN
 from .plan import Branches, Cycles, Judge, Loop, Part, Series, Totals
 from .rig import Rig
 from .scene import Scene
-from .spacing import HOUR_S, TurnBound, least_ticks, most_ticks_a_turn, share_ticks
+from .spacing import HOUR_S, TurnBound, least_ticks, longest_wait, most_ticks_a_turn, share_ticks
 from .steps import Cycle, Step
 from .wear_plan import wear_rules
 
@@ -244,13 +244,26 @@ def _with_totals(rig: Rig, part: Cycles, begun: BlockSoFar | None) -> Cycles:
         least = max(least, before.least + spaced)
     most = before.most + _most(part, count, checks, reaction, hour) + _most_of_past(part, before, hour, begun=begun)
     if part.for_ticks is not None:
-        # a cycle begins only while less than `for` has been run, whatever it waits for; a check may wait once more
-        body_most = max(body.totals.most for body in (part.first, part.later, part.checked))
-        most = before.most + left + body_most + check.most + 2 * part.rest + 2 * reaction
-        most += hour if part.starts_per_hour is not None and any(part.check_starts.values()) else 0
-        least = min(most, max(before.least, before.least + left - part.pause))
+        least, most = _bounds_of_for(part, before, left, reaction, hour, begun=begun)
     totals = replace(whole, least=least, most=max(least, most), waits=whole.waits + count + checks)
     return replace(part, totals=totals)
+
+
+def _bounds_of_for(
+    part: Cycles, before: Totals, left: int, reaction: int, hour: int, *, begun: BlockSoFar | None
+) -> tuple[int, int]:
+    """The least and most time of a block that is to go on for a time: a cycle begins only while less has been run,
+    whatever it waits for; it is over at the end of a cycle after which the next would begin too late."""
+    body_most = max(body.totals.most for body in (part.first, part.later, part.checked))
+    check_most = part.check.totals.most if part.check is not None else 0
+    wait = part.rest
+    if part.starts_per_hour is not None:
+        turns = _turns(part, 1, 1, most=True)
+        wait = max(wait, longest_wait(turns, per_hour=part.starts_per_hour, hour=hour))
+    past = _most_of_past(part, before, hour, begun=begun)
+    most = before.most + left + body_most + check_most + wait + part.rest + 2 * reaction + past
+    least = before.least + max(0, left - wait - past)
+    return min(least, most), most
 
 
 def _turns(part: Cycles, count: int, checks: int, *, most: bool) -> list[TurnBound]:

@@ -41,6 +41,7 @@ IDLE_S = 0.25
 """How often the loop comes round while nothing is due."""
 QUIET_POLLS_MAX = 20
 """Most polls in a row without coming round, while the next turn of a block is not due."""
+RESTING = "rest until the next cycle"
 SAMPLES_LATE_S = 3.0
 """Samples that have not come so long after their tick are judged as missing."""
 
@@ -124,6 +125,7 @@ class Executive:
     _dispatch: Dispatch = field(init=False)
     _commanded: Due | None = None
     _turn_due: int | None = None
+    _resting: bool = False
     _waited: int = 0
     _end: int = 0
 
@@ -224,7 +226,7 @@ class Executive:
             elapsed_s=elapsed * self._tick_s,
             left_s=(known - done) * self._tick_s,
             fraction=done / known if known else 1.0,
-            doing="" if self.part is None else self.part.text,
+            doing=RESTING if self._resting else "" if self.part is None else self.part.text,
             place=self.place,
             passes=self.passes,
             held=self.tally.held,
@@ -460,7 +462,8 @@ class Executive:
             self._check_wear(book)
             due = book.due(ask.tick)
             if due.turn is not Turn.OVER:
-                if due.tick > ahead:
+                self._resting = due.tick > ahead
+                if self._resting:
                     self._turn_due = due.tick
                     return False
                 book.command(due.turn)

@@ -95,6 +95,25 @@ def least_ticks(turns: Iterable[TurnBound], *, per_hour: int, hour: int) -> int:
     return found
 
 
+def longest_wait(turns: Iterable[TurnBound], *, per_hour: int, hour: int) -> int:
+    """From the end of one of these turns to the begin of the next at the longest, as far as starts go.
+
+    Where all have the same number of starts it is what the shares leave. Else the guard may wait besides: for an hour
+    from the end of some earlier turn, since which all turns but the two last have had their shares.
+    """
+    turns = [turn for turn in turns if turn.count]
+    longest = max((turn.ticks for turn in turns), default=0)
+    found = 0
+    for motor in {name for turn in turns for name in turn.starts}:
+        counts = {turn.starts.get(motor, 0) for turn in turns} - {0}
+        if len(counts) == 1:
+            (count,) = counts
+            found = max(found, share_ticks(count, per_hour=per_hour, ticks=longest, hour=hour))
+        elif counts:
+            found = max(found, -(-2 * max(counts) * hour // per_hour) + longest)
+    return found
+
+
 def most_ticks_a_turn(turns: Iterable[TurnBound], turn: TurnBound, *, per_hour: int, hour: int) -> int:
     """From the begin of `turn`, one of `turns`, to that of the next at the longest, as far as starts go.
 

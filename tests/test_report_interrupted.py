@@ -1,0 +1,77 @@
+"""The report of a run that was interrupted and gone on with: the interruption is told, and not as the run's end."""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Callable
+from pathlib import Path
+
+import pytest
+
+from endure_crash import START_UNIX_S, Host, Process
+from ramprig.cli.read import summary
+from ramprig.endure.notes import add_note
+from ramprig.record.reading import audit
+from ramprig.report.facts import Facts, gather
+from ramprig.report.junit import cases_of
+from ramprig.report.making import make_report
+from ramprig.sequence.outcome import Verdict
+
+PICTURE = b"no real picture"
+
+
+def held_up_once() -> Callable[[Host], None]:
+    """Have the board not hear anything for a while, in the second cycle, as where the computer is held up."""
+    done: list[bool] = []
+
+    def meddle(host: Host) -> None:
+        if host.now_unix_s() > START_UNIX_S + 4.0 and not done:
+            done.append(True)
+            host.device.faults.set("deaf", True)
+
+    return meddle
+
+
+@pytest.fixture(scope="module")
+def run(tmp_path_factory: pytest.TempPathFactory) -> Facts:
+    folder = tmp_path_factory.mktemp("interrupted")
+    host = Host(folder, policy="on interruption: {resume at most: 2, within: 20 s}")
+    host.meddle = held_up_once()
+    pause = host.pause
+
+    def pause_and_hear(seconds: float) -> None:
+        pause(seconds)
+        host.device.faults.set("deaf", False)
+
+    host.pause = pause_and_hear  # type: ignore[method-assign]  # the test's own host
+    result = host.run(Process())
+    assert result.outcome.verdict is Verdict.PASSED, result.outcome
+    (folder / "brush.jpg").write_bytes(PICTURE)
+    add_note(host.run_folder, "brush 4.2 mm", unix_s=host.now_unix_s(), by="A.M.", photos=[folder / "brush.jpg"])
+    return gather(host.run_folder)
+
+
+def test_an_interruption_is_told_among_the_deviations_and_not_as_the_end(run: Facts) -> None:
+    page = make_report([run.folder], out=run.folder / "out", issued="2026-03-01T08:00:00Z").report.read_text("utf-8")
+    names = re.findall(r"<h2><span>\d+&ensp;([^<]+)</span>", page)
+    assert len(names) >= 8
+    assert names[0] == "Item, rig and environment"
+    assert names.index("Record around the trip") == names.index("Deviations and interruptions") + 1
+    assert "<td class=\"t\">interruption 1</td>" in page
+    assert "<dt>lasted, interruptions included</dt>" in page
+    assert "<dt>last part, planned at least</dt>" in page
+    assert "<td>brush 4.2 mm (A.M.) [note-1-1.jpg]</td>" in page
+
+
+def test_a_limit_that_the_run_went_on_after_is_no_failure(run: Facts) -> None:
+    assert [case for case in cases_of(run) if case.failure or case.error] == []
+
+
+def test_rows_from_before_a_break_are_told_apart(run: Facts) -> None:
+    manifest = run.manifest
+    written = int(manifest["samples"]["written"])
+    short = manifest | {"samples": manifest["samples"] | {"written": written - 100}}
+    lines = "\n".join(summary(short, audit(run.folder)))
+    assert f"; {written} rows in" in lines
+    assert "100 of them from before a break, of which there is no account" in lines
+    assert "no account" not in "\n".join(summary(manifest, audit(run.folder)))
