@@ -22,7 +22,7 @@ from . import features
 from .trends import Finding
 from .wear import Cycle, WearJudge, as_recorded, listed
 
-BATCH_ROWS = 1024
+BATCH_ROWS = 4096
 """So many rows are turned into numbers together; fewer where a cycle ends."""
 LATE_PIECES = 4
 """Of a cycle beyond its bound so many of the last pieces are kept: some of their rows may be later than its end."""
@@ -108,9 +108,11 @@ class LiveWatch:
     def _take(self) -> None:
         """Turn what is waiting into numbers: speeds need every sample, those between cycles too."""
         blocks, self._blocks, self._rows = self._blocks, [], 0
+        if not self._is_on:
+            self._printer.pass_over(blocks)
+            return
         for ticks, cells in self._printer.numbers(blocks):
-            if self._is_on:
-                self._keep(Piece(ticks, {name: column.values() for name, column in cells.items()}))
+            self._keep(Piece(ticks, {name: column.values() for name, column in cells.items()}))
 
     def _keep(self, piece: Piece) -> None:
         if self._kept_rows <= features.CYCLE_ROWS_MAX:

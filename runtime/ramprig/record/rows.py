@@ -168,6 +168,14 @@ class RowPrinter:
             known = {field.name: self._cells(field, batch) for field in fields}
             yield batch.ticks, {name: cells for name, cells in known.items() if cells is not None}
 
+    def pass_over(self, blocks: Sequence[Block]) -> None:
+        """Give neither, but remember what the counts and speeds of later blocks need."""
+        for together in _together(blocks):
+            batch = self._batch(together)
+            for field in self.columns.fields:
+                if isinstance(field, CountsField | TurnsField | SpeedField):
+                    self._cells(field, batch)
+
     def _batch(self, blocks: list[Block]) -> _Batch:
         if len(blocks) == 1:
             ticks, values = blocks[0].ticks, blocks[0].values
