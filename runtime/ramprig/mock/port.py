@@ -16,8 +16,6 @@ Pace = Literal["virtual", "real"]
 
 D = TypeVar("D", bound=Device)
 
-GRAIN_NS = 1000
-"""A wait that ends before its time by a rounding error goes on for so long."""
 WAIT_S = 0.001
 """How long a paced port sleeps between two looks at its device: one tick of most boards."""
 
@@ -92,10 +90,7 @@ class DevicePort(ClosesItself, Generic[D]):
         if clock is None:
             return self.read(until_s - self.clock.now())
         self._check()
-        now_ns, until_ns = clock.now_ns, round(until_s * NS_PER_S)
-        if until_s > now_ns / NS_PER_S and (until_ns < now_ns + GRAIN_NS or until_ns / NS_PER_S < until_s):
-            until_ns = max(now_ns, until_ns) + GRAIN_NS
-        return self._run_to(clock, max(now_ns, until_ns), True)
+        return self._run_to(clock, clock.end_of_wait_ns(until_s), True)
 
     def _run_to(self, clock: VirtualClock, until_ns: int, patient: bool) -> bytes:
         cable = self._cable

@@ -6,6 +6,8 @@ import time
 from typing import Protocol
 
 NS_PER_S = 1_000_000_000
+GRAIN_NS = 1000
+"""The shortest wait in virtual time, so that one that is due in a rounding error's time does not spin."""
 
 
 class Clock(Protocol):
@@ -54,6 +56,24 @@ class VirtualClock:
     def wall(self) -> float:
         """Unix seconds: the start's, plus what has been advanced."""
         return self._wall_start_s + self.now()
+
+    def end_of_wait_ns(self, until_s: float) -> int:
+        """Where a wait from now until `until_s` ends: at a whole nanosecond at which this clock is not before it.
+
+        A wait that rounding would end too early, or that is shorter than GRAIN_NS, takes GRAIN_NS more or as much.
+        """
+        now_ns, until_ns = self.now_ns, round(until_s * NS_PER_S)
+        if until_ns - now_ns < GRAIN_NS:
+            return now_ns if until_s <= now_ns / NS_PER_S else now_ns + GRAIN_NS
+        return until_ns if until_ns / NS_PER_S >= until_s else until_ns + GRAIN_NS
+
+    def end_of_waits_s(self, wait_s: float, count: int) -> float:
+        """Where `count` waits of `wait_s` in a row end, each from where the one before did."""
+        clock = VirtualClock()
+        clock.now_ns = self.now_ns
+        for _ in range(count):
+            clock.now_ns = clock.end_of_wait_ns(clock.now() + wait_s)
+        return clock.now()
 
     def advance(self, duration_s: float) -> None:
         """Move on by `duration_s`, rounded to whole nanoseconds; raises ValueError where it is negative."""

@@ -15,7 +15,7 @@ from dataclasses import dataclass, field
 from itertools import count
 
 from ramprig.errors import Place
-from ramprig.port.clock import Clock
+from ramprig.port.clock import Clock, VirtualClock
 from ramprig.session.blocks import Block
 from ramprig.session.events import Event, OrderDone, Restarted, Tripped
 from ramprig.session.session import Session
@@ -173,9 +173,7 @@ class Executive:
             if self.progress is not None:
                 self.progress(self.where())
             self._pump_for(self._idle_s())
-            for _ in range(self._quiet_polls()):
-                self._check()
-                self._pump_for(POLL_S)
+            self._rest(self._quiet_polls())
         self._finish_orders()
 
     def _wait_for_samples(self) -> None:
@@ -254,15 +252,25 @@ class Executive:
         return max(wait_s, self._tick_s)
 
     def _quiet_polls(self) -> int:
-        """How many further polls come before the next turn's time where nothing but that is waited for.
-
-        Coming round in each of them would find nothing; they are made all the same, one by one.
+        """How many further polls come before the next turn's time where nothing but that is waited for: coming round
+        in each of them would find nothing.
         """
         due, self._turn_due = self._turn_due, None
-        if due is None or len(self._strands) > 1 or self._agenda or self._dispatch.waiting:
+        others = len(self._strands) > 1 or self._agenda or self._dispatch.waiting or self.until_s is not None
+        if due is None or others:
             return 0
         wait_s = (due - self.now) * self._tick_s - AHEAD_S - TICK_SLACK_S
         return max(0, min(QUIET_POLLS_MAX, int(wait_s / POLL_S) - 1))
+
+    def _rest(self, polls: int) -> None:
+        """Pump for as long as so many polls take; in virtual time, where nothing is late, all at once."""
+        if polls and isinstance(self.clock, VirtualClock):
+            self._check()
+            self.session.pump(self.clock.end_of_waits_s(POLL_S, polls))
+            return
+        for _ in range(polls):
+            self._check()
+            self._pump_for(POLL_S)
 
     # ---- strands -------------------------------------------------------------------------------------------------
 
