@@ -131,14 +131,15 @@ def parse_device_line(line: bytes) -> FromDevice:
     body = _opened(line)
     if isinstance(body, Flaw):
         return Garbled(line, body)
-    if "  " in body or body.endswith(" "):
+    if "  " in body or body[-1:] == " ":
         return Garbled(line, Flaw.FORM)
     first, _, rest = body.partition(" ")
+    kind = first[:1]
     message: FromDevice | None = None
-    if first[:1] == "D":
+    if kind == "D":
         if first[1:] in HEX2 and rest:
             message = Data(HEX2[first[1:]], rest)
-    elif first[:1] == "N":
+    elif kind == "N":
         message = _notice(first[1:], rest.split(" "))
     else:
         message = _answer(first, rest.split(" "))

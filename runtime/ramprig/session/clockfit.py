@@ -49,19 +49,29 @@ class LowerHull:
     def add(self, x: float, y: float) -> None:
         """Take a point; `x` must not be smaller than the last one's (ValueError)."""
         corners = self.corners
-        if corners and x < corners[-1][0]:
-            raise ValueError(f"points must come in order: {x} after {corners[-1][0]}")
+        if corners and x <= corners[-1][0]:
+            self._add_late(x, y)
+            return
         self.count += 1
         self._sum_x += x
-        if corners and x == corners[-1][0]:
-            if y >= corners[-1][1]:
-                return
+        point = x, y
+        while len(corners) >= 2 and _turn(corners[-2], corners[-1], point) <= 0.0:
             corners.pop()
-        while len(corners) >= 2 and _turn(corners[-2], corners[-1], (x, y)) <= 0.0:
-            corners.pop()
-        corners.append((x, y))
+        corners.append(point)
         if len(corners) > HULL_MAX:
             self._drop_flattest()
+
+    def _add_late(self, x: float, y: float) -> None:
+        """A point at the last one's x, or before it."""
+        last_x, last_y = self.corners[-1]
+        if x < last_x:
+            raise ValueError(f"points must come in order: {x} after {last_x}")
+        if y >= last_y:
+            self.count += 1
+            self._sum_x += x
+            return
+        self.corners.pop()
+        self.add(x, y)
 
     def _drop_flattest(self) -> None:
         corners = self.corners
@@ -94,7 +104,8 @@ class LowerHull:
 
 def _turn(a: tuple[float, float], b: tuple[float, float], c: tuple[float, float]) -> float:
     """Positive where a, b, c turn to the left, so that b is a corner of the lower hull."""
-    return (b[0] - a[0]) * (c[1] - b[1]) - (b[1] - a[1]) * (c[0] - b[0])
+    (ax, ay), (bx, by), (cx, cy) = a, b, c
+    return (bx - ax) * (cy - by) - (by - ay) * (cx - bx)
 
 
 def exchange(t1: float, t2: float, t3: float, t4: float) -> tuple[float, float]:

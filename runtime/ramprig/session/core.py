@@ -109,6 +109,7 @@ class Core:
         self.limits: LimitTable | None = None
         self.idle_ma: tuple[int, ...] = ()
         self.state: State | None = None
+        self._state_word = ""
         self.lease_ms: int | None = None
         self.valid = False
         self.trip: Tripped | None = None
@@ -183,7 +184,7 @@ class Core:
         return Reading.read(answered.answer.fields, tick=tick, axes=identity.axes, servos=identity.servos)
 
     def _set_state(self, state: State) -> None:
-        self.state = state
+        self.state, self._state_word = state, state.word
         if state is State.ARMED and self.lease_ms is not None:
             self.pump.beat_s = self.lease_ms / 1000 / LEASE_PARTS
         else:
@@ -314,14 +315,16 @@ class Core:
         if fit is not Fit.RIGHT:
             self.suspect(f"a tick that is {off_s:+.2f} s off")
             return
-        self.ticks.see(answered.answer.tick)
+        self.ticks.reach(tick)
         self.watch.take(tick, answered.sent_s, answered.received_s)
         self.fitter.add(tick, answered.sent_s, answered.received_s)
 
     def _hear_beat(self, word: str, at_s: float) -> None:
         """A beat's answer tells the state: one that no notice announced means that something was missed."""
+        if word == self._state_word:
+            return
         state = State.named(word)
-        if state is None or state is self.state or self.state is None:
+        if state is None or self.state is None:
             return
         self.check_state()
         if state is State.OFF and self.armed:
@@ -466,7 +469,7 @@ class Core:
         """Nothing known of the device holds any longer: disarmed until it is opened again."""
         self.valid = False
         self.lease_ms = None
-        self.state = None
+        self.state, self._state_word = None, ""
         self.pump.beat_s = IDLE_BEAT_S
         if reason is GapReason.RESTARTED:
             self.sampling.restart()

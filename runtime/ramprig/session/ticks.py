@@ -21,8 +21,13 @@ class TickCounter:
     def see(self, tick: int) -> int:
         """The unwrapped tick for one that came just now."""
         unwrapped = self.near(tick)
-        self.latest = unwrapped if self.latest is None else max(self.latest, unwrapped)
+        self.reach(unwrapped)
         return unwrapped
+
+    def reach(self, unwrapped: int) -> None:
+        """The device has reached this unwrapped tick."""
+        if self.latest is None or unwrapped > self.latest:
+            self.latest = unwrapped
 
     def restart(self) -> None:
         """Forget everything: the device begins at 0 again, or the first tick was from an old answer."""
