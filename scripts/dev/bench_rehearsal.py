@@ -2,7 +2,8 @@
 
     python scripts/dev/bench_rehearsal.py
 
-It also tells what share of the time is the device's: the Python mock's, or the firmware core's and C plant's.
+It also tells what share of the time is the device's: the Python mock's, or the firmware core's and C plant's. Times are
+the processor's.
 """
 
 from __future__ import annotations
@@ -52,13 +53,13 @@ class TimedPort(DevicePort[Device]):
 
     spent_s = 0.0
 
-    def read(self, timeout_s: float) -> bytes:
-        """As `Port.read`."""
-        begin_s = time.perf_counter()
+    def read_until(self, until_s: float) -> bytes:
+        """As `PatientPort.read_until`."""
+        begin_s = time.process_time()
         try:
-            return super().read(timeout_s)
+            return super().read_until(until_s)
         finally:
-            self.spent_s += time.perf_counter() - begin_s
+            self.spent_s += time.process_time() - begin_s
 
 
 def once(make: type[MockDevice] | type[SimulatedDevice]) -> RehearsalSpeed:
@@ -67,9 +68,9 @@ def once(make: type[MockDevice] | type[SimulatedDevice]) -> RehearsalSpeed:
     assert sequence.bench is not None
     bench = load_bench(sequence.bench)
     port = TimedPort(make(setup_of_bench(bench), seed=1), pace="virtual", seed=1)
-    start_s, began_s = port.clock.now(), time.perf_counter()
+    start_s, began_s = port.clock.now(), time.process_time()
     outcome: Outcome = run_sequence(RunWish(sequence=sequence, bench=bench, virtual=True), port).outcome
-    took_s = time.perf_counter() - began_s
+    took_s = time.process_time() - began_s
     if outcome.verdict is not Verdict.PASSED:
         raise RuntimeError(f"the rehearsal did not pass: {outcome}")
     return RehearsalSpeed(port.clock.now() - start_s, took_s, port.spent_s)
