@@ -36,3 +36,21 @@ def test_the_system_clock_is_the_computers() -> None:
     before, wall_before = time.monotonic(), time.time()
     assert before <= clock.now() <= time.monotonic()
     assert wall_before <= clock.wall() <= time.time()
+
+
+def test_many_waits_told_at_once_end_where_they_would_one_by_one() -> None:
+    told, waited = VirtualClock(start_s=0.123456789), VirtualClock(start_s=0.123456789)
+    for wait_s in (0.05, 0.0503, 1e-9, 1 / 3):
+        end_s = told.end_of_waits_s(wait_s, 200)
+        for _ in range(200):
+            until_s = waited.now() + wait_s
+            waited.now_ns = waited.end_of_wait_ns(until_s)
+            assert until_s <= waited.now() <= until_s + 1.1e-6
+        assert end_s == waited.now()
+        told.now_ns = told.end_of_wait_ns(end_s)
+        assert told.now_ns == waited.now_ns
+
+
+def test_a_wait_for_what_is_past_ends_at_once() -> None:
+    clock = VirtualClock(start_s=2.0)
+    assert clock.end_of_wait_ns(2.0) == clock.end_of_wait_ns(1.0) == clock.now_ns
