@@ -100,6 +100,13 @@ def test_a_clamped_output_shows_the_play(play_deg: float) -> None:
     assert done.most_a < 0.9
 
 
+def test_the_play_of_the_mocks_gear_is_measured_with_its_output_clamped() -> None:
+    faults = ("gear_play=1.2", "output_clamped")
+    done = measured(Backlash(motor="vent", clamped=True), load_bench(VENT), faults=faults)
+    low, high = done.findings.values["lost_motion"].interval()
+    assert low <= 1.2 <= high
+
+
 def followed(play_deg: float) -> Callable[[MockDevice], None]:
     """Has the encoder of the second motor sit on the first one's output, behind this play."""
 

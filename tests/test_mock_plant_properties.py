@@ -99,6 +99,8 @@ def test_nothing_extreme_gives_a_number_that_is_none(data: st.DataObject) -> Non
         thermal_resistance_k_w=draw(-3, 3),
         thermal_time_s=draw(-3, 5),
         gear_ratio=draw(-2, 3),
+        play_rad=data.draw(st.sampled_from([0.0, 1.0])) * draw(-6, 1),
+        output_friction_nm=data.draw(st.sampled_from([0.0, 1.0])) * draw(-9, 2),
     )
     size = motor.inertia_kgm2 * motor.inductance_h
     if motor.constant_vs**2 / size > 1e16 or motor.resistance_20_ohm / motor.inductance_h > 1e14:
@@ -121,8 +123,8 @@ def test_nothing_extreme_gives_a_number_that_is_none(data: st.DataObject) -> Non
         axis.duty, axis.brake, axis.jammed, axis.load_nm = duty, brake, jam, load_nm
         for _ in range(60):
             plant.step()
-        state = (axis.current_a, axis.speed_rad_s, axis.angle_rad, axis.mean_a, axis.winding_c, plant.supply.bus_v)
-        assert all(map(math.isfinite, state)), state
+        state = (axis.current_a, axis.speed_rad_s, axis.angle_rad, axis.output_rad, axis.mean_a, axis.winding_c)
+        assert all(map(math.isfinite, (*state, plant.supply.bus_v))), state
 
 
 @settings(max_examples=40, deadline=None)
