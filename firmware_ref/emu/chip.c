@@ -14,6 +14,7 @@
 
 #define FREQUENCY (CYCLES_A_US * 1000000u)
 #define REFERENCE_MV 5000u
+#define RUN_CYCLES 1000u /* most that simavr runs in one go, its next timer permitting */
 #define PAINT 0xA5u
 #define TICK_VECTOR 14u /* TIMER0_COMPA */
 #define FLAG_WATCHDOG (1u << 3) /* in MCUSR */
@@ -130,7 +131,6 @@ bool chip_load(struct chip *chip, const char *elf, const uint8_t *eeprom, uint32
     chip->memory_end = address_of(program, "_end");
     chip->worst_at = address_of(program, "worst_steps"); /* tick.c */
     chip->avr->sleep = no_sleep;
-    chip->avr->run_cycle_limit = 1000;
     find_pins(chip);
     if (eeprom != NULL) {
         uint8_t *copy = malloc(eeprom_bytes);
@@ -151,12 +151,17 @@ bool chip_load(struct chip *chip, const char *elf, const uint8_t *eeprom, uint32
 
 void chip_run(struct chip *chip, uint64_t until_cycle)
 {
-    while (!chip->crashed && chip->avr->cycle < until_cycle) {
-        uint32_t wanted = chip_byte_cycles(chip);
-        if (wanted != 0) {
-            chip->uart->cycles_per_byte = wanted; /* simavr counts a parity bit that is not there */
+    avr_t *avr = chip->avr;
+    uint32_t wanted = chip_byte_cycles(chip);
+    if (wanted != 0) {
+        chip->uart->cycles_per_byte = wanted; /* simavr counts a parity bit that is not there */
+    }
+    avr->run_cycle_limit = RUN_CYCLES; /* each reset puts it back to 1 */
+    while (!chip->crashed && avr->cycle < until_cycle) {
+        if (avr->run_cycle_count > until_cycle - avr->cycle) {
+            avr->run_cycle_count = until_cycle - avr->cycle;
         }
-        int state = avr_run(chip->avr);
+        int state = avr_run(avr);
         if (chip->was_reset) {
             set_up_again(chip);
             return;

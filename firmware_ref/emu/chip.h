@@ -47,7 +47,7 @@ struct chip_outputs {
 /* Loads a program. `eeprom` may be NULL, else `eeprom_bytes` of it. False, told on stderr, where it cannot be loaded. */
 bool chip_load(struct chip *chip, const char *elf, const uint8_t *eeprom, uint32_t eeprom_bytes, uint8_t reset_flags);
 
-/* Runs until this cycle, or a little beyond it. */
+/* Runs until this cycle, or a little beyond it. In slices of at most 100 us, or the UART's pace is set too late. */
 void chip_run(struct chip *chip, uint64_t until_cycle);
 
 /* Resets as by the bits of MCUSR. */
