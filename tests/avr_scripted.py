@@ -29,6 +29,9 @@ START_US = 8000
 """When the inputs of the first tick are written: the board has begun, its first tick comes later."""
 MOST_BYTES = 90
 """What comes in one go and is heard whole, longer than any line; of 120 some are lost at this rate, and counted."""
+CURRENT_MA = 27_000
+"""The board's currents have 16 bits, `offset_ma` of up to 5000 taken off them; its own sensor tells 13.5 A."""
+SUPPLY_MV = 65_535
 AFTER_TICKS = 8
 PAYLOAD = 64
 """Characters of a data line: what the memory has room for beside four kept lines."""
@@ -69,8 +72,8 @@ def changes(read: Iterable[Inputs]) -> dict[int, Inputs]:
 
 
 def can_read(inputs: Iterable[Inputs]) -> bool:
-    """Whether the board's sensors can tell such values: 16 bits each, the supply's without sign."""
-    return all(-32_768 <= current <= 32_767 and 0 <= supply <= 65_535 for _, current, supply, _ in inputs)
+    """Whether the board's sensors can tell such values."""
+    return all(abs(current) <= CURRENT_MA and 0 <= supply <= SUPPLY_MV for _, current, supply, _ in inputs)
 
 
 def build(device: Device) -> Path:

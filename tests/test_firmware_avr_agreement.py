@@ -17,7 +17,19 @@ import pytest
 
 from agreement import Session, SessionMaker, Step, resolved
 from avr_builds import WHY_NOT
-from avr_scripted import AFTER_TICKS, MOST_BYTES, PAYLOAD, Inputs, Script, by_kind, changes, inputs_of, play
+from avr_scripted import (
+    AFTER_TICKS,
+    CURRENT_MA,
+    MOST_BYTES,
+    PAYLOAD,
+    SUPPLY_MV,
+    Inputs,
+    Script,
+    by_kind,
+    changes,
+    inputs_of,
+    play,
+)
 from core_device import COMPILER, CoreDevice
 from ramprig_link.check import seal
 from scripted_device import InputsScript, ScriptedDevice
@@ -51,10 +63,10 @@ class BoardSessionMaker(SessionMaker):
 
     def inputs(self) -> InputsScript:
         given = super().inputs()
-        if not all(-32_768 <= current_ma <= 32_767 for current_ma in given.get("current_ma", [])):
-            given["current_ma"] = [-32_768 if given["current_ma"][0] < 0 else 32_767]
-        if given.get("supply_mv", 0) > 65_535:
-            given["supply_mv"] = 65_535
+        if "current_ma" in given:
+            given["current_ma"] = [max(-CURRENT_MA, min(CURRENT_MA, current)) for current in given["current_ma"]]
+        if "supply_mv" in given:
+            given["supply_mv"] = min(SUPPLY_MV, given["supply_mv"])
         return given
 
     def has(self, bit: int) -> bool:
