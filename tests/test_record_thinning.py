@@ -260,6 +260,16 @@ def test_an_event_in_the_future_keeps_what_is_there_and_all_up_to_its_end() -> N
     assert told == [FullRateBegun(tick=80, because="mark"), FullRateEnded(tick=130)]
 
 
+def test_an_event_that_comes_late_does_not_cut_the_time_after_an_earlier_one_short() -> None:
+    made, kept, _ = thinner()
+    made.take(rows_at(*range(0, 102, 2)))
+    made.claim(100, "mark")
+    made.claim(94, "trip")
+    made.take(rows_at(*range(102, 160, 2)))
+    assert kept == [0, 20, 40, 60, *range(80, 112, 2), 120]
+    assert made.thinned_rows == 80 - len(kept) - made._ring_rows
+
+
 def test_ticks_that_begin_anew_leave_nothing_undecided() -> None:
     made, kept, _ = thinner()
     made.take(rows_at(*range(1000, 1042, 2)))

@@ -29,6 +29,7 @@ VOLUMES_MAX = 9999
 ROWS_DEFAULT = 1_000_000
 """Rows of a volume: with its header it stays within the 1,048,576 rows of a sheet in Microsoft Excel."""
 HEADER_MAX_BYTES = 1024 * 1024
+LAST_ROW_BYTES = 64 * 1024
 HELD_NAMES = ("held-1.csv", "held-2.csv")
 """Files of a thinned log with the rows that are not decided yet; see `held.py`."""
 OWN_NAME = re.compile(r"(samples(-[0-9]+)?(\.[0-9]{4})?|held-[12])\.csv", re.IGNORECASE)
@@ -125,20 +126,25 @@ class Stream:
 
     def tail(self, size_bytes: int = TAIL_BYTES) -> Piece:
         """The last rows, as many as about `size_bytes` hold, from more than one volume where the last one is short."""
-        tails: list[tuple[Scan, Piece]] = []
+        pieces: list[Piece] = []
         left = size_bytes
+        last = self._last_of_volumes()
         for scan in reversed(self._scans):
-            tails.insert(0, (scan, scan.tail(left)))
-            left -= scan.path.stat().st_size
+            piece = scan.tail(left)
+            later = _after(piece, last) if scan.path.name in HELD_NAMES else piece
+            pieces.insert(0, later)
+            left -= scan.path.stat().st_size * len(later) // max(1, len(piece))
             if left <= 0:
                 break
-        pieces: list[Piece] = []
-        last: int | None = None
-        for scan, piece in tails:
-            later = _after(piece, last) if scan.path.name in HELD_NAMES else piece
-            pieces.append(later)
-            last = int(later.ticks[-1]) if len(later) else last
         return joined(pieces)
+
+    def _last_of_volumes(self) -> int | None:
+        """The tick of the last row that is in a volume, where held rows follow; None where there is none."""
+        volumes = [scan for scan in self._scans if scan.path.name not in HELD_NAMES]
+        if len(volumes) == len(self._scans):
+            return None
+        tails = (scan.tail(LAST_ROW_BYTES) for scan in reversed(volumes))
+        return next((int(tail.ticks[-1]) for tail in tails if len(tail)), None)
 
 
 def _after(piece: Piece, tick: int | None) -> Piece:
