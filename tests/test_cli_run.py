@@ -263,6 +263,42 @@ def test_a_title_names_the_run_whose_folder_is_told_first(here: Path, capsys: py
     assert json.loads((only_run() / "run.json").read_text("utf-8"))["name"] == "Vent 7, worn"
 
 
+WEARING = """sequence: wearing
+bench: bench.yaml
+steps:
+  - cycle:
+      name: open
+      times: 9
+      wear:
+        run in: {cycles: 2, for: 0 s}
+        limits: [{feature: peak current, of: vent, watch: at most 10 mA, fail: at most 20 mA, cycles: 2 of 2}]
+      steps:
+        - ramp: {motor: vent, to: 40 %, in: 500 ms}
+        - coast: {motor: vent, in: 500 ms}
+"""
+
+
+def test_limits_to_wear_are_told_first_and_end_the_run_as_a_failed_one(
+    here: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    Path("wearing.yaml").write_text(WEARING, "utf-8")
+    assert main(["check", "wearing.yaml"]) == 0
+    in_force = [line for line in capsys.readouterr().out.splitlines() if line.startswith("wear ")]
+    assert "wear      vent: peak current: watch at most 10 mA, fail at most 20 mA, 2 of 2 cycles" in in_force
+    assert main(["run", "wearing.yaml", "--port", "mock:?pace=virtual"]) == 1
+    said = capsys.readouterr()
+    shown = said.err.splitlines()
+    assert shown[: len(in_force)] == in_force
+    assert shown[len(in_force)] == f"recording to {only_run()}"
+    found = [line.partition(" at cycle 4, ")[0] for line in shown if " at cycle " in line]
+    assert found == ["vent: peak current: watch limit", "vent: peak current: fail limit"]
+    *lines, end = said.out.splitlines()
+    assert lines[0].startswith("likely   worn, or drifted, beyond a limit of the file: vent: peak current is ")
+    assert end.startswith("failed: vent: peak current: fail limit at cycle 4, ")
+    assert end.endswith("; cycles: 4 commanded, 0 confirmed, 0 failed, 4 not judged [wearing.yaml:9:18]")
+    assert main(["resume", str(only_run())]) == 2
+
+
 @pytest.mark.parametrize(
     ("url", "bench"),
     [("mock:", "here/bench.yaml"), ("mock:?seed=3", "here/bench.yaml"), ("mock:?bench=other.yaml", "other.yaml")],

@@ -17,6 +17,7 @@ import pytest
 from endure_crash import CYCLES as FEW
 from endure_crash import Host, Killed, Process
 from ramprig.endure import features, live
+from ramprig.endure.doorsheet import door_sheet
 from ramprig.endure.features import cycle_features
 from ramprig.endure.live import LiveWatch
 from ramprig.endure.motorfeatures import MotorFeatures
@@ -34,6 +35,7 @@ from ramprig.report.facts import gather
 from ramprig.report.making import make_report
 from ramprig.report.trends import cycles_of, wear_of
 from ramprig.sequence.columns import bench_columns
+from ramprig.sequence.compile import compile_plan
 from ramprig.sequence.cycle_watch import CycleWatch, TurnDone, Watched, place_of
 from ramprig.sequence.executive import Progress
 from ramprig.sequence.outcome import Verdict
@@ -163,6 +165,19 @@ def test_the_rules_in_force_are_on_record(worn: Looked) -> None:
     assert [limit.feature for limit in rules.limits] == ["vent forward: steady current"]
     assert rules == worn.watch.judge.blocks[CYCLES_OF_1].rules
     assert (checks.turn, checks.run_in_turns, checks.baseline, checks.detectors) == (TurnKind.CHECK, 1, 10, False)
+
+
+def test_the_door_sheet_says_which_wear_ends_the_run(tmp_path: Path) -> None:
+    limits = "limits: [{feature: energy, of: vent, watch: +10 %}, {feature: energy, of: fan, fail: +25 %}]"
+    fan = STEPS.replace("      - confirm:", "      - ramp: {motor: fan, to: 20 %, in: 300 ms}\n      - confirm:")
+    fan = fan.replace("      - wait:", "      - coast: {motor: fan, in: 300 ms}\n      - wait:")
+    steps = fan.replace("TIMES", "30").replace("WEAR", WEAR.replace("LIMITS", limits))
+    sequence, bench = sequence_of(tmp_path, steps), small_bench()
+    sheet = door_sheet(
+        bench, sequence, compile_plan(sequence, bench), start_unix_s=1.8e9, latest_end_unix_s=1.9e9, host="pc"
+    )
+    assert sheet.text().count("it ends by itself once") == 1
+    assert "it ends by itself once fan: energy is beyond +25 %: worn" in sheet.text()
 
 
 # ---- what it leads to ------------------------------------------------------------------------------------------------
@@ -406,6 +421,9 @@ def test_a_run_that_died_while_wear_was_ending_it_ends_at_once_when_it_is_resume
     assert f"vent: energy: fail limit at cycle {done}" in result.outcome.sentence
     counted = host.record().counted
     assert (counted.commanded, counted.done) == (done, done)
+    events, _ = read_events(host.run_folder / "events.jsonl")
+    resumed = next(place for place, event in enumerate(events) if event["kind"] == "run_resumed")
+    assert "armed" not in [event["kind"] for event in events[resumed:]]  # nothing moves any more
 
 
 def test_a_resumed_run_keeps_the_limits_that_it_began_with(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:

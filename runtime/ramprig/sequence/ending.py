@@ -178,6 +178,7 @@ class _Run:
             # A latch that stands from before is somebody else's finding: it is shown, not cleared away.
             trip = explain_trip(session.trip, self.rig)
             raise Ended(Verdict.TRIPPED, f"the device is still tripped from before ({trip}): clear it first", None)
+        self.executive.check_wear()  # of a run that is gone on with; then nothing is to move any more
         self.executive.trip = None  # whatever was told of before has been cleared
         session.log(plan.period_ticks, plan.mask)
         session.arm(self.rig.bench.link.lease_ms)

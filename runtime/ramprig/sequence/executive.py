@@ -467,7 +467,7 @@ class Executive:
         if self._commanded is None:
             if book.under_way and not self._close_turn(book, ask):
                 return False
-            self._check_wear(book)
+            self.check_wear()
             due = book.due(ask.tick)
             if due.turn is not Turn.OVER:
                 self._resting = due.tick > ahead
@@ -500,9 +500,10 @@ class Executive:
             raise Ended(Verdict.FAILED, too_many, ask.part.mark.place)
         return True
 
-    def _check_wear(self, book: CycleBook) -> None:
+    def check_wear(self) -> None:
         """End where the cycles so far, those of earlier parts of the run among them, show too much wear."""
-        why, place = ("", None) if book.watch is None else book.watch.too_worn()
+        watch = None if self.book is None else self.book.watch
+        why, place = ("", None) if watch is None else watch.too_worn()
         if why:
             raise Ended(Verdict.FAILED, why, place)
 
