@@ -63,6 +63,7 @@ class Axis:
         "duty",
         "free_a",
         "gear",
+        "linked",
         "mean_a",
         "parameters",
         "restless",
@@ -257,6 +258,7 @@ class Axis:
 
     def _hold(self) -> None:
         gear, motor = self.gear, self.parameters.motor
+        self.linked = gear.linked  # looked at in every tick
         dragged_nm = motor.output_friction_nm / motor.gear_ratio if gear.through else 0.0
         self._load_nm = self._laden_nm if gear.through else 0.0
         self._running_nm = self._coulomb_nm + dragged_nm

@@ -86,7 +86,7 @@ class Plant:
         bus_v = supply.step(load_a, siemens)
         for axis in axes:
             axis.advance(bus_v)
-            if axis.gear.linked:
+            if axis.linked:
                 axis.follow()
 
     def read_counts(self, axis: int) -> int:
