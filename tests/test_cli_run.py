@@ -5,6 +5,7 @@ from __future__ import annotations
 import io
 import json
 import re
+import shutil
 import signal
 import sys
 from pathlib import Path
@@ -127,6 +128,17 @@ def test_2_a_disk_that_makes_no_progress_stops_the_motor(
     manifest = read_manifest(only_run())
     assert (manifest["verdict"], manifest["results"]["stop_confirmed"]) == ("not recorded", True)
     assert "no progress for 3 s" in manifest["stop_reason"]
+
+
+def test_2_a_disk_that_is_full_from_the_start_is_told_before_anything_moves(
+    here: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    usage = type(shutil.disk_usage(here))
+    monkeypatch.setattr(shutil, "disk_usage", lambda path: usage(10**9, 10**9 - 2**20, 2**20))
+    assert main(["rehearse", "short.yaml"]) == 2
+    last = capsys.readouterr().err.splitlines()[-1]
+    assert last.startswith("runs: 1 MiB are free, and 32 MiB are kept back: make room")
+    assert not Path("runs").exists()
 
 
 def test_3_a_trip(here: Path, capsys: pytest.CaptureFixture[str]) -> None:

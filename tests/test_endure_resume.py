@@ -107,6 +107,21 @@ def test_by_itself_it_goes_on_no_more_often_than_said(tmp_path: Path) -> None:
     assert [each["by"] for each in read_manifest(host.run_folder)["interruptions"]] == ["policy", "command"]
 
 
+def test_who_does_not_wait_for_the_board_gets_the_run_as_it_is(tmp_path: Path) -> None:
+    host = Host(tmp_path, policy=GO_ON)
+    host.meddle = once("unplug")
+
+    def stopped(seconds: float) -> None:
+        raise KeyboardInterrupt
+
+    host.pause = stopped  # type: ignore[method-assign]  # the test's own host
+    result = host.run(Process())
+    assert result.outcome.verdict is Verdict.LINK_LOST
+    assert result.outcome.sentence.endswith("; not gone on with: the user stopped it")
+    assert result.folder == host.run_folder
+    assert [note["text"] for note in read_notes(host.run_folder)] == ["not gone on with: the user stopped it"]
+
+
 def test_a_board_that_does_not_come_back_ends_the_run(tmp_path: Path) -> None:
     host = Host(tmp_path, policy=GO_ON)
     host.meddle = once("unplug")  # and nobody plugs it in again

@@ -17,7 +17,7 @@ from hypothesis import strategies as st
 
 from ramprig.errors import RecordError
 from ramprig.record.appendfile import AppendFile, Reserve, replace_file
-from ramprig.record.space import MIB, SpacePolicy, SpaceWatch
+from ramprig.record.space import MIB, SpacePolicy, SpaceWatch, check_space
 from ramprig.record.writer import DiskWriter, Trouble, TroubleKind, trouble_of
 
 WAIT_S = 20.0  # no test waits this long unless it fails
@@ -333,6 +333,19 @@ def test_little_space_is_warned_of_and_less_asks_for_a_stop(tmp_path: Path, free
     SpaceWatch(tmp_path, SpacePolicy(), tell=told.append, free=lambda _: free).look()
     assert [trouble.kind for trouble in told] == kinds
     assert all(f"{free // MIB} MiB free" in trouble.text for trouble in told)
+
+
+def test_a_run_that_would_be_stopped_at_once_is_not_begun(tmp_path: Path) -> None:
+    asked: list[Path] = []
+
+    def free(path: Path) -> int:
+        asked.append(path)
+        return 31 * MIB
+
+    with pytest.raises(RecordError, match="31 MiB are free, and 32 MiB are kept back: make room"):
+        check_space(tmp_path / "runs" / "of" / "the night", free=free)
+    assert asked == [tmp_path]  # the nearest folder that is there has the disk
+    check_space(tmp_path, free=lambda path: 32 * MIB)
 
 
 def test_a_folder_that_is_gone_is_a_disk_error(tmp_path: Path) -> None:

@@ -31,6 +31,17 @@ def test_the_true_cause_comes_first(tmp_path: Path, kind: str) -> None:
     assert explanation.likely.next_step.endswith(".")
 
 
+def test_what_the_port_said_is_told_without_what_else_the_last_sentence_says(tmp_path: Path) -> None:
+    _, explanation = run_case(tmp_path, case_of("unplug", random.Random("unplug-0")), seed=0)
+    assert explanation is not None
+    assert explanation.likely is not None
+    said = explanation.likely.evidence[0]
+    assert said.startswith("the port said: ")
+    assert "unplugged" in said or "pulled" in said or "gone" in said
+    assert "NOT CONFIRMED" in explanation.what
+    assert "NOT CONFIRMED" not in said
+
+
 @pytest.mark.soak
 def test_the_true_cause_comes_first_in_at_least_95_percent_of_seeded_faults(tmp_path: Path) -> None:
     wrong, ended = [], 0

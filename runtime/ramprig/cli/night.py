@@ -60,12 +60,12 @@ def carry_out_unattended(
     from ramprig.endure.awake import keep_awake
     from ramprig.endure.doorsheet import door_sheet
     from ramprig.endure.unattended import longest_s, missing_rules
-    from ramprig.record.space import disk_free
+    from ramprig.record.space import disk_free, standing
     from ramprig.sequence.compile import compile_plan
 
     at_most_s = seconds_of(at_most)
     plan = compile_plan(sequence, bench, so_far=so_far)
-    free_bytes = disk_free(_standing(Path(".") if way.runs is None else way.runs))
+    free_bytes = disk_free(standing(Path(".") if way.runs is None else way.runs))
     refuse_missing(missing_rules(bench, sequence, plan, url=way.url, free_bytes=free_bytes, at_most_s=at_most_s))
     with keep_awake(accept_sleep=accept_sleep) as awake:
         start_s = time.time()
@@ -78,11 +78,3 @@ def carry_out_unattended(
         ask()
         settings = {**way.settings, "unattended": True, "kept_awake_by": awake.method or None}
         return run(replace(way, latest_end_unix_s=latest_s, settings=settings, sheet=sheet))
-
-
-def _standing(path: Path) -> Path:
-    """The folder, or the nearest above it that is there already: it has the disk on which it will be made."""
-    path = path.absolute()
-    while not path.exists():
-        path = path.parent
-    return path

@@ -245,8 +245,8 @@ def run_enduring(wish: RunWish, around: Surroundings, *, port: Port | None = Non
     """Run a sequence and go on after each lost link and restarted board, as often as the sequence allows.
 
     Its cycles are judged for wear, also where the wish says nothing of it. `port` is the open port of the first part,
-    None to open it. Raises what `run_sequence` raises, for the first part
-    alone; a board that does not come back in time ends the run with the outcome of the part before.
+    None to open it. Raises what `run_sequence` raises, for the first part alone; a board that does not come back in
+    time, or a user who does not wait for it, ends the run with the outcome of the part before.
     """
     if wish.watching is None:
         wish = replace(wish, watching=watching(around.tell))
@@ -254,7 +254,10 @@ def run_enduring(wish: RunWish, around: Surroundings, *, port: Port | None = Non
     while (folder := result.folder) is not None and _may_go_on(wish.sequence, result.outcome, folder):
         for line in (f"interrupted: {result.outcome.sentence}", *around.explain(folder)):
             around.tell(line)
-        later = _go_on(wish, around, folder)
+        try:
+            later = _go_on(wish, around, folder)
+        except KeyboardInterrupt:  # nothing runs while the board is looked for
+            later = "the user stopped it"
         if isinstance(later, str):
             add_note(folder, f"not gone on with: {later}", unix_s=around.wall(), by="ramprig")
             outcome = replace(result.outcome, sentence=f"{result.outcome.sentence}; not gone on with: {later}")

@@ -8,6 +8,8 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 
+from ramprig.errors import RecordError
+
 from .writer import Trouble, TroubleKind
 
 MIB = 1024 * 1024
@@ -29,6 +31,28 @@ class SpacePolicy:
     def for_run(cls, predicted_bytes: int, *, stop_bytes: int = 32 * MIB) -> SpacePolicy:
         """Warns at twice what the run is predicted to need, above what is kept for the stop."""
         return cls(warn_bytes=2 * predicted_bytes + stop_bytes, stop_bytes=stop_bytes)
+
+
+def standing(path: Path) -> Path:
+    """The folder, or the nearest above it that is there already: it has the disk on which it will be made."""
+    path = path.absolute()
+    while not path.exists():
+        path = path.parent
+    return path
+
+
+def check_space(path: Path, *, free: Callable[[Path], int] = disk_free) -> None:
+    """Raise RecordError where a run in `path` would have to be stopped at once for lack of space."""
+    kept_bytes = SpacePolicy().stop_bytes
+    try:
+        found = free(standing(path))
+    except OSError:
+        return  # whoever writes there finds out, and says so
+    if found < kept_bytes:
+        raise RecordError(
+            f"{path}: {found // MIB} MiB are free, and {kept_bytes // MIB} MiB are kept back: make room, or record "
+            "elsewhere with --runs"
+        )
 
 
 class SpaceWatch:

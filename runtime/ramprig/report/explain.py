@@ -271,7 +271,7 @@ def _link(facts: Facts, *, lease_ms: float) -> Iterator[Cause]:
         yield Cause(
             key="unplugged",
             sentence="the cable was pulled, or the adapter vanished from the computer",
-            evidence=(f"the port said: {reason}", *_near_start(facts)),
+            evidence=(f"the port said: {_without_beside(reason)}", *_near_start(facts)),
             next_step="Check plug, hub and cable; if it comes with a motor's start, suspect interference or a sag.",
             weight=0.95,
         )
@@ -287,6 +287,13 @@ def _link(facts: Facts, *, lease_ms: float) -> Iterator[Cause]:
             next_step="Ask the board (`ramprig doctor`); check the data wires; power the board anew.",
             weight=0.6,
         )
+
+
+def _without_beside(reason: str) -> str:
+    """The reason without what the run's sentence says beside it."""
+    for beside in ("; stop NOT CONFIRMED", "; cycles: ", "; interrupted "):
+        reason = reason.partition(beside)[0]
+    return reason
 
 
 def _noisy(facts: Facts, told: list[str], *, weight: float) -> Cause:

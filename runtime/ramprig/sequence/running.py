@@ -16,6 +16,7 @@ from ramprig.record.folder import InputFile, RunDescription, RunFolder
 from ramprig.record.keeping import Keeping
 from ramprig.record.manifest import Anchor, RunEnd
 from ramprig.record.recorder import Recorder
+from ramprig.record.space import check_space
 from ramprig.record.writer import Trouble, TroubleKind
 from ramprig.session.blocks import Block
 from ramprig.session.limits import LimitKey
@@ -332,6 +333,7 @@ def _recorder(what: Recorded, session: Session, clock: Clock, on_trouble: Callab
 
 def _folder(what: Recorded, session: Session, clock: Clock) -> RunFolder:
     """A new run folder, or the one of the run that is to be gone on with."""
+    check_space(what.runs if what.carry_on is None else what.carry_on.folder)
     identity = jsonable(session.identity)
     assert isinstance(identity, dict)  # a dataclass is written as an object
     carry_on = what.carry_on
