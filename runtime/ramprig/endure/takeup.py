@@ -63,13 +63,14 @@ class Start:
 def starts_of(duty: Floats, counts: Floats) -> list[Start]:
     """The starts from rest, in order; `duty` (n,) %, `counts` (n,); NaN is missing, and no start is found beside it."""
     signs = np.sign(np.nan_to_num(duty))
-    begins = np.flatnonzero((signs != 0.0) & (np.concatenate(([0.0], signs[:-1])) != signs))
+    changes = np.flatnonzero(signs != np.concatenate(([0.0], signs[:-1])))
+    if not len(changes):
+        return []
+    last_driven = np.maximum.accumulate(np.where(signs != 0.0, np.arange(len(signs)), -1))
     found = []
-    for first in map(int, begins):
-        if first == 0 and abs(duty[0]) > FROM_REST_PCT:
+    for first, end in zip(changes.tolist(), [*changes[1:].tolist(), len(signs)], strict=True):
+        if signs[first] == 0.0 or (first == 0 and abs(duty[0]) > FROM_REST_PCT):
             continue
-        over = np.flatnonzero(signs[first:] != signs[first])
-        end = first + int(over[0]) if len(over) else len(duty)
         earlier = counts[max(0, first - 5) : first + 1]
         if np.isnan(earlier).any() or np.ptp(earlier) > MOVED_COUNTS:
             continue
@@ -78,8 +79,8 @@ def starts_of(duty: Floats, counts: Floats) -> list[Start]:
             continue
         falls = np.flatnonzero(np.diff(np.abs(duty[first:end])) <= 0.0)
         ends = first + int(falls[0]) if len(falls) else end
-        driven = np.flatnonzero(signs[:first])
-        after = float(signs[driven[-1]]) if len(driven) else 0.0
+        before = int(last_driven[first - 1]) if first else -1
+        after = float(signs[before]) if before >= 0 else 0.0
         found.append(Start(first=first, moved=first + int(moved[0]), ends=ends, sign=float(signs[first]), after=after))
     return found
 
