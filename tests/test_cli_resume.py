@@ -112,7 +112,9 @@ def test_a_note_is_kept_and_read_back(here: Path, capsys: pytest.CaptureFixture[
 
 @pytest.mark.process
 @pytest.mark.skipif(sys.platform == "win32", reason="pseudo-terminals and kill -9 are POSIX only")
-def test_after_kill_9_a_run_is_gone_on_with_on_a_port_of_another_name(tmp_path: Path) -> None:
+def test_after_kill_9_a_run_is_gone_on_with_on_a_port_of_another_name(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
     """The board is reached by a link of another name, as an adapter that was plugged in again would be."""
     sequence = NIGHT.format(bench=BENCH, times=3)
     with MockProcess(tmp_path) as mock:
@@ -123,6 +125,8 @@ def test_after_kill_9_a_run_is_gone_on_with_on_a_port_of_another_name(tmp_path: 
             folder = run.folder
         until(lambda: mock.off_at(ended_s) is not None, "the bridge to be off")
         before = read_cycle_record(folder).counted
+        assert main(["read", str(folder)]) == 2
+        assert f"cycles   {before}" in capsys.readouterr().out
         other = tmp_path / "ttyOTHER"
         other.symlink_to(mock.port)
         command = [sys.executable, "-m", "ramprig", "resume", str(folder), "--port", str(other), "--yes"]

@@ -14,6 +14,8 @@ if TYPE_CHECKING:
 GAPS_SHOWN = 10
 NOTES_SHOWN = 20
 UNSOUND_CODE = 2
+CYCLE_WORDS = {"unjudged": "not judged", "interrupted": "broken off"}
+"""What a count is called where its key in `run.json` is no plain word."""
 
 
 def declare(parser: argparse.ArgumentParser) -> None:
@@ -33,7 +35,7 @@ def carry_out(args: argparse.Namespace) -> int:
         for line in [*explanation.lines(), ""]:
             say(line)
     found = audit(args.run)
-    for line in [*summary(manifest, found), *note_lines(args.run)]:
+    for line in [*summary(manifest, found), *open_count_lines(args.run, manifest), *note_lines(args.run)]:
         say(line)
     return 0 if found.exact else UNSOUND_CODE
 
@@ -56,7 +58,8 @@ def summary(manifest: dict[str, Any], found: Audit) -> list[str]:  # Any: JSON a
     ]
     lines = [f"{name:<9}{value}" for name, value in facts]
     if cycles:
-        lines.append("cycles   " + ", ".join(f"{count} {name}" for name, count in cycles.items()))
+        words = [f"{count} {CYCLE_WORDS.get(name, name)}" for name, count in cycles.items()]
+        lines.append("cycles   " + ", ".join(words))
     lines += [f"{'broken' if i == 0 else '':<9}{text}" for i, text in enumerate(found.interruptions)]
     lines += [f"{'':9}{line}" for line in gap_lines(manifest.get("samples") or {})]
     whole = "every sample is in the file or told as lost, and no file was changed"
@@ -64,6 +67,20 @@ def summary(manifest: dict[str, Any], found: Audit) -> list[str]:  # Any: JSON a
         whole = "every sample is in the file, thinned on purpose or told as lost, and no file was changed"
     verdicts = found.statements or (whole,)
     return lines + [f"{'checked' if i == 0 else '':<9}{text}" for i, text in enumerate(verdicts)]
+
+
+def open_count_lines(folder: Path, manifest: dict[str, Any]) -> list[str]:  # Any: as in summary
+    """The count of cycles of a run that never ended in order, from what it wrote down at each."""
+    from ramprig.endure.cycles import read_cycle_record
+    from ramprig.record.folder import CYCLES_FILE
+
+    if manifest.get("status") == "finished" or not (folder / CYCLES_FILE).exists():
+        return []
+    record = read_cycle_record(folder)
+    lines = [f"cycles   {record.counted}"]
+    if record.open_number is not None:
+        lines.append(f"{'':9}cycle {record.open_number} was commanded, and its end is not known: it counts as not done")
+    return lines
 
 
 def samples_line(manifest: dict[str, Any], found: Audit) -> str:  # Any: as in summary

@@ -261,8 +261,8 @@ class Screen:
                 command = c.JogHold(motor, hold)
         job = self._worker.post(command, text)
         if job is None:
-            busy = self._worker.busy or "the last line"
-            self._outbox.say(f"'{busy}' is still under way; nothing was done. Ctrl-C stops it.")
+            busy = f"'{self._worker.busy}'" if self._worker.busy else "the last line"
+            self._outbox.say(f"{busy} is still under way; nothing was done. Ctrl-C stops it.")
             return
         if isinstance(command, c.JogHold):
             self._hold, self._jog = command.hold, command
