@@ -10,6 +10,7 @@ import pytest
 
 from endure_crash import Killed, Process
 from ramprig.errors import RecordError
+from ramprig.record.export import To, export_run
 from ramprig.record.folder import RunFolder
 from ramprig.record.keeping import Around, Keeping, Thinning
 from ramprig.record.reading import audit, read_events, read_manifest, sample_files
@@ -205,3 +206,12 @@ def test_rows_that_a_full_disk_kept_from_the_volumes_are_set_aside_when_the_run_
     RunFolder.reopen(folder, read_manifest(folder), {"text": "a break"}, port="", identity={}).close()
     assert [(folder / f"unwritten-{number}.csv").read_bytes() for number in (1, 2)] == held
     assert held_files(folder) == []
+
+
+def test_an_export_of_a_killed_run_has_its_held_rows_once(tmp_path: Path) -> None:
+    recorder = begin(tmp_path, KEEPING, durable=True)
+    live(recorder, [])
+    folder = recorder.folder.path
+    (done,) = export_run(folder, To.EXCEL_CSV)
+    lines = done.path.read_text("utf-16").splitlines()[1:]
+    assert [int(line.split("\t")[0]) for line in lines] == ticks_in(folder)

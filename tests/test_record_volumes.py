@@ -143,6 +143,28 @@ def test_an_export_has_the_rows_of_all_volumes(tmp_path: Path) -> None:
     assert other.path.read_bytes() == one.path.read_bytes()
 
 
+@pytest.mark.filterwarnings("ignore::DeprecationWarning:asammdf", "ignore::DeprecationWarning:pandas")
+def test_other_programs_get_all_volumes_as_one(tmp_path: Path) -> None:
+    folder = run(tmp_path, VolumeLimits(rows=70))
+    expected = list(range(5000, 5000 + 2 * SAMPLES, 2))
+    parquet = pytest.importorskip("pyarrow.parquet", reason="needs the package pyarrow")
+    (done,) = export_run(folder, To.PARQUET)
+    assert (done.rows, parquet.read_table(done.path)["tick"].to_pylist()) == (SAMPLES, expected)
+    asammdf = pytest.importorskip("asammdf", reason="needs the package asammdf")
+    (done,) = export_run(folder, To.MDF4)
+    with asammdf.MDF(done.path) as file:
+        assert file.get("tick").samples.tolist() == expected
+
+
+def test_a_run_that_broke_off_amid_a_change_is_exported_as_far_as_it_came(tmp_path: Path) -> None:
+    recorder = begin(tmp_path, Keeping(volumes=VolumeLimits(rows=70)), durable=True)
+    for block in blocks_of(140, size=10):
+        recorder.on_block(block)
+    (recorder.folder.path / "samples.0003.csv").write_bytes(b"tick,ti")  # its header was torn
+    (done,) = export_run(recorder.folder.path, To.EXCEL_CSV)
+    assert done.rows == 140
+
+
 def test_the_last_volume_there_can_be_only_grows(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr("ramprig.record.volumewriter.VOLUMES_MAX", 2)
     folder = run(tmp_path, VolumeLimits(rows=100))

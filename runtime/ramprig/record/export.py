@@ -9,8 +9,9 @@ memory).
 from __future__ import annotations
 
 import contextlib
+import math
 import os
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from enum import StrEnum
 from pathlib import Path
@@ -23,7 +24,7 @@ from ..extras import need
 from .parts import parts_of
 from .reading import read_manifest
 from .scan import WORD_COLUMNS, Piece
-from .volumes import Stream, volume_names
+from .volumes import HELD_NAMES, Stream, volume_files, volume_names
 
 if TYPE_CHECKING:
     from types import ModuleType
@@ -73,10 +74,7 @@ def export_run(
     try:
         target.mkdir(parents=True, exist_ok=True)
         for part in parts_of(manifest):
-            paths = [folder / name for name in volume_names(folder, part)]
-            for path in paths:
-                if not path.is_file():
-                    raise RecordError(f"{path} is missing")
+            paths = _files_of(folder, part)
             stem = paths[0].stem
             if to is To.PARQUET:
                 done.append(_parquet(Stream(paths, piece_bytes=PIECE_BYTES), target / f"{stem}.parquet", manifest))
@@ -87,6 +85,16 @@ def export_run(
     except OSError as error:
         raise RecordError(f"the export cannot be written in {target}: {error.strerror or error}") from error
     return done
+
+
+def _files_of(folder: Path, part: Mapping[str, Any]) -> list[Path]:
+    """All that a part wrote; of one that broke off what was begun. Raises RecordError where something is missing."""
+    named = [folder / name for name in volume_names(folder, part)]
+    found = named if part.get("status") == "finished" else volume_files(folder, part)
+    missing = next((path for path in found or named if not path.is_file()), None)
+    if missing is not None or not found:
+        raise RecordError(f"{missing or named[0]} is missing")
+    return found
 
 
 @contextlib.contextmanager
@@ -172,7 +180,9 @@ def _sheets(paths: Sequence[Path], target: Path, mark: Mark, sheet_rows: int) ->
 
 def _sheet_rows(paths: Sequence[Path], mark: Mark) -> Iterator[str]:
     """The header once and each row, as text with its end."""
+    last = ""
     for path in paths:
+        after = _tick(last) if path.name in HELD_NAMES else None
         with open(path, encoding="utf-8", newline="") as file:
             header = file.readline()
             if path is paths[0]:
@@ -180,7 +190,15 @@ def _sheet_rows(paths: Sequence[Path], mark: Mark) -> Iterator[str]:
             for line in file:
                 if not line.endswith("\n"):
                     break  # a torn last row
+                if after is not None and _tick(line) <= after:
+                    continue  # a held row that a volume has
                 yield line.replace(",", ";").replace(".", ",") if mark is Mark.COMMA else line.replace(",", "\t")
+                last = line
+
+
+def _tick(line: str) -> float:
+    """The tick of a row; before all of them for no row."""
+    return int(line.partition(",")[0]) if line else -math.inf
 
 
 # ---- MDF 4 ----------------------------------------------------------------------------------------------------------

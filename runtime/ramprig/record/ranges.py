@@ -2,13 +2,14 @@
 
 Two files of the same form, a line a span, in order:
 
-    cycle-ranges.csv      each cycle and check, and what lies between them (number: the last cycle before it)
+    cycle-ranges.csv      each cycle and check, and what lies between them (number: the last cycle before it in the
+                          part, 0 before the first)
     interval-ranges.csv   each interval of a thinned log (number: from the run's begin, 0 is the first)
 
 Every sample that was received lies in exactly one span of a file: a span has the samples from the tick of its begin on,
 up to but without that of its end. `first_tick` to `last_s` are of its first and last sample, `.count` says how many
 samples had a value in a column (a servo without pulses has none). Sums are of whole numbers, so the mean is exact to
-the last digit that is printed.
+the last digit that is printed. A span that was under way when the program was killed has no line.
 """
 
 from __future__ import annotations
