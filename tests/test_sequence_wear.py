@@ -65,7 +65,7 @@ def test_without_a_word_everything_is_watched_and_nothing_ends_the_run() -> None
         "'open' after a run-in of 20 cycles and 5 min, against the 100 cycles after it",
         "every feature: watch +- 10 %, 3 of 5 cycles",
         "sudden changes, slow ones and drifts: watch (figures of this program, no standard)",
-        "no limit ends the run",
+        "none of these ends the run",
     ]
 
 

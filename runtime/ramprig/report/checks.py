@@ -33,7 +33,7 @@ def checks_table(features: Sequence[TurnFeatures]) -> str:
     if not rows:
         return ""
     said = f"{len(checks)} checks were done, the first after {checks[0].span.after} cycles and the last after "
-    said += f"{checks[-1].span.after}. What was judged of them stands above."
+    said += f"{checks[-1].span.after}. What was judged of them stands among the findings."
     heads = ["feature of the check", "first", "last", "change", "unit"]
     table = page.table(heads, rows, numbers=(1, 2, 3))
     return "<h3>Checks between the cycles</h3>" + table + page.paragraph(said, kind="note")

@@ -164,13 +164,14 @@ def _parts_of(read: Read, wish: Wish, figures: _Figures) -> list[tuple[str, str]
 
 
 def _trends(read: Read, figures: _Figures) -> str:
-    """Features against the cycle, and in words what they showed."""
+    """What the features showed, in words first, then each against the cycle."""
     found = trends_of(read.facts, read.digest)
     if not found:
         return ""
-    words = sections.trend_findings(found, rules_in_force(read.facts)) + checks_table(read.digest.features)
-    words += untold_table(read.digest.features, motors=read.facts.motors, servos=read.facts.servos)
-    return figures.put(plots.by_cycle(read.facts, found)) + words
+    words = sections.trend_findings(found, rules_in_force(read.facts))
+    tables = checks_table(read.digest.features)
+    tables += untold_table(read.digest.features, motors=read.facts.motors, servos=read.facts.servos)
+    return words + figures.put(plots.by_cycle(read.facts, found)) + tables
 
 
 def _ranges(digest: Digest) -> str:

@@ -362,15 +362,15 @@ def trend_findings(found: Sequence[Trend], rules: Sequence[WearRules]) -> str:
     """What the trends of the features showed, and by which rules; without rules nothing was judged."""
     if not rules:
         return page.paragraph("No trend is judged: the sequence says 'wear: off'.", kind="note")
-    lines = [line for each in rules for line in each.lines()]
-    rule = page.paragraph(f"Looked for: {'; '.join(lines)}. {NO_STANDARD}", kind="note")
+    lines = [[page.text(line)] for each in rules for line in each.lines()]
+    rule = page.table(["looked for"], lines) + page.paragraph(NO_STANDARD, kind="note")
+    told = sorted(((trend, finding) for trend in found for finding in trend.findings), key=lambda pair: -pair[1].level)
     rows = [
-        [page.text(trend.name), str(finding.cycle), finding.level.name.lower(), page.text(str(finding))]
-        for trend in found
-        for finding in trend.findings
+        [f"{finding.turn} {finding.cycle}", page.text(trend.name.removesuffix(finding.feature) + str(finding))]
+        for trend, finding in told
     ]
     if rows:
-        return page.table(["feature", "cycle", "level", "found"], rows, numbers=(1,)) + rule
+        return page.table(["at", "found"], rows) + rule
     if not any(trend.judged.established for trend in found):
         needed = min((each.run_in_turns + each.baseline for each in rules if each.turn is TurnKind.CYCLE), default=0)
         return page.paragraph(f"No trend is judged: that takes more than {needed} cycles.", kind="note") + rule

@@ -176,7 +176,7 @@ class WearRules:
         if self.detectors:
             yield "sudden changes, slow ones and drifts: watch (figures of this program, no standard)"
         if not self.can_fail:
-            yield "no limit ends the run"
+            yield "none of these ends the run"
 
     @property
     def can_fail(self) -> bool:
