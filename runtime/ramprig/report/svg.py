@@ -20,7 +20,7 @@ BLUE, VERMILION, GREEN, ORANGE, PURPLE, GREY = "#0072b2", "#d55e00", "#009e73", 
 SERIES = ((BLUE, ""), (VERMILION, "7 3"), (GREEN, "2 3"), (PURPLE, "9 3 2 3"))
 """Colour and dashes of the first, second ... line of a chart."""
 WIDTH = 720
-LEFT, RIGHT, TOP, BOTTOM = 62, 14, 10, 34
+LEFT, RIGHT, TOP, BOTTOM = 62, 14, 18, 34
 EVENT_LABEL_MAX = 28
 EVENTS_MAX = 40
 """Events drawn in one chart; more would hide it."""
@@ -135,7 +135,7 @@ class Chart:
         )
 
     def event(self, value: float, text: str, *, colour: str = VERMILION, dashes: str = "") -> None:
-        """A moment: a line from top to bottom with its name."""
+        """A moment: a line from top to bottom with its name above it, where it hides nothing."""
         low, high = self.x_range
         if not low <= value <= high:
             return
@@ -145,7 +145,7 @@ class Chart:
         self._parts.append(
             f'<line x1="{at:.1f}" x2="{at:.1f}" y1="{TOP}" y2="{self._bottom:.1f}" stroke="{colour}" '
             f'stroke-width="1.2"{dashed}/>'
-            f'<text x="{at + shift:.1f}" y="{TOP + 9}" class="e" text-anchor="{anchor}">'
+            f'<text x="{at + shift:.1f}" y="{TOP - 6}" class="e" text-anchor="{anchor}">'
             f"{escape(text[:EVENT_LABEL_MAX])}</text>"
         )
 
