@@ -167,6 +167,15 @@ def test_the_rules_in_force_are_on_record(worn: Looked) -> None:
     assert (checks.turn, checks.run_in_turns, checks.baseline, checks.detectors) == (TurnKind.CHECK, 1, 10, False)
 
 
+@pytest.mark.parametrize(("times", "remarks"), [(12, 1), (13, 0)])
+def test_cycles_too_few_for_a_baseline_are_remarked_on(tmp_path: Path, times: int, remarks: int) -> None:
+    limits = "limits: [{feature: energy, of: vent, fail: +25 %}]"
+    steps = STEPS.replace("TIMES", str(times)).replace("WEAR", WEAR.replace("LIMITS", limits))
+    found = compile_plan(sequence_of(tmp_path, steps), small_bench()).remarks
+    said = [text for text in found if "too few" in text]
+    assert said == ["the 12 cycles of 'open' are too few to judge a change: that takes more than 12"][:remarks]
+
+
 def test_the_door_sheet_says_which_wear_ends_the_run(tmp_path: Path) -> None:
     limits = "limits: [{feature: energy, of: vent, watch: +10 %}, {feature: energy, of: fan, fail: +25 %}]"
     fan = STEPS.replace("      - confirm:", "      - ramp: {motor: fan, to: 20 %, in: 300 ms}\n      - confirm:")

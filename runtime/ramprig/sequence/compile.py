@@ -43,6 +43,7 @@ from .steps import (
     Wait,
     What,
 )
+from .wear_plan import unjudged
 
 WAIT_REACTION_S = Fraction(1, 2)
 """After a wait has come true the plan goes on within this time: samples come in blocks, orders need their lead."""
@@ -163,6 +164,7 @@ class _Compiler:
         part = compile_cycles(self.rig, self.series, step, scene, block=block, so_far=self.so_far.get(block))
         if not part.confirmed:
             self.remarks.append(f"the cycle '{part.name}' has no 'confirm': its cycles are counted as commanded only")
+        self.remarks += unjudged(part)
         return part
 
     def part(self, step: Step, scene: Scene) -> Part:

@@ -7,6 +7,7 @@ from dataclasses import replace
 
 from ramprig.yamlfile import suggestion
 
+from .plan import Cycles
 from .rig import Axis, Rig
 from .steps import Cycle
 from .wear_limits import (
@@ -105,3 +106,22 @@ def _check_motor(rig: Rig, said: SaidLimit, driven: Set[str]) -> None:
     if FEATURE_WORDS[said.word].needs_encoder and not axis.has_encoder:
         found = f"'{said.drive}' has no encoder, so its {said.word} is not measured"
         raise said.drive_mark.error(found, "limit its steady current, peak current or energy")
+
+
+def unjudged(part: Cycles) -> Iterator[str]:
+    """A sentence for each kind of turn that a block has too few of for its changes to be judged, where a file limits
+    them."""
+    if part.times is None:
+        return
+    for rules in part.wear:
+        many = part.times
+        if rules.turn is TurnKind.CHECK:
+            many = 1 + part.times // (part.check_every or 1)
+        least = rules.run_in_turns + rules.baseline
+        if many <= least and any(_is_change(limit) for limit in rules.limits):
+            few = f"the {many} {rules.turn}s of '{part.name}' are too few to judge a change"
+            yield f"{few}: that takes more than {least}"
+
+
+def _is_change(limit: WearLimit) -> bool:
+    return any(each is not None and each.is_share for each in (limit.watch, limit.fail))
