@@ -8,7 +8,8 @@ interruption itself left is ended.
 from __future__ import annotations
 
 import hashlib
-from collections.abc import Callable, Mapping
+from collections import deque
+from collections.abc import Callable, Iterable, Mapping
 from contextlib import AbstractContextManager
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -21,7 +22,7 @@ from ramprig.quantity import format_duration
 from ramprig.record.events import from_rfc3339, jsonable, rfc3339
 from ramprig.record.folder import EVENTS_FILE
 from ramprig.record.parts import parts_of
-from ramprig.record.reading import read_events, read_manifest
+from ramprig.record.reading import EventLines, read_manifest
 from ramprig.sequence.carry_on import CarryOn
 from ramprig.sequence.cycle_run import RunSoFar
 from ramprig.sequence.executive import Progress
@@ -79,7 +80,6 @@ def read_broken(folder: Path, *, now_unix_s: float) -> Broken:
     so_far, open_number = _so_far(folder, manifest, record, now_unix_s)
     if not any(isinstance(step, Cycle) for step in sequence.steps):
         raise UsageError(f"{folder}: the sequence has no 'cycle', so there is no place to go on at; run it anew")
-    events, _ = _events_of(folder)
     return Broken(
         folder=folder,
         manifest=manifest,
@@ -89,14 +89,15 @@ def read_broken(folder: Path, *, now_unix_s: float) -> Broken:
         port_url=str((manifest.get("settings") or {}).get("port") or bench.port.url),
         so_far=so_far,
         open_number=open_number,
-        last_unix_s=last_known_unix_s(manifest, events, folder),
+        last_unix_s=last_known_unix_s(manifest, list(deque(_events_of(folder), maxlen=1)), folder),
         changed=changed,
         lines=tuple(record.lines),
     )
 
 
-def _events_of(folder: Path) -> tuple[list[dict[str, Any]], int]:
-    return read_events(folder / EVENTS_FILE) if (folder / EVENTS_FILE).exists() else ([], 0)
+def _events_of(folder: Path) -> Iterable[dict[str, Any]]:
+    """The events one after another: a run of weeks has more of them than need be in memory."""
+    return EventLines(folder / EVENTS_FILE) if (folder / EVENTS_FILE).exists() else ()
 
 
 def _made_from(folder: Path, manifest: Mapping[str, Any]) -> tuple[Sequence, Bench, tuple[str, ...]]:
@@ -135,7 +136,7 @@ def _so_far(
         counted = replace(counted, interrupted=counted.interrupted + 1)
     held = failed = 0
     first = ""
-    for event in _events_of(folder)[0]:
+    for event in _events_of(folder):
         if event["kind"] == "judged":
             held += bool(event["held"])
             failed += not event["held"]

@@ -13,7 +13,7 @@ import io
 import json
 import math
 import sys
-from collections.abc import Collection, Iterator
+from collections.abc import Collection, Iterable, Iterator
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -28,7 +28,9 @@ from .folder import CYCLES_FILE, EVENTS_FILE, FORMAT, NOTES_FILE, RUN_FILE
 from .parts import parts_of, whole_account
 from .volumes import Stream, volume_files
 
-CHUNK_BYTES = 4 * 1024 * 1024
+CHUNK_BYTES = 1024 * 1024
+SAMPLE_KINDS = frozenset({"gap_found", "full_rate_begun", "full_rate_ended"})
+"""The events by which samples are looked for."""
 Document = dict[str, Any]  # JSON as it comes: what is in it is checked where it is used
 
 
@@ -124,16 +126,29 @@ class _Table:
         self.words[name] = [""] * sum(map(len, parts))
 
 
+class EventLines:
+    """Iterates over the events of a file, one after another, in the memory of one. Raises RecordError.
+
+    `torn_bytes`, once all were read, is the length of an unfinished last line, which is left out.
+    """
+
+    def __init__(self, path: Path) -> None:
+        self._path = path
+        self.torn_bytes = 0
+
+    def __iter__(self) -> Iterator[Document]:
+        try:
+            for data, torn_bytes in _whole_lines(self._path):
+                self.torn_bytes = torn_bytes
+                yield from map(json.loads, data.splitlines())
+        except (OSError, ValueError) as error:
+            raise RecordError(f"{self._path} cannot be read as an event log: {error}") from error
+
+
 def read_events(path: Path) -> tuple[list[Document], int]:
     """All events of a run in order, and the length in bytes of an unfinished last line, which is left out."""
-    events: list[Document] = []
-    torn_bytes = 0
-    try:
-        for data, torn_bytes in _whole_lines(path):  # noqa: B007  (the last one is what is wanted)
-            events += [json.loads(line) for line in data.splitlines()]
-    except (OSError, ValueError) as error:
-        raise RecordError(f"{path} cannot be read as an event log: {error}") from error
-    return events, torn_bytes
+    lines = EventLines(path)
+    return list(lines), lines.torn_bytes
 
 
 def read_manifest(folder: Path) -> Document:
@@ -211,17 +226,17 @@ def audit(folder: Path) -> Audit:
     manifest = read_manifest(folder)
     finished = manifest.get("status") == "finished"
     begun = finished or (folder / EVENTS_FILE).exists()
-    events, torn_event_bytes = read_events(folder / EVENTS_FILE) if begun else ([], 0)
     entries = parts_of(manifest)
-    by_part = _events_by_part(events, len(entries))
+    events = EventLines(folder / EVENTS_FILE)
+    by_part = _events_by_part(events if begun else (), len(entries))
     parts = [
         _audit_part(folder, entry, its_events, last=entry is entries[-1], several=len(entries) > 1)
         for entry, its_events in zip(entries, by_part, strict=True)
     ]
     statements = [text for part in parts for text in part.statements]
-    if torn_event_bytes:
-        statements.append(f"the last event is torn ({torn_event_bytes} bytes) and was left out")
-    if read_cycles(folder)[1]:
+    if events.torn_bytes:
+        statements.append(f"the last event is torn ({events.torn_bytes} bytes) and was left out")
+    if _is_torn(folder / CYCLES_FILE):
         statements.append("the last line of the count of cycles is torn and was left out")
     if finished:
         statements += _changed_files(folder, manifest)
@@ -240,16 +255,32 @@ def audit(folder: Path) -> Audit:
     )
 
 
-def _events_by_part(events: list[Document], parts: int) -> list[list[Document]]:
-    """The events of each part, divided where a run was gone on with."""
+def _events_by_part(events: Iterable[Document], parts: int) -> list[list[Document]]:
+    """Of the events of each part, divided where a run was gone on with, those that tell of samples, and the last."""
     divided: list[list[Document]] = [[] for _ in range(parts)]
+    latest: list[Document | None] = [None] * parts
     part = 1
     for event in events:
         if event["kind"] == "run_resumed":
             part = int(event["part"])
         if part <= parts:
-            divided[part - 1].append(event)
+            latest[part - 1] = event
+            if event["kind"] in SAMPLE_KINDS:
+                divided[part - 1].append(event)
+    for of_samples, last in zip(divided, latest, strict=True):
+        if last is not None and last not in of_samples[-1:]:
+            of_samples.append(last)
     return divided
+
+
+def _is_torn(path: Path) -> bool:
+    """Whether the last line of a file of events is unfinished; False where there is none. Raises RecordError."""
+    if not path.exists():
+        return False
+    lines = EventLines(path)
+    for _ in lines:  # each must be an object
+        pass
+    return lines.torn_bytes > 0
 
 
 def _audit_part(folder: Path, entry: Document, events: list[Document], *, last: bool, several: bool) -> Audit:
