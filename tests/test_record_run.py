@@ -441,6 +441,7 @@ class FullDisk:
 def test_a_full_disk_stops_the_motor_first_and_then_writes_down_why(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch, threaded: bool, room: int
 ) -> None:
+    rows = 3 * BATCH_ROWS
     rig = begin(tmp_path, threaded=threaded)
     if threaded:
         rig.recorder._writer._queue.join()
@@ -448,13 +449,13 @@ def test_a_full_disk_stops_the_motor_first_and_then_writes_down_why(
     monkeypatch.setattr(rig.recorder, "_user_on_trouble", lambda trouble: happened.append(f"stop: {trouble.kind}"))
     monkeypatch.setattr("ramprig.record.appendfile.os.write", FullDisk(room, rig.path, happened))
     try:
-        for block in blocks_of(4000):
+        for block in blocks_of(rows):
             rig.recorder.on_block(block)
             if threaded:
                 rig.recorder._writer._queue.join()
     except RecordError:
         happened.append("raised")
-    path = rig.recorder.finish(replace(end_of(4000), verdict="failed", stop_reason="the disk is full"))
+    path = rig.recorder.finish(replace(end_of(rows), verdict="failed", stop_reason="the disk is full"))
     assert happened[:2] == ["no room", "stop: disk_full"]
     assert sorted(happened[2:]) == ["raised", "reserve freed"]
     manifest = read_manifest(path)
@@ -468,9 +469,9 @@ def test_a_full_disk_stops_the_motor_first_and_then_writes_down_why(
     samples = read_samples(path / "samples.csv")
     assert samples.torn_bytes == 0
     assert manifest["samples"]["written"] == len(samples)
-    assert manifest["samples"]["unwritten"] == 4000 - len(samples)
+    assert manifest["samples"]["unwritten"] == rows - len(samples)
     found = audit(path)
-    assert found.missing == 4000 - len(samples)
+    assert found.missing == rows - len(samples)
     assert not found.exact
     assert not (path / "reserve.bin").exists()
 

@@ -26,7 +26,7 @@ from .speed import SpeedMethod
 from .volumes import SAMPLES_FIRST
 from .writer import SYNC_EVERY_S, DiskWriter, Trouble
 
-BATCH_ROWS = 1024
+BATCH_ROWS = 2048
 """In virtual time so many rows are printed together; a log that must be durable takes every block as it comes."""
 
 PERIODS_MAX = 16
