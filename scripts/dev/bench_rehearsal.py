@@ -84,7 +84,8 @@ def measure(make: type[MockDevice] | type[SimulatedDevice] = MockDevice) -> Rehe
 def line_of(name: str, speed: RehearsalSpeed, aim: float) -> str:
     """A speed in a sentence."""
     return (
-        f"{speed.ratio:.0f} times real time at 100 samples a second on {name} (aim {aim:.0f} or more); "
+        f"{speed.ratio:.0f} times real time at 100 samples a second on {name} "
+        f"(aim {aim:.0f} or more: {speed.ratio / aim:.2f} of it); "
         f"{speed.device_s / speed.took_s:.0%} of it is the device's own, without that {speed.host_ratio:.0f} times"
     )
 
