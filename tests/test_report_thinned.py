@@ -88,7 +88,9 @@ def test_the_report_and_the_summary_say_what_was_left_out(full: Path, thinned: P
 
 
 def test_without_ranges_the_report_says_that_it_shows_kept_rows_alone(thinned: Path) -> None:
-    assert "are of all samples, from cycle-ranges.csv." in said_of_thinning(gather(thinned))
+    assert said_of_thinning(gather(thinned)).endswith(
+        "Ranges are of all samples, from cycle-ranges.csv, and the bands of the plots too, from interval-ranges.csv."
+    )
     facts = gather(thinned)
     facts.folder = thinned.parent  # as if neither file were there
     assert "what lay between two of them is not known" in said_of_thinning(facts)

@@ -99,10 +99,10 @@ def said_of_thinning(facts: Facts) -> str:
         "the run among them. Every sample was received and judged while the run was under way; those left out are "
         "counted as thinned, not as lost."
     )
-    path = ranges_path(facts, with_cycles=len(facts.passes) >= 2)
-    if path is None:
+    path, finest = (ranges_path(facts, with_cycles=wanted) for wanted in (True, False))
+    if path is None or finest is None:
         return f"{text} Plots and ranges show the rows that were kept: what lay between two of them is not known."
-    return f"{text} Ranges, and the bands of the plots, are of all samples, from {path.name}."
+    return f"{text} Ranges are of all samples, from {path.name}, and the bands of the plots too, from {finest.name}."
 
 
 def whole_of(account: Mapping[str, object]) -> str:
