@@ -18,7 +18,7 @@ from ramprig.errors import UsageError
 from ramprig.measure.forecast.draws import Belief, belief_of, drawn_setup
 from ramprig.measure.forecast.dutytype import duty_type
 from ramprig.measure.forecast.forecast import Forecast, ForecastWish, Interval, Odds, forecast
-from ramprig.measure.forecast.montecarlo import heat_a2, periodic_heat_a2
+from ramprig.measure.forecast.montecarlo import Job, heat_a2, one_draw, periodic_heat_a2
 from ramprig.measure.forecast.play import Play, core_is_there, play
 from ramprig.measure.forecast.reduction import cut_of, night_of, warm_guess
 from ramprig.measure.forecast.turns import follow
@@ -231,6 +231,50 @@ def test_reduced_cycles_with_checks_and_spaced_starts_are_the_full_ones(keys: st
     rise = float(motor.winding_c.max()) - 22.0
     assert night.hottest_c["vent"] - 22.0 == pytest.approx(rise, rel=0.02)
     assert night.end_c["vent"] == pytest.approx(float(motor.winding_c[-1]), abs=0.02 * rise + 0.02)
+
+
+HEAVY = """
+sequence: heavy, with long pauses
+log: {{period: 20 ms}}
+steps:
+  - cycle:
+      times: {times}
+      starts per hour: 80
+      steps:
+        - ramp: {{motor: vent, to: 60 %, in: 1 s}}
+        - hold: 20 s
+        - coast: {{motor: vent, in: 1 s}}
+"""
+
+
+@pytest.mark.skipif(not ON_CORE, reason="without a C compiler a full night takes minutes")
+def test_cycles_that_only_their_pauses_keep_from_an_overload_do_not_trip_in_a_forecast(tmp_path: Path) -> None:
+    """Driven for 22 s of 45 s: the board's thermal model is well below its trip, and would be at it without pauses."""
+    bench = vent_with(tmp_path, "current: 900 mA", "current: 86 mA")
+    steps = sequence(HEAVY.format(times=14))
+    plan = compile_plan(steps, bench)
+    full = play(plan, bench, belief_of(bench).setup, seed=1)
+    assert not full.tripped, full.tripped
+    used = math.sqrt(float(heat_a2(full.motors["vent"].square_a2, full.row_s, 60.0).max())) / 0.086
+    assert 0.75 < used < 0.95
+    cut = cut_of(steps, lambda one: compile_plan(one, bench).totals.least / 1000.0)
+    assert cut is not None
+    cold = compile_plan(cut.cold, bench)
+    assert "overload" in play(cold, bench, belief_of(bench).setup, seed=1).tripped, "it must trip without the pauses"
+    job = Job(
+        bench=bench,
+        belief=belief_of(bench),
+        cold=cold,
+        hot=compile_plan(cut.hot, bench),
+        cut=cut,
+        part=plan.cycles[0],
+        seed=1,
+        on_core=True,
+    )
+    draw = one_draw(job, 0)
+    assert draw.whole
+    assert draw.trip == ""
+    assert draw.motors["vent"].overload == pytest.approx(used, rel=0.01)
 
 
 def test_a_night_of_many_cycles_is_followed_only_until_it_repeats() -> None:

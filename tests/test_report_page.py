@@ -214,6 +214,7 @@ def test_the_name_of_a_moment_hides_nothing_of_the_curve() -> None:
     """It stands above the plot: just before a trip is what one wants to see."""
     chart = Chart((0.0, 10.0), (0.0, 1.0), "A")
     chart.event(5.0, "trip: overcurrent")
-    heights = re.findall(r'<text x="[\d.]+" y="([\d.]+)" class="e"[^>]*>trip: overcurrent</text>', chart.text("a chart"))
+    drawn = chart.text("a chart")
+    heights = re.findall(r'<text x="[\d.]+" y="([\d.]+)" class="e"[^>]*>trip: overcurrent</text>', drawn)
     assert len(heights) == 1
     assert float(heights[0]) < float(chart.y(1.0))

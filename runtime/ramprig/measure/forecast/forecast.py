@@ -24,7 +24,7 @@ from ramprig.sequence.reading import Sequence as Steps
 from .draws import Belief, belief_of
 from .dutytype import DutyType, duty_type
 from .limits import Margin, margins
-from .montecarlo import Draw, Job, draws_of, with_pause
+from .montecarlo import Draw, Job, draws_of, packed_bench, with_pause
 from .play import core_is_there, play
 from .reduction import COLD_PASSES, Cut, alike_of, cut_of
 
@@ -307,7 +307,7 @@ def _how(job: Job, wish: ForecastWish, draws: list[Draw]) -> tuple[str, ...]:
 
 def _duty_types(job: Job, starts: Mapping[str, float], pause_s: float) -> dict[str, DutyType]:
     """From the run with every figure at its value; `pause_s` is what spacing its starts adds to a cycle."""
-    run = play(job.cold, job.bench, job.belief.setup, seed=1, on_core=job.on_core)
+    run = play(job.cold, packed_bench(job), job.belief.setup, seed=1, on_core=job.on_core)
     found = {}
     for name, motor in run.motors.items():
         duty, square = motor.duty, motor.square_a2

@@ -13,6 +13,7 @@ import time
 from collections.abc import Callable, Iterator, Mapping
 from concurrent.futures import ProcessPoolExecutor
 from dataclasses import dataclass, replace
+from fractions import Fraction
 from functools import partial
 
 import numpy as np
@@ -94,7 +95,8 @@ def one_draw(job: Job, number: int) -> Draw:
     """Carry a draw out. Raises what opening a device raises."""
     random = np.random.default_rng([job.seed, number]) if number else None
     setup = drawn_setup(job.belief, random)
-    cold = play(job.cold, job.bench, setup, seed=number + 1, on_core=job.on_core)
+    bench = packed_bench(job)
+    cold = play(job.cold, bench, setup, seed=number + 1, on_core=job.on_core)
     if job.cut is None or job.hot is None or not _went_through(cold, job.cold):
         return _draw(job, setup, cold, None)
     parameters = _parameters(job, setup)
@@ -102,8 +104,18 @@ def one_draw(job: Job, number: int) -> Draw:
         warm = warm_guess(cold, job.cut, {name: motor.thermal_time_s for name, motor in parameters.items()})
     else:
         warm = dict(follow(job.cut.block, job.part, cold, None, parameters).last_c)
-    hot = play(job.hot, job.bench, setup, seed=number + 1, windings_c=warm, on_core=job.on_core)
+    hot = play(job.hot, bench, setup, seed=number + 1, windings_c=warm, on_core=job.on_core)
     return _draw(job, setup, cold, hot)
+
+
+def packed_bench(job: Job) -> Bench:
+    """The bench for cycles that are simulated without the pauses between them: its overload trip is off, since by the
+    board's model the motors grow hotter than they will. How hot they truly grow is reckoned with the pauses in."""
+    if job.part is None or job.part.starts_per_hour is None:
+        return job.bench
+    off = {motor.name: replace(motor.settings["rated_ma"], value=Fraction(0)) for motor in job.bench.motors}
+    motors = (replace(one, settings={**one.settings, "rated_ma": off[one.name]}) for one in job.bench.motors)
+    return replace(job.bench, motors=tuple(motors))
 
 
 def _parameters(job: Job, setup: MockSetup) -> dict[str, MotorParameters]:
@@ -189,7 +201,11 @@ def _motor(job: Job, name: str, parts: list[tuple[Play, MotorPlay]], night: Nigh
     rig = Rig.of(job.bench, tick_us=job.cold.tick_us)
     index = rig.axes[name].index
     rated_a, tau_s = rig.limits["rated_ma", index] / 1000.0, float(rig.limits["thermal_s", index])
-    heat = [float(heat_a2(motor.square_a2, run.row_s, tau_s).max(initial=0.0)) for run, motor in parts]
+    pause_s = 0.0 if night is None else night.pause_s
+    heat = [
+        float(heat_a2(with_pauses(run, motor.square_a2, pause_s), run.row_s, tau_s).max(initial=0.0))
+        for run, motor in parts
+    ]
     if night is not None and job.cut is not None:
         heat.append(_night_heat_a2(job.cut, parts[0], night, tau_s))
     return MotorDraw(
@@ -239,6 +255,15 @@ def _night_heat_a2(cut: Cut, part: tuple[Play, MotorPlay], night: Night, tau_s: 
 def with_pause(values: Floats, pause_s: float, row_s: float) -> Floats:
     """The rows, and those of a pause after them, in which nothing is driven."""
     return np.concatenate([values, np.zeros(round(pause_s / row_s))])
+
+
+def with_pauses(run: Play, values: Floats, pause_s: float) -> Floats:
+    """The rows of a run, with a pause before each turn but the first that the simulation left out."""
+    rows = round(pause_s / run.row_s)
+    if not rows:
+        return values
+    places = [row_of(run, turn.begin) for turn in run.turns[1:]]
+    return np.insert(values, np.repeat(places, rows), 0.0)
 
 
 NOTHING: Floats = np.empty(0)
