@@ -20,29 +20,27 @@ from ramprig.endure import features, live
 from ramprig.endure.doorsheet import door_sheet
 from ramprig.endure.features import cycle_features
 from ramprig.endure.live import LiveWatch
-from ramprig.endure.motorfeatures import MotorFeatures
 from ramprig.endure.resume import read_broken
-from ramprig.endure.servotiming import ServoFeatures
 from ramprig.endure.trends import Level
-from ramprig.endure.wear import Cycle, WearJudge, as_recorded
+from ramprig.endure.wear import WearJudge, as_recorded
 from ramprig.errors import UsageError
 from ramprig.mock.device import MockDevice
 from ramprig.mock.from_bench import setup_of_bench
 from ramprig.mock.port import MockPort
 from ramprig.record.reading import read_events, read_manifest
+from ramprig.report.digest import digest_samples
 from ramprig.report.explain import explain_folder
 from ramprig.report.facts import gather
 from ramprig.report.making import make_report
-from ramprig.report.trends import cycles_of, wear_of
+from ramprig.report.trends import cycles_of, trends_of, wear_of
 from ramprig.sequence.columns import bench_columns
 from ramprig.sequence.compile import compile_plan
-from ramprig.sequence.cycle_watch import CycleWatch, TurnDone, Watched, place_of
+from ramprig.sequence.cycle_watch import CycleWatch, TurnDone, Watched
 from ramprig.sequence.executive import Progress
 from ramprig.sequence.outcome import Verdict
 from ramprig.sequence.rig import Rig
 from ramprig.sequence.running import RunResult, RunWish, run_sequence
-from ramprig.sequence.wear_limits import Threshold, TurnKind, WearLimit, WearRules, rules_of
-from ramprig.sequence.wear_words import FEATURE_WORDS, Whose, drive_of, full_names, word_of
+from ramprig.sequence.wear_limits import TurnKind, rules_of
 from ramprig.session.blocks import Block, Layout
 from sequence_rig import sequence_of, small_bench
 
@@ -86,6 +84,7 @@ class Looked:
 def look(
     folder: Path,
     *,
+    steps: str = STEPS,
     limits: str = "",
     wear: str = WEAR,
     times: int,
@@ -93,7 +92,7 @@ def look(
 ) -> Looked:
     """Run the cycles on the mock, with these limits."""
     bench = small_bench()
-    steps = STEPS.replace("TIMES", str(times)).replace("WEAR", wear.replace(", LIMITS", limits and f", {limits}"))
+    steps = steps.replace("TIMES", str(times)).replace("WEAR", wear.replace(", LIMITS", limits and f", {limits}"))
     sequence = sequence_of(folder, steps, head="log: {period: 5 ms}\n")
     device = MockDevice(setup_of_bench(bench), seed=3)
     said: list[str] = []
@@ -308,7 +307,7 @@ def test_where_wear_is_off_nothing_is_judged_and_the_features_are_recorded_all_t
 
 def test_between_cycles_nothing_is_kept_however_long_that_lasts() -> None:
     columns = bench_columns(small_bench(), tick_us=1000)
-    watch = LiveWatch(Watched(rules=[rules()], columns=columns, tick_us=1000), say=lambda text: None)
+    watch = LiveWatch(Watched(rules=[], columns=columns, tick_us=1000), say=lambda text: None)
     layout = Layout.of(Rig.of(small_bench()).mask, 10)
 
     def come(first: int, count: int) -> None:
@@ -327,6 +326,20 @@ def test_between_cycles_nothing_is_kept_however_long_that_lasts() -> None:
     assert seen.samples == 4000
     assert seen.features["duration"] == pytest.approx(39.99)
     assert watch._pieces == []
+
+
+def test_two_blocks_of_cycles_are_judged_and_told_apart(tmp_path: Path) -> None:
+    """The second one drives harder from its first cycle on: that is no change."""
+    second = STEPS.replace("name: open", "name: hard").replace("to: 50 %, in: 500 ms", "to: 58 %, in: 600 ms")
+    run = look(tmp_path, steps=f"{STEPS}\n{second}", limits="other features: {watch: +- 20 %}", times=14)
+    assert run.result.outcome.verdict is Verdict.PASSED
+    assert run.said == []
+    blocks = {key: block.turns for key, block in run.watch.judge.blocks.items() if key[1] is TurnKind.CYCLE}
+    assert blocks == {(1, TurnKind.CYCLE): 14, (2, TurnKind.CYCLE): 14}
+    facts = gather(run.folder)
+    names = [trend.name for trend in trends_of(facts, digest_samples(facts))]
+    assert "'open' vent forward: steady speed" in names
+    assert "'hard' vent forward: steady speed" in names
 
 
 # ---- gone on with ----------------------------------------------------------------------------------------------------
@@ -448,96 +461,3 @@ def test_a_resumed_run_keeps_the_limits_that_it_began_with(tmp_path: Path, monke
     host.run(Process(), resume=True)
     assert snapshots.begun[1].blocks[CYCLES_OF_1].rules.baseline == 12
     assert read_manifest(host.run_folder)["settings"]["wear"][0]["baseline"] == 12
-
-
-# ---- the judge -------------------------------------------------------------------------------------------------------
-
-
-def rules(**changes: Any) -> WearRules:  # Any: whatever the rules take
-    limit = WearLimit(
-        feature="vent: energy", watch=Threshold(text="+10 %", high=0.1), fail=None, k=2, n=3, place="f.yaml:1:1"
-    )
-    usual: dict[str, Any] = {
-        "block": 1, "name": "open", "turn": TurnKind.CYCLE, "run_in_turns": 3, "run_in_s": 60.0, "baseline": 10,
-        "detectors": True,
-        "drives": ("vent",), "limits": (limit,), "others": None,
-    }  # fmt: skip
-    return WearRules(**(usual | changes))
-
-
-def cycle(number: int, *, at_s: float, part: int = 1, others: dict[str, float] | None = None) -> Cycle:
-    begin = round(at_s * 1000)
-    return Cycle(
-        number=number, block=1, part=part, begin_tick=begin, end_tick=begin + 900,
-        features={"vent: energy": 1.0} | (others or {}),
-    )  # fmt: skip
-
-
-def test_the_run_in_lasts_for_its_cycles_and_its_time_and_comes_again_after_an_interruption() -> None:
-    judge = WearJudge.of([rules()], tick_us=1000)
-    block = judge.blocks[CYCLES_OF_1]
-    for number in range(1, 9):
-        judge.take(cycle(number, at_s=5.0 + 10.0 * number))
-    assert block.run_in == 6  # those that begin less than 60 s after the first one
-    for number in range(9, 13):
-        judge.take(cycle(number, at_s=20.0 * number, part=2))
-    assert block.run_in == 6 + 3
-    slow = WearJudge.of([rules()], tick_us=1000)
-    for number in range(1, 9):
-        slow.take(cycle(number, at_s=100.0 * number))
-    assert slow.blocks[CYCLES_OF_1].run_in == 3
-
-
-def test_features_of_motors_that_are_not_driven_are_not_judged() -> None:
-    others = WearLimit(feature="", watch=Threshold(text="+- 1 %", low=-0.01, high=0.01), fail=None)
-    judge = WearJudge.of([rules(run_in_turns=0, run_in_s=0.0, others=others)], tick_us=1000)
-    source = np.random.default_rng(1)
-    for number in range(1, 60):
-        noise = {"fan: peak current": float(source.uniform(0.1, 9.0)), "vent: position error": float(source.normal())}
-        judge.take(cycle(number, at_s=float(number), others={"duration": 1.0} | noise))
-    assert list(judge.blocks[CYCLES_OF_1].features) == ["vent: energy", "duration"]
-    assert judge.to_watch() == []
-
-
-def test_every_feature_that_is_computed_has_its_word_and_unit() -> None:
-    span = features.Span(number=1, part=1, begin_tick=0, end_tick=1)
-    made = features.CycleFeatures(
-        span=span, samples=0, left_out=0, duration_s=1.0, lowest_supply_v=1.0, motors={"vent": MotorFeatures()},
-        servos={"latch": ServoFeatures()},
-    )  # fmt: skip
-    names = list(made.values())
-    assert {word_of(name) for name in names} == set(FEATURE_WORDS)
-    for name in names:
-        word = FEATURE_WORDS[word_of(name)]
-        assert features.unit_of(name) == word.unit, name
-        assert features.is_judged(name) == (not word.on_request), name
-        drive = {Whose.CYCLE: "", Whose.SERVO: "latch"}.get(word.whose, "vent")
-        assert drive_of(name) == drive
-        assert name in full_names(word_of(name), drive, None)
-
-
-def test_few_checks_are_a_baseline() -> None:
-    checks = rules(turn=TurnKind.CHECK, run_in_turns=1, run_in_s=0.0, baseline=3, detectors=False)
-    judge = WearJudge.of([checks], tick_us=1000)
-    found: list[str] = []
-    for count, energy_j in enumerate((9.0, 1.0, 1.02, 0.98, 1.3, 1.05, 1.2), 1):
-        turn = cycle(0, at_s=100.0 * count, others={"vent: energy": energy_j})
-        found += map(str, judge.take(turn))
-    assert found == [
-        "vent: energy: watch limit at check 7, 1.2 J against 1 J at first (+20.0 %); beyond +10 % (above 1.1 J) "
-        "in 2 of the last 3 checks: 5, 7"
-    ]
-
-
-def test_blocks_are_judged_each_by_its_own_rules() -> None:
-    judge = WearJudge.of([rules(run_in_turns=0, run_in_s=0.0)], tick_us=1000)
-    other = Cycle(number=1, block=2, part=1, begin_tick=0, end_tick=900, features={"vent: energy": 99.0})
-    assert judge.take(other) == []
-    assert judge.blocks[CYCLES_OF_1].turns == 0
-
-
-@pytest.mark.parametrize(
-    ("text", "place"), [("a/b.yaml:3:14", "a/b.yaml:3:14"), ("C:\\x.yaml:3:1", "C:\\x.yaml:3:1"), ("", "None")]
-)
-def test_a_place_is_read_back(text: str, place: str) -> None:
-    assert str(place_of(text)) == place
