@@ -10,12 +10,14 @@ import pytest
 
 from ramprig.mock.device import MockDevice
 from ramprig.mock.port import MockPort
+from ramprig.sequence.ending import TAIL_S
 from ramprig.sequence.executive import Progress
 from ramprig.sequence.happened import Marked, PassBegun, WaitEnded
 from ramprig.sequence.outcome import Judged, Verdict
 from ramprig.session.blocks import Block
-from ramprig.session.events import DwellHeld, Tripped
+from ramprig.session.events import DwellHeld, StopJudged, Tripped
 from ramprig.session.session import Session
+from ramprig.session.stop import StopRun
 from ramprig_link.words import State
 from sequence_rig import Rehearsal, rehearse
 
@@ -364,6 +366,71 @@ def test_a_user_stop_ends_the_run_confirmed(tmp_path: Path) -> None:
     assert run.outcome.exit_code == 5
     assert run.outcome.stop_confirmed
     assert run.column("duty")[-1] == 0
+
+
+def test_the_log_of_a_run_that_the_user_stops_has_its_tail_and_is_accounted_for_to_the_last_sample(
+    tmp_path: Path,
+) -> None:
+    sessions: list[Session] = []
+
+    def panic(now: Progress, device: MockDevice, session: Session, port: MockPort) -> None:
+        sessions[:] = [session]
+        if now.elapsed_s > 1.0:
+            session.panic(1)
+
+    run = rehearse(tmp_path, "- ramp: {motor: vent, to: 40 %, in: 400 ms}\n- hold: 5 s", meddle=panic)
+    (judged,) = run.of(StopJudged)
+    assert isinstance(judged, StopJudged)
+    assert judged.tick is not None
+    assert run.ticks[-1] >= judged.tick + round(TAIL_S / 0.001) - 10
+    accounting = sessions[0].accounting
+    assert accounting is not None
+    assert accounting.complete
+
+
+def test_a_stop_that_is_not_confirmed_is_the_end_of_the_runs_sentence(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr(StopRun, "_moved", lambda *_: [True])
+
+    def panic(now: Progress, device: MockDevice, session: Session, port: MockPort) -> None:
+        if now.elapsed_s > 1.0:
+            session.panic(1)
+
+    run = rehearse(tmp_path, "- ramp: {motor: vent, to: 40 %, in: 400 ms}\n- hold: 5 s", meddle=panic)
+    assert run.outcome.verdict is Verdict.STOPPED
+    assert not run.outcome.stop_confirmed
+    assert run.outcome.sentence == (
+        "stopped by the user; stop NOT CONFIRMED: cut the power (the shaft has not come to rest)"
+    )
+
+
+@pytest.mark.parametrize("moment", ["state", "trail"])
+def test_a_stop_asked_for_while_a_trip_is_looked_into_leaves_the_trip_told(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, moment: str
+) -> None:
+    asked: list[str] = []
+    true_ask = getattr(Session, moment)
+
+    def ask(session: Session, *args: int) -> object:
+        if session.trip is not None and not asked:
+            asked.append(moment)
+            session.panic(1)
+        return true_ask(session, *args)
+
+    monkeypatch.setattr(Session, moment, ask)
+
+    def jam(now: Progress, device: MockDevice, session: Session, port: MockPort) -> None:
+        if now.elapsed_s > 1.0:
+            device.faults.set("jammed_shaft", True)
+
+    run = rehearse(tmp_path, "- ramp: {motor: vent, to: 40 %, in: 400 ms}\n- hold: 5 s", meddle=jam)
+    assert asked
+    assert run.outcome.verdict is Verdict.TRIPPED
+    assert run.outcome.sentence.startswith("stall on vent: 40 % and no motion for 300 ms, ")
+    assert run.outcome.stop_confirmed
+    assert run.of(StopJudged)
+    assert run.of(Block)  # the trail
 
 
 def test_a_host_that_is_late_makes_the_device_stop_itself(tmp_path: Path) -> None:

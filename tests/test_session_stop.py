@@ -11,6 +11,7 @@ from ramprig.errors import Bug, LinkError, LinkLost, StoppedByUser
 from ramprig.port.faulty import FaultyPort
 from ramprig.session import NOT_CONFIRMED
 from ramprig.session.events import LateHost, StopAsked, StopJudged, Tripped
+from ramprig.session.stop import StopRun
 from ramprig_link.words import State, Trip
 from session_rig import LIMITS, MASK, Rig
 
@@ -222,3 +223,16 @@ def test_another_thread_may_not_pump() -> None:
 
 def test_a_stop_in_no_state_to_stop_is_confirmed_too() -> None:
     assert Rig().session.stop(1).confirmed
+
+
+def test_a_session_that_is_left_after_a_stop_that_is_not_confirmed_sends_nothing_and_raises_nothing(
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    rig = running(Rig())
+    monkeypatch.setattr(StopRun, "_moved", lambda *_: [True])
+    assert not rig.session.stop(1, run_down_s=0.2).confirmed
+    assert rig.session.logging
+    sent: list[bytes] = []
+    monkeypatch.setattr(rig.mock, "write", sent.append)
+    rig.session.close()
+    assert sent == []

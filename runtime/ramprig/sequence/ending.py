@@ -3,10 +3,10 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Protocol
 
-from ramprig.errors import LinkError, LinkLost, Place, RecordError, Refused, StoppedByUser, WrongDevice
+from ramprig.errors import LinkError, Place, RecordError, Refused, StoppedByUser, WrongDevice
 from ramprig.port.clock import Clock
 from ramprig.quantity import format_duration
 from ramprig.session.blocks import Block
@@ -32,6 +32,8 @@ OFF_SEEN_S = 6.0
 TRAIL_WAIT_S = 1.0
 """The trail is frozen within this time of a trip."""
 POLL_S = 0.05
+STOPS_MAX = 3
+"""So often a stop that is asked for while the run is ended is confirmed, and the ending gone on with."""
 SLEEPS_MAX = 1000
 """Sleeps of the host that an outcome lists."""
 
@@ -114,6 +116,7 @@ class _Run:
         tell = _nothing if keeper is None else keeper.on_event
         self.executive = Executive(session, clock, plan, rig, tell, progress)
         self.confirmed = True
+        self.trip_told = False
         self.slept_s: list[float] = []
         self.unrecorded: RecordError | None = None
         listeners.add(on_block=self.executive.on_block, on_event=self._on_event)
@@ -212,34 +215,65 @@ class _Run:
     # ---- the end -------------------------------------------------------------------------------------------------
 
     def _bring_down(self, end: _End) -> _End:
-        """Outputs off and confirmed, the trip explained and its trail kept, the log ended."""
+        """Outputs off and confirmed, the trip explained and its trail kept, the log ended.
+
+        A stop that the user asks for meanwhile is confirmed before anything else goes on.
+        """
         try:
-            if self.executive.trip is not None and not end.sentence:
-                sentence = self._take_trip(self.executive.trip)
-                end = _End(end.verdict, sentence, end.place)
-            if not self._known_off():
-                report = self._stop()
-                self.confirmed = report.confirmed
-                if not report.confirmed:
-                    end = _End(end.verdict, f"{end.sentence}; stop {report.verdict}", end.place)
-                if self.executive.trip is not None and end.verdict is not Verdict.TRIPPED:
-                    sentence = self._take_trip(self.executive.trip)
-                    end = _End(
-                        end.verdict, f"{end.sentence}; while stopping, the device tripped: {sentence}", end.place
-                    )
-            self._end_log()
-        except StoppedByUser:
-            self.confirmed = self._stop().confirmed
+            end = self._with_trip(end)
+            for _ in range(STOPS_MAX):
+                end = self._take_off(end)
+                if self._log_ended():
+                    break
+            else:
+                self.confirmed = self._stop().confirmed
         except (LinkError, Refused) as error:
             self.confirmed = False
             if end.verdict is not Verdict.LINK_LOST:
-                end = _End(end.verdict, f"{end.sentence}; afterwards: {error}", end.place)
+                end = replace(end, sentence=f"{end.sentence}; afterwards: {error}")
         except RecordError as error:
             self.unrecorded = error
             self.confirmed = self._stop().confirmed
         if self.unrecorded is not None and end.verdict is not Verdict.NOT_RECORDED:
             text = f"{end.sentence}; the log could not be written: {self.unrecorded}"
             end = _End(Verdict.NOT_RECORDED, text, end.place)
+        return end
+
+    def _with_trip(self, end: _End) -> _End:
+        """The end by a trip, in words."""
+        trip = self.executive.trip
+        return end if trip is None or end.sentence else replace(end, sentence=self._told(trip))
+
+    def _told(self, trip: Tripped) -> str:
+        """The trip in words, with what the device can be asked; whatever comes between, the trip itself is told."""
+        self.trip_told = True
+        sentence, after = explain_trip(trip, self.rig), ""
+        for _ in range(STOPS_MAX):
+            try:
+                sentence = self._take_trip(trip, sentence)
+            except StoppedByUser:
+                self.confirmed = self._stop().confirmed
+                continue
+            except RecordError as error:
+                self.unrecorded = error
+            except (LinkError, Refused) as error:
+                after = f"; afterwards: {error}"
+            break
+        if not self.executive.start:
+            return sentence + after
+        seconds = (0 if trip.tick is None else max(0, trip.tick - self.executive.start)) * self.plan.tick_us / 1e6
+        return f"{sentence}, {seconds:.2f} s into the run{after}"
+
+    def _take_off(self, end: _End) -> _End:
+        """Stop, unless the outputs are off and nobody has asked for a stop; tell a trip that is not told of yet."""
+        if not self._known_off():
+            report = self._stop()
+            self.confirmed = report.confirmed
+            if not report.confirmed:
+                end = replace(end, sentence=f"{end.sentence}; stop {report.verdict}")
+        trip = self.executive.trip
+        if trip is not None and not self.trip_told and end.verdict is not Verdict.TRIPPED:
+            end = replace(end, sentence=f"{end.sentence}; while stopping, the device tripped: {self._told(trip)}")
         return end
 
     def _stop(self) -> StopReport:
@@ -256,14 +290,13 @@ class _Run:
             return False
         try:
             return self.session.state().outputs_off
-        except LinkLost:
+        except (LinkError, Refused, StoppedByUser):  # a stop that was asked for is to be confirmed, whatever is known
             return False
 
-    def _take_trip(self, trip: Tripped) -> str:
-        """Wait until the outputs are off, ask why, keep the trail; the sentence."""
+    def _take_trip(self, trip: Tripped, sentence: str) -> str:
+        """Wait until the outputs are off, ask why, keep the trail; the sentence, with what is learnt."""
         session = self.session
-        sentence = explain_trip(trip, self.rig)
-        if not session.valid:
+        if not (session.valid and self.confirmed):  # after a stop that is not confirmed nothing is asked
             return sentence
         bound_s = self.clock.now() + OFF_SEEN_S
         while session.state().state is not State.TRIPPED and self.clock.now() < bound_s:
@@ -277,8 +310,7 @@ class _Run:
                 block = self._trail(axis.index)
                 if block is not None:
                     self.keeper.on_trail([block])
-        seconds = (0 if trip.tick is None else max(0, trip.tick - self.executive.start)) * self.plan.tick_us / 1e6
-        return f"{sentence}, {seconds:.2f} s into the run" if self.executive.start else sentence
+        return sentence
 
     def _trail(self, axis: int) -> Block | None:
         bound_s = self.clock.now() + TRAIL_WAIT_S
@@ -288,10 +320,15 @@ class _Run:
                 return block
             self.session.pump(self.clock.now() + POLL_S)
 
-    def _end_log(self) -> None:
-        if self.session.valid and self.session.logging and self.confirmed:
-            self.session.pump(self.clock.now() + TAIL_S)
-            self.session.stop_log()
+    def _log_ended(self) -> bool:
+        """End the log, with its tail; False where the user asked for a stop meanwhile."""
+        try:
+            if self.session.valid and self.session.logging and self.confirmed:
+                self.session.pump(self.clock.now() + TAIL_S)
+                self.session.stop_log()
+        except StoppedByUser:
+            return False
+        return True
 
     def _outcome(self, end: _End) -> Outcome:
         executive = self.executive

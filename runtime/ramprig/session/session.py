@@ -121,13 +121,16 @@ class Session:
             self._core.pump.port.close()
 
     def close(self) -> None:
-        """Outputs off, logging ended, port closed. A stop with category 1 where something still moves."""
+        """Outputs off, logging ended, port closed. A stop with category 1 where something still moves.
+
+        After a stop that is not confirmed nothing more is sent.
+        """
         core = self._core
         try:
             if core.pump.lost is not None:
                 return
             if core.state is State.OFF:
-                if self.logging:
+                if self.logging and not core.pump.muted:
                     self.stop_log()
             else:
                 self.stop(1)
