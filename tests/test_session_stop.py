@@ -10,10 +10,11 @@ import pytest
 from ramprig.errors import Bug, LinkError, LinkLost, StoppedByUser
 from ramprig.port.faulty import FaultyPort
 from ramprig.session import NOT_CONFIRMED
-from ramprig.session.events import LateHost, StopAsked, StopJudged, Tripped
+from ramprig.session.events import LateHost, StopAsked, StopJudged, Stopped, Tripped
 from ramprig.session.stop import StopRun
+from ramprig_link.host import HostLink
 from ramprig_link.words import State, Trip
-from session_rig import LIMITS, MASK, Rig
+from session_rig import LIMITS, MASK, Rig, wanted
 
 
 def running(rig: Rig, duty: int = 3000) -> Rig:
@@ -236,3 +237,50 @@ def test_a_session_that_is_left_after_a_stop_that_is_not_confirmed_sends_nothing
     monkeypatch.setattr(rig.mock, "write", sent.append)
     rig.session.close()
     assert sent == []
+
+
+def duties_between(rig: Rig, at_tick: int) -> int:
+    """Samples since the tick with a duty between that of `running` and none: a stop by slope has some, a cut none."""
+    rig.session.stop_log()
+    duties = np.concatenate([block.column("duty")[block.ticks >= at_tick] for block in rig.blocks])
+    return int(np.count_nonzero((duties > 0) & (duties < 3000)))
+
+
+def test_a_cut_that_is_asked_for_right_after_a_stop_is_not_undone_by_the_confirming_of_the_stop() -> None:
+    rig = running(Rig())
+    at_tick = rig.session.tick_now()
+    rig.session.panic(1)
+    rig.session.panic(0)
+    report = rig.session.stop(1)
+    assert report.confirmed
+    assert report.category == 0
+    assert duties_between(rig, at_tick) == 0
+
+
+@pytest.mark.parametrize("after_s", [0.0, 0.1])
+def test_a_cut_that_the_system_did_not_take_is_sent_again_until_it_is_acknowledged(
+    monkeypatch: pytest.MonkeyPatch, after_s: float
+) -> None:
+    slow = {**LIMITS, ("slew_down_duty", 0): 4}  # by slope it takes 0.75 s
+    rig = running(Rig(wanted=wanted(slow)))
+    begin_s, send, read, cuts = rig.now, rig.mock.urgent, rig.mock.read_until, [0]
+
+    def urgent(data: bytes) -> bool:
+        if data != HostLink.urgent_stop(0):
+            return send(data)
+        cuts[0] += 1
+        return cuts[0] > 1 and send(data)
+
+    def press_again(until_s: float) -> bytes:
+        if rig.now >= begin_s + after_s and not cuts[0]:
+            rig.session.panic(0)
+        return read(until_s)
+
+    monkeypatch.setattr(rig.mock, "urgent", urgent)
+    monkeypatch.setattr(rig.session._core.pump, "_read_until", press_again)
+    report = rig.session.stop(1)
+    assert report.confirmed
+    assert report.escalated
+    off = rig.of(Stopped)[-1]
+    assert off.host_s - begin_s < after_s + 0.2
+    assert cuts[0] == 2

@@ -43,7 +43,7 @@ class StopReport:
 
     `confirmed` needs the acknowledgement, outputs off by the device's word, and, on boards that measure them, current
     and speed fallen. `missing` says what is not there, `unmeasured` what the board cannot tell. `escalated`: a
-    category 1 stop was not over in time and category 0 was sent.
+    category 1 stop was not over in time, or category 0 was asked for meanwhile, and category 0 was sent.
     """
 
     category: int
@@ -64,7 +64,11 @@ class StopReport:
 
 
 class StopRun:
-    """One stop from its sending to its verdict, on a core that is known or not, whose link works or not."""
+    """One stop from its sending to its verdict, on a core that is known or not, whose link works or not.
+
+    Its category is the hardest that was asked for: each sending takes the place of one that is still on its way, so a
+    softer one would undo a cut.
+    """
 
     def __init__(self, core: Core, category: int, *, run_down_s: float) -> None:
         self._core = core
@@ -82,6 +86,7 @@ class StopRun:
         """Stop and judge; never raises for what the link or the device does."""
         core = self._core
         core.pump.panic_taken = True
+        self._category = self._hardest(self._category)
         core.marks = StopMarks()
         core.pump.hush()
         core.forget_checks()
@@ -108,11 +113,18 @@ class StopRun:
         )
         return report
 
+    def _hardest(self, category: int) -> int:
+        """This category, or a harder one that was asked for from elsewhere."""
+        asked = self._core.pump.panic_category
+        return category if asked is None else min(category, asked)
+
     def _acknowledge(self, category: int) -> None:
         """Send until the device has answered or told of the stop, for ACKNOWLEDGE_S at most."""
         core = self._core
         bound_s = core.clock.now() + ACKNOWLEDGE_S
         while core.marks.acknowledged_s is None and core.clock.now() < bound_s:
+            category = self._hardest(category)
+            self._escalated |= category < self._category
             core.pump.urgent_stop(category)
             self._sendings += 1
             until_s = min(core.clock.now() + REPEAT_S, bound_s)
@@ -144,6 +156,8 @@ class StopRun:
                     return
                 self._escalate()
                 off_bound_s = core.clock.now() + OFF_MARGIN_S
+            elif not self._escalated and self._hardest(self._category) < self._category:
+                self._escalate()  # the cut that was asked for may not have been taken, or not have arrived
             if now_s >= still_bound_s:
                 return
             core.work(now_s + POLL_S)
@@ -207,9 +221,7 @@ class StopRun:
     def _report(self) -> StopReport:
         core, marks = self._core, self._core.marks
         caps = core.known.caps if core.known is not None else Cap(0)
-        unmeasured = tuple(
-            what for what, cap in (("current", Cap.CURRENT), ("speed", Cap.ENCODER)) if cap not in caps
-        )
+        unmeasured = tuple(what for what, cap in (("current", Cap.CURRENT), ("speed", Cap.ENCODER)) if cap not in caps)
         missing: list[str] = []
         if marks.acknowledged_s is None:
             missing.append("the device did not acknowledge the stop")
