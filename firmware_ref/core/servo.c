@@ -18,9 +18,12 @@ rr_ns rr_servo_first_ns(const struct rr_servo_limits *limits)
 
 uint16_t rr_servo_us(rr_ns pulse_ns)
 {
-    uint16_t us = (uint16_t)((RR_U24)pulse_ns >> 10);
-    us = (uint16_t)(us + (us >> 6) + (us >> 7) + (us >> 11)); /* (1 + 1/64 + 1/128 + 1/2048) / 1024: a little below 1/1000 */
+    uint16_t us = (uint16_t)((RR_U24)pulse_ns / 1024u);
+    us = (uint16_t)(us + us / 64u + us / 128u + us / 2048u); /* (1 + 1/64 + 1/128 + 1/2048) / 1024: a little below 1/1000 */
     uint16_t left = (uint16_t)((uint32_t)pulse_ns - (uint32_t)us * 1000u);
+    /*@ loop invariant us * 1000 + left == pulse_ns && 0 <= us <= 4194;
+        loop assigns left, us;
+        loop variant left; */
     while (left >= 1000u) {
         left = (uint16_t)(left - 1000u);
         us++;

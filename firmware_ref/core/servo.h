@@ -40,6 +40,10 @@ rr_ns rr_servo_first_ns(const struct rr_servo_limits *limits);
 rr_ns rr_servo_held_ns(const struct rr_servo_limits *limits, rr_ns pulse_ns);
 
 /* The whole us of a pulse, below 2^22 ns, without a division: an 8-bit controller has one in each sample. */
+/*@ requires 0 <= pulse_ns < 0x400000;
+    assigns \nothing;
+    ensures \result == pulse_ns / 1000;
+*/
 uint16_t rr_servo_us(rr_ns pulse_ns);
 
 /* The pulse one tick on from `pulse_ns` (not 0) towards `goal_ns`. */
