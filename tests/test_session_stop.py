@@ -284,3 +284,17 @@ def test_a_cut_that_the_system_did_not_take_is_sent_again_until_it_is_acknowledg
     off = rig.of(Stopped)[-1]
     assert off.host_s - begin_s < after_s + 0.2
     assert cuts[0] == 2
+
+
+def test_a_stop_is_confirmed_though_every_block_and_event_raises_and_then_that_is_raised() -> None:
+    rig = running(Rig())
+
+    def broken(what: object) -> None:
+        raise ArithmeticError("a listener is broken")
+
+    rig.session._core.on_block = rig.session._core.on_event = broken
+    with pytest.raises(ArithmeticError, match="a listener is broken"):
+        rig.session.stop(1)
+    assert rig.session.last_stop is not None
+    assert rig.session.last_stop.confirmed
+    assert rig.bridge_duty() == 0

@@ -8,7 +8,8 @@ from pathlib import Path
 
 import pytest
 
-from ramprig.errors import LinkError, LinkLost, RamprigError, Refused, StoppedByUser, Tripped, UsageError
+from ramprig.errors import LinkError, LinkLost, RamprigError, RecordError, Refused, StoppedByUser, Tripped, UsageError
+from ramprig.record.recorder import Recorder
 from ramprig.shell import commands as c
 from ramprig.shell.hold import FIRST_S, Hold
 from ramprig.shell.words import WORDS, filled_example, read_line
@@ -459,3 +460,22 @@ def test_the_examples_of_the_help_do_what_they_say(
             bench.perform(command)
             bench.let_pass(1.0)
     assert State.TRIPPED.word != bench.desk.snapshot.state
+
+
+def test_a_disk_that_fills_up_while_a_motor_turns_stops_it_confirmed_and_leaves_the_desk_in_use(
+    bench: DeskBench, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    bench.type("log start x")
+    bench.type("arm")
+
+    def full(*_: object) -> None:
+        raise RecordError("the disk is full")
+
+    monkeypatch.setattr(Recorder, "on_block", full)
+    with pytest.raises(RecordError, match="the disk is full"):
+        bench.type("jog vent 30 % for 3 s")
+    bench.let_pass(1.0)
+    assert any(line.startswith("stop confirmed: outputs off") for line in bench.said)
+    assert bench.duty == 0
+    assert bench.desk.snapshot.state == "off"
+    bench.type("arm")

@@ -277,7 +277,7 @@ class _Run:
         return end
 
     def _stop(self) -> StopReport:
-        """Stop, confirmed or not. Whoever records may fail in the middle of it, once: then it is begun again."""
+        """Stop, confirmed or not. Whoever records may fail in the middle of it, once: then it is made once more."""
         try:
             return self.session.stop(1)
         except RecordError as error:

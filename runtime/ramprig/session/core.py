@@ -9,6 +9,7 @@ import random
 from collections import deque
 from collections.abc import Callable
 from dataclasses import dataclass, replace
+from typing import TypeVar
 
 from ramprig.errors import Bug, LinkError, LinkLost, Refused, WrongDevice
 from ramprig.port.base import Port
@@ -46,6 +47,8 @@ from ramprig_link import host
 from ramprig_link.messages import Notice
 from ramprig_link.words import REASONS, Reason, State, Trip
 
+T = TypeVar("T")
+
 PUMP_GAP_S = 0.1
 """A runner calls in at least this often while the outputs are enabled; later is an event and a statistic."""
 IDLE_BEAT_S = 0.5
@@ -77,7 +80,11 @@ class Latest:
 
 
 class Core:
-    """What a session knows. One thread calls it; `on_block` and `on_event` are called from inside the pump."""
+    """What a session knows. One thread calls it; `on_block` and `on_event` are called from inside the pump.
+
+    What these raise leaves the pump, but not while `stopping`: then the first of it is `deferred`, since no listener's
+    trouble may keep a stop from being sent again and confirmed.
+    """
 
     def __init__(
         self,
@@ -116,6 +123,8 @@ class Core:
         self._latest_reading: tuple[Reading | None, float | None] = None, None
         self._latest_block: tuple[Block | None, float | None] = None, None
         self.marks = StopMarks()
+        self.stopping = False
+        self.deferred: Exception | None = None
         self.worst_late_s = 0.0
         self.repeats = 0
         self.dropped_lines = 0
@@ -227,7 +236,15 @@ class Core:
     def tell(self, event: Event) -> None:
         """Hand an event on."""
         if self.on_event is not None:
-            self.on_event(event)
+            self._hand(self.on_event, event)
+
+    def _hand(self, listener: Callable[[T], None], what: T) -> None:
+        try:
+            listener(what)
+        except Exception as error:
+            if not self.stopping:
+                raise
+            self.deferred = self.deferred or error
 
     def trouble(self, kind: Trouble, detail: str, count: int, at_s: float) -> None:
         """Hand a trouble of the link on."""
@@ -240,7 +257,7 @@ class Core:
             case Block():
                 self._latest_block = delivery, now_s
                 if self.on_block is not None:
-                    self.on_block(delivery)
+                    self._hand(self.on_block, delivery)
             case Gap(first_tick, count, period_ticks, reason):
                 self.tell(
                     GapFound(tick=first_tick, host_s=now_s, count=count, period_ticks=period_ticks, reason=str(reason))

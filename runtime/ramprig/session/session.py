@@ -396,9 +396,13 @@ class Session:
 
         Never raises for what the device or the link does: read `report.confirmed`, and show `report.verdict`. A shaft
         may run down for `run_down_s`. Afterwards the session is disarmed; after a stop that is not confirmed it sends
-        nothing more until `reopen`, so that the lease ends what still runs.
+        nothing more until `reopen`, so that the lease ends what still runs. What a callback raises meanwhile is raised
+        when the stop is over; `last_stop` has the report then too.
         """
-        self.last_stop = StopRun(self._core, category, run_down_s=run_down_s).run()
+        core = self._core
+        self.last_stop = StopRun(core, category, run_down_s=run_down_s).run()
+        if core.deferred is not None:
+            raise core.deferred
         return self.last_stop
 
     def panic(self, category: int = 1) -> bool:

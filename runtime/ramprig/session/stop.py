@@ -83,7 +83,15 @@ class StopRun:
         self._reading: Reading | None = None
 
     def run(self) -> StopReport:
-        """Stop and judge; never raises for what the link or the device does."""
+        """Stop and judge; never raises for what the link or the device does, nor for what listeners raise meanwhile."""
+        core = self._core
+        core.stopping, core.deferred = True, None
+        try:
+            return self._run()
+        finally:
+            core.stopping = core.pump.panic_taken = False
+
+    def _run(self) -> StopReport:
         core = self._core
         core.pump.panic_taken = True
         self._category = self._hardest(self._category)

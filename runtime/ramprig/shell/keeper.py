@@ -11,7 +11,7 @@ from dataclasses import replace
 from pathlib import Path
 
 from ramprig.bench import Bench
-from ramprig.errors import LinkError, LinkLost, RamprigError, StoppedByUser, Tripped, UsageError
+from ramprig.errors import LinkError, LinkLost, RamprigError, RecordError, StoppedByUser, Tripped, UsageError
 from ramprig.port.base import Port
 from ramprig.quantity import format_duration
 from ramprig.sequence.listeners import Listeners
@@ -310,7 +310,7 @@ class Keeper:
     def _stop(self, category: int) -> StopReport:
         session = self._need()
         self.snapshot = replace(self.snapshot, state="stopping", motors=(), servos=(), doing="confirming the stop")
-        report = session.stop(category)
+        report = self._stopped(session, category)
         self._asked_category = 1
         self._unconfirmed = not report.confirmed
         self._forget_motion()
@@ -323,6 +323,16 @@ class Keeper:
             self._say("Nothing more is sent, so that the lease ends what still runs. 'reopen' opens the device anew.")
         self._look()
         return report
+
+    def _stopped(self, session: Session, category: int) -> StopReport:
+        """Stop. A log that cannot be written is said, and the stop is what counts."""
+        try:
+            return session.stop(category)
+        except RecordError as error:
+            self._say(f"error: {error}")
+            if session.last_stop is None:
+                raise
+            return session.last_stop
 
     def _end_log(self, reason: str, *, sampling: bool = True) -> None:
         try:
