@@ -82,3 +82,17 @@ def test_every_seeded_bug_is_in_one_of_the_tables_under_its_clause() -> None:
         number: bugs[number] for number in FOUND
     }
     assert {number: bugs[number] for number in UNSEEN} == NOTICED_WHERE_SEEN
+
+
+def test_the_table_of_the_proofs_names_the_clauses_by_which_a_board_is_refused() -> None:
+    root = firmware()
+    assert root is not None
+    table = (root / "proofs" / "README.md").read_text("utf-8")
+    told = {
+        int(row[1]): row[2] for row in re.finditer(r"^\| (\d+) \| `[A-Z_]+` \|.*\| ([^|]+) \|$", table, re.MULTILINE)
+    }
+    clauses = {number: " ".join(re.findall(r"[A-Z]+-?\d+(?:-\d+)?\b", text)) for number, text in told.items()}
+    for number, (_, expected) in FOUND.items():
+        assert clauses[number] == expected
+    for number, expected in NOTICED_WHERE_SEEN.items():
+        assert expected in told[number]

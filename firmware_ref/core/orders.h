@@ -27,7 +27,21 @@ struct rr_orders {
 void rr_orders_add(struct rr_orders *orders, const struct rr_order *order, uint32_t now);
 
 /* Takes out the next order if it starts at this tick, else NULL; it stays where it is until another is added. */
+/*@ requires \valid(orders) && orders->count <= RR_QUEUE;
+    assigns orders->count;
+    behavior due:
+      assumes orders->count > 0 && orders->order[orders->count - 1].start == now;
+      ensures ORDER_3_next: orders->count == \old(orders->count) - 1 && \result == &orders->order[orders->count];
+    behavior none:
+      assumes orders->count == 0 || orders->order[orders->count - 1].start != now;
+      ensures \result == \null && orders->count == \old(orders->count);
+    complete behaviors;
+    disjoint behaviors;
+*/
 const struct rr_order *rr_orders_take_due(struct rr_orders *orders, uint32_t now);
+
+/* Values and goals of glides are inside this: pulses of 2600 us in ns, duties of 10000. */
+#define RR_WAY_MAX 2600000
 
 /* A value on its way: at tick T + k it is d + s floor(|D - d| k / n), without a division in the tick (SPEC ORDER-4). */
 struct rr_glide {
@@ -42,13 +56,41 @@ struct rr_glide {
     bool pending;   /* its `done` has not been sent */
 };
 
+/*@ predicate rr_glide_ok(struct rr_glide *g) =
+      -RR_WAY_MAX <= g->value <= RR_WAY_MAX && g->left <= g->ticks <= RR_HORIZON_TICKS &&
+      (g->left > 0 ==> g->whole <= 2 * RR_WAY_MAX && g->part < g->ticks && g->sum < g->ticks);
+
+    // the way of a tick: the whole part, and one more where the parts have come to one
+    logic integer rr_stride(struct rr_glide *g) = g->sum + g->part >= g->ticks ? g->whole + 1 : g->whole;
+*/
+
 /* Begins an order's glide from the present value to `goal` at this tick (k = 0). */
 void rr_glide_begin(struct rr_glide *glide, const struct rr_order *order, RR_I24 goal);
 
 /* Moves the glide on by one tick. */
+/*@ requires \valid(glide) && rr_glide_ok(glide);
+    assigns glide->value, glide->sum, glide->left;
+    behavior on_its_way:
+      assumes glide->left > 0;
+      ensures glide->left == \old(glide->left) - 1;
+      ensures ORDER_4_value: glide->value == \old(glide->value) +
+                             (glide->down ? -\old(rr_stride(glide)) : \old(rr_stride(glide)));
+      ensures ORDER_4_sum: glide->sum == \old(glide->sum) + glide->part -
+                           (\old(glide->sum) + glide->part >= glide->ticks ? glide->ticks : 0);
+      ensures glide->sum < glide->ticks;
+    behavior at_its_goal:
+      assumes glide->left == 0;
+      ensures glide->value == \old(glide->value) && glide->sum == \old(glide->sum) && glide->left == 0;
+    complete behaviors;
+    disjoint behaviors;
+*/
 void rr_glide_step(struct rr_glide *glide);
 
 /* Ends the glide: it rests at `value`, nothing is pending. */
+/*@ requires \valid(glide) && rr_glide_ok(glide) && -RR_WAY_MAX <= value <= RR_WAY_MAX;
+    assigns glide->value, glide->left, glide->pending;
+    ensures rr_glide_ok(glide) && glide->value == value && glide->left == 0 && !glide->pending;
+*/
 void rr_glide_end(struct rr_glide *glide, RR_I24 value);
 
 #endif

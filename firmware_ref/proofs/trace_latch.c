@@ -2,8 +2,8 @@
  *
  * In a tick anything may happen that the device does with its latch: requests (arm, stop, clear) in (a), a trip in (c), the
  * end of a category 1 stop in (e). The ghost variables tell the history: is a trip waiting for its `clear`, is a `clear`
- * waiting for its `arm`, and for how many ticks a category 1 stop has run. Up to the first wrap of the tick, after 49 days;
- * the contract of rr_latch_stop_is_over holds over the wrap too. */
+ * waiting for its `arm`, and for how many ticks a category 1 stop has run. The tick wraps as often as it likes, `ticks` counts
+ * them all. */
 #include "../core/latch.h"
 
 /*@ assigns \nothing; */
@@ -11,14 +11,27 @@ extern bool any_choice(void);
 /*@ assigns \nothing;
     ensures RR_TRIP_NONE < \result < RR_TRIP_COUNT; */
 extern uint8_t any_trip(void);
+/*@ assigns \nothing; */
+extern uint32_t any_tick(void);
 /*@ assigns \nothing;
     ensures 1 <= \result <= 5000; */
 extern uint16_t any_stop_ticks(void);
+
+/* C's rule for what is put into a uint32_t (ISO/IEC 9899 6.3.1.3), which this version of WP has inside the range only. */
+/*@ axiomatic Wrap {
+      axiom below: \forall integer x; -0x100000000 <= x < 0 ==> (uint32_t)x == x + 0x100000000;
+      axiom above: \forall integer x; 0x100000000 <= x < 0x200000000 ==> (uint32_t)x == x - 0x100000000;
+    }
+    lemma rr_tick_on: \forall integer tick, begun; 0 <= tick <= UINT32_MAX && 0 <= begun <= UINT32_MAX &&
+      (uint32_t)(tick - begun) < UINT32_MAX ==>
+      (uint32_t)((uint32_t)(tick + 1) - begun) == (uint32_t)(tick - begun) + 1;
+*/
 
 void every_history(void)
 {
     struct rr_latch latch = {RR_STATE_OFF, RR_TRIP_NONE, 0};
     uint16_t stop_ticks = any_stop_ticks();
+    uint32_t tick = any_tick();
     //@ ghost int tripped = 0;
     //@ ghost int armed_since_trip = 1;
     //@ ghost uint32_t stopping_for = 0;
@@ -28,10 +41,10 @@ void every_history(void)
         loop invariant tripped == 0 || tripped == 1;
         loop invariant latch.trip != RR_TRIP_NONE ==> tripped == 1;
         loop invariant S5_in_time: latch.state == RR_STATE_STOPPING ==>
-                       stopping_for <= stop_ticks && latch.stop_begun + stopping_for == tick;
-        loop assigns tick, latch, tripped, armed_since_trip, stopping_for;
-        loop variant UINT32_MAX - tick; */
-    for (uint32_t tick = 0; tick < UINT32_MAX; tick++) {
+                       stopping_for <= stop_ticks && (uint32_t)(tick - latch.stop_begun) == stopping_for;
+        loop assigns ticks, tick, latch, tripped, armed_since_trip, stopping_for;
+        loop variant UINT64_MAX - ticks; */
+    for (uint64_t ticks = 0; ticks < UINT64_MAX; ticks++) {
         if (latch.state == RR_STATE_OFF && any_choice()) {
             rr_latch_arm(&latch);
             //@ assert S5_arm_after_clear: tripped == 0;
@@ -60,5 +73,7 @@ void every_history(void)
             rr_latch_off(&latch);
         }
         //@ ghost stopping_for = latch.state == RR_STATE_STOPPING ? stopping_for + 1 : 0;
+        //@ assert latch.state == RR_STATE_STOPPING ==> (uint32_t)(tick - latch.stop_begun) + 1 == stopping_for <= 5000;
+        tick++;
     }
 }

@@ -49,6 +49,12 @@ PARTS = (
     Part(name="latch", clauses="S5", file=proof_builds.CORE / "latch.c"),
     Part(name="stops", clauses="S5 over every history", file=proof_builds.PROOFS / "trace_latch.c"),
     Part(name="servo", clauses="S7", file=proof_builds.CORE / "servo.c"),
+    Part(
+        name="orders",
+        clauses="ORDER-3: the next order; ORDER-4: one step",
+        file=proof_builds.CORE / "orders.c",
+        functions=("rr_orders_take_due", "rr_glide_step", "rr_glide_end"),
+    ),
     Part(name="guard", clauses="TRIP-1, TRIP-3, TRIP-5 to TRIP-8, CLEAR-1", file=proof_builds.CORE / "guard.c"),
     Part(name="heat", clauses="TRIP-8: no run-time error, and the whole root", file=proof_builds.CORE / "heat.c"),
 )
