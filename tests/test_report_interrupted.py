@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import re
 from collections.abc import Callable
-from pathlib import Path
 
 import pytest
 
@@ -57,7 +56,7 @@ def test_an_interruption_is_told_among_the_deviations_and_not_as_the_end(run: Fa
     assert len(names) >= 8
     assert names[0] == "Item, rig and environment"
     assert names.index("Record around the trip") == names.index("Deviations and interruptions") + 1
-    assert "<td class=\"t\">interruption 1</td>" in page
+    assert '<td class="t">interruption 1</td>' in page
     assert "<dt>lasted, interruptions included</dt>" in page
     assert "<dt>last part, planned at least</dt>" in page
     assert "<td>brush 4.2 mm (A.M.) [note-1-1.jpg]</td>" in page
