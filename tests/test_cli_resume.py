@@ -81,9 +81,7 @@ def test_at_most_takes_a_time(here: Path, capsys: pytest.CaptureFixture[str], te
     assert f"--at-most {text}: " in capsys.readouterr().err
 
 
-def test_at_most_ends_a_run_in_order_and_it_can_be_gone_on_with(
-    here: Path, capsys: pytest.CaptureFixture[str]
-) -> None:
+def test_at_most_ends_a_run_in_order_and_it_can_be_gone_on_with(here: Path, capsys: pytest.CaptureFixture[str]) -> None:
     assert main(["run", "night.yaml", "--at-most", "4 s", *VIRTUAL]) == 5
     assert "ended in order at its latest end" in capsys.readouterr().out
     folder = only_run()

@@ -191,7 +191,8 @@ def test_names_and_units() -> None:
     assert units == {
         "duration": "s", "lowest supply": "V", "peak current": "A", "energy": "J", "position error": "rev",
         "travel ratio": "", "steady current": "A", "steady speed": "rpm", "time to speed": "s", "coast-down time": "s",
-        "break-away duty": "%", "break-away current": "A", "start delay": "s", "lost motion": "deg", "resistance": "ohm",
+        "break-away duty": "%", "break-away current": "A", "start delay": "s", "lost motion": "deg",
+        "resistance": "ohm",
     }  # fmt: skip
     assert [name for name in names if not is_judged(name)] == ["vent: position error"]
 

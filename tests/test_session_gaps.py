@@ -219,9 +219,7 @@ def test_every_sample_is_delivered_once_in_order_or_in_exactly_one_gap(
     seed: int, loss: float, keep: int, start: int, known: bool, lines: int
 ) -> None:
     device = Sender(seed, loss, keep, start)
-    log = SampleStream(
-        first_tick=FIRST, layout=LAYOUT, keep=keep, number_before=(start - 1) % 256 if known else None
-    )
+    log = SampleStream(first_tick=FIRST, layout=LAYOUT, keep=keep, number_before=(start - 1) % 256 if known else None)
     out: list[Delivery] = []
     for _ in range(lines):
         arrived = device.make()

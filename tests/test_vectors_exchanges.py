@@ -52,9 +52,7 @@ def device_of(vector: Vector) -> Device:
 
 def differences(vector: Vector, kind: type[ScriptedDevice] | type[CoreDevice] = ScriptedDevice) -> list[str]:
     """What a kind of device did otherwise than the vector says, tick by tick."""
-    device = kind(
-        device_of(vector), VECTORS["limits"] | vector.get("limits", {}), vector.get("inputs", {})
-    )
+    device = kind(device_of(vector), VECTORS["limits"] | vector.get("limits", {}), vector.get("inputs", {}))
     steps = list(vector["steps"])
     found = []
     while True:

@@ -1,7 +1,7 @@
 """Make firmware_ref/plant/vent_bench.h from `ramprig.mock.plant.VENT_BENCH`, so that its figures stand in one place.
 
-    python scripts/dev/generate_plant.py            writes it where it differs and says so
-    python scripts/dev/generate_plant.py --check    writes nothing; exit status 1 where it differs
+python scripts/dev/generate_plant.py            writes it where it differs and says so
+python scripts/dev/generate_plant.py --check    writes nothing; exit status 1 where it differs
 """
 
 from __future__ import annotations
