@@ -1,5 +1,6 @@
 /* The requests: each word's checks in the order of SPEC BAD-5, and what it does (SPEC section 8). */
 #include "device.h"
+#include "kept.h"
 #include "seeded.h"
 #include "store.h"
 
@@ -7,9 +8,9 @@
 
 static bool ramp_is_out(const struct rr_device *device, const struct rr_arguments *given)
 {
-    int32_t duty = (int32_t)given->value[1];
-    int32_t ceiling = rr_limits_at(&device->limits, rr_limits_axis_place(RR_LIMIT_CEILING_DUTY, (uint8_t)given->value[0]));
-    return duty > ceiling || duty < -ceiling || given->value[2] > RR_HORIZON_TICKS;
+    uint16_t ceiling = (uint16_t)rr_limits_at(&device->limits, rr_limits_axis_place(RR_LIMIT_CEILING_DUTY, (uint8_t)given->value[0]));
+    /* from -ceiling to ceiling, moved to start from 0 */
+    return given->value[1] + ceiling > 2ul * ceiling || given->value[2] > RR_HORIZON_TICKS;
 }
 
 static bool swing_is_out(const struct rr_device *device, const struct rr_arguments *given)
@@ -26,10 +27,11 @@ static bool swing_is_out(const struct rr_device *device, const struct rr_argumen
 
 static bool log_is_out(const struct rr_arguments *given)
 {
+    uint32_t mask = given->value[1];
     if (given->value[0] == 0) {
-        return given->value[1] != 0 || given->value[2] != RR_FORM_PACKED;
+        return mask != 0 || (uint8_t)given->value[2] != RR_FORM_PACKED;
     }
-    return given->value[0] > UINT16_MAX || given->value[1] == 0 || !rr_sampling_mask_fits(given->value[1]);
+    return given->value[0] > UINT16_MAX || mask == 0 || !rr_sampling_mask_fits(mask);
 }
 
 static bool arm_is_out(const struct rr_device *device, const struct rr_arguments *given)
@@ -84,11 +86,12 @@ static uint8_t refusal(const struct rr_device *device, struct rr_request *reques
     return out ? RR_REASON_RANGE : WORD_OK;
 }
 
-static uint8_t do_arm(struct rr_device *device, const struct rr_arguments *given)
+static uint8_t do_arm(struct rr_device *device, const struct rr_arguments *given, uint32_t *told)
 {
     if (RR_SEEDED(ARM_ON_ANY_DIGEST, false, given->value[1] != device->limits.digest)) {
         return RR_REASON_DIGEST;
     }
+    *told = given->value[0];
     device->lease_ms = (uint16_t)given->value[0];
     device->lease_ticks = 1000u % RR_TICK_US == 0
                               ? (uint16_t)(given->value[0] * (1000u / RR_TICK_US))
@@ -131,7 +134,7 @@ static uint8_t do_disarm(struct rr_device *device)
 }
 
 /* ORDER-1, ORDER-2: late before far before full, so that a late order is never hidden. */
-static uint8_t do_order(struct rr_device *device, uint8_t kind, const struct rr_arguments *given)
+static uint8_t do_order(struct rr_device *device, uint8_t kind, const struct rr_arguments *given, uint32_t *told)
 {
     const uint32_t *value = given->value;
     bool is_rest = kind == RR_ORDER_REST;
@@ -157,6 +160,7 @@ static uint8_t do_order(struct rr_device *device, uint8_t kind, const struct rr_
         .tag = device->line.tag,
     };
     rr_orders_add(&device->u.orders, &order, device->tick);
+    *told = (uint8_t)(RR_QUEUE - device->u.orders.count);
     return WORD_OK;
 }
 
@@ -171,11 +175,11 @@ static uint8_t do_clear(struct rr_device *device)
 {
     uint8_t trip = device->latch.trip;
     RR_SUPPLY supply = device->inputs.supply_mv;
+    uint8_t axis = RR_AXIS(device->last_trip.index);
     bool persists = trip == RR_TRIP_SELF_TEST ||
                     (trip == RR_TRIP_OVERVOLTAGE && supply > device->limits.board.over_mv) ||
-                    (trip == RR_TRIP_UNDERVOLTAGE && supply < device->limits.board.under_mv);
-    uint8_t axis = RR_AXIS(device->last_trip.index);
-    persists = persists || rr_guard_persists(&device->axis[axis].guard, &device->limits.axis[axis].guard, trip,
+                    (trip == RR_TRIP_UNDERVOLTAGE && supply < device->limits.board.under_mv) ||
+                    rr_guard_persists(&device->axis[axis].guard, &device->limits.axis[axis].guard, trip,
                                              device->inputs.current_ma[axis]);
     if (RR_SEEDED(CLEAR_DESPITE_CAUSE, false, persists)) {
         return RR_REASON_CAUSE;
@@ -200,8 +204,7 @@ static uint8_t do_limit(struct rr_device *device, uint8_t place, const struct rr
     *told = (uint32_t)value;
     rr_limits_set(&device->limits, place, value);
     if ((RR_CAPS & RR_CAP_KEEPS_LIMITS) != 0) {
-        uint8_t *byte = &device->unsaved[place >> 3];
-        *byte = (uint8_t)(*byte | (uint8_t)(1u << (place & 7u)));
+        device->unsaved[place] = true;
     }
     return WORD_OK;
 }
@@ -212,13 +215,13 @@ static uint8_t carry_out(struct rr_device *device, uint8_t word, const struct rr
     const uint32_t *value = given->value;
     switch (word) {
     case RR_WORD_ARM:
-        return do_arm(device, given);
+        return do_arm(device, given, told);
     case RR_WORD_DISARM:
         return do_disarm(device);
     case RR_WORD_RAMP:
     case RR_WORD_SWING:
     case RR_WORD_REST:
-        return do_order(device, (uint8_t)(word - RR_WORD_RAMP + RR_ORDER_RAMP), given);
+        return do_order(device, (uint8_t)(word - RR_WORD_RAMP + RR_ORDER_RAMP), given, told);
     case RR_WORD_STOP:
         do_stop(device, (uint8_t)value[0]);
         return WORD_OK;
@@ -259,7 +262,7 @@ static uint8_t understood(const struct rr_device *device, const char *text, stru
 
 void rr_answer_read(struct rr_device *device)
 {
-    const struct rr_memory *memory = &device->memory;
+    const struct rr_memory *memory = RR_NEAR(&device->memory);
     const char *text = rr_line_body(&device->line);
     struct rr_request request;
     request.reason = understood(device, text, &request);
@@ -272,7 +275,7 @@ void rr_answer_read(struct rr_device *device)
 /* Carries out the request; the reason of its refusal, or WORD_OK with the number that only the word can tell. */
 static uint8_t carried_out(struct rr_device *device, uint32_t *told)
 {
-    const struct rr_request *request = &device->line.u.request;
+    const struct rr_request *request = RR_NEAR(&device->line.u.request);
     if (request->reason != WORD_OK) {
         return request->reason;
     }
@@ -282,7 +285,7 @@ static uint8_t carried_out(struct rr_device *device, uint32_t *told)
     return carry_out(device, request->word, &request->given, told);
 }
 
-RR_SHARED static void note_verdict(const struct rr_device *device, struct rr_verdict *verdict, uint8_t reason)
+RR_APART static void note_verdict(const struct rr_device *device, struct rr_verdict *verdict, uint8_t reason)
 {
     verdict->tick = device->tick;
     verdict->tag = device->line.tag;
@@ -300,7 +303,7 @@ static void answer_aside(struct rr_device *device, uint8_t reason)
 
 static void answer(struct rr_device *device)
 {
-    struct rr_memory *memory = &device->memory;
+    struct rr_memory *memory = RR_NEAR(&device->memory);
     uint32_t told = 0;
     memory->full = true;
     memory->body = device->line.u.request.body;
@@ -316,8 +319,8 @@ static void answer(struct rr_device *device)
 /* Answers wait for one another, and for the digest; an urgent `stop` waits for no answer but its own kind. */
 bool rr_answer_may(const struct rr_device *device)
 {
-    const struct rr_request *request = &device->line.u.request;
-    const struct rr_logging *logging = &device->logging;
+    const struct rr_request *request = RR_NEAR(&device->line.u.request);
+    const struct rr_logging *logging = RR_NEAR(&device->logging);
     if (!RR_SPREAD && RR_PORT(device)->room(RR_SELF(device)) < RR_DEVICE_LINE_MAX) {
         return false;
     }
@@ -332,7 +335,7 @@ bool rr_answer_may(const struct rr_device *device)
 
 void rr_answer_request(struct rr_device *device)
 {
-    const struct rr_request *request = &device->line.u.request;
+    const struct rr_request *request = RR_NEAR(&device->line.u.request);
     bool urgent = device->line.tag == RR_TAG_URGENT;
     bool repeated = !urgent && request->repeated;
     uint32_t told;
@@ -343,7 +346,7 @@ void rr_answer_request(struct rr_device *device)
         bool is_stop = request->word == RR_WORD_STOP;
         answer_aside(device, is_stop ? carried_out(device, &told) : (uint8_t)RR_REASON_TAG);
     } else if (repeated) {
-        device->repeats++;
+        rr_kept_count(&device->repeats);
         device->memory.reply.waiting = true;
     } else if (request->kept_tag) { /* TAG-4 */
         answer_aside(device, RR_REASON_TAG);

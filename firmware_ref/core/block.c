@@ -56,13 +56,13 @@ static void put_bits(struct rr_block *block, uint16_t value, uint8_t count)
             *byte = 0;
         }
         uint8_t room = (uint8_t)(8u - used);
+        value = (uint16_t)(value & (uint16_t)((1ul << count) - 1u));
         if (count < room) {
             *byte = (uint8_t)(*byte | (uint8_t)(value << (room - count)));
             return;
         }
         count = (uint8_t)(count - room);
         *byte = (uint8_t)(*byte | (uint8_t)(value >> count));
-        value = (uint16_t)(value & (uint16_t)((1ul << count) - 1u));
         byte++;
         used = 0;
     }
@@ -71,15 +71,14 @@ static void put_bits(struct rr_block *block, uint16_t value, uint8_t count)
 static void put_wide(struct rr_block *block, uint32_t value, uint8_t count)
 {
     if (count > 16) {
-        uint8_t high = (uint8_t)(count - 16u);
-        put_bits(block, (uint16_t)(value >> 16 & ((1ul << high) - 1u)), high);
+        put_bits(block, (uint16_t)(value >> 16), (uint8_t)(count - 16u));
         count = 16;
     }
-    put_bits(block, (uint16_t)(value & ((1ul << count) - 1u)), count);
+    put_bits(block, (uint16_t)value, count);
 }
 
 /* k of DATA-7: the least with N 2^k >= A, at most RICE_K_MAX. */
-static uint8_t parameter_of(uint8_t count, RR_U24 sum)
+RR_APART static uint8_t parameter_of(uint8_t count, RR_U24 sum)
 {
     uint8_t k = 0;
     for (RR_U24 reach = count; k < RR_RICE_K_MAX && reach < sum; reach <<= 1) {
@@ -123,23 +122,25 @@ static void put_code(struct rr_block *block, uint32_t u, struct code code)
         return;
     }
     put_bits(block, (uint16_t)((2ul << code.ones) - 2u), (uint8_t)(code.ones + 1u));
-    put_bits(block, (uint16_t)u & (uint16_t)((1u << code.k) - 1u), code.k);
+    put_bits(block, (uint16_t)u, code.k);
 }
 _Static_assert(RR_RICE_K_MAX < 16 && RR_RICE_QUOTIENT_MAX == 16, "put_bits takes 16 at most");
 
-void rr_block_prepare(struct rr_block *block, uint32_t mask, uint16_t period, struct rr_channel *channel)
+RR_APART void rr_block_prepare(struct rr_block *block, uint32_t mask, uint16_t period, struct rr_channel *channel)
 {
     block->channel = channel;
     block->mask = mask;
     block->period = period;
     block->samples = 0;
     block->channels = 0;
-    for (uint8_t bit = 0; bit < 20; bit++) {
-        if ((mask >> bit & 1u) != 0) {
-            channel[block->channels].bit = bit;
-            channel[block->channels].sum = (RR_U24)1 << RR_RICE_K_START;
+    for (uint8_t bit = 0; mask != 0; mask >>= 1) {
+        if ((mask & 1u) != 0) {
+            channel->bit = bit;
+            channel->sum = (RR_U24)1 << RR_RICE_K_START;
+            channel++;
             block->channels++;
         }
+        bit++;
     }
 }
 
@@ -157,8 +158,8 @@ static void put_first(struct rr_block *block, bool with_k)
     put_wide(block, block->period, 16);
     put_wide(block, block->mask, 20);
     put_bits(block, 0, 8);
-    for (uint8_t i = 0; i < block->channels; i++) {
-        const struct rr_channel *channel = &block->channel[i];
+    const struct rr_channel *channel = block->channel;
+    for (uint8_t left = block->channels; left != 0; left--, channel++) {
         put_wide(block, (uint32_t)channel->value, shape_of(channel->bit)->width);
         if (with_k) {
             put_bits(block, parameter_of(1, channel->sum), 4); /* before its first residual A is 2^k */
@@ -170,8 +171,9 @@ static void open_block(struct rr_block *block, uint32_t tick, const int32_t *val
 {
     block->first_tick = tick;
     block->count = 1;
-    for (uint8_t i = 0; i < block->channels; i++) {
-        block->channel[i].value = rr_block_held(block->channel[i].bit, values[i]);
+    struct rr_channel *channel = block->channel;
+    for (uint8_t left = block->channels; left != 0; left--, channel++) {
+        channel->value = rr_block_held(channel->bit, *values++);
     }
     for (uint8_t i = 0; i < RR_SECOND_ORDER; i++) {
         block->difference[i] = 0;
@@ -180,9 +182,9 @@ static void open_block(struct rr_block *block, uint32_t tick, const int32_t *val
     block->samples = 1;
 }
 
-/* Puts the folded residuals in the place of the values, and returns the bits their codes take. What a channel then holds
- * of the sample is right only if the sample is taken: one that opens the next block sets it anew. */
-static uint16_t fold(struct rr_block *block, int32_t *values, struct code *codes)
+/* Makes the folded residuals of the values, and returns the bits their codes take. What a channel then holds of the
+ * sample is right only if the sample is taken: one that opens the next block sets it anew. */
+static uint16_t fold(struct rr_block *block, const int32_t *values, uint32_t *residuals, struct code *codes)
 {
     uint16_t needed = 0;
     uint8_t second = 0;
@@ -197,7 +199,7 @@ static uint16_t fold(struct rr_block *block, int32_t *values, struct code *codes
             residual = difference(residual, before);
         }
         uint32_t u = folded(residual);
-        values[i] = (int32_t)u;
+        residuals[i] = u;
         codes[i] = code_of(u, parameter_of(block->count, channel->sum));
         needed = (uint16_t)(needed + length_of(codes[i]));
     }
@@ -212,24 +214,24 @@ static uint16_t fold(struct rr_block *block, int32_t *values, struct code *codes
 #endif
 
 /* Undoes `fold` for a block of one sample, whose values are written once more when it is closed without a second. */
-RARELY static void take_back(struct rr_block *block, const int32_t *values)
+RARELY static void take_back(struct rr_block *block, const uint32_t *residuals)
 {
     struct rr_channel *channel = block->channel;
     for (uint8_t i = block->channels; i != 0; i--, channel++) {
-        uint32_t u = (uint32_t)*values++;
+        uint32_t u = *residuals++;
         uint32_t residual = u >> 1;
         channel->value = (int32_t)((uint32_t)channel->value - ((u & 1u) != 0 ? ~residual : residual));
     }
 }
 
 /* Writes the codes and lets the running means learn from them (DATA-7). */
-static void put_sample(struct rr_block *block, const int32_t *values, const struct code *codes)
+static void put_sample(struct rr_block *block, const uint32_t *residuals, const struct code *codes)
 {
     bool halve = block->count == RR_RICE_RESET;
-    for (uint8_t i = 0; i < block->channels; i++) {
-        struct rr_channel *channel = &block->channel[i];
-        uint32_t u = (uint32_t)values[i];
-        put_code(block, u, codes[i]);
+    struct rr_channel *channel = block->channel;
+    for (uint8_t left = block->channels; left != 0; left--, channel++) {
+        uint32_t u = *residuals++;
+        put_code(block, u, *codes++);
         if (halve) {
             channel->sum >>= 1;
         }
@@ -239,28 +241,29 @@ static void put_sample(struct rr_block *block, const int32_t *values, const stru
     block->samples++;
 }
 
-bool rr_block_add(struct rr_block *block, uint32_t tick, int32_t *values)
+bool rr_block_add(struct rr_block *block, uint32_t tick, const int32_t *values)
 {
     if (block->samples == 0) {
         open_block(block, tick, values);
         return true;
     }
+    uint32_t residuals[RR_CHANNELS];
     struct code codes[RR_CHANNELS];
     if (block->samples != RR_BLOCK_SAMPLES_MAX &&
-        fold(block, values, codes) <= (uint16_t)(block->room - block->bits)) {
-        put_sample(block, values, codes);
+        fold(block, values, residuals, codes) <= (uint16_t)(block->room - block->bits)) {
+        put_sample(block, residuals, codes);
         return true;
     }
     if (block->samples == 1) {
-        take_back(block, values);
+        take_back(block, residuals);
     }
     return false;
 }
 
 uint8_t rr_block_close(struct rr_block *block)
 {
-    for (uint8_t i = 0; i < block->channels; i++) {
-        struct rr_channel *channel = &block->channel[i];
+    struct rr_channel *channel = block->channel;
+    for (uint8_t left = block->channels; left != 0; left--, channel++) {
         uint8_t k = parameter_of(block->samples == 0 ? 1 : block->count, channel->sum);
         channel->sum = (RR_U24)1 << k; /* as the header of the next block will say */
     }
@@ -272,7 +275,11 @@ uint8_t rr_block_close(struct rr_block *block)
     high[0] = (uint8_t)(high[0] | block->samples >> 4);
     high[1] = (uint8_t)(high[1] | block->samples << 4);
     block->samples = 0;
-    return (uint8_t)((block->bits + 5u) / 6u);
+    uint8_t characters = 0;
+    for (uint16_t bits = 0; bits < block->bits; bits = (uint16_t)(bits + 6u)) {
+        characters++;
+    }
+    return characters;
 }
 
 _Static_assert(COUNT_BIT % 8u == 4u, "rr_block_close patches the count by half bytes");

@@ -47,9 +47,9 @@ void rr_block_prepare(struct rr_block *block, uint32_t mask, uint16_t period, st
 /* Where the next block's payload goes: `characters` at most, in RR_BLOCK_BYTES of the caller's memory. */
 void rr_block_place(struct rr_block *block, uint8_t *bytes, uint8_t characters);
 
-/* Adds a sample, its values in order of their bits; they are held to their widths, and used up. False where it does not
- * fit: close, place and add the same sample, its values given anew. */
-bool rr_block_add(struct rr_block *block, uint32_t tick, int32_t *values);
+/* Adds a sample, its values in order of their bits; they are held to their widths. False where it does not fit: close,
+ * place and add the same sample again. */
+bool rr_block_add(struct rr_block *block, uint32_t tick, const int32_t *values);
 
 /* Ends the payload, makes ready for the next block, and returns the payload's length in characters. */
 uint8_t rr_block_close(struct rr_block *block);

@@ -5,7 +5,7 @@
 
 /*@ assigns \nothing;
     ensures \result == (duty > 0 ? 1 : duty < 0 ? -1 : 0); */
-static int8_t sign_of(int16_t duty)
+RR_APART static int8_t sign_of(int16_t duty)
 {
     return (int8_t)((duty > 0) - (duty < 0));
 }
@@ -31,7 +31,7 @@ static int16_t held_within(int16_t duty, int16_t ceiling)
 
 /*@ assigns \nothing;
     ensures \result == rr_one_more(ticks); */
-static uint16_t one_more(uint16_t ticks)
+RR_APART static uint16_t one_more(uint16_t ticks)
 {
     return ticks == UINT16_MAX ? ticks : (uint16_t)(ticks + 1u);
 }
@@ -97,10 +97,14 @@ void rr_chain_watch(struct rr_chain *chain, const struct rr_chain_limits *limits
     ensures rr_chain_ok(chain) && chain->duty == duty;
     ensures chain->zero_for == (duty == 0 ? rr_one_more(\old(chain->zero_for)) : 0);
     ensures chain->last_sign == (duty > 0 ? 1 : duty < 0 ? -1 : \old(chain->last_sign)); */
-static void set_duty(struct rr_chain *chain, int16_t duty)
+RR_APART static void set_duty(struct rr_chain *chain, int16_t duty)
 {
     bool resting = RR_SEEDED(DWELL_FROM_COMMAND, size_of(duty) < size_of(chain->duty), false) || duty == 0;
-    chain->zero_for = resting ? one_more(chain->zero_for) : 0;
+    if (resting) {
+        chain->zero_for = one_more(chain->zero_for);
+    } else {
+        chain->zero_for = 0;
+    }
     if (duty != 0) {
         chain->last_sign = sign_of(duty);
     }
@@ -131,7 +135,7 @@ int16_t rr_chain_step(struct rr_chain *chain, const struct rr_chain_limits *limi
     return duty;
 }
 
-void rr_chain_off(struct rr_chain *chain)
+RR_APART void rr_chain_off(struct rr_chain *chain)
 {
     chain->held_for = 0;
     set_duty(chain, 0);

@@ -91,6 +91,7 @@
  * counts need only span what a shaft can turn within the trail. */
 #ifndef RR_TRAIL_COUNTS
 #define RR_TRAIL_COUNTS uint32_t /* unsigned: the low bits of the counts */
+#define RR_TRAIL_TURNED int32_t  /* signed, as wide: the way between two of them */
 #define RR_TRAIL_CURRENT int32_t
 #define RR_TRAIL_SUPPLY int32_t
 #endif
@@ -102,11 +103,17 @@
 /* An axis by its number, which is 0 where there is one only: so that a small controller need not multiply to find it. */
 #define RR_AXIS(index) (RR_AXES == 1 ? 0 : (index))
 
-/* A function that is called from several places and is kept once: copies of it would cost a small controller more than calls. */
+/* A function that is kept once and apart: copies of it in its callers would cost a small controller more than calls. */
 #if defined __GNUC__ && RR_SPREAD
-#define RR_SHARED __attribute__((noinline))
+#define RR_APART __attribute__((noinline))
 #else
-#define RR_SHARED
+#define RR_APART
+#endif
+
+/* A pointer to a part of the device that is to be held in a register. A compiler that knows where the device is would write
+ * out the whole address at each use, which takes twice the room on a small controller. */
+#ifndef RR_NEAR
+#define RR_NEAR(pointer) (pointer)
 #endif
 
 /* The number of limit values of this build, in the order of the digest. */

@@ -1,6 +1,7 @@
 /* One tick of the device, in the order of SPEC RUN-2; see device.h. */
 #include "device.h"
 
+#include "kept.h"
 #include "seeded.h"
 #include "store.h"
 
@@ -19,7 +20,7 @@ uint8_t rr_device_queued(const struct rr_device *device)
 /* Carries out the line that was heard. */
 static void carry_out_line(struct rr_device *device)
 {
-    device->lines++;
+    rr_kept_count(&device->lines);
     switch (device->heard) {
     case RR_LINE_REQUEST:
         rr_answer_request(device);
@@ -39,10 +40,18 @@ static void carry_out_line(struct rr_device *device)
     device->read = false;
 }
 
+/* Where work is spread a tick takes one request, and its notices need not wait. */
+static void set_taking(struct rr_device *device, bool taking)
+{
+    if (!RR_SPREAD) {
+        device->taking = taking;
+    }
+}
+
 /* (a) The requests that have arrived and can be answered; one a tick where work is spread. */
 static void take_requests(struct rr_device *device)
 {
-    device->taking = !RR_SPREAD;
+    set_taking(device, true);
     do {
         rr_device_settle(device);
         if (device->heard == RR_LINE_NONE || (device->heard == RR_LINE_REQUEST && !(device->read && rr_answer_may(device)))) {
@@ -51,7 +60,7 @@ static void take_requests(struct rr_device *device)
         carry_out_line(device);
     } while (!RR_SPREAD);
     rr_device_settle(device);
-    device->taking = false;
+    set_taking(device, false);
 }
 
 /* BAD-4: at most one notice in GARBLED_REST_TICKS; what came inside the rest is told when it is over. */
@@ -60,7 +69,7 @@ static void tell_garbled(struct rr_device *device)
     if (device->garbled_rest != 0) {
         device->garbled_rest--;
     }
-    if (device->garbled_rest != 0 || device->line.garbled == device->garbled_told) {
+    if (device->garbled_rest != 0 || (uint16_t)device->line.garbled == (uint16_t)device->garbled_told) {
         return;
     }
     device->garbled_told = device->line.garbled;
@@ -90,7 +99,7 @@ static uint16_t counted(uint16_t ticks, bool beyond)
 /* TRIP-4 */
 static void judge_supply(struct rr_device *device, struct rr_finding *finding)
 {
-    const struct rr_board_limits *limits = &device->limits.board;
+    const struct rr_board_limits *limits = RR_NEAR(&device->limits.board);
     if ((RR_CAPS & RR_CAP_SUPPLY) == 0) {
         return;
     }
@@ -129,7 +138,7 @@ static void guard(struct rr_device *device)
     judge_supply(device, &finding);
     judge_lease(device, &finding);
     for (uint8_t i = 0; i < RR_AXES; i++) {
-        struct rr_axis *axis = &device->axis[i];
+        struct rr_axis *axis = RR_NEAR(&device->axis[i]);
         uint8_t before = finding.trip;
         rr_guard_step(&axis->guard, &device->limits.axis[i].guard, device->tick, axis->chain.duty, device->inputs.counts[i],
                       device->inputs.current_ma[i], &finding);
@@ -145,12 +154,12 @@ static void guard(struct rr_device *device)
 static void begin_swing(struct rr_device *device, const struct rr_order *order, uint8_t index)
 {
 #if RR_SERVOS > 0
-    struct rr_servo *servo = &device->servo[index];
+    struct rr_servo *servo = RR_NEAR(&device->servo[index]);
     if (servo->swing.value == 0) { /* no pulse: from home, or on from where pulses were taken away in this tick */
         rr_ns from = servo->pulse_ns != 0 ? servo->pulse_ns : rr_servo_first_ns(&device->limits.servo[index]);
         rr_glide_end(&servo->swing, from);
     }
-    rr_glide_begin(&servo->swing, order, (rr_ns)((rr_ns)order->value * 1000));
+    rr_glide_begin(&servo->swing, order, (rr_ns)((uint32_t)(uint16_t)order->value * 1000u));
 #else
     (void)device;
     (void)order;
@@ -196,13 +205,13 @@ static void move_demands(struct rr_device *device)
 /* (e) for one axis: chain and bridge. */
 static void drive_axis(struct rr_device *device, uint8_t index)
 {
-    struct rr_axis *axis = &device->axis[index];
+    struct rr_axis *axis = RR_NEAR(&device->axis[index]);
     struct rr_chain_news news;
     int16_t duty = rr_chain_step(&axis->chain, &device->limits.axis[index].chain, (int16_t)axis->demand.value, &news);
     RR_PORT(device)->bridge(RR_SELF(device), index, duty, axis->brake);
-    device->at_ceiling = device->at_ceiling || news.at_ceiling;
-    device->at_slew = device->at_slew || news.at_slew;
-    device->locked = device->locked || news.locked;
+    device->at_ceiling |= news.at_ceiling;
+    device->at_slew |= news.at_slew;
+    device->locked |= news.locked;
     if (news.let_go != 0) {
         rr_notice_push(device, RR_NOTICE_DWELL, index, news.let_go);
     }
@@ -216,7 +225,7 @@ static void drive_axis(struct rr_device *device, uint8_t index)
 /* (e) for one servo. */
 static void drive_servo(struct rr_device *device, uint8_t index)
 {
-    struct rr_servo *servo = &device->servo[index];
+    struct rr_servo *servo = RR_NEAR(&device->servo[index]);
     const struct rr_servo_limits *limits = &device->limits.servo[index];
     rr_ns goal = servo->swing.value;
     rr_ns before = servo->pulse_ns;
@@ -230,7 +239,9 @@ static void drive_servo(struct rr_device *device, uint8_t index)
     if (servo->pulse_ns != before) {
         RR_PORT(device)->pulse(RR_SELF(device), index, (uint32_t)servo->pulse_ns);
     }
-    device->at_slew = device->at_slew || (goal != 0 && servo->pulse_ns != rr_servo_held_ns(limits, goal));
+    if (goal != 0 && servo->pulse_ns != rr_servo_held_ns(limits, goal)) {
+        device->at_slew = true;
+    }
     if (servo->swing.pending && servo->swing.left == 0 && servo->pulse_ns == goal) {
         servo->swing.pending = false;
         rr_notice_push(device, RR_NOTICE_DONE, servo->swing.tag, 0);
@@ -253,7 +264,7 @@ static void drive(struct rr_device *device)
     bool turning = false;
     for (uint8_t i = 0; i < RR_AXES; i++) {
         drive_axis(device, i);
-        turning = turning || device->axis[i].chain.duty != 0;
+        turning |= device->axis[i].chain.duty != 0;
     }
 #if RR_SERVOS > 0
     for (uint8_t i = 0; i < RR_SERVOS; i++) {
@@ -293,9 +304,8 @@ static void record(struct rr_device *device)
 void rr_device_tick(struct rr_device *device)
 {
     take_requests(device);
-    if (device->line_ended || device->heard != RR_LINE_NONE) {
-        device->line_waits++;
-    } else {
+    device->line_waits++;
+    if (!device->line_ended && device->heard == RR_LINE_NONE) {
         device->line_waits = 0;
     }
     tell_garbled(device);
@@ -307,7 +317,7 @@ void rr_device_tick(struct rr_device *device)
     record(device);
     rr_device_settle(device);
     rr_limits_enforce(&device->limits);
-    device->tick++;
+    rr_kept_count(&device->tick);
 }
 
 static void load_limits(struct rr_device *device)
@@ -349,15 +359,15 @@ void rr_device_start(struct rr_device *device, const struct rr_port *port, void 
     load_limits(device);
     device->boot = next_boot(device); /* last: it may leave the store busy */
     if (fault != 0) {
-        device->last_trip = (struct rr_finding){RR_TRIP_SELF_TEST, 0, fault, 0};
+        rr_finding_note(&device->last_trip, RR_TRIP_SELF_TEST, fault, 0);
     } else if (cause == RR_CAUSE_BROWNOUT || cause == RR_CAUSE_WATCHDOG) {
-        device->last_trip = (struct rr_finding){RR_TRIP_RESTARTED, 0, cause, 0};
+        rr_finding_note(&device->last_trip, RR_TRIP_RESTARTED, cause, 0);
     }
     device->latch.trip = device->last_trip.trip;
-    device->latch.state = device->latch.trip != RR_TRIP_NONE ? RR_STATE_TRIPPED : RR_STATE_OFF;
-    device->last_trip_tick = device->latch.trip != RR_TRIP_NONE ? device->tick : 0;
+    rr_latch_off(&device->latch);
     rr_notice_push(device, RR_NOTICE_BOOT, cause, 0);
     if (device->latch.trip != RR_TRIP_NONE) {
+        device->last_trip_tick = device->tick;
         rr_notice_push(device, RR_NOTICE_TRIP, (uint8_t)(device->latch.trip << 4), 0);
         rr_notice_push(device, RR_NOTICE_OFF, device->latch.state, 0);
     }

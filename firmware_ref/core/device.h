@@ -45,10 +45,10 @@ struct rr_verdict {
 /* An answer as numbers, from which it is said, and said again letter for letter (SPEC TAG-3). */
 struct rr_reply {
     struct rr_verdict verdict;
-    uint32_t value[RR_REPLY_VALUES];
     uint8_t word;
     uint8_t count; /* of values */
     bool waiting;  /* to be said */
+    uint32_t value[RR_REPLY_VALUES];
 };
 
 /* An answer outside the exactly-once memory: to `stop` under tag ff, or a refusal with reason `tag`. */
@@ -85,8 +85,6 @@ struct rr_parcel {
 
 struct rr_logging {
     struct rr_block block;
-    struct rr_channel channel[RR_CHANNELS];
-    struct rr_parcel parcel[RR_PARCELS];
     uint8_t filling; /* which parcel */
     uint8_t saying;
     bool waiting;    /* `saying` is to be said, or being said */
@@ -98,24 +96,24 @@ struct rr_logging {
     uint8_t form;
     bool taken;     /* `sample` waits to be put into its line */
     bool flush_due; /* the packed line is to be closed after it */
-    uint16_t period;
-    uint32_t mask;
     uint32_t next_tick; /* of the next sample; the one taken was a period before */
-    int32_t sample[RR_CHANNELS];
-    uint32_t made; /* by this logging */
+    uint32_t made;      /* by this logging */
     uint32_t made_ever;
     uint32_t dropped_ever;
+    struct rr_channel channel[RR_CHANNELS];
+    int32_t sample[RR_CHANNELS];
+    struct rr_parcel parcel[RR_PARCELS];
 };
 
 /* A trail answer in the making. */
 #define RR_TRAIL_CHANNELS 5
 struct rr_packing {
     struct rr_block block;
-    struct rr_channel channel[RR_TRAIL_CHANNELS];
-    uint8_t bytes[RR_BLOCK_BYTES(RR_TRAIL_PAYLOAD)];
     uint16_t next;  /* record */
     uint8_t axis;
     uint8_t length; /* characters, once it is whole */
+    struct rr_channel channel[RR_TRAIL_CHANNELS];
+    uint8_t bytes[RR_BLOCK_BYTES(RR_TRAIL_PAYLOAD)];
 };
 
 /* What happened, told in order (SPEC NOTE-1). */
@@ -128,65 +126,67 @@ struct rr_happened {
 };
 
 struct rr_notices {
-    struct rr_happened happened[RR_NOTICES];
     uint8_t first;
     uint8_t count;
     uint8_t number; /* of the next notice */
+    struct rr_happened happened[RR_NOTICES];
 };
 
 /* Which line is being said. */
 enum rr_saying { RR_SAYING_NOTHING, RR_SAYING_REPLY, RR_SAYING_ASIDE, RR_SAYING_NOTICE, RR_SAYING_DATA, RR_SAYING_AGAIN };
 
+/* What is used most comes first, and in each part its arrays last: a small controller reaches some 60 bytes from a pointer
+ * with instructions of half the length. */
 struct rr_device {
 #ifndef RR_ONLY_PORT
     const struct rr_port *port;
     void *self;
 #endif
     uint32_t tick;
-    uint32_t boot;
     struct rr_latch latch;
-    int32_t late_by; /* an order of this tick came so many ticks late; negative = none did */
-    struct rr_finding last_trip;
-    struct rr_finding trip_before; /* the last that had another number, until it has been told */
-    uint32_t last_trip_tick;
+    uint8_t saying;     /* enum rr_saying */
+    uint8_t heard;      /* enum rr_line_kind: a line that waits to be carried out */
+    bool line_ended;    /* an LF has been heard, and its line is not judged yet */
+    bool read;          /* the line heard has been read: it holds its request in place of its text */
+    uint8_t line_waits; /* ticks that a line has waited to be judged, read or answered */
+    bool taking;        /* requests are being carried out: notices wait for (f) of the tick */
+    bool packing_busy;  /* a trail answer is in the making */
+    bool at_ceiling;
+    bool at_slew;
+    bool locked;
+    uint8_t garbled_rest; /* ticks until the next notice may be sent */
+    int32_t late_by;      /* an order of this tick came so many ticks late; negative = none did */
     uint16_t renewed_low; /* low half of the tick of the last lease renewal */
     uint16_t lease_ms;
     uint16_t lease_ticks;
     uint16_t over_for; /* ticks in a row beyond the supply's limits */
     uint16_t under_for;
-    bool at_ceiling;
-    bool at_slew;
-    bool locked;
-    bool packing_busy; /* a trail answer is in the making */
-    bool taking;       /* requests are being carried out: notices wait for (f) of the tick */
-    bool line_ended; /* an LF has been heard, and its line is not judged yet */
-    uint8_t line_waits; /* ticks that a line has waited to be judged, read or answered */
-    bool read;       /* the line heard has been read: it holds its request in place of its text */
     struct rr_inputs inputs; /* of this tick, offsets taken off */
+    struct rr_finding last_trip;
+    struct rr_finding trip_before; /* the last that had another number, until it has been told */
+    uint32_t last_trip_tick;
+    uint32_t boot;
+    uint32_t lines;
+    uint32_t repeats;
+    uint32_t garbled_told;
+    struct rr_voice voice;
     struct rr_limits limits;
     struct rr_axis axis[RR_AXES];
 #if RR_SERVOS > 0
     struct rr_servo servo[RR_SERVOS];
 #endif
+    struct rr_line line;
+    struct rr_memory memory;
+    struct rr_aside aside;
+    struct rr_notices notices;
+    struct rr_logging logging;
     /* Orders wait in state `armed` only, and a trail is read after a trip only, until the next `arm`: one memory. */
     union {
         struct rr_orders orders;
         struct rr_packing packing;
     } u;
-    struct rr_line line;
-    uint8_t heard; /* enum rr_line_kind: a line that waits to be carried out */
-    struct rr_memory memory;
-    struct rr_aside aside;
-    struct rr_logging logging;
     struct rr_trail trail;
-    struct rr_notices notices;
-    struct rr_voice voice;
-    uint8_t saying; /* enum rr_saying */
-    uint8_t unsaved[(RR_LIMITS + 7) / 8]; /* bit by place: a limit's value is not in the store yet */
-    uint32_t lines;
-    uint32_t repeats;
-    uint32_t garbled_told;
-    uint8_t garbled_rest; /* ticks until the next notice may be sent */
+    bool unsaved[RR_LIMITS]; /* by place: a limit's value is not in the store yet */
 };
 
 /* Takes over after a start: outputs off, limits from the store, notice `boot`. `cause` is the reset's (enum rr_cause),

@@ -19,7 +19,7 @@ void rr_heat_take(struct rr_heat *heat, uint32_t size_ma)
 /* gap x gain / 2^24: its whole part is returned, the rest is `part` in 2^-32. By halves of 16 bits, as in writing. */
 /*@ requires \valid(part);
     assigns *part; */
-static uint32_t product(uint32_t gap, uint32_t gain, uint32_t *part)
+RR_APART static uint32_t product(uint32_t gap, uint32_t gain, uint32_t *part)
 {
     uint16_t gap_high = (uint16_t)(gap >> 16);
     uint16_t gain_high = (uint16_t)(gain >> 16);
@@ -33,7 +33,7 @@ static uint32_t product(uint32_t gap, uint32_t gain, uint32_t *part)
 
 void rr_heat_step(struct rr_heat *heat, uint32_t gain)
 {
-    uint32_t mean = (uint32_t)heat->sum_high << 26 | heat->sum_low >> 6;
+    uint32_t mean = (uint32_t)(uint8_t)(heat->sum_high << 2) << 24 | heat->sum_low >> 6;
     uint32_t part;
     uint32_t whole = product(mean - heat->level, gain, &part);
     if (mean < heat->level) { /* the way is less than 0: as an unsigned number it was 2^32 too long */

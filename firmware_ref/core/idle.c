@@ -33,7 +33,7 @@ static bool hear(struct rr_device *device, bool long_ones)
 /* The line that comes next: answers and notices go first (KIND-4). */
 static uint8_t next_line(const struct rr_device *device)
 {
-    const struct rr_logging *logging = &device->logging;
+    const struct rr_logging *logging = RR_NEAR(&device->logging);
     if (logging->waiting && logging->goes_first) {
         return RR_SAYING_DATA;
     }
@@ -43,10 +43,10 @@ static uint8_t next_line(const struct rr_device *device)
     if (device->memory.reply.waiting && !device->packing_busy) {
         return RR_SAYING_REPLY;
     }
-    if (logging->again_waiting && !device->memory.reply.waiting) {
+    if (RR_KEEP != 0 && logging->again_waiting && !device->memory.reply.waiting) {
         return RR_SAYING_AGAIN;
     }
-    if (device->notices.count != 0 && !device->taking) {
+    if (device->notices.count != 0 && (RR_SPREAD || !device->taking)) {
         return RR_SAYING_NOTICE;
     }
     return logging->waiting ? RR_SAYING_DATA : RR_SAYING_NOTHING;
@@ -71,7 +71,7 @@ static bool next_field(struct rr_device *device, uint8_t field)
 
 static void said(struct rr_device *device)
 {
-    struct rr_notices *notices = &device->notices;
+    struct rr_notices *notices = RR_NEAR(&device->notices);
     switch (device->saying) {
     case RR_SAYING_REPLY:
         device->memory.reply.waiting = false;
@@ -99,7 +99,7 @@ static bool begin_line(struct rr_device *device)
 {
     device->saying = next_line(device);
     while (!RR_SPREAD && device->saying != RR_SAYING_NOTHING) {
-        const struct rr_notices *notices = &device->notices;
+        const struct rr_notices *notices = RR_NEAR(&device->notices);
         bool is_short = device->saying == RR_SAYING_NOTICE && notices->happened[notices->first].kind != RR_NOTICE_WHO;
         if (RR_PORT(device)->room(RR_SELF(device)) >= (is_short ? NOTICE_LONGEST : RR_DEVICE_LINE_MAX)) {
             break;
@@ -114,7 +114,7 @@ static bool begin_line(struct rr_device *device)
 /* The next character of the line under way. */
 static char next_character(struct rr_device *device)
 {
-    struct rr_voice *voice = &device->voice;
+    struct rr_voice *voice = RR_NEAR(&device->voice);
     while (voice->tail == 0) {
         char c = rr_voice_next(voice);
         if (c != '\0') {
@@ -151,21 +151,12 @@ bool rr_device_say(struct rr_device *device)
 /* Saves one limit that is not in the store yet; false where there is none, or the store is not ready. */
 static bool save(struct rr_device *device)
 {
-    for (uint8_t i = 0; i < sizeof device->unsaved; i++) {
-        if (device->unsaved[i] == 0) {
-            continue;
+    for (uint8_t place = 0; place < RR_LIMITS; place++) {
+        if (device->unsaved[place]) {
+            device->unsaved[place] = !rr_store_write(RR_PORT(device), RR_SELF(device), (uint8_t)(1u + place),
+                                                     rr_limits_at(&device->limits, place));
+            return !device->unsaved[place];
         }
-        uint8_t place = (uint8_t)(8u * i);
-        uint8_t bit = 1;
-        while ((device->unsaved[i] & bit) == 0) {
-            bit = (uint8_t)(bit << 1);
-            place++;
-        }
-        if (!rr_store_write(RR_PORT(device), RR_SELF(device), (uint8_t)(1u + place), rr_limits_at(&device->limits, place))) {
-            return false;
-        }
-        device->unsaved[i] = (uint8_t)(device->unsaved[i] & (uint8_t)~bit);
-        return true;
     }
     return false;
 }

@@ -45,3 +45,8 @@ void rr_kept_write(void *kept, uint8_t width, int32_t value)
         break;
     }
 }
+
+RR_APART void rr_kept_count(uint32_t *counter)
+{
+    ++*counter;
+}

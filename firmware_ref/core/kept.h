@@ -21,4 +21,7 @@ int32_t rr_kept_read(const void *kept, uint8_t width);
 /* The value must be in the width's range. */
 void rr_kept_write(void *kept, uint8_t width, int32_t value);
 
+/* Counts one more, over the wrap. */
+void rr_kept_count(uint32_t *counter);
+
 #endif

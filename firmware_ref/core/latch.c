@@ -22,7 +22,7 @@ void rr_latch_arm(struct rr_latch *latch)
     latch->state = RR_STATE_ARMED;
 }
 
-void rr_latch_stop(struct rr_latch *latch, uint32_t tick)
+RR_APART void rr_latch_stop(struct rr_latch *latch, uint32_t tick)
 {
     latch->state = RR_STATE_STOPPING;
     latch->stop_begun = tick;

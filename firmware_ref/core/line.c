@@ -3,6 +3,7 @@
 
 #include "check.h"
 #include "fields.h"
+#include "kept.h"
 #include "names.h"
 #include "seeded.h"
 
@@ -81,8 +82,8 @@ enum rr_line_kind rr_line_take(struct rr_line *line, uint8_t byte)
     uint8_t length = line->length;
     line->length = 0;
     if (length >= RR_HOST_LINE_MAX) { /* with the LF it has more bytes than a line may have */
-        line->overlong++;
-        line->garbled++;
+        rr_kept_count(&line->overlong);
+        rr_kept_count(&line->garbled);
         return RR_LINE_GARBLED;
     }
     if (length > 0 && line->u.text[length - 1] == '\r') {
@@ -93,7 +94,7 @@ enum rr_line_kind rr_line_take(struct rr_line *line, uint8_t byte)
     }
     enum rr_line_kind kind = judged(line, length);
     if (kind == RR_LINE_GARBLED) {
-        line->garbled++;
+        rr_kept_count(&line->garbled);
     }
     return kind;
 }

@@ -16,15 +16,15 @@ enum rr_line_kind {
 };
 
 struct rr_line {
+    uint8_t length; /* bytes held; RR_HOST_LINE_MAX once the line is too long */
+    uint8_t body;   /* length of the body once a line is whole */
+    uint8_t tag;
+    uint32_t garbled;
+    uint32_t overlong;
     union {
         char text[RR_HOST_LINE_MAX]; /* the body, ended by NUL once a line is whole */
         struct rr_request request;   /* in its place, once whoever took the line has read it */
     } u;
-    uint8_t length;              /* bytes held; RR_HOST_LINE_MAX once the line is too long */
-    uint8_t body;                /* length of the body once a line is whole */
-    uint8_t tag;
-    uint32_t garbled;
-    uint32_t overlong;
 };
 
 /* The body of a whole request after its tag and space. */

@@ -24,39 +24,37 @@ void rr_notice_say_trip(struct rr_voice *voice, uint8_t trip)
     say_name(voice, trips, trip);
 }
 
-/* The numbers of `who` before its words, and after its boot number. */
-static const RR_FLASH uint16_t sizes[] = {RR_TICK_US, RR_AXES, RR_SERVOS, RR_MAX_DUTY, RR_QUEUE, RR_TRAIL, RR_KEEP, RR_CAPS};
+/* The numbers of `who`: the first before its words, the others after its boot number. */
+static const RR_FLASH uint16_t sizes[] = {RR_VERSION, RR_TICK_US, RR_AXES, RR_SERVOS, RR_MAX_DUTY, RR_QUEUE, RR_TRAIL, RR_KEEP, RR_CAPS};
 #define SIZES (sizeof sizes / sizeof sizes[0])
 _Static_assert(RR_TICK_US <= 65535 && RR_KEEP <= 65535 && RR_TRAIL <= 65535 && (uint16_t)(RR_CAPS) == (RR_CAPS), "two bytes each");
 
 bool rr_notice_identity_field(struct rr_device *device, uint8_t field)
 {
-    struct rr_voice *voice = &device->voice;
+    struct rr_voice *voice = RR_NEAR(&device->voice);
     switch (field) {
-    case 0:
-        rr_voice_u32(voice, RR_VERSION);
-        break;
     case 1:
         rr_voice_word(voice, RR_PORT(device)->firmware);
-        break;
+        return true;
     case 2:
         rr_voice_word(voice, RR_PORT(device)->board);
-        break;
+        return true;
     case 3:
         rr_voice_word(voice, RR_PORT(device)->serial);
-        break;
+        return true;
     case 4:
         rr_voice_u32(voice, device->boot);
-        break;
+        return true;
     default:
-        field = (uint8_t)(field - 5u);
+        if (field != 0) {
+            field = (uint8_t)(field - 4u);
+        }
         if (field >= SIZES) {
             return false;
         }
         rr_voice_u32(voice, sizes[field]);
-        break;
+        return true;
     }
-    return true;
 }
 
 /* The fields of each notice after its tick, a letter each: see `own_field`. */
@@ -69,7 +67,7 @@ _Static_assert(RR_NOTICE_BOOT == 0 && RR_NOTICE_WHO == 1 && RR_NOTICE_STOP == 2 
 /* The fields after word and tick, counted from 0. */
 static bool own_field(struct rr_device *device, const struct rr_happened *happened, uint8_t field)
 {
-    struct rr_voice *voice = &device->voice;
+    struct rr_voice *voice = RR_NEAR(&device->voice);
     const struct rr_finding *trip = device->last_trip.trip == happened->index >> 4 ? &device->last_trip : &device->trip_before;
     if (happened->kind == RR_NOTICE_WHO) {
         return rr_notice_identity_field(device, field);
@@ -120,7 +118,7 @@ static bool own_field(struct rr_device *device, const struct rr_happened *happen
 
 bool rr_notice_field(struct rr_device *device, uint8_t field)
 {
-    struct rr_voice *voice = &device->voice;
+    struct rr_voice *voice = RR_NEAR(&device->voice);
     const struct rr_happened *happened = &device->notices.happened[device->notices.first];
     switch (field) {
     case 0:
@@ -139,13 +137,17 @@ bool rr_notice_field(struct rr_device *device, uint8_t field)
 
 void rr_notice_push(struct rr_device *device, uint8_t kind, uint8_t index, uint16_t value)
 {
-    struct rr_notices *notices = &device->notices;
+    struct rr_notices *notices = RR_NEAR(&device->notices);
     uint8_t number = notices->number++;
-    bool taking = device->taking;
-    device->taking = false;
+    bool taking = !RR_SPREAD && device->taking;
+    if (taking) {
+        device->taking = false;
+    }
     while (notices->count == RR_NOTICES && rr_device_say(device)) { /* a flood in one tick: told early */
     }
-    device->taking = taking;
+    if (taking) {
+        device->taking = true;
+    }
     if (notices->count == RR_NOTICES) {
         return; /* no room: the host sees by the number that one is missing */
     }

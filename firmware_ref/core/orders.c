@@ -77,7 +77,7 @@ void rr_glide_step(struct rr_glide *glide)
     glide->left--;
 }
 
-RR_SHARED void rr_glide_end(struct rr_glide *glide, RR_I24 value)
+RR_APART void rr_glide_end(struct rr_glide *glide, RR_I24 value)
 {
     glide->value = value;
     glide->left = 0;

@@ -3,11 +3,11 @@
 
 bool rr_packing_begin(struct rr_device *device, uint8_t axis, uint32_t first)
 {
-    const struct rr_trail *trail = &device->trail;
+    const struct rr_trail *trail = RR_NEAR(&device->trail);
     if (trail->phase != RR_TRAIL_FROZEN || first >= trail->held) {
         return false;
     }
-    struct rr_packing *packing = &device->u.packing;
+    struct rr_packing *packing = RR_NEAR(&device->u.packing);
     uint32_t mask = (uint32_t)7 << (3 * axis) | (uint32_t)1 << RR_CHANNEL_SUPPLY_MV | (uint32_t)1 << RR_CHANNEL_STATE;
     rr_block_prepare(&packing->block, mask, 1, packing->channel);
     rr_block_place(&packing->block, packing->bytes, RR_TRAIL_PAYLOAD);
@@ -19,7 +19,7 @@ bool rr_packing_begin(struct rr_device *device, uint8_t axis, uint32_t first)
 
 void rr_packing_step(struct rr_device *device)
 {
-    struct rr_packing *packing = &device->u.packing;
+    struct rr_packing *packing = RR_NEAR(&device->u.packing);
     uint8_t axis = packing->axis;
     if (packing->next < device->trail.held) {
         uint32_t tick;

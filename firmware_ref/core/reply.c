@@ -39,7 +39,7 @@ static const RR_FLASH struct datum counters[] = {
 
 static void note(struct rr_device *device, const RR_FLASH struct datum *datum, uint8_t rows)
 {
-    struct rr_reply *reply = &device->memory.reply;
+    struct rr_reply *reply = RR_NEAR(&device->memory.reply);
     uint32_t *value = reply->value;
     reply->count = rows;
     for (; rows != 0; rows--, datum++) {
@@ -47,24 +47,50 @@ static void note(struct rr_device *device, const RR_FLASH struct datum *datum, u
     }
 }
 
+/* The channels that `state` tells, in its order. */
+#define AN_AXIS(first)  first + RR_CHANNEL_DUTY, first + RR_CHANNEL_COUNTS, first + RR_CHANNEL_CURRENT_MA
+static const RR_FLASH uint8_t channels_of_state[] = {
+    RR_CHANNEL_SUPPLY_MV,
+    RR_CHANNEL_TEMPERATURE_DC,
+    AN_AXIS(0),
+#if RR_AXES > 1
+    AN_AXIS(3),
+#endif
+#if RR_AXES > 2
+    AN_AXIS(6),
+#endif
+#if RR_AXES > 3
+    AN_AXIS(9),
+#endif
+#if RR_SERVOS > 0
+    RR_CHANNEL_PULSE_US,
+#endif
+#if RR_SERVOS > 1
+    RR_CHANNEL_PULSE_US + 1,
+#endif
+#if RR_SERVOS > 2
+    RR_CHANNEL_PULSE_US + 2,
+#endif
+#if RR_SERVOS > 3
+    RR_CHANNEL_PULSE_US + 3,
+#endif
+};
+#undef AN_AXIS
+_Static_assert(sizeof channels_of_state == RR_STATE_VALUES - 3, "state, trip and queue come before them");
+
 static void note_state(struct rr_device *device, uint32_t *value)
 {
     *value++ = device->latch.state;
     *value++ = device->latch.trip;
     *value++ = rr_device_queued(device);
-    *value++ = (uint32_t)rr_sampling_channel(device, RR_CHANNEL_SUPPLY_MV);
-    *value++ = (uint32_t)rr_sampling_channel(device, RR_CHANNEL_TEMPERATURE_DC);
-    for (uint8_t bit = 0; bit < 3 * RR_AXES; bit++) {
-        *value++ = (uint32_t)rr_sampling_channel(device, bit);
-    }
-    for (uint8_t bit = RR_CHANNEL_PULSE_US; bit < RR_CHANNEL_PULSE_US + RR_SERVOS; bit++) {
-        *value++ = (uint32_t)rr_sampling_channel(device, bit);
+    for (uint8_t place = 0; place < sizeof channels_of_state; place++) {
+        *value++ = (uint32_t)rr_sampling_channel(device, channels_of_state[place]);
     }
 }
 
 void rr_reply_note(struct rr_device *device, uint8_t word, uint32_t told)
 {
-    struct rr_reply *reply = &device->memory.reply;
+    struct rr_reply *reply = RR_NEAR(&device->memory.reply);
     reply->count = 1;
     reply->value[0] = told;
     switch (word) {
@@ -76,20 +102,12 @@ void rr_reply_note(struct rr_device *device, uint8_t word, uint32_t told)
         reply->count = RR_STATE_VALUES;
         note_state(device, reply->value);
         break;
-    case RR_WORD_ARM:
-        reply->value[0] = device->lease_ms;
-        break;
-    case RR_WORD_RAMP:
-    case RR_WORD_SWING:
-    case RR_WORD_REST:
-        reply->value[0] = (uint8_t)(RR_QUEUE - rr_device_queued(device));
-        break;
     case RR_WORD_WHY:
         note(device, why, ROWS(why));
         break;
     case RR_WORD_LOG:
         reply->value[1] = told;
-        reply->value[0] = device->logging.period == 0 ? 0 : device->logging.next_tick;
+        reply->value[0] = device->logging.block.period == 0 ? 0 : device->logging.next_tick;
         reply->count = 2;
         break;
     case RR_WORD_COUNTERS:
@@ -129,7 +147,7 @@ static bool common_field(struct rr_voice *voice, uint8_t field, const struct rr_
 
 static bool ok_field(struct rr_device *device, const struct rr_reply *reply, uint8_t number)
 {
-    struct rr_voice *voice = &device->voice;
+    struct rr_voice *voice = RR_NEAR(&device->voice);
     if (reply->word == RR_WORD_WHO) {
         return rr_notice_identity_field(device, number);
     }
@@ -165,7 +183,7 @@ static bool ok_field(struct rr_device *device, const struct rr_reply *reply, uin
 
 bool rr_reply_field(struct rr_device *device, uint8_t field)
 {
-    const struct rr_reply *reply = &device->memory.reply;
+    const struct rr_reply *reply = RR_NEAR(&device->memory.reply);
     if (common_field(&device->voice, field, &reply->verdict)) {
         return true;
     }
@@ -174,7 +192,7 @@ bool rr_reply_field(struct rr_device *device, uint8_t field)
 
 bool rr_reply_aside_field(struct rr_device *device, uint8_t field)
 {
-    const struct rr_aside *aside = &device->aside;
+    const struct rr_aside *aside = RR_NEAR(&device->aside);
     if (common_field(&device->voice, field, &aside->verdict)) {
         return true;
     }

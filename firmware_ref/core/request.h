@@ -9,7 +9,7 @@ struct rr_body {
 #if RR_KEEP_BODY
     char text[RR_BODY_MAX + 1];
 #else
-    uint8_t length;
+    uint16_t length;
     uint16_t crc;
     uint16_t sum;
     uint16_t sum_of_sums;

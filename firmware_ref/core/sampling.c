@@ -1,15 +1,17 @@
 /* Samples on their way to the host: log, again (SPEC LOG-1 to LOG-5, DATA-1, DATA-9). */
 #include "device.h"
+#include "kept.h"
 
 #include <string.h>
 
 static bool is_braking(const struct rr_device *device)
 {
-    bool braking = false;
     for (uint8_t i = 0; i < RR_AXES; i++) {
-        braking = braking || (device->axis[i].brake && device->axis[i].chain.duty == 0);
+        if (device->axis[i].brake && device->axis[i].chain.duty == 0) {
+            return rr_latch_is_live(&device->latch);
+        }
     }
-    return braking && rr_latch_is_live(&device->latch);
+    return false;
 }
 
 uint16_t rr_sampling_state_bits(const struct rr_device *device)
@@ -74,7 +76,7 @@ int32_t rr_sampling_channel(const struct rr_device *device, uint8_t bit)
 /* The values of the channels that are logged, in order of their bits. */
 static void gather(struct rr_device *device)
 {
-    struct rr_logging *logging = &device->logging;
+    struct rr_logging *logging = RR_NEAR(&device->logging);
     const struct rr_channel *channel = logging->channel;
     int32_t *value = logging->sample;
     for (uint8_t left = logging->block.channels; left != 0; left--) {
@@ -91,7 +93,7 @@ static uint8_t after(uint8_t place)
 /* Ends the parcel that is being filled: it is to be said, or dropped whole (KIND-4), and kept either way. */
 static void post(struct rr_device *device, uint8_t length, uint8_t samples)
 {
-    struct rr_logging *logging = &device->logging;
+    struct rr_logging *logging = RR_NEAR(&device->logging);
     struct rr_parcel *parcel = &logging->parcel[logging->filling];
     parcel->length = length;
     parcel->number = logging->number++;
@@ -102,22 +104,25 @@ static void post(struct rr_device *device, uint8_t length, uint8_t samples)
         logging->saying = logging->filling;
         logging->waiting = true;
     }
-    if (logging->waiting && after(logging->filling) == logging->saying) {
+    uint8_t next = after(logging->filling);
+    if (logging->waiting && next == logging->saying) {
         logging->kept_count = 0; /* a line is being said from the next parcel: this one is written over */
         return;
     }
-    logging->filling = after(logging->filling);
-    logging->kept_count = (uint8_t)(logging->kept_count == RR_KEEP ? RR_KEEP : logging->kept_count + 1u);
+    logging->filling = next;
+    if (logging->kept_count != RR_KEEP) {
+        logging->kept_count++;
+    }
 }
 
-static void place_block(struct rr_logging *logging)
+RR_APART static void place_block(struct rr_logging *logging)
 {
     rr_block_place(&logging->block, logging->parcel[logging->filling].u.bytes, RR_PAYLOAD);
 }
 
 static void post_block(struct rr_device *device)
 {
-    struct rr_block *block = &device->logging.block;
+    struct rr_block *block = RR_NEAR(&device->logging.block);
     uint8_t samples = block->samples;
     if (samples == 0) {
         return;
@@ -128,34 +133,30 @@ static void post_block(struct rr_device *device)
 
 static void post_plain(struct rr_device *device, uint32_t tick)
 {
-    struct rr_logging *logging = &device->logging;
+    struct rr_logging *logging = RR_NEAR(&device->logging);
     struct rr_parcel *parcel = &logging->parcel[logging->filling];
     parcel->u.plain.tick = tick;
-    parcel->u.plain.mask = logging->mask;
-    parcel->u.plain.period = logging->period;
+    parcel->u.plain.mask = logging->block.mask;
+    parcel->u.plain.period = logging->block.period;
     memcpy(parcel->u.plain.value, logging->sample, sizeof parcel->u.plain.value);
     post(device, 0, 1);
 }
 
 static void put_packed(struct rr_device *device, uint32_t tick)
 {
-    struct rr_logging *logging = &device->logging;
-    int32_t values[RR_CHANNELS]; /* used up by the coding */
-    memcpy(values, logging->sample, sizeof values);
-    if (!rr_block_add(&logging->block, tick, values)) {
+    struct rr_logging *logging = RR_NEAR(&device->logging);
+    while (!rr_block_add(&logging->block, tick, logging->sample)) { /* a block's first sample always fits */
         post_block(device);
-        memcpy(values, logging->sample, sizeof values);
-        (void)rr_block_add(&logging->block, tick, values);
     }
 }
 
 bool rr_sampling_step(struct rr_device *device)
 {
-    struct rr_logging *logging = &device->logging;
+    struct rr_logging *logging = RR_NEAR(&device->logging);
     if (!logging->taken && !logging->flush_due) {
         return false;
     }
-    uint32_t tick = logging->next_tick - logging->period;
+    uint32_t tick = logging->next_tick - logging->block.period;
     if (!logging->taken) {
         post_block(device);
         logging->flush_due = false;
@@ -172,15 +173,13 @@ bool rr_sampling_step(struct rr_device *device)
 
 uint32_t rr_sampling_change(struct rr_device *device, uint16_t period, uint32_t mask, uint8_t form)
 {
-    struct rr_logging *logging = &device->logging;
+    struct rr_logging *logging = RR_NEAR(&device->logging);
     while (rr_sampling_step(device)) {
     }
     post_block(device);
     logging->goes_first = logging->waiting;
     uint32_t made = logging->made;
     logging->made = 0;
-    logging->period = period;
-    logging->mask = mask;
     logging->form = form;
     logging->next_tick = device->tick + 1u;
     if (period != 0) { /* after `log 0` the lines stay kept: a host asks for those lost at the end */
@@ -193,8 +192,8 @@ uint32_t rr_sampling_change(struct rr_device *device, uint16_t period, uint32_t 
 
 void rr_sampling_tick(struct rr_device *device)
 {
-    struct rr_logging *logging = &device->logging;
-    if (logging->period == 0) {
+    struct rr_logging *logging = RR_NEAR(&device->logging);
+    if (logging->block.period == 0) {
         return;
     }
     if ((uint16_t)device->tick == (uint16_t)logging->next_tick) { /* no period takes more than 16 bits */
@@ -202,9 +201,9 @@ void rr_sampling_tick(struct rr_device *device)
         }
         gather(device);
         logging->taken = true;
-        logging->next_tick += logging->period;
-        logging->made++;
-        logging->made_ever++;
+        logging->next_tick += logging->block.period;
+        rr_kept_count(&logging->made);
+        rr_kept_count(&logging->made_ever);
     }
     const struct rr_block *block = &logging->block;
     logging->flush_due = block->samples != 0 && (uint16_t)(device->tick - block->first_tick) >= RR_FLUSH_TICKS;
@@ -214,9 +213,9 @@ void rr_sampling_tick(struct rr_device *device)
 
 bool rr_sampling_again(struct rr_device *device, uint8_t number)
 {
-    struct rr_logging *logging = &device->logging;
+    struct rr_logging *logging = RR_NEAR(&device->logging);
     uint8_t age = (uint8_t)(logging->number - number); /* 1 = the last */
-    if (age < 1 || age > logging->kept_count) {
+    if (RR_KEEP == 0 || age < 1 || age > logging->kept_count) {
         return false;
     }
     uint8_t place = (uint8_t)(logging->filling + RR_PARCELS - age);
@@ -242,7 +241,7 @@ static bool plain_value(struct rr_device *device, const struct rr_parcel *parcel
 
 bool rr_sampling_field(struct rr_device *device, const struct rr_parcel *parcel, uint8_t field)
 {
-    struct rr_voice *voice = &device->voice;
+    struct rr_voice *voice = RR_NEAR(&device->voice);
     if (field == 0) {
         rr_voice_hex2(voice, 'D', parcel->number);
         return true;

@@ -3,7 +3,7 @@
 
 #include "seeded.h"
 
-RR_SHARED rr_ns rr_servo_held_ns(const struct rr_servo_limits *limits, rr_ns pulse_ns)
+RR_APART rr_ns rr_servo_held_ns(const struct rr_servo_limits *limits, rr_ns pulse_ns)
 {
     if (pulse_ns < limits->least_ns) {
         return limits->least_ns;

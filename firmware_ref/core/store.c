@@ -30,8 +30,8 @@ static uint16_t place_of(uint8_t slot, uint8_t copy)
 
 static bool is_whole(const uint8_t *record, uint8_t slot)
 {
-    return record[GENERATION] != ERASED &&
-           check_of(record, slot) == (uint16_t)(record[CHECK] << 8 | record[CHECK + 1u]);
+    uint16_t check = check_of(record, slot);
+    return record[GENERATION] != ERASED && record[CHECK] == (uint8_t)(check >> 8) && record[CHECK + 1u] == (uint8_t)check;
 }
 
 enum newer { FIRST, SECOND, NEITHER, BUSY };

@@ -48,8 +48,6 @@ const struct rr_record *rr_trail_get(const struct rr_trail *trail, uint16_t inde
 int32_t rr_trail_counts(const struct rr_trail *trail, const struct rr_record *record, uint8_t axis)
 {
     uint32_t last = (uint32_t)trail->last_counts[axis];
-    RR_TRAIL_COUNTS back = (RR_TRAIL_COUNTS)((RR_TRAIL_COUNTS)last - record->counts[axis]);
-    bool turned_up = back <= (RR_TRAIL_COUNTS)((RR_TRAIL_COUNTS)~(RR_TRAIL_COUNTS)0 >> 1);
-    uint32_t ahead = (uint32_t)(RR_TRAIL_COUNTS)(record->counts[axis] - (RR_TRAIL_COUNTS)last);
-    return (int32_t)(turned_up ? last - back : last + ahead);
+    RR_TRAIL_TURNED turned = (RR_TRAIL_TURNED)(RR_TRAIL_COUNTS)(record->counts[axis] - (RR_TRAIL_COUNTS)last);
+    return (int32_t)(last + (uint32_t)(int32_t)turned);
 }

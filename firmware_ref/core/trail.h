@@ -24,13 +24,13 @@ typedef uint16_t rr_trail_index;
 enum rr_trail_phase { RR_TRAIL_RUNNING, RR_TRAIL_ENDING, RR_TRAIL_FROZEN };
 
 struct rr_trail {
-    struct rr_record record[RR_TRAIL];
     rr_trail_index next;          /* where the next record goes */
     rr_trail_index held;          /* records in the ring */
     rr_trail_index to_go;         /* records still to take before it freezes */
     uint32_t last_tick;           /* of the newest record */
     int32_t last_counts[RR_AXES]; /* of the newest record, whole */
     uint8_t phase;
+    struct rr_record record[RR_TRAIL];
 };
 
 /* Forgets all and runs: at `arm`. */

@@ -35,17 +35,10 @@ static char sextet_character(uint8_t sextet)
 /* Character `place` of a payload: its six bits lie in one byte or in two. */
 static char payload_character(const uint8_t *bits, uint8_t place)
 {
-    const uint8_t *four = bits + (place >> 2) * 3u; /* four characters to three bytes */
-    switch (place & 3u) {
-    case 0:
-        return sextet_character(four[0] >> 2);
-    case 1:
-        return sextet_character((uint8_t)((four[0] & 0x03u) << 4 | four[1] >> 4));
-    case 2:
-        return sextet_character((uint8_t)((four[1] & 0x0Fu) << 2 | four[2] >> 6));
-    default:
-        return sextet_character(four[2] & 0x3Fu);
-    }
+    uint16_t first = (uint16_t)(6u * place);
+    const uint8_t *byte = bits + (first >> 3);
+    uint16_t two = (uint16_t)((uint16_t)(byte[0] << 8) | byte[1]);
+    return sextet_character((uint8_t)(two >> (10u - (first & 7u))) & 0x3Fu);
 }
 
 /* The number's digit at a power of ten, which is taken off it. */
@@ -145,14 +138,14 @@ char rr_voice_tail(struct rr_voice *voice)
     return digit;
 }
 
-RR_SHARED static void begin_field(struct rr_voice *voice, uint8_t form, char lead)
+RR_APART static void begin_field(struct rr_voice *voice, uint8_t form, char lead)
 {
     voice->form = form;
     voice->lead = (uint8_t)lead;
     voice->place = 0;
 }
 
-void rr_voice_hex2(struct rr_voice *voice, char lead, uint8_t value)
+RR_APART void rr_voice_hex2(struct rr_voice *voice, char lead, uint8_t value)
 {
     begin_field(voice, HEX2, lead);
     voice->number = value;
@@ -179,7 +172,7 @@ void rr_voice_i32(struct rr_voice *voice, int32_t value)
     voice->minus = value < 0;
 }
 
-void rr_voice_bits(struct rr_voice *voice, const uint8_t *bits, uint8_t length)
+RR_APART void rr_voice_bits(struct rr_voice *voice, const uint8_t *bits, uint8_t length)
 {
     begin_field(voice, BITS, ' ');
     voice->bits = bits;

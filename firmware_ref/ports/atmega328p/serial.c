@@ -6,7 +6,6 @@
 
 #include <avr/interrupt.h>
 #include <avr/io.h>
-#include <util/atomic.h>
 
 /* Each ring holds one byte less than its size. Main reads every 0.4 ms at the latest, which is 20 bytes at 500 kbaud. */
 #define RECEIVE_RING 23u
@@ -20,7 +19,9 @@ static volatile uint8_t sending[SEND_RING];
 static volatile uint8_t sending_in;
 static volatile uint8_t sending_out;
 static volatile bool broke;
-static volatile uint32_t lost;
+static volatile uint8_t lost;
+static uint8_t lost_before; /* of them */
+static uint32_t lost_ever;  /* those before */
 
 /* A byte with a framing error is kept as one that no line may have, so that its line is refused; a zero is a BREAK, and no
  * byte at all. */
@@ -100,6 +101,9 @@ void serial_write(uint8_t byte)
 
 bool serial_took_break(void)
 {
+    uint8_t now = lost; /* looked at every tick, in which no 256 bytes come */
+    lost_ever += (uint8_t)(now - lost_before);
+    lost_before = now;
     bool took = broke;
     if (took) {
         broke = false;
@@ -109,10 +113,5 @@ bool serial_took_break(void)
 
 uint32_t serial_overruns(void)
 {
-    uint32_t now;
-    ATOMIC_BLOCK(ATOMIC_RESTORESTATE)
-    {
-        now = lost;
-    }
-    return now;
+    return lost_ever;
 }

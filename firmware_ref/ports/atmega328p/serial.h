@@ -19,7 +19,7 @@ uint8_t serial_room(void);
 /* Queues a byte; there must be room. */
 void serial_write(uint8_t byte);
 
-/* True once after a BREAK. */
+/* True once after a BREAK. To be called every tick: it counts what was lost, too. */
 bool serial_took_break(void);
 
 /* Bytes lost, since start. */

@@ -27,6 +27,12 @@
 
 #define RR_FLASH __flash
 #define RR_ONLY_PORT board_port /* in main.c */
+#define RR_NEAR(pointer) /* the compiler is told that it may be any address */ \
+    ({                                                                         \
+        __typeof__(pointer) near_ = (pointer);                                 \
+        __asm__("" : "+r"(near_));                                             \
+        near_;                                                                 \
+    })
 #define RR_U24   __uint24
 #define RR_I24   __int24
 #define RR_KEEP_BODY 0
@@ -34,6 +40,7 @@
 /* 10-bit converters: currents to 13.5 A, less an offset of at most 5 A, supplies to 21.5 V (board.h), and a shaft that turns less than 32768 counts in
  * the 32 ms of the trail. */
 #define RR_TRAIL_COUNTS  uint16_t
+#define RR_TRAIL_TURNED  int16_t
 #define RR_CURRENT       int16_t
 #define RR_SUPPLY        uint16_t
 #define RR_TRAIL_CURRENT int16_t
