@@ -114,9 +114,7 @@ class _UsedNames(Names):
 class _Files:
     """Reads one sequence with all that it includes; a thing of one use."""
 
-    def __init__(
-        self, path: str | Path, settings: Mapping[str, str], copies: Mapping[str, Path] | None = None
-    ) -> None:
+    def __init__(self, path: str | Path, settings: Mapping[str, str], copies: Mapping[str, Path] | None = None) -> None:
         self.path = path
         self.copies = copies
         self.settings = settings
