@@ -5,8 +5,9 @@
 
 /*@ requires \valid(finding);
     assigns *finding;
-    ensures finding->trip == (\old(finding->trip) == RR_TRIP_NONE || trip < \old(finding->trip) ? trip
-                                                                                              : \old(finding->trip)); */
+    ensures finding->trip == rr_noted(\old(finding->trip), trip);
+    ensures \old(finding->trip) == RR_TRIP_NONE || trip < \old(finding->trip) ==>
+            finding->value == value && finding->bound == bound; */
 RR_APART void rr_finding_note(struct rr_finding *finding, uint8_t trip, int32_t value, int32_t bound)
 {
     if (finding->trip == RR_TRIP_NONE || trip < finding->trip) {
@@ -17,6 +18,8 @@ RR_APART void rr_finding_note(struct rr_finding *finding, uint8_t trip, int32_t 
 }
 
 /* Of counts (SPEC section 2): can be negated. */
+/*@ assigns \nothing;
+    ensures \result == rr_way(a, b) && \result > INT32_MIN; */
 RR_APART static int32_t difference(int32_t a, int32_t b)
 {
     int32_t away = (int32_t)((uint32_t)a - (uint32_t)b);
@@ -24,7 +27,7 @@ RR_APART static int32_t difference(int32_t a, int32_t b)
 }
 
 /*@ assigns \nothing;
-    ensures \result == (value < 0 ? -value : value); */
+    ensures \result == rr_amount(value); */
 RR_APART static uint32_t size_of(int32_t value)
 {
     return value < 0 ? (uint32_t)-(value + 1) + 1u : (uint32_t)value; /* the least has no negative */
