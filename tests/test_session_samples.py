@@ -2,14 +2,18 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 import numpy as np
 import pytest
 
+from ramprig.errors import LinkLost
 from ramprig.mock import MockPort
 from ramprig.port.base import Port
 from ramprig.port.faulty import FaultyPort
 from ramprig.session.events import GapFilled, GapFound, LinkTrouble, OrderDone, Tripped
-from ramprig.session.gaps import Accounting
+from ramprig.session.gaps import Accounting, GapReason
+from ramprig_link.host import RetryPolicy
 from ramprig_link.words import Form
 from session_rig import MASK, Rig
 
@@ -183,3 +187,34 @@ def test_a_wrapper_passes_for_the_port() -> None:
     assert rig.session.armed
     assert rig.session.health.round_trip_worst_s <= 0.04
     check_accounting(rig, rig.session.stop_log(), first_tick)
+
+
+@pytest.mark.parametrize("ask", [lambda rig: rig.drive(0), lambda rig: rig.session.stop_log()], ids=["ramp", "log"])
+def test_samples_behind_a_hole_are_delivered_when_a_request_finds_the_link_lost(
+    monkeypatch: pytest.MonkeyPatch, ask: Callable[[Rig], object]
+) -> None:
+    rig = Rig()
+    rig.session.log(2, MASK)
+    rig.pump(0.5)
+    read, spoilt = rig.mock.read_until, [0]
+
+    def spoil(until_s: float) -> bytes:
+        data = read(until_s)
+        if b"\nD" in data and not spoilt[0] and rig.now > begin_s + RetryPolicy().first_s * 30.5:  # of 31
+            spoilt[0] = 1
+            data = data.replace(b"\nD", b"\nX", 1)
+        return data
+
+    rig.device.faults.set("deaf")
+    monkeypatch.setattr(rig.session._core.pump, "_read_until", spoil)
+    begin_s = rig.now
+    with pytest.raises(LinkLost):
+        ask(rig)
+    assert spoilt[0]
+    assert not rig.session.valid
+    assert not rig.session.logging
+    accounting = rig.session.accounting
+    assert accounting is not None
+    assert [gap.reason for gap in accounting.gaps] == [GapReason.LINK_LOST]
+    assert accounting.received == len(rig.ticks())
+    assert rig.ticks()[-1] > accounting.gaps[0].first_tick

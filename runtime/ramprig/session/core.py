@@ -154,14 +154,30 @@ class Core:
 
     def request(self, word: str, *args: object) -> host.Answered:
         """The `ok` answer to a request; Refused for a `no`; otherwise as `Pump.request`."""
-        answered = self.pump.request(word, *args)
+        try:
+            answered = self.pump.request(word, *args)
+        except LinkLost:
+            self._lost()
+            raise
         if not answered.answer.ok:
             raise refusal(word, answered.answer.reason)
         return answered
 
     def work(self, until_s: float) -> None:
         """Pump until this time."""
-        self.pump.until(until_s)
+        try:
+            self.pump.until(until_s)
+        except LinkLost:
+            self._lost()
+            raise
+
+    def turn(self, until_s: float) -> None:
+        """One round of the pump, until this time at the longest."""
+        try:
+            self.pump.turn(until_s)
+        except LinkLost:
+            self._lost()
+            raise
 
     def read_state(self) -> Reading:
         """Ask for `state`."""
@@ -499,8 +515,9 @@ class Core:
         self.fitter = ClockFitter(tick_s)
         self.returns_s.clear()
 
-    def lost(self, error: LinkLost) -> None:
+    def _lost(self) -> None:
         """The link is lost: account for the samples, once."""
+        self.sampling.resume()  # what was held back for an answer that will not come
         if self.valid or not self.sampling.settled:
             self.invalidate()
 

@@ -16,7 +16,7 @@ from typing import TYPE_CHECKING, Self
 
 import numpy as np
 
-from ramprig.errors import LinkError, LinkLost, RamprigError, Refused, UsageError
+from ramprig.errors import LinkError, RamprigError, Refused, UsageError
 from ramprig.port.base import Port
 from ramprig.port.clock import Clock
 from ramprig.session.blocks import Block, Layout, block_from
@@ -242,11 +242,7 @@ class Session:
 
         Raises LinkLost, WrongDevice where another board answers, StoppedByUser after a panic, and what callbacks raise.
         """
-        try:
-            self._core.work(until_s)
-        except LinkLost as error:
-            self._core.lost(error)
-            raise
+        self._core.work(until_s)
 
     # ---- requests ------------------------------------------------------------------------------------------------
 
@@ -255,11 +251,7 @@ class Session:
 
         Raises Refused for a `no`, UsageError for arguments that cannot be sent, otherwise as `pump`.
         """
-        try:
-            return self._core.request(word, *args).answer.fields
-        except LinkLost as error:
-            self._core.lost(error)
-            raise
+        return self._core.request(word, *args).answer.fields
 
     def arm(self, lease_ms: int | None = None) -> None:
         """Enable the outputs under a lease, None: the longest the limits allow. Raises Refused, LinkError if not valid.
@@ -348,7 +340,7 @@ class Session:
         core.sampling.ended_with(made)
         bound_s = core.clock.now() + TAIL_WAIT_S
         while self.logging and core.clock.now() < bound_s:
-            core.pump.turn(bound_s)
+            core.turn(bound_s)
         core.sampling.abandon(GapReason.NOT_ARRIVED)
         return self.accounting
 

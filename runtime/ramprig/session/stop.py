@@ -137,7 +137,7 @@ class StopRun:
             self._sendings += 1
             until_s = min(core.clock.now() + REPEAT_S, bound_s)
             while core.marks.acknowledged_s is None and core.clock.now() < until_s:
-                core.pump.turn(until_s)
+                core.turn(until_s)
 
     def _confirm(self) -> None:
         """Ask for the state until outputs are off and current and speed have fallen, or the time for it is over."""
@@ -177,7 +177,7 @@ class StopRun:
         core.pump.post("state", then=box.append)
         bound_s = core.clock.now() + STATE_S
         while not box and core.clock.now() < bound_s:
-            core.pump.turn(bound_s)
+            core.turn(bound_s)
         if not box:
             core.pump.hush()
             self._failure = "the device does not answer"
