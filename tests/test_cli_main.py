@@ -7,6 +7,7 @@ import io
 import re
 import subprocess
 import sys
+import threading
 import types
 from pathlib import Path
 
@@ -17,7 +18,7 @@ from ramprig.cli import main
 from ramprig.cli import main as main_function
 from ramprig.cli.files import values_of
 from ramprig.cli.main import COMMANDS, EXIT_BUG, parser_for
-from ramprig.cli.progress import LINE_EVERY_S, REWRITE_EVERY_S, Progress
+from ramprig.cli.progress import LINE_EVERY_S, PIECES_MAX, REWRITE_EVERY_S, Progress
 
 HEAVY = ("numpy", "yaml", "serial", "prompt_toolkit", "ramprig.session", "ramprig.mock", "ramprig.bench")
 
@@ -139,6 +140,10 @@ def test_a_malformed_named_value_is_refused(texts: list[str]) -> None:
         values_of(texts)
 
 
+PATIENCE_S = 60.0
+"""So that a busy machine does not put the pieces out of step with the test."""
+
+
 class Hand:
     """A clock that is set by hand."""
 
@@ -151,7 +156,7 @@ class Hand:
 
 def test_a_terminal_has_one_line_that_is_rewritten_and_taken_away() -> None:
     clock, stream = Hand(), io.StringIO()
-    progress = Progress(stream, is_terminal=True, width=20, now=clock)
+    progress = Progress(stream, is_terminal=True, width=20, now=clock, patience_s=PATIENCE_S)
     progress.show(lambda: "10 %, opening the whole vent")
     progress.show(lambda: "never made: too soon")
     clock.now_s = REWRITE_EVERY_S
@@ -162,7 +167,7 @@ def test_a_terminal_has_one_line_that_is_rewritten_and_taken_away() -> None:
 
 def test_elsewhere_a_line_comes_now_and_then() -> None:
     clock, stream = Hand(), io.StringIO()
-    progress = Progress(stream, is_terminal=False, now=clock)
+    progress = Progress(stream, is_terminal=False, now=clock, patience_s=PATIENCE_S)
     for second in range(12):
         clock.now_s = float(second)
         progress.show(lambda: f"{second} s")  # noqa: B023  (called at once)
@@ -177,10 +182,38 @@ def test_a_terminal_that_is_gone_ends_the_telling_and_nothing_else() -> None:
             raise OSError(5, "Input/output error")
 
     clock = Hand()
-    progress = Progress(Gone(), is_terminal=True, now=clock)
+    progress = Progress(Gone(), is_terminal=True, now=clock, patience_s=PATIENCE_S)
     progress.show(lambda: "10 %")
     clock.now_s = 1.0
     progress.show(lambda: pytest.fail("it is told to nobody"))
     progress.line("more")
     progress.close()
     assert clock.now_s == 1.0
+
+
+def test_a_terminal_that_takes_no_more_holds_up_nothing_and_gets_the_lines_when_it_takes_them_again() -> None:
+    takes, stuck = threading.Event(), threading.Event()
+
+    class Held(io.StringIO):
+        def write(self, text: str) -> int:
+            stuck.set()
+            assert takes.wait(60.0)
+            return super().write(text)
+
+    clock, stream = Hand(), Held()
+    progress = Progress(stream, is_terminal=True, width=40, now=clock, patience_s=0.0)
+    progress.show(lambda: "10 %")
+    assert stuck.wait(60.0)
+    for second in range(1, PIECES_MAX + 4):
+        clock.now_s = float(second)
+        progress.show(lambda: pytest.fail("it cannot be shown"))
+        progress.line(f"line {second}")
+    assert stream.getvalue() == ""
+    takes.set()
+    progress.close()
+    told = stream.getvalue().replace("\r    \r", "\r").split("\n")
+    assert told[0] == "\r10 %\rline 1"
+    assert told[1:-1] == [
+        *(f"line {n}" for n in range(2, PIECES_MAX + 1)),
+        "(3 lines were left out: the terminal took no more)",
+    ]

@@ -169,7 +169,8 @@ def carry_out_wish(wish: RunWish, way: Way) -> int:
     except RamprigError:
         raise
     except Exception:  # a bug: what became of the motors comes first, the bug itself is told by `main`
-        for session in sessions:
+        progress.close()
+        for session in sessions[-1:]:  # those of earlier parts of the run are over and told of
             tell_stop(session)
         raise
     finally:
