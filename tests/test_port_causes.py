@@ -238,3 +238,58 @@ def test_urgent_from_a_signal_handler_throws_away_the_rest_of_the_write_it_inter
     assert accepted == [True]
     assert bytes(stuck.sent) == b"1234\nstop\n"
     stuck.close()
+
+
+@pytest.mark.parametrize("ending", [3, SerialTimeoutException("Write timeout")], ids=["count", "timeout"])
+def test_a_polled_write_that_an_urgent_overtakes_is_no_lost_link(ending: int | Exception) -> None:
+    ports: list[WirePort] = []
+
+    class Overtaken(FakeSerial):
+        """As on Windows: a purge ends the write that waits, which then tells how much it had sent."""
+
+        def write(self, data: bytes, /) -> int | None:
+            if not data.startswith(b"01 beat"):
+                return super().write(data)
+            assert ports[0].urgent(b"\nstop\n")
+            if isinstance(ending, Exception):
+                raise ending
+            return ending
+
+    serial = Overtaken()
+    ports.append(port_over(serial))
+    ports[0].write(b"01 beat 1234\n")
+    assert bytes(serial.sent) == b"\nstop\n"
+
+
+@pytest.mark.parametrize("ending", [3, SerialTimeoutException("Write timeout")], ids=["count", "timeout"])
+def test_a_polled_write_that_is_cut_short_by_itself_is_a_lost_link(ending: int | Exception) -> None:
+    class Short(FakeSerial):
+        def write(self, data: bytes, /) -> int | None:
+            if isinstance(ending, Exception):
+                raise ending
+            return ending
+
+    with pytest.raises(LinkLost, match="COM7"):
+        port_over(Short()).write(b"01 beat 1234\n")
+
+
+def test_a_stop_is_sent_though_what_is_queued_cannot_be_thrown_away() -> None:
+    class Kept(FakeSerial):
+        def reset_output_buffer(self) -> None:
+            raise OSError(errno.ENOTTY, "Inappropriate ioctl for device")
+
+    serial = Kept()
+    assert port_over(serial).urgent(b"\nstop\n")
+    assert bytes(serial.sent) == b"\nstop\n"
+
+
+def test_a_stop_goes_down_a_wire_whose_queue_cannot_be_thrown_away() -> None:
+    stuck = StuckWire(room=100)
+
+    def purge() -> None:
+        raise OSError(errno.EINVAL, "Invalid argument")
+
+    stuck.wire._purge = purge
+    assert stuck.wire.urgent(b"\nstop\n", 0.05)
+    assert bytes(stuck.sent) == b"\nstop\n"
+    stuck.close()

@@ -4,13 +4,14 @@ descriptor to wait on.
 
 from __future__ import annotations
 
+import contextlib
 import threading
 import time
 from collections.abc import Callable
 from typing import Protocol
 
 from ramprig.port.base import READ_CHUNK_BYTES
-from ramprig.port.causes import FarEndStuck
+from ramprig.port.causes import FOREIGN, FarEndStuck
 
 POLL_SLICE_S = 0.01
 """pyserial's timeout, set once: with `rfc2217://` each change of it is negotiated with the server again."""
@@ -79,6 +80,7 @@ class PolledWire:
         self._now = now
         self._sleep = sleep
         self._urgent_thread: threading.Thread | None = None
+        self._overtakings = 0
 
     def read(self, timeout_s: float) -> bytes:
         """What waits, else what comes within `timeout_s`."""
@@ -95,9 +97,15 @@ class PolledWire:
                 return first + self._serial.read(waiting) if waiting else first
 
     def write(self, data: bytes, timeout_s: float) -> None:
-        """Send `data`; the timeout is the one the object was opened with."""
-        taken = self._serial.write(data)
-        if taken is not None and taken != len(data):
+        """Send `data`, or the part before an `urgent` overtook it; the timeout is the one of the object's opening."""
+        overtakings = self._overtakings
+        try:
+            taken = self._serial.write(data)
+        except OSError:
+            if self._overtakings == overtakings:
+                raise
+            return  # the purge ended it; where the port is gone as well, the next read says so
+        if taken is not None and taken != len(data) and self._overtakings == overtakings:
             raise FarEndStuck(f"{len(data) - taken} of {len(data)} bytes unsent after {timeout_s} s")
 
     def urgent(self, data: bytes, bound_s: float) -> bool:
@@ -108,8 +116,7 @@ class PolledWire:
 
         def attempt() -> None:
             try:
-                if self._purges:
-                    self._serial.reset_output_buffer()
+                self._purge()
                 if self._serial.write(data) in (None, len(data)):
                     accepted.set()
             except Exception:  # whatever the port raises means the same here: not accepted
@@ -118,6 +125,12 @@ class PolledWire:
         self._urgent_thread = threading.Thread(target=attempt, name="ramprig-urgent", daemon=True)
         self._urgent_thread.start()
         return accepted.wait(bound_s)
+
+    def _purge(self) -> None:
+        if self._purges:
+            self._overtakings += 1
+            with contextlib.suppress(*FOREIGN):  # what is queued then goes out first; the stop is sent all the same
+                self._serial.reset_output_buffer()
 
     def send_break(self) -> bool:
         """Hold BREAK by the object's own switch."""

@@ -7,6 +7,7 @@ that meets a full buffer may spin or hang there, and each change of its timeout 
 
 from __future__ import annotations
 
+import contextlib
 import math
 import os
 import select
@@ -17,7 +18,7 @@ from collections.abc import Callable
 from typing import Protocol
 
 from ramprig.port.base import READ_CHUNK_BYTES
-from ramprig.port.causes import FarEndStuck, TwoReaders
+from ramprig.port.causes import FOREIGN, FarEndStuck, TwoReaders
 
 PIECE_BYTES = 512
 """Most that a `write` hands to the system at a time, so that `urgent` finds room after its purge."""
@@ -161,7 +162,8 @@ class DescriptorWire:
         if self._closing:
             return False
         self._overtakings += 1
-        self._purge()
+        with contextlib.suppress(*FOREIGN):  # what is queued then goes out first; the stop is sent all the same
+            self._purge()
         self._overtakings += 1  # for a write that began between the two
         waiter = Waiter(self._descriptor, writing=True)  # one of its own: a poll object serves one thread at a time
         rest = memoryview(data)
