@@ -433,6 +433,49 @@ def test_a_stop_asked_for_while_a_trip_is_looked_into_leaves_the_trip_told(
     assert run.of(Block)  # the trail
 
 
+@pytest.mark.parametrize(
+    "step", ["move: {servo: latch, to: 20 deg, in: 500 ms}", "ramp: {motor: vent, to: 40 %, in: 1 s}"]
+)
+def test_outputs_that_go_off_by_a_stop_of_somebody_else_end_the_run(tmp_path: Path, step: str) -> None:
+    typed: list[float] = []
+
+    def type_stop(now: Progress, device: MockDevice, session: Session, port: MockPort) -> None:
+        if now.elapsed_s > 1.0 and not typed:
+            typed.append(now.elapsed_s)
+            port.urgent(b"\nstop\n")
+
+    run = rehearse(tmp_path, f"- {step}\n- hold: 4 s", meddle=type_stop)
+    assert run.outcome.verdict is Verdict.STOPPED
+    assert run.outcome.sentence == "the board switched its outputs off, and not for this run (bare stop)"
+    assert run.outcome.stop_confirmed
+    assert run.outcome.elapsed_s < 2.0
+
+
+def test_a_trip_whose_notice_was_lost_is_still_the_reason_of_the_end(tmp_path: Path) -> None:
+    spoilt: list[bytes] = []
+
+    def jam(now: Progress, device: MockDevice, session: Session, port: MockPort) -> None:
+        pump = session._core.pump
+        if now.elapsed_s < 1.0 or device.faults.get("jammed_shaft"):
+            return
+        device.faults.set("jammed_shaft", True)
+        read = pump._read_until
+
+        def spoil(until_s: float) -> bytes:
+            data = read(until_s)
+            if b" trip " in data and not spoilt:
+                spoilt.append(data)
+                data = data.replace(b" trip ", b" tr1p ", 1)
+            return data
+
+        pump._read_until = spoil
+
+    run = rehearse(tmp_path, "- ramp: {motor: vent, to: 40 %, in: 400 ms}\n- hold: 5 s", meddle=jam)
+    assert spoilt
+    assert run.outcome.verdict is Verdict.TRIPPED
+    assert run.outcome.sentence.startswith("stall on vent: 40 % and no motion for 300 ms, ")
+
+
 def test_a_host_that_is_late_makes_the_device_stop_itself(tmp_path: Path) -> None:
     def nap(now: Progress, device: MockDevice, session: Session, port: MockPort) -> None:
         if 1.0 < now.elapsed_s < 2.0:

@@ -25,8 +25,6 @@ from .tripsay import explain_trip
 
 TAIL_S = 0.3
 """Logging goes on for so long after the outputs are off, so that the log shows the end."""
-TRIP_SEEN_S = 0.5
-"""After a refusal a trip that caused it becomes known within this time."""
 OFF_SEEN_S = 6.0
 """After a trip the outputs are off within this time: the longest stop that a device may take, and some."""
 TRAIL_WAIT_S = 1.0
@@ -182,7 +180,7 @@ class _Run:
             trip = explain_trip(session.trip, self.rig)
             raise Ended(Verdict.TRIPPED, f"the device is still tripped from before ({trip}): clear it first", None)
         self.executive.check_wear()  # of a run that is gone on with; then nothing is to move any more
-        self.executive.trip = None  # whatever was told of before has been cleared
+        self.executive.trip = self.executive.stop = None  # whatever was told of before is over
         session.log(plan.period_ticks, plan.mask)
         session.arm(self.rig.bench.link.lease_ms)
 
@@ -200,10 +198,8 @@ class _Run:
     def _refused(self, refused: Refused) -> _End:
         """A refusal is often the first sign of a trip, whose notice is on its way."""
         executive = self.executive
-        bound_s = self.clock.now() + TRIP_SEEN_S
         try:
-            while executive.trip is None and self.clock.now() < bound_s:
-                self.session.pump(self.clock.now() + POLL_S)
+            executive.wait_for_trip()
         except StoppedByUser:
             return _End(Verdict.STOPPED, "stopped by the user", executive.place)
         except LinkError as error:

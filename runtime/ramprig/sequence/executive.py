@@ -17,7 +17,7 @@ from itertools import count
 from ramprig.errors import Place
 from ramprig.port.clock import Clock, VirtualClock
 from ramprig.session.blocks import Block
-from ramprig.session.events import Event, OrderDone, Restarted, Tripped
+from ramprig.session.events import Event, OrderDone, Restarted, StopBegun, Tripped
 from ramprig.session.session import Session
 from ramprig.session.watch import TICK_SLACK_S
 
@@ -42,6 +42,8 @@ IDLE_S = 0.25
 QUIET_POLLS_MAX = 20
 """Most polls in a row without coming round, while the next turn of a block is not due."""
 RESTING = "rest until the next cycle"
+TRIP_SEEN_S = 0.5
+"""After a refusal, or outputs that are off, a trip that caused it becomes known within this time."""
 SAMPLES_LATE_S = 3.0
 """Samples that have not come so long after their tick are judged as missing."""
 
@@ -116,6 +118,7 @@ class Executive:
     now: int = 0
     trip: Tripped | None = None
     restarted: Restarted | None = None
+    stop: StopBegun | None = None
     _tick_s: float = field(init=False)
     _ring: Ring = field(init=False)
     _bearings: Bearings = field(default_factory=Bearings)
@@ -153,6 +156,8 @@ class Executive:
                 self.trip = event
             case Restarted():
                 self.restarted = event
+            case StopBegun():
+                self.stop = event
             case OrderDone(tag=tag):
                 self._dispatch.done(tag)
 
@@ -202,13 +207,30 @@ class Executive:
 
     def _check(self) -> None:
         """End where the device is no longer with us."""
+        self._check_events()
+        if not self.session.armed:
+            self.wait_for_trip()
+            self._check_events()
+            by = "" if self.stop is None else f" ({self.stop.source} stop)"
+            raise Ended(Verdict.STOPPED, f"the board switched its outputs off, and not for this run{by}", self.place)
+        if self.until_s is not None and self.clock.now() >= self.until_s:
+            raise Ended(Verdict.STOPPED, self.until_text, self.place)
+
+    def _check_events(self) -> None:
         if self.restarted is not None:
             cause = self.restarted.cause or "it did not tell why"
             raise Ended(Verdict.TRIPPED, f"the device restarted ({cause})", self.place)
         if self.trip is not None:
             raise Ended(Verdict.TRIPPED, "", self.place)  # whoever brings the run down asks the device why
-        if self.until_s is not None and self.clock.now() >= self.until_s:
-            raise Ended(Verdict.STOPPED, self.until_text, self.place)
+
+    def wait_for_trip(self) -> None:
+        """Pump until a trip is told of, for TRIP_SEEN_S at the longest: its notice may be late, or lost and asked for.
+
+        Raises what the session raises, first of all StoppedByUser.
+        """
+        bound_s = self.clock.now() + TRIP_SEEN_S
+        while self.trip is None and self.restarted is None and self.clock.now() < bound_s:
+            self._pump_for(POLL_S)
 
     @property
     def place(self) -> Place | None:
