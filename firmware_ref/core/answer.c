@@ -204,7 +204,8 @@ static uint8_t do_limit(struct rr_device *device, uint8_t place, const struct rr
     *told = (uint32_t)value;
     rr_limits_set(&device->limits, place, value);
     if ((RR_CAPS & RR_CAP_KEEPS_LIMITS) != 0) {
-        device->unsaved[place] = true;
+        uint8_t *byte = &device->unsaved[place >> 3];
+        *byte = (uint8_t)(*byte | (uint8_t)(1u << (place & 7u)));
     }
     return WORD_OK;
 }

@@ -90,8 +90,7 @@
 /* What a record of the trail holds. A board may have narrower ones where its sensors and its encoder's speed fit them:
  * counts need only span what a shaft can turn within the trail. */
 #ifndef RR_TRAIL_COUNTS
-#define RR_TRAIL_COUNTS uint32_t /* unsigned: the low bits of the counts */
-#define RR_TRAIL_TURNED int32_t  /* signed, as wide: the way between two of them */
+#define RR_TRAIL_COUNTS uint32_t /* unsigned, of 16 or 32 bits: the low bits of the counts */
 #define RR_TRAIL_CURRENT int32_t
 #define RR_TRAIL_SUPPLY int32_t
 #endif

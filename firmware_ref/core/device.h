@@ -186,7 +186,9 @@ struct rr_device {
         struct rr_packing packing;
     } u;
     struct rr_trail trail;
-    bool unsaved[RR_LIMITS]; /* by place: a limit's value is not in the store yet */
+    /* Bit by place: a limit's value is not in the store yet. In few bytes, since they are looked through in every idle time:
+     * longer, and bytes at 500 kbaud would be lost. */
+    uint8_t unsaved[(RR_LIMITS + 7) / 8];
 };
 
 /* Takes over after a start: outputs off, limits from the store, notice `boot`. `cause` is the reset's (enum rr_cause),

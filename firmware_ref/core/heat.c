@@ -33,7 +33,7 @@ RR_APART static uint32_t product(uint32_t gap, uint32_t gain, uint32_t *part)
 
 void rr_heat_step(struct rr_heat *heat, uint32_t gain)
 {
-    uint32_t mean = (uint32_t)(uint8_t)(heat->sum_high << 2) << 24 | heat->sum_low >> 6;
+    uint32_t mean = (uint32_t)(uint8_t)(heat->sum_high * 4u) << 24 | heat->sum_low >> 6;
     uint32_t part;
     uint32_t whole = product(mean - heat->level, gain, &part);
     if (mean < heat->level) { /* the way is less than 0: as an unsigned number it was 2^32 too long */

@@ -151,12 +151,21 @@ bool rr_device_say(struct rr_device *device)
 /* Saves one limit that is not in the store yet; false where there is none, or the store is not ready. */
 static bool save(struct rr_device *device)
 {
-    for (uint8_t place = 0; place < RR_LIMITS; place++) {
-        if (device->unsaved[place]) {
-            device->unsaved[place] = !rr_store_write(RR_PORT(device), RR_SELF(device), (uint8_t)(1u + place),
-                                                     rr_limits_at(&device->limits, place));
-            return !device->unsaved[place];
+    for (uint8_t i = 0; i < sizeof device->unsaved; i++) {
+        if (device->unsaved[i] == 0) {
+            continue;
         }
+        uint8_t place = (uint8_t)(8u * i);
+        uint8_t bit = 1;
+        while ((device->unsaved[i] & bit) == 0) {
+            bit = (uint8_t)(bit << 1);
+            place++;
+        }
+        if (!rr_store_write(RR_PORT(device), RR_SELF(device), (uint8_t)(1u + place), rr_limits_at(&device->limits, place))) {
+            return false;
+        }
+        device->unsaved[i] = (uint8_t)(device->unsaved[i] & (uint8_t)~bit);
+        return true;
     }
     return false;
 }

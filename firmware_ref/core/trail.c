@@ -48,6 +48,9 @@ const struct rr_record *rr_trail_get(const struct rr_trail *trail, uint16_t inde
 int32_t rr_trail_counts(const struct rr_trail *trail, const struct rr_record *record, uint8_t axis)
 {
     uint32_t last = (uint32_t)trail->last_counts[axis];
-    RR_TRAIL_TURNED turned = (RR_TRAIL_TURNED)(RR_TRAIL_COUNTS)(record->counts[axis] - (RR_TRAIL_COUNTS)last);
-    return (int32_t)(last + (uint32_t)(int32_t)turned);
+    RR_TRAIL_COUNTS turned = (RR_TRAIL_COUNTS)(record->counts[axis] - (RR_TRAIL_COUNTS)last);
+    int32_t way = sizeof turned == 2 ? (int16_t)turned : (int32_t)turned;
+    return (int32_t)(last + (uint32_t)way);
 }
+
+_Static_assert(sizeof(RR_TRAIL_COUNTS) == 2 || sizeof(RR_TRAIL_COUNTS) == 4, "rr_trail_counts knows these widths");

@@ -40,7 +40,6 @@
 /* 10-bit converters: currents to 13.5 A, less an offset of at most 5 A, supplies to 21.5 V (board.h), and a shaft that turns less than 32768 counts in
  * the 32 ms of the trail. */
 #define RR_TRAIL_COUNTS  uint16_t
-#define RR_TRAIL_TURNED  int16_t
 #define RR_CURRENT       int16_t
 #define RR_SUPPLY        uint16_t
 #define RR_TRAIL_CURRENT int16_t
