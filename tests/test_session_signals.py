@@ -52,6 +52,21 @@ def test_a_second_signal_within_a_second_cuts_at_once() -> None:
     assert target.categories == [1, 0, 1]
 
 
+@POSIX
+def test_a_hang_up_that_was_ignored_before_stays_ignored() -> None:
+    target = Panicked()
+    before = signal.signal(signal.SIGHUP, signal.SIG_IGN)
+    try:
+        with StopOnSignals(target) as signals:
+            os.kill(os.getpid(), signal.SIGHUP)
+            os.kill(os.getpid(), signal.SIGTERM)
+        assert signal.getsignal(signal.SIGHUP) is signal.SIG_IGN
+    finally:
+        signal.signal(signal.SIGHUP, before)
+    assert signals.received == ["SIGTERM"]
+    assert target.categories == [1]
+
+
 def test_the_earlier_handlers_come_back() -> None:
     before = signal.getsignal(signal.SIGTERM)
     with StopOnSignals(Panicked()):

@@ -17,7 +17,8 @@ if TYPE_CHECKING:
     from ramprig.cli.files import Pair
 
 EPILOG = """On a terminal it shows what will move and asks before it arms; --yes does not ask. SIGINT (Ctrl-C),
-SIGTERM and SIGHUP stop the motors in order, a second one within a second cuts them off.
+SIGTERM and SIGHUP stop the motors in order, a second one within a second cuts them off. Begun with nohup, SIGHUP
+is ignored, and the run outlasts its terminal.
 
 --unattended starts only where the rules for a run that nobody stands beside hold, and names each one that does not;
 it shows a sheet for the door, puts it into the run folder as a page to print, and keeps the computer awake.

@@ -33,8 +33,9 @@ class Panics(Protocol):
 class StopOnSignals:
     """While it is entered, signals stop `session`; leaving it puts the earlier handlers back.
 
-    Enter it in the main thread (ValueError elsewhere). `now` is the clock for a second signal. `received` has the names
-    of the signals that came, in order.
+    A hang-up that was ignored before stays so: who begins the program with `nohup` (POSIX) wants it to outlast the
+    terminal. Enter it in the main thread (ValueError elsewhere). `now` is the clock for a second signal. `received` has
+    the names of the signals that came, in order.
     """
 
     def __init__(self, session: Panics, *, now: Callable[[], float] = time.monotonic) -> None:
@@ -48,7 +49,7 @@ class StopOnSignals:
     def __enter__(self) -> Self:
         for name in _NAMES:
             number = getattr(signal, name, None)
-            if number is not None:
+            if number is not None and not (name == "SIGHUP" and signal.getsignal(number) is signal.SIG_IGN):
                 self._before[number] = signal.signal(number, self._handle)
         if sys.platform == "win32":
             self._watch_console()
