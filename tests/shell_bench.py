@@ -31,11 +31,13 @@ class DeskBench:
         self.outbox = Outbox(lines_max=10_000)
         self.desk = Desk(BENCH, self.port, self.outbox, runs=runs, seed=3, aside=aside, open_again=self._again)
         self.said: list[str] = []
+        self.runs = runs
+        self.again_faults: tuple[str, ...] = ()
         self.desk.open()
         self.hear()
 
     def _again(self) -> MockPort:
-        self.port = mock_port()
+        self.port = mock_port(*self.again_faults)
         return self.port
 
     def hear(self) -> list[str]:

@@ -9,6 +9,7 @@ from pathlib import Path
 import pytest
 
 from ramprig.errors import LinkError, LinkLost, RamprigError, RecordError, Refused, StoppedByUser, Tripped, UsageError
+from ramprig.record.reading import audit, read_manifest
 from ramprig.record.recorder import Recorder
 from ramprig.shell import commands as c
 from ramprig.shell.hold import FIRST_S, Hold
@@ -370,6 +371,45 @@ def test_a_lost_link_is_told_and_reopening_starts_disarmed(watched: tuple[DeskBe
     bench.type("reopen")
     assert bench.desk.snapshot.state == "off"
     bench.type("arm")
+
+
+def test_a_lost_link_ends_the_log_in_order(bench: DeskBench) -> None:
+    bench.type("log start")
+    bench.let_pass(1.0)
+    bench.fault("unplug")
+    said = "\n".join(bench.let_pass(2.0))
+    assert "samples received" in said
+    assert "could not be ended" not in said
+    (folder,) = bench.runs.iterdir()
+    assert read_manifest(folder)["stop_reason"] == "the link was lost"
+    assert audit(folder).exact
+
+
+def test_after_a_lost_link_and_a_vain_reopen_the_outputs_are_not_called_off(bench: DeskBench) -> None:
+    armed(bench).type("ramp vent 30 %")
+    bench.fault("unplug")
+    bench.let_pass(2.0)
+    bench.again_faults = ("deaf",)
+    with pytest.raises(LinkLost):
+        bench.type("reopen")
+    assert bench.desk.snapshot.state == "no link"
+    with pytest.raises(LinkError, match="'reopen'"):
+        bench.type("state")
+    assert not bench.desk.close()
+
+
+def test_a_lost_link_is_not_laid_to_a_trip_that_was_cleared(bench: DeskBench) -> None:
+    armed(bench).type("ramp vent 60 %")
+    bench.let_pass(2.0)
+    bench.fault("jammed_shaft")
+    assert any("jammed" in line for line in bench.let_pass(2.0))
+    bench.fault("jammed_shaft", 0.0)
+    bench.type("clear")
+    bench.let_pass(1.0)
+    bench.fault("unplug")
+    said = bench.let_pass(2.0)
+    assert any(line.startswith("likely   the cable was pulled") for line in said)
+    assert not any("jammed" in line for line in said)
 
 
 def test_a_stop_that_is_not_confirmed_says_to_cut_the_power(watched: tuple[DeskBench, Watched]) -> None:

@@ -99,6 +99,14 @@ def test_a_device_that_does_not_answer_is_raised(tmp_path: Path) -> None:
         piped("arm\n", tmp_path, "unplug")
 
 
+def test_outputs_of_a_device_that_does_not_answer_are_not_called_off(tmp_path: Path) -> None:
+    out = io.StringIO()
+    with pytest.raises(LinkLost):
+        run_shell(BENCH, mock_port("deaf"), runs=tmp_path, lines=io.StringIO(""), out=out, seed=1)
+    assert "all outputs are off" not in out.getvalue()
+    assert "NOT CONFIRMED off; cut the power" in out.getvalue()
+
+
 def test_a_bug_in_a_command_ends_in_a_stop(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     def broken(*_: object) -> None:
         raise ZeroDivisionError("a bug")

@@ -40,7 +40,7 @@ class Aftermath:
         self._events: deque[e.Event] = deque(maxlen=EVENTS_MAX)
 
     def forget(self) -> None:
-        """The device is another, or has been opened anew."""
+        """The device is another, has been opened anew, or its trip was cleared."""
         self._readings.clear()
         self._events.clear()
 

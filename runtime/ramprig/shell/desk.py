@@ -80,6 +80,7 @@ class Desk(Keeper):
                 self._say("disarmed")
             case c.Clear():
                 session.clear()
+                self._aftermath.forget()  # what comes next has a cause of its own
                 self._state = "off"
                 self.failed = None
                 self._say("the trip is cleared; the outputs stay off until 'arm'")

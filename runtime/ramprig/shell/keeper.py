@@ -141,11 +141,14 @@ class Keeper:
         self._look()
 
     def close(self) -> bool:
-        """Outputs off, log ended, port closed. Whether the outputs are known to be off."""
+        """Outputs off, log ended, port closed. Whether the outputs are known to be off.
+
+        Where no device answered, at first or when it was opened anew, nothing is known of them.
+        """
         session = self._session
         if session is None:
             self.port.close()
-            return True
+            return False
         if not self._lost and (self._state in ("armed", "stopping") or self._unconfirmed):
             self._stop(1)
         if self._trail_tries and not self._lost:
@@ -335,18 +338,21 @@ class Keeper:
             return session.last_stop
 
     def _end_log(self, reason: str, *, sampling: bool = True) -> None:
+        session = self._session  # also one whose link is lost: what came before that is to be whole
+        if session is None:
+            raise LinkError("the device is not open")
         try:
-            self._say(self._log.stop(self._need(), reason=reason, sampling=sampling))
+            self._say(self._log.stop(session, reason=reason, sampling=sampling))
         except RamprigError as error:
             self._say(f"the log could not be ended in order: {error}")
 
     # ---- small things --------------------------------------------------------------------------------------------
 
     def _need(self) -> Session:
-        if self._session is None:
-            raise LinkError("the device is not open")
         if self._lost:
             raise LinkError("the link is lost; 'reopen' opens the device anew")
+        if self._session is None:
+            raise LinkError("the device is not open")
         return self._session
 
     def _need_armed(self) -> None:
