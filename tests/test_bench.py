@@ -323,6 +323,19 @@ def test_the_echo_tells_defaults_and_what_deserves_a_second_look() -> None:
     assert "12 lines x4 x gear 50 = 2400 counts per output turn" in echo
 
 
+def test_the_echo_tells_of_a_servo_that_may_be_led_past_its_end_stops() -> None:
+    text = VENT_FILE.read_text(encoding="utf-8")
+    assert "past its end stop" not in "\n".join(bench_of_text(text).echo())
+    echo = bench_of_text(text.replace("angle: -40 deg to 40 deg", "angle: -40 deg to 80 deg")).echo()
+    assert "note: latch may be led to 80 deg, past its end stop at 55 deg" in echo
+    assert len([line for line in echo if "past its end stop" in line]) == 1
+
+
+def test_every_bench_to_copy_leaves_open_who_answers_and_where() -> None:
+    for path in sorted(VENT_FILE.parent.glob("*bench.yaml")):
+        assert load_bench(path).safety.missing()[:2] == ("contact", "place"), path.name
+
+
 def test_mock_faults_have_names_places_and_times() -> None:
     bench = small("bench: small", "bench: small\nmock: {seed: 7, faults: [jammed, {fault: encoder-dead, from: 2 s}]}")
     first, second = bench.mock.faults

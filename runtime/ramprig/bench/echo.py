@@ -53,7 +53,20 @@ def _notes(bench: Bench, tick_us: int) -> list[str]:
         for name, trip_a in trips.items()
         if fuse_a is not None and trip_a > fuse_a
     ]
-    return lines
+    return lines + [line for servo in bench.servos for line in _beyond_ends(servo)]
+
+
+def _beyond_ends(servo: Servo) -> list[str]:
+    """A limit beyond an end stop of the model leads the horn against it, where the servo stalls."""
+    model = servo.model
+    if model is None:
+        return []
+    ends = ((servo.low_deg, model.stop_low_deg, -1), (servo.high_deg, model.stop_high_deg, 1))
+    return [
+        f"note: {servo.name} may be led to {digits(limit)} deg, past its end stop at {digits(stop)} deg"
+        for limit, stop, way in ends
+        if stop is not None and way * (limit - stop) > 0
+    ]
 
 
 def _supply(bench: Bench, tick_us: int) -> str:
