@@ -177,3 +177,42 @@ def test_read_ends_with_2_for_a_run_that_broke_off(tmp_path: Path, capsys: pytes
 def test_read_of_what_is_no_run_folder_ends_with_2(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     assert main(["read", str(tmp_path)]) == 2
     assert "is no run folder" in capsys.readouterr().err
+
+
+# ---- mistakes of a command line ------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(
+    ("line", "said"),
+    [
+        (["chek", "a.yaml"], "there is no command 'chek'; did you mean 'check'?"),
+        (["xyzzy"], "there is no command 'xyzzy'; there are check, rehearse,"),
+        (["export", ".", "--to", "csv"], "(choose from 'parquet', 'excel-csv', 'mdf4')"),
+        (["export", ".", "--to", "excel-csv", "--decimal", "dot"], "(choose from 'point', 'comma')"),
+    ],
+)
+def test_a_wrong_word_of_a_command_line_is_answered_with_the_right_ones(
+    line: list[str], said: str, capsys: pytest.CaptureFixture[str]
+) -> None:
+    with pytest.raises(SystemExit) as ended:
+        main(line)
+    assert ended.value.code == 2
+    message = capsys.readouterr().err
+    assert said.replace("'", "") in message.replace("'", "")  # Python 3.12 and later quote choices otherwise
+
+
+def test_a_bench_where_a_sequence_is_wanted_is_told_and_the_other_way_round(
+    capsys: pytest.CaptureFixture[str],
+) -> None:
+    sequence = BENCH.parent / "jog_check.yaml"
+    assert main(["rehearse", str(BENCH)]) == 2
+    assert f"{BENCH} is a bench file; a sequence is wanted here" in capsys.readouterr().err
+    assert main(["check", "--bench", str(sequence), str(sequence)]) == 2
+    assert f"--bench {sequence}: this is a sequence; a bench file is wanted" in capsys.readouterr().err
+
+
+def test_check_refuses_a_fault_that_the_mock_does_not_know(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    path = tmp_path / "b.yaml"
+    path.write_text(BENCH.read_text("utf-8").replace("faults: []", "faults: [jamed_shaft]"), encoding="utf-8")
+    assert main(["check", str(path)]) == 2
+    assert "there is no fault 'jamed_shaft'; did you mean 'jammed_shaft'?" in capsys.readouterr().err

@@ -48,8 +48,11 @@ def meaning(path: Path, *, bench: Path | None, values: dict[str, str]) -> list[s
 
     if is_bench(path):
         from ramprig.bench import load_bench
+        from ramprig.mock.from_bench import check_faults
 
-        return load_bench(path).echo()
+        found = load_bench(path)
+        check_faults(found)
+        return found.echo()
     from ramprig.sequence.compile import compile_plan
     from ramprig.sequence.report import report_lines
 

@@ -15,19 +15,23 @@ def declare(parser: argparse.ArgumentParser) -> None:
     """The run, the format, where to."""
     from ramprig.record.export import Mark, To
 
-    parser.add_argument("run", type=Path, help="the run's folder")
-    parser.add_argument("--to", required=True, type=To, choices=list(To), metavar="FORMAT", help=", ".join(To))
+    parser.add_argument("run", type=Path, metavar="RUN", help="the run's folder")
+    formats = [to.value for to in To]  # plain words, so that a wrong one is answered with the right ones
+    parser.add_argument("--to", required=True, choices=formats, metavar="FORMAT", help=", ".join(formats))
     parser.add_argument("--out", type=Path, metavar="DIR", help="where the files go (default: the run's folder)")
     parser.add_argument(
-        "--decimal", type=Mark, choices=list(Mark), default=Mark.POINT, help="of excel-csv (default: point)"
+        "--decimal",
+        choices=[mark.value for mark in Mark],
+        default=Mark.POINT.value,
+        help="of excel-csv (default: point)",
     )
     parser.epilog = EPILOG
 
 
 def carry_out(args: argparse.Namespace) -> int:
     """Write the files and say which."""
-    from ramprig.record.export import export_run
+    from ramprig.record.export import Mark, To, export_run
 
-    for done in export_run(args.run, args.to, out=args.out, mark=args.decimal):
+    for done in export_run(args.run, To(args.to), out=args.out, mark=Mark(args.decimal)):
         say(f"{done.path}  {done.rows} rows")
     return 0

@@ -14,6 +14,8 @@ if TYPE_CHECKING:
     from ramprig.sequence.reading import Sequence
 
 SEQUENCE_KEYS = ("sequence", "steps")
+BENCH_KEYS = ("port", "board", "motors")
+"""Keys that no sequence has."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -42,10 +44,15 @@ def is_bench(path: Path) -> bool:
     """Whether the file is a bench file and no sequence. Raises FileError where it is no YAML of ours."""
     from ramprig.yamlfile import Mapping, load
 
+    return isinstance(load(path), Mapping) and not _has_keys(path, SEQUENCE_KEYS)
+
+
+def _has_keys(path: Path, keys: Iterable[str]) -> bool:
+    """Whether the file has one of these keys at its top. Raises FileError where it is no YAML of ours."""
+    from ramprig.yamlfile import Mapping, load
+
     root = load(path)
-    if not isinstance(root, Mapping):
-        return False
-    return not any(entry.key.text in SEQUENCE_KEYS for entry in root.entries)
+    return isinstance(root, Mapping) and any(entry.key.text in keys for entry in root.entries)
 
 
 def read_pair(path: Path, *, bench: Path | None, values: dict[str, str]) -> Pair:
@@ -54,8 +61,14 @@ def read_pair(path: Path, *, bench: Path | None, values: dict[str, str]) -> Pair
     from ramprig.sequence.reading import read_sequence
     from ramprig.yamlfile import load
 
+    if _has_keys(path, BENCH_KEYS) and is_bench(path):
+        raise UsageError(f"{path} is a bench file; a sequence is wanted here, and '--bench {path}' beside it")
     sequence = read_sequence(path, settings=values)
     if bench is not None:
+        if _has_keys(bench, SEQUENCE_KEYS):
+            raise UsageError(
+                f"--bench {bench}: this is a sequence; a bench file is wanted, with port, board and motors"
+            )
         return Pair(sequence=sequence, bench=bench_of(load(bench)), bench_path=bench)
     if sequence.bench is None:
         raise UsageError(f"{path} names no bench: write 'bench: FILE' there, or give --bench FILE")

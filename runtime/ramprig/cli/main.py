@@ -90,7 +90,10 @@ def main(arguments: Sequence[str] | None = None) -> int:
     """Carry out a command line and return its exit code; only argparse's own `SystemExit` leaves it."""
     words = list(sys.argv[1:] if arguments is None else arguments)
     wanted = next((word for word in words if not word.startswith("-")), None)
-    args = parser_for(wanted).parse_args(words)
+    parser = parser_for(wanted)
+    if words and words[0] not in COMMANDS and not words[0].startswith("-"):
+        parser.error(_no_such(words[0]))
+    args = parser.parse_args(words)
     try:
         code = command_named(args.command).carry_out(args)
     except Bug as error:
@@ -107,6 +110,14 @@ def main(arguments: Sequence[str] | None = None) -> int:
         return _bug(error)
     _flush()
     return code
+
+
+def _no_such(name: str) -> str:
+    import difflib
+
+    near = difflib.get_close_matches(name, COMMANDS, n=1)
+    hint = f"did you mean '{near[0]}'?" if near else f"there are {', '.join(COMMANDS)}"
+    return f"there is no command {name!r}; {hint}"
 
 
 def _flush() -> None:

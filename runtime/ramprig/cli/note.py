@@ -14,7 +14,7 @@ The note is kept with the time of day among the run's events, a photo as a copy 
 
 def declare(parser: argparse.ArgumentParser) -> None:
     """The run, the text and photos."""
-    parser.add_argument("run", type=Path, help="the run's folder")
+    parser.add_argument("run", type=Path, metavar="RUN", help="the run's folder")
     parser.add_argument("text", help="what was measured or noticed")
     parser.add_argument("--photo", type=Path, action="append", default=[], metavar="FILE", help="a photo; repeatable")
     parser.add_argument("--by", default="", metavar="NAME", help="who noted it")

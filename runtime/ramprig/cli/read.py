@@ -20,7 +20,7 @@ CYCLE_WORDS = {"unjudged": "not judged", "interrupted": "broken off"}
 
 def declare(parser: argparse.ArgumentParser) -> None:
     """The run folder."""
-    parser.add_argument("run", type=Path, help="the run's folder")
+    parser.add_argument("run", type=Path, metavar="RUN", help="the run's folder")
     parser.epilog = "Exits with 0 where the account holds, with 2 where it does not or the run never ended in order."
 
 

@@ -26,7 +26,7 @@ ones; run.json tells of each interruption."""
 
 def declare(parser: argparse.ArgumentParser) -> None:
     """The run and its port."""
-    parser.add_argument("run", type=Path, help="the run's folder")
+    parser.add_argument("run", type=Path, metavar="RUN", help="the run's folder")
     parser.add_argument("--port", metavar="URL", help="the port, where it has another name now")
     parser.add_argument("--yes", action="store_true", help="do not ask before anything moves")
     parser.add_argument("--after-trip", action="store_true", help="go on though the run ended by a trip of the board")

@@ -74,6 +74,12 @@ def plant_of_bench(bench: Bench) -> PlantParameters:
     )
 
 
+def check_faults(bench: Bench) -> None:
+    """Raises `FileError` at the first of the bench's faults that the mock does not know, or not in that strength."""
+    for fault in bench.mock.faults:
+        _fault_text(bench, fault)
+
+
 def _is_timed(fault: MockFault) -> bool:
     return bool(fault.from_s) or fault.until_s is not None
 
