@@ -30,6 +30,11 @@ def test_without_power_it_exits_with_0_and_says_what_was_not_tested(
     assert out.splitlines()[-1].startswith("ramprig-mock MOCK-0001 passed what needs no power")
 
 
+def test_one_check_that_was_not_made_is_told_as_one(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    assert main(["accept", MOCK, "--energise", "yes", "--only", "restart", "--runs", str(tmp_path)]) == 0
+    assert "; 1 check was not made." in capsys.readouterr().out.splitlines()[-1]
+
+
 def test_the_report_has_every_check_the_limits_and_the_lines(tmp_path: Path) -> None:
     assert main(["accept", MOCK, "--energise", "yes", "--restart", "--only", "st", "--runs", str(tmp_path)]) == 0
     folder = report_in(tmp_path)

@@ -49,8 +49,13 @@ VERDICTS = {
     "clock_drift": Case.GOOD,
     "bit_errors": Case.GOOD,
     "dropped_bytes": Case.GOOD,
+    "gear_play": Case.GOOD,
+    "output_clamped": Case.STALLED,
+    "friction_wear": Case.GOOD,
+    "resistance_wear": Case.GOOD,
+    "play_wear": Case.GOOD,
 }
-"""The verdict on each fault switch of the mock; those of the line are none of the motor's wiring."""
+"""The verdict on each fault switch of the mock; those of the line, and a drive that wears, are none of its wiring."""
 NOT_OPENED = {"unplug": LinkLost, "deaf": LinkLost, "second_board": WrongDevice}
 """Faults with which no device is opened, and what says so."""
 
@@ -279,4 +284,5 @@ def test_every_case_but_the_good_one_says_what_to_do_and_offers_none_of_these(ca
     lines = "\n".join(verdict.lines)
     assert ("do: " in lines) == (case is not Case.GOOD)
     assert ("none of these" in lines) == (case is not Case.GOOD)
+    assert "are in the run folder" not in lines  # with --no-record there is none
     assert math.isfinite(len(case.heading))

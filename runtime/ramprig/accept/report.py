@@ -49,7 +49,7 @@ def verdict_sentence(verdict: Verdict) -> str:
     if verdict.stopped:
         return f"Not finished: {name}: {verdict.stopped}"
     untested = sum(result.word == "not tested" for result in verdict.results)
-    beside = f"; {untested} checks were not made" if untested else ""
+    beside = f"; {untested} {'check was' if untested == 1 else 'checks were'} not made" if untested else ""
     if not verdict.energised:
         return f"{name} passed what needs no power{beside}. It is not accepted for a motor."
     return f"ACCEPTED: {name}{beside}."

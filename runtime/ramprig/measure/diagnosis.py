@@ -213,7 +213,7 @@ class Verdict:
         found += [f"do: {remedy}"] if remedy else []
         found += [f"not told apart: {untold}" if self.case is not Case.GOOD else f"note: {untold}"] if untold else []
         if self.case is not Case.GOOD:
-            found.append("if none of this fits: the samples are in the run folder; it may be none of these")
+            found.append("if none of this fits: it may be none of these; the samples of a run folder show what came")
         return tuple(found)
 
 
