@@ -173,6 +173,12 @@ def test_a_ratio_is_exact(text: str, value: str) -> None:
     assert q.parse_ratio(text) == Fraction(value)
 
 
+@pytest.mark.parametrize(("text", "wanted"), [("90:1", "'90'"), ("3249 : 196", "'3249/196'")])
+def test_a_ratio_with_a_colon_is_told_as_we_write_it(text: str, wanted: str) -> None:
+    with pytest.raises(QuantityError, match=f"with a colon; write {wanted}"):
+        q.parse_ratio(text)
+
+
 @pytest.mark.parametrize("text", ["0", "-2", "1/0", "90 rpm", "a", "", "1/2/3", "010"])
 def test_other_ratios_are_refused(text: str) -> None:
     with pytest.raises(QuantityError):
@@ -213,6 +219,9 @@ def test_a_band_holds_its_bounds_and_never_a_nan() -> None:
     [
         ("50 rpm", q.SPEED, "without a tolerance; write '50 rpm +- 5 %', 'at least 50 rpm'"),
         ("40 to 60 rpm", q.SPEED, "write both units: '40 rpm to 60 rpm'"),
+        ("9 V - 16 V", q.VOLTAGE, "a range is written with 'to': '9 V to 16 V'"),
+        ("-40-40 deg", q.ANGLE, "a range is written with 'to': '-40 deg to 40 deg'"),
+        ("9..16 V", q.VOLTAGE, "a range is written with 'to': '9 V to 16 V'"),
         ("60 rpm to 40 rpm", q.SPEED, "the lower value comes first: '40 rpm to 60 rpm'"),
         ("0 rpm +- 5 %", q.SPEED, "a percentage of 0 is nothing"),
         ("20 % +- 5 %", q.DUTY, "of full scale?"),

@@ -7,7 +7,7 @@ from dataclasses import dataclass, field
 from fractions import Fraction
 
 from .kinds import SHARE, TEMPERATURE, TEMPERATURE_STEP, Kind
-from .numbers import QuantityError, plain, quoted
+from .numbers import NUMBER_PATTERN, QuantityError, plain, quoted
 from .parse import Lookup, Quantity, parse
 
 
@@ -51,12 +51,30 @@ def parse_band(text: str, kind: Kind, *, lookup: Lookup | None = None) -> Band:
     low_text, to, high_text = clean.partition(" to ")
     if to:
         return _range(clean, low_text, high_text, kind, lookup)
+    meant = _dashed(clean, kind)
+    if meant is not None:
+        raise QuantityError(f"found {quoted(clean)}", wanted=f"a range is written with 'to': '{meant}'")
     single = parse(clean, kind, lookup=lookup)
     raise QuantityError(
         f"found {quoted(clean)} without a tolerance",
         wanted=f"write '{single} +- {_example_tolerance(kind)}', 'at least {single}', 'at most {single}' "
         "or a range with 'to'",
     )
+
+
+def _dashed(clean: str, kind: Kind) -> str | None:
+    """The range that `9 V - 16 V` or `9-16 V` means, as we write it; None where it is no such thing."""
+    parts = re.fullmatch(rf"({NUMBER_PATTERN})([^-.]*?) ?(?:-|\.\.\.?) ?({NUMBER_PATTERN}) ?([^-.0-9]+)", clean)
+    if parts is None:
+        return None
+    low, low_unit, high, high_unit = (part.strip() for part in parts.groups())
+    ends = f"{low} {low_unit or high_unit}", f"{high} {high_unit}"
+    try:
+        for end in ends:
+            parse(end, kind)
+    except QuantityError:
+        return None
+    return " to ".join(ends)
 
 
 def _example_tolerance(kind: Kind) -> str:

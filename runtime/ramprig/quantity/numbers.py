@@ -88,6 +88,10 @@ def parse_count(text: str) -> int:
 def parse_ratio(text: str) -> Fraction:
     """A positive number without a unit, decimal or a fraction of whole numbers (`3249/196`). Raises `QuantityError`."""
     clean = plain(text)
+    colon = re.fullmatch(r"([0-9.]+) ?: ?([0-9.]+)", clean)
+    if colon is not None:
+        over = "" if colon[2] == "1" else f"/{colon[2]}"
+        raise QuantityError(f"found {quoted(text)}, with a colon", wanted=f"write '{colon[1]}{over}'")
     head, slash, tail = (part.strip() for part in clean.partition("/"))
     try:
         if slash:
