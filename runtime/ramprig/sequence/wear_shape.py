@@ -176,6 +176,7 @@ class LimitShape(Shape[SaidLimit]):
         def build(f: Fields) -> SaidLimit:
             _check_whose(f, word)
             _check_said(f, watch, fail)
+            _check_order(f, watch, fail)
             k, n = f.get(CYCLES) or (K_DEFAULT, N_DEFAULT)
             way = f.get(GOING)
             return SaidLimit(
@@ -211,6 +212,18 @@ def _check_said(f: Fields, watch: Key[Threshold], fail: Key[Threshold]) -> None:
         raise f.mark.error("this limit has neither 'watch' nor 'fail'", f"as in 'fail: +25 %': {_WANTED}")
 
 
+def _check_order(f: Fields, watch: Key[Threshold], fail: Key[Threshold]) -> None:
+    """A run that fails at a limit must first have passed the one at which it is watched: else the two are exchanged."""
+    near, far = f.get(watch), f.get(fail)
+    if near is None or far is None or near.is_share != far.is_share:
+        return
+    above = near.high is not None and far.high is not None and far.high < near.high
+    below = near.low is not None and far.low is not None and far.low > near.low
+    if above or below:
+        found = f"'fail', {far.text}, is reached before 'watch', {near.text}"
+        raise f.error(fail, found, "'fail' lies farther out than 'watch', or where it does")
+
+
 RUN_IN_CYCLES_KEY = Key("cycles", CountShape(0, CYCLES_MAX), "cycles of the run-in", default=RUN_IN_CYCLES)
 RUN_IN_FOR = Key(
     "for",
@@ -240,6 +253,7 @@ def _others() -> Record[WearLimit]:
 
     def build(f: Fields) -> WearLimit:
         _check_said(f, watch, fail)
+        _check_order(f, watch, fail)
         k, n = f.get(CYCLES) or (K_DEFAULT, N_DEFAULT)
         return WearLimit(feature="", watch=f.get(watch), fail=f.get(fail), k=k, n=n, place=str(f.mark.place))
 
