@@ -336,6 +336,13 @@ def test_every_bench_to_copy_leaves_open_who_answers_and_where() -> None:
         assert load_bench(path).safety.missing()[:2] == ("contact", "place"), path.name
 
 
+def test_a_decimal_comma_in_braces_is_told_as_one() -> None:
+    with pytest.raises(FileError, match="unknown key '5 A' in 'current'; a comma begins a new key in braces") as caught:
+        small("{at most: 3 A}", "{at most: 2,5 A}")
+    assert caught.value.place is not None
+    assert caught.value.place.line == 13
+
+
 def test_mock_faults_have_names_places_and_times() -> None:
     bench = small("bench: small", "bench: small\nmock: {seed: 7, faults: [jammed, {fault: encoder-dead, from: 2 s}]}")
     first, second = bench.mock.faults

@@ -83,6 +83,8 @@ class Reader:
         for entry in self._entries(f"with {', '.join(known[:6])}"):
             if entry.key.text not in known:
                 wanted = suggestion(entry.key.text, known, "known keys")
+                if entry.key.text[:1].isdigit():  # as in {at most: 2,5 A}
+                    wanted = "a comma begins a new key in braces; the decimal sign is the point, as in '2.5 A'"
                 raise entry.key.error(f"unknown key '{shorten(entry.key.text)}'{self._inside()}", wanted)
             found[entry.key.text] = self._below(entry.value, entry.key.text)
         missing = [key for key in must if key not in found]
