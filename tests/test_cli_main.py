@@ -123,6 +123,16 @@ def test_a_reader_that_leaves_is_no_error() -> None:
     assert done.stderr == ""
 
 
+@pytest.mark.parametrize("name", COMMANDS)
+def test_no_line_of_help_is_too_long_for_a_page(
+    name: str, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setenv("COLUMNS", "80")
+    with pytest.raises(SystemExit):
+        parser_for(name).parse_args([name, "--help"])
+    assert [line for line in capsys.readouterr().out.splitlines() if len(line) > 120] == []
+
+
 def test_only_the_command_that_is_given_is_declared() -> None:
     assert parser_for(None).parse_args(["ports"]).command == "ports"
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import argparse
+import textwrap
 
 from ramprig.cli.running import NOT_PROVED, Way, add_run_arguments, carry_out_run, mock_url
 from ramprig.cli.say import tell
@@ -19,7 +20,7 @@ def declare(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--on", choices=("core", "mock"), help="the firmware core in C, or the mock in Python (default: core if it can)"
     )
-    parser.epilog = NOT_PROVED
+    parser.epilog = textwrap.fill(NOT_PROVED, 110)
 
 
 def carry_out(args: argparse.Namespace) -> int:
