@@ -7,7 +7,7 @@ from pathlib import Path
 
 import pytest
 
-from ramprig.errors import Bug, RecordError
+from ramprig.errors import Bug, FileError, LinkLost, RecordError
 from ramprig.mock.device import MockDevice
 from ramprig.mock.from_bench import setup_of_bench
 from ramprig.mock.port import MockPort
@@ -18,7 +18,7 @@ from ramprig.sequence.executive import Progress
 from ramprig.sequence.listeners import EARLY_MAX, Listeners
 from ramprig.sequence.outcome import FAILURES_KEPT, Judged, Tally, Verdict
 from ramprig.sequence.rig import Rig
-from ramprig.sequence.running import wanted_of
+from ramprig.sequence.running import RunWish, _end_of, run_sequence, wanted_of
 from ramprig.session.blocks import Block
 from ramprig.session.events import LateHost, Opened
 from ramprig.session.session import Session
@@ -188,3 +188,27 @@ def test_a_tally_keeps_a_bounded_number_of_failures() -> None:
     for _ in range(FAILURES_KEPT + 3):
         tally.take(failure)
     assert (tally.failed, len(tally.failures)) == (FAILURES_KEPT + 3, FAILURES_KEPT)
+
+
+def test_the_port_is_closed_where_the_sequence_cannot_be_carried_out(tmp_path: Path) -> None:
+    bench = small_bench()
+    port = MockPort(MockDevice(setup_of_bench(bench), seed=1), pace="virtual", seed=1)
+    sequence = sequence_of(tmp_path, "- ramp: {motor: vant, to: 40 %, in: 400 ms}")
+    with pytest.raises(FileError, match="vant"):
+        run_sequence(RunWish(sequence=sequence, bench=bench), port)
+    with pytest.raises(LinkLost, match="closed"):
+        port.read(0.0)
+
+
+def test_the_end_of_a_run_is_written_down_though_the_clocks_are_not_fitted_and_the_board_must_not_be_asked(
+    tmp_path: Path,
+) -> None:
+    bench, listeners = small_bench(), Listeners()
+    plan = compile_plan(sequence_of(tmp_path, "- hold: 1 s"), bench)
+    session, port = session_on(MockDevice(setup_of_bench(bench), seed=1), listeners)
+    with session:
+        outcome = run_plan(session, plan, Rig.of(bench), clock=port.clock, listeners=listeners)
+        session._core.new_clocks(0.001)  # as where the host has slept
+        session._core.pump.hush()  # as after a stop that is not confirmed
+        assert _end_of(session, plan, outcome, port.clock).end is None
+        session._core.pump.speak()

@@ -1,8 +1,8 @@
 """Runs a plan on a session: one loop in one thread that pumps, sends orders ahead, looks at samples, and ends.
 
 Orders leave AHEAD_S before their start, so that a pause of the host never shows in the motion. Expectations and waits
-are looked at when the samples they need have come. However it ends, the outputs are off, and confirmed off, before
-`execute` returns. The same loop runs in real and in virtual time.
+are looked at when the samples they need have come. However it ends, `ending.run_plan` has the outputs off, and
+confirmed off, before it returns. The same loop runs in real and in virtual time.
 
 Longer than most files here: what a strand may ask for is answered in one place, by one view of ticks and samples.
 """

@@ -122,7 +122,11 @@ def run_sequence(
     be made; in each case nothing has moved.
     """
     listeners = Listeners()
-    compile_plan(wish.sequence, wish.bench)  # what cannot be carried out is refused before a device is touched
+    try:
+        compile_plan(wish.sequence, wish.bench)  # what cannot be carried out is refused before a device is touched
+    except BaseException:
+        port.close()
+        raise
     session = Session.open(
         port,
         wanted=wanted_of(wish.bench),
@@ -408,7 +412,7 @@ def _end_of(session: Session, plan: Plan, outcome: Outcome, clock: Clock) -> Run
     return RunEnd(
         verdict=outcome.verdict.word,
         stop_reason=outcome.sentence,
-        end=anchor(session, clock) if known else None,
+        end=None if fit is None else anchor(session, clock),  # without a fit the board would have to be asked
         drift_ppm=None if fit is None else fit.drift_ppm,
         accounts=() if account is None else (account,),
         link=health if isinstance(health, dict) else {},
