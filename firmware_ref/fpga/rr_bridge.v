@@ -7,7 +7,8 @@
 // Does not: make the dead time between the two switches of one leg, which belongs to the gate driver; keep the dwell (rr_chain.v).
 //   Between a pulse on one leg and one on the other it keeps DEAD clocks of its own, whatever the duty does.
 // Latency: one clock for off; up to one period for a new duty.
-// Properties, under FORMAL: off is off, never both legs, DEAD kept, no pulse but of the duty's sign, by induction; covered.
+// Properties, under FORMAL: off is off, never both legs, DEAD kept, no pulse but of the duty's sign and in its share of an even
+//   carrier, a new duty at the start of a period only, by induction; covered.
 `default_nettype none
 
 module rr_bridge #(
@@ -66,7 +67,8 @@ module rr_bridge #(
 `ifdef FORMAL
     reg               f_begun = 1'b0;
     reg               f_on;
-    reg signed [14:0] f_held;
+    reg signed [14:0] f_held, f_duty;
+    reg        [13:0] f_phase;
     reg        [8:0]  f_a_low, f_b_low; // clocks for which each leg has been low, held at 256
     reg        [1:0]  f_seen = 2'd0;
 
@@ -76,6 +78,8 @@ module rr_bridge #(
         f_begun <= 1'b1;
         f_on    <= on && !rst;
         f_held  <= held;
+        f_duty  <= duty;
+        f_phase <= phase;
         f_a_low <= rst || leg_a ? 9'd0 : f_a_low == 9'd256 ? f_a_low : f_a_low + 9'd1;
         f_b_low <= rst || leg_b ? 9'd0 : f_b_low == 9'd256 ? f_b_low : f_b_low + 9'd1;
         f_seen  <= rst ? 2'd0 : f_seen | {leg_b, leg_a};
@@ -90,6 +94,11 @@ module rr_bridge #(
             if (!f_on) off: assert (!enable && !leg_a && !leg_b);
             if (leg_a) a_for_positive: assert (enable && f_held > 0 && f_b_low >= {1'b0, DEAD});
             if (leg_b) b_for_negative: assert (enable && f_held < 0 && f_a_low >= {1'b0, DEAD});
+            if (leg_a) S1_a: assert ($signed({1'b0, f_phase}) < f_held);
+            if (leg_b) S1_b: assert ($signed({1'b0, f_phase}) < -f_held);
+            if (f_on && {1'b0, f_phase} + {1'b0, STEP} < FULL) begin
+                carrier_runs: assert ({1'b0, phase} == {1'b0, f_phase} + {1'b0, STEP} && held == f_held);
+            end else if (f_on) carrier_wraps: assert ({1'b0, phase} + FULL == {1'b0, f_phase} + {1'b0, STEP} && held == f_duty);
             c_reversed: cover (f_seen == 2'b11 && leg_a);
             c_braked: cover (f_on && enable && held == 0);
         end

@@ -113,11 +113,13 @@ module rr_chain #(
     reg        [13:0] f_ceiling, f_up, f_down;
     reg        [15:0] f_dwell;
     reg               f_crossing; // the demand had the other sign
-    reg        [15:0] f_zero = 16'd0;      // ticks at zero before the last tick
+    reg        [15:0] f_zero = 16'd0;      // ticks at zero before the last tick, counted by the duty alone, held at 65535
     reg               f_never = 1'b1;      // had not left zero before the last tick
-    reg               f_was_negative = 1'b0;
+    reg               f_was_negative = 1'b0; // the sign it had when it last was away from zero
     reg               f_begun = 1'b0;
     reg        [1:0]  f_turned = 2'd0;     // signs seen, for the cover
+
+    wire [15:0] f_zero_now = !f_ticked ? f_zero : duty != 0 ? 16'd0 : one_more(f_zero);
 
     initial assume (rst);
 
@@ -129,8 +131,14 @@ module rr_chain #(
             f_never        <= 1'b1;
             f_was_negative <= 1'b0;
             f_turned       <= 2'd0;
-        end else if (tick) begin
-            assume (slew_up_duty >= 1 && slew_up_duty <= 10000 && slew_down_duty >= 1 && slew_down_duty <= 10000);
+        end else begin
+            f_zero <= f_zero_now;
+            if (duty != 0) begin
+                f_never        <= 1'b0;
+                f_was_negative <= duty < 0;
+            end
+        end
+        if (!rst && tick) begin
             f_on      <= on;
             f_still   <= still;
             f_before  <= duty;
@@ -139,16 +147,14 @@ module rr_chain #(
             f_down    <= slew_down_duty;
             f_dwell   <= dwell_ticks;
             f_crossing <= crossing;
-            f_zero    <= zero_ticks;
-            f_never   <= !moved_yet;
-            f_was_negative <= last_negative;
             f_turned  <= f_turned | {next_duty < 0, next_duty > 0};
         end
 
         if (f_begun) begin // what holds always, which the induction leans on
             bounded: assert (duty <= $signed({1'b0, MAX_DUTY}) && duty >= -$signed({1'b0, MAX_DUTY}));
-            zero_or_counting: assert (duty == 0 || zero_ticks == 0);
-            sign_kept: assert (duty == 0 || (moved_yet && last_negative == (duty < 0)));
+            zero_counted: assert (zero_ticks == f_zero_now);
+            move_known: assert (moved_yet == (!f_never || duty != 0));
+            sign_kept: assert (!moved_yet || last_negative == (duty != 0 ? duty < 0 : f_was_negative));
         end
         if (f_begun && f_ticked) begin
             // S1
@@ -164,8 +170,6 @@ module rr_chain #(
             S3_zero_first: assert (!(f_before > 0 && duty < 0) && !(f_before < 0 && duty > 0));
             if (f_before == 0 && duty != 0 && (f_never || f_was_negative != (duty < 0)))
                 S3_rested: assert (f_zero >= f_dwell && f_still);
-            // S3: the count of ticks at zero is one
-            S3_count: assert (zero_ticks == (duty != 0 ? 16'd0 : one_more(f_before != 0 ? 16'd0 : f_zero)));
         end
         if (f_begun) begin
             c_reversed: cover (f_turned == 2'b11 && duty < 0);

@@ -1,12 +1,16 @@
 // One motor's last word in gates: whatever the processor writes, S1 to S5 of SPEC.md hold at the bridge.
 //
 // Does: hold `armed` between `arm` and the first of `disarm`, `stop_now`, lease and overcurrent; latch the trip with its number of
-//   SPEC.md section 11 (the lowest wins) until `clear`; run chain, standstill and bridge under it. `stop_now` is for BREAK, bare
-//   `stop` and a hard-wired input: it acts within one clock, without waiting for a tick.
+//   SPEC.md section 11 (the lowest wins) until `clear`; run chain, standstill and bridge under it. `stop_now` is for BREAK and a
+//   hard-wired input, and latches `line_break`; `disarm` latches nothing, so the bare `stop` belongs to it (STOP-4). Both act
+//   without waiting for a tick, and win over `arm`.
+// Asks: `tick` from a counter in gates, never from the processor: no tick, no lease. All inputs in step with `clk`: an input pin
+//   goes through two flip-flops first, or `armed` and `trip` may each see it differently. `rst` for a clock at least after power-up.
 // Does not: ramp down. A lease that ends here switches off at once: give it the lease plus the stop's time plus one tick, so that
 //   it acts only where the processor did not. No safety function: a gate array fails in ways that no proof here speaks of.
-// Latency: bridge off two clocks after `stop_now`; one tick for current, counts and lease.
-// Properties, under FORMAL: S5, and off whenever not armed, by induction; S1 to S4 in the modules it is made of; covered.
+// Latency: bridge off one clock after `stop_now`, two after `disarm`; one tick for current, counts and lease.
+// Properties, under FORMAL: S5, off whenever not armed, every finding trips, the current is judged, no duty from a tick that was not
+//   armed, by induction; S1 to S4 in the modules it is made of; covered. How lease and standstill are wired is read, not proved.
 `default_nettype none
 `include "words.vh"
 
@@ -73,7 +77,7 @@ module rr_interlock #(
             armed <= 1'b0;
             trip  <= `RR_TRIP_NONE;
         end else begin
-            armed <= armed ? !disarm && found == `RR_TRIP_NONE : arm && may_arm;
+            armed <= armed ? !disarm && found == `RR_TRIP_NONE : arm && !disarm && may_arm;
             if (armed && found != `RR_TRIP_NONE) trip <= found;
             else if (clear && may_clear && !armed) trip <= `RR_TRIP_NONE;
         end
@@ -99,6 +103,9 @@ module rr_interlock #(
     reg       f_zero = 1'b0, f_rest = 1'b0; // the demand was zero, the duty too
     reg [3:0] f_trip = 4'd0;
     reg [1:0] f_story = 2'd0; // tripped by current, cleared, armed again
+    reg       f_disarm = 1'b0, f_found = 1'b0, f_current = 1'b0, f_ticked = 1'b0;
+
+    wire signed [18:0] f_size = current_ma < 0 ? -$signed({current_ma[17], current_ma}) : $signed({current_ma[17], current_ma});
 
     initial assume (rst);
 
@@ -111,6 +118,10 @@ module rr_interlock #(
         f_clear   <= clear;
         f_stop    <= stop_now;
         f_over    <= over_persists;
+        f_disarm  <= disarm;
+        f_found   <= !rst && found != `RR_TRIP_NONE;
+        f_current <= !rst && over;
+        f_ticked  <= !rst && tick;
         f_zero    <= demand == 0;
         f_rest    <= duty == 0;
         f_story   <= rst ? 2'd0 : f_story == 0 && trip == `RR_TRIP_OVERCURRENT ? 2'd1
@@ -124,6 +135,11 @@ module rr_interlock #(
             off_unless_armed: assert (f_armed || (!enable && !leg_a && !leg_b));
             stop_at_once: assert (!f_stop || (!armed && !enable && !leg_a && !leg_b));
             stop_latches: assert (!(f_stop && f_armed) || trip == `RR_TRIP_LINE_BREAK);
+            disarm_wins: assert (!f_disarm || !armed);
+            finding_trips: assert (!(f_found && f_armed) || (tripped && !armed));
+            if (f_current && f_armed) current_trips: assert (trip == `RR_TRIP_OVERCURRENT || trip == `RR_TRIP_LINE_BREAK);
+            current_judged: assert (over_persists == (f_size > $signed({2'b0, trip_ma})));
+            if (f_ticked && duty != 0) duty_armed: assert (f_armed && !f_found);
             c_again: cover (f_story == 2'd3 && armed);
             c_lease: cover (trip == `RR_TRIP_LINK_LOST);
             c_break: cover (trip == `RR_TRIP_LINE_BREAK);

@@ -36,14 +36,15 @@ module rr_lease (
 
 `ifdef FORMAL
     reg        f_begun = 1'b0;
-    reg [15:0] f_now = 16'd0;     // ticks since the reset
-    reg [15:0] f_renewed = 16'd0; // the tick for which the last renewal counts
+    reg [16:0] f_age = 17'd1; // ticks ended since the last renewal came (or since one before the reset), held at 65536
+    reg        f_heard = 1'b0;    // one has come, for the cover
     reg        f_armed = 1'b0;
     reg        f_ticked = 1'b0;
     reg        f_expired = 1'b0;
     reg [15:0] f_lease = 16'd1;
 
-    wire f_due = f_ticked && f_renewed <= f_now && f_now - f_renewed >= f_lease; // the last tick completed the lease
+    // The tick in which the renewal came is not silent; the last one completed the lease.
+    wire f_due = f_ticked && f_age > {1'b0, f_lease};
 
     initial assume (rst);
 
@@ -54,21 +55,17 @@ module rr_lease (
         f_expired <= expired && !rst;
         f_lease   <= lease_ticks;
         assume (lease_ticks >= 1);
-        assume (f_now < 16'hfffe); // time enough for every lease, and no wrap to think of
-        if (rst) begin
-            f_now     <= 16'd0;
-            f_renewed <= 16'd0;
-        end else begin
-            if (tick) f_now <= f_now + 16'd1;
-            if (renew) f_renewed <= f_now + 16'd1;
-        end
+        f_heard <= !rst && (f_heard || renew);
+        if (rst) f_age <= 17'd1;
+        else if (renew) f_age <= {16'd0, tick};
+        else if (tick && f_age != 17'd65536) f_age <= f_age + 17'd1;
         if (f_begun) begin
-            renewal_known: assert (f_renewed <= f_now + 16'd1 && renewed == (f_renewed == f_now + 16'd1));
-            if (!renewed) silence_counted: assert (silent_ticks == f_now - f_renewed);
+            renewal_known: assert (f_age <= 17'd65536 && renewed == (f_age == 0));
+            if (!renewed) silence_counted: assert ({1'b0, silent_ticks} + 17'd1 == f_age);
             if (!f_armed) not_unarmed: assert (!expired);
             else if (f_due) S4: assert (expired);
             else not_before: assert (expired == f_expired); // never before it is due, and once expired it stays
-            c_expired: cover (expired && f_now == 16'd4 && f_renewed == 16'd1);
+            c_expired: cover (expired && f_heard && f_age == 17'd4);
         end
     end
 `endif

@@ -70,8 +70,8 @@ module rr_quadrature #(
     reg [1:0]  f_before;
     reg [15:0] f_illegal;
     reg        f_known, f_reset;
-    reg [7:0]  f_a_differs = 8'd0; // clocks in a row for which the synchronised A has differed from what is accepted
-    reg        f_held_a;
+    reg [7:0]  f_a_differs = 8'd0, f_b_differs = 8'd0; // clocks in a row for which the synchronised input differed from the accepted
+    reg [1:0]  f_held;
 
     initial assume (rst);
 
@@ -82,8 +82,9 @@ module rr_quadrature #(
         f_before  <= before;
         f_known   <= known;
         f_reset   <= rst;
-        f_held_a  <= held[1];
+        f_held    <= held;
         f_a_differs <= rst || a_in[1] == held[1] ? 8'd0 : f_a_differs == 8'hff ? 8'hff : f_a_differs + 8'd1;
+        f_b_differs <= rst || b_in[1] == held[0] ? 8'd0 : f_b_differs == 8'hff ? 8'hff : f_b_differs + 8'd1;
         if (f_begun && !f_reset) begin
             one_at_most: assert (counts == f_counts || counts == f_counts + 32'd1 || counts == f_counts - 32'd1);
             if (counts != f_counts) begin // one of the two has changed, and they never count for both
@@ -95,8 +96,10 @@ module rr_quadrature #(
                 5'b1_00_01, 5'b1_01_11, 5'b1_11_10, 5'b1_10_00: down: assert (counts == f_counts - 32'd1);
                 default: else_none: assert (counts == f_counts);
             endcase
-            bounce_counted: assert (a_for < FILTER && a_for <= f_a_differs);
-            if (held[1] != f_held_a) bounce_passed_over: assert (f_a_differs >= FILTER);
+            a_counted: assert (a_for < FILTER && a_for <= f_a_differs);
+            b_counted: assert (b_for < FILTER && b_for <= f_b_differs);
+            if (held[1] != f_held[1]) a_bounce: assert (f_a_differs >= FILTER);
+            if (held[0] != f_held[0]) b_bounce: assert (f_b_differs >= FILTER);
         end
         if (f_begun) begin
             c_up: cover (counts == 32'd4);

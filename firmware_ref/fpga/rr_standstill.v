@@ -43,6 +43,9 @@ module rr_standstill (
     reg [16:0] f_since = 17'd0;  // ticks ended since the tick that last set the mark, held at 65535
     reg [31:0] f_mark = 32'd0;   // the counts in that tick
 
+    wire [31:0] f_away = counts - f_mark; // its size, either way round
+    wire        f_stayed = (f_away[31] ? -f_away : f_away) <= {17'd0, still_counts};
+
     initial assume (rst);
 
     always @(posedge clk) begin
@@ -52,7 +55,7 @@ module rr_standstill (
             f_since <= 17'd0;
             f_mark  <= 32'd0;
         end else if (tick) begin
-            if (!stayed) begin
+            if (!f_stayed) begin
                 f_left  <= 1'b1;
                 f_since <= 17'd0;
                 f_mark  <= counts;
@@ -62,7 +65,7 @@ module rr_standstill (
             counted: assert ({1'b0, still_for} == f_since);
             marked: assert (mark == f_mark);
             if (!rst && tick && has_encoder && still && still_ticks != 0) begin
-                S3_stayed: assert (stayed);
+                S3_stayed: assert (f_stayed);
                 S3_long_enough: assert (f_since + 17'd1 >= {1'b0, still_ticks});
             end
             c_still: cover (f_left && tick && still && has_encoder && still_ticks == 3);
