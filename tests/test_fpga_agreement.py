@@ -76,7 +76,7 @@ def history(chance: random.Random) -> list[tuple[int, ...]]:
 def core_steps(tmp_path_factory: pytest.TempPathFactory) -> Path:
     """The core's steps as a program."""
     program = tmp_path_factory.mktemp("core") / "steps"
-    core = [str(ROOT / "firmware_ref" / "core" / name) for name in ("chain.c", "guard.c", "servo.c")]
+    core = [str(ROOT / "firmware_ref" / "core" / name) for name in ("chain.c", "guard.c", "heat.c", "servo.c")]
     flags = ["-std=c11", "-O1", "-Wall", "-Wextra", "-Werror"]
     subprocess.run(["cc", *flags, "-o", str(program), str(FPGA / "sim" / "steps.c"), *core], check=True)
     return program
