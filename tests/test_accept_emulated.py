@@ -49,14 +49,8 @@ def test_the_emulated_board_is_accepted(board: Port) -> None:
     assert verdict.unrestored == []
 
 
-@pytest.mark.parametrize(
-    ("number", "check", "clauses"),
-    [(17, "overload", {"TRIP-8"}), (18, "overlong-lines", {"LINE-5", "BAD-3"})],
-)
-def test_a_seeded_bug_that_a_larger_processor_hides_is_found_here(
-    number: int, check: str, clauses: set[str], tmp_path: Path
-) -> None:
-    for port in emulated(tmp_path, f"-DRR_SEEDED_BUG={number}", "-Wno-error"):  # the compiler sees it coming
-        verdict = accepted(port, only=check)
-        assert clauses <= set(verdict.failed), verdict.failed
+def test_a_seeded_bug_that_a_larger_processor_hides_is_found_here(tmp_path: Path) -> None:
+    for port in emulated(tmp_path, "-DRR_SEEDED_BUG=17", "-Wno-error"):  # the compiler sees it coming
+        verdict = accepted(port, only="overload")
+        assert "TRIP-8" in verdict.failed, verdict.failed
         assert verdict.exit_code == 1

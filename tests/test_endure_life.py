@@ -156,7 +156,7 @@ def test_a_plan_trades_samples_for_time_by_the_shape() -> None:
 
 
 def test_too_few_failures_are_refused_with_the_way_out() -> None:
-    with pytest.raises(UsageError, match=r"1 failures; .*Weibayes"):
+    with pytest.raises(UsageError, match=r"1 failure; .*Weibayes"):
         life.fit_weibull([100.0], [200.0, 300.0])
     with pytest.raises(UsageError, match="not above 0"):
         life.fit_weibull([100.0, 0.0])

@@ -7,7 +7,8 @@
 #include "names.h"
 #include "seeded.h"
 
-#define CHECK_LENGTH 5u /* a space and four hex digits */
+#define CHECK_LENGTH    5u /* a space and four hex digits */
+#define LENGTH_TOO_LONG RR_SEEDED(LINE_ONE_TOO_LONG, RR_HOST_LINE_MAX + 1, RR_HOST_LINE_MAX)
 
 static bool all_printable(const char *text, uint8_t length)
 {
@@ -74,14 +75,14 @@ const char *rr_line_body(const struct rr_line *line)
 enum rr_line_kind rr_line_take(struct rr_line *line, uint8_t byte)
 {
     if (byte != '\n') {
-        if (line->length < RR_SEEDED(LINE_ONE_TOO_LONG, RR_HOST_LINE_MAX + 1, RR_HOST_LINE_MAX)) {
+        if (line->length < LENGTH_TOO_LONG) {
             line->u.text[line->length++] = (char)byte;
         }
         return RR_LINE_NONE;
     }
     uint8_t length = line->length;
     line->length = 0;
-    if (length >= RR_HOST_LINE_MAX) { /* with the LF it has more bytes than a line may have */
+    if (length >= LENGTH_TOO_LONG) { /* with the LF it has more bytes than a line may have */
         rr_kept_count(&line->overlong);
         rr_kept_count(&line->garbled);
         return RR_LINE_GARBLED;

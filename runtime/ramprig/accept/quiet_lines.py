@@ -214,23 +214,29 @@ def garbled_lines(trial: Trial) -> None:
     trial.require(found == (1, 4, 0), "COUNT-1 BAD-2", f"{found} valid, garbled, overlong; right is (1, 4, 0)")
 
 
+def _sealed_to(length: int) -> bytes:
+    """A line of so many bytes, LF included, that is a request in form and has its right check."""
+    return seal(b"a1 ".ljust(length - len(seal(b"")), b"x"))
+
+
 @check("LINE-5 BAD-3 BAD-1 BAD-2 COUNT-1")
 def overlong_lines(trial: Trial) -> None:
     """A line that is too long is dropped whole: nothing behind the limit is taken for a line of its own."""
     talk = trial.talk
     inner = seal(b"a1 beat")
     tails = [bytes([byte]) + inner for byte in (0, 1, 0x0D, 0x20, 0xFF)] + [inner]
-    for length in range(HOST_LINE_MAX - 1, HOST_LINE_MAX + 3):
-        for tail in tails:
-            before, since = trial.counters(), talk.heard_count
-            talk.raw(b"z" * length + tail)
-            after = trial.counters()
-            answered = any(isinstance(h.message, Answer) and h.message.tag == 0xA1 for h in talk.since(since))
-            where = f"{length} bytes, then {tail!r}"
-            trial.require(not answered, "LINE-5 BAD-3", f"{where}: a line inside an overlong one was carried out")
-            found = tuple(b - a for a, b in zip(before, after, strict=True))[:3]
-            what = f"{where}: {found} counted as valid, garbled, overlong; right is (1, 1, 1)"
-            trial.require(found == (1, 1, 1), "LINE-5 BAD-3 COUNT-1", what)
+    lines = [b"z" * length + tail for length in range(HOST_LINE_MAX - 1, HOST_LINE_MAX + 3) for tail in tails]
+    lines += [_sealed_to(HOST_LINE_MAX + more) for more in (1, 2)]  # right but for their length
+    for line in lines:
+        before, since = trial.counters(), talk.heard_count
+        talk.raw(line)
+        after = trial.counters()
+        answered = any(isinstance(h.message, Answer) and h.message.tag == 0xA1 for h in talk.since(since))
+        where = f"{len(line)} bytes that end in {line[-len(inner) - 1 :]!r}"
+        trial.require(not answered, "LINE-5 BAD-3", f"{where}: an overlong line, or one inside it, was carried out")
+        found = tuple(b - a for a, b in zip(before, after, strict=True))[:3]
+        what = f"{where}: {found} counted as valid, garbled, overlong; right is (1, 1, 1)"
+        trial.require(found == (1, 1, 1), "LINE-5 BAD-3 COUNT-1", what)
     talk.rules.awaited[0xA1] = 0
 
 
