@@ -109,6 +109,17 @@ AHEAD = """- hold: 500 ms
       - expect: {current of: vent, is: at most 1.9 A, over: 500 ms}"""
 
 
+def test_a_run_that_failed_by_a_wait_is_not_green(tmp_path: Path, is_valid: Valid) -> None:
+    steps = """- ramp: {motor: vent, to: 40 %, in: 500 ms}
+- wait: {speed of: vent, is: at least 60 rpm, within: 1 s}"""
+    facts = facts_of(tmp_path, Case("", steps=steps))
+    assert facts.verdict == "failed"
+    failures = [case for case in cases_of(facts) if case.failure]
+    assert [(case.group, case.name) for case in failures] == [("run", "carried out to its end")]
+    assert "within" in failures[0].failure or "wait" in failures[0].failure
+    assert is_valid(junit_xml([facts]))
+
+
 def test_what_the_run_never_came_to_judge_is_skipped_with_the_reason(tmp_path: Path, is_valid: Valid) -> None:
     facts = facts_of(tmp_path, Case("", steps=AHEAD, faults=("jammed_shaft",)))
     assert facts.verdict == "tripped"

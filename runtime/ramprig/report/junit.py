@@ -153,16 +153,18 @@ def _limit_cases(facts: Facts) -> Iterator[Case]:
 
 
 def _run_case(facts: Facts) -> Case:
-    """Whether the run was carried out to its end; a failed expectation has a case of its own."""
+    """Whether the run was carried out to its end. A failed expectation or limit to wear has a case of its own; where none
+    has failed, a failed run's reason fails this one: a wait that ran out, a shaft that did not come to rest."""
     reason = str(facts.manifest.get("stop_reason") or "the run never ended in order")
     explanation = explain(facts)
     out = f"verdict: {facts.verdict}\n{reason}"
     if explanation is not None:
         out += "\n" + "\n".join(explanation.lines())
-    if facts.verdict in ("passed", "failed"):
+    blamed = any(found.failed for found in facts.expectations.values()) or any(w.failure for w in wear_cases(facts))
+    if facts.verdict == "passed" or (facts.verdict == "failed" and blamed):
         return Case("run", "carried out to its end", out)
     message = f"{facts.verdict}: {reason}"
-    if facts.verdict == "tripped":
+    if facts.verdict in ("failed", "tripped"):
         return Case("run", "carried out to its end", out, failure=message)
     return Case("run", "carried out to its end", out, error=message)
 
