@@ -153,8 +153,8 @@ def _limit_cases(facts: Facts) -> Iterator[Case]:
 
 
 def _run_case(facts: Facts) -> Case:
-    """Whether the run was carried out to its end. A failed expectation or limit to wear has a case of its own; where none
-    has failed, a failed run's reason fails this one: a wait that ran out, a shaft that did not come to rest."""
+    """Whether the run was carried out to its end. A failed expectation or limit to wear has a case of its own; where
+    none has failed, a failed run's reason fails this one: a wait that ran out, a shaft that did not come to rest."""
     reason = str(facts.manifest.get("stop_reason") or "the run never ended in order")
     explanation = explain(facts)
     out = f"verdict: {facts.verdict}\n{reason}"
