@@ -170,7 +170,7 @@ def results(facts: Facts) -> str:
     missed, trouble = unjudged(facts)
     if not facts.expectations and not missed:
         return page.paragraph(
-            "The sequence has no expectations, so there is nothing to pass or fail."
+            "No expectation was judged. Waits, trips and limits to wear have their verdict at the head of this report."
         ) + page.paragraph(RULE, kind="note")
     found = list(facts.expectations.values())
     rows = [_expectation(entry) for entry in (found + missed)[:ROWS_MAX]]
@@ -374,7 +374,9 @@ def trend_findings(found: Sequence[Trend], rules: Sequence[WearRules]) -> str:
     if not any(trend.judged.established for trend in found):
         needed = min((each.run_in_turns + each.baseline for each in rules if each.turn is TurnKind.CYCLE), default=0)
         return page.paragraph(f"No trend is judged: that takes more than {needed} cycles.", kind="note") + rule
-    return page.paragraph("No change was found.") + rule
+    return (
+        page.paragraph("The features drawn here show no change; a limit that ended the run is told at its head.") + rule
+    )
 
 
 def protections(facts: Facts) -> str:
