@@ -68,7 +68,7 @@ def volume_files(folder: Path, part: Mapping[str, Any]) -> list[Path]:  # Any: J
     A part that broke off at once may have none.
     """
     paths = [folder / name for name in volume_names(folder, part)]
-    held = [] if part.get("status") == "finished" else held_files(folder)
+    held = held_files(folder) if part.get("status") == "running" else []  # those of an earlier part were absorbed
     return [path for path in paths if has_header(path)] + held
 
 
