@@ -1,6 +1,6 @@
 """Proves the properties of the FPGA blocks by induction, shows each of their covers by a trace, and tells their sizes.
 
-    .env/bin/python scripts/dev/prove_gates.py [MODULE ...]     all of them take about a minute on one core
+    .env/bin/python scripts/dev/prove_gates.py [MODULE ...]     all of them take some minutes
 
 Prints a line a module: properties proved, covers reached, cells on an iCE40 (4-input tables and flip-flops, before
 place and route). Ends with status 1 where a property is not proved or a cover is not reached, 2 where the tools are
