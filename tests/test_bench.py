@@ -12,7 +12,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 from jsonschema import Draft202012Validator
 
-from ramprig.bench import Bench, bench_of_text, bench_schema, duty_parts, load_bench
+from ramprig.bench import Bench, bench_of_text, bench_schema, duty_parts, echo_lines, load_bench
 from ramprig.errors import FileError, UsageError
 from ramprig.quantity import DUTY, QuantityError, parse
 from ramprig.yamlfile import Listing, Mapping, Node, Scalar, load_text
@@ -300,7 +300,7 @@ def test_a_duty_is_exact_to_a_hundredth_of_a_percent() -> None:
 
 
 def test_the_echo_tells_what_the_file_means(vent: Bench) -> None:
-    assert vent.echo() == [
+    assert echo_lines(vent) == [
         "greenhouse vent drive: mock:, board ramprig-mock (any serial)",
         "supply: 12 V; trips below 9 V or above 16 V for 5 ms",
         "vent: 16 lines x4 x gear 90 = 5760 counts per output turn, rising with positive duty",
@@ -315,7 +315,7 @@ def test_the_echo_tells_what_the_file_means(vent: Bench) -> None:
 def test_the_echo_tells_defaults_and_what_deserves_a_second_look() -> None:
     said = "bench: small\nsafety: {fuse: 2 A}"
     bench = bench_of_text(SMALL.replace("bench: small", said).replace("duty: 80 %", "duty: 80 %\n      fall: 100 %/s"))
-    echo = "\n".join(bench.echo())
+    echo = "\n".join(echo_lines(bench))
     assert "vent: not said, so the default holds: slew_up_duty 20, dwell_ticks 250, still_counts 2" in echo
     assert "note: vent falls from its ceiling to zero in 800 ms, but a stop is cut after 500 ms" in echo
     assert "note: vent trips at 3 A, above the fuse of 2 A" in echo
@@ -325,8 +325,8 @@ def test_the_echo_tells_defaults_and_what_deserves_a_second_look() -> None:
 
 def test_the_echo_tells_of_a_servo_that_may_be_led_past_its_end_stops() -> None:
     text = VENT_FILE.read_text(encoding="utf-8")
-    assert "past its end stop" not in "\n".join(bench_of_text(text).echo())
-    echo = bench_of_text(text.replace("angle: -40 deg to 40 deg", "angle: -40 deg to 80 deg")).echo()
+    assert "past its end stop" not in "\n".join(echo_lines(bench_of_text(text)))
+    echo = echo_lines(bench_of_text(text.replace("angle: -40 deg to 40 deg", "angle: -40 deg to 80 deg")))
     assert "note: latch may be led to 80 deg, past its end stop at 55 deg" in echo
     assert len([line for line in echo if "past its end stop" in line]) == 1
 
@@ -436,5 +436,5 @@ def test_a_bench_with_any_value_replaced_is_a_bench_or_our_error() -> None:
             except FileError as error:
                 refused += error.place is not None and error.place.line >= 1
             else:
-                assert bench.echo(), (line, nasty)
+                assert echo_lines(bench), (line, nasty)
     assert refused > 200

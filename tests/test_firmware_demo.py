@@ -14,7 +14,7 @@ from ramprig.cli.files import Pair, read_pair
 from ramprig.mock.core import why_not
 from ramprig.mock.core.parameters import plant_text
 from ramprig.mock.from_bench import setup_of_bench
-from ramprig.mock.url import register
+from ramprig.mock.schemes import register
 from ramprig.port.base import Port
 from ramprig.port.open import open_port
 from ramprig.sequence.running import RunWish, run_sequence

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import ast
+import graphlib
 from collections.abc import Iterator
 from pathlib import Path
 
@@ -85,6 +86,48 @@ def test_imports_between_rooms_run_downwards() -> None:
 def test_every_module_of_the_program_is_in_a_known_room() -> None:
     rooms = {room_of(dotted(path)) for path in module_files(PROGRAM)} - {None}
     assert rooms <= set(ROOMS_FROM_THE_TOP)
+
+
+def without_types(tree: ast.Module) -> ast.Module:
+    """The module without what it imports for its types alone."""
+
+    class Cut(ast.NodeTransformer):
+        def visit_If(self, node: ast.If) -> ast.AST | None:
+            return None if isinstance(node.test, ast.Name) and node.test.id == "TYPE_CHECKING" else node
+
+    cut = Cut().visit(tree)
+    assert isinstance(cut, ast.Module)
+    return cut
+
+
+def circle_of(sources: dict[str, str], packages: frozenset[str]) -> list[str] | None:
+    """Modules that import one another in a circle, imports within functions included; None where there are none."""
+    graph: dict[str, set[str]] = {}
+    for module, source in sources.items():
+        tree = without_types(ast.parse(source))
+        names = {name for name, _ in imports_of(tree, module, is_package=module in packages)}
+        graph[module] = {
+            one for name in names if (one := name if name in sources else name.rpartition(".")[0]) in sources
+        } - {module}
+    try:
+        graphlib.TopologicalSorter(graph).prepare()
+    except graphlib.CycleError as error:
+        return list(error.args[1])
+    return None
+
+
+def test_no_modules_import_one_another_in_a_circle() -> None:
+    files = [*module_files(PROGRAM), *module_files(CODEC)]
+    packages = frozenset(dotted(path) for path in files if path.name == "__init__.py")
+    assert circle_of({dotted(path): path.read_text("utf-8") for path in files}, packages) is None
+
+
+def test_a_circle_is_found() -> None:
+    lazy = "def f():\n    from .b import g\n"
+    types = "from typing import TYPE_CHECKING\nif TYPE_CHECKING:\n    from .b import g\n"
+    for first, round_about in ((lazy, True), (types, False)):
+        found = circle_of({"ramprig.a": first, "ramprig.b": "from ramprig.a import f\n"}, frozenset())
+        assert (found is not None) is round_about
 
 
 @pytest.mark.parametrize(

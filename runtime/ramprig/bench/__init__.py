@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from .bench import Bench, bench_of_text, load_bench
+from .echo import echo_lines
 from .limits import LimitKey, Setting
 from .measured import MeasuredEntry, MeasuredValue
 from .model import MotorModel, ServoModel, SupplyModel
@@ -43,5 +44,6 @@ __all__ = [
     "bench_of_text",
     "bench_schema",
     "duty_parts",
+    "echo_lines",
     "load_bench",
 ]

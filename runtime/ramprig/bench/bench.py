@@ -145,12 +145,6 @@ class Bench:
                 found = f"'{servo.name}' is on servo {servo.channel}"
                 raise servo.mark.error(found, f"this board has {servos} servo outputs, from 0")
 
-    def echo(self, *, tick_us: int = 1000) -> list[str]:
-        """What the file means, in lines for the user to check: see `echo.py`."""
-        from .echo import echo_lines  # the echo stands above the bench
-
-        return echo_lines(self, tick_us=tick_us)
-
 
 _NAME = Key("bench", TextShape(), "what the bench is called", required=True)
 _PORT = Key("port", PORT, "where the board is connected", required=True)

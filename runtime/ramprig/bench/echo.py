@@ -13,7 +13,7 @@ from .motor import EDGES_PER_LINE, Motor
 from .servo import Servo
 
 
-def echo_lines(bench: Bench, *, tick_us: int) -> list[str]:
+def echo_lines(bench: Bench, *, tick_us: int = 1000) -> list[str]:
     """One line a fact: conversions, limits as the board will hold them, defaults that the file left in force."""
     lines = [f"{bench.name}: {bench.port.url}, board {bench.board.name} {bench.board.serial or '(any serial)'}"]
     lines.append(f"supply: {format_voltage(bench.supply.voltage_v)}; {_supply(bench, tick_us)}")

@@ -56,7 +56,7 @@ def carry_out(args: argparse.Namespace) -> int:
     from ramprig.accept.report import write_report
     from ramprig.accept.talk import Talk
     from ramprig.accept.trial import Wish
-    from ramprig.mock.url import register
+    from ramprig.mock.schemes import register
     from ramprig.port.open import open_port
     from ramprig.session.signals import StopOnSignals
 

@@ -47,12 +47,12 @@ def meaning(path: Path, *, bench: Path | None, values: dict[str, str]) -> list[s
     from ramprig.cli.files import is_bench, read_pair
 
     if is_bench(path):
-        from ramprig.bench import load_bench
+        from ramprig.bench import echo_lines, load_bench
         from ramprig.mock.from_bench import check_faults
 
         found = load_bench(path)
         check_faults(found)
-        return found.echo()
+        return echo_lines(found)
     from ramprig.sequence.compile import compile_plan
     from ramprig.sequence.report import report_lines
 

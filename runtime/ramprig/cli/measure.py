@@ -219,7 +219,7 @@ def ask(procedure: Procedure, bench: Bench, url: str) -> None:
 
 def _measure(args: argparse.Namespace, procedure: Procedure, bench: Bench, url: str) -> Measurement:
     from ramprig.measure.running import MeasureWish, measure
-    from ramprig.mock.url import register
+    from ramprig.mock.schemes import register
     from ramprig.port.open import open_port
     from ramprig.session.signals import StopOnSignals
 

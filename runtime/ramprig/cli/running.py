@@ -86,7 +86,7 @@ def mock_url(
 
 def open_port_for(way: Way, bench: Bench) -> Port:
     """The port of a run. Raises UsageError, PortNotFound, PortUnavailable."""
-    from ramprig.mock.url import register
+    from ramprig.mock.schemes import register
     from ramprig.port.open import open_port
 
     register()

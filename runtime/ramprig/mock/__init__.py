@@ -11,8 +11,9 @@ from .faults import FAULTS
 from .inputs import Inputs, ScriptedInputs
 from .limits import LimitStore
 from .port import MockPort
+from .schemes import register
 from .setup import MockSetup
-from .url import open_mock, register
+from .url import open_mock
 
 register()
 

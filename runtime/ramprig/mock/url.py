@@ -7,8 +7,6 @@ from pathlib import Path
 from urllib.parse import parse_qsl
 
 from ramprig.errors import UsageError
-from ramprig.port import open as port_open
-from ramprig.port.base import Port
 from ramprig.port.clock import VirtualClock
 
 from .device import MockDevice
@@ -103,21 +101,3 @@ def open_mock(text: str, *, clock: VirtualClock | None = None) -> MockPort:
     wish = parse_mock(text)
     device, seed = make_device(wish)
     return MockPort(device, pace=wish.pace, seed=seed, name=text, clock=clock)
-
-
-def _factory(wanted: port_open.Wanted) -> Port:
-    clock = wanted.clock
-    return open_mock(wanted.url, clock=clock if isinstance(clock, VirtualClock) else None)
-
-
-def _core_factory(wanted: port_open.Wanted) -> Port:
-    from .core.url import open_core  # only where it is asked for: it looks for a compiler
-
-    clock = wanted.clock
-    return open_core(wanted.url, clock=clock if isinstance(clock, VirtualClock) else None)
-
-
-def register() -> None:
-    """Have `ramprig.port.open.open_port` open `mock:` and `core:` texts."""
-    port_open.register("mock", _factory)
-    port_open.register("core", _core_factory)

@@ -27,7 +27,7 @@ from ramprig.measure.trace import Floats, MotorTrace
 from ramprig.quantity import digits, format_duty
 
 from . import pictures
-from .curve import WAYS, WORDS, facing
+from .ways import WAYS, WORDS, RunDown, facing
 
 REPEATS = 3
 SHARE = 0.75
@@ -40,19 +40,6 @@ KEEP_SHARE = 0.97
 """The fit takes this share of the angle: at the very end friction is no longer the running one."""
 COUNTS_LEAST = 100
 NAMES = ("start", "speed", "coulomb", "viscous")
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class RunDown:
-    """One run-down: when the bridge went off, the samples since then, and the fit (in counts and s)."""
-
-    sign: int
-    trace: MotorTrace
-    fit: Fit
-    kept_s: float
-    length_s: float
-    length_u_s: float
-    counts: float
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

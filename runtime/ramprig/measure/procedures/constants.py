@@ -25,7 +25,7 @@ from ramprig.measure.trace import Floats, MotorTrace
 from ramprig.quantity import format_duty
 
 from . import constants_pictures
-from .curve import WAYS, WORDS, facing
+from .ways import WAYS, WORDS, facing
 
 PULSES_DUTY = (200, 300, 400)
 """Pulses at rest, in 1/10000: most motors do not break away at them, so that R stands alone; where one does, it is

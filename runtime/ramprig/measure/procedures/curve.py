@@ -13,14 +13,15 @@ from ramprig.measure.deadband import Excursion, excursion
 from ramprig.measure.findings import Findings, Picture
 from ramprig.measure.lab import Lab
 from ramprig.measure.numbers.fit import Fit, fit_linear
-from ramprig.measure.numbers.uncertainty import Measured, coverage_factor
+from ramprig.measure.numbers.uncertainty import Measured
 from ramprig.measure.quality import Zero, check_moves, check_not_saturated, need_encoder
 from ramprig.measure.refusal import NotMeasurable
 from ramprig.measure.spread import spread
-from ramprig.measure.trace import Floats, MotorTrace
+from ramprig.measure.trace import MotorTrace
 from ramprig.quantity import digits, format_duty, format_speed
 
 from . import pictures
+from .ways import WAYS, WORDS, Level, Way, facing
 
 REPEATS = 5
 SEARCH_DUTY = 3000
@@ -39,42 +40,6 @@ GENTLE_MS = 2000
 """Down to zero takes this long at least: a motor that is led down fast lifts a supply that cannot sink."""
 LINEAR_WITHIN = 0.02
 """The linear range is where the speed is this near the line, as a share of the highest speed."""
-WAYS = (1, -1)
-WORDS = {1: "forward", -1: "backward"}
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Level:
-    """One level of the staircase: duty (share, signed), speed in rpm, current in A without offset, and how it went.
-
-    `speed_u_rpm` and `current_u_a` are standard uncertainties, `rising` tells whether it was approached from below.
-    """
-
-    duty: float
-    speed_rpm: float
-    speed_u_rpm: float
-    current_a: float
-    current_u_a: float
-    rising: bool
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Way:
-    """One direction: its ramps through the dead band, its levels, and the line speed = slope (duty - offset)."""
-
-    sign: int
-    excursions: tuple[Excursion, ...]
-    levels: tuple[Level, ...]
-    line: Fit
-    linear: tuple[float, float]
-    hysteresis_rpm: float
-
-    def band_rpm(self, duty: Floats) -> Floats:
-        """Half the width of the 95 % confidence band of the line at these duties (shares, positive), in rpm."""
-        design = np.stack([np.ones_like(duty), duty], axis=1)
-        variance = np.einsum("ij,jk,ik->i", design, self.line.covariance, design)
-        half: Floats = coverage_factor(self.line.dof) * np.sqrt(variance)
-        return half
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -158,17 +123,6 @@ class Curve:
                 wanted="a shaft that turns freely",
             )
         return kept
-
-
-def facing(trace: MotorTrace, sign: int) -> MotorTrace:
-    """The trace with duty, counts and current positive in this direction, counts from 0."""
-    return MotorTrace(
-        time_s=trace.time_s,
-        duty=sign * trace.duty,
-        counts=sign * (trace.counts - trace.counts[0]),
-        current_a=sign * trace.current_a,
-        supply_v=trace.supply_v,
-    )
 
 
 # ---- the levels ----------------------------------------------------------------------------------------------------

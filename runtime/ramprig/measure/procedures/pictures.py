@@ -13,8 +13,7 @@ from ramprig.measure.trace import Floats, MotorTrace
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
-    from .coastdown import RunDown
-    from .curve import Way
+    from .ways import RunDown, Way
 
 FORWARD, BACKWARD, MODEL, FAINT = "#1f5fa8", "#b3541e", "#2b2b2b", "#8a8a8a"
 
