@@ -13,6 +13,7 @@ from ramprig.endure.mannkendall import exact_tail, kendall_s, mann_kendall, sen_
 from ramprig.endure.trends import FeatureTrend, Level, Sign, TrendSettings, TrendWatch
 from ramprig.errors import UsageError
 from ramprig.mock.plant import VENT_BENCH, Plant
+from ramprig.sequence.wear_limits import Threshold, WearLimit
 
 # EPA QA/G-9S, page 109.
 EPA = (10, 10, 10, 5, 10, 20, 18, 17, 15, 24, 15)
@@ -233,6 +234,34 @@ def test_a_sudden_change_of_four_sigma_is_found_within_10_cycles(step: float) ->
     assert math.copysign(1.0, found[-1].change) == math.copysign(1.0, step)
 
 
+@pytest.mark.parametrize("step", [0.5, -0.3])
+@pytest.mark.parametrize("noise", [0.002, 0.02])
+def test_a_large_step_is_told_as_large_as_it_is_by_whatever_finds_it(step: float, noise: float) -> None:
+    values = 1.0 + noise * np.random.default_rng(5).normal(size=1000)
+    values[600:] += step
+    trend = FeatureTrend("vent: energy")
+    found = [finding for cycle, value in enumerate(values.tolist()) for finding in trend.add(cycle, value)]
+    assert {finding.sign for finding in found} == set(Sign)
+    for finding in found:
+        assert finding.change == pytest.approx(step, abs=0.03), str(finding)
+        assert (finding.per_1000 is not None) == (finding.sign is Sign.DRIFT)
+    assert trend.change_of(trend.now) == pytest.approx(step, abs=0.03)
+    sudden = next(finding for finding in found if finding.sign is Sign.SUDDEN)
+    assert " over the last 5 cycles against " in str(sudden)
+
+
+def test_a_feature_about_zero_has_no_share_of_itself() -> None:
+    watch = Threshold(text="at most 1 deg", high=1 / 360.0, is_share=False)
+    limit = WearLimit(feature="vent: position error", watch=watch, fail=None, k=1, n=1, place="f.yaml:1:1")
+    trend = FeatureTrend("vent: position error", TrendSettings(run_in=0, baseline=10), limit)
+    for cycle in range(10):
+        trend.add(cycle, 1e-7 * cycle)
+    (found,) = trend.add(10, 0.01)
+    assert math.isnan(found.change)
+    assert "%" not in str(found)
+    assert "at first; beyond 'at most 1 deg'" in str(found)
+
+
 def test_one_wild_value_is_no_finding() -> None:
     values = ageing(1, per_1000=0.0, cycles=800)
     values[400] = 50.0
@@ -261,7 +290,7 @@ def test_without_detectors_the_present_value_is_the_last_one() -> None:
     for cycle in range(10):
         trend.add(cycle, 2.0)
     trend.add(10, 3.0)
-    assert trend.mean_now == 3.0
+    assert trend.now == 3.0
 
 
 def test_values_that_are_missing_are_counted_and_do_no_harm() -> None:

@@ -14,9 +14,11 @@ standard deviations within 10, the mock's vent drive with friction growing by 0.
 from __future__ import annotations
 
 import math
+from collections import deque
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
 from enum import IntEnum, StrEnum
+from statistics import median
 
 from ramprig.errors import UsageError
 from ramprig.sequence.wear_limits import (
@@ -54,6 +56,15 @@ class Sign(StrEnum):
     SUDDEN = "sudden change"
     SLOW = "slow change"
     DRIFT = "drift"
+
+
+NOW_OVER = {Sign.SUDDEN: 5, Sign.SLOW: 9, Sign.DRIFT: 25}
+"""Of so many last values the median is told as the present value, by what found the change.
+
+The charts look at values that are clipped, so what they hold is no measure of a large change. A step is found after
+some five values (the CUSUM) or eight (the EWMA) at the default figures, so that most of these lie behind it; a drift is
+found where noise is large beside it, and has more. One wild value among them moves a median little.
+"""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -113,12 +124,13 @@ class TrendSettings:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Finding:
-    """A change found at `cycle`: `change` is the present mean's share off the baseline, `per_1000` Sen's slope.
+    """A change found at `cycle`: `now` is the median of the last `over` values, `change` its share off the baseline.
 
-    `per_1000` is the change in 1000 cycles as a share of the baseline; None until there are blocks enough. Where a
-    limit found it, `now` is the last value, `limit` what it is beyond in `k` of the last `n` cycles, and `cycles` are
-    those. With the `turn` check all of these are checks. `baseline` and `change` are NaN where a limit in the feature's
-    unit found it before there was a baseline.
+    `per_1000` is Sen's slope, the change in 1000 cycles as a share of the baseline; None until a drift was found, as a
+    slope says nothing of a step.
+    Where a limit found it, `now` is the last value, `limit` what it is beyond in `k` of the last `n` cycles, and
+    `cycles` are those. With the `turn` check all of these are checks. `baseline` is NaN where a limit in the feature's
+    unit found it before there was one, and `change` there and where the feature lies about zero.
     """
 
     feature: str
@@ -134,16 +146,19 @@ class Finding:
     n: int = 0
     cycles: tuple[int, ...] = ()
     turn: str = "cycle"
+    over: int = 1
 
     def __str__(self) -> str:
         """What was found, in one sentence."""
         value = show_feature(self.feature, self.now)
         text = f"{self.feature}: {self.level.name.lower()} limit" if self.limit else f"{self.feature}: {self.sign}"
         text += f" at {self.turn} {self.cycle}, {value}"
+        text += f" over the last {self.over} {self.turn}s" if self.over > 1 else ""
         if not math.isnan(self.baseline):
+            text += f" against {show_feature(self.feature, self.baseline)} at first"
+        if not math.isnan(self.change):
             slope = "" if self.per_1000 is None else f", {100.0 * self.per_1000:+.2g} % in 1000 {self.turn}s"
-            change = f"{100.0 * self.change:+.1f} %{slope}"
-            text += f" against {show_feature(self.feature, self.baseline)} at first ({change})"
+            text += f" ({100.0 * self.change:+.1f} %{slope})"
         if self.limit:
             listed = ", ".join(map(str, self.cycles))
             text += f"; beyond {self.limit} in {len(self.cycles)} of the last {self.n} {self.turn}s: {listed}"
@@ -169,6 +184,7 @@ class FeatureTrend:
     _sd: float = 0.0
     _correlated: float = 1.0
     _limit: WearLimit = field(init=False)
+    _about_zero: bool = field(init=False)
     _detects: bool = field(init=False)
     _watch: KOfN = field(init=False)
     _fail: KOfN = field(init=False)
@@ -176,13 +192,14 @@ class FeatureTrend:
     _ewma: Ewma = field(init=False)
     _blocks: Blocks = field(default_factory=Blocks)
     _slope: float | None = None
-    _last: float = 0.0
+    _last: deque[float] = field(default_factory=lambda: deque(maxlen=max(NOW_OVER.values())))
 
     def __post_init__(self) -> None:
         settings = self.settings
         self._limit = self.limit or settings.limit_of(self.feature)
         word = FEATURE_WORDS.get(word_of(self.feature))
-        self._detects = settings.detectors and not (word is not None and word.about_zero)
+        self._about_zero = word is not None and word.about_zero
+        self._detects = settings.detectors and not self._about_zero
         self._watch = KOfN(self._limit.k, self._limit.n)
         self._fail = KOfN(self._limit.k, self._limit.n)
         self._cusum = Cusum(0.0, settings.cusum_slack, settings.cusum_limit)
@@ -194,12 +211,19 @@ class FeatureTrend:
         return self.baseline.count >= self.settings.baseline
 
     @property
-    def mean_now(self) -> float:
-        """The weighted mean of the last cycles, or the last value where no detectors look on; before it is complete the
-        baseline's mean."""
-        if self.established and not self._detects:
-            return self._last
-        return self.baseline.mean + self._ewma.value * self._sd
+    def now(self) -> float:
+        """The median of the last values, as many as for a sudden change; the last value where no detectors look on.
+        NaN before the first value after the run-in."""
+        return self._now(NOW_OVER[Sign.SUDDEN] if self._detects else 1)
+
+    def change_of(self, value: float) -> float:
+        """The share by which a value is off the baseline; NaN without a baseline, and where the feature lies about
+        zero and has no share of itself."""
+        mean = self.baseline.mean
+        return (value - mean) / abs(mean) if self.established and mean and not self._about_zero else math.nan
+
+    def _now(self, over: int) -> float:
+        return median(list(self._last)[-over:]) if self._last else math.nan
 
     def limit_values(self) -> list[tuple[Level, float]]:
         """The values that its limits come to, those of changes only once the baseline is complete."""
@@ -217,7 +241,7 @@ class FeatureTrend:
         self._seen += 1
         if self._seen <= self.settings.run_in:
             return []
-        self._last = value
+        self._last.append(value)
         finished = self._blocks.add(cycle, value)
         if not self.established:
             self.baseline.add(value)
@@ -229,7 +253,7 @@ class FeatureTrend:
             if self._detects:
                 found += self._charts(value)
                 found += self._drift() if finished else []
-        return [self._finding(cycle, sign, level, value) for sign, level in found if self._new(sign, level)]
+        return [self._finding(cycle, sign, level) for sign, level in found if self._new(sign, level)]
 
     def _settle(self) -> None:
         """Fix the spread that later values are measured by, wider where the baseline's values hang together."""
@@ -280,7 +304,7 @@ class FeatureTrend:
 
     def slope_per_1000(self) -> float | None:
         """Sen's slope now, as the share of the baseline that changes in 1000 cycles; None with too few blocks."""
-        if len(self._blocks.means) < self.settings.drift_blocks or not self.baseline.mean:
+        if len(self._blocks.means) < self.settings.drift_blocks or not self.baseline.mean or self._about_zero:
             return None
         slope, _ = sen_slope(self._blocks.means, self._blocks.centres)
         return 1000.0 * slope / abs(self.baseline.mean)
@@ -292,22 +316,28 @@ class FeatureTrend:
         self.level = max(self.level, level)
         return True
 
-    def _finding(self, cycle: int, sign: Sign, level: Level, value: float) -> Finding:
-        mean = self.baseline.mean if self.established else math.nan
-        now = value if sign is Sign.LIMIT else self.mean_now
+    def _finding(self, cycle: int, sign: Sign, level: Level) -> Finding:
+        over = 1 if sign is Sign.LIMIT else min(NOW_OVER[sign], len(self._last))
+        now = self._now(over)
         found = Finding(
             feature=self.feature,
             cycle=cycle,
             level=level,
             sign=sign,
-            baseline=mean,
+            baseline=self.baseline.mean if self.established else math.nan,
             now=now,
-            change=(now - mean) / abs(mean) if mean else math.inf,
-            per_1000=self.slope_per_1000(),
+            change=self.change_of(now),
+            per_1000=self.slope_per_1000() if (Sign.DRIFT, Level.WATCH) in self._told else None,
             turn=self.turn,
+            over=over,
         )
-        if sign is not Sign.LIMIT:
-            return found
+        if sign is Sign.LIMIT:
+            return self._with_limit(found)
+        return found
+
+    def _with_limit(self, found: Finding) -> Finding:
+        """What a limit found, with that limit and the cycles beyond it."""
+        level = found.level
         threshold = self._limit.fail if level is Level.FAIL else self._limit.watch
         votes = self._fail if level is Level.FAIL else self._watch
         assert threshold is not None  # it is what found it

@@ -150,10 +150,8 @@ class WearJudge:
 
 
 def _change(trend: FeatureTrend) -> str:
-    mean = trend.baseline.mean
-    if not trend.established or not mean:
-        return "beyond its limit"
-    return f"{100.0 * (trend.mean_now - mean) / abs(mean):+.1f} %"
+    change = trend.change_of(trend.now)
+    return "beyond its limit" if math.isnan(change) else f"{100.0 * change:+.1f} %"
 
 
 def listed(texts: Sequence[str], most: int = TOLD_MAX) -> str:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from ramprig.endure.trends import FeatureTrend, Finding, Level
 from ramprig.endure.wear import BlockJudge
@@ -86,11 +86,31 @@ def wear_cases(facts: Facts) -> Iterator[WearCase]:
         group = f"wear '{block.rules.name}'" + (f" ({number})" if several else "")
         group += " checks" if turn is TurnKind.CHECK else ""
         own = {limit.feature for limit in block.rules.limits}
-        for limit in block.rules.limits:
-            trend = block.features.get(limit.feature)
-            yield _case(group, limit, block, trend, [each for each in of_block if each.feature == limit.feature])
+        cases = [
+            _case(
+                group,
+                limit,
+                block,
+                block.features.get(limit.feature),
+                [each for each in of_block if each.feature == limit.feature],
+            )
+            for limit in block.rules.limits
+        ]
         if block.rules.others is not None:
-            yield _others_case(group, block.rules.others, block, [each for each in of_block if each.feature not in own])
+            rest = [each for each in of_block if each.feature not in own]
+            cases.append(_others_case(group, block.rules.others, block, rest))
+        yield from (_not_to_the_end(case, facts) for case in cases)
+
+
+def unjudged_since(facts: Facts) -> list[str]:
+    """Since when, and why, wear was not judged while the run was under way; empty where it was to the end."""
+    return [str(event.get("text")) for event in facts.of("wear_unjudged")]
+
+
+def _not_to_the_end(case: WearCase, facts: Facts) -> WearCase:
+    """The case; of a run whose judge gave up, only what it had found before counts."""
+    since = "; ".join(unjudged_since(facts))
+    return replace(case, skipped=since) if since and not case.failure else case
 
 
 def _case(
@@ -103,7 +123,7 @@ def _case(
         why = _not_yet(block) or "no cycle showed this feature"
         return WearCase(group=group, name=name, out="\n".join(lines), skipped=why)
     if trend.established:
-        first, now = (show_feature(limit.feature, each) for each in (trend.baseline.mean, trend.mean_now))
+        first, now = (show_feature(limit.feature, each) for each in (trend.baseline.mean, trend.now))
         lines.append(f"{first} at first, {now} at the end")
     elif not findings and all(each is None or each.is_share for each in (limit.watch, limit.fail)):
         why = f"the baseline was not complete: {trend.baseline.count} of {block.rules.baseline} {block.rules.turn}s"
