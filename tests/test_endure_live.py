@@ -328,6 +328,112 @@ def test_between_cycles_nothing_is_kept_however_long_that_lasts() -> None:
     assert watch._pieces == []
 
 
+@pytest.mark.parametrize("early", [0, 20, 300])
+def test_samples_from_before_a_long_cycle_take_no_room_in_its_bound(
+    monkeypatch: pytest.MonkeyPatch, early: int
+) -> None:
+    """They may have come in the same piece as its first ones."""
+    monkeypatch.setattr(features, "CYCLE_ROWS_MAX", 1000)
+    monkeypatch.setattr(live, "BATCH_ROWS", 400)
+    columns = bench_columns(small_bench(), tick_us=1000)
+    watch = LiveWatch(Watched(rules=[], columns=columns, tick_us=1000), say=lambda text: None)
+    layout = Layout.of(Rig.of(small_bench()).mask, 10)
+
+    def come(first: int, end: int) -> None:
+        for tick in range(first, end, 200):
+            ticks = np.arange(tick, tick + 200, 10, dtype=np.int64)
+            watch.on_block(Block(ticks, np.zeros((20, len(layout.channels)), np.int32), layout))
+
+    begin = 10 * early
+    watch.commanded()
+    come(0, begin + 200)
+    watch.begun(begin)
+    come(begin + 200, begin + 32_000)
+    seen = watch.done(TurnDone(number=1, block=1, begin_tick=begin, end_tick=begin + 31_990, after=0))
+    assert (seen.samples, seen.left_out) == (1000, 2200)
+
+
+# ---- when the judge itself is at fault -------------------------------------------------------------------------------
+
+
+def look_in_vain(
+    folder: Path, monkeypatch: pytest.MonkeyPatch, *, limits: str = "", at: str = "done", cycle: int = 5
+) -> tuple[RunResult, list[str]]:
+    """A run whose judge raises in `at` at this cycle, as `ramprig run` would carry it out."""
+    seen: list[int] = []
+
+    class Faulty(LiveWatch):
+        def done(self, turn: TurnDone) -> Any:  # Any: as the class it stands for
+            seen.append(turn.number)
+            if at == "done" and turn.number >= cycle:
+                raise ValueError("shapes")
+            return super().done(turn)
+
+        def on_block(self, block: Block) -> None:
+            if at == "on_block" and cycle - 1 in seen:
+                raise MemoryError
+            super().on_block(block)
+
+        def __init__(self, watched: Watched, *, say: Callable[[str], None]) -> None:
+            if at == "__init__":
+                raise KeyError("line")
+            super().__init__(watched, say=say)
+
+    monkeypatch.setattr(live, "LiveWatch", Faulty)
+    bench, said = small_bench(), list[str]()
+    steps = STEPS.replace("TIMES", "8").replace("WEAR", WEAR.replace(", LIMITS", limits))
+    sequence = sequence_of(folder, steps, head="log: {period: 5 ms}\n")
+    port = MockPort(MockDevice(setup_of_bench(bench), seed=3), pace="virtual", seed=3)
+    wish = RunWish(
+        sequence=sequence, bench=bench, runs=folder / "runs", virtual=True, seed=3, watching=live.watching(said.append)
+    )
+    return run_sequence(wish, port), said
+
+
+@pytest.mark.parametrize(
+    ("at", "since", "cycle"),
+    [
+        ("done", "from cycle 5 on, by a fault of this program (ValueError: shapes)", 5),
+        ("on_block", "from the present cycle on, by a fault of this program (MemoryError: )", 5),
+        ("__init__", "from here on, by a fault of this program (KeyError: 'line')", 1),
+    ],
+)
+def test_a_fault_of_the_judge_does_not_end_a_run_that_nothing_of_wear_is_to_end(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, at: str, since: str, cycle: int
+) -> None:
+    result, said = look_in_vain(tmp_path, monkeypatch, at=at)
+    assert result.outcome.verdict is Verdict.PASSED
+    assert result.outcome.cycles is not None
+    assert result.outcome.cycles.confirmed == 8
+    assert said == [f"wear is not judged {since}"]
+    assert result.outcome.sentence.endswith(f"; wear is not judged {since}")
+    assert result.folder is not None
+    events, _ = read_events(result.folder / "events.jsonl")
+    (told,) = [event for event in events if event["kind"] == "wear_unjudged"]
+    assert told["text"] == said[0]
+    assert "test_endure_live.py" in told["trace"]
+    done = [json.loads(line) for line in (result.folder / "cycles.jsonl").read_text("utf-8").splitlines()]
+    known = {line["number"]: bool(line["features"]) for line in done if line["kind"] == "cycle_done"}
+    assert known == {number: number < cycle for number in range(1, 9)}
+    made = make_report([result.folder], out=tmp_path / "out", issued="")
+    assert said[0] in made.report.read_text("utf-8").replace("&#x27;", "'")
+    skipped = ElementTree.parse(made.junit).findall(".//testcase[@name='every other feature: watch +- 10 %, 3 of 5']")
+    assert [case.find("skipped") is not None for case in skipped] == [True, True]  # of the cycles, and of the checks
+
+
+def test_a_fault_of_the_judge_stops_a_run_in_order_that_a_limit_to_wear_was_to_end(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    limits = ", limits: [{feature: energy, of: vent, fail: +50 %}]"
+    result, said = look_in_vain(tmp_path, monkeypatch, limits=limits)
+    outcome = result.outcome
+    assert (outcome.verdict, outcome.stop_confirmed, outcome.exit_code) == (Verdict.STOPPED, True, 5)
+    assert outcome.sentence.startswith(f"stopped because {said[0]}; cycles: 5 commanded, 5 confirmed, 0 failed")
+    assert said[0].endswith("; the limits that are to end the run cannot be relied on")
+    assert result.folder is not None
+    assert read_broken(result.folder, now_unix_s=2e9).so_far.counted.done == 5  # it can be gone on with
+
+
 def test_two_blocks_of_cycles_are_judged_and_told_apart(tmp_path: Path) -> None:
     """The second one drives harder from its first cycle on: that is no change."""
     second = STEPS.replace("name: open", "name: hard").replace("to: 50 %, in: 500 ms", "to: 58 %, in: 600 ms")

@@ -217,12 +217,13 @@ def test_every_kind_of_event_is_said_in_words_and_claims_what_it_is_named_for() 
 def test_the_kinds_that_are_claimed_are_those_that_the_events_have() -> None:
     """The names in keeping.py are those of event classes that exist."""
     from ramprig.endure.live import WearFound
+    from ramprig.endure.unfailing import WearUnjudged
     from ramprig.record.events import kind_of
     from ramprig.record.keeping import _KINDS
     from ramprig.sequence import happened
     from ramprig.session import events
 
-    classes = [*vars(events).values(), *vars(happened).values(), WearFound]
+    classes = [*vars(events).values(), *vars(happened).values(), WearFound, WearUnjudged]
     known = {kind_of(each.__name__) for each in classes if isinstance(each, type)}
     assert set(_KINDS) <= known
 

@@ -11,15 +11,18 @@ from collections import deque
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 
+import numpy as np
+
 from ramprig.errors import Place
 from ramprig.record.columns import Columns
 from ramprig.record.rows import RowPrinter
 from ramprig.record.scan import Piece
-from ramprig.sequence.cycle_watch import Seen, TurnDone, Watched, Watching, place_of
+from ramprig.sequence.cycle_watch import Seen, TurnDone, Unjudged, Watched, Watching, place_of
 from ramprig.session.blocks import Block
 
 from . import features
 from .trends import Finding
+from .unfailing import UnfailingWatch
 from .wear import Cycle, WearJudge, as_recorded, listed
 
 BATCH_ROWS = 4096
@@ -133,8 +136,10 @@ class LiveWatch:
     def begun(self, tick: int) -> None:
         """It has begun: what came before is let go, so that the bound counts the turn's own samples."""
         self._take()
-        self._pieces = [piece for piece in self._pieces if piece.ticks[-1] >= tick]
+        self._pieces = [_since(piece, tick) for piece in self._pieces if piece.ticks[-1] >= tick]
         self._kept_rows = sum(len(piece) for piece in self._pieces)
+        self._late.clear()
+        self._beyond = 0
 
     def done(self, turn: TurnDone) -> Seen:
         """It is over: its features, and what it newly shows."""
@@ -192,7 +197,17 @@ class LiveWatch:
         """The features to be watched."""
         return listed(self.judge.to_watch())
 
+    def unjudged(self) -> Unjudged:
+        """Nothing: see `UnfailingWatch`."""
+        return Unjudged()
+
+
+def _since(piece: Piece, tick: int) -> Piece:
+    """Its rows from this tick on."""
+    first = int(np.searchsorted(piece.ticks, tick, side="left"))
+    return Piece(piece.ticks[first:], {name: column[first:] for name, column in piece.numbers.items()})
+
 
 def watching(say: Callable[[str], None]) -> Watching:
-    """Makes who looks on at a run; what is found is said to the user by `say`."""
-    return lambda watched: LiveWatch(watched, say=say)
+    """Makes who looks on at a run; what is found is said to the user by `say`. No fault of it ends a run by itself."""
+    return lambda watched: UnfailingWatch(watched, lambda: LiveWatch(watched, say=say), say=say)

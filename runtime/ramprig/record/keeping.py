@@ -37,7 +37,7 @@ _KINDS = {
     **dict.fromkeys(("tripped", "restarted", "device_exchanged"), Around.TRIP),
     **dict.fromkeys(("stop_asked", "stop_begun"), Around.STOP),
     **dict.fromkeys(("gap_found", "late_host", "host_slept", "order_overdue", "notices_missed"), Around.TROUBLE),
-    "wear_found": Around.WATCH,
+    **dict.fromkeys(("wear_found", "wear_unjudged"), Around.WATCH),
     "marked": Around.MARK,
     **dict.fromkeys(("cycle_begun", "check_begun", "cycle_done", "check_done"), Around.CYCLE),
 }

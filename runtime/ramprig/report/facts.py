@@ -29,7 +29,8 @@ KEPT_KINDS = frozenset(
         *("run_started", "run_resumed", "run_finished", "opened", "armed", "limit_written"),
         *("tripped", "restarted", "device_exchanged", "stop_begun", "stopped", "stop_asked", "stop_judged"),
         *("gap_found", "late_host", "host_slept", "wall_clock_set", "link_trouble", "notices_missed", "disk_trouble"),
-        *("marked", "order_overdue", "noticed", "check_begun", "cycle_interrupted", "wear_found"),
+        *("marked", "order_overdue", "noticed", "check_begun", "cycle_interrupted"),
+        *("wear_found", "wear_unjudged"),
     }
 )
 

@@ -21,6 +21,7 @@ from .explain import Explanation, view_of_trip
 from .facts import Facts
 from .trends import rules_in_force, trends_of
 from .untold import untold_table
+from .worn import unjudged_since
 
 ENTRIES = {
     "lab": "laboratory and its address",
@@ -168,7 +169,8 @@ def _trends(read: Read, figures: _Figures) -> str:
     found = trends_of(read.facts, read.digest)
     if not found:
         return ""
-    words = sections.trend_findings(found, rules_in_force(read.facts))
+    words = "".join(page.paragraph(text, kind="note") for text in unjudged_since(read.facts))
+    words += sections.trend_findings(found, rules_in_force(read.facts))
     tables = checks_table(read.digest.features)
     tables += untold_table(read.digest.features, motors=read.facts.motors, servos=read.facts.servos)
     return words + figures.put(plots.by_cycle(read.facts, found)) + tables

@@ -53,6 +53,14 @@ class Seen:
     found: tuple[object, ...] = ()
 
 
+@dataclass(frozen=True, slots=True)
+class Unjudged:
+    """Since when, and why, wear is no longer judged, empty where it is; `ends_run` where the run is to end for it."""
+
+    text: str = ""
+    ends_run: bool = False
+
+
 class CycleWatch(Protocol):
     """Looks on at one part of a run. All is called in the session's thread."""
 
@@ -78,6 +86,10 @@ class CycleWatch(Protocol):
 
     def to_watch(self) -> str:
         """What is to be watched at the end of the run, for the end of its sentence; empty where nothing is."""
+        ...
+
+    def unjudged(self) -> Unjudged:
+        """Since when, and why, wear is no longer judged."""
         ...
 
 

@@ -353,8 +353,10 @@ class _Run:
         text = ""
         if book is not None and self.plan.counts_cycles:
             text += f"; cycles: {book.counted}"
-            to_watch = "" if book.watch is None else book.watch.to_watch()
+        if book is not None and book.watch is not None and self.plan.counts_cycles:
+            to_watch, unjudged = book.watch.to_watch(), book.watch.unjudged()
             text += f"; to watch: {to_watch}" if to_watch else ""
+            text += f"; {unjudged.text}" if unjudged.text and not unjudged.ends_run else ""
         if self.slept_s:
             times = _count(len(self.slept_s), "time")
             text += f"; the host slept {times}, {format_duration(sum(self.slept_s))} in all"

@@ -523,11 +523,17 @@ class Executive:
         return True
 
     def check_wear(self) -> None:
-        """End where the cycles so far, those of earlier parts of the run among them, show too much wear."""
+        """End where the cycles so far, those of earlier parts of the run among them, show too much wear, or where
+        nobody can tell any more and the file has limits for it."""
         watch = None if self.book is None else self.book.watch
-        why, place = ("", None) if watch is None else watch.too_worn()
+        if watch is None:
+            return
+        why, place = watch.too_worn()
         if why:
             raise Ended(Verdict.FAILED, why, place)
+        unjudged = watch.unjudged()
+        if unjudged.ends_run:
+            raise Ended(Verdict.STOPPED, f"stopped because {unjudged.text}", None)
 
     def _judged_up_to(self, tick: int) -> bool:
         """Whether everything up to the tick has happened and been looked at."""
