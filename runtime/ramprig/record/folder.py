@@ -18,6 +18,7 @@ A folder is never used twice: where the name exists already, it gets a number.
 
 from __future__ import annotations
 
+import contextlib
 import hashlib
 import json
 import platform
@@ -187,8 +188,11 @@ class RunFolder:
             folder.reserve.take()
             sync_folder(path)
         except OSError as error:
-            folder.close()
+            folder.abandon()
             raise RecordError(f"the run folder {path} cannot be gone on with: {error.strerror or error}") from error
+        except BaseException:
+            folder.abandon()
+            raise
         return folder
 
     def _copy_inputs(self) -> None:
@@ -225,8 +229,10 @@ class RunFolder:
         file.close()
 
     def free_name(self, name: str) -> str:
-        """The name that `new_file` would take."""
-        return _free_name(name, {path.name.lower() for path in self.path.iterdir()})
+        """The name that `new_file` would take: one that no file has, nor any part of the run has claimed for its
+        samples, though it broke off before it began the file."""
+        there = {path.name.lower() for path in self.path.iterdir()}
+        return _free_name(name, there if self.earlier is None else there | self.earlier.claimed)
 
     def go_on(self, name: str) -> AppendFile | None:
         """The file of this name that earlier parts wrote, for more; None where there is none."""
@@ -240,6 +246,15 @@ class RunFolder:
         for file in self._reopened.values():
             file.close()
         self._reopened.clear()
+
+    def abandon(self) -> None:
+        """Let go of every file and of the reserve, so that a later try finds nothing held; never raises."""
+        self.close()
+        for file in self._files:
+            if isinstance(file, AppendFile):
+                with contextlib.suppress(OSError):
+                    file.close()
+        self.reserve.free()
 
     def head(self) -> dict[str, Json]:
         """What `run.json` says at the start and at the end alike."""

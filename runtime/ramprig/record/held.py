@@ -18,6 +18,7 @@ from collections.abc import Callable, Mapping
 from pathlib import Path
 from typing import Any
 
+from ..errors import RecordError
 from .appendfile import AppendFile, sync_folder
 from .rows import Rows
 from .volumes import HELD_NAMES, Stream, held_files, volume_files
@@ -89,30 +90,49 @@ def _remove(folder: Path) -> None:
 def absorb_held(folder: Path, part: Mapping[str, Any]) -> None:  # Any: JSON as it comes
     """Move the held rows of a part that broke off to the end of its last volume. Raises OSError, RecordError.
 
-    Where that is broken off too, doing it again comes to the same. A part whose account is made is left as it is.
+    Where that is broken off too, doing it again comes to the same. A part whose account is made is left as it is, and
+    held rows that no volume is there for, or that cannot be read, are never removed.
     """
     held = held_files(folder)
-    if part.get("status") == "finished":
+    volumes = [path for path in volume_files(folder, part) if path not in held]
+    if part.get("status") == "finished" or not volumes:
         for path in held:
             _set_aside(path)
         return
     if not held:
         return
-    volumes = [path for path in volume_files(folder, part) if path not in held]
-    if volumes:
-        file, _ = AppendFile.reopen(volumes[-1])
-        try:
-            last = _last_tick(volumes)
-            for path in held:
-                with open(path, "rb") as source:
-                    source.readline()
-                    lines = [line for line in source if line.endswith(b"\n") and int(line.split(b",")[0]) > last]
-                file.append(b"".join(lines))
-                last = max([last, *(int(line.split(b",")[0]) for line in lines[-1:])])
-            file.sync()
-        finally:
-            file.close()
+    Stream([*volumes, *held], columns=())  # raises where they do not belong together
+    last = _last_tick(volumes)
+    file, _ = AppendFile.reopen(volumes[-1])
+    try:
+        for path in held:
+            last = _move_rows(path, file, after=last)
+        file.sync()
+    finally:
+        file.close()
     _remove(folder)
+
+
+def _move_rows(path: Path, to: AppendFile, *, after: float) -> float:
+    """Append the whole rows after this tick; returns the last tick there is then. Raises OSError, RecordError."""
+    lines: list[bytes] = []
+    last = after
+    with open(path, "rb") as source:
+        source.readline()
+        for line in source:
+            tick = _tick_of(line, path)
+            if line.endswith(b"\n") and tick > last:
+                lines.append(line)
+                last = tick
+    to.append(b"".join(lines))
+    return last
+
+
+def _tick_of(line: bytes, path: Path) -> int:
+    try:
+        return int(line.partition(b",")[0])
+    except ValueError as error:
+        raise RecordError(f"{path} is no samples file: a row begins with {line[:20]!r}, not with a tick") from error
 
 
 def _set_aside(path: Path) -> None:

@@ -45,6 +45,17 @@ class Earlier:
         """The number of the part to follow."""
         return len(self.parts) + 1
 
+    @property
+    def claimed(self) -> frozenset[str]:
+        """The names of samples files, in small letters, that belong to earlier parts, whether they are there or not."""
+        parts = [entry for entry in self.parts if isinstance(entry, dict)]
+        names = [name for entry in parts for name in (entry.get("samples_file"), *_listed(entry.get("samples_files")))]
+        return frozenset(str(name).lower() for name in names if name)
+
+
+def _listed(found: Json) -> list[Json]:
+    return found if isinstance(found, list) else []
+
 
 def parts_of(manifest: Document) -> list[Document]:
     """An entry for each part of the run, in order; a run that was never interrupted has one."""

@@ -178,6 +178,7 @@ class Recorder:
             self._samples_names = samples.names
             return events, samples
         except OSError as error:
+            self.folder.abandon()
             raise RecordError(f"the run folder {self.folder.path} cannot be written: {error.strerror}") from error
 
     def _tell_at_once(self, event: object) -> None:

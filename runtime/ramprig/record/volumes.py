@@ -73,13 +73,15 @@ def volume_files(folder: Path, part: Mapping[str, Any]) -> list[Path]:  # Any: J
 
 
 def held_files(folder: Path) -> list[Path]:
-    """The files of held rows that have any, the older first."""
+    """The files of held rows that have any, the older first. Raises RecordError where one holds something else."""
     found = []
     for path in (folder / name for name in HELD_NAMES):
         if has_header(path):
             with open(path, "rb") as file:
                 file.readline()
                 tick, comma, _ = file.readline(HEADER_MAX_BYTES).partition(b",")
+            if comma and not tick.isdigit():
+                raise RecordError(f"{path} is no samples file: its first row begins with {tick[:20]!r}, not a tick")
             if comma:
                 found.append((int(tick), path))
     return [path for _, path in sorted(found)]

@@ -36,8 +36,8 @@ class VolumeWriter:
         self._limits = limits
         self._span_ticks = None if limits.span_s is None else max(1, round(limits.span_s * 1e6 / tick_us))
         self._on_begun = on_begun
-        self.names: list[str] = [folder.free_name(SAMPLES_FILE)]
-        self._file = self._begin(self.names[0])
+        self._file = self._begin(SAMPLES_FILE)
+        self.names: list[str] = [self._file.path.name]
         self._first_tick: int | None = None
         self._closed_rows = 0
 
@@ -83,7 +83,7 @@ class VolumeWriter:
         self._closed_rows += rows
         self._folder.seal(self._file)
         self._file, self._first_tick = file, None
-        self.names.append(name)
+        self.names.append(file.path.name)
         self._on_begun(tick, rows)
 
     def _begin(self, name: str) -> AppendFile:
