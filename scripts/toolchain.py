@@ -8,6 +8,7 @@ Standard library only.
 
 import glob
 import os
+import re
 import shutil
 import subprocess
 from collections.abc import Callable, Iterable
@@ -51,6 +52,9 @@ FUZZING = Part(
 )
 GATES = Part("the FPGA blocks", ("iverilog", "vvp", "yosys"), (), ("iverilog", "yosys"))
 PARTS = (CORE, BOARD, EMULATOR, PROOFS, FUZZING, GATES)
+LISTS = "/var/lib/apt/lists/*Packages*"
+"""Where apt keeps what the release has; nothing there on a system whose lists were never fetched, or thrown away."""
+CANDIDATE = re.compile(r"^(\S+):\n(?:  Installed: .*\n)?  Candidate: (.+)$", re.MULTILINE)
 
 
 def is_there(part: Part) -> bool:
@@ -77,19 +81,49 @@ def may_install() -> bool:
     return debian and hasattr(os, "geteuid") and os.geteuid() == 0
 
 
+def known_packages(packages: "Iterable[str]") -> "set[str]":
+    """Those of the packages that apt can install from the lists it has, or has installed."""
+    plain = dict(os.environ, LC_ALL="C")
+    done = subprocess.run(["apt-cache", "policy", *packages], env=plain, capture_output=True, text=True, check=False)
+    return {name for name, candidate in CANDIDATE.findall(done.stdout) if candidate != "(none)"}
+
+
+def install(parts: "list[Part]") -> None:
+    """Install what some parts need; where that fails, fetch newer lists and try part by part, so that one may fail."""
+    quiet = dict(os.environ, DEBIAN_FRONTEND="noninteractive")
+    command = ["apt-get", "install", "-y", "-q", "--no-install-recommends"]
+    if subprocess.run([*command, *packages_of(parts)], env=quiet, capture_output=True, check=False).returncode != 0:
+        update_lists()
+        for part in parts:
+            subprocess.run([*command, *part.packages], env=quiet, capture_output=True, check=False)
+
+
+def update_lists() -> None:
+    """Fetch apt's lists of packages."""
+    subprocess.run(["apt-get", "update", "-q"], capture_output=True, check=False)
+
+
 def provide(say: "Callable[[str], None]") -> "list[Part]":
-    """Install what is missing where we may, and say what was done or is missing; the parts that cannot be tested."""
+    """Install what is missing where we may, and say what was done or is missing; the parts that cannot be tested.
+
+    A part with a package that this release does not have is not installed at all, and nothing is fetched for it: where
+    it alone is missing, a start costs one look into apt's own lists.
+    """
     lacking = [part for part in PARTS if not is_there(part)]
+    unknown: dict[str, str] = {}
     if lacking and may_install():
-        packages = packages_of(lacking)
-        say(f"Installing with apt-get: {' '.join(packages)} ...")
-        quiet = dict(os.environ, DEBIAN_FRONTEND="noninteractive")
-        install = ["apt-get", "install", "-y", "-q", "--no-install-recommends"]
-        if subprocess.run([*install, *packages], env=quiet, capture_output=True, check=False).returncode != 0:
-            subprocess.run(["apt-get", "update", "-q"], env=quiet, capture_output=True, check=False)
-            for part in lacking:  # one by one: a package that this release does not have must not keep the others out
-                subprocess.run([*install, *part.packages], env=quiet, capture_output=True, check=False)
+        if not glob.glob(LISTS):
+            update_lists()
+        known = known_packages(packages_of(lacking))
+        unknown = {part.title: " ".join(name for name in part.packages if name not in known) for part in lacking}
+        possible = [part for part in lacking if not unknown[part.title]]
+        if possible:
+            say(f"Installing with apt-get: {' '.join(packages_of(possible))} ...")
+            install(possible)
         lacking = [part for part in PARTS if not is_there(part)]
     for part in lacking:
-        say(f"SKIPPED, not passed: {part.title}; it needs: apt-get install {' '.join(part.packages)}")
+        if names := unknown.get(part.title):
+            say(f"SKIPPED, not passed: {part.title}; this release of the system has no package {names}")
+        else:
+            say(f"SKIPPED, not passed: {part.title}; it needs: apt-get install {' '.join(part.packages)}")
     return lacking
