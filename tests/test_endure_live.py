@@ -32,7 +32,7 @@ from ramprig.report.digest import digest_samples
 from ramprig.report.explain import explain_folder
 from ramprig.report.facts import gather
 from ramprig.report.making import make_report
-from ramprig.report.trends import cycles_of, trends_of, wear_of
+from ramprig.report.trends import cycles_of, seen_of, wear_of
 from ramprig.sequence.columns import bench_columns
 from ramprig.sequence.compile import compile_plan
 from ramprig.sequence.cycle_watch import CycleWatch, TurnDone, Watched
@@ -271,6 +271,12 @@ def test_a_limit_in_the_features_unit_needs_no_baseline(tmp_path: Path) -> None:
     assert run.result.outcome.verdict is Verdict.FAILED
     assert "vent: peak current: fail limit at cycle " in run.result.outcome.sentence
     assert "beyond 'at most 100 mA' in 1 of the last 1 cycles" in run.result.outcome.sentence
+    text = make_report([run.folder], out=tmp_path / "out", issued="").report.read_text("utf-8")
+    (said,) = run.said
+    section = text.partition("Cycle over cycle</span>")[2].partition("</section>")[0].replace("&#x27;", "'")
+    assert f"<td>{said}</td>" in section  # of three cycles, which are too few to be drawn
+    assert "no trend is judged: that takes more than 12 cycles or 11 checks" in section.lower()
+    assert "of each cycle" not in section
     assert run.watch.judge.blocks[CYCLES_OF_1].turns - run.watch.judge.blocks[CYCLES_OF_1].run_in == 1
 
 
@@ -443,7 +449,7 @@ def test_two_blocks_of_cycles_are_judged_and_told_apart(tmp_path: Path) -> None:
     blocks = {key: block.turns for key, block in run.watch.judge.blocks.items() if key[1] is TurnKind.CYCLE}
     assert blocks == {(1, TurnKind.CYCLE): 14, (2, TurnKind.CYCLE): 14}
     facts = gather(run.folder)
-    names = [trend.name for trend in trends_of(facts, digest_samples(facts))]
+    names = [trend.name for trend in seen_of(facts, digest_samples(facts)).drawn]
     assert "'open' vent forward: steady speed" in names
     assert "'hard' vent forward: steady speed" in names
 

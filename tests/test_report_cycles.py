@@ -19,7 +19,7 @@ from ramprig.report.envelope import Envelope
 from ramprig.report.facts import Facts, gather
 from ramprig.report.making import make_report
 from ramprig.report.plots import by_cycle
-from ramprig.report.trends import trends_of
+from ramprig.report.trends import seen_of
 
 STEPS = """- cycle:
     times: 7
@@ -80,7 +80,7 @@ def test_a_feature_that_ages_is_shown_in_the_report_of_its_run() -> None:
                 span=span, samples=100, left_out=0, duration_s=1.0, lowest_supply_v=12.0, motors={"vent": motor}
             )
         )
-    found = {trend.name: trend for trend in trends_of(facts, digest)}
+    found = {trend.name: trend for trend in seen_of(facts, digest).drawn}
     assert list(found) == ["duration", "lowest supply", "vent forward: steady current"]
     assert found["duration"].findings == ()
     current = found["vent forward: steady current"]
@@ -117,8 +117,8 @@ def test_a_current_that_grows_is_found_and_a_steady_one_is_not() -> None:
     noise = 1 + random.normal(0, 0.02, 600)
     steady = 0.9 * noise
     growing = steady * (1 + 0.0005 * np.maximum(0, np.arange(600) - 150))
-    (calm,) = trends_of(*made_up(steady))
-    (found,) = trends_of(*made_up(growing))
+    (calm,) = seen_of(*made_up(steady)).drawn
+    (found,) = seen_of(*made_up(growing)).drawn
     assert calm.name == "vent: greatest current"
     assert calm.findings == ()
     assert calm.judged.established
@@ -144,14 +144,21 @@ def test_checks_are_told_by_their_first_and_last() -> None:
 
 
 def test_few_cycles_have_no_trend() -> None:
-    assert trends_of(*made_up(np.ones(4))) == []
+    assert seen_of(*made_up(np.ones(4))).drawn == ()
+
+
+def test_a_report_of_few_cycles_says_that_no_trend_is_judged(tmp_path: Path) -> None:
+    result, _ = run_case(tmp_path, Case("", steps=STEPS.replace("times: 7", "times: 2")), seed=4)
+    assert result.folder is not None
+    text = make_report([result.folder], out=tmp_path / "out", issued="").report.read_text("utf-8")
+    assert "No trend is judged: that takes more than 120 cycles." in text
 
 
 def test_a_long_tests_plot_stays_small_and_keeps_its_spike() -> None:
     values = np.full(10_000, 0.9)
     values[7_777] = 1.7
     facts, digest = made_up(values)
-    (plot,) = by_cycle(facts, trends_of(facts, digest))
+    (plot,) = by_cycle(facts, seen_of(facts, digest).drawn)
     assert len(plot.svg) < 60_000
     (polygon,) = re.findall(r'<polygon points="([^"]*)"', plot.svg)
     heights = [float(point.split(",")[1]) for point in polygon.split()]

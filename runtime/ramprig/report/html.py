@@ -19,7 +19,7 @@ from .compare import compared
 from .digest import Digest
 from .explain import Explanation, view_of_trip
 from .facts import Facts
-from .trends import rules_in_force, trends_of
+from .trends import rules_in_force, seen_of
 from .untold import untold_table
 from .worn import unjudged_since
 
@@ -165,15 +165,17 @@ def _parts_of(read: Read, wish: Wish, figures: _Figures) -> list[tuple[str, str]
 
 
 def _trends(read: Read, figures: _Figures) -> str:
-    """What the features showed, in words first, then each against the cycle."""
-    found = trends_of(read.facts, read.digest)
-    if not found:
+    """What the features showed, in words first, then each against the cycle where there are turns enough to draw."""
+    facts, digest = read.facts, read.digest
+    seen = seen_of(facts, digest)
+    words = "".join(page.paragraph(text, kind="note") for text in unjudged_since(facts))
+    if seen.drawn or seen.turns:
+        words += sections.trend_findings(seen, rules_in_force(facts))
+    if not words:
         return ""
-    words = "".join(page.paragraph(text, kind="note") for text in unjudged_since(read.facts))
-    words += sections.trend_findings(found, rules_in_force(read.facts))
-    tables = checks_table(read.digest.features)
-    tables += untold_table(read.digest.features, motors=read.facts.motors, servos=read.facts.servos)
-    return words + figures.put(plots.by_cycle(read.facts, found)) + tables
+    tables = checks_table(digest.features)
+    tables += untold_table(digest.features, motors=facts.motors, servos=facts.servos)
+    return words + figures.put(plots.by_cycle(facts, seen.drawn)) + tables
 
 
 def _ranges(digest: Digest) -> str:

@@ -7,7 +7,7 @@ from collections.abc import Mapping, Sequence
 from ramprig.quantity import format_duration
 from ramprig.record.events import from_rfc3339
 from ramprig.record.reading import Audit
-from ramprig.sequence.wear_limits import TurnKind, WearRules
+from ramprig.sequence.wear_limits import WearRules
 from ramprig.session.limits import LimitTable
 from ramprig_link.words import LIMITS, Per
 
@@ -15,7 +15,7 @@ from . import page
 from .digest import Digest
 from .facts import Document, Expectation, Facts
 from .kept import said_of_thinning, whole_of
-from .trends import Trend
+from .trends import Seen
 from .unjudged import unjudged, why_unjudged
 
 RULE = (
@@ -358,25 +358,26 @@ def account(facts: Facts, audit: Audit) -> str:
     return page.facts(pairs) + "".join(page.paragraph(text) for text in statements) + table + hashes
 
 
-def trend_findings(found: Sequence[Trend], rules: Sequence[WearRules]) -> str:
-    """What the trends of the features showed, and by which rules; without rules nothing was judged."""
+def trend_findings(seen: Seen, rules: Sequence[WearRules]) -> str:
+    """What the trends of the features showed, all of it, and by which rules; without rules nothing was judged."""
     if not rules:
         return page.paragraph("No trend is judged: the sequence says 'wear: off'.", kind="note")
     lines = [[page.text(line)] for each in rules for line in each.lines()]
     rule = page.table(["looked for"], lines) + page.paragraph(NO_STANDARD, kind="note")
-    told = sorted(((trend, finding) for trend in found for finding in trend.findings), key=lambda pair: -pair[1].level)
-    rows = [
-        [f"{finding.turn} {finding.cycle}", page.text(trend.name.removesuffix(finding.feature) + str(finding))]
-        for trend, finding in told
-    ]
+    told = sorted(seen.findings, key=lambda pair: -pair[1].level)
+    rows = [[f"{finding.turn} {finding.cycle}", page.text(f"{prefix}{finding}")] for prefix, finding in told]
+    waiting = page.paragraph(_still_waiting(seen, rules), kind="note") if seen.waiting or not seen.judged else ""
     if rows:
-        return page.table(["at", "found"], rows) + rule
-    if not any(trend.judged.established for trend in found):
-        needed = min((each.run_in_turns + each.baseline for each in rules if each.turn is TurnKind.CYCLE), default=0)
-        return page.paragraph(f"No trend is judged: that takes more than {needed} cycles.", kind="note") + rule
-    return (
-        page.paragraph("The features drawn here show no change; a limit that ended the run is told at its head.") + rule
-    )
+        return page.table(["at", "found"], rows) + waiting + rule
+    none = f"{seen.judged} features were judged, and none was found changed."
+    return (page.paragraph(none, kind="note") if seen.judged else "") + waiting + rule
+
+
+def _still_waiting(seen: Seen, rules: Sequence[WearRules]) -> str:
+    """What was not judged against a baseline, as there were too few turns."""
+    needed = [f"{each.run_in_turns + each.baseline} {each.turn}s" for each in rules]
+    which = f"Of {seen.waiting} features no trend is judged" if seen.judged else "No trend is judged"
+    return f"{which}: that takes more than {' or '.join(dict.fromkeys(needed))}."
 
 
 def protections(facts: Facts) -> str:

@@ -9,7 +9,7 @@ fastest speed, the greatest current, the lowest supply and how long a pass took,
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -40,6 +40,19 @@ class Trend:
     findings: tuple[Finding, ...]
 
 
+@dataclass(frozen=True, slots=True)
+class Seen:
+    """What the `turns` of a run, its cycles and checks with features, come to. `drawn` are the features that there are
+    turns enough of for a picture, `findings` all that was found, each with the block's name before it where there are
+    several. `judged` is how many features were judged against a complete baseline, `waiting` how many had none yet."""
+
+    drawn: tuple[Trend, ...]
+    findings: tuple[tuple[str, Finding], ...]
+    judged: int
+    waiting: int
+    turns: int = 0
+
+
 def rules_in_force(facts: Facts) -> tuple[WearRules, ...]:
     """The limits to wear by which the cycles of a run are judged: those that were in force while it was under way.
 
@@ -67,11 +80,31 @@ def rules_in_force(facts: Facts) -> tuple[WearRules, ...]:
     )
 
 
-def trends_of(facts: Facts, digest: Digest) -> list[Trend]:
-    """The features of the whole cycles of a run, and of its checks; none where there are fewer than CYCLES_MIN."""
-    by_feature = _by_feature(facts, digest)
-    if by_feature:
-        return by_feature
+def seen_of(facts: Facts, digest: Digest) -> Seen:
+    """What the whole cycles of a run and its checks show, whether or not there are CYCLES_MIN of them to be drawn."""
+    cycles = cycles_of(facts, digest.features)
+    if not any(cycle.features for cycle in cycles):
+        return _seen(trends := _of_passes(facts, digest), [("", each) for trend in trends for each in trend.findings])
+    judge, findings = wear_of(facts, cycles)
+    if not judge.blocks:
+        return _seen(_unjudged([cycle for cycle in cycles if cycle.number]), [])
+    several = len({number for number, _ in judge.blocks}) > 1
+    prefixes = {number: f"'{block.rules.name}' " if several else "" for (number, _), block in judge.blocks.items()}
+    drawn = _by_feature(judge, cycles, findings, prefixes)
+    streams = [trend for block in judge.blocks.values() for trend in block.features.values()]
+    judged = sum(trend.established for trend in streams)
+    told = tuple((prefixes[number], finding) for number, finding in findings)
+    turns = sum(bool(cycle.features) for cycle in cycles)
+    return Seen(tuple(drawn), told, judged, len(streams) - judged, turns)
+
+
+def _seen(trends: list[Trend], findings: list[tuple[str, Finding]]) -> Seen:
+    judged = sum(trend.judged.established for trend in trends)
+    return Seen(tuple(trends), tuple(findings), judged, len(trends) - judged)
+
+
+def _of_passes(facts: Facts, digest: Digest) -> list[Trend]:
+    """What any sequence with passes has; none where there are fewer than CYCLES_MIN."""
     rows = [row for row in digest.intervals if 0 < row.number < digest.interval_edges]
     if len(facts.passes) <= CYCLES_MIN or len(rows) < CYCLES_MIN:
         return []
@@ -120,20 +153,17 @@ def cycles_of(facts: Facts, features: Sequence[TurnFeatures]) -> list[Cycle]:
     ]
 
 
-def _by_feature(facts: Facts, digest: Digest) -> list[Trend]:
-    cycles = cycles_of(facts, digest.features)
-    judge, findings = wear_of(facts, cycles)
-    if not judge.blocks:
-        return _unjudged([cycle for cycle in cycles if cycle.number])
+def _by_feature(
+    judge: WearJudge, cycles: Sequence[Cycle], findings: Sequence[tuple[int, Finding]], prefixes: Mapping[int, str]
+) -> list[Trend]:
+    """Each judged feature of the blocks, and of their checks, that have CYCLES_MIN turns."""
     found = []
-    several = len({number for number, _ in judge.blocks}) > 1
     for (number, turn), block in judge.blocks.items():
         is_check = turn is TurnKind.CHECK
         of_block = [cycle for cycle in cycles if cycle.block == number and (cycle.number == 0) == is_check]
-        numbers = np.array([float(cycle.number or place) for place, cycle in enumerate(of_block, 1)])
         if len(of_block) < CYCLES_MIN:
             continue
-        prefix = f"'{block.rules.name}' " if several else ""
+        numbers = np.array([float(cycle.number or place) for place, cycle in enumerate(of_block, 1)])
         for name in dict.fromkeys(name for cycle in of_block for name in cycle.features):
             limit = block.rules.limit_of(name)
             if limit is None:
@@ -143,7 +173,7 @@ def _by_feature(facts: Facts, digest: Digest) -> list[Trend]:
             of_feature = tuple(
                 finding for at, finding in findings if at == number and finding.feature == name and finding.turn == turn
             )
-            found.append(Trend(prefix + name, unit_of(name), numbers, values, judged, of_feature))
+            found.append(Trend(prefixes[number] + name, unit_of(name), numbers, values, judged, of_feature))
     return found
 
 
