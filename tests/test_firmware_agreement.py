@@ -3,16 +3,23 @@
 from __future__ import annotations
 
 import random
+import shutil
+import subprocess
+import sys
+from pathlib import Path
 
 import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
 from agreement import Session, Step, check, cut_down, first_difference, make_session
-from core_device import COMPILER, CoreDevice
+from core_device import COMPILER, FIRMWARE, CoreDevice
+from ramprig_link.check import seal
+from ramprig_link.words import LIMITS
 
 pytestmark = pytest.mark.skipif(COMPILER is None, reason="no C compiler: install gcc (Debian: apt-get install gcc)")
 
+CLANG = shutil.which("clang")
 SESSIONS = 2000
 SOAK_SESSIONS = 200_000
 BATCH = 100
@@ -60,3 +67,26 @@ def test_a_session_is_cut_down_to_what_its_difference_needs() -> None:
     short = cut_down(Session(board="plain", limits={}, steps=steps), Bugged)
     assert [step.line for step in short.steps] == ["03 arm 300 00000000"]
     assert first_difference(short, CoreDevice) is None
+
+
+@pytest.mark.skipif(CLANG is None, reason="no clang: another compiler does not watch where pointers lead")
+@pytest.mark.parametrize(("axes", "servos"), [(1, 2), (4, 4)])
+def test_no_limit_of_any_board_is_looked_for_beyond_its_table(axes: int, servos: int, tmp_path: Path) -> None:
+    built = tmp_path / "core.so"
+    sources = [*sorted((FIRMWARE / "core").glob("*.c")), FIRMWARE / "ports" / "scripted" / "scripted.c"]
+    watched = ["-fsanitize=bounds,pointer-overflow,shift,signed-integer-overflow", "-fsanitize-trap=all"]
+    sizes = [f"-DRR_AXES={axes}", f"-DRR_SERVOS={servos}"]
+    subprocess.run([str(CLANG), "-std=c11", "-shared", "-fPIC", *watched, *sizes, "-o", built, *sources], check=True)
+    lines = [f"limit {item} {index}" for item in LIMITS for index in range(max(axes, servos) + 1)]
+    sealed = b"".join(seal(f"{i % 200:02x} {line}".encode()) for i, line in enumerate(lines))
+    program = (
+        "import ctypes, sys; core = ctypes.CDLL(sys.argv[1]); core.scripted_new.restype = ctypes.c_void_p\n"
+        "board = ctypes.c_void_p(core.scripted_new(b'f', b'b', b's')); core.scripted_start(board, 0, 0)\n"
+        "lines = sys.stdin.buffer.read(); core.scripted_feed(board, lines, len(lines)); core.scripted_tick(board)\n"
+        "length = ctypes.c_uint32(); core.scripted_take.restype = ctypes.c_void_p\n"
+        "said = core.scripted_take(board, ctypes.byref(length))\n"
+        "sys.stdout.buffer.write(ctypes.string_at(said, length.value))\n"
+    )
+    done = subprocess.run([sys.executable, "-c", program, built], input=sealed, capture_output=True, check=False)
+    assert done.returncode == 0, f"a trap of the compiler's watch ended the program: {done.returncode}"
+    assert done.stdout.count(b" ok ") == 5 + 17 * axes + 4 * servos

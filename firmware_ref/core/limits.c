@@ -93,19 +93,21 @@ struct spot {
 
 static struct spot spot_at(const struct rr_limits *limits, uint8_t place)
 {
-    struct spot spot = {rows + place, (const uint8_t *)&limits->board, 0};
+    struct spot spot = {rows, (const uint8_t *)&limits->board, 0};
+    uint8_t row = place;
     if (place >= RR_LIMITS - RR_SERVO_LIMITS * RR_SERVOS) {
 #if RR_SERVOS > 0
         place = (uint8_t)(place - (RR_LIMITS - RR_SERVO_LIMITS * RR_SERVOS));
-        spot.row = rows + RR_DEVICE_LIMITS + RR_AXIS_LIMITS + place / RR_SERVOS;
+        row = (uint8_t)(RR_DEVICE_LIMITS + RR_AXIS_LIMITS + place / RR_SERVOS);
         spot.kept = (const uint8_t *)&limits->servo[place % RR_SERVOS];
 #endif
     } else if (place >= RR_DEVICE_LIMITS) {
         place = (uint8_t)(place - RR_DEVICE_LIMITS);
         spot.axis = place % RR_AXES;
-        spot.row = rows + RR_DEVICE_LIMITS + place / RR_AXES;
+        row = (uint8_t)(RR_DEVICE_LIMITS + place / RR_AXES);
         spot.kept = (const uint8_t *)&limits->axis[spot.axis];
     }
+    spot.row += row; /* only now: a place may lie beyond the rows, and a pointer must not */
     spot.kept += spot.row->offset;
     return spot;
 }
