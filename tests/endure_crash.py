@@ -258,6 +258,10 @@ class Host:
             self.unix_s = max(self.unix_s, self._clock.wall())
         return self.unix_s
 
+    def now_s(self) -> float:
+        """A clock that nobody sets: the board's."""
+        return self.device.ticks * self.device.board.tick_us / 1e6
+
     def forget_clock(self) -> None:
         """The wall clock is what `unix_s` says from now on."""
         self._clock = None
@@ -287,6 +291,7 @@ class Host:
             open_port=lambda: self._open(process),
             pause=self.pause,
             wall=self.now_unix_s,
+            now=self.now_s,
             tell=self.said.append,
             progress=lambda progress: self.meddle(self),
         )

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import re
 import subprocess
 import sys
@@ -95,6 +96,42 @@ def test_at_most_ends_a_run_in_order_and_it_can_be_gone_on_with(here: Path, caps
     assert any(line.startswith("cycles   ") for line in lines)
     assert main(["resume", str(folder)]) == 2
     assert "came to its end (passed)" in capsys.readouterr().err
+
+
+def test_what_was_begun_unattended_goes_on_unattended_unless_told_otherwise(
+    here: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    Path("night.yaml").write_text(NIGHT.format(bench="bench.yaml", times=5), "utf-8")
+    bound = ["--at-most", "5 s"]
+    assert main(["run", "night.yaml", "--unattended", "--accept-sleep", *bound, *VIRTUAL]) == 5
+    folder = only_run()
+    assert main(["resume", str(folder), "--accept-sleep", *bound]) == 5
+    assert "UNATTENDED TEST RUNNING" in capsys.readouterr().err
+    assert (folder / "door-sheet-2.html").exists()
+    text = re.sub("fuse:.*", "", Path("bench.yaml").read_text("utf-8"))
+    kept = folder / "bench.yaml"
+    assert kept.read_bytes() == Path("bench.yaml").read_bytes()
+    Path("bench.yaml").write_text(text, "utf-8")  # the run is gone on with as it was begun: by the copy
+    assert main(["resume", str(folder), "--attended", "--at-most", "1 h"]) == 0
+    assert "UNATTENDED TEST RUNNING" not in capsys.readouterr().err
+    assert not (folder / "door-sheet-3.html").exists()
+    told = read_manifest(folder)["interruptions"]
+    assert [(each["unattended"], each["kept_awake_by"]) for each in told] == [(True, None), (False, None)]
+    assert told[0]["text"].endswith("by `ramprig resume`, unattended")
+
+
+def test_a_latest_end_that_was_said_holds_for_what_goes_on_unattended(
+    here: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    assert main(["run", "night.yaml", "--unattended", "--accept-sleep", "--at-most", "4 s", *VIRTUAL]) == 5
+    path = only_run() / "run.json"
+    told = json.loads(path.read_text("utf-8"))
+    assert told["settings"]["at_most"] == "4 s"
+    told["settings"]["latest_end"] = "2026-01-01T05:00:00Z"
+    path.write_text(json.dumps(told), "utf-8")
+    capsys.readouterr()
+    assert main(["resume", str(only_run()), "--accept-sleep"]) == 2
+    assert "latest end, 2026-01-01T05:00:00Z, has gone by; say --at-most TIME anew" in capsys.readouterr().err
 
 
 def test_a_note_is_kept_and_read_back(here: Path, capsys: pytest.CaptureFixture[str]) -> None:

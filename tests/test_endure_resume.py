@@ -9,9 +9,10 @@ from pathlib import Path
 import pytest
 
 from endure_crash import CYCLES, START_UNIX_S, Host, Killed, Process
+from ramprig.endure import resume as endure_resume
 from ramprig.endure.interruption import Cause, cause_of_manifest
-from ramprig.endure.resume import read_broken
-from ramprig.errors import RecordError, Refused, UsageError, WrongDevice
+from ramprig.endure.resume import Broken, read_broken
+from ramprig.errors import FileError, Place, RecordError, Refused, UsageError, WrongDevice
 from ramprig.record.reading import audit, read_events, read_manifest, read_notes, read_samples, sample_files
 from ramprig.sequence.outcome import Verdict
 from ramprig_link.words import Cause as BootCause
@@ -132,6 +133,75 @@ def test_a_board_that_does_not_come_back_ends_the_run(tmp_path: Path) -> None:
     (note,) = read_notes(host.run_folder)
     assert note["by"] == "ramprig"
     assert note["text"].startswith("not gone on with: the board did not come back")
+
+
+def test_a_clock_that_is_set_back_does_not_lengthen_the_time_in_which_it_may_go_on(tmp_path: Path) -> None:
+    host = Host(tmp_path, policy=GO_ON)
+    host.meddle = once("unplug")
+    pause, looks = host.pause, list[float]()
+
+    def set_back(seconds: float) -> None:
+        pause(seconds)
+        looks.append(seconds)
+        if len(looks) == 2:
+            host.forget_clock()
+            host.unix_s -= 3600.0
+        host.away_until_s = host.unix_s + 5.0
+
+    host.pause = set_back  # type: ignore[method-assign]  # the test's own host
+    result = host.run(Process())
+    assert "the board did not come back within 20 s" in result.outcome.sentence
+    assert len(looks) <= 12
+
+
+def test_a_host_that_slept_while_it_looked_for_the_board_moves_nothing(tmp_path: Path) -> None:
+    host = Host(tmp_path, policy=GO_ON)
+    host.meddle = once("unplug")
+    replug(host)
+    pause = host.pause
+
+    def sleep(seconds: float) -> None:
+        pause(seconds)
+        host.forget_clock()
+        host.unix_s += 6 * 3600.0
+
+    host.pause = sleep  # type: ignore[method-assign]  # the test's own host
+    result = host.run(Process())
+    assert host.opened == 1
+    assert result.outcome.sentence.endswith("; not gone on with: the board did not come back within 20 s")
+
+
+def test_a_host_that_was_away_for_longer_than_allowed_moves_nothing_by_itself(tmp_path: Path) -> None:
+    """A laptop that is opened in the morning: the board has stopped by its lease hours ago."""
+    host = Host(tmp_path, policy=GO_ON)
+
+    def sleep(host: Host) -> None:
+        if host.now_unix_s() >= START_UNIX_S + LATE_S and not slept:
+            slept.append(True)
+            assert host._clock is not None
+            host._clock.advance(40.0)
+
+    slept: list[bool] = []
+    host.meddle = sleep
+    result = host.run(Process())
+    assert (result.outcome.verdict, result.outcome.trip, host.opened) == (Verdict.TRIPPED, "link_lost", 1)
+    assert "not gone on with: the computer did not look after the run for 40" in result.outcome.sentence
+    assert read_manifest(host.run_folder)["results"]["host_away_s"] == pytest.approx(40.0, abs=1.0)
+    assert host.run(Process(), resume=True).outcome.verdict is Verdict.PASSED  # by hand it may
+
+
+def test_a_file_that_cannot_be_read_any_more_ends_the_run_as_it_was(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    def unreadable(folder: Path, *, now_unix_s: float) -> Broken:
+        raise FileError("found a tab", place=Place("crash.yaml", 1, 1))
+
+    monkeypatch.setattr(endure_resume, "read_broken", unreadable)
+    host = Host(tmp_path, policy=GO_ON)
+    host.meddle = once("restart")
+    result = host.run(Process())
+    assert result.outcome.verdict is Verdict.TRIPPED
+    assert result.outcome.sentence.endswith("; not gone on with: crash.yaml:1:1: found a tab")
 
 
 def test_after_a_trip_it_never_goes_on_by_itself_and_by_hand_only_where_told(tmp_path: Path) -> None:

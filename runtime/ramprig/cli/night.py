@@ -52,18 +52,26 @@ def carry_out_unattended(
     accept_sleep: bool,
     ask: Callable[[], None],
     run: Callable[[Way], int],
+    latest_end_unix_s: float | None = None,
 ) -> int:
     """Check the rules, show the door sheet, ask, and run awake. Raises UsageError where a rule does not hold.
 
-    `so_far` is what is done of a run that is gone on with.
+    `so_far` is what is done of a run that is gone on with, and `latest_end_unix_s` when it was to be over by its user's
+    word, which a new `at_most` takes the place of.
     """
     from ramprig.endure.awake import keep_awake
     from ramprig.endure.doorsheet import door_sheet
     from ramprig.endure.unattended import longest_s, missing_rules
+    from ramprig.record.events import rfc3339
     from ramprig.record.space import disk_free, standing
     from ramprig.sequence.compile import compile_plan
 
     at_most_s = seconds_of(at_most)
+    if at_most_s is None and latest_end_unix_s is not None:
+        at_most_s = latest_end_unix_s - time.time()
+        if at_most_s <= 0:
+            at = rfc3339(latest_end_unix_s, decimals=0)
+            raise UsageError(f"the run's latest end, {at}, has gone by; say --at-most TIME anew")
     plan = compile_plan(sequence, bench, so_far=so_far)
     free_bytes = disk_free(standing(Path(".") if way.runs is None else way.runs))
     refuse_missing(missing_rules(bench, sequence, plan, url=way.url, free_bytes=free_bytes, at_most_s=at_most_s))
@@ -77,4 +85,5 @@ def carry_out_unattended(
         tell(str(awake))
         ask()
         settings = {**way.settings, "unattended": True, "kept_awake_by": awake.method or None}
+        settings |= {"at_most": at_most} if at_most is not None else {}
         return run(replace(way, latest_end_unix_s=latest_s, settings=settings, sheet=sheet))

@@ -21,7 +21,10 @@ if TYPE_CHECKING:
 EPILOG = """What is gone on with is the run as it was begun: its sequence, values and bench file. The board must be the
 same one with the same program and limits; its port may have another name by now (--port). The cycle that the
 interruption fell into counts as not done, and is told apart. New samples go into a file of their own beside the old
-ones; run.json tells of each interruption."""
+ones; run.json tells of each interruption.
+
+What was begun unattended goes on unattended: the rules are judged again, there is a new sheet for the door, and the
+computer is kept awake. --attended leaves that out, for a run that somebody stands beside from now on."""
 
 
 def declare(parser: argparse.ArgumentParser) -> None:
@@ -30,7 +33,9 @@ def declare(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--port", metavar="URL", help="the port, where it has another name now")
     parser.add_argument("--yes", action="store_true", help="do not ask before anything moves")
     parser.add_argument("--after-trip", action="store_true", help="go on though the run ended by a trip of the board")
-    parser.add_argument("--unattended", action="store_true", help="go on only where the rules for the night hold")
+    beside = parser.add_mutually_exclusive_group()
+    beside.add_argument("--unattended", action="store_true", help="go on only where the rules for the night hold")
+    beside.add_argument("--attended", action="store_true", help="somebody stands beside it from now on")
     parser.add_argument("--at-most", metavar="TIME", help="end in order after this time, such as '9 h'")
     parser.add_argument("--accept-sleep", action="store_true", help="go on though the computer may fall asleep")
     parser.epilog = EPILOG
@@ -38,7 +43,8 @@ def declare(parser: argparse.ArgumentParser) -> None:
 
 def carry_out(args: argparse.Namespace) -> int:
     """Go on; returns the exit code of the whole run's verdict."""
-    from ramprig.endure.resume import read_broken, wish_to_carry_on
+    from ramprig.endure.interruption import was_unattended
+    from ramprig.endure.resume import WatchedOver, read_broken, wish_to_carry_on
     from ramprig.sequence.running import RunWish
 
     now_s = time.time()
@@ -55,7 +61,10 @@ def carry_out(args: argparse.Namespace) -> int:
         if not simulated and not args.yes and on_terminal():
             ask()
 
+    unattended = args.unattended or (was_unattended(broken.manifest)[0] and not args.attended)
+
     def go_on(way: Way) -> int:
+        awake_by = way.settings.get("kept_awake_by")
         wish = wish_to_carry_on(
             broken,
             RunWish(sequence=broken.sequence, bench=broken.bench),
@@ -63,10 +72,12 @@ def carry_out(args: argparse.Namespace) -> int:
             now_unix_s=now_s,
             after_trip=args.after_trip,
             latest_end_unix_s=way.latest_end_unix_s,
+            at_most=args.at_most,
+            watched_over=WatchedOver(unattended, None if awake_by is None else str(awake_by)),
         )
         return carry_out_wish(wish, way)
 
-    if args.unattended:
+    if unattended:
         return carry_out_unattended(
             broken.sequence,
             broken.bench,
@@ -76,12 +87,23 @@ def carry_out(args: argparse.Namespace) -> int:
             accept_sleep=args.accept_sleep,
             ask=ask_first,
             run=go_on,
+            latest_end_unix_s=said_end_unix_s(broken),
         )
     at_most_s = seconds_of(args.at_most)
     if at_most_s is not None:
         way = replace(way, latest_end_unix_s=now_s + at_most_s)
     ask_first()
     return go_on(way)
+
+
+def said_end_unix_s(broken: Broken) -> float | None:
+    """When the run is to be over because its user said so by --at-most; None where its plan alone bounds it."""
+    from ramprig.record.events import from_rfc3339
+
+    settings = broken.manifest.get("settings") or {}
+    if settings.get("at_most") is None or settings.get("latest_end") is None:
+        return None
+    return from_rfc3339(str(settings["latest_end"])).timestamp()
 
 
 def what_is_known(broken: Broken) -> Iterator[str]:

@@ -66,8 +66,9 @@ def carry_out(args: argparse.Namespace) -> int:
         )
     ask_first()
     at_most_s = seconds_of(args.at_most)
-    latest_s = None if at_most_s is None else time.time() + at_most_s
-    return carry_out_run(pair, replace(way, latest_end_unix_s=latest_s))
+    if at_most_s is not None:
+        way = replace(way, latest_end_unix_s=time.time() + at_most_s, settings={"at_most": args.at_most})
+    return carry_out_run(pair, way)
 
 
 def ask(pair: Pair, url: str) -> None:

@@ -147,6 +147,7 @@ def carry_out_wish(wish: RunWish, way: Way) -> int:
         open_port=lambda: open_port_for(way, wish.bench),
         pause=time.sleep,
         wall=time.time,
+        now=time.monotonic,
         tell=progress.line,
         progress=lambda far: progress.show(lambda: how_far(far)),
         guard=guard,

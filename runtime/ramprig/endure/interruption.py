@@ -81,6 +81,7 @@ class Interruption:
 
     `last_utc` is the last event or row that is on the disk, `resumed_utc` when the run went on, `down_s` the time
     between by the host's wall clock. `by` is `policy` or `command`. `open_number` is the cycle whose end is not known.
+    `unattended` and `kept_awake_by` are how the run went on.
     `reason` is how the part before says that it ended, empty where it could not say.
     """
 
@@ -93,6 +94,8 @@ class Interruption:
     by: str
     open_number: int | None
     cycles_done: int
+    unattended: bool
+    kept_awake_by: str | None
     text: str
 
     @classmethod
@@ -106,6 +109,8 @@ class Interruption:
         by: str,
         open_number: int | None,
         cycles_done: int,
+        unattended: bool = False,
+        kept_awake_by: str | None = None,
     ) -> Interruption:
         """The interruption after what the manifest knows."""
         number = len(manifest.get("interruptions", [])) + 1
@@ -115,6 +120,8 @@ class Interruption:
         if open_number is not None:
             text += f", in cycle {open_number}, which counts as not done"
         text += f"; the run went on {format_duration(down_s)} later, by {_BY[by]}"
+        if unattended:
+            text += ", unattended"
         return cls(
             number=number,
             cause=cause,
@@ -125,11 +132,20 @@ class Interruption:
             by=by,
             open_number=open_number,
             cycles_done=cycles_done,
+            unattended=unattended,
+            kept_awake_by=kept_awake_by,
             text=text,
         )
 
 
 _BY = {"policy": "the sequence's own rule", "command": "`ramprig resume`"}
+
+
+def was_unattended(manifest: Document) -> tuple[bool, str | None]:
+    """Whether nobody was to stand beside the last part of the run, and what kept the computer awake for it."""
+    told = [each for each in manifest.get("interruptions") or [] if "unattended" in each]
+    last = told[-1] if told else manifest.get("settings") or {}
+    return bool(last.get("unattended")), last.get("kept_awake_by")
 
 
 def last_known_unix_s(manifest: Document, events: Sequence[Document], folder: Path) -> float:

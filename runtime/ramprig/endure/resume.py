@@ -16,7 +16,7 @@ from pathlib import Path
 from typing import Any
 
 from ramprig.bench import Bench, load_bench
-from ramprig.errors import LinkError, RecordError, Refused, UsageError, WrongDevice
+from ramprig.errors import FileError, LinkError, RecordError, Refused, StoppedByUser, UsageError, WrongDevice
 from ramprig.port.base import Port
 from ramprig.quantity import format_duration
 from ramprig.record.events import from_rfc3339, jsonable, rfc3339
@@ -35,12 +35,22 @@ from ramprig.session.session import Session
 from ramprig_link.words import Trip
 
 from .cycles import CycleRecord, read_cycle_record
-from .interruption import LINK_TRIPS, Cause, Interruption, cause_of_manifest, cause_of_outcome, last_known_unix_s
+from .interruption import (
+    LINK_TRIPS,
+    Cause,
+    Interruption,
+    cause_of_manifest,
+    cause_of_outcome,
+    last_known_unix_s,
+    was_unattended,
+)
 from .live import watching
 from .notes import add_note
 
 RETRY_S = 2.0
 """After an interruption the board is looked for this often."""
+LATE_S = 1.0
+"""A look that comes this much later than allowed, as on a busy host, is still made."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -167,6 +177,14 @@ def _last_open(lines: Any, open_number: int | None) -> int | None:  # Any: JSON 
 # ---- going on ------------------------------------------------------------------------------------------------------
 
 
+@dataclass(frozen=True, slots=True)
+class WatchedOver:
+    """Whether nobody stands beside the next part of a run, and what keeps the computer awake for it."""
+
+    unattended: bool = False
+    kept_awake_by: str | None = None
+
+
 def wish_to_carry_on(
     broken: Broken,
     wish: RunWish,
@@ -175,15 +193,19 @@ def wish_to_carry_on(
     now_unix_s: float,
     after_trip: bool = False,
     latest_end_unix_s: float | None = None,
+    at_most: str | None = None,
+    watched_over: WatchedOver | None = None,
 ) -> RunWish:
     """The wish for the next part of the run, which ends by `latest_end_unix_s`, None: as the run was begun.
 
-    Raises Refused after a trip that nobody has said may be passed over, UsageError where its latest end has gone by.
+    `at_most` is what the user said of that. `watched_over` None is as the part before. Raises Refused after a trip that
+    nobody has said may be passed over, UsageError where its latest end has gone by.
     """
     if broken.cause is Cause.TRIP and not after_trip:
         raise Refused(
             "resume", "trip", f"the run ended by a trip ({broken.manifest.get('stop_reason')}); --after-trip goes on"
         )
+    over = WatchedOver(*was_unattended(broken.manifest)) if watched_over is None else watched_over
     interruption = Interruption.of(
         broken.manifest,
         broken.cause,
@@ -192,11 +214,15 @@ def wish_to_carry_on(
         by=by,
         open_number=broken.open_number,
         cycles_done=broken.so_far.counted.done,
+        unattended=over.unattended,
+        kept_awake_by=over.kept_awake_by,
     )
     told = jsonable(interruption)
     assert isinstance(told, dict)  # a dataclass is written as an object
     first = parts_of(dict(broken.manifest))[0]
     settings = dict(broken.manifest.get("settings") or {})
+    if at_most is not None:
+        settings["at_most"] = at_most
     if latest_end_unix_s is not None:
         settings["latest_end"] = rfc3339(latest_end_unix_s)
     elif settings.get("latest_end") is not None:
@@ -227,13 +253,15 @@ class Surroundings:
     """What a run that goes on by itself needs of its caller.
 
     `open_port` opens the port anew, by whatever name it has now; `pause` lets so many seconds pass while no port is
-    open; `wall` is the time of day in Unix seconds. `tell` says what is going on to the user; `explain` tells of the
-    run in a folder why it was interrupted, as far as that is known. The others are those of `run_sequence`.
+    open; `wall` is the time of day in Unix seconds, `now` a clock that nobody sets. `tell` says what is going on to the
+    user; `explain` tells of the run in a folder why it was interrupted, as far as that is known. The others are those
+    of `run_sequence`.
     """
 
     open_port: Callable[[], Port]
     pause: Callable[[float], None]
     wall: Callable[[], float]
+    now: Callable[[], float]
     tell: Callable[[str], None]
     progress: Callable[[Progress], None] | None = None
     guard: Callable[[Session], AbstractContextManager[object]] | None = None
@@ -256,8 +284,8 @@ def run_enduring(wish: RunWish, around: Surroundings, *, port: Port | None = Non
         for line in (f"interrupted: {result.outcome.sentence}", *around.explain(folder)):
             around.tell(line)
         try:
-            later = _go_on(wish, around, folder)
-        except KeyboardInterrupt:  # nothing runs while the board is looked for
+            later = _too_late(wish.sequence, result.outcome) or _go_on(wish, around, folder)
+        except (KeyboardInterrupt, StoppedByUser):  # nothing runs while the board is looked for
             later = "the user stopped it"
         if isinstance(later, str):
             add_note(folder, f"not gone on with: {later}", unix_s=around.wall(), by="ramprig")
@@ -282,21 +310,33 @@ def _may_go_on(sequence: Sequence, outcome: Outcome, folder: Path) -> bool:
     return len(told) < policy.resumes
 
 
+def _too_late(sequence: Sequence, outcome: Outcome) -> str:
+    """Why nothing may move by itself any more: the host comes back to the run after too long. Empty where it may."""
+    within_s = float(sequence.interruptions.within_s)
+    if outcome.away_s <= within_s:
+        return ""
+    away = format_duration(round(outcome.away_s))
+    return f"the computer did not look after the run for {away}, and {format_duration(within_s)} are allowed"
+
+
 def _go_on(wish: RunWish, around: Surroundings, folder: Path) -> RunResult | str:
     """The next part of the run; a sentence where there is none, because the board did not come back as it was."""
     policy = wish.sequence.interruptions
-    bound_s = around.wall() + float(policy.within_s)
+    began_s, began_unix_s = around.now(), around.wall()
+    late, why = f"the board did not come back within {format_duration(policy.within_s)}", ""
     around.tell(f"looking for the board for {format_duration(policy.within_s)} at most")
     while True:
         around.pause(RETRY_S)
         now_s = around.wall()
+        gone_s = max(around.now() - began_s, now_s - began_unix_s)  # the one stands still in a sleep, the other is set
+        if gone_s > max(float(policy.within_s), RETRY_S) + LATE_S:
+            return late + why
         try:
             broken = read_broken(folder, now_unix_s=now_s)
             next_wish = wish_to_carry_on(broken, wish, by="policy", now_unix_s=now_s, after_trip=policy.after_trip)
             port = around.open_port()
             return _run(next_wish, around, port)
-        except (WrongDevice, Refused, RecordError, UsageError) as error:
+        except (WrongDevice, Refused, RecordError, UsageError, FileError) as error:
             return str(error)
         except LinkError as error:
-            if around.wall() >= bound_s:
-                return f"the board did not come back within {format_duration(policy.within_s)} ({error})"
+            why = f" ({error})"

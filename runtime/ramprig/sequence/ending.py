@@ -10,11 +10,12 @@ from ramprig.errors import LinkError, Place, RecordError, Refused, StoppedByUser
 from ramprig.port.clock import Clock
 from ramprig.quantity import format_duration
 from ramprig.session.blocks import Block
-from ramprig.session.events import Event, HostSlept, Tripped
+from ramprig.session.events import Event, Tripped
 from ramprig.session.session import Session
 from ramprig.session.stop import StopReport
 from ramprig_link.words import State
 
+from .absence import Absence
 from .cycle_run import CycleBook
 from .executive import Executive, Progress
 from .listeners import Listeners
@@ -32,8 +33,6 @@ TRAIL_WAIT_S = 1.0
 POLL_S = 0.05
 STOPS_MAX = 3
 """So often a stop that is asked for while the run is ended is confirmed, and the ending gone on with."""
-SLEEPS_MAX = 1000
-"""Sleeps of the host that an outcome lists."""
 
 
 class Keeper(Protocol):
@@ -115,7 +114,7 @@ class _Run:
         self.executive = Executive(session, clock, plan, rig, tell, progress)
         self.confirmed = True
         self.trip_told = False
-        self.slept_s: list[float] = []
+        self.absence = Absence(clock)
         self.unrecorded: RecordError | None = None
         listeners.add(on_block=self.executive.on_block, on_event=self._on_event)
 
@@ -129,8 +128,7 @@ class _Run:
             self.executive.until_s, self.executive.until_text = bounds.until_s, bounds.text
 
     def _on_event(self, event: Event) -> None:
-        if isinstance(event, HostSlept) and len(self.slept_s) < SLEEPS_MAX:
-            self.slept_s.append(round(event.slept_s, 1))
+        self.absence.on_event(event)
         self.executive.on_event(event)
 
     def leave(self) -> None:
@@ -344,7 +342,8 @@ class _Run:
             trip="" if trip is None else trip.trip,
             restarted=executive.restarted is not None,
             cycles=book.counted if book is not None and self.plan.counts_cycles else None,
-            slept_s=tuple(self.slept_s),
+            slept_s=tuple(self.absence.slept_s),
+            away_s=round(self.absence.longest_s(), 1),
         )
 
     def _beside(self) -> str:
@@ -357,9 +356,9 @@ class _Run:
             to_watch, unjudged = book.watch.to_watch(), book.watch.unjudged()
             text += f"; to watch: {to_watch}" if to_watch else ""
             text += f"; {unjudged.text}" if unjudged.text and not unjudged.ends_run else ""
-        if self.slept_s:
-            times = _count(len(self.slept_s), "time")
-            text += f"; the host slept {times}, {format_duration(sum(self.slept_s))} in all"
+        slept_s = self.absence.slept_s
+        if slept_s:
+            text += f"; the host slept {_count(len(slept_s), 'time')}, {format_duration(sum(slept_s))} in all"
         return text
 
 

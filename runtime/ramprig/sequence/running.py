@@ -406,6 +406,7 @@ def _end_of(session: Session, plan: Plan, outcome: Outcome, clock: Clock) -> Run
         "trip": outcome.trip,
         "device_restarted": outcome.restarted,
         "host_slept_s": list(outcome.slept_s),
+        "host_away_s": outcome.away_s,
     }
     if outcome.cycles is not None:
         results["cycles"] = jsonable(outcome.cycles)
