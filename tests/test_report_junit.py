@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import random
+import re
 from collections.abc import Callable
 from pathlib import Path
 from typing import Any
@@ -87,6 +88,44 @@ def test_each_expectation_and_each_limit_is_one_case(failed: Facts) -> None:
     assert {case.name for case in limits} >= {"vent: trip_ma", "vent: stall_duty", "under_mv", "over_mv", "lease_ms"}
     assert not any(case.failure for case in limits)
     assert any(case.skipped for case in limits if case.name == "vent: speed_counts")  # off in this bench file
+
+
+def test_values_found_stand_in_one_unit(tmp_path: Path) -> None:
+    steps = """- repeat:
+    times: 2
+    steps:
+      - ramp: {motor: vent, to: 40 %, in: 500 ms}
+      - hold: 1 s
+      - expect: {current of: vent, is: at most 2 A}
+      - expect: {position of: vent, is: at least 5 deg}"""
+    facts = facts_of(tmp_path, Case("", steps=steps))
+    current, position = facts.expectations.values()
+    assert re.fullmatch(r"[\d.]+ mA( to [\d.]+ mA)?", current.span), current.span
+    assert re.fullmatch(r"[\d.]+ deg to [\d.]+ deg", position.span), position.span
+    assert f"{position.span}, last {position.last_found}" in results(facts)
+    assert position.last_found == position.span.partition(" to ")[2]
+    case = next(case for case in cases_of(facts) if case.name.startswith("current of vent"))
+    assert f"values: {current.span}" in case.out
+
+
+def test_a_run_without_expectations_shows_what_else_there_is(tmp_path: Path) -> None:
+    steps = """- cycle:
+    times: 2
+    steps:
+      - ramp: {motor: vent, to: 40 %, in: 500 ms}
+      - coast: {motor: vent, in: 300 ms}"""
+    facts = facts_of(tmp_path, Case("", steps=steps))
+    assert not facts.expectations
+    page = results(facts)
+    for wanted in (
+        "No expectation was judged.",
+        "<dt>cycles commanded</dt><dd>2</dd>",
+        "<dt>not judged</dt><dd>2</dd>",
+        "<h3>Uncertainty</h3>",
+    ):
+        assert wanted in page, wanted
+    (facts.folder / "s.yaml").unlink()
+    assert "Expectations that were not judged cannot be told: its copy of the sequence" in results(facts)
 
 
 def test_a_trip_fails_its_limit_and_the_run(tripped: Facts) -> None:

@@ -11,8 +11,10 @@ from typing import Any
 
 from ramprig.bench import Bench, bench_of_text
 from ramprig.errors import FileError, RecordError
+from ramprig.quantity import show
 from ramprig.record.folder import EVENTS_FILE, SAMPLES_FILE
 from ramprig.record.reading import files_by_part, read_manifest
+from ramprig.sequence.steps import What
 
 Document = dict[str, Any]  # JSON as it comes: what is in it is checked where it is used
 
@@ -62,6 +64,15 @@ class Expectation:
     def limit(self) -> str:
         """What it must be, such as `38 rpm +- 10 % over 500 ms`."""
         return self.text.partition(" is ")[2] or self.text
+
+    @property
+    def span(self) -> str:
+        """From the least to the greatest value found, in units as the values themselves are told; empty without any."""
+        if self.least is None or self.most is None:
+            return ""
+        kind = next((what.kind for what in What if self.text.startswith(f"{what} ")), None)
+        least, most = (f"{value:.4g}" if kind is None else show(value, kind) for value in (self.least, self.most))
+        return least if least == most else f"{least} to {most}"
 
     def take(self, event: Document) -> None:
         """Count one judgement."""

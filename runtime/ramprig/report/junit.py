@@ -175,8 +175,8 @@ def _expectation_case(found: Expectation) -> Case:
         f"limit: {found.limit}",
         f"last found: {found.last_found}",
     ]
-    if found.least is not None and found.most is not None:
-        lines.append(f"values from {found.least!r} to {found.most!r} in base units")
+    if found.span:
+        lines.append(f"values: {found.span}")
     lines += [f"failed at {e.get('time_s')} s: found {e.get('found')}" for e in found.failures[:FAILURES_TOLD]]
     failure = ""
     if found.failed:

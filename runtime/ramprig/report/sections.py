@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 
+from ramprig.endure.cycles import read_cycle_record
+from ramprig.errors import RecordError
 from ramprig.quantity import format_duration
 from ramprig.record.events import from_rfc3339
 from ramprig.record.reading import Audit
@@ -23,6 +25,9 @@ RULE = (
     "no guard band and no allowance for uncertainty (simple acceptance; the term as in ISO/IEC Guide 98-4 and ILAC-G8, "
     "from memory). The run passes where it was carried out to its end and every expectation passed each time it was "
     "judged. A value near a limit may therefore be on either side of it by the resolution told below."
+)
+NOTHING_JUDGED = (
+    "No expectation was judged. Waits, trips and limits to wear have their verdict at the head of this report."
 )
 ROWS_MAX = 400
 """Lines of one table; what is left out is counted and stands in the run folder."""
@@ -166,16 +171,16 @@ def _clock_text(clocks: Document) -> str:
 
 
 def results(facts: Facts) -> str:
-    """Each expectation: what, where, limit, values, verdict; the rule; failures with their values."""
+    """Each expectation with limit, values and verdict; the rule; failures with their values; cycles; resolution."""
     missed, trouble = unjudged(facts)
-    if not facts.expectations and not missed:
-        return page.paragraph(
-            "No expectation was judged. Waits, trips and limits to wear have their verdict at the head of this report."
-        ) + page.paragraph(RULE, kind="note")
     found = list(facts.expectations.values())
-    rows = [_expectation(entry) for entry in (found + missed)[:ROWS_MAX]]
-    heads = ["what", "where", "limit", "values found", "judged", "failed", "verdict"]
-    parts = [page.paragraph(RULE), page.table(heads, rows, numbers=(4, 5))]
+    parts = [page.paragraph(RULE)]
+    if found or missed:
+        rows = [_expectation(entry) for entry in (found + missed)[:ROWS_MAX]]
+        heads = ["what", "where", "limit", "values found", "judged", "failed", "verdict"]
+        parts.append(page.table(heads, rows, numbers=(4, 5)))
+    else:
+        parts.append(page.paragraph(NOTHING_JUDGED))
     more = len(found) + len(missed) - ROWS_MAX
     if more > 0:
         parts.append(page.paragraph(f"{more} more expectations are in the run folder."))
@@ -183,10 +188,7 @@ def results(facts: Facts) -> str:
         parts.append(page.paragraph(f"Of these, {len(missed)}: {why_unjudged(facts)}.", kind="note"))
     if trouble:
         parts.append(page.paragraph(f"Expectations that were not judged cannot be told: {trouble}.", kind="note"))
-    parts.append(_failures(found))
-    parts.append(_cycles(facts))
-    parts.append(_resolution(facts))
-    return "".join(parts)
+    return "".join((*parts, _failures(found), _cycles(facts), _resolution(facts)))
 
 
 def _expectation(entry: Expectation) -> list[str]:
@@ -202,10 +204,9 @@ def _expectation(entry: Expectation) -> list[str]:
 
 
 def _values(entry: Expectation) -> str:
-    if entry.judged == 1 or entry.least is None or entry.most is None:
+    if entry.judged == 1 or not entry.span:
         return entry.last_found
-    unit = entry.last_found.rpartition(" ")[2]
-    return f"{entry.least:.4g} to {entry.most:.4g}, last {entry.last_found}" if unit else entry.last_found
+    return f"{entry.span}, last {entry.last_found}"
 
 
 def _failures(found: list[Expectation]) -> str:
@@ -228,16 +229,20 @@ def _failures(found: list[Expectation]) -> str:
 
 
 def _cycles(facts: Facts) -> str:
-    done = [event for event in facts.cycles if event.get("kind") == "cycle_done"]
-    if not done:
+    """The count of cycles; a commanded one without an end was under way when the run broke off."""
+    if not facts.cycles:
         return ""
-    last = done[-1]
-    broken = sum(event.get("kind") == "cycle_interrupted" for event in facts.cycles)
+    try:
+        record = read_cycle_record(facts.folder)
+    except RecordError as error:
+        return "<h3>Cycles</h3>" + page.paragraph(f"The count of cycles cannot be told: {error}.")
+    counted = record.counted
     pairs = [
-        ("cycles commanded", last.get("commanded")),
-        ("confirmed by the encoder", last.get("confirmed")),
-        ("failed", last.get("failed")),
-        ("broken off", str(max(broken, int(last.get("interrupted") or 0)))),
+        ("cycles commanded", counted.commanded),
+        ("confirmed by the encoder", counted.confirmed),
+        ("failed", counted.failed),
+        ("not judged", counted.unjudged),
+        ("broken off", counted.interrupted + (record.open_number is not None)),
     ]
     return "<h3>Cycles</h3>" + page.facts((name, str(value)) for name, value in pairs)
 
@@ -251,14 +256,16 @@ def _resolution(facts: Facts) -> str:
             for entry in column.get("resolution") or []
             if entry.get("at_rpm") in RESOLUTION_AT_RPM
         ]
-    text = (
+    single = (
         "Resolution of a single logged speed, from the encoder's counts alone; a mean over a window is finer by the "
-        "window's length. The uncertainty of current and supply is that of the board's sensors, which this program "
-        "does not know: enter the instruments' calibration. No expanded uncertainty is claimed."
+        "window's length. "
     )
-    return (
-        "<h3>Uncertainty</h3>" + page.paragraph(text) + page.table(["speed", "at", "resolution"], rows, numbers=(1, 2))
+    sensors = (
+        "The uncertainty of current and supply is that of the board's sensors, which this program does not know: enter "
+        "the instruments' calibration. No expanded uncertainty is claimed."
     )
+    table = page.table(["speed", "at", "resolution"], rows, numbers=(1, 2)) if rows else ""
+    return "<h3>Uncertainty</h3>" + page.paragraph(single + sensors if rows else sensors) + table
 
 
 def interruptions(facts: Facts, digest: Digest, entries: Mapping[str, str]) -> str:
