@@ -215,3 +215,80 @@ def test_an_export_of_a_killed_run_has_its_held_rows_once(tmp_path: Path) -> Non
     (done,) = export_run(folder, To.EXCEL_CSV)
     lines = done.path.read_text("utf-16").splitlines()[1:]
     assert [int(line.split("\t")[0]) for line in lines] == ticks_in(folder)
+
+
+# ---- the moment at which an older file goes -------------------------------------------------------------------------
+
+HOLE_TICKS = 10_000
+BEFORE_HOLE = 17
+
+
+def with_a_hole() -> list[Block]:
+    """Most of a second of samples, and after a hole a little more: much of the older turn is not decided by then."""
+    before = blocks_of(BEFORE_HOLE * BLOCK, size=BLOCK)
+    return before + blocks_of(75, size=BLOCK, first_tick=int(before[-1].ticks[-1]) + HOLE_TICKS)
+
+
+class HoleSeen(list[Block]):
+    """What was handed over, and the operation at which the first block after the hole was."""
+
+    def __init__(self, process: Process) -> None:
+        super().__init__()
+        self._process = process
+        self.operation = 0
+
+    def append(self, block: Block) -> None:
+        if len(self) == BEFORE_HOLE:
+            self.operation = self._process.operations
+        super().append(block)
+
+
+def live_until_it_dies(root: Path, process: Process, handed: list[Block]) -> None:
+    recorder = begin(root, KEEPING, durable=True, on_trouble=lambda trouble: None)
+    for block in with_a_hole():
+        handed.append(block)
+        recorder.on_block(block)
+    finish(recorder, sum(map(len, handed)))
+
+
+def to_be_kept(handed: list[Block], newest: int) -> set[int]:
+    """The ticks that an event might still claim when this is the newest, and those that are kept anyway."""
+    ticks = [tick for block in handed for tick in block.ticks.tolist()]
+    return {tick for tick in ticks if tick >= newest - 400 or tick // PERIOD % 50 == 0}
+
+
+def operations_around_the_hole(root: Path) -> range:
+    """Those of an undisturbed run from a little before the hole to a little after it."""
+    whole = Process()
+    handed = HoleSeen(whole)
+    with whole.alive():
+        live_until_it_dies(root, whole, handed)
+    return range(handed.operation - 6, handed.operation + 14)
+
+
+def test_a_kill_at_any_operation_around_a_hole_leaves_every_row_that_was_to_be_kept(tmp_path: Path) -> None:
+    for die_at in operations_around_the_hole(tmp_path / "whole"):
+        process, root = Process(die_at=die_at), tmp_path / str(die_at)
+        handed: list[Block] = []
+        with process.alive(), pytest.raises(Killed):
+            live_until_it_dies(root, process, handed)
+        (folder,) = root.iterdir()
+        ticks = ticks_in(folder)
+        assert ticks == sorted(set(ticks))
+        assert to_be_kept(handed[:-1], int(handed[-1].ticks[-1])) <= set(ticks), die_at
+
+
+def test_a_disk_that_is_full_at_any_write_around_a_hole_leaves_the_rows_to_be_kept_somewhere(tmp_path: Path) -> None:
+    for full_at in operations_around_the_hole(tmp_path / "whole"):
+        process, root = Process(full_at=full_at), tmp_path / str(full_at)
+        handed: list[Block] = []
+        with process.alive():
+            try:
+                live_until_it_dies(root, process, handed)
+            except RecordError:
+                assert handed or not (root / "run.json").exists()
+        (folder,) = root.iterdir()
+        part = {"samples_file": "samples.csv", **read_manifest(folder)}
+        paths = [*volume_files(folder, part), *held_files(folder)]
+        ticks = {tick for path in paths for piece in Stream([path]) for tick in piece.ticks.tolist()}
+        assert to_be_kept(handed[:-1], int(handed[-1].ticks[-1])) <= ticks, full_at  # the last one is what failed

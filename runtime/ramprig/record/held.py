@@ -5,10 +5,11 @@ Two files take turns, each with the header and all rows of some seconds:
     held-1.csv   rows of the present turn          a turn ends after the time that rows wait to be decided;
     held-2.csv   rows of the turn before           then the older file is begun anew
 
-What the older file holds by then has been decided and, before it goes, synced in its volume. A run that ends in order
-writes its undecided rows to the volume and removes both; whoever reads one that did not takes from them the rows after
-the last one of its volumes, and resuming moves those there. Of a run that ended because its disk was full, resuming
-keeps them as `unwritten-1.csv` and so on: its account tells those rows as unwritten.
+What the older file holds by then has been decided (the rows that begin a turn decide first, and are held then) and,
+before it goes, synced in its volume. A run that ends in order writes its undecided rows to the volume and removes both;
+whoever reads one that did not takes from them the rows after the last one of its volumes, and resuming moves those
+there. Of a run that ended because its disk was full, resuming keeps them as `unwritten-1.csv` and so on: its account
+tells those rows as unwritten.
 """
 
 from __future__ import annotations
@@ -42,10 +43,13 @@ class HeldRows:
         self._begin_tick: int | None = None
         self._file: AppendFile | None = None
 
-    def append(self, rows: Rows) -> None:
-        """Rows that follow those before."""
+    def append(self, rows: Rows, *, decided: bool = True) -> None:
+        """Rows that follow those before.
+
+        `decided` says that whatever they decide is written; where it could not be, no turn ends and no file goes.
+        """
         first, begin = int(rows.ticks[0]), self._begin_tick
-        if self._file is None or begin is None or not begin <= first < begin + self._turn_ticks:
+        if self._file is None or begin is None or (decided and not begin <= first < begin + self._turn_ticks):
             self._next_turn(first)
         assert self._file is not None  # a turn has just begun
         self._file.append(rows.data)

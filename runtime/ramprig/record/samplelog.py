@@ -119,13 +119,26 @@ class SampleLog:
     def write(self, blocks: Sequence[Block]) -> None:
         """Blocks that follow those before."""
         for rows in self._printer.tables(blocks):
-            if self._held is not None:
-                self._held.append(rows)
             if self._thinner is None:
                 self._volumes.append(rows)
             else:
-                self._thinner.take(rows)
+                self._thin(self._thinner, rows)
             self._range(rows)
+
+    def _thin(self, thinner: Thinner, rows: Rows) -> None:
+        """Decide what these rows decide, and only then hold them: the older held file may go with them.
+
+        Where the disk does not take what was decided, the held files keep it.
+        """
+        try:
+            thinner.take(rows)
+        except OSError:
+            if self._held is not None:
+                with contextlib.suppress(OSError):
+                    self._held.append(rows, decided=False)
+            raise
+        if self._held is not None:
+            self._held.append(rows)
 
     def _range(self, rows: Rows) -> None:
         if self._cycles is not None:
