@@ -77,13 +77,34 @@ def test_a_known_shape_makes_use_of_one_failure(capsys: pytest.CaptureFixture[st
     assert figures["life_at_least"] == pytest.approx(figures["scale_at_least"] * math.sqrt(-math.log(0.9)))
 
 
+def test_a_known_shape_makes_use_of_failures_at_one_time(capsys: pytest.CaptureFixture[str]) -> None:
+    figures = figures_of(["400", "400", "500+", "--shape", "2"], capsys)
+    # Weibayes with two failures: chi2(0.9, 6) / 2 = 5.3223 (tables).
+    assert figures["scale_at_least"] == pytest.approx(math.sqrt((2 * 400**2 + 500**2) / 5.3223), rel=1e-4)
+
+
+def test_failures_that_lie_close_together_have_a_large_shape(capsys: pytest.CaptureFixture[str]) -> None:
+    # Of two failures the likelihood depends on shape * ln(time/time) alone, so that the shape goes with 1/ln ratio.
+    ratio = math.log(18_700 / 5_400) / math.log(10_001 / 10_000)
+    near, far = figures_of(["10000", "10001"], capsys), figures_of(["5400", "18700"], capsys)
+    assert near["shape"] == pytest.approx(far["shape"] * ratio, rel=1e-6)
+    assert near["low"] < near["life"] < near["high"]
+
+
+def test_a_known_shape_far_from_one_gives_a_number(capsys: pytest.CaptureFixture[str]) -> None:
+    # With a steep shape the longest time alone counts.
+    assert figures_of(["100+", "1+", "--shape", "100"], capsys)["scale_at_least"] == pytest.approx(99.17, rel=1e-4)
+    assert main(["life", "100+", "--shape", "100"]) == 0
+    assert "1 sample: 0 failed, 1 suspended" in capsys.readouterr().out
+
+
 def test_a_plan_says_how_many_and_how_long(capsys: pytest.CaptureFixture[str]) -> None:
     assert figures_of(["--plan", "20000"], capsys)["samples"] == 22  # ln 0.1 / ln 0.9 = 21.85
     figures = figures_of(["--plan", "20000", "--samples", "8", "--shape", "1.8"], capsys)
     assert figures["time_each"] == pytest.approx(20000 * (math.log(0.1) / math.log(0.9) / 8) ** (1 / 1.8))
     assert main(["life", "--plan", "20000", "--samples", "8", "--shape", "1.8"]) == 0
     text = capsys.readouterr().out
-    assert "8 samples to 34950 each with at most 0 failures" in text
+    assert "8 samples to 34950 each, of which at most 0 may fail, show a reliability of 90 %" in text
     assert "taking a Weibull shape of 1.8 as known" in text
 
 
@@ -102,7 +123,15 @@ def test_a_plan_says_how_many_and_how_long(capsys: pytest.CaptureFixture[str]) -
         (["--plan", "100", "--samples", "5"], "needs a Weibull shape"),
         (["--plan", "100", "--samples", "0"], "--samples 1 or more"),
         (["--plan", "0"], "a life of 0"),
-        (["54", "60", "--shape", "-1"], "above 0"),
+        (["54", "60", "--shape", "-1"], "lies between 0.1 and 100"),
+        (["54", "60", "--shape", "nan"], "lies between 0.1 and 100"),
+        (["54+", "--shape", "inf"], "lies between 0.1 and 100"),
+        (["--plan", "inf"], "a life of inf; it must lie between 1e-20 and 1e+20"),
+        (["54", "60", "--samples", "5"], "give --plan with them"),
+        (["54", "1e300"], "a time of 1e+300; times lie between"),
+        (["54", "6_0"], "'6_0' is no time"),
+        (["54", "54"], "2 failures, all at one time; a Weibull fit needs two at different times"),
+        (["100", "20000", "--share", "1 %", "--confidence", "99.99 %"], "too little is known to bound this life"),
     ],
 )
 def test_what_tells_nothing_is_refused(words: list[str], wanted: str, capsys: pytest.CaptureFixture[str]) -> None:

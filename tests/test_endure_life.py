@@ -94,6 +94,19 @@ def test_both_kinds_of_bounds_hold_the_estimate_and_the_likelihood_ones_satisfy_
         assert fit.log_likelihood - likelihood.max() == pytest.approx(1.352772, abs=1e-4)
 
 
+@pytest.mark.parametrize("failures", [(5400.0, 18700.0), (100.0, 20000.0), (5400.0, 5600.0)])
+def test_the_bounds_of_few_failures_at_high_confidence_satisfy_their_definition(failures: tuple[float, ...]) -> None:
+    fit = life.fit_weibull(failures)
+    # chi2(0.9999, 1)/2 = 7.5684 (the square of the normal's 3.8906); the best shape there is far below the estimate's.
+    times = np.array(failures)
+    for bound in life.likelihood_bounds(fit, 0.5, confidence=0.9999):
+        shapes = fit.shape * np.exp(np.linspace(-7.0, 2.0, 40_001))[:, None]
+        powers = np.log(times) - math.log(bound)
+        likelihood = np.log(shapes * math.log(2.0) / times) + shapes * powers
+        likelihood -= math.log(2.0) * np.exp(np.minimum(shapes * powers, 600.0))
+        assert fit.log_likelihood - likelihood.sum(axis=1).max() == pytest.approx(7.5684, abs=1e-3)
+
+
 def test_bounds_cover_the_true_b10_as_often_as_they_say() -> None:
     source = np.random.default_rng(20)
     true = life.Weibull(

@@ -17,6 +17,8 @@ if TYPE_CHECKING:
 
 TIMES_MAX = 100_000
 """Most samples of one estimate."""
+SHAPES = (0.1, 100.0)
+"""Shapes that are taken as known: outside of these a slip of the pen."""
 OUTCOMES = {"failed": False, "suspended": True}
 HEADS = ("time", "outcome")
 EPILOG = """A time alone is a failure, one with a + behind it a suspension: a sample taken out, or still whole, at that
@@ -53,13 +55,16 @@ def declare(parser: argparse.ArgumentParser) -> None:
 
 def carry_out(args: argparse.Namespace) -> int:
     """Estimate or plan; returns 0. Raises UsageError where the times tell nothing."""
-    if args.shape is not None and not args.shape > 0.0:
-        raise UsageError(f"--shape {args.shape:g}: a Weibull shape is above 0; worn-out parts have 1.5 to 4")
+    if args.shape is not None and not SHAPES[0] <= args.shape <= SHAPES[1]:
+        bounds = f"between {SHAPES[0]:g} and {SHAPES[1]:g}"
+        raise UsageError(f"--shape {args.shape:g}: a Weibull shape lies {bounds}; worn-out parts have 1.5 to 4")
     if args.plan is not None:
         if args.times or args.file:
             raise UsageError("--plan is for a test to come: give it alone, or the times without it")
         figures, lines = _planned(args)
     else:
+        if args.samples is not None or args.failures:
+            raise UsageError("--samples and --failures are for a test to come: give --plan with them")
         times = _times_of(args)
         fitted = len(set(times.failures)) >= 2 and args.shape is None
         figures, lines = _fitted(times, args) if fitted else _shown(times, args)
@@ -103,7 +108,7 @@ def _times_of(args: argparse.Namespace) -> Times:
 
 def _time(text: str) -> float | None:
     try:
-        value = float(text)
+        value = float(text) if "_" not in text else 0.0
     except ValueError:
         return None
     return value if 0.0 < value < float("inf") else None
@@ -150,9 +155,10 @@ Figures = dict[str, float | int | str | None]
 
 
 def _counted(times: Times) -> str:
-    return f"{len(times.failures) + len(times.suspensions)} samples: {len(times.failures)} failed, " + (
-        f"{len(times.suspensions)} suspended"
-    )
+    from ramprig.endure.life import counted
+
+    count = counted(len(times.failures) + len(times.suspensions), "sample")
+    return f"{count}: {len(times.failures)} failed, {len(times.suspensions)} suspended"
 
 
 def _fitted(times: Times, args: argparse.Namespace) -> tuple[Figures, list[str]]:
@@ -194,7 +200,7 @@ def meaning(fit: Weibull) -> str:
 
 
 def _shown(times: Times, args: argparse.Namespace) -> tuple[Figures, list[str]]:
-    """What at most one failure shows, or any with the shape taken as known."""
+    """What failures that tell no shape show: none, one, or several at one time, with the shape taken as known."""
     from ramprig.endure.life import fit_weibull, in_figures, reliability_shown, weibayes
 
     share, confidence = share_of(args.share, "--share"), share_of(args.confidence, "--confidence")
@@ -203,7 +209,7 @@ def _shown(times: Times, args: argparse.Namespace) -> tuple[Figures, list[str]]:
         "samples": count, "failures": failed, "unit": args.unit, "confidence": confidence, "shape": args.shape,
     }  # fmt: skip
     if args.shape is not None:
-        if failed > 1:
+        if len(set(times.failures)) > 1:
             raise UsageError(f"{failed} failures tell the shape themselves: leave --shape away")
         scale = weibayes((*times.failures, *times.suspensions), failed, shape=args.shape, confidence=confidence)
         life = scale * (-math.log1p(-share)) ** (1.0 / args.shape)

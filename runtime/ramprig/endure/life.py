@@ -9,7 +9,7 @@ all from memory, held against published figures in the tests. Times are in any o
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -21,8 +21,12 @@ from ramprig.extras import need
 Array = NDArray[np.float64]
 
 PURPOSE = "a life estimate"
-SHAPES = (0.02, 200.0)
-"""Shapes that are searched."""
+TIMES = (1e-20, 1e20)
+"""Times that are taken: a wider span is a slip of the pen, and leaves the range of a double."""
+LOG_MOST = 690.0
+"""Natural logarithm of the largest number that is told, either way; a double holds 709."""
+DOUBLINGS_MAX = 9
+"""Bound of the search for a shape, which begins at one step and doubles it: to e^512 either way."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -65,6 +69,9 @@ def _checked(failures: Sequence[float] | Array, suspensions: Sequence[float] | A
     both = np.concatenate([failed, left])
     if not np.all(np.isfinite(both)) or not np.all(both > 0.0):
         raise UsageError("a time to failure or suspension that is not above 0")
+    beyond = both[(both < TIMES[0]) | (both > TIMES[1])]
+    if len(beyond):
+        raise UsageError(f"a time of {beyond[0]:g}; times lie between {TIMES[0]:g} and {TIMES[1]:g}")
     return failed, left
 
 
@@ -75,23 +82,28 @@ def fit_weibull(failures: Sequence[float] | Array, suspensions: Sequence[float] 
     """
     failed, left = _checked(failures, suspensions)
     if len(np.unique(failed)) < 2:
-        count = "1 failure" if len(failed) == 1 else f"{len(failed)} failures"
+        count = "1 failure" if len(failed) == 1 else f"{len(failed)} failures, all at one time"
+        count = count if len(failed) else "no failure"
         raise UsageError(
             f"{count}; a Weibull fit needs two at different times. With none or one, use the "
             "success-run numbers, or a shape known from elsewhere (Weibayes)"
         )
-    optimize = need("scipy.optimize", purpose=PURPOSE)
     times = np.concatenate([failed, left])
     unit = float(times.max())
-    scaled, logs = times / unit, np.log(times / unit)
-    mean_log = float(np.log(failed / unit).mean())
+    logs = np.log(times) - math.log(unit)
+    mean_log = float(np.log(failed).mean()) - math.log(unit)
 
-    def slope(shape: float) -> float:
-        power = scaled**shape
+    def slope(log_shape: float) -> float:
+        """Of the likelihood, with its sign turned; it rises with the shape, from below 0 to above it."""
+        shape = math.exp(log_shape)
+        power = np.exp(shape * logs)
         return float(power @ logs / power.sum() - 1.0 / shape - mean_log)
 
-    shape = float(optimize.brentq(slope, *SHAPES, xtol=1e-13, rtol=1e-13))
-    scale = unit * float((scaled**shape).sum() / len(failed)) ** (1.0 / shape)
+    shape = math.exp(_crossing(slope, 0.0))
+    log_scale = math.log(unit) + math.log(float(np.exp(shape * logs).sum()) / len(failed)) / shape
+    if log_scale > LOG_MOST:
+        raise UsageError(f"{len(failed)} of {len(times)} failed, too few and too far apart for any scale")
+    scale = math.exp(log_scale)
     return Weibull(
         shape=shape,
         scale=scale,
@@ -100,6 +112,18 @@ def fit_weibull(failures: Sequence[float] | Array, suspensions: Sequence[float] 
         failures=failed,
         suspensions=left,
     )
+
+
+def _crossing(rising: Callable[[float], float], start: float) -> float:
+    """Where a function that rises for ever goes through 0, from about `start` on. Raises UsageError if nowhere near."""
+    optimize = need("scipy.optimize", purpose=PURPOSE)
+    low, high, step = start - 1.0, start + 1.0, 1.0
+    for _ in range(DOUBLINGS_MAX):
+        below, above = rising(low) < 0.0, rising(high) > 0.0
+        if below and above:
+            return float(optimize.brentq(rising, low, high, xtol=1e-13, rtol=1e-13))
+        low, high, step = low - (0.0 if below else step), high + (0.0 if above else step), 2.0 * step
+    raise UsageError("the times lie so close together that they cannot be told apart")
 
 
 def _log_likelihood(shape: float, scale: float, failed: Array, times: Array) -> float:
@@ -134,39 +158,49 @@ def fisher_bounds(fit: Weibull, failed: float = 0.10, *, confidence: float = 0.9
 
 
 def likelihood_bounds(fit: Weibull, failed: float = 0.10, *, confidence: float = 0.90) -> tuple[float, float]:
-    """Two-sided likelihood-ratio bounds of that life; preferable to Fisher's with few failures."""
-    stats, optimize = need("scipy.stats", purpose=PURPOSE), need("scipy.optimize", purpose=PURPOSE)
+    """Two-sided likelihood-ratio bounds of that life; preferable to Fisher's with few failures.
+
+    Raises UsageError where a bound lies beyond all numbers: so little is known at so high a confidence.
+    """
+    stats = need("scipy.stats", purpose=PURPOSE)
     drop = float(stats.chi2.ppf(confidence, 1)) / 2.0
-    times = np.concatenate([fit.failures, fit.suspensions])
+    logs, failed_logs = np.log(np.concatenate([fit.failures, fit.suspensions])), np.log(fit.failures)
     exponent = math.log(-math.log1p(-failed))
 
     def excess(log_life: float) -> float:
         """How far the best likelihood with this life lies below the bound's."""
+        away, own = logs - log_life, float((failed_logs - log_life).sum())
 
-        def loss(log_shape: float) -> float:
+        def slope(log_shape: float) -> float:
+            """Of the likelihood with this life by the shape, its sign turned: the likelihood is concave in it."""
             shape = math.exp(log_shape)
-            log_scale = log_life - exponent / shape
-            logs = shape * (np.log(times) - log_scale)
-            if logs.max() > 600.0:
-                return 1e200
-            own = shape * (np.log(fit.failures) - log_scale)
-            return -float((log_shape - np.log(fit.failures) + own).sum() - np.exp(logs).sum())
+            power = np.exp(np.minimum(shape * away + exponent, LOG_MOST))
+            return float(away @ power) - own - len(failed_logs) / shape
 
-        middle = math.log(fit.shape)
-        best = optimize.minimize_scalar(
-            loss, bounds=(middle - 3.0, middle + 3.0), method="bounded", options={"xatol": 1e-10}
-        )
-        return fit.log_likelihood + float(best.fun) - drop
+        shape = math.exp(_crossing(slope, math.log(fit.shape)))
+        power = np.exp(np.minimum(shape * away + exponent, LOG_MOST))
+        best = len(failed_logs) * (math.log(shape) + exponent) + shape * own - failed_logs.sum() - power.sum()
+        return float(fit.log_likelihood - best - drop)
 
-    centre = math.log(fit.life(failed))
-    ends = []
-    for side in (-1.0, 1.0):
-        step = 0.1
-        while excess(centre + side * step) < 0.0 and step < 60.0:
-            step *= 1.6
-        low, high = sorted((centre, centre + side * step))
-        ends.append(math.exp(optimize.brentq(excess, low, high, xtol=1e-10)))
-    return ends[0], ends[1]
+    centre = math.log(fit.scale) + exponent / fit.shape
+    return _bound(excess, centre, -1.0), _bound(excess, centre, 1.0)
+
+
+def _bound(excess: Callable[[float], float], centre: float, side: float) -> float:
+    """Where the likelihood has fallen to the bound, below the estimate or above it. Raises UsageError."""
+    optimize = need("scipy.optimize", purpose=PURPOSE)
+    step = 0.1
+    while excess(centre + side * step) < 0.0:
+        step *= 1.6
+        if step > LOG_MOST:
+            raise UsageError(
+                "too little is known to bound this life: ask with less confidence or for a larger share, or test on"
+            )
+    low, high = sorted((centre, centre + side * step))
+    log_life = float(optimize.brentq(excess, low, high, xtol=1e-10))
+    if abs(log_life) > LOG_MOST:
+        raise UsageError("this life is beyond all numbers: ask for a share nearer to 10 %")
+    return math.exp(log_life)
 
 
 # ---- ranks -----------------------------------------------------------------------------------------------------------
@@ -217,13 +251,18 @@ def rank_regression(times: Sequence[float] | Array, ranks: Array, *, on_time: bo
 
 
 def weibayes(times: Sequence[float] | Array, failures: int, *, shape: float, confidence: float) -> float:
-    """Lower bound of the scale with the shape taken as known and at most one failure among `times`.
+    """Lower bound of the scale with the shape taken as known and so many failures among `times`.
 
-    (sum t^shape / (chi2(confidence, 2 r + 2) / 2))^(1/shape).
+    (sum t^shape / (chi2(confidence, 2 r + 2) / 2))^(1/shape). Raises UsageError where that is beyond all numbers.
     """
     stats = need("scipy.stats", purpose=PURPOSE)
-    total = float((np.asarray(times, float) ** shape).sum())
-    return float((total / (stats.chi2.ppf(confidence, 2 * failures + 2) / 2.0)) ** (1.0 / shape))
+    all_times, _ = _checked(times, ())
+    longest = float(all_times[-1])
+    total = float(np.exp(shape * (np.log(all_times) - math.log(longest))).sum())
+    log_scale = math.log(longest) + math.log(2.0 * total / stats.chi2.ppf(confidence, 2 * failures + 2)) / shape
+    if not abs(log_scale) <= LOG_MOST:
+        raise UsageError(f"with a Weibull shape of {shape:g} the scale is beyond all numbers; give a larger one")
+    return math.exp(log_scale)
 
 
 def success_run_size(*, confidence: float, reliability: float, failures: int = 0) -> int:
@@ -271,10 +310,16 @@ class Plan:
     def __str__(self) -> str:
         known = "" if self.shape is None else f", taking a Weibull shape of {self.shape:g} as known"
         return (
-            f"{self.samples} samples to {in_figures(self.time_each)} each with at most {self.failures} failures show a "
-            f"reliability of {100 * self.reliability:g} % at {in_figures(self.life)} with {100 * self.confidence:g} % "
+            f"{counted(self.samples, 'sample')} to {in_figures(self.time_each)} each, of which at most {self.failures} "
+            f"may fail, show a reliability of {100 * self.reliability:g} % at {in_figures(self.life)} with "
+            f"{100 * self.confidence:g} % "
             f"confidence{known}"
         )
+
+
+def counted(count: int, what: str) -> str:
+    """`1 sample`, `2 samples`."""
+    return f"{count} {what}" if count == 1 else f"{count} {what}s"
 
 
 def in_figures(value: float) -> str:
@@ -297,8 +342,8 @@ def plan(
     R^(L^shape) (Lipson and Sheth). The shape must come from earlier failures of the same kind; if it is too high the
     plan promises too much.
     """
-    if not life > 0.0:
-        raise UsageError(f"a life of {life:g}; it must be above 0")
+    if not TIMES[0] <= life <= TIMES[1]:
+        raise UsageError(f"a life of {life:g}; it must lie between {TIMES[0]:g} and {TIMES[1]:g}")
     count = success_run_size(confidence=confidence, reliability=reliability, failures=failures)
     lives = 1.0
     if samples is not None and samples != count:
