@@ -10,15 +10,17 @@ from fractions import Fraction
 from itertools import pairwise
 from pathlib import Path
 
+import numpy as np
 import pytest
 
 from kept_runs import FULL, THIN, rehearsed
 from ramprig.record.keeping import Keeping, Thinning
-from ramprig.record.ranges import LAG_S
+from ramprig.record.ranges import EDGES_MAX, LAG_S, CycleRanges, SpanPrinter
 from ramprig.record.reading import audit, read_cycles, read_events, read_manifest, sample_files
+from ramprig.record.rows import Rows
 from ramprig.sequence.happened import CycleBegun, CycleDone
 from record_long import PERIOD, begin, finish, rows_of
-from record_samples import blocks_of
+from record_samples import TICK_US, blocks_of, vent_columns
 
 
 @pytest.fixture(scope="module")
@@ -155,6 +157,52 @@ def test_an_edge_that_is_told_late_falls_where_it_belongs(tmp_path: Path, late_m
     ]  # fmt: skip
     finish(recorder, 6000)
     assert table(recorder.folder.path / "cycle-ranges.csv")[-1]["samples"] == str((17_000 - 12_000) // PERIOD)
+
+
+@pytest.mark.parametrize("early_ms", [1, 3, 40, 700])
+def test_an_edge_that_is_told_before_its_rows_waits_for_them(tmp_path: Path, early_ms: int) -> None:
+    """A line of samples that is asked for again comes later than the end of the cycle is told."""
+    recorder = begin(tmp_path, Keeping(cycle_ranges=True), durable=True)
+    due = [(6000 - early_ms, CycleBegun(tick=6000, number=1, name="c")), (8001 - early_ms, done(8001, 6000, 1))]
+    for block in blocks_of(3000, size=10):
+        recorder.on_block(block)
+        while due and block.ticks[-1] >= due[0][0]:
+            recorder.on_event(due.pop(0)[1])
+    finish(recorder, 3000)
+    lines = table(recorder.folder.path / "cycle-ranges.csv")
+    assert [(line["what"], line["first_tick"], line["last_tick"]) for line in lines] == [
+        ("between", "5000", "5998"), ("cycle", "6000", "8000"), ("between", "8002", "10998"),
+    ]  # fmt: skip
+
+
+Told = tuple[str, int, int | None]
+
+
+def printed(*happenings: list[int] | Told) -> list[tuple[str, str, str]]:
+    """Spans as what, number and samples, of rows at these ticks and edges in between."""
+    printer = SpanPrinter(vent_columns(), part=1, tick_us=TICK_US, tick_zero=0)
+    lines: list[bytes] = []
+    ranges = CycleRanges(printer, tick_us=TICK_US, write=lines.append)
+    for happening in happenings:
+        if isinstance(happening, list):
+            ranges.take(Rows(np.array(happening, np.int64), b"\r\n" * len(happening), 2, {}))
+        else:
+            ranges.edge(*happening)
+    ranges.close()
+    fields = [line.decode().split(",") for line in lines]
+    return [(line[0], line[1], line[7]) for line in fields]
+
+
+def test_edges_that_wait_stay_in_order_and_none_is_lost() -> None:
+    begin_2 = ("cycle", 2, 20)
+    assert printed([10, 12], begin_2, ("between", 2, None), [14, 16, 18, 20]) == [
+        ("between", "0", "5"), ("cycle", "2", "0"), ("between", "2", "1"),
+    ]  # fmt: skip
+    assert printed([10, 12], begin_2, [14, 16]) == [("between", "0", "4"), ("cycle", "2", "0")]
+    assert printed([10, 12], begin_2, [0, 2]) == [("between", "0", "2"), ("cycle", "2", "2")]  # the board restarted
+    assert printed(begin_2, [18, 20]) == [("between", "0", "1"), ("cycle", "2", "1")]
+    many: list[Told] = [("cycle", number, 1000 + number) for number in range(EDGES_MAX + 2)]
+    assert len(printed([10, 12], *many)) == EDGES_MAX + 3
 
 
 def test_the_memory_of_the_ranges_is_bounded(tmp_path: Path) -> None:

@@ -9,13 +9,15 @@ Two files of the same form, a line a span, in order:
 Every sample that was received lies in exactly one span of a file: a span has the samples from the tick of its begin on,
 up to but without that of its end. `first_tick` to `last_s` are of its first and last sample, `.count` says how many
 samples had a value in a column (a servo without pulses has none). Sums are of whole numbers, so the mean is exact to
-the last digit that is printed. A span that was under way when the program was killed has no line.
+the last digit that is printed. A span that was under way, or whose last rows had not come, when the program was killed
+has no line.
 """
 
 from __future__ import annotations
 
 from collections import deque
 from collections.abc import Callable, Iterable, Mapping
+from dataclasses import dataclass
 from itertools import pairwise
 
 import numpy as np
@@ -29,6 +31,8 @@ from .rows import Cells, Rows
 LAG_S = 5.0
 """So long rows wait for the event that tells where a span ended: events come a little later than their samples."""
 LAG_ROWS_MAX = 20_000
+EDGES_MAX = 64
+"""So many edges wait for the rows before them; the oldest of more takes effect with the rows that are there."""
 MEAN_DECIMALS = 3
 """So many decimals more than its column has a mean."""
 HEAD = ("what", "number", "part", "first_tick", "last_tick", "first_s", "last_s", "samples")
@@ -151,10 +155,20 @@ class SpanPrinter:
         return decimal(micros // 1000 if decimals == 3 else micros, decimals)
 
 
+@dataclass(frozen=True, slots=True)
+class _Edge:
+    """A span begins at this tick."""
+
+    what: str
+    number: int
+    tick: int
+
+
 class CycleRanges:
     """Cuts the rows of a part at the begins and ends of cycles and checks, and writes each span when it is over.
 
-    Rows wait for LAG_S, so that an edge that is told so late still falls where it belongs.
+    Rows wait for LAG_S, so that an edge that is told so late still falls where it belongs; an edge that is told before
+    its rows have come waits for them.
     """
 
     def __init__(self, printer: SpanPrinter, *, tick_us: int, write: Callable[[bytes], None]) -> None:
@@ -163,17 +177,24 @@ class CycleRanges:
         self._write = write
         self._held: deque[Rows] = deque()
         self._held_rows = 0
+        self._edges: deque[_Edge] = deque()
+        self._newest: int | None = None
+        self._next_tick: int | None = None
         self._span = Span(BETWEEN, 0, printer.names)
 
     def take(self, rows: Rows) -> None:
         """Rows that follow those before; where ticks begin anew, those before are settled."""
-        if self._held and rows.ticks[0] <= self._held[-1].ticks[-1]:
-            self._settle(None)
+        if self._newest is not None and rows.ticks[0] <= self._newest:
+            self._settle_all()
         self._held.append(rows)
         self._held_rows += len(rows)
+        self._newest = int(rows.ticks[-1])
+        self._next_tick = self._newest + rows.period_ticks
+        while self._edges and self._is_due(self._edges[0].tick):
+            self._cut(self._edges.popleft())
         while self._held_rows > LAG_ROWS_MAX:
             self._settle(int(self._held[0].ticks[-1]) + 1)
-        self._settle(int(rows.ticks[-1]) - self._lag_ticks)
+        self._settle(self._newest - self._lag_ticks)
 
     def _settle(self, before_tick: int | None) -> None:
         """What comes before this tick, or all, belongs to the span under way."""
@@ -187,9 +208,33 @@ class CycleRanges:
                 return
             self._held.popleft()
 
+    def _settle_all(self) -> None:
+        """No more rows will come before the edges that wait."""
+        while self._edges:
+            self._cut(self._edges.popleft())
+        self._settle(None)
+
     def edge(self, what: str, number: int, tick: int | None) -> None:
         """A span `what` begins at this tick (None: after all rows so far), and the one under way is over."""
-        self._settle(tick)
+        if self._edges:  # those that wait come first
+            tick = self._edges[-1].tick if tick is None else max(tick, self._edges[-1].tick)
+        if tick is None:
+            self._settle(None)
+            self._begin(what, number)
+            return
+        self._edges.append(_Edge(what, number, tick))
+        while self._edges and (len(self._edges) > EDGES_MAX or self._is_due(self._edges[0].tick)):
+            self._cut(self._edges.popleft())
+
+    def _is_due(self, tick: int) -> bool:
+        """Whether all rows before this tick have come."""
+        return self._next_tick is not None and tick <= self._next_tick
+
+    def _cut(self, edge: _Edge) -> None:
+        self._settle(edge.tick)
+        self._begin(edge.what, edge.number)
+
+    def _begin(self, what: str, number: int) -> None:
         self.finish()
         self._span = Span(what, number, self._printer.names)
 
@@ -201,9 +246,8 @@ class CycleRanges:
 
     def close(self) -> None:
         """The part is over: what is held belongs to the span under way, which ends with it."""
-        self._settle(None)
-        self.finish()
-        self._span = Span(BETWEEN, self._span.number, self._printer.names)
+        self._settle_all()
+        self._begin(BETWEEN, self._span.number)
 
 
 class IntervalRanges:
