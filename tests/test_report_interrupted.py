@@ -64,6 +64,13 @@ def test_an_interruption_is_told_among_the_deviations_and_not_as_the_end(run: Fa
 
 def test_a_limit_that_the_run_went_on_after_is_no_failure(run: Facts) -> None:
     assert [case for case in cases_of(run) if case.failure or case.error] == []
+    told = next(case for case in cases_of(run) if case.name == "lease_ms")
+    assert "the run was gone on with" in told.out
+
+
+def test_a_trip_that_the_board_holds_and_tells_again_is_one_trip(run: Facts) -> None:
+    assert (run.folder / "events.jsonl").read_text("utf-8").count('"kind":"tripped"') == 2
+    assert run.counts["tripped"] == len(run.of("tripped")) == run.trips_outlived == 1
 
 
 def test_rows_from_before_a_break_are_told_apart(run: Facts) -> None:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import random
 import re
 from collections.abc import Callable
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 from xml.etree import ElementTree
@@ -134,6 +135,34 @@ def test_a_trip_fails_its_limit_and_the_run(tripped: Facts) -> None:
     assert "likely" in cases["run", "carried out to its end"].out
     failing = [name for (group, name), case in cases.items() if group == "limits" and case.failure]
     assert failing in (["vent: trip_ma"], ["vent: stall_duty"])
+
+
+@pytest.mark.parametrize(("otherwise", "is_whole"), [("", True), (", else: stop", False)])
+def test_a_run_that_an_expectation_ended_was_not_carried_out_to_its_end(
+    tmp_path: Path, otherwise: str, is_whole: bool
+) -> None:
+    steps = f"""- hold: 500 ms
+- expect: {{current of: vent, is: at least 1 A{otherwise}}}
+- hold: 500 ms"""
+    facts = facts_of(tmp_path, Case("", steps=steps))
+    assert (facts.verdict, facts.carried_out) == ("failed", is_whole)
+    case = next(cases_of(facts))
+    assert bool(case.failure) == (not is_whole)
+    results = dict(facts.manifest["results"])
+    del results["carried_out"]  # as it was written before this was recorded
+    before = replace(facts, manifest=facts.manifest | {"results": results})
+    case = next(cases_of(before))
+    assert case.failure == ""
+    assert case.skipped == "whether every step was carried out was not written down"
+
+
+def test_a_trip_that_no_part_of_the_run_followed_is_a_failure_of_its_limit(failed: Facts) -> None:
+    trip = {"kind": "tripped", "trip": "overvoltage", "index": 0, "value": 17000, "bound": 16000, "time_s": 3.0}
+    for outlived in (0, 1):
+        facts = replace(failed, trips_outlived=outlived, events={"tripped": [trip]})
+        case = next(case for case in cases_of(facts) if case.name == "over_mv")
+        assert bool(case.failure) == (not outlived), "it came while the run was stopped at its end"
+        assert ("the run was gone on with" in case.out) == bool(outlived)
 
 
 AHEAD = """- hold: 500 ms

@@ -94,7 +94,8 @@ class Facts:
     """A run: its manifest, its bench where the copy can be read, and its events by kind.
 
     `events` keeps the first KEPT_MAX of each kind that matters, `counts` counts all. `passes` are the begins of the
-    repeat that went on for longest, in s of the run, or of the cycles where there are any.
+    repeat that went on for longest, in s of the run, or of the cycles where there are any. The first `trips_outlived`
+    of the trips are those that the run was gone on with after: its outputs were enabled anew.
     """
 
     folder: Path
@@ -107,12 +108,25 @@ class Facts:
     passes: list[float] = field(default_factory=list)
     cycles: list[Document] = field(default_factory=list)
     notes: list[Document] = field(default_factory=list)
+    trips_outlived: int = 0
     last_event: Document | None = None
     torn_event_bytes: int = 0
 
     def of(self, kind: str) -> list[Document]:
         """The events of a kind that were kept, in order."""
         return self.events.get(kind, [])
+
+    def was_outlived(self, trip: Document) -> bool:
+        """Whether the run was gone on with after this trip, one of its events."""
+        return any(trip is each for each in self.of("tripped")[: self.trips_outlived])
+
+    @property
+    def carried_out(self) -> bool | None:
+        """Whether every step was carried out; None where the run did not write that down."""
+        if self.verdict in ("passed", "broken off"):
+            return self.verdict == "passed"
+        found = (self.manifest.get("results") or {}).get("carried_out")
+        return None if found is None else bool(found)
 
     @property
     def name(self) -> str:
@@ -210,8 +224,12 @@ def lines_of(path: Path, facts: Facts | None = None) -> Iterator[Document]:
 
 def _take(facts: Facts, event: Document, series: dict[str, list[float]]) -> None:
     kind = str(event.get("kind"))
-    facts.counts[kind] += 1
     facts.last_event = event
+    if kind == "tripped" and _is_told_again(facts, event):
+        return
+    if kind == "armed":
+        facts.trips_outlived = facts.counts["tripped"]
+    facts.counts[kind] += 1
     if kind in KEPT_KINDS:
         kept = facts.events.setdefault(kind, [])
         if len(kept) < KEPT_MAX:
@@ -223,6 +241,13 @@ def _take(facts: Facts, event: Document, series: dict[str, list[float]]) -> None
         begins = series.setdefault("cycle" if kind == "cycle_begun" else str(event.get("place")), [])
         if len(begins) < PASSES_MAX:
             begins.append(float(event["time_s"]))
+
+
+def _is_told_again(facts: Facts, trip: Document) -> bool:
+    """Whether a trip is the last one, which the board holds latched and tells anew when the run is gone on with."""
+    known = facts.of("tripped")
+    alike = ("tick", "trip", "index", "value")
+    return bool(facts.of("run_resumed") and known) and all(known[-1].get(name) == trip.get(name) for name in alike)
 
 
 def _read_bench(facts: Facts) -> None:

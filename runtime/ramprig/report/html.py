@@ -37,8 +37,6 @@ ENTRIES = {
 """What a person may enter for the report: name and meaning."""
 
 
-WENT_ON = ("passed", "failed")
-"""Verdicts of runs that came to their end: a trip in one of these was gone on after."""
 NOTHING = 1e-9
 """A mean of so small a share of the greatest value is what rounding left of 0."""
 
@@ -152,7 +150,7 @@ def _parts_of(read: Read, wish: Wish, figures: _Figures) -> list[tuple[str, str]
     if trip is not None:
         record = ("Record around the trip", figures.put(plots.trip_record(*trip)))
         # a trip that the run went on after is one of its interruptions, and not the first thing to be told
-        found.insert(found.index(interruptions) + 1 if facts.verdict in WENT_ON else 0, record)
+        found.insert(found.index(interruptions) + 1 if facts.was_outlived(trip[0]) else 0, record)
     pictures = figures.put(plots.against_time(facts, digest))
     found.append(("Against time", pictures or page.paragraph("There are no samples to draw.", kind="note")))
     for name, pictures in (

@@ -110,7 +110,7 @@ def _timestamp(facts: Facts) -> str:
 
 
 def _elapsed_s(facts: Facts) -> float:
-    return float((facts.manifest.get("results") or {}).get("elapsed_s") or 0.0)
+    return sum(float((part.get("results") or {}).get("elapsed_s") or 0.0) for part in facts.parts)
 
 
 def cases_of(facts: Facts) -> Iterator[Case]:
@@ -139,7 +139,7 @@ def _limit_cases(facts: Facts) -> Iterator[Case]:
         name = f"{facts.motor_on(index)}: {item}" if per_axis else item
         out = f"limit {item} = {value} (protocol units), trip {TRIPS[item]}"
         event = tripped.get((TRIPS[item], index))
-        if event is not None and facts.verdict in ("passed", "failed"):
+        if event is not None and facts.was_outlived(event):
             yield Case("limits", name, f"{out}\ntripped at {event.get('time_s')} s; the run was gone on with")
         elif event is not None:
             failure = f"tripped: {TRIPS[item]}, value {event.get('value')}, bound {event.get('bound')}"
@@ -153,20 +153,29 @@ def _limit_cases(facts: Facts) -> Iterator[Case]:
 
 
 def _run_case(facts: Facts) -> Case:
-    """Whether the run was carried out to its end. A failed expectation or limit to wear has a case of its own; where
-    none has failed, a failed run's reason fails this one: a wait that ran out, a shaft that did not come to rest."""
+    """Whether every step was carried out. A failed expectation or limit to wear has a case of its own; where none has
+    failed, a failed run's reason fails this one. A run that wrote nothing down of its steps is not judged.
+    """
+    name = "carried out to its end"
     reason = str(facts.manifest.get("stop_reason") or "the run never ended in order")
     explanation = explain(facts)
     out = f"verdict: {facts.verdict}\n{reason}"
     if explanation is not None:
         out += "\n" + "\n".join(explanation.lines())
-    blamed = any(found.failed for found in facts.expectations.values()) or any(w.failure for w in wear_cases(facts))
-    if facts.verdict == "passed" or (facts.verdict == "failed" and blamed):
-        return Case("run", "carried out to its end", out)
+    if facts.verdict == "passed":
+        return Case("run", name, out)
     message = f"{facts.verdict}: {reason}"
+    if facts.verdict == "failed" and facts.carried_out is not False and _has_failure(facts):
+        unknown = "" if facts.carried_out else "whether every step was carried out was not written down"
+        return Case("run", name, out, skipped=unknown)
     if facts.verdict in ("failed", "tripped"):
-        return Case("run", "carried out to its end", out, failure=message)
-    return Case("run", "carried out to its end", out, error=message)
+        return Case("run", name, out, failure=message)
+    return Case("run", name, out, error=message)
+
+
+def _has_failure(facts: Facts) -> bool:
+    """Whether an expectation or a limit to wear has failed, which has a case of its own."""
+    return any(found.failed for found in facts.expectations.values()) or any(w.failure for w in wear_cases(facts))
 
 
 def _expectation_case(found: Expectation) -> Case:

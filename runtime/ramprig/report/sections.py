@@ -287,6 +287,7 @@ def interruptions(facts: Facts, digest: Digest, entries: Mapping[str, str]) -> s
     pairs: list[tuple[str, object]] = [
         ("deviations, as entered", entries.get("deviations")),
         ("remarks of the plan", "; ".join(map(str, remarks)) or "none"),
+        ("all steps carried out", {True: "yes", False: "NO", None: "not written down"}[facts.carried_out]),
         ("parts of the run", str(len(facts.parts))),
         ("stop at the end", _stop_text(facts)),
         ("wall clock against the monotonic one", _wall_text(facts)),

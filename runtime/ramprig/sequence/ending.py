@@ -60,6 +60,7 @@ class _End:
     verdict: Verdict
     sentence: str
     place: Place | None
+    carried_out: bool = False
 
 
 def run_plan(
@@ -188,10 +189,10 @@ class _Run:
             text = "all steps carried out"
             if tally.held:
                 text += f", {_count(tally.held, 'expectation')} held"
-            return _End(Verdict.PASSED, text, None)
+            return _End(Verdict.PASSED, text, None, carried_out=True)
         place = self.executive.first_failure_place
         more = f" (and {tally.failed - 1} more)" if tally.failed > 1 else ""
-        return _End(Verdict.FAILED, f"{tally.first}{more}", place)
+        return _End(Verdict.FAILED, f"{tally.first}{more}", place, carried_out=True)
 
     def _refused(self, refused: Refused) -> _End:
         """A refusal is often the first sign of a trip, whose notice is on its way."""
@@ -230,7 +231,7 @@ class _Run:
             self.confirmed = self._stop().confirmed
         if self.unrecorded is not None and end.verdict is not Verdict.NOT_RECORDED:
             text = f"{end.sentence}; the log could not be written: {self.unrecorded}"
-            end = _End(Verdict.NOT_RECORDED, text, end.place)
+            end = replace(end, verdict=Verdict.NOT_RECORDED, sentence=text)
         return end
 
     def _with_trip(self, end: _End) -> _End:
@@ -332,6 +333,7 @@ class _Run:
             verdict=end.verdict,
             sentence=end.sentence + self._beside(),
             place=end.place,
+            carried_out=end.carried_out,
             held=tally.held,
             failed=tally.failed,
             failures=tuple(tally.failures),

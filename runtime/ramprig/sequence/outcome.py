@@ -129,10 +129,11 @@ class Outcome:
     """The end of a run.
 
     `sentence` says why it ended, `place` is the step that it ended at or the first expectation that failed, None where
-    no step had begun. `stop_confirmed` tells whether the device and its measurements say that all is off. `trip` is the
-    word of the trip that ended it, `restarted` whether a restart of the device did. `cycles` are counted over all parts
-    of the run, None where the sequence has none. `slept_s` are the times for which the host was found to have slept,
-    `away_s` the longest for which it did not look after the board, whatever kept it.
+    no step had begun. `carried_out` is whether every step was, whatever came of it. `stop_confirmed` tells whether the
+    device and its measurements say that all is off. `trip` is the word of the trip that ended it, `restarted` whether a
+    restart of the device did. `cycles` are counted over all parts of the run, None where the sequence has none.
+    `slept_s` are the times for which the host was found to have slept, `away_s` the longest for which it did not look
+    after the board, whatever kept it.
     """
 
     verdict: Verdict
@@ -147,6 +148,7 @@ class Outcome:
     overdue: int
     trip: str = ""
     restarted: bool = False
+    carried_out: bool = False
     cycles: Counted | None = None
     slept_s: tuple[float, ...] = ()
     away_s: float = 0.0

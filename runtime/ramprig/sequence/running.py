@@ -393,6 +393,7 @@ def _end_of(session: Session, plan: Plan, outcome: Outcome, clock: Clock) -> Run
     health = jsonable(session.health)
     results: dict[str, Json] = {
         "exit_code": outcome.exit_code,
+        "carried_out": outcome.carried_out,
         "place": None if outcome.place is None else str(outcome.place),
         "expectations_held": outcome.held,
         "expectations_failed": outcome.failed,
