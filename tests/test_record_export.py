@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import csv
 import io
+import sys
 from pathlib import Path
 
 import numpy as np
@@ -109,12 +110,9 @@ def test_an_export_leaves_the_run_as_it_was(run: Path, tmp_path: Path, capsys: p
 def test_a_missing_package_is_named_and_leaves_no_file(
     run: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    def missing(module: str, *, purpose: str) -> None:
-        raise PackageMissing(module, purpose=purpose, extra="export")
-
-    monkeypatch.setattr(export, "need", missing)
-    for to in (To.PARQUET, To.MDF4):
-        with pytest.raises(PackageMissing, match="ramprig\\[export\\]"):
+    for to, package in ((To.PARQUET, "pyarrow"), (To.MDF4, "asammdf")):
+        monkeypatch.setitem(sys.modules, package, None)  # as if it were not installed
+        with pytest.raises(PackageMissing, match=rf"pip install {package}, or pip install 'ramprig\[export\]'"):
             export_run(run, to, out=tmp_path)
     assert list(tmp_path.iterdir()) == []
 

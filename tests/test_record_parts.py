@@ -11,6 +11,7 @@ import pytest
 
 from ramprig.errors import RecordError
 from ramprig.record.appendfile import AppendFile
+from ramprig.record.export import To, export_run
 from ramprig.record.folder import RunFolder
 from ramprig.record.keeping import Around, Keeping, Thinning
 from ramprig.record.manifest import Anchor
@@ -86,6 +87,16 @@ def test_a_part_that_broke_off_before_its_file_keeps_its_name_to_itself(
     assert [part["samples_file"] for part in parts] == ["samples.csv", "samples-2.csv", "samples-3.csv"]
     assert [len(ticks_in(paths)) for paths in files_by_part(read_manifest(path), path).values()] == [300, 0, 150]
     assert audit(path).statements == ()
+    exported = export_run(path, To.EXCEL_CSV, out=tmp_path / "out")
+    assert [(one.path.name, one.rows) for one in exported] == [("samples-excel.csv", 300), ("samples-3-excel.csv", 150)]
+
+
+def test_a_volume_that_is_gone_is_missed_though_the_part_broke_off(tmp_path: Path) -> None:
+    path = killed(tmp_path, WHOLE, 300)
+    (path / "samples.0002.csv").unlink()
+    gone_on_with(path, WHOLE).folder.abandon()
+    with pytest.raises(RecordError, match=r"samples\.0002\.csv is missing"):
+        export_run(path, To.EXCEL_CSV, out=tmp_path / "out")
 
 
 def test_a_recorder_that_cannot_begin_lets_go_of_the_folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:

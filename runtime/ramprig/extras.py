@@ -7,7 +7,7 @@ from types import ModuleType
 
 from .errors import PackageMissing
 
-PROVIDERS = {"scipy": "measure", "matplotlib": "measure", "wakepy": "night"}
+PROVIDERS = {"scipy": "measure", "matplotlib": "measure", "wakepy": "night", "pyarrow": "export", "asammdf": "export"}
 """The optional extra of this distribution that brings each package."""
 
 

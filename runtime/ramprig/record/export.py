@@ -64,7 +64,7 @@ def export_run(
 ) -> list[Exported]:
     """Write the samples of a run to `out`, its own folder where None; one file for each part of the run, or more.
 
-    The volumes of a part come together in one.
+    The volumes of a part come together in one. A part that broke off before it had a samples file gives none.
 
     Raises RecordError where the run cannot be read or the file not be written, PackageMissing without its package.
     """
@@ -73,8 +73,7 @@ def export_run(
     done: list[Exported] = []
     try:
         target.mkdir(parents=True, exist_ok=True)
-        for part in parts_of(manifest):
-            paths = _files_of(folder, part)
+        for paths in _begun(folder, manifest):
             stem = paths[0].stem
             if to is To.PARQUET:
                 done.append(_parquet(Stream(paths, piece_bytes=PIECE_BYTES), target / f"{stem}.parquet", manifest))
@@ -87,13 +86,24 @@ def export_run(
     return done
 
 
+def _begun(folder: Path, manifest: Mapping[str, Any]) -> list[list[Path]]:
+    """The files of each part that has some. Raises RecordError where one is missing, or all are."""
+    parts = parts_of(dict(manifest))
+    found = [files for part in parts if (files := _files_of(folder, part))]
+    if not found:
+        raise RecordError(f"{folder / volume_names(folder, parts[0])[0]} is missing: no part of the run has samples")
+    return found
+
+
 def _files_of(folder: Path, part: Mapping[str, Any]) -> list[Path]:
-    """All that a part wrote; of one that broke off what was begun. Raises RecordError where something is missing."""
+    """All that a part wrote; of one that broke off what was begun, perhaps nothing. Raises RecordError where one is
+    missing that others follow."""
     named = [folder / name for name in volume_names(folder, part)]
     found = named if part.get("status") == "finished" else volume_files(folder, part)
-    missing = next((path for path in found or named if not path.is_file()), None)
-    if missing is not None or not found:
-        raise RecordError(f"{missing or named[0]} is missing")
+    written = named[: max((named.index(path) + 1 for path in found if path in named), default=0)]
+    missing = next((path for path in written if not path.is_file()), None)
+    if missing is not None:
+        raise RecordError(f"{missing} is missing")
     return found
 
 
