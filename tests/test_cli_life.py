@@ -89,6 +89,8 @@ def test_failures_that_lie_close_together_have_a_large_shape(capsys: pytest.Capt
     near, far = figures_of(["10000", "10001"], capsys), figures_of(["5400", "18700"], capsys)
     assert near["shape"] == pytest.approx(far["shape"] * ratio, rel=1e-6)
     assert near["low"] < near["life"] < near["high"]
+    assert main(["life", "10000", "10001"]) == 0
+    assert "Weibull shape    23995  (standard uncertainty 14143; above 1: they wear out)" in capsys.readouterr().out
 
 
 def test_a_known_shape_far_from_one_gives_a_number(capsys: pytest.CaptureFixture[str]) -> None:

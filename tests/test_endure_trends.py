@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import itertools
 import math
 
@@ -277,6 +278,8 @@ def test_a_slow_drift_is_told_with_its_slope() -> None:
     assert trend.slope_per_1000() == pytest.approx(0.05, rel=0.15)
     assert str(drift).startswith(f"coast-down time: drift at cycle {drift.cycle}")
     assert len([finding for finding in findings if finding.sign is Sign.DRIFT]) == 1
+    assert "+120 % in 1000 cycles)" in str(dataclasses.replace(drift, per_1000=1.2))
+    assert "-250 % in 1000 cycles)" in str(dataclasses.replace(drift, per_1000=-2.5))
 
 
 def test_a_feature_that_hardly_varies_is_not_called_changed_for_a_trifle() -> None:

@@ -423,6 +423,8 @@ def test_odds_and_intervals() -> None:
     none = Odds.count(0, 200)
     assert none.low == 0.0
     assert none.high == pytest.approx(1.0 - 0.025 ** (1 / 200), rel=1e-9)
+    assert str(Odds.count(200, 200)).startswith("100 % (200 of 200 draws; between 98 % and 100 %)")
+    assert str(Odds.count(200, 201)).startswith("100 % (200 of 201 draws; between 97 % and 100 %)")
     interval = Interval.of([float(value) for value in range(1, 200)], "s")
     assert (interval.low, interval.median, interval.high) == pytest.approx((5.0, 100.0, 195.0))
     assert str(Interval(30381.2, 30380.9, 30382.6, "s")) == "8 h 26 min in every draw"
@@ -452,6 +454,8 @@ def test_duty_types() -> None:
     ramps = np.concatenate([np.linspace(0.0, 0.6, 200), np.full(100, 0.6), np.linspace(0.6, 0.0, 200), np.zeros(300)])
     assert word(ramps, periodic=True) == "S4"
     found = duty_type(pattern((0.5, 6.0), (0.0, 9.0)), pattern((1.0, 6.0), (0.0, 9.0)), 0.01, tau_s=60, periodic=True)
+    assert "S2 120 min" in duty_type(pattern((0.5, 7200.0), (0.0, 9.0)), pattern((0.5, 7200.0), (0.0, 9.0)), 0.01,
+                                     tau_s=9000.0, periodic=False).why  # fmt: skip
     assert found.factor == pytest.approx(0.4)
     assert "40 %" in found.why
 

@@ -164,6 +164,7 @@ def _counted(times: Times) -> str:
 def _fitted(times: Times, args: argparse.Namespace) -> tuple[Figures, list[str]]:
     """Weibull by maximum likelihood, and the life with likelihood-ratio bounds."""
     from ramprig.endure.life import fit_weibull, in_figures, likelihood_bounds
+    from ramprig.quantity import digits
 
     share, confidence = share_of(args.share, "--share"), share_of(args.confidence, "--confidence")
     fit = fit_weibull(times.failures, times.suspensions)
@@ -178,7 +179,7 @@ def _fitted(times: Times, args: argparse.Namespace) -> tuple[Figures, list[str]]
     }  # fmt: skip
     lines = [
         _counted(times),
-        f"Weibull shape    {fit.shape:.3g}  (standard uncertainty {fit.shape_sd:.2g}; {meaning(fit)})",
+        f"Weibull shape    {digits(fit.shape, 3)}  (standard uncertainty {digits(fit.shape_sd, 2)}; {meaning(fit)})",
         f"Weibull scale    {in_figures(fit.scale)} {args.unit}  (standard uncertainty {in_figures(fit.scale_sd)}; "
         "by then 63.2 % have failed)",
         f"{name:<16} {life} {args.unit}, between {least} and {most} {sure}",
@@ -191,10 +192,11 @@ def _fitted(times: Times, args: argparse.Namespace) -> tuple[Figures, list[str]]
 
 
 def meaning(fit: Weibull) -> str:
-    """What the shape says, where its uncertainty lets it."""
-    if fit.shape - 2.0 * fit.shape_sd > 1.0:
+    """What the shape says, where its uncertainty lets it: that of its logarithm, which is nearer to normal."""
+    factor = math.exp(2.0 * fit.shape_sd / fit.shape)
+    if fit.shape / factor > 1.0:
         return "above 1: they wear out"
-    if fit.shape + 2.0 * fit.shape_sd < 1.0:
+    if fit.shape * factor < 1.0:
         return "below 1: early failures"
     return "it may be 1: failures by chance are not ruled out"
 

@@ -21,6 +21,7 @@ from enum import IntEnum, StrEnum
 from statistics import median
 
 from ramprig.errors import UsageError
+from ramprig.quantity import digits
 from ramprig.sequence.wear_limits import (
     BASELINE_LEAST,
     CHECKS_BASELINE_LEAST,
@@ -157,7 +158,9 @@ class Finding:
         if not math.isnan(self.baseline):
             text += f" against {show_feature(self.feature, self.baseline)} at first"
         if not math.isnan(self.change):
-            slope = "" if self.per_1000 is None else f", {100.0 * self.per_1000:+.2g} % in 1000 {self.turn}s"
+            per_1000 = self.per_1000
+            rising = "+" if per_1000 is not None and per_1000 > 0.0 else ""
+            slope = "" if per_1000 is None else f", {rising}{digits(100.0 * per_1000, 2)} % in 1000 {self.turn}s"
             text += f" ({100.0 * self.change:+.1f} %{slope})"
         if self.limit:
             listed = ", ".join(map(str, self.cycles))

@@ -11,6 +11,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from ramprig.quantity import digits
+
 Floats = NDArray[np.float64]
 
 ON_DUTY = 0.005
@@ -66,7 +68,9 @@ def duty_type(
         if longest_s >= SETTLED_TAUS * tau_s and len(levels) <= 1:
             return DutyType(word="S1", factor=factor, why="S1: continuous, it reaches its steady temperature")
         if _bursts(on) == 1 and len(levels) <= 1:
-            return DutyType(word="S2", factor=factor, why=f"S2 {longest_s / 60:.2g} min: one short time, then at rest")
+            return DutyType(
+                word="S2", factor=factor, why=f"S2 {digits(longest_s / 60, 2)} min: one short time, then at rest"
+            )
         return DutyType(word="S9", factor=factor, why="S9: load and speed vary without a period")
     if lasting_off_s == 0.0 or factor > 0.99:
         return _continuous(levels, factor, brakes=brakes)

@@ -14,7 +14,7 @@ from ramprig.errors import UsageError
 from ramprig.extras import need
 from ramprig.measure.numbers.uncertainty import rounded_pair
 from ramprig.measure.refusal import NotMeasurable
-from ramprig.quantity import format_bytes, format_duration
+from ramprig.quantity import digits, format_bytes, format_duration
 from ramprig.record.events import Json, jsonable
 from ramprig.sequence.compile import compile_plan
 from ramprig.sequence.log_forecast import forecast_log
@@ -99,9 +99,9 @@ class Odds:
         return cls(times=times, of=of, low=low, high=high)
 
     def __str__(self) -> str:
-        share = 100 * self.times / self.of
-        bounds = f"between {100 * self.low:.2g} % and {100 * self.high:.2g} %"
-        return f"{share:.2g} % ({self.times} of {self.of} draws; {bounds})"
+        share = digits(100 * self.times / self.of, 2)
+        bounds = f"between {digits(100 * self.low, 2)} % and {digits(100 * self.high, 2)} %"
+        return f"{share} % ({self.times} of {self.of} draws; {bounds})"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -130,7 +130,7 @@ class Forecast:
         lines += [f"how       {text}" for text in self.how]
         lines += [f"  {name.replace('_', ' '):<{width}}  {value}" for name, value in self.values.items()]
         lines += [
-            f"  {name}: {rate:.3g} starts per hour; {self.duty_types[name]}"
+            f"  {name}: {digits(rate, 3)} starts per hour; {self.duty_types[name]}"
             for name, rate in self.starts_per_hour.items()
         ]
         lines += [f"limit     {margin.text()}" for margin in self.margins]
@@ -148,7 +148,8 @@ class Forecast:
         """The whole of it in a sentence."""
         took = self.values["duration"]
         tight = [f"the {one.name} of {one.subject}" for one in self.margins if one.verdict == "tight"]
-        risk = "no draw trips" if not self.trip.times else f"it trips in {100 * self.trip.times / self.trip.of:.2g} %"
+        share = digits(100 * self.trip.times / self.trip.of, 2)
+        risk = f"it trips in {share} %" if self.trip.times else "no draw trips"
         limits = f"; too tight: {', '.join(tight)}" if tight else ""
         return f"{self.name}: takes about {format_duration(round(took.median))}; {risk}{limits}."
 

@@ -22,7 +22,7 @@ from ramprig.measure.refusal import NotMeasurable
 from ramprig.measure.script import Script
 from ramprig.measure.tightening import cut_at_once
 from ramprig.measure.trace import Floats, MotorTrace
-from ramprig.quantity import format_duty
+from ramprig.quantity import digits, format_duty
 
 from . import constants_pictures
 from .ways import WAYS, WORDS, facing
@@ -228,7 +228,7 @@ def _told(motor: Motor, found: Identification, known: Instruments) -> Findings:
         "R is the winding's alone" if known.bridge_ohm else "R includes bridge and leads, of which the bench says none",
         scales,
         f"noise found: current {1000 * found.noise.current_a:.3g} mA, angle {math.degrees(found.noise.angle_rad):.2g} "
-        f"deg; winding at most {found.warmest_k:.2g} K warmer than at the beginning",
+        f"deg; winding at most {digits(found.warmest_k, 2)} K warmer than at the beginning",
         *_related(found),
         *(f"note: {warning}" for warning in found.warnings),
     ]

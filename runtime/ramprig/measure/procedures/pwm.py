@@ -200,7 +200,7 @@ def _propagated(
 def _table(rows: list[Row], volts: float) -> list[str]:
     lines = [f"{'Hz':>8} {'ripple':>10} {'approx.':>10} {'rms':>9} {'bits':>6} {'dead time':>16}  heard"]
     for one in rows:
-        dead = f"{1000 * one.dead_time_v:.3g} mV {100 * one.dead_time_v / volts:.2g} %"
+        dead = f"{digits(1000 * one.dead_time_v, 3)} mV {digits(100 * one.dead_time_v / volts, 2)} %"
         lines.append(
             f"{one.frequency_hz:>8.0f} {1000 * one.exact_a:>7.1f} mA {1000 * one.approximate_a:>7.1f} mA "
             f"{1000 * one.rms_a:>6.1f} mA {one.bits:>6.2f} {dead:>16}  {'yes' if one.audible else 'no'}"
@@ -224,16 +224,16 @@ def _sentence(name: str, wish: PwmWish, rows: list[Row], least_hz: float, rated_
     else:
         heard = "not heard" if not chosen.audible else "heard: none above 20 kHz has the bits"
         advice = (
-            f"{digits(chosen.frequency_hz / 1000, 3)} kHz fits: {1000 * chosen.exact_a:.3g} mA ripple, "
+            f"{digits(chosen.frequency_hz / 1000, 3)} kHz fits: {digits(1000 * chosen.exact_a, 3)} mA ripple, "
             f"{chosen.bits:.1f} bits, {heard}"
         )
     if wish.frequency_hz is None:
         return f"{name}: {advice}."
     now = next(one for one in rows if one.frequency_hz == wish.frequency_hz)
-    share = 100 * now.exact_a / rated_a
+    ripple, share = digits(1000 * now.exact_a, 3), digits(100 * now.exact_a / rated_a, 2)
     return (
-        f"{name}: at {digits(now.frequency_hz / 1000, 4)} kHz the ripple is {1000 * now.exact_a:.3g} mA, {share:.2g} % "
-        f"of the rated current, with {now.bits:.1f} bits, {'audible' if now.audible else 'not audible'}; {advice}."
+        f"{name}: at {digits(now.frequency_hz / 1000, 4)} kHz the ripple is {ripple} mA, {share} % of the rated "
+        f"current, with {now.bits:.1f} bits, {'audible' if now.audible else 'not audible'}; {advice}."
     )
 
 
