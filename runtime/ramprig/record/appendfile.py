@@ -29,7 +29,7 @@ class AppendFile:
     """One file of lines, opened for appending only.
 
     `lines` and `size_bytes` count what was appended whole, `synced_lines` and `synced_bytes` what is known to be on the
-    disk itself, and `sha256` is that of the contents. Not for use by two threads at once.
+    disk itself, and `sha256` is that of the contents. Not for use by two threads at once, but for `let_go`.
     """
 
     def __init__(self, path: Path, *, new: bool = True) -> None:
@@ -38,7 +38,8 @@ class AppendFile:
         self.path = path
         self._handle = os.open(path, _APPEND | (os.O_CREAT | os.O_EXCL if new else 0), 0o666)
         self._hash = hashlib.sha256()
-        self._open = True
+        self._open = self._takes_more = True
+        self._torn = self._sync_failed = False
         self.size_bytes = self.synced_bytes = 0
         self.lines = self.synced_lines = 0
 
@@ -103,20 +104,33 @@ class AppendFile:
         """Write whole lines (`data` ends with LF) and leave them with the operating system.
 
         Raises OSError where not all of it could be written. The file then ends after the last whole line that could,
-        and the counts say so; only where the disk refuses to cut the rest off does a torn line stay behind.
+        and the counts say so; where the disk refuses to cut the rest off, a torn line stays behind, and nothing is
+        appended until that has been cut off. A file that was closed takes nothing (EBADF).
         """
+        if self._torn:
+            os.ftruncate(self._handle, self.size_bytes)
+            self._torn = False
         done = 0
         view = memoryview(data)
         try:
             while done < len(data):
+                self._check_open()
                 done += os.write(self._handle, view[done:])
         except OSError:
             whole = data.rfind(b"\n", 0, done) + 1
-            with contextlib.suppress(OSError):
-                os.ftruncate(self._handle, self.size_bytes + whole)
             self._count(data[:whole])
+            self._torn = done > whole
+            if self._torn and self._takes_more:
+                with contextlib.suppress(OSError):
+                    os.ftruncate(self._handle, self.size_bytes)
+                    self._torn = False
             raise
         self._count(data)
+
+    def _check_open(self) -> None:
+        """A descriptor that was closed may be another file's by now. Raises OSError."""
+        if not self._takes_more:
+            raise OSError(errno.EBADF, "the file was closed", str(self.path))
 
     def _count(self, data: bytes) -> None:
         self._hash.update(data)
@@ -124,13 +138,30 @@ class AppendFile:
         self.lines += data.count(b"\n")
 
     def sync(self) -> None:
-        """Have the disk itself hold what was appended; raises OSError where it cannot."""
-        if self.dirty:
+        """Have the disk itself hold what was appended; raises OSError where it cannot.
+
+        After one failure it is still tried, and never believed again: a system may drop what it could not write and
+        tell of it once (Rebello et al., Can Applications Recover from fsync Failures?, USENIX ATC 2020; from memory).
+        """
+        self._check_open()
+        if not self.dirty:
+            return
+        try:
             os.fsync(self._handle)
-            self.synced_bytes, self.synced_lines = self.size_bytes, self.lines
+        except OSError:
+            self._sync_failed = True
+            raise
+        if self._sync_failed:
+            raise OSError(errno.EIO, "an earlier sync of it failed, so what it holds is not certain", str(self.path))
+        self.synced_bytes, self.synced_lines = self.size_bytes, self.lines
+
+    def let_go(self) -> None:
+        """Have it take no more, from any thread: one that hangs in a write finds that out after it. `close` follows."""
+        self._takes_more = False
 
     def close(self) -> None:
         """Close the file without syncing; a second call does nothing."""
+        self._takes_more = False
         if self._open:
             self._open = False
             os.close(self._handle)
@@ -183,12 +214,17 @@ class Reserve:
 
     def take(self, size_bytes: int = RESERVE_BYTES) -> None:
         """Fill the reserve file; raises OSError where the disk has no room, FileExistsError where there is one."""
-        with open(self.path, "xb") as file:
-            file.write(
-                os.urandom(size_bytes)
-            )  # random, because a file system that compresses would keep zeros for nothing
-            file.flush()
-            os.fsync(file.fileno())
+        try:
+            with open(self.path, "xb") as file:
+                file.write(os.urandom(size_bytes))  # a file system that compresses would keep zeros for nothing
+                file.flush()
+                os.fsync(file.fileno())
+        except FileExistsError:
+            raise
+        except OSError:
+            with contextlib.suppress(OSError):
+                self.path.unlink()
+            raise
         self.held = True
 
     def free(self) -> bool:

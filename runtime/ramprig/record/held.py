@@ -72,6 +72,12 @@ class HeldRows:
         if self._file is not None:
             self._file.sync()
 
+    def let_go(self) -> None:
+        """Have it take no more, from any thread."""
+        file = self._file
+        if file is not None:
+            file.let_go()
+
     def close(self) -> None:
         """Close the file; what it holds stays."""
         file, self._file = self._file, None

@@ -24,7 +24,7 @@ from .samplelog import SampleLog
 from .space import SpacePolicy, SpaceWatch, disk_free
 from .speed import SpeedMethod
 from .volumes import SAMPLES_FIRST
-from .writer import SYNC_EVERY_S, DiskWriter, Trouble
+from .writer import CLOSE_WAIT_S, SYNC_EVERY_S, DiskWriter, Trouble, within
 
 BATCH_ROWS = 2048
 """In virtual time so many rows are printed together; a log that must be durable takes every block as it comes."""
@@ -130,10 +130,11 @@ class Recorder:
         self._periods_ticks: list[int] = []
         self._troubles: list[Json] = []
         self._manifest_lock = threading.Lock()
-        self._finished = False
+        self._finished = self._sealed = False
         self._cycles = folder.go_on(CYCLES_FILE)
         self._cycles_given = self._cycles_kept = 0
         self._samples_names: list[str] = []
+        self._trails: list[AppendFile] = []
         self._keeping = keeping or Keeping()
         durable = threaded if durable is None else durable
         self._events, self._samples = self._begin_files(durable=durable)
@@ -143,6 +144,7 @@ class Recorder:
             on_trouble=self._on_trouble,
             after_trouble=self._after_trouble,
             on_sync=self._on_sync,
+            make_room=folder.reserve.free,
             threaded=threaded,
             durable=durable,
             now=clock.now,
@@ -255,11 +257,16 @@ class Recorder:
         self._cycles_given += 1
         self._mind(told)
 
+        written = False
+
         def write() -> None:
+            nonlocal written
             file = self._open_cycles()
             if self._writer.durable:
                 self._writer.sync_files()
-            file.append(line)
+            if not written:  # on a full disk this is done twice
+                file.append(line)
+                written = True
             if self._writer.durable:
                 file.sync()
                 if file.lines == 1:
@@ -278,14 +285,19 @@ class Recorder:
             return
         channels = {(channel.kind, channel.index) for channel in blocks[0].layout.channels}
         printer = self._new_printer(self.columns.only(channels))
+        data = printer.header() + printer.rows(blocks)
+
+        begun: list[AppendFile] = []
 
         def write() -> None:
-            file = self.folder.new_file(TRAIL_FILE)
-            try:
-                file.append(printer.header() + printer.rows(blocks))
-                file.sync()
-            finally:
-                file.close()
+            if not begun:
+                begun.append(self.folder.new_file(TRAIL_FILE))
+                self._trails += begun
+            file = begun[0]
+            file.append(data[file.size_bytes :])  # on a full disk this is done twice: what is there stays
+            file.sync()
+            sync_folder(self.folder.path)
+            file.close()
 
         self._writer.submit(write, vital=True)
 
@@ -333,17 +345,34 @@ class Recorder:
             with contextlib.suppress(RecordError):  # told through on_trouble, and in the account as unwritten rows
                 self._submit_batch()
                 self._writer.submit(self._samples.end)
-        self._writer.close()
-        self.folder.reserve.free()
-        self._samples.close()
-        self._events.close()
-        if self._cycles is not None:
-            self._cycles.close()
-        try:
+        ended = self._writer.close(CLOSE_WAIT_S, at_last=self._close_files)
+
+        def write_end() -> None:
+            self.folder.reserve.free()
             self._write_manifest("finished", end)
+
+        try:
+            if ended:
+                write_end()
+            else:
+                self._let_go()
+                within(CLOSE_WAIT_S, write_end)
         except OSError as error:
             raise RecordError(f"run.json cannot be written in {self.folder.path}: {error.strerror}") from error
         return self.folder.path
+
+    def _files(self) -> list[AppendFile | SampleLog]:
+        return [self._samples, self._events, *([] if self._cycles is None else [self._cycles]), *self._trails]
+
+    def _close_files(self) -> None:
+        for file in self._files():
+            with contextlib.suppress(OSError):
+                file.close()
+
+    def _let_go(self) -> None:
+        """The disk hangs: what comes back from it late must find nothing to write to."""
+        for file in self._files():
+            file.let_go()
 
     def _write_manifest(self, status: str, end: RunEnd | None) -> None:
         contents = self.folder.head()
@@ -369,6 +398,9 @@ class Recorder:
         if self.folder.earlier is not None:
             self._add_parts(contents, self.folder.earlier)
         with self._manifest_lock:
+            if self._sealed:  # a write that comes late must not say that the run goes on
+                return
+            self._sealed = status == "finished"
             self.folder.write_manifest(contents)
 
     def _add_parts(self, contents: dict[str, Json], earlier: Earlier) -> None:

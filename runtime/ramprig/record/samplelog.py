@@ -44,6 +44,11 @@ class RangesFile:
         if self._file is not None:
             self._file.sync()
 
+    def let_go(self) -> None:
+        """Have it take no more, from any thread."""
+        if self._file is not None:
+            self._file.let_go()
+
     def close(self) -> None:
         """Close the file without syncing."""
         if self._file is not None:
@@ -173,21 +178,27 @@ class SampleLog:
             if ranges is not None:
                 ranges.close()
 
+    def _all(self) -> list[VolumeWriter | HeldRows | RangesFile]:
+        return [self._volumes, *([] if self._held is None else [self._held]), *self._files]
+
     def sync(self) -> None:
-        """Have the disk hold all that was written."""
-        self._volumes.sync()
-        if self._held is not None:
-            self._held.sync()
-        for file in self._files:
-            file.sync()
+        """Have the disk hold all that was written; raises OSError after all files were tried."""
+        failed: OSError | None = None
+        for file in self._all():
+            try:
+                file.sync()
+            except OSError as error:
+                failed = failed or error
+        if failed is not None:
+            raise failed
+
+    def let_go(self) -> None:
+        """Have no file take more, from any thread; `close` follows."""
+        for file in self._all():
+            file.let_go()
 
     def close(self) -> None:
         """Close all files without syncing; never raises."""
-        with contextlib.suppress(OSError):
-            self._volumes.close()
-        if self._held is not None:
-            with contextlib.suppress(OSError):
-                self._held.close()
-        for file in self._files:
+        for file in self._all():
             with contextlib.suppress(OSError):
                 file.close()

@@ -104,6 +104,10 @@ class VolumeWriter:
         """Have the disk hold all rows; raises OSError. The volumes before the current one are on it already."""
         self._file.sync()
 
+    def let_go(self) -> None:
+        """Have it take no more, from any thread."""
+        self._file.let_go()
+
     def close(self) -> None:
         """Close the current volume without syncing."""
         self._file.close()

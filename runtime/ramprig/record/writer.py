@@ -7,6 +7,7 @@ renewed only while it is small.
 
 from __future__ import annotations
 
+import contextlib
 import errno
 import queue
 import threading
@@ -96,7 +97,9 @@ class DiskWriter:
     cannot be made again).
     `on_trouble` is called at most once for each kind of trouble, from whichever thread meets it, and must not raise.
     `after_trouble` is called next, for a trouble that loses rows: from then on only vital jobs are carried out, and
-    they are let fail. `on_sync` is called after each timed sync (free space is looked at there); it may call `tell`.
+    they are let fail. A vital job that is the first to find the disk full is done again after `make_room`, so it must
+    not do twice what it has done. `on_sync` is called after each timed sync (free space is looked at there); it may
+    call `tell`.
     """
 
     def __init__(
@@ -107,6 +110,7 @@ class DiskWriter:
         after_trouble: Callable[[Trouble], None],
         on_sync: Callable[[], None],
         threaded: bool,
+        make_room: Callable[[], object] = lambda: None,
         durable: bool | None = None,
         now: Callable[[], float] = time.monotonic,
         sync_every_s: float = SYNC_EVERY_S,
@@ -116,6 +120,7 @@ class DiskWriter:
         self._on_trouble = on_trouble
         self._after_trouble = after_trouble
         self._on_sync = on_sync
+        self._make_room = make_room
         self._now = now
         self._sync_every_s = sync_every_s
         self.durable = threaded if durable is None else durable
@@ -127,6 +132,8 @@ class DiskWriter:
         self._queue_max = queue_max
         self._queue: queue.Queue[_Job | None] = queue.Queue(queue_max + VITAL_MAX)
         self._open = True
+        self._given_up = False
+        self._at_last: Callable[[], None] = lambda: None
         self._thread: threading.Thread | None = None
         if threaded:
             self._thread = threading.Thread(target=self._run, name="ramprig-disk", daemon=True)
@@ -184,36 +191,44 @@ class DiskWriter:
         if ends_rows:
             self._after_trouble(trouble)
 
-    def close(self, wait_s: float = CLOSE_WAIT_S) -> None:
-        """Carry out what is waiting and sync; a disk that does not come to an end in `wait_s` is a trouble. Never
-        raises."""
+    def close(self, wait_s: float = CLOSE_WAIT_S, *, at_last: Callable[[], None] = lambda: None) -> bool:
+        """Carry out what is waiting, sync, and do `at_last`; False where the disk did not come to an end in `wait_s`.
+
+        That is a trouble, and what is still waiting then is not carried out; `at_last` is done when the job that hangs
+        is over. Never raises.
+        """
         if not self._open:
-            return
+            return not self._given_up
+        self._at_last = at_last
         self._open = False
         if self._thread is None:
-            self._sync()
-            return
-        try:
-            self._queue.put(None, timeout=wait_s)
-            self._thread.join(wait_s)
-        except queue.Full:
-            pass
-        if self._thread.is_alive():
+            self._attempt(self.sync_files)
+            at_last()
+            return True
+        with contextlib.suppress(queue.Full):  # a full queue needs no nudge
+            self._queue.put_nowait(None)
+        self._thread.join(wait_s)
+        self._given_up = self._thread.is_alive()
+        if self._given_up:
             self.tell(Trouble(TroubleKind.DISK_ERROR, f"the disk did not finish within {wait_s:g} s"))
+        return not self._given_up
 
     def _run(self) -> None:
-        while True:
-            job = self._next_job()
-            if job is not None:
-                self._carry_out(job)
-                self._last_progress_s = self._now()
-                self._queue.task_done()
-            elif not self._open and self._queue.empty():
-                self._sync()
-                return
-            if self._now() - self._last_sync_s >= self._sync_every_s:
-                self._sync()
-                self._on_sync()
+        try:
+            while not self._given_up:
+                job = self._next_job()
+                if job is not None:
+                    self._carry_out(job)
+                    self._last_progress_s = self._now()
+                    self._queue.task_done()
+                if not self._open and self._queue.empty():
+                    self._attempt(self.sync_files)
+                    return
+                if self._now() - self._last_sync_s >= self._sync_every_s:
+                    self._attempt(self.sync_files)
+                    self._attempt(self._on_sync)
+        finally:
+            self._at_last()
 
     def _next_job(self) -> _Job | None:
         """The next job, or None when it is time to look whether to sync or to end."""
@@ -228,38 +243,75 @@ class DiskWriter:
     def _look_at_space(self) -> None:
         if self._now() - self._last_sync_s >= self._sync_every_s:
             if self.durable:
-                self._sync()
+                self._attempt(self.sync_files)
             self._last_sync_s = self._now()
             self._on_sync()
 
     def _carry_out(self, job: _Job) -> None:
-        if self.failure is not None and not job.vital:
+        if self._given_up or (self.failure is not None and not job.vital):
             self.refused_jobs += 1
             return
+        before = self.failure
+        done = self._attempt(job.work)
+        if not done and job.vital and before is None and self._is_full():
+            self._make_room()
+            done = self._attempt(job.work)
+        if done and job.sync and self.durable and self._now() - self._last_sync_s >= SYNC_REST_S:
+            self._attempt(self.sync_files)
+
+    def _is_full(self) -> bool:
+        return self.failure is not None and self.failure.kind is TroubleKind.DISK_FULL
+
+    def _attempt(self, work: Callable[[], None]) -> bool:
+        """Do it; whether it was done. What fails is told: a fault of ours must stop the motor as a full disk does, and
+        not end the thread in silence."""
         try:
-            job.work()
-            if job.sync and self.durable and self._now() - self._last_sync_s >= SYNC_REST_S:
-                self.sync_files()
+            work()
         except OSError as error:
             self.tell(trouble_of(error))
-        except (
-            Exception
-        ) as error:  # a fault of ours must stop the motor as a full disk does, not end the thread in silence
+            return False
+        except Exception as error:
             self.tell(Trouble(TroubleKind.FAULT, f"writing the log failed: {type(error).__name__}: {error}"))
+            return False
+        return True
 
     def sync_files(self) -> None:
-        """Have the disk hold all files as they are now; to be called from a job. Raises OSError."""
-        for file in self._files:
-            file.sync()
-        self._last_sync_s = self._now()
+        """Have the disk hold all files as they are now; to be called from a job.
 
-    def _sync(self) -> None:
-        try:
-            self.sync_files()
-        except OSError as error:
-            self._last_sync_s = self._now()
-            self.tell(trouble_of(error))
+        Raises OSError where it does not hold one of them, after all of them were tried.
+        """
+        failed: OSError | None = None
+        for file in self._files:
+            try:
+                file.sync()
+            except OSError as error:
+                failed = failed or error
+        self._last_sync_s = self._now()
+        if failed is not None:
+            raise failed
 
     def add_file(self, file: Syncable) -> None:
         """Sync this file too from now on; to be called from a job."""
         self._files.append(file)
+
+
+def within(wait_s: float, work: Callable[[], None]) -> None:
+    """Do it in a thread that is left alone where it does not come to an end in time.
+
+    Raises OSError: that of `work`, or that it took too long; it may still come to its end then.
+    """
+    failed: list[OSError] = []
+
+    def attempt() -> None:
+        try:
+            work()
+        except OSError as error:
+            failed.append(error)
+
+    thread = threading.Thread(target=attempt, name="ramprig-disk-end", daemon=True)
+    thread.start()
+    thread.join(wait_s)
+    if thread.is_alive():
+        raise OSError(errno.ETIMEDOUT, f"the disk took longer than {wait_s:g} s")
+    if failed:
+        raise failed[0]
