@@ -16,7 +16,7 @@ from ramprig.bench import Bench, bench_of_text, load_bench
 from ramprig.measure.numbers import coastdown as closed
 from ramprig.measure.procedures.backlash import Backlash
 from ramprig.measure.procedures.coastdown import CoastDown, fit_angle
-from ramprig.measure.procedures.linkcheck import LinkCheck
+from ramprig.measure.procedures.linkcheck import LinkCheck, Spoilt
 from ramprig.measure.procedures.servo import ServoCheck
 from ramprig.measure.refusal import NotMeasurable
 from ramprig.mock.controller import Controller
@@ -240,6 +240,14 @@ def test_a_sound_link_is_said_to_be_sound() -> None:
     assert findings.good
     assert findings.values["round_trip"].value < 0.01
     assert findings.values["errors_motor_on"].value == 0.0
+
+
+@pytest.mark.parametrize(("lines", "most"), [(0, 3.689), (1, 5.572), (10, 18.390), (100, 121.63)])
+def test_the_rate_of_spoilt_bytes_reaches_up_to_the_exact_bound_of_the_count(lines: int, most: float) -> None:
+    # Garwood 1936, upper 97.5 % limits of a Poisson mean (tables; from memory): 3.689, 5.572, 18.390, 121.63.
+    rate = Spoilt(lines=lines, bytes=40_000).rate
+    assert rate.value == lines / 40_000
+    assert rate.interval()[1] == pytest.approx(most / 40_000, rel=1e-4)
 
 
 def test_a_delivery_grid_is_named() -> None:

@@ -80,6 +80,7 @@ def test_a_contribution_with_infinite_freedom_does_not_limit_the_result() -> Non
         (un.Measured(12345.0, "rad/s", 300.0), "12300 rad/s +- 600 rad/s (95 %)"),
         (un.Measured(5.0, "s", 0.0), "5 s +- 0 s (95 %)"),
         (un.Measured(0.99996, "ohm", 0.0001), "0.99996 ohm +- 0.00020 ohm (95 %)"),
+        (un.Measured(-0.0031e-3, "s", 0.6e-3), "0.0 ms +- 1.2 ms (95 %)"),
     ],
 )
 def test_a_result_reads_as_an_engineer_writes_it(measured: un.Measured, text: str) -> None:

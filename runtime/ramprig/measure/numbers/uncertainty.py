@@ -114,8 +114,8 @@ def rounded_pair(value: float, half_width: float) -> tuple[str, str]:
     kept = 1 if half_width / 10.0**power < 2.95 else 0
     places = kept - power
     if places < 0:
-        return f"{round(value, places):.0f}", f"{round(half_width, places):.0f}"
-    return f"{value:.{places}f}", f"{half_width:.{places}f}"
+        return f"{round(value, places) + 0.0:.0f}", f"{round(half_width, places):.0f}"
+    return f"{round(value, places) + 0.0:.{places}f}", f"{half_width:.{places}f}"  # + 0.0: no -0
 
 
 def means(readings: Array) -> tuple[Array, Array]:

@@ -13,7 +13,7 @@ from ramprig.bench import Bench
 from ramprig.extras import need
 from ramprig.measure.findings import Findings, Picture
 from ramprig.measure.lab import Lab
-from ramprig.measure.numbers.uncertainty import Measured
+from ramprig.measure.numbers.uncertainty import CONFIDENCE, Measured, coverage_factor
 from ramprig.measure.refusal import NotMeasurable
 from ramprig.measure.tightening import tightened
 from ramprig.quantity import digits, format_duration, format_duty
@@ -45,13 +45,14 @@ class Spoilt:
 
     @property
     def rate(self) -> Measured:
-        """Spoilt bytes a byte: a count of rare events has the standard uncertainty of its root (Poisson).
-
-        Where none was seen, one is taken for the uncertainty.
+        """Spoilt bytes a byte. The interval reaches up to the exact bound of a count of rare events (Poisson; Garwood
+        1936), which lies at 3.7 where none was seen, and as far down.
         """
         if self.bytes <= 0:
             raise NotMeasurable("no bytes came")
-        return Measured(self.lines / self.bytes, "", math.sqrt(max(1, self.lines)) / self.bytes)
+        stats = need("scipy.stats", purpose="the bound of a count")
+        most = float(stats.chi2.ppf(0.5 + CONFIDENCE / 2.0, 2 * self.lines + 2)) / 2.0
+        return Measured(self.lines / self.bytes, "", (most - self.lines) / coverage_factor(math.inf) / self.bytes)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
