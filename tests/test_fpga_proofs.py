@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import shutil
+from dataclasses import replace
 from pathlib import Path
 
 import pytest
@@ -98,6 +99,31 @@ def test_a_property_without_a_label_is_refused(tmp_path: Path, monkeypatch: pyte
 def test_all_properties_of_a_block_are_proved_and_all_covers_reached(block: Block) -> None:
     found = prove_gates.examine(block)
     assert found.holds, found.line
+
+
+COUNTER = """module rr_x (input clk);
+    reg [1:0] here = 2'd0;
+    always @(posedge clk) begin
+        here <= here == 2'd2 ? 2'd0 : here + 2'd1;
+        c_two: cover (here == 2'd2);
+        c_three: cover (here == 2'd3);
+    end
+endmodule
+"""
+
+
+@needs_yosys
+@pytest.mark.parametrize("at_once", [False, True])
+def test_a_cover_that_cannot_be_reached_or_not_so_soon_is_not_reached(
+    at_once: bool, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    (tmp_path / "rr_x.v").write_text(COUNTER, "ascii")
+    shutil.copy(prove_gates.FPGA / prove_gates.COVER_MAP, tmp_path)
+    monkeypatch.setattr(prove_gates, "FPGA", tmp_path)
+    enough = Block("rr_x", cover_clocks=5, at_once=at_once)
+    assert prove_gates.reach(enough, "c_two")
+    assert not prove_gates.reach(enough, "c_three")
+    assert not prove_gates.reach(replace(enough, cover_clocks=2), "c_two")
 
 
 @needs_yosys
