@@ -134,6 +134,9 @@ def test_a_message_shows_the_place_the_line_and_a_caret(text: str) -> None:
         ("a: 1\nb: \x07\n", 2, "found the character U+0007"),
         ("a: 1\nb: x\x85y\n", 2, "found the character U+0085"),
         ("a: 1\nb: \u2028\n", 2, "found the character U+2028"),
+        ("a: 1\nb: 20 % # \u202e% 08 :b\n", 2, "found the character U+202E"),
+        ("a: 1\nb\u200b: 2\n", 2, "found the character U+200B"),
+        ('a: "\\u2066"\n', 1, "this text contains the character U+2066"),
     ],
 )
 def test_what_is_refused_is_placed_and_explained(text: str, line: int, message: str) -> None:

@@ -14,7 +14,7 @@ from typing import NamedTuple
 import yaml
 
 from ..errors import FileError
-from .source import Mark, Source, read_source, source_of
+from .source import SEEN, Mark, Source, read_source, source_of
 from .tree import Entry, Listing, Mapping, Node, Scalar
 
 DEPTH_MAX = 32
@@ -125,7 +125,7 @@ class _Composer:
         return built
 
     def _scalar(self, event: yaml.ScalarEvent, mark: Mark) -> Scalar:
-        bad = re.search("[^\n\t\x20-\x7e\xa0-\ud7ff\ue000-\U0010ffff]", event.value)
+        bad = re.search(f"[^\n\t\x20-\x7e{SEEN}\ue000-\U0010ffff]", event.value)
         if bad is not None:
             raise mark.error(f"this text contains the character U+{ord(bad.group()):04X}", "remove the escape")
         return Scalar(event.value, event.style is None, mark)

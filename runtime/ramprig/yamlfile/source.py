@@ -16,8 +16,12 @@ UTF16_OR_32_MARKS = (b"\xff\xfe", b"\xfe\xff", b"\x00\x00\xfe\xff")
 UTF8_MARK = b"\xef\xbb\xbf"
 
 _LINE_END = re.compile("\r\n|\r|\n")
-# NEL, LS and PS are line ends to YAML 1.1 and not to editors: refused, so that line numbers mean one thing.
-_REFUSED = re.compile("[^\t\n\r\x20-\x7e\xa0-\u2027\u202a-\ud7ff\ue000-\ufefe\uff00-\ufffd\U00010000-\U0010ffff]")
+# NEL, LS and PS are line ends to YAML 1.1 and not to editors: refused, so that line numbers mean one thing. So are a
+# blank of no width and the marks that turn the direction of writing (Unicode Annex 9): with them a line would show
+# another value than it has.
+SEEN = "\xa0-\u200a\u200c-\u2027\u202f-\u2065\u206a-\ud7ff"
+"""Beyond ASCII, the characters of the first plane's lower part that a file may hold, as a class of a pattern has them."""
+_REFUSED = re.compile(f"[^\t\n\r\x20-\x7e{SEEN}\ue000-\ufefe\uff00-\ufffd\U00010000-\U0010ffff]")
 
 
 @dataclass(frozen=True, slots=True)
