@@ -20,7 +20,7 @@ _LINE_END = re.compile("\r\n|\r|\n")
 # blank of no width and the marks that turn the direction of writing (Unicode Annex 9): with them a line would show
 # another value than it has.
 SEEN = "\xa0-\u200a\u200c-\u2027\u202f-\u2065\u206a-\ud7ff"
-"""Beyond ASCII, the characters of the first plane's lower part that a file may hold, as a class of a pattern has them."""
+"""What a file may hold between ASCII and U+D800, as a class of a pattern has it."""
 _REFUSED = re.compile(f"[^\t\n\r\x20-\x7e{SEEN}\ue000-\ufefe\uff00-\ufffd\U00010000-\U0010ffff]")
 
 
