@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+import select
 import signal
 import subprocess
 import sys
@@ -158,7 +159,24 @@ class RunProcess:
 
 
 class RunOnTerminal(RunProcess):
-    """The same on a terminal of its own, which `hang_up` closes as a closed window would."""
+    """The same, or another command, on a terminal of its own, which `hang_up` closes as a closed window would."""
+
+    def __init__(self, folder: Path, port: str, *, words: tuple[str, ...] | None = None) -> None:
+        self._words = words
+        self._shown = b""
+        super().__init__(folder, port)
+
+    def type(self, keys: bytes) -> float:
+        """Type on it; returns the host time right before."""
+        now_s = time.monotonic()
+        os.write(self._master, keys)
+        return now_s
+
+    def shown(self) -> str:
+        """All that it has shown so far."""
+        while select.select([self._master], [], [], 0.0)[0]:
+            self._shown += os.read(self._master, 65536)
+        return self._shown.decode("utf-8", "replace")
 
     def _begin(self) -> subprocess.Popen[bytes]:
         import fcntl
@@ -172,7 +190,7 @@ class RunOnTerminal(RunProcess):
 
         try:
             return subprocess.Popen(
-                [*self._command, "--yes"],
+                [*self._command, "--yes"] if self._words is None else [sys.executable, "-m", "ramprig", *self._words],
                 stdin=slave,
                 stdout=slave,
                 stderr=slave,

@@ -129,3 +129,23 @@ def test_a_terminal_that_is_closed_stops_the_run_in_order(tmp_path: Path) -> Non
         assert off_s - ended_s <= LEASE_S + STOP_S + MARGIN_S
         check_log(run, ended_s, "SIGHUP", "closed terminal")
         assert "(SIGHUP)" in read_manifest(run.folder)["stop_reason"]
+
+
+def test_the_quit_key_stops_the_run_in_order(tmp_path: Path) -> None:
+    r"""Ctrl-\ would end any other program without a word."""
+    with MockProcess(tmp_path) as mock, RunOnTerminal(tmp_path, mock.port) as run:
+        until(lambda: mock.driven_since(0.0), "motion", run=run)
+        ended_s = run.type(b"\x1c")
+        assert run.code() == 5
+        check_log(run, ended_s, "SIGTERM", "quit key")
+        assert "(SIGQUIT)" in read_manifest(run.folder)["stop_reason"]
+
+
+def test_the_question_before_an_acceptance_can_be_ended_by_the_interrupt_key(tmp_path: Path) -> None:
+    with MockProcess(tmp_path) as mock:
+        words = ("accept", mock.port, "--only", "arming", "--runs", str(tmp_path / "runs"))
+        with RunOnTerminal(tmp_path, mock.port, words=words) as run:
+            until(lambda: "Type yes and ENTER" in run.shown(), "the question", run=run)
+            run.type(b"\x03")
+            assert run.code() == 5
+            assert (run.folder / "accept.json").exists()

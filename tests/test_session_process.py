@@ -71,7 +71,7 @@ def bench(tmp_path: Path) -> Iterator[Bench]:
     made.close()
 
 
-@pytest.mark.parametrize("name", ["SIGTERM", "SIGHUP", "SIGINT"])
+@pytest.mark.parametrize("name", ["SIGTERM", "SIGHUP", "SIGINT", "SIGQUIT"])
 def test_a_signal_that_can_be_caught_ends_in_a_confirmed_stop(bench: Bench, name: str) -> None:
     assert bench.duty()[1] == 2500
     sent_s = time.monotonic()

@@ -26,7 +26,7 @@ class Panicked:
 
 
 @POSIX
-@pytest.mark.parametrize("name", ["SIGINT", "SIGTERM", "SIGHUP"])
+@pytest.mark.parametrize("name", ["SIGINT", "SIGTERM", "SIGHUP", "SIGQUIT"])
 def test_a_signal_stops_and_the_next_pump_says_so(name: str) -> None:
     rig = Rig()
     rig.session.arm()

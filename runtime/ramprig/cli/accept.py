@@ -3,10 +3,10 @@
 from __future__ import annotations
 
 import argparse
-import sys
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+from ramprig.cli.asking import answered
 from ramprig.cli.running import RUNS, on_terminal
 from ramprig.cli.say import say_surely, tell
 from ramprig.errors import RamprigError, UsageError
@@ -76,9 +76,9 @@ def carry_out(args: argparse.Namespace) -> int:
             restart=restarter(port) if args.restart else None,
             only=args.only,
         )
-        with StopOnSignals(talk):
+        with StopOnSignals(talk):  # to the end of the report, which a second signal must not cost
             verdict = accept(port, wish, tell=tell, talk=talk)
-    tell_end(verdict, talk, write_report, runs=args.runs, port=args.port)
+            tell_end(verdict, talk, write_report, runs=args.runs, port=args.port)
     return verdict.exit_code or (NOT_CONFIRMED_CODE if declined else 0)
 
 
@@ -106,9 +106,8 @@ def may_energise(trial: Trial, args: argparse.Namespace, declined: list[bool]) -
     if not on_terminal():
         tell("Nobody is at the terminal to ask, and --energise yes was not given: nothing is switched on.")
         return False
-    tell("Type yes and ENTER to switch on; anything else ends here.")
     trial.talk.beat_s = None
-    if sys.stdin.readline().strip().lower() == "yes":
+    if answered("Type yes and ENTER to switch on; anything else ends here.", trial.talk.listen) == "yes":
         return True
     declined.append(True)
     return False

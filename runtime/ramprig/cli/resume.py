@@ -3,13 +3,13 @@
 from __future__ import annotations
 
 import argparse
-import sys
 import time
 from collections.abc import Iterator
 from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+from ramprig.cli.asking import confirmed
 from ramprig.cli.night import carry_out_unattended, seconds_of
 from ramprig.cli.running import SIMULATED, Way, carry_out_wish, mock_url, on_terminal
 from ramprig.cli.say import tell
@@ -127,6 +127,5 @@ def ask() -> None:
 
     for line in cautions_lines():
         tell(line)
-    tell("Type yes and ENTER to arm and go on; anything else leaves everything off.")
-    if sys.stdin.readline().strip().lower() != "yes":
+    if not confirmed("Type yes and ENTER to arm and go on; anything else leaves everything off."):
         raise StoppedByUser("Not gone on with: it was not confirmed. Nothing has moved.")

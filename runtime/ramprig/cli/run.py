@@ -3,11 +3,11 @@
 from __future__ import annotations
 
 import argparse
-import sys
 import time
 from dataclasses import replace
 from typing import TYPE_CHECKING
 
+from ramprig.cli.asking import confirmed
 from ramprig.cli.night import carry_out_unattended, seconds_of
 from ramprig.cli.running import SIMULATED, Way, add_run_arguments, carry_out_run, mock_url, on_terminal
 from ramprig.cli.say import tell
@@ -16,9 +16,10 @@ from ramprig.errors import StoppedByUser
 if TYPE_CHECKING:
     from ramprig.cli.files import Pair
 
-EPILOG = """On a terminal it shows what will move and asks before it arms; --yes does not ask. SIGINT (Ctrl-C),
-SIGTERM and SIGHUP stop the motors in order, a second one within a second cuts them off. Begun with nohup, SIGHUP
-is ignored, and the run outlasts its terminal.
+EPILOG = """On a terminal it shows what will move and asks before it arms; --yes does not ask. SIGINT (Ctrl-C), SIGQUIT
+(Ctrl-\\), SIGTERM and SIGHUP stop the motors in order, a second one within a second cuts them off. Begun with nohup,
+SIGHUP is ignored, and the run outlasts its terminal. Suspended (Ctrl-Z) or killed, it is the board that stops, by its
+lease.
 
 --unattended starts only where the rules for a run that nobody stands beside hold, and names each one that does not;
 it shows a sheet for the door, puts it into the run folder as a page to print, and keeps the computer awake.
@@ -77,8 +78,7 @@ def ask(pair: Pair, url: str) -> None:
 
     for line in [*cautions_lines(), "", *what_moves(pair, url)]:
         tell(line)
-    tell("Type yes and ENTER to arm and run; anything else leaves everything off.")
-    if sys.stdin.readline().strip().lower() != "yes":
+    if not confirmed("Type yes and ENTER to arm and run; anything else leaves everything off."):
         raise StoppedByUser("Not run: it was not confirmed. Nothing has moved.")
 
 

@@ -10,7 +10,7 @@ from pathlib import Path
 from typing import Protocol
 
 from ramprig.bench import Bench
-from ramprig.errors import LinkError, PackageMissing, Refused
+from ramprig.errors import LinkError, PackageMissing, Refused, StoppedByUser
 from ramprig.port.base import Port
 from ramprig.record.events import jsonable
 from ramprig.record.manifest import RunEnd
@@ -24,6 +24,9 @@ from .findings import Findings
 from .lab import Bystander, Lab
 from .plots import png
 from .refusal import NotMeasurable
+
+PUT_BACK_MAX = 3
+"""So often are the limits put back where a stop is asked for meanwhile."""
 
 
 class Procedure(Protocol):
@@ -117,14 +120,18 @@ def _put_back(session: Session, bench: Bench, tell: Callable[[str], None]) -> No
     limits = bench.limits(
         tick_us=identity.tick_us, axes=identity.axes, servos=identity.servos, max_duty=identity.max_duty
     )
-    stopped = session.last_stop
-    try:
+    for _ in range(PUT_BACK_MAX):
+        stopped = session.last_stop
         # After a stop that is not confirmed nothing is sent: the lease must be free to end what still runs.
-        if session.valid and not session.armed and (stopped is None or stopped.confirmed):
+        if not session.valid or session.armed or not (stopped is None or stopped.confirmed):
+            break
+        try:
             session.write_limits(limits)
             return
-    except (LinkError, Refused):
-        pass
+        except StoppedByUser:  # asked for before this, or meanwhile: it is confirmed first
+            session.stop(1)
+        except (LinkError, Refused):
+            break
     tell("The device keeps the tighter limits of this measurement until it is opened again.")
 
 

@@ -1,4 +1,4 @@
-"""Turns the system's ways to end a program into a stop: interrupt, termination, hang-up, a closed console.
+"""Turns the system's ways to end a program into a stop: interrupt, quit, termination, hang-up, a closed console.
 
 The handler sends the stop itself, past every queue, and the main flow learns of it at the next pump (StoppedByUser), so
 that the stop is confirmed and written down. A second signal within a second cuts the power to the motor at once.
@@ -18,7 +18,7 @@ AGAIN_WITHIN_S = 1.0
 CONSOLE_WAIT_S = 4.0
 """Windows ends a closed console's program after about 5 s (from memory); the handler keeps it alive for so long."""
 
-_NAMES = ("SIGINT", "SIGTERM", "SIGHUP", "SIGBREAK")
+_NAMES = ("SIGINT", "SIGTERM", "SIGHUP", "SIGQUIT", "SIGBREAK")
 _CONSOLE_EVENTS = (2, 5, 6)  # CTRL_CLOSE_EVENT, CTRL_LOGOFF_EVENT, CTRL_SHUTDOWN_EVENT
 
 

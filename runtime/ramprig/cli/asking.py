@@ -1,0 +1,30 @@
+"""Asks the person at the terminal, while time goes on: a question must hold up neither a signal nor a device."""
+
+from __future__ import annotations
+
+import sys
+import threading
+from collections.abc import Callable
+
+from ramprig.cli.say import tell
+
+LOOK_S = 0.1
+"""Time goes on by so much between two looks for an answer."""
+
+
+def confirmed(question: str) -> bool:
+    """Whether the word `yes` is typed; nothing is open yet, so that Ctrl-C ends the program as ever."""
+    tell(question)
+    return sys.stdin.readline().strip().lower() == "yes"
+
+
+def answered(question: str, pump: Callable[[float], None]) -> str:
+    """What is typed, in small letters; time goes on by `pump`, which may raise, while it is waited for."""
+    tell(question)
+    lines: list[str] = []
+    reader = threading.Thread(target=lambda: lines.append(sys.stdin.readline()), daemon=True)
+    reader.start()
+    reader.join(LOOK_S / 10)  # what is piped in is there at once
+    while reader.is_alive():
+        pump(LOOK_S)
+    return lines[0].strip().lower() if lines else ""
