@@ -381,7 +381,9 @@ def test_a_lost_link_ends_the_log_in_order(bench: DeskBench) -> None:
     assert "samples received" in said
     assert "could not be ended" not in said
     (folder,) = bench.runs.iterdir()
-    assert read_manifest(folder)["stop_reason"] == "the link was lost"
+    manifest = read_manifest(folder)
+    assert manifest["verdict"] == "link lost"
+    assert manifest["stop_reason"].endswith("the cable was pulled out (fault unplug)")
     assert audit(folder).exact
 
 

@@ -24,6 +24,7 @@ from ramprig.session.opening import Wanted
 from ramprig.session.readings import Identity
 from ramprig.session.session import Session
 
+from .broken import broken_by
 from .carry_on import CarryOn, check_same, end_latch, told_breaks
 from .columns import bench_columns
 from .compile import compile_plan
@@ -314,7 +315,7 @@ def recording(
     try:
         yield recorder
     except BaseException as error:
-        recorder.finish(RunEnd(verdict="broken off", stop_reason=f"{type(error).__name__}: {error}"))
+        recorder.finish(broken_by(error))
         raise
     finally:
         listeners.remove(on_block=keeping.on_block, on_event=recorder.on_event)

@@ -14,6 +14,7 @@ from ramprig.bench import Bench
 from ramprig.errors import LinkError, LinkLost, RamprigError, RecordError, StoppedByUser, Tripped, UsageError
 from ramprig.port.base import Port
 from ramprig.quantity import format_duration
+from ramprig.sequence.broken import broken_by
 from ramprig.sequence.listeners import Listeners
 from ramprig.sequence.rig import Rig
 from ramprig.sequence.tripsay import explain_trip
@@ -23,7 +24,7 @@ from ramprig_link.host import HostLink
 
 from .aftermath import Aftermath
 from .live import Live, Snapshot
-from .logbook import Logbook
+from .logbook import LOGGED, Logbook
 from .motions import Motions
 from .outbox import Outbox
 from .wording import Teller
@@ -301,13 +302,13 @@ class Keeper:
                 self._explain("link lost", str(error))
                 self._say("The board stops by itself when its lease is over. 'reopen' opens the device anew.")
                 if self._log.open:
-                    self._end_log("the link was lost", sampling=False)
+                    self._break_log(error, sampling=False)
             case _:
                 self._say(f"error: {error}")
                 if self._state == "armed" or self._log.open:
                     self._stop(1)
                 if self._log.open:
-                    self._end_log(str(error))
+                    self._break_log(error)
         self._look()
 
     def _stop(self, category: int) -> StopReport:
@@ -337,12 +338,16 @@ class Keeper:
                 raise
             return session.last_stop
 
-    def _end_log(self, reason: str, *, sampling: bool = True) -> None:
+    def _break_log(self, error: RamprigError, *, sampling: bool = True) -> None:
+        end = broken_by(error)
+        self._end_log(end.stop_reason, sampling=sampling, verdict=end.verdict)
+
+    def _end_log(self, reason: str, *, sampling: bool = True, verdict: str = LOGGED) -> None:
         session = self._session  # also one whose link is lost: what came before that is to be whole
         if session is None:
             raise LinkError("the device is not open")
         try:
-            self._say(self._log.stop(session, reason=reason, sampling=sampling))
+            self._say(self._log.stop(session, reason=reason, sampling=sampling, verdict=verdict))
         except RamprigError as error:
             self._say(f"the log could not be ended in order: {error}")
 

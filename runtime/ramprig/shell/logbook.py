@@ -24,6 +24,8 @@ from ramprig.session.gaps import Accounting
 DISK_PATIENCE_S = 2.0
 """A disk without progress for so long ends the outputs: what is not written down is not driven."""
 PERIOD_TICKS_MAX = 65_535
+LOGGED = "logged"
+"""The verdict of a log that its user ended."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -92,7 +94,7 @@ class Logbook:
         self._listeners.add(on_block=self._on_block, on_event=self._recorder.on_event)
         return folder.path
 
-    def stop(self, session: Session, *, reason: str, sampling: bool = True) -> str:
+    def stop(self, session: Session, *, reason: str, sampling: bool = True, verdict: str = LOGGED) -> str:
         """End sampling and the folder; the account in a sentence. `sampling` false: the device cannot be asked."""
         recorder = self._need()
         account = session.accounting
@@ -105,7 +107,7 @@ class Logbook:
             health = session.health
             path = recorder.finish(
                 RunEnd(
-                    verdict="logged",
+                    verdict=verdict,
                     stop_reason=reason,
                     end=Anchor(session.tick_now(), self._clock.now(), self._clock.wall()) if sampling else None,
                     drift_ppm=None,
