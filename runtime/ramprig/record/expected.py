@@ -1,8 +1,12 @@
-"""Which ticks a samples log must hold by its account, and whether it does; its memory does not grow with the log."""
+"""Which ticks a samples log must hold by its account, and whether it does.
+
+Its memory does not grow with the log, unless ticks began anew within a part that came to its end.
+"""
 
 from __future__ import annotations
 
 import math
+from array import array
 from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
@@ -22,6 +26,40 @@ EXAMPLES_MAX = 5
 FOREVER = np.iinfo(np.int64).max
 
 
+class Told:
+    """What the events of one part tell of its samples, in a few bytes for each; `last` is the last event of all."""
+
+    def __init__(self) -> None:
+        self._gaps = array("q")  # first tick, count, period, one gap after another
+        self._begins, self._ends = array("q"), array("q")
+        self.restarted = False
+        self.last: Document | None = None
+
+    def take(self, event: Document) -> None:
+        """The next event of the part."""
+        self.last = event
+        match event["kind"]:
+            case "gap_found":
+                self._gaps.extend((int(event["tick"]), int(event["count"]), int(event["period_ticks"])))
+            case "full_rate_begun":
+                self._begins.append(int(event["tick"]))
+                self._ends.append(FOREVER)
+            case "full_rate_ended" if self._ends:
+                self._ends[-1] = int(event["tick"])
+            case "restarted":
+                self.restarted = True
+
+    @property
+    def gaps(self) -> Ints:
+        """(n, 3) int64: the first tick of each gap, how many samples are lost in it, and their period."""
+        return np.array(self._gaps, np.int64).reshape(-1, 3)
+
+    @property
+    def spans(self) -> tuple[Ints, Ints]:
+        """Begins and ends of the spans at full rate, (n,) int64; a span whose end is not told goes on for ever."""
+        return np.array(self._begins, np.int64), np.array(self._ends, np.int64)
+
+
 @dataclass(frozen=True, slots=True)
 class KeptTicks:
     """What a thinned log keeps: all ticks within `begins` to `ends`, (n,) int64 in order, and every n-th elsewhere."""
@@ -31,24 +69,13 @@ class KeptTicks:
     ends: Ints
 
     @classmethod
-    def of(cls, part: Document, events: Sequence[Document]) -> KeptTicks | None:
-        """By a part's entry in `run.json` and its events; None where the log is not thinned.
-
-        A span whose end is not told goes on for ever.
-        """
+    def of(cls, part: Document, told: Told) -> KeptTicks | None:
+        """By a part's entry in `run.json` and its events; None where the log is not thinned."""
         rule = (part.get("keeping") or {}).get("thinning")
         if rule is None:
             return None
-        begins: list[int] = []
-        ends: list[int] = []
-        for event in events:
-            if event["kind"] == "full_rate_begun":
-                begins.append(int(event["tick"]))
-                ends.append(FOREVER)
-            elif event["kind"] == "full_rate_ended" and ends:
-                ends[-1] = int(event["tick"])
         every = rule.get("every")
-        return cls(None if every is None else int(every), np.array(begins, np.int64), np.array(ends, np.int64))
+        return cls(None if every is None else int(every), *told.spans)
 
     def mask(self, ticks: Ints, period_ticks: int) -> NDArray[np.bool_]:
         """Which of these ticks are kept, (n,) bool."""
@@ -57,6 +84,18 @@ class KeptTicks:
             span = np.searchsorted(self.begins, ticks, side="right") - 1
             kept |= (span >= 0) & (ticks <= self.ends[np.maximum(span, 0)])
         return kept
+
+    def between(self, first: int, period: int, begin: int, end: int) -> Ints:
+        """Of the ticks `first` + n * `period` with `begin` <= n < `end` those that are kept, in order."""
+        low, high = first + begin * period, first + (end - 1) * period
+        spans = int(np.searchsorted(self.begins, high, side="right"))
+        if (self.ends[:spans] >= low).any():
+            ticks = np.arange(begin, end, dtype=np.int64) * period + first
+            return ticks[self.mask(ticks, period)]
+        if self.every is None:
+            return np.empty(0, np.int64)
+        begin += -(first // period + begin) % self.every
+        return np.arange(begin, end, self.every, dtype=np.int64) * period + first
 
 
 @dataclass(slots=True)
@@ -92,13 +131,16 @@ class Comparison:
         if self.unexpected:
             found.append(f"{self.unexpected} rows are of ticks that no logging made: {some(self.extra)}")
         if self.is_disordered and not found:
-            found.append("the rows are not in the order in which they were made, or some are there twice")
+            found.append(DISORDERED)
         return found
+
+
+DISORDERED = "the rows are not in the order in which they were made, or some are there twice"
 
 
 def compare(account: Document, kept: KeptTicks | None, pieces: Iterable[Ints]) -> Comparison:
     """The ticks of a log, piece by piece, against those that its loggings made, did not lose, and were to be kept."""
-    source = _Source(pieces)
+    source = Source(pieces)
     found = Comparison()
     loggings = account["loggings"]
     ends = [each["first_tick"] + each["expected"] * each["period_ticks"] for each in loggings]
@@ -115,33 +157,70 @@ def compare(account: Document, kept: KeptTicks | None, pieces: Iterable[Ints]) -
 
 def _windows(account: Document, kept: KeptTicks | None) -> Iterator[tuple[Ints, int]]:
     """The ticks expected in stretches of each logging, and the tick at which each stretch ends."""
+    listed = [(gap["first_tick"], gap["count"], gap["period_ticks"]) for gap in account["gaps"]]
+    gaps = np.array(listed, np.int64).reshape(-1, 3)
     for logging in account["loggings"]:
         first, period, count = logging["first_tick"], logging["period_ticks"], logging["expected"]
-        holes = sorted(_holes(account["gaps"], first, period, count))
+        holes = Holes.of(gaps, first, period, count)
         for begin in range(0, count, WINDOW_SAMPLES):
             end = min(count, begin + WINDOW_SAMPLES)
-            numbers = np.arange(begin, end, dtype=np.int64)
-            there = np.ones(len(numbers), np.bool_)
-            for hole, size in holes:
-                there[max(0, hole - begin) : max(0, hole + size - begin)] = False
-            ticks = (numbers * period + first)[there]
-            yield (ticks if kept is None else ticks[kept.mask(ticks, period)]), first + end * period
+            yield expected_of(first, period, begin, end, kept=kept, holes=holes), first + end * period
 
 
-def _holes(gaps: Sequence[Document], first: int, period: int, count: int) -> Iterator[tuple[int, int]]:
-    """Where the gaps of a logging lie, as the number of their first sample and how many."""
-    for gap in gaps:
-        begin, rest = divmod(gap["first_tick"] - first, period)
-        if rest == 0 and 0 <= begin < count and gap["period_ticks"] == period:
-            yield begin, gap["count"]
+@dataclass(frozen=True, slots=True)
+class Holes:
+    """The gaps of one logging as numbers of samples, in order: `begins` and `ends` (n,) int64."""
+
+    begins: Ints
+    ends: Ints
+
+    @classmethod
+    def of(cls, gaps: Ints, first: int, period: int, count: int | None = None) -> Holes:
+        """Those of `gaps`, (n, 3) int64 as `Told` has them, that lie in a logging (None: of unknown length)."""
+        begins, rest = np.divmod(gaps[:, 0] - first, period)
+        own = (rest == 0) & (begins >= 0) & (gaps[:, 2] == period)
+        if count is not None:
+            own &= begins < count
+        begins, ends = begins[own], begins[own] + gaps[own, 1]
+        order = np.argsort(begins, kind="stable")
+        return cls(begins[order], np.maximum.accumulate(ends[order]))
+
+    def drop(self, ticks: Ints, first: int, period: int) -> Ints:
+        """The ticks, in order, that lie in none of them."""
+        if not len(self.begins) or not len(ticks):
+            return ticks
+        numbers = (ticks - first) // period
+        place = np.searchsorted(self.begins, numbers, side="right") - 1
+        return ticks[(place < 0) | (numbers >= self.ends[np.maximum(place, 0)])]
 
 
-class _Source:
+def expected_of(first: int, period: int, begin: int, end: int, *, kept: KeptTicks | None, holes: Holes) -> Ints:
+    """The ticks of the samples `begin` to `end` (not included) of a logging that are kept and not lost, in order."""
+    if kept is None:
+        ticks = np.arange(begin, end, dtype=np.int64) * period + first
+    else:
+        ticks = kept.between(first, period, begin, end)
+    return holes.drop(ticks, first, period)
+
+
+class Source:
     """Gives the ticks of a log in stretches that end at given ticks."""
 
     def __init__(self, pieces: Iterable[Ints]) -> None:
         self._pieces = iter(pieces)
         self._rest: Ints = np.empty(0, np.int64)
+
+    def ahead(self, rows: int) -> Ints:
+        """The next ticks, so many at least where there are so many; they stay."""
+        parts = [self._rest]
+        while sum(map(len, parts)) < rows and (more := next(self._pieces, None)) is not None:
+            parts.append(more)
+        self._rest = np.concatenate(parts)
+        return self._rest
+
+    def give_back(self, ticks: Ints) -> None:
+        """These come next."""
+        self._rest = np.concatenate([ticks, self._rest])
 
     def before(self, end_tick: float) -> Ints:
         """The ticks up to the first one that is not before `end_tick`, which stays for the next stretch."""
@@ -159,48 +238,6 @@ class _Source:
                 break
             self._rest = rest
         return np.concatenate(parts)
-
-
-def without_account(ticks: Ints, events: Sequence[Document], kept: KeptTicks | None) -> tuple[int, list[str]]:
-    """For a part that broke off: what its events tell as lost, and whether the ticks in the file agree."""
-    told = {int(event["tick"]): int(event["count"]) for event in events if event["kind"] == "gap_found"}
-    steps = np.diff(ticks)
-    if len(steps) == 0:
-        return sum(told.values()), []
-    if kept is not None:
-        return sum(told.values()), _thinned_without_account(ticks, told, kept)
-    changes = np.flatnonzero(steps[1:] != steps[:-1]) + 1
-    usual = int(np.median(steps))
-    untold = [
-        int(ticks[place]) + usual
-        for place in ({0} | set(changes.tolist()))
-        if steps[place] > usual and int(ticks[place]) + usual not in told
-    ]
-    statements = []
-    if untold:
-        examples = sorted(untold)[: EXAMPLES_MAX + 1]
-        statements.append(f"rows are missing, or the period changed, at {len(untold)} places: ticks {some(examples)}")
-    return sum(told.values()), statements
-
-
-def _thinned_without_account(ticks: Ints, told: Mapping[int, int], kept: KeptTicks) -> list[str]:
-    """The shortest step is the period, as every part begins at full rate. An open span ends with
-    the last row that would not be there without it."""
-    period = int(np.diff(ticks).min())
-    if period <= 0:
-        return ["the rows are not in the order in which they were made, or some are there twice"]
-    made = np.arange(ticks[0], ticks[-1] + 1, period, dtype=np.int64)
-    for tick, count in told.items():
-        made = made[(made < tick) | (made >= tick + count * period)]
-    ends = kept.ends.copy()
-    if len(ends) and ends[-1] == FOREVER:
-        odd = ticks[(ticks >= kept.begins[-1]) & ~kept_by_number(ticks, period, kept.every)]
-        ends[-1] = odd[-1] if len(odd) else kept.begins[-1]
-    expected = made[KeptTicks(kept.every, kept.begins, ends).mask(made, period)]
-    missing = np.setdiff1d(expected, ticks)
-    if not len(missing):
-        return []
-    return [f"{len(missing)} rows are missing: ticks {some(missing[: EXAMPLES_MAX + 1].tolist())}"]
 
 
 def some(ticks: Sequence[int]) -> str:

@@ -13,7 +13,7 @@ import io
 import json
 import math
 import sys
-from collections.abc import Collection, Iterable, Iterator
+from collections.abc import Collection, Iterable, Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -23,14 +23,13 @@ from numpy.typing import NDArray
 
 from ..errors import RecordError
 from .events import from_rfc3339
-from .expected import KeptTicks, compare, without_account
+from .expected import KeptTicks, Told, compare
 from .folder import CYCLES_FILE, EVENTS_FILE, FORMAT, NOTES_FILE, RUN_FILE
 from .parts import parts_of, whole_account
+from .unaccounted import without_account
 from .volumes import Stream, volume_files
 
 CHUNK_BYTES = 1024 * 1024
-SAMPLE_KINDS = frozenset({"gap_found", "full_rate_begun", "full_rate_ended"})
-"""The events by which samples are looked for."""
 Document = dict[str, Any]  # JSON as it comes: what is in it is checked where it is used
 
 
@@ -230,8 +229,8 @@ def audit(folder: Path) -> Audit:
     events = EventLines(folder / EVENTS_FILE)
     by_part = _events_by_part(events if begun else (), len(entries))
     parts = [
-        _audit_part(folder, entry, its_events, last=entry is entries[-1], several=len(entries) > 1)
-        for entry, its_events in zip(entries, by_part, strict=True)
+        _audit_part(folder, entry, told, last=entry is entries[-1], several=len(entries) > 1)
+        for entry, told in zip(entries, by_part, strict=True)
     ]
     statements = [text for part in parts for text in part.statements]
     if events.torn_bytes:
@@ -255,21 +254,15 @@ def audit(folder: Path) -> Audit:
     )
 
 
-def _events_by_part(events: Iterable[Document], parts: int) -> list[list[Document]]:
-    """Of the events of each part, divided where a run was gone on with, those that tell of samples, and the last."""
-    divided: list[list[Document]] = [[] for _ in range(parts)]
-    latest: list[Document | None] = [None] * parts
+def _events_by_part(events: Iterable[Document], parts: int) -> list[Told]:
+    """What the events of each part tell, divided where a run was gone on with."""
+    divided = [Told() for _ in range(parts)]
     part = 1
     for event in events:
         if event["kind"] == "run_resumed":
             part = int(event["part"])
         if part <= parts:
-            latest[part - 1] = event
-            if event["kind"] in SAMPLE_KINDS:
-                divided[part - 1].append(event)
-    for of_samples, last in zip(divided, latest, strict=True):
-        if last is not None and last not in of_samples[-1:]:
-            of_samples.append(last)
+            divided[part - 1].take(event)
     return divided
 
 
@@ -283,21 +276,21 @@ def _is_torn(path: Path) -> bool:
     return lines.torn_bytes > 0
 
 
-def _audit_part(folder: Path, entry: Document, events: list[Document], *, last: bool, several: bool) -> Audit:
+def _audit_part(folder: Path, entry: Document, told: Told, *, last: bool, several: bool) -> Audit:
     """One part of a run: its rows against its account, or against its events where it has none."""
     where = f"part {entry['part']}: " if several else ""
     finished = entry.get("status") == "finished"
     stream = Stream(volume_files(folder, entry), columns=())
-    kept = KeptTicks.of(entry, events)
+    kept = KeptTicks.of(entry, told)
     account = entry.get("samples")
     if account:
         rows, known_lost, missing, unexpected, found = _against_account(account, kept, stream)
         ending: list[str] = []
     else:
-        ticks = np.concatenate([np.empty(0, np.int64), *(piece.ticks for piece in stream)])
-        known_lost, found = without_account(ticks, events, kept)
-        rows, missing, unexpected = len(ticks), 0, 0
-        ending = [] if finished or not last else [_how_it_broke_off(ticks, events)]
+        inferred = without_account((piece.ticks for piece in stream), told, kept)
+        rows, found = inferred.rows, inferred.statements
+        known_lost, missing, unexpected = int(told.gaps[:, 1].sum()), 0, 0
+        ending = [] if finished or not last else [_how_it_broke_off(inferred.last_tick, told.last)]
     statements = list(ending)
     if stream.torn_bytes and (last or finished):  # an earlier part that broke off is told of as an interruption
         statements.append(f"the last row is torn ({stream.torn_bytes} bytes) and was left out")
@@ -323,9 +316,9 @@ def _against_account(account: Document, kept: KeptTicks | None, stream: Stream) 
     return rows, account["lost"], 0, 0, statements
 
 
-def _how_it_broke_off(ticks: NDArray[np.int64], events: list[Document]) -> str:
-    last_row = f"the last row is of tick {ticks[-1]}" if len(ticks) else "there is no row"
-    last_event = f"the last event is '{events[-1]['kind']}' at {events[-1]['utc']}" if events else "there is no event"
+def _how_it_broke_off(last_tick: int | None, last: Mapping[str, Any] | None) -> str:
+    last_row = "there is no row" if last_tick is None else f"the last row is of tick {last_tick}"
+    last_event = "there is no event" if last is None else f"the last event is '{last['kind']}' at {last['utc']}"
     return f"the run did not end in order ({RUN_FILE} says it is still running): {last_row}, {last_event}"
 
 
