@@ -11,7 +11,7 @@ from ramprig.mock import MockDevice, MockPort, MockSetup, open_mock
 from ramprig.mock.cable import Cable
 from ramprig.mock.core import SimulatedDevice, open_core, why_not
 from ramprig.mock.port import DevicePort
-from ramprig.mock.url import parse_mock
+from ramprig.mock.url import name_of, parse_mock
 from ramprig.port.base import PatientPort
 from ramprig.port.clock import VirtualClock
 from ramprig.port.open import open_port
@@ -310,3 +310,17 @@ def test_limits_live_on_in_their_file(tmp_path: Path) -> None:
     with open_mock(text) as port:
         port.write(seal(b"01 limit trip_ma 0"))
         assert b"1717" in read_all(port, 0.01)
+
+
+@pytest.mark.parametrize(
+    ("text", "name"),
+    [
+        ("mock:", "mock:"),
+        ("mock:?bench=a/vent bench.yaml", "mock:"),
+        ("mock:?pace=virtual&bench=b.yaml&seed=3", "mock:?pace=virtual&seed=3"),
+        ("core:?bench=b.yaml&fault=deaf", "core:?fault=deaf"),
+    ],
+)
+def test_a_port_is_called_by_what_its_user_may_have_typed(text: str, name: str) -> None:
+    """The bench file is put in by the command line, and may be a long path."""
+    assert name_of(text) == name

@@ -96,8 +96,15 @@ def make_device(wish: MockWish) -> tuple[MockDevice, int]:
     return MockDevice(setup, seed=seed), seed
 
 
+def name_of(text: str) -> str:
+    """What a port of this text is called in messages: without the bench file, which no user need have typed."""
+    head, mark, options = text.partition("?")
+    kept = [option for option in options.split("&") if not option.startswith("bench=")]
+    return head + mark * any(kept) + "&".join(kept)
+
+
 def open_mock(text: str, *, clock: VirtualClock | None = None) -> MockPort:
     """A port to a new mock as `text` asks for."""
     wish = parse_mock(text)
     device, seed = make_device(wish)
-    return MockPort(device, pace=wish.pace, seed=seed, name=text, clock=clock)
+    return MockPort(device, pace=wish.pace, seed=seed, name=name_of(text), clock=clock)

@@ -8,7 +8,7 @@ from collections.abc import Callable
 from dataclasses import dataclass, field
 from fractions import Fraction
 
-from .kinds import ALL_KINDS, DURATION, Kind, Unit
+from .kinds import ALL_KINDS, DURATION, DUTY, Kind, Unit
 from .numbers import NUMBER_PATTERN, QuantityError, complain, leading_number, plain, quoted
 
 
@@ -151,13 +151,25 @@ def _listed(kind: Kind) -> str:
     return f"{', '.join(others)} or {last}" if others else last
 
 
+def _with_unit(number: str, kind: Kind) -> str:
+    """How a number with the only unit of its kind is written. A duty below 1 is more likely a part of the whole, and
+    one of more figures than a board takes is no help."""
+    found = leading_number(number)
+    if kind is not DUTY or found is None or found[1]:
+        return f"write '{number} {kind.base.symbol}'"
+    is_part = 0 < abs(found[0]) < 1
+    duty = found[0] * 100 if is_part else found[0]
+    text = f"{float(round(duty, 2)):.2f}".rstrip("0").rstrip(".")
+    return f"write '{text} {kind.base.symbol}'" + (f" for {number} of full drive" if is_part else "")
+
+
 def _unit_of(symbol: str, kind: Kind, clean: str) -> Unit:
     unit = kind.unit(symbol)
     if unit is not None:
         return unit
     number = clean.removesuffix(symbol).strip()
     if not symbol:
-        only = f"write '{number} {kind.base.symbol}'" if len(kind.units) == 1 else f"as in '{kind.example}'"
+        only = _with_unit(number, kind) if len(kind.units) == 1 else f"as in '{kind.example}'"
         wanted = f"{kind.name} has its unit, {_listed(kind)}: {only}"
         raise QuantityError(f"found {quoted(clean)} without a unit", wanted=wanted)
     if "#" in symbol:

@@ -12,7 +12,7 @@ from ramprig.bench import Bench
 from ramprig.errors import UsageError
 from ramprig.mock.from_bench import setup_of_bench
 from ramprig.mock.port import DevicePort
-from ramprig.mock.url import make_setup, parse_mock
+from ramprig.mock.url import make_setup, name_of, parse_mock
 from ramprig.port.clock import VirtualClock
 
 from .device import SimulatedDevice
@@ -30,7 +30,7 @@ def open_core(text: str, *, clock: VirtualClock | None = None) -> CorePort:
         raise UsageError(f"'{text}': after 'core:' come options, such as 'core:?pace=virtual&seed=3'")
     wish = parse_mock(f"mock:{rest}")
     setup, seed = make_setup(wish)
-    return CorePort(SimulatedDevice(setup, seed=seed), pace=wish.pace, seed=seed, name=text, clock=clock)
+    return CorePort(SimulatedDevice(setup, seed=seed), pace=wish.pace, seed=seed, name=name_of(text), clock=clock)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
