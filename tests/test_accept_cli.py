@@ -45,7 +45,7 @@ def test_the_report_has_every_check_the_limits_and_the_lines(tmp_path: Path) -> 
     assert found["board"]["serial"] == "MOCK-0001"
     assert found["limits_not_put_back"] == []
     page = (folder / "accept.html").read_text("utf-8")
-    assert "<h1>ACCEPTED: ramprig-mock MOCK-0001.</h1>" in page
+    assert "<h1>ramprig-mock MOCK-0001 passed the checks with &#x27;st&#x27; in their name." in page
     assert all(f"<td>{name}</td>" in page for name in wanted)
     lines = (folder / "lines.txt").read_text("ascii").splitlines()
     assert any(line.endswith(r"> stop\n") or r"\nstop\n" in line for line in lines)
@@ -61,7 +61,7 @@ def test_a_clause_that_fails_is_named_and_exits_with_1(tmp_path: Path, capsys: p
 
 
 @pytest.mark.parametrize(
-    ("typed", "code", "said"), [("yes\n", 0, "ACCEPTED"), ("no\n", 5, "not accepted"), ("", 5, "")]
+    ("typed", "code", "said"), [("yes\n", 0, "All are needed"), ("no\n", 5, "not accepted"), ("", 5, "")]
 )
 def test_it_asks_before_anything_is_switched_on(
     typed: str,

@@ -20,10 +20,10 @@ from ramprig.accept.invariants import Witness
 from ramprig.accept.lines import CLAUSES
 from ramprig.accept.talk import Talk
 from ramprig.accept.trial import SETTLE_TICKS, Broken, Check, Missing, Power, Result, Trial, Untested, Wish, declared
-from ramprig.errors import LinkError, LinkLost, StoppedByUser
+from ramprig.errors import LinkError, LinkLost, StoppedByUser, UsageError
 from ramprig.port.base import Port
 from ramprig.session.readings import Identity
-from ramprig_link.faults import FieldError
+from ramprig_link.faults import LinkFault, SampleFault
 from ramprig_link.messages import Answer
 from ramprig_link.words import CHANNELS, VERSION, Cap, Per, State
 
@@ -38,6 +38,8 @@ TRIES_MAX = 4
 """So often is a check made where samples were dropped that it judges by."""
 INVARIANTS = ("S1", "S2", "S3", "S4", "S5", "S6", "S7")
 NO_POWER = "nothing was to be switched on"
+UNREADABLE = (LinkFault, ValueError, LookupError)
+"""What reading raises where a board's words or figures are none that the protocol has."""
 
 
 @dataclass(slots=True)
@@ -51,6 +53,8 @@ class Verdict:
     unrestored: list[str] = field(default_factory=list)
     notes: list[str] = field(default_factory=list)
     energised: bool = False
+    only: str = ""
+    """Only the checks with this in their name were to be made."""
 
     @property
     def failed(self) -> dict[str, list[str]]:
@@ -64,12 +68,14 @@ class Verdict:
 
     @property
     def exit_code(self) -> int:
-        """0 nothing failed, 1 a clause failed, 4 the link was lost, 5 stopped by the user."""
-        if self.failed:
+        """0 nothing failed, 1 a clause failed or limits are not put back, 4 the link was lost, 5 stopped by a user."""
+        if any(self.failed):
             return 1
         if self.lost:
             return LinkLost.exit_code
-        return StoppedByUser.exit_code if self.stopped else 0
+        if self.stopped and not self.failed:
+            return StoppedByUser.exit_code
+        return 1 if self.failed or self.unrestored else 0
 
 
 Tell = Callable[[str], None]
@@ -87,12 +93,20 @@ def accept(port: Port, wish: Wish, *, tell: Tell, talk: Talk | None = None) -> V
     """Make all checks on the board at `port`, telling each result as it comes; what was found is in the verdict.
 
     However it ends, the outputs are off and the board's limits are put back, or the verdict says which are not. Raises
-    LinkLost where no board answers at all, and LinkError for one of another version.
+    LinkLost where no board answers at all, and LinkError for one of another version or whose first answers cannot be
+    used; UsageError where `wish.only` leaves no check.
     """
+    if not any(wish.only in check.name for check in all_checks()):
+        raise UsageError(f"--only {wish.only}: no check has this in its name; --list shows them")
     talk = Talk(port) if talk is None else talk
     trial = Trial(talk, wish)
-    verdict = Verdict()
-    open_board(trial)
+    verdict = Verdict(only=wish.only)
+    try:
+        open_board(trial)
+    except Broken as error:
+        raise LinkError(f"{port.name}: the board cannot be known: {trial.last_fault}") from error
+    except UNREADABLE as error:
+        raise LinkError(f"{port.name}: the board cannot be known, an answer cannot be read: {error}") from error
     verdict.identity = trial.known
     try:
         _make_checks(trial, verdict, tell)
@@ -222,22 +236,38 @@ def _make(trial: Trial, check: Check, verdict: Verdict, tell: Tell) -> None:
         _tried(trial, check, result)
     except Broken:
         pass
-    except (FieldError, ValueError, IndexError) as error:
+    except SampleFault as unreadable:
+        trial.fail("DATA-10", f"a data line cannot be read: {unreadable}")
+    except UNREADABLE as error:
         trial.fail(" ".join(check.clauses[:1]), f"an answer cannot be read: {error}")
     except LinkLost:
         if not _answers(talk):
             trial.fail("", "the board fell silent during this check")
             raise
         trial.fail("TAG-2", "a request of this check was never answered, though the board answers others")
+    except LinkError as error:
+        trial.fail(" ".join(check.clauses[:1]), str(error))
     if talk.boots != boots and check.run is not quiet_start.restart:
         trial.fail("", "the board restarted by itself during this check: a brown-out, or a fault of the firmware")
-    for sentence in trial.settle():
+    for sentence in _settled(trial):
         trial.fail("", sentence)
     _judge_invariants(trial)
     result.seconds = talk.clock.now() - begun_s
     tell(line_of(result))
     for fault in result.faults:
         tell(f"      {' '.join(fault.clauses) or 'the bench'}: {fault.text}")
+
+
+def _settled(trial: Trial) -> list[str]:
+    """As `Trial.settle`, also where the board's answers are none; raises LinkLost alone."""
+    try:
+        return trial.settle()
+    except LinkLost:
+        raise
+    except Broken:
+        return [f"the board could not be brought to `off` after this check: {trial.last_fault}"]
+    except (LinkError, *UNREADABLE) as error:
+        return [f"the board could not be brought to `off` after this check: {error}"]
 
 
 def _tried(trial: Trial, check: Check, result: Result) -> None:
@@ -251,7 +281,7 @@ def _tried(trial: Trial, check: Check, result: Result) -> None:
             result.untested = str(reason)
             if not isinstance(reason, Missing):
                 return
-            trial.settle()
+            trial.settle()  # what it raises ends the check as what the check raises does
 
 
 def _answers(talk: Talk) -> bool:
@@ -279,7 +309,7 @@ def _leave(trial: Trial) -> list[str]:
         trial.result = Result(_opening())
         wrong = trial.settle()
         trial.talk.ask("log 0 0 packed")
-    except (LinkError, Broken) as error:
+    except (LinkError, Broken, *UNREADABLE) as error:
         original, now = trial.original, trial.limits
         changed = [f"limit {key[0]} {key[1]}: {value}" for key, value in original.items() if now.get(key) != value]
         return [f"the board could not be left as it was ({error or 'refused'}); before: {', '.join(changed)}"]

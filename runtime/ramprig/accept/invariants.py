@@ -13,7 +13,8 @@ from dataclasses import dataclass, field
 
 from ramprig.session.ticks import TickCounter
 from ramprig_link.check import digest
-from ramprig_link.faults import SampleFault
+from ramprig_link.faults import FieldError, SampleFault
+from ramprig_link.fields import read_i32
 from ramprig_link.messages import Answer, Data, FromDevice, Notice, Request, parse_device_line
 from ramprig_link.samples import Columns, channels_of, decode_data
 from ramprig_link.words import LIMITS, STATE_BITS, TRIPS, State, Tighter, Trip
@@ -242,7 +243,9 @@ class Witness:
         if not answer.ok:
             return
         if request.word == "limit" and len(request.args) == 3 and answer.fields:
-            self._changes.append((tick, (request.args[0], int(request.args[1])), int(answer.fields[0])))
+            value = _whole(answer.fields[0])
+            if value is not None:  # one that is no number is told of by the line's own rules
+                self._changes.append((tick, (request.args[0], int(request.args[1])), value))
         elif request.word in ("arm", "clear", "disarm"):
             self._events.append((tick, request.word + " ok", request.args))
 
@@ -288,7 +291,8 @@ class Witness:
             if word == "renewal":
                 self._renewed = tick
             elif word == "trip":
-                category = TRIPS[Trip[fields[0].upper()]].category
+                trip = Trip.named(fields[0]) if fields else None
+                category = TRIPS[trip].category if trip is not None else 0  # of one unknown the strictest is asked
                 begin = tick + (self.limits["stop_ticks", 0] if category else 0)
                 self._barred_from = begin if self._barred_from is None else min(self._barred_from, begin)
                 self._cleared = False
@@ -316,6 +320,13 @@ class Witness:
         unknown = not self.fresh and self._lease is None
         if not unknown and (self._renewed is None or self._lease is None or row.tick - self._renewed > longest):
             yield Violation("S4", row.tick, f"duty {row.duty}, the last renewal was at {self._renewed}")
+
+
+def _whole(text: str) -> int | None:
+    try:
+        return read_i32(text)
+    except FieldError:
+        return None
 
 
 def loosened(name: str, before: int, after: int) -> bool:

@@ -69,7 +69,7 @@ def _put(trial: Trial, vector: LineVector) -> None:
         f"{where}: {found} lines were counted as valid, garbled, overlong; right is {expected}",
     )
     if b"limit offset_ma 0" in vector.data:
-        trial.limits["offset_ma", 0] = int(trial.ok("limit offset_ma 0", "LIMIT-1").fields[0])
+        trial.limits["offset_ma", 0] = trial.number("limit offset_ma 0", "LIMIT-1")
 
 
 @check("LINE-2 LINE-3 TAG-2 TAG-3 TAG-4 TAG-5 BAD-1 BAD-2 BAD-4 KIND-1 STOP-2 RUN-3 ORDER-5")
@@ -259,6 +259,6 @@ def noise(trial: Trial) -> None:
     wrong = [
         f"{item} {index}: {found}, was {value}"
         for (item, index), value in trial.limits.items()
-        if (found := int(trial.ok(f"limit {item} {index}", "LIMIT-1").fields[0])) != value
+        if (found := trial.number(f"limit {item} {index}", "LIMIT-1")) != value
     ]
     trial.require(not wrong, "BAD-1", f"noise has changed limits: {', '.join(wrong)}")

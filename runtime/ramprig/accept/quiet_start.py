@@ -5,7 +5,7 @@ from __future__ import annotations
 from ramprig.accept.trial import Trial, Untested, check
 from ramprig.session.readings import Identity
 from ramprig_link.check import seal
-from ramprig_link.messages import Answer, Notice
+from ramprig_link.messages import Notice
 from ramprig_link.words import Cap, Cause
 
 BOOT_S = 60.0
@@ -55,10 +55,8 @@ def restart(trial: Trial) -> None:
 
 def _limits_kept(trial: Trial, lowered: int) -> None:
     """What was set is what the board starts with, where it says that it keeps limits."""
-    answer = trial.ok("limit stop_ticks 0", "LIMIT-1")
-    assert isinstance(answer, Answer)
-    value = int(answer.fields[0])
+    value = trial.number("limit stop_ticks 0", "LIMIT-1")
     if Cap.KEEPS_LIMITS in trial.identity.caps:
         trial.require(value == lowered, "LIMIT-4", f"stop_ticks was set to {lowered}, and is {value} after a start")
     for key in list(trial.limits):
-        trial.limits[key] = int(trial.ok(f"limit {key[0]} {key[1]}", "LIMIT-1").fields[0])
+        trial.limits[key] = trial.number(f"limit {key[0]} {key[1]}", "LIMIT-1")

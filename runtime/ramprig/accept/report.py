@@ -39,19 +39,23 @@ MEANING = (
 def verdict_sentence(verdict: Verdict) -> str:
     """How it ended, in a sentence."""
     name = verdict.identity.name if verdict.identity is not None else "the board"
-    failed = verdict.failed
-    if failed:
-        clauses = [clause for clause in failed if clause]
-        what = f"clauses {', '.join(clauses)} failed" if clauses else "something beside the clauses failed"
-        return f"NOT ACCEPTED: {name}: {what}."
+    clauses = [clause for clause in verdict.failed if clause]
+    if clauses:
+        return f"NOT ACCEPTED: {name}: clauses {', '.join(clauses)} failed."
     if verdict.lost:
         return f"NOT ACCEPTED: {name}: the link was lost: {verdict.lost}"
+    if verdict.failed:
+        return f"NOT ACCEPTED: {name}: something beside the clauses failed."
     if verdict.stopped:
         return f"Not finished: {name}: {verdict.stopped}"
+    if verdict.unrestored:
+        return f"NOT ACCEPTED: {name}: it is not left as it was found."
     untested = sum(result.word == "not tested" for result in verdict.results)
     beside = f"; {untested} {'check was' if untested == 1 else 'checks were'} not made" if untested else ""
     if not verdict.energised:
         return f"{name} passed what needs no power{beside}. It is not accepted for a motor."
+    if verdict.only:
+        return f"{name} passed the checks with '{verdict.only}' in their name{beside}. All are needed to be accepted."
     return f"ACCEPTED: {name}{beside}."
 
 

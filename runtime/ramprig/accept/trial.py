@@ -13,6 +13,8 @@ from ramprig.accept.lines import Fault
 from ramprig.accept.talk import Talk
 from ramprig.session.limits import limit_keys
 from ramprig.session.readings import Identity, Reading
+from ramprig_link.faults import FieldError
+from ramprig_link.fields import read_i32
 from ramprig_link.messages import Answer, Notice
 from ramprig_link.words import Cap, State, Trip
 
@@ -130,6 +132,11 @@ class Trial:
         assert self.result is not None
         self.result.notes.append(text)
 
+    @property
+    def last_fault(self) -> str:
+        """What was noted last, in words."""
+        return self.result.faults[-1].text if self.result is not None and self.result.faults else "no reason was noted"
+
     # ---- requests --------------------------------------------------------------------------------------------------
 
     @property
@@ -143,6 +150,14 @@ class Trial:
         answer = self.talk.ask(body)
         self.need(answer.ok, clauses, f"`{body}` was refused: {answer.reason}")
         return answer
+
+    def number(self, body: str, clauses: str) -> int:
+        """The one number of the answer `ok`; anything else breaks the clauses and ends the check."""
+        fields = self.ok(body, clauses).fields
+        try:
+            return read_i32(fields[0])
+        except (FieldError, IndexError):
+            self._broken(clauses, f"`{body}` was answered `ok` with '{' '.join(fields)}', which is no number")
 
     def refused(self, body: str, reason: str, clauses: str) -> Answer:
         """The answer to a request that must be refused for this reason."""
@@ -176,7 +191,7 @@ class Trial:
     def read_limits(self) -> None:
         """Read every limit of the board."""
         for item, index in limit_keys(self.identity):
-            self.limits[item, index] = int(self.ok(f"limit {item} {index}", "LIMIT-1").fields[0])
+            self.limits[item, index] = self.number(f"limit {item} {index}", "LIMIT-1")
 
     def set_limit(self, item: str, index: int, value: int, clauses: str = "LIMIT-1") -> Answer:
         """Set a limit and note what is in force; the check ends where it is refused."""
