@@ -3,6 +3,7 @@ there."""
 
 from __future__ import annotations
 
+import hashlib
 import subprocess
 import sys
 from pathlib import Path
@@ -11,9 +12,10 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from ramprig.record.appendfile import AppendFile
+from ramprig.record.appendfile import AppendFile, whole_length
 from ramprig.record.reading import audit, read_events, read_manifest, read_samples, sample_files
 from ramprig.record.rows import RowPrinter
+from ramprig.record.scan import Scan
 from ramprig.record.volumes import Stream
 from record_samples import TICK_US, blocks_of, vent_columns
 
@@ -56,6 +58,41 @@ def test_every_row_that_was_synced_is_there_after_a_loss_of_power(
     assert len(samples) >= synced_rows
     assert len(samples) == max(0, whole[:left].count(b"\n") - 1)
     assert samples.ticks.tolist() == list(range(5000, 5000 + 2 * len(samples), 2))
+
+
+WHOLE = [
+    (b"", 0), (b"1,2", 0), (b"1,2\r\n3", 5), (b"1\r\n2\r\n", 6), (b"1\r", 0), (b"\0", 0), (b"1\n\0\0", 2),
+    (b"1\n2\0\n3\n", 2),
+]  # fmt: skip
+
+
+@pytest.mark.parametrize(("data", "whole"), WHOLE)
+def test_whole_lines_end_at_the_last_line_end_before_what_a_loss_of_power_left_empty(data: bytes, whole: int) -> None:
+    assert whole_length(data) == whole
+
+
+@pytest.mark.parametrize("chunk", [7, 64, 1024 * 1024])
+def test_what_a_loss_of_power_left_empty_and_what_follows_it_is_torn(
+    tmp_path: Path, printed: tuple[bytes, list[bytes]], monkeypatch: pytest.MonkeyPatch, chunk: int
+) -> None:
+    """A file system may have made the file longer, and even written later pages, before the data of these came."""
+    monkeypatch.setattr("ramprig.record.appendfile.CHUNK_BYTES", chunk)
+    header, rows = printed
+    data = header + b"".join(rows[:20])
+    torn = rows[20][:9] + bytes(200) + b"".join(rows[30:40])
+    path = tmp_path / "samples.csv"
+    path.write_bytes(data + torn)
+    for found in (Scan(path, piece_bytes=chunk), Stream([path])):
+        assert [tick for piece in found for tick in piece.ticks.tolist()] == list(range(5000, 5040, 2))
+        assert found.torn_bytes == len(torn)
+    for size in (len(torn) - 5, len(torn) + 300, 10**6):
+        assert Scan(path).tail(size).ticks.tolist()[-1] == 5038
+    assert (len(read_samples(path)), read_samples(path).torn_bytes) == (20, len(torn))
+    file, cut_bytes = AppendFile.reopen(path)
+    file.close()
+    assert (cut_bytes, file.lines, file.size_bytes) == (len(torn), 21, len(data))
+    assert file.sha256 == hashlib.sha256(data).hexdigest()
+    assert path.read_bytes() == data
 
 
 @pytest.mark.process

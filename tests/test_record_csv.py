@@ -23,7 +23,7 @@ from ramprig.record.columns import (
     state_label,
     turns_decimals,
 )
-from ramprig.record.csvfile import field, record, whole_length
+from ramprig.record.csvfile import field, record
 from ramprig.record.rows import RowPrinter
 from ramprig.record.speed import SpeedEstimator
 from ramprig.session.blocks import Block, Layout
@@ -61,11 +61,6 @@ def test_the_quoted_examples_of_rfc_4180_are_read_as_the_same_fields() -> None:
 def test_any_record_is_read_back_equal_by_the_csv_module(texts: list[str]) -> None:
     assert read_back(record(texts)) == [texts]
     assert field(texts[0]) in record(texts).decode("utf-8")
-
-
-@pytest.mark.parametrize(("data", "whole"), [(b"", 0), (b"1,2", 0), (b"1,2\r\n3", 5), (b"1\r\n2\r\n", 6), (b"1\r", 0)])
-def test_whole_records_end_at_the_last_line_end(data: bytes, whole: int) -> None:
-    assert whole_length(data) == whole
 
 
 @settings(max_examples=300, deadline=None)

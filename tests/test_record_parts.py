@@ -122,6 +122,33 @@ def test_held_rows_that_cannot_be_read_keep_nobody_from_a_second_try(tmp_path: P
     finish(recorder, 0)
 
 
+@pytest.mark.parametrize("empty", [b"", bytes(4096), bytes(4096) + b"7,7\r\n"], ids=["torn", "empty", "empty amid"])
+def test_held_rows_that_a_loss_of_power_left_torn_or_empty_are_moved_as_far_as_they_are_whole(
+    tmp_path: Path, empty: bytes
+) -> None:
+    path = killed(tmp_path, THINNED, 1000)
+    before = ticks_in(sample_files(path))
+    newest = held_files(path)[-1]
+    whole = newest.read_bytes()
+    end = whole.rindex(b"\n", 0, -1) + 1
+    newest.write_bytes(whole[: end + 9] + empty)
+    assert ticks_in(sample_files(path)) == before[:-1]
+    recorder = gone_on_with(path, THINNED)
+    finish(recorder, 0)
+    assert ticks_in(files_by_part(read_manifest(path), path)[1]) == before[:-1]
+    assert audit(path).statements == ()
+
+
+def test_a_held_file_that_a_loss_of_power_left_empty_has_no_rows(tmp_path: Path) -> None:
+    path = killed(tmp_path, THINNED, 1000)
+    newest = held_files(path)[-1]
+    header = newest.read_bytes().partition(b"\n")[0] + b"\n"
+    newest.write_bytes(header + bytes(500) + b",1\r\n")
+    assert newest not in held_files(path)
+    finish(gone_on_with(path, THINNED), 0)
+    assert held_files(path) == []
+
+
 def test_a_volume_whose_name_is_taken_is_listed_by_the_name_it_has(tmp_path: Path) -> None:
     recorder = begin(tmp_path, WHOLE, durable=True)
     path = recorder.folder.path

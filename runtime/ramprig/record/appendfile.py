@@ -13,6 +13,7 @@ import errno
 import hashlib
 import os
 import sys
+from collections.abc import Iterator
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -61,19 +62,14 @@ class AppendFile:
 
     def _take_over(self) -> int:
         """Count and hash what is in the file, and cut a torn last line off; its length."""
-        size_bytes, lines, rest = 0, 0, b""
-        with open(self.path, "rb") as file:
-            while chunk := file.read(CHUNK_BYTES):
-                data = rest + chunk
-                whole = data.rfind(b"\n") + 1
-                self._hash.update(data[:whole])
-                size_bytes, lines, rest = size_bytes + whole, lines + data.count(b"\n"), data[whole:]
-        if rest:
-            os.ftruncate(self._handle, size_bytes)
+        torn_bytes = 0
+        for data, torn_bytes in whole_lines(self.path):  # noqa: B007  (the last one is what is wanted)
+            self._count(data)
+        if torn_bytes:
+            os.ftruncate(self._handle, self.size_bytes)
         os.fsync(self._handle)
-        self.size_bytes = self.synced_bytes = size_bytes
-        self.lines = self.synced_lines = lines
-        return len(rest)
+        self.synced_bytes, self.synced_lines = self.size_bytes, self.lines
+        return torn_bytes
 
     def hold_alone(self) -> bool:
         """Keep other programs from holding this file too, until it is closed; False where one does (POSIX only).
@@ -165,6 +161,35 @@ class AppendFile:
         if self._open:
             self._open = False
             os.close(self._handle)
+
+
+def whole_length(data: bytes) -> int:
+    """How many bytes of `data` are whole lines: up to its last LF, and none from the first NUL on.
+
+    Our files have no NUL. A file system may leave them where it had made a file longer, and lost its power before the
+    data came: what follows them was not synced either.
+    """
+    end = data.find(b"\0")
+    return data.rfind(b"\n", 0, end if end >= 0 else len(data)) + 1
+
+
+def whole_lines(path: Path) -> Iterator[tuple[bytes, int]]:
+    """The file in pieces of whole lines, each with 0, and last an empty piece with the length of what follows them.
+
+    Raises OSError.
+    """
+    rest = b""
+    with open(path, "rb") as file:
+        while chunk := file.read(CHUNK_BYTES):
+            data = rest + chunk
+            end = whole_length(data)
+            rest = data[end:]
+            if end:
+                yield data[:end], 0
+            if b"\0" in rest:
+                yield b"", len(rest) - file.tell() + file.seek(0, os.SEEK_END)
+                return
+    yield b"", len(rest)
 
 
 def sync_folder(folder: Path) -> None:

@@ -1,4 +1,4 @@
-"""Comma-separated records as RFC 4180 describes them: how a field is quoted, and how a row's end is found again.
+"""Comma-separated records as RFC 4180 describes them: how a field is quoted.
 
 Sources: RFC 4180 section 2, rules 1 to 7. Our files are UTF-8, with a header line and CRLF after every record.
 """
@@ -23,9 +23,3 @@ def record(texts: Iterable[str]) -> bytes:
     record."""
     line = ",".join(map(field, texts))
     return ((line or '""') + LINE_END).encode("utf-8")
-
-
-def whole_length(data: bytes) -> int:
-    """How many bytes of `data` are whole records, where no field contains a line end (ours never do): up to the last
-    CRLF."""
-    return data.rfind(b"\r\n") + 2 if b"\r\n" in data else 0

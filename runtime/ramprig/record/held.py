@@ -20,7 +20,7 @@ from pathlib import Path
 from typing import Any
 
 from ..errors import RecordError
-from .appendfile import AppendFile, sync_folder
+from .appendfile import AppendFile, sync_folder, whole_lines
 from .rows import Rows
 from .volumes import HELD_NAMES, Stream, held_files, volume_files
 
@@ -125,16 +125,17 @@ def absorb_held(folder: Path, part: Mapping[str, Any]) -> None:  # Any: JSON as 
 
 def _move_rows(path: Path, to: AppendFile, *, after: float) -> float:
     """Append the whole rows after this tick; returns the last tick there is then. Raises OSError, RecordError."""
-    lines: list[bytes] = []
     last = after
-    with open(path, "rb") as source:
-        source.readline()
-        for line in source:
+    header = True
+    for data, _ in whole_lines(path):
+        lines: list[bytes] = []
+        for line in data.splitlines(keepends=True)[header:]:
             tick = _tick_of(line, path)
-            if line.endswith(b"\n") and tick > last:
+            if tick > last:
                 lines.append(line)
                 last = tick
-    to.append(b"".join(lines))
+        header = False
+        to.append(b"".join(lines))
     return last
 
 

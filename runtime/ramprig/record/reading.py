@@ -22,6 +22,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ..errors import RecordError
+from .appendfile import whole_lines
 from .events import from_rfc3339
 from .expected import KeptTicks, Told, compare
 from .folder import CYCLES_FILE, EVENTS_FILE, FORMAT, NOTES_FILE, RUN_FILE
@@ -51,25 +52,12 @@ class Samples:
         return len(self.ticks)
 
 
-def _whole_lines(path: Path) -> Iterator[tuple[bytes, int]]:
-    """The file in pieces of whole lines, each with 0, and last an empty piece with the length of an unfinished line."""
-    rest = b""
-    with open(path, "rb") as file:
-        while chunk := file.read(CHUNK_BYTES):
-            data = rest + chunk
-            end = data.rfind(b"\n") + 1
-            rest = data[end:]
-            if end:
-                yield data[:end], 0
-    yield b"", len(rest)
-
-
 def read_samples(path: Path, columns: Collection[str] | None = None) -> Samples:
     """The samples file `path`; only these columns besides the ticks, or all. Raises RecordError where it is none."""
     table = _Table(path, columns)
     torn_bytes = 0
     try:
-        for data, torn_bytes in _whole_lines(path):  # noqa: B007  (the last one is what is wanted)
+        for data, torn_bytes in whole_lines(path):  # noqa: B007  (the last one is what is wanted)
             table.take(list(csv.reader(io.StringIO(data.decode("utf-8"), newline=""), strict=True)))
     except (OSError, ValueError, csv.Error) as error:
         raise RecordError(f"{path} cannot be read as a samples file: {error}") from error
@@ -137,7 +125,7 @@ class EventLines:
 
     def __iter__(self) -> Iterator[Document]:
         try:
-            for data, torn_bytes in _whole_lines(self._path):
+            for data, torn_bytes in whole_lines(self._path):
                 self.torn_bytes = torn_bytes
                 yield from map(json.loads, data.splitlines())
         except (OSError, ValueError) as error:

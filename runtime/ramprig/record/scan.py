@@ -13,11 +13,13 @@ import math
 from collections.abc import Collection, Iterator
 from dataclasses import dataclass, field
 from pathlib import Path
+from typing import BinaryIO
 
 import numpy as np
 from numpy.typing import NDArray
 
 from ..errors import RecordError
+from .appendfile import whole_length
 
 PIECE_BYTES = 1024 * 1024
 """So much of the file is read at a time; a row longer than this is no row of ours."""
@@ -68,12 +70,15 @@ class Scan:
                 rest = b""
                 while data := file.read(self._piece_bytes):
                     data = rest + data
-                    end = data.rfind(b"\n") + 1
+                    end = whole_length(data)
                     rest = data[end:]
-                    if len(rest) > PIECE_BYTES:
-                        raise RecordError(f"{self.path} is no samples file: a row is longer than {PIECE_BYTES} bytes")
                     if end:
                         yield self._piece(data[:end])
+                    if b"\0" in rest:
+                        self.torn_bytes = len(rest) - file.tell() + file.seek(0, io.SEEK_END)
+                        return
+                    if len(rest) > PIECE_BYTES:
+                        raise RecordError(f"{self.path} is no samples file: a row is longer than {PIECE_BYTES} bytes")
                 self.torn_bytes = len(rest)
         except OSError as error:
             raise RecordError(f"{self.path} cannot be read as a samples file: {error}") from error
@@ -87,11 +92,16 @@ class Scan:
                 begin = max(first, end - size_bytes)
                 file.seek(begin)
                 data = file.read()
+                if b"\0" in data:  # rare: left by a loss of power, and rows may follow that do not count
+                    end = _first_nul(file)
+                    begin = max(first, end - size_bytes)
+                    file.seek(begin)
+                    data = file.read(end - begin)
         except OSError as error:
             raise RecordError(f"{self.path} cannot be read as a samples file: {error}") from error
         if begin > first:
             data = data[data.find(b"\n") + 1 :]
-        return self._piece(data[: data.rfind(b"\n") + 1])
+        return self._piece(data[: whole_length(data)])
 
     def _piece(self, data: bytes) -> Piece:
         """The rows of whole lines."""
@@ -135,6 +145,17 @@ class Scan:
         except (ValueError, csv.Error) as error:
             raise RecordError(f"{self.path} cannot be read as a samples file: {error}") from error
         return piece
+
+
+def _first_nul(file: BinaryIO) -> int:
+    """Where the first NUL of a file is; its end where it has none."""
+    place = file.seek(0)
+    while data := file.read(PIECE_BYTES):
+        found = data.find(b"\0")
+        if found >= 0:
+            return place + found
+        place += len(data)
+    return place
 
 
 def header_of(path: Path) -> tuple[str, ...]:

@@ -80,6 +80,8 @@ def held_files(folder: Path) -> list[Path]:
             with open(path, "rb") as file:
                 file.readline()
                 tick, comma, _ = file.readline(HEADER_MAX_BYTES).partition(b",")
+            if b"\0" in tick:
+                continue  # no row was on the disk when the power went: see `whole_length`
             if comma and not tick.isdigit():
                 raise RecordError(f"{path} is no samples file: its first row begins with {tick[:20]!r}, not a tick")
             if comma:
