@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Callable
+from dataclasses import replace
 
 import pytest
 
@@ -11,9 +12,11 @@ from endure_crash import START_UNIX_S, Host, Process
 from ramprig.cli.read import summary
 from ramprig.endure.notes import add_note
 from ramprig.record.reading import audit
+from ramprig.report.account import account
 from ramprig.report.facts import Facts, gather
 from ramprig.report.junit import cases_of
 from ramprig.report.making import make_report
+from ramprig.report.sections import item_and_rig
 from ramprig.sequence.outcome import Verdict
 
 PICTURE = b"no real picture"
@@ -71,6 +74,31 @@ def test_a_limit_that_the_run_went_on_after_is_no_failure(run: Facts) -> None:
 def test_a_trip_that_the_board_holds_and_tells_again_is_one_trip(run: Facts) -> None:
     assert (run.folder / "events.jsonl").read_text("utf-8").count('"kind":"tripped"') == 2
     assert run.counts["tripped"] == len(run.of("tripped")) == run.trips_outlived == 1
+
+
+def test_a_part_without_an_account_is_not_told_as_whole(run: Facts) -> None:
+    whole = account(run, audit(run.folder))
+    assert "Every sample is in the file or told as lost, and no file was changed." in whole
+    assert len(re.findall(r"<tr><td>[12]</td>", whole)) == 2
+    first, last = run.manifest["parts"]
+    samples = run.manifest["samples"] | {"parts_without_account": [1]}
+    broken = first | {"samples": None, "verdict": None, "status": "broken off"}
+    less = account(
+        replace(run, manifest=run.manifest | {"samples": samples, "parts": [broken, last]}), audit(run.folder)
+    )
+    assert "<td>1</td><td>broken off</td>" in less
+    assert "no account" in less
+    assert "Every sample of the parts with an account is in the file or told as lost; what came after the last" in less
+    lines = summary(run.manifest | {"samples": samples}, audit(run.folder))
+    assert lines[-1].endswith("what came after the last row of part 1 is not known, and no file was changed")
+
+
+def test_a_picture_that_is_gone_is_told_beside_its_note(run: Facts) -> None:
+    (run.folder / "note-1-1.jpg").rename(run.folder / "elsewhere.jpg")
+    try:
+        assert "[note-1-1.jpg, MISSING]" in item_and_rig(run, {})
+    finally:
+        (run.folder / "elsewhere.jpg").rename(run.folder / "note-1-1.jpg")
 
 
 def test_rows_from_before_a_break_are_told_apart(run: Facts) -> None:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import random
 import re
+from dataclasses import replace
 from html.parser import HTMLParser
 from pathlib import Path
 
@@ -13,7 +14,11 @@ from explain_cases import Case, case_of, run_case
 from ramprig.cli.main import main
 from ramprig.report.compare import differing
 from ramprig.report.facts import gather
+from ramprig.report.html import Wish, report_id
 from ramprig.report.making import Made, make_report, read_run
+from ramprig.report.page import alike
+from ramprig.report.protections import is_off
+from ramprig.report.sections import method
 from ramprig.report.svg import Chart, ticks
 
 STEPS = """- repeat:
@@ -23,7 +28,7 @@ STEPS = """- repeat:
       - sweep: {motor: vent, shape: steps, from: 60 %, to: 30 %, steps: 3, pause: 500 ms}
       - expect: {speed of: vent, is: at least 5 rpm}
       - expect: {speed of: vent, is: at most 6 rpm}"""
-VOID = {"meta", "br"}
+VOID = {"meta", "br", "wbr"}
 
 
 class Reader(HTMLParser):
@@ -150,6 +155,68 @@ def test_entries_are_shown_escaped_and_the_rest_is_told_as_missing(run: Path, tm
     assert "not entered" in page.text
 
 
+def test_who_authorised_it_is_shown_and_the_list_of_the_clause_says_what_lacks(run: Path, tmp_path: Path) -> None:
+    page = read_page(made(run, tmp_path / "a", item="vent no. 42", authorised="B. Boss").report)
+    assert "Authorised by B. Boss The results relate only" in page.text
+    assert "identification and condition Item, rig and environment: not entered (condition)" in page.text
+    assert "who authorises the report end of the report p" in page.text
+    page = read_page(made(run, tmp_path / "b").report)
+    assert "Authorised by not entered" in page.text
+    assert "Item, rig and environment: not entered (item, condition)" in page.text
+
+
+def test_each_issue_has_an_identifier_of_its_own(run: Path) -> None:
+    read = [read_run(run)]
+    numbers = {
+        report_id(read, Wish(issued=issued, entries=entries))
+        for issued in ("2026-03-01T08:00:00Z", "2026-03-02T08:00:00Z")
+        for entries in ({}, {"item": "vent no. 42"})
+    }
+    assert len(numbers) == 4
+
+
+def test_times_of_the_head_and_of_the_record_can_be_brought_together(jammed: Path, tmp_path: Path) -> None:
+    facts = gather(jammed)
+    page = read_page(made(jammed, tmp_path).report)
+    first = re.search(
+        r"first step at ([\d.]+) (ms|s) of the run; 'into the run' at the head counts from there", page.text
+    )
+    assert first is not None
+    into = re.search(r"([\d.]+) s into the run", page.text)
+    assert into is not None
+    begin_s = float(first[1]) / (1000 if first[2] == "ms" else 1)
+    assert begin_s + float(into[1]) == pytest.approx(facts.of("tripped")[-1]["time_s"], abs=0.006)
+    assert f"at {facts.of('tripped')[-1]['time_s']} s: overcurrent on vent: " in page.text
+
+
+def test_a_run_on_a_simulated_board_says_so_and_compares_no_clocks(run: Path, tmp_path: Path) -> None:
+    facts = gather(run)
+    assert facts.is_simulated
+    text = made(run, tmp_path).report.read_text("utf-8")
+    assert "on a simulated board: it shows what the sequence does, and nothing about a real motor" in text
+    assert "ppm" not in text
+    assert "as the bench file has it" in text
+    clocks = facts.manifest["clocks"]
+
+    def told(**of_clocks: float) -> str:
+        return method(replace(facts, manifest=facts.manifest | {"port": "COM3", "clocks": clocks | of_clocks}))
+
+    assert "differ by less than 1e+02 ppm" in told(drift_ppm=26.0, device_s=10.0)
+    assert "ran 26 ppm fast against the computer&#x27;s, give or take 0.28" in told(drift_ppm=26.0, device_s=3600.0)
+
+
+def test_numbers_of_one_kind_have_the_same_decimals() -> None:
+    assert alike((-60.0, 3.297e-05, 60.0)) == ["-60.00", "0.00", "60.00"]
+    assert alike((0.0, -1e-9, 5760.0)) == ["0", "0", "5760"]
+    assert alike((0.0, 0.0, 0.0)) == ["0", "0", "0"]
+
+
+def test_a_wrong_way_trip_is_off_where_the_stall_trip_is() -> None:
+    limits = {("stall_duty", 0): 0, ("wrong_counts", 0): 24, ("stall_duty", 1): 1500, ("wrong_counts", 1): 24}
+    assert is_off(limits, "wrong_counts", 0)
+    assert not is_off(limits, "wrong_counts", 1)
+
+
 def test_nothing_of_the_run_is_changed(run: Path, tmp_path: Path) -> None:
     names = ("run.json", "samples.csv", "events.jsonl")
     before = [(run / name).read_bytes() for name in names]
@@ -178,8 +245,8 @@ def test_one_changed_condition_is_named(tmp_path: Path) -> None:
         assert result.folder is not None
         folders.append(gather(result.folder))
     found = differing(folders)
-    assert found["limit trip_ma 0"] == ["2500", "2000"]
-    assert set(found) == {"bench file", "limit trip_ma 0", "limit trip_ma 1"}
+    assert found["limit trip_ma of vent"] == ["2500 mA", "2000 mA"]
+    assert set(found) == {"bench file", "limit trip_ma of vent", "limit trip_ma of fan"}
     assert differing([folders[0], folders[0]]) == {}
 
 

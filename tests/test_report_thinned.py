@@ -15,6 +15,7 @@ from ramprig.cli.read import summary
 from ramprig.errors import RecordError
 from ramprig.record.folder import CYCLE_RANGES_FILE, INTERVAL_RANGES_FILE
 from ramprig.record.reading import audit, read_manifest
+from ramprig.record.volumes import Stream
 from ramprig.report.compare import differing
 from ramprig.report.digest import Digest, digest_samples
 from ramprig.report.envelope import Envelope
@@ -111,22 +112,39 @@ def test_a_torn_last_line_of_a_ranges_file_is_left_out_and_a_broken_one_told(thi
     assert len(list(read_ranges(thinned / INTERVAL_RANGES_FILE, ("supply_v",)))) > 3
 
 
-def test_an_envelope_that_is_widened_keeps_its_means_and_fills_what_was_empty() -> None:
+def test_an_envelope_is_widened_where_rows_were_left_out_and_nowhere_else() -> None:
     envelope = Envelope(["a"], intervals_max=10)
-    envelope.add(np.array([0.0, 1.0, 2.0]), {"a": np.array([1.0, 2.0, 3.0])})
-    envelope.widen(1.0, 2.0, {"a": (-5.0, 0.0, 9.0)})
-    envelope.widen(4.0, 5.0, {"a": (7.0, 7.5, 8.0)})
+    envelope.add(np.array([0.0, 1.0, 2.0, 3.0]), {"a": np.array([1.0, 2.0, 3.0, 4.0])})
+    envelope.widen(0.0, 1.0, 2, {"a": (-50.0, 0.0, 90.0)})  # both of its samples are there
+    assert envelope.band("a").is_exact
+    envelope.widen(2.0, 3.0, 11, {"a": (-5.0, 0.0, 9.0)})
+    envelope.widen(4.0, 5.0, 11, {"a": (7.0, 7.5, 8.0)})
     band = envelope.band("a")
-    assert band.least.tolist() == [1.0, -5.0, -5.0, 7.0, 7.0]
-    assert band.greatest.tolist() == [1.0, 9.0, 9.0, 8.0, 8.0]
-    assert band.mean.tolist() == [1.0, 2.0, 3.0, 7.5, 7.5]
+    assert band.least.tolist() == [1.0, 2.0, -5.0, -5.0, 7.0, 7.0]
+    assert band.greatest.tolist() == [1.0, 2.0, 9.0, 9.0, 8.0, 8.0]
+    assert band.mean.tolist() == [1.0, 2.0, 0.0, 0.0, 7.5, 7.5]
+    assert envelope.is_widened
     assert not band.is_exact
+
+
+def test_a_thinned_plot_holds_every_sample_and_its_line_is_no_single_row(full: Path, thinned: Path) -> None:
+    less = digest(thinned)
+    half_s = less.envelope.width_s / 2
+    (piece,) = Stream([full / "samples.csv"])
+    for column in ("vent.duty_pct", "vent.current_a", "supply_v"):
+        wide = less.band(column)
+        at = np.searchsorted(wide.time_s, piece.numbers["time_s"] - half_s)
+        assert (np.abs(wide.time_s[at] - piece.numbers["time_s"]) <= half_s + 1e-6).all()
+        assert (wide.least[at] <= piece.numbers[column]).all()
+        assert (piece.numbers[column] <= wide.greatest[at]).all()
+        jumps = np.abs(np.diff(wide.mean))  # a single row beside means would jump to an end of its range
+        assert jumps.max() < 0.9 * (np.nanmax(wide.greatest) - np.nanmin(wide.least)), column
 
 
 def test_an_envelope_of_ranges_alone_covers_their_time() -> None:
     envelope = Envelope(["a"], intervals_max=10)
-    envelope.widen(0.0, 10.0, {"a": (1.0, 2.0, 3.0)})
-    envelope.widen(10.0, 100.0, {"a": (0.0, 1.0, 5.0)})
+    envelope.widen(0.0, 10.0, 1000, {"a": (1.0, 2.0, 3.0)})
+    envelope.widen(10.0, 100.0, 9000, {"a": (0.0, 1.0, 5.0)})
     band = envelope.band("a")
     assert (band.least.min(), band.greatest.max()) == (0.0, 5.0)
     assert band.time_s[-1] > 90

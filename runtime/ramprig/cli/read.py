@@ -42,6 +42,8 @@ def carry_out(args: argparse.Namespace) -> int:
 
 def summary(manifest: dict[str, Any], found: Audit) -> list[str]:  # Any: JSON as it comes, of a checked format
     """The run in a few lines, and the statements of the audit."""
+    from ramprig.report.kept import whole_of
+
     device = manifest.get("device") or {}
     board = " ".join(str(device[key]) for key in ("board", "serial") if key in device)
     cycles = (manifest.get("results") or {}).get("cycles")
@@ -62,10 +64,8 @@ def summary(manifest: dict[str, Any], found: Audit) -> list[str]:  # Any: JSON a
         lines.append("cycles   " + ", ".join(words))
     lines += [f"{'broken' if i == 0 else '':<9}{text}" for i, text in enumerate(found.interruptions)]
     lines += [f"{'':9}{line}" for line in gap_lines(manifest.get("samples") or {})]
-    whole = "every sample is in the file or told as lost, and no file was changed"
-    if (manifest.get("samples") or {}).get("thinned"):
-        whole = "every sample is in the file, thinned on purpose or told as lost, and no file was changed"
-    verdicts = found.statements or (whole,)
+    whole = whole_of(manifest.get("samples") or {})
+    verdicts = found.statements or (f"{whole[0].lower()}{whole[1:]}, and no file was changed",)
     return lines + [f"{'checked' if i == 0 else '':<9}{text}" for i, text in enumerate(verdicts)]
 
 

@@ -6,6 +6,7 @@ from collections.abc import Callable, Sequence
 from typing import TYPE_CHECKING
 
 from ramprig.sequence.log_forecast import said_of
+from ramprig_link.words import LIMITS
 
 from . import page
 from .kept import thinning_of
@@ -26,7 +27,7 @@ def conditions(facts: Facts) -> dict[str, str]:
     inputs = {str(entry.get("role")): str(entry.get("sha256"))[:12] for entry in manifest.get("inputs") or []}
     loggings = (manifest.get("samples") or {}).get("loggings") or []
     found = {
-        "simulated": "yes" if str(manifest.get("port", "")).startswith(("mock:", "core:")) else "no",
+        "simulated": "yes" if facts.is_simulated else "no",
         "board": f"{device.get('board')} {device.get('serial')}",
         "firmware": str(device.get("firmware")),
         "bench file": inputs.get("bench", OTHERWISE),
@@ -42,7 +43,7 @@ def conditions(facts: Facts) -> dict[str, str]:
         for motor in facts.bench.motors:
             found[f"{motor.name}: counts a turn"] = f"{float(motor.counts_per_turn):g}"
     for (item, index), value in facts.limits.items():
-        found[f"limit {item} {index}"] = str(value)
+        found[f"limit {item} of {facts.owner_of(LIMITS[item].per, index)}"] = f"{value} {LIMITS[item].unit}".rstrip()
     return found
 
 
@@ -95,7 +96,7 @@ def _range_rows(reads: list[Read]) -> list[list[str]]:
         cells = []
         for read in reads:
             found = read.digest.totals.get(column)
-            cells.append(OTHERWISE if found is None else page.text(" / ".join(f"{value:.4g}" for value in found)))
+            cells.append(OTHERWISE if found is None else page.text(" / ".join(page.alike(found))))
         rows.append([page.text(f"{name}, {unit} (least / mean / greatest)"), *cells])
     return rows
 

@@ -172,7 +172,8 @@ def _widen(facts: Facts, digest: Digest) -> None:
     """Have the envelope reach to every sample of the finest ranges that were recorded."""
     path = ranges_path(facts, with_cycles=False)
     for line in read_ranges(path, digest.columns) if path is not None else ():
-        digest.envelope.widen(line.first_s, line.last_s, {name: found[:3] for name, found in line.columns.items()})
+        triples = {name: found[:3] for name, found in line.columns.items()}
+        digest.envelope.widen(line.first_s, line.last_s, line.samples, triples)
 
 
 def _keep_features(digest: Digest, found: Sequence[TurnFeatures]) -> None:

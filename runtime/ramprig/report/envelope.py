@@ -36,10 +36,11 @@ class Band:
 
 
 class Envelope:
-    """Takes samples in order of time, several columns at once."""
+    """Takes samples in order of time, several columns at once. `is_widened` tells whether ranges stand in for some."""
 
     def __init__(self, columns: Sequence[str], *, intervals_max: int = INTERVALS_MAX) -> None:
         self._names = tuple(columns)
+        self.is_widened = False
         self._max = intervals_max - intervals_max % 2
         self._start_s: float | None = None
         self._width_s = 0.0
@@ -79,27 +80,34 @@ class Envelope:
             self._sum[row, into] += np.add.reduceat(np.where(known, values, 0.0), begins)
             self._known[row, into] += np.add.reduceat(known.astype(np.int64), begins)
 
-    def widen(self, begin_s: float, end_s: float, columns: Mapping[str, tuple[float, float, float]]) -> None:
-        """Between these times there were samples, not given to `add`, with this least, mean and greatest value.
+    def widen(
+        self, begin_s: float, end_s: float, samples: int, columns: Mapping[str, tuple[float, float, float]]
+    ) -> None:
+        """From `begin_s` to `end_s` there were so many samples, with this least, mean and greatest value.
 
-        The means of intervals that have samples of their own stay those of their samples. Comes after all `add`.
+        Intervals that were given every one of theirs by `add` stay as they are. The others reach to least and greatest
+        now, and have that mean where less than half of their samples was given. Comes after all `add`.
         """
         if self._start_s is None:
             self._start_s, self._width_s = begin_s, max(1e-3, (end_s - begin_s) / self._max)
         while (end_s - self._start_s) / self._width_s >= self._max:
             self._join_pairs()
         first, last = (max(0, int((at - self._start_s) / self._width_s)) for at in (begin_s, end_s))
-        places = slice(first, last + 1)
+        whole = self._width_s * (samples - 1) / (end_s - begin_s) if end_s > begin_s else 1.0
+        given = self._samples[first : last + 1]
+        places = first + np.flatnonzero(given < max(1, int(whole + 1e-6)))
+        few = 2 * self._samples[places] < whole
         self._samples[places] = np.maximum(self._samples[places], 2)  # more than one sample lies behind it
+        self.is_widened |= bool(len(places))
         for row, name in enumerate(self._names):
             if name not in columns:
                 continue
             least, mean, greatest = columns[name]
             self._least[row, places] = np.fmin(self._least[row, places], least)
             self._greatest[row, places] = np.fmax(self._greatest[row, places], greatest)
-            empty = self._known[row, places] == 0
-            self._sum[row, places][empty] = mean
-            self._known[row, places][empty] = 1
+            unknown = places[few | (self._known[row, places] == 0)]
+            self._sum[row, unknown] = mean
+            self._known[row, unknown] = 1
 
     def _join_pairs(self) -> None:
         half = self._max // 2

@@ -15,6 +15,7 @@ from ramprig.quantity import show
 from ramprig.record.folder import EVENTS_FILE, SAMPLES_FILE
 from ramprig.record.reading import files_by_part, read_manifest
 from ramprig.sequence.steps import What
+from ramprig_link.words import Per
 
 Document = dict[str, Any]  # JSON as it comes: what is in it is checked where it is used
 
@@ -23,6 +24,8 @@ KEPT_MAX = 2000
 PASSES_MAX = 100_000
 FAILURES_MAX = 200
 """Failed judgements of one expectation that are kept with their values."""
+SIMULATED = ("mock:", "core:")
+"""Ports that are no real board."""
 CYCLES_FILE = "cycles.jsonl"
 NOTES_FILE = "notes.jsonl"
 
@@ -116,6 +119,11 @@ class Facts:
         """The events of a kind that were kept, in order."""
         return self.events.get(kind, [])
 
+    @property
+    def is_simulated(self) -> bool:
+        """Whether the board was one in software."""
+        return str(self.manifest.get("port", "")).startswith(SIMULATED)
+
     def was_outlived(self, trip: Document) -> bool:
         """Whether the run was gone on with after this trip, one of its events."""
         return any(trip is each for each in self.of("tripped")[: self.trips_outlived])
@@ -181,6 +189,22 @@ class Facts:
         if self.bench is not None:
             return next((motor.name for motor in self.bench.motors if motor.axis == axis), f"axis {axis}")
         return self.motors[axis] if axis < len(self.motors) else f"axis {axis}"
+
+    def servo_on(self, channel: int) -> str:
+        """The servo on an output of the board, by its name."""
+        if self.bench is not None:
+            return next((servo.name for servo in self.bench.servos if servo.channel == channel), f"servo {channel}")
+        return self.servos[channel] if channel < len(self.servos) else f"servo {channel}"
+
+    def owner_of(self, per: Per, index: int) -> str:
+        """Whom a limit of the board belongs to."""
+        match per:
+            case Per.AXIS:
+                return self.motor_on(index)
+            case Per.SERVO:
+                return self.servo_on(index)
+            case _:
+                return "board"
 
     @property
     def limits(self) -> dict[tuple[str, int], int]:

@@ -7,6 +7,7 @@ and the report claims no accreditation.
 from __future__ import annotations
 
 import hashlib
+import json
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 
@@ -14,11 +15,13 @@ from ramprig import __version__
 from ramprig.record.reading import Audit
 
 from . import page, plots, sections
+from .account import account
 from .checks import checks_table
 from .compare import compared
 from .digest import Digest
 from .explain import Explanation, view_of_trip
 from .facts import Facts
+from .protections import protections
 from .trends import rules_in_force, seen_of
 from .untold import untold_table
 from .worn import unjudged_since
@@ -35,10 +38,6 @@ ENTRIES = {
     "deviations": "deviations from the method",
 }
 """What a person may enter for the report: name and meaning."""
-
-
-NOTHING = 1e-9
-"""A mean of so small a share of the greatest value is what rounding left of 0."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -73,18 +72,21 @@ class _Figures:
         return "".join(parts)
 
 
-def report_id(reads: list[Read]) -> str:
-    """Unique for these runs as they are: the name of the first and a hash of what `run.json` of each says."""
-    digest = hashlib.sha256()
+def report_id(reads: list[Read], wish: Wish) -> str:
+    """Unique for this issue: the name of the first run and a hash of `run.json` of each, of the notes, the time of
+    issue and what was entered."""
+    digest = hashlib.sha256(json.dumps([wish.issued, sorted(wish.entries.items())]).encode("utf-8"))
     for read in reads:
         digest.update((read.facts.folder / "run.json").read_bytes())
+        digest.update(json.dumps(read.facts.notes, sort_keys=True).encode("utf-8"))
     more = f"+{len(reads) - 1}" if len(reads) > 1 else ""
     return f"{reads[0].facts.name}{more} / {digest.hexdigest()[:12]}"
 
 
 def render(reads: list[Read], wish: Wish) -> str:
     """The whole file for one run, or for several with what differs between them first."""
-    number_of = report_id(reads)
+    number_of = report_id(reads, wish)
+    clauses = sections.clauses(wish.entries, [read.facts for read in reads])
     figures = _Figures()
     title = f"Test report: {reads[0].facts.manifest.get('name') or reads[0].facts.name}"
     if len(reads) > 1:
@@ -99,10 +101,8 @@ def render(reads: list[Read], wish: Wish) -> str:
         for name, content in _parts_of(read, wish, figures):
             parts.append(page.section(number, prefix + name, number_of, content))
             number += 1
-    parts.append(
-        page.section(number, "What this report holds of clause 7.8.2", number_of, sections.clauses(wish.entries))
-    )
-    parts.append(_end(number_of))
+    parts.append(page.section(number, "What this report holds of clause 7.8.2", number_of, clauses))
+    parts.append(_end(number_of, wish.entries.get("authorised")))
     return page.page(title, number_of, "\n".join(parts))
 
 
@@ -141,10 +141,10 @@ def _parts_of(read: Read, wish: Wish, figures: _Figures) -> list[tuple[str, str]
     found = [
         ("Item, rig and environment", sections.item_and_rig(facts, wish.entries)),
         ("Method", sections.method(facts)),
-        ("Results", sections.results(facts) + _ranges(digest)),
+        ("Results", sections.results(facts) + _ranges(facts, digest)),
         interruptions,
-        ("Account of the samples", sections.account(facts, read.audit)),
-        ("Protections", sections.protections(facts)),
+        ("Account of the samples", account(facts, read.audit)),
+        ("Protections", protections(facts)),
     ]
     trip = view_of_trip(facts)
     if trip is not None:
@@ -176,20 +176,25 @@ def _trends(read: Read, figures: _Figures) -> str:
     return words + figures.put(plots.by_cycle(facts, seen.drawn)) + tables
 
 
-def _ranges(digest: Digest) -> str:
+def _ranges(facts: Facts, digest: Digest) -> str:
+    """Of what was logged: the plot around a trip may show more."""
     rows = []
-    for column, (low, mean, high) in digest.totals.items():
+    for column, triple in digest.totals.items():
         name, unit = plots.label_of(column)
-        mean = 0.0 if abs(mean) < NOTHING * max(abs(low), abs(high)) else mean
-        rows.append([page.text(name), f"{low:.4g}", f"{mean:.4g}", f"{high:.4g}", page.text(unit)])
+        rows.append([page.text(name), *page.alike(triple), page.text(unit)])
     if not rows:
         return ""
-    heads = ["over the whole run", "least", "mean", "greatest", "unit"]
-    return "<h3>Range of each quantity</h3>" + page.table(heads, rows, numbers=(1, 2, 3))
+    heads = ["over all samples", "least", "mean", "greatest", "unit"]
+    said = "What came and went between two samples is not in these; the board's own limits look at every tick."
+    if facts.counts["tripped"]:
+        said += " Its record around a trip stands under its own heading."
+    table = page.table(heads, rows, numbers=(1, 2, 3))
+    return "<h3>Range of each quantity</h3>" + table + page.paragraph(said, kind="note")
 
 
-def _end(number_of: str) -> str:
+def _end(number_of: str, authorised: str | None) -> str:
     return (
+        f"<h3>Authorised by</h3><p>{page.text(authorised)}</p>"
         '<div class="end"><p style="max-width:none">The results relate only to the items tested, in the condition and '
         "under the conditions told above.<br>This report is to be passed on whole.</p>"
         f'<p class="id" style="text-align:center;max-width:none">End of report {page.text(number_of)}</p></div>'

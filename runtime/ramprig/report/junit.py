@@ -19,21 +19,10 @@ from ramprig_link.words import LIMITS
 from .explain import explain
 from .facts import Expectation, Facts
 from .page import clean
+from .protections import TRIPS, is_off
 from .unjudged import unjudged, why_unjudged
 from .worn import wear_cases
 
-TRIPS = {
-    "trip_ma": "overcurrent",
-    "rated_ma": "overload",
-    "stall_duty": "stall",
-    "wrong_counts": "wrong_way",
-    "speed_counts": "overspeed",
-    "under_mv": "undervoltage",
-    "over_mv": "overvoltage",
-    "lease_ms": "link_lost",
-}
-"""The trip that belongs to each limit."""
-OFF_AT_ZERO = frozenset({"rated_ma", "stall_duty", "speed_counts", "under_mv"})
 FAILURES_TOLD = 20
 
 
@@ -144,7 +133,7 @@ def _limit_cases(facts: Facts) -> Iterator[Case]:
         elif event is not None:
             failure = f"tripped: {TRIPS[item]}, value {event.get('value')}, bound {event.get('bound')}"
             yield Case("limits", name, f"{out}\nat {event.get('time_s')} s of the run", failure=failure)
-        elif item in OFF_AT_ZERO and value == 0:
+        elif is_off(facts.limits, item, index):
             yield Case("limits", name, out, skipped="this protection is off in the bench file")
         elif not armed:
             yield Case("limits", name, out, skipped="the outputs were never enabled in this run")

@@ -7,6 +7,7 @@ import io
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Any
 
 from ramprig.errors import RecordError
 from ramprig.record.folder import CYCLE_RANGES_FILE, INTERVAL_RANGES_FILE
@@ -105,10 +106,15 @@ def said_of_thinning(facts: Facts) -> str:
     return f"{text} Ranges are of all samples, from {path.name}, and the bands of the plots too, from {finest.name}."
 
 
-def whole_of(account: Mapping[str, object]) -> str:
-    """What holds where the audit has found nothing."""
-    return (
-        "Every sample is in the file, thinned on purpose or told as lost"
-        if account.get("thinned")
-        else "Every sample is in the file or told as lost"
+def whole_of(found: Mapping[str, Any]) -> str:  # Any: JSON as it comes
+    """What holds by the account of a run where the audit has found nothing."""
+    where = (
+        "is in the file, thinned on purpose or told as lost"
+        if found.get("thinned")
+        else "is in the file or told as lost"
     )
+    without = found.get("parts_without_account") or []
+    if not without:
+        return f"Every sample {where}"
+    which = f"part{'s' if len(without) > 1 else ''} {', '.join(map(str, without))}"
+    return f"Every sample of the parts with an account {where}; what came after the last row of {which} is not known"

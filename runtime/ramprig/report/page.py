@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable, Sequence
 from html import escape
 
@@ -45,7 +46,7 @@ svg{display:block;width:100%;height:auto;font:11px "Segoe UI",Roboto,Arial,sans-
 svg text{fill:#333}svg text.l{fill:#55616b}svg text.e{font-size:10px;fill:#333;paint-order:stroke;stroke:#fff;
 stroke-width:3px}svg .g{stroke:#e6eaec;stroke-width:1}svg .a{stroke:#8a949b;stroke-width:1}
 .end{margin-top:2.5rem;border-top:2px solid var(--ink);padding-top:.6rem;text-align:center}
-code{font-size:.92em}
+code{font-size:.92em;overflow-wrap:break-word}
 header .id,.named{text-align:left}
 @media (max-width:34rem){main{padding:1.2rem .9rem}dl{grid-template-columns:1fr;gap:0}dd{margin-bottom:.4rem}
 h2{display:block}h2 small{display:block;text-align:left}}
@@ -96,6 +97,19 @@ def status(holds: bool) -> str:
 def short(value: object) -> str:
     """A cell that stays on one line, such as a time of day."""
     return f'<td class="t">{text(value)}</td>'
+
+
+def place(value: str) -> str:
+    """A place in a file, which may be broken after its folders only."""
+    return f"<code>{escape(clean(value)).replace('/', '/<wbr>')}</code>"
+
+
+def alike(values: Sequence[float]) -> list[str]:
+    """Numbers of one kind with the decimals that four figures of the largest have, so that what is nothing beside it
+    reads as nothing."""
+    size = max(abs(value) for value in values)
+    decimals = max(0, 3 - math.floor(math.log10(size))) if size > 0 else 0
+    return [f"{round(value, decimals) + 0.0:.{decimals}f}" for value in values]
 
 
 def paragraph(sentence: str, *, kind: str = "") -> str:

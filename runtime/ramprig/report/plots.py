@@ -72,6 +72,7 @@ def moments_of(facts: Facts, digest: Digest) -> list[Moment]:
         ("restarted", "restart", VERMILION, "6 3"),
         ("host_slept", "host slept", GREY, "6 3"),
         ("gap_found", "gap", ORANGE, "2 2"),
+        ("run_resumed", "gone on with", GREY, "6 3"),
     ):
         for event in facts.of(kind)[:EVENTS_MAX]:
             if isinstance(event.get("time_s"), int | float):
@@ -131,6 +132,7 @@ def _time_plot(
         chart.band(times / scale, least, greatest)
         chart.line(times / scale, mean, width=1.0)
         how = f"line: mean, area: least to greatest, each over {digest.envelope.width_s:.3g} s"
+        how += ", and over the ranges that were recorded where rows were left out" if digest.envelope.is_widened else ""
     for value, name in levels:
         chart.level(value, f"{name} {value:g} {unit}")
     for moment in moments:

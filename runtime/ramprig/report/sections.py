@@ -5,26 +5,28 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 
 from ramprig.endure.cycles import read_cycle_record
-from ramprig.errors import RecordError
+from ramprig.errors import FileError, RecordError
 from ramprig.quantity import format_duration
 from ramprig.record.events import from_rfc3339
-from ramprig.record.reading import Audit
+from ramprig.sequence.rig import Rig
+from ramprig.sequence.tripsay import explain_trip
 from ramprig.sequence.wear_limits import WearRules
-from ramprig.session.limits import LimitTable
-from ramprig_link.words import LIMITS, Per
+from ramprig.session.events import Learned, Tripped
 
 from . import page
 from .digest import Digest
 from .facts import Document, Expectation, Facts
-from .kept import said_of_thinning, whole_of
+from .plots import label_of
+from .protections import stop_text
 from .trends import Seen
 from .unjudged import unjudged, why_unjudged
 
 RULE = (
     "Decision rule: an expectation passes where the value found lies within its limits, the limits included; there is "
     "no guard band and no allowance for uncertainty (simple acceptance; the term as in ISO/IEC Guide 98-4 and ILAC-G8, "
-    "from memory). The run passes where it was carried out to its end and every expectation passed each time it was "
-    "judged. A value near a limit may therefore be on either side of it by the resolution told below."
+    "from memory). The run passes where every step was carried out, every expectation passed each time it was judged, "
+    "and no limit to wear that ends the run was passed. A value near a limit may therefore be on either side of it by "
+    "the resolution told below."
 )
 NOTHING_JUDGED = (
     "No expectation was judged. Waits, trips and limits to wear have their verdict at the head of this report."
@@ -32,14 +34,16 @@ NOTHING_JUDGED = (
 ROWS_MAX = 400
 """Lines of one table; what is left out is counted and stands in the run folder."""
 RESOLUTION_AT_RPM = (1.0, 10.0, 100.0, 1000.0)
+NOT_KNOWN = "not recorded"
+"""In the place of what the run itself should have said; what people should have said is `not entered`."""
+CLOCKS_WITHIN_S = 1e-3
+"""Clocks are compared over a link whose delays differ by about so much: a choice of this program, typical of USB."""
 SEQUENCE_MAX = 60_000
 """Characters of one file of the sequence that are shown."""
 NO_STANDARD = (
     "Sudden changes are looked for by CUSUM, slow ones by EWMA, drifts by Mann-Kendall and Sen. Where the figures are "
     "not those of the file they are choices of this program and no standard."
 )
-TRIP_LIMITS = ("trip_ma", "rated_ma", "stall_duty", "wrong_counts", "speed_counts", "under_mv", "over_mv")
-ZERO_IS_OFF = ("rated_ma", "stall_duty", "speed_counts", "under_mv")
 
 
 def item_and_rig(facts: Facts, entries: Mapping[str, str]) -> str:
@@ -57,16 +61,18 @@ def item_and_rig(facts: Facts, entries: Mapping[str, str]) -> str:
         ("environment, as entered", entries.get("environment")),
         ("bench", facts.bench_trouble if bench is None else f"{bench.name} ({bench.file})"),
         ("board", f"{device.get('board')} {device.get('serial')}, firmware {device.get('firmware')}"),
-        ("start of the board (boot)", device.get("boot")),
-        ("port", manifest.get("port")),
+        ("start of the board (boot)", device.get("boot", NOT_KNOWN)),
+        ("port", manifest.get("port") or NOT_KNOWN),
         ("instruments, as entered", entries.get("instruments")),
-        ("computer", (manifest.get("software") or {}).get("os")),
-        ("software", _software(manifest)),
+        ("computer", (manifest.get("software") or {}).get("os") or NOT_KNOWN),
+        ("software", _software(manifest) or NOT_KNOWN),
     ]
-    if settings.get("rehearsal"):
-        note = "A rehearsal on a simulated board: it shows what the sequence does, and nothing about a real motor."
-        return page.paragraph(note, kind="differs") + page.facts(pairs) + _notes(facts)
-    return page.facts(pairs) + _parts_table(facts) + _notes(facts)
+    found = page.facts(pairs) + _parts_table(facts) + _notes(facts)
+    if settings.get("rehearsal") or facts.is_simulated:
+        what = "A rehearsal on" if settings.get("rehearsal") else "A run on"
+        note = f"{what} a simulated board: it shows what the sequence does, and nothing about a real motor."
+        return page.paragraph(note, kind="differs") + found
+    return found
 
 
 def _software(manifest: Document) -> str:
@@ -92,15 +98,18 @@ def _parts_table(facts: Facts) -> str:
 def _notes(facts: Facts) -> str:
     if not facts.notes:
         return ""
-    rows = [[page.short(note.get("utc")), page.text(_note_text(note))] for note in facts.notes[:ROWS_MAX]]
-    return "<h3>Noted by hand</h3>" + page.table(["when (UTC)", "what"], rows)
+    rows = [[page.short(note.get("utc")), page.text(_note_text(facts, note))] for note in facts.notes[:ROWS_MAX]]
+    more = len(facts.notes) - len(rows)
+    rest = page.paragraph(f"{more} notes more are in the run folder.") if more else ""
+    return "<h3>Noted by hand</h3>" + page.table(["when (UTC)", "what"], rows) + rest
 
 
-def _note_text(note: Document) -> str:
-    """What somebody wrote, who, and the name of the picture beside it."""
+def _note_text(facts: Facts, note: Document) -> str:
+    """What somebody wrote, who, and the name of the picture beside it, which may be missing."""
     text = str(note.get("text") or "")
     text += f" ({note['by']})" if note.get("by") else ""
     names = [str(photo.get("file")) for photo in note.get("photos") or []]
+    names = [name if (facts.folder / name).is_file() else f"{name}, MISSING" for name in names]
     return text + (f" [{', '.join(names)}]" if names else "")
 
 
@@ -111,13 +120,14 @@ def method(facts: Facts) -> str:
     values = (manifest.get("settings") or {}).get("values") or {}
     period = ((manifest.get("samples") or {}).get("loggings") or [{}])[0].get("period_ticks")
     pairs: list[tuple[str, object]] = [
-        ("begun", manifest.get("started")),
+        ("begun", manifest.get("started") or NOT_KNOWN),
         ("ended", manifest.get("ended") or "not in order"),
+        ("first step", _first_step(facts)),
         *_lengths(facts),
         ("values given", ", ".join(f"{name} = {value}" for name, value in values.items()) or "none"),
-        ("sampled", f"every {period} ticks of {clocks.get('tick_us')} us" if period else ""),
-        ("speed", (manifest.get("speed") or {}).get("method")),
-        ("clocks", _clock_text(clocks)),
+        ("sampled", f"every {period} ticks of {clocks.get('tick_us')} us" if period else NOT_KNOWN),
+        *([("speed", speed)] if (speed := (manifest.get("speed") or {}).get("method")) and facts.motors else []),
+        ("clocks", _clock_text(facts)),
     ]
     rows = [
         [page.text(entry.get("role")), page.text(entry.get("name")), f"<code>{page.text(entry.get('sha256'))}</code>"]
@@ -159,15 +169,34 @@ def _sequence_texts(facts: Facts) -> str:
 
 
 def _seconds(value: object) -> str:
-    return format_duration(round(value, 3)) if isinstance(value, int | float) else ""
+    return format_duration(round(value, 3)) if isinstance(value, int | float) else NOT_KNOWN
 
 
-def _clock_text(clocks: Document) -> str:
-    ppm = clocks.get("drift_ppm")
-    text = "times count from the start of the run by the board's clock; times of day are UTC"
-    if isinstance(ppm, int | float):
-        text += f"; the board's clock ran {abs(ppm):g} ppm {'fast' if ppm > 0 else 'slow'} against the computer's"
-    return text
+def _first_step(facts: Facts) -> str:
+    """When the steps of the last part began; the sentence at the head counts from there."""
+    found = (facts.manifest.get("results") or {}).get("steps_from_tick")
+    zero = ((facts.parts[-1].get("clocks") or {}) or (facts.manifest.get("clocks") or {})).get("tick_zero")
+    if not isinstance(found, int) or not isinstance(zero, int):
+        return NOT_KNOWN
+    at = _seconds((found - zero) * facts.tick_us / 1e6)
+    part = ", in its last part" if len(facts.parts) > 1 else ""
+    return f"at {at} of the run{part}; 'into the run' at the head counts from there"
+
+
+def _clock_text(facts: Facts) -> str:
+    """What the times mean, and how far the clocks ran apart, where that can be told."""
+    clocks = facts.manifest.get("clocks") or {}
+    text = "times count from the begin of the record by the board's clock; times of day are UTC"
+    ppm, lasted_s = clocks.get("drift_ppm"), clocks.get("device_s")
+    if facts.is_simulated or not isinstance(ppm, int | float) or not isinstance(lasted_s, int | float) or lasted_s <= 0:
+        return text
+    within_ppm = 1e6 * CLOCKS_WITHIN_S / lasted_s
+    if abs(ppm) < within_ppm:
+        return f"{text}; the board's clock and the computer's differ by less than {within_ppm:.2g} ppm"
+    way = "fast" if ppm > 0 else "slow"
+    return (
+        f"{text}; the board's clock ran {abs(ppm):.3g} ppm {way} against the computer's, give or take {within_ppm:.2g}"
+    )
 
 
 def results(facts: Facts) -> str:
@@ -194,7 +223,7 @@ def results(facts: Facts) -> str:
 def _expectation(entry: Expectation) -> list[str]:
     return [
         page.text(entry.what),
-        f"<code>{page.text(entry.place)}</code>",
+        page.place(entry.place),
         page.text(entry.limit),
         page.text(_values(entry)) if entry.judged else "",
         str(entry.judged),
@@ -251,21 +280,38 @@ def _resolution(facts: Facts) -> str:
     """How far a value may be off by the way it was measured."""
     rows = []
     for column in (facts.manifest.get("speed") or {}).get("columns") or []:
+        name, _ = label_of(str(column["column"]))
         rows += [
-            [page.text(column["column"]), f"{entry['at_rpm']:g} rpm", f"{entry['rpm']:g} rpm"]
+            [page.text(name), f"{entry['at_rpm']:g} rpm", f"{entry['rpm']:.3g} rpm"]
             for entry in column.get("resolution") or []
             if entry.get("at_rpm") in RESOLUTION_AT_RPM
         ]
     single = (
-        "Resolution of a single logged speed, from the encoder's counts alone; a mean over a window is finer by the "
-        "window's length. "
+        "Resolution of a single logged speed, from the encoder's counts alone; a mean over a window is finer, about as "
+        "the window is longer than the span that a single speed is taken over."
     )
+    table = page.table(["", "at", "resolution"], rows, numbers=(1, 2)) if rows else ""
+    table = page.paragraph(single) + table if rows else ""
     sensors = (
         "The uncertainty of current and supply is that of the board's sensors, which this program does not know: enter "
         "the instruments' calibration. No expanded uncertainty is claimed."
     )
-    table = page.table(["speed", "at", "resolution"], rows, numbers=(1, 2)) if rows else ""
-    return "<h3>Uncertainty</h3>" + page.paragraph(single + sensors if rows else sensors) + table
+    counts = "".join(page.paragraph(text) for text in _by_counts(facts))
+    return "<h3>Uncertainty</h3>" + counts + table + page.paragraph(sensors)
+
+
+def _by_counts(facts: Facts) -> list[str]:
+    """What one count of each encoder comes to, and where it sits."""
+    texts = []
+    for motor in () if facts.bench is None else facts.bench.motors:
+        if motor.encoder is None:
+            texts.append(f"{motor.name} has no encoder: no position and no speed of it was measured.")
+            continue
+        text = f"One count of {motor.name} is {360 / float(motor.counts_per_turn):.3g} deg of the output shaft"
+        if motor.encoder.on_motor_shaft:
+            text += ", by the ratio of the gear: its play and wind-up are not seen by the encoder on the motor's shaft"
+        texts.append(text + ".")
+    return texts
 
 
 def interruptions(facts: Facts, digest: Digest, entries: Mapping[str, str]) -> str:
@@ -278,7 +324,11 @@ def interruptions(facts: Facts, digest: Digest, entries: Mapping[str, str]) -> s
         rows.append([page.short(entry.get("resumed_utc")), page.short(f"interruption {number}"), page.text(text)])
     for kind, name in _INTERRUPTIONS.items():
         shown = facts.of(kind)[:50]
-        rows += [[page.short(event.get("utc")), page.short(name), page.text(_event_text(event))] for event in shown]
+        texts = [_trip_text(facts, event) if kind == "tripped" else _event_text(event) for event in shown]
+        rows += [
+            [page.short(event.get("utc")), page.short(name), page.text(text)]
+            for event, text in zip(shown, texts, strict=True)
+        ]
         more = facts.counts[kind] - len(shown)
         if more > 0:
             rows.append([page.short(shown[-1].get("utc")), page.short(name), f"and {more} more after that"])
@@ -289,7 +339,7 @@ def interruptions(facts: Facts, digest: Digest, entries: Mapping[str, str]) -> s
         ("remarks of the plan", "; ".join(map(str, remarks)) or "none"),
         ("all steps carried out", {True: "yes", False: "NO", None: "not written down"}[facts.carried_out]),
         ("parts of the run", str(len(facts.parts))),
-        ("stop at the end", _stop_text(facts)),
+        ("stop at the end", stop_text(facts)),
         ("wall clock against the monotonic one", _wall_text(facts)),
     ]
     if digest.breaks:
@@ -316,8 +366,31 @@ _HEAD_KEYS = ("tick", "time_s", "utc", "kind")
 
 def _event_text(event: Document) -> str:
     said = [_said(key, value) for key, value in event.items() if key not in _HEAD_KEYS and value not in ("", None)]
-    at = f"at {event['time_s']} s: " if isinstance(event.get("time_s"), int | float) else ""
-    return at + ", ".join(said)
+    return _at(event) + ", ".join(said)
+
+
+def _at(event: Document) -> str:
+    return f"at {event['time_s']} s: " if isinstance(event.get("time_s"), int | float) else ""
+
+
+def _trip_text(facts: Facts, event: Document) -> str:
+    """A trip as the run's last sentence tells one; without the bench file's copy by its fields."""
+    if facts.bench is None:
+        return _event_text(event)
+    try:
+        trip = Tripped(
+            tick=event.get("tick"),
+            host_s=0.0,
+            trip=str(event["trip"]),
+            index=int(event["index"]),
+            value=int(event["value"]),
+            bound=int(event["bound"]),
+            learned=Learned.NOTICE,
+        )
+        text = explain_trip(trip, Rig.of(facts.bench, tick_us=facts.tick_us))
+    except (FileError, KeyError, TypeError, ValueError):
+        return _event_text(event)
+    return _at(event) + text + ("; the run was gone on with" if facts.was_outlived(event) else "")
 
 
 def _said(key: str, value: object) -> str:
@@ -328,42 +401,9 @@ def _said(key: str, value: object) -> str:
     return f"{key.replace('_', ' ')} {shown}"
 
 
-def _stop_text(facts: Facts) -> str:
-    confirmed = (facts.manifest.get("results") or {}).get("stop_confirmed")
-    if confirmed is None:
-        return "not known"
-    return "outputs off, confirmed" if confirmed else "NOT CONFIRMED that the outputs were off"
-
-
 def _wall_text(facts: Facts) -> str:
     moved = (facts.manifest.get("clocks") or {}).get("wall_moved_s")
-    return "not known" if moved is None else f"moved by {moved + 0.0:.3f} s"
-
-
-def account(facts: Facts, audit: Audit) -> str:
-    """Where every sample is, checked against the rows when the report was made."""
-    found = facts.manifest.get("samples") or {}
-    names = (
-        *("expected", "received", "lost", "written", "thinned", "unwritten"),
-        *("recovered", "duplicates", "strange_lines"),
-    )
-    pairs: list[tuple[str, object]] = [(name.replace("_", " "), str(found[name])) for name in names if name in found]
-    pairs.append(("rows in the file", str(audit.rows)))
-    pairs.append(("confirmed by the board", "yes, for every logging" if found.get("complete") else "no"))
-    statements = audit.statements or (f"{whole_of(found)}, and no file was changed.",)
-    thinned = said_of_thinning(facts)
-    statements = (thinned, *statements) if thinned else statements
-    gaps = [
-        [str(gap.get("first_tick")), str(gap.get("count")), str(gap.get("period_ticks")), page.text(gap.get("reason"))]
-        for gap in (found.get("gaps") or [])[:ROWS_MAX]
-    ]
-    table = page.table(["lost from tick", "samples", "every", "why"], gaps, numbers=(0, 1, 2)) if gaps else ""
-    files = [
-        [page.text(entry.get("file")), str(entry.get("lines")), f"<code>{page.text(entry.get('sha256'))}</code>"]
-        for entry in facts.manifest.get("files") or []
-    ]
-    hashes = page.table(["file", "lines", "SHA-256"], files, numbers=(1,)) if files else ""
-    return page.facts(pairs) + "".join(page.paragraph(text) for text in statements) + table + hashes
+    return NOT_KNOWN if moved is None else f"moved by {round(moved, 3) + 0.0:.3f} s"  # + 0.0 takes the sign off a zero
 
 
 def trend_findings(seen: Seen, rules: Sequence[WearRules]) -> str:
@@ -373,7 +413,9 @@ def trend_findings(seen: Seen, rules: Sequence[WearRules]) -> str:
     lines = [[page.text(line)] for each in rules for line in each.lines()]
     rule = page.table(["looked for"], lines) + page.paragraph(NO_STANDARD, kind="note")
     told = sorted(seen.findings, key=lambda pair: -pair[1].level)
-    rows = [[f"{finding.turn} {finding.cycle}", page.text(f"{prefix}{finding}")] for prefix, finding in told]
+    rows = [
+        [page.short(f"{finding.turn} {finding.cycle}"), page.text(f"{prefix}{finding}")] for prefix, finding in told
+    ]
     waiting = page.paragraph(_still_waiting(seen, rules), kind="note") if seen.waiting or not seen.judged else ""
     if rows:
         return page.table(["at", "found"], rows) + waiting + rule
@@ -388,68 +430,16 @@ def _still_waiting(seen: Seen, rules: Sequence[WearRules]) -> str:
     return f"{which}: that takes more than {' or '.join(dict.fromkeys(needed))}."
 
 
-def protections(facts: Facts) -> str:
-    """What the bench file declares, and what the board was shown to have in force."""
-    bench = facts.bench
-    declared: list[tuple[str, object]] = []
-    if bench is not None:
-        safety = bench.safety
-        declared = [
-            ("power cut", safety.power_cut),
-            ("fuse", f"{safety.fuse_a:g} A" if safety.fuse_a else ""),
-            ("guard", safety.guard),
-            ("who answers for the rig", safety.contact),
-        ]
-    text = "Declared by people in the bench file; this program cannot check them."
-    limits = "The software stop is not an emergency stop and not a safety function."
-    return (
-        "<h3>Declared</h3>"
-        + page.paragraph(f"{text} {limits}")
-        + page.facts(declared)
-        + "<h3>In force on the board</h3>"
-        + page.facts(_in_force(facts))
-        + _limits_table(facts)
-    )
-
-
-def _in_force(facts: Facts) -> list[tuple[str, object]]:
-    opened, armed = facts.of("opened"), facts.of("armed")
-    told = str(opened[-1].get("limits_digest")) if opened else ""
-    table = facts.limits
-    own = LimitTable(table).digest if table else ""
-    same = "not known"
-    if told and own:
-        same = f"yes: {told}" if told == own else f"NO: the board has {told}, the bench file comes to {own}"
-    return [
-        ("limits of the board are those of the bench file (digest)", same),
-        ("armed", f"{'once' if len(armed) == 1 else f'{len(armed)} times'}, under that digest" if armed else "never"),
-        ("lease: the board stops by itself after", f"{armed[-1].get('lease_ms')} ms of silence" if armed else ""),
-        ("trips in this run", str(facts.counts["tripped"])),
-        ("stop confirmed by measurement", _stop_text(facts)),
-    ]
-
-
-def _limits_table(facts: Facts) -> str:
-    rows = []
-    for (item, index), value in facts.limits.items():
-        limit = LIMITS[item]
-        whose = "board"
-        if limit.per is Per.AXIS:
-            whose = facts.motor_on(index)
-        elif limit.per is Per.SERVO:
-            whose = facts.servos[index] if index < len(facts.servos) else f"servo {index}"
-        off = item in ZERO_IS_OFF and value == 0
-        state = "off" if off else ("trip" if item in TRIP_LIMITS else "limit")
-        rows.append([page.text(whose), f"<code>{page.text(item)}</code>", str(value), state])
-    return page.table(["whose", "limit (protocol units)", "value", ""], rows, numbers=(2,)) if rows else ""
-
-
-def clauses(entries: Mapping[str, str]) -> str:
+def clauses(entries: Mapping[str, str], facts: Sequence[Facts]) -> str:
     """The list of the clause, with where each is found here."""
-    rows = [
-        [letter, page.text(what), page.text(where if not key or entries.get(key) else f"{where}: not entered")]
-        for letter, what, where, key in _CLAUSES
-    ]
+    told = dict(entries)
+    if all(each.bench is not None and each.bench.safety.place for each in facts):
+        told["place"] = "in the bench file"
+    rows = []
+    for letter, what, where, keys in _CLAUSES:
+        missing = [key for key in keys if not told.get(key)]
+        lacking = f"{where}: not entered" + (f" ({', '.join(missing)})" if len(keys) > 1 else "")
+        rows.append([letter, page.text(what), page.text(lacking if missing else where)])
     note = (
         "The list of ISO/IEC 17025:2017, 7.8.2.1, with letters and wording from memory, to see at a glance what a "
         "complete report still lacks. This report claims no accreditation."
@@ -458,20 +448,20 @@ def clauses(entries: Mapping[str, str]) -> str:
 
 
 _CLAUSES = (
-    ("a", "title", "top of the report", ""),
-    ("b", "name and address of the laboratory", "Item, rig and environment", "lab"),
-    ("c", "place of the work", "Item, rig and environment", ""),
-    ("d", "identification on every part, and a clear end", "beside each heading, foot of each page, end", ""),
-    ("e", "customer", "Item, rig and environment", "customer"),
-    ("f", "method", "Method", ""),
-    ("g", "item, its identification and condition", "Item, rig and environment", "condition"),
-    ("h", "date of receipt", "Item, rig and environment", "received"),
-    ("i", "dates of the work", "Method", ""),
-    ("j", "date of issue", "top of the report", ""),
-    ("k", "sampling plan", "does not apply: the items given were tested", ""),
-    ("l", "the results relate only to the items tested", "end of the report", ""),
-    ("m", "results with their units", "Results", ""),
-    ("n", "additions, deviations, exclusions", "Deviations and interruptions", "deviations"),
-    ("o", "who authorises the report", "not part of a run", "authorised"),
-    ("p", "results from others", "none", ""),
+    ("a", "title", "top of the report", ()),
+    ("b", "name and address of the laboratory", "Item, rig and environment", ("lab",)),
+    ("c", "place of the work", "Item, rig and environment", ("place",)),
+    ("d", "identification on every part, and a clear end", "beside each heading, foot of each page, end", ()),
+    ("e", "customer", "Item, rig and environment", ("customer",)),
+    ("f", "method", "Method", ()),
+    ("g", "item, its identification and condition", "Item, rig and environment", ("item", "condition")),
+    ("h", "date of receipt", "Item, rig and environment", ("received",)),
+    ("i", "dates of the work", "Method", ()),
+    ("j", "date of issue", "top of the report", ()),
+    ("k", "sampling plan", "does not apply: the items given were tested", ()),
+    ("l", "the results relate only to the items tested", "end of the report", ()),
+    ("m", "results with their units", "Results", ()),
+    ("n", "additions, deviations, exclusions", "Deviations and interruptions", ("deviations",)),
+    ("o", "who authorises the report", "end of the report", ("authorised",)),
+    ("p", "results from others", "none", ()),
 )

@@ -334,6 +334,7 @@ class _Run:
             sentence=end.sentence + self._beside(),
             place=end.place,
             carried_out=end.carried_out,
+            start_tick=executive.start or None,
             held=tally.held,
             failed=tally.failed,
             failures=tuple(tally.failures),

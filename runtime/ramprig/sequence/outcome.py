@@ -128,12 +128,12 @@ class Counted:
 class Outcome:
     """The end of a run.
 
-    `sentence` says why it ended, `place` is the step that it ended at or the first expectation that failed, None where
-    no step had begun. `carried_out` is whether every step was, whatever came of it. `stop_confirmed` tells whether the
-    device and its measurements say that all is off. `trip` is the word of the trip that ended it, `restarted` whether a
-    restart of the device did. `cycles` are counted over all parts of the run, None where the sequence has none.
-    `slept_s` are the times for which the host was found to have slept, `away_s` the longest for which it did not look
-    after the board, whatever kept it.
+    `sentence` says why it ended; 'into the run' in it counts from `start_tick`, where the first step began. `place` is
+    the step that it ended at or the first expectation that failed, None where no step had begun. `carried_out` is
+    whether every step was, whatever came of it. `stop_confirmed` tells whether the device and its measurements say that
+    all is off. `trip` is the word of the trip that ended it, `restarted` whether a restart of the device did. `cycles`
+    are counted over all parts of the run, None where the sequence has none. `slept_s` are the times for which the host
+    was found to have slept, `away_s` the longest for which it did not look after the board, whatever kept it.
     """
 
     verdict: Verdict
@@ -149,6 +149,7 @@ class Outcome:
     trip: str = ""
     restarted: bool = False
     carried_out: bool = False
+    start_tick: int | None = None
     cycles: Counted | None = None
     slept_s: tuple[float, ...] = ()
     away_s: float = 0.0

@@ -395,6 +395,7 @@ def _end_of(session: Session, plan: Plan, outcome: Outcome, clock: Clock) -> Run
     results: dict[str, Json] = {
         "exit_code": outcome.exit_code,
         "carried_out": outcome.carried_out,
+        "steps_from_tick": outcome.start_tick,
         "place": None if outcome.place is None else str(outcome.place),
         "expectations_held": outcome.held,
         "expectations_failed": outcome.failed,
