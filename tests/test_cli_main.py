@@ -14,10 +14,11 @@ from pathlib import Path
 import pytest
 
 from ramprig import errors
+from ramprig.cautions import CAUTIONS, HEADING
 from ramprig.cli import main
 from ramprig.cli import main as main_function
 from ramprig.cli.files import values_of
-from ramprig.cli.main import COMMANDS, EXIT_BUG, parser_for
+from ramprig.cli.main import COMMANDS, EXIT_BUG, MOVING, parser_for
 from ramprig.cli.progress import LINE_EVERY_S, PIECES_MAX, REWRITE_EVERY_S, Progress
 
 HEAVY = ("numpy", "yaml", "serial", "prompt_toolkit", "ramprig.session", "ramprig.mock", "ramprig.bench")
@@ -227,3 +228,17 @@ def test_a_terminal_that_takes_no_more_holds_up_nothing_and_gets_the_lines_when_
         *(f"line {n}" for n in range(2, PIECES_MAX + 1)),
         "(3 lines were left out: the terminal took no more)",
     ]
+
+
+@pytest.mark.parametrize("columns", [80, 100, 120])
+@pytest.mark.parametrize("name", ["", *MOVING])
+def test_the_help_of_what_moves_ends_with_the_cautions_and_fits_the_terminal(
+    capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch, name: str, columns: int
+) -> None:
+    monkeypatch.setenv("COLUMNS", str(columns))
+    with pytest.raises(SystemExit):
+        main([*([name] if name else []), "--help"])
+    said = capsys.readouterr().out
+    assert [line for line in said.splitlines() if len(line) > columns] == []
+    _, _, cautions = said.partition(f"\n{HEADING}:\n")
+    assert " ".join(cautions.split()) == "- " + " - ".join(CAUTIONS)

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import argparse
 import json
-import textwrap
 from pathlib import Path
 
 from ramprig.cli.progress import Progress
@@ -30,11 +29,10 @@ def declare(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--full", action="store_true", help="simulate a periodic run in full, not reduced")
     parser.add_argument("--on", choices=("core", "mock"), help="the firmware core in C, or the mock in Python")
     parser.add_argument("--json", action="store_true", help="print the forecast as JSON")
-    parser.epilog = textwrap.fill(
+    parser.epilog = (
         "Figures come from the bench file's `measured:` part (`ramprig measure constants --save`), else from its model "
         "with assumed uncertainties, which is said. Nothing is opened and nothing moves. Exits with 1 where a limit is "
-        "too tight, or more than one draw in twenty trips or fails. " + NOT_PROVED,
-        110,
+        "too tight, or more than one draw in twenty trips or fails. " + NOT_PROVED
     )
 
 

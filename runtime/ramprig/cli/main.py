@@ -13,6 +13,8 @@ from collections.abc import Sequence
 from typing import Protocol, cast
 
 from ramprig import __version__
+from ramprig.cautions import cautions_lines
+from ramprig.cli.helptext import WIDTH_MAX, HelpText
 from ramprig.cli.say import tell
 from ramprig.errors import Bug, RamprigError
 
@@ -36,6 +38,9 @@ COMMANDS = {
     "schema": "print the JSON Schema of bench or sequence files, for editors",
 }
 """Every command is a module of this room by the same name."""
+
+MOVING = ("run", "resume", "shell", "measure", "accept")
+"""Commands that move motors: their help ends with the cautions."""
 
 EXIT_CODES = """exit codes:
   0   passed
@@ -73,17 +78,26 @@ def parser_for(wanted: str | None) -> argparse.ArgumentParser:
     parser = argparse.ArgumentParser(
         prog="ramprig",
         description="Serial console and scripting runtime for motor benches. `ramprig COMMAND --help` tells more.",
-        epilog=EXIT_CODES,
-        formatter_class=argparse.RawDescriptionHelpFormatter,
+        epilog=f"{EXIT_CODES}\n{_cautions()}",
+        formatter_class=HelpText,
     )
     parser.add_argument("--version", action="version", version=f"ramprig {__version__}")
     commands = parser.add_subparsers(dest="command", metavar="COMMAND", required=True)
     for name, summary in COMMANDS.items():
         command = commands.add_parser(name, help=summary, description=f"{summary[0].upper()}{summary[1:]}.")
-        command.formatter_class = argparse.RawDescriptionHelpFormatter
+        command.formatter_class = HelpText
         if name == wanted:
             command_named(name).declare(command)
+            if name in MOVING:
+                command.epilog = f"{command.epilog or ''}\n\n{_cautions()}"
     return parser
+
+
+def _cautions() -> str:
+    """The cautions, as wide as the terminal."""
+    import shutil
+
+    return "\n".join(cautions_lines(min(WIDTH_MAX, shutil.get_terminal_size().columns - 2)))
 
 
 def main(arguments: Sequence[str] | None = None) -> int:

@@ -8,7 +8,9 @@ from pathlib import Path
 
 from ramprig.cli.say import say
 
-EPILOG = """As in: ramprig note runs/20260301T203000Z-vent-endurance-3fa9c2 "brush length 4.2 mm" --photo brush.jpg
+EPILOG = """As in:
+  ramprig note runs/20260301T203000Z-vent-endurance-3fa9c2 "brush length 4.2 mm" --photo brush.jpg
+
 The note is kept with the time of day among the run's events, a photo as a copy with its hash."""
 
 

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import argparse
-import textwrap
 
 from ramprig.cli.running import NOT_PROVED, Way, add_run_arguments, carry_out_run, mock_url
 from ramprig.cli.say import tell
@@ -20,7 +19,7 @@ def declare(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--on", choices=("core", "mock"), help="the firmware core in C, or the mock in Python (default: core if it can)"
     )
-    parser.epilog = textwrap.fill(NOT_PROVED, 110)
+    parser.epilog = NOT_PROVED
 
 
 def carry_out(args: argparse.Namespace) -> int:
