@@ -15,7 +15,7 @@ ENTRY = re.compile(r" +\S+ {2,}(?=\S)")
 
 
 class HelpText(argparse.HelpFormatter):
-    """Fills each paragraph of a description or an epilog by itself; where it has indented lines, each line by itself."""
+    """Fills each paragraph of a description or an epilog by itself; where it has indented lines, each of them."""
 
     def _fill_text(self, text: str, width: int, indent: str) -> str:
         paragraphs = (self._paragraph(part, width, indent) for part in text.strip("\n").split("\n\n"))
