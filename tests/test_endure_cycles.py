@@ -125,6 +125,12 @@ def test_a_rest_that_is_polled_without_looking_round_changes_nothing(
     assert samples == samples_all
 
 
+def test_a_cycle_fails_by_any_of_its_confirmations_whatever_the_later_ones_find(tmp_path: Path) -> None:
+    far = "\n      - confirm: {position of: vent, is: at least 9000 deg}"
+    run = rehearse(tmp_path, cycle("times: 1", DRIVE.replace("\n      - confirm", far + "\n      - confirm", 1)))
+    assert [(event.outcome, len(event.found), event.expectations_held) for event in done(run)] == [("failed", 2, 1)]
+
+
 def test_cycles_are_confirmed_rested_and_checked(tmp_path: Path) -> None:
     keys = "name: open\n    times: 4\n    rest: 2 s\n    check every: 2\n    check: [{hold: 500 ms}]"
     run = rehearse(tmp_path, cycle(keys))

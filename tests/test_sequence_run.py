@@ -212,6 +212,7 @@ def test_a_wait_goes_on_when_it_comes_true_and_ends_the_run_when_not(tmp_path: P
     assert run.outcome.verdict is Verdict.FAILED
     assert "wait until speed of vent" in run.outcome.sentence
     assert "after 1.5 s" in run.outcome.sentence
+    assert 1.9 < run.outcome.elapsed_s < 2.3
     assert run.outcome.place is not None
     assert run.outcome.place.line == 5
     assert run.outcome.stop_confirmed

@@ -145,6 +145,18 @@ def test_a_restart_whose_boot_notice_was_lost_is_found_by_its_ticks() -> None:
     assert restarts[0].seen_by != "its notice"
 
 
+def test_another_number_of_starts_is_a_restart_though_the_ticks_fit() -> None:
+    """As after a restart within moments of the opening, whose notice was lost."""
+    rig = Rig()
+    controller = rig.device.controller
+    assert controller is not None
+    controller.boot += 1
+    rig.session._core.suspect("what a line says")
+    rig.pump(0.5)
+    assert [(event.boot_after, event.seen_by) for event in rig.of(Restarted)] == [(2, "what a line says")]
+    assert not rig.session.valid
+
+
 def test_a_brown_out_on_start_is_a_restart_with_its_cause() -> None:
     rig = Rig(faults=("brownout_on_start",))
     rig.session.arm()

@@ -117,6 +117,21 @@ def test_a_current_that_does_not_fall_is_not_confirmed() -> None:
     assert report.missing == ("the motor current has not fallen",)
 
 
+def test_a_current_that_falls_and_rises_again_is_not_confirmed(monkeypatch: pytest.MonkeyPatch) -> None:
+    rig = running(Rig())
+    begin_s, read = rig.now, rig.session._core.pump._read_until
+
+    def rising(until_s: float) -> bytes:
+        if rig.now > begin_s + 0.08 and not rig.device.faults.on():
+            rig.device.faults.set("current_offset", 700.0)
+        return read(until_s)
+
+    monkeypatch.setattr(rig.session._core.pump, "_read_until", rising)
+    report = rig.session.stop(0, run_down_s=1.0)
+    assert report.still_s is not None
+    assert report.missing == ("the motor current has not fallen",)
+
+
 def test_a_lost_stop_is_sent_again() -> None:
     rig = running(Rig(wrap=lambda port: FaultyPort(port, seed=4)))
     port = rig.port
