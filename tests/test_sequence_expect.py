@@ -174,6 +174,15 @@ def test_settling_is_the_time_from_the_ramps_end_to_the_last_speed_outside() -> 
     assert find(ring, wanted, 4000, Bearings(ramp_ends={"vent": 3000})).value == 0.0
 
 
+def test_settling_is_not_judged_without_its_samples() -> None:
+    wanted = measure(What.SETTLING, "at most 1 s", settle="31.25 rpm +- 5 %")
+    bearings = Bearings(ramp_ends={"vent": 2000})
+    found = find(ring_of(steady(31.25), lost=slice(120, 160)), wanted, 2900, bearings)
+    assert (found.holds, found.value) == (False, None)
+    assert found.why == "only 50 of 90 samples since the ramp's end are there"
+    assert find(ring_of(steady(31.25), lost=slice(120, 128)), wanted, 2900, bearings).holds
+
+
 def test_a_shaft_stands_still_when_its_counts_stay_in_the_band_for_the_time() -> None:
     axis = Rig.of(small_bench()).axes["vent"]
     assert (axis.still_counts, axis.still_ticks) == (2, 50)
