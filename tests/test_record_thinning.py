@@ -16,7 +16,7 @@ from ramprig.errors import RecordError
 from ramprig.record.keeping import AROUND_DEFAULT, AROUND_TEXTS, Around, Keeping, Thinning
 from ramprig.record.reading import audit, read_events, read_manifest
 from ramprig.record.recorder import Recorder
-from ramprig.record.rows import Rows
+from ramprig.record.rows import Cells, Rows
 from ramprig.record.thinning import FullRateBegun, FullRateEnded, Thinner
 from ramprig.record.volumes import VolumeLimits
 from ramprig.sequence.happened import CycleBegun, Marked
@@ -288,6 +288,13 @@ def test_the_ring_is_bounded(monkeypatch: pytest.MonkeyPatch) -> None:
         assert made._ring_rows <= 100
     assert kept == list(range(0, 1800, 20))
     assert made.thinned_rows + len(kept) + made._ring_rows == 1000
+
+
+def test_rows_that_wait_take_no_more_memory_than_their_text() -> None:
+    made, _, _ = thinner()
+    cells = {"a": Cells(np.zeros(1, np.int64), 0)}
+    made.take(Rows(np.array([4], np.int64), b"4\r\n", 2, cells))
+    assert [rows.cells for rows in made._ring] == [{}]
 
 
 def test_an_event_before_the_first_row_keeps_the_first_rows() -> None:

@@ -5,6 +5,7 @@ from __future__ import annotations
 
 import errno
 import os
+import sys
 import threading
 from collections.abc import Callable
 from pathlib import Path
@@ -13,7 +14,7 @@ import pytest
 
 from ramprig.errors import RecordError
 from ramprig.record import recorder as recorder_module
-from ramprig.record.appendfile import AppendFile, Reserve
+from ramprig.record.appendfile import REPLACE_TRIES, AppendFile, Reserve, replace_file
 from ramprig.record.folder import RunDescription, RunFolder
 from ramprig.record.keeping import Keeping
 from ramprig.record.manifest import RunEnd
@@ -122,6 +123,53 @@ def test_a_reserve_that_does_not_fit_leaves_nothing_behind(tmp_path: Path, monke
     with pytest.raises(FileExistsError):
         reserve.take(5000)
     assert (tmp_path / "reserve.bin").read_bytes() == b"another run's"
+
+
+@pytest.mark.skipif(sys.platform == "win32", reason="locks are POSIX")
+def test_a_file_system_without_locks_keeps_nobody_from_going_on(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    AppendFile(tmp_path / "events.jsonl").close()
+
+    def refuse(code: int) -> Callable[..., None]:
+        def flock(*_: object) -> None:
+            raise OSError(code, os.strerror(code))
+
+        return flock
+
+    monkeypatch.setattr("fcntl.flock", refuse(errno.ENOLCK))
+    file, _ = AppendFile.reopen(tmp_path / "events.jsonl")
+    file.close()
+    monkeypatch.setattr("fcntl.flock", refuse(errno.EWOULDBLOCK))
+    with pytest.raises(BlockingIOError, match="another program is writing it"):
+        AppendFile.reopen(tmp_path / "events.jsonl")
+
+
+@pytest.mark.parametrize("hindered", [0, 3, REPLACE_TRIES])
+def test_a_file_that_is_being_read_is_replaced_a_little_later(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, hindered: int
+) -> None:
+    path = tmp_path / "run.json"
+    replace_file(path, b"old")
+    waited: list[float] = []
+    real = os.replace
+
+    def replace(part: Path, to: Path) -> None:
+        if len(waited) < hindered:
+            raise PermissionError(errno.EACCES, os.strerror(errno.EACCES))
+        real(part, to)
+
+    monkeypatch.setattr("ramprig.record.appendfile.os.replace", replace)
+    monkeypatch.setattr("ramprig.record.appendfile.READERS_HINDER", True)
+    monkeypatch.setattr("ramprig.record.appendfile.time.sleep", waited.append)
+    if hindered < REPLACE_TRIES:
+        replace_file(path, b"new")
+        assert (path.read_bytes(), len(waited)) == (b"new", hindered)
+    else:
+        with pytest.raises(PermissionError):
+            replace_file(path, b"new")
+        assert (path.read_bytes(), len(waited)) == (b"old", REPLACE_TRIES - 1)
+    assert [found.name for found in tmp_path.iterdir()] == ["run.json"]
 
 
 # ---- the writer -----------------------------------------------------------------------------------------------------

@@ -17,7 +17,7 @@ from hypothesis import strategies as st
 
 from ramprig.errors import RecordError
 from ramprig.record.appendfile import AppendFile, Reserve, replace_file
-from ramprig.record.space import MIB, SpacePolicy, SpaceWatch, check_space
+from ramprig.record.space import MIB, SpacePolicy, SpaceWatch, check_space, standing
 from ramprig.record.writer import DiskWriter, Trouble, TroubleKind, trouble_of
 
 WAIT_S = 20.0  # no test waits this long unless it fails
@@ -346,6 +346,11 @@ def test_a_run_that_would_be_stopped_at_once_is_not_begun(tmp_path: Path) -> Non
         check_space(tmp_path / "runs" / "of" / "the night", free=free)
     assert asked == [tmp_path]  # the nearest folder that is there has the disk
     check_space(tmp_path, free=lambda path: 32 * MIB)
+
+
+def test_a_drive_that_is_not_there_is_not_looked_for_for_ever(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr("ramprig.record.space.Path.exists", lambda path: False)
+    assert standing(tmp_path / "runs") == Path(tmp_path.anchor)
 
 
 def test_a_folder_that_is_gone_is_a_disk_error(tmp_path: Path) -> None:

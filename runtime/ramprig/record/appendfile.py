@@ -13,6 +13,7 @@ import errno
 import hashlib
 import os
 import sys
+import time
 from collections.abc import Iterator
 from dataclasses import dataclass
 from pathlib import Path
@@ -22,6 +23,11 @@ RESERVE_BYTES = 256 * 1024
 written."""
 
 CHUNK_BYTES = 1024 * 1024
+READERS_HINDER = sys.platform == "win32"
+"""Windows does not replace a file that somebody has open, such as `run.json` while it is read."""
+REPLACE_TRIES = 20
+REPLACE_WAIT_S = 0.05
+"""So long in all, a second, a reader may take."""
 
 _APPEND = os.O_WRONLY | os.O_APPEND | getattr(os, "O_BINARY", 0) | getattr(os, "O_CLOEXEC", 0)
 
@@ -74,7 +80,7 @@ class AppendFile:
     def hold_alone(self) -> bool:
         """Keep other programs from holding this file too, until it is closed; False where one does (POSIX only).
 
-        Readers are not hindered.
+        Readers are not hindered. On a file system that knows no locks nobody is kept out.
         """
         if sys.platform == "win32":
             return True
@@ -82,8 +88,8 @@ class AppendFile:
 
         try:
             fcntl.flock(self._handle, fcntl.LOCK_EX | fcntl.LOCK_NB)
-        except OSError:
-            return False
+        except OSError as error:
+            return error.errno not in (errno.EWOULDBLOCK, errno.EAGAIN, errno.EACCES)
         return True
 
     @property
@@ -214,7 +220,7 @@ def write_new(path: Path, data: bytes) -> None:
 def replace_file(path: Path, data: bytes) -> None:
     """Give `path` the contents `data` in one step: a reader, or a crash, sees the old or the new, never a part.
 
-    Raises OSError, and then the old contents stand.
+    Raises OSError, and then the old contents stand, unless it was the folder alone that could not be synced.
     """
     part = path.with_name(path.name + ".part")
     try:
@@ -222,12 +228,26 @@ def replace_file(path: Path, data: bytes) -> None:
             file.write(data)
             file.flush()
             os.fsync(file.fileno())
-        os.replace(part, path)
+        _put_in_place(part, path)
     except OSError:
         with contextlib.suppress(OSError):
             part.unlink()
         raise
     sync_folder(path.parent)
+
+
+def _put_in_place(part: Path, path: Path) -> None:
+    tries = REPLACE_TRIES if READERS_HINDER else 1
+    while True:
+        tries -= 1
+        try:
+            os.replace(part, path)
+        except PermissionError:
+            if tries <= 0:
+                raise
+            time.sleep(REPLACE_WAIT_S)
+        else:
+            return
 
 
 @dataclass(slots=True)

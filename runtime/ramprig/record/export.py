@@ -198,8 +198,8 @@ def _sheet_rows(paths: Sequence[Path], mark: Mark) -> Iterator[str]:
             if path is paths[0]:
                 yield header.replace(",", ";" if mark is Mark.COMMA else "\t")
             for line in file:
-                if not line.endswith("\n"):
-                    break  # a torn last row
+                if not line.endswith("\n") or "\0" in line:
+                    break  # a torn last row, or what a loss of power left
                 if after is not None and _tick(line) <= after:
                     continue  # a held row that a volume has
                 yield line.replace(",", ";").replace(".", ",") if mark is Mark.COMMA else line.replace(",", "\t")

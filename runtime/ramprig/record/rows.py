@@ -112,6 +112,10 @@ class Rows:
         data = b"".join(self.data[edges[row] : edges[row + 1]] for row in np.flatnonzero(kept).tolist())
         return Rows(self.ticks[kept], data, self.period_ticks, {})
 
+    def bare(self) -> Rows:
+        """The rows without their cells, which take as much memory again."""
+        return Rows(self.ticks, self.data, self.period_ticks, {})
+
     def _edges(self) -> list[int]:
         """Where each row begins in the text, and where the last one ends."""
         edges: list[int] = (np.flatnonzero(np.frombuffer(self.data, np.uint8) == ord("\n")) + 1).tolist()

@@ -8,8 +8,7 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 
-from ramprig.errors import RecordError
-
+from ..errors import RecordError
 from .writer import Trouble, TroubleKind
 
 MIB = 1024 * 1024
@@ -34,9 +33,12 @@ class SpacePolicy:
 
 
 def standing(path: Path) -> Path:
-    """The folder, or the nearest above it that is there already: it has the disk on which it will be made."""
+    """The folder, or the nearest above it that is there already: it has the disk on which it will be made.
+
+    Where there is none (a drive that is not there), the topmost.
+    """
     path = path.absolute()
-    while not path.exists():
+    while not path.exists() and path != path.parent:
         path = path.parent
     return path
 

@@ -81,7 +81,7 @@ class Thinner:
                 self._tell(FullRateEnded(tick=self._until))
                 self._until = None
         if len(rows):
-            self._ring.append(rows)
+            self._ring.append(rows.bare())
             self._ring_rows += len(rows)
             self._decide(self._newest - self._before_ticks)
             while self._ring_rows > RING_ROWS_MAX:
