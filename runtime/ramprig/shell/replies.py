@@ -41,7 +41,7 @@ def limit_lines(bench: Bench, limits: LimitTable, tick_s: float, name: str) -> l
         owner = limit_owner(bench, limit.per, index)
         if name in ("", owner):
             shown = limit_shown(value, limit.unit, tick_s)
-            lines.append(f"{owner:10} {item:15} {shown:14} {limit.text}")
+            lines.append(f"{owner:10} {item:15} {shown:20} {limit.text}")
     return lines
 
 

@@ -45,6 +45,7 @@ from .stopkeys import StopKey
 from .taps import TappedInput
 from .words import read_line
 from .worker import Worker
+from .wrapping import wrapped
 
 REFRESH_S = 0.1
 """How often the status lines are drawn."""
@@ -297,7 +298,8 @@ class Screen:
         while True:
             waiting += self._outbox.take()
             if waiting and self.app.is_running and not self.app.is_done:
-                text = "".join(f"{line}\n" for line in waiting[:PRINT_MAX])
+                columns = self.app.output.get_size().columns
+                text = "".join(f"{wrapped(line, columns)}\n" for line in waiting[:PRINT_MAX])
                 del waiting[:PRINT_MAX]
                 await run_in_terminal(partial(self._write, text))
             await asyncio.sleep(PRINT_EVERY_S)

@@ -23,6 +23,7 @@ from .outbox import Outbox
 from .plain import Printer, run_plain
 from .stopkeys import StopKey
 from .worker import Worker
+from .wrapping import wrapped
 
 if TYPE_CHECKING:
     from prompt_toolkit.input.base import Input
@@ -144,6 +145,7 @@ class _Terminal:
         self._history_file = history_file
         self._received = received
         self._stop_key = StopKey(worker)
+        self._columns = NARROW
 
     def run(self, lines: TextIO, out: TextIO) -> int:
         """The exit code."""
@@ -153,7 +155,8 @@ class _Terminal:
             output = create_output(stdout=out)
         except Exception as error:  # a Windows console that is none: each version raises another one
             raise _NoConsole(str(error)) from error
-        for line in _first_screen(self._bench, min(100, output.get_size().columns)):
+        self._columns = output.get_size().columns
+        for line in _first_screen(self._bench, min(100, self._columns)):
             _print(out, line)
         self._worker.start()
         try:
@@ -215,7 +218,7 @@ class _Terminal:
             worker.join(LOOK_S)
             over = worker.ended
             for line in self._outbox.take():
-                _print(out, line)
+                _print(out, wrapped(line, self._columns))
             if over:
                 break
         _print(out, "left: all outputs are off" if worker.off_confirmed else "left: NOT CONFIRMED off; cut the power")

@@ -9,7 +9,7 @@ from ramprig.quantity import format_current, format_duration, format_duty, forma
 from ramprig.sequence.rig import Rig
 from ramprig.sequence.tripsay import explain_trip
 from ramprig.session import events as e
-from ramprig_link.words import LIMITS, Per
+from ramprig_link.words import LIMITS, SPEED_TICKS, Per
 
 TROUBLES_EVERY_S = 2.0
 """Troubles of the link are told together, at most this often."""
@@ -113,6 +113,8 @@ def limit_shown(value: int, unit: str, tick_s: float) -> str:
             return format_duration(value * tick_s)
         case "ns a tick":
             return f"{value / 1000 / tick_s:g} us/s"
+        case "counts in SPEED_TICKS":
+            return f"{value} counts in {format_duration(SPEED_TICKS * tick_s)}"
         case "sign":
             return {1: "counts rise", -1: "counts fall", 0: "no encoder"}.get(value, str(value))
     return f"{value} {unit}"
