@@ -15,8 +15,8 @@ _COLUMN = re.compile(r"\S {2,}(?=\S)")
 def wrapped(line: str, columns: int) -> str:
     """The line, broken at blanks into pieces of at most `columns` where it is longer.
 
-    The rest of a line with columns goes on under the last one that begins in its first two thirds. A word that is longer
-    than the terminal is wide stands as it is.
+    The rest of a line with columns goes on under the last one that begins in its first two thirds. A word that is
+    longer than the terminal is wide stands as it is.
     """
     columns = max(columns, COLUMNS_MIN)
     if len(line) <= columns:
