@@ -4,13 +4,12 @@ from __future__ import annotations
 
 import argparse
 import json
-import sys
-import threading
 from collections.abc import Callable
 from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+from ramprig.cli.asking import answered, confirmed
 from ramprig.cli.progress import Progress
 from ramprig.cli.running import RUNS, mock_url, on_terminal
 from ramprig.cli.say import say_surely, tell
@@ -32,6 +31,8 @@ WHAT = {
     "link": "round trip, latency grid, clock drift, byte errors with the motor off and on",
     "pwm": "ripple, resolution, audibility and dead-time error against the PWM frequency; reckoned, nothing moves",
 }
+REPEATS_MAX = 200
+"""Of a procedure, whose samples are all kept until its end."""
 OF_THE_MODEL = "A rehearsal measures the model that the bench file describes: it says nothing of the real bench."
 
 EPILOG = "\n".join(
@@ -40,7 +41,8 @@ EPILOG = "\n".join(
         *(f"  {name:<10} {text}" for name, text in WHAT.items()),
         "",
         "Each runs under limits of its own, none looser than the bench file's, and puts those back. It asks before it",
-        "arms. Exits with 1 where the bench is not as it should be, or the data do not carry a result.",
+        "arms, and without a terminal wants --yes. Exits with 1 where the bench is not as it should be, or the data do",
+        "not carry a result.",
     ]
 )
 
@@ -98,7 +100,7 @@ def carry_out(args: argparse.Namespace) -> int:
     procedure = procedure_of(args, bench)
     procedure.bench(bench)  # what the bench is not fit for is refused before a port is opened
     url = _url(args, bench)
-    if not args.yes and not args.rehearse and not url.startswith("mock:") and on_terminal():
+    if not args.yes and not args.rehearse and not url.startswith("mock:"):
         ask(procedure, bench, url)
     done = _measure(args, procedure, bench, url)
     show(done, as_json=args.json)
@@ -115,8 +117,8 @@ def carry_out(args: argparse.Namespace) -> int:
 
 def procedure_of(args: argparse.Namespace, bench: Bench) -> Procedure:
     """The procedure that is asked for. Raises UsageError for what it cannot be made from."""
-    if args.repeats is not None and args.repeats < 1:
-        raise UsageError(f"--repeats {args.repeats}: at least 1")
+    if args.repeats is not None and not 1 <= args.repeats <= REPEATS_MAX:
+        raise UsageError(f"--repeats {args.repeats}: 1 to {REPEATS_MAX}")
     repeats = {} if args.repeats is None else {"repeats": args.repeats}
     match args.what:
         case "wiring":
@@ -204,16 +206,18 @@ def _url(args: argparse.Namespace, bench: Bench) -> str:
 
 
 def ask(procedure: Procedure, bench: Bench, url: str) -> None:
-    """Show the cautions and what will move, and wait for the word `yes`. Raises StoppedByUser for any other."""
+    """Show the cautions and what will move, and wait for the word `yes`. Raises StoppedByUser for any other, UsageError
+    where nobody is at a terminal to be asked; does nothing where nothing moves."""
     from ramprig.cautions import cautions_lines
 
     moves = procedure.moves(bench)
     if not moves:
         return
+    if not on_terminal():
+        raise UsageError(f"nobody is at a terminal to be asked, and {moves}: say --yes where somebody watches over it")
     for line in [*cautions_lines(), "", f"port      {url}", moves]:
         tell(line)
-    tell("Type yes and ENTER to arm and measure; anything else leaves everything off.")
-    if sys.stdin.readline().strip().lower() != "yes":
+    if not confirmed("Type yes and ENTER to arm and measure; anything else leaves everything off."):
         raise StoppedByUser("Not measured: it was not confirmed. Nothing has moved.")
 
 
@@ -280,17 +284,6 @@ class Person:
             pump,
         )
         return {"y": True, "n": False}.get(answer[:1])
-
-
-def answered(question: str, pump: Callable[[float], None]) -> str:
-    """What is typed, in small letters; time goes on by `pump` while it is waited for."""
-    tell(question)
-    lines: list[str] = []
-    reader = threading.Thread(target=lambda: lines.append(sys.stdin.readline()), daemon=True)
-    reader.start()
-    while reader.is_alive():
-        pump(0.1)
-    return lines[0].strip().lower() if lines else ""
 
 
 def show(done: Measurement, *, as_json: bool) -> None:
