@@ -110,6 +110,8 @@ class Aftermath:
 
     def _end_tick(self, trail: Block | None) -> int | None:
         """The tick of the trip; readings from then on show the bench at rest."""
+        if any(isinstance(event, e.Restarted) for event in self._events):
+            return None  # the ticks begin anew with it; the session reads no more before it is opened anew
         ticks = [event.tick for event in self._events if isinstance(event, e.Tripped) and event.tick is not None]
         if ticks:
             return ticks[-1]

@@ -37,6 +37,8 @@ LOOK_ROUND_TRIPS = 10
 """On a slow link it is asked for once in so many round trips, so that the link is left for other things."""
 TRAIL_TRIES = 10
 """So often the trail is asked for after a trip; the board goes on recording for a while."""
+TRAIL_WAIT_S = 5.0
+"""Longest the end waits for a trail: TRAIL_TRIES on a link of which each answer takes long."""
 
 Reopener = Callable[[], Port]
 """Opens the port anew, after the link was lost."""
@@ -89,7 +91,7 @@ class Keeper:
         self._cautioned = False
         self._closing = False
         self._trail_tries = 0
-        self._unexplained: e.Tripped | None = None
+        self._unexplained: e.Tripped | e.Restarted | None = None
         self.likely: list[str] = []
         """What was said of the cause of the last trip that was seen to come."""
         self._looked_s = 0.0
@@ -153,17 +155,19 @@ class Keeper:
         if not self._lost and (self._state in ("armed", "stopping") or self._unconfirmed):
             self._stop(1)
         if self._trail_tries and not self._lost:
-            self._wait_for_trail()
+            self._wait_for_trail(session)
+        self._explain_restart()
         if self._log.open:
             self._end_log("the shell was left")
         self._closing = True
         session.close()
         return not (self._lost or self._unconfirmed)
 
-    def _wait_for_trail(self) -> None:
-        """The board records on for a moment after a trip; the log is to have that too."""
+    def _wait_for_trail(self, session: Session) -> None:
+        """The board records on for a moment after a trip; the log is to have that too. A restart has emptied it."""
+        until_s = self._clock.now() + TRAIL_WAIT_S
         try:
-            while self._trail_tries:
+            while self._trail_tries and session.valid and self._clock.now() < until_s:
                 self._breathe(LOOK_S)
         except RamprigError as error:
             self._say(f"the trail could not be read: {error}")
@@ -207,6 +211,7 @@ class Keeper:
         pace_s = max(LOOK_S, LOOK_ROUND_TRIPS * session.health.round_trip_median_s)
         if now_s - self._looked_s >= pace_s:
             self._looked_s = now_s
+            self._explain_restart()
             if session.valid and not self._unconfirmed:
                 reading = session.state()
                 self._state = reading.state.word
@@ -248,12 +253,18 @@ class Keeper:
         if block is None and self._trail_tries:
             return
         self._trail_tries = 0
-        if self._unexplained is not None:
+        if isinstance(self._unexplained, e.Tripped):
             self._explain("tripped", explain_trip(self._unexplained, self._rig), trail=block)
             self._unexplained = None
         if block is not None and self._log.open:
             self._log.trail(block)
             self._say(f"the trail of the trip is in the log ({len(block)} records)")
+
+    def _explain_restart(self) -> None:
+        """Say the likely cause of a restart, once all that it brings has been said; its trail is gone."""
+        if isinstance(self._unexplained, e.Restarted):
+            self._unexplained = None
+            self._explain("tripped", "the device has restarted")
 
     def _explain(self, verdict: str, reason: str, *, trail: Block | None = None) -> None:
         if self._session is not None:
@@ -275,9 +286,11 @@ class Keeper:
                 self._last_trip = event.trip
                 self._trail_tries = TRAIL_TRIES if self._log.open else 0
                 if event.learned is not e.Learned.AT_OPEN:
-                    self._trail_tries, self._unexplained = TRAIL_TRIES, event
                     self.failed = Tripped(event.trip, event.tick or 0, explain_trip(event, self._rig))
+                    if not isinstance(self._unexplained, e.Restarted):  # else this trip is what the restart brings
+                        self._trail_tries, self._unexplained = TRAIL_TRIES, event
             case e.Restarted():
+                self._trail_tries, self._unexplained = 0, event
                 self.failed = Tripped("restarted", event.tick or 0, "the device has restarted")
                 self._forget_motion()
         line = self._teller.tell(event)

@@ -7,10 +7,11 @@ board's own clock.
 
 from __future__ import annotations
 
-from collections.abc import Callable
+import contextlib
+from collections.abc import Callable, Iterator
 
 from ramprig.bench import Motor, Servo
-from ramprig.errors import UsageError
+from ramprig.errors import Refused, UsageError
 from ramprig.quantity import format_duration, format_duty, format_pulse
 from ramprig.sequence.rig import Axis, Channel, Rig
 from ramprig.session import Session
@@ -80,7 +81,8 @@ class Motions:
         reached = up.at(end)
         down = Slope(end, axis.least_ticks(reached, 0), reached, 0)
         self._session.ramp(axis.index, duty, up.ticks, start)
-        self._session.ramp(axis.index, 0, down.ticks, end)
+        with self._or_stop():  # a begin without an end must not stay
+            self._session.ramp(axis.index, 0, down.ticks, end)
         self._duties[motor.name] = down
         less = f", which reaches {format_duty(reached)} by its slew limit" if reached != duty else ""
         self._say(f"{motor.name}: {format_duty(duty)} for {format_duration(for_s)}{less}")
@@ -123,12 +125,22 @@ class Motions:
             if before * wanted < 0:
                 wanted = 0
             if wanted != ordered.end_value:
-                ordered = self._ramp(motor, axis, wanted, axis.least_ticks(before, wanted), start)
+                with self._or_stop():  # what turns must follow the keys
+                    ordered = self._ramp(motor, axis, wanted, axis.least_ticks(before, wanted), start)
             elif hold.left and before == 0:
                 break
             self._breathe(JOG_LOOK_S)
         self._until_tick(ordered.end_tick)
         self._until_zero(axis)
+
+    @contextlib.contextmanager
+    def _or_stop(self) -> Iterator[None]:
+        """Have all stopped where the device refuses an order in here, as for a full queue; the refusal is raised."""
+        try:
+            yield
+        except Refused:
+            self._session.panic(1)
+            raise
 
     def _ramp(self, motor: Motor, axis: Axis, duty: int, ticks: int, start: int) -> Slope:
         before = self._slope(motor).at(start)
