@@ -13,6 +13,8 @@ from explain_cases import MAKERS, Case, case_of, run_case
 from ramprig.cli.main import main
 from ramprig.errors import RecordError
 from ramprig.report.explain import explain_folder
+from ramprig.report.facts import gather
+from ramprig.report.making import make_report
 from ramprig.sequence.outcome import Verdict
 
 SEEDS_OF_THE_SOAK = 12
@@ -153,3 +155,27 @@ def test_a_trip_without_samples_is_still_explained_as_far_as_it_goes(tmp_path: P
 def test_what_is_no_run_folder_is_refused(tmp_path: Path) -> None:
     with pytest.raises(RecordError, match="no run folder"):
         explain_folder(tmp_path)
+
+
+def test_a_motor_without_an_encoder_is_told_of_without_counts_that_it_does_not_have(tmp_path: Path) -> None:
+    """An open input of the board may count anything: the mock's counts here although the bench file has none."""
+    without = (
+        ("encoder: {lines: 16, decoding: x4, on: motor shaft, direction: same}", "encoder: none"),
+        ("      stall: {duty: 15 %, motion: 4 counts, within: 300 ms}\n", ""),
+        ("      standstill: {within: 2 counts, for: 50 ms}\n", ""),
+    )
+    case = Case("held", faults=("jammed_shaft",), duty=80, ramp_ms=900, change=without)
+    result, explanation = run_case(tmp_path, case, seed=1)
+    assert result.outcome.verdict is Verdict.TRIPPED
+    assert explanation is not None
+    assert explanation.likely is not None
+    assert explanation.likely.key == "held"
+    for cause in explanation.causes:
+        assert "count" not in " ".join(cause.evidence)
+        assert "turned at" not in " ".join(cause.evidence)
+    assert "it has no encoder: whether it turned is not known" in explanation.likely.evidence
+    facts = gather(result.folder or tmp_path)
+    assert [name for name in facts.columns if name.startswith("vent.")] == ["vent.duty_pct", "vent.current_a"]
+    text = make_report([facts.folder], out=tmp_path / "out", issued="").report.read_text("utf-8")
+    assert "vent has no encoder: no position and no speed of it was measured." in text
+    assert "vent: speed" not in text

@@ -26,7 +26,8 @@ class MotorColumns:
     `duty_sign` is -1 where the user's forward is the device's backward, and turns duty and current over. `count_sign`
     is -1 where the counts fall while the motor turns in the user's forward direction, and turns position and speed
     over. The counts themselves are always logged as the device tells them, so that a wrong constant can be mended
-    afterwards. `on_output` says that the encoder sits on the output shaft, behind the play of the gear.
+    afterwards. `on_output` says that the encoder sits on the output shaft, behind the play of the gear. Without
+    `has_encoder` there are no counts, no position and no speed: an open input counts anything.
     """
 
     name: str
@@ -35,6 +36,7 @@ class MotorColumns:
     duty_sign: int = 1
     count_sign: int = 1
     on_output: bool = False
+    has_encoder: bool = True
 
 
 @dataclass(frozen=True, slots=True)
@@ -192,11 +194,14 @@ def _motor_fields(motor: MotorColumns) -> list[Field]:
     name, axis = motor.name, motor.axis
     per_rev, sign = motor.counts_per_rev, motor.count_sign
     counts = ("counts", axis)
-    return [
-        ScaledField(f"{name}.duty_pct", ("duty", axis), motor.duty_sign / 100, 2),
+    of_encoder: list[Field] = [
         CountsField(f"{name}.counts", counts),
         TurnsField(f"{name}.position_rev", counts, per_rev, sign, turns_decimals(per_rev)),
         SpeedField(f"{name}.speed_rpm", counts, per_rev, sign, on_output=motor.on_output),
+    ]
+    return [
+        ScaledField(f"{name}.duty_pct", ("duty", axis), motor.duty_sign / 100, 2),
+        *(of_encoder if motor.has_encoder else []),
         ScaledField(f"{name}.current_a", ("current_ma", axis), motor.duty_sign / 1000, 3),
     ]
 

@@ -48,6 +48,11 @@ class Around:
     counts_per_rev: float
     has_trail: bool
 
+    @property
+    def has_encoder(self) -> bool:
+        """Whether anything is known of the shaft; without a bench file it is taken for granted."""
+        return not self.counts_per_rev <= 0
+
     def __len__(self) -> int:
         return len(self.time_s)
 
@@ -197,12 +202,13 @@ def around(facts: Facts, motor: str, tick: int, *, time_s: float | None) -> Arou
     bench_motor = None
     if facts.bench is not None:
         bench_motor = next((found for found in facts.bench.motors if found.name == motor), None)
+    has_encoder = bench_motor is None or bench_motor.encoder is not None
     sense = -1.0 if bench_motor is not None and bench_motor.sense < 0 else 1.0
     return Around(
         motor=motor,
         time_s=column(None),
         duty=column(f"{motor}.duty_pct") / 100,
-        counts=column(f"{motor}.counts") * sense,
+        counts=column(f"{motor}.counts") * (sense if has_encoder else math.nan),
         current_a=column(f"{motor}.current_a"),
         supply_v=column("supply_v"),
         others={other: column(f"{other}.counts") for other in facts.motors if other != motor},

@@ -25,6 +25,7 @@ TURNING_SHARE = 0.45
 """Below this share of the locked-shaft current the shaft turns."""
 LAST_S = 0.006
 """A shaft that is jammed stands within a few ms; its current rises about as fast."""
+NO_ENCODER = "it has no encoder: whether it turned is not known"
 NO_CURRENT_A = 0.03
 """Less than this is no current: sensors of small drives are so good."""
 
@@ -132,6 +133,14 @@ def _held(trip: Trip, weight: float) -> Cause:
             next_step="With the power cut, turn the shaft by hand: look for an end stop or something caught in it.",
             weight=weight,
         )
+    if not look.has_encoder:
+        return Cause(
+            key="held",
+            sentence=f"{trip.motor} was held, or loaded as much",
+            evidence=(trip.current_text, trip.start_text, NO_ENCODER),
+            next_step="With the power cut, turn the shaft by hand: look for an end stop or something caught in it.",
+            weight=weight,
+        )
     return Cause(
         key="held",
         sentence=f"{trip.motor} was held from the start: seized, blocked, or against its end stop",
@@ -191,13 +200,14 @@ def _overcurrent(trip: Trip) -> Iterator[Cause]:
     enough = 2 if recent and started_s is not None and started_s < 0.1 else 8
     moving = look.moved(-0.1) > enough and speed * look.duty_now > 0
     rising = abs(speed) > 1.1 * abs(look.speed(-0.2, -0.1)) if look.moved(-0.2, -0.1) else True
-    if recent and moving and rising:
+    if recent and ((moving and rising) or not look.has_encoder):
+        turned = f"it already turned at {_speed(look, speed)}, and rising" if look.has_encoder else NO_ENCODER
         yield Cause(
             key="inrush",
             sentence=f"this was the inrush of starting {trip.motor}: it was still speeding up",
-            evidence=(trip.start_text, f"it already turned at {_speed(look, speed)}, and rising", trip.current_text),
+            evidence=(trip.start_text, turned, trip.current_text),
             next_step="Ramp more slowly, or allow the start more: a higher `current` limit or a longer time above it.",
-            weight=0.9,
+            weight=0.9 if look.has_encoder else 0.6,
         )
     if stopped and before and not recent:
         yield _held(trip, 0.93)
@@ -206,7 +216,10 @@ def _overcurrent(trip: Trip) -> Iterator[Cause]:
     yield Cause(
         key="load",
         sentence=f"the load of {trip.motor} is heavier than its current limit allows",
-        evidence=(f"it turned at {_speed(look, speed)} at {_duty(look)}", trip.current_text),
+        evidence=(
+            f"it turned at {_speed(look, speed)} at {_duty(look)}" if look.has_encoder else NO_ENCODER,
+            trip.current_text,
+        ),
         next_step="Compare with the motor's data sheet: lighten the load, lower the duty, or raise the limit.",
         weight=0.6 if moving and not recent else 0.2,
     )

@@ -6,6 +6,7 @@ from ramprig.bench import Bench
 from ramprig.record.columns import Columns, MotorColumns, ServoColumns, columns_of
 
 COUNTS_PER_REV_WITHOUT_ENCODER = 1.0
+"""In the place of a figure that is not used."""
 
 
 def bench_columns(bench: Bench, *, tick_us: int) -> Columns:
@@ -17,6 +18,7 @@ def bench_columns(bench: Bench, *, tick_us: int) -> Columns:
             float(motor.counts_per_turn) or COUNTS_PER_REV_WITHOUT_ENCODER,
             count_sign=-1 if motor.sense < 0 else 1,
             on_output=motor.encoder is not None and not motor.encoder.on_motor_shaft,
+            has_encoder=motor.encoder is not None,
         )
         for motor in bench.motors
     ]
