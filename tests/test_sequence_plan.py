@@ -74,9 +74,9 @@ def test_a_night_of_passes_is_one_part_compiled_at_once_in_little_memory(tmp_pat
       - repeat: {{times: 1000, steps: [hold: 1 s]}}
 """
     tracemalloc.start()
-    begin_s = time.perf_counter()
+    begin_s = time.process_time()
     plan = plan_of(tmp_path, steps)
-    took_s = time.perf_counter() - begin_s
+    took_s = time.process_time() - begin_s
     peak = tracemalloc.get_traced_memory()[1]
     tracemalloc.stop()
     assert took_s < 2.0  # a generous bound: it takes some 10 ms
@@ -95,10 +95,10 @@ def test_nested_repeats_are_compiled_in_time_that_grows_with_their_depth_only(tm
     text = "hold: 1 s"
     for _ in range(depth):
         text = f"repeat: {{times: 10, steps: [{{{text}}}]}}"
-    begin_s = time.perf_counter()
+    begin_s = time.process_time()
     plan = plan_of(tmp_path, f"- {text}")
     assert plan.totals.least == 1000 * 10**depth
-    assert time.perf_counter() - begin_s < 2.0
+    assert time.process_time() - begin_s < 2.0
 
 
 def test_totals_of_a_together_are_those_of_its_longest_branch(tmp_path: Path) -> None:
