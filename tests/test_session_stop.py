@@ -241,6 +241,40 @@ def test_a_stop_in_no_state_to_stop_is_confirmed_too() -> None:
     assert Rig().session.stop(1).confirmed
 
 
+def test_several_beats_fall_into_one_lease_while_armed(monkeypatch: pytest.MonkeyPatch) -> None:
+    rig = running(Rig())
+    plain = rig.mock.write
+    beats: list[bool] = []
+
+    def write(data: bytes) -> None:
+        beats.append(b" beat " in data)
+        plain(data)
+
+    monkeypatch.setattr(rig.mock, "write", write)
+    rig.pump(0.5)  # the lease of `running`
+    assert sum(beats) >= 4
+
+
+def test_a_stop_asked_for_while_a_request_is_made_ready_is_followed_by_nothing(monkeypatch: pytest.MonkeyPatch) -> None:
+    """As by a signal handler between the pump's look at the stop and its writing."""
+    rig = running(Rig())
+    pump = rig.session._core.pump
+    ask = pump.link.ask
+    sent: list[bytes] = []
+
+    def interrupted(word: str, *args: object, now_s: float) -> bytes:
+        rig.session.panic(1)
+        return ask(word, *args, now_s=now_s)
+
+    monkeypatch.setattr(pump.link, "ask", interrupted)
+    monkeypatch.setattr(rig.mock, "write", sent.append)
+    with pytest.raises(StoppedByUser):
+        rig.session.ask("beat")
+    assert sent == []
+    monkeypatch.undo()
+    assert rig.session.stop(1).confirmed
+
+
 def test_a_session_that_is_left_after_a_stop_that_is_not_confirmed_sends_nothing_and_raises_nothing(
     monkeypatch: pytest.MonkeyPatch,
 ) -> None:

@@ -13,6 +13,7 @@ from ramprig.record.reading import audit, read_manifest
 from ramprig.record.recorder import Recorder
 from ramprig.shell import commands as c
 from ramprig.shell.hold import FIRST_S, Hold
+from ramprig.shell.logbook import DISK_PATIENCE_S
 from ramprig.shell.words import WORDS, filled_example, read_line
 from ramprig_link.words import State
 from shell_bench import BENCH, SCRIPTS, DeskBench
@@ -258,6 +259,22 @@ def test_stop_and_cut_are_words_too(bench: DeskBench, word: str) -> None:
     bench.let_pass(1.0)
     assert any("stop confirmed" in line for line in bench.type(word))
     assert bench.duty == 0
+
+
+def test_a_log_whose_disk_makes_no_progress_stops_the_motor(bench: DeskBench, monkeypatch: pytest.MonkeyPatch) -> None:
+    armed(bench).type("log start stuck")
+    bench.type("ramp vent 30 %")
+    bench.let_pass(1.0)
+    assert bench.duty > 0
+    recorder = bench.desk._log._recorder
+    assert recorder is not None
+    monkeypatch.setattr(recorder, "liveness_s", lambda: DISK_PATIENCE_S + 0.1)
+    said = bench.let_pass(1.0)
+    assert said[0] == "stopping: the disk makes no progress"
+    assert any(line.startswith("stop confirmed") for line in said)
+    assert bench.duty == 0
+    monkeypatch.undo()
+    bench.type("log stop")
 
 
 def test_a_panic_before_the_device_is_known_reaches_the_port(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
