@@ -19,6 +19,7 @@ from prompt_toolkit.data_structures import Size
 from prompt_toolkit.output import DummyOutput, Output
 from prompt_toolkit.output.vt100 import Vt100_Output
 
+from held_up import held_up_s
 from ramprig.shell import commands as c
 from ramprig.shell.hold import Hold
 from ramprig.shell.live import Snapshot
@@ -82,6 +83,10 @@ class Rig:
         return len(self.worker.stops) > count
 
     async def until(self, holds: Callable[[], object]) -> None:
+    def emptied_after(self, lines: int) -> bool:
+        """Whether so many lines were entered, and the last one has left nothing behind."""
+        return not self.screen.buffer.text and len(self.screen.buffer.history.get_strings()) == lines
+
         """Wait for something that must come."""
         bound_s = time.monotonic() + WAIT_S
         while not holds():
@@ -145,6 +150,21 @@ def test_a_refused_line_stays_in_the_history(tmp_path: Path) -> None:
 
 
 def test_several_pasted_lines_are_refused_as_one() -> None:
+def test_a_history_that_cannot_be_kept_is_told_once_and_no_line_is_done_twice(tmp_path: Path) -> None:
+    seen = io.StringIO()
+
+    async def story(rig: Rig) -> None:
+        for at, line in enumerate(("arm", "who", "state")):
+            rig.send(line.encode() + b"\r")
+            await rig.until(partial(rig.emptied_after, at + 1))
+        await rig.until(lambda: "typed lines are kept for this shell only" in seen.getvalue())
+
+    size = Size(rows=30, columns=150)
+    rig = run(story, output=Vt100_Output(seen, lambda: size), history_file=tmp_path)  # a folder takes no lines
+    assert [job.text for job in rig.worker.posted] == ["arm", "who", "state"]
+    assert seen.getvalue().count("typed lines are kept") == 1
+
+
     async def story(rig: Rig) -> None:
         rig.send(b"\x1b[200~arm\njog vent 20 % for 1 s\n\x1b[201~\r")
         await rig.until(lambda: not rig.screen.buffer.text and rig.screen.buffer.history.get_strings())
@@ -228,6 +248,51 @@ def test_arrow_keys_jog_and_other_keys_stop() -> None:
 
 
 def test_a_lone_escape_leaves_the_jog() -> None:
+@pytest.mark.parametrize(
+    "key",
+    [
+        b"x",
+        b" ",
+        b"\r",
+        b"\n",
+        b"\t",
+        b"\x7f",
+        b"\x01",
+        b"\x1a",
+        b"\x12",
+        b"\x1b[3~",
+        b"\x1b[H",
+        b"\x1b[200~up\x1b[201~",
+    ],
+)
+def test_each_key_that_jogs_nothing_stops_and_leaves_the_line_empty(key: bytes) -> None:
+    async def story(rig: Rig) -> None:
+        rig.send(b"jog vent\r")
+        await rig.until(lambda: rig.screen._hold)
+        hold = rig.screen._hold
+        assert hold is not None
+        rig.screen._now = lambda: 0.0  # so that no time passes after which the key would count as let go anyway
+        rig.send(b"\x1b[C")
+        await rig.until(lambda: hold.wanted(0.0))
+        rig.send(key)
+        await rig.until(lambda: not hold.wanted(0.0))
+        assert rig.screen.buffer.text == ""
+
+    run(story)
+
+
+def test_control_z_types_nothing_and_says_why() -> None:
+    seen = io.StringIO()
+
+    async def story(rig: Rig) -> None:
+        rig.send(b"ar\x1am\r")
+        await rig.until(lambda: rig.worker.posted)
+        await rig.until(lambda: "Ctrl-Z does nothing here" in seen.getvalue())
+
+    size = Size(rows=30, columns=100)
+    assert run(story, output=Vt100_Output(seen, lambda: size)).worker.posted[0].command == c.Arm()
+
+
     async def story(rig: Rig) -> None:
         rig.send(b"jog vent\r")
         await rig.until(lambda: rig.screen._hold)
@@ -313,11 +378,11 @@ def test_a_stop_reaches_the_wire_within_50_ms_under_a_flood_of_output() -> None:
             thread.start()
             for _ in range(20):
                 await asyncio.sleep(0.02)
-                count = len(rig.worker.stops)
+                count, held_s = len(rig.worker.stops), held_up_s()
                 sent_s = time.monotonic()
                 os.write(writer, b"\x1b[200~" * 3 + b"\x03")
                 await rig.until(partial(rig.stopped_more_than, count))
-                latencies_s.append(rig.worker.stops[-1][1] - sent_s)
+                latencies_s.append(rig.worker.stops[-1][1] - sent_s - (held_up_s() - held_s))
             over.set()
             thread.join()
 
