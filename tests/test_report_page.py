@@ -2,8 +2,11 @@
 
 from __future__ import annotations
 
+import json
 import random
 import re
+import shutil
+import sys
 from dataclasses import replace
 from html.parser import HTMLParser
 from pathlib import Path
@@ -12,7 +15,9 @@ import pytest
 
 from explain_cases import Case, case_of, run_case
 from ramprig.cli.main import main
+from ramprig.record.appendfile import AppendFile
 from ramprig.report.compare import differing
+from ramprig.report.explain import explain
 from ramprig.report.facts import gather
 from ramprig.report.html import Wish, report_id
 from ramprig.report.making import Made, make_report, read_run
@@ -215,6 +220,36 @@ def test_a_wrong_way_trip_is_off_where_the_stall_trip_is() -> None:
     limits = {("stall_duty", 0): 0, ("wrong_counts", 0): 24, ("stall_duty", 1): 1500, ("wrong_counts", 1): 24}
     assert is_off(limits, "wrong_counts", 0)
     assert not is_off(limits, "wrong_counts", 1)
+
+
+@pytest.mark.skipif(sys.platform == "win32", reason="whether a file is held alone is told by POSIX locks")
+def test_a_run_that_is_still_written_is_not_told_as_dead_nor_its_motor_as_stopped(
+    run: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    folder = tmp_path / "run"
+    shutil.copytree(run, folder)
+    manifest = gather(run).manifest | {"status": "running", "verdict": None, "stop_reason": None, "samples": None}
+    (folder / "run.json").write_text(json.dumps(manifest), encoding="utf-8")
+    events = AppendFile(folder / "events.jsonl", new=False)
+    try:
+        assert events.hold_alone()
+        page = read_page(made(folder, tmp_path / "a").report)
+        assert "under way The run was still being written when this report was made" in page.text
+        assert "Likely cause" not in page.text
+        assert main(["read", str(folder)]) == 2
+        told = capsys.readouterr().out
+        assert told.startswith("The run is under way: a program is still writing it.")
+        assert "killed" not in told
+    finally:
+        events.close()
+    page = read_page(made(folder, tmp_path / "b").report)
+    assert "broken off no reason was written" in page.text
+    assert "Likely cause: the program ended without a word" in page.text
+    unknown = replace(gather(folder), is_held=None)
+    explanation = explain(unknown)
+    assert explanation is not None
+    assert explanation.causes[0].sentence.startswith("the run is still under way, or the program ended without a word")
+    assert "keep clear of the motor" in explanation.causes[0].next_step
 
 
 def test_nothing_of_the_run_is_changed(run: Path, tmp_path: Path) -> None:

@@ -27,13 +27,17 @@ def declare(parser: argparse.ArgumentParser) -> None:
 def carry_out(args: argparse.Namespace) -> int:
     """Print why the run ended as it did, unless it passed, then what the folder says and what it holds."""
     from ramprig.record.reading import audit, read_manifest
-    from ramprig.report.explain import explain_folder
+    from ramprig.report.explain import explain
+    from ramprig.report.facts import UNDER_WAY, gather
 
     manifest = read_manifest(args.run)
-    explanation = explain_folder(args.run)
+    facts = gather(args.run)
+    explanation = explain(facts)
     if explanation is not None:
         for line in [*explanation.lines(), ""]:
             say(line)
+    if facts.verdict == UNDER_WAY:
+        say("The run is under way: a program is still writing it. What follows is how far it has come.")
     found = audit(args.run)
     for line in [*summary(manifest, found), *open_count_lines(args.run, manifest), *note_lines(args.run)]:
         say(line)

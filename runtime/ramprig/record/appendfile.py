@@ -217,6 +217,23 @@ def write_new(path: Path, data: bytes) -> None:
         os.fsync(file.fileno())
 
 
+def is_held(path: Path) -> bool | None:
+    """Whether a program holds the file alone and so is still writing it; None where that cannot be told: on Windows,
+    and where the file cannot be opened."""
+    if sys.platform == "win32":
+        return None
+    import fcntl
+
+    try:
+        with open(path, "rb") as file:
+            fcntl.flock(file, fcntl.LOCK_SH | fcntl.LOCK_NB)
+    except BlockingIOError:
+        return True
+    except OSError:
+        return None
+    return False
+
+
 def replace_file(path: Path, data: bytes) -> None:
     """Give `path` the contents `data` in one step: a reader, or a crash, sees the old or the new, never a part.
 

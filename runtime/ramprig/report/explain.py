@@ -14,7 +14,7 @@ from pathlib import Path
 from ramprig.quantity import format_duration, format_voltage
 
 from .around import Around, around
-from .facts import Document, Facts, gather
+from .facts import BROKEN_OFF, UNDER_WAY, Document, Facts, gather
 from .tripcauses import Cause, Trip, causes_of
 from .worn import worn_causes
 
@@ -60,7 +60,7 @@ def _wrapped(label: str, text: str, width: int) -> list[str]:
 
 
 def explain_folder(folder: Path) -> Explanation | None:
-    """Why the run in this folder ended; None where it passed. Raises RecordError where it is no run folder."""
+    """Why the run in this folder ended; None where it passed, or has not ended. Raises RecordError where it is none."""
     return explain(gather(folder))
 
 
@@ -79,7 +79,7 @@ def likely_lines(folder: Path) -> list[str]:
 def explain(facts: Facts) -> Explanation | None:
     """As `explain_folder`, of what was gathered."""
     verdict = facts.verdict
-    if verdict == "passed":
+    if verdict in ("passed", UNDER_WAY):
         return None
     what = f"{verdict}: {facts.manifest.get('stop_reason') or 'no reason was written'}"
     causes = sorted(_causes(facts, verdict), key=lambda cause: -cause.weight)
@@ -361,15 +361,8 @@ def _others(facts: Facts, verdict: str) -> Iterator[Cause]:
             next_step="Nothing is wrong by this alone; whoever stopped it knows why.",
             weight=0.9,
         )
-    elif verdict == "broken off":
-        last = facts.last_event or {}
-        yield Cause(
-            key="broken_off",
-            sentence="the program ended without a word: killed, the computer lost its power, or it went down",
-            evidence=(f"the last event is '{last.get('kind')}' at {last.get('utc')}", "run.json still says it runs"),
-            next_step="The board stopped the motor when its lease ran out. `ramprig resume` goes on where it can.",
-            weight=0.9,
-        )
+    elif verdict == BROKEN_OFF:
+        yield _broken_off(facts)
     elif verdict == "failed":
         yield from _failed(facts)
     elif verdict == "refused":
@@ -383,6 +376,24 @@ def _others(facts: Facts, verdict: str) -> Iterator[Cause]:
             next_step="The board's word says why; `ramprig check` shows what the plan asks for.",
             weight=0.9,
         )
+
+
+def _broken_off(facts: Facts) -> Cause:
+    """Where nobody can tell whether the program still runs, it is not told as dead, nor the motor as stopped."""
+    last = facts.last_event or {}
+    evidence = f"the last event is '{last.get('kind')}' at {last.get('utc')}"
+    sentence = "the program ended without a word: killed, the computer lost its power, or it went down"
+    next_step = "The board stops by itself when its lease runs out. `ramprig resume` goes on where it can."
+    if facts.is_held is None:
+        sentence = f"the run is still under way, or {sentence}"
+        next_step = f"Look whether the program still runs, and keep clear of the motor. {next_step}"
+    return Cause(
+        key="broken_off",
+        sentence=sentence,
+        evidence=(evidence, "run.json says that it is running"),
+        next_step=next_step,
+        weight=0.9,
+    )
 
 
 def _stop_verdict(facts: Facts) -> tuple[str, ...]:

@@ -12,6 +12,7 @@ from typing import Any
 from ramprig.bench import Bench, bench_of_text
 from ramprig.errors import FileError, RecordError
 from ramprig.quantity import show
+from ramprig.record.appendfile import is_held
 from ramprig.record.folder import EVENTS_FILE, SAMPLES_FILE
 from ramprig.record.reading import files_by_part, read_manifest
 from ramprig.sequence.steps import What
@@ -24,6 +25,8 @@ KEPT_MAX = 2000
 PASSES_MAX = 100_000
 FAILURES_MAX = 200
 """Failed judgements of one expectation that are kept with their values."""
+UNDER_WAY, BROKEN_OFF = "under way", "broken off"
+"""Verdicts of runs that wrote none."""
 SIMULATED = ("mock:", "core:")
 """Ports that are no real board."""
 CYCLES_FILE = "cycles.jsonl"
@@ -98,7 +101,8 @@ class Facts:
 
     `events` keeps the first KEPT_MAX of each kind that matters, `counts` counts all. `passes` are the begins of the
     repeat that went on for longest, in s of the run, or of the cycles where there are any. The first `trips_outlived`
-    of the trips are those that the run was gone on with after: its outputs were enabled anew.
+    of the trips are those that the run was gone on with after: its outputs were enabled anew. `is_held` says whether a
+    program is still writing it, None where that cannot be told.
     """
 
     folder: Path
@@ -112,6 +116,7 @@ class Facts:
     cycles: list[Document] = field(default_factory=list)
     notes: list[Document] = field(default_factory=list)
     trips_outlived: int = 0
+    is_held: bool | None = False
     last_event: Document | None = None
     torn_event_bytes: int = 0
 
@@ -131,7 +136,7 @@ class Facts:
     @property
     def carried_out(self) -> bool | None:
         """Whether every step was carried out; None where the run did not write that down."""
-        if self.verdict in ("passed", "broken off"):
+        if self.verdict in ("passed", BROKEN_OFF):
             return self.verdict == "passed"
         found = (self.manifest.get("results") or {}).get("carried_out")
         return None if found is None else bool(found)
@@ -143,9 +148,9 @@ class Facts:
 
     @property
     def verdict(self) -> str:
-        """As `run.json` has it; `broken off` where the run never ended in order."""
+        """As `run.json` has it; `under way` where it is still being written, `broken off` where it never ended."""
         if self.manifest.get("status") != "finished":
-            return "broken off"
+            return UNDER_WAY if self.is_held else BROKEN_OFF
         return str(self.manifest.get("verdict") or "none")
 
     @property
@@ -221,6 +226,8 @@ class Facts:
 def gather(folder: Path) -> Facts:
     """Read a run folder; raises RecordError where it is none."""
     facts = Facts(folder, read_manifest(folder))
+    if facts.manifest.get("status") != "finished":
+        facts.is_held = is_held(folder / EVENTS_FILE)
     _read_bench(facts)
     series: dict[str, list[float]] = {}
     for event in lines_of(folder / EVENTS_FILE, facts):

@@ -20,7 +20,7 @@ from .checks import checks_table
 from .compare import compared
 from .digest import Digest
 from .explain import Explanation, view_of_trip
-from .facts import Facts
+from .facts import UNDER_WAY, Facts
 from .protections import protections
 from .trends import rules_in_force, seen_of
 from .untold import untold_table
@@ -115,12 +115,16 @@ def _head(title: str, number_of: str, reads: list[Read], wish: Wish) -> str:
     )
 
 
+_SIGNS = {"passed": ("passed", "&#10003;"), UNDER_WAY: ("", "&#8230;")}
+_NO_REASON = {UNDER_WAY: "The run was still being written when this report was made: it tells of no end."}
+
+
 def _verdict(read: Read, *, named: bool) -> str:
     facts = read.facts
     word = facts.verdict
-    kind = "passed" if word == "passed" else "bad"
-    mark = "&#10003;" if word == "passed" else "&#10007;"
-    lines = [f'<p class="word">{mark} {page.text(word)}</p>', f"<p>{page.text(facts.manifest.get('stop_reason'))}</p>"]
+    kind, mark = _SIGNS.get(word, ("bad", "&#10007;"))
+    reason = facts.manifest.get("stop_reason") or _NO_REASON.get(word, "no reason was written")
+    lines = [f'<p class="word">{mark} {page.text(word)}</p>', f"<p>{page.text(reason)}</p>"]
     if named:
         lines.insert(0, f'<p class="id named">{page.text(facts.name)}</p>')
     if read.explanation is not None and read.explanation.likely is not None:

@@ -17,7 +17,7 @@ from ramprig.record.events import from_rfc3339, rfc3339
 from ramprig_link.words import LIMITS
 
 from .explain import explain
-from .facts import Expectation, Facts
+from .facts import UNDER_WAY, Expectation, Facts
 from .page import clean
 from .protections import TRIPS, is_off
 from .unjudged import unjudged, why_unjudged
@@ -146,7 +146,8 @@ def _run_case(facts: Facts) -> Case:
     failed, a failed run's reason fails this one. A run that wrote nothing down of its steps is not judged.
     """
     name = "carried out to its end"
-    reason = str(facts.manifest.get("stop_reason") or "the run never ended in order")
+    none = "the run was still being written" if facts.verdict == UNDER_WAY else "the run never ended in order"
+    reason = str(facts.manifest.get("stop_reason") or none)
     explanation = explain(facts)
     out = f"verdict: {facts.verdict}\n{reason}"
     if explanation is not None:

@@ -15,7 +15,7 @@ from ramprig.session.events import Learned, Tripped
 
 from . import page
 from .digest import Digest
-from .facts import Document, Expectation, Facts
+from .facts import UNDER_WAY, Document, Expectation, Facts
 from .plots import label_of
 from .protections import stop_text
 from .trends import Seen
@@ -121,7 +121,7 @@ def method(facts: Facts) -> str:
     period = ((manifest.get("samples") or {}).get("loggings") or [{}])[0].get("period_ticks")
     pairs: list[tuple[str, object]] = [
         ("begun", manifest.get("started") or NOT_KNOWN),
-        ("ended", manifest.get("ended") or "not in order"),
+        ("ended", manifest.get("ended") or ("not yet" if facts.verdict == UNDER_WAY else "not in order")),
         ("first step", _first_step(facts)),
         *_lengths(facts),
         ("values given", ", ".join(f"{name} = {value}" for name, value in values.items()) or "none"),
@@ -271,8 +271,11 @@ def _cycles(facts: Facts) -> str:
         ("confirmed by the encoder", counted.confirmed),
         ("failed", counted.failed),
         ("not judged", counted.unjudged),
-        ("broken off", counted.interrupted + (record.open_number is not None)),
     ]
+    if facts.verdict == UNDER_WAY:
+        pairs += [("broken off", counted.interrupted), ("under way", int(record.open_number is not None))]
+    else:
+        pairs.append(("broken off", counted.interrupted + (record.open_number is not None)))
     return "<h3>Cycles</h3>" + page.facts((name, str(value)) for name, value in pairs)
 
 

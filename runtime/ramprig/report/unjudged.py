@@ -9,7 +9,7 @@ from ramprig.sequence.compile import compile_plan
 from ramprig.sequence.kept import kept_sequence
 from ramprig.sequence.plan import Branches, Cycles, Judge, Loop, Part, Series
 
-from .facts import Expectation, Facts
+from .facts import UNDER_WAY, Expectation, Facts
 
 
 def unjudged(facts: Facts) -> tuple[list[Expectation], str]:
@@ -51,4 +51,6 @@ def why_unjudged(facts: Facts) -> str:
     """The reason for a reader of one expectation."""
     if facts.verdict == "passed":
         return "not judged: the run passed without coming to it"
+    if facts.verdict == UNDER_WAY:
+        return "not judged yet: the run is under way"
     return f"not judged: the run ended before ({facts.verdict})"
