@@ -25,7 +25,7 @@ from ramprig.session.events import (
     WallClockSet,
 )
 from ramprig.session.watch import WALL_LOOK_S, Fit, TickWatch, WallWatch
-from ramprig_link.words import Cause, Rest
+from ramprig_link.words import Cause, Rest, State
 from session_rig import MASK, Rig
 
 
@@ -155,6 +155,18 @@ def test_another_number_of_starts_is_a_restart_though_the_ticks_fit() -> None:
     rig.pump(0.5)
     assert [(event.boot_after, event.seen_by) for event in rig.of(Restarted)] == [(2, "what a line says")]
     assert not rig.session.valid
+
+
+def test_a_beat_that_finds_the_outputs_off_has_the_number_of_starts_asked_for() -> None:
+    """As after a restart within moments of the opening: the ticks fit, and no notice has come."""
+    rig = running(Rig())
+    controller = rig.device.controller
+    assert controller is not None
+    controller.boot += 1
+    controller._enter(State.OFF)
+    rig.pump(0.5)
+    assert [event.seen_by for event in rig.of(Restarted)] == ["outputs off without a notice"]
+    assert not rig.session.armed
 
 
 def test_a_brown_out_on_start_is_a_restart_with_its_cause() -> None:
