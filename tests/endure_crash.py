@@ -2,13 +2,15 @@
 
 `Host` runs a sequence with cycles in virtual time. Every write, sync and port call is one operation; at the operation
 `die_at` the process is gone: nothing it does afterwards has any effect. A power cut then leaves of each file what was
-synced and, of the rest, any beginning, torn anywhere; a replaced file is the old or the new one.
+synced and, of the rest, any beginning, torn anywhere; a replaced file is the old or the new one, and a new file may be
+gone where its folder was not synced after it was made.
 """
 
 from __future__ import annotations
 
 import os
 import random
+import stat
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass, field
@@ -109,6 +111,7 @@ class Process:
     paths: dict[int, Path] = field(default_factory=dict)
     synced: dict[Path, int] = field(default_factory=dict)
     replaced: dict[Path, bytes] = field(default_factory=dict)
+    unnamed: list[Path] = field(default_factory=list)
 
     def operation(self) -> None:
         """One more; raises Killed where it is the last, and in every one after that."""
@@ -131,6 +134,8 @@ class Process:
             self.synced[path] = os.fstat(handle).st_size
         else:
             self.replaced.clear()  # a folder, or a new file: what was renamed before is now certain
+        if stat.S_ISDIR(os.fstat(handle).st_mode):
+            self.unnamed.clear()
 
     def _open(self, path: Path, flags: int, mode: int = 0o777) -> int:
         handle = os.open(path, flags, mode)
@@ -138,6 +143,7 @@ class Process:
             self.paths[handle] = Path(path)
             if flags & os.O_CREAT:
                 self.synced[Path(path)] = 0
+                self.unnamed.append(Path(path))
             self.synced.setdefault(Path(path), os.fstat(handle).st_size)
         return handle
 
@@ -171,6 +177,9 @@ class Process:
 
     def cut_power(self, chance: random.Random) -> dict[Path, int]:
         """Lose what was not synced, or any part of it; returns what was synced of each file, in bytes."""
+        for path in self.unnamed:
+            if chance.random() < 0.5:
+                path.unlink(missing_ok=True)
         self.synced = {path: size for path, size in self.synced.items() if path.exists()}
         for path, size in self.synced.items():
             left = chance.randint(size, path.stat().st_size)

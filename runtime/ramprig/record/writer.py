@@ -245,7 +245,7 @@ class DiskWriter:
             if self.durable:
                 self._attempt(self.sync_files)
             self._last_sync_s = self._now()
-            self._on_sync()
+            self._attempt(self._on_sync)
 
     def _carry_out(self, job: _Job) -> None:
         if self._given_up or (self.failure is not None and not job.vital):
