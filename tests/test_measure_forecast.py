@@ -13,6 +13,7 @@ import pytest
 
 from measure_rig import drawn_bench
 from ramprig.bench import Bench, load_bench
+from ramprig.cli.files import read_pair
 from ramprig.cli.main import main
 from ramprig.errors import UsageError
 from ramprig.measure.forecast.draws import Belief, belief_of, drawn_setup
@@ -430,8 +431,31 @@ def test_odds_and_intervals() -> None:
     assert str(Interval(30381.2, 30380.9, 30382.6, "s")) == "8 h 26 min in every draw"
     assert str(Interval(30381.2, 29100.0, 31000.0, "s")) == "8 h 26 min (8 h 5 min to 8 h 37 min)"
     assert str(Interval(32.13, 32.13, 32.24, "s")) == "32.13 s (32.13 to 32.24)"
-    with pytest.raises(UsageError, match="at least 20"):
-        forecast(sequence(SHORT), load_bench(VENT), ForecastWish(draws=3))
+
+
+@pytest.mark.parametrize(
+    ("wish", "message"),
+    [
+        (ForecastWish(draws=3), "3 draws: at least 20"),
+        (ForecastWish(draws=10**9), "at most 100000"),
+        (ForecastWish(seed=-1), "a seed of -1: 0 or more"),
+        (ForecastWish(workers=0), "0 processes: at least 1"),
+        (ForecastWish(most_s=math.nan), "within nan s: more than 0 s"),
+    ],
+)
+def test_a_wish_that_makes_no_sense_is_refused(wish: ForecastWish, message: str) -> None:
+    with pytest.raises(UsageError, match=message):
+        forecast(sequence(SHORT), load_bench(VENT), wish)
+
+
+@pytest.mark.skipif(not ON_CORE, reason="without a C compiler a run of 20 s takes long")
+def test_a_supply_that_an_overvoltage_has_shut_down_uses_nothing_of_its_lower_limit() -> None:
+    pair = read_pair(VENT.parent / "jammed_vent.yaml", bench=None, values={})
+    setup = drawn_setup(belief_of(pair.bench), np.random.default_rng([1, 3]))
+    found = play(compile_plan(pair.sequence, pair.bench), pair.bench, setup, seed=4)
+    assert found.tripped.startswith("overvoltage")
+    assert found.bus_high_v.max() > 16.0
+    assert found.bus_low_v.min() > 11.0
 
 
 def pattern(*parts: tuple[float, float]) -> np.ndarray[tuple[int, ...], np.dtype[np.float64]]:

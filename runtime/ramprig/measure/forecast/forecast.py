@@ -29,6 +29,9 @@ from .play import core_is_there, play
 from .reduction import COLD_PASSES, Cut, alike_of, cut_of
 
 DRAWS = 200
+DRAWS_LEAST = 20
+DRAWS_MOST = 100_000
+"""All draws are kept until the end."""
 COVERAGE = 0.95
 LONG_S = 600.0
 """From so long on a duration is told in hours, minutes and seconds."""
@@ -189,8 +192,7 @@ def forecast(
     Raises `FileError` where the plan does not fit the bench, NotMeasurable where too little is known of a motor or no
     draw comes to its end, and UsageError for a wish that makes no sense.
     """
-    if wish.draws < 20:
-        raise UsageError(f"{wish.draws} draws: at least 20")
+    _check(wish)
     plan = compile_plan(sequence, bench)
     believed = belief_of(bench) if belief is None else belief
     on_core = core_is_there(believed.setup) if wish.on_core is None else wish.on_core
@@ -207,6 +209,18 @@ def forecast(
     )
     draws = draws_of(job, wish.draws, workers=wish.workers, most_s=wish.most_s, progress=progress)
     return _told(plan, bench, job, wish, draws)
+
+
+def _check(wish: ForecastWish) -> None:
+    """Raises UsageError for a wish that makes no sense."""
+    if not DRAWS_LEAST <= wish.draws <= DRAWS_MOST:
+        raise UsageError(f"{wish.draws} draws: at least {DRAWS_LEAST} and at most {DRAWS_MOST}")
+    if wish.seed < 0:
+        raise UsageError(f"a seed of {wish.seed}: 0 or more")
+    if wish.workers is not None and wish.workers < 1:
+        raise UsageError(f"{wish.workers} processes: at least 1")
+    if not 0.0 < wish.most_s < math.inf:
+        raise UsageError(f"within {wish.most_s:g} s: more than 0 s, and an end")
 
 
 def _part_of(plan: Plan, cut: Cut) -> Cycles | None:

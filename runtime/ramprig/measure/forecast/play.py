@@ -24,6 +24,7 @@ from ramprig.sequence.plan import Part, Plan
 from ramprig.sequence.rig import Rig
 from ramprig.sequence.running import wanted_of
 from ramprig.session.blocks import Block
+from ramprig.session.events import Event, Tripped
 from ramprig.session.session import Session
 
 Floats = NDArray[np.float64]
@@ -55,6 +56,8 @@ class TurnPlayed:
 class Play:
     """A run that is over. Rows are `row_s` apart and begin with the run's first tick, `bus_*` in V, energy in J.
 
+    They end with the run, or with the trip: what the trip does to the bench then, such as a supply that has shut down,
+    says nothing of the limits.
     `passes` are the ticks since the run's begin at which passes began, by where the repeat stands; `turns` are the
     cycles and checks that were done; `step_ticks` and `step_names` the steps that began. `tripped` says what ended it
     before its end, a trip or the loss of the board with its supply; empty where nothing did.
@@ -90,6 +93,7 @@ class _Notes:
     passes: dict[str, list[int]] = field(default_factory=dict)
     turns: list[TurnPlayed] = field(default_factory=list)
     steps: list[tuple[int, str]] = field(default_factory=list)
+    trip_tick: int | None = None
 
     def on_event(self, event: object) -> None:
         """Passes, cycles and checks."""
@@ -100,6 +104,11 @@ class _Notes:
                 self.turns.append(TurnPlayed(False, begin, tick, outcome == CycleOutcome.FAILED))
             case CheckDone(tick=tick, begin_tick=begin):
                 self.turns.append(TurnPlayed(True, begin, tick, False))
+
+    def on_device(self, event: Event) -> None:
+        """The first trip."""
+        if isinstance(event, Tripped) and self.trip_tick is None:
+            self.trip_tick = event.tick
 
     def on_trail(self, blocks: Sequence[Block]) -> None:
         """Not needed."""
@@ -137,9 +146,12 @@ def play(
         device.set_winding(rig.axes[name].index, celsius)
     port = DevicePort(device, pace="virtual", seed=seed)
     listeners, notes = Listeners(), _Notes()
-    session = Session.open(
-        port, wanted=wanted_of(bench), seed=seed, on_block=listeners.on_block, on_event=listeners.on_event
-    )
+
+    def on_event(event: Event) -> None:
+        notes.on_device(event)
+        listeners.on_event(event)
+
+    session = Session.open(port, wanted=wanted_of(bench), seed=seed, on_block=listeners.on_block, on_event=on_event)
     played: Play | None = None
     try:
         with session:
@@ -159,7 +171,9 @@ def _play(rig: Rig, outcome: Outcome, notes: _Notes, rows: Floats) -> Play:
     tick_s = rig.tick_us / 1e6
     rows = rows[start // EVERY_TICKS :]
     kept = int(np.ceil(outcome.elapsed_s / (EVERY_TICKS * tick_s))) + 1
-    rows = rows[:kept] if outcome.verdict is not Verdict.TRIPPED else rows
+    if outcome.verdict is Verdict.TRIPPED:
+        kept = len(rows) if notes.trip_tick is None else max(0, notes.trip_tick - start) // EVERY_TICKS + 1
+    rows = rows[:kept]
     motors = {}
     for axis in rig.axes.values():
         first = BUS_COLUMNS + AXIS_COLUMNS * axis.index
