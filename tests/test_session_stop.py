@@ -8,6 +8,7 @@ import numpy as np
 import pytest
 
 from ramprig.errors import Bug, LinkError, LinkLost, StoppedByUser
+from ramprig.port.clock import VirtualClock
 from ramprig.port.faulty import FaultyPort
 from ramprig.session import NOT_CONFIRMED
 from ramprig.session.events import LateHost, StopAsked, StopJudged, Stopped, Tripped
@@ -347,3 +348,23 @@ def test_a_stop_is_confirmed_though_every_block_and_event_raises_and_then_that_i
     assert rig.session.last_stop is not None
     assert rig.session.last_stop.confirmed
     assert rig.bridge_duty() == 0
+
+
+def test_a_host_that_is_held_up_within_a_read_is_noticed() -> None:
+    """As by SIGSTOP, or a computer that sleeps: a session is inside a read nearly all the time."""
+    rig = Rig()
+    rig.session.arm()
+    rig.pump(0.5)
+    pump, clock = rig.session._core.pump, rig.mock.clock
+    assert isinstance(clock, VirtualClock)
+    read = pump._read_until
+
+    def held_up(until_s: float) -> bytes:
+        pump._read_until = read
+        clock.advance(8.0)
+        return read(until_s)
+
+    pump._read_until = held_up
+    rig.pump(1.0)
+    assert [event.late_s for event in rig.of(LateHost)] == [pytest.approx(7.5, abs=0.5)]  # the read itself took some
+    assert rig.of(Tripped)[0].trip == "link_lost"

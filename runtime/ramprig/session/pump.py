@@ -60,7 +60,8 @@ class Pump:
 
     `hear` is called for everything that came, with the host time of its reception; `chores` once a turn, to do what is
     due by time; both from inside the pump, so they must not call it again (Bug). `late` is called with the seconds
-    between two calls of the pump, or two turns, and does the judging. What `hear` is given arrived after `since_s`.
+    between two calls of the pump, or two turns, or by which a read took longer than it should, and does the judging.
+    What `hear` is given arrived after `since_s`.
     """
 
     def __init__(
@@ -207,8 +208,11 @@ class Pump:
             self._check_panic()
         if not self.muted and link.due_at_s is None:
             self._send_new(now_s)
-        data = self._read_until(self._wait_until(until_s, now_s))
+        wait_until_s = self._wait_until(until_s, now_s)
+        data = self._read_until(wait_until_s)
         now_s = self.clock.now()
+        if now_s > wait_until_s + TIME_GRAIN_S:  # held up within the read, as by a computer that sleeps
+            self._late(now_s - wait_until_s)
         self.since_s, self._turned_s = turned_s or now_s, now_s
         if data:
             self.bytes_in += len(data)
