@@ -143,6 +143,15 @@ def test_checks_are_told_by_their_first_and_last() -> None:
     assert checks_table([check(0, 20.0)]) == ""
 
 
+def test_features_beyond_the_bound_are_counted(facts: Facts, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr("ramprig.report.digest.FEATURES_MAX", 5)
+    done = make_report([facts.folder], out=tmp_path, issued="")
+    assert "have the first 5 cycles and checks; 2 later ones are in cycles.jsonl alone." in done.report.read_text(
+        "utf-8"
+    )
+    done.features[0].unlink()
+
+
 def test_few_cycles_have_no_trend() -> None:
     assert seen_of(*made_up(np.ones(4))).drawn == ()
 

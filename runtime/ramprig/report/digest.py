@@ -77,8 +77,9 @@ class Digest:
     """What the samples of a run come to. `breaks` are times where the board restarted or the run was gone on with.
 
     An interval is `interval_stride` cycles, or a minute; those from 1 to below `interval_edges` are whole cycles.
-    `features` are those of the cycles and checks of the count of cycles, the first FEATURES_MAX: as they were recorded
-    while the run was under way, else from the samples, unless those were thinned. Of a thinned log intervals, totals
+    `features` are those of the cycles and checks of the count of cycles, the first FEATURES_MAX, with
+    `features_left_out` more: as they were recorded while the run was under way, else from the samples, unless those
+    were thinned. Of a thinned log intervals, totals
     and the envelope's ends are of all samples, from the ranges that were recorded with it.
     """
 
@@ -96,6 +97,7 @@ class Digest:
     interval_edges: int = 0
     interval_stride: int = 1
     features: list[TurnFeatures] = field(default_factory=list)
+    features_left_out: int = 0
 
     def band(self, name: str) -> Band:
         """A column against time."""
@@ -177,7 +179,9 @@ def _widen(facts: Facts, digest: Digest) -> None:
 
 
 def _keep_features(digest: Digest, found: Sequence[TurnFeatures]) -> None:
-    digest.features += found[: FEATURES_MAX - len(digest.features)]
+    kept = found[: FEATURES_MAX - len(digest.features)]
+    digest.features += kept
+    digest.features_left_out += len(found) - len(kept)
 
 
 def _blank_zero(pulses: Floats) -> None:

@@ -175,6 +175,9 @@ def _trends(read: Read, figures: _Figures) -> str:
         words += sections.trend_findings(seen, rules_in_force(facts))
     if not words:
         return ""
+    if digest.features_left_out:
+        text = f"features.csv and the tables below have the first {len(digest.features)} cycles and checks; "
+        words += page.paragraph(f"{text}{digest.features_left_out} later ones are in cycles.jsonl alone.", kind="note")
     tables = checks_table(digest.features)
     tables += untold_table(digest.features, motors=facts.motors, servos=facts.servos)
     return words + figures.put(plots.by_cycle(facts, seen.drawn)) + tables

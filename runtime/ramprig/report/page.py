@@ -46,7 +46,8 @@ svg{display:block;width:100%;height:auto;font:11px "Segoe UI",Roboto,Arial,sans-
 svg text{fill:#333}svg text.l{fill:#55616b}svg text.e{font-size:10px;fill:#333;paint-order:stroke;stroke:#fff;
 stroke-width:3px}svg .g{stroke:#e6eaec;stroke-width:1}svg .a{stroke:#8a949b;stroke-width:1}
 .end{margin-top:2.5rem;border-top:2px solid var(--ink);padding-top:.6rem;text-align:center}
-code{font-size:.92em;overflow-wrap:break-word}
+code{font-size:.92em}
+td.p{min-width:10rem}
 header .id,.named{text-align:left}
 @media (max-width:34rem){main{padding:1.2rem .9rem}dl{grid-template-columns:1fr;gap:0}dd{margin-bottom:.4rem}
 h2{display:block}h2 small{display:block;text-align:left}}
@@ -100,8 +101,8 @@ def short(value: object) -> str:
 
 
 def place(value: str) -> str:
-    """A place in a file, which may be broken after its folders only."""
-    return f"<code>{escape(clean(value)).replace('/', '/<wbr>')}</code>"
+    """A cell with a place in a file, which is broken after a folder where it must be."""
+    return f'<td class="p"><code>{escape(clean(value)).replace("/", "/<wbr>")}</code></td>'
 
 
 def alike(values: Sequence[float]) -> list[str]:
