@@ -127,3 +127,31 @@ def test_a_stop_from_the_user_ends_it_with_all_off_and_the_limits_as_they_were()
     left = port.device.controller.limits
     assert {key: left[key] for key in OWN} == OWN
     assert port.device.controller.state.word == "off"
+
+
+def test_a_second_stop_while_the_board_is_put_back_costs_neither_the_report_nor_the_limits() -> None:
+    port = mock_port(MockSetup(limits=OWN))
+
+    class Twice(Talk):
+        """Is stopped again as soon as the first stop was taken note of."""
+
+        let_go_count = 0
+
+        def let_go(self) -> None:
+            super().let_go()
+            self.let_go_count += 1
+            if self.let_go_count == 1:
+                self.panic(0)
+
+    talk = Twice(port)
+
+    def running(text: str) -> None:
+        if text == "passed      first-motion":
+            talk.panic(1)
+
+    verdict = accept(port, Wish(energise=lambda trial: True), tell=running, talk=talk)
+    assert (verdict.exit_code, verdict.unrestored) == (5, [])
+    assert verdict.stopped == "Stopped by the user; the report has what was checked before."
+    assert port.device.controller is not None
+    left = port.device.controller.limits
+    assert {key: left[key] for key in OWN} == OWN

@@ -36,6 +36,8 @@ DEAF_S = 10.0
 """A board that opening the port has restarted boots for some seconds."""
 TRIES_MAX = 4
 """So often is a check made where samples were dropped that it judges by."""
+LEAVES_MAX = 3
+"""So often is the board put back where a stop is asked for meanwhile."""
 INVARIANTS = ("S1", "S2", "S3", "S4", "S5", "S6", "S7")
 NO_POWER = "nothing was to be switched on"
 UNREADABLE = (LinkFault, ValueError, LookupError)
@@ -113,9 +115,8 @@ def accept(port: Port, wish: Wish, *, tell: Tell, talk: Talk | None = None) -> V
     except LinkError as error:
         verdict.lost = str(error)
     except StoppedByUser as error:
-        verdict.stopped = str(error)
+        verdict.stopped = f"{str(error).removesuffix('.')}; the report has what was checked before."
     finally:
-        talk.let_go()
         verdict.unrestored = _leave(trial)
     if talk.repeats:
         verdict.notes.append(f"{talk.repeats} lines had to be sent again before they were answered")
@@ -304,16 +305,27 @@ def _judge_invariants(trial: Trial) -> None:
 
 
 def _leave(trial: Trial) -> list[str]:
-    """Outputs off, logging ended, limits as they were; in sentences what could not be done."""
-    try:
-        trial.result = Result(_opening())
-        wrong = trial.settle()
-        trial.talk.ask("log 0 0 packed")
-    except (LinkError, Broken, *UNREADABLE) as error:
-        original, now = trial.original, trial.limits
-        changed = [f"limit {key[0]} {key[1]}: {value}" for key, value in original.items() if now.get(key) != value]
-        return [f"the board could not be left as it was ({error or 'refused'}); before: {', '.join(changed)}"]
-    return wrong
+    """Outputs off, logging ended, limits as they were; in sentences what could not be done.
+
+    A stop that is asked for meanwhile is sent by whoever asks for it; the limits are put back all the same.
+    """
+    error: Exception | None = None
+    for _ in range(LEAVES_MAX):
+        trial.talk.let_go()
+        try:
+            trial.result = Result(_opening())
+            wrong = trial.settle()
+            trial.talk.ask("log 0 0 packed")
+            return wrong
+        except StoppedByUser as again:
+            error = again
+        except (LinkError, Broken, *UNREADABLE) as lost:
+            error = lost
+            break
+    original, now = trial.original, trial.limits
+    changed = [f"limit {key[0]} {key[1]}: {value}" for key, value in original.items() if now.get(key) != value]
+    why = str(error).removesuffix(".") or "refused"
+    return [f"the board could not be left as it was ({why}); before: {', '.join(changed)}"]
 
 
 def line_of(result: Result) -> str:

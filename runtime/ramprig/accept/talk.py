@@ -124,7 +124,7 @@ class Talk:
 
     def _check_stop(self) -> None:
         if self._asked_to_stop:
-            raise StoppedByUser("Stopped by the user; the report has what was checked before.")
+            raise StoppedByUser("Stopped by the user.")
 
     # ---- listening -------------------------------------------------------------------------------------------------
 
