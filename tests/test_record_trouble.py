@@ -243,8 +243,27 @@ def test_a_vital_job_is_done_again_once_there_is_room_and_a_row_is_not() -> None
     writer = writer_of([], list[Trouble](), make_room=lambda: happened.append("room"))
     with pytest.raises(RecordError):
         writer.submit(full("row"))
-    writer.submit(full("event"), vital=True)  # the trouble is known by now, and the reserve given up
-    assert happened == ["row", "event"]
+    writer.submit(full("event"), vital=True)
+    assert happened == ["row", "room", "event"]
+
+
+def test_there_is_room_for_a_vital_job_that_was_handed_over_before_the_disk_was_full() -> None:
+    happened: list[str] = []
+    ready = threading.Event()
+
+    def row() -> None:
+        assert ready.wait(WAIT_S)
+        no_room()
+
+    writer = DiskWriter(
+        [], on_trouble=lambda trouble: happened.append("stop"), after_trouble=lambda trouble: None,
+        on_sync=lambda: None, threaded=True, make_room=lambda: happened.append("room"),
+    )  # fmt: skip
+    writer.submit(row)
+    writer.submit(lambda: happened.append("cycle"), vital=True)
+    ready.set()
+    assert writer.close(WAIT_S)
+    assert happened == ["stop", "room", "cycle"]
 
 
 def test_what_takes_too_long_is_left_alone_and_what_fails_is_told() -> None:

@@ -97,9 +97,9 @@ class DiskWriter:
     cannot be made again).
     `on_trouble` is called at most once for each kind of trouble, from whichever thread meets it, and must not raise.
     `after_trouble` is called next, for a trouble that loses rows: from then on only vital jobs are carried out, and
-    they are let fail. A vital job that is the first to find the disk full is done again after `make_room`, so it must
-    not do twice what it has done. `on_sync` is called after each timed sync (free space is looked at there); it may
-    call `tell`.
+    they are let fail. Once a job has found the disk full, `make_room` is called; if it is a vital one it is done again
+    then, so it must not do twice what it has done. `on_sync` is called after each timed sync (free space is looked at
+    there); it may call `tell`.
     """
 
     def __init__(
@@ -132,7 +132,7 @@ class DiskWriter:
         self._queue_max = queue_max
         self._queue: queue.Queue[_Job | None] = queue.Queue(queue_max + VITAL_MAX)
         self._open = True
-        self._given_up = False
+        self._given_up = self._room_made = False
         self._at_last: Callable[[], None] = lambda: None
         self._thread: threading.Thread | None = None
         if threaded:
@@ -251,11 +251,12 @@ class DiskWriter:
         if self._given_up or (self.failure is not None and not job.vital):
             self.refused_jobs += 1
             return
-        before = self.failure
+        room_made = self._room_made
         done = self._attempt(job.work)
-        if not done and job.vital and before is None and self._is_full():
+        if not done and not room_made and self._is_full():
+            self._room_made = True
             self._make_room()
-            done = self._attempt(job.work)
+            done = job.vital and self._attempt(job.work)
         if done and job.sync and self.durable and self._now() - self._last_sync_s >= SYNC_REST_S:
             self._attempt(self.sync_files)
 
