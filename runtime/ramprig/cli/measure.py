@@ -40,7 +40,8 @@ EPILOG = "\n".join(
         "what:",
         *(f"  {name:<10} {text}" for name, text in WHAT.items()),
         "",
-        "Each runs under limits of its own, none looser than the bench file's, and puts those back. It asks before it",
+        "Each runs under limits of its own, none looser than the bench file's, and puts those back; but for",
+        "coastdown and constants, which let the duty fall to zero at once, with the bridge off. It asks before it",
         "arms, and without a terminal wants --yes. Exits with 1 where the bench is not as it should be, or the data do",
         "not carry a result.",
     ]
@@ -169,7 +170,7 @@ def _advise(args: argparse.Namespace, bench: Bench) -> int:
     )
     findings = advise(bench, wish)
     if args.json:
-        say_surely(json.dumps(findings.to_json(), ensure_ascii=False, allow_nan=False, indent=2))
+        say_surely(json.dumps(findings.to_json(), ensure_ascii=False, allow_nan=False, indent=2), as_is=True)
     else:
         for line in findings.text():
             say_surely(line)
@@ -289,7 +290,7 @@ class Person:
 def show(done: Measurement, *, as_json: bool) -> None:
     """The result on standard output, where it is written down on standard error."""
     if as_json:
-        say_surely(json.dumps(done.findings.to_json(), ensure_ascii=False, allow_nan=False, indent=2))
+        say_surely(json.dumps(done.findings.to_json(), ensure_ascii=False, allow_nan=False, indent=2), as_is=True)
     else:
         for line in done.findings.text():
             say_surely(line)

@@ -87,9 +87,15 @@ def thinning_text(plan: Plan) -> str:
     return "" if thinning is None else said_of(thinning)
 
 
+def _ordinal(number: int) -> str:
+    """`500th`, `2nd`, `112th`."""
+    teens = number % 100 in (11, 12, 13)
+    return f"{number}{'th' if teens else {1: 'st', 2: 'nd', 3: 'rd'}.get(number % 10, 'th')}"
+
+
 def said_of(thinning: Thinning) -> str:
     """The rule in words."""
-    kept = [] if thinning.every is None else [f"every {thinning.every}th row"]
+    kept = [] if thinning.every is None else [f"every {_ordinal(thinning.every)} row"]
     if thinning.ranges_s is not None:
         kept.append(f"ranges over each {format_duration(thinning.ranges_s)}")
     around = ", ".join(word.value for word in Around if word in thinning.around)
