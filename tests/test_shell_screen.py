@@ -82,11 +82,11 @@ class Rig:
         """Whether more stops than these have come."""
         return len(self.worker.stops) > count
 
-    async def until(self, holds: Callable[[], object]) -> None:
     def emptied_after(self, lines: int) -> bool:
         """Whether so many lines were entered, and the last one has left nothing behind."""
         return not self.screen.buffer.text and len(self.screen.buffer.history.get_strings()) == lines
 
+    async def until(self, holds: Callable[[], object]) -> None:
         """Wait for something that must come."""
         bound_s = time.monotonic() + WAIT_S
         while not holds():
@@ -149,7 +149,6 @@ def test_a_refused_line_stays_in_the_history(tmp_path: Path) -> None:
     assert "+jgo vent" in history.read_text("utf-8")
 
 
-def test_several_pasted_lines_are_refused_as_one() -> None:
 def test_a_history_that_cannot_be_kept_is_told_once_and_no_line_is_done_twice(tmp_path: Path) -> None:
     seen = io.StringIO()
 
@@ -165,6 +164,7 @@ def test_a_history_that_cannot_be_kept_is_told_once_and_no_line_is_done_twice(tm
     assert seen.getvalue().count("typed lines are kept") == 1
 
 
+def test_several_pasted_lines_are_refused_as_one() -> None:
     async def story(rig: Rig) -> None:
         rig.send(b"\x1b[200~arm\njog vent 20 % for 1 s\n\x1b[201~\r")
         await rig.until(lambda: not rig.screen.buffer.text and rig.screen.buffer.history.get_strings())
@@ -247,7 +247,6 @@ def test_arrow_keys_jog_and_other_keys_stop() -> None:
     run(story)
 
 
-def test_a_lone_escape_leaves_the_jog() -> None:
 @pytest.mark.parametrize(
     "key",
     [
@@ -293,6 +292,7 @@ def test_control_z_types_nothing_and_says_why() -> None:
     assert run(story, output=Vt100_Output(seen, lambda: size)).worker.posted[0].command == c.Arm()
 
 
+def test_a_lone_escape_leaves_the_jog() -> None:
     async def story(rig: Rig) -> None:
         rig.send(b"jog vent\r")
         await rig.until(lambda: rig.screen._hold)

@@ -20,7 +20,7 @@ from prompt_toolkit.completion import CompleteEvent, Completer, Completion, Path
 from prompt_toolkit.document import Document
 from prompt_toolkit.filters import Condition
 from prompt_toolkit.formatted_text import StyleAndTextTuples
-from prompt_toolkit.history import FileHistory, History, InMemoryHistory
+from prompt_toolkit.history import History, InMemoryHistory
 from prompt_toolkit.input.base import Input
 from prompt_toolkit.key_binding import KeyBindings, KeyPressEvent
 from prompt_toolkit.keys import Keys
@@ -35,17 +35,18 @@ from prompt_toolkit.styles import Style
 from ramprig.bench import Bench
 from ramprig.errors import UsageError
 from ramprig.quantity import format_duty
-from ramprig.wrapping import wrapped
 
 from . import commands as c
 from .completing import begun_word, choices, wants_file
 from .hold import Hold
 from .outbox import Outbox
+from .remembered import Remembered
 from .statusline import LINES_MAX, prompt_of, status_lines
 from .stopkeys import StopKey
 from .taps import TappedInput
 from .words import read_line
 from .worker import Worker
+from .wrapping import wrapped
 
 REFRESH_S = 0.1
 """How often the status lines are drawn."""
@@ -103,7 +104,9 @@ class Screen:
         self._hold: Hold | None = None
         self._jog: c.JogHold | None = None
         self._dropped_bytes = 0
-        history: History = InMemoryHistory() if history_file is None else FileHistory(str(history_file))
+        history: History = InMemoryHistory()
+        if history_file is not None:
+            history = Remembered(str(history_file), outbox.say)
         self.buffer = Buffer(
             completer=Words(bench),
             history=history,
@@ -192,6 +195,10 @@ class Screen:
             else:
                 self.buffer.start_completion(insert_common_part=True)
 
+        @keys.add("c-z", filter=~jogging)
+        def _suspend(event: KeyPressEvent) -> None:
+            self._outbox.say("Ctrl-Z does nothing here: a shell that is suspended renews no lease. Ctrl-D leaves.")
+
         @keys.add("c-j", filter=~jogging)
         @keys.add("enter", filter=~jogging)
         def _enter(event: KeyPressEvent) -> None:
@@ -215,9 +222,10 @@ class Screen:
             bind(name, lambda hold: hold.leave())
         bind("escape", lambda hold: hold.leave())  # eager: it is told from an arrow key by the parser
 
-        @keys.add(Keys.Any, filter=jogging)
-        @keys.add(Keys.BracketedPaste, filter=jogging)
-        @keys.add("enter", filter=jogging)
+        # Eager, or a key that edits the line would do that and leave the motor to its time.
+        @keys.add(Keys.Any, filter=jogging, eager=True)
+        @keys.add(Keys.BracketedPaste, filter=jogging, eager=True)
+        @keys.add("enter", filter=jogging, eager=True)
         def _other(event: KeyPressEvent) -> None:
             if self._hold is not None:
                 self._hold.release()
