@@ -242,3 +242,17 @@ def test_the_help_of_what_moves_ends_with_the_cautions_and_fits_the_terminal(
     assert [line for line in said.splitlines() if len(line) > columns] == []
     _, _, cautions = said.partition(f"\n{HEADING}:\n")
     assert " ".join(cautions.split()) == "- " + " - ".join(CAUTIONS)
+
+
+def test_a_line_that_stays_is_broken_between_words_on_a_terminal_and_nowhere_else() -> None:
+    shown = []
+    for is_terminal in (True, False):
+        out = io.StringIO()
+        progress = Progress(out, is_terminal=is_terminal, width=30)
+        progress.line("interrupted: the board restarted, and it did not tell why")
+        progress.close()
+        shown.append(out.getvalue())
+    assert shown == [
+        "interrupted: the board\n  restarted, and it did not\n  tell why\n",
+        "interrupted: the board restarted, and it did not tell why\n",
+    ]

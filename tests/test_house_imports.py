@@ -15,7 +15,7 @@ CODEC = ROOT / "protocol" / "ramprig_link"
 
 ROOMS_FROM_THE_TOP = [
     *("cli", "shell", "report", "measure", "accept", "endure", "sequence", "record", "session"),
-    *("mock", "port", "bench", "yamlfile", "quantity", "cautions", "extras", "errors"),
+    *("mock", "port", "bench", "yamlfile", "quantity", "cautions", "wrapping", "extras", "errors"),
 ]
 
 CODEC_MAY_USE = {

@@ -60,7 +60,7 @@ def carry_out(args: argparse.Namespace) -> int:
     finally:
         progress.close()
     if args.json:
-        say_surely(json.dumps(found.to_json(), ensure_ascii=False, allow_nan=False, indent=2))
+        say_surely(json.dumps(found.to_json(), ensure_ascii=False, allow_nan=False, indent=2), as_is=True)
     else:
         for line in found.text():
             say_surely(line)

@@ -69,7 +69,7 @@ def carry_out(args: argparse.Namespace) -> int:
         fitted = len(set(times.failures)) >= 2 and args.shape is None
         figures, lines = _fitted(times, args) if fitted else _shown(times, args)
     if args.json:
-        say(json.dumps(figures, allow_nan=False, indent=2))
+        say(json.dumps(figures, allow_nan=False, indent=2), as_is=True)
         return 0
     for line in lines:
         say(line)

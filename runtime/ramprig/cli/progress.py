@@ -6,7 +6,6 @@ connection, a pipe that nobody reads) holds up nothing: whoever tells may be the
 
 from __future__ import annotations
 
-import os
 import sys
 import threading
 import time
@@ -14,11 +13,12 @@ from collections import deque
 from collections.abc import Callable
 from typing import TextIO
 
+from ramprig.wrapping import columns_of, wrapped
+
 REWRITE_EVERY_S = 0.1
 """A terminal's line is rewritten this often."""
 LINE_EVERY_S = 5.0
 """Elsewhere a line is written this often; a log of a night has some thousands of them."""
-WIDTH_DEFAULT = 80
 PATIENCE_S = 0.05
 """What is told is waited for so long, and not at all while something told before is still to be written."""
 PIECES_MAX = 1000
@@ -112,7 +112,7 @@ class Progress:
     ) -> None:
         self._stream = sys.stderr if stream is None else stream
         self._is_terminal = _is_terminal(self._stream) if is_terminal is None else is_terminal
-        self._width = _width(self._stream) if width is None else width
+        self._width = columns_of(self._stream) if width is None else width
         self._now = now
         self._next_s = now() if self._is_terminal else now() + LINE_EVERY_S
         self._shown = ""
@@ -135,6 +135,8 @@ class Progress:
 
     def line(self, text: str) -> None:
         """Write a line that stays, above the rewritten one."""
+        if self._is_terminal:
+            text = "\n".join(wrapped(line, self._width) for line in text.split("\n"))
         self._write(f"{self._erasing()}{text}\n")
 
     def close(self) -> None:
@@ -157,11 +159,3 @@ def _is_terminal(stream: TextIO) -> bool:
         return stream.isatty()
     except ValueError:
         return False
-
-
-def _width(stream: TextIO) -> int:
-    try:
-        columns = os.get_terminal_size(stream.fileno()).columns
-    except (OSError, ValueError):
-        return WIDTH_DEFAULT
-    return columns or WIDTH_DEFAULT  # a terminal that was never told its size says 0

@@ -7,20 +7,34 @@ from __future__ import annotations
 
 import contextlib
 import sys
+from typing import TextIO
 
 
-def say(text: str = "") -> None:
-    """A line of the result. Raises BrokenPipeError where nobody reads any more."""
-    print(text)
+def say(text: str = "", *, as_is: bool = False) -> None:
+    """A line of the result, on a terminal broken between words unless it is wanted `as_is`.
+
+    Raises BrokenPipeError where nobody reads any more.
+    """
+    print(text if as_is else _fitted(text, sys.stdout))
 
 
 def tell(text: str) -> None:
     """A line beside the result; never raises for a terminal that is gone."""
     with contextlib.suppress(OSError, ValueError):
-        print(text, file=sys.stderr, flush=True)
+        print(_fitted(text, sys.stderr), file=sys.stderr, flush=True)
 
 
-def say_surely(text: str) -> None:
-    """A line of the result of a run, which is over and stays what it is though nobody reads it; never raises."""
+def say_surely(text: str, *, as_is: bool = False) -> None:
+    """As `say`, of a run, which is over and stays what it is though nobody reads it; never raises."""
     with contextlib.suppress(OSError, ValueError):
-        print(text, flush=True)
+        print(text if as_is else _fitted(text, sys.stdout), flush=True)
+
+
+def _fitted(text: str, stream: TextIO | None) -> str:
+    """The text as it fits a terminal; elsewhere as it is."""
+    if stream is None or not stream.isatty():
+        return text
+    from ramprig.wrapping import columns_of, wrapped
+
+    columns = columns_of(stream)
+    return "\n".join(wrapped(line, columns) for line in text.split("\n"))

@@ -19,7 +19,7 @@ def carry_out(args: argparse.Namespace) -> int:
     """Print the schema."""
     import json
 
-    say(json.dumps(schema_of(args.kind), indent=2, ensure_ascii=False))
+    say(json.dumps(schema_of(args.kind), indent=2, ensure_ascii=False), as_is=True)
     return 0
 
 

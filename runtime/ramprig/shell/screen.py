@@ -35,6 +35,7 @@ from prompt_toolkit.styles import Style
 from ramprig.bench import Bench
 from ramprig.errors import UsageError
 from ramprig.quantity import format_duty
+from ramprig.wrapping import wrapped
 
 from . import commands as c
 from .completing import begun_word, choices, wants_file
@@ -46,7 +47,6 @@ from .stopkeys import StopKey
 from .taps import TappedInput
 from .words import read_line
 from .worker import Worker
-from .wrapping import wrapped
 
 REFRESH_S = 0.1
 """How often the status lines are drawn."""

@@ -16,6 +16,7 @@ from ramprig.cautions import cautions_lines
 from ramprig.errors import LinkError, RamprigError, StoppedByUser
 from ramprig.port.base import Port
 from ramprig.session.signals import StopOnSignals
+from ramprig.wrapping import wrapped
 
 from .desk import Desk
 from .keeper import Reopener
@@ -23,7 +24,6 @@ from .outbox import Outbox
 from .plain import Printer, run_plain
 from .stopkeys import StopKey
 from .worker import Worker
-from .wrapping import wrapped
 
 if TYPE_CHECKING:
     from prompt_toolkit.input.base import Input

@@ -2,13 +2,17 @@
 
 from __future__ import annotations
 
+import os
 import re
 import textwrap
+from typing import TextIO
 
 HANG = 2
 """Blanks before the rest of a line that has no columns, beyond its own."""
 COLUMNS_MIN = 20
 """No terminal is taken for narrower; one that was never told its size says 0."""
+COLUMNS_DEFAULT = 80
+"""Of what is no terminal, or was never told its size."""
 _COLUMN = re.compile(r"\S {2,}(?=\S)")
 
 
@@ -34,3 +38,12 @@ def wrapped(line: str, columns: int) -> str:
         expand_tabs=False,
     )
     return "\n".join(pieces)
+
+
+def columns_of(stream: TextIO) -> int:
+    """How wide the terminal is that the stream writes to."""
+    try:
+        columns = os.get_terminal_size(stream.fileno()).columns
+    except (OSError, ValueError):
+        return COLUMNS_DEFAULT
+    return columns or COLUMNS_DEFAULT  # a terminal that was never told its size says 0

@@ -1,4 +1,4 @@
-"""Lines of the shell on a terminal of some width: whole words, and columns that go on in their column."""
+"""Lines on a terminal of some width: whole words, and columns that go on in their column."""
 
 from __future__ import annotations
 
@@ -6,7 +6,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from ramprig.shell.wrapping import wrapped
+from ramprig.wrapping import wrapped
 
 LIMIT = "vent       rated_ma        900 mA               current that may flow for ever; 0 = trip off"
 
