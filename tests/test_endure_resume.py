@@ -12,7 +12,7 @@ from endure_crash import CYCLES, START_UNIX_S, Host, Killed, Process
 from ramprig.endure import resume as endure_resume
 from ramprig.endure.interruption import Cause, cause_of_manifest
 from ramprig.endure.resume import Broken, read_broken
-from ramprig.errors import FileError, Place, RecordError, Refused, UsageError, WrongDevice
+from ramprig.errors import FileError, Place, Refused, UsageError, WrongDevice
 from ramprig.record.reading import audit, read_events, read_manifest, read_notes, read_samples, sample_files
 from ramprig.sequence.outcome import Verdict
 from ramprig_link.words import Cause as BootCause
@@ -352,7 +352,7 @@ def test_a_run_that_is_under_way_cannot_be_resumed(tmp_path: Path) -> None:
         if host.record_exists() and not seen:
             other = Host.__new__(Host)
             other.__dict__ |= host.__dict__ | {"meddle": lambda host: None}
-            with pytest.raises(RecordError, match="another program"):
+            with pytest.raises(UsageError, match="this run is under way"):
                 other.run(Process(), resume=True)
             seen.append("refused")
             host.device.restart(BootCause.BROWNOUT)

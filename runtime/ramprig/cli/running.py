@@ -218,7 +218,7 @@ def how_far(far: HowFar) -> str:
     if far.cycle or far.cycles_done:
         text += f"  cycle {far.cycle or far.cycles_done}"
     if far.failed:
-        text += f"  {far.failed} failed"
+        text += f"  {far.failed} not as expected"
     return text
 
 

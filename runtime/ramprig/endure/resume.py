@@ -19,6 +19,7 @@ from ramprig.bench import Bench, load_bench
 from ramprig.errors import FileError, LinkError, RecordError, Refused, StoppedByUser, UsageError, WrongDevice
 from ramprig.port.base import Port
 from ramprig.quantity import format_duration
+from ramprig.record.appendfile import is_held
 from ramprig.record.events import from_rfc3339, jsonable, rfc3339
 from ramprig.record.folder import EVENTS_FILE
 from ramprig.record.parts import parts_of
@@ -85,6 +86,8 @@ def read_broken(folder: Path, *, now_unix_s: float) -> Broken:
     cause = cause_of_manifest(manifest)
     if cause is None:
         raise UsageError(f"{folder}: this run came to its end ({manifest.get('verdict')}); there is nothing to resume")
+    if cause is Cause.HOST and is_held(folder / EVENTS_FILE):
+        raise UsageError(f"{folder}: this run is under way: a program is still writing it")
     sequence, bench, changed = _made_from(folder, manifest)
     record = read_cycle_record(folder)
     so_far, open_number = _so_far(folder, manifest, record, now_unix_s)
