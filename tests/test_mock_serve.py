@@ -15,9 +15,11 @@ from pathlib import Path
 
 import pytest
 
-from ramprig.errors import LinkLost
+from ramprig.errors import FileError, LinkLost
 from ramprig.mock import MockDevice, MockSetup
 from ramprig.mock.__main__ import fault_help, main
+from ramprig.mock.core import why_not
+from ramprig.mock.core.device import SimulatedDevice
 from ramprig.mock.faults import FAULTS
 from ramprig.mock.limits import LimitStore
 from ramprig.mock.serve import LAG_MAX_NS, Server, TraceFile
@@ -322,6 +324,56 @@ def test_a_host_that_grants_the_time_gets_the_same_bytes_each_time() -> None:
     first, second = talk(), talk()
     assert first[0] == second[0]
     assert first[0].count(b"\nD") >= 270
+
+
+@pytest.fixture
+def own_signals() -> Iterator[None]:
+    """What `main` binds to signals is gone after the test."""
+    numbers = (signal.SIGTERM, signal.SIGINT)
+    before = [signal.getsignal(number) for number in numbers]
+    yield
+    for number, handler in zip(numbers, before, strict=True):
+        signal.signal(number, handler)
+
+
+@pytest.mark.usefixtures("own_signals")
+@pytest.mark.parametrize(
+    ("option", "code", "told"),
+    [
+        ("--trace", 2, "--trace {path}: No such file or directory"),
+        ("--link", 4, "the link {path} to the terminal cannot be made: No such file or directory"),
+    ],
+)
+def test_a_file_that_cannot_be_made_is_told_with_its_option(
+    option: str, code: int, told: str, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    path = tmp_path / "nowhere" / "file"
+    assert main([option, str(path)]) == code
+    assert capsys.readouterr().err.splitlines() == [f"ramprig mock: {told.format(path=path)}"]
+
+
+@pytest.mark.usefixtures("own_signals")
+def test_a_place_for_control_that_is_taken_is_told(capsys: pytest.CaptureFixture[str]) -> None:
+    with socket.create_server(("127.0.0.1", 0)) as taken:
+        place = f"127.0.0.1:{taken.getsockname()[1]}"
+        assert main(["--control", place]) == 4
+    assert capsys.readouterr().err.startswith(f"ramprig mock: cannot listen for control on {place}: ")
+
+
+def test_limits_that_cannot_be_kept_are_told_with_the_file(tmp_path: Path) -> None:
+    path = tmp_path / "nowhere" / "limits.json"
+    store = LimitStore(MockSetup().board, path=path)
+    with pytest.raises(FileError, match=f"the board's limits cannot be kept in {path}: No such file"):
+        store.set("lease_ms", 0, 400)
+
+
+@pytest.mark.skipif(why_not() is not None, reason=why_not() or "")
+def test_a_store_of_the_core_that_cannot_be_read_or_kept_is_told_with_the_file(tmp_path: Path) -> None:
+    with pytest.raises(FileError, match=f"cannot read the board's store {tmp_path}"):
+        SimulatedDevice(MockSetup(limits_path=tmp_path))
+    path = tmp_path / "nowhere" / "store"
+    with pytest.raises(FileError, match=f"the board's limits cannot be kept in {path}: No such file"):
+        SimulatedDevice(MockSetup(limits_path=path))
 
 
 def test_the_help_tells_every_fault(capsys: pytest.CaptureFixture[str]) -> None:

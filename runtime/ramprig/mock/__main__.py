@@ -13,7 +13,7 @@ from collections.abc import Sequence
 from dataclasses import replace
 from pathlib import Path
 
-from ramprig.errors import RamprigError, UsageError
+from ramprig.errors import PortUnavailable, RamprigError, UsageError
 
 from .device import MockDevice
 from .endpoint import Endpoint, PtyEndpoint, TcpEndpoint
@@ -76,8 +76,11 @@ class Commands:
         threading.Thread(target=self._read, args=(sys.stdin,), daemon=True).start()
 
     def listen(self, host: str, port: int) -> str:
-        """Take lines on a TCP port too; returns where."""
-        listener = socket.create_server((host, port))
+        """Take lines on a TCP port too; returns where. Raises PortUnavailable."""
+        try:
+            listener = socket.create_server((host, port))
+        except OSError as error:
+            raise PortUnavailable(f"cannot listen for control on {host}:{port}: {error.strerror or error}") from error
         threading.Thread(target=self._accept, args=(listener,), daemon=True).start()
         return "control socket://{}:{}".format(*listener.getsockname()[:2])
 
@@ -132,7 +135,10 @@ def serve(options: argparse.Namespace) -> int:
 
 def _trace(device: MockDevice, path: Path | None, ends: contextlib.ExitStack) -> None:
     if path is not None:
-        file = ends.enter_context(path.open("w", encoding="ascii", newline=""))
+        try:
+            file = ends.enter_context(path.open("w", encoding="ascii", newline=""))
+        except OSError as error:
+            raise UsageError(f"--trace {path}: {error.strerror}") from error
         device.trace = TraceFile(file, axes=device.board.axes)
 
 

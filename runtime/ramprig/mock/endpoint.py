@@ -72,10 +72,15 @@ class PtyEndpoint:
         os.set_blocking(self._master, False)
         self._here = False
         if self._link is not None:
-            fresh = self._link.with_name(self._link.name + ".new")
-            fresh.unlink(missing_ok=True)
-            fresh.symlink_to(self._name)
-            os.replace(fresh, self._link)
+            try:
+                fresh = self._link.with_name(self._link.name + ".new")
+                fresh.unlink(missing_ok=True)
+                fresh.symlink_to(self._name)
+                os.replace(fresh, self._link)
+            except (OSError, ValueError) as error:
+                self.unplug()
+                why = error.strerror if isinstance(error, OSError) else error
+                raise PortUnavailable(f"the link {self._link} to the terminal cannot be made: {why}") from error
 
     def unplug(self) -> None:
         """Close the pair: a host that has it open meets an error."""

@@ -111,6 +111,16 @@ class LimitStore:
         rows: dict[str, list[int]] = {}
         for name, index in self:
             rows.setdefault(name, []).append(self._values[name, index])
-        fresh = self._path.with_name(self._path.name + ".new")
-        fresh.write_text(json.dumps(rows, indent=1), "utf-8")
-        os.replace(fresh, self._path)
+        keep(self._path, json.dumps(rows, indent=1).encode("utf-8"))
+
+
+def keep(path: Path, content: bytes) -> None:
+    """Write a board's limits as a whole and rename them into place; raises FileError where that cannot be."""
+    try:
+        fresh = path.with_name(path.name + ".new")
+        fresh.write_bytes(content)
+        os.replace(fresh, path)
+    except OSError as error:
+        raise FileError(
+            f"the board's limits cannot be kept in {path}: {error.strerror}", wanted="name a file that can be written"
+        ) from error

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import ctypes
-import os
 from collections.abc import Callable
 from dataclasses import replace
 from pathlib import Path
@@ -12,6 +11,7 @@ from ramprig.errors import FileError, UsageError
 from ramprig.mock.board import Board
 from ramprig.mock.device import schedule
 from ramprig.mock.faults import FaultSwitches
+from ramprig.mock.limits import keep
 from ramprig.mock.setup import MockSetup
 from ramprig_link.words import LIMITS, Cause
 
@@ -75,7 +75,10 @@ class SimulatedDevice:
         self._stores[self._board.serial] = fresh
         path = self.setup.limits_path
         if path is not None and path.exists():
-            content = path.read_bytes()
+            try:
+                content = path.read_bytes()
+            except OSError as error:
+                raise FileError(f"cannot read the board's store {path}: {error.strerror}") from error
             if len(content) != len(fresh):
                 raise FileError(f"{path} is no store of this board", wanted="delete it to begin with the defaults")
             self._core.store = content
@@ -175,6 +178,4 @@ class SimulatedDevice:
         path: Path | None = self.setup.limits_path
         if path is None or self._board is not self.setup.board or not self._core.call("took_stored"):
             return
-        fresh = path.with_name(path.name + ".new")
-        fresh.write_bytes(self._core.store)
-        os.replace(fresh, path)
+        keep(path, self._core.store)
