@@ -341,7 +341,9 @@ def own_signals() -> Iterator[None]:
     ("option", "code", "told"),
     [
         ("--trace", 2, "--trace {path}: No such file or directory"),
-        ("--link", 4, "the link {path} to the terminal cannot be made: No such file or directory"),
+        pytest.param(
+            *("--link", 4, "the link {path} to the terminal cannot be made: No such file or directory"), marks=posix
+        ),
     ],
 )
 def test_a_file_that_cannot_be_made_is_told_with_its_option(
