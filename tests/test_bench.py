@@ -13,7 +13,10 @@ from hypothesis import strategies as st
 from jsonschema import Draft202012Validator
 
 from ramprig.bench import Bench, bench_of_text, bench_schema, duty_parts, echo_lines, load_bench
+from ramprig.bench.limits import OFF_AT_ZERO
 from ramprig.errors import FileError, UsageError
+from ramprig.measure.tightening import tightened
+from ramprig.mock.limits import OFF_AT_ZERO as BOARDS_OFF_AT_ZERO
 from ramprig.quantity import DUTY, QuantityError, parse
 from ramprig.yamlfile import Listing, Mapping, Node, Scalar, load_text
 from ramprig_link.words import LIMITS, Per
@@ -233,6 +236,23 @@ def test_a_motor_without_an_encoder_needs_a_dwell_of_its_own() -> None:
         bench_of_text(text.replace("dwell: 2 s", "dwell: 2 s\n      speed: 60 rpm"))
     with pytest.raises(FileError, match="a stall limit needs an encoder"):
         bench_of_text(text.replace("dwell: 2 s", "dwell: 2 s\n      stall: {duty: 20 %, within: 1 s}"))
+
+
+def test_no_limit_is_rounded_to_none_at_all() -> None:
+    """Of these limits 0 is none to the board: 20 rpm of 64 counts a turn are 0.68 counts in 32 ms."""
+    assert {limit.name for limit in LIMITS.values() if re.search("0 = .* off", limit.text)} == OFF_AT_ZERO
+    assert OFF_AT_ZERO == BOARDS_OFF_AT_ZERO
+    text = VENT_FILE.read_text("utf-8")
+    coarse = text.replace("on: motor shaft", "on: output shaft")
+    at_30 = bench_of_text(coarse.replace("speed: 75 rpm", "speed: 30 rpm"))
+    assert at_30.limits()["speed_counts", 0] == 1
+    with pytest.raises(FileError, match=r"'20 rpm', which the board would take for no limit at all; 29\.3 rpm is the"):
+        bench_of_text(coarse.replace("speed: 75 rpm", "speed: 20 rpm")).limits()
+    assert tightened(at_30, "vent", speed_rpm=20.0).limits()["speed_counts", 0] == 1
+    with pytest.raises(FileError, match=r"a speed limit of 0 rpm is no limit at all; remove it"):
+        bench_of_text(text.replace("speed: 75 rpm", "speed: 0 rpm"))
+    with pytest.raises(FileError, match=r"a stall duty of 0 % is no limit at all; write 'stall: off'"):
+        bench_of_text(text.replace("stall: {duty: 15 %", "stall: {duty: 0 %"))
 
 
 def test_the_board_that_is_there_must_have_the_axes_and_the_duty() -> None:

@@ -16,6 +16,10 @@ LimitKey = tuple[str, int]
 """The limit's name as in the protocol, and the axis or servo (0 for the device's own)."""
 
 
+OFF_AT_ZERO = frozenset({"under_mv", "rated_ma", "stall_duty", "speed_counts"})
+"""Limits of which 0 means to the board that the trip is off: no other value may be rounded to it."""
+
+
 class Scale(Enum):
     """How a limit's number depends on the board's tick."""
 
@@ -58,6 +62,9 @@ class Setting:
             low, high = self._shown(limit.lowest, tick_us), self._shown(limit.highest, tick_us)
             wanted = f"the protocol's {self.item} takes {low} to {high}"
             raise self.mark.error(f"found '{self.text}', beyond what a board can keep", wanted)
+        if number == 0 and self.value > 0 and self.item in OFF_AT_ZERO:
+            least = f"{self._shown(1, tick_us)} is the least that it can hold"
+            raise self.mark.error(f"found '{self.text}', which the board would take for no limit at all", least)
         return number
 
     def carried_out(self, tick_us: int) -> str:

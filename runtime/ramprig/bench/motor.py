@@ -197,10 +197,15 @@ def _limits(fields: Fields) -> _Limits:
     settings |= fields[_CURRENT] | (standstill or {}) | (stalled or {})
     if fields.said(_STALL) and stalled is None:
         settings["stall_duty"] = setting("stall_duty", Quantity(DUTY, Fraction(0), "off"), fields.at(_STALL))
+    elif stalled is not None and stalled["stall_duty"].value == 0:
+        raise stalled["stall_duty"].mark.error("a stall duty of 0 % is no limit at all", "write 'stall: off' for none")
+    speed = fields.get(_SPEED)
+    if speed is not None and speed.value == 0:
+        raise fields.error(_SPEED, f"a speed limit of {speed} is no limit at all", "remove it for none")
     stall, ceiling = settings.get("stall_duty"), settings["ceiling_duty"]
     if stall is not None and stall.value > ceiling.value:
         raise stall.mark.error(f"found '{stall.text}', above the ceiling of the duty", f"at most {ceiling.text}")
-    return _Limits(settings, fields.get(_SPEED), {key.name: fields.at(key) for key in (_STALL, _WRONG_WAY, _SPEED)})
+    return _Limits(settings, speed, {key.name: fields.at(key) for key in (_STALL, _WRONG_WAY, _SPEED)})
 
 
 _AXIS = Key("axis", CountShape(0, AXES_MAX - 1), "the board's number of the motor output", required=True)

@@ -7,6 +7,7 @@ from fractions import Fraction
 
 from ramprig.bench import Bench, Motor, Setting
 from ramprig.bench.limits import Scale, setting, speed_setting
+from ramprig.errors import FileError
 from ramprig.quantity import CURRENT, DUTY, DUTY_RATE, SPEED, Quantity, format_current, format_duty, format_speed
 
 
@@ -59,6 +60,11 @@ def cut_at_once(bench: Bench, motor: str) -> Bench:
 
 
 def _is_tighter(limit: Setting, motor: Motor) -> bool:
-    """Whether a limit, lower being tighter, is below the motor's own; 0 is no limit at all for the speed."""
+    """Whether a limit, lower being tighter, is below the motor's own; 0 is no limit at all for the speed, and one that
+    the board could not hold, such as a speed of less than a count a window, is none either."""
     own = motor.limits(1000)[limit.item]
-    return limit.in_units(1000) < own or (limit.item == "speed_counts" and own == 0)
+    try:
+        number = limit.in_units(1000)
+    except FileError:
+        return False
+    return number < own or (limit.item == "speed_counts" and own == 0)
