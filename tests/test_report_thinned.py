@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import csv
 import io
+import re
 import shutil
 from pathlib import Path
 
@@ -22,6 +23,8 @@ from ramprig.report.envelope import Envelope
 from ramprig.report.facts import gather
 from ramprig.report.kept import read_ranges, said_of_thinning, thinning_of
 from ramprig.report.making import intervals_csv, make_report
+from ramprig.report.plots import against_time, overlays
+from ramprig.report.svg import RIGHT, WIDTH
 
 
 @pytest.fixture(scope="module")
@@ -193,3 +196,24 @@ def test_without_cycles_the_intervals_are_of_the_time_that_ranges_fit_into(tmp_p
     low, _, high = found.totals["vent.duty_pct"]
     assert low == 0
     assert high == pytest.approx(60.0, abs=0.5)  # the turning point of a sweep, which few of the rows show
+
+
+def test_rows_far_apart_are_joined_where_they_were_thinned_and_said_to_be_what_was_kept(
+    thinned: Path, tmp_path: Path
+) -> None:
+    folder = tmp_path / "rows"
+    shutil.copytree(thinned, folder)
+    (folder / CYCLE_RANGES_FILE).unlink()
+    (folder / INTERVAL_RANGES_FILE).unlink()
+    facts = gather(folder)
+    plots = against_time(facts, digest_samples(facts))
+    assert all(plot.caption.endswith(("of the rows that were kept)", "(every row that was kept)")) for plot in plots)
+    duty = next(plot for plot in plots if plot.caption.startswith("vent: duty"))
+    (line,) = re.findall(r'<path d="(M[^"]+)" fill="none"', duty.svg)
+    assert line.count("h.1") == 0, "rows 500 ms apart would stand alone"
+    drawn = overlays(facts, digest_samples(facts))
+    assert drawn
+    assert all(plot.caption.endswith("overlaid (of the rows that were kept)") for plot in drawn)
+    for plot in drawn:
+        for path in re.findall(r'<path d="(M[^"]+)" fill="none" stroke="#', plot.svg):
+            assert max(float(x) for x in re.findall(r"(?:M| )([\d.]+) [\d.]+", path)) <= WIDTH - RIGHT + 0.1

@@ -79,13 +79,18 @@ def compared(reads: list[Read]) -> str:
 def _facts_rows(reads: list[Read]) -> list[list[str]]:
     pick: dict[str, Callable[[Read], str]] = {
         "verdict": lambda read: read.facts.verdict,
-        "expectations failed": lambda read: str(sum(found.failed for found in read.facts.expectations.values())),
+        "judgements that did not hold": lambda read: _judgements(read.facts),
         "rows": lambda read: str(read.digest.rows),
         "lasted, s": lambda read: f"{read.digest.last_s - read.digest.first_s:.1f}",
         "cycles or passes begun": lambda read: str(len(read.facts.passes)),
         "trips": lambda read: str(read.facts.counts["tripped"]),
     }
     return [[page.text(name), *(page.text(of(read)) for read in reads)] for name, of in pick.items()]
+
+
+def _judgements(facts: Facts) -> str:
+    found = facts.expectations.values()
+    return f"{sum(each.failed for each in found)} of {sum(each.judged for each in found)}"
 
 
 def _range_rows(reads: list[Read]) -> list[list[str]]:
@@ -112,6 +117,6 @@ def _expectation_rows(reads: list[Read]) -> list[list[str]]:
                 cells.append(OTHERWISE)
                 continue
             mark = "&#10003; pass" if not found.failed else f"&#10007; FAIL {found.failed} of {found.judged}"
-            cells.append(f"{mark}; {page.text(found.last_found)}")
+            cells.append(f"{mark}; {page.text(found.span or found.last_found)}")
         rows.append([page.text(text), *cells])
     return rows

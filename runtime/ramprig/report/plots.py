@@ -14,6 +14,7 @@ from .around import Around
 from .digest import Digest, Level
 from .envelope import Band
 from .facts import Document, Facts
+from .kept import thinning_of
 from .svg import BLUE, EVENTS_MAX, GREEN, GREY, ORANGE, PURPLE, SERIES, VERMILION, Chart, padded
 from .trends import Trend
 
@@ -84,13 +85,34 @@ def moments_of(facts: Facts, digest: Digest) -> list[Moment]:
 def against_time(facts: Facts, digest: Digest) -> list[Plot]:
     """One plot for each column that is shown."""
     moments = moments_of(facts, digest)
+    kept = _kept(facts, digest)
     plots = []
     for column in digest.columns:
         band = digest.band(column)
         if np.isnan(band.mean).all():
             continue
-        plots.append(_time_plot(column, band, digest, moments, _levels(facts, column)))
+        plots.append(_time_plot(column, band, digest, moments, _levels(facts, column), kept))
     return plots
+
+
+@dataclass(frozen=True, slots=True)
+class _Kept:
+    """What of the samples is drawn: `text` says where that is not all, and rows up to `apart_s` apart are joined."""
+
+    text: str
+    apart_s: float
+
+
+def _kept(facts: Facts, digest: Digest) -> _Kept:
+    rule = thinning_of(facts)
+    if rule is None:
+        return _Kept("", 0.0)
+    loggings = (facts.manifest.get("samples") or {}).get("loggings") or []
+    period_s = max((float(each["period_ticks"]) for each in loggings), default=0.0) * facts.tick_us / 1e6
+    widened = ", and over the ranges that were recorded where rows were left out"
+    return _Kept(
+        widened if digest.envelope.is_widened else ", of the rows that were kept", (rule.every or 1) * period_s
+    )
 
 
 def _levels(facts: Facts, column: str) -> list[tuple[float, str]]:
@@ -115,7 +137,12 @@ def _levels(facts: Facts, column: str) -> list[tuple[float, str]]:
 
 
 def _time_plot(
-    column: str, band: Band, digest: Digest, moments: Sequence[Moment], levels: Sequence[tuple[float, str]]
+    column: str,
+    band: Band,
+    digest: Digest,
+    moments: Sequence[Moment],
+    levels: Sequence[tuple[float, str]],
+    kept: _Kept,
 ) -> Plot:
     text, unit = label_of(column)
     scale, symbol = time_unit(digest.last_s - digest.first_s)
@@ -123,16 +150,15 @@ def _time_plot(
     low, high = float(np.nanmin(band.least)), float(np.nanmax(band.greatest))
     near = [value for value, _ in levels if low - 0.6 * (high - low) <= value <= high + 0.6 * (high - low)]
     chart = Chart(x_range, padded(min([low, *near]), max([high, *near])), unit, f"time of the run, {symbol}")
-    times, gaps = _with_gaps(band, digest.envelope.width_s)
+    times, gaps = _with_gaps(band, digest.envelope.width_s, kept.apart_s)
     least, mean, greatest = (_gapped(values, gaps) for values in (band.least, band.mean, band.greatest))
     if band.is_exact:
         chart.line(times / scale, mean)
-        how = "every sample"
+        how = "every sample" if not kept.text else "every row that was kept"
     else:
         chart.band(times / scale, least, greatest)
         chart.line(times / scale, mean, width=1.0)
-        how = f"line: mean, area: least to greatest, each over {digest.envelope.width_s:.3g} s"
-        how += ", and over the ranges that were recorded where rows were left out" if digest.envelope.is_widened else ""
+        how = f"line: mean, area: least to greatest, each over {digest.envelope.width_s:.3g} s{kept.text}"
     for value, name in levels:
         chart.level(value, f"{name} {value:g} {unit}")
     for moment in moments:
@@ -140,9 +166,9 @@ def _time_plot(
     return Plot(f"{text} ({how})", chart.text(f"{text} in {unit} against time, {low:g} to {high:g}"))
 
 
-def _with_gaps(band: Band, width_s: float) -> tuple[Floats, NDArray[np.int64]]:
+def _with_gaps(band: Band, width_s: float, apart_s: float) -> tuple[Floats, NDArray[np.int64]]:
     """The times with one more wherever samples are missing, and where those stand."""
-    gaps = np.flatnonzero(np.diff(band.time_s) > 3.5 * width_s) + 1
+    gaps = np.flatnonzero(np.diff(band.time_s) > max(3.5 * width_s, 1.5 * apart_s)) + 1
     return np.insert(band.time_s, gaps, band.time_s[gaps - 1] + width_s), gaps
 
 
@@ -163,22 +189,26 @@ def overlays(facts: Facts, digest: Digest) -> list[Plot]:
             bands = [window.envelope.band(column) for window in digest.windows]
             if any(not len(band.mean) or np.isnan(band.mean).all() for band in bands):
                 continue
-            plots.append(_overlay(column, what, digest, bands))
+            plots.append(_overlay(column, what, digest, bands, is_thinned=thinning_of(facts) is not None))
     return plots
 
 
-def _overlay(column: str, what: str, digest: Digest, bands: Sequence[Band]) -> Plot:
+def _overlay(column: str, what: str, digest: Digest, bands: Sequence[Band], *, is_thinned: bool) -> Plot:
     text, unit = label_of(column)
     longest = max(window.end_s - window.begin_s for window in digest.windows)
     low = min(float(np.nanmin(band.least)) for band in bands)
     high = max(float(np.nanmax(band.greatest)) for band in bands)
     chart = Chart((0.0, longest), padded(low, high), unit, f"time in the {what}, s", height=190)
     for window, band, (colour, dashes) in zip(digest.windows, bands, SERIES, strict=False):
+        times = np.minimum(band.time_s, longest)  # the middle of the last interval may lie behind the end
         if not band.is_exact:
-            chart.band(band.time_s, band.least, band.greatest, colour=colour)
-        chart.line(band.time_s, band.mean, colour=colour, dashes=dashes)
+            chart.band(times, band.least, band.greatest, colour=colour)
+        chart.line(times, band.mean, colour=colour, dashes=dashes)
         chart.name(f"{what} {window.number}", colour=colour, dashes=dashes)
-    return Plot(f"{text}, first and last {what} overlaid", chart.text(f"{text} of several {what}es over each other"))
+    rows = " (of the rows that were kept)" if is_thinned else ""
+    return Plot(
+        f"{text}, first and last {what} overlaid{rows}", chart.text(f"{text} of several {what}es over each other")
+    )
 
 
 def by_cycle(facts: Facts, found: Sequence[Trend]) -> list[Plot]:

@@ -130,7 +130,11 @@ def method(facts: Facts) -> str:
         ("clocks", _clock_text(facts)),
     ]
     rows = [
-        [page.text(entry.get("role")), page.text(entry.get("name")), f"<code>{page.text(entry.get('sha256'))}</code>"]
+        [
+            page.short(entry.get("role")),
+            page.place(str(entry.get("name"))),
+            f"<code>{page.text(entry.get('sha256'))}</code>",
+        ]
         for entry in manifest.get("inputs") or []
     ]
     return page.facts(pairs) + page.table(["file", "name", "SHA-256 of the copy"], rows) + _sequence_texts(facts)

@@ -95,7 +95,10 @@ class Chart:
         """A line, broken where a value is NaN."""
         path = _path(self.x(xs), self.y(ys), ys)
         dashed = f' stroke-dasharray="{dashes}"' if dashes else ""
-        self._parts.append(f'<path d="{path}" fill="none" stroke="{colour}" stroke-width="{width:g}"{dashed}/>')
+        # round caps make a dot of a value that stands alone
+        self._parts.append(
+            f'<path d="{path}" fill="none" stroke="{colour}" stroke-width="{width:g}" stroke-linecap="round"{dashed}/>'
+        )
 
     def band(self, xs: Floats, low: Floats, high: Floats, *, colour: str = BLUE) -> None:
         """The area between two lines, as one shape for each stretch without NaN."""
