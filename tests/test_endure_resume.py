@@ -259,6 +259,8 @@ def test_a_full_disk_stops_the_run_and_it_goes_on_when_there_is_room(tmp_path: P
     result = host.run(Process(full_at=full_at))
     assert result.outcome.verdict is Verdict.NOT_RECORDED
     assert result.outcome.stop_confirmed
+    assert "by the user" not in result.outcome.sentence  # nobody did
+    assert "; cycles: " in result.outcome.sentence
     manifest = read_manifest(host.run_folder)
     assert cause_of_manifest(manifest) is Cause.DISK
     confirmed = host.record().counted.confirmed

@@ -31,6 +31,8 @@ OFF_SEEN_S = 6.0
 TRAIL_WAIT_S = 1.0
 """The trail is frozen within this time of a trip."""
 POLL_S = 0.05
+BY_USER = "stopped by the user"
+"""Or by whoever else asked the session to stop: who that was is known above."""
 STOPS_MAX = 3
 """So often a stop that is asked for while the run is ended is confirmed, and the ending gone on with."""
 
@@ -161,7 +163,7 @@ class _Run:
         except Ended as ended:
             return _End(ended.verdict, ended.sentence, ended.place)
         except StoppedByUser:
-            return _End(Verdict.STOPPED, "stopped by the user", executive.place)
+            return _End(Verdict.STOPPED, BY_USER, executive.place)
         except Refused as refused:
             return self._refused(refused)
         except RecordError as error:
@@ -200,7 +202,7 @@ class _Run:
         try:
             executive.wait_for_trip()
         except StoppedByUser:
-            return _End(Verdict.STOPPED, "stopped by the user", executive.place)
+            return _End(Verdict.STOPPED, BY_USER, executive.place)
         except LinkError as error:
             return _End(Verdict.LINK_LOST, str(error), executive.place)
         if executive.trip is not None:

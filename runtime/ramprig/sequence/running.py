@@ -30,7 +30,7 @@ from .columns import bench_columns
 from .compile import compile_plan
 from .cycle_run import CycleBook, RunSoFar
 from .cycle_watch import CycleWatch, Watched, Watching
-from .ending import Bounds, run_plan
+from .ending import BY_USER, Bounds, run_plan
 from .executive import Progress
 from .listeners import Listeners
 from .outcome import Outcome, Tally, Verdict
@@ -260,12 +260,19 @@ def _bounds(wish: RunWish, clock: Clock) -> Bounds | None:
 
 def _explained(outcome: Outcome, troubles: list[Trouble], asked_by: Callable[[], str] | None) -> Outcome:
     """The outcome with who or what asked for a stop: a disk in trouble asks for one too."""
+    name = asked_by() if asked_by is not None else ""
+    by = f"{BY_USER} ({name})" if name else BY_USER
+    if outcome.verdict is Verdict.NOT_RECORDED:  # which says why itself
+        by = "stopped" if troubles and not name else by
+        return replace(outcome, sentence=outcome.sentence.replace(BY_USER, by, 1))
     if outcome.verdict is not Verdict.STOPPED:
         return outcome
-    if troubles:
-        return replace(outcome, verdict=Verdict.NOT_RECORDED, sentence=f"stopped because {troubles[0].text}")
-    name = asked_by() if asked_by is not None else ""
-    return replace(outcome, sentence=f"{outcome.sentence} ({name})") if name else outcome
+    if not troubles:
+        return replace(outcome, sentence=outcome.sentence.replace(BY_USER, by, 1))
+    why = f"stopped because {troubles[0].text}"
+    by_it = BY_USER in outcome.sentence
+    sentence = outcome.sentence.replace(BY_USER, why, 1) if by_it else f"{why}; {outcome.sentence}"
+    return replace(outcome, verdict=Verdict.NOT_RECORDED, sentence=sentence)
 
 
 class _Keeping:
