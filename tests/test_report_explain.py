@@ -108,6 +108,24 @@ def test_a_full_disk_is_told(tmp_path: Path) -> None:
     assert key_of(folder) == "disk"
 
 
+@pytest.mark.parametrize(
+    ("reason", "key"),
+    [
+        ("stopped by the user (SIGTERM); cycles: 2 commanded", "user"),
+        ("ended in order at its latest end, 2026-12-01T06:00:00Z, before all steps were carried out", "latest end"),
+        ("the board switched its outputs off, and not for this run (line stop)", "board"),
+        ("stopped because wear is not judged from cycle 5 on, by a fault of this program (ValueError: x)", "unjudged"),
+    ],
+)
+def test_what_stopped_a_run_is_told_apart_though_the_disk_is_filling_up(tmp_path: Path, reason: str, key: str) -> None:
+    folder = passed_run(tmp_path)
+    trouble = [{"kind": "disk_low", "text": "the disk is filling up: 59 MiB free, 256 MiB are wanted"}]
+    change_manifest(folder, verdict="stopped", stop_reason=reason, disk_troubles=trouble)
+    if key == "unjudged":
+        add_event(folder, kind="wear_unjudged", turn="cycle", number=5, text="x", trace="x")
+    assert key_of(folder) == key
+
+
 def test_a_watchdog_and_a_self_test_are_told(tmp_path: Path) -> None:
     folder = passed_run(tmp_path)
     change_manifest(folder, verdict="tripped", stop_reason="the device restarted")

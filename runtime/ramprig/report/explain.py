@@ -345,7 +345,7 @@ def _late_order(facts: Facts, event: Document) -> Iterator[Cause]:
 def _others(facts: Facts, verdict: str) -> Iterator[Cause]:
     reason = str(facts.manifest.get("stop_reason") or "")
     troubles = [str(trouble.get("text")) for trouble in facts.manifest.get("disk_troubles") or []]
-    if verdict == "not recorded" or (troubles and verdict != "failed"):
+    if verdict == "not recorded":
         yield Cause(
             key="disk",
             sentence="the log could no longer be written, so the motors were stopped",
@@ -354,13 +354,7 @@ def _others(facts: Facts, verdict: str) -> Iterator[Cause]:
             weight=0.95,
         )
     elif verdict == "stopped":
-        yield Cause(
-            key="user",
-            sentence="a person or the system asked for the stop",
-            evidence=(reason, *_stop_verdict(facts)),
-            next_step="Nothing is wrong by this alone; whoever stopped it knows why.",
-            weight=0.9,
-        )
+        yield _stopped(facts, reason)
     elif verdict == BROKEN_OFF:
         yield _broken_off(facts)
     elif verdict == "failed":
@@ -376,6 +370,36 @@ def _others(facts: Facts, verdict: str) -> Iterator[Cause]:
             next_step="The board's word says why; `ramprig check` shows what the plan asks for.",
             weight=0.9,
         )
+
+
+_STOPS = {
+    "latest end": (
+        "it came to its latest end before all steps were carried out",
+        "`ramprig resume` with --at-most goes on, where it has cycles.",
+    ),
+    "unjudged": (
+        "this program could no longer judge the wear that was to end the run",
+        "Report the fault with the event 'wear_unjudged'; `ramprig resume` goes on with the test.",
+    ),
+    "board": (
+        "the outputs were switched off from elsewhere: a stop at the board, or by another program",
+        "Find out who or what stopped it before it is run again.",
+    ),
+    "user": (
+        "a person or the system asked for the stop",
+        "Nothing is wrong by this alone; whoever stopped it knows why.",
+    ),
+}
+"""What is said of each kind of stop, and what to do."""
+_STOP_WORDS = {"latest end": "ended in order at its latest end", "board": "the board switched its outputs off"}
+
+
+def _stopped(facts: Facts, reason: str) -> Cause:
+    key = next((key for key, words in _STOP_WORDS.items() if reason.startswith(words)), "user")
+    if facts.of("wear_unjudged") and reason.startswith("stopped because wear"):
+        key = "unjudged"
+    sentence, next_step = _STOPS[key]
+    return Cause(key=key, sentence=sentence, evidence=(reason, *_stop_verdict(facts)), next_step=next_step, weight=0.9)
 
 
 def _broken_off(facts: Facts) -> Cause:
