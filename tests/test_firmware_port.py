@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import ctypes
 import os
 import shutil
 import subprocess
@@ -199,6 +200,18 @@ def test_what_is_built_is_kept_for_the_next_time(tmp_path: Path, monkeypatch: py
     assert build.build("right", [right], (), shared=False) == first
     right.write_text("int main(void) { return X; }\n")
     assert build.build("right", [right], ("-DX=1",), shared=False) != first
+
+
+@needs_compiler
+def test_a_compiler_that_cannot_see_all_files_at_once_builds_them_one_by_one(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr(build, "cache_folder", lambda: tmp_path / "cache")
+    monkeypatch.setattr(build, "WHOLE", ("--no-such-option",))
+    right = tmp_path / "right.c"
+    right.write_text("int right(void) { return 7; }\n")
+    path = build.build("right", [right], (), shared=True)
+    assert ctypes.CDLL(str(path)).right() == 7
 
 
 @needs_compiler
