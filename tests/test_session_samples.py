@@ -218,3 +218,41 @@ def test_samples_behind_a_hole_are_delivered_when_a_request_finds_the_link_lost(
     assert [gap.reason for gap in accounting.gaps] == [GapReason.LINK_LOST]
     assert accounting.received == len(rig.ticks())
     assert rig.ticks()[-1] > accounting.gaps[0].first_tick
+
+
+def test_samples_that_waited_for_more_are_delivered_when_the_link_is_lost(monkeypatch: pytest.MonkeyPatch) -> None:
+    rig = Rig()
+    rig.session.log(2, MASK)
+    rig.session.arm(500)
+    read, turns = rig.mock.read_until, [0]
+
+    def lose(until_s: float) -> bytes:
+        turns[0] += 1
+        if turns[0] > 12:
+            raise LinkLost("cut")
+        return read(until_s)
+
+    monkeypatch.setattr(rig.session._core.pump, "_read_until", lose)
+    begin_s, before = rig.now, len(rig.blocks)
+    with pytest.raises(LinkLost):
+        rig.pump(5.0)
+    accounting = rig.session.accounting
+    assert accounting is not None
+    assert accounting.received == len(rig.ticks())
+    assert rig.now - begin_s > 0.5
+    assert sum(map(len, rig.blocks[before:])) == pytest.approx((rig.now - begin_s) / 0.002, abs=60)
+
+
+def test_samples_of_a_longer_pump_come_in_few_blocks() -> None:
+    """Nothing is late in virtual time, so they are read together; the same samples as in many short pumps."""
+    long, short = Rig(), Rig()
+    for rig in (long, short):
+        rig.session.log(10, MASK)
+        rig.session.arm(500)
+    long.pump(2.0)
+    for _ in range(200):
+        short.session.pump(short.now + 0.01)
+    assert np.array_equal(long.ticks(), short.ticks()[: len(long.ticks())])
+    values = [np.concatenate([block.values for block in rig.blocks]) for rig in (long, short)]
+    assert np.array_equal(values[0], values[1][: len(values[0])])
+    assert len(long.blocks) <= 3 < len(short.blocks)

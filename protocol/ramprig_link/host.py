@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import dataclass
 from functools import lru_cache
+from typing import NamedTuple
 
 from .check import seal
 from .faults import FieldError, LinkBusy, LinkMisuse, LinkSilent, SampleFault
@@ -20,6 +21,8 @@ from .words import DEVICE_LINE_MAX, HOST_LINE_MAX, TAG_URGENT, WORDS
 
 PREPARED_KEPT = 512  # requests: a beat under each tag, and as many others
 AGAIN_WITHIN_LINES = 16  # a line asked for by `again` is taken for a new one after this many others
+WAITING_MAX = 64  # data lines that are kept back to be read together
+_DATA_HEADS = tuple(b"D%02x " % number for number in range(256))
 
 # A stop goes out from signal handlers and other threads, so its bytes are made beforehand. The LF in front ends a
 # half-sent line, which then counts as garbled.
@@ -82,7 +85,10 @@ class Noticed:
 
 @dataclass(frozen=True, slots=True)
 class Sampled:
-    """A data line; `missed` were lost just before it. `again` tells that it is an old one sent anew on request."""
+    """A data line, or several that follow each other, `number` being the last one's; `missed` were lost just before.
+
+    `again` tells that it is an old one sent anew on request.
+    """
 
     block: SampleBlock
     number: int
@@ -99,6 +105,19 @@ class Dropped:
 
 
 HostEvent = Answered | UrgentAnswered | Noticed | Sampled | Dropped
+
+
+class ReadLines(NamedTuple):
+    """The samples of right data lines that follow each other without a gap, and where the last of them ends."""
+
+    first_number: int
+    last_number: int
+    end: int
+    block: SampleBlock
+
+
+DataReader = Callable[[bytes, int], ReadLines | None]
+"""Reads packed data lines, each ended by LF, from a place of a text on, one at least; None where there stands none."""
 
 
 @dataclass(slots=True)
@@ -129,8 +148,8 @@ class HostLink:
     A device may still keep the same tag from an earlier host; it then answers from memory, or `no tag`. The answer to a
     host's second request is always fresh.
 
-    `read_data`, where given, is asked first for number and samples of a line that begins as a data line does; what it
-    does not take is read as if it were not there. It must agree with `decode_data`.
+    `read_data`, where given, is asked first for the samples of lines that begin as a data line does; what it does not
+    take is read as if it were not there. It must agree with `decode_data`.
 
     `due_at_s` is when `due` has something to say next; None while nothing is outstanding.
     """
@@ -140,7 +159,7 @@ class HostLink:
         first_tag: int,
         retry: RetryPolicy | None = None,
         *,
-        read_data: Callable[[bytes], tuple[int, SampleBlock] | None] | None = None,
+        read_data: DataReader | None = None,
     ) -> None:
         if not 0 <= first_tag < TAG_URGENT:
             raise LinkMisuse(f"the first tag {first_tag} is not in 0 to {TAG_URGENT - 1}")
@@ -154,6 +173,7 @@ class HostLink:
         self._next_data: int | None = None
         self._again: int | None = None
         self._again_lines_left = 0
+        self._waiting: list[bytes] = []
 
     @property
     def outstanding(self) -> Request | None:
@@ -214,17 +234,69 @@ class HostLink:
         self._outstanding = self.due_at_s = None
         return request
 
-    def receive(self, data: bytes, now_s: float) -> list[HostEvent]:
-        """What `data` brings, in order; never raises."""
-        return [self._judge(line, now_s) for line in self._splitter.feed(data)]
+    def receive(self, data: bytes, now_s: float, *, samples_wait: bool = False) -> list[HostEvent]:
+        """What `data` brings, in order; never raises.
+
+        With `samples_wait` data lines are kept back, to be read together: until something else comes than the answer
+        to a beat, until WAITING_MAX are there, or for `samples`. It is for a line on which nothing is lost, since what
+        is wrong with a line that waits is found late.
+        """
+        events: list[HostEvent] = []
+        for line in self._splitter.feed(data):
+            if samples_wait and self._keep_back(line):
+                continue
+            if self._waiting and not self._answers_beat(line):
+                events += self.samples()
+            events.append(self._judge(line, now_s))
+        return events
+
+    def _keep_back(self, line: bytes | Overlong) -> bool:
+        """Have a line wait that is the data line due next; False where it is not, or the samples must not wait."""
+        due = self._next_data
+        if due is None or self._read_data is None or self._again is not None or len(self._waiting) >= WAITING_MAX:
+            return False
+        if isinstance(line, Overlong) or not line.startswith(_DATA_HEADS[due]):
+            return False
+        self._waiting.append(line)
+        self._next_data = (due + 1) % 256
+        return True
+
+    def _answers_beat(self, line: bytes | Overlong) -> bool:
+        waiting = self._outstanding
+        if waiting is None or waiting.request.word != "beat" or isinstance(line, Overlong):
+            return False
+        return line[:2] == waiting.line[:2]
+
+    def samples(self) -> list[HostEvent]:
+        """What was kept back, in order."""
+        lines, self._waiting = self._waiting, []
+        if not lines or self._next_data is None or self._read_data is None:
+            return []
+        self._next_data = (self._next_data - len(lines)) % 256
+        text = b"\n".join(lines) + b"\n"
+        events: list[HostEvent] = []
+        begin = 0
+        while begin < len(text):
+            found = self._read_data(text, begin)
+            if found is None:
+                end = text.index(b"\n", begin)
+                events.append(self._judge_message(text[begin:end], 0.0))
+                begin = end + 1
+            else:
+                events.append(self._placed(found.first_number, found.last_number, found.block))
+                begin = found.end
+        return events
 
     def _judge(self, line: bytes | Overlong, now_s: float) -> HostEvent:
         if isinstance(line, Overlong):
             return Dropped(b"", Flaw.OVERLONG)
         if self._read_data is not None and line[:1] == b"D":
-            found = self._read_data(line)
+            found = self._read_data(line + b"\n", 0)
             if found is not None:
-                return self._placed(*found)
+                return self._placed(found.first_number, found.last_number, found.block)
+        return self._judge_message(line, now_s)
+
+    def _judge_message(self, line: bytes, now_s: float) -> HostEvent:
         message = parse_device_line(line)
         match message:
             case Answer():
@@ -264,16 +336,16 @@ class HostLink:
             block = decode_data(data.body)
         except SampleFault as fault:
             return Dropped(line, fault.why)
-        return self._placed(data.number, block)
+        return self._placed(data.number, data.number, block)
 
-    def _placed(self, number: int, block: SampleBlock) -> Sampled:
-        """The samples of a data line by its number."""
-        if self._is_again(number):
+    def _placed(self, first: int, last: int, block: SampleBlock) -> Sampled:
+        """The samples of data lines by the numbers of the first and the last."""
+        if self._is_again(first):
             self._again = None
-            return Sampled(block, number, 0, again=True)
-        missed = 0 if self._next_data is None else (number - self._next_data) % 256
-        self._next_data = (number + 1) % 256
-        return Sampled(block, number, missed)
+            return Sampled(block, first, 0, again=True)
+        missed = 0 if self._next_data is None else (first - self._next_data) % 256
+        self._next_data = (last + 1) % 256
+        return Sampled(block, last, missed)
 
     def _is_again(self, number: int) -> bool:
         """Whether a data line of this number is the old one asked for: never where its number is the next one due."""

@@ -1,6 +1,6 @@
 /* Packed data lines read back into samples, for the host's end: the quick twin of `ramprig_link.samples.decode`.
  *
- * It says yes to a line or no, and never why not: what it does not take is read again by `ramprig_link`, which has the
+ * It takes lines or not, and never says why not: what it does not take is read again by `ramprig_link`, which has the
  * words for it. So the two must agree on every line (tests/test_session_dataline.py). No memory, no state of its own. */
 #include "../../core/check.h"
 #include "../../core/words.h"
@@ -23,15 +23,29 @@
 #define BEYOND_BITS (CHANNELS_MAX * (32u + K_BITS + RR_RICE_QUOTIENT_MAX + ESCAPED_BITS) + 64u)
 #define BYTES_MAX   ((RR_PAYLOAD_MAX * CHARACTER_BITS + BEYOND_BITS) / 8u + 1u)
 
-/* What a line says. `values` has one channel after the other, in order of their bits, `rows` values each. */
-struct dataline {
-    uint32_t number;
+#define NUMBERS  256u  /* lines are numbered modulo this */
+#define ROWS_MAX 1024u /* most samples of lines that are read together */
+
+/* What lines say that follow each other. `values` has a row of ROWS_MAX places for each channel, in order of their bits,
+ * of which the first `rows` are filled. */
+struct datalines {
+    uint32_t first_number;
+    uint32_t last_number;
     uint32_t first_tick;
     uint32_t period;
     uint32_t mask;
     uint32_t rows;
     uint32_t channels;
-    int32_t values[CHANNELS_MAX * RR_BLOCK_SAMPLES_MAX];
+    int32_t values[CHANNELS_MAX][ROWS_MAX];
+};
+
+/* The head of one line. */
+struct head {
+    uint32_t number;
+    uint32_t first_tick;
+    uint32_t period;
+    uint32_t mask;
+    uint32_t rows;
 };
 
 struct track {
@@ -183,30 +197,30 @@ static const struct shape *shape_of(uint32_t bit)
 }
 
 /* The first sample, in full, and what the others are told from; false for a mask that no block can have. */
-static bool read_first(struct bits *bits, struct dataline *line, struct track *tracks)
+static bool read_first(struct bits *bits, const struct head *head, struct datalines *lines, struct track *tracks)
 {
-    line->channels = 0;
-    for (uint32_t bit = 0; line->mask >> bit != 0; bit++) {
-        if ((line->mask >> bit & 1u) == 0) {
+    lines->channels = 0;
+    for (uint32_t bit = 0; head->mask >> bit != 0; bit++) {
+        if ((head->mask >> bit & 1u) == 0) {
             continue;
         }
         const struct shape *shape = shape_of(bit);
         if (shape == NULL) {
             return false;
         }
-        struct track *track = &tracks[line->channels];
+        struct track *track = &tracks[lines->channels];
         uint32_t spare = 32u - shape->width;
         uint32_t raw = take(bits, shape->width) << spare;
         track->last = as_signed(raw) / (int32_t)((uint32_t)1 << spare); /* exact: the spare bits are 0 */
         track->slope = 0;
         track->bent = shape->order == 2;
-        track->k = line->rows > 1 ? (uint8_t)take(bits, K_BITS) : 0;
+        track->k = head->rows > 1 ? (uint8_t)take(bits, K_BITS) : 0;
         track->total = (uint32_t)1 << track->k;
-        track->column = line->values + (size_t)line->channels * line->rows;
+        track->column = lines->values[lines->channels] + lines->rows;
         track->column[0] = track->last;
-        line->channels++;
+        lines->channels++;
     }
-    return line->channels != 0;
+    return lines->channels != 0;
 }
 
 /* ---- the residuals ---- */
@@ -235,13 +249,13 @@ static void read_value(struct bits *bits, struct track *track, uint32_t row, uin
 }
 
 /* False where the bits end within a sample, or more is left than a character's rest of zeros. */
-static bool read_others(struct bits *bits, struct dataline *line, struct track *tracks)
+static bool read_others(struct bits *bits, uint32_t rows, uint32_t channels, struct track *tracks)
 {
     uint32_t count = 1;
-    for (uint32_t row = 1; row < line->rows; row++) {
+    for (uint32_t row = 1; row < rows; row++) {
         bool halve = count == RR_RICE_RESET;
         count = halve ? count / 2u + 1u : count + 1u;
-        for (uint32_t i = 0; i < line->channels; i++) {
+        for (uint32_t i = 0; i < channels; i++) {
             read_value(bits, &tracks[i], row, count, halve);
         }
         if (bits->at > bits->end) {
@@ -254,24 +268,62 @@ static bool read_others(struct bits *bits, struct dataline *line, struct track *
     return take(bits, bits->end - bits->at) == 0;
 }
 
-/* 1 where `text`, without its LF, is a right packed data line, which is then in `*line`; else 0. */
-int dataline_read(const uint8_t *text, uint32_t length, struct dataline *line)
+/* ---- the lines ---- */
+
+/* Whether a line with this head goes on where those before have ended, so that their samples are one block. */
+static bool goes_on(const struct datalines *lines, const struct head *head)
+{
+    return lines->rows == 0 ||
+           (head->number == (lines->last_number + 1u) % NUMBERS && head->period == lines->period &&
+            head->mask == lines->mask && head->first_tick == lines->first_tick + lines->rows * lines->period);
+}
+
+/* Adds the samples of one line, given without its LF; false, with nothing added, where it is not to be taken. */
+static bool add_line(const uint8_t *text, uint32_t length, struct datalines *lines)
 {
     struct bits bits;
     struct track tracks[CHANNELS_MAX];
+    struct head head;
     if (length < HEAD_LENGTH + CHECK_LENGTH || length > HEAD_LENGTH + RR_PAYLOAD_MAX + CHECK_LENGTH) {
-        return 0;
+        return false;
     }
     uint32_t payload = length - HEAD_LENGTH - CHECK_LENGTH;
     int32_t number = hex_number(text + 1, 2);
     if (text[0] != 'D' || number < 0 || text[3] != ' ' || payload * CHARACTER_BITS < HEADER_BITS ||
         !is_checked(text, length - CHECK_LENGTH) || !unpack(&bits, text + HEAD_LENGTH, payload)) {
-        return 0;
+        return false;
     }
-    line->number = (uint32_t)number;
-    line->first_tick = take(&bits, 32);
-    line->period = take(&bits, 16);
-    line->mask = take(&bits, 20);
-    line->rows = take(&bits, 8);
-    return line->period != 0 && line->rows != 0 && read_first(&bits, line, tracks) && read_others(&bits, line, tracks);
+    head.number = (uint32_t)number;
+    head.first_tick = take(&bits, 32);
+    head.period = take(&bits, 16);
+    head.mask = take(&bits, 20);
+    head.rows = take(&bits, 8);
+    if (head.period == 0 || head.rows == 0 || head.rows > ROWS_MAX - lines->rows || !goes_on(lines, &head) ||
+        !read_first(&bits, &head, lines, tracks) || !read_others(&bits, head.rows, lines->channels, tracks)) {
+        return false;
+    }
+    if (lines->rows == 0) {
+        lines->first_number = head.number;
+        lines->first_tick = head.first_tick;
+        lines->period = head.period;
+        lines->mask = head.mask;
+    }
+    lines->last_number = head.number;
+    lines->rows += head.rows;
+    return true;
+}
+
+/* Reads right packed data lines, each ended by LF, from `begin` on in `text`, as long as they follow each other without a
+ * gap and there is room. Returns where they end, `begin` where the first line is none; the samples are in `*lines`. */
+uint32_t datalines_read(const uint8_t *text, uint32_t length, uint32_t begin, struct datalines *lines)
+{
+    lines->rows = 0;
+    while (begin < length) {
+        const uint8_t *end = memchr(text + begin, '\n', length - begin);
+        if (end == NULL || !add_line(text + begin, (uint32_t)(end - text) - begin, lines)) {
+            break;
+        }
+        begin = (uint32_t)(end - text) + 1u;
+    }
+    return begin;
 }

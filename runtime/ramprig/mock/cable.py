@@ -89,6 +89,13 @@ class Cable:
         return self._is_out
 
     @property
+    def is_sound(self) -> bool:
+        """Whether no fault of the cable is on."""
+        if self.device.faults.changes != self._looked_at:
+            self._look()
+        return self._is_sound
+
+    @property
     def tick_ns(self) -> int:
         """The true length of the board's tick."""
         if self.device.faults.changes != self._looked_at:

@@ -92,6 +92,11 @@ class DevicePort(ClosesItself, Generic[D]):
         self._check()
         return self._run_to(clock, clock.end_of_wait_ns(until_s), True)
 
+    @property
+    def is_sound(self) -> bool:
+        """As `PatientPort.is_sound`."""
+        return self._cable.is_sound
+
     def _run_to(self, clock: VirtualClock, until_ns: int, patient: bool) -> bytes:
         cable = self._cable
         data = cable.run(until_ns - self._start_ns, patient=patient)

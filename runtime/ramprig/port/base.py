@@ -82,6 +82,11 @@ class Port(Protocol):
 class PatientPort(Protocol):
     """A port in virtual time that need not wake its reader for what can wait: nothing is late for it there."""
 
+    @property
+    def is_sound(self) -> bool:
+        """Whether nothing is lost, spoilt or delayed on the way, so that what is wrong with a line may be seen late."""
+        ...
+
     def read_until(self, until_s: float) -> bytes:
         """As `Port.read`, up to this time of the port's clock, which is then not before it; the far end's samples are
         handed over with what it says next, or at the end.

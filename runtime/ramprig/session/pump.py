@@ -11,16 +11,12 @@ import threading
 from collections import deque
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
 
 from ramprig.errors import Bug, LinkError, LinkLost, StoppedByUser, UsageError
 from ramprig.port.base import PatientPort, Port
 from ramprig.port.clock import VirtualClock
 from ramprig_link.faults import FieldError, LinkFault, LinkSilent
-from ramprig_link.host import Answered, HostEvent, HostLink, RetryPolicy
-
-if TYPE_CHECKING:
-    from ramprig.mock.core.dataline import DataReader
+from ramprig_link.host import Answered, DataReader, HostEvent, HostLink, RetryPolicy
 
 TURN_MAX_S = 0.05
 """Longest single read, so that a panic from another thread is seen soon."""
@@ -78,7 +74,8 @@ class Pump:
         self.port = port
         self.clock = port.clock
         in_virtual_time = isinstance(port.clock, VirtualClock)
-        self._read_until = port.read_until if isinstance(port, PatientPort) and in_virtual_time else self._read_for
+        self._patient = port if isinstance(port, PatientPort) and in_virtual_time else None
+        self._read_until = self._read_for if self._patient is None else self._patient.read_until
         self._turn_max_s = VIRTUAL_TURN_MAX_S if in_virtual_time else TURN_MAX_S
         self.link = HostLink(chance.randrange(TAG_COUNT), retry, read_data=_data_reader() if in_virtual_time else None)
         self.beat_s: float | None = None
@@ -132,7 +129,7 @@ class Pump:
             self.lost = error
             raise
         finally:
-            self._inside = False
+            self._leave()
 
     def request(self, word: str, *args: object) -> Answered:
         """Send a request before all that wait and work until it is answered, with `ok` or `no`.
@@ -187,7 +184,7 @@ class Pump:
             self.lost = error
             raise
         finally:
-            self._inside = False
+            self._leave()
 
     def _enter(self) -> None:
         if self._inside:
@@ -197,6 +194,14 @@ class Pump:
         if self.lost is not None:
             raise self.lost
         self._inside = True
+
+    def _leave(self) -> None:
+        """Hand on the samples that have waited, whatever has happened: they were received."""
+        try:
+            for event in self.link.samples():
+                self._take(event, self.clock.now())
+        finally:
+            self._inside = False
 
     def _turn(self, until_s: float) -> None:
         """As `turn`; some tens of turns pass in a second of the device's time, so that this is short."""
@@ -216,7 +221,8 @@ class Pump:
         self.since_s, self._turned_s = turned_s or now_s, now_s
         if data:
             self.bytes_in += len(data)
-            for event in link.receive(data, now_s):
+            patient = self._patient
+            for event in link.receive(data, now_s, samples_wait=patient is not None and patient.is_sound):
                 self._take(event, now_s)
         due_s = link.due_at_s
         if due_s is not None and now_s >= due_s and not self.muted:

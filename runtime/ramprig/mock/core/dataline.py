@@ -13,17 +13,17 @@ from functools import cache
 import numpy as np
 
 from ramprig.errors import UsageError
+from ramprig_link.host import DataReader, ReadLines
 from ramprig_link.samples import SampleBlock
-from ramprig_link.words import AXES_MAX, BLOCK_SAMPLES_MAX, SERVOS_MAX
+from ramprig_link.words import AXES_MAX, SERVOS_MAX
 
 from .build import build, firmware
 
-HEAD_WORDS = 6
-"""Before the values: number, first tick, period, mask, rows, channels."""
+HEAD_WORDS = 7
+"""Before the values: numbers of the first line and the last, first tick, period, mask, rows, channels."""
 CHANNELS_MAX = 3 * AXES_MAX + SERVOS_MAX + 3
-
-DataReader = Callable[[bytes], tuple[int, SampleBlock] | None]
-"""Number and samples of a data line without its LF; None for anything else, however wrong it is."""
+ROWS_MAX = 1024
+"""The C side's: so many samples are read together at most."""
 
 
 @cache
@@ -42,20 +42,22 @@ def data_reader() -> DataReader | None:
     if firmware() is None:
         return None
     try:
-        function = _library().dataline_read
+        function = _library().datalines_read
     except (UsageError, OSError):
         return None
-    function.restype = ctypes.c_int
-    function.argtypes = (ctypes.c_char_p, ctypes.c_uint32, ctypes.c_void_p)
-    read: Callable[[bytes, int, int], int] = function
-    room = np.zeros(HEAD_WORDS + CHANNELS_MAX * BLOCK_SAMPLES_MAX, np.uint32)
-    head, values, address = room[:HEAD_WORDS].data, room[HEAD_WORDS:].view(np.int32), room.ctypes.data
+    function.restype = ctypes.c_uint32
+    function.argtypes = (ctypes.c_char_p, ctypes.c_uint32, ctypes.c_uint32, ctypes.c_void_p)
+    read: Callable[[bytes, int, int, int], int] = function
+    room = np.zeros(HEAD_WORDS + CHANNELS_MAX * ROWS_MAX, np.uint32)
+    head, address = room[:HEAD_WORDS].data, room.ctypes.data
+    values = room[HEAD_WORDS:].view(np.int32).reshape(CHANNELS_MAX, ROWS_MAX)
 
-    def read_data(line: bytes) -> tuple[int, SampleBlock] | None:
-        if not read(line, len(line), address):
+    def read_lines(text: bytes, begin: int) -> ReadLines | None:
+        end = read(text, len(text), begin, address)
+        if end == begin:
             return None
-        number, first_tick, period, mask, rows, channels = head
-        columns = values[: rows * channels].reshape(channels, rows).copy()
-        return number, SampleBlock(first_tick, period, mask, rows, columns)
+        first, last, first_tick, period, mask, rows, channels = head
+        block = SampleBlock(first_tick, period, mask, rows, values[:channels, :rows].copy())
+        return ReadLines(first, last, end, block)
 
-    return read_data
+    return read_lines
