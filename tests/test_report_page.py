@@ -10,6 +10,7 @@ import sys
 from dataclasses import replace
 from html.parser import HTMLParser
 from pathlib import Path
+from xml.etree import ElementTree
 
 import pytest
 
@@ -250,6 +251,23 @@ def test_a_run_that_is_still_written_is_not_told_as_dead_nor_its_motor_as_stoppe
     assert explanation is not None
     assert explanation.causes[0].sentence.startswith("the run is still under way, or the program ended without a word")
     assert "keep clear of the motor" in explanation.causes[0].next_step
+
+
+def test_a_record_that_lacks_something_is_told_at_the_head_and_fails_a_case(run: Path, tmp_path: Path) -> None:
+    whole = ElementTree.parse(made(run, tmp_path / "a").junit).find(".//testcase[@name='account of the samples']")
+    assert whole is not None
+    assert whole.find("failure") is None
+    folder = tmp_path / "run"
+    shutil.copytree(run, folder)
+    rows = (folder / "samples.csv").read_bytes().splitlines(keepends=True)
+    (folder / "samples.csv").write_bytes(b"".join(rows[:100]))
+    done = made(folder, tmp_path / "b")
+    page = read_page(done.report)
+    told = page.text.index("The record is not what the run says that it is: ")
+    assert told < page.text.index("Item, rig and environment")
+    case = ElementTree.parse(done.junit).find(".//testcase[@name='account of the samples']/failure")
+    assert case is not None
+    assert "samples.csv was changed after the run" in str(case.get("message"))
 
 
 def test_nothing_of_the_run_is_changed(run: Path, tmp_path: Path) -> None:

@@ -20,7 +20,7 @@ from .checks import checks_table
 from .compare import compared
 from .digest import Digest
 from .explain import Explanation, view_of_trip
-from .facts import UNDER_WAY, Facts
+from .facts import BROKEN_OFF, UNDER_WAY, Facts
 from .protections import protections
 from .trends import rules_in_force, seen_of
 from .untold import untold_table
@@ -125,6 +125,10 @@ def _verdict(read: Read, *, named: bool) -> str:
     kind, mark = _SIGNS.get(word, ("bad", "&#10007;"))
     reason = facts.manifest.get("stop_reason") or _NO_REASON.get(word, "no reason was written")
     lines = [f'<p class="word">{mark} {page.text(word)}</p>', f"<p>{page.text(reason)}</p>"]
+    if read.audit.statements and word not in (UNDER_WAY, BROKEN_OFF):
+        more = f" (and {len(read.audit.statements) - 1} more)" if len(read.audit.statements) > 1 else ""
+        text = f"The record is not what the run says that it is: {read.audit.statements[0]}{more}."
+        lines.append(f'<p class="differs">{page.text(text)} See Account of the samples.</p>')
     if named:
         lines.insert(0, f'<p class="id named">{page.text(facts.name)}</p>')
     if read.explanation is not None and read.explanation.likely is not None:

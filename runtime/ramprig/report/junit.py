@@ -1,4 +1,4 @@
-"""`junit.xml` of runs: one test case for each expectation, each limit to wear or that trips, and the run itself.
+"""`junit.xml` of runs: one test case for each expectation, each limit to wear or that trips, the run, and its account.
 
 An expectation that was never judged, as the run ended before it, is skipped with the reason.
 
@@ -14,6 +14,7 @@ from dataclasses import dataclass
 from xml.sax.saxutils import escape, quoteattr
 
 from ramprig.record.events import from_rfc3339, rfc3339
+from ramprig.record.reading import Audit
 from ramprig_link.words import LIMITS
 
 from .explain import explain
@@ -51,9 +52,11 @@ def _quoted(text: str) -> str:
     return quoteattr(clean(text).replace("\n", " ").replace("\t", " "))
 
 
-def junit_xml(runs: Sequence[Facts]) -> str:
-    """The whole file, one suite for each run."""
+def junit_xml(runs: Sequence[Facts], audits: Sequence[Audit] = ()) -> str:
+    """The whole file, one suite for each run; where audits of them are given, with a case of the account of each."""
     suites = [(facts, list(cases_of(facts))) for facts in runs]
+    for (_, cases), audit in zip(suites, audits, strict=False):
+        cases.insert(1, _account_case(audit))
     every = [case for _, cases in suites for case in cases]
     total = sum(_elapsed_s(facts) for facts in runs)
     body = "\n".join(_suite(facts, cases) for facts, cases in suites)
@@ -161,6 +164,12 @@ def _run_case(facts: Facts) -> Case:
     if facts.verdict in ("failed", "tripped"):
         return Case("run", name, out, failure=message)
     return Case("run", name, out, error=message)
+
+
+def _account_case(audit: Audit) -> Case:
+    """Whether every sample is in the files or told as lost, and no file was changed."""
+    out = "\n".join([f"{audit.rows} rows, {audit.known_lost} samples told as lost", *audit.statements])
+    return Case("run", "account of the samples", out, failure="; ".join(audit.statements))
 
 
 def _has_failure(facts: Facts) -> bool:

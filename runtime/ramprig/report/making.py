@@ -60,7 +60,9 @@ def make_report(folders: Sequence[Path], *, out: Path, issued: str, entries: Map
     try:
         out.mkdir(parents=True, exist_ok=True)
         replace_file(made.report, text.encode("utf-8"))
-        replace_file(made.junit, junit_xml([read.facts for read in reads]).encode("utf-8"))
+        replace_file(
+            made.junit, junit_xml([read.facts for read in reads], [read.audit for read in reads]).encode("utf-8")
+        )
         for path, read in zip(made.intervals, reads, strict=True):
             replace_file(path, intervals_csv(read.digest))
         for path, read in zip(made.features, with_cycles, strict=True):

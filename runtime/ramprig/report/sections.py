@@ -60,7 +60,7 @@ def item_and_rig(facts: Facts, entries: Mapping[str, str]) -> str:
         ("place of the rig", "" if bench is None else bench.safety.place),
         ("environment, as entered", entries.get("environment")),
         ("bench", facts.bench_trouble if bench is None else f"{bench.name} ({bench.file})"),
-        ("board", f"{device.get('board')} {device.get('serial')}, firmware {device.get('firmware')}"),
+        ("board", _board(device)),
         ("start of the board (boot)", device.get("boot", NOT_KNOWN)),
         ("port", manifest.get("port") or NOT_KNOWN),
         ("instruments, as entered", entries.get("instruments")),
@@ -73,6 +73,12 @@ def item_and_rig(facts: Facts, entries: Mapping[str, str]) -> str:
         note = f"{what} a simulated board: it shows what the sequence does, and nothing about a real motor."
         return page.paragraph(note, kind="differs") + found
     return found
+
+
+def _board(device: Document) -> str:
+    names = [str(device[name]) for name in ("board", "serial") if device.get(name)]
+    firmware = [f"firmware {device['firmware']}"] if device.get("firmware") else []
+    return ", ".join([*([" ".join(names)] if names else []), *firmware]) or NOT_KNOWN
 
 
 def _software(manifest: Document) -> str:
