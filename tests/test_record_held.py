@@ -276,6 +276,7 @@ def test_a_kill_at_any_operation_around_a_hole_leaves_every_row_that_was_to_be_k
         ticks = ticks_in(folder)
         assert ticks == sorted(set(ticks))
         assert to_be_kept(handed[:-1], int(handed[-1].ticks[-1])) <= set(ticks), die_at
+        assert {tick for tick in to_be_kept(handed, ticks[-1]) if tick <= ticks[-1]} <= set(ticks), die_at
 
 
 def test_a_disk_that_is_full_at_any_write_around_a_hole_leaves_the_rows_to_be_kept_somewhere(tmp_path: Path) -> None:

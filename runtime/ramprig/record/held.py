@@ -5,7 +5,7 @@ Two files take turns, each with the header and all rows of some seconds:
     held-1.csv   rows of the present turn          a turn ends after the time that rows wait to be decided;
     held-2.csv   rows of the turn before           then the older file is begun anew
 
-What the older file holds by then has been decided (the rows that begin a turn decide first, and are held then) and,
+Rows are held, then they decide, and only then a turn may end: what the older file holds by then has been decided and,
 before it goes, synced in its volume. A run that ends in order writes its undecided rows to the volume and removes both;
 whoever reads one that did not takes from them the rows after the last one of its volumes, and resuming moves those
 there. Of a run that ended because its disk was full, resuming keeps them as `unwritten-1.csv` and so on: its account
@@ -41,30 +41,40 @@ class HeldRows:
         self._settle = settle
         self._turn = 0
         self._begin_tick: int | None = None
+        self._first = self._newest = 0
         self._file: AppendFile | None = None
 
-    def append(self, rows: Rows, *, decided: bool = True) -> None:
-        """Rows that follow those before.
+    def follows(self, rows: Rows) -> bool:
+        """Whether the ticks of these rows go on from those before, and do not begin anew."""
+        return self._begin_tick is None or int(rows.ticks[0]) > self._newest
 
-        `decided` says that whatever they decide is written; where it could not be, no turn ends and no file goes.
-        """
-        first, begin = int(rows.ticks[0]), self._begin_tick
-        if self._file is None or begin is None or (decided and not begin <= first < begin + self._turn_ticks):
-            self._next_turn(first)
+    def append(self, rows: Rows) -> None:
+        """Rows that follow those before, in one write; what they decide comes after it, and then `turn`."""
+        if self._file is None:
+            self._begin()
         assert self._file is not None  # a turn has just begun
         self._file.append(rows.data)
+        self._first, self._newest = int(rows.ticks[0]), int(rows.ticks[-1])
+        if self._begin_tick is None:
+            self._begin_tick = self._first
 
-    def _next_turn(self, tick: int) -> None:
-        if self._file is not None:
+    def turn(self, *, now: bool = False) -> None:
+        """All that the rows so far decide is written: the next turn begins where this one has lasted long enough."""
+        if self._file is None or self._begin_tick is None:
+            return
+        if now or self._first >= self._begin_tick + self._turn_ticks:
             self._settle()
             self._file.sync()
             self.close()
+            self._begin()
+
+    def _begin(self) -> None:
         path = self._folder / HELD_NAMES[self._turn % len(HELD_NAMES)]
         path.unlink(missing_ok=True)
         self._file = AppendFile(path)
         self._file.append(self._header)
         self._turn += 1
-        self._begin_tick = tick
+        self._begin_tick = None
         sync_folder(self._folder)
 
     def sync(self) -> None:

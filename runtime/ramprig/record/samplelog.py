@@ -131,19 +131,18 @@ class SampleLog:
             self._range(rows)
 
     def _thin(self, thinner: Thinner, rows: Rows) -> None:
-        """Decide what these rows decide, and only then hold them: the older held file may go with them.
-
-        Where the disk does not take what was decided, the held files keep it.
-        """
-        try:
+        """Hold these rows, then have them decide, and only then let an older held file go."""
+        held = self._held
+        if held is None:
             thinner.take(rows)
-        except OSError:
-            if self._held is not None:
-                with contextlib.suppress(OSError):
-                    self._held.append(rows, decided=False)
-            raise
-        if self._held is not None:
-            self._held.append(rows)
+        elif held.follows(rows):
+            held.append(rows)
+            thinner.take(rows)
+            held.turn()
+        else:  # ticks begin anew: all rows before are decided
+            thinner.take(rows)
+            held.turn(now=True)
+            held.append(rows)
 
     def _range(self, rows: Rows) -> None:
         if self._cycles is not None:
