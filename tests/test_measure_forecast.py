@@ -428,6 +428,10 @@ def test_odds_and_intervals() -> None:
     assert str(Odds.count(200, 201)).startswith("100 % (200 of 201 draws; between 97 % and 100 %)")
     interval = Interval.of([float(value) for value in range(1, 200)], "s")
     assert (interval.low, interval.median, interval.high) == pytest.approx((5.0, 100.0, 195.0))
+    assert interval.coverage == 0.95
+    few = Interval.of([float(value) for value in range(1, 22)], "s")
+    assert (few.low, few.median, few.high) == pytest.approx((1.0, 11.0, 21.0))
+    assert few.coverage == pytest.approx(20 / 22), "a further draw is one of 22 alike, and an extreme in two cases"
     assert str(Interval(30381.2, 30380.9, 30382.6, "s")) == "8 h 26 min in every draw"
     assert str(Interval(30381.2, 29100.0, 31000.0, "s")) == "8 h 26 min (8 h 5 min to 8 h 37 min)"
     assert str(Interval(32.13, 32.13, 32.24, "s")) == "32.13 s (32.13 to 32.24)"

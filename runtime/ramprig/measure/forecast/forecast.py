@@ -53,19 +53,21 @@ class ForecastWish:
 
 @dataclass(frozen=True, slots=True)
 class Interval:
-    """A forecast: the median and the ends between which 95 % of the draws lie, in `unit`."""
+    """A forecast: the median and the ends between which a further draw lies with the probability `coverage`."""
 
     median: float
     low: float
     high: float
     unit: str
+    coverage: float = COVERAGE
 
     @classmethod
     def of(cls, values: Sequence[float], unit: str) -> Interval:
-        """From the draws: the quantiles i/(n + 1), which a further draw stays within with this probability."""
-        tail = (1.0 - COVERAGE) / 2.0
+        """From the draws: the quantiles i/(n + 1); of fewer than 39 the least and the greatest, which cover less."""
+        covered = coverage_of(len(values))
+        tail = (1.0 - covered) / 2.0
         low, median, high = np.quantile(np.asarray(values, float), [tail, 0.5, 1.0 - tail], method="weibull")
-        return cls(float(median), float(low), float(high), unit)
+        return cls(float(median), float(low), float(high), unit, covered)
 
     def holds(self, value: float, *, within: float = 0.0) -> bool:
         """Whether a value lies between the ends, give or take `within`, the value's own resolution."""
@@ -82,6 +84,11 @@ class Interval:
         places = len(rounded.partition(".")[2])
         low, median, high = (f"{value:.{places}f}" for value in (self.low, self.median, self.high))
         return f"{median} {self.unit} ({low} to {high})"
+
+
+def coverage_of(draws: int) -> float:
+    """What the ends cover: COVERAGE, or as much as the extremes of so few draws do."""
+    return min(COVERAGE, (draws - 1) / (draws + 1))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -162,7 +169,7 @@ class Forecast:
             "forecast": self.name,
             "sources": dict(self.sources),
             "how": list(self.how),
-            "values": {name: jsonable(_as_dict(value)) for name, value in self.values.items()},
+            "values": {name: jsonable(value) for name, value in self.values.items()},
             "limits": [jsonable(margin) for margin in self.margins],
             "duty_types": {name: jsonable(kind) for name, kind in self.duty_types.items()},
             "starts_per_hour": dict(self.starts_per_hour),
@@ -173,10 +180,6 @@ class Forecast:
             "notes": list(self.notes),
             "sentence": self.sentence,
         }
-
-
-def _as_dict(value: Interval) -> dict[str, float | str]:
-    return {"median": value.median, "low": value.low, "high": value.high, "unit": value.unit, "coverage": COVERAGE}
 
 
 def forecast(
@@ -252,7 +255,7 @@ def _told(plan: Plan, bench: Bench, job: Job, wish: ForecastWish, draws: list[Dr
     return Forecast(
         name=plan.name,
         sources={name: known.source for name, known in job.belief.motors.items()},
-        how=_how(job, wish, draws),
+        how=_how(job, wish, draws, len(whole)),
         values=values,
         margins=tuple(margins(bench, draws, tick_us=plan.tick_us)),
         duty_types=_duty_types(job, starts, draws[0].pause_s),
@@ -309,14 +312,15 @@ def _energy(joules: list[float]) -> Interval:
     return Interval.of([one / 1000.0 for one in joules], "kJ")
 
 
-def _how(job: Job, wish: ForecastWish, draws: list[Draw]) -> tuple[str, ...]:
+def _how(job: Job, wish: ForecastWish, draws: list[Draw], whole: int) -> tuple[str, ...]:
     device = "the firmware core and plant in C" if job.on_core else "the mock in Python"
     lines = [f"{len(draws)} draws (seed {wish.seed}) on {device}; each figure drawn on its own, correlations left out"]
     if len(draws) - 1 < wish.draws:
         lines.append(f"{wish.draws} draws were asked for; more would take longer than {format_duration(wish.most_s)}")
     if job.cut is not None:
         lines.append(job.cut.text())
-    lines.append("values: median, and the ends between which 95 % of the draws lie")
+    ends = "the ends" if coverage_of(whole) == COVERAGE else "the extremes of so few draws"
+    lines.append(f"values: median, and {ends}, between which a further draw lies with {100 * coverage_of(whole):.0f} %")
     return tuple(lines)
 
 
