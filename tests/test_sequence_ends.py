@@ -49,6 +49,30 @@ def test_branches_share_the_queue_of_the_device(small: bool, tmp_path: Path) -> 
     assert run.outcome.overdue == 0
 
 
+def test_any_other_exception_stops_the_motors_before_it_leaves_the_run(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    def closes_no_more_than_the_port(session: Session, *_: object) -> None:
+        session._core.pump.port.close()
+
+    duties: list[int] = []
+    devices: list[MockDevice] = []
+
+    def fails(now: Progress, device: MockDevice, session: Session, port: MockPort) -> None:
+        controller = device.controller
+        if now.elapsed_s > 1.0 and controller is not None:
+            duties.append(controller.drives[0].duty)
+            devices.append(device)
+            raise ArithmeticError("a fault of ours")
+
+    monkeypatch.setattr(Session, "__exit__", closes_no_more_than_the_port)
+    with pytest.raises(ArithmeticError, match="a fault of ours"):
+        rehearse(tmp_path, "- ramp: {motor: vent, to: 40 %, in: 500 ms}\n- hold: 5 s", meddle=fails)
+    assert duties == [4000]
+    assert devices[0].controller is not None
+    assert devices[0].controller.drives[0].duty == 0
+
+
 def session_on(device: MockDevice, listeners: Listeners) -> tuple[Session, MockPort]:
     """A session with the small bench's limits."""
     port = MockPort(device, pace="virtual", seed=1)
