@@ -333,8 +333,8 @@ class Recorder:
     def finish(self, end: RunEnd) -> Path:
         """Write what is waiting and the end of the run; returns the run folder. A second call does nothing.
 
-        Raises RecordError where not even `run.json` could be written; a full disk that was told of before is stated
-        in it.
+        A disk that hangs is waited for CLOSE_WAIT_S, and as long again for `run.json`. Raises RecordError where not
+        even that could be written; a full disk that was told of before is stated in it.
         """
         if self._finished:
             return self.folder.path
