@@ -217,3 +217,24 @@ def test_rows_far_apart_are_joined_where_they_were_thinned_and_said_to_be_what_w
     for plot in drawn:
         for path in re.findall(r'<path d="(M[^"]+)" fill="none" stroke="#', plot.svg):
             assert max(float(x) for x in re.findall(r"(?:M| )([\d.]+) [\d.]+", path)) <= WIDTH - RIGHT + 0.1
+
+
+BEATEN = """
+sequence: beaten
+bench: bench.yaml
+log: {period: 10 ms, THIN}
+steps:
+  - repeat:
+      times: 30
+      steps:
+        - ramp: {motor: vent, to: 60 %, in: 700 ms}
+        - ramp: {motor: vent, to: 20 %, in: 300 ms}
+"""
+
+
+def test_a_duty_that_kept_rows_show_alike_was_not_held_for_that(tmp_path: Path) -> None:
+    """Rows 1 s apart of a duty that comes back every second show always the same one."""
+    rows = "thin: {keep every: 100, ranges every: 2 s, before: 0 s, after: 0 s}"
+    found = digest(rehearsed(tmp_path / "beaten", "", sequence=BEATEN.replace("THIN", rows)))
+    assert found.rows < 200
+    assert {level.duty_pct for level in found.levels.values()} <= {0.0}

@@ -131,7 +131,10 @@ def digest_samples(facts: Facts) -> Digest:
         digest.interval_stride = -(-len(facts.passes) // ROWS_MAX)
     is_thinned = thinning_of(facts) is not None
     table = _from_ranges(facts, columns, edges) if is_thinned else _IntervalTable(columns, edges)
-    curves = {motor: _CurveWalk(digest, motor) for motor in facts.motors if f"{motor}.speed_rpm" in columns}
+    period_s = facts.period_s
+    curves = {
+        motor: _CurveWalk(digest, motor, period_s=period_s) for motor in facts.motors if f"{motor}.speed_rpm" in columns
+    }
     recorded = recorded_features(facts.cycles)
     _keep_features(digest, recorded or [])
     spans = [] if recorded is not None or is_thinned else spans_of(facts.cycles)
@@ -312,27 +315,34 @@ class _IntervalTable:
 
 
 class _CurveWalk:
-    """Collects the speed at held duties, remembering across pieces since when the duty is held, and from where."""
+    """Collects the speed at held duties, remembering across pieces since when the duty is held, and from where.
 
-    def __init__(self, digest: Digest, motor: str) -> None:
+    Where rows are missing, or were thinned, nobody knows that the duty was held: it counts from the next row on.
+    """
+
+    def __init__(self, digest: Digest, motor: str, *, period_s: float) -> None:
         self._digest = digest
         self._motor = motor
+        self._apart_s = 1.5 * period_s if period_s else math.inf
         self._duty = math.nan
         self._since_s = 0.0
+        self._last_s = -math.inf
         self._growing = True
 
     def take(self, times: Floats, piece: Piece) -> None:
         duty = piece.numbers[f"{self._motor}.duty_pct"]
         speed = piece.numbers[f"{self._motor}.speed_rpm"]
-        begins = np.flatnonzero(np.diff(duty, prepend=duty[0] + 1) != 0)
+        apart = np.diff(times, prepend=self._last_s) > self._apart_s
+        self._last_s = float(times[-1])
+        begins = np.flatnonzero((np.diff(duty, prepend=duty[0] + 1) != 0) | apart)
         ends = np.append(begins[1:], len(duty))
         long = times[ends - 1] - times[begins] > STEADY_S
         long[[0, -1]] = True  # the first may have begun in the piece before, the last may go on in the next
         for begin, end in zip(begins[long].tolist(), ends[long].tolist(), strict=True):
             here = float(duty[begin])
             before = float(duty[begin - 1]) if begin else self._duty
-            if here != before:
-                if not math.isnan(before):
+            if here != before or apart[begin]:
+                if not math.isnan(before) and here != before:
                     self._growing = abs(here) > abs(before)
                 self._duty, self._since_s = here, float(times[begin])
             if float(times[end - 1]) - self._since_s > STEADY_S:

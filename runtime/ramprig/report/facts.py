@@ -175,6 +175,12 @@ class Facts:
         return int((self.manifest.get("clocks") or {}).get("tick_us") or 1000)
 
     @property
+    def period_s(self) -> float:
+        """The longest time between two samples of a logging; 0 where none was accounted for."""
+        loggings = (self.manifest.get("samples") or {}).get("loggings") or []
+        return max((float(each["period_ticks"]) for each in loggings), default=0.0) * self.tick_us / 1e6
+
+    @property
     def columns(self) -> list[str]:
         """The columns of the samples."""
         return [str(name) for name in self.manifest.get("columns") or []]

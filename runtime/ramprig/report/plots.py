@@ -107,11 +107,9 @@ def _kept(facts: Facts, digest: Digest) -> _Kept:
     rule = thinning_of(facts)
     if rule is None:
         return _Kept("", 0.0)
-    loggings = (facts.manifest.get("samples") or {}).get("loggings") or []
-    period_s = max((float(each["period_ticks"]) for each in loggings), default=0.0) * facts.tick_us / 1e6
     widened = ", and over the ranges that were recorded where rows were left out"
     return _Kept(
-        widened if digest.envelope.is_widened else ", of the rows that were kept", (rule.every or 1) * period_s
+        widened if digest.envelope.is_widened else ", of the rows that were kept", (rule.every or 1) * facts.period_s
     )
 
 
