@@ -308,3 +308,7 @@ def test_what_is_printed_is_read_back_to_four_figures(value: Fraction, kind: Kin
 def test_short_durations_are_read_back(milliseconds: int) -> None:
     shown = q.format_duration(Fraction(milliseconds, 1000))
     assert float(q.parse(shown, q.DURATION).value) == pytest.approx(milliseconds / 1000, rel=6e-4)
+
+
+def test_a_text_in_a_message_sends_nothing_to_the_terminal_but_letters() -> None:
+    assert q.quoted("20\x1b[2J \x00\n\t\u00b5\u2028\ud800") == r"'20\x1b[2J \x00\n\t\xb5\u2028\ud800'"

@@ -5,6 +5,7 @@ from __future__ import annotations
 import argparse
 import json
 import math
+from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -118,13 +119,19 @@ def read_times(path: Path) -> Times:
     """The times of a CSV file with the columns time, outcome and perhaps count. Raises FileError with the line."""
     import csv
 
+    from ramprig.quantity import quoted
+
     times: dict[bool, list[float]] = {False: [], True: []}
     try:
         with open(path, encoding="utf-8-sig", newline="") as file:
             rows = csv.DictReader(file)
-            if not set(HEADS) <= set(rows.fieldnames or ()):
+            heads = rows.fieldnames or ()
+            twice = next((head for head in heads if heads.count(head) > 1), None)
+            if twice is not None:
+                raise FileError(f"the column {quoted(twice)} stands twice", wanted="once", place=Place(str(path), 1, 1))
+            if not set(HEADS) <= set(heads):
                 raise FileError(
-                    f"the columns are {', '.join(rows.fieldnames or ()) or 'none'}",
+                    f"the columns are {', '.join(heads) or 'none'}",
                     wanted="time and outcome are wanted, and count if a line stands for several samples",
                     place=Place(str(path), 1, 1),
                 )
@@ -137,15 +144,21 @@ def read_times(path: Path) -> Times:
     return Times(tuple(times[False]), tuple(times[True]))
 
 
-def _take_row(row: dict[str, str | None], times: dict[bool, list[float]], place: Place) -> None:
+def _take_row(row: Mapping[str | None, str | None], times: dict[bool, list[float]], place: Place) -> None:
+    from ramprig.quantity import quoted
+
     time, outcome, count = _time(row["time"] or ""), (row["outcome"] or "").strip(), (row.get("count") or "1").strip()
+    if None in row:
+        raise FileError("there are more fields than heads", wanted="a number has no comma in it", place=place)
     if time is None:
-        raise FileError(f"the time is '{row['time'] or ''}'", wanted="a number above 0 is wanted", place=place)
+        raise FileError(f"the time is {quoted(row['time'] or '')}", wanted="a number above 0 is wanted", place=place)
     if outcome not in OUTCOMES:
-        raise FileError(f"the outcome is '{outcome}'", wanted=f"one of {', '.join(OUTCOMES)} is wanted", place=place)
+        raise FileError(
+            f"the outcome is {quoted(outcome)}", wanted=f"one of {', '.join(OUTCOMES)} is wanted", place=place
+        )
     known = sum(map(len, times.values()))
     if not (count.isascii() and count.isdigit()) or not 1 <= int(count) <= TIMES_MAX - known:
-        raise FileError(f"the count is '{count}'", wanted=f"1 or more, {TIMES_MAX} samples in all", place=place)
+        raise FileError(f"the count is {quoted(count)}", wanted=f"1 or more, {TIMES_MAX} samples in all", place=place)
     times[OUTCOMES[outcome]] += [time] * int(count)
 
 

@@ -38,7 +38,8 @@ class QuantityError(UsageError):
 def quoted(text: str) -> str:
     """`text` in quotes for a message, cut to 40 characters, what cannot be printed in ASCII escaped."""
     clipped = text if len(text) <= DIGITS_MAX else text[: DIGITS_MAX - 3] + "..."
-    return "'" + clipped.encode("ascii", "backslashreplace").decode("ascii").replace("\n", "\\n") + "'"
+    shown = (letter if " " <= letter <= "~" else letter.encode("unicode_escape").decode("ascii") for letter in clipped)
+    return f"'{''.join(shown)}'"
 
 
 def plain(text: str) -> str:
