@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+from collections import Counter
 from collections.abc import Callable
 from dataclasses import replace
 
@@ -13,7 +14,8 @@ from ramprig.cli.read import summary
 from ramprig.endure.notes import add_note
 from ramprig.record.reading import audit
 from ramprig.report.account import account
-from ramprig.report.facts import Facts, gather
+from ramprig.report.explain import explain
+from ramprig.report.facts import Expectation, Facts, gather
 from ramprig.report.junit import cases_of
 from ramprig.report.making import make_report
 from ramprig.report.sections import item_and_rig
@@ -73,7 +75,22 @@ def test_a_limit_that_the_run_went_on_after_is_no_failure(run: Facts) -> None:
 
 def test_a_trip_that_the_board_holds_and_tells_again_is_one_trip(run: Facts) -> None:
     assert (run.folder / "events.jsonl").read_text("utf-8").count('"kind":"tripped"') == 2
-    assert run.counts["tripped"] == len(run.of("tripped")) == run.trips_outlived == 1
+    assert run.counts["tripped"] == len(run.of("tripped")) == run.outlived["tripped"] == 1
+
+
+def test_what_the_run_outlived_is_not_why_it_ended(run: Facts) -> None:
+    judged = Expectation("s.yaml:9:9", "speed of vent is at most 5 rpm")
+    judged.take({"held": False, "found": "6 rpm", "value": 6.0, "time_s": 12.0})
+    failed = replace(
+        run,
+        manifest=run.manifest | {"verdict": "failed", "stop_reason": "speed of vent is at most 5 rpm: found 6 rpm"},
+        expectations={("s.yaml:9:9", judged.text): judged},
+        events=run.events | {"restarted": [{"cause": "watchdog"}], "host_slept": [{"slept_s": 100.0}]},
+        outlived=run.outlived + Counter(restarted=1, host_slept=1),
+    )
+    explanation = explain(failed)
+    assert explanation is not None
+    assert [cause.key for cause in explanation.causes] == ["expectation"]
 
 
 def test_a_part_without_an_account_is_not_told_as_whole(run: Facts) -> None:

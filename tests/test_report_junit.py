@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import random
 import re
+from collections import Counter
 from collections.abc import Callable
 from dataclasses import replace
 from pathlib import Path
@@ -159,7 +160,7 @@ def test_a_run_that_an_expectation_ended_was_not_carried_out_to_its_end(
 def test_a_trip_that_no_part_of_the_run_followed_is_a_failure_of_its_limit(failed: Facts) -> None:
     trip = {"kind": "tripped", "trip": "overvoltage", "index": 0, "value": 17000, "bound": 16000, "time_s": 3.0}
     for outlived in (0, 1):
-        facts = replace(failed, trips_outlived=outlived, events={"tripped": [trip]})
+        facts = replace(failed, outlived=Counter(tripped=outlived), events={"tripped": [trip]})
         case = next(case for case in cases_of(facts) if case.name == "over_mv")
         assert bool(case.failure) == (not outlived), "it came while the run was stopped at its end"
         assert ("the run was gone on with" in case.out) == bool(outlived)

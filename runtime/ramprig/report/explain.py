@@ -87,11 +87,11 @@ def explain(facts: Facts) -> Explanation | None:
 
 
 def _causes(facts: Facts, verdict: str) -> Iterator[Cause]:
-    trips = facts.of("tripped")
-    if facts.of("device_exchanged"):
-        yield _exchanged(facts.of("device_exchanged")[-1])
-    if facts.of("restarted"):
-        yield from _restarted(facts, facts.of("restarted")[-1])
+    trips = facts.since_armed("tripped")
+    if facts.since_armed("device_exchanged"):
+        yield _exchanged(facts.since_armed("device_exchanged")[-1])
+    if facts.since_armed("restarted"):
+        yield from _restarted(facts, facts.since_armed("restarted")[-1])
     elif trips and trips[-1]["trip"] == "restarted":
         yield from _restarted(facts, trips[-1])
     if trips and verdict != "stopped":
@@ -223,7 +223,7 @@ def _lease_ms(facts: Facts) -> float:
 def _noise(facts: Facts) -> tuple[int, list[str]]:
     """Damaged and repeated lines of the run, and what to say of them."""
     kinds: dict[str, int] = {}
-    for event in facts.of("link_trouble"):
+    for event in facts.since_armed("link_trouble"):
         kinds[str(event.get("trouble"))] = kinds.get(str(event.get("trouble")), 0) + int(event.get("count") or 1)
     damaged = sum(number for name, number in kinds.items() if name.startswith("garbled"))
     parts = facts.manifest.get("link") or {}
@@ -236,12 +236,12 @@ def _noise(facts: Facts) -> tuple[int, list[str]]:
 
 def _late_s(facts: Facts) -> float:
     """How late the host was at worst."""
-    told = [float(event.get("late_s") or 0) for event in facts.of("late_host")]
+    told = [float(event.get("late_s") or 0) for event in facts.since_armed("late_host")]
     return max([float((facts.manifest.get("link") or {}).get("worst_late_s") or 0), *told])
 
 
 def _host(facts: Facts, lease_ms: float) -> Iterator[Cause]:
-    slept = [float(event.get("slept_s") or 0) for event in facts.of("host_slept")]
+    slept = [float(event.get("slept_s") or 0) for event in facts.since_armed("host_slept")]
     if slept:
         yield Cause(
             key="host_slept",

@@ -100,9 +100,9 @@ class Facts:
     """A run: its manifest, its bench where the copy can be read, and its events by kind.
 
     `events` keeps the first KEPT_MAX of each kind that matters, `counts` counts all. `passes` are the begins of the
-    repeat that went on for longest, in s of the run, or of the cycles where there are any. The first `trips_outlived`
-    of the trips are those that the run was gone on with after: its outputs were enabled anew. `is_held` says whether a
-    program is still writing it, None where that cannot be told.
+    repeat that went on for longest, in s of the run, or of the cycles where there are any. `outlived` counts the events
+    of each kind that came before the outputs were last enabled: what they tell of did not end the run. `is_held` says
+    whether a program is still writing it, None where that cannot be told.
     """
 
     folder: Path
@@ -115,7 +115,7 @@ class Facts:
     passes: list[float] = field(default_factory=list)
     cycles: list[Document] = field(default_factory=list)
     notes: list[Document] = field(default_factory=list)
-    trips_outlived: int = 0
+    outlived: Counter[str] = field(default_factory=Counter)
     is_held: bool | None = False
     last_event: Document | None = None
     torn_event_bytes: int = 0
@@ -129,9 +129,13 @@ class Facts:
         """Whether the board was one in software."""
         return str(self.manifest.get("port", "")).startswith(SIMULATED)
 
+    def since_armed(self, kind: str) -> list[Document]:
+        """The events of a kind, of those kept, since the outputs were last enabled, or all where they never were."""
+        return self.of(kind)[self.outlived[kind] :]
+
     def was_outlived(self, trip: Document) -> bool:
         """Whether the run was gone on with after this trip, one of its events."""
-        return any(trip is each for each in self.of("tripped")[: self.trips_outlived])
+        return any(trip is each for each in self.of("tripped")[: self.outlived["tripped"]])
 
     @property
     def carried_out(self) -> bool | None:
@@ -265,7 +269,7 @@ def _take(facts: Facts, event: Document, series: dict[str, list[float]]) -> None
     if kind == "tripped" and _is_told_again(facts, event):
         return
     if kind == "armed":
-        facts.trips_outlived = facts.counts["tripped"]
+        facts.outlived = facts.counts.copy()
     facts.counts[kind] += 1
     if kind in KEPT_KINDS:
         kept = facts.events.setdefault(kind, [])
