@@ -14,10 +14,11 @@ import pytest
 
 from ramprig.cli import main, running
 from ramprig.cli.main import EXIT_BUG
-from ramprig.cli.running import mock_url
+from ramprig.cli.running import how_far, mock_url
 from ramprig.mock.url import parse_mock
 from ramprig.record.reading import audit, read_manifest
 from ramprig.record.recorder import Recorder
+from ramprig.sequence.executive import Progress
 from ramprig.sequence.outcome import Outcome, Verdict
 
 SCRIPTS = Path(__file__).resolve().parent.parent / "scripts"
@@ -326,3 +327,30 @@ def test_the_shell_takes_lines_from_a_pipe(
     monkeypatch.setattr(sys, "stdin", io.StringIO("state\nleave\n"))
     assert main(["shell", "--port", "mock:?pace=virtual"]) == 0
     assert "left: all outputs are off" in capsys.readouterr().out
+
+
+@pytest.mark.parametrize(
+    ("cycle", "done", "failed", "said"),
+    [
+        (0, 0, 0, " 25%  1 min 30 s left  hold 2 s"),
+        (8, 6, 0, " 25%  1 min 30 s left  cycle 8  hold 2 s"),
+        (0, 1, 0, " 25%  1 min 30 s left  1 cycle done  hold 2 s"),
+        (0, 6, 2, " 25%  1 min 30 s left  6 cycles done  2 not as expected  hold 2 s"),
+    ],
+)
+def test_progress_tells_the_cycle_under_way_from_those_that_are_done(
+    cycle: int, done: int, failed: int, said: str
+) -> None:
+    far = Progress(
+        elapsed_s=30.0,
+        left_s=90.0,
+        fraction=0.25,
+        doing="hold 2 s",
+        place=None,
+        passes=0,
+        held=0,
+        failed=failed,
+        cycle=cycle,
+        cycles_done=done,
+    )
+    assert how_far(far) == said

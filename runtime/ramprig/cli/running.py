@@ -209,17 +209,19 @@ def tell_stop(session: Session) -> None:
 
 
 def how_far(far: HowFar) -> str:
-    """Progress in one line."""
+    """Progress in one line; what a narrow terminal may cut off comes last."""
     from ramprig.quantity import format_duration
 
-    text = f"{far.fraction:4.0%}  {format_duration(round(far.left_s))} left  {far.doing}"
+    parts = [f"{far.fraction:4.0%}", f"{format_duration(round(far.left_s))} left"]
     if far.passes:
-        text += f"  pass {far.passes}"
-    if far.cycle or far.cycles_done:
-        text += f"  cycle {far.cycle or far.cycles_done}"
+        parts.append(f"pass {far.passes}")
+    if far.cycle:
+        parts.append(f"cycle {far.cycle}")
+    elif far.cycles_done:
+        parts.append("1 cycle done" if far.cycles_done == 1 else f"{far.cycles_done} cycles done")
     if far.failed:
-        text += f"  {far.failed} not as expected"
-    return text
+        parts.append(f"{far.failed} not as expected")
+    return "  ".join([*parts, far.doing])
 
 
 def tell_end(outcome: Outcome, folder: Path | None, *, rehearsal: bool) -> None:
