@@ -104,7 +104,9 @@ def made_up(values: np.ndarray[tuple[int], np.dtype[np.float64]]) -> tuple[Facts
     """A run of cycles whose greatest currents are these."""
     facts = Facts(Path("made-up"), {"columns": ["vent.duty_pct", "vent.current_a"]})
     facts.passes = [13.0 * number for number in range(len(values) + 1)]
+    facts.pass_numbers = list(range(1, len(facts.passes) + 1))
     digest = Digest(("vent.current_a",), Envelope(["vent.current_a"]), interval_edges=len(facts.passes))
+    digest.interval_numbers = facts.pass_numbers
     digest.intervals = [
         Interval(number, 0.0, 13.0, 1300, {"vent.current_a": (-0.1, 0.05, float(value))})
         for number, value in enumerate(values, 1)

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import csv
+import io
 import re
 from collections import Counter
 from collections.abc import Callable
@@ -14,10 +16,11 @@ from ramprig.cli.read import summary
 from ramprig.endure.notes import add_note
 from ramprig.record.reading import audit
 from ramprig.report.account import account
+from ramprig.report.digest import digest_samples
 from ramprig.report.explain import explain
 from ramprig.report.facts import Expectation, Facts, gather
 from ramprig.report.junit import cases_of
-from ramprig.report.making import make_report
+from ramprig.report.making import intervals_csv, make_report
 from ramprig.report.sections import item_and_rig
 from ramprig.sequence.outcome import Verdict
 
@@ -91,6 +94,14 @@ def test_what_the_run_outlived_is_not_why_it_ended(run: Facts) -> None:
     explanation = explain(failed)
     assert explanation is not None
     assert [cause.key for cause in explanation.causes] == ["expectation"]
+
+
+def test_intervals_are_called_by_their_cycles(run: Facts) -> None:
+    """A cycle that was commanded and never begun has none."""
+    assert run.pass_numbers == [1, 2, 3]
+    later = replace(run, pass_numbers=[1, 2, 4])
+    rows = list(csv.reader(io.StringIO(intervals_csv(digest_samples(later)).decode("utf-8"))))
+    assert [row[0] for row in rows[1:]] == ["0", "1", "2", "4"]
 
 
 def test_a_part_without_an_account_is_not_told_as_whole(run: Facts) -> None:

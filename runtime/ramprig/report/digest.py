@@ -76,7 +76,8 @@ class Interval:
 class Digest:
     """What the samples of a run come to. `breaks` are times where the board restarted or the run was gone on with.
 
-    An interval is `interval_stride` cycles, or a minute; those from 1 to below `interval_edges` are whole cycles.
+    An interval is `interval_stride` cycles, or a minute; those from 1 to below `interval_edges` are whole cycles, and
+    `interval_numbers` what the first cycle of each is called.
     `features` are those of the cycles and checks of the count of cycles, the first FEATURES_MAX, with
     `features_left_out` more: as they were recorded while the run was under way, else from the samples, unless those
     were thinned. Of a thinned log intervals, totals
@@ -96,8 +97,14 @@ class Digest:
     totals: dict[str, tuple[float, float, float]] = field(default_factory=dict)
     interval_edges: int = 0
     interval_stride: int = 1
+    interval_numbers: list[int] = field(default_factory=list)
     features: list[TurnFeatures] = field(default_factory=list)
     features_left_out: int = 0
+
+    def number_of(self, interval: Interval) -> int:
+        """What the cycle of an interval is called, the first of several; else the interval's own number."""
+        place = interval.number - 1
+        return self.interval_numbers[place] if 0 <= place < len(self.interval_numbers) else interval.number
 
     def band(self, name: str) -> Band:
         """A column against time."""
@@ -129,6 +136,7 @@ def digest_samples(facts: Facts) -> Digest:
     if isinstance(edges, list):
         digest.interval_edges = len(edges)
         digest.interval_stride = -(-len(facts.passes) // ROWS_MAX)
+        digest.interval_numbers = facts.pass_numbers[:: digest.interval_stride]
     is_thinned = thinning_of(facts) is not None
     table = _from_ranges(facts, columns, edges) if is_thinned else _IntervalTable(columns, edges)
     period_s = facts.period_s

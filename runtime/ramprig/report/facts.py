@@ -100,7 +100,8 @@ class Facts:
     """A run: its manifest, its bench where the copy can be read, and its events by kind.
 
     `events` keeps the first KEPT_MAX of each kind that matters, `counts` counts all. `passes` are the begins of the
-    repeat that went on for longest, in s of the run, or of the cycles where there are any. `outlived` counts the events
+    repeat that went on for longest, in s of the run, or of the cycles where there are any, `pass_numbers` what they are
+    called: a cycle that was commanded and never begun has no entry. `outlived` counts the events
     of each kind that came before the outputs were last enabled: what they tell of did not end the run. `is_held` says
     whether a program is still writing it, None where that cannot be told.
     """
@@ -113,6 +114,7 @@ class Facts:
     counts: Counter[str] = field(default_factory=Counter)
     expectations: dict[tuple[str, str], Expectation] = field(default_factory=dict)
     passes: list[float] = field(default_factory=list)
+    pass_numbers: list[int] = field(default_factory=list)
     cycles: list[Document] = field(default_factory=list)
     notes: list[Document] = field(default_factory=list)
     outlived: Counter[str] = field(default_factory=Counter)
@@ -239,11 +241,13 @@ def gather(folder: Path) -> Facts:
     if facts.manifest.get("status") != "finished":
         facts.is_held = is_held(folder / EVENTS_FILE)
     _read_bench(facts)
-    series: dict[str, list[float]] = {}
+    series: dict[str, list[tuple[float, int]]] = {}
     for event in lines_of(folder / EVENTS_FILE, facts):
         _take(facts, event, series)
     if series:
-        facts.passes = max(series.items(), key=lambda entry: (entry[0] == "cycle", entry[1][-1] - entry[1][0]))[1]
+        begins = max(series.items(), key=lambda entry: (entry[0] == "cycle", entry[1][-1][0] - entry[1][0][0]))[1]
+        facts.passes = [time_s for time_s, _ in begins]
+        facts.pass_numbers = [number for _, number in begins]
     facts.cycles = list(lines_of(folder / CYCLES_FILE)) if (folder / CYCLES_FILE).is_file() else []
     facts.notes = list(lines_of(folder / NOTES_FILE)) if (folder / NOTES_FILE).is_file() else []
     return facts
@@ -263,7 +267,7 @@ def lines_of(path: Path, facts: Facts | None = None) -> Iterator[Document]:
         raise RecordError(f"{path} cannot be read as an event log: {error}") from error
 
 
-def _take(facts: Facts, event: Document, series: dict[str, list[float]]) -> None:
+def _take(facts: Facts, event: Document, series: dict[str, list[tuple[float, int]]]) -> None:
     kind = str(event.get("kind"))
     facts.last_event = event
     if kind == "tripped" and _is_told_again(facts, event):
@@ -281,7 +285,8 @@ def _take(facts: Facts, event: Document, series: dict[str, list[float]]) -> None
     if kind in ("pass_begun", "cycle_begun") and isinstance(event.get("time_s"), int | float):
         begins = series.setdefault("cycle" if kind == "cycle_begun" else str(event.get("place")), [])
         if len(begins) < PASSES_MAX:
-            begins.append(float(event["time_s"]))
+            number = event.get("number") if kind == "cycle_begun" else None
+            begins.append((float(event["time_s"]), number if isinstance(number, int) else len(begins) + 1))
 
 
 def _is_told_again(facts: Facts, trip: Document) -> bool:

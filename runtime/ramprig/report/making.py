@@ -81,7 +81,7 @@ def intervals_csv(digest: Digest) -> bytes:
     for row in digest.intervals:
         values = [row.columns.get(column, ("", "", "")) for column in digest.columns]
         cells = [f"{value:.6g}" if isinstance(value, float) else value for triple in values for value in triple]
-        writer.writerow([row.number, f"{row.begin_s:.3f}", f"{row.end_s:.3f}", row.samples, *cells])
+        writer.writerow([digest.number_of(row), f"{row.begin_s:.3f}", f"{row.end_s:.3f}", row.samples, *cells])
     return out.getvalue().encode("utf-8")
 
 

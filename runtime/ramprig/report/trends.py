@@ -108,7 +108,7 @@ def _of_passes(facts: Facts, digest: Digest) -> list[Trend]:
     rows = [row for row in digest.intervals if 0 < row.number < digest.interval_edges]
     if len(facts.passes) <= CYCLES_MIN or len(rows) < CYCLES_MIN:
         return []
-    numbers = np.array([(row.number - 1.0) * digest.interval_stride + 1 for row in rows])
+    numbers = np.array([float(digest.number_of(row)) for row in rows])
     found = []
     for column in digest.columns:
         if column.endswith((".speed_rpm", ".current_a")):
