@@ -5,7 +5,8 @@
     python3 scripts/test.py --soak             everything, the minutes-long tests included
     python3 scripts/test.py tests/test_x.py -k name     what is not an option of ours goes to pytest
 
-The tests run on all cores, a file at a time; with arguments for pytest they run one after the other, to be looked at.
+The tests run on all cores, a file at a time, long ones first; with arguments for pytest they run one after the other,
+to be looked at.
 All checks run even where an earlier one fails; the exit status is 0 only if all passed. The compilers and libraries
 that the firmware's tests need are installed where we may, and otherwise named: those tests are then skipped.
 """
@@ -25,7 +26,7 @@ def commands(python: str, arguments: "list[str]") -> "list[tuple[str, list[str]]
     """The checks to run, as (title, command) in order, for the script's `arguments`; pytest comes last."""
     passed_on = [argument for argument in arguments if argument not in OPTIONS]
     marks = ["-m", "soak or not soak"] if "--soak" in arguments else []
-    spread = [] if passed_on else ["--numprocesses", "auto", "--dist", "loadfile"]
+    spread = [] if passed_on else ["--numprocesses", "auto", "--dist", "loadfile", "--no-loadscope-reorder"]
     tests = ("pytest: the tests", [python, "-m", "pytest", *spread, *marks, *passed_on])
     if "--quick" in arguments:
         return [tests]

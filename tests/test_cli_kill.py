@@ -89,8 +89,7 @@ def check_log(run: RunProcess, ended_s: float, ending: str, seed: str) -> None:
     assert kinds[-1] == "run_finished"
 
 
-@pytest.mark.parametrize("number", range(2))
-@pytest.mark.parametrize("ending", ENDINGS)
+@pytest.mark.parametrize(("ending", "number"), [*((ending, 0) for ending in ENDINGS), ("SIGKILL", 1), ("unplug", 1)])
 def test_the_bridge_is_off_in_time_and_the_log_is_whole(tmp_path: Path, ending: str, number: int) -> None:
     once(tmp_path / "one", ending, number)
 

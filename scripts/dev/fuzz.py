@@ -74,11 +74,19 @@ def reported(target: str, output: str, *, failed: bool) -> Outcome:
     )
 
 
-def fuzz(target: str, *, bug: int = 0, time_s: float | None = None, runs: int | None = None, seed: int = 0) -> Outcome:
+def fuzz(
+    target: str,
+    *,
+    bug: int = 0,
+    time_s: float | None = None,
+    runs: int | None = None,
+    seed: int = 0,
+    optimise: bool = True,
+) -> Outcome:
     """Build a target and run it for a time or a number of runs. `seed` 0: another each time."""
     with tempfile.TemporaryDirectory(prefix="ramprig-fuzz-") as folder:
         program = Path(folder) / "fuzz"
-        proof_builds.build_fuzzer(program, target=target, bug=bug)
+        proof_builds.build_fuzzer(program, target=target, bug=bug, optimise=optimise)
         corpus = Path(folder) / "corpus"
         corpus.mkdir()
         for number, data in enumerate(seeds(target)):
