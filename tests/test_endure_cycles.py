@@ -378,6 +378,16 @@ def test_the_count_is_what_was_written_down(tmp_path: Path) -> None:
     assert ages == [(2, 0.0), (2, 60.0)]
 
 
+def test_the_starts_of_a_cycle_that_was_broken_off_count_whether_it_was_told_or_not(tmp_path: Path) -> None:
+    """Three lost links in an hour would else leave three cycles' starts out of it."""
+    first, second, third = (COMMANDED | {"number": number, "starts": {"vent": 3}} for number in (1, 2, 3))
+    told = {"kind": "cycle_interrupted", "number": 1, "utc": "2027-01-15T08:00:10.000Z"}
+    record = written(tmp_path, first, told, second, third | {"utc": "2027-01-15T08:00:40.000Z"})
+    ages = [(past.motor, past.count, past.age_s) for past in record.starts(1_800_000_060.0)]
+    assert ages == [("vent", 3, 50.0), ("vent", 3, 20.0), ("vent", 3, 0.0)]
+    assert record.counted.interrupted == 2  # the first was told, the second is shown by its successor
+
+
 def test_a_cycle_that_follows_an_open_one_shows_that_this_was_broken_off(tmp_path: Path) -> None:
     record = written(tmp_path, COMMANDED, COMMANDED | {"number": 2}, DONE | {"number": 2})
     assert (record.counted.interrupted, record.counted.confirmed, record.open_number) == (1, 1, None)

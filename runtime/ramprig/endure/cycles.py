@@ -50,19 +50,25 @@ class CycleRecord:
     def starts(self, now_unix_s: float) -> tuple[PastStarts, ...]:
         """The starts of the last hour before `now_unix_s`, by the host's wall clock.
 
-        Those of a cycle that was broken off are taken as of just now, since nothing tells when they were.
+        Those of a cycle that was broken off are taken as of when that was written down, else as of just now, since
+        nothing tells when they were; all of its starts are taken as made.
         """
         found: list[PastStarts] = []
-        latest: Mapping[str, int] = {}
+        known: Mapping[str, int] = {}
+        under_way: Mapping[str, int] | None = None
         for line in self.lines:
-            if line["kind"] in ("cycle_done", "check_done"):
-                latest = line["starts"]
+            kind, made = line["kind"], under_way
+            if kind in ("cycle_done", "check_done"):
+                made = known = line["starts"]
+            if made is not None and kind != "block_over":  # else a cycle that this line shows as broken off
                 age_s = max(0.0, now_unix_s - from_rfc3339(line["utc"]).timestamp())
-                if age_s < HOUR_S:
-                    found += [PastStarts(motor, int(count), age_s) for motor, count in latest.items() if count]
-        if self.open_number is not None:
-            found += [PastStarts(motor, int(count), 0.0) for motor, count in latest.items() if count]
-        return tuple(found)
+                found += _past(made, age_s) if age_s < HOUR_S else []
+            under_way = (line.get("starts") or known) if kind == "cycle_commanded" else None
+        return (*found, *_past(under_way or {}, 0.0))
+
+
+def _past(starts: Mapping[str, int], age_s: float) -> list[PastStarts]:
+    return [PastStarts(motor, int(count), age_s) for motor, count in starts.items() if count]
 
 
 def read_cycle_record(folder: Path) -> CycleRecord:

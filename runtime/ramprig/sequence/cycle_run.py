@@ -191,7 +191,12 @@ class CycleBook:
         self._under_way = _UnderWay(turn, self.counted.commanded)
         self._write(
             CycleCommanded(
-                tick=None, number=self.counted.commanded, block=part.block, name=part.name, part=self._so_far.part
+                tick=None,
+                number=self.counted.commanded,
+                block=part.block,
+                name=part.name,
+                part=self._so_far.part,
+                starts=part.starts,
             )
         )
 

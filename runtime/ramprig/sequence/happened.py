@@ -67,13 +67,17 @@ class CheckBegun:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class CycleCommanded:
-    """Cycle `number` of the run, of this block, is about to be commanded; written down before its first order."""
+    """Cycle `number` of the run, of this block, is about to be commanded; written down before its first order.
+
+    `starts` are those of each motor in it, which count against its starts per hour though it be broken off.
+    """
 
     tick: int | None
     number: int
     block: int
     name: str
     part: int
+    starts: Mapping[str, int] = field(default_factory=dict)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
