@@ -16,6 +16,8 @@
 #include <unistd.h>
 
 #define PACE_US 250u /* slice of the paced mode: how late a byte may be */
+#define SLICE_MAX_US 10000u
+#define LAG_MAX_US 1000000u /* what was held up longer lets the lost time go, instead of racing after it */
 #define COMMAND_BYTES 200u
 #define LINE_BYTES 128
 #define FRAME_BYTES 65535u
@@ -266,10 +268,22 @@ static bool take_commands(void)
     return true;
 }
 
+/* What a host does not take is lost as on a wire: a board does not stand still for it. */
+static void send_on(int fd)
+{
+    if (board.wire.sent != 0 && write(fd, board.wire.from_chip, board.wire.sent) < 0 && errno != EAGAIN && errno != EINTR) {
+        fprintf(stderr, "emu: the pseudo-terminal takes nothing: %s\n", strerror(errno));
+    }
+    board.wire.sent = 0;
+    board.wire.line_ended = false;
+}
+
 static int run_paced(int fd)
 {
     uint64_t start_us = now_us();
     bool commands = true;
+    (void)fcntl(fd, F_SETFL, O_NONBLOCK);
+    (void)setvbuf(stdin, NULL, _IONBF, 0); /* or a second command would wait, read and not seen, for a third */
     while (!board.chip.crashed) {
         struct pollfd waits[2] = {{fd, POLLIN, 0}, {commands ? STDIN_FILENO : -1, POLLIN, 0}};
         struct timespec pause = {0, (long)PACE_US * 1000L};
@@ -284,17 +298,17 @@ static int run_paced(int fd)
             }
         }
         uint64_t due_us = now_us() - start_us;
-        if (due_us > board.now_us) {
-            uint64_t behind_us = due_us - board.now_us;
-            board_run(&board, behind_us < 10000u ? (uint32_t)behind_us : 10000u, false);
+        uint64_t behind_us = due_us > board.now_us ? due_us - board.now_us : 0;
+        if (behind_us > LAG_MAX_US) {
+            start_us += behind_us - LAG_MAX_US;
+            behind_us = LAG_MAX_US;
+        }
+        if (behind_us != 0) {
+            board_run(&board, behind_us < SLICE_MAX_US ? (uint32_t)behind_us : SLICE_MAX_US, false);
         } else {
             nanosleep(&pause, NULL);
         }
-        if (board.wire.sent != 0) {
-            (void)write_whole(fd, board.wire.from_chip, board.wire.sent);
-            board.wire.sent = 0;
-            board.wire.line_ended = false;
-        }
+        send_on(fd);
     }
     fprintf(stderr, "emu: the program has crashed\n");
     return 1;
