@@ -131,6 +131,12 @@ def test_what_an_interruption_leads_to_must_be_said_of_cycles(tmp_path: Path) ->
     assert named.startswith(f"{tmp_path / 'night.yaml'}: on interruption: not said")
 
 
+def test_a_motor_that_tripped_is_not_started_again_with_nobody_there(tmp_path: Path) -> None:
+    text = NIGHT.replace("within: 5 min}", "within: 5 min, after a trip: yes}")
+    (named,) = missing(night(tmp_path, text), bench())
+    assert named.startswith(f"{tmp_path / 'night.yaml'}: on interruption: after a trip: ")
+
+
 def test_any_board_may_answer_on_a_mock_alone(tmp_path: Path) -> None:
     assert missing(night(tmp_path), bench(), url="core:") == []
     (named,) = missing(night(tmp_path), bench(), url="/dev/ttyACM0")
@@ -299,6 +305,21 @@ def test_the_computer_is_kept_awake_as_long_as_it_is_asked_for(monkeypatch: pyte
     assert CANNOT_PREVENT in str(kept)
     for what in ("closed lid", "power button", "battery", "updates"):
         assert what in CANNOT_PREVENT
+
+
+@pytest.mark.parametrize("at", ["begin", "end"])
+def test_a_desktop_that_fails_neither_begins_nor_ends_a_run_wrongly(monkeypatch: pytest.MonkeyPatch, at: str) -> None:
+    @contextmanager
+    def running(*, on_fail: str) -> Iterator[SimpleNamespace]:
+        if at == "begin":
+            raise OSError("the bus is gone")
+        yield SimpleNamespace(active=True, active_method="org.example.Inhibit")
+        raise OSError("the bus is gone")
+
+    keep = SimpleNamespace(keep=SimpleNamespace(running=running))
+    monkeypatch.setattr(awake, "need", lambda module, purpose: keep)
+    with keep_awake(accept_sleep=True) as kept:
+        assert kept.active is (at == "end")
 
 
 def test_where_it_cannot_be_kept_awake_a_run_goes_on_only_where_that_is_accepted(

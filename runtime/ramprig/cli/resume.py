@@ -69,7 +69,7 @@ def carry_out(args: argparse.Namespace) -> int:
             broken,
             RunWish(sequence=broken.sequence, bench=broken.bench),
             by="command",
-            now_unix_s=now_s,
+            now_unix_s=time.time(),  # the question may have stood for hours
             after_trip=args.after_trip,
             latest_end_unix_s=way.latest_end_unix_s,
             at_most=args.at_most,

@@ -8,7 +8,7 @@ still, or the wall clock jumped against the monotonic one (see `session/watch.py
 from __future__ import annotations
 
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from dataclasses import dataclass
 from typing import Protocol, cast
 
@@ -70,11 +70,26 @@ def keep_awake(*, accept_sleep: bool) -> Iterator[Awake]:
             raise UsageError(f"{missing}. {ACCEPT}.") from missing
         yield Awake(active=False, method="", why_not=f"the package {missing.package} is not installed")
         return
-    with lock as mode:
-        if mode.active:
+    with _held(lock) as mode:
+        if mode is not None and mode.active:
             yield Awake(active=True, method=str(mode.active_method))
             return
         why_not = "the system took no request to stay awake (no desktop session, or none that can be asked)"
         if not accept_sleep:
             raise UsageError(f"The computer cannot be kept awake: {why_not}. {ACCEPT}.")
         yield Awake(active=False, method="", why_not=why_not)
+
+
+@contextmanager
+def _held(lock: _Lock) -> Iterator[_Mode | None]:
+    """The lock while this is entered; None where the package fails, which must neither begin nor end a run wrongly."""
+    try:
+        mode = lock.__enter__()
+    except Exception:  # whatever the desktop's services make of the request
+        yield None
+        return
+    try:
+        yield mode
+    finally:
+        with suppress(Exception):  # a desktop that has gone meanwhile holds no lock either
+            lock.__exit__(None, None, None)

@@ -122,9 +122,13 @@ def _duration(sequence: Sequence, plan: Plan, at_most_s: float | None) -> Iterat
 
 
 def _interruption(sequence: Sequence, plan: Plan) -> Iterator[Missing]:
+    file = sequence.mark.source.file
     if plan.counts_cycles and not sequence.interruptions.said:
         text = "not said: 'stop', or {resume at most: 3, within: 2 min}"
-        yield Missing(file=sequence.mark.source.file, key="on interruption", text=text)
+        yield Missing(file=file, key="on interruption", text=text)
+    if sequence.interruptions.after_trip:
+        text = "a motor that has tripped is somebody's to look at before it runs again: leave it out"
+        yield Missing(file=file, key="on interruption: after a trip", text=text)
 
 
 def _disk(bench: Bench, plan: Plan, seconds: float, free_bytes: int) -> Iterator[Missing]:
