@@ -130,6 +130,21 @@ def test_the_events_say_where_full_rate_was_kept_and_why(tmp_path: Path) -> None
     ]
 
 
+def test_an_event_that_is_told_late_keeps_what_is_not_decided_yet_and_says_so(tmp_path: Path) -> None:
+    recorder = begin(tmp_path, Keeping(thinning=RULE))
+    blocks = blocks_of(SAMPLES, size=50)
+    for place, block in enumerate(blocks):
+        recorder.on_block(block)
+        if place == 29:
+            recorder.on_event(Marked(tick=FIRST_TICK + 1000, name="long ago"))
+            newest = int(block.ticks[-1])
+    folder = finish(recorder, SAMPLES)
+    events = read_events(folder / "events.jsonl")[0]
+    spans = [(e["kind"], e["tick"]) for e in events if e["kind"].startswith("full_rate")]
+    assert spans[2:4] == [("full_rate_begun", newest - 100), ("full_rate_ended", newest)]
+    assert audit(folder).statements == ()
+
+
 def test_the_manifest_says_how_the_log_was_thinned(tmp_path: Path) -> None:
     kept = read_manifest(run(tmp_path, RULE))["keeping"]
     assert kept["thinning"] == {

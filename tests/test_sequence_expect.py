@@ -192,6 +192,7 @@ def test_a_shaft_stands_still_when_its_counts_stay_in_the_band_for_the_time() ->
 
     assert still([0, 10, 20, 30, 31, 32, 30, 31, 32, 30], 1000)
     assert not still([0, 10, 20, 30, 30, 31, 32, 33, 33, 33], 1000)
+    assert not still([30] * 6 + [34, 34, 30, 30], 1000), "what comes back was no standstill"
     assert not still([5] * 10, 1050), "the time counts from `since` on"
     assert still([5] * 10, 1030)
 

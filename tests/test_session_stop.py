@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import threading
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -13,7 +14,7 @@ from ramprig.port.faulty import FaultyPort
 from ramprig.session import NOT_CONFIRMED
 from ramprig.session.events import LateHost, StopAsked, StopJudged, Stopped, Tripped
 from ramprig.session.stop import StopRun
-from ramprig_link.host import HostLink
+from ramprig_link.host import Answered, HostLink
 from ramprig_link.words import State, Trip
 from session_rig import LIMITS, MASK, Rig, wanted
 
@@ -240,6 +241,43 @@ def test_another_thread_may_not_pump() -> None:
 
 def test_a_stop_in_no_state_to_stop_is_confirmed_too() -> None:
     assert Rig().session.stop(1).confirmed
+
+
+def test_what_waits_to_be_sent_when_a_stop_is_asked_for_is_never_sent() -> None:
+    rig = running(Rig())
+    answers: list[Answered] = []
+    assert rig.session._core.pump.post("counters", then=answers.append)
+    assert rig.session.stop(1).confirmed
+    rig.pump(0.5)
+    assert answers == []
+
+
+def test_a_stop_by_slope_that_is_not_over_in_its_time_is_cut(monkeypatch: pytest.MonkeyPatch) -> None:
+    slow = {**LIMITS, ("slew_down_duty", 0): 4}  # by slope it takes 0.75 s
+    rig = running(Rig(wanted=wanted(slow)))
+    begin_s = rig.now
+    monkeypatch.setattr(StopRun, "_stop_time_s", lambda _: 0.2)
+    report = rig.session.stop(1)
+    assert (report.confirmed, report.escalated, report.category) == (True, True, 1)
+    assert 0.2 < rig.of(Stopped)[-1].host_s - begin_s < 0.35
+
+
+def test_a_shaft_is_at_rest_within_what_the_board_takes_for_rest() -> None:
+    rig = Rig(wanted=wanted({**LIMITS, ("still_counts", 0): 50}))
+    here = rig.session.state()
+    (axis,) = here.axes
+    stop = StopRun(rig.session._core, 1, run_down_s=1.0)
+    crept = [replace(here, axes=(replace(axis, counts=axis.counts + counts),)) for counts in (50, 51)]
+    assert [stop._moved(here, later) for later in crept] == [[False], [True]]
+
+
+@pytest.mark.parametrize(("away_s", "told"), [(0.15, 1), (0.05, 0)])
+def test_a_runner_that_calls_in_late_while_armed_is_told_from_a_tenth_of_a_second_on(away_s: float, told: int) -> None:
+    rig = running(Rig())
+    rig.silence(away_s)
+    rig.pump(0.2)
+    assert len(rig.of(LateHost)) == told
+    assert rig.session.armed
 
 
 def test_several_beats_fall_into_one_lease_while_armed(monkeypatch: pytest.MonkeyPatch) -> None:
