@@ -129,20 +129,26 @@ def test_a_current_that_grows_is_found_and_a_steady_one_is_not() -> None:
 
 
 def test_checks_are_told_by_their_first_and_last() -> None:
-    def check(after: int, speed_rpm: float) -> CycleFeatures:
+    def check(after: int, speed_rpm: float, begin: int = 0) -> CycleFeatures:
         motor = MotorFeatures(forward=DriveFeatures(steady_speed_rpm=speed_rpm), position_error_rev=0.001)
-        span = Span(number=0, part=1, begin_tick=0, end_tick=1000, after=after)
+        span = Span(number=0, part=1, begin_tick=begin, end_tick=1000, after=after)
         return CycleFeatures(
             span=span, samples=100, left_out=0, duration_s=1.0, lowest_supply_v=12.0, motors={"vent": motor}
         )
 
-    text = checks_table([check(0, 20.0), check(100, 19.5), check(200, 18.0)])
+    text = checks_table([check(0, 20.0), check(100, 19.5), check(200, 18.0)], {})
     assert "3 checks were done, the first after 0 cycles and the last after 200" in text
     row = next(row for row in text.split("<tr>") if "vent forward: steady speed" in row)
     assert re.findall(r"<td[^>]*>([^<]*)</td>", row)[1:] == ["20", "18", "-10.0 %", "rpm"]
     error = next(row for row in text.split("<tr>") if "vent: position error" in row)
     assert "%" not in error
-    assert checks_table([check(0, 20.0)]) == ""
+    assert checks_table([check(0, 20.0)], {}) == ""
+    blocks = {(1, 0): (1, "open"), (1, 1): (2, "shut <&>")}
+    several = [check(0, 20.0), check(9, 19.0), check(0, 40.0, begin=1), check(9, 42.0, begin=1)]
+    text = checks_table(several, blocks)
+    assert text.count("<h3>") == 2
+    assert "of &#x27;shut &lt;&amp;&gt;&#x27;</h3>" in text
+    assert [change for change in re.findall(r"[+-][\d.]+ %", text) if "0.0" not in change] == ["-5.0 %", "+5.0 %"]
 
 
 def test_features_beyond_the_bound_are_counted(facts: Facts, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from bisect import bisect_right
+from collections import Counter
 from collections.abc import Sequence
 from dataclasses import dataclass, field
 
@@ -225,9 +226,12 @@ def _windows(facts: Facts, columns: tuple[str, ...]) -> list[Window]:
 
 
 def _spans(facts: Facts) -> list[tuple[int, float, float]]:
-    """Number, begin and end in s of each whole cycle: without the rest after it where that is told apart."""
+    """Number, begin and end in s of each whole cycle of the block with the most: without the rest after it where that
+    is told apart. Cycles of several blocks are not alike."""
     done = [event for event in facts.cycles if event.get("kind") == "cycle_done" and event.get("time_s") is not None]
     if done:
+        blocks = Counter(event.get("block") for event in done)
+        done = [event for event in done if event.get("block") == blocks.most_common(1)[0][0]]
         tick_s = facts.tick_us / 1e6
         return [
             (int(event["number"]), event["time_s"] - (event["tick"] - event["begin_tick"]) * tick_s, event["time_s"])

@@ -147,6 +147,17 @@ class Facts:
         found = (self.manifest.get("results") or {}).get("carried_out")
         return None if found is None else bool(found)
 
+    def blocks(self) -> dict[tuple[int, int], tuple[int, str]]:
+        """Number and name of the block of each cycle and check that was done, by its part and the tick it begins at."""
+        return {
+            (int(line.get("part") or 1), int(line["begin_tick"])): (
+                int(line["block"]),
+                str(line.get("name") or "cycle"),
+            )
+            for line in self.cycles
+            if "begin_tick" in line and "block" in line
+        }
+
     @property
     def name(self) -> str:
         """The run's folder name, its identifier."""

@@ -182,7 +182,7 @@ def _trends(read: Read, figures: _Figures) -> str:
     if digest.features_left_out:
         text = f"features.csv and the tables below have the first {len(digest.features)} cycles and checks; "
         words += page.paragraph(f"{text}{digest.features_left_out} later ones are in cycles.jsonl alone.", kind="note")
-    tables = checks_table(digest.features)
+    tables = checks_table(digest.features, facts.blocks())
     tables += untold_table(digest.features, motors=facts.motors, servos=facts.servos)
     return words + figures.put(plots.by_cycle(facts, seen.drawn)) + tables
 
