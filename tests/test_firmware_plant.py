@@ -174,6 +174,20 @@ def test_both_forms_agree_on_play_stops_wear_and_hands(seed: int) -> None:
     assert len(flanks) > 3
 
 
+@pytest.mark.parametrize("duty", [-7000, 7000])
+def test_both_forms_hold_a_shaft_fast_that_stops_and_a_clamp_leave_no_room(duty: int) -> None:
+    pair = Pair(GEARED, seed=1, tick_us=1000)
+    pair.stops((-3.0, -2.0), 0)
+    pair.play(0.01, 0)
+    pair.fault(PlantFault.OUTPUT_CLAMPED, 0, True)
+    pair.drive(0, duty, False)
+    for _ in range(200):
+        pair.step()
+    axis = pair.python.axes[0]
+    assert (axis.angle_rad, axis.speed_rad_s, axis.gear.pressed) == (-2.0, 0.0, True)
+    assert axis.current_a == pytest.approx(duty / 10_000 * pair.python.supply.bus_v / axis._resistance_ohm, rel=1e-3)
+
+
 @pytest.mark.parametrize("seed", range(8))
 def test_both_forms_give_the_same_readings_whatever_is_done(seed: int) -> None:
     drawn = random.Random(seed)

@@ -62,14 +62,17 @@ class Gear:
         return self._output_rad if self.linked else angle_rad / self.ratio
 
     def hold(self, angle_rad: float, push_nm: float) -> float:
-        """Return the angle to which stops hold a motor's shaft that wants to be at `angle_rad`, and note `pressed`."""
+        """Return the angle to which stops hold a motor's shaft that wants to be at `angle_rad`, and note `pressed`.
+
+        Where stops and a clamped output leave no room, the shaft is held fast at the upper one.
+        """
         play_rad, clamped, stops_rad = self.settings
         low, high = (-math.inf, math.inf) if stops_rad is None else stops_rad
         if clamped:
             low = max(low, self.ratio * (self._output_rad - play_rad / 2.0))
             high = min(high, self.ratio * (self._output_rad + play_rad / 2.0))
         held_rad = min(max(angle_rad, low), high)
-        self.pressed = (held_rad == high and push_nm > 0.0) or (held_rad == low and push_nm < 0.0)
+        self.pressed = (held_rad >= high and push_nm > 0.0) or (held_rad <= low and push_nm < 0.0)
         return held_rad
 
     def carry(self, angle_rad: float, speed_rad_s: float, current_a: float, weight: float) -> None:
