@@ -179,6 +179,8 @@ def overlays(facts: Facts, digest: Digest) -> list[Plot]:
     if len(digest.windows) < 2:
         return []
     what = "cycle" if facts.counts["cycle_begun"] else "pass"
+    said = " of the block with the most" if len(set(facts.blocks().values())) > 1 else ""
+    said += " overlaid" + (" (of the rows that were kept)" if thinning_of(facts) is not None else "")
     plots = []
     for motor in facts.motors:
         for column in (f"{motor}.speed_rpm", f"{motor}.current_a"):
@@ -187,11 +189,11 @@ def overlays(facts: Facts, digest: Digest) -> list[Plot]:
             bands = [window.envelope.band(column) for window in digest.windows]
             if any(not len(band.mean) or np.isnan(band.mean).all() for band in bands):
                 continue
-            plots.append(_overlay(column, what, digest, bands, is_thinned=thinning_of(facts) is not None))
+            plots.append(_overlay(column, what, digest, bands, said))
     return plots
 
 
-def _overlay(column: str, what: str, digest: Digest, bands: Sequence[Band], *, is_thinned: bool) -> Plot:
+def _overlay(column: str, what: str, digest: Digest, bands: Sequence[Band], said: str) -> Plot:
     text, unit = label_of(column)
     longest = max(window.end_s - window.begin_s for window in digest.windows)
     low = min(float(np.nanmin(band.least)) for band in bands)
@@ -203,10 +205,7 @@ def _overlay(column: str, what: str, digest: Digest, bands: Sequence[Band], *, i
             chart.band(times, band.least, band.greatest, colour=colour)
         chart.line(times, band.mean, colour=colour, dashes=dashes)
         chart.name(f"{what} {window.number}", colour=colour, dashes=dashes)
-    rows = " (of the rows that were kept)" if is_thinned else ""
-    return Plot(
-        f"{text}, first and last {what} overlaid{rows}", chart.text(f"{text} of several {what}es over each other")
-    )
+    return Plot(f"{text}, first and last {what}{said}", chart.text(f"{text}, one {what} over another"))
 
 
 def by_cycle(facts: Facts, found: Sequence[Trend]) -> list[Plot]:
