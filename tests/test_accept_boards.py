@@ -140,8 +140,8 @@ def test_a_second_stop_while_the_board_is_put_back_costs_neither_the_report_nor_
         def let_go(self) -> None:
             super().let_go()
             self.let_go_count += 1
-            if self.let_go_count == 1:
-                self.panic(0)
+            if self.let_go_count < 6:  # whoever is afraid presses more than once
+                self.panic(self.let_go_count % 2)
 
     talk = Twice(port)
 
@@ -150,8 +150,27 @@ def test_a_second_stop_while_the_board_is_put_back_costs_neither_the_report_nor_
             talk.panic(1)
 
     verdict = accept(port, Wish(energise=lambda trial: True), tell=running, talk=talk)
-    assert (verdict.exit_code, verdict.unrestored) == (5, [])
+    assert (verdict.exit_code, verdict.unrestored, verdict.failed) == (5, [], {})
     assert verdict.stopped == "Stopped by the user; the report has what was checked before."
     assert port.device.controller is not None
     left = port.device.controller.limits
     assert {key: left[key] for key in OWN} == OWN
+
+
+def test_the_answer_to_a_stop_from_the_user_is_no_fault_of_the_board(monkeypatch: pytest.MonkeyPatch) -> None:
+    """A signal comes while the port is read, mostly, and the answer may come with the same bytes."""
+    port = mock_port()
+    talk, read, count = Talk(port), port.read, [0]
+
+    def stopped_within(timeout_s: float) -> bytes:
+        count[0] += talk.beat_s is not None
+        if count[0] != 40:
+            return read(timeout_s)
+        count[0] += 1
+        talk.panic(0)
+        return read(0.05) + read(0.05) + read(0.05)
+
+    monkeypatch.setattr(port, "read", stopped_within)
+    verdict = accept(port, Wish(energise=lambda trial: True), tell=lambda text: None, talk=talk)
+    assert count[0] > 40
+    assert (verdict.exit_code, verdict.failed) == (5, {})

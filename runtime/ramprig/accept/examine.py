@@ -36,7 +36,7 @@ DEAF_S = 10.0
 """A board that opening the port has restarted boots for some seconds."""
 TRIES_MAX = 4
 """So often is a check made where samples were dropped that it judges by."""
-LEAVES_MAX = 3
+LEAVES_MAX = 20
 """So often is the board put back where a stop is asked for meanwhile."""
 INVARIANTS = ("S1", "S2", "S3", "S4", "S5", "S6", "S7")
 NO_POWER = "nothing was to be switched on"

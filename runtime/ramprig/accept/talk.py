@@ -116,6 +116,8 @@ class Talk:
     def panic(self, category: int) -> bool:
         """Send a stop from a signal handler; the next use raises StoppedByUser."""
         self._asked_to_stop = True
+        for _ in range(1 if category else 2):  # a category 0 stop is sent with and without a check
+            self.rules.sent(TAG_URGENT, "stop")
         return self.port.urgent(HostLink.urgent_stop(category))
 
     def let_go(self) -> None:
