@@ -16,7 +16,7 @@ from prompt_toolkit.keys import Keys
 
 from held_up import held_up_s
 from ramprig.shell.stopkeys import F12, StopBytes, StopKey
-from ramprig.shell.taps import PASTE_MAX, WAITING_MAX, TappedInput, tapping
+from ramprig.shell.taps import PASTE_MAX, WAITING_MAX, TappedInput, tapped_terminal, tapping
 
 posix = pytest.mark.skipif(sys.platform == "win32", reason="selects on a pipe")
 
@@ -175,3 +175,30 @@ def test_the_end_of_the_terminal_closes_the_input() -> None:
     asyncio.run(run())
     os.close(reader)
     assert tapped.closed
+
+
+@posix
+def test_after_a_suspension_the_terminal_is_raw_again_and_at_the_end_as_it_was() -> None:
+    import pty
+    import signal
+    import termios
+
+    local = 3  # the place of the local modes in what tcgetattr gives
+
+    def waits_for_enter(descriptor: int) -> bool:
+        return bool(termios.tcgetattr(descriptor)[local] & termios.ICANON)
+
+    near, far = pty.openpty()
+    before = signal.getsignal(signal.SIGCONT)
+    try:
+        cooked = termios.tcgetattr(far)
+        with tapped_terminal(far, TappedInput(lambda: None)):
+            assert not waits_for_enter(far)
+            termios.tcsetattr(far, termios.TCSANOW, cooked)  # as a command line does to which the terminal falls back
+            os.kill(os.getpid(), signal.SIGCONT)
+            assert not waits_for_enter(far)
+        assert waits_for_enter(far)
+        assert signal.getsignal(signal.SIGCONT) == before
+    finally:
+        os.close(near)
+        os.close(far)

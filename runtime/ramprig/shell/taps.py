@@ -13,10 +13,11 @@ import asyncio
 import codecs
 import os
 import select
+import signal
 import threading
 import time
 from collections.abc import Callable, Iterator
-from contextlib import AbstractContextManager, contextmanager, nullcontext
+from contextlib import AbstractContextManager, contextmanager, nullcontext, suppress
 
 from prompt_toolkit.input.base import Input
 from prompt_toolkit.input.vt100_parser import Vt100Parser
@@ -199,5 +200,35 @@ def tapped_terminal(descriptor: int, keys: TappedInput) -> Iterator[None]:
     """The terminal in raw mode, read into `keys`; put back as it was at the end. POSIX."""
     from prompt_toolkit.input.vt100 import raw_mode
 
-    with raw_mode(descriptor), tapping(descriptor, keys):
+    with raw_mode(descriptor), _raw_again(descriptor), tapping(descriptor, keys):
         yield
+
+
+@contextmanager
+def _raw_again(descriptor: int) -> Iterator[None]:
+    """After a suspension the command line hands the terminal back in its own mode, in which keys wait for Enter."""
+    import termios
+
+    if threading.current_thread() is not threading.main_thread():
+        yield
+        return
+    mode = termios.tcgetattr(descriptor)
+
+    def resume(number: int, frame: object) -> None:
+        if _is_in_front(descriptor):  # in the background it would be suspended for trying
+            with suppress(termios.error):
+                termios.tcsetattr(descriptor, termios.TCSANOW, mode)
+
+    before = signal.signal(signal.SIGCONT, resume)
+    try:
+        yield
+    finally:
+        signal.signal(signal.SIGCONT, before)
+
+
+def _is_in_front(descriptor: int) -> bool:
+    """Whether this process may set the terminal's mode: it has it in the foreground, or it is not its own at all."""
+    try:
+        return os.tcgetpgrp(descriptor) == os.getpgrp()
+    except OSError:
+        return True
