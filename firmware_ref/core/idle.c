@@ -202,8 +202,24 @@ bool rr_device_idle(struct rr_device *device, bool long_ones)
     return heard || spoke;
 }
 
+/* Whether a piece of work other than to hear waits: mostly none does, four times a tick. */
+static bool is_busy(const struct rr_device *device)
+{
+    const struct rr_logging *logging = RR_NEAR(&device->logging);
+    if (device->saying != RR_SAYING_NOTHING || device->heard != RR_LINE_NONE || device->notices.count != 0 ||
+        device->memory.reply.waiting || device->aside.waiting || device->packing_busy || logging->waiting ||
+        logging->again_waiting || logging->taken || logging->flush_due || device->limits.digest_place != RR_LIMITS) {
+        return true;
+    }
+    uint8_t unsaved = 0;
+    for (uint8_t i = 0; i < sizeof device->unsaved; i++) {
+        unsaved = (uint8_t)(unsaved | device->unsaved[i]);
+    }
+    return unsaved != 0;
+}
+
 void rr_device_settle(struct rr_device *device)
 {
-    while (!RR_SPREAD && rr_device_idle(device, true)) {
+    while (!RR_SPREAD && (is_busy(device) ? rr_device_idle(device, true) : hear(device, true))) {
     }
 }
