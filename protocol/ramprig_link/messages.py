@@ -2,15 +2,19 @@
 
 from __future__ import annotations
 
+import re
 from dataclasses import dataclass
 from enum import StrEnum
 
-from .check import unseal
+from .check import CHECK_LENGTH, crc16, unseal
 from .faults import FieldError
-from .fields import HEX2, Value, read_args, read_u32
+from .fields import HEX2, U32_MAX, Value, read_args, read_u32
 from .words import TAG_URGENT, WORDS
 
 BARE_WORDS = (b"stop", b"who")
+
+# All of an answer at once, since every beat has one: tag, ok or no, tick, fields each after a space, check.
+_ANSWER = re.compile(rb"([0-9a-f]{2}) (ok|no) (0|[1-9][0-9]{0,9})((?: [!-~]+)*) ([0-9a-f]{4})")
 
 
 class Flaw(StrEnum):
@@ -128,6 +132,9 @@ def parse_host_line(line: bytes) -> FromHost:
 
 def parse_device_line(line: bytes) -> FromDevice:
     """What the device said in `line`, given without its LF; never raises."""
+    answer = _answer(line)
+    if answer is not None:
+        return answer
     body = _opened(line)
     if isinstance(body, Flaw):
         return Garbled(line, body)
@@ -141,8 +148,6 @@ def parse_device_line(line: bytes) -> FromDevice:
             message = Data(HEX2[first[1:]], rest)
     elif kind == "N":
         message = _notice(first[1:], rest.split(" "))
-    else:
-        message = _answer(first, rest.split(" "))
     return message or Garbled(line, Flaw.KIND)
 
 
@@ -152,14 +157,16 @@ def _notice(number: str, fields: list[str]) -> Notice | None:
     return Notice(HEX2[number], fields[0], tick, tuple(fields[2:]))
 
 
-def _answer(tag: str, fields: list[str]) -> Answer | None:
-    if tag not in HEX2 or len(fields) < 2 or (tick := _tick(fields[1])) is None:
+def _answer(line: bytes) -> Answer | None:
+    """The answer that the line is, with a right check; None where it is none."""
+    found = _ANSWER.fullmatch(line)
+    if found is None:
         return None
-    if fields[0] == "ok":
-        return Answer(HEX2[tag], True, tick, tuple(fields[2:]))
-    if fields[0] == "no" and len(fields) > 2:
-        return Answer(HEX2[tag], False, tick, tuple(fields[2:]))
-    return None
+    tag, verdict, tick, fields, check = found.groups()
+    at = int(tick)
+    if int(check, 16) != crc16(line[:-CHECK_LENGTH]) or at > U32_MAX or (verdict == b"no" and not fields):
+        return None
+    return Answer(int(tag, 16), verdict == b"ok", at, tuple(fields.decode("ascii").split()))
 
 
 def _tick(text: str) -> int | None:
