@@ -76,11 +76,15 @@ class TurnBegun:
 
 @dataclass(slots=True, eq=False)
 class _Strand:
-    """A walk with what it waits for; `parent` is the fork it belongs to."""
+    """A walk with what it waits for; `parent` is the fork it belongs to.
+
+    `looked` is what there was to see when a wait was looked at last and did not hold: see `_news`.
+    """
 
     walk: Walk
     ask: Ask
     parent: _Join | None
+    looked: tuple[int, int] | None = None
 
 
 @dataclass(slots=True, eq=False)
@@ -131,6 +135,7 @@ class Executive:
     _resting: bool = False
     _waited: int = 0
     _end: int = 0
+    _attended: int = 0
 
     def __post_init__(self) -> None:
         self._tick_s = self.plan.tick_us / 1e6
@@ -395,6 +400,7 @@ class Executive:
             if not self._have(tick):
                 return
             heapq.heappop(self._agenda)
+            self._attended += 1
             match item:
                 case Begin(part=part, ends=ends, ramped=ramped):
                     if self.begun is not None:
@@ -435,6 +441,10 @@ class Executive:
     def _hang(self, strand: _Strand, ask: Hang) -> bool:
         """A wait: go on where it has come true, end where its time is over."""
         part = ask.part
+        within = self.now <= ask.tick + part.limit
+        if within and strand.looked == self._news and not self._ends_by_time(part):
+            return False
+        strand.looked = self._news
         holds, found = self._standing(part, ask.tick) if isinstance(part, Standstill) else self._true(part, ask.tick)
         if not holds:
             if self.now > ask.tick + part.limit and self._have(ask.tick + part.limit):
@@ -449,9 +459,21 @@ class Executive:
             planned += part.dwell
         if strand.parent is None:
             self._waited += at - planned
+        strand.looked = None
         self.tell(WaitEnded(tick=at, place=str(part.mark.place), waited_ticks=at - ask.tick, found=found))
         self._resume(strand, Resumed(at))
         return True
+
+    @property
+    def _news(self) -> tuple[int, int]:
+        """Blocks of samples that have come, and items of the agenda that are done: a wait that does not hold goes on
+        at least until one of these has changed, so it is not looked at again before."""
+        return self._ring.added, self._attended
+
+    @staticmethod
+    def _ends_by_time(part: Standstill | Await) -> bool:
+        """Whether a wait needs no samples to hold."""
+        return isinstance(part, Standstill) and part.still_ticks == 0
 
     def _standing(self, part: Standstill, since: int) -> tuple[bool, str]:
         if part.still_ticks == 0:
