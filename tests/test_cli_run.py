@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import gc
 import io
 import json
 import re
@@ -75,7 +76,9 @@ def test_0_a_rehearsal_that_passes(here: Path, capsys: pytest.CaptureFixture[str
 
 def test_1_an_expectation_that_fails(here: Path, capsys: pytest.CaptureFixture[str]) -> None:
     write("fails.yaml", DOES_NOT_HOLD)
+    collect_after = gc.get_threshold()
     assert main(["rehearse", "fails.yaml", "--no-record"]) == 1
+    assert gc.get_threshold() == collect_after
     first, last = capsys.readouterr().out.splitlines()
     claim = r"speed of vent is at least 55 rpm over 300 ms: found 2\d(\.\d+)? rpm"
     assert re.fullmatch(rf"not as expected: {claim} \[fails.yaml:7:13\]", first)

@@ -3,9 +3,16 @@
 from __future__ import annotations
 
 import argparse
+import gc
+from collections.abc import Iterator
+from contextlib import contextmanager
 
 from ramprig.cli.running import NOT_PROVED, Way, add_run_arguments, carry_out_run, mock_url
 from ramprig.cli.say import tell
+
+COLLECT_AFTER = 50_000
+"""Objects made and not freed before the interpreter looks for rings among them: a rehearsal makes millions, and hardly
+a ring."""
 
 
 def declare(parser: argparse.ArgumentParser) -> None:
@@ -37,4 +44,15 @@ def carry_out(args: argparse.Namespace) -> int:
         title=args.title or f"{pair.sequence.name} rehearsal",
         seed=pair.bench.mock.seed if args.seed is None else args.seed,
     )
-    return carry_out_run(pair, way)
+    with _seldom_collecting():
+        return carry_out_run(pair, way)
+
+
+@contextmanager
+def _seldom_collecting() -> Iterator[None]:
+    before = gc.get_threshold()
+    gc.set_threshold(COLLECT_AFTER, *before[1:])
+    try:
+        yield
+    finally:
+        gc.set_threshold(*before)
