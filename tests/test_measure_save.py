@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import math
+from collections.abc import Callable
 from pathlib import Path
 
 import jsonschema
@@ -13,12 +14,14 @@ from hypothesis import strategies as st
 
 from ramprig.bench import bench_of_text, bench_schema, load_bench
 from ramprig.bench.measured import read_measured_value
+from ramprig.cli.main import main
 from ramprig.errors import FileError, UsageError
 from ramprig.measure.bench_entry import save
 from ramprig.measure.findings import Findings
 from ramprig.measure.numbers.uncertainty import Measured
 from ramprig.measure.running import Measurement
-from ramprig.yamlfile import load_text
+from ramprig.yamlfile import Listing, Node, load_text
+from ramprig.yamlfile import Mapping as Tree
 
 VENT = Path(__file__).resolve().parent.parent / "scripts" / "vent_bench.yaml"
 MARK = load_text("a: b", "x.yaml").mark
@@ -68,14 +71,44 @@ def test_a_second_saving_replaces_its_own_results_and_keeps_the_others(tmp_path:
     assert measured["vent"]["wiring"].date == "2025-01-02"
 
 
-def test_line_ends_of_the_file_are_kept(tmp_path: Path) -> None:
+@pytest.mark.parametrize("end", [b"\r\n", b"\r"])
+def test_line_ends_of_the_file_are_kept(tmp_path: Path, end: bytes) -> None:
     path = tmp_path / "bench.yaml"
-    before = VENT.read_bytes().replace(b"\n", b"\r\n").rstrip()
+    before = VENT.read_bytes().replace(b"\n", end).rstrip()
     path.write_bytes(before)
     save(path, measurement(tmp_path / "r", value=Measured(1.0, "V", 0.1)))
     after = path.read_bytes()
     assert after.startswith(before)
-    assert after.count(b"\n") == after.count(b"\r\n")
+    assert b"\n" not in after.replace(end, b"")
+    assert load_bench(path).measured
+
+
+@pytest.mark.parametrize(
+    ("change", "words"),
+    [
+        (lambda text: f"{text}...\n", "results cannot be written behind the file's end; remove the '...'"),
+        (lambda text: json.dumps(plain(load_text(text, "f"))), "cannot be written into a bench in braces; write it as"),
+    ],
+)
+def test_a_file_that_takes_no_more_lines_is_refused_before_anything_moves(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str], change: Callable[[str], str], words: str
+) -> None:
+    path = tmp_path / "bench.yaml"
+    path.write_text(change(VENT.read_text("utf-8")), encoding="utf-8")
+    before = path.read_bytes()
+    with pytest.raises(FileError, match=words):
+        save(path, measurement(tmp_path / "run", value=Measured(1.0, "V", 0.1)))
+    assert main(["measure", "wiring", "--bench", str(path), "--rehearse", "--save", "--runs", str(tmp_path / "r")]) == 2
+    assert words in capsys.readouterr().err
+    assert path.read_bytes() == before
+    assert not (tmp_path / "r").exists()
+
+
+def plain(node: Node) -> object:
+    """A tree as lists, tables and texts."""
+    if isinstance(node, Tree):
+        return {entry.key.text: plain(entry.value) for entry in node}
+    return [plain(item) for item in node.items] if isinstance(node, Listing) else node.text
 
 
 def test_a_link_to_the_file_stays_a_link(tmp_path: Path) -> None:

@@ -91,13 +91,15 @@ def declare_pwm(parser: argparse.ArgumentParser) -> None:
 def carry_out(args: argparse.Namespace) -> int:
     """Measure; 0 where all is well, 1 where the bench is not as it should be."""
     from ramprig.bench import load_bench
-    from ramprig.measure.bench_entry import save
+    from ramprig.measure.bench_entry import save, with_part
 
     bench = load_bench(args.bench)
     if args.what == "pwm":
         return _advise(args, bench)
     if args.save and args.no_record:
         raise UsageError("--save needs the run folder to refer to: leave --no-record out")
+    if args.save:  # what cannot be saved is refused before anything moves
+        with_part(bench.file_bytes.decode("utf-8"), str(args.bench), {})
     procedure = procedure_of(args, bench)
     procedure.bench(bench)  # what the bench is not fit for is refused before a port is opened
     url = _url(args, bench)

@@ -76,14 +76,21 @@ def save(path: Path, measurement: Measurement) -> None:
 
 
 def with_part(text: str, file: str, part: Part) -> str:
-    """The file's text with this `measured:` part in place of the one it has, or at its end."""
-    newline = "\r\n" if "\r\n" in text else "\n"
+    """The file's text with this `measured:` part in place of the one it has, or at its end. Raises FileError where a
+    file in braces, or one that says where it ends, takes no more lines."""
+    newline = next((end for end in ("\r\n", "\n", "\r") if end in text), "\n")
     block = newline.join(_lines(part)) + newline
     root = load_text(text, file)
     assert isinstance(root, Tree), "a bench file is a mapping"
+    if root.mark.text[root.mark.column - 1] == "{":
+        raise root.error("results cannot be written into a bench in braces", "write it as lines of 'key: value'")
+    lines = text.splitlines(keepends=True)
+    ended = next((number for number, line in enumerate(lines, 1) if f"{line} "[:4].rstrip() == "..."), None)
+    if ended is not None:
+        mark = root.mark.source.mark(ended, 1)
+        raise mark.error("results cannot be written behind the file's end", "remove the '...'")
     begins = [entry.key.mark.line for entry in root]
     found = [entry for entry in root if entry.key.text == "measured"]
-    lines = text.splitlines(keepends=True)
     if not found:
         end = "" if not lines or lines[-1].endswith(("\n", "\r")) else newline
         return text + end + newline + block
