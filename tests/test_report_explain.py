@@ -12,6 +12,7 @@ import pytest
 from explain_cases import MAKERS, Case, case_of, run_case
 from ramprig.cli.main import main
 from ramprig.errors import RecordError
+from ramprig.report.digest import plotted_columns
 from ramprig.report.explain import explain_folder
 from ramprig.report.facts import gather
 from ramprig.report.making import make_report
@@ -197,3 +198,5 @@ def test_a_motor_without_an_encoder_is_told_of_without_counts_that_it_does_not_h
     text = make_report([facts.folder], out=tmp_path / "out", issued="").report.read_text("utf-8")
     assert "vent has no encoder: no position and no speed of it was measured." in text
     assert "vent: speed" not in text
+    facts.manifest["columns"].insert(3, "vent.speed_rpm")  # as it was recorded before
+    assert "vent.speed_rpm" not in plotted_columns(facts)

@@ -123,6 +123,8 @@ class Digest:
 def plotted_columns(facts: Facts) -> tuple[str, ...]:
     """The columns that a report shows."""
     wanted = [f"{motor}.{what}" for motor in facts.motors for what in ("duty_pct", "speed_rpm", "current_a")]
+    # an earlier ramprig logged a speed of motors without an encoder, too
+    wanted = [name for name in wanted if not name.endswith("_rpm") or facts.has_encoder(name.rpartition(".")[0])]
     wanted += [f"{servo}.pulse_us" for servo in facts.servos]
     wanted += ["supply_v", "temperature_degc"]
     return tuple(name for name in wanted if name in facts.columns)

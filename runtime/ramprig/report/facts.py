@@ -207,6 +207,11 @@ class Facts:
         """The motors in the order of their columns."""
         return [name.removesuffix(".duty_pct") for name in self.columns if name.endswith(".duty_pct")]
 
+    def has_encoder(self, motor: str) -> bool:
+        """Whether the shaft of a motor was measured; taken for granted without the bench file's copy."""
+        found = None if self.bench is None else next((each for each in self.bench.motors if each.name == motor), None)
+        return found is None or found.encoder is not None
+
     @property
     def servos(self) -> list[str]:
         """The servos in the order of their columns."""

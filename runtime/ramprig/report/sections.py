@@ -294,6 +294,8 @@ def _resolution(facts: Facts) -> str:
     rows = []
     for column in (facts.manifest.get("speed") or {}).get("columns") or []:
         name, _ = label_of(str(column["column"]))
+        if not facts.has_encoder(str(column["column"]).rpartition(".")[0]):
+            continue
         rows += [
             [page.text(name), f"{entry['at_rpm']:g} rpm", f"{entry['rpm']:.3g} rpm"]
             for entry in column.get("resolution") or []
