@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from ramprig.port.clock import Clock
 from ramprig.session.events import Event, HostSlept, LateHost, WallClockSet
+from ramprig.session.watch import WALL_STEP_S
 
 SLEEPS_MAX = 1000
 """Sleeps of the host that are listed."""
@@ -33,10 +34,15 @@ class Absence:
             case WallClockSet(moved_s=moved_s):
                 self._apart_s += moved_s
                 self._jumped_at_s, self._jumped_s = self._clock.now(), moved_s
+            case _ if abs(self._unseen_s()) < WALL_STEP_S:  # clocks drift apart, over a week by much
+                self._apart_s += self._unseen_s()
 
     def longest_s(self) -> float:
         """The longest of all up to now, which is right after a link was lost where one was."""
         now_s = self._clock.now()
-        unseen_s = self._clock.wall() - now_s - self._apart_s  # of a sleep from which nothing else was heard
         recent_s = self._jumped_s if now_s - self._jumped_at_s <= RECENT_S else 0.0
-        return max(self._longest_s, unseen_s, recent_s, 0.0)
+        return max(self._longest_s, self._unseen_s(), recent_s, 0.0)
+
+    def _unseen_s(self) -> float:
+        """How far the wall clock has gone ahead without an event, as by a sleep from which nothing else was heard."""
+        return self._clock.wall() - self._clock.now() - self._apart_s
