@@ -125,6 +125,36 @@ def test_a_rest_that_is_polled_without_looking_round_changes_nothing(
     assert samples == samples_all
 
 
+def test_nothing_moves_before_the_disk_holds_that_it_is_commanded(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    waits = [0]
+
+    class Slow(CycleBook):
+        """A count whose disk takes ten rounds for each cycle."""
+
+        def command(self, turn: Turn) -> None:
+            super().command(turn)
+            self.pending = self._waits
+            waits[0] = 10
+
+        def _waits(self) -> int:
+            waits[0] = max(0, waits[0] - 1)
+            return waits[0]
+
+    moved: list[tuple[int, bool]] = []
+
+    def looks(now: Progress, device: MockDevice, session: Session, port: MockPort) -> None:
+        assert device.controller is not None
+        moved.append((waits[0], device.controller.drives[0].moving))
+
+    monkeypatch.setattr(executive, "CycleBook", Slow)
+    run = rehearse(tmp_path, cycle("times: 2"), meddle=looks)
+    assert [event.outcome for event in done(run)] == ["confirmed", "confirmed"]
+    assert sum(left > 0 for left, _ in moved) >= 2 * 9
+    assert not any(moving for left, moving in moved if left > 0)
+
+
 def test_a_cycle_fails_by_any_of_its_confirmations_whatever_the_later_ones_find(tmp_path: Path) -> None:
     far = "\n      - confirm: {position of: vent, is: at least 9000 deg}"
     run = rehearse(tmp_path, cycle("times: 1", DRIVE.replace("\n      - confirm", far + "\n      - confirm", 1)))

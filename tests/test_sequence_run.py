@@ -220,6 +220,29 @@ def test_a_wait_goes_on_when_it_comes_true_and_ends_the_run_when_not(tmp_path: P
     assert "fast" not in marks(run)
 
 
+@pytest.mark.parametrize(("limit", "verdict"), [("60 ms", Verdict.FAILED), ("100 ms", Verdict.PASSED)])
+def test_a_wait_holds_by_the_samples_of_its_time_however_late_the_host_looks(
+    limit: str, verdict: Verdict, tmp_path: Path
+) -> None:
+    """The speed is reached between 60 ms and 100 ms after the ramp; the host looks at it some 300 ms after."""
+    away: list[float] = []
+
+    def go_away(now: Progress, device: MockDevice, session: Session, port: MockPort) -> None:
+        if not away and now.elapsed_s > 0.3:
+            away.append(now.elapsed_s)
+            until_s = port.clock.now() + 0.35
+            while port.clock.now() < until_s:
+                port.read(until_s - port.clock.now())
+
+    steps = f"""
+- ramp: {{motor: vent, to: 40 %, in: 400 ms}}
+- wait: {{speed of: vent, is: at least 20 rpm, within: {limit}}}
+"""
+    run = rehearse(tmp_path, steps, meddle=go_away)
+    assert len(away) == 1
+    assert run.outcome.verdict is verdict, run.outcome
+
+
 def test_repeats_by_times_by_time_and_until_a_measurement(tmp_path: Path) -> None:
     run = rehearse(
         tmp_path,
