@@ -11,11 +11,12 @@ from accept_boards import accepted, mock_port
 from ramprig.accept.examine import accept
 from ramprig.accept.report import verdict_sentence
 from ramprig.accept.trial import Wish
-from ramprig.errors import LinkError, UsageError
+from ramprig.errors import LinkError, LinkLost, UsageError
 from ramprig.mock.port import MockPort
 from ramprig.port.base import ClosesItself
+from ramprig.port.clock import VirtualClock
 from ramprig_link.check import seal
-from ramprig_link.words import Trip
+from ramprig_link.words import Cause, Trip
 
 Bend = Callable[[list[str]], list[str]]
 CHECK_BYTES = len(seal(b"")) - 1
@@ -121,6 +122,67 @@ def test_whatever_a_board_says_the_acceptance_ends_in_a_verdict_or_cannot_know_t
     except LinkError:
         return
     assert verdict.exit_code in (0, 1, 4)
+
+
+class OtherPort(ClosesItself):
+    """Something else than a board at a port: `answer` makes what comes back of what is sent, `b""` of silence too."""
+
+    def __init__(self, answer: Callable[[bytes], bytes]) -> None:
+        self.name = "other:"
+        self.clock = VirtualClock()
+        self._answer = answer
+        self._coming = b""
+
+    def read(self, timeout_s: float) -> bytes:
+        self.clock.advance(timeout_s)
+        coming, self._coming = self._coming + self._answer(b""), b""
+        return coming
+
+    def write(self, data: bytes) -> None:
+        self._coming += self._answer(data)
+
+    def urgent(self, data: bytes) -> bool:
+        return True
+
+    def send_break(self) -> bool:
+        return False
+
+    def close(self) -> None:
+        pass
+
+
+@pytest.mark.parametrize(
+    ("answer", "told"),
+    [
+        (lambda sent: b"", "nothing came at all: is this the port"),
+        (lambda sent: sent, "what is sent comes back"),
+        (lambda sent: b"U" * 20, "bytes came that are no answer of this protocol: is the rate right"),
+        (lambda sent: b"? unknown command\r\n" if sent else b"", "bytes came that are no answer of this protocol"),
+    ],
+)
+def test_what_comes_in_place_of_an_answer_is_told(answer: Callable[[bytes], bytes], told: str) -> None:
+    with pytest.raises(LinkLost, match=told):
+        accepted(OtherPort(answer))
+
+
+def test_a_restart_in_the_midst_is_blamed_on_no_clause() -> None:
+    port = mock_port()
+
+    def restarted(fields: list[str]) -> list[str]:
+        nonlocal left
+        left -= fields[0][0] == "D"
+        if left == 0:
+            port.device.restart(Cause.BROWNOUT)
+            left = -1
+        return fields
+
+    left = 3
+    verdict = accept(
+        BentPort(port, restarted), Wish(energise=lambda trial: False, only="packed-log"), tell=lambda text: None
+    )
+    assert list(verdict.failed) == [""]
+    assert "the board restarted by itself during this check" in verdict.failed[""][0]
+    assert verdict.exit_code == 1
 
 
 # ---- the verdict -----------------------------------------------------------------------------------------------------

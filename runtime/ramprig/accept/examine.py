@@ -134,9 +134,9 @@ def open_board(trial: Trial) -> None:
         try:
             fields = talk.ask("who").fields
             break
-        except LinkLost:
+        except LinkLost as error:
             if talk.clock.now() >= until_s:
-                raise
+                raise LinkLost(f"{error}{_heard_instead(talk)}") from error
     trial.known = who = Identity.read(fields)
     if who.version != VERSION:
         raise LinkError(f"{who.name} speaks version {who.version} of the protocol; this program knows {VERSION}")
@@ -156,6 +156,20 @@ def open_board(trial: Trial) -> None:
         answer = talk.ask("clear")
         if not answer.ok:
             raise LinkError(f"{who.name} is tripped ({reading.trip.word}) and refuses `clear`: {answer.reason}")
+
+
+def _heard_instead(talk: Talk) -> str:
+    """What came in place of an answer, and what that may mean."""
+    if not talk.bytes_heard:
+        return (
+            "; nothing came at all: is this the port, is the board powered, are its two data wires the right way round?"
+        )
+    if talk.echoes:
+        return "; what is sent comes back: the port is looped, or the board echoes and speaks another protocol"
+    return (
+        f"; {talk.bytes_heard} bytes came that are no answer of this protocol: is the rate right (--baud), "
+        "and is this the board?"
+    )
 
 
 def _opening() -> Check:
@@ -249,6 +263,7 @@ def _make(trial: Trial, check: Check, verdict: Verdict, tell: Tell) -> None:
     except LinkError as error:
         trial.fail(" ".join(check.clauses[:1]), str(error))
     if talk.boots != boots and check.run is not quiet_start.restart:
+        result.faults.clear()  # no clause is broken by what was expected of the board before its start
         trial.fail("", "the board restarted by itself during this check: a brown-out, or a fault of the firmware")
     for sentence in _settled(trial):
         trial.fail("", sentence)

@@ -59,11 +59,15 @@ class Talk:
         """While set, `listen` asks `beat` so often."""
         self.repeats = 0
         self.boots = 0
+        self.bytes_heard = 0
+        self.echoes = 0
+        """Lines that came back as they were sent."""
         self.worst_answer_s = 0.0
         self.heard: deque[Heard] = deque(maxlen=HEARD_MAX)
         self.heard_count = 0
         self.trace: deque[tuple[float, str, bytes]] = deque(maxlen=TRACE_MAX)
         self._splitter = LineSplitter(DEVICE_LINE_MAX)
+        self._last_sent = b""
         self._tag = 0x0F
         self._spoken_s = 0.0
         self._asked_to_stop = False
@@ -75,6 +79,7 @@ class Talk:
         """Send bytes as they are."""
         self._check_stop()
         self.trace.append((self.clock.now(), ">", data))
+        self._last_sent = data
         self.port.write(data)
 
     def say(self, body: str, *, tag: int | None = None) -> int:
@@ -200,6 +205,7 @@ class Talk:
         data = self.port.read(timeout_s)
         if not data:
             return
+        self.bytes_heard += len(data)
         now_s = self.clock.now()
         for piece in data.splitlines(keepends=True) if b"\r" in data else (data,):
             for line in self._splitter.feed(piece):
@@ -210,6 +216,7 @@ class Talk:
             self.rules.overlong(line.length)
             return
         self.trace.append((now_s, "<", line + b"\n"))
+        self.echoes += line + b"\n" == self._last_sent
         message = self.rules.judge(line, had_cr)
         tick = None
         if isinstance(message, Notice) and message.word == "boot":
