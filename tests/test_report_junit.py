@@ -16,6 +16,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from explain_cases import Case, case_of, run_case
+from ramprig.record.reading import audit
 from ramprig.report.facts import Expectation, Facts, gather
 from ramprig.report.junit import Case as JunitCase
 from ramprig.report.junit import cases_of, junit_xml
@@ -55,8 +56,9 @@ def tripped(tmp_path_factory: pytest.TempPathFactory) -> Facts:
 
 
 def test_what_is_written_is_valid_and_counts_itself(failed: Facts, tripped: Facts, is_valid: Valid) -> None:
-    text = junit_xml([failed, tripped])
+    text = junit_xml([failed, tripped], [audit(failed.folder), audit(tripped.folder)])
     assert is_valid(text)
+    assert text.count('name="account of the samples"') == 2
     root = ElementTree.fromstring(text)
     suites = root.findall("testsuite")
     assert [suite.get("name") for suite in suites] == [failed.name, tripped.name]

@@ -301,6 +301,8 @@ def test_one_changed_condition_is_named(tmp_path: Path) -> None:
     assert found["limit trip_ma of vent"] == ["2500 mA", "2000 mA"]
     assert set(found) == {"bench file", "limit trip_ma of vent", "limit trip_ma of fan"}
     assert differing([folders[0], folders[0]]) == {}
+    jammed = replace(folders[0], manifest=folders[0].manifest | {"port": "mock:?fault=jammed_shaft"})
+    assert set(differing([folders[0], jammed])) == {"simulated"}
 
 
 def test_the_command_writes_the_files_and_tells_where(

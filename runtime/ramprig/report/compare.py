@@ -27,11 +27,12 @@ def conditions(facts: Facts) -> dict[str, str]:
     inputs = {str(entry.get("role")): str(entry.get("sha256"))[:12] for entry in manifest.get("inputs") or []}
     loggings = (manifest.get("samples") or {}).get("loggings") or []
     found = {
-        "simulated": "yes" if facts.is_simulated else "no",
+        "simulated": f"yes, {manifest.get('port')}" if facts.is_simulated else "no",
         "board": f"{device.get('board')} {device.get('serial')}",
         "firmware": str(device.get("firmware")),
         "bench file": inputs.get("bench", OTHERWISE),
         "sequence file": inputs.get("sequence", OTHERWISE),
+        "tick, us": str(facts.tick_us),
         "sample period, ticks": str(loggings[0].get("period_ticks")) if loggings else OTHERWISE,
         "log thinned": OTHERWISE if (rule := thinning_of(facts)) is None else said_of(rule),
         "software": str((manifest.get("software") or {}).get("ramprig")),
@@ -81,7 +82,7 @@ def _facts_rows(reads: list[Read]) -> list[list[str]]:
         "verdict": lambda read: read.facts.verdict,
         "judgements that did not hold": lambda read: _judgements(read.facts),
         "rows": lambda read: str(read.digest.rows),
-        "lasted, s": lambda read: f"{read.digest.last_s - read.digest.first_s:.1f}",
+        "lasted, s": lambda read: f"{read.digest.last_s - read.digest.first_s:.1f}" if read.digest.rows else OTHERWISE,
         "cycles or passes begun": lambda read: str(len(read.facts.passes)),
         "trips": lambda read: str(read.facts.counts["tripped"]),
     }
