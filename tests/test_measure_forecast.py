@@ -19,6 +19,7 @@ from ramprig.errors import UsageError
 from ramprig.measure.forecast.draws import Belief, belief_of, drawn_setup
 from ramprig.measure.forecast.dutytype import duty_type
 from ramprig.measure.forecast.forecast import Forecast, ForecastWish, Interval, Odds, forecast
+from ramprig.measure.forecast.limits import margins
 from ramprig.measure.forecast.montecarlo import Job, heat_a2, one_draw, periodic_heat_a2
 from ramprig.measure.forecast.play import Play, core_is_there, play
 from ramprig.measure.forecast.reduction import cut_of, night_of, warm_guess
@@ -429,6 +430,7 @@ def test_odds_and_intervals() -> None:
     interval = Interval.of([float(value) for value in range(1, 200)], "s")
     assert (interval.low, interval.median, interval.high) == pytest.approx((5.0, 100.0, 195.0))
     assert interval.coverage == 0.95
+    assert str(Interval(2e-14, 0.0, 1.4e-12, "J")) == "0 J in every draw"
     few = Interval.of([float(value) for value in range(1, 22)], "s")
     assert (few.low, few.median, few.high) == pytest.approx((1.0, 11.0, 21.0))
     assert few.coverage == pytest.approx(20 / 22), "a further draw is one of 22 alike, and an extreme in two cases"
@@ -450,6 +452,18 @@ def test_odds_and_intervals() -> None:
 def test_a_wish_that_makes_no_sense_is_refused(wish: ForecastWish, message: str) -> None:
     with pytest.raises(UsageError, match=message):
         forecast(sequence(SHORT), load_bench(VENT), wish)
+
+
+def test_limits_of_a_motor_that_the_run_does_not_move_are_not_called_loose() -> None:
+    pair = read_pair(VENT.parent / "latch_check.yaml", bench=None, values={})
+    job = Job(
+        bench=pair.bench, belief=belief_of(pair.bench), cold=compile_plan(pair.sequence, pair.bench), hot=None,
+        cut=None, part=None, seed=1, on_core=ON_CORE,
+    )  # fmt: skip
+    found = margins(pair.bench, [one_draw(job, 0)], tick_us=1000)
+    assert [(one.name, one.used_high, one.verdict) for one in found if one.subject == "vent"] == [
+        ("current trip", 0.0, "fits"), ("overload trip", 0.0, "fits"), ("speed trip", 0.0, "fits")
+    ]  # fmt: skip
 
 
 @pytest.mark.skipif(not ON_CORE, reason="without a C compiler a run of 20 s takes long")

@@ -33,6 +33,8 @@ DRAWS_LEAST = 20
 DRAWS_MOST = 100_000
 """All draws are kept until the end."""
 COVERAGE = 0.95
+ROUNDING = 1e-9
+"""Draws that differ by no more than this differ by rounding alone."""
 LONG_S = 600.0
 """From so long on a duration is told in hours, minutes and seconds."""
 ENAMEL_C = 105.0
@@ -78,8 +80,8 @@ class Interval:
         if self.unit == "s" and self.median >= LONG_S:
             low, median, high = (format_duration(round(value)) for value in (self.low, self.median, self.high))
             return f"{median} in every draw" if low == high else f"{median} ({low} to {high})"
-        if half <= 0.0:
-            return f"{self.median:.6g} {self.unit} in every draw"
+        if half <= ROUNDING * max(1.0, abs(self.median)):
+            return f"{self.median if abs(self.median) > ROUNDING else 0.0:.6g} {self.unit} in every draw"
         _, rounded = rounded_pair(self.median, half)
         places = len(rounded.partition(".")[2])
         low, median, high = (f"{value:.{places}f}" for value in (self.low, self.median, self.high))
@@ -140,7 +142,7 @@ class Forecast:
         lines += [f"how       {text}" for text in self.how]
         lines += [f"  {name.replace('_', ' '):<{width}}  {value}" for name, value in self.values.items()]
         lines += [
-            f"  {name}: {digits(rate, 3)} starts per hour; {self.duty_types[name]}"
+            f"  {name}: {digits(rate, 3)} start{'' if rate == 1.0 else 's'} per hour; {self.duty_types[name]}"
             for name, rate in self.starts_per_hour.items()
         ]
         lines += [f"limit     {margin.text()}" for margin in self.margins]

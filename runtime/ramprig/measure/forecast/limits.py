@@ -127,5 +127,6 @@ def _margin(
     shares = np.array([share for share, _ in found])
     middle, high = float(np.median(shares)), float(np.quantile(shares, HIGH))
     step = found[int(shares.argmax())][1]
-    verdict = "tight" if high > TIGHT else "loose" if loose and high < LOOSE else "fits"
+    # A limit of what this run does not move at all is neither: nothing of it is used.
+    verdict = "tight" if high > TIGHT else "loose" if loose and 0.0 < high < LOOSE else "fits"
     return Margin(name=name, subject=subject, bound=bound, used=middle, used_high=high, step=step, verdict=verdict)
