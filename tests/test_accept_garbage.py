@@ -166,7 +166,7 @@ def test_what_comes_in_place_of_an_answer_is_told(answer: Callable[[bytes], byte
 
 
 def test_a_restart_in_the_midst_is_blamed_on_no_clause() -> None:
-    port = mock_port()
+    port, left = mock_port(), 3
 
     def restarted(fields: list[str]) -> list[str]:
         nonlocal left
@@ -176,7 +176,6 @@ def test_a_restart_in_the_midst_is_blamed_on_no_clause() -> None:
             left = -1
         return fields
 
-    left = 3
     verdict = accept(
         BentPort(port, restarted), Wish(energise=lambda trial: False, only="packed-log"), tell=lambda text: None
     )
