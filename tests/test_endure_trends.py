@@ -188,6 +188,17 @@ def test_no_false_alarm_in_10000_healthy_cycles_of_10_features(seed: int) -> Non
     assert alarms(healthy(seed, cycles=10_000, features=10)) == []
 
 
+@pytest.mark.parametrize(("sds", "found"), [(1.15, False), (1.3, True)])
+def test_a_slow_change_must_stand_out_from_what_the_baseline_itself_leaves_open(sds: float, found: bool) -> None:
+    # Width 6.5, share 0.05, baseline 100: 6.5 sqrt(0.05 / 1.95 + 1 / 100) = 1.23; without the baseline's share 1.04.
+    trend = FeatureTrend("speed", TrendSettings(run_in=0))
+    for cycle in range(100):
+        assert trend.add(cycle, 102.0 if cycle % 2 else 98.0) == []
+    value = trend.baseline.mean + sds * trend.baseline.sd
+    signs = [finding.sign for cycle in range(100, 160) for finding in trend.add(cycle, value)]
+    assert (Sign.SLOW in signs) is found
+
+
 @pytest.mark.soak
 @pytest.mark.parametrize("hang", [0.0, 0.5])
 def test_false_alarms_over_100_nights_are_as_few_as_stated(hang: float) -> None:
