@@ -293,3 +293,32 @@ def test_a_disk_that_is_full_at_any_write_around_a_hole_leaves_the_rows_to_be_ke
         paths = [*volume_files(folder, part), *held_files(folder)]
         ticks = {tick for path in paths for piece in Stream([path]) for tick in piece.ticks.tolist()}
         assert to_be_kept(handed[:-1], int(handed[-1].ticks[-1])) <= ticks, full_at  # the last one is what failed
+
+
+# ---- what the events tell -------------------------------------------------------------------------------------------
+
+OFTEN = Thinning(every=50, before_s=0.05, after_s=0.05, around=frozenset({Around.MARK}))
+
+
+def marked_often(root: Path) -> None:
+    """Full rate begins and ends many times, and the disk is synced by itself only where a volume is full."""
+    recorder = begin(root, Keeping(volumes=VolumeLimits(rows=60), thinning=OFTEN), durable=True)
+    for number, block in enumerate(blocks_of(900, size=BLOCK)):
+        recorder.on_block(block)
+        if number % 8 == 5:
+            recorder.on_event(Marked(tick=int(block.ticks[-1]), name="here"))
+    finish(recorder, 900)
+
+
+def test_a_loss_of_power_leaves_no_row_without_the_event_that_tells_why_it_is_there(tmp_path: Path) -> None:
+    whole = Process()
+    with whole.alive():
+        marked_often(tmp_path / "whole")
+    chance = random.Random(5)
+    for die_at in chance.sample(range(whole.operations - 50, whole.operations - 12), 8):
+        process, root = Process(die_at=die_at), tmp_path / str(die_at)
+        with process.alive(), pytest.raises(Killed):
+            marked_often(root)
+        process.cut_power(chance)
+        (folder,) = root.iterdir()
+        assert not [text for text in audit(folder).statements if "are missing" in text], die_at

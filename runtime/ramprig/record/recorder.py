@@ -174,7 +174,7 @@ class Recorder:
                 spans=SpanPrinter(self.columns, part=part, tick_us=when.tick_us, tick_zero=when.tick_zero),
                 tick_us=when.tick_us,
                 durable=durable,
-                tell=self._tell_at_once,
+                tell=self._tell_synced if durable else self._tell_at_once,
                 on_volume=self._on_volume,
             )
             self._samples_names = samples.names
@@ -186,6 +186,14 @@ class Recorder:
     def _tell_at_once(self, event: object) -> None:
         """Write an event down from where the disk is written. Raises OSError."""
         self._events.append(encode_line(self._told(event)))
+
+    def _tell_synced(self, event: object) -> None:
+        """The same, on the disk itself before the rows that it is about are written. Raises OSError.
+
+        Else a loss of power might leave those rows without it, and what was thinned would look like missing.
+        """
+        self._tell_at_once(event)
+        self._events.sync()
 
     def _on_volume(self, tick: int, rows_before: int) -> None:
         """A further volume has begun: told in the events, and the hash of the one before kept in `run.json`."""
