@@ -306,6 +306,15 @@ def test_no_rolling_hour_ever_has_more_starts_than_allowed(per_hour: int, turns:
         assert sum(at_s - 3600 < other <= at_s for other in made) <= per_hour
 
 
+def test_a_start_waits_no_longer_than_its_share_and_a_full_hour_ask_for() -> None:
+    guard = StartsGuard()
+    guard.note({"vent": 1}, 0.0)
+    assert guard.earliest_s({"vent": 1}, 1000.0, per_hour=4) == 1000.0  # its share of 900 s is over
+    assert guard.earliest_s({"vent": 1}, 500.0, per_hour=4) == 900.0
+    guard.note({"vent": 3}, 1000.0)
+    assert guard.earliest_s({"vent": 1}, 1100.0, per_hour=4) == 1000.0 + 3600.0 / (4 // 3)
+
+
 class Turned:
     """Goes through a block of a plan as a run does, each turn as long as it may be or as short, and keeps the begins
     and ends of its turns in ticks."""
