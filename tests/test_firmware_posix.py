@@ -157,14 +157,22 @@ def test_a_fault_is_on_from_the_start() -> None:
         (["--seed"], "'--seed' means nothing"),
         (["--seed", "-1"], "'--seed' means nothing"),
         (["--baud", "x"], "'--baud' means nothing"),
-        (["--fault", "jamed"], "no fault 'jamed'"),
-        (["--fault", "jammed_shaft:7"], "no fault 'jammed_shaft:7'"),
-        (["--plant", "absent"], "absent:0"),
+        (["--fault", "jamed"], "'jamed' is no fault here"),
+        (["--fault", "jammed_shaft:7"], "'jammed_shaft:7' is no fault here"),
+        (["--fault", "jammed_shaft:x"], "'jammed_shaft:x' is no fault here"),
+        (["--fault", "weak_supply=much"], "'weak_supply=much' is no fault here"),
+        (["--fault", "weak_supply=nan"], "'weak_supply=nan' is no fault here"),
+        (["--plant", "absent"], "absent: No such file or directory"),
+        (["--board", "vent rig"], "'vent rig' is no name for a board"),
+        (["--serial", "a" * 25], "is no name for a board: 1 to 24 of"),
         (["--tcp", "nowhere.invalid:x"], "is no address"),
+        (["--tcp", "99999"], "99999 is no address"),
     ],
 )
 def test_what_means_nothing_is_refused(arguments: list[str], told: str) -> None:
-    done = subprocess.run([program(Board()), *arguments], capture_output=True, text=True, check=False)
+    done = subprocess.run(
+        [program(Board()), *arguments], capture_output=True, text=True, check=False, timeout=PATIENCE_S
+    )
     assert done.returncode in (2, 3)
     assert told in done.stderr
 

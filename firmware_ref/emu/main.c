@@ -80,14 +80,16 @@ static bool read_plant(struct plant_parameters *parameters, const char *path)
     char name[LINE_BYTES];
     double value;
     unsigned number = 0;
-    bool right = file != NULL;
+    bool right = true;
+    if (file == NULL) {
+        fprintf(stderr, "emu: %s: %s\n", path, strerror(errno));
+        return false;
+    }
     while (right && fgets(line, sizeof line, file) != NULL) {
         number++;
         right = sscanf(line, "%127s %lf", name, &value) == 2 && plant_parameters_set(parameters, name, value);
     }
-    if (file != NULL) {
-        fclose(file);
-    }
+    fclose(file);
     if (!right) {
         fprintf(stderr, "emu: %s:%u: this is no parameter of the plant with a value it can have\n", path, number);
     }

@@ -76,9 +76,12 @@ bool endpoint_open_tcp(struct endpoint *endpoint, const char *address)
         snprintf(host, sizeof host, "%.*s", (int)(colon - address), address);
     }
     const char *port = colon != NULL ? colon + 1 : address;
+    char *end;
+    unsigned long number = strtoul(port, &end, 10);
     struct addrinfo *found = NULL;
     struct addrinfo wanted = {.ai_family = AF_INET, .ai_socktype = SOCK_STREAM, .ai_flags = AI_PASSIVE};
-    if (getaddrinfo(host, port, &wanted, &found) != 0 || found == NULL) {
+    if (port[0] < '0' || port[0] > '9' || *end != '\0' || number > 65535 || /* which some systems take modulo 65536 */
+        getaddrinfo(host, port, &wanted, &found) != 0 || found == NULL) {
         fprintf(stderr, "ramprig-core: %s is no address; write PORT or HOST:PORT\n", address);
         return false;
     }

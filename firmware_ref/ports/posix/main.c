@@ -6,6 +6,8 @@
 #include "lockstep.h"
 #include "storefile.h"
 
+#include <errno.h>
+#include <math.h>
 #include <signal.h>
 #include <stdio.h>
 #include <stdlib.h>
@@ -120,41 +122,64 @@ static bool read_plant(struct plant_parameters *parameters, const char *path)
     FILE *file = fopen(path, "r");
     char line[LINE_BYTES];
     int number = 0;
-    bool right = file != NULL;
+    bool right = true;
+    if (file == NULL) {
+        fprintf(stderr, "ramprig-core: %s: %s\n", path, strerror(errno));
+        return false;
+    }
     while (right && fgets(line, sizeof line, file) != NULL) {
         char name[LINE_BYTES];
         double value;
         number++;
         right = sscanf(line, "%127s %lf", name, &value) == 2 && plant_parameters_set(parameters, name, value);
     }
-    if (file != NULL) {
-        fclose(file);
-    }
+    fclose(file);
     if (!right) {
         fprintf(stderr, "ramprig-core: %s:%d: this is no parameter of the plant with a value it can have\n", path, number);
     }
     return right;
 }
 
+/* A whole text as a number; false where it is none. */
+static bool read_amount(const char *text, double *amount)
+{
+    char *end;
+    *amount = strtod(text, &end);
+    return end != text && *end == '\0' && isfinite(*amount);
+}
+
 static bool set_fault(struct simulated *s, const char *text)
 {
     char name[LINE_BYTES];
     snprintf(name, sizeof name, "%s", text);
-    char *amount = strchr(name, '=');
-    if (amount != NULL) {
-        *amount++ = '\0';
+    char *value = strchr(name, '=');
+    if (value != NULL) {
+        *value++ = '\0';
     }
     char *axis = strchr(name, ':');
     if (axis != NULL) {
         *axis++ = '\0';
     }
-    int index = axis != NULL ? atoi(axis) : 0;
-    if (index < 0 || index >= RR_AXES ||
-        !simulated_fault(s, name, (uint8_t)index, amount != NULL ? strtod(amount, NULL) : 1.0)) {
-        fprintf(stderr, "ramprig-core: there is no fault '%s' here\n", text);
+    uint64_t index = 0;
+    double amount = 1.0;
+    if ((axis != NULL && !read_number(axis, RR_AXES - 1, &index)) || (value != NULL && !read_amount(value, &amount)) ||
+        !simulated_fault(s, name, (uint8_t)index, amount)) {
+        fprintf(stderr, "ramprig-core: '%s' is no fault here; write NAME, NAME=AMOUNT or NAME:AXIS=AMOUNT\n", text);
         return false;
     }
     return true;
+}
+
+/* A name as SPEC FIELD-4 allows it: with a blank in it, every line that tells it would have a field too many. */
+static bool is_token(const char *text)
+{
+    size_t length = strlen(text);
+    bool right = length >= 1 && length <= RR_TOKEN_MAX &&
+                 strspn(text, "ABCDEFGHIJKLMNOPQRSTUVWXYZabcdefghijklmnopqrstuvwxyz0123456789._-") == length;
+    if (!right) {
+        fprintf(stderr, "ramprig-core: '%s' is no name for a board: 1 to %d of A-Z a-z 0-9 . _ -\n", text, RR_TOKEN_MAX);
+    }
+    return right;
 }
 
 static uint64_t clock_us(void)
@@ -222,7 +247,7 @@ int main(int count, char **arguments)
     static struct storefile storefile;
     struct options options;
     struct endpoint endpoint;
-    if (!read_options(&options, count, arguments)) {
+    if (!read_options(&options, count, arguments) || !is_token(options.board) || !is_token(options.serial)) {
         return 2;
     }
     simulated_clear(&s);
