@@ -181,6 +181,7 @@ def test_after_kill_9_a_run_is_gone_on_with_on_a_port_of_another_name(
     assert found.parts == 2
     manifest = read_manifest(folder)
     assert manifest["parts"][1]["port"] == str(other)
+    assert manifest["settings"]["port"] == str(other)  # the next time it need not be said again
     assert manifest["interruptions"][0]["by"] == "command"
     assert f"cycles: {counted};" in manifest["stop_reason"]  # with the cycle that the kill broke off
 

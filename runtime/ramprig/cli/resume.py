@@ -73,6 +73,7 @@ def carry_out(args: argparse.Namespace) -> int:
             after_trip=args.after_trip,
             latest_end_unix_s=way.latest_end_unix_s,
             at_most=args.at_most,
+            port_url=args.port,
             watched_over=WatchedOver(unattended, None if awake_by is None else str(awake_by)),
         )
         return carry_out_wish(wish, way)

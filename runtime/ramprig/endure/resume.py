@@ -197,12 +197,14 @@ def wish_to_carry_on(
     after_trip: bool = False,
     latest_end_unix_s: float | None = None,
     at_most: str | None = None,
+    port_url: str | None = None,
     watched_over: WatchedOver | None = None,
 ) -> RunWish:
     """The wish for the next part of the run, which ends by `latest_end_unix_s`, None: as the run was begun.
 
-    `at_most` is what the user said of that. `watched_over` None is as the part before. Raises Refused after a trip that
-    nobody has said may be passed over, UsageError where its latest end has gone by.
+    `at_most` is what the user said of that, `port_url` the port's name where it has another one now. `watched_over`
+    None is as the part before. Raises Refused after a trip that nobody has said may be passed over, UsageError where
+    its latest end has gone by.
     """
     if broken.cause is Cause.TRIP and not after_trip:
         raise Refused(
@@ -224,8 +226,7 @@ def wish_to_carry_on(
     assert isinstance(told, dict)  # a dataclass is written as an object
     first = parts_of(dict(broken.manifest))[0]
     settings = dict(broken.manifest.get("settings") or {})
-    if at_most is not None:
-        settings["at_most"] = at_most
+    settings |= {name: said for name, said in (("at_most", at_most), ("port", port_url)) if said is not None}
     if latest_end_unix_s is not None:
         settings["latest_end"] = rfc3339(latest_end_unix_s)
     elif settings.get("latest_end") is not None:
