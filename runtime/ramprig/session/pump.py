@@ -236,7 +236,7 @@ class Pump:
 
     def _check_panic(self) -> None:
         if self.panic_category is not None and not self.panic_taken:
-            raise StoppedByUser(f"a stop of category {self.panic_category} was asked for")
+            raise StoppedByUser(f"stopped by the user (category {self.panic_category})")
 
     def _wait_until(self, until_s: float, now_s: float) -> float:
         latest_s = now_s + self._turn_max_s
