@@ -24,7 +24,7 @@ from ramprig.report.html import Wish, report_id
 from ramprig.report.making import Made, make_report, read_run
 from ramprig.report.page import alike
 from ramprig.report.protections import is_off
-from ramprig.report.sections import method
+from ramprig.report.sections import method, results
 from ramprig.report.svg import Chart, ticks
 
 STEPS = """- repeat:
@@ -209,6 +209,23 @@ def test_a_run_on_a_simulated_board_says_so_and_compares_no_clocks(run: Path, tm
 
     assert "differ by less than 1e+02 ppm" in told(drift_ppm=26.0, device_s=10.0)
     assert "ran 26 ppm fast against the computer&#x27;s, give or take 0.28" in told(drift_ppm=26.0, device_s=3600.0)
+
+
+def test_what_was_measured_stands_among_the_results_with_its_uncertainty(run: Path) -> None:
+    zero = {"value": 0.003840637, "unit": "A", "standard_uncertainty": 0.000280086, "confidence": 0.95,
+            "low": 0.003290344, "high": 0.004390930}  # fmt: skip
+    inertia = {"value": 6.0112345e-6, "unit": "kg*m2", "standard_uncertainty": None, "low": None, "high": None}
+    measured = {
+        "procedure": "wiring",
+        "sentence": "wired <well>.",
+        "values": {"current_zero": zero, "inertia": inertia},
+    }
+    facts = gather(run)
+    plain = replace(facts, manifest=facts.manifest | {"results": {"measured": measured}}, expectations={})
+    text = results(plain)
+    assert "wiring: wired &lt;well&gt;." in text
+    assert "<td>current zero</td><td>0.00384 A</td><td>0.00028 A</td><td>0.00329 to 0.00439 A, 95 %</td>" in text
+    assert "<td>inertia</td><td>6.011e-06 kg*m2</td><td>not recorded</td><td>not recorded</td>" in text
 
 
 def test_numbers_of_one_kind_have_the_same_decimals() -> None:

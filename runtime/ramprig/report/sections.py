@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping, Sequence
 
 from ramprig.endure.cycles import read_cycle_record
@@ -213,12 +214,13 @@ def results(facts: Facts) -> str:
     """Each expectation with limit, values and verdict; the rule; failures with their values; cycles; resolution."""
     missed, trouble = unjudged(facts)
     found = list(facts.expectations.values())
-    parts = [page.paragraph(RULE)]
+    measured = (facts.manifest.get("results") or {}).get("measured") or {}
+    parts = [_measured(measured)] if measured else [page.paragraph(RULE)]
     if found or missed:
         rows = [_expectation(entry) for entry in (found + missed)[:ROWS_MAX]]
         heads = ["what", "where", "limit", "values found", "judged", "failed", "verdict"]
         parts.append(page.table(heads, rows, numbers=(4, 5)))
-    else:
+    elif not measured:
         parts.append(page.paragraph(NOTHING_JUDGED))
     more = len(found) + len(missed) - ROWS_MAX
     if more > 0:
@@ -228,6 +230,31 @@ def results(facts: Facts) -> str:
     if trouble:
         parts.append(page.paragraph(f"Expectations that were not judged cannot be told: {trouble}.", kind="note"))
     return "".join((*parts, _failures(found), _cycles(facts), _resolution(facts)))
+
+
+def _measured(found: Document) -> str:
+    """What a procedure of `measure` came to, with its own statement of uncertainty."""
+    rows = []
+    for name, each in (found.get("values") or {}).items():
+        unit = f" {each['unit']}" if each.get("unit") else ""
+        uncertain = each.get("standard_uncertainty")
+        value, low, high = (_to_its_place(each.get(key), uncertain) for key in ("value", "low", "high"))
+        standard = f"{uncertain:.2g}{unit}" if isinstance(uncertain, int | float) else NOT_KNOWN
+        share = f", {100 * each['confidence']:g} %" if isinstance(each.get("confidence"), int | float) else ""
+        interval = f"{low} to {high}{unit}{share}" if low and high else NOT_KNOWN
+        rows.append([page.text(name.replace("_", " ")), page.text(f"{value or NOT_KNOWN}{unit}"), standard, interval])
+    table = page.table(["measured", "value", "standard uncertainty", "interval"], rows) if rows else ""
+    return page.paragraph(f"{found.get('procedure')}: {found.get('sentence')}") + table
+
+
+def _to_its_place(value: object, uncertain: object) -> str:
+    """A number to the place of the second figure of its standard uncertainty; empty where there is none."""
+    if not isinstance(value, int | float):
+        return ""
+    if not isinstance(uncertain, int | float) or uncertain <= 0 or value == 0:
+        return f"{value:.4g}"
+    figures = math.floor(math.log10(abs(value))) - math.floor(math.log10(uncertain)) + 2
+    return f"{value:.{min(max(figures, 1), 15)}g}"
 
 
 def _expectation(entry: Expectation) -> list[str]:
@@ -309,7 +336,7 @@ def _resolution(facts: Facts) -> str:
     table = page.paragraph(single) + table if rows else ""
     sensors = (
         "The uncertainty of current and supply is that of the board's sensors, which this program does not know: enter "
-        "the instruments' calibration. No expanded uncertainty is claimed."
+        "the instruments' calibration. No expanded uncertainty is claimed but what stands beside a measured value."
     )
     counts = "".join(page.paragraph(text) for text in _by_counts(facts))
     return "<h3>Uncertainty</h3>" + counts + table + page.paragraph(sensors)
