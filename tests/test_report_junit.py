@@ -20,7 +20,7 @@ from ramprig.record.reading import audit
 from ramprig.report.facts import Expectation, Facts, gather
 from ramprig.report.junit import Case as JunitCase
 from ramprig.report.junit import cases_of, junit_xml
-from ramprig.report.sections import results
+from ramprig.report.results import results
 
 SCHEMA = Path(__file__).parent / "data" / "junit-10.xsd"
 """By Gregory Boissinot (MIT licence, its notice inside), as pytest's source distribution 9.2.0 carries it."""

@@ -24,7 +24,8 @@ from ramprig.report.html import Wish, report_id
 from ramprig.report.making import Made, make_report, read_run
 from ramprig.report.page import alike
 from ramprig.report.protections import is_off
-from ramprig.report.sections import method, results
+from ramprig.report.results import results
+from ramprig.report.sections import method
 from ramprig.report.svg import Chart, ticks
 
 STEPS = """- repeat:

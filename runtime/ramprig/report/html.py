@@ -22,6 +22,7 @@ from .digest import Digest
 from .explain import Explanation, view_of_trip
 from .facts import BROKEN_OFF, UNDER_WAY, Facts
 from .protections import protections
+from .results import results
 from .trends import rules_in_force, seen_of
 from .untold import untold_table
 from .worn import unjudged_since
@@ -149,7 +150,7 @@ def _parts_of(read: Read, wish: Wish, figures: _Figures) -> list[tuple[str, str]
     found = [
         ("Item, rig and environment", sections.item_and_rig(facts, wish.entries)),
         ("Method", sections.method(facts)),
-        ("Results", sections.results(facts) + _ranges(facts, digest)),
+        ("Results", results(facts) + _ranges(facts, digest)),
         interruptions,
         ("Account of the samples", account(facts, read.audit)),
         ("Protections", protections(facts)),

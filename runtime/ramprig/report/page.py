@@ -56,6 +56,8 @@ body{font-size:10pt}main{max-width:none;padding:0}h2{break-after:avoid;margin-to
 tr,.verdict,dd,dt{break-inside:avoid}thead{display:table-header-group}pre{break-inside:auto;font-size:8pt}
 .verdict,pre{background:#fff}}
 """
+NOT_KNOWN = "not recorded"
+"""In the place of what the run itself should have said; what people should have said is `not entered`."""
 
 
 def text(value: object) -> str:

@@ -1,12 +1,10 @@
-"""The parts of a report that are words and tables, from item and rig to the protections in force."""
+"""The parts of a report that are words and tables: item and rig, method, deviations, findings, and the clause's list."""
 
 from __future__ import annotations
 
-import math
 from collections.abc import Mapping, Sequence
 
-from ramprig.endure.cycles import read_cycle_record
-from ramprig.errors import FileError, RecordError
+from ramprig.errors import FileError
 from ramprig.quantity import format_duration
 from ramprig.record.events import from_rfc3339
 from ramprig.sequence.rig import Rig
@@ -16,27 +14,12 @@ from ramprig.session.events import Learned, Tripped
 
 from . import page
 from .digest import Digest
-from .facts import UNDER_WAY, Document, Expectation, Facts
-from .plots import label_of
+from .facts import UNDER_WAY, Document, Facts
 from .protections import stop_text
 from .trends import Seen
-from .unjudged import unjudged, why_unjudged
 
-RULE = (
-    "Decision rule: an expectation passes where the value found lies within its limits, the limits included; there is "
-    "no guard band and no allowance for uncertainty (simple acceptance; the term as in ISO/IEC Guide 98-4 and ILAC-G8, "
-    "from memory). The run passes where every step was carried out, every expectation passed each time it was judged, "
-    "and no limit to wear that ends the run was passed. A value near a limit may therefore be on either side of it by "
-    "the resolution told below."
-)
-NOTHING_JUDGED = (
-    "No expectation was judged. Waits, trips and limits to wear have their verdict at the head of this report."
-)
 ROWS_MAX = 400
 """Lines of one table; what is left out is counted and stands in the run folder."""
-RESOLUTION_AT_RPM = (1.0, 10.0, 100.0, 1000.0)
-NOT_KNOWN = "not recorded"
-"""In the place of what the run itself should have said; what people should have said is `not entered`."""
 CLOCKS_WITHIN_S = 1e-3
 """Clocks are compared over a link whose delays differ by about so much: a choice of this program, typical of USB."""
 SEQUENCE_MAX = 60_000
@@ -62,11 +45,11 @@ def item_and_rig(facts: Facts, entries: Mapping[str, str]) -> str:
         ("environment, as entered", entries.get("environment")),
         ("bench", facts.bench_trouble if bench is None else f"{bench.name} ({bench.file})"),
         ("board", _board(device)),
-        ("start of the board (boot)", device.get("boot", NOT_KNOWN)),
-        ("port", manifest.get("port") or NOT_KNOWN),
+        ("start of the board (boot)", device.get("boot", page.NOT_KNOWN)),
+        ("port", manifest.get("port") or page.NOT_KNOWN),
         ("instruments, as entered", entries.get("instruments")),
-        ("computer", (manifest.get("software") or {}).get("os") or NOT_KNOWN),
-        ("software", _software(manifest) or NOT_KNOWN),
+        ("computer", (manifest.get("software") or {}).get("os") or page.NOT_KNOWN),
+        ("software", _software(manifest) or page.NOT_KNOWN),
     ]
     found = page.facts(pairs) + _parts_table(facts) + _notes(facts)
     if settings.get("rehearsal") or facts.is_simulated:
@@ -79,7 +62,7 @@ def item_and_rig(facts: Facts, entries: Mapping[str, str]) -> str:
 def _board(device: Document) -> str:
     names = [str(device[name]) for name in ("board", "serial") if device.get(name)]
     firmware = [f"firmware {device['firmware']}"] if device.get("firmware") else []
-    return ", ".join([*([" ".join(names)] if names else []), *firmware]) or NOT_KNOWN
+    return ", ".join([*([" ".join(names)] if names else []), *firmware]) or page.NOT_KNOWN
 
 
 def _software(manifest: Document) -> str:
@@ -127,12 +110,12 @@ def method(facts: Facts) -> str:
     values = (manifest.get("settings") or {}).get("values") or {}
     period = ((manifest.get("samples") or {}).get("loggings") or [{}])[0].get("period_ticks")
     pairs: list[tuple[str, object]] = [
-        ("begun", manifest.get("started") or NOT_KNOWN),
+        ("begun", manifest.get("started") or page.NOT_KNOWN),
         ("ended", manifest.get("ended") or ("not yet" if facts.verdict == UNDER_WAY else "not in order")),
         ("first step", _first_step(facts)),
         *_lengths(facts),
         ("values given", ", ".join(f"{name} = {value}" for name, value in values.items()) or "none"),
-        ("sampled", f"every {period} ticks of {clocks.get('tick_us')} us" if period else NOT_KNOWN),
+        ("sampled", f"every {period} ticks of {clocks.get('tick_us')} us" if period else page.NOT_KNOWN),
         *([("speed", speed)] if (speed := (manifest.get("speed") or {}).get("method")) and facts.motors else []),
         ("clocks", _clock_text(facts)),
     ]
@@ -180,7 +163,7 @@ def _sequence_texts(facts: Facts) -> str:
 
 
 def _seconds(value: object) -> str:
-    return format_duration(round(value, 3)) if isinstance(value, int | float) else NOT_KNOWN
+    return format_duration(round(value, 3)) if isinstance(value, int | float) else page.NOT_KNOWN
 
 
 def _first_step(facts: Facts) -> str:
@@ -188,7 +171,7 @@ def _first_step(facts: Facts) -> str:
     found = (facts.manifest.get("results") or {}).get("steps_from_tick")
     zero = ((facts.parts[-1].get("clocks") or {}) or (facts.manifest.get("clocks") or {})).get("tick_zero")
     if not isinstance(found, int) or not isinstance(zero, int):
-        return NOT_KNOWN
+        return page.NOT_KNOWN
     at = _seconds((found - zero) * facts.tick_us / 1e6)
     part = ", in its last part" if len(facts.parts) > 1 else ""
     return f"at {at} of the run{part}; 'into the run' at the head counts from there"
@@ -208,152 +191,6 @@ def _clock_text(facts: Facts) -> str:
     return (
         f"{text}; the board's clock ran {abs(ppm):.3g} ppm {way} against the computer's, give or take {within_ppm:.2g}"
     )
-
-
-def results(facts: Facts) -> str:
-    """Each expectation with limit, values and verdict; the rule; failures with their values; cycles; resolution."""
-    missed, trouble = unjudged(facts)
-    found = list(facts.expectations.values())
-    measured = (facts.manifest.get("results") or {}).get("measured") or {}
-    parts = [_measured(measured)] if measured else [page.paragraph(RULE)]
-    if found or missed:
-        rows = [_expectation(entry) for entry in (found + missed)[:ROWS_MAX]]
-        heads = ["what", "where", "limit", "values found", "judged", "failed", "verdict"]
-        parts.append(page.table(heads, rows, numbers=(4, 5)))
-    elif not measured:
-        parts.append(page.paragraph(NOTHING_JUDGED))
-    more = len(found) + len(missed) - ROWS_MAX
-    if more > 0:
-        parts.append(page.paragraph(f"{more} more expectations are in the run folder."))
-    if missed:
-        parts.append(page.paragraph(f"Of these, {len(missed)}: {why_unjudged(facts)}.", kind="note"))
-    if trouble:
-        parts.append(page.paragraph(f"Expectations that were not judged cannot be told: {trouble}.", kind="note"))
-    return "".join((*parts, _failures(found), _cycles(facts), _resolution(facts)))
-
-
-def _measured(found: Document) -> str:
-    """What a procedure of `measure` came to, with its own statement of uncertainty."""
-    rows = []
-    for name, each in (found.get("values") or {}).items():
-        unit = f" {each['unit']}" if each.get("unit") else ""
-        uncertain = each.get("standard_uncertainty")
-        value, low, high = (_to_its_place(each.get(key), uncertain) for key in ("value", "low", "high"))
-        standard = f"{uncertain:.2g}{unit}" if isinstance(uncertain, int | float) else NOT_KNOWN
-        share = f", {100 * each['confidence']:g} %" if isinstance(each.get("confidence"), int | float) else ""
-        interval = f"{low} to {high}{unit}{share}" if low and high else NOT_KNOWN
-        rows.append([page.text(name.replace("_", " ")), page.text(f"{value or NOT_KNOWN}{unit}"), standard, interval])
-    table = page.table(["measured", "value", "standard uncertainty", "interval"], rows) if rows else ""
-    return page.paragraph(f"{found.get('procedure')}: {found.get('sentence')}") + table
-
-
-def _to_its_place(value: object, uncertain: object) -> str:
-    """A number to the place of the second figure of its standard uncertainty; empty where there is none."""
-    if not isinstance(value, int | float):
-        return ""
-    if not isinstance(uncertain, int | float) or uncertain <= 0 or value == 0:
-        return f"{value:.4g}"
-    figures = math.floor(math.log10(abs(value))) - math.floor(math.log10(uncertain)) + 2
-    return f"{value:.{min(max(figures, 1), 15)}g}"
-
-
-def _expectation(entry: Expectation) -> list[str]:
-    return [
-        page.text(entry.what),
-        page.place(entry.place),
-        page.text(entry.limit),
-        page.text(_values(entry)) if entry.judged else "",
-        str(entry.judged),
-        str(entry.failed),
-        page.status(entry.failed == 0) if entry.judged else page.text("not judged"),
-    ]
-
-
-def _values(entry: Expectation) -> str:
-    if entry.judged == 1 or not entry.span:
-        return entry.last_found
-    return f"{entry.span}, last {entry.last_found}"
-
-
-def _failures(found: list[Expectation]) -> str:
-    failures = [(entry, event) for entry in found for event in entry.failures]
-    if not failures:
-        return ""
-    rows = [
-        [
-            page.text(event.get("time_s")),
-            page.text(entry.what),
-            page.text(entry.limit),
-            page.text(f"{event.get('found')} {event.get('why') or ''}".strip()),
-        ]
-        for entry, event in failures[:ROWS_MAX]
-    ]
-    total = sum(entry.failed for entry in found)
-    more = "" if total == len(rows) else page.paragraph(f"{total - len(rows)} more failures are in the run folder.")
-    heads = ["at, s of the run", "what", "limit", "found"]
-    return "<h3>What did not hold</h3>" + page.table(heads, rows, numbers=(0,)) + more
-
-
-def _cycles(facts: Facts) -> str:
-    """The count of cycles; a commanded one without an end was under way when the run broke off."""
-    if not facts.cycles:
-        return ""
-    try:
-        record = read_cycle_record(facts.folder)
-    except RecordError as error:
-        return "<h3>Cycles</h3>" + page.paragraph(f"The count of cycles cannot be told: {error}.")
-    counted = record.counted
-    pairs = [
-        ("cycles commanded", counted.commanded),
-        ("confirmed by the encoder", counted.confirmed),
-        ("failed", counted.failed),
-        ("not judged", counted.unjudged),
-    ]
-    if facts.verdict == UNDER_WAY:
-        pairs += [("broken off", counted.interrupted), ("under way", int(record.open_number is not None))]
-    else:
-        pairs.append(("broken off", counted.interrupted + (record.open_number is not None)))
-    return "<h3>Cycles</h3>" + page.facts((name, str(value)) for name, value in pairs)
-
-
-def _resolution(facts: Facts) -> str:
-    """How far a value may be off by the way it was measured."""
-    rows = []
-    for column in (facts.manifest.get("speed") or {}).get("columns") or []:
-        name, _ = label_of(str(column["column"]))
-        if not facts.has_encoder(str(column["column"]).rpartition(".")[0]):
-            continue
-        rows += [
-            [page.text(name), f"{entry['at_rpm']:g} rpm", f"{entry['rpm']:.3g} rpm"]
-            for entry in column.get("resolution") or []
-            if entry.get("at_rpm") in RESOLUTION_AT_RPM
-        ]
-    single = (
-        "Resolution of a single logged speed, from the encoder's counts alone; a mean over a window is finer, about as "
-        "the window is longer than the span that a single speed is taken over."
-    )
-    table = page.table(["", "at", "resolution"], rows, numbers=(1, 2)) if rows else ""
-    table = page.paragraph(single) + table if rows else ""
-    sensors = (
-        "The uncertainty of current and supply is that of the board's sensors, which this program does not know: enter "
-        "the instruments' calibration. No expanded uncertainty is claimed but what stands beside a measured value."
-    )
-    counts = "".join(page.paragraph(text) for text in _by_counts(facts))
-    return "<h3>Uncertainty</h3>" + counts + table + page.paragraph(sensors)
-
-
-def _by_counts(facts: Facts) -> list[str]:
-    """What one count of each encoder comes to, and where it sits."""
-    texts = []
-    for motor in () if facts.bench is None else facts.bench.motors:
-        if motor.encoder is None:
-            texts.append(f"{motor.name} has no encoder: no position and no speed of it was measured.")
-            continue
-        text = f"One count of {motor.name} is {360 / float(motor.counts_per_turn):.3g} deg of the output shaft"
-        if motor.encoder.on_motor_shaft:
-            text += ", by the ratio of the gear: its play and wind-up are not seen by the encoder on the motor's shaft"
-        texts.append(text + ".")
-    return texts
 
 
 def interruptions(facts: Facts, digest: Digest, entries: Mapping[str, str]) -> str:
@@ -445,7 +282,9 @@ def _said(key: str, value: object) -> str:
 
 def _wall_text(facts: Facts) -> str:
     moved = (facts.manifest.get("clocks") or {}).get("wall_moved_s")
-    return NOT_KNOWN if moved is None else f"moved by {round(moved, 3) + 0.0:.3f} s"  # + 0.0 takes the sign off a zero
+    return (
+        page.NOT_KNOWN if moved is None else f"moved by {round(moved, 3) + 0.0:.3f} s"
+    )  # + 0.0 takes the sign off a zero
 
 
 def trend_findings(seen: Seen, rules: Sequence[WearRules]) -> str:
