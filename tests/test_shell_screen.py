@@ -172,6 +172,22 @@ def test_several_pasted_lines_are_refused_as_one() -> None:
     assert run(story).worker.posted == []
 
 
+@pytest.mark.parametrize("text", ["x" * 10_000, "\n".join(["jog vent 5 % for 1 s"] * 400)])
+def test_a_paste_that_is_refused_does_not_fill_the_screen(text: str) -> None:
+    seen = io.StringIO()
+
+    async def story(rig: Rig) -> None:
+        said: list[str] = []
+        take = rig.outbox.take
+        rig.outbox.take = lambda: said.extend(new := take()) or new  # type: ignore[method-assign, func-returns-value]
+        rig.send(b"\x1b[200~" + text.encode() + b"\x1b[201~\r")
+        await rig.until(lambda: any("at most 400 are read" in line or "pasted at once" in line for line in said))
+        assert sum(map(len, said)) < 400
+
+    size = Size(rows=30, columns=100)
+    run(story, output=Vt100_Output(seen, lambda: size))
+
+
 def test_a_line_typed_while_another_is_under_way_is_refused() -> None:
     async def story(rig: Rig) -> None:
         rig.worker.busy = "wait 1 h"

@@ -36,6 +36,7 @@ from ramprig.bench import Bench
 from ramprig.errors import UsageError
 from ramprig.quantity import format_duty
 from ramprig.wrapping import wrapped
+from ramprig.yamlfile import shorten
 
 from . import commands as c
 from .completing import begun_word, choices, wants_file
@@ -45,7 +46,7 @@ from .remembered import Remembered
 from .statusline import LINES_MAX, prompt_of, status_lines
 from .stopkeys import StopKey
 from .taps import TappedInput
-from .words import read_line
+from .words import LINE_MAX, read_line
 from .worker import Worker
 
 REFRESH_S = 0.1
@@ -76,6 +77,13 @@ class Words(Completer):
             return
         for choice in choices(line, self._bench):
             yield Completion(choice.text, start_position=-len(begun_word(line)), display_meta=choice.about)
+
+
+def _echo(text: str) -> str:
+    """What was entered, as it is shown above the line: of a paste that is refused its first line, shortened."""
+    first, _, more = text.partition("\n")
+    shown = first if len(first) <= LINE_MAX else shorten(first)
+    return f"{shown} ..." if more.strip() else shown
 
 
 class Screen:
@@ -236,7 +244,7 @@ class Screen:
         """A line was entered: it is in the history whatever becomes of it."""
         text = buffer.text
         if text.strip():
-            self._outbox.say(prompt_of(self._worker.snapshot) + text)
+            self._outbox.say(prompt_of(self._worker.snapshot) + _echo(text))
             self._enter(text)
         return False  # and the line is emptied
 
