@@ -1,4 +1,4 @@
-"""The parts of a report that are words and tables: item and rig, method, deviations, findings, and the clause's list."""
+"""The parts of a report that are words and tables: item and rig, method, deviations, findings, the list of a clause."""
 
 from __future__ import annotations
 
