@@ -11,6 +11,7 @@ import pytest
 from ramprig.errors import StoppedByUser
 from ramprig.session import StopOnSignals
 from ramprig.session.events import StopAsked
+from ramprig.session.signals import interrupted_by_signals
 from session_rig import Rig
 
 POSIX = pytest.mark.skipif(sys.platform == "win32", reason="POSIX signals are sent to the own process")
@@ -65,6 +66,20 @@ def test_a_hang_up_that_was_ignored_before_stays_ignored() -> None:
         signal.signal(signal.SIGHUP, before)
     assert signals.received == ["SIGTERM"]
     assert target.categories == [1]
+
+
+@POSIX
+@pytest.mark.parametrize("name", ["SIGINT", "SIGTERM", "SIGHUP", "SIGQUIT"])
+def test_where_nothing_is_driven_a_signal_interrupts_and_a_guard_takes_its_place(name: str) -> None:
+    target, number = Panicked(), getattr(signal, name)
+    before = signal.getsignal(number)
+    with interrupted_by_signals():
+        with StopOnSignals(target) as signals:
+            os.kill(os.getpid(), number)
+        with pytest.raises(KeyboardInterrupt):
+            os.kill(os.getpid(), number)
+    assert (signals.received, target.categories) == ([name], [1])
+    assert signal.getsignal(number) == before
 
 
 def test_the_earlier_handlers_come_back() -> None:

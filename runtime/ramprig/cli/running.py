@@ -123,7 +123,7 @@ def carry_out_wish(wish: RunWish, way: Way) -> int:
     from ramprig.sequence.compile import compile_plan
     from ramprig.sequence.report import wear_lines
     from ramprig.sequence.running import run_sequence
-    from ramprig.session.signals import StopOnSignals
+    from ramprig.session.signals import StopOnSignals, interrupted_by_signals
 
     sessions: list[Session] = []
     watch: list[StopOnSignals] = []
@@ -156,17 +156,18 @@ def carry_out_wish(wish: RunWish, way: Way) -> int:
         began=None if way.virtual else began,
     )
     try:
-        if way.virtual:
-            result = run_sequence(
-                wish,
-                around.open_port(),
-                progress=around.progress,
-                guard=guard,
-                asked_by=around.asked_by,
-                began=around.began,
-            )
-        else:
-            result = run_enduring(wish, around)
+        with interrupted_by_signals():  # while a port is opened, or a board is waited for
+            if way.virtual:
+                result = run_sequence(
+                    wish,
+                    around.open_port(),
+                    progress=around.progress,
+                    guard=guard,
+                    asked_by=around.asked_by,
+                    began=around.began,
+                )
+            else:
+                result = run_enduring(wish, around)
     except RamprigError:
         raise
     except Exception:  # a bug: what became of the motors comes first, the bug itself is told by `main`

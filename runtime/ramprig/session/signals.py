@@ -8,8 +8,10 @@ from __future__ import annotations
 
 import signal
 import sys
+import threading
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Iterator, Mapping
+from contextlib import contextmanager
 from types import FrameType, TracebackType
 from typing import Protocol, Self
 
@@ -20,6 +22,39 @@ CONSOLE_WAIT_S = 4.0
 
 _NAMES = ("SIGINT", "SIGTERM", "SIGHUP", "SIGQUIT", "SIGBREAK")
 _CONSOLE_EVENTS = (2, 5, 6)  # CTRL_CLOSE_EVENT, CTRL_LOGOFF_EVENT, CTRL_SHUTDOWN_EVENT
+
+
+@contextmanager
+def interrupted_by_signals() -> Iterator[None]:
+    """Where nothing is driven yet, or any more: every way to end the program is a KeyboardInterrupt, so that what is
+    to be written down or closed still is. `StopOnSignals` takes its place while it is entered.
+
+    A hang-up that was ignored before stays so. Outside the main thread it does nothing.
+    """
+    if threading.current_thread() is not threading.main_thread():
+        yield
+        return
+    before = {number: signal.signal(number, signal.default_int_handler) for number in _numbers()}
+    try:
+        yield
+    finally:
+        _put_back(before)
+
+
+def _numbers() -> list[int]:
+    """The signals that this system has and that are not to be left alone."""
+    found = ((name, getattr(signal, name, None)) for name in _NAMES)
+    return [
+        number
+        for name, number in found
+        if number is not None and not (name == "SIGHUP" and signal.getsignal(number) is signal.SIG_IGN)
+    ]
+
+
+def _put_back(before: Mapping[int, signal._HANDLER]) -> None:
+    for number, handler in before.items():
+        # None: the earlier handler was not set from Python and cannot be put back; the default is the next best.
+        signal.signal(number, signal.SIG_DFL if handler is None else handler)
 
 
 class Panics(Protocol):
@@ -47,10 +82,8 @@ class StopOnSignals:
         self.received: list[str] = []
 
     def __enter__(self) -> Self:
-        for name in _NAMES:
-            number = getattr(signal, name, None)
-            if number is not None and not (name == "SIGHUP" and signal.getsignal(number) is signal.SIG_IGN):
-                self._before[number] = signal.signal(number, self._handle)
+        for number in _numbers():
+            self._before[number] = signal.signal(number, self._handle)
         if sys.platform == "win32":
             self._watch_console()
         return self
@@ -58,9 +91,7 @@ class StopOnSignals:
     def __exit__(
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None:
-        for number, handler in self._before.items():
-            # None: the earlier handler was not set from Python and cannot be put back; the default is the next best.
-            signal.signal(number, signal.SIG_DFL if handler is None else handler)
+        _put_back(self._before)
         self._before.clear()
         if sys.platform == "win32":
             self._leave_console()
