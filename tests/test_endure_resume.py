@@ -129,6 +129,8 @@ def test_a_board_that_does_not_come_back_ends_the_run(tmp_path: Path) -> None:
     result = host.run(Process())
     assert result.outcome.verdict is Verdict.LINK_LOST
     assert "the board did not come back within 20 s" in result.outcome.sentence
+    assert result.outcome.sentence.count("port1: the cable was pulled out") == 1
+    assert "stop NOT CONFIRMED: cut the power (the device did not acknowledge the stop)" in result.outcome.sentence
     assert read_manifest(host.run_folder)["verdict"] == "link lost"
     (note,) = read_notes(host.run_folder)
     assert note["by"] == "ramprig"

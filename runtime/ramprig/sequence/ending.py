@@ -267,7 +267,8 @@ class _Run:
             report = self._stop()
             self.confirmed = report.confirmed
             if not report.confirmed:
-                end = replace(end, sentence=f"{end.sentence}; stop {report.verdict}")
+                verdict = report.verdict.replace(f"; {end.sentence}", "")  # a lost link need not be told twice
+                end = replace(end, sentence=f"{end.sentence}; stop {verdict}")
         trip = self.executive.trip
         if trip is not None and not self.trip_told and end.verdict is not Verdict.TRIPPED:
             end = replace(end, sentence=f"{end.sentence}; while stopping, the device tripped: {self._told(trip)}")
