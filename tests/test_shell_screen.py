@@ -22,6 +22,7 @@ from prompt_toolkit.output.vt100 import Vt100_Output
 from held_up import held_up_s
 from ramprig.shell import commands as c
 from ramprig.shell.hold import Hold
+from ramprig.shell.keeper import NO_LINK
 from ramprig.shell.live import Snapshot
 from ramprig.shell.outbox import Outbox
 from ramprig.shell.screen import Screen
@@ -223,6 +224,19 @@ def test_a_stop_key_stops_at_any_moment(keys: bytes, categories: list[int]) -> N
 
     rig = run(story)
     assert [category for category, _ in rig.worker.stops] == categories
+
+
+@pytest.mark.parametrize("keys", [b"stop\r", b"cut\r", b"\x03", b"\x1c"])
+def test_a_stop_that_cannot_be_sent_is_never_met_with_silence(keys: bytes) -> None:
+    seen = io.StringIO()
+
+    async def story(rig: Rig) -> None:
+        rig.worker.snapshot = Snapshot(state=NO_LINK)
+        rig.send(keys)
+        await rig.until(lambda: "NOT SENT: there is no link to the board" in seen.getvalue())
+
+    size = Size(rows=30, columns=150)
+    assert len(run(story, output=Vt100_Output(seen, lambda: size)).worker.stops) == 1
 
 
 def test_half_typed_text_survives_a_stop_and_a_flood() -> None:

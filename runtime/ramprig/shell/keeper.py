@@ -40,6 +40,9 @@ TRAIL_TRIES = 10
 TRAIL_WAIT_S = 5.0
 """Longest the end waits for a trail: TRAIL_TRIES on a link of which each answer takes long."""
 
+NO_LINK = "no link"
+"""The state's word after the link was lost."""
+
 Reopener = Callable[[], Port]
 """Opens the port anew, after the link was lost."""
 
@@ -235,7 +238,7 @@ class Keeper:
 
     def _state_word(self) -> str:
         if self._lost:
-            return "no link"
+            return NO_LINK
         if self._unconfirmed:
             return "NOT CONFIRMED"
         session = self._session

@@ -41,6 +41,7 @@ from ramprig.yamlfile import shorten
 from . import commands as c
 from .completing import begun_word, choices, wants_file
 from .hold import Hold
+from .keeper import NO_LINK
 from .outbox import Outbox
 from .remembered import Remembered
 from .statusline import LINES_MAX, prompt_of, status_lines
@@ -57,6 +58,11 @@ PRINT_MAX = 100
 """Most lines printed at a time, so that a flood leaves room for keys."""
 ESCAPE_WAIT_S = 0.05
 """A lone Esc is told from an arrow key after so long."""
+
+UNSENT = (
+    "NOT SENT: there is no link to the board. It stops by itself when its lease is over; if anything still turns, cut "
+    "the power."
+)
 
 STYLE = Style.from_dict({"status": "reverse", "status.tripped": "reverse bold", "prompt": "bold"})
 
@@ -112,6 +118,7 @@ class Screen:
         self._hold: Hold | None = None
         self._jog: c.JogHold | None = None
         self._dropped_bytes = 0
+        self._pressed = stop_key.pressed
         history: History = InMemoryHistory()
         if history_file is not None:
             history = Remembered(str(history_file), outbox.say)
@@ -268,6 +275,7 @@ class Screen:
         match command:
             case c.StopAll(category=category):
                 self._worker.panic(category)
+                self._tell_if_unsent()
                 return
             case c.Leave():
                 self._leave()
@@ -290,6 +298,11 @@ class Screen:
             await asyncio.sleep(REFRESH_S / 2)
         self._hold = self._jog = None
         self.app.invalidate()
+
+    def _tell_if_unsent(self) -> None:
+        """Whoever asks for a stop hears of it at once where none can be sent; else the stop itself is told."""
+        if self._worker.snapshot.state == NO_LINK:
+            self._outbox.say(UNSENT)
 
     def _leave(self) -> None:
         if self.app.is_running and not self.app.is_done:
@@ -330,6 +343,9 @@ class Screen:
             await asyncio.sleep(REFRESH_S)
             if self._over() or self._worker.ended:
                 self._leave()
+            if self._stop_key.pressed > self._pressed:
+                self._pressed = self._stop_key.pressed
+                self._tell_if_unsent()
             keys = self._keys
             if isinstance(keys, TappedInput):
                 if keys.expire_paste():
