@@ -27,19 +27,21 @@ class LineSplitter:
         """The lines that `data` completes, in order, without LF and without a CR before it; empty ones are left out."""
         *ended, rest = data.split(b"\n")
         found: list[bytes | Overlong] = []
-        for piece in ended:
-            line = self._held + piece
-            length = self._dropped + len(line) + 1
-            self._held = b""
-            self._dropped = 0
-            if length > self._limit:
-                found.append(Overlong(length))
-                continue
-            if line.endswith(b"\r"):
-                line = line[:-1]
-            if line:
-                found.append(line)
-        self._keep(rest)
+        if ended:
+            ended[0] = self._held + ended[0]
+            dropped, self._held, self._dropped = self._dropped, b"", 0
+            for line in ended:
+                length = dropped + len(line) + 1
+                dropped = 0
+                if length > self._limit:
+                    found.append(Overlong(length))
+                elif line.endswith(b"\r"):
+                    if line != b"\r":
+                        found.append(line[:-1])
+                elif line:
+                    found.append(line)
+        if rest:
+            self._keep(rest)
         return found
 
     def _keep(self, rest: bytes) -> None:
