@@ -164,7 +164,8 @@ class Cable:
                 self._device_ns += device.advance(ticks, patient=patient and self._is_sound) * tick_ns
                 output = device.transmit()
                 if output:
-                    self.now_ns = max(self.now_ns, self._device_ns)
+                    if self._device_ns > self.now_ns:
+                        self.now_ns = self._device_ns
                     if self._is_sound and not self._held and device.faults.changes == self._looked_at:
                         return output
                     self._hold(output)

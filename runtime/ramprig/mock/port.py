@@ -54,13 +54,14 @@ class DevicePort(ClosesItself, Generic[D]):
         self._urgent: list[bytes] = []
         self._early = b""  # what came while the device caught up for a write
         self._closed = threading.Event()
+        self._is_closed = False  # the same, looked at several times a turn
         self._cable.opened()
 
     def _now_ns(self) -> int:
         return round((self.clock.now() - self._start_s) * NS_PER_S)
 
     def _check(self) -> None:
-        if self._closed.is_set():
+        if self._is_closed:
             raise LinkLost(f"{self.name} was closed while it was in use")
         if self._cable.is_out:
             raise LinkLost(f"{self.name}: the cable was pulled out (fault unplug)")
@@ -137,6 +138,7 @@ class DevicePort(ClosesItself, Generic[D]):
 
     def close(self) -> None:
         """Give the port up. The device stands still from here on."""
+        self._is_closed = True
         self._closed.set()
 
 

@@ -211,7 +211,8 @@ class Pump:
             self._late(now_s - turned_s)
         if self.panic_category is not None:
             self._check_panic()
-        if not self.muted and link.due_at_s is None:
+        beat_s, may_send = self.beat_s, link.due_at_s is None and not self.muted
+        if may_send and (self._jobs or (beat_s is not None and now_s >= self._sent_s + beat_s)):  # as `_wait_until`
             self._send_new(now_s)
         wait_until_s = self._wait_until(until_s, now_s)
         data = self._read_until(wait_until_s)
@@ -252,12 +253,8 @@ class Pump:
         return due_s if due_s < until_s else until_s
 
     def _send_new(self, now_s: float) -> None:
-        if self._jobs:
-            self._job = self._jobs.popleft()
-        elif self.beat_s is not None and now_s >= self._sent_s + self.beat_s:  # the same sum as in `_wait_until`
-            self._job = BEAT
-        else:
-            return
+        """Send the job that waits longest, else the beat that is due."""
+        self._job = self._jobs.popleft() if self._jobs else BEAT
         try:
             line = self.link.ask(self._job.word, *self._job.args, now_s=now_s)
         except FieldError as error:
