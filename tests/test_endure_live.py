@@ -5,6 +5,7 @@ from __future__ import annotations
 import copy
 import json
 import random
+import re
 from collections.abc import Callable
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -239,7 +240,9 @@ def test_the_report_says_what_the_run_said(worn: Looked, tmp_path: Path) -> None
     failed = cases["vent forward: steady current: watch +10 %, fail +25 %, 3 of 5"].find("failure")
     assert failed is not None
     assert "fail limit at cycle 27" in str(failed.get("message"))
-    assert cases["every other feature: watch +- 10 %, 3 of 5"].find("failure") is None
+    others = cases["every other feature: watch +- 10 %, 3 of 5"]
+    assert others.find("failure") is None
+    assert re.match(r"\d+ of \d+ features had a complete baseline\n", others.findtext("system-out") or "")
 
 
 def test_the_end_is_explained(worn: Looked) -> None:

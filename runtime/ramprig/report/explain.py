@@ -64,7 +64,7 @@ def explain_folder(folder: Path) -> Explanation | None:
     return explain(gather(folder))
 
 
-def likely_lines(folder: Path) -> list[str]:
+def likely_lines(folder: Path, *, width: int = WIDTH) -> list[str]:
     """The likely cause with what speaks for it and the next step, for a terminal; none where the run passed.
 
     The run is over and its sentence follows: whatever goes wrong in explaining it must not hide that.
@@ -73,7 +73,7 @@ def likely_lines(folder: Path) -> list[str]:
         explanation = explain_folder(folder)
     except Exception as error:  # also a bug of ours: the end of the run is to be told all the same
         return [f"the end could not be explained: {type(error).__name__}: {error}"]
-    return [] if explanation is None else explanation.lines()
+    return [] if explanation is None else explanation.lines(width)
 
 
 def explain(facts: Facts) -> Explanation | None:
