@@ -22,12 +22,18 @@ import toolchain
 OPTIONS = ("--quick", "--soak")
 
 
+def workers() -> int:
+    """How many processes run tests: one more than there are cores, since some tests wait for the clock."""
+    cores = len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1
+    return cores + 1
+
+
 def commands(python: str, arguments: "list[str]") -> "list[tuple[str, list[str]]]":
     """The checks to run, as (title, command) in order, for the script's `arguments`; pytest comes last."""
     passed_on = [argument for argument in arguments if argument not in OPTIONS]
     marks = ["-m", "soak or not soak"] if "--soak" in arguments else []
-    spread = [] if passed_on else ["--numprocesses", "auto", "--dist", "loadfile", "--no-loadscope-reorder"]
-    tests = ("pytest: the tests", [python, "-m", "pytest", *spread, *marks, *passed_on])
+    spread = ["--numprocesses", str(workers()), "--dist", "loadfile", "--no-loadscope-reorder"]
+    tests = ("pytest: the tests", [python, "-m", "pytest", *([] if passed_on else spread), *marks, *passed_on])
     if "--quick" in arguments:
         return [tests]
     return [
