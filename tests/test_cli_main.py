@@ -20,6 +20,7 @@ from ramprig.cli import main as main_function
 from ramprig.cli.files import values_of
 from ramprig.cli.main import COMMANDS, EXIT_BUG, MOVING, parser_for
 from ramprig.cli.progress import LINE_EVERY_S, PIECES_MAX, REWRITE_EVERY_S, Progress
+from ramprig.cli.say import width_of
 
 HEAVY = ("numpy", "yaml", "serial", "prompt_toolkit", "ramprig.session", "ramprig.mock", "ramprig.bench")
 
@@ -256,3 +257,12 @@ def test_a_line_that_stays_is_broken_between_words_on_a_terminal_and_nowhere_els
         "interrupted: the board\n  restarted, and it did not\n  tell why\n",
         "interrupted: the board restarted, and it did not tell why\n",
     ]
+
+
+@pytest.mark.parametrize(("is_terminal", "most", "width"), [(True, 100, 80), (True, 60, 60), (False, 100, 100)])
+def test_a_filled_text_is_as_wide_as_the_terminal_at_most(is_terminal: bool, most: int, width: int) -> None:
+    class Stream(io.StringIO):
+        def isatty(self) -> bool:
+            return is_terminal
+
+    assert width_of(Stream(), most=most) == width  # a terminal that does not tell its size is taken for 80 columns

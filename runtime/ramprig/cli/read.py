@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 import argparse
+import sys
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from ramprig.cli.say import say
+from ramprig.cli.say import say, width_of
 
 if TYPE_CHECKING:
     from ramprig.record.reading import Audit
@@ -27,14 +28,14 @@ def declare(parser: argparse.ArgumentParser) -> None:
 def carry_out(args: argparse.Namespace) -> int:
     """Print why the run ended as it did, unless it passed, then what the folder says and what it holds."""
     from ramprig.record.reading import audit, read_manifest
-    from ramprig.report.explain import explain
+    from ramprig.report.explain import WIDTH, explain
     from ramprig.report.facts import UNDER_WAY, gather
 
     manifest = read_manifest(args.run)
     facts = gather(args.run)
     explanation = explain(facts)
     if explanation is not None:
-        for line in [*explanation.lines(), ""]:
+        for line in [*explanation.lines(width_of(sys.stdout, most=WIDTH)), ""]:
             say(line)
     if facts.verdict == UNDER_WAY:
         say("The run is under way: a program is still writing it. What follows is how far it has come.")

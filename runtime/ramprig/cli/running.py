@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING
 from urllib.parse import urlencode
 
 from ramprig.cli.progress import Progress
-from ramprig.cli.say import say_surely, tell
+from ramprig.cli.say import say_surely, tell, width_of
 from ramprig.errors import RamprigError
 
 if TYPE_CHECKING:
@@ -119,7 +119,7 @@ def carry_out_wish(wish: RunWish, way: Way) -> int:
 
     from ramprig.endure.live import watching
     from ramprig.endure.resume import Surroundings, run_enduring
-    from ramprig.report.explain import likely_lines
+    from ramprig.report.explain import WIDTH, likely_lines
     from ramprig.sequence.compile import compile_plan
     from ramprig.sequence.report import wear_lines
     from ramprig.sequence.running import run_sequence
@@ -152,7 +152,7 @@ def carry_out_wish(wish: RunWish, way: Way) -> int:
         progress=lambda far: progress.show(lambda: how_far(far)),
         guard=guard,
         asked_by=lambda: ", ".join(name for signals in watch for name in signals.received),
-        explain=likely_lines,
+        explain=lambda folder: likely_lines(folder, width=width_of(sys.stderr, most=WIDTH)),
         began=None if way.virtual else began,
     )
     try:
@@ -235,9 +235,9 @@ def tell_end(outcome: Outcome, folder: Path | None, *, rehearsal: bool) -> None:
     if rehearsal:
         tell(NOT_PROVED)
     if folder is not None:
-        from ramprig.report.explain import likely_lines
+        from ramprig.report.explain import WIDTH, likely_lines
 
-        for line in likely_lines(folder):
+        for line in likely_lines(folder, width=width_of(sys.stdout, most=WIDTH)):
             say_surely(line)
         say_surely(f"run folder: {folder}")
     if not outcome.stop_confirmed:

@@ -9,6 +9,9 @@ import contextlib
 import sys
 from typing import TextIO
 
+NARROWEST = 40
+"""Columns that a filled text has at least."""
+
 
 def say(text: str = "", *, as_is: bool = False) -> None:
     """A line of the result, on a terminal broken between words unless it is wanted `as_is`.
@@ -28,6 +31,15 @@ def say_surely(text: str, *, as_is: bool = False) -> None:
     """As `say`, of a run, which is over and stays what it is though nobody reads it; never raises."""
     with contextlib.suppress(OSError, ValueError):
         print(text if as_is else _fitted(text, sys.stdout), flush=True)
+
+
+def width_of(stream: TextIO | None, *, most: int) -> int:
+    """How wide a text may be that is filled for the stream: `most`, or less on a narrow terminal."""
+    if stream is None or not stream.isatty():
+        return most
+    from ramprig.wrapping import columns_of
+
+    return min(most, max(NARROWEST, columns_of(stream)))
 
 
 def _fitted(text: str, stream: TextIO | None) -> str:
