@@ -93,7 +93,6 @@ class Digest:
     rows: int = 0
     first_s: float = math.nan
     last_s: float = math.nan
-    torn_bytes: int = 0
     breaks: list[float] = field(default_factory=list)
     totals: dict[str, tuple[float, float, float]] = field(default_factory=dict)
     interval_edges: int = 0
@@ -167,7 +166,6 @@ def digest_samples(facts: Facts) -> Digest:
             for walk in curves.values():
                 walk.take(times, piece)
         _keep_features(digest, aged.close_part(part))
-        digest.torn_bytes += stream.torn_bytes
     if is_thinned:
         _widen(facts, digest)
     digest.intervals = table.rows()
@@ -377,8 +375,3 @@ class _CurveWalk:
         level.speed_sum += float(kept.sum())
         level.least = min(level.least, float(kept.min()))
         level.greatest = max(level.greatest, float(kept.max()))
-
-
-def cycle_at(passes: Sequence[float], time_s: float) -> int:
-    """The number of the cycle at a time of the run, 0 before the first."""
-    return bisect_right(passes, time_s)

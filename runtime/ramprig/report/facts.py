@@ -120,7 +120,6 @@ class Facts:
     outlived: Counter[str] = field(default_factory=Counter)
     is_held: bool | None = False
     last_event: Document | None = None
-    torn_event_bytes: int = 0
 
     def of(self, kind: str) -> list[Document]:
         """The events of a kind that were kept, in order."""
@@ -258,7 +257,7 @@ def gather(folder: Path) -> Facts:
         facts.is_held = is_held(folder / EVENTS_FILE)
     _read_bench(facts)
     series: dict[str, list[tuple[float, int]]] = {}
-    for event in lines_of(folder / EVENTS_FILE, facts):
+    for event in lines_of(folder / EVENTS_FILE):
         _take(facts, event, series)
     if series:
         begins = max(series.items(), key=lambda entry: (entry[0] == "cycle", entry[1][-1][0] - entry[1][0][0]))[1]
@@ -269,14 +268,12 @@ def gather(folder: Path) -> Facts:
     return facts
 
 
-def lines_of(path: Path, facts: Facts | None = None) -> Iterator[Document]:
-    """The objects of a file of JSON lines, one after another; a torn last line is left out, and told to `facts`."""
+def lines_of(path: Path) -> Iterator[Document]:
+    """The objects of a file of JSON lines, one after another; a torn last line is left out, as the audit tells."""
     try:
         with open(path, "rb") as file:
             for line in file:
                 if not line.endswith(b"\n"):
-                    if facts is not None:
-                        facts.torn_event_bytes = len(line)
                     return
                 yield json.loads(line)
     except (OSError, ValueError) as error:
