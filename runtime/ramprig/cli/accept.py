@@ -28,7 +28,8 @@ does not ask, with --energise no it stops there. The motor runs at most at --dut
 board has. The board's limits are read first and put back at the end; for the checks they are only tightened, or shifted
 together with the reading they bound. A healthy motor that turns freely is needed, and room for the servo to move.
 
-Exits with 0 where nothing failed, 1 where a clause failed, 4 where the link was lost, 5 where it was stopped.
+Exits with 0 where nothing failed, 1 where a clause failed or the limits could not be put back, 4 where the link was
+lost, 5 where it was stopped. With --only no board is accepted: that takes all checks.
 """
 
 
