@@ -192,6 +192,24 @@ def test_a_host_that_was_away_for_longer_than_allowed_moves_nothing_by_itself(tm
     assert host.run(Process(), resume=True).outcome.verdict is Verdict.PASSED  # by hand it may
 
 
+def test_the_record_is_not_read_while_there_is_no_port_to_go_on_at(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """That of a week is large, and the board is looked for every two seconds."""
+    reads: list[float] = []
+
+    def counted(folder: Path, *, now_unix_s: float) -> Broken:
+        reads.append(now_unix_s)
+        return read_broken(folder, now_unix_s=now_unix_s)
+
+    monkeypatch.setattr(endure_resume, "read_broken", counted)
+    host = Host(tmp_path, policy=GO_ON)
+    host.meddle = once("unplug")  # for 5 s
+    replug(host)
+    assert host.run(Process()).outcome.verdict is Verdict.PASSED
+    assert len(reads) == 1
+
+
 def test_a_file_that_cannot_be_read_any_more_ends_the_run_as_it_was(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:

@@ -336,9 +336,14 @@ def _go_on(wish: RunWish, around: Surroundings, folder: Path) -> RunResult | str
         if gone_s > max(float(policy.within_s), RETRY_S) + LATE_S:
             return late + why
         try:
-            broken = read_broken(folder, now_unix_s=now_s)
-            next_wish = wish_to_carry_on(broken, wish, by="policy", now_unix_s=now_s, after_trip=policy.after_trip)
-            port = around.open_port()
+            port = around.open_port()  # first, as the record of a week takes its time to be read
+            try:
+                now_s = around.wall()
+                broken = read_broken(folder, now_unix_s=now_s)
+                next_wish = wish_to_carry_on(broken, wish, by="policy", now_unix_s=now_s, after_trip=policy.after_trip)
+            except BaseException:
+                port.close()
+                raise
             return _run(next_wish, around, port)
         except (WrongDevice, Refused, RecordError, UsageError, FileError) as error:
             return str(error)
