@@ -107,6 +107,17 @@ def test_an_export_leaves_the_run_as_it_was(run: Path, tmp_path: Path, capsys: p
     assert {path.name: path.read_bytes() for path in run.iterdir()} == before
 
 
+@pytest.mark.parametrize("words", [["export", "--to", "excel-csv"], ["report"]])
+def test_where_nothing_can_be_written_another_place_is_named(
+    run: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str], words: list[str]
+) -> None:
+    taken = tmp_path / "taken"
+    taken.write_text("a file where a folder is wanted", "utf-8")
+    assert main([*words, str(run), "--out", str(taken)]) == 2
+    assert f"cannot be written in {taken}: " in (said := capsys.readouterr().err)
+    assert said.endswith("; --out DIR puts it elsewhere\n")
+
+
 def test_a_missing_package_is_named_and_leaves_no_file(
     run: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:

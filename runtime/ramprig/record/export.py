@@ -82,7 +82,8 @@ def export_run(
             else:
                 done += _sheets(paths, target, mark, sheet_rows)
     except OSError as error:
-        raise RecordError(f"the export cannot be written in {target}: {error.strerror or error}") from error
+        why = f"the export cannot be written in {target}: {error.strerror or error}"
+        raise RecordError(f"{why}; --out DIR puts it elsewhere") from error
     return done
 
 

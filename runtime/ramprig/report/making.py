@@ -68,7 +68,8 @@ def make_report(folders: Sequence[Path], *, out: Path, issued: str, entries: Map
         for path, read in zip(made.features, with_cycles, strict=True):
             replace_file(path, features_csv(read.digest.features))
     except OSError as error:
-        raise RecordError(f"the report cannot be written in {out}: {error.strerror or error}") from error
+        why = f"the report cannot be written in {out}: {error.strerror or error}"
+        raise RecordError(f"{why}; --out DIR puts it elsewhere") from error
     return made
 
 
