@@ -295,6 +295,25 @@ def test_a_disk_that_is_full_at_any_write_around_a_hole_leaves_the_rows_to_be_ke
         assert to_be_kept(handed[:-1], int(handed[-1].ticks[-1])) <= ticks, full_at  # the last one is what failed
 
 
+def test_a_held_file_that_is_being_read_goes_a_little_later(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    waited: list[float] = []
+    real = Path.unlink
+
+    def unlink(path: Path, *, missing_ok: bool = False) -> None:
+        if path.name in HELD_NAMES and len(waited) < 3:
+            raise PermissionError(13, "in use")
+        real(path, missing_ok=missing_ok)
+
+    monkeypatch.setattr(Path, "unlink", unlink)
+    monkeypatch.setattr("ramprig.record.appendfile.READERS_HINDER", True)
+    monkeypatch.setattr("ramprig.record.appendfile.time.sleep", waited.append)
+    recorder = begin(tmp_path, KEEPING, durable=True)
+    hand_over(recorder, blocks_of(SAMPLES, size=BLOCK))
+    finish(recorder, SAMPLES)
+    assert len(waited) == 3
+    assert held_files(recorder.folder.path) == []
+
+
 # ---- what the events tell -------------------------------------------------------------------------------------------
 
 OFTEN = Thinning(every=50, before_s=0.05, after_s=0.05, around=frozenset({Around.MARK}))

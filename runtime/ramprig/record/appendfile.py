@@ -14,7 +14,7 @@ import hashlib
 import os
 import sys
 import time
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -24,7 +24,7 @@ written."""
 
 CHUNK_BYTES = 1024 * 1024
 READERS_HINDER = sys.platform == "win32"
-"""Windows does not replace a file that somebody has open, such as `run.json` while it is read."""
+"""Windows neither replaces nor removes a file that somebody has open, such as `run.json` while it is read."""
 REPLACE_TRIES = 20
 REPLACE_WAIT_S = 0.05
 """So long in all, a second, a reader may take."""
@@ -245,7 +245,7 @@ def replace_file(path: Path, data: bytes) -> None:
             file.write(data)
             file.flush()
             os.fsync(file.fileno())
-        _put_in_place(part, path)
+        patiently(lambda: os.replace(part, path))
     except OSError:
         with contextlib.suppress(OSError):
             part.unlink()
@@ -253,12 +253,13 @@ def replace_file(path: Path, data: bytes) -> None:
     sync_folder(path.parent)
 
 
-def _put_in_place(part: Path, path: Path) -> None:
+def patiently(work: Callable[[], None]) -> None:
+    """Replace or remove a file; where a reader hinders that (Windows), try for a second. Raises OSError."""
     tries = REPLACE_TRIES if READERS_HINDER else 1
     while True:
         tries -= 1
         try:
-            os.replace(part, path)
+            work()
         except PermissionError:
             if tries <= 0:
                 raise

@@ -14,13 +14,14 @@ tells those rows as unwritten.
 
 from __future__ import annotations
 
+import functools
 import math
 from collections.abc import Callable, Mapping
 from pathlib import Path
 from typing import Any
 
 from ..errors import RecordError
-from .appendfile import AppendFile, sync_folder, whole_lines
+from .appendfile import AppendFile, patiently, sync_folder, whole_lines
 from .rows import Rows
 from .volumes import HELD_NAMES, Stream, held_files, volume_files
 
@@ -70,7 +71,7 @@ class HeldRows:
 
     def _begin(self) -> None:
         path = self._folder / HELD_NAMES[self._turn % len(HELD_NAMES)]
-        path.unlink(missing_ok=True)
+        patiently(lambda: path.unlink(missing_ok=True))
         self._file = AppendFile(path)
         self._file.append(self._header)
         self._turn += 1
@@ -102,8 +103,8 @@ class HeldRows:
 
 
 def _remove(folder: Path) -> None:
-    for name in HELD_NAMES:
-        (folder / name).unlink(missing_ok=True)
+    for path in [folder / name for name in HELD_NAMES]:
+        patiently(functools.partial(path.unlink, missing_ok=True))
     sync_folder(folder)
 
 
