@@ -17,11 +17,26 @@ pytestmark = pytest.mark.process
 posix_only = pytest.mark.skipif(sys.platform == "win32", reason="pseudo-terminals are POSIX only")
 
 
+TRIES = 3
+"""A program that a busy machine holds up for longer than the lease is stopped by the board: then once more."""
+
+
+def told(capfd: pytest.CaptureFixture[str]) -> tuple[int, str, list[Path]]:
+    """The demonstration's exit status, what it said, and the folders of its two runs."""
+    for _ in range(TRIES):
+        status = demo_story.story(passes=1)
+        said = capfd.readouterr().out
+        folders = [Path(found) for found in re.findall(r"^run folder: (.+)$", said, re.MULTILINE)]
+        if not any(read_manifest(folder)["stop_reason"].startswith("link lost") for folder in folders):
+            break
+        shutil.rmtree(folders[0].parent.parent)
+    return status, said, folders
+
+
 def test_the_demonstration_shows_a_run_that_passes_and_one_that_trips(capfd: pytest.CaptureFixture[str]) -> None:
-    assert demo_story.story(passes=1) == 0
-    said = capfd.readouterr().out
+    status, said, folders = told(capfd)
+    assert status == 0
     assert said.startswith("Before anything moves:")
-    folders = [Path(found) for found in re.findall(r"^run folder: (.+)$", said, re.MULTILINE)]
     assert [read_manifest(folder)["verdict"] for folder in folders] == ["passed", "tripped"]
     assert "overcurrent on vent" in read_manifest(folders[1])["stop_reason"]
     assert (folders[1] / "trail.csv").exists()
