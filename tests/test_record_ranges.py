@@ -17,6 +17,7 @@ from kept_runs import FULL, THIN, rehearsed
 from ramprig.record.keeping import Keeping, Thinning
 from ramprig.record.ranges import EDGES_MAX, LAG_S, CycleRanges, SpanPrinter
 from ramprig.record.reading import audit, read_cycles, read_events, read_manifest, sample_files
+from ramprig.record.recorder import EDGES_AHEAD_MAX
 from ramprig.record.rows import Rows
 from ramprig.sequence.happened import CycleBegun, CycleDone
 from record_long import PERIOD, begin, finish, rows_of
@@ -173,6 +174,31 @@ def test_an_edge_that_is_told_before_its_rows_waits_for_them(tmp_path: Path, ear
     assert [(line["what"], line["first_tick"], line["last_tick"]) for line in lines] == [
         ("between", "5000", "5998"), ("cycle", "6000", "8000"), ("between", "8002", "10998"),
     ]  # fmt: skip
+
+
+@pytest.mark.parametrize("late_ms", [-60, 0, 1, 90])
+def test_edges_told_ahead_of_a_batch_fall_where_they_do_without_one(tmp_path: Path, late_ms: int) -> None:
+    """In virtual time rows wait in a batch, here for many more edges than may be told ahead of it."""
+    found = []
+    for name, durable in (("batch", False), ("at once", True)):
+        recorder = begin(tmp_path / name, Keeping(cycle_ranges=True), durable=durable)
+        cycles = [
+            (tick, event)
+            for n in range(1, 3 * EDGES_AHEAD_MAX)
+            for tick, event in (
+                (5000 + 40 * n + late_ms, CycleBegun(tick=5000 + 40 * n, number=n, name="c")),
+                (5025 + 40 * n + late_ms, done(5025 + 40 * n, 5000 + 40 * n, n)),
+            )
+        ]
+        for block in blocks_of(1500, size=4):
+            recorder.on_block(block)
+            while cycles and block.ticks[-1] >= cycles[0][0]:
+                recorder.on_event(cycles.pop(0)[1])
+        finish(recorder, 1500)
+        assert not cycles
+        found.append((recorder.folder.path / "cycle-ranges.csv").read_bytes())
+    assert found[0] == found[1]
+    assert found[0].count(b"\n") == 6 * EDGES_AHEAD_MAX
 
 
 Told = tuple[str, int, int | None]

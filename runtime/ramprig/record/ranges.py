@@ -186,7 +186,7 @@ class CycleRanges:
         """Rows that follow those before; where ticks begin anew, those before are settled."""
         if self._newest is not None and rows.ticks[0] <= self._newest:
             self._settle_all()
-        self._held.append(rows)
+        self._held.append(rows.numbers())
         self._held_rows += len(rows)
         self._newest = int(rows.ticks[-1])
         self._next_tick = self._newest + rows.period_ticks
@@ -226,6 +226,10 @@ class CycleRanges:
         while self._edges and (len(self._edges) > EDGES_MAX or self._is_due(self._edges[0].tick)):
             self._cut(self._edges.popleft())
 
+    def is_ahead(self, tick: int) -> bool:
+        """Whether an edge at this tick would wait for rows to come."""
+        return not self._is_due(tick)
+
     def _is_due(self, tick: int) -> bool:
         """Whether all rows before this tick have come."""
         return self._next_tick is not None and tick <= self._next_tick
@@ -261,6 +265,7 @@ class IntervalRanges:
 
     def take(self, rows: Rows) -> None:
         """Rows that follow those before."""
+        rows = rows.numbers()
         numbers: NDArray[np.int64] = (rows.ticks - self._printer.tick_zero) // self._length_ticks
         begins = [0, *(np.flatnonzero(np.diff(numbers)) + 1).tolist(), len(rows)]
         for begin, end in pairwise(begins):

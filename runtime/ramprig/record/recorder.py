@@ -29,6 +29,9 @@ from .writer import CLOSE_WAIT_S, SYNC_EVERY_S, DiskWriter, Trouble, within
 BATCH_ROWS = 2048
 """In virtual time so many rows are printed together; a log that must be durable takes every block as it comes."""
 
+EDGES_AHEAD_MAX = 16
+"""So many edges of cycles are told of ahead of the rows of a batch at most: the ranges keep some more than that."""
+
 PERIODS_MAX = 16
 """Different sample periods whose speed resolution `run.json` lists."""
 
@@ -125,7 +128,7 @@ class Recorder:
         self._user_on_trouble = on_trouble
         self._printer = self._new_printer(columns)
         self._batch: list[Block] = []
-        self._batch_rows = 0
+        self._batch_rows = self._edges_ahead = 0
         self._received_rows = 0
         self._periods_ticks: list[int] = []
         self._troubles: list[Json] = []
@@ -233,7 +236,7 @@ class Recorder:
 
     def _submit_batch(self) -> None:
         batch, self._batch = self._batch, []
-        self._batch_rows = 0
+        self._batch_rows = self._edges_ahead = 0
         if batch:
             self._writer.submit(lambda: self._samples.write(batch))
 
@@ -241,11 +244,14 @@ class Recorder:
         return event_object(event, when=self._when, host_s=self._clock.now())
 
     def _mind(self, told: dict[str, Json]) -> None:
-        """Have the samples log know of an event, after the rows that came before it; never raises RecordError."""
+        """Have the samples log know of an event, after the rows that came before it where it does not wait for them
+        itself; never raises RecordError."""
         if self._writer.failure is not None or not self._samples.concerns(told):
             return
         with contextlib.suppress(RecordError):  # told through on_trouble
-            self._submit_batch()
+            if self._edges_ahead >= EDGES_AHEAD_MAX or not self._samples.waits_for_rows(told):
+                self._submit_batch()
+            self._edges_ahead += 1
             self._writer.submit(lambda: self._samples.happened(told))
 
     def on_event(self, event: object) -> None:

@@ -100,9 +100,16 @@ class Rows:
         begin, end, _ = rows.indices(len(self.ticks))
         if (begin, end) == (0, len(self.ticks)):
             return self
-        edges = self._edges()
+        data = b""
+        if self.data:
+            edges = self._edges()
+            data = self.data[edges[begin] : edges[end]]
         cells = {name: cells[rows] for name, cells in self.cells.items()}
-        return Rows(self.ticks[rows], self.data[edges[begin] : edges[end]], self.period_ticks, cells)
+        return Rows(self.ticks[rows], data, self.period_ticks, cells)
+
+    def numbers(self) -> Rows:
+        """The rows without their text, for those who read numbers alone: to cut them no line is looked for."""
+        return Rows(self.ticks, b"", self.period_ticks, self.cells)
 
     def only(self, kept: NDArray[np.bool_]) -> Rows:
         """The rows where (n,) `kept` is true, without their cells."""

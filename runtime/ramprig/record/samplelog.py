@@ -155,6 +155,13 @@ class SampleLog:
         thinning = self._keeping.thinning
         return bool((self._cycles is not None and edges_of(told)) or (thinning is not None and thinning.claims(told)))
 
+    def waits_for_rows(self, told: Mapping[str, Json]) -> bool:
+        """Whether what `happened` does with this event waits for the rows up to its tick by itself."""
+        tick = told.get("tick")
+        return (
+            self._cycles is not None and self._thinner is None and isinstance(tick, int) and self._cycles.is_ahead(tick)
+        )
+
     def happened(self, told: Mapping[str, Json]) -> None:
         """An event that came after all rows so far."""
         if self._cycles is not None:
