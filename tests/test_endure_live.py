@@ -174,7 +174,7 @@ def test_cycles_too_few_for_a_baseline_are_remarked_on(tmp_path: Path, times: in
     steps = STEPS.replace("TIMES", str(times)).replace("WEAR", WEAR.replace("LIMITS", limits))
     found = compile_plan(sequence_of(tmp_path, steps), small_bench()).remarks
     said = [text for text in found if "too few" in text]
-    assert said == ["the 12 cycles of 'open' are too few to judge a change: that takes more than 12"][:remarks]
+    assert said == ["12 cycles of 'open' are too few to judge a change: that takes more than 12"][:remarks]
 
 
 def test_the_door_sheet_says_which_wear_ends_the_run(tmp_path: Path) -> None:

@@ -106,7 +106,7 @@ def test_values_found_stand_in_one_unit(tmp_path: Path) -> None:
     current, position = facts.expectations.values()
     assert re.fullmatch(r"[\d.]+ mA( to [\d.]+ mA)?", current.span), current.span
     assert re.fullmatch(r"[\d.]+ deg to [\d.]+ deg", position.span), position.span
-    assert f"{position.span}, last {position.last_found}" in results(facts)
+    assert f"{position.span}, last {position.last_found}" in results(facts, {})
     assert position.last_found == position.span.partition(" to ")[2]
     case = next(case for case in cases_of(facts) if case.name.startswith("current of vent"))
     assert f"values: {current.span}" in case.out
@@ -120,7 +120,7 @@ def test_a_run_without_expectations_shows_what_else_there_is(tmp_path: Path) -> 
       - coast: {motor: vent, in: 300 ms}"""
     facts = facts_of(tmp_path, Case("", steps=steps))
     assert not facts.expectations
-    page = results(facts)
+    page = results(facts, {})
     for wanted in (
         "No expectation was judged.",
         "<dt>cycles commanded</dt><dd>2</dd>",
@@ -129,7 +129,7 @@ def test_a_run_without_expectations_shows_what_else_there_is(tmp_path: Path) -> 
     ):
         assert wanted in page, wanted
     (facts.folder / "s.yaml").unlink()
-    assert "Expectations that were not judged cannot be told: its copy of the sequence" in results(facts)
+    assert "Expectations that were not judged cannot be told: its copy of the sequence" in results(facts, {})
 
 
 def test_a_trip_fails_its_limit_and_the_run(tripped: Facts) -> None:
@@ -204,7 +204,7 @@ def test_what_the_run_never_came_to_judge_is_skipped_with_the_reason(tmp_path: P
     suite = ElementTree.fromstring(text).find("testsuite")
     assert suite is not None
     assert suite.get("skipped") == str(len(list(suite.iter("skipped"))))
-    page = results(facts)
+    page = results(facts, {})
     assert page.count("<td>not judged</td>") == 2
     assert "Of these, 2: not judged: the run ended before (tripped)." in page
 

@@ -223,10 +223,21 @@ def test_what_was_measured_stands_among_the_results_with_its_uncertainty(run: Pa
     }
     facts = gather(run)
     plain = replace(facts, manifest=facts.manifest | {"results": {"measured": measured}}, expectations={})
-    text = results(plain)
+    text = results(plain, {})
     assert "wiring: wired &lt;well&gt;." in text
     assert "<td>current zero</td><td>0.00384 A</td><td>0.00028 A</td><td>0.00329 to 0.00439 A, 95 %</td>" in text
     assert "<td>inertia</td><td>6.011e-06 kg*m2</td><td>not recorded</td><td>not recorded</td>" in text
+
+
+def test_the_resolution_is_told_about_the_speeds_of_the_run_at_the_coarsest_rate(run: Path) -> None:
+    facts = gather(run)
+    told = [{"period_ticks": ticks, "at_rpm": rpm, "rpm": rpm * share}
+            for ticks, share in ((1, 0.01), (10, 0.05)) for rpm in (0.1, 1.0, 10.0, 100.0, 1000.0)]  # fmt: skip
+    speed = {"columns": [{"column": "vent.speed_rpm", "resolution": told}]}
+    facts = replace(facts, manifest=facts.manifest | {"speed": speed})
+    text = results(facts, {"vent.speed_rpm": (-38.2, 0.0, 12.0)})
+    table = text[text.index("<th") :].partition("<h3>Uncertainty</h3>")[2]
+    assert re.findall(r"([\d.]+) rpm", table) == ["1", "0.05", "10", "0.5", "100", "5"]
 
 
 def test_numbers_of_one_kind_have_the_same_decimals() -> None:

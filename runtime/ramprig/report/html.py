@@ -150,7 +150,7 @@ def _parts_of(read: Read, wish: Wish, figures: _Figures) -> list[tuple[str, str]
     found = [
         ("Item, rig and environment", sections.item_and_rig(facts, wish.entries)),
         ("Method", sections.method(facts)),
-        ("Results", results(facts) + _ranges(facts, digest)),
+        ("Results", results(facts, digest.totals) + _ranges(facts, digest)),
         interruptions,
         ("Account of the samples", account(facts, read.audit)),
         ("Protections", protections(facts)),

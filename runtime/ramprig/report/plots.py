@@ -214,6 +214,8 @@ def by_cycle(facts: Facts, found: Sequence[Trend]) -> list[Plot]:
     return [_trend(trend, what if what == "pass" else trend.judged.turn) for trend in found]
 
 
+LEAST_SPAN = 0.02
+"""A feature is drawn over this share of its value at least: what scatters by less is to look steady."""
 LIMIT_COLOURS = {WearLevel.WATCH: ORANGE, WearLevel.FAIL: VERMILION}
 
 
@@ -222,7 +224,8 @@ def _trend(trend: Trend, what: str) -> Plot:
     levels += [(value, level.name.lower(), LIMIT_COLOURS[level]) for level, value in trend.judged.limit_values()]
     low, high = float(np.nanmin(trend.values)), float(np.nanmax(trend.values))
     watched = [value for value, name, _ in levels if name != "fail"]
-    y_range = padded(min([low, *watched]), max([high, *watched]))
+    room = max(0.0, (LEAST_SPAN * max(abs(low), abs(high)) - (high - low)) / 2)
+    y_range = padded(min([low - room, *watched]), max([high + room, *watched]))
     chart = Chart(
         (float(trend.numbers[0]) - 0.5, float(trend.numbers[-1]) + 0.5), y_range, trend.unit, what, height=160
     )

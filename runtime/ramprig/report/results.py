@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import math
+from bisect import bisect_left
+from collections.abc import Iterable, Mapping
 
 from ramprig.endure.cycles import read_cycle_record
 from ramprig.errors import RecordError
@@ -24,11 +26,15 @@ NOTHING_JUDGED = (
 )
 ROWS_MAX = 400
 """Lines of one table; what is left out is counted and stands in the run folder."""
-RESOLUTION_AT_RPM = (1.0, 10.0, 100.0, 1000.0)
+RESOLUTIONS = 3
+"""The resolution of a speed is told for so many speeds, up to what the run came to."""
 
 
-def results(facts: Facts) -> str:
-    """Each expectation with limit, values and verdict; the rule; failures with their values; cycles; resolution."""
+def results(facts: Facts, totals: Mapping[str, tuple[float, float, float]]) -> str:
+    """Each expectation with limit, values and verdict; the rule; failures with their values; cycles; resolution.
+
+    `totals` has least, mean and greatest of each column that was logged.
+    """
     missed, trouble = unjudged(facts)
     found = list(facts.expectations.values())
     measured = (facts.manifest.get("results") or {}).get("measured") or {}
@@ -46,7 +52,7 @@ def results(facts: Facts) -> str:
         parts.append(page.paragraph(f"Of these, {len(missed)}: {why_unjudged(facts)}.", kind="note"))
     if trouble:
         parts.append(page.paragraph(f"Expectations that were not judged cannot be told: {trouble}.", kind="note"))
-    return "".join((*parts, _failures(found), _cycles(facts), _resolution(facts)))
+    return "".join((*parts, _failures(found), _cycles(facts), _resolution(facts, totals)))
 
 
 def _measured(found: Document) -> str:
@@ -135,17 +141,21 @@ def _cycles(facts: Facts) -> str:
     return "<h3>Cycles</h3>" + page.facts((name, str(value)) for name, value in pairs)
 
 
-def _resolution(facts: Facts) -> str:
+def _resolution(facts: Facts, totals: Mapping[str, tuple[float, float, float]]) -> str:
     """How far a value may be off by the way it was measured."""
     rows = []
     for column in (facts.manifest.get("speed") or {}).get("columns") or []:
-        name, _ = label_of(str(column["column"]))
-        if not facts.has_encoder(str(column["column"]).rpartition(".")[0]):
+        name = str(column["column"])
+        if name not in totals or not facts.has_encoder(name.rpartition(".")[0]):
             continue
+        least, _, greatest = totals[name]
+        found: dict[float, float] = {}  # at the coarsest of the rates that were logged at
+        for entry in column.get("resolution") or []:
+            at_rpm, rpm = float(entry["at_rpm"]), float(entry["rpm"])
+            found[at_rpm] = max(rpm, found.get(at_rpm, rpm))
         rows += [
-            [page.text(name), f"{entry['at_rpm']:g} rpm", f"{entry['rpm']:.3g} rpm"]
-            for entry in column.get("resolution") or []
-            if entry.get("at_rpm") in RESOLUTION_AT_RPM
+            [page.text(label_of(name)[0]), f"{at_rpm:g} rpm", f"{found[at_rpm]:.3g} rpm"]
+            for at_rpm in _speeds_up_to(max(-least, greatest), found)
         ]
     single = (
         "Resolution of a single logged speed, from the encoder's counts alone; a mean over a window is finer, about as "
@@ -159,6 +169,13 @@ def _resolution(facts: Facts) -> str:
     )
     counts = "".join(page.paragraph(text) for text in _by_counts(facts))
     return "<h3>Uncertainty</h3>" + counts + table + page.paragraph(sensors)
+
+
+def _speeds_up_to(top_rpm: float, told_rpm: Iterable[float]) -> list[float]:
+    """Of the speeds whose resolution the record tells, the last RESOLUTIONS up to the first that is not below the
+    greatest one of the run."""
+    speeds = sorted(told_rpm)
+    return speeds[: bisect_left(speeds, top_rpm) + 1][-RESOLUTIONS:]
 
 
 def _by_counts(facts: Facts) -> list[str]:

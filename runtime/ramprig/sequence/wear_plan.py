@@ -119,8 +119,8 @@ def unjudged(part: Cycles) -> Iterator[str]:
             many = 1 + part.times // (part.check_every or 1)
         least = rules.run_in_turns + rules.baseline
         if many <= least and any(_is_change(limit) for limit in rules.limits):
-            few = f"the {many} {rules.turn}s of '{part.name}' are too few to judge a change"
-            yield f"{few}: that takes more than {least}"
+            told = f"{many} {rules.turn}s of '{part.name}' are" if many > 1 else f"one {rules.turn} of '{part.name}' is"
+            yield f"{told} too few to judge a change: that takes more than {least}"
 
 
 def _is_change(limit: WearLimit) -> bool:
