@@ -53,8 +53,7 @@ class RetryPolicy:
         return sum(waits) + self.hurried_max * max(waits)
 
 
-@dataclass(frozen=True, slots=True)
-class Answered:
+class Answered(NamedTuple):
     """The outstanding request has its answer.
 
     `sent_s` is when it was first sent; with `repeats` > 0 it is not known which sending was carried out, so the pair of
@@ -83,8 +82,7 @@ class Noticed:
     missed: int
 
 
-@dataclass(frozen=True, slots=True)
-class Sampled:
+class Sampled(NamedTuple):
     """A data line, or several that follow each other, `number` being the last one's; `missed` were lost just before.
 
     `again` tells that it is an old one sent anew on request.

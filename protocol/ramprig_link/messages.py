@@ -1,10 +1,15 @@
-"""The kinds of line as values, and the two parsers: one for lines from the host, one for lines from the device."""
+"""The kinds of line as values, and the two parsers: one for lines from the host, one for lines from the device.
+
+What comes ten times a second of a board's time is a named tuple, here and in `host`: it is made in half the time of a
+frozen dataclass, and a rehearsal passes through hours.
+"""
 
 from __future__ import annotations
 
 import re
 from dataclasses import dataclass
 from enum import StrEnum
+from typing import NamedTuple
 
 from .check import CHECK_LENGTH, crc16, unseal
 from .faults import FieldError
@@ -66,8 +71,7 @@ class Request:
         return read_args(WORDS[self.word].args, self.args)
 
 
-@dataclass(frozen=True, slots=True)
-class Answer:
+class Answer(NamedTuple):
     """The answer to the request `tag`; of a refusal the first field is the reason."""
 
     tag: int
