@@ -21,8 +21,16 @@ from ramprig.sequence.compile import compile_plan
 from ramprig.sequence.cycle_plan import BlockSoFar
 from ramprig.sequence.cycle_run import CycleBook, PastStarts, RunSoFar
 from ramprig.sequence.executive import Progress
-from ramprig.sequence.happened import CheckBegun, CheckDone, CycleBegun, CycleCommanded, CycleDone, CycleInterrupted
-from ramprig.sequence.outcome import Verdict
+from ramprig.sequence.happened import (
+    CheckBegun,
+    CheckCommanded,
+    CheckDone,
+    CycleBegun,
+    CycleCommanded,
+    CycleDone,
+    CycleInterrupted,
+)
+from ramprig.sequence.outcome import Counted, Verdict
 from ramprig.sequence.plan import Cycles
 from ramprig.sequence.report import report_lines
 from ramprig.sequence.spacing import StartsGuard
@@ -177,6 +185,7 @@ def test_cycles_are_confirmed_rested_and_checked(tmp_path: Path) -> None:
     assert [event.tick for event in run.events if isinstance(event, CycleBegun)] == list(begins.values())
     order = [event.number for event in run.events if isinstance(event, CycleCommanded)]
     assert order == [1, 2, 3, 4]
+    assert [event.after for event in run.events if isinstance(event, CheckCommanded)] == [0, 2, 4]
     assert run.outcome.overdue == 0
     resting = {now.doing for now in run.progress if now.cycle == 0 and now.elapsed_s > ends[1] / 1000.0}
     assert "rest until the next cycle" in resting
@@ -234,6 +243,21 @@ def test_a_stop_in_a_cycle_is_written_down_as_broken_off(tmp_path: Path) -> None
     assert broken.number == 2
     assert "stopped by the user" in broken.why
     assert str(run.outcome.cycles) == "2 commanded, 1 confirmed, 0 failed, 1 broken off"
+
+
+def test_the_starts_of_a_check_are_written_down_before_it_moves(tmp_path: Path) -> None:
+    def panic(now: Progress, device: MockDevice, session: Session, port: MockPort) -> None:
+        if device.controller is not None and device.controller.drives[0].moving:
+            session.panic(1)
+
+    keys = (
+        "times: 2\n    check every: 1\n    check: [{ramp: {motor: vent, to: 30 %, in: 400 ms}}, {coast: {motor: vent}}]"
+    )
+    run = rehearse(tmp_path, cycle(keys), meddle=panic)
+    assert run.outcome.verdict is Verdict.STOPPED
+    (check,) = [event for event in run.events if isinstance(event, CheckCommanded)]
+    assert (check.after, dict(check.starts)) == (0, {"vent": 1})
+    assert not any(isinstance(event, CheckDone) for event in run.events)
 
 
 def test_a_host_that_slept_is_told_in_the_last_sentence(tmp_path: Path) -> None:
@@ -425,6 +449,19 @@ def test_the_starts_of_a_cycle_that_was_broken_off_count_whether_it_was_told_or_
     ages = [(past.motor, past.count, past.age_s) for past in record.starts(1_800_000_060.0)]
     assert ages == [("vent", 3, 50.0), ("vent", 3, 20.0), ("vent", 3, 0.0)]
     assert record.counted.interrupted == 2  # the first was told, the second is shown by its successor
+
+
+def test_the_starts_of_a_check_that_was_broken_off_count_too(tmp_path: Path) -> None:
+    check = {"kind": "check_commanded", "after": 0, "starts": {"vent": 2}}
+    record = written(tmp_path, check, check | {"utc": "2027-01-15T08:00:40.000Z"})
+    ages = [(past.count, past.age_s) for past in record.starts(1_800_000_060.0)]
+    assert ages == [(2, 20.0), (2, 0.0)]
+    assert record.counted == Counted()
+
+
+def test_a_cycle_that_starts_nothing_is_not_taken_to_start_what_the_one_before_did(tmp_path: Path) -> None:
+    record = written(tmp_path, COMMANDED, DONE, COMMANDED | {"number": 2, "starts": {}})
+    assert [past.age_s for past in record.starts(1_800_000_060.0)] == [60.0]
 
 
 def test_a_cycle_that_follows_an_open_one_shows_that_this_was_broken_off(tmp_path: Path) -> None:

@@ -50,8 +50,8 @@ class CycleRecord:
     def starts(self, now_unix_s: float) -> tuple[PastStarts, ...]:
         """The starts of the last hour before `now_unix_s`, by the host's wall clock.
 
-        Those of a cycle that was broken off are taken as of when that was written down, else as of just now, since
-        nothing tells when they were; all of its starts are taken as made.
+        Those of a cycle or check that was broken off are taken as of when that was written down, else as of just now,
+        since nothing tells when they were; all of its starts are taken as made.
         """
         found: list[PastStarts] = []
         known: Mapping[str, int] = {}
@@ -60,10 +60,10 @@ class CycleRecord:
             kind, made = line["kind"], under_way
             if kind in ("cycle_done", "check_done"):
                 made = known = line["starts"]
-            if made is not None and kind != "block_over":  # else a cycle that this line shows as broken off
+            if made is not None:  # else a cycle or check that this line shows as broken off
                 age_s = max(0.0, now_unix_s - from_rfc3339(line["utc"]).timestamp())
                 found += _past(made, age_s) if age_s < HOUR_S else []
-            under_way = (line.get("starts") or known) if kind == "cycle_commanded" else None
+            under_way = line.get("starts", known) if kind in ("cycle_commanded", "check_commanded") else None
         return (*found, *_past(under_way or {}, 0.0))
 
 

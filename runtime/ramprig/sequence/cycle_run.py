@@ -2,7 +2,7 @@
 
 Nothing is counted twice or lost because each turn waits for the disk:
 
-    the cycle is written down as commanded    ->  on the disk  ->  its orders go out
+    the turn is written down as commanded     ->  on the disk  ->  its orders go out
     its samples have come, it is judged       ->  written down as done, on the disk  ->  the next is commanded
 
 So whatever breaks off, what has really been done is at least the count of cycles done and at most one more.
@@ -17,7 +17,16 @@ from enum import StrEnum
 
 from .cycle_plan import BlockSoFar
 from .cycle_watch import CycleWatch, Seen, TurnDone
-from .happened import BlockOver, CheckBegun, CheckDone, CycleBegun, CycleCommanded, CycleDone, CycleInterrupted
+from .happened import (
+    BlockOver,
+    CheckBegun,
+    CheckCommanded,
+    CheckDone,
+    CycleBegun,
+    CycleCommanded,
+    CycleDone,
+    CycleInterrupted,
+)
 from .outcome import Counted, Judged
 from .plan import Cycles
 from .spacing import StartsGuard
@@ -179,13 +188,23 @@ class CycleBook:
         return self._block.run_s + (tick - self._begin_tick) * self._tick_s
 
     def command(self, turn: Turn) -> None:
-        """The turn is about to begin: a cycle is written down, and must be on the disk before its first order."""
+        """The turn is about to begin: it is written down, and must be on the disk before its first order."""
         part = self._known_part()
         self._turned = True
         if self.watch is not None:
             self.watch.commanded()
         if turn is Turn.CHECK:
             self._under_way = _UnderWay(turn, 0)
+            self._write(
+                CheckCommanded(
+                    tick=None,
+                    after=self.counted.done,
+                    block=part.block,
+                    name=part.name,
+                    part=self._so_far.part,
+                    starts=part.check_starts,
+                )
+            )
             return
         self.counted = replace(self.counted, commanded=self.counted.commanded + 1)
         self._under_way = _UnderWay(turn, self.counted.commanded)

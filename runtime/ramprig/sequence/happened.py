@@ -81,6 +81,18 @@ class CycleCommanded:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class CheckCommanded:
+    """A check of this block, after so many cycles done, is about to be commanded; as of a cycle."""
+
+    tick: int | None
+    after: int
+    block: int
+    name: str
+    part: int
+    starts: Mapping[str, int]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class CycleDone:
     """A cycle is over at `tick`; `outcome` is confirmed, failed, or commanded where nothing in it is confirmed.
 
