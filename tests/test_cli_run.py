@@ -94,8 +94,8 @@ def test_1_an_expectation_that_fails(here: Path, capsys: pytest.CaptureFixture[s
         (["rehearse", "short.yaml", "--set", "drive=95 %"], "short.yaml:5"),
         (["rehearse", "short.yaml", "--bench", "absent.yaml"], "absent.yaml"),
         (["rehearse", "short.yaml", "--fault", "jamed_shaft"], "did you mean 'jammed_shaft'?"),
-        (["run", "short.yaml", "--port", "nothing:1"], "no port is called 'nothing:'"),
-        (["run", "short.yaml", "--port", "/dev/ttyNONE9"], "no port /dev/ttyNONE9"),
+        (["run", "short.yaml", "--port", "nothing:1", "--yes"], "no port is called 'nothing:'"),
+        (["run", "short.yaml", "--port", "/dev/ttyNONE9", "--yes"], "no port /dev/ttyNONE9"),
         (["shell", "--bench", "absent.yaml"], "absent.yaml"),
     ],
 )
@@ -141,7 +141,7 @@ def test_2_a_disk_that_is_full_from_the_start_is_told_before_anything_moves(
     monkeypatch.setattr(shutil, "disk_usage", lambda path: usage(10**9, 10**9 - 2**20, 2**20))
     assert main(["rehearse", "short.yaml"]) == 2
     last = capsys.readouterr().err.splitlines()[-1]
-    assert last.startswith("runs: 1 MiB are free, and 32 MiB are kept back: make room")
+    assert last.startswith("runs: 1 MB are free, and 32 MB are kept back: make room")
     assert not Path("runs").exists()
 
 
@@ -223,7 +223,7 @@ def test_run_shows_what_will_move_and_asks_on_a_terminal(
     here: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch, typed: str, code: int
 ) -> None:
     """With `yes` it goes on to the port, which is not there; without it never gets so far."""
-    monkeypatch.setattr("ramprig.cli.run.on_terminal", lambda: True)
+    monkeypatch.setattr("ramprig.cli.asking.on_terminal", lambda: True)
     monkeypatch.setattr(sys, "stdin", io.StringIO(typed))
     assert main(["run", "short.yaml", "--port", "/dev/ttyNONE9"]) == code
     said = capsys.readouterr().err
@@ -238,10 +238,18 @@ def test_run_shows_what_will_move_and_asks_on_a_terminal(
 def test_run_does_not_ask_where_told_or_where_nothing_real_moves(
     here: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch, words: list[str]
 ) -> None:
-    monkeypatch.setattr("ramprig.cli.run.on_terminal", lambda: True)
     monkeypatch.setattr(sys, "stdin", None)
     assert main(["run", "short.yaml", *words]) == (2 if "--yes" in words else 0)
     assert "Type yes" not in capsys.readouterr().err
+
+
+def test_nothing_real_moves_unasked_where_nobody_is_at_a_terminal(
+    here: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    assert main(["run", "short.yaml", "--port", "/dev/ttyNONE9"]) == 2
+    said = capsys.readouterr().err
+    assert "nobody is at a terminal to be asked, and a run moves what is connected: say --yes" in said
+    assert "no port" not in said
 
 
 # ---- what is printed -----------------------------------------------------------------------------------------------

@@ -21,7 +21,7 @@ from ramprig.record.folder import InputFile, RunDescription, RunFolder, slug_of
 from ramprig.record.manifest import Anchor, RunEnd
 from ramprig.record.reading import audit, read_events, read_manifest, read_samples
 from ramprig.record.recorder import BATCH_ROWS, Recorder
-from ramprig.record.space import MIB, SpacePolicy
+from ramprig.record.space import MB, SpacePolicy
 from ramprig.record.writer import Trouble
 from ramprig.session.blocks import Block, Layout
 from ramprig.session.events import GapFound, Tripped
@@ -401,7 +401,7 @@ _NOTICE: Any = "notice"  # the word as it is written
 
 
 def test_little_space_warns_and_less_asks_for_a_stop_while_the_log_goes_on(tmp_path: Path) -> None:
-    rig = begin(tmp_path, free=10 * MIB)
+    rig = begin(tmp_path, free=10 * MB)
     for block in blocks_of(200):
         rig.clock.advance(0.5)
         rig.recorder.on_event(GapFound(tick=1, host_s=0.0, count=1, period_ticks=1, reason="x"))

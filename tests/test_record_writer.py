@@ -17,7 +17,7 @@ from hypothesis import strategies as st
 
 from ramprig.errors import RecordError
 from ramprig.record.appendfile import AppendFile, Reserve, replace_file
-from ramprig.record.space import MIB, SpacePolicy, SpaceWatch, check_space, standing
+from ramprig.record.space import MB, SpacePolicy, SpaceWatch, check_space, standing
 from ramprig.record.writer import DiskWriter, Trouble, TroubleKind, trouble_of
 
 WAIT_S = 20.0  # no test waits this long unless it fails
@@ -326,13 +326,13 @@ def test_the_reserve_gives_its_space_back_once(tmp_path: Path) -> None:
 
 @pytest.mark.parametrize(
     ("free", "kinds"),
-    [(300 * MIB, []), (100 * MIB, ["space_warning"]), (10 * MIB, ["space_low"])],
+    [(300 * MB, []), (100 * MB, ["space_warning"]), (10 * MB, ["space_low"])],
 )
 def test_little_space_is_warned_of_and_less_asks_for_a_stop(tmp_path: Path, free: int, kinds: list[str]) -> None:
     told: list[Trouble] = []
     SpaceWatch(tmp_path, SpacePolicy(), tell=told.append, free=lambda _: free).look()
     assert [trouble.kind for trouble in told] == kinds
-    assert all(f"{free // MIB} MiB free" in trouble.text for trouble in told)
+    assert all(f"{free // MB} MB free" in trouble.text for trouble in told)
 
 
 def test_a_run_that_would_be_stopped_at_once_is_not_begun(tmp_path: Path) -> None:
@@ -340,12 +340,12 @@ def test_a_run_that_would_be_stopped_at_once_is_not_begun(tmp_path: Path) -> Non
 
     def free(path: Path) -> int:
         asked.append(path)
-        return 31 * MIB
+        return 31 * MB
 
-    with pytest.raises(RecordError, match="31 MiB are free, and 32 MiB are kept back: make room"):
+    with pytest.raises(RecordError, match="31 MB are free, and 32 MB are kept back: make room"):
         check_space(tmp_path / "runs" / "of" / "the night", free=free)
     assert asked == [tmp_path]  # the nearest folder that is there has the disk
-    check_space(tmp_path, free=lambda path: 32 * MIB)
+    check_space(tmp_path, free=lambda path: 32 * MB)
 
 
 def test_a_drive_that_is_not_there_is_not_looked_for_for_ever(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
@@ -360,4 +360,4 @@ def test_a_folder_that_is_gone_is_a_disk_error(tmp_path: Path) -> None:
 
 
 def test_the_warning_comes_at_twice_the_need() -> None:
-    assert SpacePolicy.for_run(500 * MIB, stop_bytes=MIB) == SpacePolicy(warn_bytes=1001 * MIB, stop_bytes=MIB)
+    assert SpacePolicy.for_run(500 * MB, stop_bytes=MB) == SpacePolicy(warn_bytes=1001 * MB, stop_bytes=MB)

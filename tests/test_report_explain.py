@@ -120,7 +120,7 @@ def test_a_full_disk_is_told(tmp_path: Path) -> None:
 )
 def test_what_stopped_a_run_is_told_apart_though_the_disk_is_filling_up(tmp_path: Path, reason: str, key: str) -> None:
     folder = passed_run(tmp_path)
-    trouble = [{"kind": "disk_low", "text": "the disk is filling up: 59 MiB free, 256 MiB are wanted"}]
+    trouble = [{"kind": "disk_low", "text": "the disk is filling up: 59 MB free, 256 MB are wanted"}]
     change_manifest(folder, verdict="stopped", stop_reason=reason, disk_troubles=trouble)
     if key == "unjudged":
         add_event(folder, kind="wear_unjudged", turn="cycle", number=5, text="x", trace="x")

@@ -9,9 +9,10 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from ..errors import RecordError
+from ..quantity import format_bytes
 from .writer import Trouble, TroubleKind
 
-MIB = 1024 * 1024
+MB = 1_000_000
 
 
 def disk_free(path: Path) -> int:
@@ -23,11 +24,11 @@ def disk_free(path: Path) -> int:
 class SpacePolicy:
     """Below `warn_bytes` free a warning, below `stop_bytes` a stop in order, while the log can still be written."""
 
-    warn_bytes: int = 256 * MIB
-    stop_bytes: int = 32 * MIB
+    warn_bytes: int = 256 * MB
+    stop_bytes: int = 32 * MB
 
     @classmethod
-    def for_run(cls, predicted_bytes: int, *, stop_bytes: int = 32 * MIB) -> SpacePolicy:
+    def for_run(cls, predicted_bytes: int, *, stop_bytes: int = 32 * MB) -> SpacePolicy:
         """Warns at twice what the run is predicted to need, above what is kept for the stop."""
         return cls(warn_bytes=2 * predicted_bytes + stop_bytes, stop_bytes=stop_bytes)
 
@@ -52,8 +53,8 @@ def check_space(path: Path, *, free: Callable[[Path], int] = disk_free) -> None:
         return  # whoever writes there finds out, and says so
     if found < kept_bytes:
         raise RecordError(
-            f"{path}: {found // MIB} MiB are free, and {kept_bytes // MIB} MiB are kept back: make room, or record "
-            "elsewhere with --runs"
+            f"{path}: {format_bytes(found)} are free, and {format_bytes(kept_bytes)} are kept back: make room, or "
+            "record elsewhere with --runs"
         )
 
 
@@ -81,10 +82,10 @@ class SpaceWatch:
             self._tell(Trouble(TroubleKind.DISK_ERROR, f"the run folder cannot be reached: {error.strerror or error}"))
             return
         if free < self._policy.stop_bytes:
-            text = (
-                f"the disk is nearly full: {free // MIB} MiB free, {self._policy.stop_bytes // MIB} MiB are kept back"
-            )
+            kept = format_bytes(self._policy.stop_bytes)
+            text = f"the disk is nearly full: {format_bytes(free)} free, {kept} are kept back"
             self._tell(Trouble(TroubleKind.SPACE_LOW, text))
         elif free < self._policy.warn_bytes:
-            text = f"the disk is filling up: {free // MIB} MiB free, {self._policy.warn_bytes // MIB} MiB are wanted"
+            wanted = format_bytes(self._policy.warn_bytes)
+            text = f"the disk is filling up: {format_bytes(free)} free, {wanted} are wanted"
             self._tell(Trouble(TroubleKind.SPACE_WARNING, text))
