@@ -138,7 +138,7 @@ def test_2_a_disk_that_is_full_from_the_start_is_told_before_anything_moves(
     here: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
 ) -> None:
     usage = type(shutil.disk_usage(here))
-    monkeypatch.setattr(shutil, "disk_usage", lambda path: usage(10**9, 10**9 - 2**20, 2**20))
+    monkeypatch.setattr(shutil, "disk_usage", lambda path: usage(10**9, 10**9 - 10**6, 10**6))
     assert main(["rehearse", "short.yaml"]) == 2
     last = capsys.readouterr().err.splitlines()[-1]
     assert last.startswith("runs: 1 MB are free, and 32 MB are kept back: make room")
