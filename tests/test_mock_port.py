@@ -10,7 +10,7 @@ from ramprig.errors import LinkLost, UsageError
 from ramprig.mock import MockDevice, MockPort, MockSetup, open_mock
 from ramprig.mock.cable import Cable
 from ramprig.mock.core import SimulatedDevice, open_core, why_not
-from ramprig.mock.port import DevicePort
+from ramprig.mock.port import URGENTS_MAX, DevicePort
 from ramprig.mock.url import name_of, parse_mock
 from ramprig.port.base import PatientPort
 from ramprig.port.clock import VirtualClock
@@ -253,6 +253,27 @@ def test_in_real_time_the_device_catches_up_with_the_clock() -> None:
     port.write(seal(b"01 beat"))
     assert 2000 <= port.device.ticks <= 2020
     assert port.read(0.1).startswith(b"01 ok 20")
+
+
+def test_of_many_urgent_lines_the_newest_are_kept() -> None:
+    port = MockPort(MockDevice(INSTANT))
+    for category in (*[1] * 1000, 0):
+        assert port.urgent(b"\n" + seal(f"ff stop {category}".encode()))
+    assert len(port._urgent) == URGENTS_MAX
+    port.read(0.0)
+    assert not port._urgent
+    assert read_all(port, 0.01).count(b"ff ok") == 1  # each takes back what is before it
+
+
+@pytest.mark.skipif(why_not() is not None, reason=why_not() or "")
+def test_bytes_that_find_no_room_on_the_wire_are_counted_as_overrun() -> None:
+    """More than the wire holds at once, and more than the board's receive ring."""
+    with open_core("core:?pace=virtual&baud=0") as port:
+        port.write(b"x" * 100_000)
+        read_all(port, 0.01)
+        port.write(b"\n" + seal(b"01 counters"))
+        (answer,) = [line for line in read_all(port, 0.1).splitlines() if line.startswith(b"01 ok")]
+    assert int(answer.split()[6]) == 100_000 - 1024
 
 
 def test_virtual_pace_needs_a_virtual_clock() -> None:

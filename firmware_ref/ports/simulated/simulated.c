@@ -325,6 +325,7 @@ void simulated_receive(struct simulated *s, const uint8_t *bytes, uint32_t lengt
     uint32_t fits = length < left ? length : left;
     memcpy(wire->to_board + wire->to_board_count, bytes, fits);
     wire->to_board_count += fits;
+    s->overruns += length - fits;
 }
 
 void simulated_purge(struct simulated *s)

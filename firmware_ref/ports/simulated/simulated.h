@@ -10,7 +10,7 @@
 #include "../../core/store.h"
 #include "../../plant/plant.h"
 
-#define SIMULATED_WIRE_BYTES     65536u /* most bytes on their way from the host; more are lost, as on a full cable */
+#define SIMULATED_WIRE_BYTES     65536u /* most bytes on their way from the host; what is beyond counts as overrun */
 #define SIMULATED_RECEIVE_BYTES  1024u  /* the board's receive ring; what does not fit counts as overrun */
 #define SIMULATED_TRANSMIT_BYTES 2048u  /* the board's transmit ring */
 #define SIMULATED_SENT_BYTES     8192u  /* most that waits for the host to take it */

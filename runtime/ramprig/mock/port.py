@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import threading
+from collections import deque
 from typing import Generic, Literal, TypeVar
 
 from ramprig.errors import LinkLost
@@ -18,6 +19,8 @@ D = TypeVar("D", bound=Device)
 
 WAIT_S = 0.001
 """How long a paced port sleeps between two looks at its device: one tick of most boards."""
+URGENTS_MAX = 32
+"""So many urgent lines wait for the port's thread; of more the newest, each of which takes back what is before it."""
 
 
 class DevicePort(ClosesItself, Generic[D]):
@@ -51,7 +54,7 @@ class DevicePort(ClosesItself, Generic[D]):
         self.clock: Clock = SystemClock() if clock is None else clock
         self._start_s = self.clock.now()
         self._start_ns = round(self._start_s * NS_PER_S)
-        self._urgent: list[bytes] = []
+        self._urgent: deque[bytes] = deque(maxlen=URGENTS_MAX)
         self._early = b""  # what came while the device caught up for a write
         self._closed = threading.Event()
         self._is_closed = False  # the same, looked at several times a turn
@@ -70,7 +73,7 @@ class DevicePort(ClosesItself, Generic[D]):
 
     def _send_urgent(self) -> None:
         while self._urgent:
-            self._cable.urgent(self._urgent.pop(0))
+            self._cable.urgent(self._urgent.popleft())
 
     def read(self, timeout_s: float) -> bytes:
         """As `Port.read`, on the port's own clock."""
