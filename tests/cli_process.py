@@ -120,6 +120,7 @@ class RunProcess:
         path.write_text(sequence or ENDLESS.format(bench=BENCH), "utf-8")
         self._said = (folder / "said.txt").open("w+", encoding="utf-8")
         self._command = [sys.executable, "-m", "ramprig", "run", str(path), "--port", port, "--runs", str(self.runs)]
+        self._command.append("--yes")
         self.process = self._begin()
 
     def _begin(self) -> subprocess.Popen[bytes]:

@@ -79,7 +79,8 @@ def test_ramprig_run_works_on_a_paced_board(tmp_path: Path) -> None:
     sequence.write_text(SHORT.format(bench=SCRIPTS / "vent_bench.yaml"))
     with PosixBoard("--board", "ramprig-mock", "--link", str(tmp_path / "board")) as board:
         assert board.port == str(tmp_path / "board")
-        command = [sys.executable, "-m", "ramprig", "run", str(sequence), "--port", board.port, "--runs", str(tmp_path)]
+        command = [sys.executable, "-m", "ramprig", "run", str(sequence), "--port", board.port, "--yes"]
+        command += ["--runs", str(tmp_path)]
         done = subprocess.run(command, capture_output=True, text=True, timeout=3 * PATIENCE_S, check=False)
         assert "passed: all steps carried out" in done.stdout, done.stdout + done.stderr
         assert done.returncode == 0

@@ -114,7 +114,7 @@ def test_a_command_line_that_cannot_be_is_refused_with_2(
 def test_nothing_real_moves_unasked(
     bench: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch, is_there: bool, typed: str
 ) -> None:
-    monkeypatch.setattr("ramprig.cli.measure.on_terminal", lambda: is_there)
+    monkeypatch.setattr("ramprig.cli.asking.on_terminal", lambda: is_there)
     monkeypatch.setattr("sys.stdin", io.StringIO(typed))
     code = run(bench, "coastdown", "--port", "/dev/ttyNONE9")
     said = capsys.readouterr().err

@@ -6,8 +6,8 @@ import argparse
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from ramprig.cli.asking import answered
-from ramprig.cli.running import RUNS, on_terminal
+from ramprig.cli.asking import answered, on_terminal
+from ramprig.cli.running import RUNS
 from ramprig.cli.say import say_surely, tell
 from ramprig.errors import RamprigError, UsageError
 
@@ -65,6 +65,9 @@ def carry_out(args: argparse.Namespace) -> int:
         return list_checks()
     if not 0.0 < args.duty <= 100.0:
         raise UsageError(f"--duty {args.duty:g}: more than 0 and at most 100")
+    for option, number in (("--axis", args.axis), ("--servo", args.servo)):
+        if number < 0:
+            raise UsageError(f"{option} {number}: axes and servos are counted from 0")
     register()
     with open_port(args.port, baud=args.baud, dtr=args.dtr) as port:
         talk = Talk(port)
@@ -88,19 +91,11 @@ def may_energise(trial: Trial, args: argparse.Namespace, declined: list[bool]) -
     from ramprig.cautions import cautions_lines
 
     who = trial.identity
-    if args.axis >= who.axes:
+    if args.axis >= max(who.axes, 1):
         raise UsageError(f"--axis {args.axis}: the board has {who.axes} axes, from 0")
     if args.energise == "no":
         return False
-    most = min(round(args.duty * 100), trial.limits["ceiling_duty", args.axis], who.max_duty)
-    servo = f"servo {args.servo} some degrees, " if args.servo < who.servos else ""
-    for line in [
-        *cautions_lines(),
-        "",
-        f"board     {who.name} at {trial.talk.port.name}",
-        f"moves     axis {args.axis} both ways for about a minute at up to {most / 100:g} % duty, {servo}with stops",
-        "          at once and trips that are meant; the motor must turn freely",
-    ]:
+    for line in [*cautions_lines(), "", f"board     {who.name} at {trial.talk.port.name}", *what_moves(trial, args)]:
         tell(line)
     if args.energise == "yes":
         return True
@@ -112,6 +107,20 @@ def may_energise(trial: Trial, args: argparse.Namespace, declined: list[bool]) -
         return True
     declined.append(True)
     return False
+
+
+def what_moves(trial: Trial, args: argparse.Namespace) -> list[str]:
+    """What will move, by what the board has."""
+    who = trial.identity
+    servo = f"servo {args.servo} some degrees" if args.servo < who.servos else ""
+    if not who.axes:
+        return [f"moves     {servo or 'nothing'}; the board has no axis: no check with a motor is made"]
+    most = min(round(args.duty * 100), trial.limits["ceiling_duty", args.axis], who.max_duty)
+    servo += ", " if servo else ""
+    return [
+        f"moves     axis {args.axis} both ways for about a minute at up to {most / 100:g} % duty, {servo}with stops",
+        "          at once and trips that are meant; the motor must turn freely",
+    ]
 
 
 def restarter(port: Port) -> Callable[[], bool]:

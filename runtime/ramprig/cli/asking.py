@@ -7,9 +7,21 @@ import threading
 from collections.abc import Callable
 
 from ramprig.cli.say import tell
+from ramprig.errors import UsageError
 
 LOOK_S = 0.1
 """Time goes on by so much between two looks for an answer."""
+
+
+def need_somebody(*, moves: str) -> None:
+    """Raises UsageError where nobody is at a terminal to be asked; `moves` says what would."""
+    if not on_terminal():
+        raise UsageError(f"nobody is at a terminal to be asked, and {moves}: say --yes where somebody watches over it")
+
+
+def on_terminal() -> bool:
+    """Whether somebody can be asked."""
+    return sys.stdin is not None and sys.stdin.isatty() and sys.stderr.isatty()
 
 
 def confirmed(question: str) -> bool:

@@ -9,9 +9,9 @@ from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from ramprig.cli.asking import answered, confirmed
+from ramprig.cli.asking import answered, confirmed, need_somebody, on_terminal
 from ramprig.cli.progress import Progress
-from ramprig.cli.running import RUNS, mock_url, on_terminal
+from ramprig.cli.running import RUNS, mock_url
 from ramprig.cli.say import say_surely, tell
 from ramprig.errors import RamprigError, StoppedByUser, UsageError
 
@@ -216,8 +216,7 @@ def ask(procedure: Procedure, bench: Bench, url: str) -> None:
     moves = procedure.moves(bench)
     if not moves:
         return
-    if not on_terminal():
-        raise UsageError(f"nobody is at a terminal to be asked, and {moves}: say --yes where somebody watches over it")
+    need_somebody(moves=moves)
     for line in [*cautions_lines(), "", f"port      {url}", moves]:
         tell(line)
     if not confirmed("Type yes and ENTER to arm and measure; anything else leaves everything off."):

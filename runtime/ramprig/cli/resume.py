@@ -9,9 +9,9 @@ from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from ramprig.cli.asking import confirmed
+from ramprig.cli.asking import confirmed, need_somebody
 from ramprig.cli.night import carry_out_unattended, seconds_of
-from ramprig.cli.running import SIMULATED, Way, carry_out_wish, mock_url, on_terminal
+from ramprig.cli.running import SIMULATED, Way, carry_out_wish, mock_url
 from ramprig.cli.say import tell
 from ramprig.errors import StoppedByUser
 
@@ -24,7 +24,9 @@ interruption fell into counts as not done, and is told apart. New samples go int
 ones; run.json tells of each interruption.
 
 What was begun unattended goes on unattended: the rules are judged again, there is a new sheet for the door, and the
-computer is kept awake. --attended leaves that out, for a run that somebody stands beside from now on."""
+computer is kept awake. --attended leaves that out, for a run that somebody stands beside from now on.
+
+It asks before it arms; without a terminal it wants --yes."""
 
 
 def declare(parser: argparse.ArgumentParser) -> None:
@@ -58,7 +60,7 @@ def carry_out(args: argparse.Namespace) -> int:
     way = Way(url=url, virtual=False, runs=args.run.parent)
 
     def ask_first() -> None:
-        if not simulated and not args.yes and on_terminal():
+        if not simulated and not args.yes:
             ask()
 
     unattended = args.unattended or (was_unattended(broken.manifest)[0] and not args.attended)
@@ -123,9 +125,10 @@ def what_is_known(broken: Broken) -> Iterator[str]:
 
 
 def ask() -> None:
-    """Wait for the word `yes`. Raises StoppedByUser for any other."""
+    """Wait for the word `yes`. Raises StoppedByUser for any other, UsageError where nobody is at a terminal."""
     from ramprig.cautions import cautions_lines
 
+    need_somebody(moves="the run moves what is connected")
     for line in cautions_lines():
         tell(line)
     if not confirmed("Type yes and ENTER to arm and go on; anything else leaves everything off."):

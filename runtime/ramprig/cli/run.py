@@ -7,16 +7,16 @@ import time
 from dataclasses import replace
 from typing import TYPE_CHECKING
 
-from ramprig.cli.asking import confirmed
+from ramprig.cli.asking import confirmed, need_somebody
 from ramprig.cli.night import carry_out_unattended, seconds_of
-from ramprig.cli.running import SIMULATED, Way, add_run_arguments, carry_out_run, mock_url, on_terminal
+from ramprig.cli.running import SIMULATED, Way, add_run_arguments, carry_out_run, mock_url
 from ramprig.cli.say import tell
 from ramprig.errors import StoppedByUser
 
 if TYPE_CHECKING:
     from ramprig.cli.files import Pair
 
-EPILOG = """On a terminal it shows what will move and asks before it arms; --yes does not ask. SIGINT (Ctrl-C), SIGQUIT
+EPILOG = """It shows what will move and asks before it arms; without a terminal it wants --yes. SIGINT (Ctrl-C), SIGQUIT
 (Ctrl-\\), SIGTERM and SIGHUP stop the motors in order, a second one within a second cuts them off. Begun with nohup,
 SIGHUP is ignored, and the run outlasts its terminal. Suspended (Ctrl-Z) or killed, it is the board that stops, by its
 lease.
@@ -51,7 +51,7 @@ def carry_out(args: argparse.Namespace) -> int:
     way = Way(url=url, virtual=False, runs=args.runs, title=args.title)
 
     def ask_first() -> None:
-        if not is_simulated and not args.yes and on_terminal():
+        if not is_simulated and not args.yes:
             ask(pair, url)
 
     if args.unattended:
@@ -73,9 +73,11 @@ def carry_out(args: argparse.Namespace) -> int:
 
 
 def ask(pair: Pair, url: str) -> None:
-    """Show the cautions and what will move, and wait for the word `yes`. Raises StoppedByUser for any other."""
+    """Show the cautions and what will move, and wait for the word `yes`. Raises StoppedByUser for any other, UsageError
+    where nobody is at a terminal to be asked."""
     from ramprig.cautions import cautions_lines
 
+    need_somebody(moves="a run moves what is connected")
     for line in [*cautions_lines(), "", *what_moves(pair, url)]:
         tell(line)
     if not confirmed("Type yes and ENTER to arm and run; anything else leaves everything off."):

@@ -243,8 +243,3 @@ def tell_end(outcome: Outcome, folder: Path | None, *, rehearsal: bool) -> None:
     if not outcome.stop_confirmed:
         say_surely(NOT_OFF)
     say_surely(str(outcome))
-
-
-def on_terminal() -> bool:
-    """Whether somebody can be asked."""
-    return sys.stdin is not None and sys.stdin.isatty() and sys.stderr.isatty()
