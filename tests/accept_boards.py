@@ -54,6 +54,12 @@ def accepted(
     return accept(port, wish, tell=lambda text: None)
 
 
+def no_axes() -> MockSetup:
+    """A board of servos alone."""
+    setup = MockSetup()
+    return MockSetup(board=Board(axes=0), plant=replace(setup.plant, axes=()))
+
+
 def two_axes() -> MockSetup:
     """Two motors and two servos, and a tick of another length."""
     setup = MockSetup()

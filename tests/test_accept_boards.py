@@ -6,12 +6,12 @@ import os
 
 import pytest
 
-from accept_boards import accepted, core_port, mock_port, restarter, two_axes
+from accept_boards import accepted, core_port, mock_port, no_axes, restarter, two_axes
 from posix_board import PosixBoard
 from ramprig.accept.examine import Verdict, accept
 from ramprig.accept.report import verdict_sentence
 from ramprig.accept.talk import Talk
-from ramprig.accept.trial import Wish
+from ramprig.accept.trial import Power, Wish
 from ramprig.mock import MockSetup
 from ramprig.mock.core import why_not
 from ramprig.mock.setup import TimedFault
@@ -64,6 +64,15 @@ def test_a_board_of_two_axes_and_another_tick_is_accepted() -> None:
     verdict = accepted(mock_port(two_axes()))
     assert verdict.failed == {}
     assert untested(verdict) == ["restart: it was not asked for: --restart"]
+
+
+def test_a_board_without_axes_is_accepted_and_no_check_with_a_motor_is_called_passed() -> None:
+    verdict = accepted(mock_port(no_axes()))
+    assert verdict.failed == {}
+    by_motor = {result.check.name for result in verdict.results if result.check.power is Power.MOTOR}
+    without = {result.check.name for result in verdict.results if "has no axis" in result.untested}
+    assert without == by_motor | {"late-orders", "order-queue", "overload"}
+    assert verdict_sentence(verdict).startswith("ACCEPTED: ramprig-mock MOCK-0001, as a board without motors; ")
 
 
 def test_without_power_nothing_is_armed_and_nothing_moves() -> None:

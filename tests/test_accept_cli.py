@@ -2,15 +2,20 @@
 
 from __future__ import annotations
 
+import argparse
 import io
 import json
 from pathlib import Path
 
 import pytest
 
-from ramprig.accept.examine import all_checks
+from accept_boards import mock_port, no_axes
+from ramprig.accept.examine import all_checks, open_board
+from ramprig.accept.talk import Talk
+from ramprig.accept.trial import Trial, Wish
 from ramprig.cli import accept as command
 from ramprig.cli.main import main
+from ramprig.errors import UsageError
 
 MOCK = "mock:?pace=virtual"
 
@@ -58,6 +63,23 @@ def test_a_clause_that_fails_is_named_and_exits_with_1(tmp_path: Path, capsys: p
     assert "WHO-1      time: " in out
     assert out.splitlines()[-1] == "NOT ACCEPTED: ramprig-mock MOCK-0001: clauses WHO-1 failed."
     assert 'class="failed">WHO-1' in (report_in(tmp_path) / "accept.html").read_text("utf-8")
+
+
+def test_what_moves_is_told_by_what_the_board_has(capsys: pytest.CaptureFixture[str]) -> None:
+    trial = Trial(Talk(mock_port(no_axes())), Wish(energise=lambda trial: True))
+    open_board(trial)
+    words = argparse.Namespace(axis=0, servo=0, duty=30.0, energise="yes")
+    assert command.may_energise(trial, words, [])
+    said = "moves     servo 0 some degrees; the board has no axis: no check with a motor is made"
+    assert capsys.readouterr().err.splitlines()[-1] == said
+    with pytest.raises(UsageError, match="--axis 1: the board has 0 axes"):
+        command.may_energise(trial, argparse.Namespace(**vars(words) | {"axis": 1}), [])
+
+
+@pytest.mark.parametrize("option", ["--axis", "--servo"])
+def test_axes_and_servos_are_counted_from_0(option: str, tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    assert main(["accept", MOCK, option, "-1", "--runs", str(tmp_path)]) == 2
+    assert f"{option} -1: axes and servos are counted from 0" in capsys.readouterr().err
 
 
 @pytest.mark.parametrize(

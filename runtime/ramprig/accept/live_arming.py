@@ -119,13 +119,12 @@ def latched(trial: Trial, since: int, trip: Trip, *, clears: bool = True) -> Non
 @check("ORDER-2 TRIP-9 TRIP-1 S5 WHY-1 ORDER-8", Power.ARMED)
 def late_orders(trial: Trial) -> None:
     """An order whose start has passed is refused, and trips late_order in the same tick."""
-    if not trial.identity.axes:
-        return
+    axis = trial.axis
     for back in (40, 0):
         trial.arm()
         since = trial.talk.heard_count
         start = trial.tick_of(trial.talk.ask("beat")) - back
-        answer = trial.refused(f"ramp {trial.wish.axis} 0 0 {start % WRAP}", "late", "ORDER-2")
+        answer = trial.refused(f"ramp {axis} 0 0 {start % WRAP}", "late", "ORDER-2")
         tick, notice = trial.tripped(since, Trip.LATE_ORDER, "ORDER-2 TRIP-9")
         trial.require(tick == trial.tick_of(answer), "ORDER-2", "the trip is not of the order's tick")
         wanted = str(tick - start)
@@ -136,9 +135,7 @@ def late_orders(trial: Trial) -> None:
 @check("ORDER-1 ORDER-2 ORDER-3 ORDER-6 ORDER-7 ORDER-8 STOP-1", Power.ARMED)
 def order_queue(trial: Trial) -> None:
     """The queue takes as many orders as `who` tells and no more, and a stop empties it."""
-    if not trial.identity.axes:
-        return
-    talk, size, axis = trial.talk, trial.identity.queue, trial.wish.axis
+    talk, size, axis = trial.talk, trial.identity.queue, trial.axis
     trial.arm()
     now = trial.tick_of(talk.ask("beat"))
     trial.refused(f"ramp {axis} 0 0 {(now + HORIZON_TICKS + 100_000) % WRAP}", "far", "ORDER-2")

@@ -44,7 +44,7 @@ def _first_away(trial: Trial, start: int, last: int) -> int:
     """The first tick from `start` on with a duty; the check ends where there is none."""
     for tick in range(start, last + 1):
         row = trial.row(tick)
-        if row is not None and row.duty[trial.wish.axis]:
+        if row is not None and row.duty[trial.axis]:
             return tick
     trial.fail("ORDER-4", "the bridge did not leave zero")
     raise Broken
@@ -53,7 +53,7 @@ def _first_away(trial: Trial, start: int, last: int) -> int:
 @check("S3 CHAIN-3 CHAIN-4", Power.MOTOR)
 def first_motion(trial: Trial) -> None:
     """After the board's start the bridge does not leave zero before it has been there for `dwell_ticks`."""
-    talk, axis = trial.talk, trial.wish.axis
+    talk, axis = trial.talk, trial.axis
     duty = min(trial.duty, 1000)
     if not trial.saw_start:
         raise Untested("the board's start was not seen: restart it with --restart, or open the port before its power")
@@ -81,7 +81,7 @@ def first_motion(trial: Trial) -> None:
 @check("S2 CHAIN-2 ORDER-3 ORDER-4 ORDER-7 LOG-3 STATE-1", Power.MOTOR)
 def ramps_and_slew(trial: Trial) -> None:
     """A ramp moves the duty tick by tick as the clauses say, and a jump is held to the slew limits both ways."""
-    talk, axis, duty = trial.talk, trial.wish.axis, trial.duty
+    talk, axis, duty = trial.talk, trial.axis, trial.duty
     up, down = trial.limits["slew_up_duty", axis], trial.limits["slew_down_duty", axis]
     trial.arm()
     since = talk.heard_count
@@ -119,7 +119,7 @@ def _same(trial: Trial, first: int, wanted: list[int], clauses: str, what: str) 
 def reversal_waits_for_standstill(trial: Trial) -> None:
     """A reversal waits until the shaft has stood still for `still_ticks`, however long the dwell is over."""
     trial.needs(Cap.ENCODER)
-    axis, duty = trial.wish.axis, trial.duty
+    axis, duty = trial.axis, trial.duty
     if trial.limits["sense", axis] == 0:
         raise Untested(f"axis {axis} has no encoder: its limit sense is 0")
     dwell = trial.limits["dwell_ticks", axis]
@@ -131,14 +131,14 @@ def reversal_waits_for_standstill(trial: Trial) -> None:
 @check("S3 CHAIN-2 CHAIN-3 CHAIN-4 S2", Power.MOTOR)
 def reversal_waits_for_dwell(trial: Trial) -> None:
     """A reversal waits at zero for `dwell_ticks`, which begin at zero and not with the fall."""
-    axis, duty = trial.wish.axis, trial.duty
+    axis, duty = trial.axis, trial.duty
     trial.set_limit("slew_down_duty", axis, max(1, duty // FALL_TICKS))
     _reverse(trial, -duty)
 
 
 def _reverse(trial: Trial, duty: int) -> None:
     """Run to a duty, then order a part of it the other way, and see what the bridge does."""
-    talk, axis = trial.talk, trial.wish.axis
+    talk, axis = trial.talk, trial.axis
     trial.arm()
     run_up(trial, duty)
     since = talk.heard_count
@@ -167,7 +167,7 @@ def _reverse(trial: Trial, duty: int) -> None:
 @check("S1 CHAIN-1 LIMIT-3 LIMIT-4 ORDER-4", Power.MOTOR)
 def ceiling(trial: Trial) -> None:
     """A ceiling refuses what is above it, and cuts a running duty in the next tick when it is tightened, both ways."""
-    talk, axis, duty = trial.talk, trial.wish.axis, trial.duty
+    talk, axis, duty = trial.talk, trial.axis, trial.duty
     for sign in (1, -1):
         trial.set_limit("ceiling_duty", axis, duty)
         trial.arm()

@@ -19,7 +19,7 @@ def _told(trial: Trial, since: int) -> list[tuple[int, str]]:
 @check("STOP-1 STOP-3 STOP-4 DISARM-1 ORDER-8 NOTE-1 LINE-7 RUN-3", Power.MOTOR)
 def stop_at_once(trial: Trial) -> None:
     """`stop 0`, a checked one and a bare one, switches a running bridge off in its tick."""
-    talk, axis = trial.talk, trial.wish.axis
+    talk, axis = trial.talk, trial.axis
     for bare in (False, True):
         trial.arm()
         run_up(trial, trial.duty)
@@ -46,7 +46,7 @@ def stop_at_once(trial: Trial) -> None:
 @check("STOP-2 STOP-3 STOP-5 TAG-5 ORDER-8 S2 BAD-5", Power.MOTOR)
 def stop_by_slope(trial: Trial) -> None:
     """`stop 1` under tag ff falls by `slew_down_duty` a tick and ends with `off`; orders are refused meanwhile."""
-    talk, axis, duty = trial.talk, trial.wish.axis, trial.duty
+    talk, axis, duty = trial.talk, trial.axis, trial.duty
     bound = trial.limits["stop_ticks", 0]
     down = max(trial.limits["slew_down_duty", axis], -(-duty // max(1, bound - 1)))
     trial.set_limit("slew_down_duty", axis, down)
@@ -71,7 +71,7 @@ def stop_by_slope(trial: Trial) -> None:
 @check("STOP-5 S4", Power.MOTOR)
 def stop_is_cut_short(trial: Trial) -> None:
     """A category 1 stop that would fall for longer than `stop_ticks` is cut when they are over."""
-    talk, axis, duty = trial.talk, trial.wish.axis, trial.duty
+    talk, axis, duty = trial.talk, trial.axis, trial.duty
     stop_ticks = min(SHORT_STOP_TICKS, trial.limits["stop_ticks", 0])
     trial.set_limit("slew_down_duty", axis, max(1, duty // (10 * stop_ticks)))
     trial.set_limit("stop_ticks", 0, stop_ticks)
@@ -94,7 +94,7 @@ def stop_is_cut_short(trial: Trial) -> None:
 @check("LEASE-2 S4 S5 TRIP-1 TRIP-9 WHY-1 CLEAR-1", Power.MOTOR)
 def lost_link(trial: Trial) -> None:
     """When the host falls silent the board trips when the lease is over and brings the bridge to zero by itself."""
-    talk, axis = trial.talk, trial.wish.axis
+    talk, axis = trial.talk, trial.axis
     lease_ms = min(LEASE_MS, trial.limits["lease_ms", 0])
     lease = -(-lease_ms * 1000 // trial.identity.tick_us)
     trial.arm(lease_ms)

@@ -43,7 +43,7 @@ def _off_in_tick(trial: Trial, tick: int, since: int) -> None:
 @check("TRIP-1 TRIP-3 CLEAR-1 WHY-1 S5 LIMIT-4", Power.MOTOR, current=True)
 def overcurrent(trial: Trial) -> None:
     """More than `trip_ma` for `trip_ticks` in a row trips in that tick and has the bridge off in it."""
-    talk, axis = trial.talk, trial.wish.axis
+    talk, axis = trial.talk, trial.axis
     offset, trip_ma = trial.limits["offset_ma", axis], trial.limits["trip_ma", axis]
     shift = min(SHIFT_MA, offset - LIMITS["offset_ma"].lowest, LIMITS["trip_ma"].highest - trip_ma)
     trial.set_limit("trip_ma", axis, trip_ma + shift)
@@ -112,7 +112,7 @@ def supply_trips(trial: Trial) -> None:
 @check("TRIP-8 CLEAR-1 S5", Power.ARMED, current=True)
 def overload(trial: Trial) -> None:
     """The thermal model trips in the step in which its heat reaches the limit, and lets go at 7/8 of it."""
-    talk, axis = trial.talk, trial.wish.axis
+    talk, axis = trial.talk, trial.axis
     trial.needs(Cap.CURRENT)
     offset, trip_ma = trial.limits["offset_ma", axis], trial.limits["trip_ma", axis]
     shift = min(HEAT_SHIFT_MA, offset - LIMITS["offset_ma"].lowest)
@@ -163,15 +163,15 @@ def _overload_tick(rows: list[Row], axis: int, gain: int, start_ma: int) -> int 
 
 def _needs_encoder(trial: Trial) -> None:
     trial.needs(Cap.ENCODER)
-    if trial.limits["sense", trial.wish.axis] == 0:
-        raise Untested(f"axis {trial.wish.axis} has no encoder: its limit sense is 0")
+    if trial.limits["sense", trial.axis] == 0:
+        raise Untested(f"axis {trial.axis} has no encoder: its limit sense is 0")
 
 
 @check("TRIP-1 TRIP-5 S5 CLEAR-1", Power.MOTOR)
 def stall(trial: Trial) -> None:
     """A duty without enough counts for `stall_ticks` trips: more are asked for than a healthy motor makes."""
     _needs_encoder(trial)
-    talk, axis, duty = trial.talk, trial.wish.axis, trial.duty
+    talk, axis, duty = trial.talk, trial.axis, trial.duty
     before = trial.limits["stall_duty", axis]
     trial.set_limit("stall_duty", axis, min(before or duty, duty))
     trial.arm()
@@ -199,7 +199,7 @@ def stall(trial: Trial) -> None:
 def wrong_way(trial: Trial) -> None:
     """Counts against the duty trip after `wrong_counts`: here `sense` is turned round for it."""
     _needs_encoder(trial)
-    talk, axis, duty = trial.talk, trial.wish.axis, trial.duty
+    talk, axis, duty = trial.talk, trial.axis, trial.duty
     sense = -trial.limits["sense", axis]
     bound = min(WRONG_COUNTS, trial.limits["wrong_counts", axis])
     trial.set_limit("sense", axis, sense)
@@ -241,7 +241,7 @@ def _wrong_tick(rows: list[Row], axis: int, sense: int, stall_duty: int, bound: 
 def overspeed(trial: Trial) -> None:
     """More counts in a window than `speed_counts` trip at a tick divisible by the window's length."""
     _needs_encoder(trial)
-    talk, axis = trial.talk, trial.wish.axis
+    talk, axis = trial.talk, trial.axis
     trial.arm()
     run_up(trial, trial.duty)
     trial.come()
@@ -268,7 +268,7 @@ def overspeed(trial: Trial) -> None:
 @check("TRAIL-1 TRAIL-2 ARM-3", Power.MOTOR)
 def trail(trial: Trial) -> None:
     """The trail has the ticks around a trip, to a quarter of its length behind it, as the samples have them."""
-    talk, axis, size = trial.talk, trial.wish.axis, trial.identity.trail
+    talk, axis, size = trial.talk, trial.axis, trial.identity.trail
     trial.arm()
     trial.refused(f"trail {axis} 0", "gone", "TRAIL-2")
     run_up(trial, trial.duty)

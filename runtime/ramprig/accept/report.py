@@ -56,7 +56,8 @@ def verdict_sentence(verdict: Verdict) -> str:
         return f"{name} passed what needs no power{beside}. It is not accepted for a motor."
     if verdict.only:
         return f"{name} passed the checks with '{verdict.only}' in their name{beside}. All are needed to be accepted."
-    return f"ACCEPTED: {name}{beside}."
+    motors = "" if verdict.identity is None or verdict.identity.axes else ", as a board without motors"
+    return f"ACCEPTED: {name}{motors}{beside}."
 
 
 def to_json(verdict: Verdict, *, port: str, when: datetime) -> dict[str, Any]:

@@ -260,7 +260,7 @@ class Trial:
     def ramp(self, duty: int, ticks: int = 0, *, start: int | None = None, clauses: str = "ORDER-1") -> int:
         """Order a ramp of the axis under test; returns the unwrapped start tick."""
         start = self.start_tick() if start is None else start
-        self.ok(f"ramp {self.wish.axis} {duty} {ticks} {start % (1 << 32)}", clauses)
+        self.ok(f"ramp {self.axis} {duty} {ticks} {start % (1 << 32)}", clauses)
         return start
 
     # ---- samples ---------------------------------------------------------------------------------------------------
@@ -283,7 +283,7 @@ class Trial:
 
     def duties(self, first: int, last: int) -> list[int]:
         """The duty of the axis under test in these ticks."""
-        return [row.duty[self.wish.axis] for row in self.rows(first, last)]
+        return [row.duty[self.axis] for row in self.rows(first, last)]
 
     def tripped(self, since: int, trip: Trip, clauses: str, *, timeout_s: float = 2.0) -> tuple[int, Notice]:
         """The notice of this trip with its tick; the check ends where it does not come, or another one does."""
@@ -301,11 +301,18 @@ class Trial:
     # ---- what a check needs ----------------------------------------------------------------------------------------
 
     @property
+    def axis(self) -> int:
+        """The axis whose motor runs; Untested where the board has none."""
+        if not self.identity.axes:
+            raise Untested("the board has no axis, so that no motor can run")
+        return self.wish.axis
+
+    @property
     def duty(self) -> int:
         """The duty that the axis under test is driven with; Untested where its limits leave none."""
-        duty = min(self.wish.duty, self.original["ceiling_duty", self.wish.axis], self.identity.max_duty)
+        duty = min(self.wish.duty, self.original["ceiling_duty", self.axis], self.identity.max_duty)
         if duty < DUTY_LEAST:
-            raise Untested(f"the ceiling of axis {self.wish.axis} leaves a duty of {duty}, with which nothing turns")
+            raise Untested(f"the ceiling of axis {self.axis} leaves a duty of {duty}, with which nothing turns")
         return duty
 
     def needs(self, cap: Cap) -> None:
