@@ -14,13 +14,14 @@ from pathlib import Path
 import pytest
 
 from ramprig import errors
-from ramprig.cautions import CAUTIONS, HEADING
+from ramprig.cautions import CAUTIONS, HEADING, cautions_lines
 from ramprig.cli import main
 from ramprig.cli import main as main_function
+from ramprig.cli.asking import cautions
 from ramprig.cli.files import values_of
 from ramprig.cli.main import COMMANDS, EXIT_BUG, MOVING, parser_for
 from ramprig.cli.progress import LINE_EVERY_S, PIECES_MAX, REWRITE_EVERY_S, Progress
-from ramprig.cli.say import width_of
+from ramprig.cli.say import tell, width_of
 
 HEAVY = ("numpy", "yaml", "serial", "prompt_toolkit", "ramprig.session", "ramprig.mock", "ramprig.bench")
 
@@ -266,3 +267,15 @@ def test_a_filled_text_is_as_wide_as_the_terminal_at_most(is_terminal: bool, mos
             return is_terminal
 
     assert width_of(Stream(), most=most) == width  # a terminal that does not tell its size is taken for 80 columns
+
+
+def test_cautions_are_filled_for_the_terminal_and_not_broken_twice(monkeypatch: pytest.MonkeyPatch) -> None:
+    class Stream(io.StringIO):
+        def isatty(self) -> bool:
+            return True
+
+    out = Stream()
+    monkeypatch.setattr("sys.stderr", out)
+    for line in cautions():
+        tell(line)
+    assert out.getvalue().splitlines() == cautions_lines(80)

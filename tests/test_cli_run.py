@@ -323,6 +323,16 @@ def test_limits_to_wear_are_told_first_and_end_the_run_as_a_failed_one(
     assert main(["resume", str(only_run())]) == 2
 
 
+def test_limits_to_wear_are_told_once_where_the_user_is_asked(
+    here: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    Path("wearing.yaml").write_text(WEARING, "utf-8")
+    monkeypatch.setattr("ramprig.cli.asking.on_terminal", lambda: True)
+    monkeypatch.setattr(sys, "stdin", io.StringIO("yes\n"))
+    assert main(["run", "wearing.yaml", "--port", "/dev/ttyNONE9"]) == 2
+    assert capsys.readouterr().err.count("peak current: watch at most 10 mA") == 1
+
+
 @pytest.mark.parametrize(
     ("url", "bench"),
     [("mock:", "here/bench.yaml"), ("mock:?seed=3", "here/bench.yaml"), ("mock:?bench=other.yaml", "other.yaml")],

@@ -12,7 +12,7 @@ from ramprig.mock.cable import Cable
 from ramprig.mock.core import SimulatedDevice, open_core, why_not
 from ramprig.mock.port import URGENTS_MAX, DevicePort
 from ramprig.mock.url import name_of, parse_mock
-from ramprig.port.base import PatientPort
+from ramprig.port.base import PatientPort, Port
 from ramprig.port.clock import VirtualClock
 from ramprig.port.open import open_port
 from ramprig_link.check import seal
@@ -25,7 +25,7 @@ def virtual(*faults: str, baud: int = 115200, seed: int = 0) -> MockPort:
     return MockPort(device, seed=seed, clock=VirtualClock(start_s=50.0))
 
 
-def read_all(port: MockPort, seconds: float) -> bytes:
+def read_all(port: Port, seconds: float) -> bytes:
     end = port.clock.now() + seconds
     data = b""
     while (left := end - port.clock.now()) > 1e-9:

@@ -6,7 +6,7 @@ import argparse
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from ramprig.cli.asking import answered, on_terminal
+from ramprig.cli.asking import answered, cautions, on_terminal
 from ramprig.cli.running import RUNS
 from ramprig.cli.say import say_surely, tell
 from ramprig.errors import RamprigError, UsageError
@@ -88,14 +88,12 @@ def carry_out(args: argparse.Namespace) -> int:
 
 def may_energise(trial: Trial, args: argparse.Namespace, declined: list[bool]) -> bool:
     """Say what will move, and whether it may: by --energise, or by the word typed; nobody there means no."""
-    from ramprig.cautions import cautions_lines
-
     who = trial.identity
     if args.axis >= max(who.axes, 1):
         raise UsageError(f"--axis {args.axis}: the board has {who.axes} axes, from 0")
     if args.energise == "no":
         return False
-    for line in [*cautions_lines(), "", f"board     {who.name} at {trial.talk.port.name}", *what_moves(trial, args)]:
+    for line in [*cautions(), "", f"board     {who.name} at {trial.talk.port.name}", *what_moves(trial, args)]:
         tell(line)
     if args.energise == "yes":
         return True

@@ -6,11 +6,14 @@ import sys
 import threading
 from collections.abc import Callable
 
-from ramprig.cli.say import tell
+from ramprig.cautions import cautions_lines
+from ramprig.cli.say import tell, width_of
 from ramprig.errors import UsageError
 
 LOOK_S = 0.1
 """Time goes on by so much between two looks for an answer."""
+CAUTIONS_WIDTH = 100
+"""Columns beyond which the cautions are hard to read."""
 
 
 def need_somebody(*, moves: str) -> None:
@@ -22,6 +25,11 @@ def need_somebody(*, moves: str) -> None:
 def on_terminal() -> bool:
     """Whether somebody can be asked."""
     return sys.stdin is not None and sys.stdin.isatty() and sys.stderr.isatty()
+
+
+def cautions() -> list[str]:
+    """The cautions, filled for the terminal."""
+    return cautions_lines(width_of(sys.stderr, most=CAUTIONS_WIDTH))
 
 
 def confirmed(question: str) -> bool:

@@ -9,7 +9,7 @@ from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from ramprig.cli.asking import answered, confirmed, need_somebody, on_terminal
+from ramprig.cli.asking import answered, cautions, confirmed, need_somebody, on_terminal
 from ramprig.cli.progress import Progress
 from ramprig.cli.running import RUNS, mock_url
 from ramprig.cli.say import say_surely, tell
@@ -211,13 +211,11 @@ def _url(args: argparse.Namespace, bench: Bench) -> str:
 def ask(procedure: Procedure, bench: Bench, url: str) -> None:
     """Show the cautions and what will move, and wait for the word `yes`. Raises StoppedByUser for any other, UsageError
     where nobody is at a terminal to be asked; does nothing where nothing moves."""
-    from ramprig.cautions import cautions_lines
-
     moves = procedure.moves(bench)
     if not moves:
         return
     need_somebody(moves=moves)
-    for line in [*cautions_lines(), "", f"port      {url}", moves]:
+    for line in [*cautions(), "", f"port      {url}", moves]:
         tell(line)
     if not confirmed("Type yes and ENTER to arm and measure; anything else leaves everything off."):
         raise StoppedByUser("Not measured: it was not confirmed. Nothing has moved.")

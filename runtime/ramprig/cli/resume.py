@@ -9,7 +9,7 @@ from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from ramprig.cli.asking import confirmed, need_somebody
+from ramprig.cli.asking import cautions, confirmed, need_somebody
 from ramprig.cli.night import carry_out_unattended, seconds_of
 from ramprig.cli.running import SIMULATED, Way, carry_out_wish, mock_url
 from ramprig.cli.say import tell
@@ -126,10 +126,8 @@ def what_is_known(broken: Broken) -> Iterator[str]:
 
 def ask() -> None:
     """Wait for the word `yes`. Raises StoppedByUser for any other, UsageError where nobody is at a terminal."""
-    from ramprig.cautions import cautions_lines
-
     need_somebody(moves="the run moves what is connected")
-    for line in cautions_lines():
+    for line in cautions():
         tell(line)
     if not confirmed("Type yes and ENTER to arm and go on; anything else leaves everything off."):
         raise StoppedByUser("Not gone on with: it was not confirmed. Nothing has moved.")

@@ -7,7 +7,7 @@ import time
 from dataclasses import replace
 from typing import TYPE_CHECKING
 
-from ramprig.cli.asking import confirmed, need_somebody
+from ramprig.cli.asking import cautions, confirmed, need_somebody
 from ramprig.cli.night import carry_out_unattended, seconds_of
 from ramprig.cli.running import SIMULATED, Way, add_run_arguments, carry_out_run, mock_url
 from ramprig.cli.say import tell
@@ -48,10 +48,11 @@ def carry_out(args: argparse.Namespace) -> int:
     is_simulated = url.startswith(SIMULATED)
     if is_simulated:
         url = mock_url(url, pair.bench_path)
-    way = Way(url=url, virtual=False, runs=args.runs, title=args.title)
+    asks = not is_simulated and not args.yes
+    way = Way(url=url, virtual=False, runs=args.runs, title=args.title, is_plan_told=asks)
 
     def ask_first() -> None:
-        if not is_simulated and not args.yes:
+        if asks:
             ask(pair, url)
 
     if args.unattended:
@@ -75,10 +76,8 @@ def carry_out(args: argparse.Namespace) -> int:
 def ask(pair: Pair, url: str) -> None:
     """Show the cautions and what will move, and wait for the word `yes`. Raises StoppedByUser for any other, UsageError
     where nobody is at a terminal to be asked."""
-    from ramprig.cautions import cautions_lines
-
     need_somebody(moves="a run moves what is connected")
-    for line in [*cautions_lines(), "", *what_moves(pair, url)]:
+    for line in [*cautions(), "", *what_moves(pair, url)]:
         tell(line)
     if not confirmed("Type yes and ENTER to arm and run; anything else leaves everything off."):
         raise StoppedByUser("Not run: it was not confirmed. Nothing has moved.")

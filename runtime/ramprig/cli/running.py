@@ -46,6 +46,7 @@ class Way:
     """Where and how to run: on `url` of the bench's or the user's choice; `runs` None writes nothing down.
 
     `latest_end_unix_s` is when the run must be over; `settings` go on record. `sheet` is put into the run folder.
+    `is_plan_told` tells that the user has seen what the file asks for, so that it need not be said again.
     """
 
     url: str
@@ -56,6 +57,7 @@ class Way:
     latest_end_unix_s: float | None = None
     settings: Mapping[str, object] = field(default_factory=dict)
     sheet: DoorSheet | None = None
+    is_plan_told: bool = False
 
 
 def add_run_arguments(parser: argparse.ArgumentParser) -> None:
@@ -130,8 +132,9 @@ def carry_out_wish(wish: RunWish, way: Way) -> int:
     progress = Progress()
     wish = replace(wish, watching=watching(progress.line))
     so_far = None if wish.carry_on is None else wish.carry_on.so_far.blocks
-    for line in wear_lines(compile_plan(wish.sequence, wish.bench, so_far=so_far)):
-        progress.line(line)
+    if not way.is_plan_told:
+        for line in wear_lines(compile_plan(wish.sequence, wish.bench, so_far=so_far)):
+            progress.line(line)
 
     def guard(session: Session) -> StopOnSignals:
         sessions.append(session)
