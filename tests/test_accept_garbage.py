@@ -196,7 +196,7 @@ def test_a_cable_pulled_in_the_midst_is_a_lost_link_and_no_broken_clause() -> No
 
     verdict = accept(port, Wish(energise=lambda trial: True), tell=pull)
     assert verdict.exit_code == 4
-    assert "the link was lost: mock:: the cable was pulled out" in verdict_sentence(verdict)
+    assert "the link was lost: mock: the cable was pulled out" in verdict_sentence(verdict)
     assert "the board could not be left as it was" in verdict.unrestored[0]
 
 

@@ -21,7 +21,7 @@ from ramprig.accept.lines import CLAUSES
 from ramprig.accept.talk import Talk
 from ramprig.accept.trial import SETTLE_TICKS, Broken, Check, Missing, Power, Result, Trial, Untested, Wish, declared
 from ramprig.errors import LinkError, LinkLost, StoppedByUser, UsageError
-from ramprig.port.base import Port
+from ramprig.port.base import Port, at_port
 from ramprig.session.readings import Identity
 from ramprig_link.faults import LinkFault, SampleFault
 from ramprig_link.messages import Answer
@@ -106,9 +106,9 @@ def accept(port: Port, wish: Wish, *, tell: Tell, talk: Talk | None = None) -> V
     try:
         open_board(trial)
     except Broken as error:
-        raise LinkError(f"{port.name}: the board cannot be known: {trial.last_fault}") from error
+        raise LinkError(f"{at_port(port.name)}the board cannot be known: {trial.last_fault}") from error
     except UNREADABLE as error:
-        raise LinkError(f"{port.name}: the board cannot be known, an answer cannot be read: {error}") from error
+        raise LinkError(f"{at_port(port.name)}the board cannot be known, an answer cannot be read: {error}") from error
     verdict.identity = trial.known
     try:
         _make_checks(trial, verdict, tell)

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 from ramprig.accept.invariants import Witness
 from ramprig.accept.lines import LineRules
 from ramprig.errors import LinkLost, StoppedByUser
-from ramprig.port.base import Port
+from ramprig.port.base import Port, at_port
 from ramprig.session.ticks import TickCounter
 from ramprig_link.check import seal
 from ramprig_link.host import HostLink
@@ -116,7 +116,7 @@ class Talk:
                 break
             self.repeats += 1
             self.repeat(body, tag)
-        raise LinkLost(f"{self.port.name}: no answer to `{body}`, sent {TRIES} times in {TRIES * ANSWER_S:g} s")
+        raise LinkLost(f"{at_port(self.port.name)}no answer to `{body}`, sent {TRIES} times in {TRIES * ANSWER_S:g} s")
 
     def panic(self, category: int) -> bool:
         """Send a stop from a signal handler; the next use raises StoppedByUser."""

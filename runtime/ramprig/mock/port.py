@@ -7,7 +7,7 @@ from collections import deque
 from typing import Generic, Literal, TypeVar
 
 from ramprig.errors import LinkLost
-from ramprig.port.base import ClosesItself
+from ramprig.port.base import ClosesItself, at_port
 from ramprig.port.clock import NS_PER_S, Clock, SystemClock, VirtualClock
 
 from .cable import Cable, Device
@@ -67,7 +67,7 @@ class DevicePort(ClosesItself, Generic[D]):
         if self._is_closed:
             raise LinkLost(f"{self.name} was closed while it was in use")
         if self._cable.is_out:
-            raise LinkLost(f"{self.name}: the cable was pulled out (fault unplug)")
+            raise LinkLost(f"{at_port(self.name)}the cable was pulled out (fault unplug)")
         if self._urgent:
             self._send_urgent()
 

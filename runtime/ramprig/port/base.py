@@ -17,6 +17,11 @@ READ_CHUNK_BYTES = 4096
 """Most bytes one `read` hands over at a time."""
 
 
+def at_port(name: str) -> str:
+    """The begin of a message about the port of this name, up to a colon and a blank; `mock:` has its own colon."""
+    return f"{name.removesuffix(':')}: "
+
+
 class Port(Protocol):
     """Bytes to and from one device, in the time of one clock.
 

@@ -13,7 +13,7 @@ from collections import deque
 from dataclasses import dataclass
 
 from ramprig.errors import LinkLost
-from ramprig.port.base import ClosesItself, Port
+from ramprig.port.base import ClosesItself, Port, at_port
 from ramprig.port.clock import Clock
 
 HELD_MAX_BYTES = 65536
@@ -174,7 +174,7 @@ class FaultyPort(ClosesItself):
 
     def _check_cable(self) -> None:
         if self._is_cut:
-            raise LinkLost(f"{self.name}: the cable was pulled out (a fault put in on purpose)")
+            raise LinkLost(f"{at_port(self.name)}the cable was pulled out (a fault put in on purpose)")
 
     def read(self, timeout_s: float) -> bytes:
         """As `Port.read`, spoilt and delayed."""

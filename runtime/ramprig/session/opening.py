@@ -12,6 +12,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 from ramprig.errors import LinkError, LinkLost, Refused, WrongDevice
+from ramprig.port.base import at_port
 from ramprig.session.core import IDLE_BEAT_S, Core
 from ramprig.session.events import LimitWritten, Opened
 from ramprig.session.limits import LimitKey, LimitTable, limit_keys
@@ -139,18 +140,18 @@ def _who(core: Core) -> Identity:
             core.ticks.see(answered.answer.tick)
             return found
         before = found
-    raise LinkError(f"{core.pump.port.name}: the device's answers to `who` keep changing, last: {before}")
+    raise LinkError(f"{at_port(core.pump.port.name)}the device's answers to `who` keep changing, last: {before}")
 
 
 def _silent(core: Core, error: LinkLost) -> LinkLost:
     """The reason with what was heard instead of an answer: another speed and another program both look like this."""
     if not isinstance(error.__cause__, LinkSilent):
         return error
-    name, count = core.pump.port.name, core.pump.bytes_in
+    at, count = at_port(core.pump.port.name), core.pump.bytes_in
     if not count:
-        return LinkLost(f"{name}: no device answers; not one byte came. Is it powered, and on this port?")
+        return LinkLost(f"{at}no device answers; not one byte came. Is it powered, and on this port?")
     return LinkLost(
-        f"{name}: no device answers; {count} bytes came, {core.dropped_lines} unreadable lines. Is the speed right, "
+        f"{at}no device answers; {count} bytes came, {core.dropped_lines} unreadable lines. Is the speed right, "
         "and does nothing else use the port?"
     )
 

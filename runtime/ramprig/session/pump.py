@@ -13,7 +13,7 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 from ramprig.errors import Bug, LinkError, LinkLost, StoppedByUser, UsageError
-from ramprig.port.base import PatientPort, Port
+from ramprig.port.base import PatientPort, Port, at_port
 from ramprig.port.clock import VirtualClock
 from ramprig_link.faults import FieldError, LinkFault, LinkSilent
 from ramprig_link.host import Answered, DataReader, HostEvent, HostLink, RetryPolicy
@@ -271,7 +271,7 @@ class Pump:
         try:
             line = self.link.due(now_s)
         except LinkSilent as silent:
-            raise LinkLost(f"{self.port.name}: {silent}") from silent
+            raise LinkLost(f"{at_port(self.port.name)}{silent}") from silent
         if line is not None and self._job is not None:
             self._repeated(self._job.word, now_s)
             self.port.write(line)
