@@ -16,11 +16,12 @@ from ramprig.errors import RecordError
 from ramprig.record import recorder as recorder_module
 from ramprig.record.appendfile import REPLACE_TRIES, AppendFile, Reserve, replace_file
 from ramprig.record.folder import RunDescription, RunFolder
-from ramprig.record.keeping import Keeping
+from ramprig.record.keeping import Keeping, Thinning
 from ramprig.record.manifest import RunEnd
-from ramprig.record.reading import read_cycles, read_events, read_manifest, read_samples
+from ramprig.record.reading import audit, read_cycles, read_events, read_manifest, read_samples
 from ramprig.record.recorder import Recorder
-from ramprig.record.writer import DiskWriter, Trouble, within
+from ramprig.record.volumes import held_files
+from ramprig.record.writer import QUEUE_MAX, VITAL_MAX, DiskWriter, Trouble, within
 from ramprig.sequence.happened import CycleCommanded, Marked
 from ramprig.session.blocks import Block
 from record_long import begin
@@ -280,6 +281,8 @@ def test_what_takes_too_long_is_left_alone_and_what_fails_is_told() -> None:
     assert over.wait(WAIT_S)
     with pytest.raises(OSError, match="No space"):
         within(WAIT_S, no_room)  # type: ignore[arg-type]  # it never returns
+    with pytest.raises(ZeroDivisionError):
+        within(WAIT_S, lambda: divmod(1, 0) and None)
 
 
 # ---- the whole recorder ---------------------------------------------------------------------------------------------
@@ -343,6 +346,55 @@ def test_a_trail_that_met_the_full_disk_is_one_whole_file(tmp_path: Path, monkey
     assert [entry["file"] for entry in read_manifest(path)["files"] if "trail" in entry["file"]] == ["trail.csv"]
 
 
+def test_events_that_no_queue_had_room_for_are_counted_in_the_record_and_told_by_the_audit(tmp_path: Path) -> None:
+    troubles: list[Trouble] = []
+    recorder = threaded(tmp_path, troubles)
+    recorder._writer._queue.join()
+    hangs, go_on = threading.Event(), threading.Event()
+
+    def hang() -> None:
+        hangs.set()
+        assert go_on.wait(WAIT_S)
+
+    recorder._writer.submit(hang, vital=True)
+    assert hangs.wait(WAIT_S)
+    for _ in range(QUEUE_MAX + VITAL_MAX + 7):
+        recorder.on_event(Marked(tick=6000, name="here"))
+    assert [trouble.kind.value for trouble in troubles] == ["queue_full"]
+    go_on.set()
+    recorder._writer._queue.join()
+    folder = recorder.finish(END)
+    kinds = [event["kind"] for event in read_events(folder / "events.jsonl")[0]]
+    assert kinds.count("marked") == QUEUE_MAX + VITAL_MAX
+    assert kinds[-1] == "run_finished"
+    assert read_manifest(folder)["events_unwritten"] == 7
+    assert "7 events, lines of cycles or trails could not be written" in audit(folder).statements
+
+
+def test_rows_that_waited_when_the_queue_was_full_are_written_and_a_thinned_log_ends_in_order(tmp_path: Path) -> None:
+    keeping = Keeping(thinning=Thinning(every=None, before_s=0.5, after_s=0.0))
+    recorder = threaded(tmp_path, [], keeping)
+    hangs, go_on = threading.Event(), threading.Event()
+
+    def hang() -> None:
+        hangs.set()
+        assert go_on.wait(WAIT_S)
+
+    recorder._writer.submit(hang)
+    assert hangs.wait(WAIT_S)
+    blocks = blocks_of(2 * (QUEUE_MAX + 5), size=2)
+    with pytest.raises(RecordError, match="the disk is too slow"):
+        hand_over(recorder, blocks)
+    go_on.set()
+    folder = recorder.finish(END)
+    last = blocks[QUEUE_MAX - 1].ticks[-1]  # but for the first, each waited: what came after the queue was full is lost
+    ticks = read_samples(folder / "samples.csv").ticks.tolist()
+    assert ticks[-200:] == list(range(last - 398, last + 1, 2))
+    assert not held_files(folder)
+    samples = read_manifest(folder)["samples"]
+    assert (samples["unwritten"], samples["written"]) == (2, len(ticks))
+
+
 class HangingDisk:
     """Writes of more than a row hang from when it is told on, until `go_on` is set."""
 
@@ -359,11 +411,11 @@ class HangingDisk:
         return self._write(handle, data)
 
 
-def threaded(root: Path, troubles: list[Trouble]) -> Recorder:
+def threaded(root: Path, troubles: list[Trouble], keeping: Keeping | None = None) -> Recorder:
     folder = RunFolder.create(root, RunDescription(name="hangs"), started_unix_s=UTC_START_S, short_id="abc123")
     return Recorder(
         folder, vent_columns(), start=start_anchor(), tick_us=TICK_US, clock=virtual_clock(),
-        on_trouble=troubles.append, free=lambda _: 10**12,
+        on_trouble=troubles.append, free=lambda _: 10**12, keeping=keeping,
     )  # fmt: skip
 
 

@@ -109,6 +109,17 @@ def test_a_changed_missing_or_torn_volume_is_found(tmp_path: Path) -> None:
     assert audit(folder).statements == ("samples.0002.csv was changed after the run",)
 
 
+def test_a_closed_volume_that_was_changed_is_found_though_the_run_never_came_to_its_end(tmp_path: Path) -> None:
+    recorder = begin(tmp_path, Keeping(volumes=VolumeLimits(rows=150)), durable=True)
+    for block in blocks_of(500, size=50):
+        recorder.on_block(block)
+    folder = recorder.folder.path
+    assert len(audit(folder).statements) == 1  # it did not end in order
+    path = folder / "samples.0002.csv"
+    path.write_bytes(path.read_bytes().replace(b"armed", b"amred", 1))
+    assert audit(folder).statements[1:] == ("samples.0002.csv was changed after the run",)
+
+
 def test_an_input_that_is_called_like_a_volume_gets_another_name(tmp_path: Path) -> None:
     folder = run(tmp_path, VolumeLimits(rows=150))
     assert (folder / "bench-samples.csv").read_bytes() == b"motors: {}\n"

@@ -162,8 +162,10 @@ def test_a_full_queue_is_told_at_once_by_the_one_who_hands_over(bench: Bench) ->
     writer.submit(lambda: bench.happened.append("reason written"), vital=True)
     go_on.set()
     settle(writer)
-    assert bench.happened[2:] == ["reason written"]
-    assert writer.refused_jobs == 5
+    assert bench.happened[2:] == ["row"] * 4 + ["reason written"]
+    writer.tell(Trouble(TroubleKind.DISK_ERROR, "gone"))
+    writer.close(WAIT_S, rows_end=lambda: bench.happened.append("end of the rows"))
+    assert bench.happened[-1] == "trouble disk_error"
 
 
 def test_liveness_is_the_time_that_work_has_waited(bench: Bench) -> None:
@@ -242,6 +244,23 @@ def test_a_disk_that_hangs_at_the_end_is_told_and_not_waited_for(bench: Bench) -
     go_on.set()
 
 
+@pytest.mark.parametrize("threaded", [False, True])
+def test_a_slow_disk_is_waited_for_while_it_gets_something_done(bench: Bench, threaded: bool) -> None:
+    writer = bench.writer(threaded=threaded, queue_max=1000)
+    turn = threading.Event()
+
+    def slow(number: int) -> None:
+        turn.wait(0.02 if threaded else 0.0)
+        bench.happened.append(f"row {number}")
+
+    for number in range(8):
+        writer.submit(lambda number=number: slow(number))  # type: ignore[misc]  # bound early, on purpose
+    at_last = threading.Event()
+    assert writer.close(0.06, rows_end=lambda: bench.happened.append("end"), at_last=at_last.set)
+    assert [text for text in bench.happened if text != "synced"] == [*(f"row {number}" for number in range(8)), "end"]
+    assert at_last.is_set()
+
+
 def test_the_same_trouble_is_told_once(bench: Bench) -> None:
     writer = bench.writer(threaded=False)
     for _ in range(3):
@@ -253,7 +272,8 @@ def test_the_same_trouble_is_told_once(bench: Bench) -> None:
 
 def test_what_demands_a_stop_and_what_ends_the_rows() -> None:
     assert [kind for kind in TroubleKind if not kind.demands_stop] == [TroubleKind.SPACE_WARNING]
-    assert {kind for kind in TroubleKind if not kind.loses_rows} == {TroubleKind.SPACE_WARNING, TroubleKind.SPACE_LOW}
+    going_on = {TroubleKind.SPACE_WARNING, TroubleKind.SPACE_LOW, TroubleKind.DISK_STALLED}
+    assert {kind for kind in TroubleKind if not kind.loses_rows} == going_on
     assert trouble_of(OSError(errno.EIO, "x", "f.csv")).text == "the disk cannot be written: x (f.csv)"
 
 

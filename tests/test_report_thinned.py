@@ -115,6 +115,23 @@ def test_a_torn_last_line_of_a_ranges_file_is_left_out_and_a_broken_one_told(thi
     assert len(list(read_ranges(thinned / INTERVAL_RANGES_FILE, ("supply_v",)))) > 3
 
 
+def test_ranges_that_a_loss_of_power_left_empty_in_part_are_read_up_to_there_and_the_audit_says_so(
+    thinned: Path, tmp_path: Path
+) -> None:
+    folder = tmp_path / "run"
+    shutil.copytree(thinned, folder)
+    path = folder / CYCLE_RANGES_FILE
+    lines = path.read_bytes().splitlines(keepends=True)
+    rest = b"".join([lines[4][:9], bytes(300), *lines[6:]])
+    path.write_bytes(b"".join(lines[:4]) + rest)
+    whole = list(read_ranges(thinned / CYCLE_RANGES_FILE, ("supply_v",)))
+    assert list(read_ranges(path, ("supply_v",))) == whole[:3]
+    assert len(whole) > 4
+    text = f"the end of cycle-ranges.csv is torn ({len(rest)} bytes) and was left out"
+    assert text in audit(folder).statements
+    assert audit(thinned).statements == ()
+
+
 def test_an_envelope_is_widened_where_rows_were_left_out_and_nowhere_else() -> None:
     envelope = Envelope(["a"], intervals_max=10)
     envelope.add(np.array([0.0, 1.0, 2.0, 3.0]), {"a": np.array([1.0, 2.0, 3.0, 4.0])})

@@ -48,13 +48,15 @@ TRAIL_FILE = "trail.csv"
 CYCLES_FILE = "cycles.jsonl"
 CYCLE_RANGES_FILE = "cycle-ranges.csv"
 INTERVAL_RANGES_FILE = "interval-ranges.csv"
+RANGES_FILES = (CYCLE_RANGES_FILE, INTERVAL_RANGES_FILE)
 NOTES_FILE = "notes.jsonl"
 RESERVE_FILE = "reserve.bin"
 OWN_FILES = (
     *(RUN_FILE, SAMPLES_FILE, EVENTS_FILE, TRAIL_FILE, CYCLES_FILE),
-    *(CYCLE_RANGES_FILE, INTERVAL_RANGES_FILE, NOTES_FILE, RESERVE_FILE),
+    *RANGES_FILES,
+    *(NOTES_FILE, RESERVE_FILE),
 )
-GOING_ON = (EVENTS_FILE, CYCLES_FILE, CYCLE_RANGES_FILE, INTERVAL_RANGES_FILE)
+GOING_ON = (EVENTS_FILE, CYCLES_FILE, *RANGES_FILES)
 """Files that a later part of a run adds to."""
 
 SLUG_MAX = 40  # characters of the name that go into the folder's

@@ -20,7 +20,7 @@ MORE_SUMS = ("asked_again", "recovered", "duplicates", "strange_lines")
 HEAD_KEYS = ("format", "run", "name", "software", "port", "device", "settings", "inputs", "started")
 PART_KEYS = (
     *("clocks", "verdict", "stop_reason", "samples", "link", "results", "limits_digest", "disk_troubles"),
-    "keeping",
+    *("keeping", "events_unwritten"),
 )
 CHUNK_BYTES = 1024 * 1024
 Document = dict[str, Any]  # JSON as it comes: what is in it is checked where it is used

@@ -25,7 +25,7 @@ from ..errors import RecordError
 from .appendfile import whole_lines
 from .events import from_rfc3339
 from .expected import KeptTicks, Told, compare
-from .folder import CYCLES_FILE, EVENTS_FILE, FORMAT, NOTES_FILE, RUN_FILE
+from .folder import CYCLES_FILE, EVENTS_FILE, FORMAT, NOTES_FILE, RANGES_FILES, RUN_FILE
 from .parts import parts_of, whole_account
 from .unaccounted import without_account
 from .volumes import Stream, volume_files
@@ -225,8 +225,8 @@ def audit(folder: Path) -> Audit:
         statements.append(f"the last event is torn ({events.torn_bytes} bytes) and was left out")
     if _is_torn(folder / CYCLES_FILE):
         statements.append("the last line of the count of cycles is torn and was left out")
-    if finished:
-        statements += _changed_files(folder, manifest)
+    statements += _torn_ranges(folder)
+    statements += _changed_files(folder, manifest)  # of a run that is not over it lists only what changes no more
     if finished and len(entries) > 1 and manifest.get("samples") != whole_account(entries):
         statements.append("the account of the whole run is not the sum of its parts")
     statements += _changed_photos(folder)
@@ -264,6 +264,17 @@ def _is_torn(path: Path) -> bool:
     return lines.torn_bytes > 0
 
 
+def _torn_ranges(folder: Path) -> list[str]:
+    """Ranges files whose end was torn off, or that a loss of power left empty from somewhere on. Raises OSError."""
+    statements = []
+    for name in RANGES_FILES:
+        path = folder / name
+        torn_bytes = [torn for _, torn in whole_lines(path)][-1] if path.exists() else 0
+        if torn_bytes:
+            statements.append(f"the end of {name} is torn ({torn_bytes} bytes) and was left out")
+    return statements
+
+
 def _audit_part(folder: Path, entry: Document, told: Told, *, last: bool, several: bool) -> Audit:
     """One part of a run: its rows against its account, or against its events where it has none."""
     where = f"part {entry['part']}: " if several else ""
@@ -284,6 +295,8 @@ def _audit_part(folder: Path, entry: Document, told: Told, *, last: bool, severa
         statements.append(f"the last row is torn ({stream.torn_bytes} bytes) and was left out")
     troubles = entry.get("disk_troubles") or []
     statements += [f"trouble with the disk: {trouble['text']}" for trouble in troubles]
+    if entry.get("events_unwritten"):
+        statements.append(f"{entry['events_unwritten']} events, lines of cycles or trails could not be written")
     texts = tuple(where + text for text in statements + found)
     return Audit(finished, rows, known_lost, missing, unexpected, texts)
 

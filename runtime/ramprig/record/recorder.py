@@ -132,6 +132,8 @@ class Recorder:
         self._received_rows = 0
         self._periods_ticks: list[int] = []
         self._troubles: list[Json] = []
+        self._counting = threading.Lock()  # events come from the disk's thread too
+        self._vital_given = self._vital_kept = 0
         self._manifest_lock = threading.Lock()
         self._finished = self._sealed = False
         self._cycles = folder.go_on(CYCLES_FILE)
@@ -258,8 +260,19 @@ class Recorder:
         """Write down an event (a dataclass, see `events.py`), synced to the disk soon; never raises RecordError."""
         told = self._told(event)
         line = encode_line(told)
-        self._writer.submit(lambda: self._events.append(line), vital=True, sync=True)
+        self._submit_vital(lambda: self._events.append(line), sync=True)
         self._mind(told)
+
+    def _submit_vital(self, work: Callable[[], None], *, sync: bool = False) -> None:
+        """Hand over what is tried even on a disk in trouble; `run.json` tells how much of it was lost all the same."""
+        with self._counting:
+            self._vital_given += 1
+
+        def counted() -> None:
+            work()
+            self._vital_kept += 1
+
+        self._writer.submit(counted, vital=True, sync=sync)
 
     def on_cycle(self, event: object) -> None:
         """Write an event down in the count of cycles and have the disk hold it; never raises RecordError.
@@ -287,7 +300,7 @@ class Recorder:
                     sync_folder(self.folder.path)
             self._cycles_kept += 1
 
-        self._writer.submit(write, vital=True)
+        self._submit_vital(write)
 
     def cycles_pending(self) -> int:
         """How many events given to `on_cycle` are not yet known to be on the disk."""
@@ -313,7 +326,7 @@ class Recorder:
             sync_folder(self.folder.path)
             file.close()
 
-        self._writer.submit(write, vital=True)
+        self._submit_vital(write)
 
     def liveness_s(self) -> float:
         """How long the disk has made no progress; while that is long, the lease must not be renewed."""
@@ -324,6 +337,10 @@ class Recorder:
         self._writer.check()
 
     # ---- trouble ------------------------------------------------------------------------------------------------
+
+    def tell(self, trouble: Trouble) -> None:
+        """Take note of a trouble with the disk that somebody else saw, and pass it on to `on_trouble`; never raises."""
+        self._writer.tell(trouble)
 
     def _on_sync(self) -> None:
         self._watch.look()
@@ -347,19 +364,18 @@ class Recorder:
     def finish(self, end: RunEnd) -> Path:
         """Write what is waiting and the end of the run; returns the run folder. A second call does nothing.
 
-        A disk that hangs is waited for CLOSE_WAIT_S, and as long again for `run.json`. Raises RecordError where not
-        even that could be written; a full disk that was told of before is stated in it.
+        A disk that hangs is waited for CLOSE_WAIT_S, and as long again for `run.json`; one that is slow for longer, see
+        DiskWriter. Raises RecordError where not even that could be written; a full disk that was told of before is
+        stated in it.
         """
         if self._finished:
             return self.folder.path
         self._finished = True
         tick = None if end.end is None else end.end.tick
         self.on_event(RunFinished(tick=tick, verdict=end.verdict, stop_reason=end.stop_reason))
-        if self._writer.failure is None:
-            with contextlib.suppress(RecordError):  # told through on_trouble, and in the account as unwritten rows
-                self._submit_batch()
-                self._writer.submit(self._samples.end)
-        ended = self._writer.close(CLOSE_WAIT_S, at_last=self._close_files)
+        with contextlib.suppress(RecordError):  # told through on_trouble, and in the account as unwritten rows
+            self._submit_batch()
+        ended = self._writer.close(CLOSE_WAIT_S, rows_end=self._samples.end, at_last=self._close_files)
 
         def write_end() -> None:
             self.folder.reserve.free()
@@ -447,6 +463,7 @@ class Recorder:
         )
         return {
             "samples": account,
+            "events_unwritten": self._vital_given - self._vital_kept,
             "link": jsonable(end.link),
             "results": jsonable(end.results),
         }

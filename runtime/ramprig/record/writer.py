@@ -33,7 +33,10 @@ SYNC_REST_S = 0.1
 """Least time between two syncs that jobs ask for; a flood of events must not keep the disk busy."""
 
 CLOSE_WAIT_S = 10.0
-"""How long the end of a run waits for the disk."""
+"""How long the end of a run waits for a disk that gets nothing done."""
+
+CLOSE_WAITS_MAX = 6
+"""So many times as long it waits for one that does."""
 
 FULL_ERRNOS = frozenset({errno.ENOSPC, errno.EFBIG, getattr(errno, "EDQUOT", errno.ENOSPC)})
 
@@ -45,6 +48,7 @@ class TroubleKind(StrEnum):
     SPACE_LOW = "space_low"
     DISK_FULL = "disk_full"
     DISK_ERROR = "disk_error"
+    DISK_STALLED = "disk_stalled"
     QUEUE_FULL = "queue_full"
     FAULT = "fault"
 
@@ -55,8 +59,8 @@ class TroubleKind(StrEnum):
 
     @property
     def loses_rows(self) -> bool:
-        """Whether no more rows are written from here on."""
-        return self not in (TroubleKind.SPACE_WARNING, TroubleKind.SPACE_LOW)
+        """Whether no more rows are taken from here on."""
+        return self not in (TroubleKind.SPACE_WARNING, TroubleKind.SPACE_LOW, TroubleKind.DISK_STALLED)
 
 
 @dataclass(frozen=True, slots=True)
@@ -96,9 +100,10 @@ class DiskWriter:
     in the caller's thread and, unless `durable`, synced at the end only (virtual time, where nothing is lost that
     cannot be made again).
     `on_trouble` is called at most once for each kind of trouble, from whichever thread meets it, and must not raise.
-    `after_trouble` is called next, for a trouble that loses rows: from then on only vital jobs are carried out, and
-    they are let fail. Once a job has found the disk full, `make_room` is called; if it is a vital one it is done again
-    then, so it must not do twice what it has done. `on_sync` is called after each timed sync (free space is looked at
+    `after_trouble` is called next, for a trouble that loses rows: from then on only vital jobs are taken, and of those
+    that wait only vital ones carried out, unless it was the queue that was full: then all are, in their order. Once a
+    job has found the disk full, `make_room` is called; if it is a vital one it is done again then, so it must not do
+    twice what it has done. `on_sync` is called after each timed sync (free space is looked at
     there); it may call `tell`.
     """
 
@@ -128,7 +133,8 @@ class DiskWriter:
         self._told: set[TroubleKind] = set()
         self._telling = threading.Lock()
         self.failure: Trouble | None = None
-        self.refused_jobs = 0
+        self._rows_end = False  # no row is written any more, not even one that was handed over before
+        self._jobs_done = 0
         self._queue_max = queue_max
         self._queue: queue.Queue[_Job | None] = queue.Queue(queue_max + VITAL_MAX)
         self._open = True
@@ -160,7 +166,6 @@ class DiskWriter:
                 raise queue.Full
             self._queue.put_nowait(job)
         except queue.Full:
-            self.refused_jobs += 1
             self.tell(Trouble(TroubleKind.QUEUE_FULL, f"the disk is too slow: {self._queue_max} writes are waiting"))
             if not vital:
                 self.check()
@@ -182,6 +187,7 @@ class DiskWriter:
             if trouble.kind in self._told:
                 return
             self._told.add(trouble.kind)
+            self._rows_end |= trouble.kind.loses_rows and trouble.kind is not TroubleKind.QUEUE_FULL
             if trouble.kind.loses_rows and self.failure is None:
                 self.failure = trouble
                 ends_rows = True
@@ -191,27 +197,48 @@ class DiskWriter:
         if ends_rows:
             self._after_trouble(trouble)
 
-    def close(self, wait_s: float = CLOSE_WAIT_S, *, at_last: Callable[[], None] = lambda: None) -> bool:
-        """Carry out what is waiting, sync, and do `at_last`; False where the disk did not come to an end in `wait_s`.
+    def close(
+        self,
+        wait_s: float = CLOSE_WAIT_S,
+        *,
+        rows_end: Callable[[], None] = lambda: None,
+        at_last: Callable[[], None] = lambda: None,
+    ) -> bool:
+        """Carry out what is waiting, then `rows_end` where rows are still written, sync, and do `at_last`.
 
+        False where the disk got nothing done for `wait_s`, or did not come to an end in CLOSE_WAITS_MAX times as long.
         That is a trouble, and what is still waiting then is not carried out; `at_last` is done when the job that hangs
         is over. Never raises.
         """
         if not self._open:
             return not self._given_up
         self._at_last = at_last
-        self._open = False
+        last = _Job(rows_end, vital=False, sync=False)
         if self._thread is None:
+            self._open = False
+            self._carry_out(last)
             self._attempt(self.sync_files)
             at_last()
             return True
+        with contextlib.suppress(queue.Full):  # nobody else hands over any more: it is full where the disk hangs
+            self._queue.put(last, timeout=wait_s)
+        self._open = False
         with contextlib.suppress(queue.Full):  # a full queue needs no nudge
             self._queue.put_nowait(None)
-        self._thread.join(wait_s)
-        self._given_up = self._thread.is_alive()
+        waited_s = self._wait_for_end(self._thread, wait_s)
         if self._given_up:
-            self.tell(Trouble(TroubleKind.DISK_ERROR, f"the disk did not finish within {wait_s:g} s"))
+            self.tell(Trouble(TroubleKind.DISK_ERROR, f"the disk did not finish within {waited_s:g} s"))
         return not self._given_up
+
+    def _wait_for_end(self, thread: threading.Thread, wait_s: float) -> float:
+        """Wait while the disk gets something done, or give it up; how long that was at most."""
+        waited_s, done = 0.0, -1
+        while thread.is_alive() and self._jobs_done != done and waited_s < CLOSE_WAITS_MAX * wait_s:
+            done = self._jobs_done
+            thread.join(wait_s)
+            waited_s += wait_s
+        self._given_up = thread.is_alive()
+        return waited_s
 
     def _run(self) -> None:
         try:
@@ -219,6 +246,7 @@ class DiskWriter:
                 job = self._next_job()
                 if job is not None:
                     self._carry_out(job)
+                    self._jobs_done += 1
                     self._last_progress_s = self._now()
                     self._queue.task_done()
                 if not self._open and self._queue.empty():
@@ -248,8 +276,7 @@ class DiskWriter:
             self._attempt(self._on_sync)
 
     def _carry_out(self, job: _Job) -> None:
-        if self._given_up or (self.failure is not None and not job.vital):
-            self.refused_jobs += 1
+        if self._given_up or (self._rows_end and not job.vital):
             return
         room_made = self._room_made
         done = self._attempt(job.work)
@@ -261,7 +288,7 @@ class DiskWriter:
             self._attempt(self.sync_files)
 
     def _is_full(self) -> bool:
-        return self.failure is not None and self.failure.kind is TroubleKind.DISK_FULL
+        return TroubleKind.DISK_FULL in self._told
 
     def _attempt(self, work: Callable[[], None]) -> bool:
         """Do it; whether it was done. What fails is told: a fault of ours must stop the motor as a full disk does, and
@@ -299,14 +326,14 @@ class DiskWriter:
 def within(wait_s: float, work: Callable[[], None]) -> None:
     """Do it in a thread that is left alone where it does not come to an end in time.
 
-    Raises OSError: that of `work`, or that it took too long; it may still come to its end then.
+    Raises what `work` does, or OSError that it took too long; it may still come to its end then.
     """
-    failed: list[OSError] = []
+    failed: list[Exception] = []
 
     def attempt() -> None:
         try:
             work()
-        except OSError as error:
+        except Exception as error:  # whichever it is, it is raised where it is waited for
             failed.append(error)
 
     thread = threading.Thread(target=attempt, name="ramprig-disk-end", daemon=True)

@@ -10,6 +10,7 @@ from pathlib import Path
 from typing import Any
 
 from ramprig.errors import RecordError
+from ramprig.record.appendfile import whole_lines
 from ramprig.record.folder import CYCLE_RANGES_FILE, INTERVAL_RANGES_FILE
 from ramprig.record.keeping import Around, Thinning
 from ramprig.sequence.log_forecast import said_of
@@ -58,14 +59,18 @@ def has_cycle_ranges(facts: Facts) -> bool:
 
 
 def read_ranges(path: Path, columns: tuple[str, ...]) -> Iterator[RangeLine]:
-    """The spans with samples, one after another; a torn last line is left out. Raises RecordError."""
+    """The spans with samples, one after another, to the end of what is whole. Raises RecordError.
+
+    A torn end is left out, and so is what follows a place that a loss of power left empty; the audit says so.
+    """
+    names: list[str] = []
     try:
-        with open(path, encoding="utf-8", newline="") as file:
-            names = next(csv.reader([file.readline()]), [])
-            for line in file:
-                if not line.endswith("\n"):
-                    return
-                fields = dict(zip(names, next(csv.reader(io.StringIO(line, newline=""))), strict=True))
+        for data, _ in whole_lines(path):
+            for texts in csv.reader(io.StringIO(data.decode("utf-8"), newline="")):
+                if not names:
+                    names = texts
+                    continue
+                fields = dict(zip(names, texts, strict=True))
                 if int(fields["samples"]):
                     yield _line(fields, columns)
     except (OSError, ValueError, KeyError, csv.Error) as error:
