@@ -16,8 +16,9 @@ import pytest
 from ramprig.cli import main, running
 from ramprig.cli.main import EXIT_BUG
 from ramprig.cli.running import how_far, mock_url
+from ramprig.errors import LinkLost
 from ramprig.mock.url import parse_mock
-from ramprig.record.reading import audit, read_manifest
+from ramprig.record.reading import audit, read_events, read_manifest
 from ramprig.record.recorder import Recorder
 from ramprig.sequence.executive import Progress
 from ramprig.sequence.outcome import Outcome, Verdict
@@ -132,6 +133,29 @@ def test_2_a_disk_that_makes_no_progress_stops_the_motor(
     manifest = read_manifest(only_run())
     assert (manifest["verdict"], manifest["results"]["stop_confirmed"]) == ("not recorded", True)
     assert "no progress for 3 s" in manifest["stop_reason"]
+    assert manifest["disk_troubles"] == [{"kind": "disk_stalled", "text": "the disk has made no progress for 3 s"}]
+    found = audit(only_run())
+    assert "trouble with the disk: the disk has made no progress for 3 s" in found.statements
+    events, _ = read_events(only_run() / "events.jsonl")
+    assert [event["trouble"] for event in events if event["kind"] == "disk_trouble"] == ["disk_stalled"]
+
+
+def test_5_an_end_that_cannot_be_written_hides_nothing_of_what_broke_the_run_off(
+    here: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    def silent(*_: object, **__: object) -> None:
+        monkeypatch.setattr("ramprig.record.folder.replace_file", refuse)
+        raise LinkLost("the board says nothing any more")
+
+    def refuse(*_: object) -> None:
+        raise OSError(5, "Input/output error")
+
+    monkeypatch.setattr("ramprig.sequence.running.run_plan", silent)
+    assert main(["rehearse", "short.yaml"]) == LinkLost.exit_code
+    said = capsys.readouterr().err.splitlines()
+    assert said[-2] == "the board says nothing any more"
+    assert said[-1].startswith("run.json cannot be written in runs/")
+    assert said[-1].endswith(": Input/output error")
 
 
 def test_2_a_disk_that_is_full_from_the_start_is_told_before_anything_moves(

@@ -275,6 +275,8 @@ def test_a_log_whose_disk_makes_no_progress_stops_the_motor(bench: DeskBench, mo
     assert bench.duty == 0
     monkeypatch.undo()
     bench.type("log stop")
+    troubles = read_manifest(recorder.folder.path)["disk_troubles"]
+    assert troubles == [{"kind": "disk_stalled", "text": "the disk makes no progress"}]
 
 
 def test_a_panic_before_the_device_is_known_reaches_the_port(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:

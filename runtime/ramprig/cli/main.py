@@ -113,10 +113,10 @@ def main(arguments: Sequence[str] | None = None) -> int:
     except Bug as error:
         return _bug(error)
     except RamprigError as error:
-        tell(str(error))
+        tell("\n".join([str(error), *notes_of(error)]))
         return error.exit_code
-    except KeyboardInterrupt:
-        tell("Stopped by the user.")
+    except KeyboardInterrupt as error:
+        tell("\n".join(["Stopped by the user.", *notes_of(error)]))
         return EXIT_USER
     except BrokenPipeError:
         code = 0  # as by `| head`: who has read enough has no complaint
@@ -124,6 +124,11 @@ def main(arguments: Sequence[str] | None = None) -> int:
         return _bug(error)
     _flush()
     return code
+
+
+def notes_of(error: BaseException) -> list[str]:
+    """What went wrong besides, such as an end of the run that could not be written."""
+    return getattr(error, "__notes__", [])
 
 
 def _no_such(name: str) -> str:

@@ -282,9 +282,8 @@ class _Keeping:
     is pumped after the error, no lease is renewed either.
     """
 
-    def __init__(self, recorder: Recorder, on_trouble: Callable[[Trouble], None]) -> None:
+    def __init__(self, recorder: Recorder) -> None:
         self._recorder = recorder
-        self._on_trouble = on_trouble
         self._failed = False
 
     def on_block(self, block: Block) -> None:
@@ -293,8 +292,8 @@ class _Keeping:
             return
         try:
             if self._recorder.liveness_s() > DISK_STALL_S:
-                stalled = Trouble(TroubleKind.DISK_ERROR, f"the disk has made no progress for {DISK_STALL_S:g} s")
-                self._on_trouble(stalled)
+                stalled = Trouble(TroubleKind.DISK_STALLED, f"the disk has made no progress for {DISK_STALL_S:g} s")
+                self._recorder.tell(stalled)
                 raise RecordError(stalled.text)
             self._recorder.on_block(block)
         except RecordError:
@@ -308,7 +307,8 @@ def recording(
 ) -> Iterator[Recorder]:
     """A recorder that listens to the session; a run that breaks off is written down as far as it came.
 
-    A trouble that demands a stop is put into `troubles` after the stop was sent.
+    A trouble that demands a stop is put into `troubles` after the stop was sent. What broke the run off is raised, also
+    where its end could not be written: that is added to it as a note.
     """
 
     def on_trouble(trouble: Trouble) -> None:
@@ -317,12 +317,15 @@ def recording(
             troubles.append(trouble)
 
     recorder = _recorder(what, session, clock, on_trouble)
-    keeping = _Keeping(recorder, on_trouble)
+    keeping = _Keeping(recorder)
     listeners.add(on_block=keeping.on_block, on_event=recorder.on_event)
     try:
         yield recorder
     except BaseException as error:
-        recorder.finish(broken_by(error))
+        try:
+            recorder.finish(broken_by(error))
+        except RecordError as unwritten:
+            error.add_note(str(unwritten))
         raise
     finally:
         listeners.remove(on_block=keeping.on_block, on_event=recorder.on_event)

@@ -210,7 +210,7 @@ class Keeper:
         if troubles:
             self._say(troubles)
         if self._log.stuck and session.armed:
-            self._disk_trouble("the disk makes no progress")
+            self._log.tell_stuck()
         pace_s = max(LOOK_S, LOOK_ROUND_TRIPS * session.health.round_trip_median_s)
         if now_s - self._looked_s >= pace_s:
             self._looked_s = now_s

@@ -13,7 +13,7 @@ from ramprig.port.clock import Clock, VirtualClock
 from ramprig.record.folder import InputFile, RunDescription, RunFolder
 from ramprig.record.manifest import Anchor, RunEnd
 from ramprig.record.recorder import Recorder
-from ramprig.record.writer import Trouble
+from ramprig.record.writer import Trouble, TroubleKind
 from ramprig.sequence.columns import bench_columns
 from ramprig.sequence.happened import Marked
 from ramprig.sequence.listeners import Listeners
@@ -66,6 +66,12 @@ class Logbook:
     def stuck(self) -> bool:
         """Whether the disk has made no progress for too long."""
         return self._recorder is not None and self._recorder.liveness_s() > DISK_PATIENCE_S
+
+    def tell_stuck(self) -> None:
+        """Demand a stop because the disk makes no progress, each time anew, and have the log say so."""
+        text = "the disk makes no progress"
+        self._demand_stop(text)
+        self._need().tell(Trouble(TroubleKind.DISK_STALLED, text))
 
     def start(self, session: Session, rig: Rig, name: str, port_name: str) -> Path:
         """Make the run folder and begin sampling; raises UsageError where a log is open, RecordError, Refused."""
@@ -143,5 +149,5 @@ class Logbook:
             self._recorder.on_block(block)
 
     def _on_trouble(self, trouble: Trouble) -> None:
-        if trouble.kind.demands_stop:
+        if trouble.kind.demands_stop and trouble.kind is not TroubleKind.DISK_STALLED:  # for that one it was already
             self._demand_stop(trouble.text)
