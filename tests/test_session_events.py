@@ -6,10 +6,11 @@ import math
 
 import pytest
 
-from ramprig.errors import LinkError, Refused, WrongDevice
+from ramprig.errors import LinkError, RecordError, Refused, WrongDevice
 from ramprig.mock import MockSetup
 from ramprig.port.clock import VirtualClock
 from ramprig.port.faulty import FaultyPort
+from ramprig.session.blocks import Block
 from ramprig.session.events import (
     DeviceExchanged,
     HostSlept,
@@ -50,6 +51,29 @@ def test_a_trip_is_told_with_its_values_once() -> None:
     assert len(rig.of(Tripped)) == 1
     assert rig.session.trip == trips[0]
     assert not rig.session.armed
+
+
+def test_a_listener_that_fails_at_samples_costs_no_notice_that_came_with_them() -> None:
+    rig = Rig(setup=MockSetup(baud=0))
+    rig.session.log(10, MASK)
+    rig.session.arm()
+    rig.drive(4000)
+    rig.pump(0.5)
+    rig.device.faults.set("jammed_shaft")
+    failed_at: list[int] = []
+
+    def on_block(block: Block) -> None:
+        controller = rig.device.controller
+        if controller is not None and controller.latched.trip and not failed_at:
+            failed_at.append(len(rig.of(Tripped)))
+            raise RecordError("the disk is full")
+
+    rig.session._core.on_block = on_block
+    with pytest.raises(RecordError, match="the disk is full"):
+        rig.pump(10.0)
+    assert failed_at == [0]  # the samples come before the notice
+    assert [event.trip for event in rig.of(Tripped)] == ["stall"]
+    assert rig.session.stop().confirmed
 
 
 def test_the_trail_holds_the_ticks_around_the_trip() -> None:

@@ -198,8 +198,7 @@ class Pump:
     def _leave(self) -> None:
         """Hand on the samples that have waited, whatever has happened: they were received."""
         try:
-            for event in self.link.samples():
-                self._take(event, self.clock.now())
+            self._take_all(self.link.samples(), self.clock.now())
         finally:
             self._inside = False
 
@@ -223,8 +222,8 @@ class Pump:
         if data:
             self.bytes_in += len(data)
             patient = self._patient
-            for event in link.receive(data, now_s, samples_wait=patient is not None and patient.is_sound):
-                self._take(event, now_s)
+            waits = patient is not None and patient.is_sound
+            self._take_all(link.receive(data, now_s, samples_wait=waits), now_s)
         due_s = link.due_at_s
         if due_s is not None and now_s >= due_s and not self.muted:
             self._repeat(now_s)
@@ -275,6 +274,18 @@ class Pump:
         if line is not None and self._job is not None:
             self._repeated(self._job.word, now_s)
             self.port.write(line)
+
+    def _take_all(self, events: list[HostEvent], now_s: float) -> None:
+        """Take what came together, whatever a listener raises at a part of it: a full disk must not cost the notice of
+        a trip. The first error is raised behind the last event."""
+        first: Exception | None = None
+        for event in events:
+            try:
+                self._take(event, now_s)
+            except Exception as error:  # raised below
+                first = first or error
+        if first is not None:
+            raise first
 
     def _take(self, event: HostEvent, now_s: float) -> None:
         if not isinstance(event, Answered):
