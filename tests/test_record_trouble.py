@@ -99,6 +99,42 @@ def test_nothing_is_appended_behind_a_torn_line(tmp_path: Path, monkeypatch: pyt
     assert (file.lines, file.size_bytes) == (2, 8)
 
 
+@pytest.mark.parametrize("refusals", [1, 2])
+def test_a_torn_line_that_could_not_be_cut_off_is_cut_off_at_the_end_or_told_for_what_it_is(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, refusals: int
+) -> None:
+    recorder = begin(tmp_path, Keeping(), on_trouble=lambda trouble: None, durable=True)
+    folder = recorder.folder.path
+    hand_over(recorder, blocks_of(100))
+    samples = recorder._samples._volumes._file
+    real_write, real_cut = os.write, os.ftruncate
+    took: list[int] = []
+    cuts: list[int] = []
+
+    def write(handle: int, data: bytes) -> int:
+        if handle == samples._handle:
+            took.append(real_write(handle, bytes(data)[:10]) if not took else no_room())
+        return took[0] if handle == samples._handle else real_write(handle, data)
+
+    def cut(handle: int, size: int) -> None:
+        cuts.append(size)
+        if len(cuts) <= refusals:
+            raise OSError(errno.EIO, os.strerror(errno.EIO))
+        real_cut(handle, size)
+
+    with monkeypatch.context() as patch:
+        patch.setattr("ramprig.record.appendfile.os.write", write)
+        patch.setattr("ramprig.record.appendfile.os.ftruncate", cut)
+        with pytest.raises(RecordError):
+            hand_over(recorder, blocks_of(50, first_tick=5200))
+        recorder.finish(END)
+    found = audit(folder).statements
+    assert len(cuts) == 2
+    assert len(read_samples(folder / "samples.csv")) == read_manifest(folder)["samples"]["written"] == 100
+    assert ("samples.csv has 10 bytes more than the run knows of" in found) == (refusals == 2)
+    assert not [text for text in found if "was changed" in text]
+
+
 def test_a_sync_that_failed_is_tried_again_and_never_believed(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     file = AppendFile(tmp_path / "a.csv")
     file.append(b"1\n")
@@ -368,7 +404,7 @@ def test_events_that_no_queue_had_room_for_are_counted_in_the_record_and_told_by
     assert kinds.count("marked") == QUEUE_MAX + VITAL_MAX
     assert kinds[-1] == "run_finished"
     assert read_manifest(folder)["events_unwritten"] == 7
-    assert "7 events, lines of cycles or trails could not be written" in audit(folder).statements
+    assert "7 events, lines of cycles or trails could not be written, or not be synced" in audit(folder).statements
 
 
 def test_rows_that_waited_when_the_queue_was_full_are_written_and_a_thinned_log_ends_in_order(tmp_path: Path) -> None:
@@ -393,6 +429,7 @@ def test_rows_that_waited_when_the_queue_was_full_are_written_and_a_thinned_log_
     assert not held_files(folder)
     samples = read_manifest(folder)["samples"]
     assert (samples["unwritten"], samples["written"]) == (2, len(ticks))
+    assert "2 samples that were received could not be written" in audit(folder).statements
 
 
 class HangingDisk:

@@ -109,9 +109,7 @@ class AppendFile:
         and the counts say so; where the disk refuses to cut the rest off, a torn line stays behind, and nothing is
         appended until that has been cut off. A file that was closed takes nothing (EBADF).
         """
-        if self._torn:
-            os.ftruncate(self._handle, self.size_bytes)
-            self._torn = False
+        self._cut()
         done = 0
         view = memoryview(data)
         try:
@@ -122,12 +120,16 @@ class AppendFile:
             whole = data.rfind(b"\n", 0, done) + 1
             self._count(data[:whole])
             self._torn = done > whole
-            if self._torn and self._takes_more:
-                with contextlib.suppress(OSError):
-                    os.ftruncate(self._handle, self.size_bytes)
-                    self._torn = False
+            with contextlib.suppress(OSError):
+                self._cut()
             raise
         self._count(data)
+
+    def _cut(self) -> None:
+        """Cut a torn line off, unless the file was let go: somebody else may go on with it. Raises OSError."""
+        if self._torn and self._takes_more:
+            os.ftruncate(self._handle, self.size_bytes)
+            self._torn = False
 
     def _check_open(self) -> None:
         """A descriptor that was closed may be another file's by now. Raises OSError."""
@@ -163,6 +165,9 @@ class AppendFile:
 
     def close(self) -> None:
         """Close the file without syncing; a second call does nothing."""
+        if self._open:
+            with contextlib.suppress(OSError):
+                self._cut()
         self._takes_more = False
         if self._open:
             self._open = False

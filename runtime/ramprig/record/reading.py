@@ -284,6 +284,8 @@ def _audit_part(folder: Path, entry: Document, told: Told, *, last: bool, severa
     account = entry.get("samples")
     if account:
         rows, known_lost, missing, unexpected, found = _against_account(account, kept, stream)
+        if missing < account["unwritten"]:  # of a thinned log it is not known which of them were to be kept
+            found = [*found, f"{account['unwritten']} samples that were received could not be written"]
         ending: list[str] = []
     else:
         inferred = without_account((piece.ticks for piece in stream), told, kept)
@@ -296,7 +298,8 @@ def _audit_part(folder: Path, entry: Document, told: Told, *, last: bool, severa
     troubles = entry.get("disk_troubles") or []
     statements += [f"trouble with the disk: {trouble['text']}" for trouble in troubles]
     if entry.get("events_unwritten"):
-        statements.append(f"{entry['events_unwritten']} events, lines of cycles or trails could not be written")
+        what = "events, lines of cycles or trails could not be written, or not be synced"
+        statements.append(f"{entry['events_unwritten']} {what}")
     texts = tuple(where + text for text in statements + found)
     return Audit(finished, rows, known_lost, missing, unexpected, texts)
 
@@ -329,14 +332,24 @@ def _changed_files(folder: Path, manifest: Document) -> list[str]:
     for entry in [*manifest.get("files", []), *manifest.get("inputs", [])]:
         path = folder / entry["file"]
         try:
-            with open(path, "rb") as file:
-                found = hashlib.file_digest(file, "sha256").hexdigest()
+            found, more_bytes = _digest(path, entry["bytes"])
         except OSError:
             statements.append(f"{entry['file']} is missing")
             continue
         if found != entry["sha256"]:
             statements.append(f"{entry['file']} was changed after the run")
+        elif more_bytes:
+            statements.append(f"{entry['file']} has {more_bytes} bytes more than the run knows of")
     return statements
+
+
+def _digest(path: Path, size_bytes: int) -> tuple[str, int]:
+    """The SHA-256 of the first bytes of a file, and how many more it has. Raises OSError."""
+    digest = hashlib.sha256()
+    with open(path, "rb") as file:
+        while chunk := file.read(min(CHUNK_BYTES, size_bytes - file.tell())):
+            digest.update(chunk)
+        return digest.hexdigest(), file.seek(0, io.SEEK_END) - min(size_bytes, file.tell())
 
 
 def _changed_photos(folder: Path) -> list[str]:
