@@ -24,7 +24,7 @@ from ramprig.endure.live import LiveWatch
 from ramprig.endure.resume import read_broken
 from ramprig.endure.trends import Level
 from ramprig.endure.wear import WearJudge, as_recorded
-from ramprig.errors import UsageError
+from ramprig.errors import Place, UsageError
 from ramprig.mock.device import MockDevice
 from ramprig.mock.from_bench import setup_of_bench
 from ramprig.mock.port import MockPort
@@ -384,6 +384,16 @@ def look_in_vain(
                 raise MemoryError
             super().on_block(block)
 
+        def too_worn(self) -> tuple[str, Place | None]:
+            if at == "too_worn" and cycle - 1 in seen:
+                raise LookupError("worst")
+            return super().too_worn()
+
+        def to_watch(self) -> str:
+            if at == "to_watch":
+                raise OverflowError
+            return super().to_watch()
+
         def __init__(self, watched: Watched, *, say: Callable[[str], None]) -> None:
             if at == "__init__":
                 raise KeyError("line")
@@ -429,6 +439,16 @@ def test_a_fault_of_the_judge_does_not_end_a_run_that_nothing_of_wear_is_to_end(
     assert said[0] in made.report.read_text("utf-8").replace("&#x27;", "'")
     skipped = ElementTree.parse(made.junit).findall(".//testcase[@name='every other feature: watch +- 10 %, 3 of 5']")
     assert [case.find("skipped") is not None for case in skipped] == [True, True]  # of the cycles, and of the checks
+
+
+@pytest.mark.parametrize(("at", "kind"), [("too_worn", "LookupError: worst"), ("to_watch", "OverflowError: ")])
+def test_a_fault_in_what_the_judge_is_asked_does_not_end_the_run_either(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, at: str, kind: str
+) -> None:
+    result, said = look_in_vain(tmp_path, monkeypatch, at=at)
+    assert result.outcome.verdict is Verdict.PASSED
+    assert said == [f"wear is not judged from the present cycle on, by a fault of this program ({kind})"]
+    assert result.outcome.sentence.endswith(said[0])
 
 
 def test_a_fault_of_the_judge_stops_a_run_in_order_that_a_limit_to_wear_was_to_end(

@@ -8,10 +8,13 @@ from __future__ import annotations
 import traceback
 from collections.abc import Callable
 from dataclasses import dataclass
+from typing import TypeVar
 
 from ramprig.errors import Place
 from ramprig.sequence.cycle_watch import CycleWatch, Seen, TurnDone, Unjudged, Watched
 from ramprig.session.blocks import Block
+
+T = TypeVar("T")
 
 TRACE_MAX = 4000
 """Characters of a traceback that the event keeps; its end is the place of the fault."""
@@ -69,13 +72,15 @@ class UnfailingWatch:
         """It has begun."""
         self._guarded(lambda watch: watch.begun(tick))
 
-    def _guarded(self, call: Callable[[CycleWatch], None]) -> None:
+    def _guarded(self, call: Callable[[CycleWatch], T]) -> T | None:
+        """What the watch answers; None where it is gone, or fails at this."""
         if self._watch is None:
-            return
+            return None
         try:
-            call(self._watch)
+            return call(self._watch)
         except Exception as fault:  # as above
             self._fail(fault, "from the present cycle on")
+            return None
 
     def done(self, turn: TurnDone) -> Seen:
         """It is over; at the first turn that is not judged there is an event for it."""
@@ -96,11 +101,11 @@ class UnfailingWatch:
 
     def too_worn(self) -> tuple[str, Place | None]:
         """Why the run must end for wear."""
-        return ("", None) if self._watch is None else self._watch.too_worn()
+        return self._guarded(lambda watch: watch.too_worn()) or ("", None)
 
     def to_watch(self) -> str:
         """What is to be watched."""
-        return "" if self._watch is None else self._watch.to_watch()
+        return self._guarded(lambda watch: watch.to_watch()) or ""
 
     def unjudged(self) -> Unjudged:
         """Since when, and why, nothing is judged."""
