@@ -432,6 +432,28 @@ def test_rows_that_waited_when_the_queue_was_full_are_written_and_a_thinned_log_
     assert "2 samples that were received could not be written" in audit(folder).statements
 
 
+def test_the_disk_holds_what_is_told_of_rows_before_the_rows(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    recorder = begin(tmp_path, Keeping(), durable=True)
+    folder = recorder.folder.path
+    recorder._writer.sync_files()
+    hand_over(recorder, blocks_of(50))
+    recorder._writer.submit(lambda: recorder._events.append(b'{"kind": "gap_found"}\n'))
+    held_before: list[int] = []
+    real = os.fsync
+
+    def fsync(handle: int) -> None:
+        held_before.append(recorder._events.synced_lines)
+        real(handle)
+
+    with monkeypatch.context() as patch:
+        patch.setattr("ramprig.record.appendfile.os.fsync", fsync)
+        recorder._writer.sync_files()
+        assert recorder._events.synced_lines == 2
+    assert held_before == [1, 2]  # lines of events: at the first sync one, at that of the rows both
+    assert recorder._samples.synced_rows == 50
+    assert recorder.finish(END) == folder
+
+
 class HangingDisk:
     """Writes of more than a row hang from when it is told on, until `go_on` is set."""
 

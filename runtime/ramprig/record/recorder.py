@@ -145,7 +145,7 @@ class Recorder:
         self._events, self._samples = self._begin_files(durable=durable)
         cycles = [] if self._cycles is None else [self._cycles]
         self._writer = DiskWriter(
-            [self._samples, self._events, *cycles],
+            [self._events, self._samples, *cycles],  # what is told of rows, such as a gap, before the rows themselves
             on_trouble=self._on_trouble,
             after_trouble=self._after_trouble,
             on_sync=self._on_sync,

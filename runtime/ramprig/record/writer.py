@@ -133,7 +133,7 @@ class DiskWriter:
         self._told: set[TroubleKind] = set()
         self._telling = threading.Lock()
         self.failure: Trouble | None = None
-        self._rows_end = False  # no row is written any more, not even one that was handed over before
+        self._rows_over = False  # no row is written any more, not even one that was handed over before
         self._jobs_done = 0
         self._queue_max = queue_max
         self._queue: queue.Queue[_Job | None] = queue.Queue(queue_max + VITAL_MAX)
@@ -187,7 +187,7 @@ class DiskWriter:
             if trouble.kind in self._told:
                 return
             self._told.add(trouble.kind)
-            self._rows_end |= trouble.kind.loses_rows and trouble.kind is not TroubleKind.QUEUE_FULL
+            self._rows_over |= trouble.kind.loses_rows and trouble.kind is not TroubleKind.QUEUE_FULL
             if trouble.kind.loses_rows and self.failure is None:
                 self.failure = trouble
                 ends_rows = True
@@ -276,7 +276,7 @@ class DiskWriter:
             self._attempt(self._on_sync)
 
     def _carry_out(self, job: _Job) -> None:
-        if self._given_up or (self._rows_end and not job.vital):
+        if self._given_up or (self._rows_over and not job.vital):
             return
         room_made = self._room_made
         done = self._attempt(job.work)
