@@ -14,6 +14,7 @@ from ramprig.cli.main import main
 from ramprig.errors import StoppedByUser
 from ramprig.measure.procedures.curve import Curve
 from ramprig.measure.running import MeasureWish, measure
+from ramprig.mock.core import why_not
 from ramprig.mock.device import MockDevice
 from ramprig.mock.from_bench import setup_of_bench
 from ramprig.mock.port import MockPort
@@ -101,6 +102,11 @@ def test_a_stop_is_told_as_one_and_the_limits_are_put_back(tmp_path: Path) -> No
         ("curve", ["--repeats", "0"], "--repeats 0: 1 to 200"),
         ("curve", ["--repeats", "1000000000"], "--repeats 1000000000: 1 to 200"),
         ("wiring", ["--save", "--no-record"], "needs the run folder"),
+        (
+            "wiring",
+            ["--rehearse", "--port", "socket://127.0.0.1:9"],
+            "--rehearse moves nothing real, and --port socket",
+        ),
     ],
 )
 def test_a_command_line_that_cannot_be_is_refused_with_2(
@@ -108,6 +114,16 @@ def test_a_command_line_that_cannot_be_is_refused_with_2(
 ) -> None:
     assert run(bench, what, *options) == 2
     assert words in capsys.readouterr().err
+
+
+@pytest.mark.parametrize("scheme", ["mock:", "core:"])
+def test_a_simulated_board_is_measured_unasked_by_the_bench_file(
+    bench: Path, capsys: pytest.CaptureFixture[str], scheme: str
+) -> None:
+    if scheme == "core:" and why_not() is not None:
+        pytest.skip(why_not() or "")
+    assert run(bench, "servo", "--servo", "latch", "--port", f"{scheme}?pace=virtual") in (0, 1)
+    assert "Type yes" not in capsys.readouterr().err
 
 
 @pytest.mark.parametrize(("is_there", "typed"), [(False, "yes\n"), (True, "no\n"), (True, "yes\n")])

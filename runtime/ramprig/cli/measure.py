@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING
 
 from ramprig.cli.asking import answered, cautions, confirmed, need_somebody, on_terminal
 from ramprig.cli.progress import Progress
-from ramprig.cli.running import RUNS, mock_url
+from ramprig.cli.running import RUNS, SIMULATED, mock_url
 from ramprig.cli.say import say_surely, tell
 from ramprig.errors import RamprigError, StoppedByUser, UsageError
 
@@ -103,7 +103,7 @@ def carry_out(args: argparse.Namespace) -> int:
     procedure = procedure_of(args, bench)
     procedure.bench(bench)  # what the bench is not fit for is refused before a port is opened
     url = _url(args, bench)
-    if not args.yes and not args.rehearse and not url.startswith("mock:"):
+    if not args.yes and not args.rehearse and not url.startswith(SIMULATED):
         ask(procedure, bench, url)
     done = _measure(args, procedure, bench, url)
     show(done, as_json=args.json)
@@ -201,11 +201,13 @@ def _one(said: str | None, names: list[str], what: str) -> str:
 
 def _url(args: argparse.Namespace, bench: Bench) -> str:
     if args.rehearse:
+        if args.port is not None and not args.port.startswith(SIMULATED):
+            raise UsageError(f"--rehearse moves nothing real, and --port {args.port} may: leave one of them out")
         return mock_url(args.port or "mock:", args.bench, virtual=True, seed=args.seed, faults=args.fault)
     if args.fault or args.seed is not None:
         raise UsageError("--fault and --seed belong to --rehearse")
     url: str = args.port or bench.port.url
-    return mock_url(url, args.bench) if url.startswith("mock:") else url
+    return mock_url(url, args.bench) if url.startswith(SIMULATED) else url
 
 
 def ask(procedure: Procedure, bench: Bench, url: str) -> None:
