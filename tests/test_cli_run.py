@@ -140,6 +140,21 @@ def test_2_a_disk_that_makes_no_progress_stops_the_motor(
     assert [event["trouble"] for event in events if event["kind"] == "disk_trouble"] == ["disk_stalled"]
 
 
+def test_a_host_that_was_held_up_itself_takes_that_for_no_stall_of_the_disk(
+    here: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    looks: list[float] = []
+
+    def liveness_s(recorder: Recorder) -> float:
+        looks.append(10.0 if len(looks) % 10 == 5 else 0.0)  # now and then a job was at work when the host was stopped
+        return looks[-1]
+
+    monkeypatch.setattr(Recorder, "liveness_s", liveness_s)
+    assert main(["rehearse", "short.yaml"]) == 0
+    assert looks.count(10.0) > 1
+    assert read_manifest(only_run())["disk_troubles"] == []
+
+
 def test_5_an_end_that_cannot_be_written_hides_nothing_of_what_broke_the_run_off(
     here: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
 ) -> None:

@@ -42,6 +42,9 @@ from .wear_limits import WearRules, rules_of
 DISK_STALL_S = 3.0
 """The motors are stopped when the disk has made no progress for so long."""
 
+STALL_SURE_S = 0.1
+"""And none for so long after that was seen: a host that was itself held up (stopped, asleep) finds that time in it."""
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class RunResult:
@@ -282,8 +285,10 @@ class _Keeping:
     is pumped after the error, no lease is renewed either.
     """
 
-    def __init__(self, recorder: Recorder) -> None:
+    def __init__(self, recorder: Recorder, clock: Clock) -> None:
         self._recorder = recorder
+        self._clock = clock
+        self._stalled_since_s: float | None = None
         self._failed = False
 
     def on_block(self, block: Block) -> None:
@@ -291,7 +296,7 @@ class _Keeping:
         if self._failed:
             return
         try:
-            if self._recorder.liveness_s() > DISK_STALL_S:
+            if self._is_stalled():
                 stalled = Trouble(TroubleKind.DISK_STALLED, f"the disk has made no progress for {DISK_STALL_S:g} s")
                 self._recorder.tell(stalled)
                 raise RecordError(stalled.text)
@@ -299,6 +304,15 @@ class _Keeping:
         except RecordError:
             self._failed = True
             raise
+
+    def _is_stalled(self) -> bool:
+        if self._recorder.liveness_s() <= DISK_STALL_S:
+            self._stalled_since_s = None
+            return False
+        now_s = self._clock.now()
+        if self._stalled_since_s is None:
+            self._stalled_since_s = now_s
+        return now_s - self._stalled_since_s >= STALL_SURE_S
 
 
 @contextmanager
@@ -317,7 +331,7 @@ def recording(
             troubles.append(trouble)
 
     recorder = _recorder(what, session, clock, on_trouble)
-    keeping = _Keeping(recorder)
+    keeping = _Keeping(recorder, clock)
     listeners.add(on_block=keeping.on_block, on_event=recorder.on_event)
     try:
         yield recorder
