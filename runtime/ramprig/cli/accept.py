@@ -26,7 +26,8 @@ EPILOG = """\
 First come the checks for which nothing is switched on. Then it says what will move and asks; with --energise yes it
 does not ask, with --energise no it stops there. The motor runs at most at --duty, and never above the ceiling that the
 board has. The board's limits are read first and put back at the end; for the checks they are only tightened, or shifted
-together with the reading they bound. A healthy motor that turns freely is needed, and room for the servo to move.
+together with the reading they bound. A healthy motor that turns freely is needed, and room for the servo to move. A
+board without axes is accepted as one; the checks that need an axis are told as not made.
 
 Exits with 0 where nothing failed, 1 where a clause failed or the limits could not be put back, 4 where the link was
 lost, 5 where it was stopped. With --only no board is accepted: that takes all checks.
