@@ -310,6 +310,22 @@ def test_each_key_that_jogs_nothing_stops_and_leaves_the_line_empty(key: bytes) 
     run(story)
 
 
+def test_what_a_terminal_answers_by_itself_stops_no_jog() -> None:
+    """It tells where its cursor is, when it is asked at a redraw, among the keys."""
+
+    async def story(rig: Rig) -> None:
+        rig.send(b"jog vent\r")
+        await rig.until(lambda: rig.screen._hold)
+        hold = rig.screen._hold
+        assert hold is not None
+        rig.screen._now = lambda: 0.0
+        rig.send(b"\x1b[C\x1b[12;1R\x1b[A")
+        await rig.until(lambda: hold.duty == 1100)
+        assert hold.wanted(0.0) == 1100
+
+    run(story)
+
+
 def test_control_z_types_nothing_and_says_why() -> None:
     seen = io.StringIO()
 

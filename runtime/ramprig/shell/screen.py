@@ -23,6 +23,7 @@ from prompt_toolkit.formatted_text import StyleAndTextTuples
 from prompt_toolkit.history import History, InMemoryHistory
 from prompt_toolkit.input.base import Input
 from prompt_toolkit.key_binding import KeyBindings, KeyPressEvent
+from prompt_toolkit.key_binding.bindings.cpr import load_cpr_bindings
 from prompt_toolkit.keys import Keys
 from prompt_toolkit.layout import ConditionalContainer, Float, FloatContainer, HSplit, Layout, Window
 from prompt_toolkit.layout.controls import BufferControl, FormattedTextControl
@@ -244,6 +245,10 @@ class Screen:
         def _other(event: KeyPressEvent) -> None:
             if self._hold is not None:
                 self._hold.release()
+
+        # Among the keys comes what a terminal answers when it is asked where its cursor is: nobody has pressed that.
+        for answer in load_cpr_bindings().bindings:
+            keys.add(*answer.keys, filter=jogging, eager=True, save_before=answer.save_before)(answer.handler)
 
     # ---- lines ---------------------------------------------------------------------------------------------------
 
