@@ -6,7 +6,8 @@ import re
 
 import pytest
 
-from accept_boards import accepted, bugged_core_port, restarter
+from accept_boards import accepted, bugged_core_port, core_port, restarter
+from ramprig.accept.trial import Trial
 from ramprig.mock.core import why_not
 from ramprig.mock.core.build import firmware
 
@@ -73,6 +74,15 @@ def test_a_bug_that_need_not_show_is_blamed_on_nothing_else(number: int, monkeyp
     verdict = accepted(bugged_core_port(number, monkeypatch), only=CHECK_OF[number])
     assert [result.check.name for result in verdict.results] == ["every-line", CHECK_OF[number]]
     assert not verdict.failed or NOTICED_WHERE_SEEN[number] in verdict.failed
+
+
+def test_an_overcurrent_is_judged_by_the_trail_where_samples_are_dropped(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(Trial, "row", lambda trial, tick: None)
+    verdict = accepted(core_port(), only="overcurrent")
+    assert verdict.failed == {}
+    assert [result.word for result in verdict.results] == ["passed", "passed"]
+    assert any("from the trail" in note for note in verdict.results[1].notes)
+    assert "TRIP-3" in accepted(bugged_core_port(14, monkeypatch), only="overcurrent").failed
 
 
 def test_every_seeded_bug_is_in_one_of_the_tables_under_its_clause() -> None:

@@ -11,10 +11,10 @@ import itertools
 from ramprig.accept.invariants import Row
 from ramprig.accept.live_arming import latched
 from ramprig.accept.live_motion import run_up
-from ramprig.accept.trial import COOL_S, SETTLE_TICKS, Power, Trial, Untested, check
+from ramprig.accept.trial import COOL_S, SETTLE_TICKS, Broken, Power, Trial, Untested, check
 from ramprig_link.faults import SampleFault
-from ramprig_link.samples import decode
-from ramprig_link.words import LIMITS, SPEED_TICKS, THERMAL_TICKS, Cap, Trip
+from ramprig_link.samples import channels_of, decode
+from ramprig_link.words import CHANNELS, LIMITS, SPEED_TICKS, THERMAL_TICKS, Cap, Trip
 
 SHIFT_MA = 3000
 HEAT_SHIFT_MA = 5000
@@ -29,14 +29,20 @@ WRONG_COUNTS = 6
 def _off_in_tick(trial: Trial, tick: int, since: int) -> None:
     """A trip of category 0 has the bridge off in its own tick, by the notice and by the sample.
 
-    Where a slow link has dropped that one sample, which the sudden change makes long, the next one is looked at.
+    Where a slow link has dropped that one sample, which the sudden change makes long, the trail's record of it is
+    looked at, and on a board without a trail the next sample.
     """
     off = [t for t, _ in trial.talk.notices(since, "off")]
     trial.require(off[:1] == [tick], "TRIP-1", f"the notice `off` is of tick {off[:1]}, the trip of {tick}")
+    bit = CHANNELS["duty"].first_bit + trial.axis * CHANNELS["duty"].step
+    seen, duty = tick, None
     if trial.row(tick) is None:
-        trial.note("the sample of the trip's tick was dropped; the one after it has been looked at")
-    seen = tick if trial.row(tick) is not None else tick + 1
-    duty = trial.duties(seen, seen)[0]
+        kept = dict(_trail(trial, trial.axis)[1]) if trial.identity.trail else {}
+        duty = kept.get(tick, {}).get(bit)
+        place = "the one after it" if duty is None else "its record in the trail"
+        trial.note(f"the sample of the trip's tick was dropped; {place} has been looked at")
+        seen = tick + (duty is None)
+    duty = trial.duties(seen, seen)[0] if duty is None else duty
     trial.require(duty == 0, "TRIP-1", f"the duty is {duty} {seen - tick} ticks after the trip")
 
 
@@ -58,8 +64,9 @@ def overcurrent(trial: Trial) -> None:
     trial.come()
     ticks = trial.limits["trip_ticks", axis]
     if Cap.CURRENT in trial.identity.caps:
-        wanted = _run_of(trial.rows(set_at + 1, tick), axis, bound, ticks)
-        told = trial.rows(tick, tick)[0].current_ma[axis]
+        read = _currents(trial, axis, set_at + 1, tick)
+        wanted = _run_of(read, bound, ticks)
+        told = read[tick]
         trial.require(notice.fields[2:3] == (str(told),), "TRIP-3", f"the trip tells {notice.fields}, read was {told}")
     else:
         wanted = set_at + ticks
@@ -74,13 +81,34 @@ def overcurrent(trial: Trial) -> None:
     latched(trial, since, Trip.OVERCURRENT)
 
 
-def _run_of(rows: list[Row], axis: int, bound: int, ticks: int) -> int | None:
+def _currents(trial: Trial, axis: int, first: int, last: int) -> dict[int, int]:
+    """What was read in each of these ticks, in mA, the trip's among them; Missing where one is not known.
+
+    By the samples. A slow link often drops that of the trip, whose sudden change ends a block while the answer and
+    the notices hold the line; the trail that the trip has frozen has it, and must agree with those that have come.
+    """
+    read = {t: row.current_ma[axis] for t in range(first, last + 1) if (row := trial.row(t)) is not None}
+    dropped = last + 1 - first - len(read)
+    if dropped and trial.identity.trail:
+        bit = CHANNELS["current_ma"].first_bit + axis * CHANNELS["current_ma"].step
+        for tick, record in _trail(trial, axis)[1]:
+            if first <= tick <= last and bit in record:
+                text = f"the trail of tick {tick} has {record[bit]} mA, the sample {read.get(tick)}"
+                trial.require(read.setdefault(tick, record[bit]) == record[bit], "TRAIL-1", text)
+    if len(read) < last + 1 - first:
+        trial.rows(first, last)  # raises
+    if dropped:
+        trial.note(f"samples up to the trip were dropped ({dropped}); what was read then has been taken from the trail")
+    return dict(sorted(read.items()))
+
+
+def _run_of(read: dict[int, int], bound: int, ticks: int) -> int | None:
     """The tick in which so many readings in a row have been above the bound."""
     run = 0
-    for row in rows:
-        run = run + 1 if abs(row.current_ma[axis]) > bound else 0
+    for tick, current_ma in read.items():
+        run = run + 1 if abs(current_ma) > bound else 0
         if run >= ticks:
-            return row.tick
+            return tick
     return None
 
 
@@ -276,30 +304,37 @@ def trail(trial: Trial) -> None:
     tick, _ = trial.tripped(since, Trip.LINK_LOST, "LEASE-2", timeout_s=6.0)
     talk.listen_ticks(size // 4 + 20)
     trial.come()
-    first, found = 0, 0
-    while True:
-        answer = trial.ok(f"trail {axis} {first}", "TRAIL-2")
-        total = int(answer.fields[0])
-        try:
-            block = decode(answer.fields[1])
-        except SampleFault as fault:
-            trial.fail("TRAIL-2 DATA-2", f"the trail's payload: {fault.why}")
-            return
-        for i in range(block.rows):
-            row = trial.row(talk.ticks.near(block.first_tick) + i)
-            if row is not None:
-                found += 1
-                same = row.duty[axis] == block.columns[0][i] and (
-                    not row.counts or row.counts[axis] == block.columns[1][i]
-                )
-                record = [column[i] for column in block.columns]
-                trial.require(same, "TRAIL-1", f"the trail of tick {row.tick} has {record}, the sample {row}")
-        last = talk.ticks.near(block.first_tick) + block.rows - 1
-        first += block.rows
-        if first >= total or not block.rows:
-            break
+    found = 0
+    total, records = _trail(trial, axis)
+    for at, record in records:
+        row = trial.row(at)
+        if row is not None:
+            found += 1
+            values = list(record.values())
+            same = row.duty[axis] == values[0] and (not row.counts or row.counts[axis] == values[1])
+            trial.require(same, "TRAIL-1", f"the trail of tick {at} has {values}, the sample {row}")
+    last = records[-1][0]
     trial.require(total == size, "TRAIL-1", f"the trail has {total} records, `who` tells {size}")
     wanted = tick + size // 4 - 1
     trial.require(last == wanted, "TRAIL-1", f"the trail ends with tick {last}, a quarter behind the trip is {wanted}")
     trial.refused(f"trail {axis} {total}", "gone", "TRAIL-2")
     trial.note(f"{found} of {total} records were compared with samples")
+
+
+def _trail(trial: Trial, axis: int) -> tuple[int, list[tuple[int, dict[int, int]]]]:
+    """How many records the frozen trail tells of, and those: the tick, and the values by channel's bit."""
+    records: list[tuple[int, dict[int, int]]] = []
+    while True:
+        answer = trial.ok(f"trail {axis} {len(records)}", "TRAIL-2")
+        total = int(answer.fields[0])
+        try:
+            block = decode(answer.fields[1])
+        except SampleFault as fault:
+            trial.fail("TRAIL-2 DATA-2", f"the trail's payload: {fault.why}")
+            raise Broken from fault
+        bits = [ref.bit for ref in channels_of(block.mask)]
+        begin = trial.talk.ticks.near(block.first_tick)
+        for i, values in enumerate(zip(*block.columns, strict=True)):
+            records.append((begin + i, dict(zip(bits, values, strict=True))))
+        if len(records) >= total:
+            return total, records
